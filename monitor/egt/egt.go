@@ -1,0 +1,34 @@
+// Package egt keeps the ledger of exhaust-gas-temperature allowances: for each
+// band how long the indicated EGT has been above its limit in this excursion
+// and in this run, against what the band allows.
+//
+// Bands act on the indicated EGT only: the harness value as the engine's limits
+// are written for it. The clock of an excursion is event time; it runs through
+// gaps in the data while the last good value was above the limit, and what was
+// not seen is kept apart as assumed.
+package egt
+
+// Kind says when a band holds.
+type Kind uint8
+
+// The kinds of band.
+const (
+	KindRun   Kind = iota + 1 // always
+	KindStart                 // until idle is first reached
+)
+
+// Band is a limit with the time for which it may be exceeded.
+type Band struct {
+	Name      string // [a-z][a-z0-9_]*
+	Kind      Kind
+	Limit     float64 // K
+	Allowance int64   // ns above Limit allowed per excursion; 0 = none at all
+	PerRun    int64   // ns above Limit allowed per run; 0 = not limited
+	Deadband  float64 // K: an excursion ends only below Limit − Deadband …
+	Rearm     int64   // … for this long, ns
+}
+
+// Config holds the bands of an engine.
+type Config struct {
+	Bands []Band
+}

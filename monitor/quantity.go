@@ -1,0 +1,238 @@
+package monitor
+
+import "math"
+
+// Quantity is one number of an operating point. Its name is the key in JSON, in
+// stored columns, in rule expressions and in queries.
+type Quantity int
+
+// The quantities. Keys with a unit at the end say the unit of the value.
+const (
+	NPR Quantity = iota
+	NPRU95
+	NPRRake
+	CriticalNPR
+	ChokeNPR
+	ChokeMarginPercent
+	ChokeMarginPercentU95
+	ChokeMarginPercentLow95
+	ChokeMarginPercentHigh95
+	ChokeMarginPa
+	PChoked
+	ThroatMach
+	ThroatPressure
+	ThroatTemperature
+	CriticalPressure
+	CriticalTemperature
+	MassFlow
+	MassFlowU95
+	ExitVelocity
+	GrossThrust
+	GrossThrustU95
+	GammaTotal
+	GasConstant
+	FlowParameter
+	TotalPressure
+	RakePressure
+	TotalTemperature
+	BackPressure
+	Barometer
+	FuelAirRatio
+	HumidityRatio
+	ThroatArea
+	DischargeCoefficient
+	ThrustCoefficient
+	AirFlow
+	FuelFlow
+	FlowBalance
+	IndependentFlow
+	IndependentFlowU95
+	IndependentFlowParameter
+	EGTIndicated
+	EGTSpread
+	EGTHottest
+	EGTColdest
+	Speed
+	SpeedRate
+	MeasuredThrust
+	ReferredFlow
+	ReferredSpeed
+	ReferredThrust
+	NumQuantities
+)
+
+// Info describes a quantity.
+type Info struct {
+	Name  string // the key
+	Unit  string // unit of the value, "" for a plain number
+	Title string // for people
+}
+
+var infos = [NumQuantities]Info{
+	NPR:                      {"npr", "", "Nozzle pressure ratio p8/pb"},
+	NPRU95:                   {"npr_u95", "", "NPR, 95 % uncertainty"},
+	NPRRake:                  {"npr_rake", "", "Rake pressure ratio p7/pb"},
+	CriticalNPR:              {"critical_npr", "", "Critical NPR, one-dimensional, this gas"},
+	ChokeNPR:                 {"choke_npr", "", "Choke NPR used for the state"},
+	ChokeMarginPercent:       {"choke_margin_percent", "%", "Choke margin"},
+	ChokeMarginPercentU95:    {"choke_margin_percent_u95", "%", "Choke margin, 95 % uncertainty"},
+	ChokeMarginPercentLow95:  {"choke_margin_percent_low95", "%", "Choke margin, lower 95 % bound"},
+	ChokeMarginPercentHigh95: {"choke_margin_percent_high95", "%", "Choke margin, upper 95 % bound"},
+	ChokeMarginPa:            {"choke_margin_pa", "Pa", "Critical pressure less back pressure"},
+	PChoked:                  {"p_choked", "", "Probability of choked flow"},
+	ThroatMach:               {"throat_mach", "", "Throat Mach number"},
+	ThroatPressure:           {"throat_pressure_pa", "Pa", "Throat static pressure"},
+	ThroatTemperature:        {"throat_temperature_k", "K", "Throat static temperature"},
+	CriticalPressure:         {"critical_pressure_pa", "Pa", "Critical pressure p*"},
+	CriticalTemperature:      {"critical_temperature_k", "K", "Critical temperature T*"},
+	MassFlow:                 {"mass_flow_kg_s", "kg/s", "Nozzle mass flow W8"},
+	MassFlowU95:              {"mass_flow_kg_s_u95", "kg/s", "W8, 95 % uncertainty"},
+	ExitVelocity:             {"exit_velocity_m_s", "m/s", "Throat velocity V8"},
+	GrossThrust:              {"gross_thrust_n", "N", "Gross thrust, computed"},
+	GrossThrustU95:           {"gross_thrust_n_u95", "N", "Gross thrust, 95 % uncertainty"},
+	GammaTotal:               {"gamma_total", "", "Ratio of specific heats at T8"},
+	GasConstant:              {"gas_constant_j_kg_k", "J/(kg K)", "Gas constant"},
+	FlowParameter:            {"flow_parameter", "", "Flow parameter W√(R T0)/(A p0)"},
+	TotalPressure:            {"total_pressure_pa", "Pa", "Nozzle total pressure p8"},
+	RakePressure:             {"rake_pressure_pa", "Pa", "Rake total pressure p7"},
+	TotalTemperature:         {"total_temperature_k", "K", "Nozzle gas temperature T8"},
+	BackPressure:             {"back_pressure_pa", "Pa", "Back pressure"},
+	Barometer:                {"barometer_pa", "Pa", "Barometer, station pressure"},
+	FuelAirRatio:             {"fuel_air_ratio", "", "Fuel-air ratio, dry basis"},
+	HumidityRatio:            {"humidity_ratio", "", "Humidity ratio, dry basis"},
+	ThroatArea:               {"throat_area_m2", "m²", "Throat area, hot"},
+	DischargeCoefficient:     {"discharge_coefficient", "", "Discharge coefficient"},
+	ThrustCoefficient:        {"thrust_coefficient", "", "Thrust coefficient"},
+	AirFlow:                  {"air_flow_kg_s", "kg/s", "Bellmouth air flow W2"},
+	FuelFlow:                 {"fuel_flow_kg_s", "kg/s", "Fuel flow"},
+	FlowBalance:              {"flow_balance_kg_s", "kg/s", "Air + fuel flow less W8"},
+	IndependentFlow:          {"independent_flow_kg_s", "kg/s", "Air + fuel flow"},
+	IndependentFlowU95:       {"independent_flow_kg_s_u95", "kg/s", "Air + fuel flow, 95 % uncertainty"},
+	IndependentFlowParameter: {"independent_flow_parameter", "", "Flow parameter from air + fuel flow"},
+	EGTIndicated:             {"egt_indicated_k", "K", "Indicated EGT"},
+	EGTSpread:                {"egt_spread_k", "K", "EGT spread, hottest less coldest"},
+	EGTHottest:               {"egt_hottest_k", "K", "Hottest EGT probe"},
+	EGTColdest:               {"egt_coldest_k", "K", "Coldest EGT probe"},
+	Speed:                    {"speed_rpm", "rpm", "Rotor speed"},
+	SpeedRate:                {"speed_rate_rpm_s", "rpm/s", "Rate of rotor speed"},
+	MeasuredThrust:           {"measured_thrust_n", "N", "Load-cell thrust, uncorrected"},
+	ReferredFlow:             {"referred_flow_kg_s", "kg/s", "Referred flow W√θ/δ"},
+	ReferredSpeed:            {"referred_speed_rpm", "rpm", "Referred speed N/√θ"},
+	ReferredThrust:           {"referred_thrust_n", "N", "Referred thrust F/δ"},
+}
+
+// Info gives name, unit and title.
+func (q Quantity) Info() Info { return infos[q] }
+
+// ParseQuantity gives the quantity of a key, and whether there is one.
+func ParseQuantity(key string) (Quantity, bool) {
+	for q := range infos {
+		if infos[q].Name == key {
+			return Quantity(q), true
+		}
+	}
+	return 0, false
+}
+
+// Cause says why a quantity or state is not available. The zero value says that
+// it is.
+type Cause struct {
+	Kind    CauseKind
+	Channel int32 // index of the channel that is to blame, -1 when none is
+	Quality Quality
+}
+
+// CauseKind is the kind of a cause.
+type CauseKind uint8
+
+// The kinds of cause.
+const (
+	Available       CauseKind = iota
+	NotConfigured             // the rig file gives no way to know it
+	ChannelBad                // Channel has Quality
+	NoFlowYet                 // below the resolution floor
+	OutsideGasRange           // temperature or composition outside the gas data
+	AreaUnknown               // throat area not known
+	NotStated                 // an uncertainty that is needed is not stated
+	NotEnoughProbes           // too few usable probes
+	EngineNotLit              // defined only with a flame
+	numCauseKinds
+)
+
+var causeNames = [numCauseKinds]string{
+	"available", "not_configured", "channel", "no_flow", "outside_gas_range", "area_unknown", "not_stated", "not_enough_probes", "not_lit",
+}
+
+// String gives the name of the kind.
+func (k CauseKind) String() string { return name(causeNames[:], k) }
+
+// Warning is a bit of OperatingPoint.Warnings.
+type Warning uint32
+
+// The warnings of an operating point.
+const (
+	WarnGasRange Warning = 1 << iota
+	WarnOverStoichiometric
+	WarnRealGas
+	WarnCoefficientRange
+	WarnPressureOrder // rake below back pressure: reversed or miswired
+	WarnFuelFrozen    // fuel-air ratio held from before the flow floor
+	WarnAssumedFuel   // fuel-air ratio not measured
+	WarnAssumedHumidity
+	NumWarnings = 8
+)
+
+var warningTexts = [NumWarnings]string{
+	"temperature outside the gas data (200 to 1800 K): values extrapolate",
+	"fuel-air ratio above stoichiometric: limited",
+	"real-gas effects above 0.1 % are likely at this pressure and temperature",
+	"discharge or thrust coefficient outside its table: end value used",
+	"nozzle total pressure below back pressure",
+	"fuel-air ratio held: flow too small to close it",
+	"fuel-air ratio not measured: taken as zero",
+	"humidity not measured: dry air assumed",
+}
+
+// Each calls yield with the text of every warning that is set.
+func (w Warning) Each(yield func(string) bool) {
+	for i := range NumWarnings {
+		if w&(1<<i) != 0 && !yield(warningTexts[i]) {
+			return
+		}
+	}
+}
+
+// OperatingPoint is everything computed from one scan. It holds no pointers: a
+// copy is a value of its own.
+type OperatingPoint struct {
+	T              int64 // event time of the scan, ns UTC
+	Scan           uint64
+	V              [NumQuantities]float64 // NaN when not available
+	Choke          ChokeState
+	ChokeMarginal  bool
+	ChokeArmed     bool
+	Lit            bool
+	Phase          Phase
+	BackFrom       Source
+	TemperatureBy  Source
+	ChokeNPRFrom   Source
+	Warnings       Warning
+	Cause          Cause // why the choke state is unknown, when it is
+	EGTCause       Cause // why indicated EGT is missing, when it is
+	EGTProbesUsed  int16
+	RakeProbesUsed int16
+}
+
+// Reset makes every quantity unavailable.
+func (p *OperatingPoint) Reset() {
+	*p = OperatingPoint{}
+	for q := range p.V {
+		p.V[q] = math.NaN()
+	}
+}
+
+// Get gives a quantity and whether it is available.
+func (p *OperatingPoint) Get(q Quantity) (float64, bool) {
+	v := p.V[q]
+	return v, v == v
+}
