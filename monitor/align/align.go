@@ -1,0 +1,501 @@
+// Package align turns messages into scans: it finds the channel of every
+// sample, judges the clock of its source, and brings all channels to common
+// instants of event time.
+//
+// Scan k covers the interval (T−Period, T]; T is a multiple of Period. The raw
+// value of a channel in a scan is the mean of its samples in the interval, else
+// its last one while that is younger than the hold time. Every sample that is
+// used falls into exactly one scan.
+//
+// A scan is closed by the record that makes it complete: every channel that has
+// lately been in each scan has a sample at or after T. A channel that fails to
+// come is waited for until Lateness has passed: in host time, and while a
+// backlog comes in after a connect, in event time. While no session is
+// connected scans wait: what the broker keeps will still come. Samples of a scan
+// that is closed already are late: counted, not used.
+//
+// All that depends on past records is in State; an Aligner holds only what
+// follows from the configuration, and buffers.
+package align
+
+import (
+	"math"
+	"strings"
+
+	"throatwatch/ingest"
+	"throatwatch/ingest/decode"
+	"throatwatch/monitor"
+	"throatwatch/monitor/unit"
+)
+
+const (
+	slotsAtFirst = 64      // open intervals kept before the table grows
+	slotsAtMost  = 1 << 14 // 13 min at 20 scans/s: a channel further ahead closes scans
+	bridge       = int64(120e9)
+	streakFull   = 4          // scans in a row that make a channel expected
+	settle       = int64(2e9) // host time without a lagging message that ends a backlog
+	suspectFor   = int64(3e9) // host time over which a lagging clock is compared with ours
+)
+
+// Acc gathers the samples of one channel in one interval.
+type Acc struct {
+	Sum    float64
+	Newest int64 // event time of the newest sample, its host time for a clock not believed
+	N      uint32
+}
+
+// ChannelState is what is remembered of a channel between scans.
+type ChannelState struct {
+	Last   float64 // raw value of its last interval with samples
+	Time   int64   // event time of the newest sample in a closed scan
+	Newest int64   // event time of the newest sample at all
+	Same   int64   // event time since which Last has not changed by one bit
+	Streak uint8
+	Seen   bool
+}
+
+// SourceState is what is remembered of a source: one topic.
+type SourceState struct {
+	Topic        string
+	Messages     uint64
+	Host         int64 // host time of its newest message
+	Skew         int64 // host − event time of its newest sample, ns
+	Skewed       bool  // clock not believed: host time is used
+	SuspectHost  int64 // start of the comparison, 0 = none
+	SuspectEvent int64
+}
+
+// State is all that alignment depends on besides the record and the
+// configuration. It is plain data.
+type State struct {
+	Next     int64  // end of the oldest open interval, 0 = no sample yet
+	N        uint64 // scans closed
+	Base     int    // row of the oldest open interval in Table
+	Rows     int    // rows of Table
+	Table    []Acc  // Rows × channels, a ring of rows
+	MaxEvent int64  // newest event time of a believed clock
+	Backlog  int64  // host time until which a backlog is expected, 0 = none
+	Sessions []Session
+	Channels []ChannelState
+	Sources  []SourceState
+	Messages uint64
+	Samples  uint64
+	Skipped  uint64 // scans left out over a gap with no data at all
+	Counters [ingest.NumReasons]uint64
+}
+
+// Session is a broker session, known by its topic filter.
+type Session struct {
+	Filter    string
+	Connected bool
+}
+
+// topicInfo is what the configuration says of one topic.
+type topicInfo struct {
+	input  int // index of Config.Inputs, -1 = none takes it
+	byName map[string]int
+	only   int // the one channel of a value topic, -1 = go by name
+}
+
+// Aligner applies a configuration. It belongs to one goroutine.
+type Aligner struct {
+	cfg     Config
+	decoder *decode.Decoder
+	shared  map[string]int // channels found by name on any input
+	topics  map[string]topicInfo
+	scan    monitor.Scan
+}
+
+// New gives an aligner. The configuration must be valid: Period > 0, names
+// unique per topic, every filter an MQTT filter.
+func New(cfg Config) *Aligner {
+	n := len(cfg.Channels)
+	a := &Aligner{
+		cfg:     cfg,
+		decoder: decode.New(decode.Limits{}),
+		shared:  make(map[string]int, n),
+		topics:  map[string]topicInfo{},
+		scan: monitor.Scan{
+			Raw: make([]float64, n), Value: make([]float64, n), Quality: make([]monitor.Quality, n),
+			Samples: make([]uint16, n), Age: make([]int64, n),
+		},
+	}
+	for i, c := range cfg.Channels {
+		if c.Topic == "" {
+			a.shared[c.Name] = i
+		}
+	}
+	return a
+}
+
+// Reset fits the state to the configuration: channels that keep their place
+// keep their past.
+func (a *Aligner) Reset(s *State, from []Channel) {
+	old := s.Channels
+	s.Channels = make([]ChannelState, len(a.cfg.Channels))
+	for i, c := range a.cfg.Channels {
+		for j, o := range from {
+			if o.ID == c.ID && o.Raw == c.Raw && j < len(old) {
+				s.Channels[i] = old[j]
+			}
+		}
+	}
+	s.Base, s.Rows = 0, slotsAtFirst
+	s.Table = make([]Acc, s.Rows*len(a.cfg.Channels))
+	if s.Next != 0 {
+		s.Next = ceil(s.Next, a.cfg.Period)
+	}
+}
+
+// topic looks a topic up, and remembers what it found.
+func (a *Aligner) topic(topic string) topicInfo {
+	if info, ok := a.topics[topic]; ok {
+		return info
+	}
+	info := topicInfo{input: -1, byName: a.shared, only: -1}
+	for i, in := range a.cfg.Inputs {
+		if Match(in.Filter, topic) {
+			info.input = i
+			break
+		}
+	}
+	own := 0
+	for _, c := range a.cfg.Channels {
+		if c.Topic == topic {
+			own++
+		}
+	}
+	if own > 0 {
+		info.byName = make(map[string]int, len(a.shared)+own)
+		for name, i := range a.shared {
+			info.byName[name] = i
+		}
+		for i, c := range a.cfg.Channels {
+			if c.Topic == topic {
+				info.byName[c.Name] = i
+				if own == 1 && info.input >= 0 && a.cfg.Inputs[info.input].Format == decode.Value {
+					info.only = i
+				}
+			}
+		}
+	}
+	if len(a.topics) < 1<<14 { // a flood of invented topics must not fill the memory
+		a.topics[topic] = info
+	}
+	return info
+}
+
+// Match tells whether an MQTT topic filter takes a topic [MQTT-4.7].
+func Match(filter, topic string) bool {
+	if strings.HasPrefix(topic, "$") != strings.HasPrefix(filter, "$") {
+		return false
+	}
+	for {
+		f, fRest, fMore := strings.Cut(filter, "/")
+		if f == "#" {
+			return true
+		}
+		t, tRest, tMore := strings.Cut(topic, "/")
+		if f != "+" && f != t {
+			return false
+		}
+		switch {
+		case !fMore && !tMore:
+			return true
+		case fMore && !tMore:
+			return fRest == "#"
+		case !fMore:
+			return false
+		}
+		filter, topic = fRest, tRest
+	}
+}
+
+// Message takes one message. It gives the decoder's result, for the quarantine;
+// samples of it are already in the table.
+func (a *Aligner) Message(s *State, r *ingest.Record, seen bool) *decode.Result {
+	s.Messages++
+	info := a.topic(r.Topic)
+	if info.input < 0 {
+		s.Counters[ingest.ReasonUnknownTopic]++
+		return nil
+	}
+	if r.Flags&ingest.FlagRetained != 0 {
+		s.Counters[ingest.ReasonRetained]++
+		return nil
+	}
+	res := a.decoder.Decode(a.cfg.Inputs[info.input].Format, r.Topic, r.Payload, r.Host)
+	if seen && (res.DeviceTime || r.Flags&ingest.FlagDuplicate != 0) {
+		s.Counters[ingest.ReasonDuplicate]++
+		return nil
+	}
+	for reason, n := range res.Faults {
+		s.Counters[reason] += uint64(n)
+	}
+	if len(res.Samples) == 0 {
+		return res
+	}
+	src := s.source(r.Topic)
+	src.Messages++
+	src.Host = r.Host
+	for i := range res.Samples {
+		a.sample(s, src, info, &res.Samples[i], r.Host)
+	}
+	return res
+}
+
+func (s *State) source(topic string) *SourceState {
+	for i := range s.Sources {
+		if s.Sources[i].Topic == topic {
+			return &s.Sources[i]
+		}
+	}
+	const most = 1024 // sources beyond it share the last entry
+	if len(s.Sources) == most {
+		return &s.Sources[most-1]
+	}
+	s.Sources = append(s.Sources, SourceState{Topic: topic})
+	return &s.Sources[len(s.Sources)-1]
+}
+
+func (a *Aligner) sample(s *State, src *SourceState, info topicInfo, sm *ingest.Sample, host int64) {
+	ch, ok := info.only, info.only >= 0
+	if !ok {
+		ch, ok = info.byName[string(sm.Name)]
+	}
+	if !ok {
+		s.Counters[ingest.ReasonUnknownChannel]++
+		return
+	}
+	c := &a.cfg.Channels[ch]
+	v := sm.Value
+	if len(sm.Unit) > 0 && string(sm.Unit) != c.Raw.Name {
+		u, known := unit.Lookup(sm.Unit)
+		if !known || u.Dimension != c.Raw.Dimension {
+			s.Counters[ingest.ReasonUnit]++
+			return
+		}
+		v = c.Raw.FromSI(u.ToSI(v))
+	}
+	t := host
+	if sm.Time != ingest.NoTime {
+		t = a.eventTime(s, src, sm.Time, host)
+	}
+	a.place(s, ch, t, v)
+}
+
+// eventTime gives the time at which a sample counts: its own, or host time when
+// the clock of its source cannot be believed. A clock ahead of ours is wrong. A
+// clock behind is a backlog if it catches up with ours, and wrong if it runs in
+// step with ours: that takes suspectFor to tell.
+func (a *Aligner) eventTime(s *State, src *SourceState, t, host int64) int64 {
+	src.Skew = host - t
+	switch {
+	case src.Skew < -a.cfg.MaxFuture:
+		s.Counters[ingest.ReasonFuture]++
+		src.Skewed = true
+		return host
+	case src.Skew <= a.cfg.MaxPast:
+		if src.Skew <= a.cfg.MaxPast/2 || !src.Skewed {
+			src.Skewed, src.SuspectHost = false, 0
+			s.MaxEvent = max(s.MaxEvent, t)
+			return t
+		}
+	case src.Skewed:
+	case src.SuspectHost == 0:
+		src.SuspectHost, src.SuspectEvent = host, t
+	case host-src.SuspectHost >= suspectFor:
+		pace := float64(t-src.SuspectEvent) / float64(host-src.SuspectHost)
+		if pace < 1.5 {
+			src.Skewed = true
+		}
+		src.SuspectHost, src.SuspectEvent = host, t
+	}
+	if src.Skewed {
+		s.Counters[ingest.ReasonPast]++
+		return host
+	}
+	if s.Backlog != 0 {
+		s.Backlog = max(s.Backlog, host+settle)
+	}
+	s.MaxEvent = max(s.MaxEvent, t)
+	return t
+}
+
+// place puts a value into the interval of its time.
+func (a *Aligner) place(s *State, ch int, t int64, v float64) {
+	p := a.cfg.Period
+	if s.Next == 0 {
+		s.Next = ceil(t, p)
+	}
+	if t <= s.Next-p {
+		s.Counters[ingest.ReasonLate]++
+		return
+	}
+	if t-s.Next > bridge && s.empty() {
+		next := ceil(t, p)
+		s.Skipped += uint64((next - s.Next) / p)
+		s.Next = next
+	}
+	row := (t - (s.Next - p) - 1) / p
+	if row >= int64(s.Rows) {
+		if row >= slotsAtMost { // a clock this far ahead is not waited for
+			s.Counters[ingest.ReasonFuture]++
+			row = slotsAtMost - 1
+		}
+		for int64(s.Rows) <= row {
+			a.grow(s)
+		}
+	}
+	n := len(a.cfg.Channels)
+	acc := &s.Table[(s.Base+int(row))%s.Rows*n+ch]
+	acc.Sum += v
+	acc.N++
+	acc.Newest = max(acc.Newest, t)
+	cs := &s.Channels[ch]
+	cs.Newest = max(cs.Newest, t)
+	s.Samples++
+}
+
+func (s *State) empty() bool {
+	for i := range s.Table {
+		if s.Table[i].N > 0 {
+			return false
+		}
+	}
+	return true
+}
+
+func (a *Aligner) grow(s *State) {
+	n := len(a.cfg.Channels)
+	table := make([]Acc, 2*s.Rows*n)
+	k := copy(table, s.Table[s.Base*n:])
+	copy(table[k:], s.Table[:s.Base*n])
+	s.Table, s.Base, s.Rows = table, 0, 2*s.Rows
+}
+
+// Connect notes that a session is up or down.
+func (a *Aligner) Connect(s *State, filter string, up bool, host int64) {
+	if up {
+		s.Backlog = host + a.cfg.Backlog
+	}
+	for i := range s.Sessions {
+		if s.Sessions[i].Filter == filter {
+			s.Sessions[i].Connected = up
+			return
+		}
+	}
+	s.Sessions = append(s.Sessions, Session{Filter: filter, Connected: up})
+}
+
+// Boot notes that a process took over: no session is connected yet.
+func (a *Aligner) Boot(s *State, host int64) {
+	s.Sessions = s.Sessions[:0]
+	s.Backlog = host + a.cfg.Backlog
+}
+
+// Waiting tells that no session is connected, so that scans wait for what the
+// broker keeps. Records fed without a broker know of no session: they never wait.
+func (s *State) Waiting() bool {
+	for i := range s.Sessions {
+		if s.Sessions[i].Connected {
+			return false
+		}
+	}
+	return len(s.Sessions) > 0
+}
+
+// CatchingUp tells that samples of the past are coming in.
+func (s *State) CatchingUp(host int64) bool { return s.Backlog != 0 && host-s.MaxEvent > int64(1e9) }
+
+// Scan closes the oldest open interval if it can be closed at host time and
+// gives it, else nil. Call it until it gives nil. The scan is valid until the
+// next call; Value and final qualities are left to calibration.
+func (a *Aligner) Scan(s *State, host int64) *monitor.Scan {
+	if s.Next == 0 {
+		return nil
+	}
+	if s.Backlog != 0 && host >= s.Backlog {
+		s.Backlog = 0
+	}
+	if !a.complete(s) {
+		now := host
+		switch {
+		case s.Backlog != 0:
+			now = s.MaxEvent
+		case s.Waiting():
+			return nil
+		case host-s.Next > bridge && s.empty():
+			next := ceil(host-a.cfg.Lateness, a.cfg.Period)
+			s.Skipped += uint64((next - s.Next) / a.cfg.Period)
+			s.Next = next
+		}
+		if now < s.Next+a.cfg.Lateness {
+			return nil
+		}
+	}
+	return a.closeScan(s)
+}
+
+// complete tells whether every expected channel has a sample at or after Next.
+func (a *Aligner) complete(s *State) bool {
+	expected := false
+	for i := range s.Channels {
+		cs := &s.Channels[i]
+		if cs.Streak < streakFull {
+			continue
+		}
+		if cs.Newest < s.Next {
+			return false
+		}
+		expected = true
+	}
+	return expected
+}
+
+func (a *Aligner) closeScan(s *State) *monitor.Scan {
+	n := len(a.cfg.Channels)
+	row := s.Table[s.Base*n : (s.Base+1)*n]
+	out := &a.scan
+	s.N++
+	out.N, out.T = s.N, s.Next
+	for i := range row {
+		acc, cs := &row[i], &s.Channels[i]
+		out.Samples[i] = uint16(min(acc.N, math.MaxUint16))
+		if acc.N > 0 {
+			v := acc.Sum / float64(acc.N)
+			if v != cs.Last || !cs.Seen {
+				cs.Same = acc.Newest
+			}
+			cs.Last, cs.Time, cs.Seen = v, acc.Newest, true
+			cs.Streak = min(cs.Streak+1, streakFull)
+			out.Quality[i] = monitor.QualityGood
+		} else {
+			cs.Streak = 0
+			out.Quality[i] = monitor.QualityHeld
+		}
+		out.Raw[i], out.Age[i] = cs.Last, s.Next-cs.Time
+		switch {
+		case !cs.Seen:
+			out.Raw[i], out.Age[i], out.Quality[i] = math.NaN(), -1, monitor.QualityMissing
+		case out.Age[i] > a.cfg.Channels[i].Hold:
+			out.Quality[i] = monitor.QualityStale
+		}
+		*acc = Acc{}
+	}
+	s.Base = (s.Base + 1) % s.Rows
+	s.Next += a.cfg.Period
+	return out
+}
+
+// Same gives the event time since which a channel has not changed by one bit.
+func (s *State) Same(ch int) int64 { return s.Channels[ch].Same }
+
+// ceil gives the least multiple of p that is not below t.
+func ceil(t, p int64) int64 {
+	q := t / p
+	if q*p < t {
+		q++
+	}
+	return q * p
+}
