@@ -73,8 +73,8 @@ func Lookup(name []byte) (Unit, bool) {
 // ParseValue reads a number and its unit, with or without a space between:
 // "36.3psi", "620 degC", "0.05m2", "2%". A number alone has the unit "1". The
 // number is decimal, with a point and an optional exponent, and finite.
-// It gives the SI value and the unit as written. The error is a *ValueError or a
-// *NameError.
+// It gives the SI value and the unit as written. The error is a *ValueError or wraps
+// a *NameError.
 func ParseValue(text string) (float64, Unit, error) {
 	v, name, err := split(text)
 	if err != nil {
