@@ -106,7 +106,8 @@ func (f *Fault) Error() string {
 	}
 	b = append(append(b, ": "...), f.What...)
 	if f.Cause != nil {
-		b = append(append(b, ": "...), f.Cause.Error()...)
+		text := f.Cause.Error() // may quote the payload at length
+		b = append(append(b, ": "...), text[:min(len(text), 200)]...)
 	}
 	return string(b)
 }
@@ -131,8 +132,8 @@ type Result struct {
 // Decoder decodes messages, one at a time. It keeps its buffers between calls
 // and belongs to one goroutine.
 type Decoder struct {
-	limits  Limits
-	wellFmd cbor.DecMode
+	limits Limits
+	syntax cbor.DecMode // its check for well-formed CBOR, with our limits
 
 	res   Result
 	fault Fault
@@ -158,7 +159,7 @@ func New(limits Limits) *Decoder {
 	if err != nil {
 		panic("decode: options of the CBOR library: " + err.Error())
 	}
-	return &Decoder{limits: limits, wellFmd: mode}
+	return &Decoder{limits: limits, syntax: mode}
 }
 
 // Decode decodes one message. Host, in ns UTC, is the instant that SenML's
@@ -182,7 +183,10 @@ func (d *Decoder) Decode(format Format, topic string, payload []byte, host int64
 	default:
 		d.refuse(ingest.ReasonSyntax, 0, -1, "no format is given for this topic", nil)
 	}
-	d.res.DeviceTime = d.res.DeviceTime && len(d.res.Samples) > 0
+	if len(d.res.Samples) == 0 {
+		d.res.DeviceTime = false
+		d.res.Refused = d.res.Refused || d.res.Faults[ingest.ReasonSyntax] > 0
+	}
 	return &d.res
 }
 
@@ -207,13 +211,12 @@ func (d *Decoder) add(name, unit []byte, t int64, own bool, v float64) {
 	d.res.DeviceTime = d.res.DeviceTime && own
 }
 
-// join gives the name a + b in the decoder's buffer, or b itself when a is empty.
-func (d *Decoder) join(a, b []byte) []byte {
-	if len(a) == 0 {
-		return b
-	}
+// keep puts the parts together in the decoder's buffer.
+func (d *Decoder) keep(parts ...[]byte) []byte {
 	start := len(d.names)
-	d.names = append(append(d.names, a...), b...)
+	for _, p := range parts {
+		d.names = append(d.names, p...)
+	}
 	return d.names[start:len(d.names):len(d.names)]
 }
 

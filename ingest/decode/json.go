@@ -1,0 +1,280 @@
+package decode
+
+import (
+	"unicode/utf16"
+	"unicode/utf8"
+
+	"throatwatch/ingest"
+)
+
+// senmlJSON decodes a SenML pack in JSON [RFC 8428 5].
+func (d *Decoder) senmlJSON(payload []byte) {
+	d.base = record{}
+	s := scanner{b: payload, d: d}
+	s.expect('[', "a SenML pack is an array of records")
+	i := 0
+	for s.next(']', i) && !d.res.Refused {
+		if i == d.limits.Records {
+			d.refuse(ingest.ReasonTooLarge, i+1, s.i, "too many records", nil)
+			return
+		}
+		i++
+		at := s.i
+		var r record
+		s.expect('{', "a SenML record is an object")
+		for k := 0; s.next('}', k) && !d.res.Refused; k++ {
+			key := s.text()
+			s.expect(':', `":" is due after a label`)
+			s.field(&r, textLabel(key), i)
+		}
+		if s.what == "" && !d.res.Refused {
+			d.resolve(&r, i, at)
+		}
+	}
+	if d.res.Refused {
+		return
+	}
+	s.end()
+	if s.what != "" {
+		d.refuse(ingest.ReasonSyntax, i, s.at, s.what, nil)
+	}
+}
+
+// field reads the value of a label into r.
+func (s *scanner) field(r *record, l label, i int) {
+	at := s.i
+	reason := ingest.ReasonNone
+	if p := r.number(l); p != nil {
+		*p, reason = s.number()
+	} else if p := r.text(l); p != nil && s.peek() == '"' {
+		*p = s.text()
+	} else {
+		s.skip(0)
+		if p != nil || l == labelMust {
+			reason = ingest.ReasonSyntax
+		}
+	}
+	if s.what != "" {
+		return
+	}
+	r.mark(l)
+	if reason != ingest.ReasonNone {
+		s.d.wrong(r, l, reason, i, at)
+	}
+}
+
+// scanner walks over JSON [RFC 8259] once, without a tree. The first error stays
+// in what and at; after it every method returns zeros, so callers look once, at
+// the end. It takes numbers as the function number does: a sender that writes NaN
+// for one dead probe loses that value and not the pack.
+//
+// A library is not used because none of those at hand is exact, strict, free of
+// allocations and linear in time on hostile input as well.
+type scanner struct {
+	b    []byte
+	i    int
+	d    *Decoder // gives the buffer for unescaped strings
+	what string   // first error; empty while there is none
+	at   int
+}
+
+func (s *scanner) fail(what string) {
+	if s.what == "" {
+		s.what, s.at = what, s.i
+	}
+	s.i = len(s.b)
+}
+
+// peek skips white space and gives the byte that follows, 0 at the end.
+func (s *scanner) peek() byte {
+	for ; s.i < len(s.b); s.i++ {
+		if c := s.b[s.i]; c != ' ' && c != '\n' && c != '\r' && c != '\t' {
+			return c
+		}
+	}
+	return 0
+}
+
+func (s *scanner) expect(c byte, what string) {
+	if s.peek() != c || s.i == len(s.b) {
+		s.fail(what)
+		return
+	}
+	s.i++
+}
+
+// next tells whether member n (from 0) of an array or object follows, and takes
+// the comma before it, or else the closing bracket.
+func (s *scanner) next(closing byte, n int) bool {
+	if s.peek() == closing {
+		s.i++
+		return false
+	}
+	if n > 0 {
+		s.expect(',', `"," or a closing bracket is due`)
+		s.peek()
+	}
+	if s.i == len(s.b) {
+		s.fail("payload ends too early")
+	}
+	return s.what == ""
+}
+
+// end expects the end of the payload.
+func (s *scanner) end() {
+	if s.peek(); s.i < len(s.b) {
+		s.fail("something follows after the end")
+	}
+}
+
+// text reads a string. It aliases the payload when it has no escapes.
+func (s *scanner) text() []byte {
+	s.expect('"', "a string is due")
+	start, escaped := s.i, false
+	for ; s.i < len(s.b); s.i++ {
+		switch c := s.b[s.i]; {
+		case c == '"':
+			raw := s.b[start:s.i:s.i]
+			s.i++
+			if escaped {
+				return s.unescape(raw)
+			}
+			return raw
+		case c == '\\':
+			escaped = true
+			s.i++ // whatever follows is not a closing quote
+		case c < ' ':
+			s.fail("control character in a string")
+			return nil
+		}
+	}
+	s.i = len(s.b)
+	s.fail("string has no end")
+	return nil
+}
+
+// unescape resolves the escapes of a string into the decoder's buffer.
+func (s *scanner) unescape(raw []byte) []byte {
+	dst := s.d.names
+	start := len(dst)
+	for i := 0; i < len(raw); i++ {
+		if raw[i] != '\\' {
+			dst = append(dst, raw[i])
+			continue
+		}
+		i++
+		switch raw[i] {
+		case '"', '\\', '/':
+			dst = append(dst, raw[i])
+		case 'b':
+			dst = append(dst, '\b')
+		case 'f':
+			dst = append(dst, '\f')
+		case 'n':
+			dst = append(dst, '\n')
+		case 'r':
+			dst = append(dst, '\r')
+		case 't':
+			dst = append(dst, '\t')
+		case 'u':
+			r := hex4(raw[i+1:])
+			if r < 0 {
+				s.fail(`\u is not followed by four hexadecimal digits`)
+				return nil
+			}
+			i += 4
+			if utf16.IsSurrogate(r) {
+				pair := rune(utf8.RuneError)
+				if len(raw) > i+2 && raw[i+1] == '\\' && raw[i+2] == 'u' {
+					pair = utf16.DecodeRune(r, hex4(raw[i+3:]))
+				}
+				if pair != utf8.RuneError {
+					i += 6
+				}
+				r = pair
+			}
+			dst = utf8.AppendRune(dst, r)
+		default:
+			s.fail("unknown escape in a string")
+			return nil
+		}
+	}
+	s.d.names = dst
+	return dst[start:len(dst):len(dst)]
+}
+
+// hex4 reads four hexadecimal digits; −1 when b does not start with them.
+func hex4(b []byte) rune {
+	if len(b) < 4 {
+		return -1
+	}
+	var r rune
+	for _, c := range b[:4] {
+		r <<= 4
+		switch {
+		case c >= '0' && c <= '9':
+			r |= rune(c - '0')
+		case c >= 'a' && c <= 'f':
+			r |= rune(c - 'a' + 10)
+		case c >= 'A' && c <= 'F':
+			r |= rune(c - 'A' + 10)
+		default:
+			return -1
+		}
+	}
+	return r
+}
+
+// number reads a number. Any other value is read too and gives ReasonNotNumber.
+func (s *scanner) number() (float64, ingest.Reason) {
+	switch s.peek() {
+	case '"', '{', '[':
+		s.skip(0)
+		return 0, ingest.ReasonNotNumber
+	}
+	start := s.i
+	for ; s.i < len(s.b); s.i++ {
+		if c := s.b[s.i]; c == ',' || c == ']' || c == '}' || c <= ' ' {
+			break
+		}
+	}
+	token := s.b[start:s.i]
+	switch string(token) {
+	case "null", "true", "false":
+		return 0, ingest.ReasonNotNumber
+	}
+	v, reason := number(token)
+	if reason == ingest.ReasonSyntax {
+		s.i = start
+		s.fail("a value is due")
+	}
+	return v, reason
+}
+
+// skip passes over any value.
+func (s *scanner) skip(depth int) {
+	closing := byte('}')
+	switch s.peek() {
+	case '"':
+		s.text()
+		return
+	case '[':
+		closing = ']'
+	case '{':
+	default:
+		s.number()
+		return
+	}
+	if depth == maxDepth {
+		s.fail("arrays or objects are nested too deep")
+		return
+	}
+	s.i++
+	for n := 0; s.next(closing, n); n++ {
+		if closing == '}' {
+			s.text()
+			s.expect(':', `":" is due after a label`)
+		}
+		s.skip(depth + 1)
+	}
+}
