@@ -1,0 +1,78 @@
+package runfile
+
+import "context"
+
+// Bounds of the log ("-wal").
+const (
+	foldBytes = 4 << 20 // fold when this much has been committed …
+	foldEvery = 64      // … or after this many commits, counted as bytes each
+	logFrames = 4096    // pages (64 MiB): above it the writer is held up until the log is empty
+)
+
+// due notes that about size bytes were committed and wakes Run when folding is
+// worth its sync.
+func (f *File) due(size int) {
+	f.mu.Lock()
+	f.pending += size + foldBytes/foldEvery
+	wake := f.pending >= foldBytes
+	f.mu.Unlock()
+	if wake {
+		select {
+		case f.wake <- struct{}{}:
+		default: // one is due already
+		}
+	}
+}
+
+// Run moves committed pages from the log into the file while others commit, on
+// a connection of its own, until ctx is done. It starts nothing. Without it the
+// log grows until Close. A failure is kept for Log and tried again with the
+// next commits: the records are safe in the log.
+func (f *File) Run(ctx context.Context) {
+	for {
+		select {
+		case <-ctx.Done():
+			return
+		case <-f.wake:
+			_ = f.Fold(ctx) //nolint:errcheck // kept for Log
+		}
+	}
+}
+
+// Fold moves what it can from the log into the file now. It is what Run does,
+// for an owner that rather calls it. It waits for nobody, unless the log has
+// grown over 64 MiB: then it keeps the writer out (at most 100 ms for readers
+// and the time to move what is left) so that the log can begin again.
+func (f *File) Fold(ctx context.Context) error {
+	if f.fold == nil {
+		return f.fault("fold", "file", ErrReadOnly)
+	}
+	f.mu.Lock()
+	f.pending = 0
+	f.mu.Unlock()
+	frames, err := f.checkpoint(ctx, "PASSIVE")
+	if err == nil && frames > logFrames {
+		_, err = f.checkpoint(ctx, "RESTART")
+	}
+	if err != nil {
+		err = f.fault("fold", "file", err)
+	}
+	f.mu.Lock()
+	f.frames, f.foldErr = frames, err
+	f.mu.Unlock()
+	return err
+}
+
+func (f *File) checkpoint(ctx context.Context, kind string) (frames int, err error) {
+	var busy, moved int // being busy is no fault: the next one moves the rest
+	err = f.fold.QueryRowContext(ctx, "PRAGMA wal_checkpoint("+kind+")").Scan(&busy, &frames, &moved)
+	return frames, err
+}
+
+// Log gives the length of the log in pages of 16 KiB when it was last folded,
+// and the error of that, for the health of the archive.
+func (f *File) Log() (pages int, err error) {
+	f.mu.Lock()
+	defer f.mu.Unlock()
+	return f.frames, f.foldErr
+}

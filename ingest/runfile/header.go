@@ -1,0 +1,149 @@
+package runfile
+
+import (
+	"context"
+	"database/sql"
+	"encoding/json"
+	"errors"
+	"fmt"
+)
+
+// States of a run, as they stand in its header.
+const (
+	StateIdle        = "idle"        // the file that is kept between runs
+	StateRunning     = "running"     // being recorded, or the process died
+	StateEnded       = "ended"       // ended by engine state or by hand
+	StateInterrupted = "interrupted" // found running at start, and not taken up again
+)
+
+// Header is what is known of a run as a whole. Its strings are free text for
+// this package.
+type Header struct {
+	ID           string   `json:"id"`
+	Rig          string   `json:"rig"`
+	Engine       string   `json:"engine,omitempty"`
+	EngineSerial string   `json:"engine_serial,omitempty"`
+	Title        string   `json:"title,omitempty"`
+	Operator     string   `json:"operator,omitempty"`
+	Build        string   `json:"build,omitempty"`  // build id of the last writer
+	GOARCH       string   `json:"goarch,omitempty"` // of the last writer
+	ConfigHash   string   `json:"config_hash,omitempty"`
+	Started      int64    `json:"started"`         // ns UTC
+	Ended        int64    `json:"ended,omitempty"` // ns UTC, 0 while it goes on
+	State        string   `json:"state"`
+	Keep         bool     `json:"keep,omitempty"` // never to be removed by retention
+	Tags         []string `json:"tags,omitempty"`
+	Notes        string   `json:"notes,omitempty"`
+	Digest       string   `json:"digest,omitempty"` // over the recorded outcomes, hexadecimal
+	Alarms       int      `json:"alarms,omitempty"` // number raised
+}
+
+// headerKey is where the header lies in the table meta; the owner's keys are
+// stored with keyPrefix, so that none can be taken for it.
+const (
+	headerKey = "header"
+	keyPrefix = "x-"
+)
+
+func encodeHeader(h Header) ([]byte, error) {
+	b, err := json.Marshal(h)
+	if err != nil {
+		return nil, fmt.Errorf("header: %w", err)
+	}
+	return b, nil
+}
+
+// querier is what reading needs of a database, a connection or a transaction.
+type querier interface {
+	QueryContext(ctx context.Context, query string, args ...any) (*sql.Rows, error)
+	QueryRowContext(ctx context.Context, query string, args ...any) *sql.Row
+}
+
+func getMeta(ctx context.Context, q querier, key string) ([]byte, error) {
+	var b []byte
+	err := q.QueryRowContext(ctx, "SELECT value FROM meta WHERE key=?", key).Scan(&b)
+	if errors.Is(err, sql.ErrNoRows) {
+		return nil, nil
+	}
+	return b, err
+}
+
+func putMeta(ctx context.Context, tx *sql.Tx, key string, value []byte) error {
+	if value == nil {
+		value = []byte{}
+	}
+	_, err := tx.ExecContext(ctx, "INSERT INTO meta (key, value) VALUES (?,?) ON CONFLICT (key) DO UPDATE SET value=excluded.value", key, value)
+	return err
+}
+
+func getHeader(ctx context.Context, q querier) (h Header, err error) {
+	b, err := getMeta(ctx, q, headerKey)
+	if err != nil {
+		return h, err
+	}
+	if err := json.Unmarshal(b, &h); err != nil {
+		return h, &CorruptError{Table: "meta", Err: fmt.Errorf("header: %w", err)}
+	}
+	return h, nil
+}
+
+// Header reads the header.
+func (f *File) Header(ctx context.Context) (Header, error) {
+	h, err := getHeader(ctx, f.read)
+	if err != nil {
+		return h, f.fault("header", "meta", err)
+	}
+	return h, nil
+}
+
+// UpdateHeader changes the header in a transaction of its own: edit gets the
+// stored one, so that a note written by one person and an end written by the
+// daemon do not undo each other.
+func (f *File) UpdateHeader(ctx context.Context, edit func(*Header)) error {
+	return f.transact(ctx, "update header", func(tx *sql.Tx, _ *tail) error {
+		return updateHeader(ctx, tx, edit)
+	})
+}
+
+func updateHeader(ctx context.Context, tx *sql.Tx, edit func(*Header)) error {
+	h, err := getHeader(ctx, tx)
+	if err != nil {
+		return err
+	}
+	edit(&h)
+	b, err := encodeHeader(h)
+	if err != nil {
+		return err
+	}
+	return putMeta(ctx, tx, headerKey, b)
+}
+
+// Meta reads a value that SetMeta or a batch has stored; nil when there is none.
+func (f *File) Meta(ctx context.Context, key string) ([]byte, error) {
+	b, err := getMeta(ctx, f.read, keyPrefix+key)
+	if err != nil {
+		return nil, f.fault("meta "+key, "meta", err)
+	}
+	return b, nil
+}
+
+// SetMeta stores values under the owner's own keys (a sink's cursor, say).
+func (f *File) SetMeta(ctx context.Context, values map[string][]byte) error {
+	return f.transact(ctx, "set meta", func(tx *sql.Tx, _ *tail) error {
+		return putAll(ctx, tx, values)
+	})
+}
+
+func putAll(ctx context.Context, tx *sql.Tx, values map[string][]byte) error {
+	for key, value := range values { // the order leaves no trace in the table
+		if err := putMeta(ctx, tx, keyPrefix+key, value); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// fault wraps an error with operation and file.
+func (f *File) fault(op, table string, err error) error {
+	return fmt.Errorf("run file %q: %s: %w", f.path, op, mapError(table, err))
+}
