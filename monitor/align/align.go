@@ -49,7 +49,6 @@ type ChannelState struct {
 	Last   float64 // raw value of its last interval with samples
 	Time   int64   // event time of the newest sample in a closed scan
 	Newest int64   // event time of the newest sample at all
-	Same   int64   // event time since which Last has not changed by one bit
 	Streak uint8
 	Seen   bool
 }
@@ -464,9 +463,6 @@ func (a *Aligner) closeScan(s *State) *monitor.Scan {
 		out.Samples[i] = uint16(min(acc.N, math.MaxUint16))
 		if acc.N > 0 {
 			v := acc.Sum / float64(acc.N)
-			if v != cs.Last || !cs.Seen {
-				cs.Same = acc.Newest
-			}
 			cs.Last, cs.Time, cs.Seen = v, acc.Newest, true
 			cs.Streak = min(cs.Streak+1, streakFull)
 			out.Quality[i] = monitor.QualityGood
@@ -487,9 +483,6 @@ func (a *Aligner) closeScan(s *State) *monitor.Scan {
 	s.Next += a.cfg.Period
 	return out
 }
-
-// Same gives the event time since which a channel has not changed by one bit.
-func (s *State) Same(ch int) int64 { return s.Channels[ch].Same }
 
 // ceil gives the least multiple of p that is not below t.
 func ceil(t, p int64) int64 {
