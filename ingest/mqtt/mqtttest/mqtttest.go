@@ -1,0 +1,239 @@
+// Package mqtttest gives tests real brokers: the embedded one and Debian's
+// mosquitto, each on a free port with its data in a temporary directory, and a
+// TCP proxy that cuts or swallows a connection. All end with the test.
+package mqtttest
+
+import (
+	"context"
+	"fmt"
+	"log/slog"
+	"net"
+	"os"
+	"os/exec"
+	"path/filepath"
+	"sync"
+	"syscall"
+	"testing"
+	"time"
+
+	"throatwatch/ingest/broker"
+)
+
+// startTimeout bounds the start of a broker on a loaded machine.
+const startTimeout = 30 * time.Second
+
+// Server is a broker that a test can stop and start again on the same address
+// with the same data.
+type Server struct {
+	URL   string
+	Addr  string
+	start func()
+	stop  func()
+}
+
+// Start starts the broker again after Stop.
+func (s *Server) Start() { s.start() }
+
+// Stop ends the broker in an orderly way and waits for its end.
+func (s *Server) Stop() { s.stop() }
+
+// Embedded starts the broker of the daemon, open to everyone. Fields of cfg that
+// are set are kept.
+func Embedded(t testing.TB, cfg broker.Config) *Server {
+	t.Helper()
+	if cfg.StoreDir == "" {
+		cfg.StoreDir = t.TempDir()
+	}
+	if cfg.Listen == "" {
+		cfg.Listen = FreeAddr(t)
+	}
+	var b *broker.Broker
+	s := &Server{Addr: cfg.Listen, URL: "mqtt://" + cfg.Listen}
+	s.start = func() {
+		t.Helper()
+		var err error
+		b, err = broker.New(cfg, slog.New(slog.DiscardHandler))
+		if err != nil {
+			t.Fatal(err)
+		}
+		ctx, cancel := context.WithTimeout(context.Background(), startTimeout)
+		defer cancel()
+		if err := b.Start(ctx); err != nil {
+			t.Fatal(err)
+		}
+		b.Open()
+	}
+	s.stop = func() {
+		if err := b.Close(); err != nil {
+			t.Error(err)
+		}
+	}
+	s.start()
+	t.Cleanup(s.stop)
+	return s
+}
+
+// Mosquitto starts /usr/sbin/mosquitto with the limits that deploy recommends.
+// Further lines of configuration may be given. The test fails if the program is
+// not installed: a site broker is part of what has to work.
+func Mosquitto(t testing.TB, lines ...string) *Server {
+	t.Helper()
+	program, err := exec.LookPath("mosquitto")
+	if err != nil {
+		program = "/usr/sbin/mosquitto"
+	}
+	dir := t.TempDir()
+	addr := FreeAddr(t)
+	host, port, _ := net.SplitHostPort(addr)
+	conf := fmt.Sprintf("listener %s %s\nmax_inflight_messages 4096\nmax_queued_messages 200000\n"+
+		"persistence true\npersistence_location %s/\nautosave_interval 1800\nlog_type none\n", port, host, dir)
+	if len(lines) == 0 {
+		lines = []string{"allow_anonymous true"}
+	}
+	for _, line := range lines {
+		conf += line + "\n"
+	}
+	if os.Geteuid() == 0 {
+		conf += "user root\n" // it would else drop to a user that cannot read dir
+	}
+	path := filepath.Join(dir, "mosquitto.conf")
+	if err := os.WriteFile(path, []byte(conf), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	var cmd *exec.Cmd
+	s := &Server{Addr: addr, URL: "mqtt://" + addr}
+	s.start = func() {
+		t.Helper()
+		cmd = exec.CommandContext(context.Background(), program, "-c", path)
+		if err := cmd.Start(); err != nil {
+			t.Fatal(err)
+		}
+		waitListening(t, addr)
+	}
+	s.stop = func() {
+		if cmd.ProcessState != nil {
+			return // stopped before
+		}
+		// It writes its persistence file on SIGTERM.
+		if err := cmd.Process.Signal(syscall.SIGTERM); err != nil {
+			t.Error(err)
+		}
+		_ = cmd.Wait() // ending by a signal counts as an error
+	}
+	s.start()
+	t.Cleanup(s.stop)
+	return s
+}
+
+// FreeAddr gives a loopback address that nothing listens on.
+func FreeAddr(t testing.TB) string {
+	t.Helper()
+	l, err := net.Listen("tcp", "127.0.0.1:0")
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer l.Close()
+	return l.Addr().String()
+}
+
+func waitListening(t testing.TB, addr string) {
+	t.Helper()
+	for deadline := time.Now().Add(startTimeout); time.Now().Before(deadline); time.Sleep(20 * time.Millisecond) {
+		if c, err := net.Dial("tcp", addr); err == nil {
+			c.Close()
+			return
+		}
+	}
+	t.Fatalf("nothing listens on %s after %v", addr, startTimeout)
+}
+
+// Proxy passes TCP connections on to a broker until told otherwise.
+type Proxy struct {
+	Addr string
+	URL  string
+
+	mu        sync.Mutex // protects the fields below
+	conns     map[net.Conn]struct{}
+	swallowed bool
+}
+
+// NewProxy starts a proxy in front of target, host:port.
+func NewProxy(t testing.TB, target string) *Proxy {
+	t.Helper()
+	l, err := net.Listen("tcp", "127.0.0.1:0")
+	if err != nil {
+		t.Fatal(err)
+	}
+	p := &Proxy{Addr: l.Addr().String(), URL: "mqtt://" + l.Addr().String(), conns: make(map[net.Conn]struct{})}
+	var all sync.WaitGroup
+	all.Go(func() {
+		for {
+			in, err := l.Accept()
+			if err != nil {
+				return
+			}
+			out, err := net.Dial("tcp", target)
+			if err != nil {
+				in.Close()
+				continue
+			}
+			p.mu.Lock()
+			p.conns[in], p.conns[out] = struct{}{}, struct{}{}
+			p.mu.Unlock()
+			all.Go(func() { p.pipe(out, in) })
+			all.Go(func() { p.pipe(in, out) })
+		}
+	})
+	t.Cleanup(func() {
+		l.Close()
+		p.Cut()
+		all.Wait()
+	})
+	return p
+}
+
+func (p *Proxy) pipe(dst, src net.Conn) {
+	defer dst.Close()
+	defer src.Close()
+	buf := make([]byte, 32<<10)
+	for {
+		n, err := src.Read(buf)
+		if err != nil {
+			return
+		}
+		p.mu.Lock()
+		swallowed := p.swallowed
+		p.mu.Unlock()
+		if swallowed {
+			continue
+		}
+		if _, err := dst.Write(buf[:n]); err != nil {
+			return
+		}
+	}
+}
+
+// Cut resets every connection; new ones are accepted.
+func (p *Proxy) Cut() {
+	p.mu.Lock()
+	defer p.mu.Unlock()
+	for c := range p.conns {
+		c.Close()
+	}
+	clear(p.conns)
+}
+
+// Swallow keeps connections open and loses what they carry.
+func (p *Proxy) Swallow() {
+	p.mu.Lock()
+	defer p.mu.Unlock()
+	p.swallowed = true
+}
+
+// Pass ends Swallow. Connections that have lost bytes are cut.
+func (p *Proxy) Pass() {
+	p.mu.Lock()
+	p.swallowed = false
+	p.mu.Unlock()
+	p.Cut()
+}
