@@ -1,0 +1,150 @@
+package rules
+
+import (
+	"fmt"
+	"math"
+	"regexp"
+
+	"throatwatch/monitor"
+)
+
+// Domain says which rules a step judges.
+type Domain uint8
+
+// The domains.
+const (
+	OfData   Domain = iota // rules that read anything that a scan gives
+	OfDaemon               // rules that read only how the daemon does: they must speak when no scan comes
+)
+
+// Set is a compiled set of rules. It is read-only: its state is in a State.
+type Set struct {
+	rules []program
+	names []Name
+}
+
+// program is one compiled rule.
+type program struct {
+	Rule
+	compiled
+	domain   Domain
+	text     template
+	unit     string
+	suppress [monitor.NumPhases]bool
+}
+
+var ruleName = regexp.MustCompile(`^[a-z][a-z0-9_]*$`)
+
+// Compile compiles rules against the names of an environment. It gives every
+// fault that it finds; with any, the set is nil.
+func Compile(rules []Rule, names []Name) (*Set, []Fault) {
+	set := &Set{rules: make([]program, len(rules)), names: names}
+	ix := indexOf(names)
+	seen := make(map[string]bool, len(rules))
+	var faults []Fault
+	for i := range rules {
+		r := &rules[i]
+		add := func(field string, f *exprFault) {
+			if f != nil {
+				faults = append(faults, Fault{Rule: i, Field: field, Offset: f.offset, Message: f.message, Hint: f.hint})
+			}
+		}
+		switch {
+		case !ruleName.MatchString(r.Name):
+			add("name", &exprFault{0, fmt.Sprintf("rule name %q is not an identifier", r.Name), "begin with a letter; a-z, 0-9 and _ only"})
+		case seen[r.Name]:
+			add("name", &exprFault{0, fmt.Sprintf("rule %q is there twice", r.Name), "give it another name"})
+		}
+		seen[r.Name] = true
+		p := program{Rule: *r}
+		var fault *exprFault
+		p.compiled, fault = compileExpression(r.When, names, ix)
+		add("when", fault)
+		p.text, fault = parseTemplate(r.Text, names, ix)
+		add("text", fault)
+		for _, f := range p.checkPlain(fault == nil) {
+			add(f.field, &f.exprFault)
+		}
+		p.settle(names)
+		set.rules[i] = p
+	}
+	if len(faults) > 0 {
+		return nil, faults
+	}
+	return set, nil
+}
+
+type fieldFault struct {
+	field string
+	exprFault
+}
+
+// checkPlain checks the fields that are no expressions.
+func (p *program) checkPlain(compiles bool) (faults []fieldFault) {
+	add := func(field, message, hint string) {
+		faults = append(faults, fieldFault{field, exprFault{0, message, hint}})
+	}
+	if p.Priority < Note || p.Priority > Warning {
+		add("priority", "no priority", "use note, advisory, caution or warning")
+	}
+	if p.OnDelay < 0 {
+		add("on_delay", "on-delay below zero", "use 0s or more")
+	}
+	if p.OffDelay < 0 {
+		add("off_delay", "off-delay below zero", "use 0s or more")
+	}
+	switch {
+	case !(p.Deadband >= 0) || math.IsInf(p.Deadband, 0):
+		add("deadband", "deadband is not a number of zero or more", "give it in the unit of the quantity that is compared")
+	case p.Deadband > 0 && compiles && p.truth != nil && !p.orders:
+		add("deadband", "deadband without a comparison to which it applies", "compare with <, <=, > or >=, or drop it")
+	}
+	for _, ph := range p.SuppressIn {
+		if ph == monitor.PhaseUnknown || ph >= monitor.NumPhases {
+			add("suppress_in", "an unknown phase suppresses nothing", "name a phase such as off or cranking")
+		}
+	}
+	return faults
+}
+
+// settle derives what a step needs from the compiled parts.
+func (p *program) settle(names []Name) {
+	if p.subject < 0 {
+		for _, part := range p.text {
+			if part.slot >= 0 && part.typ == Number {
+				p.subject = part.slot
+				break
+			}
+		}
+	}
+	if p.subject >= 0 {
+		p.unit = names[p.subject].Unit
+	}
+	daemon := len(p.reads) > 0
+	for _, slot := range p.reads {
+		daemon = daemon && names[slot].Daemon
+	}
+	if daemon {
+		p.domain = OfDaemon
+	}
+	for _, ph := range p.SuppressIn {
+		if ph != monitor.PhaseUnknown && ph < monitor.NumPhases {
+			p.suppress[ph] = true
+		}
+	}
+}
+
+// Len gives the number of rules.
+func (s *Set) Len() int { return len(s.rules) }
+
+// Rule gives a rule of the set as its author wrote it.
+func (s *Set) Rule(i int) Rule { return s.rules[i].Rule }
+
+// Reads lists the names that the expression of a rule reads, in its order.
+func (s *Set) Reads(i int) []string {
+	out := make([]string, len(s.rules[i].reads))
+	for k, slot := range s.rules[i].reads {
+		out[k] = s.names[slot].Name
+	}
+	return out
+}

@@ -1,0 +1,166 @@
+package rules
+
+import (
+	"math"
+	"slices"
+
+	"throatwatch/monitor"
+	"throatwatch/monitor/unit"
+)
+
+// Type is the type of a name or of an expression.
+type Type uint8
+
+// The types.
+const (
+	Number Type = iota + 1
+	Bool
+	Text
+)
+
+// String names the type as messages use it.
+func (t Type) String() string {
+	switch t {
+	case Number:
+		return "a number"
+	case Bool:
+		return "true or false"
+	case Text:
+		return "a text"
+	}
+	return "invalid"
+}
+
+// Name is a value that expressions and texts may read.
+type Name struct {
+	Name      string         // identifiers joined by dots
+	Type      Type           //
+	Unit      string         // of a number as rules see it; "" = a plain number, or SI when Dimension is invalid
+	Dimension unit.Dimension // of a number; Invalid with no Unit = whatever the channel measures, in SI
+	Values    []string       // all values that a text can have
+	Daemon    bool           // says how the daemon does, not the engine: known without a scan
+}
+
+// Tri is a truth value of three. The zero value is Unknown.
+type Tri int8
+
+// The truth values.
+const (
+	False   Tri = -1
+	Unknown Tri = 0
+	True    Tri = 1
+)
+
+// TriOf gives the truth value of a condition that is known.
+func TriOf(b bool) Tri {
+	if b {
+		return True
+	}
+	return False
+}
+
+// String names the truth value.
+func (t Tri) String() string {
+	switch t {
+	case True:
+		return "true"
+	case False:
+		return "false"
+	case Unknown:
+	}
+	return "unknown"
+}
+
+// Frame holds the values of all names of an environment at one instant. Each
+// slice has one entry per name, in the order of the environment; the entry in
+// the slice of the name's type counts. NaN, Unknown and "" are not known.
+// The caller owns it and fills it before each step.
+type Frame struct {
+	Numbers []float64
+	Bools   []Tri
+	Texts   []string
+}
+
+// NewFrame gives a frame for names in which nothing is known.
+func NewFrame(names []Name) Frame {
+	f := Frame{Numbers: make([]float64, len(names)), Bools: make([]Tri, len(names)), Texts: make([]string, len(names))}
+	for i := range f.Numbers {
+		f.Numbers[i] = math.NaN()
+	}
+	return f
+}
+
+// StandardNames gives the environment of a rig with these channels and EGT
+// bands, in a fixed order:
+//
+//	every monitor.Quantity by its key
+//	choke_state phase back_pressure_from                   text
+//	choke_armed choke_marginal lit run_active              true or false
+//	egt_probes_used egt_probes_lost rake_probes_used rake_probes_lost
+//	health.recording health.input_path health.clock health.sources   true = works
+//	sources_lost data_age_s clock_skew_s
+//	channel.<id> quality.<id> usable.<id>                  SI value, quality, may be used
+//	egt.<band>.over .exceeded .elapsed_s .remaining_s
+func StandardNames(channels, bands []string) []Name {
+	var names []Name
+	for q := range monitor.NumQuantities {
+		info := q.Info()
+		u, err := unit.Parse(info.Unit)
+		if err != nil {
+			u = unit.Unit{} // a unit without conversions, such as rpm/s
+		}
+		if q == monitor.EGTSpread {
+			u = u.Difference()
+		}
+		names = append(names, Name{Name: info.Name, Type: Number, Unit: info.Unit, Dimension: u.Dimension})
+	}
+	var states, phases, sources, qualities []string
+	for s := monitor.NoFlow; s <= monitor.Choked; s++ {
+		states = append(states, s.String())
+	}
+	for p := monitor.Off; p < monitor.NumPhases; p++ {
+		phases = append(phases, p.String())
+	}
+	for s := monitor.SourceNone; s <= monitor.SourceEntry; s++ {
+		sources = append(sources, s.String())
+	}
+	for q := range monitor.NumQualities {
+		qualities = append(qualities, q.String())
+	}
+	count := func(name string) Name { return Name{Name: name, Type: Number, Dimension: unit.Ratio} }
+	seconds := func(name string) Name { return Name{Name: name, Type: Number, Unit: "s", Dimension: unit.Time} }
+	flag := func(name string) Name { return Name{Name: name, Type: Bool} }
+	daemon := func(n Name) Name { n.Daemon = true; return n }
+	names = append(names,
+		Name{Name: "choke_state", Type: Text, Values: states},
+		Name{Name: "phase", Type: Text, Values: phases},
+		Name{Name: "back_pressure_from", Type: Text, Values: sources},
+		flag("choke_armed"), flag("choke_marginal"), flag("lit"), daemon(flag("run_active")),
+		count("egt_probes_used"), count("egt_probes_lost"), count("rake_probes_used"), count("rake_probes_lost"),
+		daemon(flag("health.recording")), daemon(flag("health.input_path")), daemon(flag("health.clock")),
+		daemon(flag("health.sources")), daemon(count("sources_lost")),
+		daemon(seconds("data_age_s")), daemon(seconds("clock_skew_s")),
+	)
+	for _, id := range channels {
+		names = append(names,
+			Name{Name: "channel." + id, Type: Number},
+			Name{Name: "quality." + id, Type: Text, Values: slices.Clip(qualities)},
+			flag("usable."+id))
+	}
+	for _, b := range bands {
+		names = append(names, flag("egt."+b+".over"), flag("egt."+b+".exceeded"),
+			seconds("egt."+b+".elapsed_s"), seconds("egt."+b+".remaining_s"))
+	}
+	return names
+}
+
+// index finds the slots of names.
+type index map[string]int
+
+func indexOf(names []Name) index {
+	ix := make(index, len(names))
+	for i := range names {
+		ix[names[i].Name] = i
+	}
+	return ix
+}
