@@ -177,7 +177,7 @@ func loadTail(ctx context.Context, q querier) (t tail, err error) {
 		var host int64
 		var codec, size int
 		if err := rows.Scan(&first, &last, &host, &codec, &size); err != nil {
-			return t, err
+			return t, scanError("records", err)
 		}
 		if t.seq == 0 {
 			t.seq, t.host = last, host

@@ -324,7 +324,7 @@ func (f *File) connectAll(ctx context.Context, mode Mode) (err error) {
 	}
 	err = identify(ctx, f.read, applicationID, formatVersion)
 	if mode == ReadOnly {
-		if isCode(err, sqlite3.SQLITE_CORRUPT) {
+		if isDamage(err) {
 			// SQLite refuses a file that is shorter than its header says, unless
 			// told that the caller repairs it by hand. Here nothing can be written.
 			err = f.read.Close()
@@ -341,7 +341,7 @@ func (f *File) connectAll(ctx context.Context, mode Mode) (err error) {
 			return err
 		}
 		f.end, err = loadTail(ctx, f.read)
-		if errors.Is(mapError("file", err), ErrCorrupt) {
+		if errors.Is(mapError("records", err), ErrCorrupt) {
 			return nil // the reading methods will say so, after what they can read
 		}
 		return err
@@ -491,21 +491,29 @@ func identify(ctx context.Context, db *sql.DB, application, version int) error {
 	return nil
 }
 
-func isCode(err error, code int) bool {
+// code gives SQLite's extended result code; 0 when the error is not its own.
+func code(err error) int {
 	var e *sqlite.Error
-	return errors.As(err, &e) && e.Code()&0xff == code
+	if errors.As(err, &e) {
+		return e.Code()
+	}
+	return 0
+}
+
+// isDamage tells whether SQLite found a file that is no database, broken or cut.
+func isDamage(err error) bool {
+	c := code(err)
+	return c&0xff == sqlite3.SQLITE_CORRUPT || c&0xff == sqlite3.SQLITE_NOTADB || c == sqlite3.SQLITE_IOERR_SHORT_READ
 }
 
 // mapError turns what SQLite says into the errors a caller decides on.
 func mapError(table string, err error) error {
 	switch {
-	case isCode(err, sqlite3.SQLITE_CORRUPT), isCode(err, sqlite3.SQLITE_NOTADB):
-		var known *CorruptError
-		if errors.As(err, &known) {
-			return err
-		}
+	case errors.Is(err, ErrCorrupt), errors.Is(err, ErrFull):
+		return err
+	case isDamage(err):
 		return &CorruptError{Table: table, Err: err}
-	case isCode(err, sqlite3.SQLITE_FULL) && !errors.Is(err, ErrFull):
+	case code(err)&0xff == sqlite3.SQLITE_FULL:
 		return fmt.Errorf("%w: %w", ErrFull, err)
 	}
 	return err
