@@ -121,7 +121,7 @@ type Result struct {
 	Samples []ingest.Sample
 	Faults  Faults
 	Fault   *Fault // the first fault; nil when there is none
-	Refused bool   // the message as a whole could not be used: Fault says why
+	Refused bool   // no sample, and more than a missing number: for the quarantine
 
 	// DeviceTime tells that there are samples and each has an absolute time of
 	// its sender. Only then do equal payloads mean a copy of one message: a time

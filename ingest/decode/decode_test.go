@@ -202,6 +202,9 @@ urn:dev:ow:10e2073a01080063|%RH|1320067644000000000|21.2`, "", false, true, "RFC
 	{"line garbage", Lines, "", `[{"n":"p","v":1}]`, "", "syntax 1", true, false, "another format on this topic"},
 	{"line too many", Lines, "", strings.Repeat("p value=1\n", 4097), "", "too_large 1", true, false, "Limits.Records"},
 
+	{"line too many fields", Lines, "", "p " + strings.Repeat("a=1,", 4097) + "a=1", "", "too_large 1", true, false, "Limits.Records"},
+	{"line long name", Lines, "", strings.Repeat("m", MaxName) + " value=1\np value=1", "p||-|1", "syntax 1", false, false, "MaxName"},
+
 	// Bare value.
 	{"value", Value, "rigs/a/channels/p3", " 12.5\r\n", "p3||-|12.5", "", false, false, "bare number"},
 	{"value integer", Value, "p3", "-7", "p3||-|-7", "", false, false, "bare number, topic of one level"},

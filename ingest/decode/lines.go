@@ -2,7 +2,6 @@ package decode
 
 import (
 	"errors"
-	"math"
 	"strconv"
 	"time"
 
@@ -11,7 +10,10 @@ import (
 	"throatwatch/ingest"
 )
 
-var errLongName = errors.New("name is too long")
+var (
+	errLongName = errors.New("name is too long")
+	errTooMany  = errors.New("too many lines or fields")
+)
 
 // lines decodes InfluxDB line protocol with times in ns. The field "value" gives
 // a sample with the name of the measurement, another field one with the name
@@ -21,13 +23,14 @@ func (d *Decoder) lines(payload []byte) {
 	dec := lineprotocol.NewDecoderWithBytes(payload)
 	for n := 1; dec.Next(); n++ {
 		first := len(d.res.Samples)
-		if err := d.line(dec, n); err != nil {
+		err := d.line(dec, n)
+		switch {
+		case n > d.limits.Records || errors.Is(err, errTooMany):
+			d.refuse(ingest.ReasonTooLarge, n, -1, errTooMany.Error(), nil)
+			return
+		case err != nil:
 			d.res.Samples = d.res.Samples[:first]
 			d.note(ingest.ReasonSyntax, n, -1, "line is not line protocol", err)
-		}
-		if n > d.limits.Records || len(d.res.Samples) > d.limits.Records {
-			d.refuse(ingest.ReasonTooLarge, n, -1, "too many lines or fields", nil)
-			return
 		}
 	}
 }
@@ -56,8 +59,11 @@ func (d *Decoder) line(dec *lineprotocol.Decoder, n int) error {
 			d.note(reason, n, -1, "field is not a finite number", nil)
 			continue
 		}
-		if len(measurement)+1+len(key) > MaxName {
+		switch {
+		case len(measurement)+1+len(key) > MaxName:
 			return errLongName
+		case len(d.res.Samples) == d.limits.Records:
+			return errTooMany
 		}
 		name := measurement
 		if string(key) != "value" {
@@ -98,5 +104,5 @@ func fieldValue(kind lineprotocol.ValueKind, raw []byte) (float64, ingest.Reason
 	case lineprotocol.Bool, lineprotocol.String, lineprotocol.Unknown:
 		return 0, ingest.ReasonNotNumber, nil
 	}
-	return math.NaN(), ingest.ReasonNotNumber, nil
+	return 0, ingest.ReasonNotNumber, nil
 }
