@@ -1,0 +1,84 @@
+// Requests to the server beside the page. Failures become sentences for people.
+
+import type { Alarm, Frame, HelloFrame, RigInfo, RunSummary, SeriesReply, ThroatCurve } from './frames';
+
+/** A refused or failed request; status 0 when the server was not reached. */
+export class RequestError extends Error {
+  constructor(readonly status: number, message: string) { super(message); }
+}
+
+async function request(path: string, init: RequestInit = {}): Promise<Response> {
+  let reply: Response;
+  try {
+    reply = await fetch(path, init);
+  } catch (e) {
+    if (e instanceof DOMException && e.name === 'AbortError') throw e;
+    throw new RequestError(0, 'the server was not reached');
+  }
+  if (reply.ok) return reply;
+  let detail = `${reply.status} ${reply.statusText}`;
+  try {
+    const problem = (await reply.json()) as { title?: string; detail?: string }; // RFC 9457
+    detail = [problem.title, problem.detail].filter(Boolean).join(': ') || detail;
+  } catch { /* not a problem document: the status line has to do */ }
+  throw new RequestError(reply.status, detail);
+}
+
+async function get<T>(path: string, signal?: AbortSignal): Promise<T> {
+  return (await (await request(path, signal ? { signal } : {})).json()) as T;
+}
+
+const post = (path: string, body: unknown): Promise<Response> =>
+  request(path, { method: 'POST', headers: { 'Content-Type': 'application/json' }, body: JSON.stringify(body) });
+
+const id = encodeURIComponent;
+
+/** A random UUID, version 4; crypto.randomUUID is missing on plain HTTP. */
+export function uuid(): string {
+  const b = crypto.getRandomValues(new Uint8Array(16));
+  b[6] = ((b[6] as number) & 15) | 64;
+  b[8] = ((b[8] as number) & 63) | 128;
+  const hex = [...b].map((x) => x.toString(16).padStart(2, '0')).join('');
+  return `${hex.slice(0, 8)}-${hex.slice(8, 12)}-${hex.slice(12, 16)}-${hex.slice(16, 20)}-${hex.slice(20)}`;
+}
+
+export const api = {
+  rigs: () => get<RigInfo[]>('api/rigs'),
+  hello: (rig: string) => get<HelloFrame>(`api/rigs/${id(rig)}/hello`),
+  throatCurve: (rig: string, totalTemperature: number, fuelAir: number, humidity: number) =>
+    get<ThroatCurve>(`api/rigs/${id(rig)}/throat-curve?total_temperature=${totalTemperature}&fuel_air_ratio=${fuelAir}&humidity_ratio=${humidity}`),
+  alarms: () => get<Alarm[]>('api/alarms'),
+  acknowledge: (a: Alarm) => post(`api/alarms/${id(a.id)}/acknowledge`, { revision: a.revision, reason: '', request_id: uuid() }),
+  mark: (run: string, text: string, by: string) => post(`api/runs/${id(run)}/marks`, { text, by }),
+  run: (rig: string, action: 'start' | 'end') => post(`api/rigs/${id(rig)}/runs`, { action }),
+  runs: () => get<RunSummary[]>('api/runs'),
+  runSummary: (run: string) => get<RunSummary>(`api/runs/${id(run)}`),
+  series: (run: string, names: readonly string[], from: number, to: number, points: number, signal?: AbortSignal) =>
+    get<SeriesReply>(`api/runs/${id(run)}/series?names=${names.join(',')}&from=${from}&to=${to}&points=${points}`, signal),
+
+  /**
+   * The frames of [from, to), seconds of the run, one call of `onFrame` each as
+   * they arrive; onFrame returns false to stop. `kinds` asks for some kinds only.
+   */
+  async messages(run: string, from: number, to: number, kinds: string, signal: AbortSignal, onFrame: (f: Frame) => boolean): Promise<void> {
+    const reply = await request(`api/runs/${id(run)}/messages?from=${from}&to=${to}&channels=*${kinds && `&kinds=${kinds}`}`, { signal });
+    const reader = (reply.body as ReadableStream<Uint8Array>).getReader();
+    const decoder = new TextDecoder();
+    let rest = '';
+    for (;;) {
+      const { done, value } = await reader.read();
+      rest += done ? '\n' : decoder.decode(value, { stream: true });
+      let start = 0;
+      for (let end = rest.indexOf('\n'); end >= 0; end = rest.indexOf('\n', start)) {
+        const line = rest.slice(start, end).trim();
+        start = end + 1;
+        if (line && !onFrame(JSON.parse(line) as Frame)) {
+          void reader.cancel();
+          return;
+        }
+      }
+      rest = rest.slice(start);
+      if (done) return;
+    }
+  },
+};

@@ -1,0 +1,201 @@
+// The frames of /live and of /api/runs/{id}/messages, as the server sends them.
+// Every number is SI, null means not available; times are RFC 3339 UTC.
+
+export type Num = number | null;
+export type Priority = 'warning' | 'caution' | 'advisory' | 'note';
+export type AlarmState =
+  | 'unacknowledged' | 'acknowledged' | 'returned_unacknowledged'
+  | 'latched_unacknowledged' | 'latched_acknowledged'
+  | 'shelved' | 'suppressed_by_design' | 'out_of_service' | 'normal';
+export type ChokeState = 'choked' | 'unchoked' | 'no_flow' | 'unknown';
+
+export interface Alarm {
+  id: string;
+  rule: string;
+  title: string;
+  text: string;
+  priority: Priority;
+  state: AlarmState;
+  raised: string;
+  changed: string;
+  revision: number;
+  caution: string;
+  response: string;
+  value: Num;
+  unit: string;
+  acknowledged_by: string;
+  reason: string;
+  until: string | null;
+  past: boolean;
+  first_out: boolean;
+  group: string;
+  unknown: boolean;
+}
+
+/** What is used up of the allowance of one EGT band. */
+export interface Ledger {
+  name: string;
+  kind: 'run' | 'start';
+  limit_k: number;
+  allowance_s: number;
+  per_run_s: number;
+  elapsed_s: number;
+  assumed_s: number;
+  run_total_s: number;
+  over: boolean;
+  exceeded: boolean;
+  peak_k: Num;
+  excursions: number;
+}
+
+export interface Band {
+  name: string;
+  kind: 'run' | 'start';
+  limit_k: number;
+  allowance_s: number;
+  per_run_s: number;
+}
+
+export interface Run {
+  id: string;
+  number: number;
+  rig: string;
+  engine: string;
+  started: string;
+  ended: string | null;
+  by: string;
+}
+
+export interface Channel {
+  id: string;
+  title: string;
+  unit: string;
+  dimension: string;
+  reference: string;
+  low: Num;
+  high: Num;
+  recorded_only: boolean;
+  station: string;
+}
+
+export interface RigInfo {
+  id: string;
+  title: string;
+  engine_model: string;
+  engine_serial: string;
+  engine_build: string;
+  nozzle_serial: string;
+  limits_version: string;
+}
+
+export interface Source { topic: string; age_s: Num; messages: number; skew_s: Num; alive: boolean }
+export interface Session { filter: string; connected: boolean }
+
+interface Numbered { epoch: number; n: number; t: string }
+
+export interface StatusFrame extends Numbered {
+  kind: 'status';
+  host_time: string;
+  data_age_s: Num;
+  catching_up: boolean;
+  recording: boolean;
+  not_recording_since: string | null;
+  input_path: boolean;
+  clock: boolean;
+  sources: Source[] | null;
+  counters: Record<string, number> | null;
+  run_active: boolean;
+  rules_unknown: number;
+  sessions: Session[] | null;
+}
+
+export interface HelloFrame extends Numbered {
+  kind: 'hello';
+  api: number;
+  host_time: string;
+  scan_rate: number;
+  config_hash: string;
+  build: string;
+  run: Run | null;
+  rig: RigInfo;
+  channels: Channel[] | null;
+  quantities: { name: string; unit: string; title: string }[] | null;
+  bands: Band[] | null;
+  choke_armed_above_rpm: Num;
+  alarms: Alarm[] | null;
+  ledgers: Ledger[] | null;
+  status: StatusFrame | null;
+}
+
+/** Quantities of an operating point that the page shows; keys as in the API. */
+export const quantityKeys = [
+  'npr', 'npr_u95', 'npr_rake', 'critical_npr', 'choke_npr',
+  'choke_margin_percent', 'choke_margin_percent_u95', 'choke_margin_percent_low95', 'choke_margin_percent_high95', 'choke_margin_pa',
+  'mass_flow_kg_s', 'mass_flow_kg_s_u95', 'gross_thrust_n', 'gross_thrust_n_u95', 'measured_thrust_n',
+  'flow_parameter', 'total_pressure_pa', 'total_temperature_k', 'back_pressure_pa', 'fuel_air_ratio', 'humidity_ratio',
+  'discharge_coefficient', 'air_flow_kg_s', 'fuel_flow_kg_s', 'flow_balance_kg_s',
+  'independent_flow_kg_s', 'independent_flow_kg_s_u95', 'independent_flow_parameter',
+  'egt_indicated_k', 'egt_spread_k', 'egt_hottest_k', 'egt_coldest_k', 'speed_rpm',
+] as const;
+export type Quantity = (typeof quantityKeys)[number];
+
+export interface PointFrame extends Numbered, Partial<Record<Quantity, Num>> {
+  kind: 'operating_point';
+  scan: number;
+  choke_state: ChokeState;
+  choke_marginal: boolean;
+  choke_armed: boolean;
+  lit: boolean;
+  phase: string;
+  back_pressure_from: string;
+  total_temperature_from: string;
+  choke_npr_from: string;
+  egt_probes_used: number;
+  rake_probes_used: number;
+  cause: string | null;
+  egt_cause: string | null;
+  warnings: string[] | null;
+}
+
+export interface ChannelValue { value: Num; raw: Num; quality: string; age_s: Num }
+export interface ChannelsFrame extends Numbered { kind: 'channels'; channels: Record<string, ChannelValue> }
+export interface AlarmFrame extends Numbered { kind: 'alarm'; alarm: Alarm }
+export interface LedgerFrame extends Numbered { kind: 'ledger'; bands: Ledger[] }
+export interface Mark { text: string; by: string }
+export interface MarkFrame extends Numbered { kind: 'mark'; mark: Mark }
+export interface RunFrame extends Numbered { kind: 'run'; event: 'started' | 'ended'; run: Run }
+export interface ResetFrame { kind: 'reset'; reason: string }
+
+export type Frame =
+  | HelloFrame | PointFrame | ChannelsFrame | AlarmFrame | LedgerFrame
+  | StatusFrame | MarkFrame | RunFrame | ResetFrame;
+
+/** A line of /api/runs. */
+export interface RunSummary {
+  id: string;
+  number: number;
+  rig: string;
+  engine: string;
+  started: string;
+  ended: string | null;
+  state: 'active' | 'ended';
+  keep: boolean;
+  notes: string;
+  tags: string[] | null;
+  size_bytes: number;
+  alarms: number;
+  duration_s: number;
+}
+
+export interface ThroatCurve { npr: number[]; flow_parameter: number[]; critical_npr: number }
+
+export interface Series {
+  unit: string;
+  t: number[];
+  min: (number | string | null)[];
+  max: (number | string | null)[];
+  last: (number | string | null)[];
+  n: number[];
+  cause: string | null;
+}
+export interface SeriesReply { through: string; series: Record<string, Series> }

@@ -1,0 +1,61 @@
+// Alarms: those that stand, those taken out of annunciation, and what happened
+// since the page was opened.
+
+import { isStanding, needsAcknowledge, priorityLook, standing, stateWord } from '../alarms';
+import type { Display } from '../context';
+import { type View, attr, h, refill } from '../dom';
+import type { Alarm } from '../frames';
+import { clock, seconds } from '../time';
+import { significant } from '../units';
+import { veil } from '../watch/display';
+
+const head = (...names: string[]): HTMLElement => h('thead', {}, h('tr', {}, ...names.map((n) => h('th', { scope: 'col' }, n))));
+
+export function priorityBadge(a: Alarm): HTMLElement {
+  const look = priorityLook[a.priority];
+  return h('span', { class: 'badge', 'data-priority': a.priority }, h('span', { 'aria-hidden': 'true' }, look.shape), ` ${look.word}`);
+}
+
+export function alarmsPage(d: Display): View {
+  const now_ = h('tbody');
+  const quiet = h('tbody');
+  const past = h('tbody');
+  const cover = veil(h('div', { class: 'page' },
+    h('h1', {}, 'Alarms'),
+    h('section', {}, h('h2', {}, 'Standing'), h('table', { class: 'list alarms' }, head('Priority', 'State', 'Raised, UTC', 'Alarm and caution', 'Response', 'Value', ''), now_)),
+    h('section', {}, h('h2', {}, 'Not annunciated: shelved, suppressed by design, out of service'), h('table', { class: 'list' }, head('Priority', 'State', 'Until', 'Alarm', 'Reason'), quiet)),
+    h('section', {}, h('h2', {}, 'History since this page was opened'), h('table', { class: 'list' }, head('Time, UTC', 'Priority', 'Alarm', 'From', 'To', 'Note'), past))));
+  const empty = (text: string, n: number): Node[] => [h('tr', {}, h('td', { colspan: String(n), class: 'extra' }, text))];
+
+  function ack(a: Alarm): Node {
+    if (!d.acknowledger || !needsAcknowledge(a)) return h('span', { class: 'extra' }, a.acknowledged_by ? `by ${a.acknowledged_by}` : '');
+    const state = d.acknowledger.state(a);
+    const b = h('button', { class: 'ack', type: 'button', onclick: () => d.acknowledger?.send(a) }, state === 'pending' ? 'Acknowledging…' : 'Acknowledge');
+    attr(b, 'disabled', state === 'pending');
+    return h('div', {}, b, state !== 'idle' && state !== 'pending' ? h('div', { class: 'extra' }, state) : '');
+  }
+
+  return {
+    el: cover.el,
+    update(now) {
+      cover.update(d.fresh(now));
+      const m = d.model();
+      const list = standing(m.alarms.values());
+      refill(now_, list.map((a) => `${a.id}:${a.revision}:${d.acknowledger?.state(a)}`).join() || 'none', () => list.length === 0 ? empty('No alarm standing', 7) : list.map((a) => h('tr', { 'data-open': needsAcknowledge(a) },
+        h('td', {}, priorityBadge(a)),
+        h('td', {}, stateWord[a.state], a.first_out ? h('div', { class: 'extra' }, 'first out') : '', a.past ? h('div', { class: 'extra' }, 'past') : ''),
+        h('td', { class: 'num' }, clock(seconds(a.raised))),
+        h('td', {}, h('b', {}, a.text || a.title), h('div', {}, a.caution), a.group ? h('div', { class: 'extra' }, `group ${a.group}`) : ''),
+        h('td', {}, a.response),
+        h('td', { class: 'num' }, a.unknown ? 'unknown' : a.value === null ? '–' : `${significant(a.value, 4)} ${a.unit}`),
+        h('td', {}, ack(a)))));
+      const silent = [...m.alarms.values()].filter((a) => !isStanding(a));
+      refill(quiet, silent.map((a) => `${a.id}:${a.revision}`).join() || 'none', () => silent.length === 0 ? empty('None', 5) : silent.map((a) => h('tr', {},
+        h('td', {}, priorityBadge(a)), h('td', {}, stateWord[a.state]), h('td', { class: 'num' }, a.until ? clock(seconds(a.until)) : '–'), h('td', {}, a.title), h('td', {}, a.reason))));
+      const last = m.history[m.history.length - 1];
+      refill(past, last ? `${m.history.length}:${last.t}:${last.alarm.id}:${last.to}` : 'none', () => !last ? empty('Nothing yet', 6) : [...m.history].reverse().map((e) => h('tr', {},
+        h('td', { class: 'num' }, clock(e.t)), h('td', {}, priorityBadge(e.alarm)), h('td', {}, e.alarm.title), h('td', {}, stateWord[e.from]), h('td', {}, stateWord[e.to]), h('td', {}, e.note))));
+    },
+    destroy: () => undefined,
+  };
+}

@@ -1,0 +1,45 @@
+// Help: what each number means, where it comes from and where it ends.
+
+import { type View, h } from '../dom';
+
+const terms: [string, string][] = [
+  ['NPR', 'p8 / back pressure, where p8 is the nozzle total pressure p7 of the rake less the duct loss. The rake value p7 / back pressure is published beside it.'],
+  ['Critical NPR, choke NPR', 'Critical NPR: the pressure ratio at which one-dimensional flow of this gas, at this temperature and composition, reaches Mach 1 in the throat. Choke NPR: the one used for the state; the critical NPR unless a nozzle calibration gives another. Its origin is written under it.'],
+  ['Choke margin', 'NPR / choke NPR − 1 in percent, positive when choked. For the one-dimensional choke NPR it equals (p* − back pressure) / back pressure. ± is the 95 % uncertainty (U95); where the interval is not symmetric both ends are given.'],
+  ['Choke state', 'Choked or unchoked by the best estimate, with hysteresis. Marginal: the uncertainty does not decide. No flow: below the resolution floor. Unknown: an input is missing, and the cause is named.'],
+  ['Flow parameter', 'W √(R T0) / (A p0), without dimension. It rises with NPR and stays constant past the critical NPR.'],
+  ['Hollow and solid point', 'The hollow point is computed from pressures and temperature and lies on the curve by construction: it proves nothing about the flow. The solid point is drawn only where air flow and fuel flow are measured; its region holds 95 % if the errors of the two axes are independent, which a shared pressure makes only nearly true.'],
+  ['W8', 'Nozzle flow Cd · A8 · φ · p0 / √(R T0), φ the ideal flow parameter of this gas.'],
+  ['Gross thrust, computed', 'Momentum plus pressure thrust of the nozzle by the thrust basis in the rig file. It is not the load-cell reading.'],
+  ['Indicated EGT', 'The harness value as the engine’s limits are written for it, without recovery or lag correction. Only it is held against the bands; the nozzle’s own gas temperature is a different number.'],
+  ['Bands and allowance', 'A band is a limit with the time for which it may be exceeded. Start bands hold until idle is first reached, run bands always. An excursion ends only when EGT has been below the limit less the deadband for the re-arm time. Time that was not seen while the last good value was above the limit is counted and marked assumed.'],
+  ['Spread', 'Hottest less coldest probe; none for a harness wired in parallel.'],
+  ['Choke watch', 'The unchoke alarm acts only while the choke watch is armed, by rotor speed or by the test card.'],
+  ['Data age', 'Time since the newest measured value. The dash beside it moves once a second with the server: if it stands still, the page is not fed.'],
+];
+
+const limits = [
+  'One-dimensional, frozen, thermally perfect gas, valid from 200 to 1800 K; outside it the operating point says so in its warnings.',
+  'Back pressure from the barometer less an entered cell depression is less certain than an exit-plane measurement; it is named wherever it is used.',
+  'With reheat lit or a throat area that is not known the state is unknown, never a guess.',
+  'A probe is left out only on proof of failure. A probe that reads hot without such proof counts: a real hot streak is not voted away.',
+  'Alarms whose event is more than 5 s old when they are judged are listed as past and do not sound.',
+];
+
+export function helpPage(): View {
+  return {
+    el: h('div', { class: 'page help' },
+      h('h1', {}, 'Help'),
+      h('section', { class: 'safety' }, h('h2', {}, 'What this is not'),
+        h('p', {}, 'throatwatch only watches. It commands nothing and trips nothing. Facility safety procedures, hard-wired protection and licensed practice come first. This display is not protection. No page of it is a clearance to start.')),
+      h('section', {}, h('h2', {}, 'The numbers'), h('dl', { class: 'terms' }, ...terms.flatMap(([k, v]) => [h('dt', {}, k), h('dd', {}, v)]))),
+      h('section', {}, h('h2', {}, 'Limits of the method'), h('ul', {}, ...limits.map((l) => h('li', {}, l)))),
+      h('section', {}, h('h2', {}, 'Signs'), h('ul', {},
+        h('li', {}, '■ warning: immediate awareness and response. ▲ caution: immediate awareness, later response. ◆ advisory: awareness. ● note.'),
+        h('li', {}, 'Hatched or dimmed with “–”: not present, or not to be believed; the cause is written beside it.'),
+        h('li', {}, 'Grey page with large letters: the data link is gone. Thick frame and REPLAY: a stored run, not the rig.'))),
+      h('section', {}, h('h2', {}, 'Keys'), h('p', {}, 'Tab and Enter reach every control. In replay: space plays and pauses, ← and → step by scan, page up and page down jump to the next alarm or mark.'))),
+    update: () => undefined,
+    destroy: () => undefined,
+  };
+}

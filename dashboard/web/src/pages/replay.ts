@@ -1,0 +1,171 @@
+// Replay of one stored run on the Watch display, by the page's own clock.
+
+import { priorityLook } from '../alarms';
+import { api } from '../api';
+import type { Display } from '../context';
+import { type View, attr, h, text } from '../dom';
+import type { Frame, RunSummary } from '../frames';
+import type { Palette } from '../palette';
+import { Player, speeds } from '../player';
+import { columns, seriesRows } from '../ring';
+import type { Flag } from '../state';
+import { dateClock, duration, seconds } from '../time';
+import { surface } from '../watch/canvas';
+import { watchDisplay } from '../watch/display';
+
+/** Traces reach this far back, s. */
+const history = 600;
+
+export function replayPage(runID: string, rig: string, palette: () => Palette): View {
+  let player: Player | null = null;
+  let run: RunSummary | null = null;
+  let start = NaN;
+  let inner: View | null = null;
+  let last = NaN;
+  let events: Flag[] = [];
+  let chokeRows: { t: number; margin: number }[] = [];
+  let scrubbing: number | null = null;
+  const over = new AbortController();
+
+  const button = (label: string, name: string, act: () => void): HTMLButtonElement => h('button', { type: 'button', 'aria-label': name, title: name, onclick: act }, label);
+  const play = h('button', { type: 'button', class: 'play', 'data-q': 'play', onclick: () => toggle() }, 'Play');
+  const speed = h('select', { 'aria-label': 'Replay speed', 'data-q': 'speed', onchange: () => { if (player) player.speed = Number(speed.value); } }, ...speeds.map((s) => h('option', { value: String(s) }, `${s}×`)));
+  const clockText = h('span', { class: 'at', 'data-q': 'replay-clock' });
+  const trouble = h('span', { class: 'trouble', role: 'status' });
+  const bar = surface('scrubshade', 'Choked periods, alarms and marks of the run');
+  const scrub = h('input', { type: 'range', min: '0', max: '1', step: '0.05', value: '0', 'aria-label': 'Position in the run', 'data-q': 'scrub',
+    oninput: () => { scrubbing = Number(scrub.value); }, onchange: () => { scrubbing = null; go(Number(scrub.value)); } });
+  const controls = h('div', { class: 'controls', role: 'group', 'aria-label': 'Replay controls' },
+    h('span', { class: 'replayword' }, 'REPLAY'), play,
+    button('◂|', 'Back one scan', () => back()), button('|▸', 'Forward one scan', () => forward()),
+    speed, button('⚑ ◂', 'Previous alarm or mark', () => jump(-1)), button('▸ ⚑', 'Next alarm or mark', () => jump(1)),
+    h('div', { class: 'scrub' }, bar.el, scrub), clockText, trouble);
+  const body = h('div', { class: 'replaybody' }, h('p', { class: 'loading' }, 'Reading the run…'));
+  const el = h('div', { class: 'replay', 'data-q': 'replay-frame' }, controls, body, h('div', { class: 'watermark', 'aria-hidden': 'true' }, 'REPLAY'));
+
+  const now = (): number => performance.now();
+  function go(position: number): void {
+    void player?.seek(position, now());
+  }
+  function toggle(): void {
+    if (!player) return;
+    player.playing = !player.playing;
+    if (player.playing && player.position >= player.length) go(0);
+  }
+  function forward(): void {
+    if (!player) return;
+    player.playing = false;
+    player.step(now());
+  }
+  function back(): void {
+    if (!player) return;
+    player.playing = false;
+    if (!player.back(now())) go(player.position - 1);
+  }
+  function jump(way: 1 | -1): void {
+    if (!player) return;
+    const at = start + player.position;
+    // A second before the event, so that it is seen to happen; hence the 1.5 s either way.
+    const next = way > 0 ? events.find((e) => e.t > at + 1.5) : [...events].reverse().find((e) => e.t < at);
+    if (next) go(next.t - start - 1);
+  }
+  function onKey(e: KeyboardEvent): void {
+    const tag = (e.target as HTMLElement).tagName;
+    if (tag === 'INPUT' || tag === 'SELECT' || e.ctrlKey || e.metaKey || e.altKey) return;
+    const act = { ' ': tag === 'BUTTON' || tag === 'A' ? undefined : toggle, 'ArrowLeft': back, 'ArrowRight': forward, 'PageDown': () => jump(1), 'PageUp': () => jump(-1) }[e.key];
+    if (!act) return;
+    e.preventDefault();
+    act();
+  }
+  document.addEventListener('keydown', onKey);
+
+  async function open(): Promise<void> {
+    run = await api.runSummary(runID);
+    start = seconds(run.started);
+    attr(scrub, 'max', run.duration_s);
+    const p = new Player({
+      async window(from, to, signal) {
+        const frames: Frame[] = [];
+        await api.messages(runID, from, to, '', signal, (f) => frames.push(f) > 0);
+        return frames;
+      },
+      async before(to, signal) {
+        if (to <= 0) return [];
+        return seriesRows(await api.series(runID, columns, Math.max(0, to - history), to, 1500, signal), start);
+      },
+    }, start, run.duration_s);
+    const display: Display = { rig, model: () => p.model, fresh: () => ({ kind: 'replay' }), palette, acknowledger: null };
+    inner = watchDisplay(display, null);
+    body.replaceChildren(inner.el);
+    player = p;
+    void p.seek(0, now());
+    void overview(run.duration_s);
+  }
+
+  /** Choke shading and flags of the whole run for the scrub bar. */
+  async function overview(length: number): Promise<void> {
+    try {
+      const reply = await api.series(runID, ['choke_margin_percent'], 0, length, 1500, over.signal);
+      const s = reply.series['choke_margin_percent'];
+      chokeRows = (s?.t ?? []).map((t, i) => ({ t, margin: typeof s?.last[i] === 'number' ? (s.last[i] as number) : NaN }));
+    } catch { /* the bar then has no shading; the display itself has it */ }
+    const found: Flag[] = [];
+    try {
+      await api.messages(runID, 0, length + 1, 'alarm,mark', over.signal, (f) => {
+        if (f.kind === 'alarm' && f.alarm.state === 'unacknowledged') found.push({ t: seconds(f.alarm.raised), kind: f.alarm.priority, text: f.alarm.title, id: f.alarm.id });
+        if (f.kind === 'mark') found.push({ t: seconds(f.t), kind: 'mark', text: f.mark.text, id: `mark ${f.t}` });
+        events = found.sort((a, b) => a.t - b.t);
+        return true;
+      });
+    } catch { /* left page or lost server: what was found so far stands */ }
+  }
+
+  function paintBar(length: number): void {
+    const s = bar.begin();
+    if (!s) return;
+    const { c, width, height } = s;
+    const p = palette();
+    const x = (t: number): number => 8 + (t / length) * (width - 16); // the thumb of the range input is 16 wide
+    c.fillStyle = p.panel;
+    c.fillRect(8, 0, width - 16, height);
+    c.fillStyle = p.choked;
+    chokeRows.forEach((r, i) => {
+      const next = chokeRows[i + 1];
+      if (r.margin >= 0 && next) c.fillRect(x(r.t), 0, Math.max(1, x(next.t) - x(r.t) + 0.5), height);
+    });
+    c.textAlign = 'center';
+    c.textBaseline = 'top';
+    c.font = '10px system-ui, sans-serif';
+    for (const e of events) {
+      c.fillStyle = e.kind === 'warning' ? p.warningInk : e.kind === 'caution' ? p.cautionInk : p.soft;
+      c.fillText(e.kind === 'mark' ? '⚑' : priorityLook[e.kind].shape, x(e.t - start), 0);
+    }
+  }
+
+  open().catch((e: Error) => body.replaceChildren(h('p', { class: 'trouble' }, `Run ${runID} could not be read: ${e.message}.`), h('p', {}, h('a', { href: '#/runs' }, 'Back to the runs'))));
+
+  return {
+    el,
+    update(at) {
+      const dt = Number.isNaN(last) ? 0 : Math.min(1, (at - last) / 1000); // a hidden page does not leap
+      last = at;
+      if (!player || !inner || !run) return;
+      player.advance(dt, at);
+      const shown = scrubbing ?? player.position;
+      if (scrubbing === null && Math.abs(Number(scrub.value) - shown) > 0.04) scrub.value = String(shown);
+      attr(scrub, 'aria-valuetext', `${duration(shown)} of ${duration(player.length)}`);
+      text(play, player.playing ? 'Pause' : 'Play');
+      text(clockText, `${duration(shown)} of ${duration(player.length)} · ${dateClock(start + shown)} UTC`);
+      text(trouble, player.problem ? `Stopped: ${player.problem}` : player.playing && player.waiting ? 'reading…' : '');
+      paintBar(player.length);
+      inner.update(at);
+    },
+    destroy() {
+      over.abort();
+      player?.stop();
+      inner?.destroy();
+      bar.destroy();
+      document.removeEventListener('keydown', onKey);
+    },
+  };
+}

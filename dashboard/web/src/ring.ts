@@ -1,0 +1,181 @@
+// The samples behind the traces: fixed columns in one ring, filled in event-time
+// order. A missing value is NaN. When the ring is full the oldest row goes.
+
+import type { PointFrame, SeriesReply } from './frames';
+
+export const columns = [
+  'npr', 'choke_npr', 'choke_margin_percent', 'egt_indicated_k',
+  'mass_flow_kg_s', 'independent_flow_kg_s', 'speed_rpm', 'flow_parameter',
+] as const;
+export type Column = (typeof columns)[number];
+
+/** Samples further apart than this are not joined by a line, s. */
+export const gapSeconds = 1;
+
+const capacity = 1 << 15; // 600 s at 50 scans/s
+
+/** One row: the columns in their order, then 1 choked, 0 not choked, NaN unknown. */
+export type Row = ArrayLike<number>;
+
+export class Ring {
+  private readonly time = new Float64Array(capacity);
+  private readonly data = Array.from({ length: columns.length + 1 }, () => new Float64Array(capacity));
+  private head = 0; // where the next row goes
+  size = 0;
+
+  /** Adds a row; one that is not newer than the last is ignored. */
+  push(t: number, row: Row): void {
+    if (!Number.isFinite(t) || (this.size > 0 && t <= this.t(this.size - 1))) return;
+    this.time[this.head] = t;
+    this.data.forEach((column, k) => { column[this.head] = row[k] ?? NaN; });
+    this.head = (this.head + 1) % capacity;
+    this.size = Math.min(this.size + 1, capacity);
+  }
+
+  /** Puts rows where the ring has none: before its first row and into its gaps. */
+  fill(rows: { t: number; row: Row }[]): void {
+    const kept = Array.from({ length: this.size }, (_, i) => ({ t: this.t(i), row: this.data.map((_, k) => this.value(k, i)) as Row }));
+    const added = rows.filter((r) => {
+      const i = this.lower(r.t);
+      const before = i > 0 ? this.t(i - 1) : -Infinity;
+      if (i === this.size) return i === 0; // newer than the last row: that is the link's to bring
+      return this.t(i) - before > gapSeconds;
+    });
+    this.clear();
+    for (const r of [...kept, ...added].sort((a, b) => a.t - b.t)) this.push(r.t, r.row);
+  }
+
+  /** Forgets the rows after t. */
+  cut(t: number): void {
+    while (this.size > 0 && this.t(this.size - 1) > t) {
+      this.head = (this.head - 1 + capacity) % capacity;
+      this.size--;
+    }
+  }
+
+  clear(): void {
+    this.head = 0;
+    this.size = 0;
+  }
+
+  private at(i: number): number { return (this.head - this.size + i + capacity) % capacity; }
+
+  /** Time of row i, 0 being the oldest. */
+  t(i: number): number { return this.time[this.at(i)] as number; }
+
+  value(column: number, i: number): number { return (this.data[column] as Float64Array)[this.at(i)] as number; }
+
+  choked(i: number): number { return this.value(columns.length, i); }
+
+  /** Index of the first row at or after t. */
+  lower(t: number): number {
+    let [low, high] = [0, this.size];
+    while (low < high) {
+      const middle = (low + high) >> 1;
+      if (this.t(middle) < t) low = middle + 1; else high = middle;
+    }
+    return low;
+  }
+}
+
+/** The row of an operating point. */
+export function pointRow(p: PointFrame): number[] {
+  const row = columns.map((c) => p[c] ?? NaN);
+  row.push(p.choke_state === 'choked' ? 1 : p.choke_state === 'unknown' ? NaN : 0);
+  return row;
+}
+
+/**
+ * Rows of a /series reply of the columns; `start` is the time of second 0 of the
+ * run. A bucket of several samples becomes two rows, its lowest and its highest
+ * values, so that no excursion is lost. Choked is judged by the margin's sign.
+ */
+export function seriesRows(reply: SeriesReply, start: number): { t: number; row: number[] }[] {
+  const rows = new Map<number, number[]>();
+  const put = (t: number, k: number, v: unknown): void => {
+    let row = rows.get(t);
+    if (!row) rows.set(t, (row = new Array<number>(columns.length + 1).fill(NaN)));
+    if (typeof v !== 'number') return;
+    row[k] = v;
+    if (columns[k] === 'choke_margin_percent') row[columns.length] = v >= 0 ? 1 : 0;
+  };
+  columns.forEach((name, k) => {
+    const s = reply.series[name];
+    if (!s) return;
+    s.t.forEach((t, i) => {
+      const next = s.t[i + 1] ?? t;
+      put(start + t, k, s.min[i]);
+      if ((s.n[i] ?? 1) > 1 && next > t) put(start + (t + next) / 2, k, s.max[i]);
+    });
+  });
+  return [...rows].map(([t, row]) => ({ t, row })).sort((a, b) => a.t - b.t);
+}
+
+export interface Window { t: number[]; y: (number | null)[][] }
+
+/**
+ * The rows of [t0, t1] for drawing, at most about 2 per bucket: each bucket gives
+ * its lowest and highest value in the order of their occurrence, so a spike of
+ * one scan stays visible at any zoom. Bucket edges are multiples of their width:
+ * the picture does not shimmer while the window slides. Gaps become nulls.
+ */
+export function decimate(ring: Ring, wanted: readonly Column[], t0: number, t1: number, buckets: number): Window {
+  const index = wanted.map((c) => columns.indexOf(c));
+  const out: Window = { t: [], y: wanted.map(() => []) };
+  const first = Math.max(0, ring.lower(t0) - 1);
+  const last = Math.min(ring.size, ring.lower(t1) + 1);
+  const gap = (t: number): void => {
+    out.t.push(t);
+    for (const y of out.y) y.push(null);
+  };
+  if (last - first <= 2 * buckets) {
+    for (let i = first; i < last; i++) {
+      const t = ring.t(i);
+      if (i > first && t - ring.t(i - 1) > gapSeconds) gap((t + ring.t(i - 1)) / 2);
+      out.t.push(t);
+      index.forEach((k, s) => { const v = ring.value(k, i); out.y[s]?.push(Number.isFinite(v) ? v : null); });
+    }
+    return out;
+  }
+  const width = (t1 - t0) / buckets;
+  for (let i = first; i < last;) {
+    const bucket = Math.floor(ring.t(i) / width);
+    let end = i + 1;
+    while (end < last && Math.floor(ring.t(end) / width) === bucket) end++;
+    if (i > first && ring.t(i) - ring.t(i - 1) > Math.max(gapSeconds, width)) gap((ring.t(i) + ring.t(i - 1)) / 2);
+    out.t.push((bucket + 0.25) * width, (bucket + 0.75) * width);
+    index.forEach((k, s) => {
+      let [low, high, lowAt, highAt] = [Infinity, -Infinity, -1, -1];
+      for (let j = i; j < end; j++) {
+        const v = ring.value(k, j);
+        if (v < low) [low, lowAt] = [v, j];
+        if (v > high) [high, highAt] = [v, j];
+      }
+      if (lowAt < 0) out.y[s]?.push(null, null);
+      else if (lowAt <= highAt) out.y[s]?.push(low, high);
+      else out.y[s]?.push(high, low);
+    });
+    i = end;
+  }
+  return out;
+}
+
+/** The periods within [t0, t1] in which the throat was choked. */
+export function chokedSpans(ring: Ring, t0: number, t1: number): [number, number][] {
+  const spans: [number, number][] = [];
+  const last = Math.min(ring.size, ring.lower(t1) + 1);
+  let start = NaN;
+  let before = NaN;
+  for (let i = Math.max(0, ring.lower(t0) - 1); i < last; i++) {
+    const t = ring.t(i);
+    const choked = ring.choked(i) === 1;
+    if (!Number.isNaN(start) && (!choked || t - before > gapSeconds)) {
+      spans.push([start, choked ? before : t]);
+      start = NaN;
+    }
+    if (choked && Number.isNaN(start)) start = t;
+    before = t;
+  }
+  if (!Number.isNaN(start)) spans.push([start, before]);
+  return spans;
+}

@@ -1,0 +1,60 @@
+// The one alarm line: the most urgent alarm, what it means, what to do.
+
+import { needsAcknowledge, priorityLook, standing, stateWord } from '../alarms';
+import type { Display } from '../context';
+import { type View, attr, h, text } from '../dom';
+import type { Alarm } from '../frames';
+import { believable } from '../state';
+import { clock, seconds } from '../time';
+
+export function alarmLine(d: Display): View {
+  const shape = h('span', { class: 'shape', 'aria-hidden': 'true' });
+  const word = h('span', { class: 'word', 'data-q': 'alarm-priority' });
+  const state = h('span', { class: 'extra' });
+  const title = h('div', { class: 'title', 'data-q': 'alarm-text' });
+  const caution = h('div', { class: 'caution', 'data-q': 'alarm-caution' });
+  const response = h('div', { class: 'response', 'data-q': 'alarm-response' });
+  const button = h('button', { class: 'ack', type: 'button', 'data-q': 'acknowledge', onclick: () => { if (shown) d.acknowledger?.send(shown); } }, 'Acknowledge');
+  const others = h('a', { class: 'others', href: '#/alarms' });
+  const polite = h('div', { class: 'spoken', role: 'status', 'aria-live': 'polite' });
+  const urgent = h('div', { class: 'spoken', role: 'alert', 'aria-live': 'assertive' });
+  const act = h('div', { class: 'act' }, d.acknowledger ? button : '', d.acknowledger ? others : h('span', { class: 'others' }, 'as recorded'));
+  const el = h('section', { class: 'alarmline', 'aria-label': 'Most urgent alarm' },
+    h('div', { class: 'priority' }, h('div', {}, shape, ' ', word), state), h('div', { class: 'what' }, title, caution, response), act, polite, urgent);
+  let shown: Alarm | null = null;
+  let spoken = '';
+
+  function update(now: number): void {
+    const m = d.model();
+    const list = standing(m.alarms.values());
+    const a = list[0] ?? null;
+    shown = a;
+    const believed = believable(d.fresh(now)) || d.fresh(now).kind === 'no_points';
+    attr(el, 'data-priority', a ? a.priority : null);
+    attr(el, 'data-dim', !believed);
+    const open = a !== null && needsAcknowledge(a);
+    attr(el, 'data-open', open && believed);
+    text(shape, a ? priorityLook[a.priority].shape : '');
+    text(word, a ? priorityLook[a.priority].word : '');
+    text(state, a ? `${stateWord[a.state]}${a.past ? ', past' : ''} · ${clock(seconds(a.raised))}` : '');
+    text(title, a ? (a.text || a.title) : 'No alarm standing');
+    text(caution, a?.caution ?? '');
+    text(response, a ? a.response || (a.unknown ? 'Raised because an input is missing: the rule cannot be judged.' : '') : '');
+    if (d.acknowledger) {
+      const sending = a ? d.acknowledger.state(a) : 'idle';
+      text(button, sending === 'pending' ? 'Acknowledging…' : open ? 'Acknowledge' : 'Acknowledged');
+      attr(button, 'disabled', !open || sending === 'pending' || d.fresh(now).kind === 'no_link');
+      attr(button, 'data-hidden', a === null);
+      const trouble = sending !== 'idle' && sending !== 'pending' ? sending : '';
+      text(others, trouble || (list.length > 1 ? `${list.length - 1} other${list.length > 2 ? 's' : ''} standing` : a ? 'no others standing' : ''));
+    }
+    const say = a ? `${a.id} ${a.state}` : '';
+    if (say !== spoken) {
+      spoken = say;
+      const words = a ? `${priorityLook[a.priority].word}, ${stateWord[a.state]}: ${a.text || a.title}. ${a.caution}` : 'No alarm standing';
+      text(urgent, a?.priority === 'warning' && open ? words : '');
+      text(polite, a?.priority === 'warning' && open ? '' : words);
+    }
+  }
+  return { el, update, destroy: () => undefined };
+}

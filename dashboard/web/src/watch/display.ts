@@ -1,0 +1,58 @@
+// The Watch display, used live and in replay alike.
+
+import type { Display } from '../context';
+import { type View, attr, h, text } from '../dom';
+import type { Freshness } from '../state';
+import { clock } from '../time';
+import { age } from '../units';
+import { alarmLine } from './alarmline';
+import { ledger } from './ledger';
+import { numbers } from './numbers';
+import { throatPlane } from './throat';
+import { traces } from './traces';
+
+/** What is laid over a page whose data is not present; "" when it is. */
+export function veilText(f: Freshness): string {
+  switch (f.kind) {
+    case 'waiting': return 'WAITING FOR DATA LINK';
+    case 'no_link': return `NO DATA LINK since ${clock(f.since)} UTC`;
+    default: return '';
+  }
+}
+
+/** A lesser trouble, told in a line without covering the page. */
+export function troubleText(f: Freshness): string {
+  switch (f.kind) {
+    case 'catching_up': return `CATCHING UP, data is ${age(f.age)} old`;
+    case 'no_points': return Number.isFinite(f.age) ? `NO OPERATING POINT for ${age(f.age)}` : 'NO OPERATING POINT yet';
+    default: return '';
+  }
+}
+
+/** Greys its content and says in large letters why. */
+export function veil(content: HTMLElement): { el: HTMLElement; update(f: Freshness): void } {
+  const words = h('div', { class: 'veilwords', role: 'alert' });
+  const el = h('div', { class: 'veiled' }, content, words);
+  return {
+    el,
+    update(f) {
+      const say = veilText(f);
+      text(words, say);
+      attr(el, 'data-veiled', say !== '');
+    },
+  };
+}
+
+export function watchDisplay(d: Display, markForm: HTMLElement | null): View {
+  const parts = [alarmLine(d), throatPlane(d), numbers(d), traces(d, markForm), ledger(d)];
+  const [line, plane, figures, plots, egt] = parts as [View, View, View, View, View];
+  const cover = veil(h('div', { class: 'display' }, line.el, h('div', { class: 'nozzle' }, plane.el, figures.el), plots.el, egt.el));
+  return {
+    el: cover.el,
+    update(now) {
+      cover.update(d.fresh(now));
+      for (const p of parts) p.update(now);
+    },
+    destroy() { for (const p of parts) p.destroy(); },
+  };
+}

@@ -1,0 +1,103 @@
+// The EGT ledger: one bar per probe against the bands, and per band how much of
+// its allowance is used.
+
+import type { Display } from '../context';
+import { type View, attr, h, refill, style, text } from '../dom';
+import { believable } from '../state';
+import { celsius, fixed } from '../units';
+
+const usable = (quality: string): boolean => quality === 'good' || quality === 'held';
+/** Probe values older than this are not shown as present, ms of the page. */
+const valuesTimeout = 1500;
+
+export function ledger(d: Display): View {
+  const bars = h('div', { class: 'bars' });
+  const limits = h('div', { class: 'limits' });
+  const indicated = h('span', { class: 'value', 'data-q': 'egt' }, '–');
+  const egtCause = h('div', { class: 'extra' });
+  const spread = h('span', { class: 'value', 'data-q': 'spread' }, '–');
+  const probesUsed = h('div', { class: 'extra' });
+  const rows = h('tbody');
+  const el = h('section', { class: 'ledger', 'aria-label': 'Exhaust gas temperature ledger' },
+    h('div', { class: 'egt' },
+      h('div', { class: 'label' }, 'Indicated EGT'), h('div', { class: 'egtvalue' }, indicated, ' ', h('span', { class: 'unit' }, '°C')), egtCause,
+      h('div', { class: 'label' }, 'Spread'), h('div', {}, spread, ' ', h('span', { class: 'unit' }, 'K')), probesUsed),
+    h('div', { class: 'probes' }, limits, bars),
+    h('div', { class: 'bands' }, h('table', {},
+      h('thead', {}, h('tr', {}, ...['EGT band', 'limit', 'this excursion, of allowance', 'in run', 'peak', 'count'].map((t) => h('th', { scope: 'col' }, t)))),
+      rows)));
+
+  interface Bar { el: HTMLElement; fill: HTMLElement; value: HTMLElement; mark: HTMLElement }
+  let drawn: Bar[] = [];
+  let tableRows: Map<string, { el: HTMLElement; fill: HTMLElement; figure: HTMLElement; run: HTMLElement; peak: HTMLElement; count: HTMLElement }> = new Map();
+
+  function update(now: number): void {
+    const m = d.model();
+    const fresh = d.fresh(now);
+    const believed = believable(fresh);
+    const p = believed ? m.point : null;
+    const probes = m.channels.filter((c) => c.station === 'egt');
+    const top = Math.max(700, ...m.bands.map((b) => celsius(b.limit_k))) + 60;
+    const height = (c: number): string => `${Math.min(100, Math.max(0, (c / top) * 100)).toFixed(1)}%`;
+
+    refill(limits, `${top}|${m.bands.map((b) => b.name + b.limit_k).join()}`, () => m.bands.map((b) => {
+      const mark = h('div', { class: 'limit', title: b.name }, h('span', {}, `${fixed(celsius(b.limit_k), 0)}${b.kind === 'start' ? ' start' : ''}`));
+      mark.style.bottom = height(celsius(b.limit_k));
+      return mark;
+    }));
+    refill(bars, probes.map((c) => c.id).join(), () => {
+      drawn = probes.map((c) => {
+        const bar: Bar = { el: h('div', { class: 'bar' }), fill: h('div', { class: 'fill' }), value: h('div', { class: 'figure' }, '–'), mark: h('div', { class: 'hot' }) };
+        bar.el.append(h('div', { class: 'column' }, bar.fill), bar.mark, bar.value, h('div', { class: 'name', title: c.title }, c.id.replace(/^egt_?/, '') || c.id));
+        return bar;
+      });
+      return drawn.length > 0 ? drawn.map((b) => b.el) : [h('div', { class: 'extra' }, 'no probe channels at station EGT')];
+    });
+    const current = believed && (m.replay || now - m.valuesAt < valuesTimeout);
+    const readings = probes.map((c) => {
+      const v = current ? m.values[c.id] : undefined;
+      return v && usable(v.quality) && v.value !== null ? celsius(v.value) : null;
+    });
+    const hottest = readings.length > 1 ? readings.reduce<number>((best, v, i) => (v !== null && (best < 0 || v > (readings[best] as number)) ? i : best), -1) : -1;
+    drawn.forEach((bar, i) => {
+      const v = readings[i] ?? null;
+      const quality = m.values[probes[i]?.id ?? '']?.quality ?? 'missing';
+      style(bar.fill, 'height', v === null ? '100%' : height(v));
+      attr(bar.el, 'data-none', v === null);
+      attr(bar.el, 'title', v === null ? (current ? quality.replaceAll('_', ' ') : 'not present') : null);
+      text(bar.value, fixed(v, 0));
+      text(bar.mark, i === hottest ? '▼ hottest' : v === null && current ? quality.replaceAll('_', ' ') : '');
+    });
+
+    const egt = p?.egt_indicated_k;
+    text(indicated, typeof egt === 'number' ? fixed(celsius(egt), 0) : '–');
+    attr(indicated.parentElement as HTMLElement, 'data-none', typeof egt !== 'number');
+    text(egtCause, typeof egt === 'number' ? '' : p?.egt_cause ?? (p ? '' : 'not present'));
+    text(spread, fixed(p?.egt_spread_k, 0));
+    text(probesUsed, p ? `${p.egt_probes_used} of ${probes.length} probes used` : '');
+
+    refill(rows, m.ledgers.map((l) => l.name + l.kind).join(), () => {
+      tableRows = new Map();
+      return m.ledgers.map((l) => {
+        const r = { el: h('tr'), fill: h('div', { class: 'fill' }), figure: h('span', { class: 'figure' }), run: h('td'), peak: h('td'), count: h('td') };
+        r.el.append(h('th', { scope: 'row' }, l.name.replaceAll('_', ' ')), h('td', {}, `${fixed(celsius(l.limit_k), 0)} °C`),
+          h('td', {}, h('div', { class: 'used' }, h('div', { class: 'track' }, r.fill), r.figure)), r.run, r.peak, r.count);
+        tableRows.set(l.name, r);
+        return r.el;
+      });
+    });
+    attr(el, 'data-dim', !believed);
+    for (const l of m.ledgers) {
+      const r = tableRows.get(l.name);
+      if (!r) continue;
+      const share = l.allowance_s > 0 ? Math.min(1, l.elapsed_s / l.allowance_s) : l.elapsed_s > 0 || l.exceeded ? 1 : 0;
+      style(r.fill, 'width', `${(share * 100).toFixed(1)}%`);
+      attr(r.el, 'data-level', l.exceeded ? 'exceeded' : l.over ? 'over' : null);
+      text(r.figure, `${l.exceeded ? '■ exceeded ' : l.over ? '▲ above ' : ''}${fixed(l.elapsed_s, 1)} s ${l.allowance_s > 0 ? `of ${fixed(l.allowance_s, 1)} s` : '(none allowed)'}${l.assumed_s > 0 ? `, ${fixed(l.assumed_s, 1)} s assumed` : ''}`);
+      text(r.run, `${fixed(l.run_total_s, 1)}${l.per_run_s > 0 ? ` of ${fixed(l.per_run_s, 0)}` : ''} s`);
+      text(r.peak, l.peak_k === null ? '–' : `${fixed(celsius(l.peak_k), 0)} °C`);
+      text(r.count, String(l.excursions));
+    }
+  }
+  return { el, update, destroy: () => undefined };
+}

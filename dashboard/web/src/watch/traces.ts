@@ -1,0 +1,266 @@
+// Traces on one shared time axis: event time, UTC. Shading marks choked periods;
+// flags mark alarms and the operator's marks.
+
+import uPlot from 'uplot';
+import 'uplot/dist/uPlot.min.css';
+import { priorityLook } from '../alarms';
+import type { Display } from '../context';
+import { type View, attr, h, text } from '../dom';
+import type { Flag, Model } from '../state';
+import type { Palette } from '../palette';
+import { type Column, chokedSpans, columns, decimate } from '../ring';
+import { clock } from '../time';
+import { celsius, fixed, signed } from '../units';
+import { font } from './canvas';
+
+const spans = [60, 120, 300, 600];
+
+interface Line { column: Column; name: string; show: (v: number) => string }
+interface Plot {
+  title: string;
+  unit: string;
+  lines: Line[];
+  convert: (v: number) => number;
+  /** Values that the axis always covers, so that it seldom moves. */
+  cover: (m: Model) => [number, number];
+  limits: (m: Model) => { v: number; name: string }[];
+}
+
+const same = (v: number): number => v;
+const none = (): { v: number; name: string }[] => [];
+const plots: Plot[] = [
+  {
+    title: 'Pressure ratio', unit: '', convert: same, cover: () => [1, 2.5], limits: none,
+    lines: [{ column: 'npr', name: 'NPR', show: (v) => fixed(v, 3) }, { column: 'choke_npr', name: 'choke NPR', show: (v) => fixed(v, 3) }],
+  },
+  {
+    title: 'Choke margin', unit: '%', convert: same, cover: () => [-50, 25], limits: () => [{ v: 0, name: '' }],
+    lines: [{ column: 'choke_margin_percent', name: 'margin', show: (v) => signed(v, 1) }],
+  },
+  {
+    title: 'Indicated EGT', unit: '°C', convert: celsius, cover: (m) => [0, Math.max(800, ...m.bands.map((b) => celsius(b.limit_k) + 20))],
+    limits: (m) => m.bands.map((b) => ({ v: celsius(b.limit_k), name: `${fixed(celsius(b.limit_k), 0)}${b.kind === 'start' ? ' start' : ''}` })),
+    lines: [{ column: 'egt_indicated_k', name: 'EGT', show: (v) => fixed(v, 0) }],
+  },
+  {
+    title: 'Flow', unit: 'kg/s', convert: same, cover: () => [0, 8], limits: none,
+    lines: [{ column: 'mass_flow_kg_s', name: 'W8', show: (v) => fixed(v, 2) }, { column: 'independent_flow_kg_s', name: 'air + fuel', show: (v) => fixed(v, 2) }],
+  },
+  {
+    title: 'Rotor speed', unit: 'rpm', convert: same, cover: (m) => [0, m.armedAbove ? m.armedAbove * 1.15 : 1000],
+    limits: (m) => (m.armedAbove ? [{ v: m.armedAbove, name: 'choke armed above' }] : []),
+    lines: [{ column: 'speed_rpm', name: 'speed', show: (v) => fixed(v, 0) }],
+  },
+];
+
+/** The smallest of 1, 2, 5 times a power of ten that is at least v. */
+function niceStep(v: number): number {
+  const p = 10 ** Math.floor(Math.log10(v));
+  return p * (v <= p ? 1 : v <= 2 * p ? 2 : v <= 5 * p ? 5 : 10);
+}
+
+/** The axis range over data and cover, in whole steps so that it does not creep. */
+export function axisRange(low: number, high: number, cover: [number, number]): [number, number] {
+  const [a, b] = [Math.min(low, cover[0]), Math.max(high, cover[1])];
+  const step = niceStep((b - a || 1) / 8);
+  return [a >= cover[0] ? cover[0] : Math.floor(a / step) * step, b <= cover[1] ? cover[1] : Math.ceil(b / step) * step];
+}
+
+export interface Traces extends View {
+  /** Freezes the picture, not the data behind it. */
+  frozen(): boolean;
+}
+
+export function traces(d: Display, markForm: HTMLElement | null): Traces {
+  const host = h('div', { class: 'plots' });
+  const at = h('span', { class: 'at' });
+  let span = 120;
+  let frozenAt = NaN;
+  const choices = spans.map((s) => h('button', { type: 'button', 'aria-pressed': String(s === span), onclick: () => choose(s) }, `${s} s`));
+  const freeze = h('button', { type: 'button', 'aria-pressed': 'false', onclick: () => { frozenAt = Number.isNaN(frozenAt) ? d.model().newest : NaN; } }, 'Freeze');
+  const bar = h('div', { class: 'tracebar' }, h('span', { class: 'label' }, 'Last'), ...choices, freeze, at, markForm ?? '');
+  const el = h('section', { class: 'traces', 'aria-label': 'Traces' }, bar, host);
+
+  function choose(s: number): void {
+    span = s;
+    choices.forEach((b, i) => attr(b, 'aria-pressed', String(spans[i] === span)));
+  }
+
+  interface Row { el: HTMLElement; box: HTMLElement; plot: Plot; chart: uPlot; values: HTMLElement[] }
+  let rows: Row[] = [];
+  let pal: Palette | null = null;
+  let [width, height] = [0, 0];
+  let shading: [number, number][] = [];
+  let flags: Flag[] = [];
+  let hover: number | null = null; // time under the cursor, s
+  const sync = uPlot.sync(`traces ${Math.random()}`);
+  const axisHeight = 30;
+
+  const observer = new ResizeObserver(([entry]) => {
+    if (!entry) return;
+    [width, height] = [Math.floor(entry.contentRect.width), Math.floor(entry.contentRect.height)];
+    layout();
+  });
+  observer.observe(host);
+
+  function layout(): void {
+    if (width < 200 || height < 150 || rows.length === 0) return;
+    const each = Math.floor((height - axisHeight) / rows.length);
+    rows.forEach((r, i) => {
+      const hgt = each + (i === rows.length - 1 ? axisHeight : 0);
+      r.el.style.height = `${hgt}px`;
+      const w = r.box.clientWidth;
+      if (w > 50) r.chart.setSize({ width: w, height: hgt });
+    });
+  }
+
+  function build(p: Palette): void {
+    for (const r of rows) r.chart.destroy();
+    host.replaceChildren();
+    rows = plots.map((plot, i) => {
+      const lastRow = i === plots.length - 1;
+      const values = plot.lines.map(() => h('span', { class: 'value' }, '–'));
+      const box = h('div', { class: 'chart' });
+      const row = h('div', { class: 'tracerow' },
+        h('div', { class: 'key' }, h('div', { class: 'keytitle' }, plot.title, plot.unit ? h('span', { class: 'unit' }, ` ${plot.unit}`) : ''),
+          ...plot.lines.map((l, k) => h('div', { class: 'keyline' }, h('span', { class: `swatch s${k}`, 'aria-hidden': 'true' }), plot.lines.length > 1 ? `${l.name} ` : '', values[k] as HTMLElement))),
+        box);
+      host.append(row);
+      const axis: uPlot.Axis = { stroke: p.soft, font: font(12), grid: { stroke: p.grid, width: 1 }, ticks: { show: false } };
+      const chart = new uPlot({
+        width: Math.max(60, box.clientWidth || width - 130), height: 80, padding: [4, 8, 2, 0],
+        legend: { show: false },
+        cursor: { sync: { key: sync.key }, drag: { x: false, y: false }, points: { show: false }, y: false },
+        tzDate: (t) => uPlot.tzDate(new Date(t * 1e3), 'Etc/UTC'),
+        scales: {
+          x: { time: true },
+          y: { range: (_u, low, high) => axisRange(low ?? Infinity, high ?? -Infinity, plot.cover(d.model())) },
+        },
+        axes: [
+          { ...axis, show: true, size: lastRow ? axisHeight : 0, values: lastRow ? (_u, ticks) => ticks.map(clock) : () => [], space: 90 },
+          { ...axis, size: 46, space: 24, gap: 4 },
+        ],
+        series: [{}, ...plot.lines.map((_, k) => ({ stroke: k === 0 ? p.data : p.data2, width: k === 0 ? 1.5 : 1.25, ...(k > 0 ? { dash: [6, 3] } : {}), points: { show: false }, spanGaps: false }))],
+        hooks: {
+          drawClear: [(u) => paintShading(u, p)],
+          draw: [(u) => paintLimits(u, plot, p), (u) => paintFlags(u, p, i === 0)],
+          setCursor: [(u) => {
+            const left = u.cursor.left ?? -1;
+            hover = left >= 0 ? u.posToVal(left, 'x') : null;
+          }],
+        },
+      }, [[], ...plot.lines.map(() => [])] as unknown as uPlot.AlignedData, box);
+      return { el: row, box, plot, chart, values };
+    });
+    layout();
+  }
+
+  function paintShading(u: uPlot, p: Palette): void {
+    const { left, top, width: w, height: hgt } = u.bbox;
+    u.ctx.fillStyle = p.panel;
+    u.ctx.fillRect(left, top, w, hgt);
+    u.ctx.fillStyle = p.choked;
+    for (const [a, b] of shading) {
+      const x0 = Math.max(left, u.valToPos(a, 'x', true));
+      const x1 = Math.min(left + w, u.valToPos(b, 'x', true));
+      if (x1 > x0) u.ctx.fillRect(x0, top, x1 - x0, hgt);
+    }
+  }
+
+  function paintLimits(u: uPlot, plot: Plot, p: Palette): void {
+    const { left, top, width: w, height: hgt } = u.bbox;
+    const c = u.ctx;
+    const ratio = uPlot.pxRatio;
+    c.save();
+    c.strokeStyle = p.soft;
+    c.fillStyle = p.soft;
+    c.lineWidth = ratio;
+    c.font = font(11 * ratio);
+    c.textAlign = 'left';
+    c.textBaseline = 'bottom';
+    let free = Infinity; // labels of close limits stand side by side
+    let x = left + 4 * ratio;
+    for (const l of plot.limits(d.model()).sort((a, b) => a.v - b.v)) {
+      const y = u.valToPos(l.v, 'y', true);
+      if (y < top || y > top + hgt) continue;
+      c.setLineDash(l.name ? [2 * ratio, 3 * ratio] : []);
+      c.beginPath();
+      c.moveTo(left, y);
+      c.lineTo(left + w, y);
+      c.stroke();
+      if (!l.name) continue;
+      x = free - y < 13 * ratio ? x + 64 * ratio : left + 4 * ratio;
+      c.fillText(l.name, x, y - ratio);
+      free = y;
+    }
+    c.restore();
+  }
+
+  function paintFlags(u: uPlot, p: Palette, withShape: boolean): void {
+    const { left, top, width: w, height: hgt } = u.bbox;
+    const c = u.ctx;
+    const ratio = uPlot.pxRatio;
+    c.save();
+    c.font = font(12 * ratio, 600);
+    c.textAlign = 'center';
+    c.textBaseline = 'top';
+    c.lineWidth = ratio;
+    for (const f of flags) {
+      const x = u.valToPos(f.t, 'x', true);
+      if (x < left || x > left + w) continue;
+      const colour = f.kind === 'warning' ? p.warningInk : f.kind === 'caution' ? p.cautionInk : p.soft;
+      c.strokeStyle = c.fillStyle = colour;
+      c.beginPath();
+      c.moveTo(x, top + (withShape ? 14 * ratio : 0));
+      c.lineTo(x, top + hgt);
+      c.stroke();
+      if (withShape) c.fillText(f.kind === 'mark' ? '⚑' : priorityLook[f.kind].shape, x, top);
+    }
+    c.restore();
+  }
+
+  function update(): void {
+    const palette = d.palette();
+    if (palette !== pal) build((pal = palette));
+    const m = d.model();
+    const isFrozen = !Number.isNaN(frozenAt);
+    const end = isFrozen ? frozenAt : m.newest;
+    attr(freeze, 'aria-pressed', String(isFrozen));
+    if (!Number.isFinite(end) || width < 200) return;
+    const start = end - span;
+    shading = chokedSpans(m.ring, start, end);
+    flags = m.flags.filter((f) => f.t >= start && f.t <= end);
+    const cursor = hover !== null ? hover : null;
+    const atRow = cursor === null ? m.ring.lower(end + 1e-6) - 1 : nearest(m, cursor);
+    for (const r of rows) {
+      const w = decimate(m.ring, r.plot.lines.map((l) => l.column), start, end, Math.max(60, Math.floor(r.box.clientWidth / 2)));
+      const y = w.y.map((s) => (r.plot.convert === same ? s : s.map((v) => (v === null ? null : r.plot.convert(v)))));
+      r.chart.batch(() => {
+        r.chart.setData([w.t, ...y] as uPlot.AlignedData, false);
+        r.chart.setScale('x', { min: start, max: end });
+      });
+      r.plot.lines.forEach((l, k) => {
+        const v = atRow >= 0 ? m.ring.value(columns.indexOf(l.column), atRow) : NaN;
+        text(r.values[k] as HTMLElement, Number.isNaN(v) ? '–' : l.show(r.plot.convert(v)));
+      });
+    }
+    text(at, cursor !== null && atRow >= 0 ? `values at ${clock(m.ring.t(atRow))} UTC` : isFrozen ? `FROZEN at ${clock(frozenAt)} UTC` : 'UTC; shaded: choked');
+    attr(at, 'data-frozen', isFrozen);
+  }
+
+  function nearest(m: Model, t: number): number {
+    const i = m.ring.lower(t);
+    if (i > 0 && (i >= m.ring.size || t - m.ring.t(i - 1) < m.ring.t(i) - t)) return i - 1;
+    return Math.min(i, m.ring.size - 1);
+  }
+
+  return {
+    el,
+    update,
+    frozen: () => !Number.isNaN(frozenAt),
+    destroy() {
+      observer.disconnect();
+      for (const r of rows) r.chart.destroy();
+    },
+  };
+}
