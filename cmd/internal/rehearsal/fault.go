@@ -1,0 +1,258 @@
+package rehearsal
+
+import (
+	"errors"
+	"fmt"
+	"slices"
+	"strings"
+	"time"
+
+	"throatwatch/monitor/compute"
+	"throatwatch/monitor/unit"
+)
+
+// FaultKind is something that goes wrong on a rig. The zero value is invalid.
+type FaultKind uint8
+
+// The kinds of fault.
+const (
+	faultNone FaultKind = iota
+	ProbeOpen
+	ProbeStuck
+	ProbeDrift
+	HotStreak
+	PressureZeroShift
+	BarometerLoss
+	NotANumber
+	WrongUnit
+	PublisherSilent
+	ClockSkew
+	ClockPast
+	Duplicate
+	Reorder
+	Burst
+	Malformed
+	Truncated
+	Huge
+	numFaults
+)
+
+// faults describes the kinds; it is never written to. Lasting 0 is until the end.
+var faults = [numFaults]struct {
+	name    string
+	text    string
+	lasting time.Duration
+	channel bool // strikes one channel; the others strike messages
+}{
+	ProbeOpen:         {"probe-open", "a thermocouple opens: its module sends the burn-out code, or full scale", 0, true},
+	ProbeStuck:        {"probe-stuck", "a channel repeats its last value bit for bit", 0, true},
+	ProbeDrift:        {"probe-drift", "a channel drifts up by 0.2 % of its range per second, at most 20 %", 0, true},
+	HotStreak:         {"hot-streak", "the gas at one EGT probe is truly 80 K hotter", 0, true},
+	PressureZeroShift: {"pressure-zero-shift", "a pressure channel reads 1 % of its range too high from one sample to the next", 0, true},
+	BarometerLoss:     {"barometer-loss", "the barometer, or the named channel, is missing from the messages", 0, true},
+	NotANumber:        {"not-a-number", "a channel is sent as a number that is none (1e999, NaN)", 3 * time.Second, true},
+	WrongUnit:         {"wrong-unit", "a channel is sent in a unit of another dimension", 3 * time.Second, true},
+	PublisherSilent:   {"publisher-silent", "nothing is published", 5 * time.Second, false},
+	ClockSkew:         {"clock-skew", "the device clock runs 30 s ahead", 5 * time.Second, false},
+	ClockPast:         {"clock-past", "the device clock runs 10 min behind", 8 * time.Second, false},
+	Duplicate:         {"duplicate", "every message comes again 0.3 s later", 3 * time.Second, false},
+	Reorder:           {"reorder", "every third message is overtaken by those of the next 0.05 to 0.4 s", 3 * time.Second, false},
+	Burst:             {"burst", "messages are held back and then all come at once", 3 * time.Second, false},
+	Malformed:         {"malformed", "every second message has a byte that breaks it", 2 * time.Second, false},
+	Truncated:         {"truncated", "every second message is cut off", 2 * time.Second, false},
+	Huge:              {"huge", "messages of 400 kB come in between", 2 * time.Second, false},
+}
+
+// String gives the name of the kind.
+func (k FaultKind) String() string {
+	if k > faultNone && k < numFaults {
+		return faults[k].name
+	}
+	return "invalid"
+}
+
+// Text says in a line what the fault does.
+func (k FaultKind) Text() string {
+	if k > faultNone && k < numFaults {
+		return faults[k].text
+	}
+	return ""
+}
+
+// FaultKinds gives every kind.
+func FaultKinds() []FaultKind {
+	var kinds []FaultKind
+	for k := faultNone + 1; k < numFaults; k++ {
+		kinds = append(kinds, k)
+	}
+	return kinds
+}
+
+// Fault is a fault on request.
+type Fault struct {
+	Kind    FaultKind
+	At      time.Duration // from the first pack
+	For     time.Duration // 0 = as long as is usual for the kind: probes to the end, messages some seconds
+	Channel string        // 0 = a fitting one; for faults of messages, all
+}
+
+// ErrFault is wrapped by what is wrong with a fault on request.
+var ErrFault = errors.New("fault is not understood")
+
+// ParseFault reads "name@time", "name@time+duration", either with ":channel" after
+// it: probe-open@25s:egt_3, publisher-silent@40s+10s.
+func ParseFault(s string) (Fault, error) {
+	bad := func(what string) (Fault, error) {
+		return Fault{}, fmt.Errorf("rehearsal: %q: %s; write name@time[+duration][:channel], as in probe-open@25s:egt_3: %w", s, what, ErrFault)
+	}
+	name, rest, ok := strings.Cut(s, "@")
+	if !ok {
+		return bad("no time")
+	}
+	when, channel, _ := strings.Cut(rest, ":")
+	start, length, lasts := strings.Cut(when, "+")
+	kind := faultNone
+	for k := range numFaults {
+		if k != faultNone && faults[k].name == name {
+			kind = k
+		}
+	}
+	if kind == faultNone {
+		var names []string
+		for _, k := range FaultKinds() {
+			names = append(names, k.String())
+		}
+		return bad("no such fault; there are " + strings.Join(names, ", "))
+	}
+	f := Fault{Kind: kind, Channel: channel}
+	var err error
+	if f.At, err = time.ParseDuration(start); err != nil || f.At < 0 {
+		return bad(fmt.Sprintf("%q is no time such as 25s", start))
+	}
+	if lasts {
+		if f.For, err = time.ParseDuration(length); err != nil || f.For <= 0 {
+			return bad(fmt.Sprintf("%q is no duration such as 10s", length))
+		}
+	}
+	return f, nil
+}
+
+// active is a fault fitted to a rig.
+type active struct {
+	Fault
+	channel int     // -1 = all
+	frozen  float64 // raw value of a stuck channel
+	begun   bool
+	count   int // messages seen
+}
+
+// fit finds the channel of a fault.
+func (f Fault) fit(c *compute.Config) (*active, error) {
+	if f.Kind == faultNone || f.Kind >= numFaults {
+		return nil, fmt.Errorf("rehearsal: fault %d: %w", f.Kind, ErrFault)
+	}
+	if f.For == 0 {
+		f.For = faults[f.Kind].lasting
+	}
+	a := &active{Fault: f, channel: -1}
+	if f.Channel != "" {
+		a.channel = slices.IndexFunc(c.Channels, func(ch compute.Channel) bool { return ch.ID == f.Channel })
+		if a.channel < 0 {
+			return nil, fmt.Errorf("rehearsal: fault %s: the rig has no channel %q: %w", f.Kind, f.Channel, ErrFault)
+		}
+		return a, nil
+	}
+	if !faults[f.Kind].channel {
+		return a, nil
+	}
+	st := &c.Stations
+	var fitting []int
+	//exhaustive:ignore
+	switch f.Kind {
+	case BarometerLoss:
+		fitting = []int{st.Barometer}
+	case PressureZeroShift:
+		fitting = append(slices.Clone(st.P7), st.ExitPlane, st.Barometer)
+	default:
+		fitting = slices.Concat(st.EGT, st.T7, st.P7)
+	}
+	i := slices.IndexFunc(fitting, func(i int) bool { return i >= 0 })
+	if i < 0 {
+		return nil, fmt.Errorf("rehearsal: fault %s: the rig has no channel that fits: name one: %w", f.Kind, ErrFault)
+	}
+	a.channel = fitting[i]
+	return a, nil
+}
+
+// at tells whether the fault acts at a time since the first pack.
+func (a *active) at(t time.Duration) bool {
+	return t >= a.At && (a.For == 0 || t < a.At+a.For)
+}
+
+// heat gives what the sensor of channel i feels on top, K.
+func (r *Rig) heat(i int) float64 {
+	var k float64
+	for _, f := range r.faults {
+		if f.Kind == HotStreak && f.channel == i && f.at(r.now) {
+			k += 80
+		}
+	}
+	return k
+}
+
+// shift gives the error, SI, that faults add to channel i.
+func (r *Rig) shift(i int) float64 {
+	sp := r.sensors[i].spec
+	span := sp.High - sp.Low
+	var e float64
+	for _, f := range r.faults {
+		if f.channel != i || !f.at(r.now) {
+			continue
+		}
+		//exhaustive:ignore
+		switch f.Kind {
+		case ProbeDrift:
+			e += span * min(0.2, 0.002*(r.now-f.At).Seconds())
+		case PressureZeroShift:
+			e += 0.01 * span
+		}
+	}
+	return e
+}
+
+// replace gives the raw value that faults put in the place of raw, and whether the
+// channel is sent at all.
+func (r *Rig) replace(i int, raw float64) (float64, bool) {
+	s := &r.sensors[i]
+	sent := true
+	for _, f := range r.faults {
+		if f.channel != i || !f.at(r.now) {
+			continue
+		}
+		//exhaustive:ignore
+		switch f.Kind {
+		case ProbeOpen:
+			// Burn-out detection drives an open input beyond the top of the range.
+			raw = s.reading(s.hi + max(8, 0.05*(s.hi-s.lo)))
+			if len(s.spec.Codes) > 0 {
+				raw = s.spec.Codes[0]
+			}
+		case ProbeStuck:
+			if !f.begun {
+				f.frozen, f.begun = raw, true
+			}
+			raw = f.frozen
+		case BarometerLoss:
+			sent = false
+		}
+	}
+	return raw, sent
+}
+
+// foreign gives a unit of another dimension than u.
+func foreign(u unit.Unit) string {
+	if u.Dimension == unit.Voltage {
+		return "kg/s"
+	}
+	return "V"
+}

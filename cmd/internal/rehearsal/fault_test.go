@@ -1,0 +1,314 @@
+package rehearsal
+
+import (
+	"errors"
+	"math"
+	"slices"
+	"testing"
+	"time"
+
+	"throatwatch/ingest"
+	"throatwatch/ingest/decode"
+	"throatwatch/rules/pipeline"
+)
+
+func TestParseFault(t *testing.T) {
+	for _, tt := range []struct {
+		text string
+		want Fault
+		ok   bool
+	}{
+		{"probe-open@25s", Fault{Kind: ProbeOpen, At: 25 * time.Second}, true},
+		{"probe-open@1m5s:egt_3", Fault{Kind: ProbeOpen, At: 65 * time.Second, Channel: "egt_3"}, true},
+		{"publisher-silent@0s+10s", Fault{Kind: PublisherSilent, For: 10 * time.Second}, true},
+		{"burst@4s+250ms:p7_1", Fault{Kind: Burst, At: 4 * time.Second, For: 250 * time.Millisecond, Channel: "p7_1"}, true},
+		{"probe-open", Fault{}, false},
+		{"probe-open@", Fault{}, false},
+		{"probe-open@25", Fault{}, false},
+		{"probe-open@-1s", Fault{}, false},
+		{"probe-open@1s+0s", Fault{}, false},
+		{"probe-open@1s+", Fault{}, false},
+		{"invalid@1s", Fault{}, false},
+		{"@1s", Fault{}, false},
+		{"", Fault{}, false},
+	} {
+		got, err := ParseFault(tt.text)
+		if (err == nil) != tt.ok || got != tt.want || (err != nil && !errors.Is(err, ErrFault)) {
+			t.Errorf("%q: %+v, %v; want %+v", tt.text, got, err, tt.want)
+		}
+	}
+}
+
+func FuzzParseFault(f *testing.F) {
+	f.Add("probe-open@25s:egt_3")
+	f.Add("burst@4s+250ms")
+	f.Add("@+:")
+	f.Fuzz(func(t *testing.T, s string) {
+		if got, err := ParseFault(s); err == nil && (got.Kind.Text() == "" || got.At < 0 || got.For < 0) {
+			t.Errorf("%q is taken as %+v", s, got)
+		}
+	})
+}
+
+// Every kind has a name of its own that ParseFault takes, and a text.
+func TestFaultKinds(t *testing.T) {
+	seen := map[string]bool{}
+	for _, k := range FaultKinds() {
+		f, err := ParseFault(k.String() + "@1s")
+		if err != nil || f.Kind != k || k.Text() == "" || seen[k.String()] {
+			t.Errorf("kind %d: %q, %q, %v", k, k, k.Text(), err)
+		}
+		seen[k.String()] = true
+	}
+	if len(seen) != int(numFaults)-1 || FaultKind(99).String() != "invalid" || FaultKind(99).Text() != "" {
+		t.Errorf("%d kinds", len(seen))
+	}
+}
+
+// reading is a sample of one channel as it left the rig.
+type reading struct {
+	at, time int64
+	value    float64
+	unit     string
+}
+
+// stream is a rehearsal decoded.
+type stream struct {
+	messages []Message
+	faults   decode.Faults
+	broken   []int64 // At of messages that are refused
+	channels map[string][]reading
+}
+
+func decoded(t *testing.T, cfg pipeline.Config, faults ...string) *stream {
+	t.Helper()
+	s := &stream{channels: map[string][]reading{}}
+	s.messages = play(t, cfg, Options{Seed: 5, Scenario: Quick, Rate: 20, Faults: faulty(t, faults...)})
+	d := decode.New(decode.Limits{})
+	last := int64(math.MinInt64)
+	for _, m := range s.messages {
+		if m.At+m.Delay < last || m.Delay < 0 {
+			t.Fatalf("message of %d is published at %d, after one at %d", m.At, m.At+m.Delay, last)
+		}
+		last = m.At + m.Delay
+		res := d.Decode(decode.SenMLJSON, m.Topic, m.Payload, last)
+		for i, n := range res.Faults {
+			s.faults[i] += n
+		}
+		if res.Refused {
+			s.broken = append(s.broken, m.At)
+		}
+		for _, v := range res.Samples {
+			s.channels[string(v.Name)] = append(s.channels[string(v.Name)], reading{m.At, v.Time, v.Value, string(v.Unit)})
+		}
+	}
+	return s
+}
+
+// between gives the readings of a channel taken from lo to before hi, s.
+func (s *stream) between(channel string, lo, hi float64) []reading {
+	var out []reading
+	for _, v := range s.channels[channel] {
+		if v.at >= epoch+int64(lo*1e9) && v.at < epoch+int64(hi*1e9) {
+			out = append(out, v)
+		}
+	}
+	return out
+}
+
+func all(rs []reading, ok func(reading) bool) bool {
+	return len(rs) > 0 && !slices.ContainsFunc(rs, func(r reading) bool { return !ok(r) })
+}
+
+// Every fault does what it says, when it says, to whom it says.
+func TestFaults(t *testing.T) {
+	cfg := load(t, "example")
+	plain := decoded(t, cfg)
+	if plain.faults.Total() > 0 {
+		t.Fatalf("a rehearsal without faults has %v", plain.faults)
+	}
+	pack := 20.0 // packs per second
+	for _, tt := range []struct {
+		fault   string
+		channel string // the only one that may differ; "" = any
+		check   func(t *testing.T, s *stream)
+	}{
+		// The burn-out code is the first of the rig file's invalid codes.
+		{"probe-open@20s", "egt_1", func(t *testing.T, s *stream) {
+			if !all(s.between("egt_1", 20, 99), func(r reading) bool { return r.value == 1372 }) {
+				t.Error("the probe does not send its burn-out code")
+			}
+		}},
+		{"probe-open@20s:t_bearing_front", "t_bearing_front", func(t *testing.T, s *stream) {
+			if !all(s.between("t_bearing_front", 20, 99), func(r reading) bool { return r.value > 300 }) {
+				t.Error("an open probe without a code does not read above its range")
+			}
+		}},
+		{"probe-stuck@20s+10s:p7_2", "p7_2", func(t *testing.T, s *stream) {
+			got := s.between("p7_2", 20, 30)
+			if !all(got, func(r reading) bool { return r.value == got[0].value }) || all(s.between("p7_2", 30, 40), func(r reading) bool { return r.value == got[0].value }) {
+				t.Error("the probe is not stuck for 10 s")
+			}
+		}},
+		{"probe-drift@10s:t7_1", "t7_1", func(t *testing.T, s *stream) {
+			// 0.2 % of 1140 K per second over 20 s; the ADC's step is 0.05 K.
+			got, want := s.between("t7_1", 30, 30.01)[0].value-plain.between("t7_1", 30, 30.01)[0].value, 0.002*1140*20.0
+			if math.Abs(got-want) > 0.1 {
+				t.Errorf("drift of %g K, want %g K", got, want)
+			}
+		}},
+		{"hot-streak@24s:egt_5", "egt_5", func(t *testing.T, s *stream) {
+			// The probe feels 80 K more and takes about a second to show it.
+			now, soon := s.between("egt_5", 24, 24.01)[0], s.between("egt_5", 30, 30.01)[0]
+			if d := now.value - plain.between("egt_5", 24, 24.01)[0].value; d > 10 {
+				t.Errorf("the probe jumps by %g K", d)
+			}
+			if d := soon.value - plain.between("egt_5", 30, 30.01)[0].value; math.Abs(d-80) > 1 {
+				t.Errorf("the probe reads %g K more, want 80 K", d)
+			}
+		}},
+		{"pressure-zero-shift@25s", "p7_1", func(t *testing.T, s *stream) {
+			// 1 % of the range from −10 to 250 kPa; the ADC's step is 0.005 kPa.
+			for i, r := range s.between("p7_1", 25, 99) {
+				if d := r.value - plain.between("p7_1", 25, 99)[i].value; math.Abs(d-2.6) > 0.006 {
+					t.Fatalf("shift of %g kPa, want 2.6 kPa", d)
+				}
+			}
+		}},
+		{"barometer-loss@25s", "p_baro", func(t *testing.T, s *stream) {
+			if len(s.between("p_baro", 0, 25)) == 0 || len(s.between("p_baro", 25, 99)) > 0 {
+				t.Error("the barometer is not lost")
+			}
+		}},
+		{"not-a-number@25s+2s:p_exit", "p_exit", func(t *testing.T, s *stream) {
+			if n := s.faults[ingest.ReasonNotFinite]; n != uint32(2*pack) || s.faults.Total() != n || len(s.between("p_exit", 25, 27)) > 0 {
+				t.Errorf("faults %v", s.faults)
+			}
+		}},
+		{"wrong-unit@25s+2s:p_exit", "p_exit", func(t *testing.T, s *stream) {
+			if !all(s.between("p_exit", 25, 27), func(r reading) bool { return r.unit == "V" }) || !all(s.between("p_exit", 27, 99), func(r reading) bool { return r.unit == "kPa" }) {
+				t.Error("the unit is not changed for 2 s")
+			}
+		}},
+		{"publisher-silent@25s", "", func(t *testing.T, s *stream) {
+			if len(s.between("speed", 25, 30)) > 0 || len(s.between("speed", 30, 31)) != int(pack) || len(plain.messages)-len(s.messages) != int(5*pack) {
+				t.Error("the publisher is not silent for 5 s")
+			}
+		}},
+		{"clock-skew@25s", "", func(t *testing.T, s *stream) {
+			if !all(s.between("speed", 25, 30), func(r reading) bool { return r.time == r.at+30e9 }) || !all(s.between("speed", 30, 99), func(r reading) bool { return r.time == r.at }) {
+				t.Error("the clock is not 30 s ahead for 5 s")
+			}
+		}},
+		{"clock-past@25s", "", func(t *testing.T, s *stream) {
+			if !all(s.between("speed", 25, 33), func(r reading) bool { return r.time == r.at-600e9 }) {
+				t.Error("the clock is not 10 min behind")
+			}
+		}},
+		{"duplicate@25s", "", func(t *testing.T, s *stream) {
+			if n := len(s.messages) - len(plain.messages); n != int(3*pack) || len(s.between("speed", 25, 28)) != int(6*pack) {
+				t.Errorf("%d copies", n)
+			}
+			count := map[string]int{}
+			for _, m := range s.messages {
+				count[string(m.Payload)]++
+			}
+			for _, n := range count {
+				if n > 2 {
+					t.Fatal("a message comes more than twice")
+				}
+			}
+		}},
+		{"reorder@25s", "", func(t *testing.T, s *stream) {
+			var back int
+			for i := range s.messages[1:] {
+				if s.messages[i+1].At < s.messages[i].At {
+					back++
+				}
+			}
+			if len(s.messages) != len(plain.messages) || back < 10 || back > 20 {
+				t.Errorf("%d of %d messages are overtaken, want most of 20", back, len(s.messages))
+			}
+		}},
+		{"burst@25s", "", func(t *testing.T, s *stream) {
+			var late int
+			for _, m := range s.messages {
+				if m.At >= epoch+25e9 && m.At < epoch+28e9 {
+					late++
+					if m.At+m.Delay < epoch+28e9 || m.At+m.Delay > epoch+28.1e9 {
+						t.Fatalf("a message of %d comes at %d", m.At, m.At+m.Delay)
+					}
+				}
+			}
+			if late != int(3*pack) || len(s.messages) != len(plain.messages) {
+				t.Errorf("%d messages held back, %d of %d in all", late, len(s.messages), len(plain.messages))
+			}
+		}},
+		{"malformed@25s", "", func(t *testing.T, s *stream) {
+			if len(s.broken) != int(pack) || s.faults[ingest.ReasonSyntax] != uint32(pack) || s.broken[0] < epoch+25e9 || s.broken[19] >= epoch+27e9 {
+				t.Errorf("%d broken messages", len(s.broken))
+			}
+		}},
+		{"truncated@25s:speed", "", func(t *testing.T, s *stream) {
+			if len(s.broken) != int(pack) || len(s.messages) != len(plain.messages) {
+				t.Errorf("%d broken messages", len(s.broken))
+			}
+		}},
+		{"huge@25s", "", func(t *testing.T, s *stream) {
+			if n := s.faults[ingest.ReasonTooLarge]; n != 2 || len(s.messages) != len(plain.messages)+2 || len(s.between("speed", 25, 27)) != int(2*pack) {
+				t.Errorf("%d huge messages", n)
+			}
+		}},
+	} {
+		t.Run(tt.fault, func(t *testing.T) {
+			s := decoded(t, cfg, tt.fault)
+			tt.check(t, s)
+			if tt.channel == "" {
+				return
+			}
+			for name, want := range plain.channels {
+				if name != tt.channel && !slices.Equal(s.channels[name], want) {
+					t.Errorf("channel %q is touched too", name)
+				}
+			}
+		})
+	}
+}
+
+// The end of the test lets go of what a fault holds back.
+func TestBurstAtTheEnd(t *testing.T) {
+	cfg := load(t, "minimal")
+	plain := play(t, cfg, Options{Scenario: Quick, Rate: 10})
+	if got := play(t, cfg, Options{Scenario: Quick, Rate: 10, Faults: faulty(t, "burst@60s+1h")}); len(got) != len(plain) {
+		t.Errorf("%d messages of %d", len(got), len(plain))
+	}
+}
+
+// Damage is damage in every format.
+func TestDamage(t *testing.T) {
+	cfg := invented(t)
+	r, err := New(cfg, Options{Scenario: Quick, Start: epoch, Faults: faulty(t, "malformed@0s+1h", "not-a-number@0s+1h:xa", "not-a-number@0s+1h:xb", "not-a-number@0s+1h:xc", "not-a-number@0s+1h:alone")})
+	if err != nil {
+		t.Fatal(err)
+	}
+	d := decode.New(decode.Limits{})
+	odd, notFinite := map[string]int{}, map[string]uint32{}
+	for range 100 {
+		msgs, _ := r.Next(nil)
+		for _, m := range msgs {
+			res := d.Decode(r.groups[slices.IndexFunc(r.groups, func(g group) bool { return g.topic == m.Topic })].format, m.Topic, m.Payload, m.At)
+			if len(res.Samples) == 0 && res.Faults[ingest.ReasonSyntax] > 0 {
+				odd[m.Topic]++
+			}
+			notFinite[m.Topic] += res.Faults[ingest.ReasonNotFinite] + res.Faults[ingest.ReasonSyntax]
+		}
+	}
+	for _, g := range r.groups {
+		if odd[g.topic] < 40 {
+			t.Errorf("%s: %d of 50 damaged messages are refused", g.topic, odd[g.topic])
+		}
+		if notFinite[g.topic] < 90 {
+			t.Errorf("%s: %d of 100 messages have a value that is no number", g.topic, notFinite[g.topic])
+		}
+	}
+}
