@@ -28,7 +28,7 @@ type channel struct {
 // configuration.
 func (r *rig) readChannels(n node) {
 	items := n.items()
-	if n.is() && len(items) == 0 {
+	if n.empty() {
 		n.fault("the list of channels is empty", "list the measured signals")
 	}
 	if len(items) > maxChannels {
@@ -86,6 +86,7 @@ func (r *rig) readChannel(n node) {
 	}
 	out := compute.Channel{ID: c.id, Title: f.get("title").label(c.id)}
 	r.readSpec(c, &out.Spec)
+	r.readLimits(c, c.id, out.Title, &out.Spec)
 	in.Raw = out.Raw
 	f.done()
 	r.add(c, in, out)

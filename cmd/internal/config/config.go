@@ -26,8 +26,12 @@ import (
 	"throatwatch/rules/pipeline"
 )
 
-// bundleFormat names the form of a marshalled bundle.
-const bundleFormat = "throatwatch config 1"
+const (
+	// bundleFormat names the form of a marshalled bundle.
+	bundleFormat = "throatwatch config 1"
+	// defaultRules is the name of the default rules in a bundle.
+	defaultRules = "default rules"
+)
 
 // File is a text with its name, relative to the folder of the rig file.
 type File struct {
@@ -92,12 +96,16 @@ func Parse(bundle []byte) (pipeline.Config, []Fault) {
 
 // finish adds the rules to what the rig file gave.
 func (r *rig) finish(b Bundle) (pipeline.Config, []Fault) {
-	for _, f := range b.Files[1:] {
+	files := b.Files[1:]
+	if len(files) > 0 && files[0].Name == defaultRules {
+		r.readRules(files[0])
+		files = files[1:]
+	}
+	r.take(r.limits)
+	for _, f := range files {
 		r.readRules(f)
 	}
-	for _, one := range r.rules {
-		r.cfg.Rules = append(r.cfg.Rules, one.Rule)
-	}
+	r.compileRules()
 	r.markRecordedOnly()
 	sum := sha256.Sum256(b.Marshal())
 	r.cfg.Hash = hex.EncodeToString(sum[:])

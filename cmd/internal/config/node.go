@@ -96,7 +96,10 @@ func unreadable(text string) (at int, hint string) {
 	return 0, ""
 }
 
-func oneLine(s string) string { return strings.Join(strings.Fields(s), " ") }
+// oneLine makes one line of a text, with a tab still to be seen.
+func oneLine(s string) string {
+	return strings.Join(strings.Fields(strings.ReplaceAll(s, "\t", " TAB ")), " ")
+}
 
 // is tells whether there is a value.
 func (n node) is() bool { return n.ast != nil }
@@ -259,6 +262,12 @@ func (n node) items() []node {
 		out = append(out, n.under(v, fmt.Sprintf("%s[%d]", n.path, i)))
 	}
 	return out
+}
+
+// empty tells whether there is a list without items.
+func (n node) empty() bool {
+	list, ok := n.ast.(*ast.SequenceNode)
+	return ok && len(list.Values) == 0
 }
 
 // text gives a scalar as it is written, so that 010 stays 010 and 1.10 stays

@@ -27,6 +27,7 @@ type rig struct {
 	used         []bool  // by channel: a station, a reference or a rule needs it
 	defaultRules bool
 	ruleFiles    []node
+	limits       []rule // of the channels
 	rules        []rule
 }
 
@@ -153,7 +154,7 @@ func (r *rig) readInputs(n node) {
 		}
 		r.cfg.Align.Inputs = append(r.cfg.Align.Inputs, in)
 	}
-	if len(n.items()) == 0 {
+	if n.empty() {
 		n.fault("the list of inputs is empty", "name at least one topic, or leave inputs away for rigs/ID/…")
 	}
 }

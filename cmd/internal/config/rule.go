@@ -1,12 +1,16 @@
 package config
 
 import (
+	"errors"
 	"fmt"
+	"math"
 	"regexp"
 	"slices"
+	"strconv"
 	"strings"
 
 	"throatwatch/monitor"
+	"throatwatch/monitor/calib"
 	"throatwatch/rules"
 )
 
@@ -52,8 +56,13 @@ func (r *rig) readRules(file File) {
 		here = append(here, one)
 	}
 	m.done()
-	for _, one := range here {
-		if i := slices.IndexFunc(r.rules, func(other rule) bool { return other.Name == one.Name }); i >= 0 {
+	r.take(here)
+}
+
+// take adds rules; one of a name that is there already replaces it.
+func (r *rig) take(more []rule) {
+	for _, one := range more {
+		if i := slices.IndexFunc(r.rules, func(other rule) bool { return other.Name == one.Name && one.Name != "" }); i >= 0 {
 			r.rules[i] = one
 		} else {
 			r.rules = append(r.rules, one)
@@ -65,42 +74,128 @@ func (r *rig) readRules(file File) {
 func priorities() []string { return []string{"note", "advisory", "caution", "warning"} }
 
 func readRule(n node) rule {
-	f := n.fields()
-	at := make(map[string]node)
-	get := func(key string) node { at[key] = f.get(key); return at[key] }
-	need := func(key, hint string) node { at[key] = f.need(key, hint); return at[key] }
-
+	f := n.placed()
 	var out rules.Rule
-	out.Name = need("name", "the name that records and acknowledgements use").id()
-	out.When = strings.TrimRight(need("when", "the condition, such as egt_spread_k > 60").text(), " \n")
-	out.Priority = rules.Priority(1 + slices.Index(priorities(), need("priority", "one of "+strings.Join(priorities(), ", ")).choice("note", priorities()...)))
-	out.OnDelay = get("on_delay").duration(0)
-	out.OffDelay = get("off_delay").duration(0)
-	out.Deadband = get("deadband").number(0, notNegative)
-	out.Latching = get("latching").flag(false)
-	for _, item := range get("suppress_in").list() {
+	out.Name = f.need("name", "the name that records and acknowledgements use").id()
+	out.When = strings.TrimRight(f.need("when", "the condition, such as egt_spread_k > 60").text(), " \n")
+	out.Priority = f.priority()
+	out.OnDelay = f.get("on_delay").duration(0)
+	out.OffDelay = f.get("off_delay").duration(0)
+	out.Deadband = f.get("deadband").number(0, notNegative)
+	out.Latching = f.get("latching").flag(false)
+	out.SuppressIn = readPhases(f.get("suppress_in"))
+	out.Title = f.get("title").prose(strings.ReplaceAll(out.Name, "_", " "))
+	out.Text = f.get("text").prose(out.Title)
+	out.Caution, out.Response = readAdvice(f, out.Priority)
+	out.Group = f.get("group").id()
+	f.done()
+	return rule{Rule: out, node: n, at: f.at}
+}
+
+// readLimits reads the limit bands of a channel and makes a rule of each. The
+// limit is in the reading of the channel: of a gauge channel it is a gauge
+// pressure, whereas rules see absolute ones.
+func (r *rig) readLimits(c *channel, id, title string, s *calib.Spec) {
+	for _, item := range c.get("limits").items() {
+		f := item.placed()
+		key, sign := "above", ">"
+		if f.has("below") {
+			key, sign = "below", "<"
+		}
+		if f.has("above") == f.has("below") {
+			f.fault("a limit has one side", "write above: or below: with a value")
+			f.taken = append(f.taken, "above", "below")
+		}
+		d := s.Unit.Dimension
+		limit := f.get(key)
+		level := limit.quantity(d, math.NaN(), bound{func(v float64) bool { return v > s.Low && v < s.High }, "lie inside the range of the channel"})
+		level = round12(level)
+		out := rules.Rule{
+			Name:       f.get("name").id(),
+			When:       fmt.Sprintf("channel.%s %s %s", id, sign, strconv.FormatFloat(level, 'g', -1, 64)),
+			Priority:   f.priority(),
+			OnDelay:    f.get("for").duration(0),
+			OffDelay:   f.get("off_delay").duration(second),
+			Deadband:   f.get("deadband").quantity(difference(d), 0, notNegative),
+			Latching:   f.get("latching").flag(false),
+			SuppressIn: readPhases(f.get("suppress_in")),
+			Title:      fmt.Sprintf("%s %s %s", title, key, limit.text()),
+		}
+		if out.Name == "" {
+			out.Name = strings.Join([]string{id, key, priorities()[out.Priority-1]}, "_")
+		}
+		if s.Reference == calib.Gauge && c.port.is() {
+			out.When = fmt.Sprintf("channel.%s - channel.%s %s %s", id, c.port.text(), sign, strconv.FormatFloat(level, 'g', -1, 64))
+		}
+		out.Text = out.Title
+		if out.OnDelay > 0 {
+			out.Text += " for " + strings.TrimSpace(f.get("for").text())
+		}
+		out.Text += ". Follow the facility's procedure. This display is not protection."
+		out.Caution, out.Response = readAdvice(f, out.Priority)
+		f.done()
+		if math.IsNaN(level) {
+			continue // a fault already
+		}
+		f.at["when"] = limit
+		if slices.ContainsFunc(r.limits, func(other rule) bool { return other.Name == out.Name }) {
+			item.fault(fmt.Sprintf("rule %q is there twice", out.Name), "give each limit its own name:, or leave names away when a like: repeats them")
+		}
+		r.limits = append(r.limits, rule{Rule: out, node: item, at: f.at})
+	}
+}
+
+// readAdvice reads what goes with an alarm. Every alarm has a caution, and one
+// that needs a response names the procedure.
+func readAdvice(f *placed, p rules.Priority) (caution, response string) {
+	var c, a node
+	if p > rules.Note {
+		c = f.need("caution", "tell the operator what it means and what to watch")
+	} else {
+		c = f.get("caution")
+	}
+	if p >= rules.Caution {
+		a = f.need("response", "name the facility procedure that applies")
+	} else {
+		a = f.get("response")
+	}
+	return c.prose(""), a.prose("")
+}
+
+// placed is a mapping that remembers where its keys are.
+type placed struct {
+	*fields
+	at map[string]node
+}
+
+func (n node) placed() *placed { return &placed{fields: n.fields(), at: make(map[string]node)} }
+
+func (p *placed) get(key string) node {
+	p.at[key] = p.fields.get(key)
+	return p.at[key]
+}
+
+func (p *placed) need(key, hint string) node {
+	p.at[key] = p.fields.need(key, hint)
+	return p.at[key]
+}
+
+func (p *placed) priority() rules.Priority {
+	word := p.need("priority", "one of "+strings.Join(priorities(), ", ")).choice("note", priorities()...)
+	return rules.Priority(1 + slices.Index(priorities(), word))
+}
+
+func readPhases(n node) []monitor.Phase {
+	var out []monitor.Phase
+	for _, item := range n.list() {
 		phase, ok := monitor.ParsePhase(item.text())
 		if !ok || phase == monitor.PhaseUnknown {
 			item.fault(fmt.Sprintf("%q is no phase in which an alarm can be suppressed", item.text()), nearest(item.text(), phases()))
 			continue
 		}
-		out.SuppressIn = append(out.SuppressIn, phase)
+		out = append(out, phase)
 	}
-	out.Title = get("title").prose(strings.ReplaceAll(out.Name, "_", " "))
-	out.Text = get("text").prose(out.Title)
-	if out.Priority == rules.Note {
-		out.Caution = get("caution").prose("")
-	} else {
-		out.Caution = need("caution", "tell the operator what it means and what to watch").prose("")
-	}
-	if out.Priority >= rules.Caution {
-		out.Response = need("response", "name the facility procedure that applies").prose("")
-	} else {
-		out.Response = get("response").prose("")
-	}
-	out.Group = get("group").id()
-	f.done()
-	return rule{Rule: out, node: n, at: at}
+	return out
 }
 
 func phases() []string {
@@ -125,18 +220,92 @@ func (n node) prose(fallback string) string {
 	return text
 }
 
-// channelName finds the channels in an expression.
-var channelName = regexp.MustCompile(`\b(?:channel|quality|usable)\.([a-z][a-z0-9_]*)`)
-
-// markRecordedOnly finds the channels that no station, reference and rule uses.
-func (r *rig) markRecordedOnly() {
-	for _, one := range r.rules {
-		for _, match := range channelName.FindAllStringSubmatch(one.When, -1) {
-			if i := r.index(match[1]); i >= 0 {
-				r.used[i] = true
+// compileRules compiles all rules and notes their faults where they are
+// written. It marks the channels that a rule judges.
+func (r *rig) compileRules() {
+	var bands []string
+	for i := range r.cfg.Compute.EGT.Bands {
+		bands = append(bands, r.cfg.Compute.EGT.Bands[i].Name)
+	}
+	for i := range r.rules {
+		one := &r.rules[i]
+		r.cfg.Rules = append(r.cfg.Rules, one.Rule)
+		for _, key := range []string{"title", "text", "caution", "response"} {
+			one.at[key].checkText()
+		}
+		r.checkLevels(one)
+	}
+	set, faults := rules.Compile(r.cfg.Rules, rules.StandardNames(r.ids(), bands))
+	for _, f := range faults {
+		one := &r.rules[f.Rule]
+		place, ok := one.at[f.Field]
+		switch {
+		case !ok:
+			place = one.node
+		case !place.is(), f.Field == "name" && one.Name == "": // a fault already
+			continue
+		}
+		line, col := place.line, place.col
+		if f.Field != "when" || one.When == strings.TrimRight(place.text(), " \n") {
+			line, col = place.inside(f.Offset)
+		}
+		place.faultAt(line, col, f.Message, f.Hint)
+	}
+	if set == nil {
+		return
+	}
+	for i := range set.Len() {
+		for _, name := range set.Reads(i) {
+			if _, id, ok := strings.Cut(name, "."); ok {
+				if ch := r.index(id); ch >= 0 {
+					r.used[ch] = true
+				}
 			}
 		}
 	}
+}
+
+// checkText refuses a text that orders an action or promises safety.
+func (n node) checkText() {
+	var bad *rules.TextError
+	if !n.is() || !errors.As(rules.CheckText(n.text()), &bad) {
+		return
+	}
+	line, col := n.inside(max(0, strings.Index(n.text(), bad.Words)))
+	n.faultAt(line, col, fmt.Sprintf("%q %s", bad.Words, bad.Why), bad.Hint)
+}
+
+// level finds comparisons of a channel with a number.
+var level = regexp.MustCompile(`channel\.([a-z][a-z0-9_]*)\s*(?:<=|>=|<|>)\s*([-+]?[0-9.]+(?:[eE][-+]?[0-9]+)?)`)
+
+// checkLevels refuses a comparison that a channel can never cross: rules see SI
+// values, and 12 for a limit of 12 mm/s would keep the alarm silent for ever.
+func (r *rig) checkLevels(one *rule) {
+	when := one.at["when"]
+	for _, m := range level.FindAllStringSubmatchIndex(when.text(), -1) {
+		i := r.index(when.text()[m[2]:m[3]])
+		v, err := strconv.ParseFloat(when.text()[m[4]:m[5]], 64)
+		if i < 0 || err != nil {
+			continue // package rules says so
+		}
+		s := r.spec(i)
+		low, high := s.Low, s.High
+		if s.Reference == calib.Gauge {
+			low, high = 0, high+seaPressure // rules see the absolute pressure
+		}
+		if v >= low && v <= high {
+			continue
+		}
+		line, col := when.inside(m[4])
+		si := s.Unit.Dimension.SI().Name
+		when.faultAt(line, col,
+			fmt.Sprintf("channel %q never comes to %g %s", r.channels[i].id, v, si),
+			fmt.Sprintf("rules see channels in SI: here %g to %g %s; limits: in the channel takes any unit", round12(low), round12(high), si))
+	}
+}
+
+// markRecordedOnly marks the channels that no station, reference and rule uses.
+func (r *rig) markRecordedOnly() {
 	for i := range r.cfg.Compute.Channels {
 		r.cfg.Compute.Channels[i].RecordedOnly = !r.used[i]
 	}

@@ -118,7 +118,7 @@ func (r *rig) probes(n node, d unit.Dimension, references ...calib.Reference) []
 			out = append(out, i)
 		}
 	}
-	if n.is() && !n.scalar() && len(n.list()) == 0 {
+	if n.empty() {
 		n.fault("the list of probes is empty", "name at least one channel")
 	}
 	return out
@@ -172,7 +172,9 @@ func (r *rig) readEGT(n node) {
 			if other.Name == b.Name && b.Name != "" {
 				item.fault(fmt.Sprintf("band %q is there twice", b.Name), "give each band its own name")
 			}
-			overlap(other, b, places[i], item)
+			if overlap(other, b, places[i], item) {
+				break
+			}
 		}
 		if b.Kind == egt.KindStart && r.cfg.Compute.Stations.Speed < 0 {
 			item.fault("a start band needs the rotor speed to know when idle is reached", "name a channel in stations.speed")
@@ -216,19 +218,24 @@ func readBand(n node) egt.Band {
 
 // overlap notes a band that can never act, because another one is exceeded
 // before it whenever it would be.
-func overlap(a, b egt.Band, atA, atB node) {
+func overlap(a, b egt.Band, atA, atB node) bool {
 	low, high, at := a, b, atB
 	if b.Limit < a.Limit {
 		low, high, at = b, a, atA
 	}
 	covers := low.Kind == high.Kind || low.Kind == egt.KindRun
 	switch {
+	case low.Limit == 0: // a fault already
+		return false
 	case a.Limit == b.Limit && a.Kind == b.Kind:
 		atB.fault(fmt.Sprintf("bands %q and %q have the same limit", a.Name, b.Name), "keep one, or correct the limit")
-	case covers && low.Limit > 0 && low.Limit <= high.Limit && low.Allowance <= high.Allowance && high.PerRun == 0:
+	case covers && low.Allowance <= high.Allowance && high.PerRun == 0:
 		at.fault(
 			fmt.Sprintf("band %q can never act: band %q has a lower limit and no longer allowance", high.Name, low.Name),
 			"a higher limit has a shorter allowance; run bands hold during a start too",
 		)
+	default:
+		return false
 	}
+	return true
 }
