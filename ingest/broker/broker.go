@@ -80,7 +80,7 @@ type Config struct {
 	MaxAckPending int           // messages a session may hold unacknowledged, ≤ 32 767
 	AckWait       time.Duration // after which an unacknowledged message is sent again
 	SyncInterval  time.Duration // between fsyncs of the store
-	MaxStore      int64         // bytes; when full, publishers get no acknowledgement
+	MaxStore      int64         // bytes; beyond it publishers are disconnected unacknowledged
 	MaxPayload    int           // bytes; a publisher exceeding it is disconnected
 	Users         []User        // none: whoever reaches the listener may connect
 	TLS           *tls.Config   // nil: plain TCP

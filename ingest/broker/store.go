@@ -105,7 +105,7 @@ func listConsumers(ctx context.Context, js jetstream.JetStream) ([]*jetstream.Co
 type Status struct {
 	Bytes       uint64 // of messages that some session has not acknowledged
 	Messages    uint64
-	Limit       int64 // bytes; at the limit publishers get no acknowledgement
+	Limit       int64 // bytes; beyond it publishers are disconnected unacknowledged
 	Connections int   // MQTT clients connected now
 	// Sessions are the persistent sessions that hold the most, most first, at
 	// most maxReported. A session that is away and holds much is the cause of a
@@ -219,12 +219,24 @@ func heldBySession(ctx context.Context, js jetstream.JetStream, consumers []*jet
 				return nil, fmt.Errorf("session %s: %w", hash, err)
 			}
 			sess.ID = shortID(record.ID)
-			sess.Filters = slices.Sorted(maps.Keys(record.Subs))
+			for subject := range record.Subs {
+				sess.Filters = append(sess.Filters, topicFilter(subject))
+			}
+			slices.Sort(sess.Filters)
 			sess.Address, sess.Connected = clients[record.ID]
 		}
 		out = append(out, *sess)
 	}
 	return out, nil
+}
+
+// topicFilter gives the MQTT form of a filter as the broker stores it, where
+// "." separates levels, "//" stands for "." and "/" for an empty level.
+func topicFilter(subject string) string {
+	if strings.HasSuffix(subject, "./") { // an empty last level
+		subject = subject[:len(subject)-1]
+	}
+	return strings.NewReplacer("//", ".", "/.", "/", ".", "/", "*", "+", ">", "#").Replace(subject)
 }
 
 // LogValue keeps log lines short.
