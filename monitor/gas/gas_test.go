@@ -9,20 +9,20 @@ import (
 
 func near(got, want, rel float64) bool { return math.Abs(got-want) <= rel*math.Abs(want) }
 
-func mixture(t testing.TB, f, war float64) *Mixture {
-	t.Helper()
+func mixture(tb testing.TB, f, war float64) *Mixture {
+	tb.Helper()
 	m, err := NewMixture(Kerosene(), f, war)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	return &m
 }
 
-func perfect(t testing.TB, gamma float64) *Mixture {
-	t.Helper()
+func perfect(tb testing.TB, gamma float64) *Mixture {
+	tb.Helper()
 	m, err := Perfect(gamma, 287)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	return &m
 }

@@ -27,33 +27,33 @@ func compare(t *testing.T, name string, checks []check) {
 	}
 }
 
-func products(t testing.TB, f float64) *gas.Mixture {
-	t.Helper()
+func products(tb testing.TB, f float64) *gas.Mixture {
+	tb.Helper()
 	m, err := gas.NewMixture(gas.Kerosene(), f, 0)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	return &m
 }
 
-func perfect(t testing.TB, gamma, r float64) *gas.Mixture {
-	t.Helper()
+func perfect(tb testing.TB, gamma, r float64) *gas.Mixture {
+	tb.Helper()
 	m, err := gas.Perfect(gamma, r)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	return &m
 }
 
-func evaluate(t testing.TB, c Config, g *gas.Mixture, p, t0, pb float64) Result {
-	t.Helper()
+func evaluate(tb testing.TB, c Config, g *gas.Mixture, p, t0, pb float64) Result {
+	tb.Helper()
 	n, err := New(c)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	r, err := n.Evaluate(g, Inputs{TotalPressure: unit.Absolute(p), TotalTemperature: t0, BackPressure: unit.Absolute(pb), MetalTemperature: t0})
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	return r
 }
@@ -120,8 +120,10 @@ func TestWorkedExamplesConvergent(t *testing.T) {
 	w = worked(t, "W4_fox_12.2")
 	r := evaluate(t, Config{ThroatArea: 0.001}, perfect(t, 1.4, 287), 1e6, 333, 591e3)
 	compare(t, "W4 Fox & McDonald 12.2", []check{
-		{"M", r.Exit.Mach, w["M"], rel}, {"T", r.Exit.Temperature, w["Te"], rel},
-		{"V", r.Exit.Velocity, w["Ve"], rel}, {"W", r.MassFlow, w["m"], rel},
+		{"M", r.Exit.Mach, w["M"], rel},
+		{"T", r.Exit.Temperature, w["Te"], rel},
+		{"V", r.Exit.Velocity, w["Ve"], rel},
+		{"W", r.MassFlow, w["m"], rel},
 	})
 	w = worked(t, "W5_cengel_12-4")
 	for pb, key := range map[float64]string{700e3: "pb700_", 400e3: "pb400_"} {
@@ -265,7 +267,7 @@ func TestIdentities(t *testing.T) {
 				if c.Kind == ConvergentDivergent {
 					seen[evaluate(t, c, g, r.DesignNPR*pb, t0, pb).Regime] = true
 				}
-				if c.ExitArea > 0.05 && !(seen[Subsonic] && seen[ShockInside] && seen[OverExpanded] && seen[Design] && seen[UnderExpanded]) {
+				if c.ExitArea > 0.05 && len(seen) != 5 {
 					t.Errorf("a nozzle of ratio 2.4 up to NPR 25 shows only %v", seen)
 				}
 				for _, at := range []float64{r.CriticalNPR, r.ShockAtExitNPR, r.DesignNPR} {

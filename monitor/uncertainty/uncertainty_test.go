@@ -14,29 +14,29 @@ import (
 func near(got, want, rel float64) bool { return math.Abs(got-want) <= rel*math.Abs(want) }
 
 // point gives the rig nozzle of kerosene products, f 0.02: A 0.025 m², Cd 0.97.
-func point(t testing.TB, p, t0 float64, change func(*nozzle.Config)) *Point {
-	t.Helper()
+func point(tb testing.TB, p, t0 float64, change func(*nozzle.Config)) *Point {
+	tb.Helper()
 	c := nozzle.Config{ThroatArea: 0.025, Discharge: []nozzle.Point{{NPR: 1, Value: 0.97}}}
 	if change != nil {
 		change(&c)
 	}
 	n, err := nozzle.New(c)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	g, err := gas.NewMixture(gas.Kerosene(), 0.02, 0)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	in := nozzle.Inputs{TotalPressure: unit.Absolute(p), BackPressure: 101325, TotalTemperature: t0, MetalTemperature: t0}
 	return &Point{Nozzle: n, Inputs: in, Gas: &g, Fuel: gas.Kerosene(), FuelAirRatio: 0.02}
 }
 
-func evaluate(t testing.TB, p *Point, u *Inputs) Result {
-	t.Helper()
+func evaluate(tb testing.TB, p *Point, u *Inputs) Result {
+	tb.Helper()
 	r, err := Evaluate(p, u)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	return r
 }
