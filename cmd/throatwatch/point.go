@@ -288,7 +288,7 @@ func pointTable(w io.Writer, r *nozzle.Result, c nozzle.Config) error {
 func pointCommand(args []string, stdout, stderr io.Writer) int {
 	tell := func(err error) {
 		for text := range strings.SplitSeq(err.Error(), "\n") {
-			fmt.Fprintln(stderr, "throatwatch point:", text)
+			_, _ = fmt.Fprintln(stderr, "throatwatch point:", text) // there is nowhere left to tell a fault
 		}
 	}
 	r, flags, err := readPoint(args)
@@ -301,7 +301,7 @@ func pointCommand(args []string, stdout, stderr io.Writer) int {
 		return 0
 	case err != nil:
 		tell(err)
-		fmt.Fprintln(stderr, "throatwatch point --help lists the flags.")
+		_, _ = fmt.Fprintln(stderr, "throatwatch point --help lists the flags.")
 		return 2
 	}
 	result, config, err := r.compute()
