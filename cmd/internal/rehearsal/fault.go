@@ -91,7 +91,7 @@ func FaultKinds() []FaultKind {
 // Fault is a fault on request.
 type Fault struct {
 	Kind    FaultKind
-	At      time.Duration // from the first pack
+	At      time.Duration // of the test
 	For     time.Duration // 0 = as long as is usual for the kind: probes to the end, messages some seconds
 	Channel string        // 0 = a fitting one; for faults of messages, all
 }

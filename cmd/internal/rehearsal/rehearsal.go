@@ -38,7 +38,8 @@ type Options struct {
 	Seed     uint64
 	Scenario Scenario
 	Faults   []Fault
-	Rate     float64 // packs per second, 1 to 1000; 0 = 50
+	Rate     float64 // packs per second of device time, 1 to 1000; 0 = 50
+	Speed    float64 // the test passes this many times faster than on an engine, 0.1 to 100; 0 = 1
 	Start    int64   // device time of the first pack, ns UTC
 }
 
@@ -53,7 +54,7 @@ type Message struct {
 // Status is how the test stands, for a progress line.
 type Status struct {
 	Segment string        // what the console is set to
-	Elapsed time.Duration // since the first pack
+	Elapsed time.Duration // of the test
 	Total   time.Duration
 	Speed   float64 // rpm
 	NPR     float64 // p7 over back pressure
@@ -67,11 +68,12 @@ type Rig struct {
 	groups   []group
 	plan     []segment
 	faults   []*active
-	rate     float64
+	rate     float64 // packs per second of the test
+	speed    float64 // seconds of the test per second of device time
 	start    int64
 	total    time.Duration
 	pack     int           // number of the next pack
-	now      time.Duration // of the newest pack
+	now      time.Duration // of the newest pack, in the test
 	at       int           // segment of the newest pack
 	begun    time.Duration // when it began
 	noise    *rand.Rand    // of the readings; untouched by faults
@@ -109,12 +111,18 @@ func New(cfg pipeline.Config, o Options) (*Rig, error) {
 	if !(o.Rate >= 1 && o.Rate <= 1000) {
 		return nil, fmt.Errorf("rehearsal: rate %g/s: give 1 to 1000 packs per second", o.Rate)
 	}
+	if o.Speed == 0 {
+		o.Speed = 1
+	}
+	if !(o.Speed >= 0.1 && o.Speed <= 100) {
+		return nil, fmt.Errorf("rehearsal: speed %g: give 0.1 to 100", o.Speed)
+	}
 	c := &cfg.Compute
 	if len(c.Channels) == 0 || len(c.Channels) != len(cfg.Align.Channels) {
 		return nil, errors.New("rehearsal: the rig file has no channels")
 	}
 	r := &Rig{
-		rate: o.Rate, start: o.Start, due: o.Start,
+		rate: o.Rate / o.Speed, speed: o.Speed, start: o.Start, due: o.Start,
 		noise: rand.New(rand.NewPCG(o.Seed, 1)),
 		link:  rand.New(rand.NewPCG(o.Seed, 2)),
 		sent:  make([]bool, len(c.Channels)),
@@ -195,11 +203,11 @@ func (r *Rig) formatOf(channel int) decode.Format {
 	return decode.FormatInvalid
 }
 
-// Length gives how long the test takes.
-func (r *Rig) Length() time.Duration { return r.total }
+// Length gives how long the test takes in device time.
+func (r *Rig) Length() time.Duration { return time.Duration(float64(r.total) / r.speed) }
 
 // Now gives the device time of the newest pack, ns UTC.
-func (r *Rig) Now() int64 { return r.start + int64(r.now) }
+func (r *Rig) Now() int64 { return r.start + int64(float64(r.now)/r.speed) }
 
 // Status tells how the test stands.
 func (r *Rig) Status() Status {

@@ -84,6 +84,20 @@ func TestSameSeedSameBytes(t *testing.T) {
 	}
 }
 
+// A fast rehearsal takes less device time; the engine goes through the same.
+func TestSpeed(t *testing.T) {
+	cfg := load(t, "example")
+	msgs := play(t, cfg, Options{Scenario: Quick, Speed: 10})
+	r, err := New(cfg, Options{Scenario: Quick, Speed: 10})
+	if err != nil {
+		t.Fatal(err)
+	}
+	// A tenth of the length of the quick test, at 50 packs per second of it.
+	if want := total(r.plan) / 10; r.Length() != want || len(msgs) != int(math.Ceil(50*want.Seconds())) || msgs[len(msgs)-1].At-epoch > int64(want) {
+		t.Errorf("%d messages in %v, want a tenth of %v", len(msgs), r.Length(), total(r.plan))
+	}
+}
+
 // What the watch sees of a rehearsal is what was played.
 func TestWatched(t *testing.T) {
 	cfg := load(t, "example")
@@ -416,6 +430,7 @@ func TestNewErrors(t *testing.T) {
 		want   string
 	}{
 		{"rate", func(_ *pipeline.Config, o *Options) { o.Rate = 5000 }, "packs per second"},
+		{"speed", func(_ *pipeline.Config, o *Options) { o.Speed = -1 }, "speed -1"},
 		{"scenario", func(_ *pipeline.Config, o *Options) { o.Scenario = 9 }, "scenario 9"},
 		{"no channels", func(c *pipeline.Config, _ *Options) { c.Align.Channels, c.Compute.Channels = nil, nil }, "no channels"},
 		{"no area", func(c *pipeline.Config, _ *Options) { c.Compute.Nozzle.ThroatArea = 0 }, "throat area"},
