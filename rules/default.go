@@ -1,0 +1,205 @@
+package rules
+
+import (
+	"strconv"
+	"time"
+
+	"throatwatch/monitor/egt"
+)
+
+// Equipment says what of a rig the default rules can build on.
+type Equipment struct {
+	Bands     []egt.Band
+	EGT       bool // an EGT harness
+	Rake      bool // total-pressure probes at the nozzle entry
+	FuelFlow  bool
+	Bellmouth bool
+}
+
+// Groups of the default rules: one cause, one first alarm.
+const (
+	groupEGT     = "egt"     // over-temperature
+	groupSources = "sources" // what a lost publisher takes along
+	groupNozzle  = "nozzle"
+	groupFlame   = "flame"
+)
+
+const (
+	notProtection = " This display is not protection."
+	ms            = int64(time.Millisecond)
+	second        = int64(time.Second)
+)
+
+// Default gives the rules for a rig whose author wrote none. Times and limits
+// other than those of the EGT bands are those of a small gas turbine; a rule file
+// replaces them.
+//
+// A start band that is exceeded is a hot start. A flame-out is told above idle
+// only: at idle it shows as a shutdown does. Cautions about the flame build on
+// the indicated EGT and rotor speed.
+func Default(q Equipment) []Rule {
+	var r []Rule
+	for i := range q.Bands {
+		r = append(r, bandRules(&q.Bands[i])...)
+	}
+	if q.EGT {
+		r = append(r, egtRules(q.FuelFlow)...)
+	}
+	r = append(r, Rule{
+		Name: "unchoke", When: `choke_armed and choke_state != "choked"`, Priority: Caution,
+		OnDelay: 300 * ms, OffDelay: second, Group: groupNozzle,
+		Title:    "Throat unchoked",
+		Text:     "Throat not choked while choke is expected: margin {choke_margin_percent:%.1}, NPR {npr:.3} against {choke_npr:.3}. Follow the facility's test-point procedure." + notProtection,
+		Caution:  "Flow and thrust now depend on the back pressure; values taken at this point are not those of a choked nozzle. Watch cell depression, rake pressures and indicated EGT.",
+		Response: "Facility procedure for a test point that is lost.",
+	}, Rule{
+		Name: "choke_marginal", When: "choke_armed and choke_marginal", Priority: Note,
+		OnDelay: second, OffDelay: 2 * second, Group: groupNozzle,
+		Title:    "Choke marginal",
+		Text:     "Choke margin {choke_margin_percent:%.1} is within its uncertainty.",
+		Caution:  "The measurement cannot tell choked from unchoked here.",
+		Response: "Facility procedure for steady test points.",
+	})
+	if q.Rake {
+		r = append(r, probesLost("rake", "rake probe", "The mean pressure of the rake rests on fewer probes: margin, flow and thrust are less certain."))
+	}
+	if q.Bellmouth && q.FuelFlow {
+		r = append(r, Rule{
+			Name: "flow_balance", When: `phase == "steady" and abs(flow_balance_kg_s) > 0.03 * mass_flow_kg_s`, Priority: Note,
+			OnDelay: 3 * second, OffDelay: 3 * second, Group: groupNozzle,
+			Title:    "Flow balance off",
+			Text:     "Air and fuel flow less nozzle flow is {flow_balance_kg_s:kg/s.3}, more than 3 % of {mass_flow_kg_s:kg/s.3}.",
+			Caution:  "Bellmouth, fuel meter, rake or throat area disagree: one of them is not what it seems.",
+			Response: "Facility procedure for instrumentation checks.",
+		})
+	}
+	return append(r, daemonRules()...)
+}
+
+// bandRules gives the warning of an EGT band and, if it allows a time, the
+// caution that the time is running.
+func bandRules(b *egt.Band) []Rule {
+	name := "egt." + b.Name
+	limit := strconv.FormatFloat(b.Limit-273.15, 'f', 0, 64) + " °C"
+	what, response := "Indicated EGT", "Facility procedure for over-temperature."
+	if b.Kind == egt.KindStart {
+		what, response = "Indicated EGT in the start", "Facility procedure for a hot start."
+	}
+	warning := Rule{
+		Name: "egt_" + b.Name + "_exceeded", When: name + ".exceeded", Priority: Warning, Latching: true, Group: groupEGT,
+		Title:    what + " beyond " + limit,
+		Text:     what + " {egt_indicated_k:degC.0}, above " + limit + ", where no time is allowed. " + response[:len(response)-1] + " applies." + notProtection,
+		Caution:  "Hot parts may be damaged. Watch indicated EGT, its spread, rotor speed and vibration. The event is to be entered in the engine's log.",
+		Response: response,
+	}
+	if b.Kind == egt.KindStart {
+		warning.Title = "Hot start: " + what[:len("Indicated EGT")] + " beyond " + limit
+	}
+	if b.Allowance == 0 {
+		return []Rule{warning}
+	}
+	allowance := seconds(b.Allowance)
+	perRun := ""
+	if b.PerRun > 0 {
+		perRun = ", limit of the run " + seconds(b.PerRun)
+	}
+	warning.Text = what + " above " + limit + " for {" + name + ".elapsed_s:s.1} (limit " + allowance + perRun + "). " +
+		response[:len(response)-1] + " applies." + notProtection
+	return []Rule{warning, {
+		Name: "egt_" + b.Name + "_over", When: name + ".over", Priority: Caution, Group: groupEGT,
+		Title:    what + " above " + limit,
+		Text:     what + " {egt_indicated_k:degC.0}, above " + limit + ": {" + name + ".remaining_s:s.1} left of " + allowance + perRun + ". Follow the facility's procedure." + notProtection,
+		Caution:  "The time allowance of this limit is running. Watch indicated EGT and its trend.",
+		Response: response,
+	}}
+}
+
+// seconds writes a time in ns for people.
+func seconds(ns int64) string {
+	return strconv.FormatFloat(float64(ns)/1e9, 'f', -1, 64) + " s"
+}
+
+// egtRules gives what needs an EGT harness and rotor speed.
+func egtRules(fuelFlow bool) []Rule {
+	out := []Rule{
+		{
+			Name: "egt_lost", When: "lit and not known(egt_indicated_k)", Priority: Warning, OnDelay: 500 * ms, OffDelay: second, Group: groupSources,
+			Title:    "All EGT lost while lit",
+			Text:     "No usable indicated EGT while the engine is lit: EGT limits are not watched. Follow the facility's procedure for lost EGT indication." + notProtection,
+			Caution:  "An over-temperature would not be seen here. Time above a limit is counted on as assumed if the last value was above it.",
+			Response: "Facility procedure for lost EGT indication.",
+		},
+		probesLost("egt", "EGT probe", "The mean and the spread rest on fewer probes; a hot streak at a lost probe is not seen."),
+		{
+			Name: "hung_start", When: `phase == "lighting" and speed_rate_rpm_s < 50`, Priority: Caution, OnDelay: 5 * second, OffDelay: second, Deadband: 20, Group: groupFlame,
+			Title:    "Hung start",
+			Text:     "Lit, but rotor speed has hung below idle at {speed_rpm:.0} for 5 s; indicated EGT {egt_indicated_k:degC.0}. Follow the facility's procedure for a hung start." + notProtection,
+			Caution:  "EGT can climb fast at low air flow. Watch indicated EGT against the start limit.",
+			Response: "Facility procedure for a hung start.",
+		},
+		{
+			Name: "flame_out", When: `(phase == "accelerating" or phase == "steady" or phase == "decelerating") and not lit`, Priority: Caution,
+			OnDelay: 200 * ms, OffDelay: second, Group: groupFlame,
+			Title:    "Flame-out",
+			Text:     "Indicated EGT has fallen to {egt_indicated_k:degC.0} at {speed_rpm:.0}: the flame seems to be out. Follow the facility's procedure for a flame-out." + notProtection,
+			Caution:  "Unburnt fuel may gather in the exhaust. Watch fuel flow, rotor speed and indicated EGT.",
+			Response: "Facility procedure for a flame-out.",
+		},
+	}
+	if fuelFlow {
+		out = append(out, Rule{
+			Name: "no_light", When: `phase == "cranking" and fuel_flow_kg_s > 0.002`, Priority: Caution, OnDelay: 10 * second, OffDelay: second, Group: groupFlame,
+			Title:    "No light-off",
+			Text:     "Fuel flow of {fuel_flow_kg_s:kg/h.0} for 10 s of cranking without a flame. Follow the facility's procedure for a start without light-off." + notProtection,
+			Caution:  "Unburnt fuel may gather in the exhaust and light late. Watch indicated EGT and fuel flow.",
+			Response: "Facility procedure for a start without light-off.",
+		})
+	}
+	return out
+}
+
+// probesLost gives the advisory on the probes of a rake or harness: one alarm
+// with a count, whichever probe it is.
+func probesLost(which, what, caution string) Rule {
+	return Rule{
+		Name: which + "_probe_lost", When: which + "_probes_lost > 0", Priority: Advisory, OnDelay: second, OffDelay: 5 * second, Group: groupSources,
+		Title:    "A " + what + " is lost",
+		Text:     "{" + which + "_probes_lost:.0} " + what + "(s) excluded or without a value, {" + which + "_probes_used:.0} in use. The Rig page names them and the cause.",
+		Caution:  caution,
+		Response: "Facility procedure for lost instrumentation.",
+	}
+}
+
+// daemonRules gives what is judged even when no scan comes.
+func daemonRules() []Rule {
+	return []Rule{
+		{
+			Name: "source_lost", When: "sources_lost > 0", Priority: Caution, OffDelay: 2 * second, Group: groupSources,
+			Title:    "Data source lost",
+			Text:     "{sources_lost:.0} data source(s) fell silent; the newest data is {data_age_s:s.1} old. Follow the facility's procedure for lost instrumentation." + notProtection,
+			Caution:  "What these sources measure is not watched. Alarms that build on them are unknown.",
+			Response: "Facility procedure for lost instrumentation.",
+		},
+		{
+			Name: "input_path_deaf", When: "not health.input_path", Priority: Warning, OffDelay: second, Group: groupSources,
+			Title:    "Input path deaf",
+			Text:     "Probe messages do not come back from the broker: nothing on this page is live. Follow the facility's procedure for lost monitoring." + notProtection,
+			Caution:  "Values on this page may be old and no limit is watched. Use the facility's own indications.",
+			Response: "Facility procedure for lost monitoring.",
+		},
+		{
+			Name: "not_recording", When: "not health.recording", Priority: Warning, OffDelay: second,
+			Title:    "Not recording",
+			Text:     "Data is shown but not stored. Follow the facility's procedure for lost recording.",
+			Caution:  "What is measured now is lost for later evaluation. The watch itself goes on.",
+			Response: "Facility procedure for lost recording.",
+		},
+		{
+			Name: "clock_skew", When: "not health.clock", Priority: Advisory, OnDelay: second, OffDelay: 5 * second,
+			Title:    "Clock of a source is wrong",
+			Text:     "A source's clock differs by {clock_skew_s:s.1}: receive time is used for its data.",
+			Caution:  "Times of its data are those of arrival: delays in the network shift them.",
+			Response: "Facility procedure for time synchronisation.",
+		},
+	}
+}

@@ -1,0 +1,261 @@
+package rules
+
+import (
+	"errors"
+	"math"
+	"os"
+	"path/filepath"
+	"slices"
+	"strconv"
+	"strings"
+	"testing"
+	"time"
+
+	"throatwatch/monitor"
+	"throatwatch/monitor/egt"
+)
+
+const (
+	scan  = 50 * ms
+	epoch = 1_800_000_000 * second
+)
+
+// testBands are the bands of an invented small turbojet.
+func testBands() []egt.Band {
+	return []egt.Band{
+		{Name: "run_1", Kind: egt.KindRun, Limit: 993.15, Allowance: 5 * second, Deadband: 5, Rearm: 2 * second},
+		{Name: "run_2", Kind: egt.KindRun, Limit: 1033.15, Deadband: 5, Rearm: 2 * second},
+		{Name: "start", Kind: egt.KindStart, Limit: 1073.15, Allowance: 3 * second, PerRun: 30 * second, Deadband: 5, Rearm: 2 * second},
+	}
+}
+
+func testDefault() []Rule {
+	return Default(Equipment{Bands: testBands(), EGT: true, Rake: true, FuelFlow: true, Bellmouth: true})
+}
+
+// stand runs a set of rules scan by scan.
+type stand struct {
+	t     testing.TB
+	names []Name
+	ix    index
+	set   *Set
+	st    State
+	f     Frame
+	phase monitor.Phase
+	run   string
+	next  int64 // event time of the next scan since epoch
+	seen  []Alarm
+}
+
+func newStand(t testing.TB, rules []Rule) *stand {
+	t.Helper()
+	names := StandardNames([]string{"p_oil", "vibration"}, []string{"run_1", "run_2", "start"})
+	set, faults := Compile(rules, names)
+	for _, f := range faults {
+		t.Errorf("rule %q, %s: %s; %s", rules[f.Rule].Name, f.Field, f.Message, f.Hint)
+	}
+	if set == nil {
+		t.FailNow()
+	}
+	return &stand{t: t, names: names, ix: indexOf(names), set: set, f: NewFrame(names), run: "run-1"}
+}
+
+// put sets a name; "?" makes it unknown.
+func (s *stand) put(name, value string) {
+	s.t.Helper()
+	slot, ok := s.ix[name]
+	if !ok {
+		s.t.Fatalf("no name %q", name)
+	}
+	switch {
+	case s.names[slot].Type == Number && value == "?":
+		s.f.Numbers[slot] = math.NaN()
+	case s.names[slot].Type == Number:
+		v, err := strconv.ParseFloat(value, 64)
+		if err != nil {
+			s.t.Fatal(err)
+		}
+		s.f.Numbers[slot] = v
+	case s.names[slot].Type == Bool:
+		s.f.Bools[slot] = map[string]Tri{"?": Unknown, "true": True, "false": False}[value]
+	default:
+		s.f.Texts[slot] = strings.Trim(value, "?")
+		if name == "phase" {
+			s.phase, _ = monitor.ParsePhase(value)
+		}
+	}
+}
+
+// to steps every scan before t, and at t if that is included.
+func (s *stand) to(t int64, included bool) {
+	for s.next < t || included && s.next == t {
+		s.seen = s.set.Step(&s.st, epoch+s.next, s.run, s.phase, OfData, &s.f, s.seen)
+		s.seen = s.set.Step(&s.st, epoch+s.next, s.run, monitor.PhaseUnknown, OfDaemon, &s.f, s.seen)
+		s.next += scan
+	}
+}
+
+func (s *stand) instance(rule string) *Instance {
+	s.t.Helper()
+	for i := range s.st.Instances {
+		if s.st.Instances[i].Rule == rule {
+			return &s.st.Instances[i]
+		}
+	}
+	s.t.Fatalf("no rule %q", rule)
+	return nil
+}
+
+// parseRule reads "NAME PRIORITY option… : expression".
+func parseRule(t testing.TB, line string) Rule {
+	t.Helper()
+	head, when, _ := strings.Cut(line, " : ")
+	f := strings.Fields(head)
+	r := Rule{Name: f[0], When: when, Title: f[0], Text: f[0]}
+	r.Priority, _ = ParsePriority(f[1])
+	for _, o := range f[2:] {
+		key, v, _ := strings.Cut(o, "=")
+		switch key {
+		case "on":
+			r.OnDelay = duration(t, v)
+		case "off":
+			r.OffDelay = duration(t, v)
+		case "deadband":
+			r.Deadband, _ = strconv.ParseFloat(v, 64)
+		case "latching":
+			r.Latching = true
+		case "group":
+			r.Group = v
+		case "suppress":
+			for p := range strings.SplitSeq(v, ",") {
+				phase, _ := monitor.ParsePhase(p)
+				r.SuppressIn = append(r.SuppressIn, phase)
+			}
+		default:
+			t.Fatalf("option %q", o)
+		}
+	}
+	return r
+}
+
+func duration(t testing.TB, s string) int64 {
+	t.Helper()
+	d, err := time.ParseDuration(s)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return int64(d)
+}
+
+// TestScripts runs every script of testdata:
+//
+//	rules default
+//	rule NAME PRIORITY [on=…] [off=…] [deadband=…] [latching] [group=…] [suppress=PHASE,…] : expression
+//	TIME set NAME=VALUE …            from the scan at TIME on; ? is unknown
+//	TIME want RULE STATE [unknown]   after the scan at TIME
+//	TIME text RULE TEXT              as rendered
+//	TIME act DO RULE [for=…] [role=…] [reason=…] [refused]
+//	TIME transitions N               so many since the begin
+//
+// There is a scan each 50 ms from 0 s on.
+func TestScripts(t *testing.T) {
+	files, err := filepath.Glob("testdata/*.script")
+	if err != nil || len(files) == 0 {
+		t.Fatalf("no scripts: %v", err)
+	}
+	for _, file := range files {
+		t.Run(strings.TrimSuffix(filepath.Base(file), ".script"), func(t *testing.T) {
+			b, err := os.ReadFile(file)
+			if err != nil {
+				t.Fatal(err)
+			}
+			runScript(t, string(b))
+		})
+	}
+}
+
+func runScript(t *testing.T, script string) {
+	t.Helper()
+	var rules []Rule
+	var s *stand
+	number := 0
+	for line := range strings.Lines(script) {
+		number++
+		line = strings.TrimSpace(line)
+		word, rest, _ := strings.Cut(line, " ")
+		switch {
+		case line == "" || word == "#":
+			continue
+		case line == "rules default":
+			rules = append(rules, testDefault()...)
+			continue
+		case word == "rule":
+			rules = append(rules, parseRule(t, rest))
+			continue
+		}
+		if s == nil {
+			s = newStand(t, rules)
+		}
+		at, verb := duration(t, word), ""
+		verb, rest, _ = strings.Cut(strings.TrimSpace(rest), " ")
+		f := strings.Fields(rest)
+		if verb == "set" && s.next > at {
+			t.Fatalf("line %d: %s: the scan at that time is over", number, line)
+		}
+		s.to(at, verb != "set")
+		switch verb {
+		case "set":
+			for _, pair := range f {
+				name, v, _ := strings.Cut(pair, "=")
+				s.put(name, v)
+			}
+		case "want":
+			in := s.instance(f[0])
+			if in.State.String() != f[1] || in.Unknown != (len(f) > 2 && f[2] == "unknown") {
+				t.Errorf("line %d: %s: %v (unknown %v)", number, line, in.State, in.Unknown)
+			}
+		case "text":
+			rule, text, _ := strings.Cut(rest, " ")
+			if got := s.instance(rule).Text; got != strings.TrimSpace(text) {
+				t.Errorf("line %d: got text\n%s\nwant\n%s", number, got, strings.TrimSpace(text))
+			}
+		case "act":
+			s.act(number, at, f)
+		case "transitions":
+			if n, _ := strconv.Atoi(f[0]); n != len(s.seen) {
+				t.Errorf("line %d: %d transitions, want %d", number, len(s.seen), n)
+			}
+		default:
+			t.Fatalf("line %d: %s", number, line)
+		}
+	}
+}
+
+func (s *stand) act(line int, at int64, f []string) {
+	s.t.Helper()
+	in := s.instance(f[1])
+	a := Action{Do: f[0], Alarm: f[1], Revision: in.Revision, By: "Mara", Role: "operator"}
+	for _, o := range f[2:] {
+		key, v, _ := strings.Cut(o, "=")
+		switch key {
+		case "for":
+			a.For = duration(s.t, v)
+		case "role":
+			a.Role = v
+		case "reason":
+			a.Reason = v
+		}
+	}
+	before := *in
+	alarm, err := s.set.Act(&s.st, epoch+at, a)
+	if slices.Contains(f, "refused") {
+		if !errors.Is(err, ErrRefused) || *in != before {
+			s.t.Errorf("line %d: %v: error %v, instance changed %v", line, f, err, *in != before)
+		}
+		return
+	}
+	if err != nil {
+		s.t.Errorf("line %d: %v: %v", line, f, err)
+	}
+	s.seen = append(s.seen, alarm)
+}
