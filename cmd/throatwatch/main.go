@@ -3,18 +3,74 @@
 package main
 
 import (
+	"context"
 	"fmt"
 	"io"
 	"os"
+	"os/signal"
+	"syscall"
+
+	"throatwatch/cmd/internal/watch"
 )
 
-func main() { os.Exit(run(os.Args[1:], os.Stdout, os.Stderr)) }
+func main() {
+	ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM)
+	code := run(ctx, os.Args[1:], os.Stdout, os.Stderr)
+	stop()
+	os.Exit(code)
+}
 
-// run hands the arguments to their subcommand and returns the exit code.
-func run(args []string, stdout, stderr io.Writer) int {
-	if len(args) > 0 && args[0] == "point" {
-		return pointCommand(args[1:], stdout, stderr)
+// command is a subcommand: it gets what follows its name and gives the exit code,
+// 0 done, 1 not done, 2 called wrongly.
+type command struct {
+	name, what string
+	run        func(ctx context.Context, args []string, stdout, stderr io.Writer) int
+}
+
+func commands() []command {
+	return []command{
+		{"watch", "watch a rig: broker, computation, alarms, archive, page", watchCommand},
+		{"rehearse", "let a simulated rig publish a whole test", rehearseCommand},
+		{"check", "every fault of a rig file at once, then its channels and limits", withoutContext(checkCommand)},
+		{"point", "one operating point from numbers given by hand", withoutContext(pointCommand)},
+		{"runs", "list the stored runs", runsCommand},
+		{"replay", "step a stored run again, and compare its digest", replayCommand},
+		{"version", "the build", versionCommand},
 	}
-	fmt.Fprintln(stderr, "usage: throatwatch point --help")
-	return 2
+}
+
+func withoutContext(f func([]string, io.Writer, io.Writer) int) func(context.Context, []string, io.Writer, io.Writer) int {
+	return func(_ context.Context, args []string, stdout, stderr io.Writer) int { return f(args, stdout, stderr) }
+}
+
+// run hands the arguments to their subcommand and gives the exit code.
+func run(ctx context.Context, args []string, stdout, stderr io.Writer) int {
+	name := ""
+	if len(args) > 0 {
+		name = args[0]
+	}
+	for _, c := range commands() {
+		if c.name == name {
+			return c.run(ctx, args[1:], stdout, stderr)
+		}
+	}
+	out, code := stderr, 2
+	switch name {
+	case "":
+	case "help", "--help", "-h":
+		out, code = stdout, 0
+	default:
+		_, _ = fmt.Fprintf(out, "throatwatch: there is no command %q\n\n", name)
+	}
+	_, _ = fmt.Fprintf(out, "usage: throatwatch COMMAND\n\n")
+	for _, c := range commands() {
+		_, _ = fmt.Fprintf(out, "  %-9s  %s\n", c.name, c.what)
+	}
+	_, _ = fmt.Fprintf(out, "\nthroatwatch COMMAND --help says more. %s\n", notProtection)
+	return code
+}
+
+func versionCommand(_ context.Context, _ []string, stdout, _ io.Writer) int {
+	_, _ = fmt.Fprintln(stdout, "throatwatch", watch.Build())
+	return 0
 }

@@ -17,6 +17,17 @@ const (
 	KindStart                 // until idle is first reached
 )
 
+// String gives the kind as a rig file writes it.
+func (k Kind) String() string {
+	switch k {
+	case KindRun:
+		return "run"
+	case KindStart:
+		return "start"
+	}
+	return "invalid"
+}
+
 // Band is a limit with the time for which it may be exceeded.
 type Band struct {
 	Name      string // [a-z][a-z0-9_]*

@@ -1,0 +1,454 @@
+package watch
+
+import (
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"log/slog"
+
+	"time"
+
+	"throatwatch/ingest"
+	"throatwatch/ingest/mqtt"
+	"throatwatch/rules/pipeline"
+)
+
+const (
+	commitEvery = 20 * time.Millisecond
+	tickEvery   = 100 * time.Millisecond
+	retryEvery  = 500 * time.Millisecond
+	// stalledAfter is the age of the oldest record not yet stored at which the
+	// loop stops waiting for the disk, ns.
+	stalledAfter = int64(time.Second)
+	// clockStep is the least step of the wall clock that is recorded, ns.
+	clockStep = int64(500 * time.Millisecond)
+	// inputsBuffer bounds what waits for a step. When it is full senders wait: the
+	// broker keeps what they hold.
+	inputsBuffer = 4096
+	// acksBuffer bounds batches whose messages wait to be acknowledged.
+	acksBuffer = 4096
+)
+
+// ErrStopped is returned to whoever asks the loop after its end.
+var ErrStopped = errors.New("the watch has stopped")
+
+// Acknowledger lets the broker forget a message that is durable.
+type Acknowledger interface{ Ack(mqtt.Message) bool }
+
+// Config sets a loop up.
+type Config struct {
+	Core   *Core
+	Store  *Store
+	Ack    Acknowledger // nil when no message needs one
+	Window int          // messages that the broker lets be unacknowledged; 0 = not limited
+	Shown  func(outs []pipeline.Outcome, m *pipeline.Machine, s *pipeline.State)
+	Log    *slog.Logger
+}
+
+// Loop is the live watch. Its Run owns core and store; the other methods may be
+// called from any goroutine while it runs.
+type Loop struct {
+	cfg    Config
+	inputs chan item
+	asks   chan func(*pipeline.Machine, *pipeline.State)
+	done   chan struct{}
+	clock  clock
+
+	acks    chan []mqtt.Message
+	jobs    chan *job
+	results chan error
+	queue   []*job // cut and not yet stored; the first may be with the writer
+	busy    bool   // the writer has the first of queue
+	pending []mqtt.Message
+	lost    uint64 // records stepped and not stored since recording stopped
+	stalled bool
+}
+
+type item struct {
+	in    Input
+	msg   mqtt.Message
+	reply chan<- pipeline.Reply
+	id    string
+}
+
+// job is a batch on its way to the disk with the messages it holds.
+type job struct {
+	batch *Batch
+	acks  []mqtt.Message
+}
+
+// clock gives host time: it never falls, whatever the wall clock does.
+type clock struct {
+	boot time.Time
+	last int64 // difference of wall clock and host time when last compared
+}
+
+func (c *clock) host() int64 { return c.boot.UnixNano() + int64(time.Since(c.boot)) }
+
+// step gives by how much the wall clock was stepped since the last call, 0 for
+// less than clockStep.
+func (c *clock) step() int64 {
+	diff := time.Now().Round(0).UnixNano() - c.host()
+	by := diff - c.last
+	if by > -clockStep && by < clockStep {
+		return 0
+	}
+	c.last = diff
+	return by
+}
+
+// NewLoop gives a loop; Run starts it.
+func NewLoop(cfg Config) *Loop {
+	return &Loop{
+		cfg: cfg, clock: clock{boot: time.Now()},
+		inputs:  make(chan item, inputsBuffer),
+		asks:    make(chan func(*pipeline.Machine, *pipeline.State)),
+		done:    make(chan struct{}),
+		acks:    make(chan []mqtt.Message, acksBuffer),
+		jobs:    make(chan *job),
+		results: make(chan error, 1),
+	}
+}
+
+// Put gives the loop an input. It waits while the loop is behind.
+func (l *Loop) Put(ctx context.Context, in Input) error { return l.put(ctx, item{in: in}) }
+
+// PutMessage gives the loop a message; it is acknowledged when it is durable.
+func (l *Loop) PutMessage(ctx context.Context, m mqtt.Message) error {
+	return l.put(ctx, item{
+		in:  Input{Kind: ingest.KindMessage, Flags: m.Flags, Topic: m.Topic, Payload: m.Payload},
+		msg: m,
+	})
+}
+
+func (l *Loop) put(ctx context.Context, it item) error {
+	select {
+	case l.inputs <- it:
+		return nil
+	case <-ctx.Done():
+		return ctx.Err()
+	case <-l.done:
+		return ErrStopped
+	}
+}
+
+// Act does what an operator asks for and waits for what becomes of it.
+func (l *Loop) Act(ctx context.Context, a pipeline.Action) (pipeline.Reply, error) {
+	text, err := json.Marshal(a)
+	if err != nil {
+		return pipeline.Reply{}, fmt.Errorf("action: %w", err)
+	}
+	reply := make(chan pipeline.Reply, 1)
+	if err := l.put(ctx, item{in: Input{Kind: ingest.KindAction, Payload: text}, reply: reply, id: a.RequestID}); err != nil {
+		return pipeline.Reply{}, err
+	}
+	select {
+	case r := <-reply:
+		return r, nil
+	case <-ctx.Done():
+		return pipeline.Reply{}, ctx.Err()
+	case <-l.done:
+		return pipeline.Reply{}, ErrStopped
+	}
+}
+
+// Ask runs fn between two records; fn must copy what it keeps.
+func (l *Loop) Ask(ctx context.Context, fn func(*pipeline.Machine, *pipeline.State)) error {
+	ready := make(chan struct{})
+	ask := func(m *pipeline.Machine, s *pipeline.State) {
+		fn(m, s)
+		close(ready)
+	}
+	select {
+	case l.asks <- ask:
+		<-ready
+		return nil
+	case <-ctx.Done():
+		return ctx.Err()
+	case <-l.done:
+		return ErrStopped
+	}
+}
+
+// Run steps inputs until ctx ends, then stores what was stepped and returns. The
+// first records are the boot and the configuration.
+func (l *Loop) Run(ctx context.Context, boot pipeline.Boot, bundle []byte) error {
+	defer close(l.done)
+	text, err := json.Marshal(boot)
+	if err != nil {
+		return fmt.Errorf("boot record: %w", err)
+	}
+	stopWriter := l.startWriter(ctx)
+	stopAcks := l.startAcks()
+	l.take(item{in: Input{Kind: ingest.KindBoot, Payload: text}})
+	l.take(item{in: Input{Kind: ingest.KindConfig, Payload: bundle}})
+
+	tick := time.NewTicker(tickEvery)
+	defer tick.Stop()
+	flush := time.NewTicker(commitEvery)
+	defer flush.Stop()
+	for ctx.Err() == nil {
+		select {
+		case it := <-l.inputs:
+			l.take(it)
+		case fn := <-l.asks:
+			fn(l.cfg.Core.Machine, l.cfg.Core.State)
+		case <-tick.C:
+			l.tick()
+		case <-flush.C:
+			l.flush()
+		case err := <-l.results:
+			l.stored(err)
+		case <-ctx.Done():
+		}
+	}
+	return l.drain(stopWriter, stopAcks)
+}
+
+// drain stores what is left. The disk gets five seconds.
+func (l *Loop) drain(stopWriter, stopAcks func()) error {
+	deadline := time.After(5 * time.Second)
+	l.cut()
+	for len(l.queue) > 0 {
+		l.submit()
+		select {
+		case err := <-l.results:
+			l.stored(err)
+		case <-deadline:
+			stopWriter()
+			stopAcks()
+			return fmt.Errorf("%d batches of records were not stored: the disk does not answer", len(l.queue))
+		}
+	}
+	stopWriter()
+	stopAcks()
+	return nil
+}
+
+// take makes a record of an item and steps it.
+func (l *Loop) take(it item) {
+	core := l.cfg.Core
+	outs := core.Take(it.in, l.clock.host())
+	l.show(outs)
+	if it.reply != nil {
+		it.reply <- replyOf(outs, it.id)
+	}
+	if it.in.Kind == ingest.KindMessage {
+		l.pending = append(l.pending, it.msg)
+	}
+	switch {
+	case l.stalled:
+		l.discard()
+	case core.Due():
+		l.cut()
+		l.submit()
+	case l.behind():
+		l.stall()
+	}
+}
+
+func replyOf(outs []pipeline.Outcome, id string) pipeline.Reply {
+	var r pipeline.Reply
+	for i := range outs {
+		r.Epoch, r.N = outs[i].Epoch, outs[i].N
+		if outs[i].Kind == pipeline.OutcomeAction && outs[i].Action.RequestID == id {
+			r.Err = outs[i].Action.Err
+			return r
+		}
+	}
+	return r
+}
+
+func (l *Loop) show(outs []pipeline.Outcome) {
+	if l.cfg.Shown != nil && len(outs) > 0 {
+		l.cfg.Shown(outs, l.cfg.Core.Machine, l.cfg.Core.State)
+	}
+}
+
+// tick adds a record when none came for a while, and watches the wall clock.
+func (l *Loop) tick() {
+	if by := l.clock.step(); by != 0 {
+		text, err := json.Marshal(pipeline.ClockStep{By: by})
+		if err == nil {
+			l.take(item{in: Input{Kind: ingest.KindClock, Payload: text}})
+		}
+	}
+	if l.clock.host()-l.cfg.Core.State.Host >= int64(tickEvery)/2 {
+		l.take(item{in: Input{Kind: ingest.KindTick}})
+	}
+}
+
+// flush cuts a batch when the writer is free for it: a slow disk gets larger ones.
+func (l *Loop) flush() {
+	if l.stalled {
+		return
+	}
+	if len(l.queue) == 0 {
+		l.cut()
+	}
+	l.submit()
+	if l.behind() {
+		l.stall()
+	}
+}
+
+// cut moves the gathered batch into the queue.
+func (l *Loop) cut() {
+	b, err := l.cfg.Core.Cut()
+	if err != nil {
+		l.cfg.Log.Error("a batch of records could not be made", "err", err)
+		return
+	}
+	if b == nil {
+		return
+	}
+	l.queue = append(l.queue, &job{batch: b, acks: l.pending})
+	l.pending = nil
+}
+
+// submit gives the writer the first of the queue if it is free.
+func (l *Loop) submit() {
+	if l.busy || len(l.queue) == 0 {
+		return
+	}
+	l.busy = true
+	l.jobs <- l.queue[0] // the writer waits for it: it was free
+}
+
+// stored notes what became of the first of the queue.
+func (l *Loop) stored(err error) {
+	l.busy = false
+	if err != nil {
+		l.cfg.Log.Error("not recording", "err", err)
+		if !l.stalled {
+			l.stall()
+		}
+		return // the writer has waited already; the next flush or tick tries again
+	}
+	l.acks <- l.queue[0].acks
+	l.queue[0] = nil
+	l.queue = l.queue[1:]
+	if len(l.queue) == 0 && l.stalled {
+		l.resume()
+	}
+	l.submit()
+}
+
+// behind tells that the disk does not keep up: the oldest record not stored is
+// too old, or half of what the broker allows is unacknowledged.
+func (l *Loop) behind() bool {
+	if len(l.queue) == 0 {
+		return false
+	}
+	unacked := len(l.pending)
+	for _, j := range l.queue {
+		unacked += len(j.acks)
+	}
+	return l.cfg.Core.State.Host-l.queue[0].batch.First > stalledAfter || l.cfg.Window > 0 && unacked > l.cfg.Window/2
+}
+
+// stall goes on without the disk: watching comes before storing. Messages are
+// acknowledged unrecorded, those that wait for the disk first.
+func (l *Loop) stall() {
+	l.stalled = true
+	l.cfg.Log.Error("not recording: the disk does not keep up; the watch goes on")
+	for _, j := range l.queue {
+		l.acks <- j.acks
+		j.acks = nil
+	}
+	l.health(pipeline.PartRecording, false, "the disk does not keep up")
+}
+
+// discard forgets what was stepped since the last cut.
+func (l *Loop) discard() {
+	l.lost += uint64(l.cfg.Core.Drop())
+	if len(l.pending) > 0 {
+		l.acks <- l.pending
+		l.pending = nil
+	}
+	if len(l.queue) > 0 {
+		l.submit()
+	} else if !l.busy {
+		l.resume()
+	}
+}
+
+// resume records again, after a gap.
+func (l *Loop) resume() {
+	l.stalled = false
+	outs, err := l.cfg.Core.Gap(l.lost, l.clock.host())
+	l.show(outs)
+	if err != nil {
+		l.cfg.Log.Error("not recording", "err", err)
+		return
+	}
+	l.cfg.Log.Warn("recording again", "records_not_stored", l.lost)
+	l.lost = 0
+	l.cut()
+	l.submit()
+	l.health(pipeline.PartRecording, true, "")
+}
+
+// health records that a part of the daemon failed or works again.
+func (l *Loop) health(part string, ok bool, why string) {
+	text, err := json.Marshal(pipeline.HealthChange{Part: part, OK: ok, Why: why})
+	if err != nil {
+		return
+	}
+	l.take(item{in: Input{Kind: ingest.KindHealth, Payload: text}})
+}
+
+// Health gives the loop the news that a part failed or works again.
+func (l *Loop) Health(ctx context.Context, part string, ok bool, why string) error {
+	text, err := json.Marshal(pipeline.HealthChange{Part: part, OK: ok, Why: why})
+	if err != nil {
+		return fmt.Errorf("health: %w", err)
+	}
+	return l.Put(ctx, Input{Kind: ingest.KindHealth, Payload: text})
+}
+
+// startWriter starts the one goroutine that uses the store. It answers every
+// job with a result; a failed one after a pause.
+func (l *Loop) startWriter(ctx context.Context) (stop func()) {
+	ended := make(chan struct{})
+	ctx = context.WithoutCancel(ctx)
+	go func() {
+		defer close(ended)
+		for j := range l.jobs {
+			err := l.cfg.Store.Write(ctx, j.batch)
+			if err != nil {
+				time.Sleep(retryEvery)
+			}
+			l.results <- err
+		}
+	}()
+	return func() {
+		close(l.jobs)
+		select {
+		case <-ended:
+		case <-time.After(time.Second): // it hangs in the disk; the process ends with it
+		}
+	}
+}
+
+// startAcks starts the goroutine that acknowledges, in order. It may wait for
+// the connection, which the loop must not.
+func (l *Loop) startAcks() (stop func()) {
+	ended := make(chan struct{})
+	go func() {
+		defer close(ended)
+		for batch := range l.acks {
+			if l.cfg.Ack == nil {
+				continue
+			}
+			for _, m := range batch {
+				l.cfg.Ack.Ack(m)
+			}
+		}
+	}()
+	return func() {
+		close(l.acks)
+		<-ended
+	}
+}

@@ -1,0 +1,217 @@
+package main
+
+import (
+	"bufio"
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"io"
+	"os"
+	"path/filepath"
+	"strings"
+	"text/tabwriter"
+	"time"
+
+	"throatwatch/cmd/internal/watch"
+	"throatwatch/dashboard"
+	"throatwatch/ingest"
+	"throatwatch/ingest/runfile"
+	"throatwatch/rules/pipeline"
+)
+
+// openRuns opens the list of the runs in a data folder for reading.
+func openRuns(ctx context.Context, dir string) (watch.StoredRuns, error) {
+	if info, err := os.Stat(filepath.Join(dir, "runs")); err != nil || !info.IsDir() {
+		return watch.StoredRuns{}, fmt.Errorf("%s holds no runs: give the folder of a watch by --data", dir)
+	}
+	c, err := runfile.OpenCatalog(ctx, filepath.Join(dir, "catalog.db"), filepath.Join(dir, "runs"))
+	if err != nil {
+		return watch.StoredRuns{}, err
+	}
+	return watch.StoredRuns{Catalog: c}, nil
+}
+
+// runLine is a run as `runs --json` prints it.
+type runLine struct {
+	ID           string   `json:"id"`
+	Rig          string   `json:"rig"`
+	Engine       string   `json:"engine"`
+	EngineSerial string   `json:"engine_serial"`
+	Started      string   `json:"started"`
+	Ended        *string  `json:"ended"`
+	DurationS    *float64 `json:"duration_s"`
+	State        string   `json:"state"`
+	Alarms       int      `json:"alarms"`
+	SizeBytes    int64    `json:"size_bytes"`
+	Keep         bool     `json:"keep"`
+	ConfigHash   string   `json:"config_hash"`
+	Build        string   `json:"build"`
+	Digest       string   `json:"digest"`
+}
+
+func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
+	fs := newFlags("runs", "List the stored runs, newest first.", stderr)
+	data := fs.String("data", "data", "data folder")
+	asJSON := fs.Bool("json", false, "one JSON array")
+	if rest, code := parseArgs(fs, args, stderr); code >= 0 {
+		return code
+	} else if len(rest) > 0 {
+		_, _ = fmt.Fprintln(stderr, "throatwatch runs: takes no arguments")
+		return 2
+	}
+	list, err := listRuns(ctx, *data)
+	if err != nil {
+		_, _ = fmt.Fprintln(stderr, "throatwatch runs:", err)
+		return 1
+	}
+	if *asJSON {
+		b, err := json.MarshalIndent(list, "", "  ")
+		if err != nil {
+			_, _ = fmt.Fprintln(stderr, "throatwatch runs:", err)
+			return 1
+		}
+		_, _ = fmt.Fprintf(stdout, "%s\n", b)
+		return 0
+	}
+	t := tabwriter.NewWriter(stdout, 0, 0, 2, ' ', 0)
+	_, _ = fmt.Fprintln(t, "RUN\tENGINE\tSTARTED (UTC)\tLENGTH\tALARMS\tSTATE\tSIZE")
+	for _, r := range list {
+		length := "–"
+		if r.DurationS != nil {
+			length = time.Duration(*r.DurationS * 1e9).Round(time.Second).String()
+		}
+		_, _ = fmt.Fprintf(t, "%s\t%s %s\t%.19s\t%s\t%d\t%s\t%.1f MB\n", r.ID, r.Engine, r.EngineSerial,
+			strings.Replace(r.Started, "T", " ", 1), length, r.Alarms, r.State, float64(r.SizeBytes)/1e6)
+	}
+	_ = t.Flush()
+	if len(list) == 0 {
+		_, _ = fmt.Fprintln(stdout, "no runs are stored")
+	}
+	return 0
+}
+
+func listRuns(ctx context.Context, dir string) (list []runLine, err error) {
+	runs, err := openRuns(ctx, dir)
+	if err != nil {
+		return nil, err
+	}
+	defer func() { err = errors.Join(err, runs.Catalog.Close()) }()
+	all, err := runs.List(ctx)
+	if err != nil {
+		return nil, err
+	}
+	list = []runLine{}
+	for i := range all {
+		r := &all[i]
+		line := runLine{
+			ID: r.ID, Rig: r.Rig, Engine: r.Engine, EngineSerial: r.EngineSerial,
+			Started: time.Unix(0, r.Started).UTC().Format(time.RFC3339Nano), State: r.State, Alarms: r.Alarms,
+			SizeBytes: r.Size, Keep: r.Keep, ConfigHash: r.ConfigHash, Build: r.Build, Digest: r.Digest,
+		}
+		if r.Ended != 0 {
+			ended, length := time.Unix(0, r.Ended).UTC().Format(time.RFC3339Nano), float64(r.Ended-r.Started)/1e9
+			line.Ended, line.DurationS = &ended, &length
+		}
+		list = append(list, line)
+	}
+	return list, nil
+}
+
+func replayCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
+	fs := newFlags("replay RUN", "Step the records of a stored run again through the same computation.\n"+
+		"Prints a SHA-256 over its operating points and alarm transitions on standard error.", stderr)
+	data := fs.String("data", "data", "data folder")
+	asJSON := fs.Bool("json", false, "print one operating point of the run per line, as in the live frames")
+	rest, code := parseArgs(fs, args, stderr)
+	if code >= 0 {
+		return code
+	}
+	if len(rest) != 1 {
+		_, _ = fmt.Fprintln(stderr, "throatwatch replay: give one run; `throatwatch runs` lists them")
+		return 2
+	}
+	if err := replay(ctx, *data, rest[0], *asJSON, stdout, stderr); err != nil {
+		_, _ = fmt.Fprintln(stderr, "throatwatch replay:", err)
+		return 1
+	}
+	return 0
+}
+
+// replay steps a run again and prints what comes of it.
+func replay(ctx context.Context, dir, id string, asJSON bool, stdout, stderr io.Writer) (err error) {
+	runs, err := openRuns(ctx, dir)
+	if err != nil {
+		return err
+	}
+	defer func() { err = errors.Join(err, runs.Catalog.Close()) }()
+	f, err := runs.Open(ctx, id)
+	if err != nil {
+		return fmt.Errorf("%w: `throatwatch runs --data %s` lists the runs", err, dir)
+	}
+	defer func() { err = errors.Join(err, f.Close()) }()
+	header, err := f.Header(ctx)
+	if err != nil {
+		return err
+	}
+	m := pipeline.NewMachine(watch.Parse)
+	p, err := pipeline.OpenReplay(ctx, f, m, 0)
+	if err != nil {
+		return err
+	}
+	out := bufio.NewWriterSize(stdout, 64<<10)
+	began := time.Now()
+	inRun, scans, alarms := false, 0, 0
+	err = p.Run(ctx, 0, func(_ *ingest.Record, outs []pipeline.Outcome) error {
+		cfg, _ := m.Config()
+		for i := range outs {
+			o := &outs[i]
+			switch {
+			case o.Kind == pipeline.OutcomeRun:
+				inRun = o.Event == "started"
+			case !inRun:
+			case o.Kind == pipeline.OutcomeAlarm:
+				alarms++
+			case o.Kind == pipeline.OutcomePoint:
+				scans++
+				if !asJSON {
+					continue
+				}
+				if body, _, ok := dashboard.EncodeFrame(o, &cfg); ok {
+					if _, err := out.Write(append(body, '\n')); err != nil {
+						return err
+					}
+				}
+			}
+		}
+		return nil
+	})
+	if err := errors.Join(err, out.Flush()); err != nil {
+		return err
+	}
+	took := time.Since(began)
+	length := time.Duration(float64(scans) * float64(period(m)))
+	_, _ = fmt.Fprintf(stderr, "run %s: %d operating points, %d alarm transitions, %v replayed in %v (%.0f × real time)\nsha256 %s\n",
+		id, scans, alarms, length.Round(time.Second), took.Round(time.Millisecond), float64(length)/float64(took), p.Digest)
+	return compareDigest(&header, p.Digest.String(), stderr)
+}
+
+func period(m *pipeline.Machine) int64 {
+	cfg, _ := m.Config()
+	return cfg.Align.Period
+}
+
+// compareDigest says whether the replay gave what was recorded live.
+func compareDigest(h *runfile.Header, got string, stderr io.Writer) error {
+	switch {
+	case h.Digest == "":
+		_, _ = fmt.Fprintln(stderr, "the run has no digest to compare with: it has not ended")
+	case h.Digest == got:
+		_, _ = fmt.Fprintln(stderr, "the same as recorded live")
+	case h.Build != watch.Build():
+		_, _ = fmt.Fprintf(stderr, "not bit for bit as recorded live, by build %s; this is build %s\n", h.Build, watch.Build())
+	default:
+		return fmt.Errorf("the run was recorded live by this build with sha256 %s: the file was changed, or the computation is not deterministic", h.Digest)
+	}
+	return nil
+}

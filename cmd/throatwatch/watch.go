@@ -1,0 +1,398 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io"
+	"log/slog"
+	"net"
+	"net/http"
+	"os"
+	"path/filepath"
+	"runtime"
+	"strings"
+	"sync"
+	"time"
+
+	"github.com/spf13/pflag"
+
+	"throatwatch/cmd/internal/config"
+	"throatwatch/cmd/internal/watch"
+	"throatwatch/dashboard"
+	"throatwatch/ingest"
+	"throatwatch/ingest/broker"
+	"throatwatch/ingest/mqtt"
+	"throatwatch/ingest/runfile"
+	"throatwatch/rules/pipeline"
+)
+
+// notProtection stands wherever a person could think otherwise.
+const notProtection = "It only watches. Facility safety procedures, hard-wired protection and licensed practice come first."
+
+// watchOptions are the flags of `throatwatch watch`.
+type watchOptions struct {
+	listen, data, broker, brokerListen string
+	user, passwordFile                 string
+	remote                             bool
+	rehearse                           bool
+	play                               rehearseFlags
+	limit                              time.Duration
+	verbose                            bool
+}
+
+func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
+	var o watchOptions
+	fs := newFlags("watch RIG.yaml", "Watch a rig: take its messages in, compute, alarm, store, and serve the page.", stderr)
+	fs.StringVar(&o.listen, "listen", "127.0.0.1:8189", "address of the page and the HTTP interface")
+	fs.StringVar(&o.data, "data", "data", "folder for runs, catalogue and broker store")
+	fs.StringVar(&o.broker, "broker", "", "site broker, mqtt://host:port or mqtts://host:port (default: an embedded one)")
+	fs.StringVar(&o.brokerListen, "broker-listen", "127.0.0.1:1883", "address of the embedded broker; port 0 takes a free one")
+	fs.StringVar(&o.user, "broker-user", "", "user name at the site broker")
+	fs.StringVar(&o.passwordFile, "broker-password-file", "", "file with the password at the site broker")
+	fs.BoolVar(&o.remote, "allow-remote", false, "let --listen and --broker-listen be reached from other machines, without TLS or passwords")
+	fs.BoolVar(&o.rehearse, "rehearse", false, "let a simulated rig publish a test to the broker; the next flags say which")
+	o.play = newRehearseFlags(fs)
+	fs.DurationVar(&o.limit, "for", 0, "stop after this time (default: on interrupt)")
+	fs.BoolVar(&o.verbose, "verbose", false, "log what the parts do")
+	rig, code := parseRig(fs, args, stderr)
+	if code >= 0 {
+		return code
+	}
+	if o.limit > 0 {
+		var cancel context.CancelFunc
+		ctx, cancel = context.WithTimeout(ctx, o.limit)
+		defer cancel()
+	}
+	w := &watcher{opt: o, stdout: stdout, stderr: stderr, log: newLog(stderr, o.verbose)}
+	if err := w.run(ctx, rig); err != nil {
+		_, _ = fmt.Fprintln(stderr, "throatwatch watch:", err)
+		return 1
+	}
+	return 0
+}
+
+// watcher is the daemon: its parts, started and stopped in order.
+type watcher struct {
+	opt    watchOptions
+	stdout io.Writer
+	stderr io.Writer
+	log    *slog.Logger
+
+	cfg    pipeline.Config
+	store  *watch.Store
+	broker *broker.Broker
+	client *mqtt.Client
+	loop   *watch.Loop
+}
+
+// run starts the parts in the order in which they need each other and stops them
+// the other way round: who feeds the loop first, then the loop, which stores what
+// it has and acknowledges it, then the broker session, then the files.
+func (w *watcher) run(ctx context.Context, rig string) (err error) {
+	bundle, cfg, faults := config.Load(rig)
+	if err := watch.Faults(faults); err != nil {
+		return fmt.Errorf("the configuration has faults; nothing was started:\n%w", err)
+	}
+	w.cfg = cfg
+	unlock, err := watch.Lock(w.opt.data)
+	if err != nil {
+		return err
+	}
+	defer unlock()
+	if w.store, err = watch.OpenStore(ctx, w.opt.data, runfile.Options{}, w.log); err != nil {
+		return err
+	}
+	defer func() { err = errors.Join(err, w.store.Close(context.WithoutCancel(ctx))) }()
+	core, err := w.store.Restore(ctx, pipeline.NewMachine(watch.Parse), watch.Build(), runtime.GOARCH)
+	if err != nil {
+		return err
+	}
+	listener, err := w.listen(ctx)
+	if err != nil {
+		return err
+	}
+	defer listener.Close() //nolint:errcheck // the server has closed it
+	stopBroker, err := w.connect(ctx)
+	if err != nil {
+		return err
+	}
+	defer stopBroker()
+
+	hub := dashboard.NewHub(watch.Build())
+	outbox := watch.NewOutbox(cfg.Rig.ID, w.client, w.log)
+	w.loop = watch.NewLoop(watch.Config{
+		Core: core, Store: w.store, Ack: w.client, Window: mqtt.DefaultWindow, Log: w.log,
+		Shown: func(outs []pipeline.Outcome, m *pipeline.Machine, s *pipeline.State) {
+			hub.Publish(outs, m, s)
+			outbox.Take(outs, m, s)
+		},
+	})
+	server := &http.Server{
+		Handler: dashboard.NewServer(dashboard.Config{
+			Desk: w.loop, Runs: watch.StoredRuns{Catalog: w.store.Catalog()}, Parse: watch.Parse,
+			Build: watch.Build(), Log: w.log, Extra: w.metrics,
+		}, hub),
+		ReadHeaderTimeout: 5 * time.Second, IdleTimeout: 2 * time.Minute, MaxHeaderBytes: 32 << 10,
+		ErrorLog: slog.NewLogLogger(w.log.Handler(), slog.LevelDebug),
+	}
+
+	clientCtx, stopClient := context.WithCancel(context.WithoutCancel(ctx))
+	loopCtx, stopLoop := context.WithCancel(context.WithoutCancel(ctx))
+	sideCtx, stopSide := context.WithCancel(ctx) // server, outbox, sink, rehearsal
+	var clientParts, sideParts sync.WaitGroup
+	loopEnd := make(chan error, 1)
+	failed := make(chan error, 4)
+	clientParts.Go(func() { _ = w.client.Run(clientCtx) })
+	clientParts.Go(func() { w.pump(loopCtx) })
+	clientParts.Go(func() { w.report(loopCtx) })
+	go func() {
+		loopEnd <- w.loop.Run(loopCtx, pipeline.Boot{Epoch: core.State.Epoch + 1, Build: watch.Build(), GOARCH: runtime.GOARCH}, bundle.Marshal())
+	}()
+	sideParts.Go(func() {
+		if err := server.Serve(listener); !errors.Is(err, http.ErrServerClosed) {
+			failed <- fmt.Errorf("page: %w", err)
+		}
+	})
+	sideParts.Go(func() { outbox.Run(sideCtx) })
+	w.announce(listener.Addr().String())
+	sideParts.Go(func() {
+		if err := w.letIn(sideCtx); err != nil && sideCtx.Err() == nil {
+			failed <- err
+		}
+	})
+
+	select {
+	case <-ctx.Done():
+	case err = <-failed:
+	case err = <-loopEnd:
+		loopEnd <- nil
+	}
+	stopSide()
+	hub.Shutdown()
+	closing, cancel := context.WithTimeout(context.WithoutCancel(ctx), 2*time.Second)
+	defer cancel()
+	_ = server.Shutdown(closing)
+	sideParts.Wait()
+	stopLoop()
+	err = errors.Join(err, <-loopEnd)
+	stopClient()
+	clientParts.Wait()
+	return err
+}
+
+// listen opens the port of the page.
+func (w *watcher) listen(ctx context.Context) (net.Listener, error) {
+	host, _, err := net.SplitHostPort(w.opt.listen)
+	if err != nil {
+		return nil, fmt.Errorf("--listen %q: %w: give host:port", w.opt.listen, err)
+	}
+	if ip := net.ParseIP(host); !w.opt.remote && host != "localhost" && (ip == nil || !ip.IsLoopback()) {
+		return nil, fmt.Errorf("--listen %s can be reached from other machines, and whoever reaches it can acknowledge alarms: use 127.0.0.1, or --allow-remote on a closed network", w.opt.listen)
+	}
+	l, err := (&net.ListenConfig{}).Listen(ctx, "tcp", w.opt.listen)
+	if err != nil {
+		return nil, fmt.Errorf("--listen: %w", err)
+	}
+	return l, nil
+}
+
+// connect starts the embedded broker, unless there is a site broker, and makes
+// the client.
+func (w *watcher) connect(ctx context.Context) (stop func(), err error) {
+	c := mqtt.Config{
+		URL: w.opt.broker, Dir: w.opt.data, Username: w.opt.user,
+		Will: &mqtt.Will{Topic: watch.StatusTopic(w.cfg.Rig.ID), Payload: watch.OfflineStatus()},
+	}
+	for _, in := range w.cfg.Align.Inputs {
+		c.Filters = append(c.Filters, in.Filter)
+	}
+	if c.Password, err = readSecret(w.opt.passwordFile); err != nil {
+		return nil, err
+	}
+	stop = func() {}
+	if w.opt.broker == "" {
+		w.broker, err = broker.New(broker.Config{
+			Listen: w.opt.brokerListen, AllowRemote: w.opt.remote, StoreDir: filepath.Join(w.opt.data, "broker"),
+		}, w.log)
+		if err != nil {
+			return nil, err
+		}
+		if err := w.broker.Start(ctx); err != nil {
+			return nil, fmt.Errorf("embedded broker: %w", err)
+		}
+		stop = func() {
+			if err := w.broker.Close(); err != nil {
+				w.log.Warn("embedded broker", "err", err)
+			}
+		}
+		c.URL = w.broker.URL()
+		c.Username, c.Password = w.broker.Own()
+	}
+	if w.client, err = mqtt.New(c); err != nil {
+		stop()
+		return nil, err
+	}
+	return stop, nil
+}
+
+// pump feeds the loop with messages until either ends.
+func (w *watcher) pump(ctx context.Context) {
+	for m := range w.client.Messages() {
+		if err := w.loop.PutMessage(ctx, m); err != nil {
+			return
+		}
+	}
+}
+
+// report feeds the loop with what becomes of the broker sessions.
+func (w *watcher) report(ctx context.Context) {
+	deaf := map[int]bool{}
+	for e := range w.client.Events() {
+		w.log.Info(e.String())
+		if e.Session == mqtt.PublisherSession {
+			continue
+		}
+		var err error
+		before := len(deaf)
+		switch e.Kind {
+		case mqtt.EventConnected:
+			err = w.loop.Put(ctx, watch.Input{Kind: ingest.KindConnect, Topic: e.Filter})
+		case mqtt.EventDisconnected:
+			err = w.loop.Put(ctx, watch.Input{Kind: ingest.KindDisconnect, Topic: e.Filter})
+			deaf[e.Session] = true
+		case mqtt.EventRefused, mqtt.EventTakenOver, mqtt.EventDeaf:
+			deaf[e.Session] = true
+		case mqtt.EventHearing:
+		}
+		if e.Kind == mqtt.EventConnected || e.Kind == mqtt.EventHearing {
+			delete(deaf, e.Session)
+		}
+		if (before == 0) != (len(deaf) == 0) && err == nil {
+			err = w.loop.Health(ctx, pipeline.PartInputPath, len(deaf) == 0, e.String())
+		}
+		if err != nil {
+			return
+		}
+	}
+}
+
+// letIn opens the embedded broker to publishers once the daemon's own sessions
+// exist, and starts the rehearsal.
+func (w *watcher) letIn(ctx context.Context) error {
+	select {
+	case <-w.client.Ready():
+	case <-ctx.Done():
+		return ctx.Err()
+	}
+	url := w.opt.broker
+	if w.broker != nil {
+		w.broker.Open()
+		url = w.broker.URL()
+	}
+	if !w.opt.rehearse {
+		return nil
+	}
+	o, err := w.opt.play.options()
+	if err != nil {
+		return err
+	}
+	return rehearseLive(ctx, w.cfg, o, url, 0, w.stdout, w.stderr)
+}
+
+// announce says what runs where.
+func (w *watcher) announce(addr string) {
+	rig := &w.cfg.Rig
+	where := w.opt.broker
+	if w.broker != nil {
+		where = w.broker.URL() + " (embedded)"
+	}
+	dir, err := filepath.Abs(w.opt.data)
+	if err != nil {
+		dir = w.opt.data
+	}
+	topics := make([]string, len(w.cfg.Align.Inputs))
+	for i, in := range w.cfg.Align.Inputs {
+		topics[i] = in.Filter
+	}
+	_, _ = fmt.Fprintf(w.stdout, `throatwatch watches %s (%s), engine %s %s
+  page    http://%s/
+  broker  %s
+  topics  %s
+  data    %s
+  config  %.12s: %d channels, %.4g scans/s, %d rules, limits %s
+%s
+`, rig.Title, rig.ID, rig.EngineModel, rig.EngineSerial, addr, where, strings.Join(topics, "  "), dir, w.cfg.Hash,
+		len(w.cfg.Compute.Channels), 1e9/float64(w.cfg.Align.Period), len(w.cfg.Rules), rig.LimitsVersion, notProtection)
+}
+
+// metrics gives the figures of the broker sessions.
+func (w *watcher) metrics() []dashboard.Metric {
+	var out []dashboard.Metric
+	for _, s := range w.client.Stats() {
+		labels := map[string]string{"filter": s.Filter}
+		out = append(out,
+			dashboard.Metric{Name: "session_unacknowledged", Help: "Messages delivered and not yet acknowledged.", Labels: labels, Value: float64(s.Unacked)},
+			dashboard.Metric{Name: "session_received_total", Help: "Deliveries, copies included.", Total: true, Labels: labels, Value: float64(s.Received)},
+			dashboard.Metric{Name: "session_dropped_total", Help: "Deliveries that found the input queue full; the broker sends them again.", Total: true, Labels: labels, Value: float64(s.Dropped)},
+		)
+	}
+	return out
+}
+
+// newFlags gives a flag set that explains itself.
+func newFlags(usage, what string, stderr io.Writer) *pflag.FlagSet {
+	name, _, _ := strings.Cut(usage, " ")
+	fs := pflag.NewFlagSet(name, pflag.ContinueOnError)
+	fs.SetOutput(stderr)
+	fs.SortFlags = false
+	fs.Usage = func() {
+		_, _ = fmt.Fprintf(stderr, "usage: throatwatch %s\n\n%s\n\n%s\n%s\n", usage, what, fs.FlagUsages(), notProtection)
+	}
+	return fs
+}
+
+// parseRig parses flags and the one rig file; code is below 0 when all is well.
+func parseRig(fs *pflag.FlagSet, args []string, stderr io.Writer) (rig string, code int) {
+	rest, code := parseArgs(fs, args, stderr)
+	if code >= 0 {
+		return "", code
+	}
+	if len(rest) != 1 {
+		_, _ = fmt.Fprintf(stderr, "throatwatch %s: give one rig file, as in testdata/rigs/example.yaml (%d arguments were given)\n", fs.Name(), len(rest))
+		return "", 2
+	}
+	return rest[0], -1
+}
+
+func parseArgs(fs *pflag.FlagSet, args []string, stderr io.Writer) (rest []string, code int) {
+	if err := fs.Parse(args); err != nil {
+		if errors.Is(err, pflag.ErrHelp) {
+			return nil, 0
+		}
+		_, _ = fmt.Fprintf(stderr, "throatwatch %s: %v (--help lists the flags)\n", fs.Name(), err)
+		return nil, 2
+	}
+	return fs.Args(), -1
+}
+
+// readSecret reads a password from a file; "" when there is none.
+func readSecret(path string) (string, error) {
+	if path == "" {
+		return "", nil
+	}
+	b, err := os.ReadFile(path)
+	if err != nil {
+		return "", fmt.Errorf("password file: %w", err)
+	}
+	return strings.TrimRight(string(b), "\r\n"), nil
+}
+
+// newLog gives the daemon's log: warnings, or everything.
+func newLog(w io.Writer, verbose bool) *slog.Logger {
+	level := slog.LevelWarn
+	if verbose {
+		level = slog.LevelInfo
+	}
+	return slog.New(slog.NewTextHandler(w, &slog.HandlerOptions{Level: level}))
+}

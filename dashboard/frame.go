@@ -1,0 +1,429 @@
+package dashboard
+
+import (
+	"encoding/json"
+	"math"
+	"slices"
+	"strconv"
+	"time"
+
+	"throatwatch/ingest"
+	"throatwatch/monitor"
+	"throatwatch/monitor/calib"
+	"throatwatch/monitor/compute"
+	"throatwatch/rules"
+	"throatwatch/rules/pipeline"
+)
+
+// apiVersion is the version of the frames.
+const apiVersion = 1
+
+// Frame is one frame of /live, encoded, with what is needed to route it.
+type Frame struct {
+	Kind  string
+	Epoch uint64
+	N     uint64
+	T     int64
+	Body  []byte
+}
+
+// appendFrame writes the frame of an outcome; ok is false for an outcome that has
+// none. Channels frames are made by appendChannels, for the ids that are wanted.
+func appendFrame(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) (body []byte, kind string, ok bool) {
+	switch o.Kind {
+	case pipeline.OutcomePoint:
+		return appendPoint(open(dst, "operating_point", o), o, cfg), "operating_point", true
+	case pipeline.OutcomeAlarm:
+		return value(open(dst, "alarm", o), "alarm", o.Alarm), "alarm", true
+	case pipeline.OutcomeLedger:
+		return append(appendBands(open(dst, "ledger", o), "bands", o.Ledger), '}'), "ledger", true
+	case pipeline.OutcomeStatus:
+		return append(appendStatus(open(dst, "status", o), o.Status), '}'), "status", true
+	case pipeline.OutcomeMark:
+		return value(open(dst, "mark", o), "mark", o.Mark), "mark", true
+	case pipeline.OutcomeRun:
+		dst = text(open(dst, "run", o), "event", o.Event)
+		return value(dst, "run", runView(o.Run)), "run", true
+	case pipeline.OutcomeChannels, pipeline.OutcomeConfig, pipeline.OutcomeQuarantine, pipeline.OutcomeAction:
+	}
+	return dst, "", false
+}
+
+// open begins a frame.
+func open(dst []byte, kind string, o *pipeline.Outcome) []byte {
+	dst = append(dst, `{"kind":"`...)
+	dst = append(dst, kind...)
+	dst = append(dst, `","epoch":`...)
+	dst = strconv.AppendUint(dst, o.Epoch, 10)
+	dst = append(dst, `,"n":`...)
+	dst = strconv.AppendUint(dst, o.N, 10)
+	return instant(dst, "t", o.T)
+}
+
+// value appends a member of any type and closes the frame.
+func value(dst []byte, key string, v any) []byte {
+	dst = name(dst, key)
+	b, err := json.Marshal(v)
+	if err != nil {
+		b = []byte("null") // our own types encode; a frame is never half a frame
+	}
+	return append(append(dst, b...), '}')
+}
+
+func name(dst []byte, key string) []byte {
+	dst = append(dst, ',', '"')
+	dst = append(dst, key...)
+	return append(dst, '"', ':')
+}
+
+// number appends a member; NaN and infinity are null.
+func number(dst []byte, key string, v float64) []byte {
+	return float(name(dst, key), v)
+}
+
+func float(dst []byte, v float64) []byte {
+	if math.IsNaN(v) || math.IsInf(v, 0) {
+		return append(dst, "null"...)
+	}
+	return strconv.AppendFloat(dst, v, 'g', -1, 64)
+}
+
+func count(dst []byte, key string, v int64) []byte {
+	return strconv.AppendInt(name(dst, key), v, 10)
+}
+
+func truth(dst []byte, key string, v bool) []byte {
+	return strconv.AppendBool(name(dst, key), v)
+}
+
+// text appends a member whose value may hold anything.
+func text(dst []byte, key, v string) []byte {
+	dst = name(dst, key)
+	for i := range len(v) {
+		if c := v[i]; c < ' ' || c == '"' || c == '\\' || c >= 0x80 {
+			b, err := json.Marshal(v)
+			if err != nil {
+				return append(dst, `""`...)
+			}
+			return append(dst, b...)
+		}
+	}
+	return append(append(append(dst, '"'), v...), '"')
+}
+
+// instant appends a time as RFC 3339 UTC with nanoseconds; 0 is null.
+func instant(dst []byte, key string, ns int64) []byte {
+	dst = name(dst, key)
+	if ns == 0 {
+		return append(dst, "null"...)
+	}
+	dst = append(dst, '"')
+	dst = time.Unix(0, ns).UTC().AppendFormat(dst, time.RFC3339Nano)
+	return append(dst, '"')
+}
+
+func appendPoint(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) []byte {
+	p := o.Point
+	dst = count(dst, "scan", int64(p.Scan))
+	for q := range monitor.NumQuantities {
+		dst = number(dst, q.Info().Name, p.V[q])
+	}
+	dst = text(dst, "choke_state", p.Choke.String())
+	dst = truth(dst, "choke_marginal", p.ChokeMarginal)
+	dst = truth(dst, "choke_armed", p.ChokeArmed)
+	dst = truth(dst, "lit", p.Lit)
+	dst = text(dst, "phase", p.Phase.String())
+	dst = text(dst, "back_pressure_from", p.BackFrom.String())
+	dst = text(dst, "total_temperature_from", p.TemperatureBy.String())
+	dst = text(dst, "choke_npr_from", p.ChokeNPRFrom.String())
+	dst = count(dst, "egt_probes_used", int64(p.EGTProbesUsed))
+	dst = count(dst, "rake_probes_used", int64(p.RakeProbesUsed))
+	dst = cause(dst, "cause", p.Cause, cfg)
+	dst = cause(dst, "egt_cause", p.EGTCause, cfg)
+	dst = append(name(dst, "warnings"), '[')
+	first := true
+	for w := range p.Warnings.Each {
+		if !first {
+			dst = append(dst, ',')
+		}
+		first = false
+		dst = strconv.AppendQuote(dst, w)
+	}
+	return append(dst, ']', '}')
+}
+
+func cause(dst []byte, key string, c monitor.Cause, cfg *pipeline.Config) []byte {
+	switch {
+	case c.Kind == monitor.Available:
+		return append(name(dst, key), "null"...)
+	case c.Kind == monitor.ChannelBad && int(c.Channel) < len(cfg.Compute.Channels):
+		return text(dst, key, cfg.Compute.Channels[c.Channel].ID+" "+c.Quality.String())
+	}
+	return text(dst, key, c.Kind.String())
+}
+
+// appendChannels writes the channels frame for the channels wanted, by index.
+func appendChannels(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config, wanted []int) []byte {
+	dst = append(name(open(dst, "channels", o), "channels"), '{')
+	scan := o.Scan
+	for k, i := range wanted {
+		if k > 0 {
+			dst = append(dst, ',')
+		}
+		dst = append(append(append(dst, '"'), cfg.Compute.Channels[i].ID...), '"', ':', '{')
+		dst = float(append(dst, `"value":`...), scan.Value[i])
+		dst = number(dst, "raw", scan.Raw[i])
+		dst = text(dst, "quality", scan.Quality[i].String())
+		age := math.NaN()
+		if scan.Age[i] >= 0 {
+			age = float64(scan.Age[i]) / 1e9
+		}
+		dst = append(number(dst, "age_s", age), '}')
+	}
+	return append(dst, '}', '}')
+}
+
+func appendBands(dst []byte, key string, bands []pipeline.Allowance) []byte {
+	dst = append(name(dst, key), '[')
+	for i := range bands {
+		b := &bands[i]
+		if i > 0 {
+			dst = append(dst, ',')
+		}
+		dst = appendBand(dst, b)
+		dst = number(dst, "elapsed_s", seconds(b.Elapsed))
+		dst = number(dst, "assumed_s", seconds(b.Assumed))
+		dst = number(dst, "run_total_s", seconds(b.Total))
+		dst = truth(dst, "holds", b.Holds)
+		dst = truth(dst, "over", b.Over)
+		dst = truth(dst, "exceeded", b.Exceeded)
+		peak := math.NaN()
+		if b.RunPeak > 0 {
+			peak = b.RunPeak
+		}
+		dst = number(dst, "peak_k", peak)
+		dst = append(count(dst, "excursions", int64(b.Excursions)), '}')
+	}
+	return append(dst, ']')
+}
+
+// appendBand writes what a band is, without closing the object.
+func appendBand(dst []byte, b *pipeline.Allowance) []byte {
+	dst = append(dst, `{"name":"`...)
+	dst = append(append(dst, b.Band.Name...), '"')
+	dst = text(dst, "kind", b.Kind.String())
+	dst = number(dst, "limit_k", b.Limit)
+	dst = number(dst, "allowance_s", seconds(b.Allowance))
+	return number(dst, "per_run_s", seconds(b.PerRun))
+}
+
+func seconds(ns int64) float64 { return float64(ns) / 1e9 }
+
+// age gives seconds, NaN for a negative time.
+func age(ns int64) float64 {
+	if ns < 0 {
+		return math.NaN()
+	}
+	return seconds(ns)
+}
+
+func appendStatus(dst []byte, st *pipeline.Status) []byte {
+	dst = instant(dst, "host_time", st.Host)
+	dst = number(dst, "data_age_s", age(st.DataAge))
+	dst = truth(dst, "catching_up", st.CatchingUp)
+	dst = truth(dst, "recording", st.Health.NotRecordingSince == 0)
+	dst = instant(dst, "not_recording_since", st.Health.NotRecordingSince)
+	dst = truth(dst, "input_path", !st.Health.InputPathDeaf)
+	dst = truth(dst, "clock", st.Skew == 0)
+	dst = number(dst, "clock_skew_s", seconds(st.Skew))
+	dst = truth(dst, "run_active", st.RunActive)
+	dst = count(dst, "rules_unknown", int64(st.Unknown))
+	dst = append(name(dst, "sources"), '[')
+	for i := range st.Sources {
+		s := &st.Sources[i]
+		if i > 0 {
+			dst = append(dst, ',')
+		}
+		dst = text(append(dst, `{"alive":`+strconv.FormatBool(s.Alive)...), "topic", s.Topic)
+		dst = number(dst, "age_s", seconds(s.Age))
+		dst = count(dst, "messages", int64(s.Messages))
+		dst = truth(dst, "skewed", s.Skewed)
+		dst = append(number(dst, "skew_s", seconds(s.Skew)), '}')
+	}
+	dst = append(name(append(dst, ']'), "sessions"), '[')
+	for i, s := range st.Sessions {
+		if i > 0 {
+			dst = append(dst, ',')
+		}
+		dst = text(append(dst, `{"connected":`+strconv.FormatBool(s.Connected)...), "filter", s.Filter)
+		dst = append(dst, '}')
+	}
+	dst = append(name(append(dst, ']'), "counters"), '{')
+	dst = append(dst, `"messages":`...)
+	dst = strconv.AppendUint(dst, st.Messages, 10)
+	dst = count(dst, "samples", int64(st.Samples))
+	dst = count(dst, "scans", int64(st.Scans))
+	dst = count(dst, "scans_skipped", int64(st.Skipped))
+	for r := ingest.ReasonNone + 1; r < ingest.NumReasons; r++ {
+		dst = count(dst, r.String(), int64(st.Counters[r]))
+	}
+	return append(dst, '}')
+}
+
+// runJSON is a run as frames and HTTP show it.
+type runJSON struct {
+	ID      string  `json:"id"`
+	Number  uint64  `json:"number"`
+	Rig     string  `json:"rig"`
+	Engine  string  `json:"engine"`
+	Started string  `json:"started"`
+	Ended   *string `json:"ended"`
+	By      string  `json:"by"`
+}
+
+func rfc3339(ns int64) string { return time.Unix(0, ns).UTC().Format(time.RFC3339Nano) }
+
+func optional(ns int64) *string {
+	if ns == 0 {
+		return nil
+	}
+	s := rfc3339(ns)
+	return &s
+}
+
+func runView(r *monitor.Run) runJSON {
+	return runJSON{ID: r.ID, Number: r.Number, Rig: r.Rig, Engine: r.Engine, Started: rfc3339(r.Started), Ended: optional(r.Ended), By: r.By}
+}
+
+// channelJSON is what hello says of a channel.
+type channelJSON struct {
+	ID           string  `json:"id"`
+	Title        string  `json:"title"`
+	Unit         string  `json:"unit"`
+	Dimension    string  `json:"dimension"`
+	Reference    string  `json:"reference"`
+	Low          float64 `json:"low"`
+	High         float64 `json:"high"`
+	RecordedOnly bool    `json:"recorded_only"`
+	Station      string  `json:"station"`
+}
+
+func channelViews(cfg *pipeline.Config) []channelJSON {
+	out := make([]channelJSON, len(cfg.Compute.Channels))
+	for i := range out {
+		c := &cfg.Compute.Channels[i]
+		out[i] = channelJSON{
+			ID: c.ID, Title: c.Title, Unit: c.Unit.Name, Dimension: c.Unit.Dimension.String(), Reference: referenceName(c.Reference),
+			Low: c.Low, High: c.High, RecordedOnly: c.RecordedOnly, Station: station(&cfg.Compute.Stations, i),
+		}
+	}
+	return out
+}
+
+func referenceName(r calib.Reference) string {
+	switch r {
+	case calib.Absolute:
+		return "absolute"
+	case calib.Gauge:
+		return "gauge"
+	case calib.Differential:
+		return "differential"
+	case calib.ReferenceNone:
+	}
+	return ""
+}
+
+// quantityJSON is what hello says of a quantity.
+type quantityJSON struct {
+	Name  string `json:"name"`
+	Unit  string `json:"unit"`
+	Title string `json:"title"`
+}
+
+func quantityViews() []quantityJSON {
+	out := make([]quantityJSON, monitor.NumQuantities)
+	for q := range monitor.NumQuantities {
+		out[q] = quantityJSON(q.Info())
+	}
+	return out
+}
+
+// hello writes the frame that opens a connection or a stretch of stored frames:
+// all that a display needs before the frames after it make sense.
+func hello(dst []byte, m *pipeline.Machine, s *pipeline.State, build string) []byte {
+	cfg, _ := m.Config()
+	status := m.Status(s)
+	dst = open(dst, "hello", &pipeline.Outcome{Epoch: s.Epoch, N: s.N, T: max(s.Align.Next-cfg.Align.Period, 0)})
+	dst = count(dst, "api", apiVersion)
+	dst = instant(dst, "host_time", s.Host)
+	dst = number(dst, "scan_rate", 1e9/float64(max(cfg.Align.Period, 1)))
+	dst = text(dst, "config_hash", cfg.Hash)
+	dst = text(dst, "build", build)
+	if s.RunActive {
+		dst = member(dst, "run", runView(&s.Run))
+	} else {
+		dst = append(name(dst, "run"), "null"...)
+	}
+	dst = member(dst, "rig", cfg.Rig)
+	dst = member(dst, "channels", channelViews(&cfg))
+	dst = member(dst, "quantities", quantityViews())
+	armed := math.NaN()
+	if a := cfg.Compute.Nozzle.ArmedAboveRPM; a > 0 {
+		armed = a
+	}
+	dst = number(dst, "choke_armed_above_rpm", armed)
+	dst = append(name(dst, "bands"), '[')
+	ledger := m.Ledger(s)
+	for i := range ledger {
+		if i > 0 {
+			dst = append(dst, ',')
+		}
+		dst = append(appendBand(dst, &ledger[i]), '}')
+	}
+	dst = append(dst, ']')
+	alarms := m.Alarms(s)
+	if alarms == nil {
+		alarms = []rules.Alarm{}
+	}
+	dst = member(dst, "alarms", alarms)
+	dst = appendBands(dst, "ledgers", ledger)
+	dst = append(name(dst, "status"), `{"kind":"status"`...)
+	return append(appendStatus(dst, &status), '}', '}')
+}
+
+// member appends a member without closing the object.
+func member(dst []byte, key string, v any) []byte {
+	dst = value(dst, key, v)
+	return dst[:len(dst)-1]
+}
+
+// station names the station that a channel serves, "" when it serves none.
+func station(st *compute.Stations, i int) string {
+	switch {
+	case slices.Contains(st.P7, i):
+		return "p7"
+	case slices.Contains(st.T7, i):
+		return "t7"
+	case slices.Contains(st.EGT, i):
+		return "egt"
+	}
+	for _, s := range []struct {
+		name  string
+		index int
+	}{
+		{"barometer", st.Barometer}, {"exit_plane", st.ExitPlane}, {"inlet_temperature", st.InletT}, {"inlet_pressure", st.InletP},
+		{"humidity", st.Humidity}, {"ambient_temperature", st.AmbientT}, {"speed", st.Speed}, {"fuel_flow", st.FuelFlow},
+		{"bellmouth", st.Bellmouth}, {"thrust", st.Thrust},
+	} {
+		if s.index == i {
+			return s.name
+		}
+	}
+	return ""
+}
+
+// EncodeFrame gives the frame of an outcome as it goes over the websocket; ok is
+// false for an outcome that has none there.
+func EncodeFrame(o *pipeline.Outcome, cfg *pipeline.Config) (body []byte, kind string, ok bool) {
+	return appendFrame(nil, o, cfg)
+}

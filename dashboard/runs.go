@@ -1,0 +1,428 @@
+package dashboard
+
+import (
+	"bufio"
+	"cmp"
+	"compress/gzip"
+	"context"
+	"errors"
+	"fmt"
+	"io"
+	"io/fs"
+	"math"
+	"net/http"
+	"slices"
+	"strconv"
+	"strings"
+	"time"
+
+	"throatwatch/ingest"
+	"throatwatch/ingest/runfile"
+	"throatwatch/monitor"
+	"throatwatch/monitor/archive"
+	"throatwatch/monitor/compute"
+	"throatwatch/rules/pipeline"
+)
+
+const (
+	maxNames  = 64
+	maxPoints = 5000
+	// early is the host time before the start of a stretch at which its replay
+	// begins, ns: a device clock may be ahead of ours by less.
+	early = int64(10e9)
+)
+
+// storedRun is a run as the list shows it.
+type storedRun struct {
+	ID        string   `json:"id"`
+	Rig       string   `json:"rig"`
+	Engine    string   `json:"engine"`
+	Title     string   `json:"title"`
+	By        string   `json:"by"`
+	Started   string   `json:"started"`
+	Ended     *string  `json:"ended"`
+	DurationS *float64 `json:"duration_s"` // null while it goes on
+	State     string   `json:"state"`
+	Keep      bool     `json:"keep"`
+	Notes     string   `json:"notes"`
+	Tags      []string `json:"tags"`
+	SizeBytes int64    `json:"size_bytes"`
+	Alarms    int      `json:"alarms"`
+	Config    string   `json:"config_hash"`
+	Build     string   `json:"build"`
+	Digest    string   `json:"digest"`
+}
+
+func viewRun(r *runfile.Run) storedRun {
+	v := storedRun{
+		ID: r.ID, Rig: r.Rig, Engine: strings.TrimSpace(r.Engine + " " + r.EngineSerial), Title: r.Title, By: r.Operator,
+		Started: rfc3339(r.Started), Ended: optional(r.Ended), State: r.State, Keep: r.Keep, Notes: r.Notes,
+		Tags: append([]string{}, r.Tags...), SizeBytes: r.Size, Alarms: r.Alarms, Config: r.ConfigHash, Build: r.Build, Digest: r.Digest,
+	}
+	if r.State == runfile.StateRunning {
+		v.State = "active"
+	}
+	if r.Ended != 0 {
+		d := seconds(r.Ended - r.Started)
+		v.DurationS = &d
+	}
+	return v
+}
+
+func (s *Server) runs(w http.ResponseWriter, r *http.Request) error {
+	runs, err := s.cfg.Runs.List(r.Context())
+	if err != nil {
+		return fmt.Errorf("runs: %w", err)
+	}
+	slices.SortStableFunc(runs, func(a, b runfile.Run) int { return cmp.Compare(b.Started, a.Started) })
+	list := make([]storedRun, len(runs))
+	for i := range runs {
+		list[i] = viewRun(&runs[i])
+	}
+	return reply(w, http.StatusOK, list)
+}
+
+// open opens the run of the path and gives its line of the list.
+func (s *Server) open(ctx context.Context, id string) (*runfile.File, *runfile.Run, error) {
+	runs, err := s.cfg.Runs.List(ctx)
+	if err != nil {
+		return nil, nil, fmt.Errorf("runs: %w", err)
+	}
+	i := slices.IndexFunc(runs, func(r runfile.Run) bool { return r.ID == id })
+	if i < 0 { // an id becomes a path only if the catalogue has it
+		return nil, nil, notFound("no run %q is stored; GET /api/runs lists them", id)
+	}
+	f, err := s.cfg.Runs.Open(ctx, id)
+	if errors.Is(err, fs.ErrNotExist) || errors.Is(err, runfile.ErrNotRunFile) {
+		return nil, nil, notFound("the file of run %q is gone", id)
+	}
+	if err != nil {
+		return nil, nil, fmt.Errorf("run %s: %w", id, err)
+	}
+	return f, &runs[i], nil
+}
+
+func (s *Server) run(w http.ResponseWriter, r *http.Request) error {
+	f, line, err := s.open(r.Context(), r.PathValue("id"))
+	if err != nil {
+		return err
+	}
+	defer f.Close() //nolint:errcheck // it is only read
+	return reply(w, http.StatusOK, viewRun(line))
+}
+
+// stretch reads from and to of a query: seconds of the run, or RFC 3339. from
+// defaults to the start of the run, to to the end of time.
+func stretch(r *http.Request, run *runfile.Run) (from, to int64, err error) {
+	from, to = run.Started, int64(math.MaxInt64)
+	for _, p := range []struct {
+		name string
+		dst  *int64
+	}{{"from", &from}, {"to", &to}} {
+		text := r.URL.Query().Get(p.name)
+		if text == "" {
+			continue
+		}
+		if t, err := time.Parse(time.RFC3339Nano, text); err == nil {
+			*p.dst = t.UnixNano()
+			continue
+		}
+		sec, err := strconv.ParseFloat(text, 64)
+		if err != nil || !(math.Abs(sec) < 1e8) {
+			return 0, 0, badRequest("%s %q: give seconds of the run, or a time as in %s", p.name, text, time.RFC3339)
+		}
+		*p.dst = run.Started + int64(sec*1e9)
+	}
+	if to <= from {
+		return 0, 0, badRequest("from must be before to")
+	}
+	return from, to, nil
+}
+
+// errEnough ends a replay early.
+var errEnough = errors.New("the stretch is complete")
+
+// messages answers with the frames of a stretch of a stored run: the outcomes
+// from the first operating point at or after from to the one before the first at
+// or after to, made by stepping the records again.
+func (s *Server) messages(w http.ResponseWriter, r *http.Request) error {
+	f, run, err := s.open(r.Context(), r.PathValue("id"))
+	if err != nil {
+		return err
+	}
+	defer f.Close() //nolint:errcheck // it is only read
+	from, to, err := stretch(r, run)
+	if err != nil {
+		return err
+	}
+	ctx := r.Context()
+	seq, err := f.SeqAtHost(ctx, from-early)
+	if err != nil {
+		return fmt.Errorf("messages: %w", err)
+	}
+	m := pipeline.NewMachine(s.cfg.Parse)
+	replay, err := pipeline.OpenReplay(ctx, f, m, seq)
+	if err != nil {
+		return fmt.Errorf("messages: %w", err)
+	}
+	out, done := s.stream(w, r)
+	defer done()
+	began := false
+	var buf []byte
+	err = replay.Run(ctx, 0, func(_ *ingest.Record, outs []pipeline.Outcome) error {
+		cfg, ok := m.Config()
+		if !ok {
+			return nil
+		}
+		for i := range outs {
+			o := &outs[i]
+			if o.Kind == pipeline.OutcomePoint && o.T >= to {
+				return errEnough
+			}
+			if !began {
+				if o.Kind != pipeline.OutcomePoint || o.T < from {
+					continue
+				}
+				began = true
+				buf = append(hello(buf[:0], m, replay.State, s.cfg.Build), '\n')
+				if _, err := out.Write(buf); err != nil {
+					return err
+				}
+			}
+			buf = buf[:0]
+			if o.Kind == pipeline.OutcomeChannels {
+				buf, ok = appendChannels(buf, o, &cfg, allOf(&cfg)), true
+			} else {
+				buf, _, ok = appendFrame(buf, o, &cfg)
+			}
+			if !ok {
+				continue
+			}
+			if _, err := out.Write(append(buf, '\n')); err != nil {
+				return err
+			}
+		}
+		return nil
+	})
+	if err != nil && !errors.Is(err, errEnough) && ctx.Err() == nil {
+		s.cfg.Log.Error("messages", "run", run.ID, "err", err)
+		_, _ = fmt.Fprintf(out, `{"kind":"error","detail":%s}`+"\n", strconv.Quote(err.Error()))
+	}
+	return nil
+}
+
+// stream begins an NDJSON answer, packed if the client takes it.
+func (s *Server) stream(w http.ResponseWriter, r *http.Request) (out io.Writer, done func()) {
+	w.Header().Set("Content-Type", "application/x-ndjson")
+	w.Header().Set("Cache-Control", "no-store")
+	if !strings.Contains(r.Header.Get("Accept-Encoding"), "gzip") {
+		b := bufio.NewWriterSize(w, 64<<10)
+		return b, func() { _ = b.Flush() }
+	}
+	w.Header().Set("Content-Encoding", "gzip")
+	z, err := gzip.NewWriterLevel(w, gzip.BestSpeed)
+	if err != nil {
+		panic("dashboard: gzip level: " + err.Error())
+	}
+	b := bufio.NewWriterSize(z, 64<<10)
+	return b, func() {
+		_ = b.Flush()
+		_ = z.Close()
+	}
+}
+
+// nullable is a float64 that is null in JSON when it is NaN.
+type nullable float64
+
+// MarshalJSON writes null for NaN.
+func (v nullable) MarshalJSON() ([]byte, error) { return float(nil, float64(v)), nil }
+
+func nullables(v []float64) []nullable {
+	out := make([]nullable, len(v))
+	for i := range v {
+		out[i] = nullable(v[i])
+	}
+	return out
+}
+
+// seriesJSON is one name of a series answer: numbers, or transitions of a state.
+type seriesJSON struct {
+	Unit  string     `json:"unit"`
+	T     []float64  `json:"t"` // seconds of the run
+	Min   []nullable `json:"min,omitempty"`
+	Max   []nullable `json:"max,omitempty"`
+	Last  []nullable `json:"last,omitempty"`
+	N     []int      `json:"n,omitempty"`
+	State []string   `json:"state,omitempty"`
+	Cause *string    `json:"cause"` // why there is nothing
+}
+
+// plot gathers one name.
+type plot struct {
+	name  string
+	kind  string // of chunk
+	unit  string
+	state func(byte) string
+	dec   *archive.Decimator
+	out   seriesJSON
+	last  int
+}
+
+// newPlot tells from a name where its column is.
+func newPlot(name string, cfg *pipeline.Config, from, to int64, points int) (*plot, error) {
+	p := &plot{name: name, kind: pipeline.ChunkPoints, last: -1, dec: archive.NewDecimator(from, to, points)}
+	if q, ok := monitor.ParseQuantity(name); ok {
+		p.unit = q.Info().Unit
+		return p, nil
+	}
+	switch name {
+	case "choke_state":
+		p.state = func(b byte) string { return monitor.ChokeState(b).String() }
+		return p, nil
+	case "phase":
+		p.state = func(b byte) string { return monitor.Phase(b).String() }
+		return p, nil
+	case "back_pressure_from":
+		p.state = func(b byte) string { return monitor.Source(b).String() }
+		return p, nil
+	}
+	group, id, _ := strings.Cut(name, ".")
+	i := slices.IndexFunc(cfg.Compute.Channels, func(c compute.Channel) bool { return c.ID == id })
+	if i < 0 || group != "channel" && group != "quality" {
+		return nil, badRequest("name %q: give a quantity, choke_state, phase, back_pressure_from, channel.<id> or quality.<id>", name)
+	}
+	p.kind, p.unit = pipeline.ChunkChannels, cfg.Compute.Channels[i].Unit.Dimension.SI().Name
+	if group == "quality" {
+		p.unit, p.state = "", func(b byte) string { return monitor.Quality(b).String() }
+	}
+	return p, nil
+}
+
+// take adds the rows of a chunk.
+func (p *plot) take(c *archive.Chunk, from, to, started int64) {
+	i := slices.IndexFunc(c.Columns, func(col archive.Column) bool { return col.Name == p.name })
+	if i < 0 {
+		return
+	}
+	if p.state == nil {
+		p.dec.Add(c.Times, c.Columns[i].Float)
+		return
+	}
+	for k, b := range c.Columns[i].Byte {
+		if t := c.Times[k]; t >= from && t < to && int(b) != p.last {
+			p.last = int(b)
+			p.out.T, p.out.State = append(p.out.T, seconds(t-started)), append(p.out.State, p.state(b))
+		}
+	}
+}
+
+func (p *plot) result(started int64) *seriesJSON {
+	out := &p.out
+	out.Unit = p.unit
+	if p.state == nil {
+		s := p.dec.Series()
+		for _, t := range s.T {
+			out.T = append(out.T, seconds(t-started))
+		}
+		out.Min, out.Max, out.Last, out.N = nullables(s.Min), nullables(s.Max), nullables(s.Last), s.N
+	}
+	if len(out.T) == 0 {
+		why := "no rows of it are stored in this stretch"
+		out.Cause, out.T = &why, []float64{}
+	}
+	return out
+}
+
+// series answers with columns of a stored run, thinned without losing a spike.
+func (s *Server) series(w http.ResponseWriter, r *http.Request) error {
+	f, run, err := s.open(r.Context(), r.PathValue("id"))
+	if err != nil {
+		return err
+	}
+	defer f.Close() //nolint:errcheck // it is only read
+	from, to, err := stretch(r, run)
+	if err != nil {
+		return err
+	}
+	ctx := r.Context()
+	end := run.Ended
+	if end == 0 {
+		end = run.Started
+		_ = f.Chunks(ctx, pipeline.ChunkPoints, from, math.MaxInt64, func(c *runfile.Chunk) error {
+			end = max(end, c.LastT)
+			return nil
+		})
+	}
+	to = min(to, end+1)
+	points := 1000
+	if text := r.URL.Query().Get("points"); text != "" {
+		if points, err = strconv.Atoi(text); err != nil || points < 1 || points > maxPoints {
+			return badRequest("points %q: give a number from 1 to %d", text, maxPoints)
+		}
+	}
+	list := strings.Split(r.URL.Query().Get("names"), ",")
+	if list[0] == "" || len(list) > maxNames {
+		return badRequest("names: give 1 to %d names, separated by commas", maxNames)
+	}
+	state, cfg, err := s.newestState(ctx, f)
+	if err != nil {
+		return err
+	}
+	plots := make([]*plot, len(list))
+	for i, name := range list {
+		if plots[i], err = newPlot(name, cfg, from, max(to, from+1), points); err != nil {
+			return err
+		}
+	}
+	codec := archive.NewCodec()
+	for _, kind := range []string{pipeline.ChunkPoints, pipeline.ChunkChannels} {
+		var want []string
+		for _, p := range plots {
+			if p.kind == kind {
+				want = append(want, p.name)
+			}
+		}
+		if len(want) == 0 {
+			continue
+		}
+		var rows archive.Chunk
+		err := f.Chunks(ctx, kind, from, to, func(c *runfile.Chunk) error {
+			if err := codec.Decode(&rows, c.Bytes, want); err != nil {
+				return fmt.Errorf("series: %w", err)
+			}
+			for _, p := range plots {
+				p.take(&rows, from, to, run.Started)
+			}
+			return nil
+		})
+		if err != nil {
+			return err
+		}
+	}
+	out := make(map[string]*seriesJSON, len(plots))
+	for _, p := range plots {
+		out[p.name] = p.result(run.Started)
+	}
+	return reply(w, http.StatusOK, map[string]any{"through": fmt.Sprintf("%d.%d", state.Epoch, state.N), "series": out})
+}
+
+// newestState gives the state of the newest checkpoint, up to which the chunks
+// reach, and its configuration.
+func (s *Server) newestState(ctx context.Context, f *runfile.File) (*pipeline.State, *pipeline.Config, error) {
+	c, err := f.LastCheckpoint(ctx, math.MaxInt64)
+	if errors.Is(err, runfile.ErrNoCheckpoint) {
+		return nil, nil, &problem{http.StatusConflict, "the run has no stored series yet: the first is closed after a minute"}
+	}
+	if err != nil {
+		return nil, nil, fmt.Errorf("series: %w", err)
+	}
+	state, err := pipeline.Decode(c.State)
+	if err != nil {
+		return nil, nil, fmt.Errorf("series: %w", err)
+	}
+	cfg, err := s.cfg.Parse(state.Bundle)
+	if err != nil {
+		return nil, nil, fmt.Errorf("series: %w", err)
+	}
+	return state, &cfg, nil
+}

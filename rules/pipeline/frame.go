@@ -1,0 +1,229 @@
+package pipeline
+
+import (
+	"math"
+	"strings"
+
+	"throatwatch/monitor"
+	"throatwatch/monitor/egt"
+	"throatwatch/rules"
+)
+
+// frame fills the values that rules read. Each name of the environment is
+// resolved once, to a place of the operating point, the scan, the ledger or the
+// state; nothing is looked up by name later.
+type frame struct {
+	rules.Frame
+	scan   []fill // filled from each scan
+	health []fill // filled from the state of the daemon
+	bands  []egt.Band
+	egt    []int
+	rake   []int
+}
+
+// fill writes slot from source; index tells which quantity, channel or band.
+type fill struct {
+	slot   int
+	source source
+	index  int
+}
+
+type source uint8
+
+const (
+	fromQuantity source = iota
+	fromChokeState
+	fromPhase
+	fromBackPressure
+	fromArmed
+	fromMarginal
+	fromLit
+	fromRunActive
+	fromChannel
+	fromQuality
+	fromUsable
+	fromOver
+	fromExceeded
+	fromElapsed
+	fromRemaining
+	fromEGTUsed
+	fromRakeUsed
+	fromEGTLost
+	fromRakeLost
+	fromRecording
+	fromInputPath
+	fromClock
+	fromSources
+	fromSourcesLost
+	fromDataAge
+	fromSkew
+)
+
+var plainSources = map[string]source{
+	"choke_state": fromChokeState, "phase": fromPhase, "back_pressure_from": fromBackPressure,
+	"choke_armed": fromArmed, "choke_marginal": fromMarginal, "lit": fromLit, "run_active": fromRunActive,
+	"egt_probes_used": fromEGTUsed, "rake_probes_used": fromRakeUsed,
+	"egt_probes_lost": fromEGTLost, "rake_probes_lost": fromRakeLost,
+	"health.recording": fromRecording, "health.input_path": fromInputPath, "health.clock": fromClock,
+	"health.sources": fromSources, "sources_lost": fromSourcesLost, "data_age_s": fromDataAge, "clock_skew_s": fromSkew,
+}
+
+var bandSources = map[string]source{
+	"over": fromOver, "exceeded": fromExceeded, "elapsed_s": fromElapsed, "remaining_s": fromRemaining,
+}
+
+// names gives the environment of a rig's rules.
+func names(cfg *Config) []rules.Name {
+	channels := make([]string, len(cfg.Compute.Channels))
+	for i := range channels {
+		channels[i] = cfg.Compute.Channels[i].ID
+	}
+	bands := make([]string, len(cfg.Compute.EGT.Bands))
+	for i := range bands {
+		bands[i] = cfg.Compute.EGT.Bands[i].Name
+	}
+	return rules.StandardNames(channels, bands)
+}
+
+func newFrame(cfg *Config, names []rules.Name) frame {
+	f := frame{Frame: rules.NewFrame(names), egt: cfg.Compute.Stations.EGT, rake: cfg.Compute.Stations.P7, bands: cfg.Compute.EGT.Bands}
+	channel := map[string]int{}
+	for i := range cfg.Compute.Channels {
+		channel[cfg.Compute.Channels[i].ID] = i
+	}
+	band := map[string]int{}
+	for i := range cfg.Compute.EGT.Bands {
+		band[cfg.Compute.EGT.Bands[i].Name] = i
+	}
+	for slot, n := range names {
+		item := fill{slot: slot}
+		if q, ok := monitor.ParseQuantity(n.Name); ok {
+			item.source, item.index = fromQuantity, int(q)
+			f.scan = append(f.scan, item)
+			continue
+		}
+		if src, ok := plainSources[n.Name]; ok {
+			item.source = src
+			if src >= fromRecording || src == fromRunActive {
+				f.health = append(f.health, item)
+			} else {
+				f.scan = append(f.scan, item)
+			}
+			continue
+		}
+		head, rest, _ := strings.Cut(n.Name, ".")
+		switch head {
+		case "channel":
+			item.source, item.index = fromChannel, channel[rest]
+		case "quality":
+			item.source, item.index = fromQuality, channel[rest]
+		case "usable":
+			item.source, item.index = fromUsable, channel[rest]
+		case "egt":
+			name, field, _ := strings.Cut(rest, ".")
+			src, ok := bandSources[field]
+			if !ok {
+				panic("pipeline: nothing fills the name " + n.Name)
+			}
+			item.source, item.index = src, band[name]
+		default:
+			panic("pipeline: nothing fills the name " + n.Name)
+		}
+		f.scan = append(f.scan, item)
+	}
+	return f
+}
+
+// fill sets every name from a scan, its operating point and the state.
+func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
+	f.fillHealth(s)
+	for _, it := range f.scan {
+		switch it.source {
+		case fromQuantity:
+			f.Numbers[it.slot] = p.V[it.index]
+		case fromChannel:
+			f.Numbers[it.slot] = scan.Value[it.index]
+		case fromQuality:
+			f.Texts[it.slot] = scan.Quality[it.index].String()
+		case fromUsable:
+			f.Bools[it.slot] = rules.TriOf(scan.Quality[it.index].Usable())
+		case fromChokeState:
+			f.Texts[it.slot] = known(p.Choke != monitor.ChokeUnknown, p.Choke.String())
+		case fromPhase:
+			f.Texts[it.slot] = known(p.Phase != monitor.PhaseUnknown, p.Phase.String())
+		case fromBackPressure:
+			f.Texts[it.slot] = p.BackFrom.String()
+		case fromArmed:
+			f.Bools[it.slot] = rules.TriOf(p.ChokeArmed)
+		case fromMarginal:
+			f.Bools[it.slot] = rules.TriOf(p.ChokeMarginal)
+		case fromLit:
+			f.Bools[it.slot] = rules.TriOf(p.Lit)
+		case fromOver:
+			f.Bools[it.slot] = rules.TriOf(s.Compute.EGT.Bands[it.index].Over)
+		case fromExceeded:
+			f.Bools[it.slot] = rules.TriOf(s.Compute.EGT.Bands[it.index].Exceeded)
+		case fromElapsed:
+			f.Numbers[it.slot] = float64(s.Compute.EGT.Bands[it.index].Elapsed) / 1e9
+		case fromRemaining:
+			f.Numbers[it.slot] = float64(s.Compute.EGT.Bands[it.index].Remaining(&f.bands[it.index])) / 1e9
+		case fromEGTUsed:
+			f.Numbers[it.slot] = float64(p.EGTProbesUsed)
+		case fromRakeUsed:
+			f.Numbers[it.slot] = float64(p.RakeProbesUsed)
+		case fromEGTLost:
+			f.Numbers[it.slot] = float64(len(f.egt) - int(p.EGTProbesUsed))
+		case fromRakeLost:
+			f.Numbers[it.slot] = float64(len(f.rake) - int(p.RakeProbesUsed))
+		case fromRunActive, fromRecording, fromInputPath, fromClock, fromSources, fromSourcesLost, fromDataAge, fromSkew:
+		}
+	}
+}
+
+// fillHealth sets the names that say how the daemon itself does.
+func (f *frame) fillHealth(s *State) {
+	lost, skew := 0, int64(0)
+	for i := range s.Align.Sources {
+		src := &s.Align.Sources[i]
+		age := s.Host - src.Host
+		if age > silent && age <= forgotten {
+			lost++
+		}
+		if src.Skewed && age <= silent {
+			skew = src.Skew
+		}
+	}
+	for _, it := range f.health {
+		switch it.source {
+		case fromRunActive:
+			f.Bools[it.slot] = rules.TriOf(s.RunActive)
+		case fromRecording:
+			f.Bools[it.slot] = rules.TriOf(s.Health.NotRecordingSince == 0)
+		case fromInputPath:
+			f.Bools[it.slot] = rules.TriOf(!s.Health.InputPathDeaf)
+		case fromClock:
+			f.Bools[it.slot] = rules.TriOf(skew == 0)
+		case fromSources:
+			f.Bools[it.slot] = rules.TriOf(lost == 0)
+		case fromSourcesLost:
+			f.Numbers[it.slot] = float64(lost)
+		case fromSkew:
+			f.Numbers[it.slot] = float64(skew) / 1e9
+		case fromDataAge:
+			f.Numbers[it.slot] = math.NaN()
+			if s.Align.MaxEvent != 0 {
+				f.Numbers[it.slot] = float64(max(s.Host-s.Align.MaxEvent, 0)) / 1e9
+			}
+		case fromQuantity, fromChokeState, fromPhase, fromBackPressure, fromArmed, fromMarginal, fromLit, fromChannel,
+			fromQuality, fromUsable, fromOver, fromExceeded, fromElapsed, fromRemaining, fromEGTUsed, fromRakeUsed,
+			fromEGTLost, fromRakeLost:
+		}
+	}
+}
+
+func known(ok bool, text string) string {
+	if ok {
+		return text
+	}
+	return ""
+}

@@ -1,0 +1,124 @@
+package pipeline
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"math"
+
+	"throatwatch/ingest"
+	"throatwatch/ingest/runfile"
+)
+
+// Replay steps the records of a run file again.
+type Replay struct {
+	Machine *Machine
+	State   *State
+	Digest  *Digest
+	file    *runfile.File
+}
+
+// errFirst ends the reading at the first record.
+var errFirst = errors.New("first record seen")
+
+// OpenReplay prepares a replay from the newest checkpoint at or before the
+// record seq; 0 is the beginning of the file. Without such a checkpoint it
+// begins with the state before the first record ever.
+func OpenReplay(ctx context.Context, f *runfile.File, m *Machine, seq uint64) (*Replay, error) {
+	if seq == 0 {
+		err := f.Records(ctx, 0, 0, func(r *ingest.Record) error {
+			seq = r.Seq - 1
+			return errFirst
+		})
+		if err != nil && !errors.Is(err, errFirst) {
+			return nil, fmt.Errorf("replay: %w", err)
+		}
+	}
+	p := &Replay{Machine: m, State: &State{}, Digest: NewDigest(), file: f}
+	c, err := f.LastCheckpoint(ctx, seq)
+	if errors.Is(err, runfile.ErrNoCheckpoint) {
+		return p, nil
+	}
+	if err != nil {
+		return nil, fmt.Errorf("replay: %w", err)
+	}
+	if err := p.load(ctx, &c); err != nil {
+		return nil, fmt.Errorf("replay: checkpoint of record %d: %w", c.Seq, err)
+	}
+	return p, nil
+}
+
+// load makes the state that of a checkpoint, with the window of recognised
+// copies rebuilt from the records before it.
+func (p *Replay) load(ctx context.Context, c *runfile.Checkpoint) error {
+	state, err := Decode(c.State)
+	if err != nil {
+		return err
+	}
+	if !c.Full {
+		if err := rebuildWindow(ctx, p.file, state, c); err != nil {
+			return err
+		}
+	}
+	if len(c.Digest) > 0 {
+		if err := p.Digest.UnmarshalBinary(c.Digest); err != nil {
+			return err
+		}
+	}
+	p.State = state
+	return p.Machine.Restore(state)
+}
+
+// rebuildWindow takes the hashes of the full checkpoint before c and those of
+// the messages between the two.
+func rebuildWindow(ctx context.Context, f *runfile.File, state *State, c *runfile.Checkpoint) error {
+	from := uint64(0)
+	full, err := f.CheckpointAtHost(ctx, c.Host, true)
+	switch {
+	case err == nil:
+		whole, err := Decode(full.State)
+		if err != nil {
+			return err
+		}
+		state.window = whole.window
+		from = full.Seq + 1
+	case !errors.Is(err, runfile.ErrNoCheckpoint):
+		return err
+	}
+	return f.Records(ctx, from, c.Seq, func(r *ingest.Record) error {
+		if r.Kind == ingest.KindMessage {
+			state.window.Push(r)
+		}
+		return nil
+	})
+}
+
+// Run steps the records up to the record upto, 0 for all there are, and calls fn
+// after each. Behind a gap it goes on from the checkpoint that was stored with
+// it. An error of fn ends the replay and is returned as it is; damage and holes
+// are errors of the run file, after all records before them.
+func (p *Replay) Run(ctx context.Context, upto uint64, fn func(r *ingest.Record, outs []Outcome) error) error {
+	if upto == 0 {
+		upto = math.MaxInt64
+	}
+	return p.file.Records(ctx, p.State.Seq+1, upto, func(r *ingest.Record) error {
+		if r.Kind == ingest.KindGap {
+			c, err := p.file.LastCheckpoint(ctx, r.Seq)
+			if err != nil {
+				return fmt.Errorf("replay: gap before record %d: %w", r.Seq, err)
+			}
+			if c.Seq != r.Seq {
+				return fmt.Errorf("replay: gap before record %d has no checkpoint: %w", r.Seq, runfile.ErrNoCheckpoint)
+			}
+			if err := p.load(ctx, &c); err != nil {
+				return fmt.Errorf("replay: gap before record %d: %w", r.Seq, err)
+			}
+			return fn(r, nil)
+		}
+		outs := p.Machine.Step(p.State, r)
+		for i := range outs {
+			p.Digest.Add(&outs[i])
+		}
+		return fn(r, outs)
+	})
+}

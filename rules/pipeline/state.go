@@ -1,0 +1,71 @@
+package pipeline
+
+import (
+	"bytes"
+	"encoding/binary"
+	"encoding/gob"
+	"fmt"
+
+	"throatwatch/monitor"
+	"throatwatch/monitor/align"
+	"throatwatch/monitor/compute"
+	"throatwatch/rules"
+)
+
+// State is all that a step depends on besides its record. It is plain data: no
+// maps, pointers or functions, so that a checkpoint of it is complete.
+type State struct {
+	Epoch     uint64 // boots
+	N         uint64 // outcomes
+	Seq       uint64 // number of the last record
+	Host      int64  // host time of the last record, ns UTC
+	Bundle    []byte // text of the configuration in force
+	Second    int64  // host second of the last status
+	HostJudge int64  // host time at which rules on the daemon itself were last judged
+	Align     align.State
+	Compute   compute.State
+	Rules     rules.State
+	Health    Health
+	Run       monitor.Run
+	RunActive bool
+	Runs      uint64   // runs ever
+	OffSince  int64    // event time since when the phase is off, 0 = it is not
+	Armed     bool     // an engine start begins a run; cleared when a run is ended by hand
+	Done      []string // ids of the last requests, so that a repeated one is done once
+	window    Window
+}
+
+const requestsKept = 64
+
+// Encode gives the state as bytes. A full checkpoint carries the hashes by which
+// copies of messages are recognised; another leaves them to the records before.
+func (s *State) Encode(full bool) ([]byte, error) {
+	var b bytes.Buffer
+	b.Write(make([]byte, 8))
+	if err := gob.NewEncoder(&b).Encode(s); err != nil {
+		return nil, fmt.Errorf("pipeline: state: %w", err)
+	}
+	out := b.Bytes()
+	binary.LittleEndian.PutUint64(out, uint64(len(out)-8))
+	if full {
+		out = s.window.append(out)
+	}
+	return out, nil
+}
+
+// Decode is the inverse of Encode.
+func Decode(b []byte) (*State, error) {
+	if len(b) < 8 {
+		return nil, fmt.Errorf("pipeline: state of %d bytes is cut", len(b))
+	}
+	size := binary.LittleEndian.Uint64(b)
+	if size > uint64(len(b)-8) {
+		return nil, fmt.Errorf("pipeline: state of %d bytes is cut, %d are due", len(b)-8, size)
+	}
+	s := &State{}
+	if err := gob.NewDecoder(bytes.NewReader(b[8 : 8+size])).Decode(s); err != nil {
+		return nil, fmt.Errorf("pipeline: state: %w", err)
+	}
+	s.window.load(b[8+size:])
+	return s, nil
+}

@@ -1,0 +1,502 @@
+// Package pipeline steps records through alignment, computation and rules: one
+// function of state, record and configuration, run live before a record is
+// stored and again over stored records, with the same outcomes bit for bit.
+package pipeline
+
+import (
+	"encoding/json"
+	"errors"
+	"fmt"
+	"slices"
+	"time"
+
+	"throatwatch/ingest"
+	"throatwatch/monitor"
+	"throatwatch/monitor/align"
+	"throatwatch/monitor/compute"
+	"throatwatch/rules"
+)
+
+const (
+	second = int64(time.Second)
+	// past is how far behind host time a transition is listed as past.
+	past = 5 * second
+	// hostJudge is the period in which rules on the daemon itself are judged.
+	hostJudge = 100 * int64(time.Millisecond)
+	// silent is the host time after which a source counts as lost.
+	silent = 2 * second
+	// forgotten is the host time after which a silent source is no longer listed.
+	forgotten = 3600 * second
+)
+
+// Boot is the payload of a boot record.
+type Boot struct {
+	Epoch  uint64 `json:"epoch"`
+	Build  string `json:"build"`
+	GOARCH string `json:"goarch"`
+}
+
+// HealthChange is the payload of a health record.
+type HealthChange struct {
+	Part string `json:"part"` // PartRecording or PartInputPath
+	OK   bool   `json:"ok"`
+	Why  string `json:"why"`
+}
+
+// The parts of the daemon that a health record is about.
+const (
+	PartRecording = "recording"
+	PartInputPath = "input_path"
+)
+
+// ClockStep is the payload of a clock record.
+type ClockStep struct {
+	By int64 `json:"by_ns"`
+}
+
+// Action is the payload of an action record: what an operator did.
+type Action struct {
+	Do        string  `json:"do"` // one of the Do constants
+	Alarm     string  `json:"alarm,omitempty"`
+	Revision  uint64  `json:"revision,omitempty"`
+	Reason    string  `json:"reason,omitempty"`
+	Text      string  `json:"text,omitempty"`
+	Seconds   float64 `json:"seconds,omitempty"`
+	By        string  `json:"by"`
+	Role      string  `json:"role"`
+	RequestID string  `json:"request_id"`
+}
+
+// What an operator can do. The alarm actions are those of package rules.
+const (
+	DoMark     = "mark"
+	DoRunStart = "run_start"
+	DoRunEnd   = "run_end"
+)
+
+// Reply says what became of an action.
+type Reply struct {
+	Epoch, N uint64 // the outcome that it brought about
+	Err      error
+}
+
+// Errors of actions.
+var (
+	ErrNoRun     = errors.New("no run is on")
+	ErrRunActive = errors.New("a run is on already")
+	ErrUnknown   = errors.New("no such action")
+	ErrNoData    = errors.New("no scan yet: there is no event time to put it at")
+)
+
+// Machine steps records. It belongs to one goroutine.
+type Machine struct {
+	parse func(bundle []byte) (Config, error)
+	prog  *program
+	outs  []Outcome
+	alarm []rules.Alarm
+	text  string
+	point monitor.OperatingPoint
+}
+
+// program is a compiled configuration with its buffers.
+type program struct {
+	cfg     Config
+	align   *align.Aligner
+	compute *compute.Computer
+	rules   *rules.Set
+	frame   frame
+	ledger  []Allowance
+	status  Status
+	mark    monitor.Mark
+	run     monitor.Run
+	action  ActionResult
+}
+
+// NewMachine gives a machine that understands configurations by parse, which
+// must be a function of the bundle alone.
+func NewMachine(parse func(bundle []byte) (Config, error)) *Machine {
+	return &Machine{parse: parse}
+}
+
+// Restore prepares the machine for a state that was decoded.
+func (m *Machine) Restore(s *State) error {
+	if len(s.Bundle) == 0 {
+		m.prog = nil
+		return nil
+	}
+	return m.load(s.Bundle)
+}
+
+// Config gives the configuration in force; ok is false before the first.
+func (m *Machine) Config() (cfg Config, ok bool) {
+	if m.prog == nil {
+		return Config{}, false
+	}
+	return m.prog.cfg, true
+}
+
+func (m *Machine) load(bundle []byte) error {
+	cfg, err := m.parse(bundle)
+	if err != nil {
+		return err
+	}
+	for i := range cfg.Align.Channels {
+		cfg.Align.Channels[i].Raw = cfg.Compute.Channels[i].Raw
+	}
+	comp, err := compute.New(cfg.Compute)
+	if err != nil {
+		return fmt.Errorf("pipeline: %w", err)
+	}
+	names := names(&cfg)
+	set, faults := rules.Compile(cfg.Rules, names)
+	if len(faults) > 0 {
+		return fmt.Errorf("pipeline: rule %q: %s", cfg.Rules[faults[0].Rule].Name, faults[0].Message)
+	}
+	m.prog = &program{
+		cfg: cfg, align: align.New(cfg.Align), compute: comp, rules: set, frame: newFrame(&cfg, names),
+		ledger: make([]Allowance, len(cfg.Compute.EGT.Bands)),
+	}
+	return nil
+}
+
+// Step steps one record: record numbers must follow each other without a hole,
+// except over a gap record. What it gives is valid until the next step.
+func (m *Machine) Step(s *State, r *ingest.Record) []Outcome {
+	m.outs, m.alarm = m.outs[:0], m.alarm[:0]
+	if r.Seq != s.Seq+1 && s.Seq != 0 && r.Kind != ingest.KindGap {
+		panic(fmt.Sprintf("pipeline: record %d follows record %d", r.Seq, s.Seq))
+	}
+	s.Seq, s.Host = r.Seq, r.Host
+	switch r.Kind {
+	case ingest.KindBoot:
+		m.boot(s, r)
+	case ingest.KindConfig:
+		m.config(s, r)
+	case ingest.KindMessage:
+		m.message(s, r)
+	case ingest.KindAction:
+		m.act(s, r)
+	case ingest.KindConnect, ingest.KindDisconnect:
+		if m.prog != nil {
+			m.prog.align.Connect(&s.Align, r.Topic, r.Kind == ingest.KindConnect, r.Host)
+		}
+	case ingest.KindHealth:
+		m.health(s, r)
+	case ingest.KindClock:
+		var c ClockStep
+		if json.Unmarshal(r.Payload, &c) == nil {
+			s.Health.ClockStepped += c.By
+		}
+	case ingest.KindTick, ingest.KindGap, ingest.KindInvalid:
+	}
+	if m.prog == nil {
+		return m.outs
+	}
+	for {
+		scan := m.prog.align.Scan(&s.Align, r.Host)
+		if scan == nil {
+			break
+		}
+		m.scan(s, scan)
+	}
+	if r.Host-s.HostJudge >= hostJudge {
+		s.HostJudge = r.Host
+		m.judgeSelf(s)
+	}
+	if now := r.Host / second; now > s.Second {
+		s.Second = now
+		m.status(s)
+	}
+	return m.outs
+}
+
+// emit numbers an outcome and appends it.
+func (m *Machine) emit(s *State, o Outcome) {
+	s.N++
+	o.N, o.Epoch = s.N, s.Epoch
+	o.Past = s.Host-o.T > past
+	m.outs = append(m.outs, o)
+}
+
+func (m *Machine) boot(s *State, r *ingest.Record) {
+	var b Boot
+	if json.Unmarshal(r.Payload, &b) == nil && b.Epoch > s.Epoch {
+		s.Epoch = b.Epoch
+	} else {
+		s.Epoch++
+	}
+	s.Health = Health{}
+	if m.prog != nil {
+		m.prog.align.Boot(&s.Align, r.Host)
+	}
+}
+
+func (m *Machine) config(s *State, r *ingest.Record) {
+	old := m.prog
+	if err := m.load(r.Payload); err != nil {
+		m.prog = old // a configuration that does not load leaves the old one in force
+		m.emit(s, Outcome{Kind: OutcomeConfig, T: r.Host, Text: err.Error()})
+		return
+	}
+	p := m.prog
+	var from []align.Channel
+	var fromComp []compute.Channel
+	if old != nil {
+		from, fromComp = old.cfg.Align.Channels, old.cfg.Compute.Channels
+	}
+	if old == nil || old.cfg.Hash != p.cfg.Hash {
+		p.align.Reset(&s.Align, from)
+		p.compute.Reset(&s.Compute, fromComp)
+		p.rules.Fit(&s.Rules)
+	}
+	if old == nil {
+		p.align.Boot(&s.Align, r.Host)
+		s.Armed = true
+	}
+	s.Bundle = append(s.Bundle[:0], r.Payload...)
+	m.emit(s, Outcome{Kind: OutcomeConfig, T: r.Host, Text: p.cfg.Hash, OK: true})
+}
+
+func (m *Machine) message(s *State, r *ingest.Record) {
+	seen := s.window.Push(r)
+	if m.prog == nil {
+		return
+	}
+	res := m.prog.align.Message(&s.Align, r, seen)
+	if res != nil && res.Refused && res.Fault != nil {
+		m.emit(s, Outcome{Kind: OutcomeQuarantine, T: r.Host, Text: r.Topic + ": " + res.Fault.Error()})
+	}
+}
+
+func (m *Machine) health(s *State, r *ingest.Record) {
+	var h HealthChange
+	if json.Unmarshal(r.Payload, &h) != nil {
+		return
+	}
+	switch {
+	case h.Part == PartInputPath:
+		s.Health.InputPathDeaf = !h.OK
+	case h.Part == PartRecording && h.OK:
+		s.Health.NotRecordingSince = 0
+	case h.Part == PartRecording && s.Health.NotRecordingSince == 0:
+		s.Health.NotRecordingSince = r.Host
+	}
+}
+
+// scan computes and judges one scan.
+func (m *Machine) scan(s *State, scan *monitor.Scan) {
+	p := m.prog
+	point := &m.point
+	changed := p.compute.Step(&s.Compute, scan, point)
+	m.emit(s, Outcome{Kind: OutcomePoint, T: scan.T, Point: point, Scan: scan})
+	m.emit(s, Outcome{Kind: OutcomeChannels, T: scan.T, Point: point, Scan: scan})
+	m.runs(s, point)
+	if changed || scan.N%uint64(max(1, second/p.cfg.Align.Period)) == 0 {
+		m.ledger(s, scan.T)
+	}
+	p.frame.fill(s, scan, point)
+	m.judge(s, scan.T, point.Phase, rules.OfData)
+}
+
+// judgeSelf judges the rules on the daemon itself, by host time: they must speak
+// when no scan comes.
+func (m *Machine) judgeSelf(s *State) {
+	m.prog.frame.fillHealth(s)
+	m.judge(s, s.Host, monitor.PhaseUnknown, rules.OfDaemon)
+}
+
+func (m *Machine) judge(s *State, t int64, phase monitor.Phase, d rules.Domain) {
+	run := "-"
+	if s.RunActive {
+		run = s.Run.ID
+	}
+	first := len(m.alarm)
+	m.alarm = m.prog.rules.Step(&s.Rules, t, run, phase, d, &m.prog.frame.Frame, m.alarm)
+	m.alarms(s, t, first)
+}
+
+// alarms emits the alarms from index first on.
+func (m *Machine) alarms(s *State, t int64, first int) {
+	for i := first; i < len(m.alarm); i++ {
+		m.alarm[i].Past = s.Host-t > past
+		alarm := m.alarm[i]
+		m.emit(s, Outcome{Kind: OutcomeAlarm, T: t, Alarm: &alarm})
+	}
+}
+
+// runs begins and ends runs by what the engine does.
+func (m *Machine) runs(s *State, p *monitor.OperatingPoint) {
+	switch p.Phase {
+	case monitor.Cranking, monitor.Lighting, monitor.Idle, monitor.Accelerating, monitor.Steady, monitor.Decelerating:
+		s.OffSince = 0
+		if !s.RunActive && s.Armed {
+			m.startRun(s, p.T, "engine")
+		}
+	case monitor.Off:
+		if s.OffSince == 0 {
+			s.OffSince = p.T
+		}
+		s.Armed = true
+		if s.RunActive && s.Run.By == "engine" && p.T-s.OffSince >= m.prog.cfg.Run.EndAfter {
+			m.endRun(s, p.T)
+		}
+	case monitor.PhaseUnknown, monitor.Rundown, monitor.Cooling, monitor.NumPhases:
+		s.OffSince = 0
+	}
+}
+
+func (m *Machine) startRun(s *State, t int64, by string) {
+	rig := &m.prog.cfg.Rig
+	s.Runs++
+	s.RunActive = true
+	s.Run = monitor.Run{
+		ID:     rig.ID + "-" + time.Unix(0, t).UTC().Format("20060102T150405Z"),
+		Number: s.Runs, Rig: rig.ID, Engine: rig.EngineModel + " " + rig.EngineSerial, Started: t, By: by,
+	}
+	s.Compute.EGT.Reset()
+	m.prog.run = s.Run
+	m.emit(s, Outcome{Kind: OutcomeRun, T: t, Run: &m.prog.run, Event: "started"})
+}
+
+func (m *Machine) endRun(s *State, t int64) {
+	s.RunActive = false
+	s.Run.Ended = t
+	m.prog.run = s.Run
+	m.emit(s, Outcome{Kind: OutcomeRun, T: t, Run: &m.prog.run, Event: "ended"})
+}
+
+func (m *Machine) ledger(s *State, t int64) {
+	p := m.prog
+	for i := range p.ledger {
+		p.ledger[i] = Allowance{Band: p.cfg.Compute.EGT.Bands[i], BandState: s.Compute.EGT.Bands[i]}
+	}
+	m.emit(s, Outcome{Kind: OutcomeLedger, T: t, Ledger: p.ledger})
+}
+
+func (m *Machine) status(s *State) {
+	m.fillStatus(s, &m.prog.status)
+	m.emit(s, Outcome{Kind: OutcomeStatus, T: s.Host, Status: &m.prog.status})
+}
+
+// act does what an operator asked for, once per request.
+func (m *Machine) act(s *State, r *ingest.Record) {
+	var a Action
+	if err := json.Unmarshal(r.Payload, &a); err != nil {
+		return
+	}
+	if m.prog == nil {
+		return
+	}
+	res := &m.prog.action
+	*res = ActionResult{RequestID: a.RequestID}
+	if a.RequestID == "" || !slices.Contains(s.Done, a.RequestID) {
+		res.Err = m.do(s, &a)
+		if res.Err == nil && a.RequestID != "" {
+			if len(s.Done) == requestsKept {
+				s.Done = slices.Delete(s.Done, 0, 1)
+			}
+			s.Done = append(s.Done, a.RequestID)
+		}
+	}
+	m.emit(s, Outcome{Kind: OutcomeAction, T: r.Host, Action: res})
+}
+
+func (m *Machine) do(s *State, a *Action) error {
+	t := s.Align.Next - m.prog.cfg.Align.Period
+	if s.Align.Next == 0 {
+		t = s.Host
+	}
+	switch a.Do {
+	case DoMark:
+		m.prog.mark = monitor.Mark{T: t, Text: a.Text, By: a.By}
+		m.emit(s, Outcome{Kind: OutcomeMark, T: t, Mark: &m.prog.mark})
+	case DoRunStart:
+		if s.RunActive {
+			return fmt.Errorf("start a run: %w: %s", ErrRunActive, s.Run.ID)
+		}
+		if s.Align.Next == 0 {
+			return fmt.Errorf("start a run: %w", ErrNoData)
+		}
+		m.startRun(s, t, a.By)
+	case DoRunEnd:
+		if !s.RunActive {
+			return fmt.Errorf("end the run: %w", ErrNoRun)
+		}
+		s.Armed = false
+		m.endRun(s, t)
+	default:
+		alarm, err := m.prog.rules.Act(&s.Rules, t, rules.Action{
+			Do: a.Do, Alarm: a.Alarm, Revision: a.Revision, Reason: a.Reason, By: a.By, Role: a.Role,
+			For: int64(a.Seconds * 1e9),
+		})
+		if err != nil {
+			return fmt.Errorf("%s %s: %w", a.Do, a.Alarm, err)
+		}
+		first := len(m.alarm)
+		m.alarm = append(m.alarm, alarm)
+		m.alarms(s, t, first)
+	}
+	return nil
+}
+
+// Status gives the state of the data path as of the last record.
+func (m *Machine) Status(s *State) Status {
+	var st Status
+	if m.prog != nil {
+		m.fillStatus(s, &st)
+	}
+	return st
+}
+
+// Alarms gives every alarm that is not normal, by rule.
+func (m *Machine) Alarms(s *State) []rules.Alarm {
+	if m.prog == nil {
+		return nil
+	}
+	return m.prog.rules.Standing(&s.Rules, nil)
+}
+
+// Ledger gives the EGT ledger as of the last record.
+func (m *Machine) Ledger(s *State) []Allowance {
+	if m.prog == nil {
+		return nil
+	}
+	out := make([]Allowance, 0, len(s.Compute.EGT.Bands))
+	for i, b := range s.Compute.EGT.Bands {
+		out = append(out, Allowance{Band: m.prog.cfg.Compute.EGT.Bands[i], BandState: b})
+	}
+	return out
+}
+
+func (m *Machine) fillStatus(s *State, st *Status) {
+	a := &s.Align
+	*st = Status{
+		Host: s.Host, DataAge: -1, CatchingUp: a.CatchingUp(s.Host), Health: s.Health,
+		Sources: st.Sources[:0], Sessions: st.Sessions[:0],
+		Messages: a.Messages, Samples: a.Samples, Scans: a.N, Skipped: a.Skipped, Counters: a.Counters,
+		RunActive: s.RunActive, Unknown: m.prog.rules.Unknown(&s.Rules),
+	}
+	if a.MaxEvent != 0 {
+		st.DataAge = max(s.Host-a.MaxEvent, 0)
+	}
+	for i := range a.Sources {
+		src := &a.Sources[i]
+		if s.Host-src.Host > forgotten {
+			continue
+		}
+		ss := SourceStatus{
+			Topic: src.Topic, Age: s.Host - src.Host, Messages: src.Messages, Skew: src.Skew,
+			Skewed: src.Skewed, Alive: s.Host-src.Host <= silent,
+		}
+		if src.Skewed {
+			st.Skew = ss.Skew
+		}
+		if !ss.Alive {
+			st.Lost++
+		}
+		st.Sources = append(st.Sources, ss)
+	}
+	for _, se := range a.Sessions {
+		st.Sessions = append(st.Sessions, SessionStatus(se))
+	}
+}
