@@ -38,14 +38,17 @@ func rehearseCommand(ctx context.Context, args []string, stdout, stderr io.Write
 		brokerURL = flags.String("broker", rehearseBroker, "broker to publish to, mqtt://host:port or mqtts://host:port")
 		length    = flags.Duration("for", 0, "stop after this time; 0 is at the end of the test")
 	)
+	tell := func(format string, args ...any) {
+		_, _ = fmt.Fprintf(stderr, format+"\n", args...) // there is nowhere left to tell a fault
+	}
 	flags.Usage = func() {
-		fmt.Fprintf(stderr, "throatwatch rehearse RIG.yaml [flags]\n\nA simulated engine on the rig of the rig file publishes a whole test over MQTT.\n\n%s\n%s", flags.FlagUsages(), rehearseFaults())
+		tell("throatwatch rehearse RIG.yaml [flags]\n\nA simulated engine on the rig of the rig file publishes a whole test over MQTT.\n\n%s\n%s", flags.FlagUsages(), rehearseFaults())
 	}
 	if err := flags.Parse(args); err != nil {
 		if errors.Is(err, pflag.ErrHelp) {
 			return 0
 		}
-		fmt.Fprintf(stderr, "rehearse: %v\n", err)
+		tell("rehearse: %v", err)
 		return 2
 	}
 	options, err := play.options()
@@ -57,19 +60,19 @@ func rehearseCommand(ctx context.Context, args []string, stdout, stderr io.Write
 		err = fmt.Errorf("--for %v: give a time above 0", *length)
 	}
 	if err != nil {
-		fmt.Fprintf(stderr, "rehearse: %v\n", err)
+		tell("rehearse: %v", err)
 		return 2
 	}
 	_, cfg, faults := config.Load(flags.Arg(0))
 	if len(faults) > 0 {
 		for _, f := range faults {
-			fmt.Fprintln(stderr, f)
+			tell("%v", f)
 		}
-		fmt.Fprintf(stderr, "rehearse: %d faults in %s\n", len(faults), flags.Arg(0))
+		tell("rehearse: %d faults in %s", len(faults), flags.Arg(0))
 		return 1
 	}
 	if err := rehearseLive(ctx, cfg, options, *brokerURL, *length, stdout, stderr); err != nil {
-		fmt.Fprintf(stderr, "rehearse: %v\n", err)
+		tell("rehearse: %v", err)
 		return 1
 	}
 	return 0
@@ -158,7 +161,7 @@ func rehearseLive(ctx context.Context, cfg pipeline.Config, o rehearsal.Options,
 	if err != nil {
 		return err
 	}
-	fmt.Fprintf(stdout, "rehearsing on %s: %s test of %v, seed %d\n", cfg.Rig.ID, o.Scenario, rig.Length().Round(time.Second), o.Seed)
+	_, _ = fmt.Fprintf(stdout, "rehearsing on %s: %s test of %v, seed %d\n", cfg.Rig.ID, o.Scenario, rig.Length().Round(time.Second), o.Seed)
 	progress := newRehearseProgress(stderr)
 	published := 0
 	err = rehearsal.Run(ctx, rig, func(ctx context.Context, due int64) error {
@@ -182,7 +185,7 @@ func rehearseLive(ctx context.Context, cfg pipeline.Config, o rehearsal.Options,
 	drain, cancel := context.WithTimeout(running, drainBroker)
 	defer cancel()
 	err = publisher.Flush(drain)
-	fmt.Fprintf(stdout, "%d messages published, %d acknowledged by the broker\n", published, publisher.Stats().Acknowledged)
+	_, _ = fmt.Fprintf(stdout, "%d messages published, %d acknowledged by the broker\n", published, publisher.Stats().Acknowledged)
 	if err != nil {
 		return fmt.Errorf("broker %s has not acknowledged all messages within %v: %s", url, drainBroker, publisher.Stats().LastFailure)
 	}
@@ -222,7 +225,8 @@ func newRehearseProgress(w io.Writer) *rehearseProgress {
 	return p
 }
 
-// show prints the state at most once a second.
+// show prints the state at most once a second. A progress line that cannot be
+// written stops no rehearsal.
 func (p *rehearseProgress) show(s rehearsal.Status, note string) {
 	now := time.Now()
 	if now.Before(p.next) {
@@ -233,15 +237,15 @@ func (p *rehearseProgress) show(s rehearsal.Status, note string) {
 	line := fmt.Sprintf("%4.0f of %.0f s  %-19s  %5.0f rpm  NPR %5.3f  EGT %3.0f °C%s",
 		s.Elapsed.Seconds(), s.Total.Seconds(), s.Segment, s.Speed, s.NPR, s.EGT-zeroC, note)
 	if p.terminal {
-		fmt.Fprintf(p.w, "\r%s\x1b[K", line)
+		_, _ = fmt.Fprintf(p.w, "\r%s\x1b[K", line)
 		return
 	}
-	fmt.Fprintln(p.w, line)
+	_, _ = fmt.Fprintln(p.w, line)
 }
 
 // end leaves the progress line.
 func (p *rehearseProgress) end() {
 	if p.terminal {
-		fmt.Fprintln(p.w)
+		_, _ = fmt.Fprintln(p.w)
 	}
 }

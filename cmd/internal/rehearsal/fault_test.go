@@ -135,22 +135,26 @@ func TestFaults(t *testing.T) {
 	}{
 		// The burn-out code is the first of the rig file's invalid codes.
 		{"probe-open@20s", "egt_1", func(t *testing.T, s *stream) {
+			t.Helper()
 			if !all(s.between("egt_1", 20, 99), func(r reading) bool { return r.value == 1372 }) {
 				t.Error("the probe does not send its burn-out code")
 			}
 		}},
 		{"probe-open@20s:t_bearing_front", "t_bearing_front", func(t *testing.T, s *stream) {
+			t.Helper()
 			if !all(s.between("t_bearing_front", 20, 99), func(r reading) bool { return r.value > 300 }) {
 				t.Error("an open probe without a code does not read above its range")
 			}
 		}},
 		{"probe-stuck@20s+10s:p7_2", "p7_2", func(t *testing.T, s *stream) {
+			t.Helper()
 			got := s.between("p7_2", 20, 30)
 			if !all(got, func(r reading) bool { return r.value == got[0].value }) || all(s.between("p7_2", 30, 40), func(r reading) bool { return r.value == got[0].value }) {
 				t.Error("the probe is not stuck for 10 s")
 			}
 		}},
 		{"probe-drift@10s:t7_1", "t7_1", func(t *testing.T, s *stream) {
+			t.Helper()
 			// 0.2 % of 1140 K per second over 20 s; the ADC's step is 0.05 K.
 			got, want := s.between("t7_1", 30, 30.01)[0].value-plain.between("t7_1", 30, 30.01)[0].value, 0.002*1140*20.0
 			if math.Abs(got-want) > 0.1 {
@@ -158,6 +162,7 @@ func TestFaults(t *testing.T) {
 			}
 		}},
 		{"hot-streak@24s:egt_5", "egt_5", func(t *testing.T, s *stream) {
+			t.Helper()
 			// The probe feels 80 K more and takes about a second to show it.
 			now, soon := s.between("egt_5", 24, 24.01)[0], s.between("egt_5", 30, 30.01)[0]
 			if d := now.value - plain.between("egt_5", 24, 24.01)[0].value; d > 10 {
@@ -168,6 +173,7 @@ func TestFaults(t *testing.T) {
 			}
 		}},
 		{"pressure-zero-shift@25s", "p7_1", func(t *testing.T, s *stream) {
+			t.Helper()
 			// 1 % of the range from −10 to 250 kPa; the ADC's step is 0.005 kPa.
 			for i, r := range s.between("p7_1", 25, 99) {
 				if d := r.value - plain.between("p7_1", 25, 99)[i].value; math.Abs(d-2.6) > 0.006 {
@@ -176,36 +182,43 @@ func TestFaults(t *testing.T) {
 			}
 		}},
 		{"barometer-loss@25s", "p_baro", func(t *testing.T, s *stream) {
+			t.Helper()
 			if len(s.between("p_baro", 0, 25)) == 0 || len(s.between("p_baro", 25, 99)) > 0 {
 				t.Error("the barometer is not lost")
 			}
 		}},
 		{"not-a-number@25s+2s:p_exit", "p_exit", func(t *testing.T, s *stream) {
+			t.Helper()
 			if n := s.faults[ingest.ReasonNotFinite]; n != uint32(2*pack) || s.faults.Total() != n || len(s.between("p_exit", 25, 27)) > 0 {
 				t.Errorf("faults %v", s.faults)
 			}
 		}},
 		{"wrong-unit@25s+2s:p_exit", "p_exit", func(t *testing.T, s *stream) {
+			t.Helper()
 			if !all(s.between("p_exit", 25, 27), func(r reading) bool { return r.unit == "V" }) || !all(s.between("p_exit", 27, 99), func(r reading) bool { return r.unit == "kPa" }) {
 				t.Error("the unit is not changed for 2 s")
 			}
 		}},
 		{"publisher-silent@25s", "", func(t *testing.T, s *stream) {
+			t.Helper()
 			if len(s.between("speed", 25, 30)) > 0 || len(s.between("speed", 30, 31)) != int(pack) || len(plain.messages)-len(s.messages) != int(5*pack) {
 				t.Error("the publisher is not silent for 5 s")
 			}
 		}},
 		{"clock-skew@25s", "", func(t *testing.T, s *stream) {
+			t.Helper()
 			if !all(s.between("speed", 25, 30), func(r reading) bool { return r.time == r.at+30e9 }) || !all(s.between("speed", 30, 99), func(r reading) bool { return r.time == r.at }) {
 				t.Error("the clock is not 30 s ahead for 5 s")
 			}
 		}},
 		{"clock-past@25s", "", func(t *testing.T, s *stream) {
+			t.Helper()
 			if !all(s.between("speed", 25, 33), func(r reading) bool { return r.time == r.at-600e9 }) {
 				t.Error("the clock is not 10 min behind")
 			}
 		}},
 		{"duplicate@25s", "", func(t *testing.T, s *stream) {
+			t.Helper()
 			if n := len(s.messages) - len(plain.messages); n != int(3*pack) || len(s.between("speed", 25, 28)) != int(6*pack) {
 				t.Errorf("%d copies", n)
 			}
@@ -220,6 +233,7 @@ func TestFaults(t *testing.T) {
 			}
 		}},
 		{"reorder@25s", "", func(t *testing.T, s *stream) {
+			t.Helper()
 			var back int
 			for i := range s.messages[1:] {
 				if s.messages[i+1].At < s.messages[i].At {
@@ -231,6 +245,7 @@ func TestFaults(t *testing.T) {
 			}
 		}},
 		{"burst@25s", "", func(t *testing.T, s *stream) {
+			t.Helper()
 			var late int
 			for _, m := range s.messages {
 				if m.At >= epoch+25e9 && m.At < epoch+28e9 {
@@ -245,16 +260,19 @@ func TestFaults(t *testing.T) {
 			}
 		}},
 		{"malformed@25s", "", func(t *testing.T, s *stream) {
+			t.Helper()
 			if len(s.broken) != int(pack) || s.faults[ingest.ReasonSyntax] != uint32(pack) || s.broken[0] < epoch+25e9 || s.broken[19] >= epoch+27e9 {
 				t.Errorf("%d broken messages", len(s.broken))
 			}
 		}},
 		{"truncated@25s:speed", "", func(t *testing.T, s *stream) {
+			t.Helper()
 			if len(s.broken) != int(pack) || len(s.messages) != len(plain.messages) {
 				t.Errorf("%d broken messages", len(s.broken))
 			}
 		}},
 		{"huge@25s", "", func(t *testing.T, s *stream) {
+			t.Helper()
 			if n := s.faults[ingest.ReasonTooLarge]; n != 2 || len(s.messages) != len(plain.messages)+2 || len(s.between("speed", 25, 27)) != int(2*pack) {
 				t.Errorf("%d huge messages", n)
 			}

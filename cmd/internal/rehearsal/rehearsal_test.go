@@ -25,24 +25,24 @@ import (
 // epoch is the device time of the first pack in these tests: 2025-12-01 09:00 UTC.
 const epoch = int64(1764579600e9)
 
-func load(t testing.TB, rig string) pipeline.Config {
-	t.Helper()
+func load(tb testing.TB, rig string) pipeline.Config {
+	tb.Helper()
 	_, cfg, faults := config.Load("../../../testdata/rigs/" + rig + ".yaml")
 	for _, f := range faults {
-		t.Error(f)
+		tb.Error(f)
 	}
 	if len(faults) > 0 {
-		t.FailNow()
+		tb.FailNow()
 	}
 	return cfg
 }
 
-func play(t testing.TB, cfg pipeline.Config, o Options) []Message {
-	t.Helper()
+func play(tb testing.TB, cfg pipeline.Config, o Options) []Message {
+	tb.Helper()
 	o.Start = epoch
 	r, err := New(cfg, o)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	var msgs []Message
 	for more := true; more; {
@@ -51,13 +51,13 @@ func play(t testing.TB, cfg pipeline.Config, o Options) []Message {
 	return msgs
 }
 
-func faulty(t testing.TB, texts ...string) []Fault {
-	t.Helper()
+func faulty(tb testing.TB, texts ...string) []Fault {
+	tb.Helper()
 	var list []Fault
 	for _, s := range texts {
 		f, err := ParseFault(s)
 		if err != nil {
-			t.Fatal(err)
+			tb.Fatal(err)
 		}
 		list = append(list, f)
 	}
@@ -138,7 +138,7 @@ func TestWatched(t *testing.T) {
 				seen[segment][p.Choke] += period
 				phases[p.Phase] = true
 				unchokedNow += period
-				if !(p.ChokeArmed && p.Choke == monitor.Unchoked) {
+				if !p.ChokeArmed || p.Choke != monitor.Unchoked {
 					unchokedNow = 0
 				}
 				unchokedArmed = max(unchokedArmed, unchokedNow)
@@ -309,8 +309,8 @@ func TestReadings(t *testing.T) {
 
 // invented is a rig without a file: every dimension, reference and format, and a
 // curved calibration.
-func invented(t testing.TB) pipeline.Config {
-	t.Helper()
+func invented(tb testing.TB) pipeline.Config {
+	tb.Helper()
 	var cfg pipeline.Config
 	cfg.Rig.ID = "bench_9"
 	cfg.Align.Period = 50e6
@@ -320,12 +320,12 @@ func invented(t testing.TB) pipeline.Config {
 	add := func(id, topic, u string, reference calib.Reference, lo, hi float64, polynomial ...float64) int {
 		un, err := unit.Parse(u)
 		if err != nil {
-			t.Fatal(err)
+			tb.Fatal(err)
 		}
 		raw := un
 		if len(polynomial) > 0 {
 			if raw, err = unit.Parse("mA"); err != nil {
-				t.Fatal(err)
+				tb.Fatal(err)
 			}
 		}
 		cfg.Align.Channels = append(cfg.Align.Channels, align.Channel{ID: id, Topic: topic, Name: id, Raw: raw, Hold: 250e6})
