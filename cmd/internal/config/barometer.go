@@ -26,9 +26,13 @@ func stationPressure(q, h float64) float64 {
 	return math.Pow(math.Pow(q, exponent)-math.Pow(seaPressure, exponent)*lapse*h/seaTemperature, 1/exponent)
 }
 
+// tangentError bounds the error of toStation in Pa from 950 to 1050 hPa and from
+// −500 to 1000 m.
+const tangentError = 3.5
+
 // toStation makes the calibration of a barometer reduced to sea level give the
 // station pressure. It is the tangent of stationPressure at the standard
-// pressure, off by less than 3 Pa from 950 to 1050 hPa below 1000 m.
+// pressure, within tangentError.
 func toStation(s *calib.Spec, elevation float64) {
 	at := stationPressure(seaPressure, elevation)
 	slope := math.Pow(at/seaPressure, 1-exponent)

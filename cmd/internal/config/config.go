@@ -70,6 +70,9 @@ func Load(name string) (Bundle, pipeline.Config, []Fault) {
 	}
 	b.Files = append(b.Files, File{base, text})
 	r := readRig(b.Files[0])
+	if r.defaultRules && len(r.faults()) == 0 {
+		b.Files = append(b.Files, r.defaults())
+	}
 	for _, n := range r.ruleFiles {
 		file := n.text()
 		text, err := read(filepath.Join(folder, filepath.FromSlash(file)))

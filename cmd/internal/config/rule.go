@@ -21,8 +21,9 @@ type rule struct {
 	at map[string]node // by key
 }
 
-// readRuleNames reads which rule files the rig uses.
+// readRuleNames reads which rules the rig uses: the default ones, and rule files.
 func (r *rig) readRuleNames(m *fields) {
+	r.defaultRules = m.get("default_rules").choice("keep", "keep", "none") == "keep"
 	for _, n := range m.get("rules").list() {
 		file := n.text()
 		switch {
