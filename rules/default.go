@@ -53,6 +53,13 @@ func Default(q Equipment) []Rule {
 		Caution:  "Flow and thrust now depend on the back pressure; values taken at this point are not those of a choked nozzle. Watch cell depression, rake pressures and indicated EGT.",
 		Response: "Facility procedure for a test point that is lost.",
 	}, Rule{
+		Name: "choke_unknown", When: "choke_armed and not known(choke_state)", Priority: Caution,
+		OnDelay: second, OffDelay: second, Group: groupSources,
+		Title:    "Choke state unknown",
+		Text:     "The choke state is not known while choke is expected: an unchoke would not be seen here. Follow the facility's procedure for lost instrumentation." + notProtection,
+		Caution:  "A pressure or temperature that the state needs has no usable value. The Watch page names it.",
+		Response: "Facility procedure for lost instrumentation.",
+	}, Rule{
 		Name: "choke_marginal", When: "choke_armed and choke_marginal", Priority: Note,
 		OnDelay: second, OffDelay: 2 * second, Group: groupNozzle,
 		Title:    "Choke marginal",
@@ -88,7 +95,7 @@ func bandRules(b *egt.Band) []Rule {
 	warning := Rule{
 		Name: "egt_" + b.Name + "_exceeded", When: name + ".exceeded", Priority: Warning, Latching: true, Group: groupEGT,
 		Title:    what + " beyond " + limit,
-		Text:     what + " {egt_indicated_k:degC.0}, above " + limit + ", where no time is allowed. " + response[:len(response)-1] + " applies." + notProtection,
+		Text:     what + " {egt_indicated_k:degC.1}, above " + limit + ", where no time is allowed. " + response[:len(response)-1] + " applies." + notProtection,
 		Caution:  "Hot parts may be damaged. Watch indicated EGT, its spread, rotor speed and vibration. The event is to be entered in the engine's log.",
 		Response: response,
 	}
@@ -108,7 +115,7 @@ func bandRules(b *egt.Band) []Rule {
 	return []Rule{warning, {
 		Name: "egt_" + b.Name + "_over", When: name + ".over", Priority: Caution, Group: groupEGT,
 		Title:    what + " above " + limit,
-		Text:     what + " {egt_indicated_k:degC.0}, above " + limit + ": {" + name + ".remaining_s:s.1} left of " + allowance + perRun + ". Follow the facility's procedure." + notProtection,
+		Text:     what + " {egt_indicated_k:degC.1}, above " + limit + ": {" + name + ".remaining_s:s.1} left of " + allowance + perRun + ". Follow the facility's procedure." + notProtection,
 		Caution:  "The time allowance of this limit is running. Watch indicated EGT and its trend.",
 		Response: response,
 	}}
@@ -123,7 +130,7 @@ func seconds(ns int64) string {
 func egtRules(fuelFlow bool) []Rule {
 	out := []Rule{
 		{
-			Name: "egt_lost", When: "lit and not known(egt_indicated_k)", Priority: Warning, OnDelay: 500 * ms, OffDelay: second, Group: groupSources,
+			Name: "egt_lost", When: "lit and not known(egt_indicated_k)", Priority: Warning, OnDelay: 500 * ms, OffDelay: second,
 			Title:    "All EGT lost while lit",
 			Text:     "No usable indicated EGT while the engine is lit: EGT limits are not watched. Follow the facility's procedure for lost EGT indication." + notProtection,
 			Caution:  "An over-temperature would not be seen here. Time above a limit is counted on as assumed if the last value was above it.",
@@ -159,10 +166,11 @@ func egtRules(fuelFlow bool) []Rule {
 }
 
 // probesLost gives the advisory on the probes of a rake or harness: one alarm
-// with a count, whichever probe it is.
+// with a count, whichever probe it is. It waits until a lost source, which would
+// be its cause, has been noticed.
 func probesLost(which, what, caution string) Rule {
 	return Rule{
-		Name: which + "_probe_lost", When: which + "_probes_lost > 0", Priority: Advisory, OnDelay: second, OffDelay: 5 * second, Group: groupSources,
+		Name: which + "_probe_lost", When: which + "_probes_lost > 0", Priority: Advisory, OnDelay: 3 * second, OffDelay: 5 * second, Group: groupSources,
 		Title:    "A " + what + " is lost",
 		Text:     "{" + which + "_probes_lost:.0} " + what + "(s) excluded or without a value, {" + which + "_probes_used:.0} in use. The Rig page names them and the cause.",
 		Caution:  caution,

@@ -164,7 +164,6 @@ func TestStepAllocations(t *testing.T) {
 }
 
 func BenchmarkCompile(b *testing.B) {
-
 	rules := testDefault()
 	names := StandardNames([]string{"p_oil"}, []string{"run_1", "run_2", "start"})
 	b.ReportAllocs()

@@ -305,6 +305,43 @@ func TestIDsAndGroups(t *testing.T) {
 	}
 }
 
+// One lost publisher is one alarm; what it takes along is listed under it, and a
+// warning stands for itself.
+func TestFirstOutOfDefaults(t *testing.T) {
+	s := newStand(t, testDefault())
+	for _, v := range []string{
+		"lit=true", "choke_armed=true", "choke_state=choked", "egt_indicated_k=900", "egt_probes_lost=0", "rake_probes_lost=0",
+		"sources_lost=0", "health.input_path=true", "phase=steady",
+	} {
+		name, value, _ := strings.Cut(v, "=")
+		s.put(name, value)
+	}
+	s.put("egt.run_1.over", "true")
+	s.to(second, true)
+	s.put("egt.run_1.exceeded", "true")
+	s.to(second+scan, true)
+	if len(s.seen) != 2 || !s.seen[0].FirstOut || !s.seen[1].FirstOut || s.seen[1].Rule != "egt_run_1_exceeded" {
+		t.Errorf("a warning is listed under a caution: %+v", s.seen)
+	}
+	s.put("egt.run_1.over", "false")
+	s.put("egt.run_1.exceeded", "false")
+	s.to(2*second, true)
+	s.seen = nil
+	for _, v := range []string{"choke_state=?", "egt_indicated_k=?", "egt_probes_lost=8", "rake_probes_lost=4", "sources_lost=1"} {
+		name, value, _ := strings.Cut(v, "=")
+		s.put(name, value)
+	}
+	s.to(7*second, true)
+	got := map[string]bool{}
+	for _, a := range s.seen {
+		got[a.Rule] = a.FirstOut
+	}
+	want := map[string]bool{"source_lost": true, "egt_lost": true, "choke_unknown": false, "egt_probe_lost": false, "rake_probe_lost": false}
+	if !reflect.DeepEqual(got, want) {
+		t.Errorf("got %v, want %v", got, want)
+	}
+}
+
 func TestValueAndPeak(t *testing.T) {
 	r := simple("low", "npr < 2")
 	r.Deadband = 0.1

@@ -51,7 +51,7 @@ type Instance struct {
 	Changed  int64
 	Revision uint64 // counts changes
 	Text     string // as rendered when it was raised last
-	FirstOut bool   // no other alarm of the group stood when it was raised
+	FirstOut bool   // the first of its group: see firstOut
 	Value    Reading
 	Peak     Reading // worst value since it was raised
 
@@ -248,11 +248,15 @@ func (s *Set) move(st *State, i int, input alarm.Input, t int64, run string) {
 	}
 }
 
-// firstOut reports whether no other alarm of the group of rule i stands.
+// firstOut reports whether no condition of another rule of the group is present
+// and annunciated. One of lower priority does not count: a warning is not listed
+// under a caution.
 func (st *State) firstOut(s *Set, i int) bool {
-	group := s.rules[i].Group
+	r := &s.rules[i]
 	for k := range s.rules {
-		if k != i && group != "" && s.rules[k].Group == group && st.Instances[k].State.Standing() {
+		other, state := &s.rules[k], st.Instances[k].State
+		if k != i && r.Group != "" && other.Group == r.Group && other.Priority >= r.Priority &&
+			(state == alarm.Unacknowledged || state == alarm.Acknowledged) {
 			return false
 		}
 	}

@@ -98,12 +98,14 @@ func TestPhases(t *testing.T) {
 			"off cranking lighting* idle* rundown* rundown cooling off",
 		},
 		{
-			"a dry crank", []leg{{3, 0, 290}, {5, 2500, 290}, {10, 2500, 290}, {15, 0, 290}, {5, 0, 290}},
+			"a dry crank",
+			[]leg{{3, 0, 290}, {5, 2500, 290}, {10, 2500, 290}, {15, 0, 290}, {5, 0, 290}},
 			"off cranking rundown cooling off",
 		},
 		{
 			// 560 K is above LitEGT: the flame is the rise from the lowest EGT, not the heat that is left.
-			"a start with a hot tail pipe", []leg{{3, 0, 560}, {6, 2500, 540}, {4, 2800, 530}, {1, 3000, 700}, {12, 9400, 800}, {20, 9500, 700}},
+			"a start with a hot tail pipe",
+			[]leg{{3, 0, 560}, {6, 2500, 540}, {4, 2800, 530}, {1, 3000, 700}, {12, 9400, 800}, {20, 9500, 700}},
 			"cooling cranking lighting* idle*",
 		},
 		{
