@@ -363,8 +363,9 @@ func (c *Computer) throat(s *State, scan *monitor.Scan, p *monitor.OperatingPoin
 		f, rounds = s.F, closures
 	}
 	var r nozzle.Result
+	var g gas.Mixture
 	for i := range rounds {
-		g := c.mixture(f, war)
+		g = c.mixture(f, war)
 		var err error
 		if r, err = c.nozzle.Evaluate(&g, in); err != nil {
 			p.Cause = monitor.Cause{Kind: monitor.OutsideGasRange, Channel: -1}
@@ -388,6 +389,7 @@ func (c *Computer) throat(s *State, scan *monitor.Scan, p *monitor.OperatingPoin
 	s.F = f
 	p.V[monitor.FuelAirRatio] = f
 	c.take(p, &r)
+	c.doubt(scan, p, &g, in)
 	c.choke(s, p, &r)
 }
 
@@ -466,16 +468,16 @@ func (c *Computer) independent(scan *monitor.Scan, p *monitor.OperatingPoint, ai
 		return
 	}
 	w2 := 0.0
+	in := nozzle.Inputs{TotalPressure: unit.Absolute(p0), BackPressure: unit.Absolute(p0 - dp), TotalTemperature: t}
 	if dp > 0 {
-		r, err := c.bellmouth.Evaluate(&air, nozzle.Inputs{
-			TotalPressure: unit.Absolute(p0), BackPressure: unit.Absolute(p0 - dp), TotalTemperature: t,
-		})
+		r, err := c.bellmouth.Evaluate(&air, in)
 		if err != nil {
 			return
 		}
 		w2 = r.MassFlow
 	}
 	v := &p.V
+	v[monitor.IndependentFlowU95] = c.independentU95(scan, &air, in, w2)
 	v[monitor.AirFlow] = w2
 	w := w2 + v[monitor.FuelFlow]
 	if w != w {
