@@ -54,7 +54,7 @@ func Default(q Equipment) []Rule {
 		Response: "Facility procedure for a test point that is lost.",
 	}, Rule{
 		Name: "choke_unknown", When: "choke_armed and not known(choke_state)", Priority: Caution,
-		OnDelay: second, OffDelay: second, Group: groupSources,
+		OnDelay: 3 * second, OffDelay: second, Group: groupSources,
 		Title:    "Choke state unknown",
 		Text:     "The choke state is not known while choke is expected: an unchoke would not be seen here. Follow the facility's procedure for lost instrumentation." + notProtection,
 		Caution:  "A pressure or temperature that the state needs has no usable value. The Watch page names it.",
