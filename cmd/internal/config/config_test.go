@@ -275,6 +275,37 @@ func TestHash(t *testing.T) {
 	}
 }
 
+// A file that was saved on Windows reads the same, and its faults show at the
+// same lines.
+func TestWindowsLineEnds(t *testing.T) {
+	windows := func(b Bundle) Bundle {
+		out := Bundle{Format: b.Format}
+		for _, f := range b.Files {
+			out.Files = append(out.Files, File{f.Name, "\ufeff" + strings.ReplaceAll(f.Text, "\n", "\r\n")})
+		}
+		return out
+	}
+	for _, name := range []string{example, options} {
+		b, want := load(t, name)
+		got, faults := Parse(windows(b).Marshal())
+		if len(faults) > 0 {
+			t.Fatalf("%s: faults %v", name, faults)
+		}
+		got.Hash = want.Hash
+		if !reflect.DeepEqual(got, want) {
+			t.Errorf("%s: another configuration", name)
+		}
+	}
+	for _, name := range []string{"keys.yaml", "literal.yaml", "bands.yaml"} {
+		b, _, _ := Load(badFiles + name)
+		_, want := Parse(b.Marshal())
+		_, got := Parse(windows(b).Marshal())
+		if !reflect.DeepEqual(got, want) {
+			t.Errorf("%s: faults %v, want %v", name, got, want)
+		}
+	}
+}
+
 func TestParseRefusesWhatIsNoBundle(t *testing.T) {
 	b, _ := load(t, minimal)
 	old, err := json.Marshal(Bundle{Format: "another", Files: b.Files})

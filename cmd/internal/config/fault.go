@@ -67,11 +67,15 @@ func place(faults []Fault, folder string) []Fault {
 }
 
 // nearest gives the hint for a name that is none of names: the nearest in
-// spelling, and the choice when it is short.
+// spelling, one that goes on where it stops before others, or the choice.
 func nearest(name string, names []string) string {
 	best, at := len(name)/2+2, ""
 	for _, n := range names {
-		if d := distance(strings.ToLower(name), strings.ToLower(n)); d < best {
+		d := distance(strings.ToLower(name), strings.ToLower(n))
+		if len(name) > 2 && strings.HasPrefix(n, name) {
+			d = min(d, 1)
+		}
+		if d < best {
 			best, at = d, n
 		}
 	}

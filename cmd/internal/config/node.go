@@ -35,14 +35,17 @@ type node struct {
 
 // open parses a file; the node has no value when it cannot be parsed.
 func open(f File) node {
-	doc := &document{name: f.Name, lines: strings.Split(f.Text, "\n")}
+	// Windows editors end lines with \r\n, which the library counts twice behind a
+	// comment, and begin a file with a mark.
+	text := strings.ReplaceAll(strings.TrimPrefix(f.Text, "\ufeff"), "\r\n", "\n")
+	doc := &document{name: f.Name, lines: strings.Split(text, "\n")}
 	top := node{doc: doc, line: 1, col: 1}
-	if at, hint := unreadable(f.Text); hint != "" {
-		top.line = 1 + strings.Count(f.Text[:at], "\n")
+	if at, hint := unreadable(text); hint != "" {
+		top.line = 1 + strings.Count(text[:at], "\n")
 		top.fault("the file is no plain text", hint)
 		return top
 	}
-	body, err := parse(f.Text)
+	body, err := parse(text)
 	var syntax *yaml.SyntaxError
 	switch {
 	case errors.As(err, &syntax) && syntax.GetToken() != nil:
@@ -89,8 +92,8 @@ func unreadable(text string) (at int, hint string) {
 		return 0, "a rig or rule file has at most 1 MiB"
 	}
 	for i, r := range text {
-		if r == utf8.RuneError || unicode.IsControl(r) && r != '\n' && r != '\r' && r != '\t' {
-			return i, "save it as UTF-8 without control characters"
+		if r == utf8.RuneError || unicode.IsControl(r) && r != '\n' && r != '\t' {
+			return i, "save it as UTF-8 without control characters, with the line ends of Unix or Windows"
 		}
 	}
 	return 0, ""
