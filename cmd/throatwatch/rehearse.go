@@ -13,6 +13,7 @@ import (
 
 	"throatwatch/cmd/internal/config"
 	"throatwatch/cmd/internal/rehearsal"
+	"throatwatch/cmd/internal/watch"
 	"throatwatch/ingest/mqtt"
 	"throatwatch/rules/pipeline"
 )
@@ -26,56 +27,83 @@ const (
 	drainBroker = 10 * time.Second
 )
 
-// rehearseCommand lets a simulated rig publish a whole test over MQTT. It gives 0
-// at the end of the test, of --for or of ctx, 1 when the rig file or the broker
-// does not allow it, 2 when called wrongly.
+// rehearseCommand lets a simulated rig publish a whole test over MQTT, or plays it
+// into run files. It gives 0 at the end of the test, of --for or of ctx, 1 when the
+// rig file, the broker or the data folder does not allow it, 2 when called wrongly.
 func rehearseCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
-	flags := pflag.NewFlagSet("rehearse", pflag.ContinueOnError)
-	flags.SetOutput(stderr)
-	flags.SortFlags = false
+	flags := newFlags("rehearse RIG.yaml", "A simulated engine on the rig of the rig file publishes a whole test.", stderr)
 	var (
 		play      = newRehearseFlags(flags)
 		brokerURL = flags.String("broker", rehearseBroker, "broker to publish to, mqtt://host:port or mqtts://host:port")
-		length    = flags.Duration("for", 0, "stop after this time; 0 is at the end of the test")
+		user      = flags.String("broker-user", "", "user name at the broker")
+		secret    = flags.String("broker-password-file", "", "file with the password at the broker")
+		length    = flags.Duration("for", 0, "stop after this time (default: at the end of the test)")
+		into      = flags.String("into", "", "play into the run files of this data folder instead, without waiting")
+		start     = flags.String("start", "", "with --into: device time of the first reading, as 2026-03-02T09:00:00Z (default: so that the test ends now)")
 	)
-	tell := func(format string, args ...any) {
-		_, _ = fmt.Fprintf(stderr, format+"\n", args...) // there is nowhere left to tell a fault
-	}
+	usage := flags.Usage
 	flags.Usage = func() {
-		tell("throatwatch rehearse RIG.yaml [flags]\n\nA simulated engine on the rig of the rig file publishes a whole test over MQTT.\n\n%s\n%s", flags.FlagUsages(), rehearseFaults())
+		usage()
+		_, _ = fmt.Fprintf(stderr, "\n%s", rehearseFaults())
 	}
-	if err := flags.Parse(args); err != nil {
-		if errors.Is(err, pflag.ErrHelp) {
-			return 0
-		}
-		tell("rehearse: %v", err)
-		return 2
+	rig, code := parseRig(flags, args, stderr)
+	if code >= 0 {
+		return code
+	}
+	tell := func(err error) {
+		_, _ = fmt.Fprintln(stderr, "throatwatch rehearse:", err) // there is nowhere left to tell a fault
 	}
 	options, err := play.options()
+	begin := time.Time{}
+	if *start != "" {
+		begin, err = time.Parse(time.RFC3339Nano, *start)
+	}
 	switch {
-	case flags.NArg() != 1:
-		flags.Usage()
-		return 2
+	case err != nil:
 	case *length < 0:
 		err = fmt.Errorf("--for %v: give a time above 0", *length)
+	case *into != "" && (*length != 0 || flags.Changed("broker")):
+		err = errors.New("--into takes no --for and no --broker: it does not wait; --quick is the short test")
+	case *into == "" && *start != "":
+		err = errors.New("--start is for --into: device time is this machine's on a broker")
 	}
 	if err != nil {
-		tell("rehearse: %v", err)
+		tell(err)
 		return 2
 	}
-	_, cfg, faults := config.Load(flags.Arg(0))
-	if len(faults) > 0 {
-		for _, f := range faults {
-			tell("%v", f)
-		}
-		tell("rehearse: %d faults in %s", len(faults), flags.Arg(0))
+	bundle, cfg, faults := config.Load(rig)
+	if err := watch.Faults(faults); err != nil {
+		tell(fmt.Errorf("the configuration has faults:\n%w", err))
 		return 1
 	}
-	if err := rehearseLive(ctx, cfg, options, *brokerURL, *length, stdout, stderr); err != nil {
-		tell("rehearse: %v", err)
+	if *into != "" {
+		if options.Start, err = rehearseStart(cfg, options, begin); err == nil {
+			err = rehearseInto(ctx, bundle, cfg, options, *into, stdout, newLog(stderr, false))
+		}
+	} else {
+		broker := mqtt.PublisherConfig{URL: *brokerURL, Username: *user}
+		if broker.Password, err = readSecret(*secret); err == nil {
+			err = rehearseOver(ctx, cfg, options, broker, *length, stdout, stderr)
+		}
+	}
+	if err != nil {
+		tell(err)
 		return 1
 	}
 	return 0
+}
+
+// rehearseStart gives the device time of the first reading, ns UTC: begin, or where
+// that is zero, so that the test ends now.
+func rehearseStart(cfg pipeline.Config, o rehearsal.Options, begin time.Time) (int64, error) {
+	if !begin.IsZero() {
+		return begin.UnixNano(), nil
+	}
+	rig, err := rehearsal.New(cfg, o)
+	if err != nil {
+		return 0, err
+	}
+	return time.Now().Add(-rig.Length()).UnixNano(), nil
 }
 
 // rehearseFlags are the flags that say what is played.
@@ -125,13 +153,19 @@ func rehearseFaults() string {
 	return b.String()
 }
 
-// rehearseLive publishes the test in real time; device time is this machine's.
+// rehearseLive is rehearseOver for a broker that asks for no password.
 func rehearseLive(ctx context.Context, cfg pipeline.Config, o rehearsal.Options, url string, length time.Duration, stdout, stderr io.Writer) error {
+	return rehearseOver(ctx, cfg, o, mqtt.PublisherConfig{URL: url}, length, stdout, stderr)
+}
+
+// rehearseOver publishes the test in real time, to its end or for length; device
+// time is this machine's. The end of ctx is no error.
+func rehearseOver(ctx context.Context, cfg pipeline.Config, o rehearsal.Options, broker mqtt.PublisherConfig, length time.Duration, stdout, stderr io.Writer) error {
 	// What cannot be played is found before anyone waits for a broker.
 	if _, err := rehearsal.New(cfg, o); err != nil {
 		return err
 	}
-	publisher, err := mqtt.NewPublisher(mqtt.PublisherConfig{URL: url})
+	publisher, err := mqtt.NewPublisher(broker)
 	if err != nil {
 		return err
 	}
@@ -148,7 +182,7 @@ func rehearseLive(ctx context.Context, cfg pipeline.Config, o rehearsal.Options,
 	case <-ctx.Done():
 		return nil
 	case <-time.After(reachBroker):
-		return fmt.Errorf("broker %s is not reached: %s; start `throatwatch watch` first, or give --broker", url, publisher.Stats().LastFailure)
+		return fmt.Errorf("broker %s is not reached: %s; start `throatwatch watch` first, or give --broker", broker.URL, publisher.Stats().LastFailure)
 	}
 
 	if length > 0 {
@@ -187,7 +221,7 @@ func rehearseLive(ctx context.Context, cfg pipeline.Config, o rehearsal.Options,
 	err = publisher.Flush(drain)
 	_, _ = fmt.Fprintf(stdout, "%d messages published, %d acknowledged by the broker\n", published, publisher.Stats().Acknowledged)
 	if err != nil {
-		return fmt.Errorf("broker %s has not acknowledged all messages within %v: %s", url, drainBroker, publisher.Stats().LastFailure)
+		return fmt.Errorf("broker %s has not acknowledged all messages within %v: %s", broker.URL, drainBroker, publisher.Stats().LastFailure)
 	}
 	return nil
 }

@@ -4,6 +4,8 @@ import (
 	"bytes"
 	"context"
 	"fmt"
+	"io"
+	"path/filepath"
 	"strings"
 	"testing"
 	"time"
@@ -23,8 +25,12 @@ func TestRehearseUsage(t *testing.T) {
 		want string // on stderr
 	}{
 		{[]string{"--help"}, 0, "throatwatch rehearse RIG.yaml"},
-		{nil, 2, "throatwatch rehearse RIG.yaml"},
-		{[]string{"a", "b"}, 2, "throatwatch rehearse RIG.yaml"},
+		{nil, 2, "give one rig file"},
+		{[]string{"a", "b"}, 2, "give one rig file"},
+		{[]string{rehearseRig, "--start", "2026-03-02T09:00:00Z"}, 2, "--start is for --into"},
+		{[]string{rehearseRig, "--into", "x", "--start", "tomorrow"}, 2, "tomorrow"},
+		{[]string{rehearseRig, "--into", "x", "--for", "1s"}, 2, "--into takes no --for"},
+		{[]string{rehearseRig, "--broker-password-file", "no-such-file"}, 1, "no-such-file"},
 		{[]string{rehearseRig, "--fast"}, 2, "unknown flag"},
 		{[]string{rehearseRig, "--for", "-1s"}, 2, "--for"},
 		{[]string{rehearseRig, "--fault", "burst", "--fault", "bang@1s"}, 2, "no such fault"},
@@ -97,6 +103,36 @@ func TestRehearseLive(t *testing.T) {
 		case <-ctx.Done():
 			t.Fatal("messages are missing")
 		}
+	}
+}
+
+// A whole test lies in the run files in far less time than it takes, and twice the
+// same.
+func TestRehearseInto(t *testing.T) {
+	var digests []string
+	for range 2 {
+		dir := t.TempDir()
+		var stdout, stderr bytes.Buffer
+		if code := rehearseCommand(t.Context(), []string{rehearseRig, "--into", dir, "--quick", "--start", "2026-03-02T09:00:00Z"}, &stdout, &stderr); code != 0 {
+			t.Fatalf("exit code %d: %s", code, stderr.String())
+		}
+		runs, err := filepath.Glob(filepath.Join(dir, "runs", "cell_2-20260302T0900*.db"))
+		if err != nil || len(runs) != 1 {
+			t.Fatalf("run files %v, %v", runs, err)
+		}
+		stderr.Reset()
+		id := strings.TrimSuffix(filepath.Base(runs[0]), ".db")
+		if code := replayCommand(t.Context(), []string{id, "--data", dir}, io.Discard, &stderr); code != 0 {
+			t.Fatalf("replay gives exit code %d: %s", code, stderr.String())
+		}
+		for line := range strings.Lines(stderr.String()) {
+			if strings.HasPrefix(line, "sha256 ") {
+				digests = append(digests, line)
+			}
+		}
+	}
+	if len(digests) != 2 || digests[0] != digests[1] {
+		t.Errorf("digests of two rehearsals with one seed: %q", digests)
 	}
 }
 

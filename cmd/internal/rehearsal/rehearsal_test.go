@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"context"
 	"errors"
+	"maps"
 	"math"
 	"slices"
 	"strings"
@@ -19,6 +20,7 @@ import (
 	"throatwatch/monitor/compute"
 	"throatwatch/monitor/egt"
 	"throatwatch/monitor/unit"
+	"throatwatch/rules/alarm"
 	"throatwatch/rules/pipeline"
 )
 
@@ -198,6 +200,51 @@ func TestWatched(t *testing.T) {
 				}
 			}
 		})
+	}
+}
+
+// The alarms of a rehearsal without faults are the two that it is meant to raise:
+// choke is lost while armed, and an EGT allowance is used up and exceeded.
+func TestAlarms(t *testing.T) {
+	bundle, cfg, _ := config.Load("../../../testdata/rigs/example.yaml")
+	m := pipeline.NewMachine(func(b []byte) (pipeline.Config, error) {
+		cfg, faults := config.Parse(b)
+		if len(faults) > 0 {
+			return cfg, errors.New(faults[0].String())
+		}
+		return cfg, nil
+	})
+	r, err := New(cfg, Options{Seed: 2, Scenario: Quick, Start: epoch})
+	if err != nil {
+		t.Fatal(err)
+	}
+	var (
+		s      pipeline.State
+		record = ingest.Record{Host: epoch - 1e9}
+		raised = map[string]bool{}
+	)
+	step := func(kind ingest.Kind, topic string, payload []byte) {
+		record.Seq++
+		record.Kind, record.Topic, record.Payload = kind, topic, payload
+		for _, o := range m.Step(&s, &record) {
+			if o.Kind == pipeline.OutcomeAlarm && alarm.State(o.Alarm.State) == alarm.Unacknowledged {
+				raised[o.Alarm.Rule] = true
+			}
+		}
+	}
+	step(ingest.KindBoot, "", []byte("{}"))
+	step(ingest.KindConfig, "", bundle.Marshal())
+	var msgs []Message
+	for more := true; more; {
+		msgs, more = r.Next(msgs[:0])
+		for _, x := range msgs {
+			record.Host = x.At + x.Delay
+			step(ingest.KindMessage, x.Topic, x.Payload)
+		}
+	}
+	want := map[string]bool{"unchoke": true, "egt_run_max_over": true, "egt_run_max_exceeded": true}
+	if !maps.Equal(raised, want) {
+		t.Errorf("alarms %v, want %v", raised, want)
 	}
 }
 
