@@ -52,7 +52,8 @@ export function byUrgency(a: Alarm, b: Alarm): number {
     const d = (x[i] as number) - (y[i] as number);
     if (d !== 0) return d;
   }
-  return b.raised < a.raised ? -1 : b.raised > a.raised ? 1 : a.id < b.id ? -1 : 1;
+  const [s, t] = [a.raised ?? '', b.raised ?? ''];
+  return t < s ? -1 : t > s ? 1 : a.id < b.id ? -1 : 1;
 }
 
 /** The standing alarms, most urgent first. */

@@ -49,8 +49,8 @@ export const api = {
     get<ThroatCurve>(`api/rigs/${id(rig)}/throat-curve?total_temperature=${totalTemperature}&fuel_air_ratio=${fuelAir}&humidity_ratio=${humidity}`),
   alarms: () => get<Alarm[]>('api/alarms'),
   acknowledge: (a: Alarm) => post(`api/alarms/${id(a.id)}/acknowledge`, { revision: a.revision, reason: '', request_id: uuid() }),
-  mark: (run: string, text: string, by: string) => post(`api/runs/${id(run)}/marks`, { text, by }),
-  run: (rig: string, action: 'start' | 'end') => post(`api/rigs/${id(rig)}/runs`, { action }),
+  mark: (run: string, text: string, by: string) => post(`api/runs/${id(run)}/marks`, { text, by, request_id: uuid() }),
+  run: (rig: string, action: 'start' | 'end') => post(`api/rigs/${id(rig)}/runs`, { action, request_id: uuid() }),
   runs: () => get<RunSummary[]>('api/runs'),
   runSummary: (run: string) => get<RunSummary>(`api/runs/${id(run)}`),
   series: (run: string, names: readonly string[], from: number, to: number, points: number, signal?: AbortSignal) =>
@@ -72,7 +72,10 @@ export const api = {
       for (let end = rest.indexOf('\n'); end >= 0; end = rest.indexOf('\n', start)) {
         const line = rest.slice(start, end).trim();
         start = end + 1;
-        if (line && !onFrame(JSON.parse(line) as Frame)) {
+        if (!line) continue;
+        const frame = JSON.parse(line) as Frame | { kind: 'error'; detail: string };
+        if (frame.kind === 'error') throw new RequestError(0, frame.detail); // the server could not go on
+        if (!onFrame(frame)) {
           void reader.cancel();
           return;
         }

@@ -15,6 +15,11 @@ export function h<K extends keyof HTMLElementTagNameMap>(tag: K, props: Props = 
   return el;
 }
 
+/** The head of a table column; ">" in front stands it to the right, over figures. */
+export function column(name: string): HTMLElement {
+  return name.startsWith('>') ? h('th', { scope: 'col', class: 'num' }, name.slice(1)) : h('th', { scope: 'col' }, name);
+}
+
 export function text(el: Element, s: string): void {
   if (el.textContent !== s) el.textContent = s;
 }

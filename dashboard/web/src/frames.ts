@@ -16,7 +16,7 @@ export interface Alarm {
   text: string;
   priority: Priority;
   state: AlarmState;
-  raised: string;
+  raised: string | null; // null when it was put aside without being raised
   changed: string;
   revision: number;
   caution: string;
@@ -44,6 +44,7 @@ export interface Ledger {
   run_total_s: number;
   over: boolean;
   exceeded: boolean;
+  holds?: boolean; // false for a start band once idle was reached
   peak_k: Num;
   excursions: number;
 }
@@ -173,29 +174,30 @@ export type Frame =
 /** A line of /api/runs. */
 export interface RunSummary {
   id: string;
-  number: number;
   rig: string;
   engine: string;
+  title?: string;
   started: string;
   ended: string | null;
-  state: 'active' | 'ended';
+  state: 'active' | 'ended' | string;
   keep: boolean;
   notes: string;
   tags: string[] | null;
   size_bytes: number;
   alarms: number;
-  duration_s: number;
+  duration_s: Num; // null while it goes on
 }
 
 export interface ThroatCurve { npr: number[]; flow_parameter: number[]; critical_npr: number }
 
 export interface Series {
   unit: string;
-  t: number[];
-  min: (number | string | null)[];
-  max: (number | string | null)[];
-  last: (number | string | null)[];
-  n: number[];
+  t: number[]; // seconds of the run
+  min?: Num[];
+  max?: Num[];
+  last?: Num[];
+  n?: number[];
+  state?: string[]; // of a state: its transitions
   cause: string | null;
 }
 export interface SeriesReply { through: string; series: Record<string, Series> }

@@ -13,7 +13,7 @@ import { helpPage } from './pages/help';
 import { replayPage } from './pages/replay';
 import { rigPage } from './pages/rig';
 import { runsPage } from './pages/runs';
-import { columns, seriesRows } from './ring';
+import { seriesNames, seriesRows } from './ring';
 import { Sound } from './sound';
 import { apply, dataAge, freshness, hostNow, newModel, runSeconds } from './state';
 import './style.css';
@@ -78,7 +78,7 @@ function run(rig: RigInfo, rigs: RigInfo[]): void {
     filledFor = key;
     const start = seconds(r.started);
     const to = Math.max(1, hostNow(model, performance.now()) - start + 1);
-    api.series(r.id, columns, Math.max(0, to - 600), to, 2000).then((reply) => {
+    api.series(r.id, seriesNames, Math.max(0, to - 600), to, 2000).then((reply) => {
       model.ring.fill(seriesRows(reply, start));
       dirty = true;
     }, () => { filledFor = ''; });
@@ -213,7 +213,7 @@ function header(rigs: RigInfo[], rig: RigInfo, d: Display, sound: Sound): View &
       if (s && s.rules_unknown > 0) bad.push(`${s.rules_unknown} rule${s.rules_unknown > 1 ? 's' : ''} unknown`);
       text(conditions, bad.length > 0 ? `▲ ${bad.join(' · ')}` : s?.recording ? '● recording' : '');
       attr(conditions, 'data-bad', bad.length > 0);
-      text(facts, m.run && !m.run.ended ? `run ${m.run.number} · ${duration(runSeconds(m))} · ${m.run.engine}` : m.rig ? `no run · ${m.rig.engine_model} ${m.rig.engine_serial}` : '');
+      text(facts, m.run && !m.run.ended ? `live run ${m.run.number} · ${duration(runSeconds(m))} · ${m.run.engine}` : m.rig ? `no run · ${m.rig.engine_model} ${m.rig.engine_serial}` : '');
       text(files, m.rig ? `limits ${m.rig.limits_version || '–'} · files ${m.configHash.slice(0, 8)}` : '');
     },
     destroy: () => undefined,

@@ -85,10 +85,13 @@ export function pointRow(p: PointFrame): number[] {
   return row;
 }
 
+/** What a /series request has to name for seriesRows. */
+export const seriesNames = [...columns, 'choke_state'] as const;
+
 /**
- * Rows of a /series reply of the columns; `start` is the time of second 0 of the
- * run. A bucket of several samples becomes two rows, its lowest and its highest
- * values, so that no excursion is lost. Choked is judged by the margin's sign.
+ * Rows of a /series reply; `start` is the time of second 0 of the run. A bucket
+ * of several samples becomes two rows, its lowest and its highest values, so that
+ * no excursion is lost. Choked comes from the transitions of the choke state.
  */
 export function seriesRows(reply: SeriesReply, start: number): { t: number; row: number[] }[] {
   const rows = new Map<number, number[]>();
@@ -97,18 +100,28 @@ export function seriesRows(reply: SeriesReply, start: number): { t: number; row:
     if (!row) rows.set(t, (row = new Array<number>(columns.length + 1).fill(NaN)));
     if (typeof v !== 'number') return;
     row[k] = v;
-    if (columns[k] === 'choke_margin_percent') row[columns.length] = v >= 0 ? 1 : 0;
   };
   columns.forEach((name, k) => {
     const s = reply.series[name];
     if (!s) return;
     s.t.forEach((t, i) => {
       const next = s.t[i + 1] ?? t;
-      put(start + t, k, s.min[i]);
-      if ((s.n[i] ?? 1) > 1 && next > t) put(start + (t + next) / 2, k, s.max[i]);
+      put(start + t, k, s.min?.[i]);
+      if ((s.n?.[i] ?? 1) > 1 && next > t) put(start + (t + next) / 2, k, s.max?.[i]);
     });
   });
-  return [...rows].map(([t, row]) => ({ t, row })).sort((a, b) => a.t - b.t);
+  const sorted = [...rows].map(([t, row]) => ({ t, row })).sort((a, b) => a.t - b.t);
+  const states = reply.series['choke_state'];
+  let next = 0;
+  let choked = NaN;
+  for (const r of sorted) {
+    for (; states && next < states.t.length && start + (states.t[next] as number) <= r.t; next++) {
+      const word = states.state?.[next];
+      choked = word === 'choked' ? 1 : word === 'unknown' ? NaN : 0;
+    }
+    r.row[columns.length] = choked;
+  }
+  return sorted;
 }
 
 export interface Window { t: number[]; y: (number | null)[][] }

@@ -132,7 +132,7 @@ function remember(m: Model, e: HistoryEntry): void {
 }
 
 function flag(m: Model, f: Flag): void {
-  if (m.flags.some((g) => g.id === f.id && g.t === f.t)) return;
+  if (Number.isNaN(f.t) || m.flags.some((g) => g.id === f.id && g.t === f.t)) return;
   let i = m.flags.length;
   while (i > 0 && (m.flags[i - 1] as Flag).t > f.t) i--;
   m.flags.splice(i, 0, f);

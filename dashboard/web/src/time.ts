@@ -2,7 +2,8 @@
 // the double keeps a quarter of a microsecond, far below a scan.
 
 /** Seconds since 1970 of an RFC 3339 time with up to nanoseconds; NaN if it is none. */
-export function seconds(t: string): number {
+export function seconds(t: string | null): number {
+  if (t === null) return NaN;
   const dot = t.indexOf('.');
   if (dot < 0) return Date.parse(t) / 1000;
   let end = dot + 1;

@@ -71,6 +71,11 @@ export function significant(v: number | null | undefined, digits = 5): string {
   return fixed(v, Math.min(6, Math.max(0, digits - 1 - Math.max(magnitude, 0))));
 }
 
+/** A round figure without trailing zeros, for the ends of a range. */
+export function plain(v: number): string {
+  return fixed(v, 2).replace(/\.?0+$/, '');
+}
+
 /** Bytes as kB, MB or GB (powers of 1000). */
 export function bytes(n: number): string {
   if (n >= 1e9) return `${fixed(n / 1e9, 2)} GB`;

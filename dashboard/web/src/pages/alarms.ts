@@ -3,13 +3,13 @@
 
 import { isStanding, needsAcknowledge, priorityLook, standing, stateWord } from '../alarms';
 import type { Display } from '../context';
-import { type View, attr, h, refill } from '../dom';
+import { type View, attr, column, h, refill } from '../dom';
 import type { Alarm } from '../frames';
 import { clock, seconds } from '../time';
 import { significant } from '../units';
 import { veil } from '../watch/display';
 
-const head = (...names: string[]): HTMLElement => h('thead', {}, h('tr', {}, ...names.map((n) => h('th', { scope: 'col' }, n))));
+const head = (...names: string[]): HTMLElement => h('thead', {}, h('tr', {}, ...names.map(column)));
 
 export function priorityBadge(a: Alarm): HTMLElement {
   const look = priorityLook[a.priority];
@@ -22,9 +22,9 @@ export function alarmsPage(d: Display): View {
   const past = h('tbody');
   const cover = veil(h('div', { class: 'page' },
     h('h1', {}, 'Alarms'),
-    h('section', {}, h('h2', {}, 'Standing'), h('table', { class: 'list alarms' }, head('Priority', 'State', 'Raised, UTC', 'Alarm and caution', 'Response', 'Value', ''), now_)),
-    h('section', {}, h('h2', {}, 'Not annunciated: shelved, suppressed by design, out of service'), h('table', { class: 'list' }, head('Priority', 'State', 'Until', 'Alarm', 'Reason'), quiet)),
-    h('section', {}, h('h2', {}, 'History since this page was opened'), h('table', { class: 'list' }, head('Time, UTC', 'Priority', 'Alarm', 'From', 'To', 'Note'), past))));
+    h('section', {}, h('h2', {}, 'Standing'), h('table', { class: 'list alarms' }, head('Priority', 'State', '>Raised, UTC', 'Alarm and caution', 'Response', '>Value', ''), now_)),
+    h('section', {}, h('h2', {}, 'Not annunciated: shelved, suppressed by design, out of service'), h('table', { class: 'list' }, head('Priority', 'State', '>Until', 'Alarm', 'Reason'), quiet)),
+    h('section', {}, h('h2', {}, 'History since this page was opened'), h('table', { class: 'list' }, head('>Time, UTC', 'Priority', 'Alarm', 'From', 'To', 'Note'), past))));
   const empty = (text: string, n: number): Node[] => [h('tr', {}, h('td', { colspan: String(n), class: 'extra' }, text))];
 
   function ack(a: Alarm): Node {

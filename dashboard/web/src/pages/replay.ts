@@ -7,7 +7,7 @@ import { type View, attr, h, text } from '../dom';
 import type { Frame, RunSummary } from '../frames';
 import type { Palette } from '../palette';
 import { Player, speeds } from '../player';
-import { columns, seriesRows } from '../ring';
+import { seriesNames, seriesRows } from '../ring';
 import type { Flag } from '../state';
 import { dateClock, duration, seconds } from '../time';
 import { surface } from '../watch/canvas';
@@ -23,7 +23,7 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
   let inner: View | null = null;
   let last = NaN;
   let events: Flag[] = [];
-  let chokeRows: { t: number; margin: number }[] = [];
+  let choked: [number, number][] = []; // periods, seconds of the run
   let scrubbing: number | null = null;
   const over = new AbortController();
 
@@ -82,7 +82,8 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
   async function open(): Promise<void> {
     run = await api.runSummary(runID);
     start = seconds(run.started);
-    attr(scrub, 'max', run.duration_s);
+    const length = run.duration_s ?? Math.max(1, Date.now() / 1000 - start); // a run that goes on: up to now
+    attr(scrub, 'max', length);
     const p = new Player({
       async window(from, to, signal) {
         const frames: Frame[] = [];
@@ -91,31 +92,32 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
       },
       async before(to, signal) {
         if (to <= 0) return [];
-        return seriesRows(await api.series(runID, columns, Math.max(0, to - history), to, 1500, signal), start);
+        return seriesRows(await api.series(runID, seriesNames, Math.max(0, to - history), to, 1500, signal), start);
       },
-    }, start, run.duration_s);
+    }, start, length);
     const display: Display = { rig, model: () => p.model, fresh: () => ({ kind: 'replay' }), palette, acknowledger: null };
     inner = watchDisplay(display, null);
     body.replaceChildren(inner.el);
     player = p;
     void p.seek(0, now());
-    void overview(run.duration_s);
+    void overview(length);
   }
 
   /** Choke shading and flags of the whole run for the scrub bar. */
   async function overview(length: number): Promise<void> {
     try {
-      const reply = await api.series(runID, ['choke_margin_percent'], 0, length, 1500, over.signal);
-      const s = reply.series['choke_margin_percent'];
-      chokeRows = (s?.t ?? []).map((t, i) => ({ t, margin: typeof s?.last[i] === 'number' ? (s.last[i] as number) : NaN }));
+      const s = (await api.series(runID, ['choke_state'], 0, length, 1500, over.signal)).series['choke_state'];
+      choked = (s?.t ?? []).flatMap((t, i) => (s?.state?.[i] === 'choked' ? [[t, s.t[i + 1] ?? length] as [number, number]] : []));
     } catch { /* the bar then has no shading; the display itself has it */ }
     const found: Flag[] = [];
+    let others = 0; // frames that were not asked for
     try {
       await api.messages(runID, 0, length + 1, 'alarm,mark', over.signal, (f) => {
         if (f.kind === 'alarm' && f.alarm.state === 'unacknowledged') found.push({ t: seconds(f.alarm.raised), kind: f.alarm.priority, text: f.alarm.title, id: f.alarm.id });
         if (f.kind === 'mark') found.push({ t: seconds(f.t), kind: 'mark', text: f.mark.text, id: `mark ${f.t}` });
         events = found.sort((a, b) => a.t - b.t);
-        return true;
+        if (f.kind === 'operating_point') others++;
+        return others < 20_000; // a server that does not select kinds must not send a whole day
       });
     } catch { /* left page or lost server: what was found so far stands */ }
   }
@@ -129,10 +131,7 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
     c.fillStyle = p.panel;
     c.fillRect(8, 0, width - 16, height);
     c.fillStyle = p.choked;
-    chokeRows.forEach((r, i) => {
-      const next = chokeRows[i + 1];
-      if (r.margin >= 0 && next) c.fillRect(x(r.t), 0, Math.max(1, x(next.t) - x(r.t) + 0.5), height);
-    });
+    for (const [a, b] of choked) c.fillRect(x(a), 0, Math.max(1, x(b) - x(a)), height);
     c.textAlign = 'center';
     c.textBaseline = 'top';
     c.font = '10px system-ui, sans-serif';

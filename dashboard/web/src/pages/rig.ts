@@ -3,12 +3,12 @@
 
 import { api } from '../api';
 import type { Display } from '../context';
-import { type View, attr, h, refill, text } from '../dom';
+import { type View, attr, column, h, refill, text } from '../dom';
 import { believable } from '../state';
-import { age, fixed, inUnit, significant } from '../units';
+import { age, fixed, inUnit, plain, significant } from '../units';
 import { veil } from '../watch/display';
 
-const head = (...names: string[]): HTMLElement => h('thead', {}, h('tr', {}, ...names.map((n) => h('th', { scope: 'col' }, n))));
+const head = (...names: string[]): HTMLElement => h('thead', {}, h('tr', {}, ...names.map(column)));
 
 export function rigPage(d: Display): View {
   const facts = h('dl', { class: 'facts' });
@@ -21,12 +21,12 @@ export function rigPage(d: Display): View {
   const cover = veil(h('div', { class: 'page' },
     h('h1', {}, 'Rig'),
     h('div', { class: 'columns' },
-      h('div', {}, h('section', {}, h('h2', {}, 'Channels'), h('table', { class: 'list channels' }, head('Channel', 'Station', 'Raw', 'Value', 'Unit', 'Quality', 'Age', 'Range'), body))),
+      h('div', {}, h('section', {}, h('h2', {}, 'Channels'), h('table', { class: 'list channels' }, head('Channel', '', 'Station', '>Raw', '>Value', 'Unit', 'Quality', '>Age', '>Range'), body))),
       h('div', {},
         h('section', {}, h('h2', {}, 'Rig and files'), facts, h('p', {}, runButton, ' ', trouble)),
-        h('section', {}, h('h2', {}, 'Sources'), h('table', { class: 'list' }, head('Topic', 'Age', 'Messages', 'Clock skew', ''), sources)),
+        h('section', {}, h('h2', {}, 'Sources'), h('table', { class: 'list' }, head('Topic', '>Age', '>Messages', '>Clock skew', ''), sources)),
         h('section', {}, h('h2', {}, 'Broker sessions'), h('table', { class: 'list' }, head('Topic filter', ''), sessions)),
-        h('section', {}, h('h2', {}, 'Counters'), h('table', { class: 'list' }, head('What', 'Count'), counters))))));
+        h('section', {}, h('h2', {}, 'Counters'), h('table', { class: 'list' }, head('What', '>Count'), counters))))));
   interface Row { el: HTMLElement; raw: HTMLElement; value: HTMLElement; sign: HTMLElement; quality: HTMLElement; age: HTMLElement }
   let rows = new Map<string, Row>();
   let drawnAt = -Infinity;
@@ -51,8 +51,8 @@ export function rigPage(d: Display): View {
         rows = new Map();
         return m.channels.map((c) => {
           const r: Row = { el: h('tr'), raw: h('td', { class: 'num' }), value: h('td', { class: 'num' }), sign: h('td'), quality: h('td'), age: h('td', { class: 'num' }) };
-          const range = [c.low, c.high].map((v) => (v === null ? '–' : significant(inUnit(v, c.unit, c.dimension).value, 4))).join(' … ');
-          r.el.append(h('th', { scope: 'row' }, c.id, h('div', { class: 'extra' }, c.title)), h('td', {}, c.station || (c.recorded_only ? 'recorded only' : '')), r.raw, r.value, r.sign, r.quality, r.age, h('td', { class: 'num' }, range));
+          const range = [c.low, c.high].map((v) => (v === null ? '–' : plain(inUnit(v, c.unit, c.dimension).value))).join(' … ');
+          r.el.append(h('th', { scope: 'row' }, c.id), h('td', { class: 'extra title', title: c.title }, c.title), h('td', {}, c.station.replaceAll('_', ' ') || (c.recorded_only ? 'recorded only' : '')), r.raw, r.value, r.sign, r.quality, r.age, h('td', { class: 'num' }, range));
           rows.set(c.id, r);
           return r.el;
         });

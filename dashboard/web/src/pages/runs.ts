@@ -1,7 +1,7 @@
 // Runs: what is stored, newest first, each with its replay.
 
 import { api } from '../api';
-import { type View, attr, h, text } from '../dom';
+import { type View, attr, column, h, text } from '../dom';
 import type { RunSummary } from '../frames';
 import { dateClock, duration, seconds } from '../time';
 import { bytes } from '../units';
@@ -12,13 +12,13 @@ export function runsPage(): View {
   const body = h('tbody');
   const trouble = h('p', { class: 'trouble', role: 'status' });
   const el = h('div', { class: 'page' }, h('h1', {}, 'Runs'), trouble,
-    h('table', { class: 'list' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', 'Started, UTC', 'Duration', 'Alarms', 'State', 'Size', 'Notes', ''].map((n) => h('th', { scope: 'col' }, n)))), body));
+    h('table', { class: 'list' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started, UTC', '>Duration', '>Alarms', 'State', '>Size', 'Notes', ''].map(column))), body));
   let askedAt = -Infinity;
   let key = '';
 
   const row = (r: RunSummary): Node => h('tr', {},
-    h('th', { scope: 'row' }, `${r.number}`, h('div', { class: 'extra' }, r.id)),
-    h('td', {}, r.engine), h('td', { class: 'num' }, dateClock(seconds(r.started))), h('td', { class: 'num' }, duration(r.duration_s)),
+    h('th', { scope: 'row' }, r.id, r.title ? h('div', { class: 'extra' }, r.title) : ''),
+    h('td', {}, r.engine), h('td', { class: 'num' }, dateClock(seconds(r.started))), h('td', { class: 'num' }, duration(r.duration_s ?? Date.now() / 1000 - seconds(r.started))),
     h('td', { class: 'num' }, String(r.alarms)), h('td', {}, r.state === 'active' ? '● recording' : 'ended', r.keep ? h('div', { class: 'extra' }, 'keep') : ''),
     h('td', { class: 'num' }, bytes(r.size_bytes)), h('td', {}, r.notes, r.tags && r.tags.length > 0 ? h('div', { class: 'extra' }, r.tags.join(', ')) : ''),
     h('td', {}, h('a', { class: 'button', href: `#/run/${encodeURIComponent(r.id)}`, 'data-q': 'replay', 'data-state': r.state }, 'Replay')));

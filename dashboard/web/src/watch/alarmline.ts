@@ -39,6 +39,7 @@ export function alarmLine(d: Display): View {
     text(state, a ? `${stateWord[a.state]}${a.past ? ', past' : ''} · ${clock(seconds(a.raised))}` : '');
     text(title, a ? (a.text || a.title) : 'No alarm standing');
     text(caution, a?.caution ?? '');
+    attr(title.parentElement as HTMLElement, 'title', a ? `${a.text}\n${a.caution}\n${a.response}` : null);
     text(response, a ? a.response || (a.unknown ? 'Raised because an input is missing: the rule cannot be judged.' : '') : '');
     if (d.acknowledger) {
       const sending = a ? d.acknowledger.state(a) : 'idle';

@@ -11,8 +11,8 @@ const usable = (quality: string): boolean => quality === 'good' || quality === '
 const valuesTimeout = 1500;
 
 export function ledger(d: Display): View {
-  const bars = h('div', { class: 'bars' });
-  const limits = h('div', { class: 'limits' });
+  const bars = h('div', { class: 'probebars' });
+  const limits = h('div', { class: 'limits', 'aria-hidden': 'true' });
   const indicated = h('span', { class: 'value', 'data-q': 'egt' }, '–');
   const egtCause = h('div', { class: 'extra' });
   const spread = h('span', { class: 'value', 'data-q': 'spread' }, '–');
@@ -22,7 +22,7 @@ export function ledger(d: Display): View {
     h('div', { class: 'egt' },
       h('div', { class: 'label' }, 'Indicated EGT'), h('div', { class: 'egtvalue' }, indicated, ' ', h('span', { class: 'unit' }, '°C')), egtCause,
       h('div', { class: 'label' }, 'Spread'), h('div', {}, spread, ' ', h('span', { class: 'unit' }, 'K')), probesUsed),
-    h('div', { class: 'probes' }, limits, bars),
+    h('div', { class: 'probes' }, bars, limits),
     h('div', { class: 'bands' }, h('table', {},
       h('thead', {}, h('tr', {}, ...['EGT band', 'limit', 'this excursion, of allowance', 'in run', 'peak', 'count'].map((t) => h('th', { scope: 'col' }, t)))),
       rows)));
@@ -38,17 +38,20 @@ export function ledger(d: Display): View {
     const p = believed ? m.point : null;
     const probes = m.channels.filter((c) => c.station === 'egt');
     const top = Math.max(700, ...m.bands.map((b) => celsius(b.limit_k))) + 60;
-    const height = (c: number): string => `${Math.min(100, Math.max(0, (c / top) * 100)).toFixed(1)}%`;
+    const share = (c: number): string => `${Math.min(100, Math.max(0, (c / top) * 100)).toFixed(1)}%`;
 
-    refill(limits, `${top}|${m.bands.map((b) => b.name + b.limit_k).join()}`, () => m.bands.map((b) => {
-      const mark = h('div', { class: 'limit', title: b.name }, h('span', {}, `${fixed(celsius(b.limit_k), 0)}${b.kind === 'start' ? ' start' : ''}`));
-      mark.style.bottom = height(celsius(b.limit_k));
+    const holding = m.bands.filter((b) => m.ledgers.find((l) => l.name === b.name)?.holds !== false);
+    refill(limits, `${top}|${holding.map((b) => b.name + b.limit_k).join()}`, () => [...holding].sort((a, b) => a.limit_k - b.limit_k).map((b, i, all) => {
+      // Limits lie close: the outer figures stand outside their lines.
+      const side = i === 0 && all.length > 1 ? 'before' : i === all.length - 1 && i > 0 ? 'after' : 'over';
+      const mark = h('div', { class: `limit ${side}` }, h('span', {}, fixed(celsius(b.limit_k), 0)));
+      mark.style.left = share(celsius(b.limit_k));
       return mark;
     }));
     refill(bars, probes.map((c) => c.id).join(), () => {
       drawn = probes.map((c) => {
-        const bar: Bar = { el: h('div', { class: 'bar' }), fill: h('div', { class: 'fill' }), value: h('div', { class: 'figure' }, '–'), mark: h('div', { class: 'hot' }) };
-        bar.el.append(h('div', { class: 'column' }, bar.fill), bar.mark, bar.value, h('div', { class: 'name', title: c.title }, c.id.replace(/^egt_?/, '') || c.id));
+        const bar: Bar = { el: h('div', { class: 'probe' }), fill: h('div', { class: 'fill' }), value: h('span', { class: 'figure' }, '–'), mark: h('span', { class: 'hot' }) };
+        bar.el.append(h('div', { class: 'name', title: c.title }, c.id), h('div', { class: 'column' }, bar.fill), h('div', {}, bar.value, ' ', bar.mark));
         return bar;
       });
       return drawn.length > 0 ? drawn.map((b) => b.el) : [h('div', { class: 'extra' }, 'no probe channels at station EGT')];
@@ -62,11 +65,11 @@ export function ledger(d: Display): View {
     drawn.forEach((bar, i) => {
       const v = readings[i] ?? null;
       const quality = m.values[probes[i]?.id ?? '']?.quality ?? 'missing';
-      style(bar.fill, 'height', v === null ? '100%' : height(v));
+      style(bar.fill, 'width', v === null ? '100%' : share(v));
       attr(bar.el, 'data-none', v === null);
       attr(bar.el, 'title', v === null ? (current ? quality.replaceAll('_', ' ') : 'not present') : null);
       text(bar.value, fixed(v, 0));
-      text(bar.mark, i === hottest ? '▼ hottest' : v === null && current ? quality.replaceAll('_', ' ') : '');
+      text(bar.mark, i === hottest ? '◂ hottest' : v === null && current ? quality.replaceAll('_', ' ') : '');
     });
 
     const egt = p?.egt_indicated_k;
@@ -90,10 +93,11 @@ export function ledger(d: Display): View {
     for (const l of m.ledgers) {
       const r = tableRows.get(l.name);
       if (!r) continue;
-      const share = l.allowance_s > 0 ? Math.min(1, l.elapsed_s / l.allowance_s) : l.elapsed_s > 0 || l.exceeded ? 1 : 0;
-      style(r.fill, 'width', `${(share * 100).toFixed(1)}%`);
+      const used = l.allowance_s > 0 ? Math.min(1, l.elapsed_s / l.allowance_s) : l.elapsed_s > 0 || l.exceeded ? 1 : 0;
+      style(r.fill, 'width', `${(used * 100).toFixed(1)}%`);
+      attr(r.el, 'data-off', l.holds === false);
       attr(r.el, 'data-level', l.exceeded ? 'exceeded' : l.over ? 'over' : null);
-      text(r.figure, `${l.exceeded ? '■ exceeded ' : l.over ? '▲ above ' : ''}${fixed(l.elapsed_s, 1)} s ${l.allowance_s > 0 ? `of ${fixed(l.allowance_s, 1)} s` : '(none allowed)'}${l.assumed_s > 0 ? `, ${fixed(l.assumed_s, 1)} s assumed` : ''}`);
+      text(r.figure, l.holds === false && !l.exceeded && !l.over ? 'does not hold now' : `${l.exceeded ? '■ exceeded ' : l.over ? '▲ above ' : ''}${fixed(l.elapsed_s, 1)} s ${l.allowance_s > 0 ? `of ${fixed(l.allowance_s, 1)} s` : '(none allowed)'}${l.assumed_s > 0 ? `, ${fixed(l.assumed_s, 1)} s assumed` : ''}`);
       text(r.run, `${fixed(l.run_total_s, 1)}${l.per_run_s > 0 ? ` of ${fixed(l.per_run_s, 0)}` : ''} s`);
       text(r.peak, l.peak_k === null ? '–' : `${fixed(celsius(l.peak_k), 0)} °C`);
       text(r.count, String(l.excursions));

@@ -28,9 +28,11 @@ export function numbers(d: Display): View {
   const npr = cell('NPR', 'npr');
   const choke = cell('Choke NPR', 'choke-npr');
   const flow = cell('Nozzle flow W8', 'w8');
-  const thrust = cell('Gross thrust, computed', 'thrust');
+  const thrust = cell('Gross thrust', 'thrust');
   const phase = cell('Phase', 'phase');
+  phase.el.classList.add('words');
   const armed = cell('Choke watch', 'armed');
+  armed.el.classList.add('words');
   const run = cell('Run', 'run');
   const time = cell('Run clock', 'clock');
   const big = h('div', { class: 'big' },
@@ -43,10 +45,10 @@ export function numbers(d: Display): View {
     const m = d.model();
     const fresh = d.fresh(now);
     const p = believable(fresh) ? m.point : null;
-    attr(el, 'data-dim', p === null);
+    attr(el, 'data-dim', p === null || fresh.kind === 'catching_up');
     const look = stateLook(p);
     text(margin, signed(p?.choke_margin_percent, 1));
-    text(marginU, uncertainty(p?.choke_margin_percent_u95, 1, p?.choke_margin_percent_low95, p?.choke_margin_percent_high95) || (p ? 'U95 not known' : ''));
+    text(marginU, uncertainty(p?.choke_margin_percent_u95, 1, p?.choke_margin_percent_low95, p?.choke_margin_percent_high95) || (typeof p?.choke_margin_percent === 'number' ? 'U95 not known' : ''));
     text(marginPa, typeof p?.choke_margin_pa === 'number' ? `p* − back pressure ${signed(kPa(p.choke_margin_pa), 1)} kPa` : '');
     attr(margin.parentElement as HTMLElement, 'data-none', (p?.choke_margin_percent ?? null) === null);
     text(shape, look.marginal ? '◐' : look.shape);
@@ -64,7 +66,7 @@ export function numbers(d: Display): View {
     put(npr, fixed(p?.npr, 3), '', uncertainty(p?.npr_u95, 3));
     put(choke, fixed(p?.choke_npr, 3), '', p ? sourceWord(p.choke_npr_from) : '');
     put(flow, fixed(p?.mass_flow_kg_s, 3), 'kg/s', uncertainty(p?.mass_flow_kg_s_u95, 3));
-    put(thrust, typeof p?.gross_thrust_n === 'number' ? fixed(kN(p.gross_thrust_n), 2) : '–', 'kN', typeof p?.gross_thrust_n_u95 === 'number' ? uncertainty(kN(p.gross_thrust_n_u95), 2) : '');
+    put(thrust, typeof p?.gross_thrust_n === 'number' ? fixed(kN(p.gross_thrust_n), 2) : '–', 'kN', `${typeof p?.gross_thrust_n_u95 === 'number' ? `${uncertainty(kN(p.gross_thrust_n_u95), 2)}, ` : ''}computed`);
     put(phase, p ? p.phase : '–', '', p && !p.lit ? 'not lit' : '');
     put(armed, p ? (p.choke_armed ? '● armed' : '○ not armed') : '–', '', p && m.armedAbove !== null ? `above ${fixed(m.armedAbove, 0)} rpm` : '');
     put(run, m.run ? `${m.run.number}` : 'none', '', m.run ? m.run.id : 'between runs');

@@ -100,7 +100,7 @@ export function throatPlane(d: Display): View {
     c.textAlign = 'right';
     c.fillText('nozzle pressure ratio NPR', right, height - 2);
     c.save();
-    c.translate(11, top);
+    c.translate(9, top);
     c.rotate(-Math.PI / 2);
     c.textBaseline = 'middle';
     c.textAlign = 'right';
@@ -191,6 +191,11 @@ export function throatPlane(d: Display): View {
         const lx = flat ? (toLeft ? x(npr) + 8 : x(npr)) : x(npr) + 14;
         c.fillStyle = pal.text;
         c.textBaseline = 'middle';
+        c.strokeStyle = pal.panel; // a halo, where a label crosses a line
+        c.lineWidth = 4;
+        c.lineJoin = 'round';
+        if (computed !== null) c.strokeText('○ computed', lx, flat ? y(anchor) - 18 : y(anchor) + 2);
+        if (independent !== null) c.strokeText('● air + fuel flow', lx, flat ? y(anchor) + 22 : y(anchor) + 18);
         if (computed !== null) c.fillText('○ computed', lx, flat ? y(anchor) - 18 : y(anchor) + 2);
         if (independent !== null) {
           c.fillStyle = pal.data;
@@ -203,9 +208,10 @@ export function throatPlane(d: Display): View {
       c.fillStyle = pal.text;
       c.textAlign = 'right';
       c.textBaseline = 'bottom';
-      c.fillText(`choke NPR ${fixed(choke, 3)}`, x(choke) - 5, bottom - 20);
+      const base = right - x(choke) < 200 ? bottom - 36 : bottom - 5; // above the notes where they need the width
+      c.fillText(`choke NPR ${fixed(choke, 3)}`, x(choke) - 5, base - 15);
       c.fillStyle = pal.soft;
-      c.fillText(sourceWord(p?.choke_npr_from ?? 'none'), x(choke) - 5, bottom - 5);
+      c.fillText(sourceWord(p?.choke_npr_from ?? 'none'), x(choke) - 5, base);
     }
     c.restore();
 

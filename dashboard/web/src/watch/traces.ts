@@ -38,8 +38,8 @@ const plots: Plot[] = [
     lines: [{ column: 'choke_margin_percent', name: 'margin', show: (v) => signed(v, 1) }],
   },
   {
-    title: 'Indicated EGT', unit: '°C', convert: celsius, cover: (m) => [0, Math.max(800, ...m.bands.map((b) => celsius(b.limit_k) + 20))],
-    limits: (m) => m.bands.map((b) => ({ v: celsius(b.limit_k), name: `${fixed(celsius(b.limit_k), 0)}${b.kind === 'start' ? ' start' : ''}` })),
+    title: 'Indicated EGT', unit: '°C', convert: celsius, cover: (m) => [0, Math.max(800, ...m.bands.map((b) => celsius(b.limit_k) + 70))],
+    limits: (m) => m.bands.map((b) => ({ v: celsius(b.limit_k), name: `${fixed(celsius(b.limit_k), 0)} ${b.kind}` })),
     lines: [{ column: 'egt_indicated_k', name: 'EGT', show: (v) => fixed(v, 0) }],
   },
   {
@@ -128,7 +128,7 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
       host.append(row);
       const axis: uPlot.Axis = { stroke: p.soft, font: font(12), grid: { stroke: p.grid, width: 1 }, ticks: { show: false } };
       const chart = new uPlot({
-        width: Math.max(60, box.clientWidth || width - 130), height: 80, padding: [4, 8, 2, 0],
+        width: Math.max(60, box.clientWidth || width - 130), height: 80, padding: [9, 30, 5, 0],
         legend: { show: false },
         cursor: { sync: { key: sync.key }, drag: { x: false, y: false }, points: { show: false }, y: false },
         tzDate: (t) => uPlot.tzDate(new Date(t * 1e3), 'Etc/UTC'),
@@ -138,7 +138,7 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
         },
         axes: [
           { ...axis, show: true, size: lastRow ? axisHeight : 0, values: lastRow ? (_u, ticks) => ticks.map(clock) : () => [], space: 90 },
-          { ...axis, size: 46, space: 24, gap: 4 },
+          { ...axis, size: 46, space: 24, gap: 4, values: (_u, ticks) => ticks.map((v) => fixed(v, v % 1 === 0 ? 0 : 1)) },
         ],
         series: [{}, ...plot.lines.map((_, k) => ({ stroke: k === 0 ? p.data : p.data2, width: k === 0 ? 1.5 : 1.25, ...(k > 0 ? { dash: [6, 3] } : {}), points: { show: false }, spanGaps: false }))],
         hooks: {
@@ -178,9 +178,8 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
     c.font = font(11 * ratio);
     c.textAlign = 'left';
     c.textBaseline = 'bottom';
-    let free = Infinity; // labels of close limits stand side by side
-    let x = left + 4 * ratio;
-    for (const l of plot.limits(d.model()).sort((a, b) => a.v - b.v)) {
+    const limits = plot.limits(d.model()).sort((a, b) => a.v - b.v);
+    for (const l of limits) {
       const y = u.valToPos(l.v, 'y', true);
       if (y < top || y > top + hgt) continue;
       c.setLineDash(l.name ? [2 * ratio, 3 * ratio] : []);
@@ -188,11 +187,9 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
       c.moveTo(left, y);
       c.lineTo(left + w, y);
       c.stroke();
-      if (!l.name) continue;
-      x = free - y < 13 * ratio ? x + 64 * ratio : left + 4 * ratio;
-      c.fillText(l.name, x, y - ratio);
-      free = y;
     }
+    const highest = limits[limits.length - 1]; // limits lie close: one text above them all
+    if (highest?.name) c.fillText(limits.map((l) => l.name).join(' · '), left + 4 * ratio, u.valToPos(highest.v, 'y', true) - ratio);
     c.restore();
   }
 
@@ -205,6 +202,7 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
     c.textAlign = 'center';
     c.textBaseline = 'top';
     c.lineWidth = ratio;
+    c.setLineDash([]);
     for (const f of flags) {
       const x = u.valToPos(f.t, 'x', true);
       if (x < left || x > left + w) continue;
