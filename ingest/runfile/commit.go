@@ -51,8 +51,9 @@ type Batch struct {
 	// (ingest.KindGap) may leave one before itself. Into an empty file the first
 	// may have any number.
 	Records []ingest.Record
-	Chunks  []Chunk
-	Events  []Event
+	// Chunks and events depend on a record: an empty file takes none.
+	Chunks []Chunk
+	Events []Event
 	// Checkpoint is the state after the last record of the batch; a batch must
 	// end where a checkpoint is taken.
 	Checkpoint *Checkpoint
@@ -74,6 +75,9 @@ func (f *File) Commit(ctx context.Context, b Batch) error {
 		size = t.bytes
 		if c := b.Checkpoint; c != nil && t.seq == 0 {
 			t.seq, t.host = c.Seq, c.Host // an empty file may begin with a checkpoint
+		}
+		if t.seq == 0 && len(b.Chunks)+len(b.Events) > 0 {
+			return fmt.Errorf("chunks or events before the first record: %w", ErrOrder)
 		}
 		for _, c := range b.Chunks {
 			c.Seq = t.seq

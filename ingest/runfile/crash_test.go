@@ -134,7 +134,7 @@ func wantWhole(t *testing.T, f *runfile.File, acked uint64) {
 }
 
 func TestKilledWhileRecording(t *testing.T) {
-	kills := 40
+	kills := 32
 	if testing.Short() {
 		kills = 8
 	}
@@ -207,8 +207,7 @@ func recordAndKill(t *testing.T, path string, lines int, while time.Duration) (a
 }
 
 // A power cut leaves any beginning of what was written to the log since the
-// last sync, which never reaches back before a commit that has returned. So for
-// every cut of the log the file must be whole, up to the commits it then holds.
+// last sync, and a sync comes before a commit returns. So for every cut of the log the file must be whole, up to the commits it then holds.
 func TestLogCutAnywhere(t *testing.T) {
 	f := create(t, "run.db", runfile.Options{})
 	defer f.Close()

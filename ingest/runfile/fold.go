@@ -1,12 +1,15 @@
 package runfile
 
-import "context"
+import (
+	"context"
+	"errors"
+)
 
 // Bounds of the log ("-wal").
 const (
 	foldBytes = 4 << 20 // fold when this much has been committed …
 	foldEvery = 64      // … or after this many commits, counted as bytes each
-	logFrames = 4096    // pages (64 MiB): above it the writer is held up until the log is empty
+	logFrames = 4096    // pages (64 MiB): above it commits are held up for a moment
 )
 
 // due notes that about size bytes were committed and wakes Run when folding is
@@ -41,8 +44,8 @@ func (f *File) Run(ctx context.Context) {
 
 // Fold moves what it can from the log into the file now. It is what Run does,
 // for an owner that rather calls it. It waits for nobody, unless the log has
-// grown over 64 MiB: then it keeps the writer out (at most 100 ms for readers
-// and the time to move what is left) so that the log can begin again.
+// grown over 64 MiB: then it takes a writer's turn, for the time to move the
+// rest and at most 100 ms for readers, so that the log can begin again.
 func (f *File) Fold(ctx context.Context) error {
 	if f.fold == nil {
 		return f.fault("fold", "file", ErrReadOnly)
@@ -52,15 +55,29 @@ func (f *File) Fold(ctx context.Context) error {
 	f.mu.Unlock()
 	frames, err := f.checkpoint(ctx, "PASSIVE")
 	if err == nil && frames > logFrames {
-		_, err = f.checkpoint(ctx, "RESTART")
+		err = f.restart(ctx)
 	}
 	if err != nil {
 		err = f.fault("fold", "file", err)
+		if ctx.Err() != nil {
+			return err // called off, which says nothing of the disk
+		}
 	}
 	f.mu.Lock()
 	f.frames, f.foldErr = frames, err
 	f.mu.Unlock()
 	return err
+}
+
+// restart folds all of the log. It holds the writing connection meanwhile: commits
+// that follow each other closely would else never leave SQLite's lock to it.
+func (f *File) restart(ctx context.Context) error {
+	turn, err := f.write.Conn(ctx)
+	if err != nil {
+		return err
+	}
+	_, err = f.checkpoint(ctx, "RESTART")
+	return errors.Join(err, turn.Close())
 }
 
 func (f *File) checkpoint(ctx context.Context, kind string) (frames int, err error) {

@@ -69,6 +69,6 @@ func (f *File) shrink(ctx context.Context) error {
 		if err != nil || free <= pages/4 {
 			return err
 		}
-		f.due(vacuumPages << 14)
+		f.due(vacuumPages * pageSize)
 	}
 }

@@ -3,10 +3,10 @@ package runfile_test
 import (
 	"bytes"
 	"context"
+	"encoding/binary"
 	"errors"
 	"fmt"
 	"io/fs"
-	"math/rand/v2"
 	"os"
 	"path/filepath"
 	"slices"
@@ -56,11 +56,11 @@ func open(tb testing.TB, path string, mode runfile.Mode) *runfile.File {
 // message makes a record whose content follows from its number, so that any
 // copy can be checked by itself.
 func message(seq uint64, size int) ingest.Record {
-	rng := rand.New(rand.NewPCG(seq, 7))
-	payload := make([]byte, size)
-	for i := range payload {
-		payload[i] = byte(rng.IntN(20)) + 'a'
+	payload := make([]byte, 0, size+8)
+	for x := seq; len(payload) < size; x = x*6364136223846793005 + 1442695040888963407 {
+		payload = binary.LittleEndian.AppendUint64(payload, x>>16)
 	}
+	payload = payload[:size]
 	return ingest.Record{
 		Seq: seq, Host: hostOf(seq), Kind: ingest.KindMessage, Flags: ingest.FlagQoS1,
 		Topic: fmt.Sprintf("rigs/cell-9/senml/%d", seq%3), Payload: payload,
@@ -206,6 +206,10 @@ func TestClosedFileStandsAlone(t *testing.T) {
 	if err := f.Close(); err != nil {
 		t.Fatal(err)
 	}
+	var page, vacuum int // as the ceilings were measured with; 2 is incremental
+	if err := raw(t, f.Path()).QueryRowContext(t.Context(), "SELECT page_size, auto_vacuum FROM pragma_page_size, pragma_auto_vacuum").Scan(&page, &vacuum); err != nil || page != 16384 || vacuum != 2 {
+		t.Errorf("page size %d, auto vacuum %d, %v", page, vacuum, err)
+	}
 	list, err := filepath.Glob(filepath.Join(filepath.Dir(f.Path()), "*"))
 	if err != nil || len(list) != 1 || list[0] != f.Path() {
 		t.Fatalf("files %q, %v", list, err)
@@ -262,6 +266,11 @@ func TestOpenRefuses(t *testing.T) {
 func TestCommitOrder(t *testing.T) {
 	f := create(t, "run.db", runfile.Options{})
 	defer f.Close()
+	for _, b := range []runfile.Batch{{Events: []runfile.Event{{Epoch: 1}}}, {Chunks: []runfile.Chunk{{Kind: "k"}}}} {
+		if err := f.Commit(t.Context(), b); !errors.Is(err, runfile.ErrOrder) {
+			t.Errorf("outcome of no record: %v", err)
+		}
+	}
 	commit(t, f, runfile.Batch{Records: messages(5, 9, 10)})
 	early := message(10, 1)
 	early.Host = hostOf(9) - 1
