@@ -207,7 +207,8 @@ func recordAndKill(t *testing.T, path string, lines int, while time.Duration) (a
 }
 
 // A power cut leaves any beginning of what was written to the log since the
-// last sync, and a sync comes before a commit returns. So for every cut of the log the file must be whole, up to the commits it then holds.
+// last sync, and a sync comes before a commit returns. So for every cut of the
+// log the file must be whole, up to the commits it then holds.
 func TestLogCutAnywhere(t *testing.T) {
 	f := create(t, "run.db", runfile.Options{})
 	defer f.Close()
