@@ -105,7 +105,7 @@ func TestWatched(t *testing.T) {
 	cfg := load(t, "example")
 	for _, scenario := range []Scenario{Quick, Full} {
 		t.Run(scenario.String(), func(t *testing.T) {
-			r, err := New(cfg, Options{Seed: 1, Scenario: scenario, Rate: 40, Start: epoch})
+			r, err := New(cfg, Options{Seed: 1, Scenario: scenario, Rate: 20, Start: epoch})
 			if err != nil {
 				t.Fatal(err)
 			}
@@ -214,7 +214,7 @@ func TestAlarms(t *testing.T) {
 		}
 		return cfg, nil
 	})
-	r, err := New(cfg, Options{Seed: 2, Scenario: Quick, Start: epoch})
+	r, err := New(cfg, Options{Seed: 2, Scenario: Quick, Rate: 20, Start: epoch})
 	if err != nil {
 		t.Fatal(err)
 	}
