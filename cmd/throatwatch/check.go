@@ -35,7 +35,7 @@ func checkCommand(args []string, stdout, stderr io.Writer) int {
 	flags := pflag.NewFlagSet("check", pflag.ContinueOnError)
 	flags.SetOutput(stderr)
 	flags.Usage = func() {
-		fmt.Fprintf(stderr, "throatwatch check RIG.yaml [--json | --default-rules]\n\nPrints every fault of a rig file and its rule files at once, or what they say.\n%s\n\n%s", checkClosing, flags.FlagUsages())
+		say(stderr, "throatwatch check RIG.yaml [--json | --default-rules]\n\nPrints every fault of a rig file and its rule files at once, or what they say.\n"+checkClosing+"\n\n"+flags.FlagUsages())
 	}
 	asJSON := flags.Bool("json", false, "print one JSON object, values in SI")
 	asRules := flags.Bool("default-rules", false, "print the default rules of the rig, to begin a rule file from")
@@ -43,7 +43,7 @@ func checkCommand(args []string, stdout, stderr io.Writer) int {
 		if errors.Is(err, pflag.ErrHelp) {
 			return 0
 		}
-		fmt.Fprintf(stderr, "check: %v\n", err)
+		say(stderr, fmt.Sprintf("check: %v\n", err))
 		return 2
 	}
 	if flags.NArg() != 1 {
@@ -51,27 +51,35 @@ func checkCommand(args []string, stdout, stderr io.Writer) int {
 		return 2
 	}
 	bundle, cfg, faults := config.Load(flags.Arg(0))
+	var out strings.Builder
 	switch {
 	case *asRules && len(faults) == 0:
-		fmt.Fprint(stdout, bundle.DefaultRules())
+		out.WriteString(bundle.DefaultRules())
 	case *asJSON:
-		encoder := json.NewEncoder(stdout)
+		encoder := json.NewEncoder(&out)
 		encoder.SetEscapeHTML(false)
 		encoder.SetIndent("", "  ")
 		if err := encoder.Encode(newCheckReport(bundle, &cfg, faults)); err != nil {
-			fmt.Fprintf(stderr, "check: %v\n", err)
+			say(stderr, fmt.Sprintf("check: %v\n", err))
 			return 1
 		}
 	case len(faults) > 0:
-		printFaults(stdout, faults)
+		printFaults(&out, faults)
 	default:
-		printRig(stdout, bundle, &cfg)
+		printRig(&out, bundle, &cfg)
+	}
+	if _, err := io.WriteString(stdout, out.String()); err != nil {
+		say(stderr, fmt.Sprintf("check: %v\n", err))
+		return 1
 	}
 	if len(faults) > 0 {
 		return 1
 	}
 	return 0
 }
+
+// say writes a message; when even that fails there is nobody to tell.
+func say(w io.Writer, text string) { _, _ = io.WriteString(w, text) }
 
 // checkReport is what --json prints; values in SI, times in seconds.
 type checkReport struct {
@@ -167,7 +175,7 @@ func holds(b *egt.Band) string {
 }
 
 // printFaults prints each fault with its hint below, then how many there are.
-func printFaults(w io.Writer, faults []config.Fault) {
+func printFaults(w *strings.Builder, faults []config.Fault) {
 	for _, f := range faults {
 		hint := f.Hint
 		f.Hint = ""
@@ -191,7 +199,7 @@ func wrap(first, text string) string {
 	var out strings.Builder
 	out.WriteString(first)
 	column := 0
-	for _, word := range strings.Fields(text) {
+	for word := range strings.FieldsSeq(text) {
 		n := len([]rune(word))
 		switch {
 		case column == 0:
@@ -208,7 +216,7 @@ func wrap(first, text string) string {
 	return out.String()
 }
 
-func printRig(w io.Writer, bundle config.Bundle, cfg *pipeline.Config) {
+func printRig(w *strings.Builder, bundle config.Bundle, cfg *pipeline.Config) {
 	info := &cfg.Rig
 	fmt.Fprintf(w, "Rig     %s\n", phrase(info.ID, info.Title))
 	fmt.Fprintf(w, "Engine  %s\n", phrase(info.EngineModel, named("serial ", info.EngineSerial), named("build ", info.EngineBuild), named("limits ", info.LimitsVersion)))
@@ -290,7 +298,7 @@ func named(name, value string) string {
 	return name + value
 }
 
-func printNozzle(w io.Writer, cfg *pipeline.Config) {
+func printNozzle(w *strings.Builder, cfg *pipeline.Config) {
 	z := &cfg.Compute.Nozzle
 	area := fmt.Sprintf("throat %s mm² hot", number(z.ThroatArea*1e6))
 	if z.AreaBasis == nozzle.AreaCold {
@@ -334,7 +342,7 @@ func stated(u95 float64) string {
 	return "± " + number(100*u95) + " %"
 }
 
-func printChannels(w io.Writer, cfg *pipeline.Config) {
+func printChannels(w *strings.Builder, cfg *pipeline.Config) {
 	t := newTable(w, fmt.Sprintf("%d channels (U95 at the end of the range)", len(cfg.Compute.Channels)),
 		"channel", "unit", "against", "range", "U95", "hold", "topic", "")
 	for i := range cfg.Compute.Channels {
@@ -389,7 +397,7 @@ func endU95(c *calib.Spec) float64 {
 	return math.Hypot(u, c.Uncertainty.Random)
 }
 
-func printStations(w io.Writer, cfg *pipeline.Config) {
+func printStations(w *strings.Builder, cfg *pipeline.Config) {
 	s := &cfg.Compute.Stations
 	t := newTable(w, "Stations", "station", "from")
 	ids := func(channels []int) string {
@@ -424,8 +432,15 @@ func printStations(w io.Writer, cfg *pipeline.Config) {
 		name    string
 		channel int
 	}{
-		{"barometer", s.Barometer}, {"inlet temperature", s.InletT}, {"inlet pressure", s.InletP}, {"humidity", s.Humidity},
-		{"ambient temperature", s.AmbientT}, {"speed", s.Speed}, {"fuel flow", s.FuelFlow}, {"bellmouth", s.Bellmouth}, {"thrust", s.Thrust},
+		{"barometer", s.Barometer},
+		{"inlet temperature", s.InletT},
+		{"inlet pressure", s.InletP},
+		{"humidity", s.Humidity},
+		{"ambient temperature", s.AmbientT},
+		{"speed", s.Speed},
+		{"fuel flow", s.FuelFlow},
+		{"bellmouth", s.Bellmouth},
+		{"thrust", s.Thrust},
 	} {
 		if one.channel >= 0 {
 			t.row(one.name, ids([]int{one.channel}))
@@ -434,7 +449,7 @@ func printStations(w io.Writer, cfg *pipeline.Config) {
 	t.flush()
 }
 
-func printBands(w io.Writer, cfg *pipeline.Config) {
+func printBands(w *strings.Builder, cfg *pipeline.Config) {
 	bands := cfg.Compute.EGT.Bands
 	if len(bands) == 0 {
 		return
@@ -456,7 +471,7 @@ func printBands(w io.Writer, cfg *pipeline.Config) {
 }
 
 // printRules prints the rules, the most urgent first.
-func printRules(w io.Writer, cfg *pipeline.Config) {
+func printRules(w *strings.Builder, cfg *pipeline.Config) {
 	fmt.Fprintf(w, "\n%d rules\n", len(cfg.Rules))
 	for p := rules.Warning; p >= rules.Note; p-- {
 		for i := range cfg.Rules {
@@ -493,7 +508,7 @@ type textTable struct {
 	*tabwriter.Writer
 }
 
-func newTable(w io.Writer, title string, heads ...string) textTable {
+func newTable(w *strings.Builder, title string, heads ...string) textTable {
 	fmt.Fprintf(w, "\n%s\n", title)
 	t := textTable{tabwriter.NewWriter(w, 0, 8, 2, ' ', 0)}
 	t.row(heads...)
@@ -501,10 +516,10 @@ func newTable(w io.Writer, title string, heads ...string) textTable {
 }
 
 func (t textTable) row(cells ...string) {
-	fmt.Fprintln(t, strings.TrimRight("  "+strings.Join(cells, "\t"), "\t "))
+	say(t, strings.TrimRight("  "+strings.Join(cells, "\t"), "\t ")+"\n")
 }
 
-// flush cannot fail but with the terminal, and then there is nobody to tell.
+// flush cannot fail: a builder takes everything.
 func (t textTable) flush() { _ = t.Flush() }
 
 // number prints a value as a person would write it.

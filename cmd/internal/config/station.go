@@ -3,6 +3,7 @@ package config
 import (
 	"fmt"
 	"slices"
+	"strings"
 
 	"throatwatch/monitor/calib"
 	"throatwatch/monitor/egt"
@@ -153,11 +154,11 @@ func referenceWord(r calib.Reference) string {
 }
 
 func orWords(rs []calib.Reference) string {
-	text := referenceWord(rs[0])
-	for _, r := range rs[1:] {
-		text += " or " + referenceWord(r)
+	var words []string
+	for _, r := range rs {
+		words = append(words, referenceWord(r))
 	}
-	return text
+	return strings.Join(words, " or ")
 }
 
 // readEGT reads the bands of the exhaust temperature.
