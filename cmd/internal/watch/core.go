@@ -23,7 +23,8 @@ import (
 )
 
 const (
-	// chunkFor is the longest host time that the rows of a chunk span, ns.
+	// chunkFor is the host time that the rows of a chunk span at most, ns, unless
+	// Core.ChunkFor says otherwise.
 	chunkFor = int64(60e9)
 	// fullEvery is the host time between full checkpoints of the idle file, ns: a
 	// run begins with one, so this and preRoll bound what it copies.
@@ -53,9 +54,10 @@ type Batch struct {
 // Core numbers and steps records and gathers them into batches. It belongs to
 // one goroutine.
 type Core struct {
-	Machine *pipeline.Machine
-	State   *pipeline.State
-	Digest  *pipeline.Digest // of the run that is on
+	Machine  *pipeline.Machine
+	State    *pipeline.State
+	Digest   *pipeline.Digest // of the run that is on
+	ChunkFor int64            // host time that the rows of a chunk span at most, ns; NewCore sets a minute
 
 	build, goarch string
 	batch         *Batch
@@ -66,7 +68,10 @@ type Core struct {
 
 // NewCore gives a core that goes on where p is.
 func NewCore(m *pipeline.Machine, p *pipeline.Replay, build, goarch string) *Core {
-	return &Core{Machine: m, State: p.State, Digest: p.Digest, build: build, goarch: goarch, batch: &Batch{}}
+	return &Core{
+		Machine: m, State: p.State, Digest: p.Digest, ChunkFor: chunkFor,
+		build: build, goarch: goarch, batch: &Batch{},
+	}
 }
 
 // Take numbers an input, steps it and adds the record to the batch. host is ns
@@ -169,14 +174,14 @@ func (c *Core) Header() *RunHeader {
 
 // Cut gives the batch gathered so far, or nil when there is none, and begins a
 // new one. A batch that begins or ends a run must be cut before the next record:
-// Due says so. A chunk is closed when it is a minute old.
+// Due says so. A chunk is closed when it is ChunkFor old.
 func (c *Core) Cut() (*Batch, error) {
 	b := c.batch
 	if len(b.Records) == 0 {
 		return nil, nil //nolint:nilnil // nothing to store is no error
 	}
 	now := c.State.Host
-	if now-c.opened >= chunkFor || b.End != nil {
+	if now-c.opened >= c.ChunkFor || b.End != nil {
 		full := b.End != nil || !c.State.RunActive && now-c.full >= fullEvery
 		if err := c.checkpoint(full); err != nil {
 			return nil, err
