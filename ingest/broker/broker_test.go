@@ -21,29 +21,29 @@ import (
 
 const patience = 30 * time.Second
 
-func newBroker(t testing.TB, cfg broker.Config) *broker.Broker {
-	t.Helper()
-	return newLogged(t, cfg, slog.New(slog.DiscardHandler))
+func newBroker(tb testing.TB, cfg broker.Config) *broker.Broker {
+	tb.Helper()
+	return newLogged(tb, cfg, slog.New(slog.DiscardHandler))
 }
 
-func newLogged(t testing.TB, cfg broker.Config, log *slog.Logger) *broker.Broker {
-	t.Helper()
+func newLogged(tb testing.TB, cfg broker.Config, log *slog.Logger) *broker.Broker {
+	tb.Helper()
 	if cfg.Listen == "" {
 		cfg.Listen = "127.0.0.1:0"
 	}
 	if cfg.StoreDir == "" {
-		cfg.StoreDir = t.TempDir()
+		cfg.StoreDir = tb.TempDir()
 	}
 	b, err := broker.New(cfg, log)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
-	if err := b.Start(t.Context()); err != nil {
-		t.Fatal(err)
+	if err := b.Start(tb.Context()); err != nil {
+		tb.Fatal(err)
 	}
-	t.Cleanup(func() {
+	tb.Cleanup(func() {
 		if err := b.Close(); err != nil {
-			t.Error(err)
+			tb.Error(err)
 		}
 	})
 	return b
@@ -54,57 +54,57 @@ func options(b *broker.Broker, id string) *paho.ClientOptions {
 		SetCleanSession(false).SetAutoReconnect(false).SetAutoAckDisabled(true).SetConnectTimeout(patience)
 }
 
-func wait(t testing.TB, token paho.Token) {
-	t.Helper()
+func wait(tb testing.TB, token paho.Token) {
+	tb.Helper()
 	if !token.WaitTimeout(patience) {
-		t.Fatal("no answer from the broker")
+		tb.Fatal("no answer from the broker")
 	}
 	if err := token.Error(); err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 }
 
-func connect(t testing.TB, opts *paho.ClientOptions) paho.Client {
-	t.Helper()
+func connect(tb testing.TB, opts *paho.ClientOptions) paho.Client {
+	tb.Helper()
 	c := paho.NewClient(opts)
-	wait(t, c.Connect())
-	t.Cleanup(func() { c.Disconnect(100) })
+	wait(tb, c.Connect())
+	tb.Cleanup(func() { c.Disconnect(100) })
 	return c
 }
 
 // subscriber connects with a persistent session and hands its deliveries on
 // without acknowledging them.
-func subscriber(t testing.TB, opts *paho.ClientOptions, filter string) (paho.Client, <-chan paho.Message) {
-	t.Helper()
+func subscriber(tb testing.TB, opts *paho.ClientOptions, filter string) (paho.Client, <-chan paho.Message) {
+	tb.Helper()
 	got := make(chan paho.Message, 100000)
 	opts.SetDefaultPublishHandler(func(_ paho.Client, m paho.Message) { got <- m })
-	c := connect(t, opts)
+	c := connect(tb, opts)
 	token := c.Subscribe(filter, 1, nil).(*paho.SubscribeToken)
-	wait(t, token)
+	wait(tb, token)
 	if code := token.Result()[filter]; code != 1 {
-		t.Fatalf("subscription to %q: code 0x%02x", filter, code)
+		tb.Fatalf("subscription to %q: code 0x%02x", filter, code)
 	}
 	return c, got
 }
 
-func publish(t testing.TB, c paho.Client, topic string, from, to int) {
-	t.Helper()
+func publish(tb testing.TB, c paho.Client, topic string, from, to int) {
+	tb.Helper()
 	var tokens []paho.Token
 	for i := from; i < to; i++ {
 		tokens = append(tokens, c.Publish(topic, 1, false, fmt.Sprint(i)))
 	}
 	for _, token := range tokens {
-		wait(t, token)
+		wait(tb, token)
 	}
 }
 
-func next(t testing.TB, got <-chan paho.Message) string {
-	t.Helper()
+func next(tb testing.TB, got <-chan paho.Message) string {
+	tb.Helper()
 	select {
 	case m := <-got:
 		return string(m.Payload())
 	case <-time.After(patience):
-		t.Fatal("no message")
+		tb.Fatal("no message")
 		return ""
 	}
 }
@@ -430,7 +430,8 @@ func TestConfigFaults(t *testing.T) {
 
 func TestPortInUse(t *testing.T) {
 	t.Parallel()
-	l, err := net.Listen("tcp", "127.0.0.1:0")
+	var config net.ListenConfig
+	l, err := config.Listen(t.Context(), "tcp", "127.0.0.1:0")
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -457,7 +458,8 @@ func TestNoOtherPortIsOpen(t *testing.T) {
 		t.Fatal(err)
 	}
 	// The default port of the broker's own protocol.
-	if c, err := net.DialTimeout("tcp", "127.0.0.1:4222", time.Second); err == nil {
+	d := net.Dialer{Timeout: time.Second}
+	if c, err := d.DialContext(t.Context(), "tcp", "127.0.0.1:4222"); err == nil {
 		c.Close()
 		t.Error("something listens on port 4222")
 	}

@@ -43,7 +43,10 @@ func load(b *testing.B, url string) {
 // a bare subscriber of the library on the same broker.
 func BenchmarkReceive(b *testing.B) {
 	var sink int
-	rate := func(b *testing.B) { b.ReportMetric(float64(b.N)/b.Elapsed().Seconds(), "msg/s") }
+	rate := func(b *testing.B) {
+		b.Helper()
+		b.ReportMetric(float64(b.N)/b.Elapsed().Seconds(), "msg/s")
+	}
 	b.Run("client", func(b *testing.B) {
 		s := mqtttest.Embedded(b, broker.Config{})
 		c, err := mqtt.New(mqtt.Config{URL: s.URL, Dir: b.TempDir(), Filters: []string{"rigs/r1/senml"}})

@@ -4,8 +4,10 @@ import (
 	"bufio"
 	"context"
 	"crypto/tls"
+	"errors"
 	"net"
 	"net/url"
+	"sync"
 	"sync/atomic"
 	"time"
 
@@ -26,15 +28,20 @@ const (
 type connection struct {
 	generation uint64
 	client     paho.Client
+	socket     atomic.Pointer[socket]
 	lost       chan error    // the reason of the loss; holds one
 	up         atomic.Bool   // CONNACK received, and subscribed where due
 	unacked    atomic.Int64  // deliveries at QoS 1 less acknowledgements
 	shedding   atomic.Bool   // a delivery was dropped: so are all that follow
 	full       chan struct{} // holds one: the first delivery was dropped
+	gone       chan struct{} // closed when the connection is over
 }
 
 func newConnection(generation uint64) *connection {
-	return &connection{generation: generation, lost: make(chan error, 1), full: make(chan struct{}, 1)}
+	return &connection{
+		generation: generation,
+		lost:       make(chan error, 1), full: make(chan struct{}, 1), gone: make(chan struct{}),
+	}
 }
 
 // connect opens the connection and returns whether the broker had the session.
@@ -66,7 +73,12 @@ func (s *session) connect(ctx context.Context, conn *connection) (resumed bool, 
 		SetDefaultPublishHandler(func(_ paho.Client, m paho.Message) { s.receive(conn, m) }).
 		SetConnectionLostHandler(func(_ paho.Client, err error) { conn.lost <- err }).
 		SetCustomOpenConnectionFn(func(*url.URL, paho.ClientOptions) (net.Conn, error) {
-			return dial(ctx, s.client.address, cfg.TLS)
+			c, err := dial(ctx, s.client.address, cfg.TLS)
+			if err != nil {
+				return nil, err // not a nil *socket in the interface
+			}
+			conn.socket.Store(c)
+			return c, nil
 		})
 	if s.will != nil {
 		opts.SetBinaryWill(s.will.Topic, s.will.Payload, 1, true)
@@ -78,24 +90,32 @@ func (s *session) connect(ctx context.Context, conn *connection) (resumed bool, 
 	return token.SessionPresent(), token.Error()
 }
 
-// disconnect ends the connection; it returns in good time even if it hangs.
+// disconnect ends the connection in an orderly way, with the acknowledgements
+// that were given; it returns in good time even if the link hangs.
 func (conn *connection) disconnect() {
 	conn.up.Store(false)
+	close(conn.gone)
+	if s := conn.socket.Load(); s != nil {
+		s.linger.Store(true)
+	}
 	conn.client.Disconnect(uint(quiesce.Milliseconds()))
 }
 
-// wait waits for an operation of the library.
-func wait(ctx context.Context, token paho.Token) error {
+// wait waits for an operation of the library. One that is begun as the
+// connection goes down may never be completed by it.
+func (conn *connection) wait(ctx context.Context, token paho.Token) error {
 	select {
 	case <-token.Done():
 		return token.Error()
+	case <-conn.gone:
+		return ErrNotConnected
 	case <-ctx.Done():
 		return ctx.Err()
 	}
 }
 
 // dial opens the socket. Ending ctx before the handshake is over closes it.
-func dial(ctx context.Context, address string, cfg *tls.Config) (net.Conn, error) {
+func dial(ctx context.Context, address string, cfg *tls.Config) (*socket, error) {
 	var d net.Dialer
 	c, err := d.DialContext(ctx, "tcp", address)
 	if err != nil {
@@ -104,14 +124,13 @@ func dial(ctx context.Context, address string, cfg *tls.Config) (net.Conn, error
 	if cfg != nil {
 		secure := tls.Client(c, cfg)
 		if err := secure.HandshakeContext(ctx); err != nil {
-			c.Close()
-			return nil, err
+			return nil, errors.Join(err, c.Close())
 		}
 		c = secure
 	}
 	return &socket{
 		Conn: c, reader: bufio.NewReaderSize(c, readBuffer),
-		stop: context.AfterFunc(ctx, func() { c.Close() }),
+		stop: context.AfterFunc(ctx, func() { _ = c.Close() }), // nobody is left to tell
 	}, nil
 }
 
@@ -121,14 +140,38 @@ type socket struct {
 	net.Conn
 	reader *bufio.Reader
 	stop   func() bool // unties the socket from the context of the handshake
+	linger atomic.Bool // Close is to let the broker read what was written
+	half   sync.Once
 }
 
 // Read reads buffered bytes.
-func (s *socket) Read(p []byte) (int, error) { return s.reader.Read(p) }
+func (s *socket) Read(p []byte) (int, error) {
+	n, err := s.reader.Read(p)
+	if err != nil && s.linger.Load() {
+		err = errors.Join(err, s.Conn.Close())
+	}
+	return n, err
+}
+
+// Close closes the socket. When it is to linger, it closes its sending half only,
+// and Read does the rest when the broker has closed the other: a socket closed
+// with bytes unread is reset, and the broker may never see the last
+// acknowledgements.
+func (s *socket) Close() error {
+	c, ok := s.Conn.(interface{ CloseWrite() error })
+	if !ok || !s.linger.Load() {
+		return s.Conn.Close()
+	}
+	var err error
+	s.half.Do(func() {
+		err = errors.Join(c.CloseWrite(), s.SetReadDeadline(time.Now().Add(quiesce)))
+	})
+	return err
+}
 
 // Write writes p within writeTimeout.
 func (s *socket) Write(p []byte) (int, error) {
-	if err := s.Conn.SetWriteDeadline(time.Now().Add(writeTimeout)); err != nil {
+	if err := s.SetWriteDeadline(time.Now().Add(writeTimeout)); err != nil {
 		return 0, err
 	}
 	return s.Conn.Write(p)

@@ -198,7 +198,8 @@ func (p *persistent) connect() {
 	p.t.Helper()
 	for deadline := time.Now().Add(patience); ; time.Sleep(20 * time.Millisecond) {
 		p.client = paho.NewClient(paho.NewClientOptions().AddBroker(p.url).SetClientID("rig").
-			SetProtocolVersion(4).SetAutoReconnect(false).SetConnectTimeout(patience))
+			SetProtocolVersion(4).SetAutoReconnect(false).SetConnectTimeout(patience).
+			SetWriteTimeout(time.Second)) // else Publish waits 30 s on a link that goes down
 		token := p.client.Connect()
 		if token.WaitTimeout(patience) && token.Error() == nil {
 			return
@@ -217,7 +218,13 @@ func (p *persistent) publishBatch() bool {
 		tokens = append(tokens, p.client.Publish("rigs/r1/senml", 1, false, fmt.Sprint(p.next+i)))
 	}
 	for _, token := range tokens {
-		if !token.WaitTimeout(patience) || token.Error() != nil || !p.client.IsConnectionOpen() {
+		// A token that is made while the link goes down may never be done.
+		for !token.WaitTimeout(50 * time.Millisecond) {
+			if !p.client.IsConnectionOpen() {
+				return false
+			}
+		}
+		if token.Error() != nil || !p.client.IsConnectionOpen() {
 			return false
 		}
 		p.next++

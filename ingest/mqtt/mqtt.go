@@ -193,7 +193,8 @@ type Client struct {
 	// events: when full, further events are dropped; Stats tells the state.
 	events chan Event
 
-	pending atomic.Int64 // sessions that have not been up yet
+	probing sync.WaitGroup // probes being sent; each ends with its connection
+	pending atomic.Int64   // sessions that have not been up yet
 	ready   chan struct{}
 }
 
@@ -302,6 +303,7 @@ func (c *Client) Run(ctx context.Context) error {
 	}
 	all.Go(func() { c.retire(ctx) })
 	all.Wait()
+	c.probing.Wait()
 	close(c.messages)
 	close(c.events)
 	return ctx.Err()
@@ -340,7 +342,8 @@ func (c *Client) Ack(m Message) bool {
 // it, at QoS 0 when it is written. It returns ErrNotConnected, at once and
 // without keeping the message, while the connection is down: publish the whole
 // state again after EventConnected of the PublisherSession. A nil error is no
-// proof that anyone received it; a broker drops what its access list denies.
+// proof that anyone received it; a broker drops what its access list denies. A
+// link that takes no more bytes may hold Publish up for writeTimeout.
 func (c *Client) Publish(ctx context.Context, topic string, payload []byte, qos byte, retained bool) error {
 	if err := CheckTopic(topic); err != nil {
 		return err
@@ -352,7 +355,7 @@ func (c *Client) Publish(ctx context.Context, topic string, payload []byte, qos 
 	if conn == nil || !conn.up.Load() {
 		return fmt.Errorf("mqtt: publish %q: %w", topic, ErrNotConnected)
 	}
-	if err := wait(ctx, conn.client.Publish(topic, qos, retained, payload)); err != nil {
+	if err := conn.wait(ctx, conn.client.Publish(topic, qos, retained, payload)); err != nil {
 		return fmt.Errorf("mqtt: publish %q: %w", topic, err)
 	}
 	return nil

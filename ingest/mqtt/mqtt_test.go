@@ -26,19 +26,25 @@ const patience = 30 * time.Second
 
 // ackWait is the embedded broker's in these tests: short, but long enough for a
 // whole window to be acknowledged on a slow machine.
-const ackWait = 5 * time.Second
+const ackWait = 4 * time.Second
 
-// onBoth runs a test of the contract against both brokers.
-func onBoth(t *testing.T, test func(t *testing.T, s *mqtttest.Server)) {
-	t.Helper()
-	t.Run("embedded", func(t *testing.T) {
-		t.Parallel()
-		test(t, mqtttest.Embedded(t, broker.Config{AckWait: ackWait}))
-	})
-	t.Run("mosquitto", func(t *testing.T) {
-		t.Parallel()
-		test(t, mqtttest.Mosquitto(t))
-	})
+// server is a broker with the time after which it sends what is unacknowledged
+// again, unasked.
+type server struct {
+	*mqtttest.Server
+	redelivery time.Duration
+}
+
+// brokers start what the contract is tested against.
+var brokers = map[string]func(*testing.T) server{
+	"embedded": func(t *testing.T) server {
+		t.Helper()
+		return server{mqtttest.Embedded(t, broker.Config{AckWait: ackWait}), ackWait}
+	},
+	"mosquitto": func(t *testing.T) server {
+		t.Helper()
+		return server{mqtttest.Mosquitto(t), 0}
+	},
 }
 
 // running is a client in the middle of Run.
@@ -147,35 +153,35 @@ func (r *running) event(kind mqtt.EventKind) mqtt.Event {
 }
 
 // publisher is an independent client, as a rig's data system would be.
-func publisher(t testing.TB, url string) paho.Client {
-	t.Helper()
-	opts := paho.NewClientOptions().AddBroker(url).SetClientID("rig-" + t.Name()).
+func publisher(tb testing.TB, url string) paho.Client {
+	tb.Helper()
+	opts := paho.NewClientOptions().AddBroker(url).SetClientID("rig-" + tb.Name()).
 		SetConnectRetry(true).SetConnectRetryInterval(50 * time.Millisecond).SetMaxReconnectInterval(100 * time.Millisecond)
 	c := paho.NewClient(opts)
-	wait(t, c.Connect())
-	t.Cleanup(func() { c.Disconnect(100) })
+	wait(tb, c.Connect())
+	tb.Cleanup(func() { c.Disconnect(100) })
 	return c
 }
 
-func wait(t testing.TB, token paho.Token) {
-	t.Helper()
+func wait(tb testing.TB, token paho.Token) {
+	tb.Helper()
 	if !token.WaitTimeout(patience) {
-		t.Fatal("no answer from the broker")
+		tb.Fatal("no answer from the broker")
 	}
 	if err := token.Error(); err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 }
 
 // publish sends the numbers from ≤ i < to at QoS 1 and waits for every PUBACK.
-func publish(t testing.TB, p paho.Client, topic string, from, to int) {
-	t.Helper()
+func publish(tb testing.TB, p paho.Client, topic string, from, to int) {
+	tb.Helper()
 	tokens := make([]paho.Token, 0, to-from)
 	for i := from; i < to; i++ {
 		tokens = append(tokens, p.Publish(topic, 1, false, fmt.Sprint(i)))
 	}
 	for _, token := range tokens {
-		wait(t, token)
+		wait(tb, token)
 	}
 }
 
@@ -203,230 +209,296 @@ func wantNumbers(t *testing.T, got []mqtt.Message, from, to int) {
 }
 
 func TestUnacknowledgedComesAgainAfterReconnect(t *testing.T) {
-	onBoth(t, func(t *testing.T, s *mqtttest.Server) {
-		proxy := mqtttest.NewProxy(t, s.Addr)
-		c := ready(t, mqtt.Config{URL: proxy.URL, Filters: []string{"rigs/r1/senml"}})
-		p := publisher(t, s.URL)
-		publish(t, p, "rigs/r1/senml", 0, 100)
-		first := c.take(100)
-		wantNumbers(t, first, 0, 100)
-		c.ack(first[:40]...)
-		if got := c.Stats()[0].Unacked; got != 60 {
-			t.Errorf("unacked = %d, want 60", got)
-		}
-		// The acknowledgements have to reach the broker before the cut.
-		time.Sleep(200 * time.Millisecond)
-		proxy.Cut()
-		c.event(mqtt.EventDisconnected)
-		again := c.take(60)
-		wantNumbers(t, again, 40, 100)
-		for i, m := range again {
-			if m.Generation <= first[0].Generation {
-				t.Fatalf("redelivered message has generation %d, first delivery %d", m.Generation, first[0].Generation)
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			proxy := mqtttest.NewProxy(t, s.Addr)
+			c := ready(t, mqtt.Config{URL: proxy.URL, Filters: []string{"rigs/r1/senml"}})
+			p := publisher(t, s.URL)
+			publish(t, p, "rigs/r1/senml", 0, 100)
+			first := c.take(100)
+			wantNumbers(t, first, 0, 100)
+			c.ack(first[:40]...)
+			if got := c.Stats()[0].Unacked; got != 60 {
+				t.Errorf("unacked = %d, want 60", got)
 			}
-			if c.Ack(first[40+i]) {
-				t.Fatal("a message of a dead connection was acknowledged")
+			// The acknowledgements have to reach the broker before the cut.
+			time.Sleep(200 * time.Millisecond)
+			proxy.Cut()
+			c.event(mqtt.EventDisconnected)
+			again := c.take(60)
+			wantNumbers(t, again, 40, 100)
+			for i, m := range again {
+				if m.Generation <= first[0].Generation {
+					t.Fatalf("redelivered message has generation %d, first delivery %d", m.Generation, first[0].Generation)
+				}
+				if c.Ack(first[40+i]) {
+					t.Fatal("a message of a dead connection was acknowledged")
+				}
 			}
-		}
-		c.ack(again...)
-		if got := c.Stats()[0].Unacked; got != 0 {
-			t.Errorf("unacked = %d, want 0", got)
-		}
-		c.silent(ackWait + time.Second)
-	})
+			c.ack(again...)
+			if got := c.Stats()[0].Unacked; got != 0 {
+				t.Errorf("unacked = %d, want 0", got)
+			}
+			c.silent(s.redelivery + time.Second)
+		})
+	}
 }
 
 func TestBrokerRestart(t *testing.T) {
-	onBoth(t, func(t *testing.T, s *mqtttest.Server) {
-		c := ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/+"}})
-		p := publisher(t, s.URL)
-		publish(t, p, "rigs/r1/lines", 0, 50)
-		before := c.take(50)
-		c.ack(before[:20]...)
-		time.Sleep(200 * time.Millisecond)
-		s.Stop()
-		c.event(mqtt.EventDisconnected)
-		if err := c.Publish(t.Context(), "rigs/r1/status", nil, 0, false); !errors.Is(err, mqtt.ErrNotConnected) {
-			t.Errorf("publish without a broker = %v, want ErrNotConnected", err)
-		}
-		s.Start()
-		// The backlog comes first, in order, well before the broker's AckWait.
-		after := c.take(30)
-		wantNumbers(t, after, 20, 50)
-		c.ack(after...)
-		publish(t, p, "rigs/r1/lines", 50, 60)
-		fresh := c.take(10)
-		wantNumbers(t, fresh, 50, 60)
-		c.ack(fresh...)
-	})
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			c := ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/+"}})
+			p := publisher(t, s.URL)
+			publish(t, p, "rigs/r1/lines", 0, 50)
+			before := c.take(50)
+			c.ack(before[:20]...)
+			time.Sleep(200 * time.Millisecond)
+			s.Stop()
+			// The session and the publishing connection, in any order.
+			if a, b := c.event(mqtt.EventDisconnected), c.event(mqtt.EventDisconnected); a.Session == b.Session {
+				t.Errorf("disconnected twice: %v, %v", a, b)
+			}
+			if err := c.Publish(t.Context(), "rigs/r1/status", nil, 0, false); !errors.Is(err, mqtt.ErrNotConnected) {
+				t.Errorf("publish without a broker = %v, want ErrNotConnected", err)
+			}
+			s.Start()
+			// The backlog comes first, in order, well before the broker's AckWait.
+			after := c.take(30)
+			wantNumbers(t, after, 20, 50)
+			c.ack(after...)
+			// What paho publishes while it reconnects goes out in any order.
+			for deadline := time.Now().Add(patience); !p.IsConnectionOpen(); time.Sleep(20 * time.Millisecond) {
+				if time.Now().After(deadline) {
+					t.Fatal("the publisher did not come back")
+				}
+			}
+			publish(t, p, "rigs/r1/lines", 50, 60)
+			fresh := c.take(10)
+			wantNumbers(t, fresh, 50, 60)
+			c.ack(fresh...)
+		})
+	}
 }
 
 func TestMessagesWaitWhileTheClientIsAway(t *testing.T) {
-	onBoth(t, func(t *testing.T, s *mqtttest.Server) {
-		cfg := mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/#"}, Dir: t.TempDir()}
-		c := ready(t, cfg)
-		c.stop()
-		p := publisher(t, s.URL)
-		publish(t, p, "rigs/r1/channels/P3", 0, 6000) // more than a window
-		c = ready(t, cfg)
-		if e := c.event(mqtt.EventConnected); e.Session != mqtt.PublisherSession && !e.Resumed {
-			t.Error("the broker did not have the session any more")
-		}
-		for i := range 6000 {
-			m := c.next()
-			if string(m.Payload) != fmt.Sprint(i) {
-				t.Fatalf("message %d is %q", i, m.Payload)
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			cfg := mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/#"}, Dir: t.TempDir()}
+			c := ready(t, cfg)
+			c.stop()
+			p := publisher(t, s.URL)
+			publish(t, p, "rigs/r1/channels/P3", 0, 6000) // more than a window
+			c = ready(t, cfg)
+			if e := c.event(mqtt.EventConnected); e.Session != mqtt.PublisherSession && !e.Resumed {
+				t.Error("the broker did not have the session any more")
 			}
-			c.ack(m)
-		}
-		c.silent(ackWait + time.Second)
-	})
+			for i := range 6000 {
+				m := c.next()
+				if string(m.Payload) != fmt.Sprint(i) {
+					t.Fatalf("message %d is %q", i, m.Payload)
+				}
+				c.ack(m)
+			}
+			c.silent(s.redelivery + time.Second)
+		})
+	}
+}
+
+func TestOrderlyEndDeliversAcknowledgements(t *testing.T) {
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			cfg := mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/senml"}, Dir: t.TempDir()}
+			p := publisher(t, s.URL)
+			for i := range 20 {
+				c := ready(t, cfg)
+				publish(t, p, "rigs/r1/senml", i, i+1)
+				m := c.next()
+				if string(m.Payload) != fmt.Sprint(i) {
+					t.Fatalf("got %q again after start %d", m.Payload, i)
+				}
+				c.ack(m)
+				c.stop()
+			}
+		})
+	}
 }
 
 func TestRetainedFlag(t *testing.T) {
-	onBoth(t, func(t *testing.T, s *mqtttest.Server) {
-		p := publisher(t, s.URL)
-		wait(t, p.Publish("rigs/r1/channels/N1", 1, true, "old"))
-		c := ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/channels/+"}})
-		old := c.next()
-		c.ack(old)
-		wait(t, p.Publish("rigs/r1/channels/N1", 1, true, "new"))
-		fresh := c.next()
-		c.ack(fresh)
-		// [MQTT-3.3.1-8]: set on what a new subscription finds. [MQTT-3.3.1-9]:
-		// not set on what is published while it stands.
-		if string(old.Payload) != "old" || old.Flags&ingest.FlagRetained == 0 {
-			t.Errorf("on subscribing: %q, flags %b, want the old value as retained", old.Payload, old.Flags)
-		}
-		if string(fresh.Payload) != "new" || fresh.Flags&ingest.FlagRetained != 0 {
-			t.Errorf("live: %q, flags %b, want the new value, not as retained", fresh.Payload, fresh.Flags)
-		}
-	})
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			p := publisher(t, s.URL)
+			wait(t, p.Publish("rigs/r1/channels/N1", 1, true, "old"))
+			c := ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/channels/+"}})
+			old := c.next()
+			c.ack(old)
+			wait(t, p.Publish("rigs/r1/channels/N1", 1, true, "new"))
+			fresh := c.next()
+			c.ack(fresh)
+			// [MQTT-3.3.1-8]: set on what a new subscription finds. [MQTT-3.3.1-9]:
+			// not set on what is published while it stands.
+			if string(old.Payload) != "old" || old.Flags&ingest.FlagRetained == 0 {
+				t.Errorf("on subscribing: %q, flags %b, want the old value as retained", old.Payload, old.Flags)
+			}
+			if string(fresh.Payload) != "new" || fresh.Flags&ingest.FlagRetained != 0 {
+				t.Errorf("live: %q, flags %b, want the new value, not as retained", fresh.Payload, fresh.Flags)
+			}
+		})
+	}
 }
 
 func TestEachFilterHasItsSession(t *testing.T) {
-	onBoth(t, func(t *testing.T, s *mqtttest.Server) {
-		c := ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/a", "rigs/r1/b"}})
-		p := publisher(t, s.URL)
-		publish(t, p, "rigs/r1/a", 0, 1)
-		publish(t, p, "rigs/r1/b", 1, 2)
-		wait(t, p.Publish("rigs/r1/a", 0, false, "2"))
-		for _, m := range c.take(3) {
-			if want := strings.IndexByte("ab", m.Topic[len(m.Topic)-1]); m.Session != want {
-				t.Errorf("message on %s came by session %d", m.Topic, m.Session)
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			c := ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/a", "rigs/r1/b"}})
+			p := publisher(t, s.URL)
+			publish(t, p, "rigs/r1/a", 0, 1)
+			publish(t, p, "rigs/r1/b", 1, 2)
+			wait(t, p.Publish("rigs/r1/a", 0, false, "2"))
+			for _, m := range c.take(3) {
+				if want := strings.IndexByte("ab", m.Topic[len(m.Topic)-1]); m.Session != want {
+					t.Errorf("message on %s came by session %d", m.Topic, m.Session)
+				}
+				if qos1 := m.Flags&ingest.FlagQoS1 != 0; qos1 == (string(m.Payload) == "2") {
+					t.Errorf("message %q: QoS 1 = %t", m.Payload, qos1)
+				}
+				c.ack(m)
 			}
-			if qos1 := m.Flags&ingest.FlagQoS1 != 0; qos1 == (string(m.Payload) == "2") {
-				t.Errorf("message %q: QoS 1 = %t", m.Payload, qos1)
-			}
-			c.ack(m)
-		}
-	})
+		})
+	}
 }
 
 func TestDeafConnection(t *testing.T) {
-	onBoth(t, func(t *testing.T, s *mqtttest.Server) {
-		proxy := mqtttest.NewProxy(t, s.Addr)
-		c := ready(t, mqtt.Config{URL: proxy.URL, Filters: []string{"rigs/r1/senml"}, KeepAlive: 5 * time.Second})
-		for deadline := time.Now().Add(patience); c.Stats()[0].ProbeDelay == 0; time.Sleep(20 * time.Millisecond) {
-			if time.Now().After(deadline) {
-				t.Fatalf("no probe came back: %+v", c.Stats())
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			proxy := mqtttest.NewProxy(t, s.Addr)
+			c := ready(t, mqtt.Config{URL: proxy.URL, Filters: []string{"rigs/r1/senml"}, KeepAlive: 5 * time.Second})
+			for deadline := time.Now().Add(patience); c.Stats()[0].ProbeDelay == 0; time.Sleep(20 * time.Millisecond) {
+				if time.Now().After(deadline) {
+					t.Fatalf("no probe came back: %+v", c.Stats())
+				}
 			}
-		}
-		proxy.Swallow()
-		start := time.Now()
-		e := c.event(mqtt.EventDeaf)
-		// A probe goes out each second and may take two: three, and one for a slow machine.
-		if took := time.Since(start); took > 4*time.Second || !errors.Is(e.Err, mqtt.ErrDeaf) {
-			t.Errorf("%v after %v, want deaf within 4 s", e, took)
-		}
-		c.event(mqtt.EventDisconnected)
-		proxy.Pass()
-		c.event(mqtt.EventConnected)
-		publish(t, publisher(t, s.URL), "rigs/r1/senml", 0, 1)
-		c.ack(c.next()) // and nothing but: probes are not forwarded
-		if st := c.Stats()[0]; st.Deaf || st.Received != 1 {
-			t.Errorf("stats = %+v, want hearing, 1 received", st)
-		}
-	})
+			proxy.Swallow()
+			start := time.Now()
+			e := c.event(mqtt.EventDeaf)
+			// A probe goes out each second and may take two: three, and one for a slow machine.
+			if took := time.Since(start); took > 4*time.Second || !errors.Is(e.Err, mqtt.ErrDeaf) {
+				t.Errorf("%v after %v, want deaf within 4 s", e, took)
+			}
+			c.event(mqtt.EventDisconnected)
+			proxy.Pass()
+			c.event(mqtt.EventConnected)
+			publish(t, publisher(t, s.URL), "rigs/r1/senml", 0, 1)
+			c.ack(c.next()) // and nothing but: probes are not forwarded
+			if st := c.Stats()[0]; st.Deaf || st.Received != 1 {
+				t.Errorf("stats = %+v, want hearing, 1 received", st)
+			}
+		})
+	}
 }
 
 func TestFullQueueLosesNothing(t *testing.T) {
-	onBoth(t, func(t *testing.T, s *mqtttest.Server) {
-		const n = 4000 // more than the reader's buffer of 1024 and two windows
-		c := ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/senml"}, Window: 100})
-		publish(t, publisher(t, s.URL), "rigs/r1/senml", 0, n)
-		for {
-			if e := c.event(mqtt.EventDisconnected); errors.Is(e.Err, mqtt.ErrOverflow) {
-				break
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			const n = 4000 // more than the reader's buffer of 1024 and two windows
+			c := ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/senml"}, Window: 100})
+			publish(t, publisher(t, s.URL), "rigs/r1/senml", 0, n)
+			for {
+				if e := c.event(mqtt.EventDisconnected); errors.Is(e.Err, mqtt.ErrOverflow) {
+					break
+				}
 			}
-		}
-		seen := make(map[string]bool)
-		for len(seen) < n {
-			m := c.next()
-			c.Ack(m) // of a dead connection: false, and it comes again
-			seen[string(m.Payload)] = true
-		}
-		if st := c.Stats()[0]; st.Dropped == 0 {
-			t.Errorf("stats = %+v, want drops counted", st)
-		}
-	})
+			seen := make(map[string]bool)
+			for len(seen) < n {
+				m := c.next()
+				c.Ack(m) // of a dead connection: false, and it comes again
+				seen[string(m.Payload)] = true
+			}
+			if st := c.Stats()[0]; st.Dropped == 0 {
+				t.Errorf("stats = %+v, want drops counted", st)
+			}
+		})
+	}
 }
 
 func TestPublishAndWill(t *testing.T) {
-	onBoth(t, func(t *testing.T, s *mqtttest.Server) {
-		proxy := mqtttest.NewProxy(t, s.Addr)
-		cfg := mqtt.Config{
-			URL: proxy.URL, Filters: []string{"rigs/r1/senml"}, Dir: t.TempDir(),
-			Will: &mqtt.Will{Topic: "rigs/r1/status", Payload: []byte(`{"state":"offline"}`)},
-		}
-		c := ready(t, cfg)
-		got := make(chan paho.Message, 10)
-		p := publisher(t, s.URL)
-		wait(t, p.Subscribe("rigs/r1/status", 1, func(_ paho.Client, m paho.Message) { got <- m }))
-		expect := func(when, want string) {
-			t.Helper()
-			select {
-			case m := <-got:
-				if string(m.Payload()) != want {
-					t.Fatalf("%s: status %q, want %q", when, m.Payload(), want)
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			proxy := mqtttest.NewProxy(t, s.Addr)
+			cfg := mqtt.Config{
+				URL: proxy.URL, Filters: []string{"rigs/r1/senml"}, Dir: t.TempDir(),
+				Will: &mqtt.Will{Topic: "rigs/r1/status", Payload: []byte(`{"state":"offline"}`)},
+			}
+			c := ready(t, cfg)
+			got := make(chan paho.Message, 10)
+			p := publisher(t, s.URL)
+			wait(t, p.Subscribe("rigs/r1/status", 1, func(_ paho.Client, m paho.Message) { got <- m }))
+			expect := func(when, want string) {
+				t.Helper()
+				select {
+				case m := <-got:
+					if string(m.Payload()) != want {
+						t.Fatalf("%s: status %q, want %q", when, m.Payload(), want)
+					}
+				case <-time.After(patience):
+					t.Fatalf("%s: no status", when)
 				}
-			case <-time.After(patience):
-				t.Fatalf("%s: no status", when)
 			}
-		}
-		publishOnline := func(qos byte) {
-			t.Helper()
-			ctx, cancel := context.WithTimeout(t.Context(), patience)
-			defer cancel()
-			if err := c.Publish(ctx, "rigs/r1/status", []byte(`{"state":"online"}`), qos, true); err != nil {
-				t.Fatal(err)
+			publishOnline := func(qos byte) {
+				t.Helper()
+				ctx, cancel := context.WithTimeout(t.Context(), patience)
+				defer cancel()
+				if err := c.Publish(ctx, "rigs/r1/status", []byte(`{"state":"online"}`), qos, true); err != nil {
+					t.Fatal(err)
+				}
 			}
-		}
-		publishOnline(1)
-		expect("published at QoS 1", `{"state":"online"}`)
-		publishOnline(0)
-		expect("published at QoS 0", `{"state":"online"}`)
-		proxy.Cut()
-		expect("connection lost", `{"state":"offline"}`)
-		c.stop()
-		c = ready(t, cfg)
-		publishOnline(1)
-		expect("published again", `{"state":"online"}`)
-		c.stop()
-		expect("orderly end", `{"state":"offline"}`)
-	})
+			publishOnline(1)
+			expect("published at QoS 1", `{"state":"online"}`)
+			publishOnline(0)
+			expect("published at QoS 0", `{"state":"online"}`)
+			proxy.Cut()
+			expect("connection lost", `{"state":"offline"}`)
+			c.stop()
+			c = ready(t, cfg)
+			publishOnline(1)
+			expect("published again", `{"state":"online"}`)
+			c.stop()
+			expect("orderly end", `{"state":"offline"}`)
+		})
+	}
 }
 
 func TestSessionTakenOver(t *testing.T) {
-	onBoth(t, func(t *testing.T, s *mqtttest.Server) {
-		cfg := mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/senml"}, Dir: t.TempDir()}
-		c := ready(t, cfg)
-		run(t, cfg)
-		e := c.event(mqtt.EventTakenOver)
-		if id := clientID(t, cfg.Dir); strings.Contains(e.String(), id) {
-			t.Errorf("event gives the client id away: %v", e)
-		}
-	})
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			cfg := mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/senml"}, Dir: t.TempDir()}
+			c := ready(t, cfg)
+			run(t, cfg)
+			e := c.event(mqtt.EventTakenOver)
+			if id := clientID(t, cfg.Dir); strings.Contains(e.String(), id) {
+				t.Errorf("event gives the client id away: %v", e)
+			}
+		})
+	}
 }
 
 func clientID(t *testing.T, dir string) string {
@@ -443,39 +515,90 @@ func clientID(t *testing.T, dir string) string {
 }
 
 func TestUnwantedSessionIsEnded(t *testing.T) {
-	onBoth(t, func(t *testing.T, s *mqtttest.Server) {
-		dir := t.TempDir()
-		ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/a", "rigs/r1/b"}, Dir: dir}).stop()
-		p := publisher(t, s.URL)
-		publish(t, p, "rigs/r1/a", 0, 1)
-		publish(t, p, "rigs/r1/b", 1, 2)
-		c := ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/b"}, Dir: dir})
+	for name, start := range brokers {
+		t.Run(name, func(t *testing.T) {
+			t.Parallel()
+			s := start(t)
+			dir := t.TempDir()
+			ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/a", "rigs/r1/b"}, Dir: dir}).stop()
+			p := publisher(t, s.URL)
+			publish(t, p, "rigs/r1/a", 0, 1)
+			publish(t, p, "rigs/r1/b", 1, 2)
+			c := ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/b"}, Dir: dir})
+			m := c.next()
+			if m.Topic != "rigs/r1/b" || m.Session != 0 {
+				t.Errorf("got %s by session %d, want rigs/r1/b by 0", m.Topic, m.Session)
+			}
+			c.ack(m)
+			for deadline := time.Now().Add(patience); ; time.Sleep(20 * time.Millisecond) {
+				text, err := os.ReadFile(filepath.Join(dir, "mqtt-client.json"))
+				if err != nil {
+					t.Fatal(err)
+				}
+				if !strings.Contains(string(text), "rigs/r1/a") {
+					break
+				}
+				if time.Now().After(deadline) {
+					t.Fatalf("the session of rigs/r1/a was not ended: %s", text)
+				}
+			}
+			c.stop()
+			// The number is free again; what waited for the old session is gone.
+			c = ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/b", "rigs/r1/a"}, Dir: dir})
+			c.silent(time.Second)
+			publish(t, p, "rigs/r1/a", 2, 3)
+			if m := c.next(); string(m.Payload) != "2" || m.Session != 1 {
+				t.Errorf("got %q by session %d, want 2 by 1", m.Payload, m.Session)
+			}
+		})
+	}
+}
+
+// TestShippedMosquittoConfiguration runs mosquitto as deploy sets it up: of a
+// burst larger than every default limit nothing is lost while acknowledgements
+// are held back, neither online nor away.
+func TestShippedMosquittoConfiguration(t *testing.T) {
+	t.Parallel()
+	text, err := os.ReadFile(filepath.FromSlash("../../deploy/mosquitto.conf"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	var conf []string
+	moved := 0
+	for line := range strings.Lines(string(text)) {
+		switch {
+		case strings.HasPrefix(line, "listener 1883 127.0.0.1"), strings.HasPrefix(line, "persistence_location "), strings.HasPrefix(line, "log_dest "):
+			moved++
+		default:
+			conf = append(conf, line)
+		}
+	}
+	if moved != 3 {
+		t.Fatalf("%d lines name the listener, the place and the log, want 3", moved)
+	}
+	s := mqtttest.MosquittoWith(t, strings.Join(conf, "")+"log_dest none\n")
+	cfg := mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/senml"}, Dir: t.TempDir()}
+	c := ready(t, cfg)
+	p := publisher(t, s.URL)
+	publish(t, p, "rigs/r1/senml", 0, 6000)
+	window := c.take(mqtt.DefaultWindow)
+	wantNumbers(t, window, 0, mqtt.DefaultWindow)
+	c.silent(500 * time.Millisecond) // it waits for acknowledgements
+	c.ack(window...)
+	rest := c.take(6000 - mqtt.DefaultWindow)
+	wantNumbers(t, rest, mqtt.DefaultWindow, 6000)
+	c.ack(rest...)
+	time.Sleep(200 * time.Millisecond)
+	c.stop()
+	publish(t, p, "rigs/r1/senml", 6000, 12000)
+	c = ready(t, cfg)
+	for want := 6000; want < 12000; want++ {
 		m := c.next()
-		if m.Topic != "rigs/r1/b" || m.Session != 0 {
-			t.Errorf("got %s by session %d, want rigs/r1/b by 0", m.Topic, m.Session)
+		if string(m.Payload) != fmt.Sprint(want) {
+			t.Fatalf("got %q, want %d", m.Payload, want)
 		}
 		c.ack(m)
-		for deadline := time.Now().Add(patience); ; time.Sleep(20 * time.Millisecond) {
-			text, err := os.ReadFile(filepath.Join(dir, "mqtt-client.json"))
-			if err != nil {
-				t.Fatal(err)
-			}
-			if !strings.Contains(string(text), "rigs/r1/a") {
-				break
-			}
-			if time.Now().After(deadline) {
-				t.Fatalf("the session of rigs/r1/a was not ended: %s", text)
-			}
-		}
-		c.stop()
-		// The number is free again; what waited for the old session is gone.
-		c = ready(t, mqtt.Config{URL: s.URL, Filters: []string{"rigs/r1/b", "rigs/r1/a"}, Dir: dir})
-		c.silent(time.Second)
-		publish(t, p, "rigs/r1/a", 2, 3)
-		if m := c.next(); string(m.Payload) != "2" || m.Session != 1 {
-			t.Errorf("got %q by session %d, want 2 by 1", m.Payload, m.Session)
-		}
-	})
+	}
 }
 
 func TestConfigFaults(t *testing.T) {

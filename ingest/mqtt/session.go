@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"slices"
 	"strconv"
 	"strings"
 	"sync/atomic"
@@ -64,10 +65,10 @@ type session struct {
 	failure    atomic.Pointer[string]
 
 	// The fields below belong to the goroutine of run.
-	probe    uint64 // number of the last probe
-	down     bool   // reported as down
-	hasBeen  bool   // up once
-	closures []time.Time
+	lastProbe uint64 // number
+	down      bool   // reported as down
+	hasBeen   bool   // up once
+	closures  []time.Time
 }
 
 func newSession(c *Client, index int, filter, id string) *session {
@@ -169,7 +170,7 @@ func (s *session) subscribe(ctx context.Context, conn *connection) error {
 	// The probe comes back at QoS 0: at QoS 1 it would share the session's
 	// window with the data and could delay a message by the broker's AckWait.
 	token := conn.client.SubscribeMultiple(map[string]byte{s.filter: 1, s.probeTopic: 0}, nil).(*paho.SubscribeToken)
-	if err := wait(ctx, token); err != nil {
+	if err := conn.wait(ctx, token); err != nil {
 		return fmt.Errorf("subscribe %q: %w", s.filter, err)
 	}
 	granted := token.Result()
@@ -182,27 +183,39 @@ func (s *session) subscribe(ctx context.Context, conn *connection) error {
 	return nil
 }
 
-// sentProbe is a probe on its way.
-type sentProbe struct {
+// probe is a probe message on its way.
+type probe struct {
 	number uint64
 	at     time.Time
-	token  paho.Token // done when the broker has acknowledged it
+	acked  atomic.Bool // by the broker
+}
+
+// send publishes the next probe without waiting: on a link that takes no more
+// bytes the library waits for writeTimeout.
+func (s *session) send(ctx context.Context, conn *connection, now time.Time) *probe {
+	s.lastProbe++
+	p := &probe{number: s.lastProbe, at: now}
+	text := fmt.Sprintf("%d %d", p.number, now.Sub(s.client.start))
+	s.client.probing.Go(func() {
+		if conn.wait(ctx, conn.client.Publish(s.probeTopic, 1, false, text)) == nil {
+			p.acked.Store(true)
+		}
+	})
+	return p
 }
 
 // watch probes the connection until it is lost, given up or ctx ends.
 func (s *session) watch(ctx context.Context, conn *connection) error {
 	defer s.deaf.Store(false)
-	var probes []sentProbe // unanswered, oldest first, at most maxProbes
-	var last time.Time     // of sending
+	var probes []*probe // unanswered, oldest first, at most maxProbes
+	var last time.Time  // of sending
 	ticker := time.NewTicker(checkInterval)
 	defer ticker.Stop()
 	for {
 		now := time.Now()
 		if s.probeTopic != "" && now.Sub(last) >= probeInterval && len(probes) < maxProbes {
 			last = now
-			s.probe++
-			text := fmt.Sprintf("%d %d", s.probe, time.Since(s.client.start))
-			probes = append(probes, sentProbe{s.probe, now, conn.client.Publish(s.probeTopic, 1, false, text)})
+			probes = append(probes, s.send(ctx, conn, now))
 		}
 		probes = unanswered(probes, s.echoed.Load())
 		late := len(probes) > 0 && now.Sub(probes[0].at) > probeTimeout
@@ -230,15 +243,10 @@ func (s *session) watch(ctx context.Context, conn *connection) error {
 // unanswered drops the probes up to the newest that came back and is
 // acknowledged. One that is lost matters only if none after it comes back: at
 // QoS 0 a broker may drop it.
-func unanswered(probes []sentProbe, echoed uint64) []sentProbe {
-	for i := len(probes) - 1; i >= 0; i-- {
-		if probes[i].number > echoed {
-			continue
-		}
-		select {
-		case <-probes[i].token.Done():
+func unanswered(probes []*probe, echoed uint64) []*probe {
+	for i, p := range slices.Backward(probes) {
+		if p.number <= echoed && p.acked.Load() {
 			return probes[i+1:]
-		default:
 		}
 	}
 	return probes

@@ -11,6 +11,7 @@ import (
 	"os"
 	"os/exec"
 	"path/filepath"
+	"strings"
 	"sync"
 	"syscall"
 	"testing"
@@ -39,76 +40,84 @@ func (s *Server) Stop() { s.stop() }
 
 // Embedded starts the broker of the daemon, open to everyone. Fields of cfg that
 // are set are kept.
-func Embedded(t testing.TB, cfg broker.Config) *Server {
-	t.Helper()
+func Embedded(tb testing.TB, cfg broker.Config) *Server {
+	tb.Helper()
 	if cfg.StoreDir == "" {
-		cfg.StoreDir = t.TempDir()
+		cfg.StoreDir = tb.TempDir()
 	}
 	if cfg.Listen == "" {
-		cfg.Listen = FreeAddr(t)
+		cfg.Listen = FreeAddr(tb)
 	}
 	var b *broker.Broker
 	s := &Server{Addr: cfg.Listen, URL: "mqtt://" + cfg.Listen}
 	s.start = func() {
-		t.Helper()
+		tb.Helper()
 		var err error
 		b, err = broker.New(cfg, slog.New(slog.DiscardHandler))
 		if err != nil {
-			t.Fatal(err)
+			tb.Fatal(err)
 		}
 		ctx, cancel := context.WithTimeout(context.Background(), startTimeout)
 		defer cancel()
 		if err := b.Start(ctx); err != nil {
-			t.Fatal(err)
+			tb.Fatal(err)
 		}
 		b.Open()
 	}
 	s.stop = func() {
 		if err := b.Close(); err != nil {
-			t.Error(err)
+			tb.Error(err)
 		}
 	}
 	s.start()
-	t.Cleanup(s.stop)
+	tb.Cleanup(s.stop)
 	return s
 }
 
-// Mosquitto starts /usr/sbin/mosquitto with the limits that deploy recommends.
-// Further lines of configuration may be given. The test fails if the program is
-// not installed: a site broker is part of what has to work.
-func Mosquitto(t testing.TB, lines ...string) *Server {
-	t.Helper()
-	program, err := exec.LookPath("mosquitto")
-	if err != nil {
-		program = "/usr/sbin/mosquitto"
-	}
-	dir := t.TempDir()
-	addr := FreeAddr(t)
-	host, port, _ := net.SplitHostPort(addr)
-	conf := fmt.Sprintf("listener %s %s\nmax_inflight_messages 4096\nmax_queued_messages 200000\n"+
-		"persistence true\npersistence_location %s/\nautosave_interval 1800\nlog_type none\n", port, host, dir)
+// Mosquitto starts Debian's mosquitto with the limits that deploy recommends and
+// further lines of configuration; without any, everyone may connect. The test
+// fails if the program is not installed: a site broker is part of what has to
+// work.
+func Mosquitto(tb testing.TB, lines ...string) *Server {
+	tb.Helper()
 	if len(lines) == 0 {
 		lines = []string{"allow_anonymous true"}
 	}
-	for _, line := range lines {
-		conf += line + "\n"
+	return MosquittoWith(tb, "max_inflight_messages 4096\nmax_queued_messages 200000\npersistence true\n"+
+		"autosave_interval 1800\nlog_type none\n"+strings.Join(lines, "\n"))
+}
+
+// MosquittoWith starts mosquitto with a configuration that names neither a
+// listener nor a place for its data.
+func MosquittoWith(tb testing.TB, conf string) *Server {
+	tb.Helper()
+	program, err := exec.LookPath("mosquitto")
+	if err != nil {
+		program = "/usr/sbin/mosquitto" // not on everyone's path
 	}
+	dir := tb.TempDir()
+	addr := FreeAddr(tb)
+	host, port, err := net.SplitHostPort(addr)
+	if err != nil {
+		tb.Fatal(err)
+	}
+	head := fmt.Sprintf("listener %s %s\npersistence_location %s/\n", port, host, dir)
 	if os.Geteuid() == 0 {
-		conf += "user root\n" // it would else drop to a user that cannot read dir
+		head += "user root\n" // it would else become a user that cannot read dir
 	}
 	path := filepath.Join(dir, "mosquitto.conf")
-	if err := os.WriteFile(path, []byte(conf), 0o600); err != nil {
-		t.Fatal(err)
+	if err := os.WriteFile(path, []byte(head+conf), 0o600); err != nil {
+		tb.Fatal(err)
 	}
 	var cmd *exec.Cmd
 	s := &Server{Addr: addr, URL: "mqtt://" + addr}
 	s.start = func() {
-		t.Helper()
+		tb.Helper()
 		cmd = exec.CommandContext(context.Background(), program, "-c", path)
 		if err := cmd.Start(); err != nil {
-			t.Fatal(err)
+			tb.Fatal(err)
 		}
-		waitListening(t, addr)
+		waitListening(tb, addr)
 	}
 	s.stop = func() {
 		if cmd.ProcessState != nil {
@@ -116,35 +125,49 @@ func Mosquitto(t testing.TB, lines ...string) *Server {
 		}
 		// It writes its persistence file on SIGTERM.
 		if err := cmd.Process.Signal(syscall.SIGTERM); err != nil {
-			t.Error(err)
+			tb.Error(err)
 		}
 		_ = cmd.Wait() // ending by a signal counts as an error
 	}
 	s.start()
-	t.Cleanup(s.stop)
+	tb.Cleanup(s.stop)
 	return s
 }
 
 // FreeAddr gives a loopback address that nothing listens on.
-func FreeAddr(t testing.TB) string {
-	t.Helper()
-	l, err := net.Listen("tcp", "127.0.0.1:0")
-	if err != nil {
-		t.Fatal(err)
+func FreeAddr(tb testing.TB) string {
+	tb.Helper()
+	l := listen(tb)
+	if err := l.Close(); err != nil {
+		tb.Fatal(err)
 	}
-	defer l.Close()
 	return l.Addr().String()
 }
 
-func waitListening(t testing.TB, addr string) {
-	t.Helper()
+func listen(tb testing.TB) net.Listener {
+	tb.Helper()
+	var config net.ListenConfig
+	l, err := config.Listen(tb.Context(), "tcp", "127.0.0.1:0")
+	if err != nil {
+		tb.Fatal(err)
+	}
+	return l
+}
+
+func dial(addr string) (net.Conn, error) {
+	d := net.Dialer{Timeout: startTimeout}
+	return d.DialContext(context.Background(), "tcp", addr)
+}
+
+func waitListening(tb testing.TB, addr string) {
+	tb.Helper()
 	for deadline := time.Now().Add(startTimeout); time.Now().Before(deadline); time.Sleep(20 * time.Millisecond) {
-		if c, err := net.Dial("tcp", addr); err == nil {
-			c.Close()
+		if c, err := dial(addr); err == nil {
+			_ = c.Close()
 			return
 		}
 	}
-	t.Fatalf("nothing listens on %s after %v", addr, startTimeout)
+	tb.Fatalf("nothing listens on %s after %v", addr, startTimeout)
 }
 
 // Proxy passes TCP connections on to a broker until told otherwise.
@@ -158,12 +181,9 @@ type Proxy struct {
 }
 
 // NewProxy starts a proxy in front of target, host:port.
-func NewProxy(t testing.TB, target string) *Proxy {
-	t.Helper()
-	l, err := net.Listen("tcp", "127.0.0.1:0")
-	if err != nil {
-		t.Fatal(err)
-	}
+func NewProxy(tb testing.TB, target string) *Proxy {
+	tb.Helper()
+	l := listen(tb)
 	p := &Proxy{Addr: l.Addr().String(), URL: "mqtt://" + l.Addr().String(), conns: make(map[net.Conn]struct{})}
 	var all sync.WaitGroup
 	all.Go(func() {
@@ -172,9 +192,9 @@ func NewProxy(t testing.TB, target string) *Proxy {
 			if err != nil {
 				return
 			}
-			out, err := net.Dial("tcp", target)
+			out, err := dial(target)
 			if err != nil {
-				in.Close()
+				_ = in.Close()
 				continue
 			}
 			p.mu.Lock()
@@ -184,8 +204,8 @@ func NewProxy(t testing.TB, target string) *Proxy {
 			all.Go(func() { p.pipe(in, out) })
 		}
 	})
-	t.Cleanup(func() {
-		l.Close()
+	tb.Cleanup(func() {
+		_ = l.Close()
 		p.Cut()
 		all.Wait()
 	})
@@ -193,8 +213,7 @@ func NewProxy(t testing.TB, target string) *Proxy {
 }
 
 func (p *Proxy) pipe(dst, src net.Conn) {
-	defer dst.Close()
-	defer src.Close()
+	defer func() { _, _ = dst.Close(), src.Close() }() // Cut may have been first
 	buf := make([]byte, 32<<10)
 	for {
 		n, err := src.Read(buf)
@@ -218,7 +237,7 @@ func (p *Proxy) Cut() {
 	p.mu.Lock()
 	defer p.mu.Unlock()
 	for c := range p.conns {
-		c.Close()
+		_ = c.Close()
 	}
 	clear(p.conns)
 }
