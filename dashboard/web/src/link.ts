@@ -23,7 +23,7 @@ export function liveURL(page: string, rig: string, from: string): string {
 export interface Socket {
   onopen: ((e: never) => unknown) | null;
   onmessage: ((e: { data: unknown }) => unknown) | null;
-  onclose: ((e: never) => unknown) | null;
+  onclose: ((e: { code: number }) => unknown) | null;
   close(): void;
 }
 
@@ -33,6 +33,9 @@ export interface Surroundings {
   cancel(timer: unknown): void;
   random(): number;
 }
+
+/** The server closes so when its configuration changed [RFC 6455, 1012 registered]: what was known of channels and bands is void. */
+export const restartCode = 1012;
 
 /** An open socket that says nothing for this long is given up, ms. */
 export const silenceLimit = 5000;
@@ -44,21 +47,23 @@ export class Link {
   private timer: unknown = null;
   private watchdog: unknown = null;
   private stopped = false;
+  private afresh = false;
 
   /**
-   * `url` gives the address for each try, so that it carries the newest position;
+   * `url` gives the address for each try, so that it carries the newest position,
+   * or none when it has to begin afresh with a hello;
    * `onFrame` gets each frame that parses; `onChange` is told when connected changes.
    */
   constructor(
     private readonly around: Surroundings,
-    private readonly url: () => string,
+    private readonly url: (afresh: boolean) => string,
     private readonly onFrame: (f: Frame) => void,
     private readonly onChange: () => void,
   ) {}
 
   start(): void {
     this.stopped = false;
-    const socket = this.around.open(this.url());
+    const socket = this.around.open(this.url(this.afresh));
     this.socket = socket;
     this.watch();
     socket.onopen = () => {
@@ -75,10 +80,14 @@ export class Link {
         return; // one broken frame must not end the watch; silence ends the link
       }
       this.tries = 0;
+      this.afresh = false;
       this.watch();
       this.onFrame(frame);
     };
-    socket.onclose = () => this.lost(socket);
+    socket.onclose = (e) => {
+      if (e.code === restartCode) this.afresh = true;
+      this.lost(socket);
+    };
   }
 
   stop(): void {

@@ -59,7 +59,7 @@ function run(rig: RigInfo, rigs: RigInfo[]): void {
   let dirty = true;
   let filledFor = '';
 
-  const link = new Link(browser, () => liveURL(location.href, rig.id, model.n > 0 ? `${model.epoch}.${model.n}` : ''), onFrame, () => { dirty = true; });
+  const link = new Link(browser, (afresh) => liveURL(location.href, rig.id, model.n > 0 && !afresh ? `${model.epoch}.${model.n}` : ''), onFrame, () => { dirty = true; });
 
   function onFrame(f: Frame): void {
     const gap = f.kind === 'hello' || f.kind === 'reset';
@@ -70,18 +70,22 @@ function run(rig: RigInfo, rigs: RigInfo[]): void {
     dirty = true;
   }
 
-  /** Fetches what the traces lack: the run so far on the first hello, the gap after a reset. */
-  function fillTraces(): void {
+  /**
+   * Fetches what the traces lack: the run so far on the first hello, the gap after
+   * a reset. The newest minute is stored only when its chunk closes: asked again.
+   */
+  function fillTraces(again = 5): void {
     const r = model.run;
     const key = r ? `${r.id} ${model.epoch} ${model.resets}` : '';
-    if (!r || r.ended || key === filledFor) return;
+    if (!r || r.ended || (key === filledFor && again === 5)) return;
     filledFor = key;
+    if (again > 0) window.setTimeout(() => { if (key === filledFor) fillTraces(again - 1); }, 15_000);
     const start = seconds(r.started);
     const to = Math.max(1, hostNow(model, performance.now()) - start + 1);
     api.series(r.id, seriesNames, Math.max(0, to - 600), to, 2000).then((reply) => {
       model.ring.fill(seriesRows(reply, start));
       dirty = true;
-    }, () => { filledFor = ''; });
+    }, () => undefined); // nothing stored yet, or no server: the next try tells
   }
 
   function hear(): void {
@@ -198,7 +202,7 @@ function header(rigs: RigInfo[], rig: RigInfo, d: Display, sound: Sound): View &
       attr(soundButton, 'aria-pressed', sound.armed ? 'true' : 'false');
       style(tick.firstElementChild as HTMLElement, 'left', `${(m.ticks % 10) * 10}%`);
       text(ageText, gone ? 'no data' : `data age ${age(dataAge(m, now))}`);
-      attr(ageText.parentElement as HTMLElement, 'data-bad', f.kind !== 'live');
+      attr(ageText.parentElement as HTMLElement, 'data-bad', f.kind !== 'live' || !((f.age ?? Infinity) < 1));
       text(time, gone ? '–' : `${clock(hostNow(m, now))} UTC`);
       const s = m.status;
       const bad: string[] = [];

@@ -122,7 +122,8 @@ function alarm(m: Model, a: Alarm, t: number): void {
   if (from === a.state) return;
   remember(m, { t, alarm: a, from, to: a.state, note: a.past ? 'past: judged after the event' : '' });
   if (from === 'normal' || (a.state === 'unacknowledged' && from !== 'unacknowledged')) {
-    flag(m, { t: seconds(a.raised), kind: a.priority, text: a.title, id: a.id });
+    // A latched alarm that comes again keeps its id and its first raise.
+    flag(m, { t: from === 'normal' ? seconds(a.raised) : seconds(a.changed), kind: a.priority, text: a.title, id: a.id });
   }
 }
 

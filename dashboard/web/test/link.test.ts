@@ -1,7 +1,7 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
 import type { Frame } from '../src/frames';
-import { Link, type Socket, backoff, liveURL, longestWait, silenceLimit } from '../src/link';
+import { Link, type Socket, backoff, liveURL, longestWait, restartCode, silenceLimit } from '../src/link';
 
 test('the wait doubles up to 2 s and is never longer', () => {
   assert.deepEqual([0, 1, 2, 3, 4, 5, 50].map((n) => backoff(n, 0)), [100, 200, 400, 800, 1600, longestWait, longestWait]);
@@ -41,7 +41,7 @@ function bench() {
     },
     cancel: (t) => timers.delete(t as number),
     random: () => 0,
-  }, () => `ws://x/${position}`, (f) => frames.push(f), () => { changes++; });
+  }, (afresh) => `ws://x/${afresh ? '' : position}`, (f) => frames.push(f), () => { changes++; });
   const fire = (ms: number): void => {
     const [key, timer] = [...timers].find(([, t]) => t.ms === ms) ?? [];
     assert.ok(key !== undefined && timer, `a timer of ${ms} ms is set, have ${[...timers.values()].map((t) => t.ms)}`);
@@ -61,9 +61,22 @@ test('a lost link comes back at the position of its last frame', () => {
   b.last().socket.onmessage?.({ data: '{"kind":"reset","reason":"epoch"}' });
   assert.equal(b.frames.length, 1);
   b.at('3.17');
-  b.last().socket.onclose?.(nothing);
+  b.last().socket.onclose?.({ code: 1006 });
   assert.ok(!b.link.connected);
   assert.equal(b.changes(), 2);
+  b.fire(100);
+  assert.equal(b.last().url, 'ws://x/3.17');
+});
+
+test('after a change of configuration it begins afresh until a frame has come', () => {
+  const b = bench();
+  b.at('3.17');
+  b.link.start();
+  b.last().socket.onclose?.({ code: restartCode });
+  b.fire(100);
+  assert.equal(b.last().url, 'ws://x/');
+  b.last().socket.onmessage?.({ data: '{"kind":"reset","reason":"x"}' });
+  b.last().socket.onclose?.({ code: 1006 });
   b.fire(100);
   assert.equal(b.last().url, 'ws://x/3.17');
 });
@@ -71,16 +84,16 @@ test('a lost link comes back at the position of its last frame', () => {
 test('tries come at growing waits until a frame, not merely an open socket', () => {
   const b = bench();
   b.link.start();
-  b.last().socket.onclose?.(nothing);
+  b.last().socket.onclose?.({ code: 1006 });
   b.fire(100);
   b.last().socket.onopen?.(nothing);
-  b.last().socket.onclose?.(nothing);
+  b.last().socket.onclose?.({ code: 1006 });
   b.fire(200);
-  b.last().socket.onclose?.(nothing);
+  b.last().socket.onclose?.({ code: 1006 });
   b.fire(400);
   b.last().socket.onopen?.(nothing);
   b.last().socket.onmessage?.({ data: '{"kind":"reset","reason":"x"}' });
-  b.last().socket.onclose?.(nothing);
+  b.last().socket.onclose?.({ code: 1006 });
   b.fire(100);
   assert.equal(b.opened.length, 5);
 });
@@ -94,7 +107,7 @@ test('a socket that stays silent is given up even when it never reports a close'
   assert.ok(!b.link.connected);
   b.fire(100);
   assert.equal(b.opened.length, 2);
-  b.opened[0]?.socket.onclose?.(nothing); // the late close of the old one
+  b.opened[0]?.socket.onclose?.({ code: 1006 }); // the late close of the old one
   b.opened[0]?.socket.onmessage?.({ data: '{"kind":"reset","reason":"late"}' });
   assert.equal(b.opened.length, 2);
   assert.equal(b.frames.length, 0);
@@ -111,7 +124,7 @@ test('stop means stop', () => {
   const b = bench();
   b.link.start();
   b.link.stop();
-  b.opened[0]?.socket.onclose?.(nothing);
+  b.opened[0]?.socket.onclose?.({ code: 1006 });
   assert.equal(b.timers.size, 0);
   assert.ok(b.opened[0]?.closed);
 });

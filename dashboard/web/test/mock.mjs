@@ -101,7 +101,7 @@ export async function start(port = 0) {
     if (parts[1] === 'rigs' && parts[3] === 'hello') return json(200, live.hello());
     if (parts[1] === 'rigs' && parts[3] === 'throat-curve') {
       const npr = Array.from({ length: 81 }, (_, i) => 1 + i * 0.025);
-      return json(200, { npr, flow_parameter: npr.map(flowParameter), critical_npr: chokeNPR });
+      return json(200, { npr, flow_parameter: npr.map((v) => 0.97 * flowParameter(v)), critical_npr: chokeNPR });
     }
     if (parts[1] === 'alarms' && req.method === 'POST') {
       const frames = live.acknowledge(parts[2], sent.revision);

@@ -57,6 +57,15 @@ test('an alarm put aside without being raised sets no flag', () => {
   assert.equal(m.flags.length, 0);
 });
 
+test('a latched alarm that comes again sets a second flag at its new time', () => {
+  const m = fold(
+    [alarmFrame(alarm()), 0],
+    [alarmFrame(alarm({ state: 'latched_unacknowledged', revision: 2, changed: rfc3339(t0 + 5) })), 1],
+    [alarmFrame(alarm({ state: 'unacknowledged', revision: 3, changed: rfc3339(t0 + 60) })), 2],
+  );
+  assert.deepEqual(m.flags.map((f) => f.t), [t0, t0 + 60]);
+});
+
 test('history and flags stay bounded', () => {
   const m = newModel();
   for (let i = 0; i < 1200; i++) apply(m, alarmFrame(alarm({ id: `a${i}`, raised: rfc3339(t0 + i) }), t0 + i, i), i);

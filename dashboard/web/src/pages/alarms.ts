@@ -6,7 +6,7 @@ import type { Display } from '../context';
 import { type View, attr, column, h, refill } from '../dom';
 import type { Alarm } from '../frames';
 import { clock, seconds } from '../time';
-import { significant } from '../units';
+import { fixed, significant } from '../units';
 import { veil } from '../watch/display';
 
 const head = (...names: string[]): HTMLElement => h('thead', {}, h('tr', {}, ...names.map(column)));
@@ -47,7 +47,7 @@ export function alarmsPage(d: Display): View {
         h('td', { class: 'num' }, clock(seconds(a.raised))),
         h('td', {}, h('b', {}, a.text || a.title), h('div', {}, a.caution), a.group ? h('div', { class: 'extra' }, `group ${a.group}`) : ''),
         h('td', {}, a.response),
-        h('td', { class: 'num' }, a.unknown ? 'unknown' : a.value === null ? '–' : `${significant(a.value, 4)} ${a.unit}`),
+        h('td', { class: 'num' }, a.unknown ? 'unknown' : a.value === null ? '–' : `${Number.isInteger(a.value) ? fixed(a.value, 0) : significant(a.value, 4)} ${a.unit}`),
         h('td', {}, ack(a)))));
       const silent = [...m.alarms.values()].filter((a) => !isStanding(a));
       refill(quiet, silent.map((a) => `${a.id}:${a.revision}`).join() || 'none', () => silent.length === 0 ? empty('None', 5) : silent.map((a) => h('tr', {},

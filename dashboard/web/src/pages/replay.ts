@@ -23,6 +23,7 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
   let inner: View | null = null;
   let last = NaN;
   let events: Flag[] = [];
+  let complete = false; // events holds those of the whole run
   let choked: [number, number][] = []; // periods, seconds of the run
   let scrubbing: number | null = null;
   const over = new AbortController();
@@ -117,9 +118,11 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
         if (f.kind === 'mark') found.push({ t: seconds(f.t), kind: 'mark', text: f.mark.text, id: `mark ${f.t}` });
         events = found.sort((a, b) => a.t - b.t);
         if (f.kind === 'operating_point') others++;
-        return others < 20_000; // a server that does not select kinds must not send a whole day
+        return (complete = others < 20_000); // a server that does not select kinds must not send a whole day
       });
-    } catch { /* left page or lost server: what was found so far stands */ }
+    } catch {
+      complete = false; // left page or lost server: what was found so far stands
+    }
   }
 
   function paintBar(length: number): void {
@@ -150,6 +153,8 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
       last = at;
       if (!player || !inner || !run) return;
       player.advance(dt, at);
+      // The fold knows no flags from before a jump; the overview does.
+      if (complete) player.model.flags = events.filter((e) => e.t <= start + (player as Player).position);
       const shown = scrubbing ?? player.position;
       if (scrubbing === null && Math.abs(Number(scrub.value) - shown) > 0.04) scrub.value = String(shown);
       attr(scrub, 'aria-valuetext', `${duration(shown)} of ${duration(player.length)}`);

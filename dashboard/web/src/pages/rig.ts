@@ -51,7 +51,7 @@ export function rigPage(d: Display): View {
         rows = new Map();
         return m.channels.map((c) => {
           const r: Row = { el: h('tr'), raw: h('td', { class: 'num' }), value: h('td', { class: 'num' }), sign: h('td'), quality: h('td'), age: h('td', { class: 'num' }) };
-          const range = [c.low, c.high].map((v) => (v === null ? '–' : plain(inUnit(v, c.unit, c.dimension).value))).join(' … ');
+          const range = [c.low, c.high].map((v) => (v === null ? '–' : plain(inUnit(v, c.unit, c.dimension).value))).join(' … ') + (c.reference === 'gauge' ? ' gauge' : '');
           r.el.append(h('th', { scope: 'row' }, c.id), h('td', { class: 'extra title', title: c.title }, c.title), h('td', {}, c.station.replaceAll('_', ' ') || (c.recorded_only ? 'recorded only' : '')), r.raw, r.value, r.sign, r.quality, r.age, h('td', { class: 'num' }, range));
           rows.set(c.id, r);
           return r.el;

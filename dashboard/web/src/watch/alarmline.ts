@@ -36,7 +36,7 @@ export function alarmLine(d: Display): View {
     attr(el, 'data-open', open && believed);
     text(shape, a ? priorityLook[a.priority].shape : '');
     text(word, a ? priorityLook[a.priority].word : '');
-    text(state, a ? `${stateWord[a.state]}${a.past ? ', past' : ''} · ${clock(seconds(a.raised))}` : '');
+    text(state, a ? `${stateWord[a.state]}${a.past ? ', past' : ''} · ${clock(seconds(a.state === 'unacknowledged' ? a.changed : a.raised))}` : ''); // a latched one may come again
     text(title, a ? (a.text || a.title) : 'No alarm standing');
     text(caution, a?.caution ?? '');
     attr(title.parentElement as HTMLElement, 'title', a ? `${a.text}\n${a.caution}\n${a.response}` : null);

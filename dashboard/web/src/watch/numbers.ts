@@ -69,8 +69,9 @@ export function numbers(d: Display): View {
     put(thrust, typeof p?.gross_thrust_n === 'number' ? fixed(kN(p.gross_thrust_n), 2) : '–', 'kN', `${typeof p?.gross_thrust_n_u95 === 'number' ? `${uncertainty(kN(p.gross_thrust_n_u95), 2)}, ` : ''}computed`);
     put(phase, p ? p.phase : '–', '', p && !p.lit ? 'not lit' : '');
     put(armed, p ? (p.choke_armed ? '● armed' : '○ not armed') : '–', '', p && m.armedAbove !== null ? `above ${fixed(m.armedAbove, 0)} rpm` : '');
+    attr(run.el, 'title', m.run?.id);
     put(run, m.run ? `${m.run.number}` : 'none', '', m.run ? m.run.id : 'between runs');
-    put(time, m.run ? duration(runSeconds(m)) : '–', '', m.run ? `${clock(m.newest)} UTC` : '');
+    put(time, m.run && p ? duration(runSeconds(m)) : '–', '', m.run && p ? `${clock(m.newest)} UTC` : '');
   }
   return { el, update, destroy: () => undefined };
 }

@@ -1,5 +1,5 @@
 // The throat plane: NPR across, flow parameter W√(R T0)/(A p0) up. The curve of
-// the present gas, times the nozzle's Cd, rises and goes flat past the critical
+// the present gas, with the nozzle's Cd in it, rises and goes flat past the critical
 // NPR. The computed point lies on it by construction and is drawn hollow; only
 // air flow + fuel flow gives an independent, solid point.
 
@@ -68,7 +68,7 @@ export function throatPlane(d: Display): View {
     let highest = 2.4;
     for (let i = from; i < ring.size; i += 8) highest = Math.max(highest, ring.value(nprColumn, i) || 0);
     const xMax = Math.ceil((highest + 0.1) * 2) / 2;
-    const yMax = 0.8;
+    const yMax = Math.max(0.8, Math.ceil(((live ? p.independent_flow_parameter ?? 0 : 0) + 0.02) * 10) / 10); // a fault may lift it far above the curve
     const [left, right, top, bottom] = [46, width - 10, 10, height - 36];
     const x = (v: number): number => left + ((v - 1) / (xMax - 1)) * (right - left);
     const y = (v: number): number => bottom - (v / yMax) * (bottom - top);
@@ -124,17 +124,16 @@ export function throatPlane(d: Display): View {
       line(c, x(choke), top, x(choke), bottom);
       c.setLineDash([]);
     }
-    const cd = p?.discharge_coefficient ?? 1;
     if (curve) {
       c.strokeStyle = live ? pal.text : pal.data2;
       c.lineWidth = 1.5;
       c.beginPath();
       curve.npr.forEach((v, i) => {
         const f = curve?.flow_parameter[i];
-        if (f !== undefined) c.lineTo(x(v), y(f * cd));
+        if (f !== undefined) c.lineTo(x(v), y(f));
       });
       const end = curve.flow_parameter[curve.flow_parameter.length - 1];
-      if (end !== undefined) c.lineTo(right + 5, y(end * cd));
+      if (end !== undefined) c.lineTo(right + 5, y(end));
       c.stroke();
     }
 
@@ -181,26 +180,29 @@ export function throatPlane(d: Display): View {
         c.lineWidth = 2.5;
         c.stroke();
       }
-      // The labels keep clear of the curve: above the point at high flow, to its right at low.
+      // The labels keep clear of the curve: above and below the points at high flow,
+      // to their right at low; a far independent point has its label beside it.
       const anchor = computed ?? independent;
       if (anchor !== null) {
         const flat = anchor > 0.55;
         const toLeft = x(npr) > right - 110;
+        const far = independent !== null && Math.abs(y(independent) - y(anchor)) > 26;
         c.font = font(12, 600);
-        c.textAlign = flat ? (toLeft ? 'right' : 'center') : 'left';
-        const lx = flat ? (toLeft ? x(npr) + 8 : x(npr)) : x(npr) + 14;
-        c.fillStyle = pal.text;
         c.textBaseline = 'middle';
         c.strokeStyle = pal.panel; // a halo, where a label crosses a line
         c.lineWidth = 4;
         c.lineJoin = 'round';
-        if (computed !== null) c.strokeText('○ computed', lx, flat ? y(anchor) - 18 : y(anchor) + 2);
-        if (independent !== null) c.strokeText('● air + fuel flow', lx, flat ? y(anchor) + 22 : y(anchor) + 18);
-        if (computed !== null) c.fillText('○ computed', lx, flat ? y(anchor) - 18 : y(anchor) + 2);
-        if (independent !== null) {
-          c.fillStyle = pal.data;
-          c.fillText('● air + fuel flow', lx, flat ? y(anchor) + 22 : y(anchor) + 18);
-        }
+        const label = (words: string, colour: string, px: number, py: number, align: CanvasTextAlign): void => {
+          c.textAlign = align;
+          c.strokeText(words, px, py);
+          c.fillStyle = colour;
+          c.fillText(words, px, py);
+        };
+        const [lx, align]: [number, CanvasTextAlign] = !flat ? [x(npr) + 14, 'left'] : toLeft ? [x(npr) + 8, 'right'] : [x(npr), 'center'];
+        const above = far && independent !== null && independent > anchor ? 22 : -18;
+        if (computed !== null) label('○ computed', pal.text, lx, y(anchor) + (flat ? above : 2), align);
+        if (independent !== null && far) label('● air + fuel flow', pal.data, x(npr) + (toLeft ? -9 : 9), Math.max(top + 9, y(independent)), toLeft ? 'right' : 'left');
+        else if (independent !== null) label('● air + fuel flow', pal.data, lx, y(anchor) + (flat ? 22 : 18), align);
       }
     }
     if (choke !== null) {
@@ -216,7 +218,7 @@ export function throatPlane(d: Display): View {
     c.restore();
 
     // Notes, lower right, where no gas curve passes.
-    const notes = [curveText && `${curveText}, Cd ${fixed(cd, 3)}`];
+    const notes = [curveText && `${curveText}, Cd ${fixed(p?.discharge_coefficient, 3)}`];
     if (p?.back_pressure_from === 'barometer') notes.push('back pressure from barometer');
     if (live && (p.independent_flow_parameter ?? null) === null) notes.push('no independent flow');
     c.font = font(12);

@@ -6,7 +6,7 @@ import 'uplot/dist/uPlot.min.css';
 import { priorityLook } from '../alarms';
 import type { Display } from '../context';
 import { type View, attr, h, text } from '../dom';
-import type { Flag, Model } from '../state';
+import { type Flag, type Model, believable } from '../state';
 import type { Palette } from '../palette';
 import { type Column, chokedSpans, columns, decimate } from '../ring';
 import { clock } from '../time';
@@ -86,7 +86,7 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
     choices.forEach((b, i) => attr(b, 'aria-pressed', String(spans[i] === span)));
   }
 
-  interface Row { el: HTMLElement; box: HTMLElement; plot: Plot; chart: uPlot; values: HTMLElement[] }
+  interface Row { el: HTMLElement; box: HTMLElement; width: number; plot: Plot; chart: uPlot; values: HTMLElement[] }
   let rows: Row[] = [];
   let pal: Palette | null = null;
   let [width, height] = [0, 0];
@@ -109,8 +109,8 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
     rows.forEach((r, i) => {
       const hgt = each + (i === rows.length - 1 ? axisHeight : 0);
       r.el.style.height = `${hgt}px`;
-      const w = r.box.clientWidth;
-      if (w > 50) r.chart.setSize({ width: w, height: hgt });
+      r.width = r.box.clientWidth; // kept: asking at each draw would lay the page out each time
+      if (r.width > 50) r.chart.setSize({ width: r.width, height: hgt });
     });
   }
 
@@ -150,7 +150,7 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
           }],
         },
       }, [[], ...plot.lines.map(() => [])] as unknown as uPlot.AlignedData, box);
-      return { el: row, box, plot, chart, values };
+      return { el: row, box, width: 0, plot, chart, values };
     });
     layout();
   }
@@ -217,7 +217,7 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
     c.restore();
   }
 
-  function update(): void {
+  function update(now: number): void {
     const palette = d.palette();
     if (palette !== pal) build((pal = palette));
     const m = d.model();
@@ -229,9 +229,11 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
     shading = chokedSpans(m.ring, start, end);
     flags = m.flags.filter((f) => f.t >= start && f.t <= end);
     const cursor = hover !== null ? hover : null;
-    const atRow = cursor === null ? m.ring.lower(end + 1e-6) - 1 : nearest(m, cursor);
+    const past = cursor !== null || isFrozen; // values of a chosen instant; otherwise they claim to be present
+    const shown = past || believable(d.fresh(now));
+    const atRow = !shown ? -1 : cursor === null ? m.ring.lower(end + 1e-6) - 1 : nearest(m, cursor);
     for (const r of rows) {
-      const w = decimate(m.ring, r.plot.lines.map((l) => l.column), start, end, Math.max(60, Math.floor(r.box.clientWidth / 2)));
+      const w = decimate(m.ring, r.plot.lines.map((l) => l.column), start, end, Math.max(60, Math.floor(r.width / 2)));
       const y = w.y.map((s) => (r.plot.convert === same ? s : s.map((v) => (v === null ? null : r.plot.convert(v)))));
       r.chart.batch(() => {
         r.chart.setData([w.t, ...y] as uPlot.AlignedData, false);
