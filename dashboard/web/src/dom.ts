@@ -1,4 +1,4 @@
-// Small helpers to build and update elements. Updates touch the page only when a
+// Builds and updates elements. Updates touch the page only when a
 // value has changed: twenty frames a second must not make it restyle.
 
 type Child = Node | string | null | undefined | false;

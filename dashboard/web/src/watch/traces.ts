@@ -8,7 +8,7 @@ import type { Display } from '../context';
 import { type View, attr, h, text } from '../dom';
 import { type Flag, type Model, believable } from '../state';
 import type { Palette } from '../palette';
-import { type Column, chokedSpans, columns, decimate } from '../ring';
+import { type Column, chokedSpans, columns, decimate, gapSeconds } from '../ring';
 import { clock } from '../time';
 import { celsius, fixed, signed } from '../units';
 import { font } from './canvas';
@@ -248,10 +248,11 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
     attr(at, 'data-frozen', isFrozen);
   }
 
+  /** The row at t; -1 in a gap. */
   function nearest(m: Model, t: number): number {
     const i = m.ring.lower(t);
-    if (i > 0 && (i >= m.ring.size || t - m.ring.t(i - 1) < m.ring.t(i) - t)) return i - 1;
-    return Math.min(i, m.ring.size - 1);
+    const near = i > 0 && (i >= m.ring.size || t - m.ring.t(i - 1) < m.ring.t(i) - t) ? i - 1 : i;
+    return near < m.ring.size && Math.abs(m.ring.t(near) - t) <= Math.max(gapSeconds, span / 200) ? near : -1;
   }
 
   return {
