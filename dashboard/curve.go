@@ -58,7 +58,8 @@ func (s *Server) throatCurve(w http.ResponseWriter, r *http.Request) error {
 	out := curveJSON{}
 	const pb = 101325.0
 	for i := range curvePoints {
-		npr := curveFrom + (curveTo-curveFrom)*float64(i)/(curvePoints-1)
+		x := float64(i) / (curvePoints - 1)
+		npr := curveFrom + (curveTo-curveFrom)*x*x // closer where the curve rises steeply
 		res, err := n.Evaluate(&g, nozzle.Inputs{
 			TotalPressure: unit.Absolute(npr * pb / (1 - comp.Nozzle.DuctLoss)), BackPressure: pb,
 			TotalTemperature: in["total_temperature"], MetalTemperature: in["total_temperature"],

@@ -91,7 +91,8 @@ func (h *Hub) Publish(outs []pipeline.Outcome, m *pipeline.Machine, _ *pipeline.
 			h.channels(o, &cfg, now)
 			continue
 		case pipeline.OutcomeConfig:
-			if o.OK {
+			if o.OK { // what came before cannot be joined on: a viewer must begin with a hello
+				h.ring, h.head = nil, 0
 				h.dropAll(websocket.CloseServiceRestart, "the configuration changed")
 			}
 			continue

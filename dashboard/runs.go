@@ -156,6 +156,9 @@ func (s *Server) messages(w http.ResponseWriter, r *http.Request) error {
 		return err
 	}
 	ctx := r.Context()
+	if kinds := r.URL.Query().Get("kinds"); kinds != "" {
+		return s.events(w, r, f, from, to, strings.Split(kinds, ","))
+	}
 	seq, err := f.SeqAtHost(ctx, from-early)
 	if err != nil {
 		return fmt.Errorf("messages: %w", err)
@@ -204,11 +207,45 @@ func (s *Server) messages(w http.ResponseWriter, r *http.Request) error {
 		}
 		return nil
 	})
-	if err != nil && !errors.Is(err, errEnough) && ctx.Err() == nil {
-		s.cfg.Log.Error("messages", "run", run.ID, "err", err)
-		_, _ = fmt.Fprintf(out, `{"kind":"error","detail":%s}`+"\n", strconv.Quote(err.Error()))
-	}
+	s.broken(out, r, err)
 	return nil
+}
+
+// storedKinds are the frames that are stored as they are, with the member that
+// holds them.
+var storedKinds = []string{"alarm", "mark"}
+
+// events answers with the stored frames of some kinds, by event time.
+func (s *Server) events(w http.ResponseWriter, r *http.Request, f *runfile.File, from, to int64, kinds []string) error {
+	for _, k := range kinds {
+		if !slices.Contains(storedKinds, k) {
+			return badRequest("kinds %q: give some of %s, or none for every frame", k, strings.Join(storedKinds, ", "))
+		}
+	}
+	out, done := s.stream(w, r)
+	defer done()
+	var buf []byte
+	err := f.Events(r.Context(), from, to, func(e *runfile.Event) error {
+		if !slices.Contains(kinds, e.Kind) {
+			return nil
+		}
+		buf = open(buf[:0], e.Kind, &pipeline.Outcome{Epoch: e.Epoch, N: e.N, T: e.T})
+		buf = append(append(name(buf, e.Kind), e.JSON...), '}', '\n')
+		_, err := out.Write(buf)
+		return err
+	})
+	s.broken(out, r, err)
+	return nil
+}
+
+// broken ends a stream with an error frame when err is not nil: the answer has
+// begun, so its status cannot tell any more.
+func (s *Server) broken(out io.Writer, r *http.Request, err error) {
+	if err == nil || errors.Is(err, errEnough) || r.Context().Err() != nil {
+		return
+	}
+	s.cfg.Log.Error("stream", "path", r.URL.Path, "err", err)
+	_, _ = fmt.Fprintf(out, `{"kind":"error","detail":%s}`+"\n", strconv.Quote(err.Error()))
 }
 
 // stream begins an NDJSON answer, packed if the client takes it.

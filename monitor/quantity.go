@@ -212,6 +212,7 @@ type OperatingPoint struct {
 	ChokeMarginal  bool
 	ChokeArmed     bool
 	Lit            bool
+	LitKnown       bool // false until Lit says something
 	Phase          Phase
 	BackFrom       Source
 	TemperatureBy  Source

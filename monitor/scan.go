@@ -12,6 +12,14 @@ type Scan struct {
 	Age     []int64  // ns from the newest sample to T; -1 when there is none
 }
 
+// NewScan gives a scan with room for n channels.
+func NewScan(n int) *Scan {
+	return &Scan{
+		Raw: make([]float64, n), Value: make([]float64, n), Quality: make([]Quality, n),
+		Samples: make([]uint16, n), Age: make([]int64, n),
+	}
+}
+
 // Run is one recorded period of testing.
 type Run struct {
 	ID      string `json:"id"`

@@ -10,9 +10,15 @@
 // A scan is closed by the record that makes it complete: every channel that has
 // lately been in each scan has a sample at or after T. A channel that fails to
 // come is waited for until Lateness has passed: in host time, and while a
-// backlog comes in after a connect, in event time. While no session is
-// connected scans wait: what the broker keeps will still come. Samples of a scan
-// that is closed already are late: counted, not used.
+// backlog comes in after a connect, in event time; so is every scan for a while
+// after samples of a channel came out of order. While no session is connected
+// scans wait: what the broker keeps will still come.
+//
+// A sample of a scan that is closed already goes into the oldest open one if it
+// is late by no more than Lateness, or if it is the newest of its channel and
+// younger than the hold time: a slow channel from a slow source must not go
+// stale because fast ones close scans. Every other late sample is counted and
+// not used.
 //
 // All that depends on past records is in State; an Aligner holds only what
 // follows from the configuration, and buffers.
@@ -32,9 +38,11 @@ const (
 	slotsAtFirst = 64      // open intervals kept before the table grows
 	slotsAtMost  = 1 << 14 // 13 min at 20 scans/s: a channel further ahead closes scans
 	bridge       = int64(120e9)
-	streakFull   = 4          // scans in a row that make a channel expected
-	settle       = int64(2e9) // host time without a lagging message that ends a backlog
-	suspectFor   = int64(3e9) // host time over which a lagging clock is compared with ours
+	streakFull   = 4           // scans in a row that make a channel expected
+	patience     = int64(10e9) // host time for which scans wait after samples came out of order
+	settle       = int64(2e9)  // host time without a sample of the past that ends a backlog
+	settled      = int64(5e8)  // lag beyond Lateness that makes a sample one of the past
+	suspectFor   = int64(3e9)  // host time over which a lagging clock is compared with ours
 )
 
 // Acc gathers the samples of one channel in one interval.
@@ -74,6 +82,7 @@ type State struct {
 	Table    []Acc  // Rows × channels, a ring of rows
 	MaxEvent int64  // newest event time of a believed clock
 	Backlog  int64  // host time until which a backlog is expected, 0 = none
+	Patient  int64  // host time until which scans wait for samples out of order
 	Sessions []Session
 	Channels []ChannelState
 	Sources  []SourceState
@@ -102,22 +111,16 @@ type Aligner struct {
 	decoder *decode.Decoder
 	shared  map[string]int // channels found by name on any input
 	topics  map[string]topicInfo
-	scan    monitor.Scan
 }
 
 // New gives an aligner. The configuration must be valid: Period > 0, names
 // unique per topic, every filter an MQTT filter.
 func New(cfg Config) *Aligner {
-	n := len(cfg.Channels)
 	a := &Aligner{
 		cfg:     cfg,
 		decoder: decode.New(decode.Limits{}),
-		shared:  make(map[string]int, n),
+		shared:  make(map[string]int, len(cfg.Channels)),
 		topics:  map[string]topicInfo{},
-		scan: monitor.Scan{
-			Raw: make([]float64, n), Value: make([]float64, n), Quality: make([]monitor.Quality, n),
-			Samples: make([]uint16, n), Age: make([]int64, n),
-		},
 	}
 	for i, c := range cfg.Channels {
 		if c.Topic == "" {
@@ -280,7 +283,7 @@ func (a *Aligner) sample(s *State, src *SourceState, info topicInfo, sm *ingest.
 	if sm.Time != ingest.NoTime {
 		t = a.eventTime(s, src, sm.Time, host)
 	}
-	a.place(s, ch, t, v)
+	a.place(s, ch, t, host, v)
 }
 
 // eventTime gives the time at which a sample counts: its own, or host time when
@@ -297,6 +300,9 @@ func (a *Aligner) eventTime(s *State, src *SourceState, t, host int64) int64 {
 	case src.Skew <= a.cfg.MaxPast:
 		if src.Skew <= a.cfg.MaxPast/2 || !src.Skewed {
 			src.Skewed, src.SuspectHost = false, 0
+			if s.Backlog != 0 {
+				a.settle(s, src.Skew, host)
+			}
 			s.MaxEvent = max(s.MaxEvent, t)
 			return t
 		}
@@ -315,28 +321,46 @@ func (a *Aligner) eventTime(s *State, src *SourceState, t, host int64) int64 {
 		return host
 	}
 	if s.Backlog != 0 {
-		s.Backlog = max(s.Backlog, host+settle)
+		a.settle(s, src.Skew, host)
 	}
 	s.MaxEvent = max(s.MaxEvent, t)
 	return t
 }
 
+// settle moves the end of an expected backlog: a sample of the past says that
+// more will come, one of now that there may be none.
+func (a *Aligner) settle(s *State, lag, host int64) {
+	if lag > a.cfg.Lateness+settled {
+		s.Backlog = max(s.Backlog, host+settle)
+	} else {
+		s.Backlog = min(s.Backlog, host+settle)
+	}
+}
+
 // place puts a value into the interval of its time.
-func (a *Aligner) place(s *State, ch int, t int64, v float64) {
+func (a *Aligner) place(s *State, ch int, t, host int64, v float64) {
 	p := a.cfg.Period
 	if s.Next == 0 {
 		s.Next = ceil(t, p)
 	}
-	if t <= s.Next-p {
-		s.Counters[ingest.ReasonLate]++
-		return
+	cs := &s.Channels[ch]
+	if t < cs.Newest {
+		s.Patient = host + patience
 	}
-	if t-s.Next > bridge && s.empty() {
-		next := ceil(t, p)
-		s.Skipped += uint64((next - s.Next) / p)
-		s.Next = next
+	row := int64(0)
+	if late := s.Next - p - t; late >= 0 {
+		if late > a.cfg.Lateness && (t <= cs.Newest || late > a.cfg.Channels[ch].Hold) {
+			s.Counters[ingest.ReasonLate]++
+			return
+		}
+	} else {
+		if t-s.Next > bridge && s.empty() {
+			next := ceil(t, p)
+			s.Skipped += uint64((next - s.Next) / p)
+			s.Next = next
+		}
+		row = (t - (s.Next - p) - 1) / p
 	}
-	row := (t - (s.Next - p) - 1) / p
 	if row >= int64(s.Rows) {
 		if row >= slotsAtMost { // a clock this far ahead is not waited for
 			s.Counters[ingest.ReasonFuture]++
@@ -351,7 +375,6 @@ func (a *Aligner) place(s *State, ch int, t int64, v float64) {
 	acc.Sum += v
 	acc.N++
 	acc.Newest = max(acc.Newest, t)
-	cs := &s.Channels[ch]
 	cs.Newest = max(cs.Newest, t)
 	s.Samples++
 }
@@ -407,33 +430,34 @@ func (s *State) Waiting() bool {
 // CatchingUp tells that samples of the past are coming in.
 func (s *State) CatchingUp(host int64) bool { return s.Backlog != 0 && host-s.MaxEvent > int64(1e9) }
 
-// Scan closes the oldest open interval if it can be closed at host time and
-// gives it, else nil. Call it until it gives nil. The scan is valid until the
-// next call; Value and final qualities are left to calibration.
-func (a *Aligner) Scan(s *State, host int64) *monitor.Scan {
+// Scan closes the oldest open interval if it can be closed at host time, fills
+// out with it and reports true. Call it until it reports false. out has one entry
+// per channel; Value and final qualities are left to calibration.
+func (a *Aligner) Scan(s *State, host int64, out *monitor.Scan) bool {
 	if s.Next == 0 {
-		return nil
+		return false
 	}
 	if s.Backlog != 0 && host >= s.Backlog {
 		s.Backlog = 0
 	}
-	if !a.complete(s) {
+	if host < s.Patient || !a.complete(s) {
 		now := host
 		switch {
 		case s.Backlog != 0:
 			now = s.MaxEvent
 		case s.Waiting():
-			return nil
+			return false
 		case host-s.Next > bridge && s.empty():
 			next := ceil(host-a.cfg.Lateness, a.cfg.Period)
 			s.Skipped += uint64((next - s.Next) / a.cfg.Period)
 			s.Next = next
 		}
 		if now < s.Next+a.cfg.Lateness {
-			return nil
+			return false
 		}
 	}
-	return a.closeScan(s)
+	a.closeScan(s, out)
+	return true
 }
 
 // complete tells whether every expected channel has a sample at or after Next.
@@ -452,10 +476,9 @@ func (a *Aligner) complete(s *State) bool {
 	return expected
 }
 
-func (a *Aligner) closeScan(s *State) *monitor.Scan {
+func (a *Aligner) closeScan(s *State, out *monitor.Scan) {
 	n := len(a.cfg.Channels)
 	row := s.Table[s.Base*n : (s.Base+1)*n]
-	out := &a.scan
 	s.N++
 	out.N, out.T = s.N, s.Next
 	for i := range row {
@@ -481,7 +504,6 @@ func (a *Aligner) closeScan(s *State) *monitor.Scan {
 	}
 	s.Base = (s.Base + 1) % s.Rows
 	s.Next += a.cfg.Period
-	return out
 }
 
 // ceil gives the least multiple of p that is not below t.

@@ -263,9 +263,9 @@ func (c *Computer) speed(s *State, scan *monitor.Scan, p *monitor.OperatingPoint
 	p.V[monitor.Speed] = n
 	p.Phase = c.cfg.Phase.Step(&s.Phase, p.T, n, p.V[monitor.EGTIndicated])
 	p.V[monitor.SpeedRate] = s.Phase.Rate()
-	p.Lit = s.Phase.Lit
+	p.Lit, p.LitKnown = s.Phase.Lit, s.Phase.LitKnown
 	switch a := c.cfg.Nozzle.ArmedAboveRPM; {
-	case a <= 0 || n < a-c.cfg.Nozzle.ArmedHysterRPM || !p.Lit && s.Phase.LitKnown:
+	case a <= 0 || n < a-c.cfg.Nozzle.ArmedHysterRPM || p.LitKnown && !p.Lit:
 		s.Armed = false
 	case n >= a:
 		s.Armed = true

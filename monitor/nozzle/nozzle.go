@@ -210,7 +210,7 @@ func (n *Nozzle) Evaluate(g *gas.Mixture, in Inputs) (Result, error) {
 	r.Thrust, insideThrust = n.thrust.at(npr)
 
 	if !(r.NPR > 1 && r.NPR-1 >= c.ResolutionFloor) {
-		if r.NPR < 1 && 1-r.NPR >= c.ResolutionFloor {
+		if r.NPRRake < 1 && 1-r.NPRRake >= c.ResolutionFloor { // p8 has a duct loss even at rest
 			r.Warnings |= PressureOrder
 		}
 		r.Throat = State{Pressure: pb, Temperature: t0}

@@ -158,7 +158,10 @@ func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 		case fromMarginal:
 			f.Bools[it.slot] = rules.TriOf(p.ChokeMarginal)
 		case fromLit:
-			f.Bools[it.slot] = rules.TriOf(p.Lit)
+			f.Bools[it.slot] = rules.Unknown
+			if p.LitKnown {
+				f.Bools[it.slot] = rules.TriOf(p.Lit)
+			}
 		case fromOver:
 			f.Bools[it.slot] = rules.TriOf(s.Compute.EGT.Bands[it.index].Over)
 		case fromExceeded:

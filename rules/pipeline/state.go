@@ -30,6 +30,7 @@ type State struct {
 	RunActive bool
 	Runs      uint64   // runs ever
 	OffSince  int64    // event time since when the phase is off, 0 = it is not
+	KnownAt   int64    // event time at which the phase was known last
 	Armed     bool     // an engine start begins a run; cleared when a run is ended by hand
 	Done      []string // ids of the last requests, so that a repeated one is done once
 	window    Window

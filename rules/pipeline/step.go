@@ -4,6 +4,7 @@
 package pipeline
 
 import (
+	"bytes"
 	"encoding/json"
 	"errors"
 	"fmt"
@@ -25,6 +26,9 @@ const (
 	hostJudge = 100 * int64(time.Millisecond)
 	// silent is the host time after which a source counts as lost.
 	silent = 2 * second
+	// abandoned is the event time without a known phase after which a run ends:
+	// the data system was switched off.
+	abandoned = 600 * second
 	// forgotten is the host time after which a silent source is no longer listed.
 	forgotten = 3600 * second
 )
@@ -90,12 +94,11 @@ var (
 
 // Machine steps records. It belongs to one goroutine.
 type Machine struct {
-	parse func(bundle []byte) (Config, error)
-	prog  *program
-	outs  []Outcome
-	alarm []rules.Alarm
-	text  string
-	point monitor.OperatingPoint
+	parse  func(bundle []byte) (Config, error)
+	prog   *program
+	bundle []byte // that prog was made of
+	outs   []Outcome
+	alarm  []rules.Alarm
 }
 
 // program is a compiled configuration with its buffers.
@@ -105,11 +108,17 @@ type program struct {
 	compute *compute.Computer
 	rules   *rules.Set
 	frame   frame
-	ledger  []Allowance
+	scans   []*computed   // buffers: a step may close several scans
+	used    int           // of scans, by this step
+	ledgers [][]Allowance // buffers
+	listed  int           // of ledgers, by this step
 	status  Status
-	mark    monitor.Mark
-	run     monitor.Run
-	action  ActionResult
+}
+
+// computed holds a scan with its operating point.
+type computed struct {
+	scan  *monitor.Scan
+	point monitor.OperatingPoint
 }
 
 // NewMachine gives a machine that understands configurations by parse, which
@@ -135,7 +144,12 @@ func (m *Machine) Config() (cfg Config, ok bool) {
 	return m.prog.cfg, true
 }
 
+// load makes the program of a bundle, unless it is loaded already: a program has
+// no memory, so one serves every state.
 func (m *Machine) load(bundle []byte) error {
+	if m.prog != nil && bytes.Equal(bundle, m.bundle) {
+		return nil
+	}
 	cfg, err := m.parse(bundle)
 	if err != nil {
 		return err
@@ -152,9 +166,9 @@ func (m *Machine) load(bundle []byte) error {
 	if len(faults) > 0 {
 		return fmt.Errorf("pipeline: rule %q: %s", cfg.Rules[faults[0].Rule].Name, faults[0].Message)
 	}
+	m.bundle = bytes.Clone(bundle)
 	m.prog = &program{
 		cfg: cfg, align: align.New(cfg.Align), compute: comp, rules: set, frame: newFrame(&cfg, names),
-		ledger: make([]Allowance, len(cfg.Compute.EGT.Bands)),
 	}
 	return nil
 }
@@ -192,12 +206,16 @@ func (m *Machine) Step(s *State, r *ingest.Record) []Outcome {
 	if m.prog == nil {
 		return m.outs
 	}
-	for {
-		scan := m.prog.align.Scan(&s.Align, r.Host)
-		if scan == nil {
+	p := m.prog
+	for p.used, p.listed = 0, 0; ; p.used++ {
+		if p.used == len(p.scans) {
+			p.scans = append(p.scans, &computed{scan: monitor.NewScan(len(p.cfg.Align.Channels))})
+		}
+		c := p.scans[p.used]
+		if !p.align.Scan(&s.Align, r.Host, c.scan) {
 			break
 		}
-		m.scan(s, scan)
+		m.scan(s, c.scan, &c.point)
 	}
 	if r.Host-s.HostJudge >= hostJudge {
 		s.HostJudge = r.Host
@@ -233,8 +251,7 @@ func (m *Machine) boot(s *State, r *ingest.Record) {
 
 func (m *Machine) config(s *State, r *ingest.Record) {
 	old := m.prog
-	if err := m.load(r.Payload); err != nil {
-		m.prog = old // a configuration that does not load leaves the old one in force
+	if err := m.load(r.Payload); err != nil { // the old one stays in force
 		m.emit(s, Outcome{Kind: OutcomeConfig, T: r.Host, Text: err.Error()})
 		return
 	}
@@ -284,9 +301,8 @@ func (m *Machine) health(s *State, r *ingest.Record) {
 }
 
 // scan computes and judges one scan.
-func (m *Machine) scan(s *State, scan *monitor.Scan) {
+func (m *Machine) scan(s *State, scan *monitor.Scan, point *monitor.OperatingPoint) {
 	p := m.prog
-	point := &m.point
 	changed := p.compute.Step(&s.Compute, scan, point)
 	m.emit(s, Outcome{Kind: OutcomePoint, T: scan.T, Point: point, Scan: scan})
 	m.emit(s, Outcome{Kind: OutcomeChannels, T: scan.T, Point: point, Scan: scan})
@@ -340,9 +356,15 @@ func (m *Machine) runs(s *State, p *monitor.OperatingPoint) {
 		if s.RunActive && s.Run.By == "engine" && p.T-s.OffSince >= m.prog.cfg.Run.EndAfter {
 			m.endRun(s, p.T)
 		}
-	case monitor.PhaseUnknown, monitor.Rundown, monitor.Cooling, monitor.NumPhases:
+	case monitor.PhaseUnknown:
+		if s.RunActive && s.Run.By == "engine" && p.T-s.KnownAt >= abandoned {
+			m.endRun(s, p.T)
+		}
+		return
+	case monitor.Rundown, monitor.Cooling, monitor.NumPhases:
 		s.OffSince = 0
 	}
+	s.KnownAt = p.T
 }
 
 func (m *Machine) startRun(s *State, t int64, by string) {
@@ -354,23 +376,28 @@ func (m *Machine) startRun(s *State, t int64, by string) {
 		Number: s.Runs, Rig: rig.ID, Engine: rig.EngineModel + " " + rig.EngineSerial, Started: t, By: by,
 	}
 	s.Compute.EGT.Reset()
-	m.prog.run = s.Run
-	m.emit(s, Outcome{Kind: OutcomeRun, T: t, Run: &m.prog.run, Event: "started"})
+	run := s.Run
+	m.emit(s, Outcome{Kind: OutcomeRun, T: t, Run: &run, Event: "started"})
 }
 
 func (m *Machine) endRun(s *State, t int64) {
 	s.RunActive = false
 	s.Run.Ended = t
-	m.prog.run = s.Run
-	m.emit(s, Outcome{Kind: OutcomeRun, T: t, Run: &m.prog.run, Event: "ended"})
+	run := s.Run
+	m.emit(s, Outcome{Kind: OutcomeRun, T: t, Run: &run, Event: "ended"})
 }
 
 func (m *Machine) ledger(s *State, t int64) {
 	p := m.prog
-	for i := range p.ledger {
-		p.ledger[i] = Allowance{Band: p.cfg.Compute.EGT.Bands[i], BandState: s.Compute.EGT.Bands[i]}
+	if p.listed == len(p.ledgers) {
+		p.ledgers = append(p.ledgers, make([]Allowance, len(p.cfg.Compute.EGT.Bands)))
 	}
-	m.emit(s, Outcome{Kind: OutcomeLedger, T: t, Ledger: p.ledger})
+	ledger := p.ledgers[p.listed]
+	p.listed++
+	for i := range ledger {
+		ledger[i] = Allowance{Band: p.cfg.Compute.EGT.Bands[i], BandState: s.Compute.EGT.Bands[i]}
+	}
+	m.emit(s, Outcome{Kind: OutcomeLedger, T: t, Ledger: ledger})
 }
 
 func (m *Machine) status(s *State) {
@@ -387,8 +414,7 @@ func (m *Machine) act(s *State, r *ingest.Record) {
 	if m.prog == nil {
 		return
 	}
-	res := &m.prog.action
-	*res = ActionResult{RequestID: a.RequestID}
+	res := &ActionResult{RequestID: a.RequestID}
 	if a.RequestID == "" || !slices.Contains(s.Done, a.RequestID) {
 		res.Err = m.do(s, &a)
 		if res.Err == nil && a.RequestID != "" {
@@ -408,8 +434,7 @@ func (m *Machine) do(s *State, a *Action) error {
 	}
 	switch a.Do {
 	case DoMark:
-		m.prog.mark = monitor.Mark{T: t, Text: a.Text, By: a.By}
-		m.emit(s, Outcome{Kind: OutcomeMark, T: t, Mark: &m.prog.mark})
+		m.emit(s, Outcome{Kind: OutcomeMark, T: t, Mark: &monitor.Mark{T: t, Text: a.Text, By: a.By}})
 	case DoRunStart:
 		if s.RunActive {
 			return fmt.Errorf("start a run: %w: %s", ErrRunActive, s.Run.ID)

@@ -259,6 +259,7 @@ func watch(t *testing.T, r *Rig, cfg pipeline.Config, each func(*monitor.Operati
 	}
 	var cs compute.State
 	c.Reset(&cs, nil)
+	scan := monitor.NewScan(len(cfg.Align.Channels))
 	var p monitor.OperatingPoint
 	var msgs []Message
 	for more := true; more; {
@@ -268,7 +269,7 @@ func watch(t *testing.T, r *Rig, cfg pipeline.Config, each func(*monitor.Operati
 			if res := a.Message(&as, &record, false); res == nil || res.Faults.Total() > 0 {
 				t.Fatalf("message at %v is not understood: %s", r.Status().Elapsed, m.Payload)
 			}
-			for scan := a.Scan(&as, record.Host); scan != nil; scan = a.Scan(&as, record.Host) {
+			for a.Scan(&as, record.Host, scan) {
 				c.Step(&cs, scan, &p)
 				each(&p)
 			}

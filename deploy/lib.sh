@@ -1,0 +1,61 @@
+# Shared by the scripts here: where things are, and what they need.
+# shellcheck shell=bash
+set -euo pipefail
+root="$(cd "$(dirname "${BASH_SOURCE[0]}")/.." && pwd)"
+build="$root/.build"
+mkdir -p "$build/bin"
+export GOBIN="$build/bin" GOFLAGS="${GOFLAGS:--buildvcs=auto}"
+
+say() { printf '\n== %s\n' "$*"; }
+
+# need COMMAND PACKAGE…: installs Debian packages unless the command is there.
+need() {
+  local command=$1
+  shift
+  command -v "$command" >/dev/null && return
+  PATH="$PATH:/usr/sbin" command -v "$command" >/dev/null && return
+  if [ "$(id -u)" -ne 0 ]; then
+    echo "$command is missing: as root, apt-get install $*" >&2
+    exit 1
+  fi
+  say "installing $*"
+  [ -n "${updated:-}" ] || apt-get update -qq
+  updated=1
+  DEBIAN_FRONTEND=noninteractive apt-get install -y -qq --no-install-recommends "$@" >/dev/null
+}
+
+need_go() {
+  if ! command -v go >/dev/null; then
+    echo "Go 1.26 or later is missing: see https://go.dev/doc/install" >&2
+    exit 1
+  fi
+}
+
+# tool NAME MODULE@VERSION: a Go command of a pinned version in .build/bin.
+tool() {
+  local stamp="$build/bin/.$1"
+  [ -x "$build/bin/$1" ] && [ "$(cat "$stamp" 2>/dev/null)" = "$2" ] && return
+  say "installing $1 ($2)"
+  CGO_ENABLED=0 go install "$2"
+  echo "$2" >"$stamp"
+}
+
+# page builds the web part into dashboard/web/dist when its sources changed.
+page() {
+  local web="$root/dashboard/web" now stamp
+  now="$(cd "$web" && find . -path ./node_modules -prune -o -path ./dist -prune -o -type f -print0 | sort -z | xargs -0 sha256sum | sha256sum)"
+  stamp="$build/page.sum"
+  [ -f "$web/dist/index.html" ] && [ "$(cat "$stamp" 2>/dev/null)" = "$now" ] && return
+  need node nodejs npm
+  say "building the page"
+  (cd "$web" && npm ci --no-audit --no-fund --silent && npm run --silent build)
+  touch "$web/dist/.keep"
+  echo "$now" >"$stamp"
+}
+
+binary() {
+  need_go
+  page
+  say "building .build/throatwatch"
+  (cd "$root" && CGO_ENABLED=0 go build -trimpath -o "$build/throatwatch" ./cmd/throatwatch)
+}
