@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"slices"
 	"strings"
 
 	"github.com/expr-lang/expr/ast"
@@ -81,8 +82,7 @@ func compileExpression(src string, names []Name, ix index) (compiled, *exprFault
 	tree, err := parser.Parse(src)
 	if err != nil {
 		at, message := 0, err.Error()
-		var fe *file.Error
-		if errors.As(err, &fe) {
+		if fe, ok := errors.AsType[*file.Error](err); ok {
 			at, message = c.byteOffset(fe.From), plainSyntax(fe.Message)
 		}
 		return c.out, &exprFault{at, message, "comparisons are joined by and, or, not; texts stand in double quotes"}
@@ -449,10 +449,8 @@ func (c *compiler) canBe(at ast.Node, written, name value) *exprFault {
 		return nil
 	}
 	who := &c.names[name.name]
-	for _, v := range who.Values {
-		if v == written.s {
-			return nil
-		}
+	if slices.Contains(who.Values, written.s) {
+		return nil
 	}
 	hint := nearest(written.s, who.Values)
 	if written.s == "unknown" {

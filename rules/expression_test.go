@@ -12,13 +12,13 @@ func testNames() []Name {
 }
 
 // values fills a frame from name, value pairs.
-func fill(t testing.TB, names []Name, values map[string]any) *Frame {
-	t.Helper()
+func fill(tb testing.TB, names []Name, values map[string]any) *Frame {
+	tb.Helper()
 	f, ix := NewFrame(names), indexOf(names)
 	for name, v := range values {
 		slot, ok := ix[name]
 		if !ok {
-			t.Fatalf("no name %q", name)
+			tb.Fatalf("no name %q", name)
 		}
 		switch v := v.(type) {
 		case float64:
@@ -30,7 +30,7 @@ func fill(t testing.TB, names []Name, values map[string]any) *Frame {
 		case string:
 			f.Texts[slot] = v
 		default:
-			t.Fatalf("value %v", v)
+			tb.Fatalf("value %v", v)
 		}
 	}
 	return &f

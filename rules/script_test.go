@@ -47,17 +47,17 @@ type stand struct {
 	seen  []Alarm
 }
 
-func newStand(t testing.TB, rules []Rule) *stand {
-	t.Helper()
+func newStand(tb testing.TB, rules []Rule) *stand {
+	tb.Helper()
 	names := StandardNames([]string{"p_oil", "vibration"}, []string{"run_1", "run_2", "start"})
 	set, faults := Compile(rules, names)
 	for _, f := range faults {
-		t.Errorf("rule %q, %s: %s; %s", rules[f.Rule].Name, f.Field, f.Message, f.Hint)
+		tb.Errorf("rule %q, %s: %s; %s", rules[f.Rule].Name, f.Field, f.Message, f.Hint)
 	}
 	if set == nil {
-		t.FailNow()
+		tb.FailNow()
 	}
-	return &stand{t: t, names: names, ix: indexOf(names), set: set, f: NewFrame(names), run: "run-1"}
+	return &stand{t: tb, names: names, ix: indexOf(names), set: set, f: NewFrame(names), run: "run-1"}
 }
 
 // put sets a name; "?" makes it unknown.
@@ -107,8 +107,8 @@ func (s *stand) instance(rule string) *Instance {
 }
 
 // parseRule reads "NAME PRIORITY option… : expression".
-func parseRule(t testing.TB, line string) Rule {
-	t.Helper()
+func parseRule(tb testing.TB, line string) Rule {
+	tb.Helper()
 	head, when, _ := strings.Cut(line, " : ")
 	f := strings.Fields(head)
 	r := Rule{Name: f[0], When: when, Title: f[0], Text: f[0]}
@@ -117,9 +117,9 @@ func parseRule(t testing.TB, line string) Rule {
 		key, v, _ := strings.Cut(o, "=")
 		switch key {
 		case "on":
-			r.OnDelay = duration(t, v)
+			r.OnDelay = duration(tb, v)
 		case "off":
-			r.OffDelay = duration(t, v)
+			r.OffDelay = duration(tb, v)
 		case "deadband":
 			r.Deadband, _ = strconv.ParseFloat(v, 64)
 		case "latching":
@@ -132,17 +132,17 @@ func parseRule(t testing.TB, line string) Rule {
 				r.SuppressIn = append(r.SuppressIn, phase)
 			}
 		default:
-			t.Fatalf("option %q", o)
+			tb.Fatalf("option %q", o)
 		}
 	}
 	return r
 }
 
-func duration(t testing.TB, s string) int64 {
-	t.Helper()
+func duration(tb testing.TB, s string) int64 {
+	tb.Helper()
 	d, err := time.ParseDuration(s)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	return int64(d)
 }

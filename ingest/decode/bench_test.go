@@ -34,7 +34,7 @@ func packs(format Format) [][]byte {
 			}
 		case Value: // as many messages as values: one of them here
 			out[i] = fmt.Appendf(nil, `{"t":%d.%06d,"v":%v}`, at/1_000_000_000, at/1000%1_000_000, readings[i].Value)
-		default:
+		case FormatInvalid, numFormats:
 		}
 	}
 	return out

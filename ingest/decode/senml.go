@@ -88,6 +88,7 @@ func (r *record) has(l label) bool { return r.set&(1<<(l-labelBaseSum)) != 0 }
 
 // text gives the field that holds a text label, nil for other labels.
 func (r *record) text(l label) *[]byte {
+	//exhaustive:ignore
 	switch l {
 	case labelBaseName:
 		return &r.bn
@@ -105,6 +106,7 @@ func (r *record) text(l label) *[]byte {
 // number gives the field that holds a numeric label, nil for other labels.
 // Sums and the update time are not used, so they have none.
 func (r *record) number(l label) *float64 {
+	//exhaustive:ignore
 	switch l {
 	case labelBaseVersion:
 		return &r.bver

@@ -269,7 +269,7 @@ func (f *File) addBlob(ctx context.Context, tx *sql.Tx, records []ingest.Record,
 }
 
 func (f *File) insertBlob(ctx context.Context, tx *sql.Tx, b *blob) error {
-	_, err := tx.StmtContext(ctx, f.add).ExecContext(ctx,
+	_, err := tx.StmtContext(ctx, f.add).ExecContext(ctx, //nolint:sqlclosecheck // the transaction closes its statements
 		int64(b.first), int64(b.last), b.firstHost, b.lastHost, b.codec, b.bytes, b.sum, b.data)
 	return err
 }

@@ -398,6 +398,7 @@ func TestDamagedSmallBlobIsKept(t *testing.T) {
 // wantPrefix checks that a damaged copy of the file of sealed gives a beginning
 // of its records and nothing else, and says so if it is not all.
 func wantPrefix(t *testing.T, path string) {
+	t.Helper()
 	f, err := runfile.Open(t.Context(), path, runfile.ReadOnly, runfile.Options{})
 	if err != nil {
 		return // the header is gone

@@ -37,7 +37,7 @@ func (f *File) Run(ctx context.Context) {
 		case <-ctx.Done():
 			return
 		case <-f.wake:
-			_ = f.Fold(ctx) //nolint:errcheck // kept for Log
+			_ = f.Fold(ctx)
 		}
 	}
 }

@@ -279,7 +279,7 @@ func (m *model) ask(t *testing.T, f *runfile.File, rng *rand.Rand) {
 			t0 = c.FirstT
 			return nil
 		}),
-		f.Events(t.Context(), from, to, func(e *runfile.Event) error { n--; return nil }))
+		f.Events(t.Context(), from, to, func(*runfile.Event) error { n--; return nil }))
 	if err != nil || n != 0 {
 		t.Fatalf("chunks and events of %d to %d: %d missing, %v", from, to, n, err)
 	}

@@ -498,8 +498,7 @@ func identify(ctx context.Context, db *sql.DB, application, version int) error {
 
 // code gives SQLite's extended result code; 0 when the error is not its own.
 func code(err error) int {
-	var e *sqlite.Error
-	if errors.As(err, &e) {
+	if e, ok := errors.AsType[*sqlite.Error](err); ok {
 		return e.Code()
 	}
 	return 0

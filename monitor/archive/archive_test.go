@@ -35,7 +35,7 @@ var signals = []signal{
 		}
 		return float64(20000+r.IntN(7)) * 0.1
 	}},
-	{"decimal, step not declared", 0, func(r *rand.Rand, i int) float64 { return float64(20000+r.IntN(7)) / 10 }},
+	{"decimal, step not declared", 0, func(r *rand.Rand, _ int) float64 { return float64(20000+r.IntN(7)) / 10 }},
 	{"computed, smooth", 0, func(_ *rand.Rand, i int) float64 { return 2.4 + 0.3*math.Sin(float64(i)/500) }},
 	{"computed, noisy", 0, func(r *rand.Rand, i int) float64 { return 2.4 + 0.3*math.Sin(float64(i)/500) + 1e-3*r.NormFloat64() }},
 	{"computed, half missing", 0, func(r *rand.Rand, i int) float64 {

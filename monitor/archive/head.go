@@ -69,7 +69,7 @@ func (h *Head) append(dst []byte) []byte {
 		dst = append(dst, byte(e.Kind))
 		dst = appendFloat(appendFloat(dst, e.Min), e.Max)
 		dst = binary.AppendUvarint(dst, uint64(e.Missing))
-		dst = e.block.append(dst)
+		dst = e.append(dst)
 	}
 	binary.LittleEndian.PutUint64(dst[at:], xxhash.Sum64(dst[start:]))
 	binary.LittleEndian.PutUint32(dst[at+8:], uint32(len(dst)-start))

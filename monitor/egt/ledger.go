@@ -157,7 +157,7 @@ func (s *BandState) count(b *Band, dt int64, last float64, assumed bool) {
 func (s *BandState) enter(b *Band, t int64, egt float64) {
 	above := egt > b.Limit
 	switch {
-	case !s.Over && !(above && s.Holds):
+	case !s.Over && (!above || !s.Holds):
 		s.Scans, s.Peak = 0, 0
 		return
 	case !s.Over:

@@ -7,6 +7,7 @@ import (
 	"math"
 	"math/rand/v2"
 	"reflect"
+	"slices"
 	"strings"
 	"testing"
 	"time"
@@ -84,17 +85,17 @@ func TestPhases(t *testing.T) {
 		{"a start", start, "off cranking lighting* idle*"},
 		{
 			"to power and back",
-			append(start[:len(start):len(start)], leg{8, 20000, 950}, leg{20, 20000, 930}, leg{6, 9500, 700}, leg{10, 9500, 700}),
+			append(slices.Clip(start), leg{8, 20000, 950}, leg{20, 20000, 930}, leg{6, 9500, 700}, leg{10, 9500, 700}),
 			"off cranking lighting* idle* accelerating* steady* decelerating* idle*",
 		},
 		{
 			"two steady points",
-			append(start[:len(start):len(start)], leg{4, 15000, 800}, leg{10, 15000, 790}, leg{3, 18000, 880}, leg{10, 18000, 870}),
+			append(slices.Clip(start), leg{4, 15000, 800}, leg{10, 15000, 790}, leg{3, 18000, 880}, leg{10, 18000, 870}),
 			"off cranking lighting* idle* accelerating* steady* accelerating* steady*",
 		},
 		{
 			"shutdown, rundown, cooling, off",
-			append(start[:len(start):len(start)], leg{20, 1000, 480}, leg{10, 0, 450}, leg{60, 0, 360}, leg{10, 0, 330}),
+			append(slices.Clip(start), leg{20, 1000, 480}, leg{10, 0, 450}, leg{60, 0, 360}, leg{10, 0, 330}),
 			"off cranking lighting* idle* rundown* rundown cooling off",
 		},
 		{
@@ -110,28 +111,28 @@ func TestPhases(t *testing.T) {
 		},
 		{
 			"heat that soaks back is no flame",
-			append(start[:len(start):len(start)], leg{20, 1000, 480}, leg{5, 400, 560}, leg{5, 0, 600}, leg{5, 0, 600}),
+			append(slices.Clip(start), leg{20, 1000, 480}, leg{5, 400, 560}, leg{5, 0, 600}, leg{5, 0, 600}),
 			"off cranking lighting* idle* rundown* rundown cooling",
 		},
 		{
 			"a relight in rundown",
-			append(start[:len(start):len(start)], leg{10, 4000, 480}, leg{10, 4000, 460}, leg{3, 5000, 700}, leg{10, 9500, 750}, leg{5, 9500, 700}),
+			append(slices.Clip(start), leg{10, 4000, 480}, leg{10, 4000, 460}, leg{3, 5000, 700}, leg{10, 9500, 750}, leg{5, 9500, 700}),
 			// The rotor picks up speed before the EGT has risen by LitRise.
 			"off cranking lighting* idle* rundown* rundown cranking lighting* idle*",
 		},
 		{
 			"a flame-out above idle",
-			append(start[:len(start):len(start)], leg{8, 20000, 950}, leg{10, 20000, 930}, leg{2, 14000, 480}, leg{5, 4000, 470}),
+			append(slices.Clip(start), leg{8, 20000, 950}, leg{10, 20000, 930}, leg{2, 14000, 480}, leg{5, 4000, 470}),
 			"off cranking lighting* idle* accelerating* steady* decelerating* decelerating rundown",
 		},
 		{
 			"speed lost at power",
-			append(start[:len(start):len(start)], leg{8, 20000, 950}, leg{10, 20000, 930}, leg{0, 20000, 930}, leg{3, missing, 930}),
+			append(slices.Clip(start), leg{8, 20000, 950}, leg{10, 20000, 930}, leg{0, 20000, 930}, leg{3, missing, 930}),
 			"off cranking lighting* idle* accelerating* steady* unknown*",
 		},
 		{
 			"EGT lost while running: the last finding of the flame stands",
-			append(start[:len(start):len(start)], leg{5, 9500, missing}),
+			append(slices.Clip(start), leg{5, 9500, missing}),
 			"off cranking lighting* idle*",
 		},
 	}
@@ -210,7 +211,7 @@ func TestRate(t *testing.T) {
 			}
 		}
 		theta := math.Exp(-0.1)
-		bound := noise * math.Sqrt(2*math.Pow((1-theta)/(1+theta), 3)) / 0.05
+		bound := noise * math.Sqrt(2*(1-theta)/(1+theta)*((1-theta)/(1+theta))*((1-theta)/(1+theta))) / 0.05
 		if mean, sd := sum/n, math.Sqrt(sq/n); math.Abs(mean) > 1e-6+bound/10 || math.Abs(sd-bound) > 1e-6+0.1*bound {
 			t.Errorf("noise %g rpm: rate error %g ± %g, want 0 ± %g rpm/s", noise, mean, sd, bound)
 		}
@@ -225,7 +226,7 @@ func TestNoFlutter(t *testing.T) {
 		legs  []leg
 		flips int // of the phase, over 100 s
 	}{
-		{"speed at the edge of idle", append(start[:len(start):len(start)], leg{5, 9800, 700}, leg{100, 9800, 700}), 2},
+		{"speed at the edge of idle", append(slices.Clip(start), leg{5, 9800, 700}, leg{100, 9800, 700}), 2},
 		{"EGT at the light-off threshold", []leg{{3, 0, 290}, {6, 2500, 290}, {4, 2800, 350}, {100, 2800, 350}}, 1},
 		{"EGT at the cool threshold, at rest", []leg{{100, 0, 370}}, 3},
 	}
