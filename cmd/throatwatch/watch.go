@@ -37,6 +37,7 @@ type watchOptions struct {
 	remote                             bool
 	rehearse                           bool
 	play                               rehearseFlags
+	influx                             influxOptions
 	limit                              time.Duration
 	verbose                            bool
 }
@@ -53,6 +54,7 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 	fs.BoolVar(&o.remote, "allow-remote", false, "let --listen and --broker-listen be reached from other machines, without TLS or passwords")
 	fs.BoolVar(&o.rehearse, "rehearse", false, "let a simulated rig publish a test to the broker; the next flags say which")
 	o.play = newRehearseFlags(fs)
+	o.influx.flags(fs)
 	fs.DurationVar(&o.limit, "for", 0, "stop after this time (default: on interrupt)")
 	fs.BoolVar(&o.verbose, "verbose", false, "log what the parts do")
 	rig, code := parseRig(fs, args, stderr)
@@ -84,6 +86,7 @@ type watcher struct {
 	broker *broker.Broker
 	client *mqtt.Client
 	loop   *watch.Loop
+	site   *siteDatabase // nil when the site has none
 }
 
 // run starts the parts in the order in which they need each other and stops them
@@ -107,6 +110,12 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	core, err := w.store.Restore(ctx, pipeline.NewMachine(watch.Parse), watch.Build(), runtime.GOARCH)
 	if err != nil {
 		return err
+	}
+	if w.site, err = w.opt.influx.open(w.store, w.opt.data, cfg.Rig.ID, w.log); err != nil {
+		return err
+	}
+	if w.site != nil {
+		core.ChunkFor = watch.SinkChunkFor
 	}
 	listener, err := w.listen(ctx)
 	if err != nil {
@@ -155,6 +164,9 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 		}
 	})
 	sideParts.Go(func() { outbox.Run(sideCtx) })
+	if w.site != nil {
+		sideParts.Go(func() { w.site.run(sideCtx) })
+	}
 	w.announce(listener.Addr().String())
 	sideParts.Go(func() {
 		if err := w.letIn(sideCtx); err != nil && sideCtx.Err() == nil {
@@ -311,6 +323,9 @@ func (w *watcher) announce(addr string) {
 	if err != nil {
 		dir = w.opt.data
 	}
+	if w.site != nil {
+		dir += "\n  influx  " + w.site.target.String()
+	}
 	topics := make([]string, len(w.cfg.Align.Inputs))
 	for i, in := range w.cfg.Align.Inputs {
 		topics[i] = in.Filter
@@ -329,6 +344,9 @@ func (w *watcher) announce(addr string) {
 // metrics gives the figures of the broker sessions.
 func (w *watcher) metrics() []dashboard.Metric {
 	var out []dashboard.Metric
+	if w.site != nil {
+		out = w.site.metrics()
+	}
 	for _, s := range w.client.Stats() {
 		labels := map[string]string{"filter": s.Filter}
 		out = append(out,

@@ -176,6 +176,7 @@ func (s *Sink) fill(ctx context.Context) error {
 			return err
 		}
 		s.cursor, s.saved, s.loaded = c, c.T, true
+		s.tell(func(st *Status) { st.Through = c.T })
 	}
 	if s.held {
 		return nil
