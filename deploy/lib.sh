@@ -59,3 +59,17 @@ binary() {
   say "building .build/throatwatch"
   (cd "$root" && CGO_ENABLED=0 go build -trimpath -o "$build/throatwatch" ./cmd/throatwatch)
 }
+
+# licences gathers the licence texts of what is compiled in.
+licences() {
+  local out="$build/licences.txt" name dir
+  : >"$out"
+  while read -r name dir; do
+    for f in "$dir"/LICEN* "$dir"/COPYING* "$dir"/NOTICE*; do
+      [ -f "$f" ] || continue
+      printf '\n==== %s %s\n\n' "$name" "$(basename "$f")" >>"$out"
+      cat "$f" >>"$out"
+    done
+  done < <(cd "$root" && go list -deps -f '{{with .Module}}{{if not .Main}}{{.Path}} {{.Dir}}{{end}}{{end}}' ./cmd/throatwatch | sort -u
+    [ ! -d "$root/dashboard/web/node_modules/uplot" ] || echo "uplot $root/dashboard/web/node_modules/uplot")
+}
