@@ -13,6 +13,7 @@ import (
 	"fmt"
 	"log/slog"
 	"net/http"
+	"slices"
 	"strings"
 	"time"
 
@@ -54,35 +55,66 @@ type Server struct {
 	mux *http.ServeMux
 }
 
+// handler answers a request, or gives the error to answer it with.
+type handler func(http.ResponseWriter, *http.Request) error
+
 // NewServer gives a server; hub is fed by whoever runs the watch.
 func NewServer(cfg Config, hub *Hub) *Server {
 	s := &Server{cfg: cfg, hub: hub, mux: http.NewServeMux()}
-	route := func(pattern string, h func(http.ResponseWriter, *http.Request) error) {
-		s.mux.HandleFunc(pattern, func(w http.ResponseWriter, r *http.Request) {
-			if err := h(w, r); err != nil {
-				s.fail(w, r, err)
-			}
-		})
+	methods := map[string][]string{} // by path
+	for pattern, h := range s.routes() {
+		s.handle(pattern, h)
+		method, path, _ := strings.Cut(pattern, " ")
+		methods[path] = append(methods[path], method)
 	}
-	route("GET /api/rigs", s.rigs)
-	route("GET /api/rigs/{rig}/hello", s.hello)
-	route("GET /api/rigs/{rig}/operating-point", s.operatingPoint)
-	route("GET /api/rigs/{rig}/channels", s.channels)
-	route("GET /api/rigs/{rig}/throat-curve", s.throatCurve)
-	route("POST /api/rigs/{rig}/runs", s.startOrEndRun)
-	route("GET /api/alarms", s.alarms)
-	route("POST /api/alarms/{id}/{action}", s.alarmAction)
-	route("GET /api/runs", s.runs)
-	route("GET /api/runs/{id}", s.run)
-	route("GET /api/runs/{id}/messages", s.messages)
-	route("GET /api/runs/{id}/series", s.series)
-	route("POST /api/runs/{id}/marks", s.mark)
-	route("GET /healthz", s.healthz)
-	route("GET /metrics", s.metrics)
-	route("GET /openapi.json", s.openAPI)
-	route("GET /live", s.live)
-	s.mux.Handle("GET /", page())
+	for path, allowed := range methods {
+		s.handle(path, notAllowed(allowed))
+	}
+	s.handle("/api/", func(http.ResponseWriter, *http.Request) error {
+		return notFound("nothing is served here; GET /openapi.json tells what is")
+	})
+	s.handle("/", s.page())
 	return s
+}
+
+// routes gives what is answered beside the page, by pattern of the mux.
+func (s *Server) routes() map[string]handler {
+	return map[string]handler{
+		"GET /api/rigs":                       s.rigs,
+		"GET /api/rigs/{rig}/hello":           s.hello,
+		"GET /api/rigs/{rig}/operating-point": s.newest("operating_point"),
+		"GET /api/rigs/{rig}/channels":        s.newest("channels"),
+		"GET /api/rigs/{rig}/throat-curve":    s.throatCurve,
+		"POST /api/rigs/{rig}/runs":           s.startOrEndRun,
+		"GET /api/alarms":                     s.alarms,
+		"POST /api/alarms/{id}/{action}":      s.alarmAction,
+		"GET /api/runs":                       s.runs,
+		"GET /api/runs/{id}":                  s.run,
+		"GET /api/runs/{id}/messages":         s.messages,
+		"GET /api/runs/{id}/series":           s.series,
+		"POST /api/runs/{id}/marks":           s.mark,
+		"GET /healthz":                        s.healthz,
+		"GET /metrics":                        s.metrics,
+		"GET /openapi.json":                   s.openAPI,
+		"GET /live":                           s.live,
+	}
+}
+
+func (s *Server) handle(pattern string, h handler) {
+	s.mux.HandleFunc(pattern, func(w http.ResponseWriter, r *http.Request) {
+		if err := h(w, r); err != nil {
+			s.fail(w, r, err)
+		}
+	})
+}
+
+// notAllowed refuses every other method of a path.
+func notAllowed(allowed []string) handler {
+	list := strings.Join(slices.Sorted(slices.Values(allowed)), ", ")
+	return func(w http.ResponseWriter, r *http.Request) error {
+		w.Header().Set("Allow", list)
+		return &problem{http.StatusMethodNotAllowed, fmt.Sprintf("%s is not served here: use %s", r.Method, list)}
+	}
 }
 
 // contentPolicy lets the page load from this server only.
@@ -113,6 +145,20 @@ func notFound(format string, args ...any) error {
 	return &problem{http.StatusNotFound, fmt.Sprintf(format, args...)}
 }
 
+// silent is the problem of a desk that does not answer.
+func silent(err error) error {
+	return &problem{http.StatusServiceUnavailable, "the watch does not answer: " + err.Error()}
+}
+
+// problemJSON is what a problem looks like [RFC 9457 3.1].
+type problemJSON struct {
+	Type     string `json:"type"`
+	Title    string `json:"title"`
+	Status   int    `json:"status"`
+	Detail   string `json:"detail"`
+	Instance string `json:"instance"`
+}
+
 // fail answers with an error as application/problem+json.
 func (s *Server) fail(w http.ResponseWriter, r *http.Request, err error) {
 	var p *problem
@@ -123,15 +169,13 @@ func (s *Server) fail(w http.ResponseWriter, r *http.Request, err error) {
 		s.cfg.Log.Error("request", "path", r.URL.Path, "err", err)
 		p = &problem{http.StatusInternalServerError, err.Error()}
 	}
-	b, err := json.Marshal(map[string]any{
-		"type": "about:blank", "title": http.StatusText(p.status), "status": p.status, "detail": p.detail, "instance": r.URL.Path,
-	})
+	b, err := json.Marshal(problemJSON{"about:blank", http.StatusText(p.status), p.status, p.detail, r.URL.EscapedPath()})
 	if err != nil {
-		b = []byte("{}")
+		panic("dashboard: problem: " + err.Error()) // four strings and a number encode
 	}
 	w.Header().Set("Content-Type", "application/problem+json")
 	w.WriteHeader(p.status)
-	_, _ = w.Write(b)
+	_, _ = w.Write(b) // whoever asked is gone, or not
 }
 
 func reply(w http.ResponseWriter, status int, v any) error {
@@ -150,46 +194,30 @@ func replyJSON(w http.ResponseWriter, status int, b []byte) error {
 	return nil
 }
 
-// body reads a JSON body of at most 64 KiB.
-func body(w http.ResponseWriter, r *http.Request, v any) error {
-	dec := json.NewDecoder(http.MaxBytesReader(w, r.Body, 64<<10))
-	dec.DisallowUnknownFields()
-	if err := dec.Decode(v); err != nil {
-		return badRequest("body: %v", err)
-	}
-	return nil
-}
-
-// sameSite refuses a request that a page of another site makes a browser send.
-func sameSite(r *http.Request) error {
-	if site := r.Header.Get("Sec-Fetch-Site"); site != "" && site != "same-origin" && site != "none" {
-		return &problem{http.StatusForbidden, "the request comes from another site"}
-	}
-	if origin := r.Header.Get("Origin"); origin != "" && !strings.HasSuffix(origin, "//"+r.Host) {
-		return &problem{http.StatusForbidden, "the request comes from another site: " + origin}
-	}
-	return nil
-}
-
-// ask runs fn between two steps, after checking the rig of the path if there is
-// one in it.
-func (s *Server) ask(r *http.Request, fn func(cfg *pipeline.Config, m *pipeline.Machine, st *pipeline.State)) error {
-	rig := r.PathValue("rig")
+// ask runs fn between two steps; rig, unless it is "", must be the rig that is
+// watched.
+func (s *Server) ask(ctx context.Context, rig string, fn func(cfg *pipeline.Config, m *pipeline.Machine, st *pipeline.State)) error {
 	var wrong error
-	err := s.cfg.Desk.Ask(r.Context(), func(m *pipeline.Machine, st *pipeline.State) {
+	err := s.cfg.Desk.Ask(ctx, func(m *pipeline.Machine, st *pipeline.State) {
 		cfg, ok := m.Config()
-		if !ok || rig != "" && cfg.Rig.ID != rig {
+		switch {
+		case !ok:
+			wrong = &problem{http.StatusServiceUnavailable, "no configuration is in force yet"}
+		case rig != "" && cfg.Rig.ID != rig:
 			wrong = notFound("no rig %q is watched here; GET /api/rigs lists them", rig)
-			return
+		default:
+			fn(&cfg, m, st)
 		}
-		fn(&cfg, m, st)
 	})
-	return errors.Join(err, wrong)
+	if err != nil {
+		return silent(err)
+	}
+	return wrong
 }
 
 func (s *Server) rigs(w http.ResponseWriter, r *http.Request) error {
 	list := []pipeline.RigInfo{}
-	if err := s.ask(r, func(cfg *pipeline.Config, _ *pipeline.Machine, _ *pipeline.State) {
+	if err := s.ask(r.Context(), "", func(cfg *pipeline.Config, _ *pipeline.Machine, _ *pipeline.State) {
 		list = append(list, cfg.Rig)
 	}); err != nil {
 		return err
@@ -199,37 +227,33 @@ func (s *Server) rigs(w http.ResponseWriter, r *http.Request) error {
 
 func (s *Server) hello(w http.ResponseWriter, r *http.Request) error {
 	var b []byte
-	if err := s.ask(r, func(_ *pipeline.Config, m *pipeline.Machine, st *pipeline.State) {
-		b = hello(nil, m, st, s.cfg.Build)
+	if err := s.ask(r.Context(), r.PathValue("rig"), func(_ *pipeline.Config, m *pipeline.Machine, st *pipeline.State) {
+		b = appendHello(nil, m, st, newestScan(m, st), s.cfg.Build)
 	}); err != nil {
 		return err
 	}
 	return replyJSON(w, http.StatusOK, b)
 }
 
-// last answers with the newest frame of a kind.
-func (s *Server) last(w http.ResponseWriter, r *http.Request, kind string) error {
-	if err := s.ask(r, func(*pipeline.Config, *pipeline.Machine, *pipeline.State) {}); err != nil {
-		return err
+// newest answers with the newest frame of a kind.
+func (s *Server) newest(kind string) handler {
+	return func(w http.ResponseWriter, r *http.Request) error {
+		var body []byte
+		if err := s.ask(r.Context(), r.PathValue("rig"), func(*pipeline.Config, *pipeline.Machine, *pipeline.State) {
+			body = s.hub.last(kind)
+		}); err != nil {
+			return err
+		}
+		if body == nil {
+			return &problem{http.StatusServiceUnavailable, "no scan yet: no channel has sent anything since the watch began"}
+		}
+		return replyJSON(w, http.StatusOK, body)
 	}
-	f, ok := s.hub.last(kind)
-	if !ok {
-		return &problem{http.StatusServiceUnavailable, "no scan yet: no channel has sent anything since the watch began"}
-	}
-	return replyJSON(w, http.StatusOK, f.Body)
-}
-
-func (s *Server) operatingPoint(w http.ResponseWriter, r *http.Request) error {
-	return s.last(w, r, "operating_point")
-}
-
-func (s *Server) channels(w http.ResponseWriter, r *http.Request) error {
-	return s.last(w, r, "channels")
 }
 
 func (s *Server) alarms(w http.ResponseWriter, r *http.Request) error {
 	list := []rules.Alarm{}
-	if err := s.ask(r, func(_ *pipeline.Config, m *pipeline.Machine, st *pipeline.State) {
+	if err := s.ask(r.Context(), "", func(_ *pipeline.Config, m *pipeline.Machine, st *pipeline.State) {
 		list = append(list, m.Alarms(st)...)
 	}); err != nil {
 		return err
@@ -237,110 +261,25 @@ func (s *Server) alarms(w http.ResponseWriter, r *http.Request) error {
 	return reply(w, http.StatusOK, list)
 }
 
-// actionBody is the body of every action.
-type actionBody struct {
-	Revision  uint64  `json:"revision"`
-	Reason    string  `json:"reason"`
-	RequestID string  `json:"request_id"`
-	By        string  `json:"by"`
-	Text      string  `json:"text"`
-	Action    string  `json:"action"`
-	Seconds   float64 `json:"seconds"`
-}
-
-// alarmActions maps the last part of the path to what the rules call it.
-var alarmActions = map[string]string{
-	"acknowledge": rules.DoAcknowledge, "shelve": rules.DoShelve, "unshelve": rules.DoUnshelve,
-	"reset": rules.DoReset, "out-of-service": rules.DoOutOfService, "in-service": rules.DoInService,
-}
-
-func (s *Server) alarmAction(w http.ResponseWriter, r *http.Request) error {
-	do, ok := alarmActions[r.PathValue("action")]
-	if !ok {
-		return notFound("no action %q on an alarm: acknowledge, shelve, unshelve, reset, out-of-service, in-service", r.PathValue("action"))
-	}
-	return s.act(w, r, pipeline.Action{Do: do, Alarm: r.PathValue("id")})
-}
-
-func (s *Server) startOrEndRun(w http.ResponseWriter, r *http.Request) error {
-	if err := s.ask(r, func(*pipeline.Config, *pipeline.Machine, *pipeline.State) {}); err != nil {
-		return err
-	}
-	return s.act(w, r, pipeline.Action{})
-}
-
-func (s *Server) mark(w http.ResponseWriter, r *http.Request) error {
-	id, active := r.PathValue("id"), ""
-	if err := s.ask(r, func(_ *pipeline.Config, _ *pipeline.Machine, st *pipeline.State) {
-		if st.RunActive {
-			active = st.Run.ID
-		}
-	}); err != nil {
-		return err
-	}
-	if id != active {
-		return &problem{http.StatusConflict, fmt.Sprintf("run %q is not on: marks can be set on the run that is", id)}
-	}
-	return s.act(w, r, pipeline.Action{Do: pipeline.DoMark})
-}
-
-// act completes an action from the body, does it, and says what became of it.
-func (s *Server) act(w http.ResponseWriter, r *http.Request, a pipeline.Action) error {
-	if err := sameSite(r); err != nil {
-		return err
-	}
-	var in actionBody
-	if err := body(w, r, &in); err != nil {
-		return err
-	}
-	switch {
-	case a.Do != "":
-	case in.Action == "start":
-		a.Do = pipeline.DoRunStart
-	case in.Action == "end":
-		a.Do = pipeline.DoRunEnd
-	default:
-		return badRequest(`action %q: give "start" or "end"`, in.Action)
-	}
-	if a.Do == pipeline.DoMark && strings.TrimSpace(in.Text) == "" {
-		return badRequest("a mark needs a text")
-	}
-	if in.RequestID == "" {
-		return badRequest("request_id is missing: give each request an id of its own, so that a repeated one is done once")
-	}
-	if in.By == "" {
-		in.By = "console"
-	}
-	a.Revision, a.Reason, a.Text, a.By, a.RequestID, a.Seconds = in.Revision, in.Reason, in.Text, in.By, in.RequestID, in.Seconds
-	a.Role = "operator"
-	res, err := s.cfg.Desk.Act(r.Context(), a)
-	if err != nil {
-		return err
-	}
-	switch {
-	case res.Err == nil:
-	case errors.Is(res.Err, rules.ErrNotFound):
-		return notFound("%v", res.Err)
-	default:
-		return &problem{http.StatusConflict, res.Err.Error()}
-	}
-	return reply(w, http.StatusAccepted, map[string]uint64{"epoch": res.Epoch, "n": res.N})
+// healthJSON says which parts of the watch work.
+type healthJSON struct {
+	Stepping  bool `json:"stepping"`
+	Recording bool `json:"recording"`
+	InputPath bool `json:"input_path"`
 }
 
 func (s *Server) healthz(w http.ResponseWriter, r *http.Request) error {
 	ctx, cancel := context.WithTimeout(r.Context(), 2*time.Second)
 	defer cancel()
-	var st pipeline.Status
-	if err := s.ask(r.WithContext(ctx), func(_ *pipeline.Config, m *pipeline.Machine, state *pipeline.State) {
-		st = m.Status(state)
+	out := healthJSON{Stepping: true}
+	if err := s.ask(ctx, "", func(_ *pipeline.Config, _ *pipeline.Machine, st *pipeline.State) {
+		out.Recording, out.InputPath = st.Health.NotRecordingSince == 0, !st.Health.InputPathDeaf
 	}); err != nil {
-		return &problem{http.StatusServiceUnavailable, "the watch does not step: " + err.Error()}
+		return err
 	}
 	status := http.StatusOK
-	if st.Health.NotRecordingSince != 0 || st.Health.InputPathDeaf {
+	if !out.Recording || !out.InputPath {
 		status = http.StatusServiceUnavailable
 	}
-	return reply(w, status, map[string]bool{
-		"stepping": true, "recording": st.Health.NotRecordingSince == 0, "input_path": !st.Health.InputPathDeaf,
-	})
+	return reply(w, status, out)
 }

@@ -18,13 +18,11 @@ import (
 // apiVersion is the version of the frames.
 const apiVersion = 1
 
-// Frame is one frame of /live, encoded, with what is needed to route it.
-type Frame struct {
-	Kind  string
-	Epoch uint64
-	N     uint64
-	T     int64
-	Body  []byte
+// EncodeFrame gives the frame of an outcome as it goes over the websocket; ok is
+// false for an outcome that has none there. Channels frames depend on the viewer
+// and are not among them.
+func EncodeFrame(o *pipeline.Outcome, cfg *pipeline.Config) (body []byte, kind string, ok bool) {
+	return appendFrame(nil, o, cfg)
 }
 
 // appendFrame writes the frame of an outcome; ok is false for an outcome that has
@@ -32,21 +30,27 @@ type Frame struct {
 func appendFrame(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) (body []byte, kind string, ok bool) {
 	switch o.Kind {
 	case pipeline.OutcomePoint:
-		return appendPoint(open(dst, "operating_point", o), o, cfg), "operating_point", true
+		kind = "operating_point"
+		dst = appendPoint(open(dst, kind, o), o.Point, cfg)
 	case pipeline.OutcomeAlarm:
-		return value(open(dst, "alarm", o), "alarm", o.Alarm), "alarm", true
+		kind = "alarm"
+		dst = member(open(dst, kind, o), "alarm", o.Alarm)
 	case pipeline.OutcomeLedger:
-		return append(appendBands(open(dst, "ledger", o), "bands", o.Ledger), '}'), "ledger", true
+		kind = "ledger"
+		dst = appendBands(open(dst, kind, o), "bands", o.Ledger)
 	case pipeline.OutcomeStatus:
-		return append(appendStatus(open(dst, "status", o), o.Status), '}'), "status", true
+		kind = "status"
+		dst = appendStatus(open(dst, kind, o), o.Status)
 	case pipeline.OutcomeMark:
-		return value(open(dst, "mark", o), "mark", o.Mark), "mark", true
+		kind = "mark"
+		dst = member(open(dst, kind, o), "mark", o.Mark)
 	case pipeline.OutcomeRun:
-		dst = text(open(dst, "run", o), "event", o.Event)
-		return value(dst, "run", runView(o.Run)), "run", true
+		kind = "run"
+		dst = member(text(open(dst, kind, o), "event", o.Event), "run", runView(o.Run))
 	case pipeline.OutcomeChannels, pipeline.OutcomeConfig, pipeline.OutcomeQuarantine, pipeline.OutcomeAction:
+		return dst, "", false
 	}
-	return dst, "", false
+	return append(dst, '}'), kind, true
 }
 
 // open begins a frame.
@@ -60,14 +64,13 @@ func open(dst []byte, kind string, o *pipeline.Outcome) []byte {
 	return instant(dst, "t", o.T)
 }
 
-// value appends a member of any type and closes the frame.
-func value(dst []byte, key string, v any) []byte {
-	dst = name(dst, key)
+// member appends a member of any type.
+func member(dst []byte, key string, v any) []byte {
 	b, err := json.Marshal(v)
 	if err != nil {
-		b = []byte("null") // our own types encode; a frame is never half a frame
+		panic("dashboard: " + key + ": " + err.Error()) // our own types encode
 	}
-	return append(append(dst, b...), '}')
+	return append(name(dst, key), b...)
 }
 
 func name(dst []byte, key string) []byte {
@@ -96,14 +99,28 @@ func truth(dst []byte, key string, v bool) []byte {
 	return strconv.AppendBool(name(dst, key), v)
 }
 
+// list appends an array of n items.
+func list(dst []byte, key string, n int, item func(dst []byte, i int) []byte) []byte {
+	dst = append(name(dst, key), '[')
+	for i := range n {
+		if i > 0 {
+			dst = append(dst, ',')
+		}
+		dst = item(dst, i)
+	}
+	return append(dst, ']')
+}
+
 // text appends a member whose value may hold anything.
-func text(dst []byte, key, v string) []byte {
-	dst = name(dst, key)
+func text(dst []byte, key, v string) []byte { return quoted(name(dst, key), v) }
+
+// quoted appends a JSON string.
+func quoted(dst []byte, v string) []byte {
 	for i := range len(v) {
 		if c := v[i]; c < ' ' || c == '"' || c == '\\' || c >= 0x80 {
 			b, err := json.Marshal(v)
 			if err != nil {
-				return append(dst, `""`...)
+				panic("dashboard: string: " + err.Error()) // every string encodes
 			}
 			return append(dst, b...)
 		}
@@ -122,8 +139,7 @@ func instant(dst []byte, key string, ns int64) []byte {
 	return append(dst, '"')
 }
 
-func appendPoint(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) []byte {
-	p := o.Point
+func appendPoint(dst []byte, p *monitor.OperatingPoint, cfg *pipeline.Config) []byte {
 	dst = count(dst, "scan", int64(p.Scan))
 	for q := range monitor.NumQuantities {
 		dst = number(dst, q.Info().Name, p.V[q])
@@ -147,9 +163,9 @@ func appendPoint(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) []byte {
 			dst = append(dst, ',')
 		}
 		first = false
-		dst = strconv.AppendQuote(dst, w)
+		dst = quoted(dst, w)
 	}
-	return append(dst, ']', '}')
+	return append(dst, ']')
 }
 
 func cause(dst []byte, key string, c monitor.Cause, cfg *pipeline.Config) []byte {
@@ -170,26 +186,18 @@ func appendChannels(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config, wante
 		if k > 0 {
 			dst = append(dst, ',')
 		}
-		dst = append(append(append(dst, '"'), cfg.Compute.Channels[i].ID...), '"', ':', '{')
-		dst = float(append(dst, `"value":`...), scan.Value[i])
+		dst = append(quoted(dst, cfg.Compute.Channels[i].ID), `:{"value":`...)
+		dst = float(dst, scan.Value[i])
 		dst = number(dst, "raw", scan.Raw[i])
 		dst = text(dst, "quality", scan.Quality[i].String())
-		age := math.NaN()
-		if scan.Age[i] >= 0 {
-			age = float64(scan.Age[i]) / 1e9
-		}
-		dst = append(number(dst, "age_s", age), '}')
+		dst = append(number(dst, "age_s", age(scan.Age[i])), '}')
 	}
 	return append(dst, '}', '}')
 }
 
 func appendBands(dst []byte, key string, bands []pipeline.Allowance) []byte {
-	dst = append(name(dst, key), '[')
-	for i := range bands {
+	return list(dst, key, len(bands), func(dst []byte, i int) []byte {
 		b := &bands[i]
-		if i > 0 {
-			dst = append(dst, ',')
-		}
 		dst = appendBand(dst, b)
 		dst = number(dst, "elapsed_s", seconds(b.Elapsed))
 		dst = number(dst, "assumed_s", seconds(b.Assumed))
@@ -202,15 +210,13 @@ func appendBands(dst []byte, key string, bands []pipeline.Allowance) []byte {
 			peak = b.RunPeak
 		}
 		dst = number(dst, "peak_k", peak)
-		dst = append(count(dst, "excursions", int64(b.Excursions)), '}')
-	}
-	return append(dst, ']')
+		return append(count(dst, "excursions", int64(b.Excursions)), '}')
+	})
 }
 
 // appendBand writes what a band is, without closing the object.
 func appendBand(dst []byte, b *pipeline.Allowance) []byte {
-	dst = append(dst, `{"name":"`...)
-	dst = append(append(dst, b.Band.Name...), '"')
+	dst = quoted(append(dst, `{"name":`...), b.Band.Name)
 	dst = text(dst, "kind", b.Kind.String())
 	dst = number(dst, "limit_k", b.Limit)
 	dst = number(dst, "allowance_s", seconds(b.Allowance))
@@ -238,28 +244,20 @@ func appendStatus(dst []byte, st *pipeline.Status) []byte {
 	dst = number(dst, "clock_skew_s", seconds(st.Skew))
 	dst = truth(dst, "run_active", st.RunActive)
 	dst = count(dst, "rules_unknown", int64(st.Unknown))
-	dst = append(name(dst, "sources"), '[')
-	for i := range st.Sources {
-		s := &st.Sources[i]
-		if i > 0 {
-			dst = append(dst, ',')
-		}
-		dst = text(append(dst, `{"alive":`+strconv.FormatBool(s.Alive)...), "topic", s.Topic)
-		dst = number(dst, "age_s", seconds(s.Age))
-		dst = count(dst, "messages", int64(s.Messages))
-		dst = truth(dst, "skewed", s.Skewed)
-		dst = append(number(dst, "skew_s", seconds(s.Skew)), '}')
-	}
-	dst = append(name(append(dst, ']'), "sessions"), '[')
-	for i, s := range st.Sessions {
-		if i > 0 {
-			dst = append(dst, ',')
-		}
-		dst = text(append(dst, `{"connected":`+strconv.FormatBool(s.Connected)...), "filter", s.Filter)
-		dst = append(dst, '}')
-	}
-	dst = append(name(append(dst, ']'), "counters"), '{')
-	dst = append(dst, `"messages":`...)
+	dst = list(dst, "sources", len(st.Sources), func(dst []byte, i int) []byte {
+		src := &st.Sources[i]
+		dst = quoted(append(dst, `{"topic":`...), src.Topic)
+		dst = truth(dst, "alive", src.Alive)
+		dst = number(dst, "age_s", seconds(src.Age))
+		dst = count(dst, "messages", int64(src.Messages))
+		dst = truth(dst, "skewed", src.Skewed)
+		return append(number(dst, "skew_s", seconds(src.Skew)), '}')
+	})
+	dst = list(dst, "sessions", len(st.Sessions), func(dst []byte, i int) []byte {
+		dst = quoted(append(dst, `{"filter":`...), st.Sessions[i].Filter)
+		return append(truth(dst, "connected", st.Sessions[i].Connected), '}')
+	})
+	dst = append(name(dst, "counters"), `{"messages":`...)
 	dst = strconv.AppendUint(dst, st.Messages, 10)
 	dst = count(dst, "samples", int64(st.Samples))
 	dst = count(dst, "scans", int64(st.Scans))
@@ -348,12 +346,24 @@ func quantityViews() []quantityJSON {
 	return out
 }
 
-// hello writes the frame that opens a connection or a stretch of stored frames:
-// all that a display needs before the frames after it make sense.
-func hello(dst []byte, m *pipeline.Machine, s *pipeline.State, build string) []byte {
+// place is where among outcomes and scans a hello stands.
+type place struct {
+	n uint64 // of the outcome before
+	t int64  // event time of the scan before, ns UTC; 0 = none
+}
+
+// newestScan is the place after all that was stepped.
+func newestScan(m *pipeline.Machine, s *pipeline.State) place {
+	cfg, _ := m.Config()
+	return place{s.N, max(s.Align.Next-cfg.Align.Period, 0)}
+}
+
+// appendHello writes the frame that opens a connection or a stretch of stored
+// frames: all that a display needs before the frames after at make sense.
+func appendHello(dst []byte, m *pipeline.Machine, s *pipeline.State, at place, build string) []byte {
 	cfg, _ := m.Config()
 	status := m.Status(s)
-	dst = open(dst, "hello", &pipeline.Outcome{Epoch: s.Epoch, N: s.N, T: max(s.Align.Next-cfg.Align.Period, 0)})
+	dst = open(dst, "hello", &pipeline.Outcome{Epoch: s.Epoch, N: at.n, T: at.t})
 	dst = count(dst, "api", apiVersion)
 	dst = instant(dst, "host_time", s.Host)
 	dst = number(dst, "scan_rate", 1e9/float64(max(cfg.Align.Period, 1)))
@@ -372,29 +382,12 @@ func hello(dst []byte, m *pipeline.Machine, s *pipeline.State, build string) []b
 		armed = a
 	}
 	dst = number(dst, "choke_armed_above_rpm", armed)
-	dst = append(name(dst, "bands"), '[')
 	ledger := m.Ledger(s)
-	for i := range ledger {
-		if i > 0 {
-			dst = append(dst, ',')
-		}
-		dst = append(appendBand(dst, &ledger[i]), '}')
-	}
-	dst = append(dst, ']')
-	alarms := m.Alarms(s)
-	if alarms == nil {
-		alarms = []rules.Alarm{}
-	}
-	dst = member(dst, "alarms", alarms)
+	dst = list(dst, "bands", len(ledger), func(dst []byte, i int) []byte { return append(appendBand(dst, &ledger[i]), '}') })
+	dst = member(dst, "alarms", append([]rules.Alarm{}, m.Alarms(s)...))
 	dst = appendBands(dst, "ledgers", ledger)
-	dst = append(name(dst, "status"), `{"kind":"status"`...)
+	dst = open(name(dst, "status"), "status", &pipeline.Outcome{Epoch: s.Epoch, N: at.n, T: s.Host})
 	return append(appendStatus(dst, &status), '}', '}')
-}
-
-// member appends a member without closing the object.
-func member(dst []byte, key string, v any) []byte {
-	dst = value(dst, key, v)
-	return dst[:len(dst)-1]
 }
 
 // station names the station that a channel serves, "" when it serves none.
@@ -411,19 +404,20 @@ func station(st *compute.Stations, i int) string {
 		name  string
 		index int
 	}{
-		{"barometer", st.Barometer}, {"exit_plane", st.ExitPlane}, {"inlet_temperature", st.InletT}, {"inlet_pressure", st.InletP},
-		{"humidity", st.Humidity}, {"ambient_temperature", st.AmbientT}, {"speed", st.Speed}, {"fuel_flow", st.FuelFlow},
-		{"bellmouth", st.Bellmouth}, {"thrust", st.Thrust},
+		{"barometer", st.Barometer},
+		{"exit_plane", st.ExitPlane},
+		{"inlet_temperature", st.InletT},
+		{"inlet_pressure", st.InletP},
+		{"humidity", st.Humidity},
+		{"ambient_temperature", st.AmbientT},
+		{"speed", st.Speed},
+		{"fuel_flow", st.FuelFlow},
+		{"bellmouth", st.Bellmouth},
+		{"thrust", st.Thrust},
 	} {
 		if s.index == i {
 			return s.name
 		}
 	}
 	return ""
-}
-
-// EncodeFrame gives the frame of an outcome as it goes over the websocket; ok is
-// false for an outcome that has none there.
-func EncodeFrame(o *pipeline.Outcome, cfg *pipeline.Config) (body []byte, kind string, ok bool) {
-	return appendFrame(nil, o, cfg)
 }

@@ -1,8 +1,11 @@
 package dashboard
 
 import (
+	"bytes"
+	"cmp"
 	"fmt"
 	"net/http"
+	"net/url"
 	"slices"
 	"strconv"
 	"strings"
@@ -18,12 +21,13 @@ const (
 	// resumable is how many frames a connection may have missed and still go on
 	// without a new hello.
 	resumable = 10_000
-	// clientQueue is how many frames may wait for a viewer …
-	clientQueue = 256
-	// … and for how long, before it is disconnected with closeTooSlow.
+	// clientQueue is how many frames may wait for a viewer, and clientAge for how
+	// long, before it is disconnected with closeTooSlow.
+	clientQueue  = 256
 	clientAge    = 2 * time.Second
 	closeTooSlow = 4008
 	writeTimeout = 5 * time.Second
+	closeTimeout = time.Second
 	pingEvery    = 5 * time.Second
 	pongWithin   = 15 * time.Second
 	maxViewers   = 256
@@ -34,16 +38,30 @@ type Hub struct {
 	build string
 
 	mu      sync.Mutex // protects the fields below
-	ring    []Frame    // the newest frames but channels, oldest first from head
+	ring    []frame    // the newest frames but channels, oldest first from head
 	head    int
-	newest  map[string]Frame // of each kind; channels with all channels
+	newest  map[string][]byte // of each kind; channels with all channels
 	viewers map[*viewer]struct{}
 	shut    bool
+	scratch []byte // a frame is made here, and kept at its size
+	all     []int  // the indices of all channels
+
+	connections sync.WaitGroup // of viewers; nothing is added once shut
 }
 
 // NewHub gives a hub without viewers.
 func NewHub(build string) *Hub {
-	return &Hub{build: build, newest: map[string]Frame{}, viewers: map[*viewer]struct{}{}}
+	return &Hub{build: build, newest: map[string][]byte{}, viewers: map[*viewer]struct{}{}}
+}
+
+// frame is a frame that was sent, with what is needed to send it again. Bodies
+// are shared by all who send them and never change.
+type frame struct {
+	point bool
+	epoch uint64
+	n     uint64
+	t     int64
+	body  []byte
 }
 
 // viewer is one websocket.
@@ -54,7 +72,10 @@ type viewer struct {
 	hash   string
 	every  int64 // ns between points; 0 = each
 	next   int64 // event time of the next point and channels frame to send
-	queue  chan queued
+	resume bool  // behind the frame epoch.n
+	epoch  uint64
+	n      uint64
+	queue  chan queued   // full: the viewer is dropped
 	gone   chan struct{} // closed when it is to be disconnected, with code and reason
 	once   sync.Once
 	code   int
@@ -74,6 +95,14 @@ func (v *viewer) drop(code int, reason string) {
 	})
 }
 
+func (v *viewer) put(body []byte, now time.Time) {
+	select {
+	case v.queue <- queued{body, now}:
+	default:
+		v.drop(closeTooSlow, "too slow: more than 256 frames behind")
+	}
+}
+
 // Publish makes frames of outcomes and hands them out. It never waits for a
 // viewer. It must be called from where the machine steps.
 func (h *Hub) Publish(outs []pipeline.Outcome, m *pipeline.Machine, _ *pipeline.State) {
@@ -85,97 +114,88 @@ func (h *Hub) Publish(outs []pipeline.Outcome, m *pipeline.Machine, _ *pipeline.
 	h.mu.Lock()
 	defer h.mu.Unlock()
 	for i := range outs {
-		o := &outs[i]
-		switch o.Kind {
+		switch o := &outs[i]; o.Kind {
 		case pipeline.OutcomeChannels:
 			h.channels(o, &cfg, now)
-			continue
 		case pipeline.OutcomeConfig:
 			if o.OK { // what came before cannot be joined on: a viewer must begin with a hello
 				h.ring, h.head = nil, 0
+				clear(h.newest)
 				h.dropAll(websocket.CloseServiceRestart, "the configuration changed")
 			}
-			continue
 		case pipeline.OutcomePoint, pipeline.OutcomeAlarm, pipeline.OutcomeLedger, pipeline.OutcomeStatus,
 			pipeline.OutcomeMark, pipeline.OutcomeRun, pipeline.OutcomeQuarantine, pipeline.OutcomeAction:
-		}
-		body, kind, ok := appendFrame(nil, o, &cfg)
-		if !ok {
-			continue
-		}
-		f := Frame{Kind: kind, Epoch: o.Epoch, N: o.N, T: o.T, Body: body}
-		h.keep(f)
-		for v := range h.viewers {
-			if kind == "operating_point" && o.T < v.next {
-				continue
-			}
-			v.put(body, now)
+			h.frame(o, &cfg, now)
 		}
 	}
 }
 
-// channels hands out the channels of a scan: to each viewer those it wants.
+// frame hands out the frame of an outcome, if it has one.
+func (h *Hub) frame(o *pipeline.Outcome, cfg *pipeline.Config, now time.Time) {
+	var kind string
+	var ok bool
+	if h.scratch, kind, ok = appendFrame(h.scratch[:0], o, cfg); !ok {
+		return
+	}
+	f := frame{point: o.Kind == pipeline.OutcomePoint, epoch: o.Epoch, n: o.N, t: o.T, body: bytes.Clone(h.scratch)}
+	h.newest[kind] = f.body
+	if len(h.ring) < resumable {
+		h.ring = append(h.ring, f)
+	} else {
+		h.ring[h.head] = f
+		h.head = (h.head + 1) % resumable
+	}
+	for v := range h.viewers {
+		if !f.point || f.t >= v.next {
+			v.put(f.body, now)
+		}
+	}
+}
+
+// channels hands out the channels of a scan: to each viewer those it wants. The
+// point of the scan has gone out just before, so that both are thinned alike.
 func (h *Hub) channels(o *pipeline.Outcome, cfg *pipeline.Config, now time.Time) {
-	all := appendChannels(nil, o, cfg, allOf(cfg))
-	h.newest["channels"] = Frame{Kind: "channels", Epoch: o.Epoch, N: o.N, T: o.T, Body: all}
+	if len(h.all) != len(cfg.Compute.Channels) {
+		h.all = indices(cfg, nil)
+	}
+	h.scratch = appendChannels(h.scratch[:0], o, cfg, h.all)
+	body := bytes.Clone(h.scratch)
+	h.newest["channels"] = body
 	for v := range h.viewers {
 		if o.T < v.next {
 			continue
 		}
-		v.next = o.T + v.every // the point of this scan has gone out just before
+		v.next = o.T + v.every
 		switch {
 		case v.all:
-			v.put(all, now)
+			v.put(body, now)
 		case len(v.ids) > 0:
 			if v.hash != cfg.Hash {
 				v.hash, v.wanted = cfg.Hash, indices(cfg, v.ids)
 			}
-			v.put(appendChannels(nil, o, cfg, v.wanted), now)
+			h.scratch = appendChannels(h.scratch[:0], o, cfg, v.wanted)
+			v.put(bytes.Clone(h.scratch), now)
 		}
 	}
 }
 
-func allOf(cfg *pipeline.Config) []int {
-	all := make([]int, len(cfg.Compute.Channels))
-	for i := range all {
-		all[i] = i
-	}
-	return all
-}
-
+// indices gives where the channels of some ids are, of all for no ids. An id that
+// no channel has is left out.
 func indices(cfg *pipeline.Config, ids []string) []int {
 	var out []int
 	for i := range cfg.Compute.Channels {
-		if slices.Contains(ids, cfg.Compute.Channels[i].ID) {
+		if ids == nil || slices.Contains(ids, cfg.Compute.Channels[i].ID) {
 			out = append(out, i)
 		}
 	}
 	return out
 }
 
-func (h *Hub) keep(f Frame) {
-	h.newest[f.Kind] = f
-	if len(h.ring) < resumable {
-		h.ring = append(h.ring, f)
-		return
-	}
-	h.ring[h.head] = f
-	h.head = (h.head + 1) % resumable
-}
-
-func (v *viewer) put(body []byte, now time.Time) {
-	select {
-	case v.queue <- queued{body, now}:
-	default:
-		v.drop(closeTooSlow, "too slow: more than 256 frames behind")
-	}
-}
-
-func (h *Hub) last(kind string) (Frame, bool) {
+// last gives the newest frame of a kind, nil when there is none.
+func (h *Hub) last(kind string) []byte {
 	h.mu.Lock()
 	defer h.mu.Unlock()
-	f, ok := h.newest[kind]
-	return f, ok
+	return h.newest[kind]
 }
 
 // Viewers gives the number of connections.
@@ -185,12 +205,22 @@ func (h *Hub) Viewers() int {
 	return len(h.viewers)
 }
 
-// Shutdown disconnects every viewer and takes no further ones.
+// Shutdown disconnects every viewer, takes no further ones, and gives those there
+// are a moment to be told.
 func (h *Hub) Shutdown() {
 	h.mu.Lock()
-	defer h.mu.Unlock()
 	h.shut = true
 	h.dropAll(websocket.CloseGoingAway, "the watch stops")
+	h.mu.Unlock()
+	ended := make(chan struct{})
+	go func() { // ends with the last connection
+		h.connections.Wait()
+		close(ended)
+	}()
+	select {
+	case <-ended:
+	case <-time.After(closeTimeout):
+	}
 }
 
 func (h *Hub) dropAll(code int, reason string) {
@@ -201,65 +231,97 @@ func (h *Hub) dropAll(code int, reason string) {
 
 // after gives the kept frames behind epoch.n, and whether they join on without a
 // hole.
-func (h *Hub) after(epoch, n uint64) ([]Frame, bool) {
-	if len(h.ring) == 0 {
+func (h *Hub) after(epoch, n uint64) ([]frame, bool) {
+	kept := slices.Concat(h.ring[h.head:], h.ring[:h.head])
+	if len(kept) == 0 || kept[0].epoch != epoch || kept[0].n > n+1 {
 		return nil, false
 	}
-	oldest := h.ring[h.head%len(h.ring)]
-	if oldest.Epoch != epoch || oldest.N > n+1 {
-		return nil, false
-	}
-	var out []Frame
-	for i := range h.ring {
-		f := h.ring[(h.head+i)%len(h.ring)]
-		if f.Epoch != epoch {
-			return nil, false
-		}
-		if f.N > n {
-			out = append(out, f)
-		}
-	}
-	return out, true
+	i, _ := slices.BinarySearchFunc(kept, n+1, func(f frame, n uint64) int { return cmp.Compare(f.n, n) })
+	return kept[i:], kept[len(kept)-1].epoch == epoch
 }
 
 // join enters a viewer, with what it has to be told first. It runs between two
 // steps, so that nothing falls between hello and the first frame.
-func (h *Hub) join(v *viewer, from string, m *pipeline.Machine, s *pipeline.State) error {
+func (h *Hub) join(v *viewer, m *pipeline.Machine, s *pipeline.State) error {
 	h.mu.Lock()
 	defer h.mu.Unlock()
-	if h.shut || len(h.viewers) >= maxViewers {
-		return &problem{http.StatusServiceUnavailable, fmt.Sprintf("%d viewers are connected; no more are taken", len(h.viewers))}
+	switch {
+	case h.shut:
+		return &problem{http.StatusServiceUnavailable, "the watch stops"}
+	case len(h.viewers) >= maxViewers:
+		return &problem{http.StatusServiceUnavailable, fmt.Sprintf("%d viewers are connected: no more are taken", maxViewers)}
 	}
-	now := time.Now()
-	first := [][]byte{}
-	if from != "" {
-		epoch, n, err := parseFrom(from)
-		if err != nil {
-			return err
-		}
-		missed, ok := h.after(epoch, n)
-		if ok && epoch == s.Epoch {
-			for _, f := range missed {
-				first = append(first, f.Body)
-			}
-			return h.enter(v, first, now)
-		}
-		reason := "too_old"
-		if epoch != s.Epoch {
-			reason = "epoch"
-		}
-		first = append(first, []byte(`{"kind":"reset","reason":"`+reason+`"}`))
-	}
-	return h.enter(v, append(first, hello(nil, m, s, h.build)), now)
-}
-
-func (h *Hub) enter(v *viewer, first [][]byte, now time.Time) error {
+	first := h.opening(v, m, s)
 	v.queue = make(chan queued, clientQueue+len(first))
+	now := time.Now()
 	for _, b := range first {
-		v.queue <- queued{b, now}
+		v.put(b, now)
 	}
 	h.viewers[v] = struct{}{}
+	h.connections.Add(1)
 	return nil
+}
+
+// opening gives what a viewer is told first: what it missed if that is known, else
+// a hello.
+func (h *Hub) opening(v *viewer, m *pipeline.Machine, s *pipeline.State) [][]byte {
+	hello := appendHello(nil, m, s, newestScan(m, s), h.build)
+	if !v.resume {
+		return [][]byte{hello}
+	}
+	if v.epoch != s.Epoch || v.n > s.N { // a crash may have taken what it saw
+		return [][]byte{[]byte(`{"kind":"reset","reason":"epoch"}`), hello}
+	}
+	missed, ok := h.after(v.epoch, v.n)
+	if !ok {
+		return [][]byte{[]byte(`{"kind":"reset","reason":"too_old"}`), hello}
+	}
+	var first [][]byte
+	for _, f := range missed {
+		switch {
+		case !f.point:
+		case f.t < v.next:
+			continue
+		default:
+			v.next = f.t + v.every
+		}
+		first = append(first, f.body)
+	}
+	return first
+}
+
+func (h *Hub) leave(v *viewer) {
+	h.mu.Lock()
+	defer h.mu.Unlock()
+	delete(h.viewers, v)
+	h.connections.Done()
+}
+
+// newViewer reads what a viewer asks for.
+func newViewer(q url.Values) (*viewer, error) {
+	v := &viewer{gone: make(chan struct{})}
+	switch list := q.Get("channels"); list {
+	case "":
+	case "*":
+		v.all = true
+	default:
+		v.ids = strings.Split(list, ",")
+	}
+	if rate := q.Get("rate"); rate != "" {
+		hz, err := strconv.ParseFloat(rate, 64)
+		if err != nil || !(hz >= 0.001 && hz <= 1000) {
+			return nil, badRequest("rate %q: give frames per second, from 0.001 to 1000", rate)
+		}
+		v.every = int64(1e9/hz) - 1e6 // a millisecond of grace, so that a rate equal to the scan rate thins nothing
+	}
+	if from := q.Get("from"); from != "" {
+		var err error
+		if v.epoch, v.n, err = parseFrom(from); err != nil {
+			return nil, err
+		}
+		v.resume = true
+	}
+	return v, nil
 }
 
 // parseFrom reads "epoch.n".
@@ -275,50 +337,50 @@ func parseFrom(from string) (epoch, n uint64, err error) {
 
 func (s *Server) live(w http.ResponseWriter, r *http.Request) error {
 	q := r.URL.Query()
-	v := &viewer{gone: make(chan struct{})}
-	switch list := q.Get("channels"); list {
-	case "":
-	case "*":
-		v.all = true
-	default:
-		v.ids = strings.Split(list, ",")
+	v, err := newViewer(q)
+	if err != nil {
+		return err
 	}
-	if rate := q.Get("rate"); rate != "" {
-		hz, err := strconv.ParseFloat(rate, 64)
-		if err != nil || !(hz > 0 && hz <= 1000) {
-			return badRequest("rate %q: give frames per second, above 0 and up to 1000", rate)
-		}
-		v.every = int64(1e9/hz) - 1e6 // a millisecond of grace, so that a rate equal to the scan rate thins nothing
+	if !websocket.IsWebSocketUpgrade(r) {
+		w.Header().Set("Upgrade", "websocket")
+		return &problem{http.StatusUpgradeRequired, "this is a websocket: connect to it as one"}
 	}
 	if err := sameSite(r); err != nil {
 		return err
 	}
-	r.SetPathValue("rig", q.Get("rig"))
 	var refused error
-	if err := s.ask(r, func(_ *pipeline.Config, m *pipeline.Machine, st *pipeline.State) {
-		refused = s.hub.join(v, q.Get("from"), m, st)
-	}); err != nil || refused != nil {
-		if refused != nil {
-			return refused
-		}
+	if err := s.ask(r.Context(), q.Get("rig"), func(_ *pipeline.Config, m *pipeline.Machine, st *pipeline.State) {
+		refused = s.hub.join(v, m, st)
+	}); err != nil {
 		return err
 	}
+	if refused != nil {
+		return refused
+	}
 	defer s.hub.leave(v)
-	up := websocket.Upgrader{ReadBufferSize: 1 << 10, WriteBufferSize: 8 << 10}
+	up := websocket.Upgrader{
+		ReadBufferSize: 1 << 10, WriteBufferSize: 8 << 10,
+		Error: func(w http.ResponseWriter, r *http.Request, status int, reason error) {
+			s.fail(w, r, &problem{status, reason.Error()})
+		},
+	}
 	conn, err := up.Upgrade(w, r, nil)
 	if err != nil {
 		return nil //nolint:nilerr // the upgrader has answered
 	}
 	defer conn.Close() //nolint:errcheck // it may be closed already
-	go readPongs(conn, v)
-	v.write(conn)
+	read := make(chan struct{})
+	go func() { // ends with the connection
+		defer close(read)
+		readPongs(conn, v)
+	}()
+	if v.write(conn) {
+		select { // the other side answers a close with a close [RFC 6455 5.5.1]
+		case <-read:
+		case <-time.After(closeTimeout):
+		}
+	}
 	return nil
-}
-
-func (h *Hub) leave(v *viewer) {
-	h.mu.Lock()
-	defer h.mu.Unlock()
-	delete(h.viewers, v)
 }
 
 // readPongs reads until the connection ends: a viewer sends nothing but pongs.
@@ -335,16 +397,16 @@ func readPongs(conn *websocket.Conn, v *viewer) {
 	}
 }
 
-// write sends frames until the viewer is dropped. It is the only writer.
-func (v *viewer) write(conn *websocket.Conn) {
+// write sends frames until the viewer is dropped, and tells whether it was told
+// so. It is the only writer.
+func (v *viewer) write(conn *websocket.Conn) bool {
 	ping := time.NewTicker(pingEvery)
 	defer ping.Stop()
 	for {
 		select {
 		case <-v.gone:
-			text := websocket.FormatCloseMessage(v.code, v.reason)
-			_ = conn.WriteControl(websocket.CloseMessage, text, time.Now().Add(time.Second))
-			return
+			message := websocket.FormatCloseMessage(v.code, v.reason)
+			return conn.WriteControl(websocket.CloseMessage, message, time.Now().Add(closeTimeout)) == nil
 		case f := <-v.queue:
 			if time.Since(f.at) > clientAge {
 				v.drop(closeTooSlow, "too slow: more than 2 s behind")
@@ -352,11 +414,11 @@ func (v *viewer) write(conn *websocket.Conn) {
 			}
 			_ = conn.SetWriteDeadline(time.Now().Add(writeTimeout))
 			if err := conn.WriteMessage(websocket.TextMessage, f.body); err != nil {
-				return
+				return false
 			}
 		case <-ping.C:
-			if err := conn.WriteControl(websocket.PingMessage, nil, time.Now().Add(time.Second)); err != nil {
-				return
+			if err := conn.WriteControl(websocket.PingMessage, nil, time.Now().Add(closeTimeout)); err != nil {
+				return false
 			}
 		}
 	}

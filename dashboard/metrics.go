@@ -2,6 +2,7 @@ package dashboard
 
 import (
 	"net/http"
+	"strings"
 
 	"github.com/prometheus/client_golang/prometheus"
 	"github.com/prometheus/client_golang/prometheus/promhttp"
@@ -38,7 +39,7 @@ func (c *collector) Collect(out chan<- prometheus.Metric) {
 		}
 		names, values := []string{}, []string{}
 		for k, v := range m.Labels { // one metric's labels: the library sorts them
-			names, values = append(names, k), append(values, v)
+			names, values = append(names, k), append(values, strings.ToValidUTF8(v, "\uFFFD"))
 		}
 		out <- prometheus.MustNewConstMetric(prometheus.NewDesc("throatwatch_"+m.Name, m.Help, names, nil), kind, m.Value, values...)
 	}
@@ -80,7 +81,7 @@ func (c *collector) Collect(out chan<- prometheus.Metric) {
 // metrics answers in the Prometheus text format.
 func (s *Server) metrics(w http.ResponseWriter, r *http.Request) error {
 	c := &collector{viewers: s.hub.Viewers()}
-	if err := s.ask(r, func(_ *pipeline.Config, m *pipeline.Machine, st *pipeline.State) { c.status = m.Status(st) }); err != nil {
+	if err := s.ask(r.Context(), "", func(_ *pipeline.Config, m *pipeline.Machine, st *pipeline.State) { c.status = m.Status(st) }); err != nil {
 		return err
 	}
 	if s.cfg.Extra != nil {

@@ -13,15 +13,22 @@ import (
 var dist embed.FS
 
 // page serves the built page, or says how to build it.
-func page() http.Handler {
+func (s *Server) page() handler {
 	sub, err := fs.Sub(dist, "web/dist")
 	if err != nil {
 		panic("dashboard: embedded page: " + err.Error())
 	}
-	if _, err := fs.Stat(sub, "index.html"); err != nil {
-		return http.HandlerFunc(func(w http.ResponseWriter, _ *http.Request) {
-			http.Error(w, "This binary was compiled without its page. Run deploy/build.", http.StatusNotFound)
-		})
+	_, missing := fs.Stat(sub, "index.html")
+	files := http.FileServerFS(sub)
+	refuse := notAllowed([]string{http.MethodGet})
+	return func(w http.ResponseWriter, r *http.Request) error {
+		switch {
+		case r.Method != http.MethodGet && r.Method != http.MethodHead:
+			return refuse(w, r)
+		case missing != nil:
+			return notFound("this binary was compiled without its page: run deploy/build")
+		}
+		files.ServeHTTP(w, r)
+		return nil
 	}
-	return http.FileServerFS(sub)
 }

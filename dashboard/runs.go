@@ -11,6 +11,7 @@ import (
 	"io/fs"
 	"math"
 	"net/http"
+	"net/url"
 	"slices"
 	"strconv"
 	"strings"
@@ -111,27 +112,27 @@ func (s *Server) run(w http.ResponseWriter, r *http.Request) error {
 	return reply(w, http.StatusOK, viewRun(line))
 }
 
-// stretch reads from and to of a query: seconds of the run, or RFC 3339. from
-// defaults to the start of the run, to to the end of time.
-func stretch(r *http.Request, run *runfile.Run) (from, to int64, err error) {
-	from, to = run.Started, int64(math.MaxInt64)
+// stretch reads from and to of a query: seconds after started, or RFC 3339. from
+// defaults to started, to to the end of time. from is before to.
+func stretch(q url.Values, started int64) (from, to int64, err error) {
+	from, to = started, math.MaxInt64
 	for _, p := range []struct {
 		name string
 		dst  *int64
 	}{{"from", &from}, {"to", &to}} {
-		text := r.URL.Query().Get(p.name)
+		text := q.Get(p.name)
 		if text == "" {
 			continue
 		}
-		if t, err := time.Parse(time.RFC3339Nano, text); err == nil {
+		if t, err := time.Parse(time.RFC3339Nano, text); err == nil && t.Year() >= 1970 && t.Year() < 2262 {
 			*p.dst = t.UnixNano()
 			continue
 		}
 		sec, err := strconv.ParseFloat(text, 64)
 		if err != nil || !(math.Abs(sec) < 1e8) {
-			return 0, 0, badRequest("%s %q: give seconds of the run, or a time as in %s", p.name, text, time.RFC3339)
+			return 0, 0, badRequest("%s %q: give seconds of the run, or a time as in 2026-03-02T09:00:00Z", p.name, text)
 		}
-		*p.dst = run.Started + int64(sec*1e9)
+		*p.dst = started + int64(math.Round(sec*1e9))
 	}
 	if to <= from {
 		return 0, 0, badRequest("from must be before to")
@@ -142,63 +143,58 @@ func stretch(r *http.Request, run *runfile.Run) (from, to int64, err error) {
 // errEnough ends a replay early.
 var errEnough = errors.New("the stretch is complete")
 
-// messages answers with the frames of a stretch of a stored run: the outcomes
-// from the first operating point at or after from to the one before the first at
-// or after to, made by stepping the records again.
+// messages answers with the frames of a stretch of a stored run, made by stepping
+// the records again: a hello, and the outcomes from the first operating point at
+// or after from to the one before the first at or after to. So stretches that
+// follow each other join without loss or overlap.
 func (s *Server) messages(w http.ResponseWriter, r *http.Request) error {
 	f, run, err := s.open(r.Context(), r.PathValue("id"))
 	if err != nil {
 		return err
 	}
 	defer f.Close() //nolint:errcheck // it is only read
-	from, to, err := stretch(r, run)
+	from, to, err := stretch(r.URL.Query(), run.Started)
 	if err != nil {
 		return err
 	}
-	ctx := r.Context()
 	if kinds := r.URL.Query().Get("kinds"); kinds != "" {
 		return s.events(w, r, f, from, to, strings.Split(kinds, ","))
 	}
-	seq, err := f.SeqAtHost(ctx, from-early)
+	seq, err := f.SeqAtHost(r.Context(), from-early)
 	if err != nil {
 		return fmt.Errorf("messages: %w", err)
 	}
 	m := pipeline.NewMachine(s.cfg.Parse)
-	replay, err := pipeline.OpenReplay(ctx, f, m, seq)
+	replay, err := pipeline.OpenReplay(r.Context(), f, m, seq)
 	if err != nil {
 		return fmt.Errorf("messages: %w", err)
 	}
-	out, done := s.stream(w, r)
+	out, done := stream(w, r)
 	defer done()
-	began := false
 	var buf []byte
-	err = replay.Run(ctx, 0, func(_ *ingest.Record, outs []pipeline.Outcome) error {
+	began := false
+	err = replay.Run(r.Context(), 0, func(_ *ingest.Record, outs []pipeline.Outcome) error {
 		cfg, ok := m.Config()
 		if !ok {
 			return nil
 		}
 		for i := range outs {
 			o := &outs[i]
-			if o.Kind == pipeline.OutcomePoint && o.T >= to {
+			isPoint := o.Kind == pipeline.OutcomePoint
+			if isPoint && o.T >= to {
 				return errEnough
 			}
+			buf = buf[:0]
 			if !began {
-				if o.Kind != pipeline.OutcomePoint || o.T < from {
+				if !isPoint || o.T < from {
 					continue
 				}
 				began = true
-				buf = append(hello(buf[:0], m, replay.State, s.cfg.Build), '\n')
-				if _, err := out.Write(buf); err != nil {
-					return err
-				}
+				// What else came about in this step is in this hello already, and
+				// is told again by its frames: they all say what is, not what changed.
+				buf = append(appendHello(buf, m, replay.State, place{o.N - 1, o.T - cfg.Align.Period}, s.cfg.Build), '\n')
 			}
-			buf = buf[:0]
-			if o.Kind == pipeline.OutcomeChannels {
-				buf, ok = appendChannels(buf, o, &cfg, allOf(&cfg)), true
-			} else {
-				buf, _, ok = appendFrame(buf, o, &cfg)
-			}
-			if !ok {
+			if buf, ok = appendStored(buf, o, &cfg); !ok {
 				continue
 			}
 			if _, err := out.Write(append(buf, '\n')); err != nil {
@@ -211,18 +207,23 @@ func (s *Server) messages(w http.ResponseWriter, r *http.Request) error {
 	return nil
 }
 
-// storedKinds are the frames that are stored as they are, with the member that
-// holds them.
-var storedKinds = []string{"alarm", "mark"}
+// appendStored writes the frame of an outcome as a viewer with all channels gets it.
+func appendStored(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) ([]byte, bool) {
+	if o.Kind == pipeline.OutcomeChannels {
+		return appendChannels(dst, o, cfg, indices(cfg, nil)), true
+	}
+	dst, _, ok := appendFrame(dst, o, cfg)
+	return dst, ok
+}
 
 // events answers with the stored frames of some kinds, by event time.
 func (s *Server) events(w http.ResponseWriter, r *http.Request, f *runfile.File, from, to int64, kinds []string) error {
 	for _, k := range kinds {
-		if !slices.Contains(storedKinds, k) {
-			return badRequest("kinds %q: give some of %s, or none for every frame", k, strings.Join(storedKinds, ", "))
+		if k != "alarm" && k != "mark" { // an event's JSON is the member of its frame for these
+			return badRequest("kinds %q: give some of alarm, mark, or none for every frame", k)
 		}
 	}
-	out, done := s.stream(w, r)
+	out, done := stream(w, r)
 	defer done()
 	var buf []byte
 	err := f.Events(r.Context(), from, to, func(e *runfile.Event) error {
@@ -245,11 +246,11 @@ func (s *Server) broken(out io.Writer, r *http.Request, err error) {
 		return
 	}
 	s.cfg.Log.Error("stream", "path", r.URL.Path, "err", err)
-	_, _ = fmt.Fprintf(out, `{"kind":"error","detail":%s}`+"\n", strconv.Quote(err.Error()))
+	_, _ = out.Write(append(text([]byte(`{"kind":"error"`), "detail", err.Error()), '}', '\n'))
 }
 
 // stream begins an NDJSON answer, packed if the client takes it.
-func (s *Server) stream(w http.ResponseWriter, r *http.Request) (out io.Writer, done func()) {
+func stream(w http.ResponseWriter, r *http.Request) (out io.Writer, done func()) {
 	w.Header().Set("Content-Type", "application/x-ndjson")
 	w.Header().Set("Cache-Control", "no-store")
 	if !strings.Contains(r.Header.Get("Accept-Encoding"), "gzip") {
@@ -299,10 +300,10 @@ type plot struct {
 	name  string
 	kind  string // of chunk
 	unit  string
-	state func(byte) string
+	state func(byte) string // nil for numbers
 	dec   *archive.Decimator
 	out   seriesJSON
-	last  int
+	last  int // state of the newest row, -1 before the first
 }
 
 // newPlot tells from a name where its column is.
@@ -328,9 +329,11 @@ func newPlot(name string, cfg *pipeline.Config, from, to int64, points int) (*pl
 	if i < 0 || group != "channel" && group != "quality" {
 		return nil, badRequest("name %q: give a quantity, choke_state, phase, back_pressure_from, channel.<id> or quality.<id>", name)
 	}
-	p.kind, p.unit = pipeline.ChunkChannels, cfg.Compute.Channels[i].Unit.Dimension.SI().Name
-	if group == "quality" {
-		p.unit, p.state = "", func(b byte) string { return monitor.Quality(b).String() }
+	p.kind = pipeline.ChunkChannels
+	if group == "channel" {
+		p.unit = cfg.Compute.Channels[i].Unit.Dimension.SI().Name
+	} else {
+		p.state = func(b byte) string { return monitor.Quality(b).String() }
 	}
 	return p, nil
 }
@@ -356,18 +359,48 @@ func (p *plot) take(c *archive.Chunk, from, to, started int64) {
 func (p *plot) result(started int64) *seriesJSON {
 	out := &p.out
 	out.Unit = p.unit
+	if out.T == nil {
+		out.T = []float64{}
+	}
+	values := len(out.State)
 	if p.state == nil {
 		s := p.dec.Series()
-		for _, t := range s.T {
+		for i, t := range s.T {
 			out.T = append(out.T, seconds(t-started))
+			values += s.N[i]
 		}
 		out.Min, out.Max, out.Last, out.N = nullables(s.Min), nullables(s.Max), nullables(s.Last), s.N
 	}
+	why := "its value is not available anywhere in this stretch"
 	if len(out.T) == 0 {
-		why := "no rows of it are stored in this stretch"
-		out.Cause, out.T = &why, []float64{}
+		why = "no rows of it are stored in this stretch"
+	}
+	if values == 0 {
+		out.Cause = &why
 	}
 	return out
+}
+
+// answerJSON is the answer to a query for series.
+type answerJSON struct {
+	Through string                 `json:"through"` // epoch.n of the newest outcome that may be in it
+	Series  map[string]*seriesJSON `json:"series"`
+}
+
+// seriesQuery reads names and points of a query.
+func seriesQuery(q url.Values) (names []string, points int, err error) {
+	points = 1000
+	if text := q.Get("points"); text != "" {
+		if points, err = strconv.Atoi(text); err != nil || points < 1 || points > maxPoints {
+			return nil, 0, badRequest("points %q: give a number from 1 to %d", text, maxPoints)
+		}
+	}
+	names = strings.Split(q.Get("names"), ",")
+	if names[0] == "" || len(names) > maxNames {
+		return nil, 0, badRequest("names: give 1 to %d names, separated by commas", maxNames)
+	}
+	slices.Sort(names)
+	return slices.Compact(names), points, nil
 }
 
 // series answers with columns of a stored run, thinned without losing a spike.
@@ -377,70 +410,62 @@ func (s *Server) series(w http.ResponseWriter, r *http.Request) error {
 		return err
 	}
 	defer f.Close() //nolint:errcheck // it is only read
-	from, to, err := stretch(r, run)
+	from, to, err := stretch(r.URL.Query(), run.Started)
 	if err != nil {
 		return err
 	}
-	ctx := r.Context()
-	end := run.Ended
-	if end == 0 {
-		end = run.Started
-		_ = f.Chunks(ctx, pipeline.ChunkPoints, from, math.MaxInt64, func(c *runfile.Chunk) error {
-			end = max(end, c.LastT)
-			return nil
-		})
-	}
-	to = min(to, end+1)
-	points := 1000
-	if text := r.URL.Query().Get("points"); text != "" {
-		if points, err = strconv.Atoi(text); err != nil || points < 1 || points > maxPoints {
-			return badRequest("points %q: give a number from 1 to %d", text, maxPoints)
-		}
-	}
-	list := strings.Split(r.URL.Query().Get("names"), ",")
-	if list[0] == "" || len(list) > maxNames {
-		return badRequest("names: give 1 to %d names, separated by commas", maxNames)
-	}
-	state, cfg, err := s.newestState(ctx, f)
+	names, points, err := seriesQuery(r.URL.Query())
 	if err != nil {
 		return err
 	}
-	plots := make([]*plot, len(list))
-	for i, name := range list {
-		if plots[i], err = newPlot(name, cfg, from, max(to, from+1), points); err != nil {
+	state, cfg, err := s.newestState(r.Context(), f)
+	if err != nil {
+		return err
+	}
+	to = max(min(to, state.Align.Next), from+1) // no row is behind the newest scan
+	plots := make([]*plot, len(names))
+	for i, name := range names {
+		if plots[i], err = newPlot(name, cfg, from, to, points); err != nil {
 			return err
 		}
 	}
+	if err := gather(r.Context(), f, plots, from, to, run.Started); err != nil {
+		return fmt.Errorf("series: %w", err)
+	}
+	out := answerJSON{Through: fmt.Sprintf("%d.%d", state.Epoch, state.N), Series: make(map[string]*seriesJSON, len(plots))}
+	for _, p := range plots {
+		out.Series[p.name] = p.result(run.Started)
+	}
+	return reply(w, http.StatusOK, out)
+}
+
+// gather reads the chunks that the plots need.
+func gather(ctx context.Context, f *runfile.File, plots []*plot, from, to, started int64) error {
 	codec := archive.NewCodec()
+	var rows archive.Chunk
 	for _, kind := range []string{pipeline.ChunkPoints, pipeline.ChunkChannels} {
-		var want []string
+		var columns []string
 		for _, p := range plots {
 			if p.kind == kind {
-				want = append(want, p.name)
+				columns = append(columns, p.name)
 			}
 		}
-		if len(want) == 0 {
+		if len(columns) == 0 {
 			continue
 		}
-		var rows archive.Chunk
-		err := f.Chunks(ctx, kind, from, to, func(c *runfile.Chunk) error {
-			if err := codec.Decode(&rows, c.Bytes, want); err != nil {
-				return fmt.Errorf("series: %w", err)
+		if err := f.Chunks(ctx, kind, from, to, func(c *runfile.Chunk) error {
+			if err := codec.Decode(&rows, c.Bytes, columns); err != nil {
+				return err
 			}
 			for _, p := range plots {
-				p.take(&rows, from, to, run.Started)
+				p.take(&rows, from, to, started)
 			}
 			return nil
-		})
-		if err != nil {
+		}); err != nil {
 			return err
 		}
 	}
-	out := make(map[string]*seriesJSON, len(plots))
-	for _, p := range plots {
-		out[p.name] = p.result(run.Started)
-	}
-	return reply(w, http.StatusOK, map[string]any{"through": fmt.Sprintf("%d.%d", state.Epoch, state.N), "series": out})
+	return nil
 }
 
 // newestState gives the state of the newest checkpoint, up to which the chunks

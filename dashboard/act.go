@@ -1,0 +1,178 @@
+package dashboard
+
+import (
+	"encoding/json"
+	"errors"
+	"fmt"
+	"io"
+	"net/http"
+	"strings"
+
+	"throatwatch/rules"
+	"throatwatch/rules/pipeline"
+)
+
+// largestBody bounds the body of a request, bytes.
+const largestBody = 64 << 10
+
+// alarmBody is the body of an action on an alarm.
+type alarmBody struct {
+	Revision  uint64  `json:"revision"` // that the operator saw
+	Reason    string  `json:"reason"`
+	RequestID string  `json:"request_id"`
+	By        string  `json:"by"`
+	Seconds   float64 `json:"seconds"` // of shelving
+}
+
+// runBody is the body that starts or ends a run.
+type runBody struct {
+	Action    string `json:"action"`
+	RequestID string `json:"request_id"`
+	By        string `json:"by"`
+}
+
+// markBody is the body of a mark.
+type markBody struct {
+	Text      string `json:"text"`
+	RequestID string `json:"request_id"`
+	By        string `json:"by"`
+}
+
+// command reads the JSON body of a request that changes something. v is what it
+// is decoded into.
+func command(w http.ResponseWriter, r *http.Request, v any) error {
+	if err := sameSite(r); err != nil {
+		return err
+	}
+	dec := json.NewDecoder(http.MaxBytesReader(w, r.Body, largestBody))
+	dec.DisallowUnknownFields()
+	err := dec.Decode(v)
+	if err == nil {
+		if _, more := dec.Token(); !errors.Is(more, io.EOF) {
+			err = errors.New("something follows the JSON object")
+		}
+	}
+	var large *http.MaxBytesError
+	switch {
+	case errors.As(err, &large):
+		return &problem{http.StatusRequestEntityTooLarge, fmt.Sprintf("body: more than %d bytes", large.Limit)}
+	case errors.Is(err, io.EOF):
+		return badRequest("body: a JSON object is needed")
+	case err != nil:
+		return badRequest("body: %v", err)
+	}
+	return nil
+}
+
+// sameSite refuses a request that a page of another site makes a browser send.
+func sameSite(r *http.Request) error {
+	if site := r.Header.Get("Sec-Fetch-Site"); site != "" && site != "same-origin" && site != "none" {
+		return &problem{http.StatusForbidden, "the request comes from another site"}
+	}
+	if origin := r.Header.Get("Origin"); origin != "" && origin != "http://"+r.Host && origin != "https://"+r.Host {
+		return &problem{http.StatusForbidden, "the request comes from another site: " + origin}
+	}
+	return nil
+}
+
+// doing gives for the last part of the path what the rules call it.
+func doing(path string) (do string, ok bool) {
+	switch path {
+	case "acknowledge":
+		return rules.DoAcknowledge, true
+	case "shelve":
+		return rules.DoShelve, true
+	case "unshelve":
+		return rules.DoUnshelve, true
+	case "reset":
+		return rules.DoReset, true
+	case "out-of-service":
+		return rules.DoOutOfService, true
+	case "in-service":
+		return rules.DoInService, true
+	}
+	return "", false
+}
+
+func (s *Server) alarmAction(w http.ResponseWriter, r *http.Request) error {
+	do, ok := doing(r.PathValue("action"))
+	if !ok {
+		return notFound("no action %q on an alarm: acknowledge, shelve, unshelve, reset, out-of-service, in-service", r.PathValue("action"))
+	}
+	var in alarmBody
+	if err := command(w, r, &in); err != nil {
+		return err
+	}
+	if in.RequestID == "" {
+		return badRequest("request_id is missing: give each request an id of its own, so that a repeated one is done once")
+	}
+	return s.act(w, r, pipeline.Action{
+		Do: do, Alarm: r.PathValue("id"), Revision: in.Revision, Reason: in.Reason, Seconds: in.Seconds, By: in.By, RequestID: in.RequestID,
+	})
+}
+
+func (s *Server) startOrEndRun(w http.ResponseWriter, r *http.Request) error {
+	var in runBody
+	if err := command(w, r, &in); err != nil {
+		return err
+	}
+	a := pipeline.Action{By: in.By, RequestID: in.RequestID}
+	switch in.Action {
+	case "start":
+		a.Do = pipeline.DoRunStart
+	case "end":
+		a.Do = pipeline.DoRunEnd
+	default:
+		return badRequest(`action %q: give "start" or "end"`, in.Action)
+	}
+	if err := s.ask(r.Context(), r.PathValue("rig"), func(*pipeline.Config, *pipeline.Machine, *pipeline.State) {}); err != nil {
+		return err
+	}
+	return s.act(w, r, a)
+}
+
+func (s *Server) mark(w http.ResponseWriter, r *http.Request) error {
+	var in markBody
+	if err := command(w, r, &in); err != nil {
+		return err
+	}
+	if strings.TrimSpace(in.Text) == "" {
+		return badRequest("a mark needs a text")
+	}
+	id, active := r.PathValue("id"), ""
+	if err := s.ask(r.Context(), "", func(_ *pipeline.Config, _ *pipeline.Machine, st *pipeline.State) {
+		if st.RunActive {
+			active = st.Run.ID
+		}
+	}); err != nil {
+		return err
+	}
+	if id != active {
+		return &problem{http.StatusConflict, fmt.Sprintf("run %q is not on: marks can be set on the run that is", id)}
+	}
+	return s.act(w, r, pipeline.Action{Do: pipeline.DoMark, Text: in.Text, By: in.By, RequestID: in.RequestID})
+}
+
+// placeJSON is where among the outcomes something came about.
+type placeJSON struct {
+	Epoch uint64 `json:"epoch"`
+	N     uint64 `json:"n"`
+}
+
+// act does an operator's action and says what became of it.
+func (s *Server) act(w http.ResponseWriter, r *http.Request, a pipeline.Action) error {
+	if a.By == "" {
+		a.By = "console"
+	}
+	a.Role = "operator"
+	res, err := s.cfg.Desk.Act(r.Context(), a)
+	switch {
+	case err != nil:
+		return silent(err)
+	case errors.Is(res.Err, rules.ErrNotFound):
+		return notFound("%v", res.Err)
+	case res.Err != nil:
+		return &problem{http.StatusConflict, res.Err.Error()}
+	}
+	return reply(w, http.StatusAccepted, placeJSON{res.Epoch, res.N})
+}
