@@ -452,6 +452,7 @@ func TestOutcomesAreTheSameHoweverTheyAreCut(t *testing.T) {
 // is gone, which is counted.
 func TestOutcomesOutliveTheIdleFile(t *testing.T) {
 	r := newRecorder(t)
+	r.core.ChunkFor = 300e9 // half an hour passes: few checkpoints will do
 	holder := newOutcomes(t, r.store)
 	r.act(pipeline.DoMark, "A")
 	rows, c, err := holder.Follow(t.Context(), influx.Cursor{}, 1)
@@ -467,6 +468,7 @@ func TestOutcomesOutliveTheIdleFile(t *testing.T) {
 	}
 	old, idle := r.store.Current()
 	path := old.Path()
+	r.core.ChunkFor = watch.SinkChunkFor
 	msgs := r.quick(r.core.State.Host + 1e9)
 	r.play(msgs)
 	if _, err := os.Stat(path); !idle || !errors.Is(err, os.ErrNotExist) {
@@ -496,6 +498,7 @@ func TestOutcomesOutliveTheIdleFile(t *testing.T) {
 // hours, also under a sink that holds it open.
 func TestOutcomesTellWhatWasPruned(t *testing.T) {
 	r := newRecorder(t)
+	r.core.ChunkFor = 300e9 // hours pass: few checkpoints will do
 	o := newOutcomes(t, r.store)
 	r.act(pipeline.DoMark, "A")
 	_, c, err := o.Follow(t.Context(), influx.Cursor{}, 1)
