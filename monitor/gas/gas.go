@@ -89,48 +89,41 @@ type Mixture struct {
 // The combustion must be lean: f from 0 to StoichiometricRatio(fuel), else
 // ErrFuelAir; war from 0 to 0.5, else ErrHumidity. A ratio per kg of humid air
 // must be multiplied by 1 + war first.
-func NewMixture(fuel Fuel, f, war float64) (Mixture, error) {
-	switch {
-	case !fuel.valid():
-		return Mixture{}, fmt.Errorf("gas: C%gH%g: %w", fuel.Carbon, fuel.Hydrogen, ErrFuel)
-	case !(f >= 0 && f <= StoichiometricRatio(fuel)):
-		return Mixture{}, fmt.Errorf("gas: fuel-air ratio %g: %w (%.5f): only complete lean combustion is modelled", f, ErrFuelAir, StoichiometricRatio(fuel))
-	case !(war >= 0 && war <= wettest):
-		return Mixture{}, fmt.Errorf("gas: humidity ratio %g: %w: give kg water per kg dry air", war, ErrHumidity)
+func NewMixture(fuel Fuel, f, war float64) (m Mixture, err error) {
+	if !(f >= 0 && war >= 0 && war <= wettest && fuel.valid()) || f*fuel.oxygen()*airMass > dryAir[o2]*fuel.MolarMass() {
+		return m, refuse(fuel, f, war)
 	}
-	x := composition(fuel, f, war)
-	return mix(&x), nil
-}
-
-// composition gives mole fractions.
-func composition(fuel Fuel, f, war float64) [numSpecies]float64 {
 	phi := f * airMass / fuel.MolarMass()
 	water := war * airMass / data[h2o].molarMass
-	per := 1 / (1 + water + phi*fuel.Hydrogen/4)
-	return [numSpecies]float64{
-		n2:    dryAir[n2] * per,
-		o2:    (dryAir[o2] - phi*fuel.oxygen()) * per,
-		argon: dryAir[argon] * per,
-		co2:   (dryAir[co2] + phi*fuel.Carbon) * per,
-		h2o:   (water + phi*fuel.Hydrogen/2) * per,
-	}
+	moles := 1 + water + phi*fuel.Hydrogen/4 // per mole of dry air
+	m.r = Universal * moles / ((1 + f + war) * airMass)
+	m.mix(1/moles, -phi*fuel.oxygen()/moles, phi*fuel.Carbon/moles, (water+phi*fuel.Hydrogen/2)/moles)
+	return m, nil
 }
 
-// mix weighs the species' coefficients by mole fraction once, so that a
-// property costs one polynomial however many species there are.
-func mix(x *[numSpecies]float64) Mixture {
-	m := Mixture{r: Universal / mass(x)}
-	for i := range x {
-		s, xi := &joined[i], x[i]
-		m.ranges[cold][2] += xi * s[cold][2]
-		m.ranges[cold][7] += xi * s[cold][7]
-		m.ranges[cold][8] += xi * s[cold][8]
-		for k := range s[low] {
-			m.ranges[low][k] += xi * s[low][k]
-			m.ranges[high][k] += xi * s[high][k]
-		}
+// refuse tells why NewMixture gives no gas.
+func refuse(fuel Fuel, f, war float64) error {
+	switch {
+	case !fuel.valid():
+		return fmt.Errorf("gas: C%gH%g: %w", fuel.Carbon, fuel.Hydrogen, ErrFuel)
+	case !(war >= 0 && war <= wettest):
+		return fmt.Errorf("gas: humidity ratio %g: %w: give kg water per kg dry air", war, ErrHumidity)
 	}
-	return m
+	return fmt.Errorf("gas: fuel-air ratio %g: %w (%.5f): only complete lean combustion is modelled", f, ErrFuelAir, StoichiometricRatio(fuel))
+}
+
+// mix weighs coefficients once, so that a property costs one polynomial however
+// many species there are: those of dry air, and of the moles that combustion and
+// humidity change, per mole of mixture.
+func (m *Mixture) mix(air, oxygen, carbonDioxide, water float64) {
+	a, b, c, d := &joinedAir, &joined[o2], &joined[co2], &joined[h2o]
+	for _, k := range [...]int{2, 7, 8} { // the others are 0
+		m.ranges[cold][k] = air*a[cold][k] + oxygen*b[cold][k] + carbonDioxide*c[cold][k] + water*d[cold][k]
+	}
+	for k := range m.ranges[low] {
+		m.ranges[low][k] = air*a[low][k] + oxygen*b[low][k] + carbonDioxide*c[low][k] + water*d[low][k]
+		m.ranges[high][k] = air*a[high][k] + oxygen*b[high][k] + carbonDioxide*c[high][k] + water*d[high][k]
+	}
 }
 
 // Perfect gives a calorically perfect gas: constant γ = cp/cv and gas constant
@@ -182,6 +175,22 @@ func (m *Mixture) S0(t float64) float64 { return m.r * m.at(t).s(t, math.Log(t))
 // SpeedOfSound gives a = √(γ R T), m/s, at t K, frozen composition.
 func (m *Mixture) SpeedOfSound(t float64) float64 { return math.Sqrt(m.Gamma(t) * m.r * t) }
 
+// Properties are those of one temperature, as the methods of Mixture give them one
+// by one at a higher price.
+type Properties struct {
+	Cp    float64 // J/(kg K)
+	H     float64 // J/kg
+	S0    float64 // J/(kg K)
+	Gamma float64
+}
+
+// At gives the properties at t K.
+func (m *Mixture) At(t float64) Properties {
+	p, lnT := m.at(t), math.Log(t)
+	cp := p.cp(t)
+	return Properties{Cp: m.r * cp, H: m.r * p.h(t, lnT), S0: m.r * p.s(t, lnT), Gamma: cp / (cp - 1)}
+}
+
 // solved bounds the last step of the solvers for T, relative to T: the step after
 // it would be its square, below rounding.
 const solved = 1e-9
@@ -220,12 +229,15 @@ func (m *Mixture) TFromS0(s, guess float64) float64 {
 	x := math.Log(guess)
 	t := guess
 	for range steps {
-		// s° is nearly straight over ln T, its slope is cp: Newton in ln T.
+		// s° is nearly straight over ln T: its slope is cp, its bend T dcp/dT. A step
+		// that takes the bend along leaves an error of its third power.
 		p := m.at(t)
-		step := (want - p.s(t, x)) / p.cp(t)
+		cp := p.cp(t)
+		step := (want - p.s(t, x)) / cp
+		step -= step * step * t * p.cpSlope(t) / (2 * cp)
 		x += step
 		t = math.Exp(x)
-		if math.Abs(step) <= solved {
+		if math.Abs(step) <= 1e-5 {
 			break
 		}
 	}
@@ -238,6 +250,7 @@ type CriticalState struct {
 	Temperature   float64 // T*, K
 	PressureRatio float64 // p*/p0; its inverse is the critical nozzle pressure ratio
 	FluxFunction  float64 // C* = W √(R T0)/(A p0) of the choked ideal flow
+	Velocity      float64 // a* = √(γ(T*) R T*), m/s
 }
 
 // Critical gives the sonic state for the total temperature t0, K:
@@ -245,45 +258,46 @@ type CriticalState struct {
 //	h(t0) − h(T*) = γ(T*) R T*/2,   s°(t0) − s°(T*) = R ln(p0/p*),
 //	C* = (p*/p0) √(γ(T*) T0/T*)
 //
-// For constant γ: T*/T0 = 2/(γ+1), p*/p0 = (2/(γ+1))^(γ/(γ−1)).
+// For constant γ: T*/T0 = 2/(γ+1), p*/p0 = (2/(γ+1))^(γ/(γ−1)). Relative error
+// below 1e-10.
 func (m *Mixture) Critical(t0 float64) CriticalState {
 	lnT0 := math.Log(t0)
 	p := m.at(t0)
-	h0, s0 := p.h(t0, lnT0), p.s(t0, lnT0)
-	cp := p.cp(t0)
+	h0, s0, cp := p.h(t0, lnT0), p.s(t0, lnT0), p.cp(t0)
 	// With γ = cp/(cp − 1), cp over R, f(T) = h0 − h − γT/2 falls with T from
 	// above 0 at T0/2 (γ < 3) to below 0 at T0; its derivative takes γ's own slope along.
 	// The bracket decides when cp's jump at 1000 K, of 1e-8, leaves no exact root.
 	t, lo, hi := 2*t0*(cp-1)/(2*cp-1), t0/2, t0
-	var lnT, gamma float64
+	lnT := math.Log(t)
 	for range steps {
 		p = m.at(t)
-		lnT = math.Log(t)
 		cp = p.cp(t)
-		gamma = cp / (cp - 1)
+		cpSlope := p.cpSlope(t)
+		gamma, gammaSlope := cp/(cp-1), -cpSlope/((cp-1)*(cp-1))
 		f := h0 - p.h(t, lnT) - gamma*t/2
 		if f > 0 {
 			lo = t
 		} else {
 			hi = t
 		}
-		slope := -cp - gamma/2 + t*p.cpSlope(t)/(2*(cp-1)*(cp-1))
-		next := t - f/slope
-		if !(next > lo && next < hi) {
-			if math.Abs(next-t) <= solved*t {
-				break
+		step := f / (cp + gamma/2 + t*gammaSlope/2)
+		if x := step / t; math.Abs(x) <= 1e-5 {
+			// s° and γ follow so small a step by their slopes; s° by its bend too.
+			// What Newton leaves of T* is the square of the step.
+			ratio := math.Exp(p.s(t, lnT) - s0 + x*(cp-x*(cp-t*cpSlope)/2))
+			gamma += gammaSlope * step
+			t += step
+			return CriticalState{
+				Temperature: t, PressureRatio: ratio,
+				FluxFunction: ratio * math.Sqrt(gamma*t0/t), Velocity: math.Sqrt(gamma * m.r * t),
 			}
+		}
+		next := t + step
+		if !(next > lo && next < hi) {
 			next = (lo + hi) / 2
 		}
-		step := next - t
+		lnT += math.Log1p((next - t) / t)
 		t = next
-		if math.Abs(step) <= solved*t {
-			// The step is small: lnT and γ follow it to first order, exact to 1e-18.
-			lnT += step / (t - step)
-			gamma -= p.cpSlope(t) * step / ((cp - 1) * (cp - 1))
-			break
-		}
 	}
-	ratio := math.Exp(p.s(t, lnT) - s0)
-	return CriticalState{Temperature: t, PressureRatio: ratio, FluxFunction: ratio * math.Sqrt(gamma*t0/t)}
+	return CriticalState{math.NaN(), math.NaN(), math.NaN(), math.NaN()}
 }

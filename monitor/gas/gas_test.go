@@ -18,6 +18,23 @@ func mixture(tb testing.TB, f, war float64) *Mixture {
 	return &m
 }
 
+// composition gives the mole fractions of products by the balance of atoms.
+func composition(fuel Fuel, f, war float64) [numSpecies]float64 {
+	x := dryAir
+	phi := f * airMass / fuel.MolarMass()
+	x[o2] -= phi * (fuel.Carbon + fuel.Hydrogen/4)
+	x[co2] += phi * fuel.Carbon
+	x[h2o] += phi*fuel.Hydrogen/2 + war*airMass/data[h2o].molarMass
+	var sum float64
+	for _, n := range x {
+		sum += n
+	}
+	for i := range x {
+		x[i] /= sum
+	}
+	return x
+}
+
 func perfect(tb testing.TB, gamma float64) *Mixture {
 	tb.Helper()
 	m, err := Perfect(gamma, 287)
@@ -97,6 +114,18 @@ func TestProducts(t *testing.T) {
 			if math.Abs(x[i]-v.num(t, name)) > 1e-9 {
 				t.Errorf("f %g war %g: %s = %v, want %s", f, war, name, x[i], v[name])
 			}
+		}
+		// The mixture is the species weighed by these fractions.
+		var cp float64
+		for i := range x {
+			p := &data[i].low
+			if temp > join {
+				p = &data[i].high
+			}
+			cp += x[i] * p.cp(temp)
+		}
+		if !near(m.Cp(temp), m.R()*cp, 1e-14) {
+			t.Errorf("f %g war %g %g K: cp = %v, of the species %v", f, war, temp, m.Cp(temp), m.R()*cp)
 		}
 		for _, c := range []struct {
 			what           string

@@ -41,12 +41,14 @@ func (p *poly) cpSlope(t float64) float64 {
 }
 
 func (p *poly) h(t, lnT float64) float64 {
-	return p[7] - p[0]/t + p[1]*lnT + t*(p[2]+t*(p[3]/2+t*(p[4]/3+t*(p[5]/4+t*p[6]/5))))
+	const third, fifth = 1.0 / 3, 1.0 / 5 // a product costs less than a quotient
+	return p[7] - p[0]/t + p[1]*lnT + t*(p[2]+t*(p[3]/2+t*(p[4]*third+t*(p[5]/4+t*p[6]*fifth))))
 }
 
 func (p *poly) s(t, lnT float64) float64 {
+	const third = 1.0 / 3
 	x := 1 / t
-	return p[8] - x*(p[1]+x*p[0]/2) + p[2]*lnT + t*(p[3]+t*(p[4]/2+t*(p[5]/3+t*p[6]/4)))
+	return p[8] - x*(p[1]+x*p[0]/2) + p[2]*lnT + t*(p[3]+t*(p[4]/2+t*(p[5]*third+t*p[6]/4)))
 }
 
 // species is one gas of a mixture.
@@ -103,6 +105,18 @@ const (
 // shifted by its jump at 1000 K (below 5e-8 of h/RT or s/R), and below 200 K, where
 // the fits end, cp keeps its value of 200 K.
 var joined = join3(data)
+
+// joinedAir is joined for dry air.
+var joinedAir = func() (air [numRanges]poly) {
+	for i := range joined {
+		for r := range air {
+			for k := range air[r] {
+				air[r][k] += dryAir[i] * joined[i][r][k]
+			}
+		}
+	}
+	return air
+}()
 
 func join3(data [numSpecies]species) (out [numSpecies][numRanges]poly) {
 	lnJoin, lnColdest := math.Log(join), math.Log(coldest)
