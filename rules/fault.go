@@ -5,6 +5,8 @@ import (
 	"slices"
 	"strings"
 	"unicode/utf8"
+
+	"github.com/agnivade/levenshtein"
 )
 
 // Fault is one thing that is wrong with a rule.
@@ -24,6 +26,9 @@ func Position(text string, offset int) (line, column int) {
 	return strings.Count(before, "\n") + 1, utf8.RuneCountInString(before[start:]) + 1
 }
 
+// mostCompared bounds, in bytes, what is compared of a misspelt name.
+const mostCompared = 64
+
 // nearest gives a hint with the names that are spelt most like name.
 func nearest(name string, names []string) string {
 	type near struct {
@@ -31,10 +36,11 @@ func nearest(name string, names []string) string {
 		d    int
 	}
 	var all []near
+	name = name[:min(len(name), mostCompared)]
 	for _, n := range names {
-		d := distance(name, n)
+		d := levenshtein.ComputeDistance(name, n)
 		if tail := n[strings.LastIndexByte(n, '.')+1:]; tail != n {
-			d = min(d, distance(name, tail)+1) // the id of a channel without channel. before it
+			d = min(d, levenshtein.ComputeDistance(name, tail)+1) // the id of a channel without channel. before it
 		}
 		if d <= max(2, len(name)/3) || len(name) > 3 && strings.Contains(n, name) {
 			all = append(all, near{n, d})
@@ -52,28 +58,4 @@ func nearest(name string, names []string) string {
 		out = append(out, n.name)
 	}
 	return fmt.Sprintf("is it %s?", strings.Join(out, ", "))
-}
-
-// distance is the number of bytes to change, add or drop to get from a to b.
-func distance(a, b string) int {
-	if len(a) > 64 || len(b) > 64 {
-		return max(len(a), len(b))
-	}
-	row := make([]int, len(b)+1)
-	for j := range row {
-		row[j] = j
-	}
-	for i := range len(a) {
-		diagonal := row[0]
-		row[0] = i + 1
-		for j := range len(b) {
-			change := diagonal
-			if a[i] != b[j] {
-				change++
-			}
-			diagonal = row[j+1]
-			row[j+1] = min(change, row[j]+1, row[j+1]+1)
-		}
-	}
-	return row[len(b)]
 }

@@ -3,9 +3,10 @@ package unit
 import (
 	"fmt"
 	"math"
-	"slices"
 	"strconv"
 	"strings"
+
+	"github.com/agnivade/levenshtein"
 )
 
 // NameError is returned for a unit that is not known, or that measures
@@ -162,13 +163,15 @@ func hint(name string, want Dimension) string {
 		return "use " + list(want)
 	}
 	// Without a wanted dimension, the units of those that are nearest in spelling.
+	const mostCompared = 64
+	name = name[:min(len(name), mostCompared)]
 	best, near := math.MaxInt, []string(nil)
 	for _, r := range table {
 		for _, n := range append([]string{r.Name}, r.also...) {
 			if n == "" {
 				continue
 			}
-			switch d := distance(strings.ToLower(name), strings.ToLower(n)); {
+			switch d := levenshtein.ComputeDistance(strings.ToLower(name), strings.ToLower(n)); {
 			case d < best:
 				best, near = d, []string{n}
 			case d == best && len(near) < 6:
@@ -207,28 +210,4 @@ func list(d Dimension) string {
 		}
 	}
 	return strings.Join(names, ", ")
-}
-
-// distance is the Levenshtein distance of two short texts, in bytes.
-func distance(a, b string) int {
-	if len(a) > 32 {
-		return len(a)
-	}
-	prev := make([]int, len(b)+1)
-	for j := range prev {
-		prev[j] = j
-	}
-	for i := range len(a) {
-		row := make([]int, len(b)+1)
-		row[0] = i + 1
-		for j := range len(b) {
-			change := prev[j]
-			if a[i] != b[j] {
-				change++
-			}
-			row[j+1] = slices.Min([]int{change, prev[j+1] + 1, row[j] + 1})
-		}
-		prev = row
-	}
-	return prev[len(b)]
 }

@@ -6,6 +6,8 @@ import (
 	"path/filepath"
 	"slices"
 	"strings"
+
+	"github.com/agnivade/levenshtein"
 )
 
 // Fault is one thing that is wrong with a rig or rule file.
@@ -66,12 +68,16 @@ func place(faults []Fault, folder string) []Fault {
 	return faults
 }
 
+// mostCompared bounds, in bytes, what is compared of a misspelt name.
+const mostCompared = 64
+
 // nearest gives the hint for a name that is none of names: the nearest in
 // spelling, one that goes on where it stops before others, or the choice.
 func nearest(name string, names []string) string {
+	name = name[:min(len(name), mostCompared)]
 	best, at := len(name)/2+2, ""
 	for _, n := range names {
-		d := distance(strings.ToLower(name), strings.ToLower(n))
+		d := levenshtein.ComputeDistance(strings.ToLower(name), strings.ToLower(n))
 		if len(name) > 2 && strings.HasPrefix(n, name) {
 			d = min(d, 1)
 		}
@@ -88,28 +94,4 @@ func nearest(name string, names []string) string {
 		return "use one of " + strings.Join(names, ", ")
 	}
 	return fmt.Sprintf("use one of the %d that are there, such as %s", len(names), strings.Join(names[:6], ", "))
-}
-
-// distance is the number of letters to change, add or drop to get from a to b.
-func distance(a, b string) int {
-	if len(a) > 64 || len(b) > 64 {
-		return max(len(a), len(b))
-	}
-	row := make([]int, len(b)+1)
-	for j := range row {
-		row[j] = j
-	}
-	for i := range len(a) {
-		diagonal := row[0]
-		row[0] = i + 1
-		for j := range len(b) {
-			change := diagonal
-			if a[i] != b[j] {
-				change++
-			}
-			diagonal = row[j+1]
-			row[j+1] = min(change, row[j]+1, row[j+1]+1)
-		}
-	}
-	return row[len(b)]
 }
