@@ -44,13 +44,14 @@ export function uuid(): string {
 
 export const api = {
   rigs: () => get<RigInfo[]>('api/rigs'),
-  hello: (rig: string) => get<HelloFrame>(`api/rigs/${id(rig)}/hello`),
+  hello: (rig: string, signal?: AbortSignal) => get<HelloFrame>(`api/rigs/${id(rig)}/hello`, signal),
   throatCurve: (rig: string, totalTemperature: number, fuelAir: number, humidity: number) =>
     get<ThroatCurve>(`api/rigs/${id(rig)}/throat-curve?total_temperature=${totalTemperature}&fuel_air_ratio=${fuelAir}&humidity_ratio=${humidity}`),
   alarms: () => get<Alarm[]>('api/alarms'),
-  acknowledge: (a: Alarm) => post(`api/alarms/${id(a.id)}/acknowledge`, { revision: a.revision, reason: '', request_id: uuid() }),
+  // `by` may be empty: the server then says "console".
+  acknowledge: (a: Alarm, by: string) => post(`api/alarms/${id(a.id)}/acknowledge`, { revision: a.revision, reason: '', by, request_id: uuid() }),
   mark: (run: string, text: string, by: string) => post(`api/runs/${id(run)}/marks`, { text, by, request_id: uuid() }),
-  run: (rig: string, action: 'start' | 'end') => post(`api/rigs/${id(rig)}/runs`, { action, request_id: uuid() }),
+  run: (rig: string, action: 'start' | 'end', by: string) => post(`api/rigs/${id(rig)}/runs`, { action, by, request_id: uuid() }),
   runs: () => get<RunSummary[]>('api/runs'),
   runSummary: (run: string) => get<RunSummary>(`api/runs/${id(run)}`),
   series: (run: string, names: readonly string[], from: number, to: number, points: number, signal?: AbortSignal) =>
@@ -58,10 +59,11 @@ export const api = {
 
   /**
    * The frames of [from, to), seconds of the run, one call of `onFrame` each as
-   * they arrive; onFrame returns false to stop. `kinds` asks for some kinds only.
+   * they arrive, the first a hello as of `from`. With `kinds`, of "alarm,mark", only
+   * those, as they are stored: the server then does not step the records again.
    */
-  async messages(run: string, from: number, to: number, kinds: string, signal: AbortSignal, onFrame: (f: Frame) => boolean): Promise<void> {
-    const reply = await request(`api/runs/${id(run)}/messages?from=${from}&to=${to}&channels=*${kinds && `&kinds=${kinds}`}`, { signal });
+  async messages(run: string, from: number, to: number, kinds: string, signal: AbortSignal, onFrame: (f: Frame) => void): Promise<void> {
+    const reply = await request(`api/runs/${id(run)}/messages?from=${from}&to=${to}${kinds && `&kinds=${kinds}`}`, { signal });
     const reader = (reply.body as ReadableStream<Uint8Array>).getReader();
     const decoder = new TextDecoder();
     let rest = '';
@@ -75,10 +77,7 @@ export const api = {
         if (!line) continue;
         const frame = JSON.parse(line) as Frame | { kind: 'error'; detail: string };
         if (frame.kind === 'error') throw new RequestError(0, frame.detail); // the server could not go on
-        if (!onFrame(frame)) {
-          void reader.cancel();
-          return;
-        }
+        onFrame(frame);
       }
       rest = rest.slice(start);
       if (done) return;

@@ -132,6 +132,7 @@ export interface HelloFrame extends Numbered {
 export const quantityKeys = [
   'npr', 'npr_u95', 'npr_rake', 'critical_npr', 'choke_npr',
   'choke_margin_percent', 'choke_margin_percent_u95', 'choke_margin_percent_low95', 'choke_margin_percent_high95', 'choke_margin_pa',
+  'p_choked', 'throat_mach', 'barometer_pa', 'throat_area_m2', 'exit_velocity_m_s', 'referred_flow_kg_s',
   'mass_flow_kg_s', 'mass_flow_kg_s_u95', 'gross_thrust_n', 'gross_thrust_n_u95', 'measured_thrust_n',
   'flow_parameter', 'total_pressure_pa', 'total_temperature_k', 'back_pressure_pa', 'fuel_air_ratio', 'humidity_ratio',
   'discharge_coefficient', 'air_flow_kg_s', 'fuel_flow_kg_s', 'flow_balance_kg_s',
@@ -177,6 +178,7 @@ export interface RunSummary {
   rig: string;
   engine: string;
   title?: string;
+  by: string;
   started: string;
   ended: string | null;
   state: 'active' | 'ended' | string;

@@ -42,6 +42,8 @@ export const silenceLimit = 5000;
 
 export class Link {
   connected = false;
+  /** Whether it has ever been connected. */
+  opened = false;
   private socket: Socket | null = null;
   private tries = 0;
   private timer: unknown = null;
@@ -67,7 +69,7 @@ export class Link {
     this.socket = socket;
     this.watch();
     socket.onopen = () => {
-      this.connected = true;
+      this.connected = this.opened = true;
       this.watch();
       this.onChange();
     };

@@ -6,6 +6,7 @@ import { RequestError, api } from './api';
 import type { AckState, Acknowledger, Display } from './context';
 import { type View, attr, h, style, text } from './dom';
 import type { Alarm, Frame, Priority, RigInfo } from './frames';
+import { firstChunk, opening, reach, rowsOf } from './history';
 import { Link, browser, liveURL } from './link';
 import { cssVariables, dark, light } from './palette';
 import { alarmsPage } from './pages/alarms';
@@ -13,18 +14,22 @@ import { helpPage } from './pages/help';
 import { replayPage } from './pages/replay';
 import { rigPage } from './pages/rig';
 import { runsPage } from './pages/runs';
-import { seriesNames, seriesRows } from './ring';
+import { gapSeconds } from './ring';
+import { Settings, browserKeeper } from './settings';
 import { Sound } from './sound';
-import { apply, dataAge, freshness, hostNow, newModel, runSeconds } from './state';
+import { activeRun, apply, dataAge, freshness, hostNow, newModel, recall, runSeconds } from './state';
 import './style.css';
 import { clock, duration, seconds } from './time';
-import { age } from './units';
+import { type System, type UnitSet, age, unitSets } from './units';
 import { troubleText, veilText, watchDisplay } from './watch/display';
+import { watchTools } from './watch/tools';
 
 const drawEvery = 50; // ms: at most 20 draws a second
 const footer = 'throatwatch only watches. Facility safety procedures, hard-wired protection and licensed practice come first. This display is not protection.';
 /** An acknowledgement without an answering alarm frame for this long has failed, ms. */
 const ackTimeout = 5000;
+/** What a page fetches before it joins the link has to come within this time, ms. */
+const openTimeout = 8000;
 
 const darkScheme = window.matchMedia('(prefers-color-scheme: dark)');
 document.head.append(h('style', {}, `:root{${cssVariables(light)}}@media(prefers-color-scheme:dark){:root{${cssVariables(dark)}}}`));
@@ -56,42 +61,51 @@ async function firstRigs(): Promise<RigInfo[]> {
 function run(rig: RigInfo, rigs: RigInfo[]): void {
   const model = newModel();
   const sound = new Sound();
+  const settings = new Settings(browserKeeper());
   let dirty = true;
-  let filledFor = '';
 
   const link = new Link(browser, (afresh) => liveURL(location.href, rig.id, model.n > 0 && !afresh ? `${model.epoch}.${model.n}` : ''), onFrame, () => { dirty = true; });
 
+  /** Fetches the run so far and goes on behind it; without it the link begins with a hello. */
+  async function open(): Promise<void> {
+    try {
+      const past = await opening(api, rig.id, AbortSignal.timeout(openTimeout));
+      apply(model, past.hello, performance.now());
+      recall(model, past.events);
+      model.ring.fill(past.rows);
+      const [epoch, n] = past.from.split('.').map(Number);
+      if (epoch !== undefined && n !== undefined) [model.epoch, model.n] = [epoch, n];
+    } catch { /* what has come is kept; the link tells the rest, or that there is no server */ }
+    link.start();
+  }
+
   function onFrame(f: Frame): void {
-    const gap = f.kind === 'hello' || f.kind === 'reset';
     apply(model, f, performance.now());
     if (f.kind === 'alarm') pending.delete(f.alarm.id);
-    if (gap || f.kind === 'run') fillTraces();
+    if (f.kind === 'hello') fillGap();
     hear();
     dirty = true;
   }
 
-  /**
-   * Fetches what the traces lack: the run so far on the first hello, the gap after
-   * a reset. The newest minute is stored only when its chunk closes: asked again.
-   */
-  function fillTraces(again = 5): void {
-    const r = model.run;
-    const key = r ? `${r.id} ${model.epoch} ${model.resets}` : '';
-    if (!r || r.ended || (key === filledFor && again === 5)) return;
-    filledFor = key;
-    if (again > 0) window.setTimeout(() => { if (key === filledFor) fillTraces(again - 1); }, 15_000);
+  /** A hello on the link tells that frames were missed: the traces get them from what is stored. */
+  function fillGap(): void {
+    const r = activeRun(model);
+    if (!r) return;
     const start = seconds(r.started);
-    const to = Math.max(1, hostNow(model, performance.now()) - start + 1);
-    api.series(r.id, seriesNames, Math.max(0, to - 600), to, 2000).then((reply) => {
-      model.ring.fill(seriesRows(reply, start));
+    const to = hostNow(model, performance.now()) - start;
+    const last = model.ring.size > 0 ? model.ring.t(model.ring.size - 1) - start : 0;
+    const from = Math.max(0, to - reach, last);
+    if (to - from < gapSeconds) return;
+    rowsOf(api, r.id, start, from, to, to < firstChunk, AbortSignal.timeout(openTimeout)).then((rows) => {
+      model.ring.fill(rows);
       dirty = true;
-    }, () => undefined); // nothing stored yet, or no server: the next try tells
+    }, () => undefined); // the hole stays visible as one
   }
 
   function hear(): void {
     const now = performance.now();
     const loudest = standing(model.alarms.values()).find(sounds);
-    sound.tick(loudest?.priority ?? null, freshness(model, link.connected, now).kind === 'no_link', now);
+    sound.tick(loudest?.priority ?? null, display.fresh(now).kind === 'no_link', now);
   }
 
   // Acknowledgements on their way, by alarm id.
@@ -106,7 +120,7 @@ function run(rig: RigInfo, rigs: RigInfo[]): void {
       const entry: { revision: number; state: AckState; at: number } = { revision: a.revision, state: 'pending', at: performance.now() };
       pending.set(a.id, entry);
       dirty = true;
-      api.acknowledge(a).catch(async (e: Error) => {
+      api.acknowledge(a, settings.operator).catch(async (e: Error) => {
         const moved = e instanceof RequestError && e.status === 409;
         entry.state = moved ? 'it changed meanwhile: look again' : e.message;
         if (moved) await refresh();
@@ -120,8 +134,12 @@ function run(rig: RigInfo, rigs: RigInfo[]): void {
     for (const alarm of list) apply(model, { kind: 'alarm', epoch: model.epoch, n: model.n, t: alarm.changed, alarm }, performance.now());
   }
 
-  const display: Display = { rig: rig.id, model: () => model, fresh: (now) => freshness(model, link.connected, now), palette, acknowledger };
-  const head = header(rigs, rig, display, sound);
+  const units = (): UnitSet => unitSets[settings.system];
+  const display: Display = {
+    rig: rig.id, model: () => model, palette, units, acknowledger, operator: () => settings.operator,
+    fresh: (now) => (link.opened ? freshness(model, link.connected, now) : { kind: 'waiting' }),
+  };
+  const head = header(rigs, rig, display, sound, settings, () => { dirty = true; });
   const place = h('main', { id: 'main', tabindex: '-1' });
   document.body.replaceChildren(h('a', { class: 'skip', href: '#main', onclick: (e: Event) => { e.preventDefault(); place.focus(); } }, 'To the content'), head.el, place, h('footer', {}, footer));
 
@@ -135,11 +153,11 @@ function run(rig: RigInfo, rigs: RigInfo[]): void {
     const [, name = 'watch', id = ''] = next.split('/');
     switch (name) {
       case 'alarms': view = alarmsPage(display); break;
-      case 'runs': view = runsPage(); break;
-      case 'run': view = replayPage(decodeURIComponent(id), rig.id, palette); break;
+      case 'runs': view = runsPage(display); break;
+      case 'run': view = replayPage(decodeURIComponent(id), rig.id, display); break;
       case 'rig': view = rigPage(display); break;
       case 'help': view = helpPage(); break;
-      default: view = watchDisplay(display, markForm(display));
+      default: view = watchDisplay(display, watchTools(display));
     }
     document.body.dataset['page'] = name;
     document.title = name === 'run' ? `REPLAY ${decodeURIComponent(id)} – throatwatch` : `${rig.title || rig.id} – throatwatch`;
@@ -162,11 +180,11 @@ function run(rig: RigInfo, rigs: RigInfo[]): void {
   }
   window.setInterval(hear, 250); // sound must not depend on drawing: a hidden page does not draw
   go();
-  link.start();
+  void open();
   requestAnimationFrame(draw);
 }
 
-function header(rigs: RigInfo[], rig: RigInfo, d: Display, sound: Sound): View & { route(name: string): void } {
+function header(rigs: RigInfo[], rig: RigInfo, d: Display, sound: Sound, settings: Settings, changed: () => void): View & { route(name: string): void } {
   const pages: [string, string][] = [['watch', 'Watch'], ['alarms', 'Alarms'], ['runs', 'Runs'], ['rig', 'Rig'], ['help', 'Help']];
   const links = pages.map(([name, label]) => h('a', { href: `#/${name}` }, label));
   const counts = h('a', { class: 'counts', href: '#/watch', 'data-q': 'counts' });
@@ -177,11 +195,19 @@ function header(rigs: RigInfo[], rig: RigInfo, d: Display, sound: Sound): View &
   const facts = h('span', { class: 'facts' });
   const conditions = h('span', { class: 'conditions', role: 'status', 'data-q': 'conditions' });
   const files = h('span', { class: 'files' });
+  const operator = h('input', {
+    type: 'text', value: settings.operator, placeholder: 'operator', maxlength: '40', 'aria-label': 'Operator: goes with every action', title: 'Who acts at this page: the name goes with every action', 'data-q': 'operator', autocomplete: 'off',
+    oninput: () => settings.setOperator(operator.value), onkeydown: (e: Event) => { if ((e as KeyboardEvent).key === 'Enter') operator.blur(); },
+  });
+  const units = h('select', { 'aria-label': 'Units', 'data-q': 'units', onchange: () => {
+    settings.setSystem(units.value as System);
+    changed();
+  } }, ...([['si', 'SI'], ['us', 'US units']] as const).map(([v, label]) => h('option', { value: v, selected: v === settings.system }, label)));
   const choice = h('select', { 'aria-label': 'Rig', onchange: () => { location.search = `?rig=${encodeURIComponent(choice.value)}`; } }, ...rigs.map((r) => h('option', { value: r.id, selected: r.id === rig.id }, r.title || r.id)));
   const el = h('header', {},
     h('div', { class: 'bar' }, h('span', { class: 'name' }, 'throatwatch'), rigs.length > 1 ? choice : h('span', { class: 'rig' }, rig.title || rig.id), h('nav', { 'aria-label': 'Pages' }, ...links),
       h('span', { class: 'grow' }), counts, soundButton, h('span', { class: 'feed' }, tick, ageText), time),
-    h('div', { class: 'strip' }, facts, conditions, files));
+    h('div', { class: 'strip' }, facts, conditions, h('span', { class: 'viewer' }, files, operator, units)));
 
   return {
     el,
@@ -217,35 +243,11 @@ function header(rigs: RigInfo[], rig: RigInfo, d: Display, sound: Sound): View &
       if (s && s.rules_unknown > 0) bad.push(`${s.rules_unknown} rule${s.rules_unknown > 1 ? 's' : ''} unknown`);
       text(conditions, bad.length > 0 ? `▲ ${bad.join(' · ')}` : s?.recording ? '● recording' : '');
       attr(conditions, 'data-bad', bad.length > 0);
-      text(facts, m.run && !m.run.ended ? `live run ${m.run.number} · ${duration(runSeconds(m))} · ${m.run.engine}` : m.rig ? `no run · ${m.rig.engine_model} ${m.rig.engine_serial}` : '');
+      text(facts, activeRun(m) ? `live run ${m.run?.number} · ${duration(runSeconds(m))} · ${m.run?.engine}` : m.rig ? `no run · ${m.rig.engine_model} ${m.rig.engine_serial}` : '');
       text(files, m.rig ? `limits ${m.rig.limits_version || '–'} · files ${m.configHash.slice(0, 8)}` : '');
     },
     destroy: () => undefined,
   };
-}
-
-/** Lets a person pin a note to the run's time line. */
-function markForm(d: Display): HTMLElement {
-  const input = h('input', { type: 'text', 'aria-label': 'Text of a mark', placeholder: 'mark: what happened', maxlength: '200' });
-  const told = h('span', { class: 'extra', role: 'status' });
-  return h('form', {
-    class: 'mark',
-    onsubmit: (e: Event) => {
-      e.preventDefault();
-      const m = d.model();
-      if (!m.run || m.run.ended) {
-        text(told, 'no run');
-        return;
-      }
-      const words = input.value.trim();
-      if (!words) return;
-      text(told, '…');
-      api.mark(m.run.id, words, 'console').then(() => {
-        input.value = '';
-        text(told, '');
-      }, (error: Error) => text(told, `not set: ${error.message}`));
-    },
-  }, input, h('button', { type: 'submit' }, 'Mark'), told);
 }
 
 void main();

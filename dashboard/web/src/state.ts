@@ -3,7 +3,7 @@
 // time in milliseconds.
 
 import type {
-  Alarm, AlarmState, Band, Channel, ChannelValue, Frame, HelloFrame, Ledger, PointFrame, Priority, RigInfo, Run, StatusFrame,
+  Alarm, AlarmFrame, AlarmState, Band, Channel, ChannelValue, Frame, HelloFrame, Ledger, MarkFrame, PointFrame, Priority, RigInfo, Run, StatusFrame,
 } from './frames';
 import { Ring, pointRow } from './ring';
 import { seconds } from './time';
@@ -75,7 +75,7 @@ export function apply(m: Model, f: Frame, now: number): void {
     case 'ledger': m.ledgers = f.bands; break;
     case 'status': status(m, f, now); break;
     case 'mark':
-      flag(m, { t: seconds(f.t), kind: 'mark', text: f.mark.text, id: `mark ${f.t}` });
+      mark(m, f);
       break;
     case 'run':
       m.run = f.event === 'started' ? f.run : m.run && m.run.id === f.run.id ? f.run : m.run;
@@ -118,16 +118,38 @@ function alarm(m: Model, a: Alarm, t: number): void {
   const before = m.alarms.get(a.id);
   if (before && before.revision > a.revision) return; // an older copy after a resume
   if (a.state === 'normal') m.alarms.delete(a.id); else m.alarms.set(a.id, a);
-  const from = before?.state ?? 'normal';
+  transition(m, a, before?.state ?? 'normal', t);
+}
+
+/** Takes stored alarm and mark frames into history and flags; what stands now is the hello's to say. */
+export function recall(m: Model, frames: readonly (AlarmFrame | MarkFrame)[]): void {
+  const states = new Map<string, AlarmState>();
+  for (const f of frames) {
+    const t = seconds(f.t);
+    if (f.kind === 'mark') mark(m, f);
+    else {
+      transition(m, f.alarm, states.get(f.alarm.id) ?? 'normal', t);
+      states.set(f.alarm.id, f.alarm.state);
+    }
+  }
+}
+
+function mark(m: Model, f: MarkFrame): void {
+  flag(m, { t: seconds(f.t), kind: 'mark', text: f.mark.text, id: `mark ${f.t}` });
+}
+
+function transition(m: Model, a: Alarm, from: AlarmState, t: number): void {
   if (from === a.state) return;
   remember(m, { t, alarm: a, from, to: a.state, note: a.past ? 'past: judged after the event' : '' });
-  if (from === 'normal' || (a.state === 'unacknowledged' && from !== 'unacknowledged')) {
+  if (a.raised !== null && (from === 'normal' || (a.state === 'unacknowledged' && from !== 'unacknowledged'))) {
     // A latched alarm that comes again keeps its id and its first raise.
     flag(m, { t: from === 'normal' ? seconds(a.raised) : seconds(a.changed), kind: a.priority, text: a.title, id: a.id });
   }
 }
 
+/** Enters a transition, unless it is there: stored events and the link overlap. */
 function remember(m: Model, e: HistoryEntry): void {
+  if (m.history.some((h) => h.alarm.id === e.alarm.id && h.alarm.revision === e.alarm.revision && h.to === e.to)) return;
   m.history.push(e);
   if (m.history.length > kept) m.history.shift();
 }
@@ -181,6 +203,11 @@ export function freshness(m: Model, connected: boolean, now: number): Freshness 
 /** Whether numbers of the operating point may be drawn as present. */
 export function believable(f: Freshness): boolean {
   return f.kind === 'live' || f.kind === 'replay' || f.kind === 'catching_up';
+}
+
+/** The run that is on. */
+export function activeRun(m: Model): Run | null {
+  return m.run && !m.run.ended ? m.run : null;
 }
 
 /** The position on the run's clock, s; NaN without a run. */

@@ -1,6 +1,6 @@
-// Every conversion from SI to what the page shows, and every number format.
-// Display units: °C, kPa, kg/s, kN, rpm, %. A channel is shown in the unit that
-// its rig file gives, by the table below.
+// Every conversion from SI to what the page shows, and every number format. A
+// viewer chooses SI or US customary; a channel is shown in the unit that its rig
+// file gives, or in its counterpart where that belongs to the other system.
 
 /** A unit: SI value = value · scale + offset. */
 interface Unit { scale: number; offset: number; sign: string }
@@ -21,7 +21,7 @@ const units: Record<string, Unit> = {
   'm3/s': unit(1, 'm³/s'), 'm3/h': unit(1 / 3600, 'm³/h'), 'l/s': unit(1e-3, 'l/s'), 'l/min': unit(1e-3 / 60, 'l/min'), 'l/h': unit(1e-3 / 3600, 'l/h'),
   '1/s': unit(1, '1/s'), 'Hz': unit(1, 'Hz'), 'rpm': unit(1 / 60, 'rpm'),
   'm': unit(1, 'm'), 'cm': unit(0.01, 'cm'), 'mm': unit(1e-3, 'mm'), 'um': unit(1e-6, 'µm'), 'in': unit(0.0254, 'in'), 'mil': unit(0.0254e-3, 'mil'), 'ft': unit(0.3048, 'ft'),
-  'm2': unit(1, 'm²'), 'cm2': unit(1e-4, 'cm²'), 'mm2': unit(1e-6, 'mm²'),
+  'm2': unit(1, 'm²'), 'cm2': unit(1e-4, 'cm²'), 'mm2': unit(1e-6, 'mm²'), 'in2': unit(0.0254 * 0.0254, 'in²'),
   'N': unit(1, 'N'), 'daN': unit(10, 'daN'), 'kN': unit(1e3, 'kN'), 'lbf': unit(pound * 9.80665, 'lbf'), 'kgf': unit(9.80665, 'kgf'),
   'm/s': unit(1, 'm/s'), 'mm/s': unit(1e-3, 'mm/s'), 'in/s': unit(0.0254, 'in/s'), 'ft/s': unit(0.3048, 'ft/s'),
   'm/s2': unit(1, 'm/s²'), 'g': unit(9.80665, 'g'),
@@ -47,8 +47,90 @@ export function inUnit(si: number, name: string, dimension = ''): { value: numbe
 }
 
 export const celsius = (k: number): number => k - 273.15;
-export const kPa = (pa: number): number => pa / 1000;
-export const kN = (n: number): number => n / 1000;
+
+/** How one kind of quantity is shown. */
+export interface Scale {
+  sign: string;
+  decimals: number;
+  /** The value shown for one in SI. */
+  of(si: number): number;
+  /** The same for a difference or a half width, which has no offset. */
+  span(si: number): number;
+}
+
+export type System = 'si' | 'us';
+
+/** The units of a viewer. */
+export interface UnitSet {
+  system: System;
+  pressure: Scale;
+  temperature: Scale;
+  difference: Scale; // of temperatures
+  flow: Scale;
+  fuel: Scale;
+  force: Scale;
+  area: Scale;
+  velocity: Scale;
+  /** The unit in which to show a channel whose rig file gives `name`. */
+  channel(name: string): string;
+}
+
+function scale(name: string, decimals: number, sign?: string): Scale {
+  const u = units[name] as Unit;
+  return { sign: sign ?? u.sign, decimals, of: (si) => (si - u.offset) / u.scale, span: (si) => si / u.scale };
+}
+
+function difference(name: string): Scale {
+  const s = scale(name, 0);
+  return { ...s, of: s.span };
+}
+
+// A unit of one system and its counterpart in the other. Units that both use, or
+// for which no counterpart is usual, stay as the rig file gives them.
+const us: Record<string, string> = {
+  'Pa': 'psi', 'hPa': 'psi', 'mbar': 'psi', 'kPa': 'psi', 'MPa': 'psi', 'bar': 'psi', 'mmHg': 'inHg', 'mmH2O': 'inH2O', 'K': 'degF', 'degC': 'degF',
+  'kg/s': 'lb/s', 'g/s': 'lb/s', 'kg/min': 'lb/min', 'kg/h': 'lb/h', 'N': 'lbf', 'daN': 'lbf', 'kN': 'lbf', 'kgf': 'lbf',
+  'm': 'ft', 'cm': 'in', 'mm': 'in', 'um': 'mil', 'm2': 'in2', 'cm2': 'in2', 'mm2': 'in2', 'm/s': 'ft/s', 'mm/s': 'in/s',
+};
+const si: Record<string, string> = {
+  'psi': 'kPa', 'inHg': 'kPa', 'inH2O': 'kPa', 'degF': 'degC', 'degR': 'K', 'lb/s': 'kg/s', 'lb/min': 'kg/min', 'lb/h': 'kg/h', 'lbf': 'kN',
+  'ft': 'm', 'in': 'mm', 'mil': 'um', 'in2': 'cm2', 'ft/s': 'm/s', 'in/s': 'mm/s',
+};
+
+/** The two sets to choose from. */
+export const unitSets: Record<System, UnitSet> = {
+  si: {
+    system: 'si', pressure: scale('kPa', 1), temperature: scale('degC', 0), difference: difference('K'), flow: scale('kg/s', 3), fuel: scale('kg/h', 1),
+    force: scale('kN', 2), area: scale('cm2', 2), velocity: scale('m/s', 1), channel: (name) => si[name] ?? name,
+  },
+  us: {
+    system: 'us', pressure: scale('psi', 2), temperature: scale('degF', 0), difference: difference('degF'), flow: scale('lb/s', 2), fuel: scale('lb/h', 1),
+    force: scale('lbf', 0), area: scale('in2', 3), velocity: scale('ft/s', 1), channel: (name) => us[name] ?? name,
+  },
+};
+
+type Maybe = number | null | undefined;
+
+/** A value in its unit, without the sign; "–" for none. */
+export const shown = (s: Scale, v: Maybe): string => (typeof v === 'number' ? fixed(s.of(v), s.decimals) : '–');
+
+/** A half width in its unit; null stays null. */
+export const width = (s: Scale, v: Maybe): number | null => (typeof v === 'number' ? s.span(v) : null);
+
+// Units of quantities that people in the SI world read in another one.
+const handy: Record<string, string> = { 'Pa': 'kPa', 'K': 'degC', 'N': 'kN', 'm2': 'cm2' };
+
+/** A value of an alarm, given in the unit of what its rule compares. */
+export function alarmValue(set: UnitSet, v: number, unitName: string, words: string): string {
+  // "K" may be a temperature or a difference of two. No gas here is below 200 K, the
+  // end of the gas model, and an alarm on a larger difference names it.
+  const apart = unitName === 'K' && (v < 200 || /spread|difference/i.test(words));
+  const name = set.system === 'us' ? set.channel(unitName) : apart ? 'K' : handy[unitName] ?? unitName;
+  const [given, wanted] = [units[unitName], units[name]];
+  if (!given || !wanted) return `${significant(v, 4)} ${unitName}`;
+  const value = apart ? (v * given.scale) / wanted.scale : (v * given.scale + given.offset - wanted.offset) / wanted.scale;
+  return `${Number.isInteger(value) ? fixed(value, 0) : significant(value, 4)} ${wanted.sign}`.trim();
+}
 
 const minus = '−';
 /** A number with fixed decimals and a true minus sign; "–" for null or NaN. Never "−0.0". */

@@ -12,7 +12,7 @@ export function stateLook(p: PointFrame | null): StateLook {
     case 'choked': return { shape: '●', word: 'choked', marginal: p.choke_marginal, cause: '' };
     case 'unchoked': return { shape: '○', word: 'unchoked', marginal: p.choke_marginal, cause: '' };
     case 'no_flow': return { shape: '—', word: 'no flow', marginal: false, cause: 'below the resolution floor' };
-    default: return { shape: '?', word: 'unknown', marginal: false, cause: p.cause ?? 'cause not given' };
+    default: return { shape: '?', word: 'unknown', marginal: false, cause: causeWord(p.cause) || 'cause not given' };
   }
 }
 
@@ -21,6 +21,13 @@ export function uncertainty(u95: Num | undefined, decimals: number, low?: Num, h
   if (u95 !== null && u95 !== undefined && Number.isFinite(u95)) return `± ${fixed(u95, decimals)}`;
   if (typeof low === 'number' && typeof high === 'number') return `${signed(low, decimals)} … ${signed(high, decimals)}`;
   return '';
+}
+
+/** A cause for people: the id of a channel stays as it is, what is wrong with it is put into words. */
+export function causeWord(s: string | null | undefined): string {
+  if (!s) return '';
+  const space = s.indexOf(' ');
+  return space < 0 ? s.replaceAll('_', ' ') : s.slice(0, space) + s.slice(space).replaceAll('_', ' ');
 }
 
 const sources: Record<string, string> = {

@@ -1,7 +1,8 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
 import { clock, duration, rfc3339, seconds } from '../src/time';
-import { age, bytes, celsius, fixed, inUnit, kN, kPa, plain, signed, significant } from '../src/units';
+import { Settings } from '../src/settings';
+import { type Scale, age, alarmValue, bytes, celsius, fixed, inUnit, plain, shown, signed, significant, unitSets, width } from '../src/units';
 import { stateLook, uncertainty } from '../src/words';
 import { point, t0 } from './samples';
 
@@ -24,7 +25,84 @@ test('conversions from SI', async (t) => {
     });
   }
   assert.deepEqual(inUnit(5, 'furlong', 'pressure'), { value: 5, sign: 'Pa' }, 'an unknown unit is shown in SI, and says so');
-  assert.deepEqual([celsius(1000), kPa(2500), kN(4200)], [726.85, 2.5, 4.2]);
+  assert.equal(celsius(1000), 726.85);
+});
+
+test('both sets of units', async (t) => {
+  // Expectations from the exact definitions: 1 lb = 0.45359237 kg, 1 lbf = 4.4482216152605 N,
+  // 1 in = 25.4 mm, °F = K · 9/5 − 459.67.
+  const rows: { name: string; pick: (u: typeof unitSets.si) => Scale; si: number; want: [string, string]; span: [number, number] }[] = [
+    { name: 'pressure', pick: (u) => u.pressure, si: 250e3, want: ['250.0 kPa', '36.26 psi'], span: [250, 36.2594344] },
+    { name: 'temperature', pick: (u) => u.temperature, si: 993.15, want: ['720 °C', '1328 °F'], span: [993.15, 1787.67] },
+    { name: 'difference of temperatures', pick: (u) => u.difference, si: 20, want: ['20 K', '36 °F'], span: [20, 36] },
+    { name: 'flow', pick: (u) => u.flow, si: 7.25, want: ['7.250 kg/s', '15.98 lb/s'], span: [7.25, 15.9835140] },
+    { name: 'fuel flow', pick: (u) => u.fuel, si: 0.1, want: ['360.0 kg/h', '793.7 lb/h'], span: [360, 793.664144] },
+    { name: 'force', pick: (u) => u.force, si: 4400, want: ['4.40 kN', '989 lbf'], span: [4.4, 989.159351] },
+    { name: 'area', pick: (u) => u.area, si: 0.025, want: ['250.00 cm²', '38.750 in²'], span: [250, 38.7500775] },
+    { name: 'velocity', pick: (u) => u.velocity, si: 340, want: ['340.0 m/s', '1115.5 ft/s'], span: [340, 1115.48556] },
+  ];
+  for (const r of rows) {
+    await t.test(r.name, () => {
+      [unitSets.si, unitSets.us].forEach((u, i) => {
+        const s = r.pick(u);
+        assert.equal(`${shown(s, r.si)} ${s.sign}`, r.want[i]);
+        assert.ok(Math.abs((width(s, r.si) ?? NaN) / (r.span[i] as number) - 1) < 1e-7, `half width ${width(s, r.si)}`);
+        assert.ok(Math.abs(s.of(r.si + 1) - s.of(r.si) - s.span(1)) < 1e-9, 'a difference is scaled as the value is');
+      });
+    });
+  }
+  assert.equal(shown(unitSets.us.flow, null), '–');
+  assert.equal(width(unitSets.us.flow, undefined), null);
+});
+
+test('a channel changes its unit with the system, and back to the same', () => {
+  const { si, us } = unitSets;
+  const pairs = { 'kPa': 'psi', 'hPa': 'psi', 'Pa': 'psi', 'degC': 'degF', 'kg/s': 'lb/s', 'kg/h': 'lb/h', 'kN': 'lbf', 'N': 'lbf', 'mm/s': 'in/s', 'mm': 'in', 'mm2': 'in2', 'm/s': 'ft/s' };
+  for (const [name, other] of Object.entries(pairs)) {
+    assert.equal(si.channel(name), name, 'the unit of the rig file stays in its own system');
+    assert.equal(us.channel(name), other, 'the same dimension in the other');
+  }
+  for (const name of ['psi', 'degF', 'lb/s', 'lb/h', 'lbf', 'in']) {
+    assert.equal(us.channel(name), name);
+    assert.notEqual(si.channel(name), name);
+  }
+  for (const name of ['%', 'rpm', '1/s', 'V', 's']) assert.deepEqual([si.channel(name), us.channel(name)], [name, name], 'used in both');
+  assert.ok(Math.abs(inUnit(101325, us.channel('kPa')).value - 14.6959488) < 1e-6);
+  assert.ok(Math.abs(inUnit(0.1, us.channel('kg/h')).value - 793.664144) < 1e-5);
+});
+
+test('the value of an alarm', () => {
+  const { si, us } = unitSets;
+  assert.deepEqual([alarmValue(si, 993.9, 'K', 'egt_run_max_over'), alarmValue(us, 993.9, 'K', 'egt_run_max_over')], ['720.8 °C', '1329 °F']);
+  assert.deepEqual([alarmValue(si, 45, 'K', 'egt_spread'), alarmValue(us, 45, 'K', 'egt_spread')], ['45 K', '81 °F']);
+  assert.equal(alarmValue(si, 250, 'K', 'EGT spread wide'), '250 K', 'a large difference says so');
+  assert.deepEqual([alarmValue(si, 30e3, 'Pa', ''), alarmValue(us, 30e3, 'Pa', '')], ['30 kPa', '4.351 psi']);
+  assert.deepEqual([alarmValue(si, 20124, 'rpm', ''), alarmValue(us, 20124, 'rpm', '')], ['20124 rpm', '20124 rpm']);
+  assert.equal(alarmValue(si, 5.05, 's', ''), '5.050 s');
+  assert.equal(alarmValue(us, -11.4, '%', ''), '−11.40 %');
+  assert.equal(alarmValue(us, 12.5, 'rpm/s', ''), '12.50 rpm/s', 'an unknown unit is passed on');
+});
+
+test('choices are kept, also where the browser keeps nothing', () => {
+  const kept = new Map<string, string>();
+  const keeper = { getItem: (k: string) => kept.get(k) ?? null, setItem: (k: string, v: string) => void kept.set(k, v) };
+  const a = new Settings(keeper);
+  assert.deepEqual([a.system, a.operator], ['si', '']);
+  a.setSystem('us');
+  a.setOperator('  M. Alder ');
+  const b = new Settings(keeper);
+  assert.deepEqual([b.system, b.operator], ['us', 'M. Alder']);
+  kept.set('throatwatch.units', 'furlongs');
+  assert.equal(new Settings(keeper).system, 'si', 'an unknown choice is none');
+  const refusing = { getItem: (): never => { throw new Error('denied'); }, setItem: (): never => { throw new Error('denied'); } };
+  for (const k of [null, refusing]) {
+    const c = new Settings(k);
+    c.setSystem('us');
+    c.setOperator('x');
+    assert.deepEqual([c.system, c.operator], ['us', 'x']);
+  }
+  a.setOperator('n'.repeat(99));
+  assert.equal(a.operator.length, 40);
 });
 
 test('numbers', () => {

@@ -6,7 +6,7 @@ import type { Display } from '../context';
 import { type View, attr, column, h, refill } from '../dom';
 import type { Alarm } from '../frames';
 import { clock, seconds } from '../time';
-import { fixed, significant } from '../units';
+import { alarmValue } from '../units';
 import { veil } from '../watch/display';
 
 const head = (...names: string[]): HTMLElement => h('thead', {}, h('tr', {}, ...names.map(column)));
@@ -23,15 +23,17 @@ export function alarmsPage(d: Display): View {
   const cover = veil(h('div', { class: 'page' },
     h('h1', {}, 'Alarms'),
     h('section', {}, h('h2', {}, 'Standing'), h('table', { class: 'list alarms' }, head('Priority', 'State', '>Raised, UTC', 'Alarm and caution', 'Response', '>Value', ''), now_)),
-    h('section', {}, h('h2', {}, 'Not annunciated: shelved, suppressed by design, out of service'), h('table', { class: 'list' }, head('Priority', 'State', '>Until', 'Alarm', 'Reason'), quiet)),
-    h('section', {}, h('h2', {}, 'History since this page was opened'), h('table', { class: 'list' }, head('>Time, UTC', 'Priority', 'Alarm', 'From', 'To', 'Note'), past))));
+    h('section', {}, h('h2', {}, 'Not annunciated: shelved, suppressed by design, out of service'), h('table', { class: 'list aside' }, head('Priority', 'State', '>Until', 'Alarm', 'Reason'), quiet)),
+    h('section', {}, h('h2', {}, 'History of this run, newest first'), h('table', { class: 'list past' }, head('>Time, UTC', 'Priority', 'Alarm', 'From', 'To', 'Note'), past))));
   const empty = (text: string, n: number): Node[] => [h('tr', {}, h('td', { colspan: String(n), class: 'extra' }, text))];
+
+  let gone = false;
 
   function ack(a: Alarm): Node {
     if (!d.acknowledger || !needsAcknowledge(a)) return h('span', { class: 'extra' }, a.acknowledged_by ? `by ${a.acknowledged_by}` : '');
     const state = d.acknowledger.state(a);
     const b = h('button', { class: 'ack', type: 'button', onclick: () => d.acknowledger?.send(a) }, state === 'pending' ? 'Acknowledging…' : 'Acknowledge');
-    attr(b, 'disabled', state === 'pending');
+    attr(b, 'disabled', state === 'pending' || gone);
     return h('div', {}, b, state !== 'idle' && state !== 'pending' ? h('div', { class: 'extra' }, state) : '');
   }
 
@@ -40,15 +42,17 @@ export function alarmsPage(d: Display): View {
     update(now) {
       cover.update(d.fresh(now));
       const m = d.model();
+      const kind = d.fresh(now).kind;
+      gone = kind === 'no_link' || kind === 'waiting';
       const list = standing(m.alarms.values());
-      refill(now_, list.map((a) => `${a.id}:${a.revision}:${d.acknowledger?.state(a)}`).join() || 'none', () => list.length === 0 ? empty('No alarm standing', 7) : list.map((a) => h('tr', { 'data-open': needsAcknowledge(a) },
+      refill(now_, list.map((a) => `${a.id}:${a.revision}:${d.acknowledger?.state(a)}`).join() + gone + d.units().system, () => list.length === 0 ? empty('No alarm standing', 7) : list.map((a) => h('tr', { 'data-open': needsAcknowledge(a) },
         h('td', {}, priorityBadge(a)),
-        h('td', {}, stateWord[a.state], a.first_out ? h('div', { class: 'extra' }, 'first out') : '', a.past ? h('div', { class: 'extra' }, 'past') : ''),
+        h('td', {}, stateWord[a.state], a.first_out && list.some((b) => b !== a && b.group === a.group) ? h('div', { class: 'extra' }, `first out${a.group && ` of ${a.group}`}`) : '', a.past ? h('div', { class: 'extra' }, 'past') : ''),
         h('td', { class: 'num' }, clock(seconds(a.raised))),
-        h('td', {}, h('b', {}, a.text || a.title), h('div', {}, a.caution), a.group ? h('div', { class: 'extra' }, `group ${a.group}`) : ''),
-        h('td', {}, a.response),
-        h('td', { class: 'num' }, a.unknown ? 'unknown' : a.value === null ? '–' : `${Number.isInteger(a.value) ? fixed(a.value, 0) : significant(a.value, 4)} ${a.unit}`),
-        h('td', {}, ack(a)))));
+        h('td', { class: 'what' }, h('b', {}, a.text || a.title), h('div', {}, a.caution)),
+        h('td', { class: 'response' }, a.response),
+        h('td', { class: 'num' }, a.unknown ? 'unknown' : a.value === null ? '–' : alarmValue(d.units(), a.value, a.unit, `${a.rule} ${a.title}`)),
+        h('td', { class: 'act' }, ack(a)))));
       const silent = [...m.alarms.values()].filter((a) => !isStanding(a));
       refill(quiet, silent.map((a) => `${a.id}:${a.revision}`).join() || 'none', () => silent.length === 0 ? empty('None', 5) : silent.map((a) => h('tr', {},
         h('td', {}, priorityBadge(a)), h('td', {}, stateWord[a.state]), h('td', { class: 'num' }, a.until ? clock(seconds(a.until)) : '–'), h('td', {}, a.title), h('td', {}, a.reason))));

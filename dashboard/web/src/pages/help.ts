@@ -8,13 +8,17 @@ const terms: [string, string][] = [
   ['Choke margin', 'NPR / choke NPR − 1 in percent, positive when choked. For the one-dimensional choke NPR it equals (p* − back pressure) / back pressure. ± is the 95 % uncertainty (U95); where the interval is not symmetric both ends are given.'],
   ['Choke state', 'Choked or unchoked by the best estimate, with hysteresis. Marginal: the uncertainty does not decide. No flow: below the resolution floor. Unknown: an input is missing, and the cause is named.'],
   ['Flow parameter', 'W √(R T0) / (A p0), without dimension. It rises with NPR and stays constant past the critical NPR.'],
-  ['Hollow and solid point', 'The hollow point is computed from pressures and temperature and lies on the curve by construction: it proves nothing about the flow. The solid point is drawn only where air flow and fuel flow are measured; its region holds 95 % if the errors of the two axes are independent, which a shared pressure makes only nearly true.'],
+  ['Hollow and solid point', 'The hollow point is computed from pressures and temperature and lies on the curve by construction: it proves nothing about the flow. The solid point is drawn only where air flow and fuel flow are measured; its region holds 95 % if the errors of the two axes are independent, which a shared pressure makes only nearly true. The figure beside it is the 95 % uncertainty of its flow, for a region that the point covers.'],
+  ['Choke line and its band', 'The dashed line is the choke NPR. The band around it is the 95 % uncertainty of the margin: while the point stands in it, the state is not decided by the measurement.'],
+  ['P(choked)', 'The probability that the throat is choked, from the uncertainty of the margin; on the Rig page. It is not given unless the uncertainty of the nozzle model is stated or the choke NPR calibrated. Marginal means between 2.5 and 97.5 %.'],
   ['W8', 'Nozzle flow Cd · A8 · φ · p0 / √(R T0), φ the ideal flow parameter of this gas.'],
   ['Gross thrust, computed', 'Momentum plus pressure thrust of the nozzle by the thrust basis in the rig file. It is not the load-cell reading.'],
   ['Indicated EGT', 'The harness value as the engine’s limits are written for it, without recovery or lag correction. Only it is held against the bands; the nozzle’s own gas temperature is a different number.'],
   ['Bands and allowance', 'A band is a limit with the time for which it may be exceeded. Start bands hold until idle is first reached, run bands always. An excursion ends only when EGT has been below the limit less the deadband for the re-arm time. Time that was not seen while the last good value was above the limit is counted and marked assumed.'],
   ['Spread', 'Hottest less coldest probe; none for a harness wired in parallel.'],
   ['Choke watch', 'The unchoke alarm acts only while the choke watch is armed, by rotor speed or by the test card.'],
+  ['Units', 'SI or US customary, chosen in the upper strip and kept in this browser. Everything is stored in SI. Alarm texts keep the units in which they were recorded; raw values are as they were received.'],
+  ['Operator', 'The name in the upper strip goes with every acknowledgement, mark and run that is started or ended from this page. Without one it is “console”. It is a note, not a proof of identity.'],
   ['Data age', 'Time since the newest measured value. The dash beside it moves once a second with the server: if it stands still, the page is not fed.'],
 ];
 
@@ -38,7 +42,7 @@ export function helpPage(): View {
         h('li', {}, '■ warning: immediate awareness and response. ▲ caution: immediate awareness, later response. ◆ advisory: awareness. ● note.'),
         h('li', {}, 'Hatched or dimmed with “–”: not present, or not to be believed; the cause is written beside it.'),
         h('li', {}, 'Grey page with large letters: the data link is gone. Thick frame and REPLAY: a stored run, not the rig.'))),
-      h('section', {}, h('h2', {}, 'Keys'), h('p', {}, 'Tab and Enter reach every control. In replay: space plays and pauses, ← and → step by scan, page up and page down jump to the next alarm or mark.'))),
+      h('section', {}, h('h2', {}, 'Keys'), h('p', {}, 'Tab and Enter reach every control. On Watch: M writes a mark, Enter sets it. In replay: space plays and pauses, ← and → step by scan, page up and page down jump to the next alarm or mark.'))),
     update: () => undefined,
     destroy: () => undefined,
   };

@@ -2,21 +2,24 @@
 
 import { priorityLook } from '../alarms';
 import { api } from '../api';
-import type { Display } from '../context';
+import type { Display, Taste } from '../context';
 import { type View, attr, h, text } from '../dom';
-import type { Frame, RunSummary } from '../frames';
-import type { Palette } from '../palette';
+import type { Frame, RunSummary, Series } from '../frames';
+import { firstChunk, reach, rowsOf } from '../history';
 import { Player, speeds } from '../player';
-import { seriesNames, seriesRows } from '../ring';
 import type { Flag } from '../state';
 import { dateClock, duration, seconds } from '../time';
-import { surface } from '../watch/canvas';
+import { font, surface } from '../watch/canvas';
 import { watchDisplay } from '../watch/display';
 
-/** Traces reach this far back, s. */
-const history = 600;
+interface Period { from: number; to: number; word: string } // seconds of the run
 
-export function replayPage(runID: string, rig: string, palette: () => Palette): View {
+/** Transitions of a state as the periods between them, the last one up to `end`. */
+export function periods(s: Series | undefined, end: number): Period[] {
+  return (s?.t ?? []).map((from, i) => ({ from, to: s?.t[i + 1] ?? end, word: s?.state?.[i] ?? '' }));
+}
+
+export function replayPage(runID: string, rig: string, taste: Taste): View {
   let player: Player | null = null;
   let run: RunSummary | null = null;
   let start = NaN;
@@ -24,7 +27,8 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
   let last = NaN;
   let events: Flag[] = [];
   let complete = false; // events holds those of the whole run
-  let choked: [number, number][] = []; // periods, seconds of the run
+  let choke: Period[] = [];
+  let phases: Period[] = [];
   let scrubbing: number | null = null;
   const over = new AbortController();
 
@@ -33,7 +37,7 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
   const speed = h('select', { 'aria-label': 'Replay speed', 'data-q': 'speed', onchange: () => { if (player) player.speed = Number(speed.value); } }, ...speeds.map((s) => h('option', { value: String(s) }, `${s}×`)));
   const clockText = h('span', { class: 'at', 'data-q': 'replay-clock' });
   const trouble = h('span', { class: 'trouble', role: 'status' });
-  const bar = surface('scrubshade', 'Choked periods, alarms and marks of the run');
+  const bar = surface('scrubshade', 'Choked periods, phases, alarms and marks of the run');
   const scrub = h('input', { type: 'range', min: '0', max: '1', step: '0.05', value: '0', 'aria-label': 'Position in the run', 'data-q': 'scrub',
     oninput: () => { scrubbing = Number(scrub.value); }, onchange: () => { scrubbing = null; go(Number(scrub.value)); } });
   const controls = h('div', { class: 'controls', role: 'group', 'aria-label': 'Replay controls' },
@@ -83,61 +87,65 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
   async function open(): Promise<void> {
     run = await api.runSummary(runID);
     start = seconds(run.started);
-    const length = run.duration_s ?? Math.max(1, Date.now() / 1000 - start); // a run that goes on: up to now
+    // A run that goes on: up to now, by the host's clock.
+    const length = run.duration_s ?? Math.max(1, seconds((await api.hello(rig)).host_time) - start);
+    const young = run.ended === null && length < firstChunk;
     attr(scrub, 'max', length);
     const p = new Player({
       async window(from, to, signal) {
         const frames: Frame[] = [];
-        await api.messages(runID, from, to, '', signal, (f) => frames.push(f) > 0);
+        await api.messages(runID, from, to, '', signal, (f) => { frames.push(f); });
         return frames;
       },
-      async before(to, signal) {
-        if (to <= 0) return [];
-        return seriesRows(await api.series(runID, seriesNames, Math.max(0, to - history), to, 1500, signal), start);
-      },
+      before: async (to, signal) => (to <= 0 ? [] : rowsOf(api, runID, start, Math.max(0, to - reach), to, young, signal)),
     }, start, length);
-    const display: Display = { rig, model: () => p.model, fresh: () => ({ kind: 'replay' }), palette, acknowledger: null };
+    const display: Display = { rig, model: () => p.model, fresh: () => ({ kind: 'replay' }), palette: taste.palette, units: taste.units, operator: () => '', acknowledger: null };
     inner = watchDisplay(display, null);
     body.replaceChildren(inner.el);
     player = p;
     void p.seek(0, now());
-    void overview(length);
+    void overview(length, young);
   }
 
-  /** Choke shading and flags of the whole run for the scrub bar. */
-  async function overview(length: number): Promise<void> {
-    try {
-      const s = (await api.series(runID, ['choke_state'], 0, length, 1500, over.signal)).series['choke_state'];
-      choked = (s?.t ?? []).flatMap((t, i) => (s?.state?.[i] === 'choked' ? [[t, s.t[i + 1] ?? length] as [number, number]] : []));
-    } catch { /* the bar then has no shading; the display itself has it */ }
+  /** Choke shading, phases and flags of the whole run for the scrub bar. */
+  async function overview(length: number, young: boolean): Promise<void> {
     const found: Flag[] = [];
-    let others = 0; // frames that were not asked for
     try {
       await api.messages(runID, 0, length + 1, 'alarm,mark', over.signal, (f) => {
         if (f.kind === 'alarm' && f.alarm.state === 'unacknowledged') found.push({ t: seconds(f.alarm.raised), kind: f.alarm.priority, text: f.alarm.title, id: f.alarm.id });
         if (f.kind === 'mark') found.push({ t: seconds(f.t), kind: 'mark', text: f.mark.text, id: `mark ${f.t}` });
-        events = found.sort((a, b) => a.t - b.t);
-        if (f.kind === 'operating_point') others++;
-        return (complete = others < 20_000); // a server that does not select kinds must not send a whole day
       });
-    } catch {
-      complete = false; // left page or lost server: what was found so far stands
-    }
+      events = found.sort((a, b) => a.t - b.t);
+      complete = true;
+      if (young) return; // no series is stored yet
+      const { series } = await api.series(runID, ['choke_state', 'phase'], 0, length + 1, 10, over.signal);
+      choke = periods(series['choke_state'], length);
+      phases = periods(series['phase'], length);
+    } catch { /* left page or lost server: the bar shows what was found, the display itself shows all */ }
   }
 
   function paintBar(length: number): void {
     const s = bar.begin();
     if (!s) return;
     const { c, width, height } = s;
-    const p = palette();
+    const p = taste.palette();
     const x = (t: number): number => 8 + (t / length) * (width - 16); // the thumb of the range input is 16 wide
     c.fillStyle = p.panel;
     c.fillRect(8, 0, width - 16, height);
     c.fillStyle = p.choked;
-    for (const [a, b] of choked) c.fillRect(x(a), 0, Math.max(1, x(b) - x(a)), height);
+    for (const k of choke) if (k.word === 'choked') c.fillRect(x(k.from), 0, Math.max(1, x(k.to) - x(k.from)), height);
+    c.font = font(11);
+    c.textBaseline = 'bottom';
+    c.textAlign = 'left';
+    for (const k of phases) {
+      c.fillStyle = p.edge;
+      c.fillRect(x(k.from), height - 14, 1, 14);
+      c.fillStyle = p.soft;
+      if (c.measureText(k.word).width < x(k.to) - x(k.from) - 6) c.fillText(k.word, x(k.from) + 4, height);
+    }
     c.textAlign = 'center';
     c.textBaseline = 'top';
-    c.font = '10px system-ui, sans-serif';
+    c.font = font(11, 600);
     for (const e of events) {
       c.fillStyle = e.kind === 'warning' ? p.warningInk : e.kind === 'caution' ? p.cautionInk : p.soft;
       c.fillText(e.kind === 'mark' ? '⚑' : priorityLook[e.kind].shape, x(e.t - start), 0);
@@ -157,7 +165,8 @@ export function replayPage(runID: string, rig: string, palette: () => Palette): 
       if (complete) player.model.flags = events.filter((e) => e.t <= start + (player as Player).position);
       const shown = scrubbing ?? player.position;
       if (scrubbing === null && Math.abs(Number(scrub.value) - shown) > 0.04) scrub.value = String(shown);
-      attr(scrub, 'aria-valuetext', `${duration(shown)} of ${duration(player.length)}`);
+      const phase = phases.find((k) => shown >= k.from && shown < k.to)?.word ?? '';
+      attr(scrub, 'aria-valuetext', `${duration(shown)} of ${duration(player.length)}${phase && `, ${phase}`}`);
       text(play, player.playing ? 'Pause' : 'Play');
       text(clockText, `${duration(shown)} of ${duration(player.length)} · ${dateClock(start + shown)} UTC`);
       text(trouble, player.problem ? `Stopped: ${player.problem}` : player.playing && player.waiting ? 'reading…' : '');

@@ -44,7 +44,7 @@ export function alarmLine(d: Display): View {
     if (d.acknowledger) {
       const sending = a ? d.acknowledger.state(a) : 'idle';
       text(button, sending === 'pending' ? 'Acknowledging…' : open ? 'Acknowledge' : 'Acknowledged');
-      attr(button, 'disabled', !open || sending === 'pending' || d.fresh(now).kind === 'no_link');
+      attr(button, 'disabled', !open || sending === 'pending' || d.fresh(now).kind === 'no_link' || d.fresh(now).kind === 'waiting');
       attr(button, 'data-hidden', a === null);
       const trouble = sending !== 'idle' && sending !== 'pending' ? sending : '';
       text(others, trouble || (list.length > 1 ? `${list.length - 1} other${list.length > 2 ? 's' : ''} standing` : a ? 'no others standing' : ''));

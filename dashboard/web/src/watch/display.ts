@@ -43,8 +43,9 @@ export function veil(content: HTMLElement): { el: HTMLElement; update(f: Freshne
   };
 }
 
-export function watchDisplay(d: Display, markForm: HTMLElement | null): View {
-  const parts = [alarmLine(d), throatPlane(d), numbers(d), traces(d, markForm), ledger(d)];
+/** `tools` are what an operator does from here; none in a replay. */
+export function watchDisplay(d: Display, tools: View | null): View {
+  const parts = [alarmLine(d), throatPlane(d), numbers(d), traces(d, tools?.el ?? null), ledger(d)];
   const [line, plane, figures, plots, egt] = parts as [View, View, View, View, View];
   const cover = veil(h('div', { class: 'display' }, line.el, h('div', { class: 'nozzle' }, plane.el, figures.el), plots.el, egt.el));
   return {
@@ -52,7 +53,11 @@ export function watchDisplay(d: Display, markForm: HTMLElement | null): View {
     update(now) {
       cover.update(d.fresh(now));
       for (const p of parts) p.update(now);
+      tools?.update(now);
     },
-    destroy() { for (const p of parts) p.destroy(); },
+    destroy() {
+      for (const p of parts) p.destroy();
+      tools?.destroy();
+    },
   };
 }

@@ -4,7 +4,8 @@
 import type { Display } from '../context';
 import { type View, attr, h, refill, style, text } from '../dom';
 import { believable } from '../state';
-import { celsius, fixed } from '../units';
+import { celsius, fixed, shown } from '../units';
+import { causeWord } from '../words';
 
 const usable = (quality: string): boolean => quality === 'good' || quality === 'held';
 /** Probe values older than this are not shown as present, ms of the page. */
@@ -18,10 +19,11 @@ export function ledger(d: Display): View {
   const spread = h('span', { class: 'value', 'data-q': 'spread' }, '–');
   const probesUsed = h('div', { class: 'extra' });
   const rows = h('tbody');
+  const [egtSign, spreadSign] = [h('span', { class: 'unit' }), h('span', { class: 'unit' })];
   const el = h('section', { class: 'ledger', 'aria-label': 'Exhaust gas temperature ledger' },
     h('div', { class: 'egt' },
-      h('div', { class: 'label' }, 'Indicated EGT'), h('div', { class: 'egtvalue' }, indicated, ' ', h('span', { class: 'unit' }, '°C')), egtCause,
-      h('div', { class: 'label' }, 'Spread'), h('div', {}, spread, ' ', h('span', { class: 'unit' }, 'K')), probesUsed),
+      h('div', { class: 'label' }, 'Indicated EGT'), h('div', { class: 'egtvalue' }, indicated, ' ', egtSign), egtCause,
+      h('div', { class: 'label' }, 'Spread'), h('div', {}, spread, ' ', spreadSign), probesUsed),
     h('div', { class: 'probes' }, bars, limits),
     h('div', { class: 'bands' }, h('table', {},
       h('thead', {}, h('tr', {}, ...['EGT band', 'limit', 'this excursion, of allowance', 'in run', 'peak', 'count'].map((t) => h('th', { scope: 'col' }, t)))),
@@ -36,15 +38,17 @@ export function ledger(d: Display): View {
     const fresh = d.fresh(now);
     const believed = believable(fresh);
     const p = believed ? m.point : null;
+    const { temperature, difference } = d.units();
+    const degrees = (k: number | null | undefined): string => shown(temperature, k);
     const probes = m.channels.filter((c) => c.station === 'egt');
     const top = Math.max(700, ...m.bands.map((b) => celsius(b.limit_k))) + 60;
     const share = (c: number): string => `${Math.min(100, Math.max(0, (c / top) * 100)).toFixed(1)}%`;
 
     const holding = m.bands.filter((b) => m.ledgers.find((l) => l.name === b.name)?.holds !== false);
-    refill(limits, `${top}|${holding.map((b) => b.name + b.limit_k).join()}`, () => [...holding].sort((a, b) => a.limit_k - b.limit_k).map((b, i, all) => {
+    refill(limits, `${top}|${temperature.sign}|${holding.map((b) => b.name + b.limit_k).join()}`, () => [...holding].sort((a, b) => a.limit_k - b.limit_k).map((b, i, all) => {
       // Limits lie close: the outer figures stand outside their lines.
       const side = i === 0 && all.length > 1 ? 'before' : i === all.length - 1 && i > 0 ? 'after' : 'over';
-      const mark = h('div', { class: `limit ${side}` }, h('span', {}, fixed(celsius(b.limit_k), 0)));
+      const mark = h('div', { class: `limit ${side}` }, h('span', {}, degrees(b.limit_k)));
       mark.style.left = share(celsius(b.limit_k));
       return mark;
     }));
@@ -59,31 +63,33 @@ export function ledger(d: Display): View {
     const current = believed && (m.replay || now - m.valuesAt < valuesTimeout);
     const readings = probes.map((c) => {
       const v = current ? m.values[c.id] : undefined;
-      return v && usable(v.quality) && v.value !== null ? celsius(v.value) : null;
+      return v && usable(v.quality) && v.value !== null ? v.value : null;
     });
     const hottest = readings.length > 1 ? readings.reduce<number>((best, v, i) => (v !== null && (best < 0 || v > (readings[best] as number)) ? i : best), -1) : -1;
     drawn.forEach((bar, i) => {
       const v = readings[i] ?? null;
       const quality = m.values[probes[i]?.id ?? '']?.quality ?? 'missing';
-      style(bar.fill, 'width', v === null ? '100%' : share(v));
+      style(bar.fill, 'width', v === null ? '100%' : share(celsius(v)));
       attr(bar.el, 'data-none', v === null);
       attr(bar.el, 'title', v === null ? (current ? quality.replaceAll('_', ' ') : 'not present') : null);
-      text(bar.value, fixed(v, 0));
+      text(bar.value, degrees(v));
       text(bar.mark, i === hottest ? '◂ hottest' : v === null && current ? quality.replaceAll('_', ' ') : '');
     });
 
     const egt = p?.egt_indicated_k;
-    text(indicated, typeof egt === 'number' ? fixed(celsius(egt), 0) : '–');
+    text(indicated, degrees(egt));
+    text(egtSign, temperature.sign);
     attr(indicated.parentElement as HTMLElement, 'data-none', typeof egt !== 'number');
-    text(egtCause, typeof egt === 'number' ? '' : p?.egt_cause ?? (p ? '' : 'not present'));
-    text(spread, fixed(p?.egt_spread_k, 0));
+    text(egtCause, typeof egt === 'number' ? '' : p ? causeWord(p.egt_cause) : 'not present');
+    text(spread, shown(difference, p?.egt_spread_k));
+    text(spreadSign, difference.sign);
     text(probesUsed, p ? `${p.egt_probes_used} of ${probes.length} probes used` : '');
 
-    refill(rows, m.ledgers.map((l) => l.name + l.kind).join(), () => {
+    refill(rows, `${temperature.sign}|${m.ledgers.map((l) => l.name + l.kind + l.limit_k).join()}`, () => {
       tableRows = new Map();
       return m.ledgers.map((l) => {
         const r = { el: h('tr'), fill: h('div', { class: 'fill' }), figure: h('span', { class: 'figure' }), run: h('td'), peak: h('td'), count: h('td') };
-        r.el.append(h('th', { scope: 'row' }, l.name.replaceAll('_', ' ')), h('td', {}, `${fixed(celsius(l.limit_k), 0)} °C`),
+        r.el.append(h('th', { scope: 'row' }, l.name.replaceAll('_', ' ')), h('td', {}, `${degrees(l.limit_k)} ${temperature.sign}`),
           h('td', {}, h('div', { class: 'used' }, h('div', { class: 'track' }, r.fill), r.figure)), r.run, r.peak, r.count);
         tableRows.set(l.name, r);
         return r.el;
@@ -99,7 +105,7 @@ export function ledger(d: Display): View {
       attr(r.el, 'data-level', l.exceeded ? 'exceeded' : l.over ? 'over' : null);
       text(r.figure, l.holds === false && !l.exceeded && !l.over ? 'does not hold now' : `${l.exceeded ? '■ exceeded ' : l.over ? '▲ above ' : ''}${fixed(l.elapsed_s, 1)} s ${l.allowance_s > 0 ? `of ${fixed(l.allowance_s, 1)} s` : '(none allowed)'}${l.assumed_s > 0 ? `, ${fixed(l.assumed_s, 1)} s assumed` : ''}`);
       text(r.run, `${fixed(l.run_total_s, 1)}${l.per_run_s > 0 ? ` of ${fixed(l.per_run_s, 0)}` : ''} s`);
-      text(r.peak, l.peak_k === null ? '–' : `${fixed(celsius(l.peak_k), 0)} °C`);
+      text(r.peak, l.peak_k === null ? '–' : `${degrees(l.peak_k)} ${temperature.sign}`);
       text(r.count, String(l.excursions));
     }
   }

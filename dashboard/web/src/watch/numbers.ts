@@ -2,9 +2,9 @@
 
 import type { Display } from '../context';
 import { type View, attr, h, text } from '../dom';
-import { believable, runSeconds } from '../state';
+import { activeRun, believable, runSeconds } from '../state';
 import { clock, duration } from '../time';
-import { fixed, kN, kPa, signed } from '../units';
+import { fixed, shown, signed, width } from '../units';
 import { sourceWord, stateLook, uncertainty } from '../words';
 
 function cell(label: string, name: string): { el: HTMLElement; label: HTMLElement; value: HTMLElement; unit: HTMLElement; extra: HTMLElement } {
@@ -45,11 +45,12 @@ export function numbers(d: Display): View {
     const m = d.model();
     const fresh = d.fresh(now);
     const p = believable(fresh) ? m.point : null;
+    const u = d.units();
     attr(el, 'data-dim', p === null || fresh.kind === 'catching_up');
     const look = stateLook(p);
     text(margin, signed(p?.choke_margin_percent, 1));
     text(marginU, uncertainty(p?.choke_margin_percent_u95, 1, p?.choke_margin_percent_low95, p?.choke_margin_percent_high95) || (typeof p?.choke_margin_percent === 'number' ? 'U95 not known' : ''));
-    text(marginPa, typeof p?.choke_margin_pa === 'number' ? `p* − back pressure ${signed(kPa(p.choke_margin_pa), 1)} kPa` : '');
+    text(marginPa, typeof p?.choke_margin_pa === 'number' ? `p* − back pressure ${signed(u.pressure.of(p.choke_margin_pa), u.pressure.decimals)} ${u.pressure.sign}` : '');
     attr(margin.parentElement as HTMLElement, 'data-none', (p?.choke_margin_percent ?? null) === null);
     text(shape, look.marginal ? '◐' : look.shape);
     text(word, look.word);
@@ -65,13 +66,14 @@ export function numbers(d: Display): View {
     };
     put(npr, fixed(p?.npr, 3), '', uncertainty(p?.npr_u95, 3));
     put(choke, fixed(p?.choke_npr, 3), '', p ? sourceWord(p.choke_npr_from) : '');
-    put(flow, fixed(p?.mass_flow_kg_s, 3), 'kg/s', uncertainty(p?.mass_flow_kg_s_u95, 3));
-    put(thrust, typeof p?.gross_thrust_n === 'number' ? fixed(kN(p.gross_thrust_n), 2) : '–', 'kN', `${typeof p?.gross_thrust_n_u95 === 'number' ? `${uncertainty(kN(p.gross_thrust_n_u95), 2)}, ` : ''}computed`);
+    put(flow, shown(u.flow, p?.mass_flow_kg_s), u.flow.sign, uncertainty(width(u.flow, p?.mass_flow_kg_s_u95), u.flow.decimals));
+    put(thrust, shown(u.force, p?.gross_thrust_n), u.force.sign, [uncertainty(width(u.force, p?.gross_thrust_n_u95), u.force.decimals), 'computed'].filter(Boolean).join(', '));
     put(phase, p ? p.phase : '–', '', p && !p.lit ? 'not lit' : '');
     put(armed, p ? (p.choke_armed ? '● armed' : '○ not armed') : '–', '', p && m.armedAbove !== null ? `above ${fixed(m.armedAbove, 0)} rpm` : '');
-    attr(run.el, 'title', m.run?.id);
-    put(run, m.run ? `${m.run.number}` : 'none', '', m.run ? m.run.id : 'between runs');
-    put(time, m.run && p ? duration(runSeconds(m)) : '–', '', m.run && p ? `${clock(m.newest)} UTC` : '');
+    const on = activeRun(m);
+    attr(run.el, 'title', on?.id);
+    put(run, on ? `${on.number}` : 'none', '', on ? on.id : m.run ? `${m.run.number} has ended` : 'between runs');
+    put(time, on && p ? duration(runSeconds(m)) : '–', '', on && p ? `${clock(m.newest)} UTC` : '');
   }
   return { el, update, destroy: () => undefined };
 }

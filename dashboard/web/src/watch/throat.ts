@@ -9,8 +9,8 @@ import { type View, attr } from '../dom';
 import type { PointFrame, ThroatCurve } from '../frames';
 import { columns } from '../ring';
 import { believable } from '../state';
-import { celsius, fixed, significant } from '../units';
-import { sourceWord, stateLook } from '../words';
+import { fixed, shown, significant } from '../units';
+import { causeWord, sourceWord, stateLook } from '../words';
 import { font, hatch, surface } from './canvas';
 
 const trailSeconds = 60;
@@ -19,8 +19,10 @@ const jointRegion = Math.sqrt(5.991) / 1.96;
 const nprColumn = columns.indexOf('npr');
 const flowColumn = columns.indexOf('flow_parameter');
 
+interface Gas { t: number; f: number; w: number }
+
 /** The gas that a curve was made for, rounded so that noise does not ask for a new one. */
-function gasOf(p: PointFrame | null): { t: number; f: number; w: number } | null {
+function gasOf(p: PointFrame | null): Gas | null {
   if (typeof p?.total_temperature_k !== 'number') return null;
   return {
     t: Math.min(1800, Math.max(200, Math.round(p.total_temperature_k / 10) * 10)),
@@ -33,7 +35,7 @@ export function throatPlane(d: Display): View {
   const plane = surface('throat', 'Throat plane');
   let curve: ThroatCurve | null = null;
   let curveGas = '';
-  let curveText = '';
+  let curveOf: Gas | null = null;
   let asking = false;
   let askedAt = -Infinity;
   let spokenAt = -Infinity;
@@ -48,7 +50,7 @@ export function throatPlane(d: Display): View {
     api.throatCurve(d.rig, gas.t, gas.f, gas.w).then((c) => {
       curve = c;
       curveGas = key;
-      curveText = `gas ${fixed(celsius(gas.t), 0)} °C, f ${fixed(gas.f, 3)}`;
+      curveOf = gas;
     }, () => undefined).finally(() => { asking = false; });
   }
 
@@ -112,11 +114,12 @@ export function throatPlane(d: Display): View {
     c.rect(left, top, right - left, bottom - top);
     c.clip();
     if (choke !== null) {
-      const u = typeof p?.choke_margin_percent_u95 === 'number' ? (p.choke_margin_percent_u95 / 100) * choke : 0;
-      if (u > 0) {
+      // Where the line lies against the point, within 95 %: the interval of the margin.
+      const [below, over] = live ? chokeBand(p) : [0, 0];
+      if (below + over > 0) {
         c.fillStyle = pal.data2;
         c.globalAlpha = 0.25;
-        c.fillRect(x(choke - u), top, Math.max(1, x(choke + u) - x(choke - u)), bottom - top);
+        c.fillRect(x(choke - below), top, Math.max(1, x(choke + over) - x(choke - below)), bottom - top);
         c.globalAlpha = 1;
       }
       c.strokeStyle = pal.text;
@@ -153,14 +156,16 @@ export function throatPlane(d: Display): View {
 
     if (live && npr !== null) {
       const independent = p.independent_flow_parameter ?? null;
+      let region = ''; // half width of the flow in percent, for a region that the dot covers
       if (independent !== null) {
         const flow = p.independent_flow_kg_s ?? null;
         const flowU = p.independent_flow_kg_s_u95 ?? null;
-        const uy = flow && flowU !== null ? (independent * flowU) / flow : null;
+        const share = flow !== null && flow > 0 && flowU !== null ? flowU / flow : null;
         const ux = p.npr_u95 ?? null;
-        if (ux !== null && uy !== null) {
+        if (ux !== null && share !== null) {
+          region = ` ± ${share < 0.0995 ? fixed(share * 100, 1) : share < 1 ? fixed(share * 100, 0) : '100 and more'} %`;
           c.beginPath();
-          c.ellipse(x(npr), y(independent), Math.max(2, x(1 + ux * jointRegion) - x(1)), Math.max(2, y(0) - y(uy * jointRegion)), 0, 0, 2 * Math.PI);
+          c.ellipse(x(npr), y(independent), Math.max(2, x(1 + ux * jointRegion) - x(1)), Math.max(2, y(0) - y(independent * share * jointRegion)), 0, 0, 2 * Math.PI);
           c.fillStyle = pal.data;
           c.globalAlpha = 0.22;
           c.fill();
@@ -169,7 +174,7 @@ export function throatPlane(d: Display): View {
           c.lineWidth = 1;
           c.stroke();
         }
-        dot(c, x(npr), y(independent), 3.5);
+        dot(c, x(npr), y(independent), 3);
         c.fillStyle = pal.data;
         c.fill();
       }
@@ -199,10 +204,11 @@ export function throatPlane(d: Display): View {
           c.fillText(words, px, py);
         };
         const [lx, align]: [number, CanvasTextAlign] = !flat ? [x(npr) + 14, 'left'] : toLeft ? [x(npr) + 8, 'right'] : [x(npr), 'center'];
+        const low = Math.min(y(anchor) + 2, bottom - 25); // a point on the axis keeps its labels inside
         const above = far && independent !== null && independent > anchor ? 22 : -18;
-        if (computed !== null) label('○ computed', pal.text, lx, y(anchor) + (flat ? above : 2), align);
-        if (independent !== null && far) label('● air + fuel flow', pal.data, x(npr) + (toLeft ? -9 : 9), Math.max(top + 9, y(independent)), toLeft ? 'right' : 'left');
-        else if (independent !== null) label('● air + fuel flow', pal.data, lx, y(anchor) + (flat ? 22 : 18), align);
+        if (computed !== null) label('○ computed', pal.text, lx, flat ? y(anchor) + above : low, align);
+        if (independent !== null && far) label(`● air + fuel flow${region}`, pal.data, x(npr) + (toLeft ? -9 : 9), Math.max(top + 9, y(independent)), toLeft ? 'right' : 'left');
+        else if (independent !== null) label(`● air + fuel flow${region}`, pal.data, lx, flat ? y(anchor) + 22 : low + 16, align);
       }
     }
     if (choke !== null) {
@@ -218,21 +224,22 @@ export function throatPlane(d: Display): View {
     c.restore();
 
     // Notes, lower right, where no gas curve passes.
-    const notes = [curveText && `${curveText}, Cd ${fixed(p?.discharge_coefficient, 3)}`];
+    const { temperature } = d.units();
+    const notes = [curveOf && `gas ${shown(temperature, curveOf.t)} ${temperature.sign}, f ${fixed(curveOf.f, 3)}, Cd ${fixed(p?.discharge_coefficient, 3)}`];
     if (p?.back_pressure_from === 'barometer') notes.push('back pressure from barometer');
     if (live && (p.independent_flow_parameter ?? null) === null) notes.push('no independent flow');
     c.font = font(12);
     c.fillStyle = pal.soft;
     c.textAlign = 'right';
     c.textBaseline = 'bottom';
-    notes.filter(Boolean).reverse().forEach((n, i) => c.fillText(n, right - 6, bottom - 5 - 15 * i));
+    notes.filter((n) => n !== null).reverse().forEach((n, i) => c.fillText(n, right - 6, bottom - 5 - 15 * i));
 
     if (!live || npr === null) {
       hatch(c, left, top, right - left, bottom - top, pal.soft);
       c.font = font(15, 600);
       c.textAlign = 'center';
       c.textBaseline = 'middle';
-      const why = live ? `–  ${p.cause ?? stateLook(p).cause}` : '–  no present operating point';
+      const why = live ? `–  ${causeWord(p.cause) || stateLook(p).cause}` : '–  no present operating point';
       const w = c.measureText(why).width + 24;
       c.fillStyle = pal.panel;
       c.fillRect((left + right) / 2 - w / 2, top + 24, w, 30);
@@ -250,6 +257,14 @@ export function throatPlane(d: Display): View {
   }
 
   return { el: plane.el, update, destroy: plane.destroy };
+}
+
+/** How far the choke line may lie below and above its value in NPR, so that the margin keeps its 95 % interval. */
+function chokeBand(p: PointFrame): [below: number, over: number] {
+  const { choke_npr: choke, choke_margin_percent: margin, choke_margin_percent_u95: u95, choke_margin_percent_low95: low, choke_margin_percent_high95: high } = p;
+  if (typeof choke !== 'number' || typeof margin !== 'number') return [0, 0];
+  if (typeof u95 === 'number') return [(u95 / 100) * choke, (u95 / 100) * choke];
+  return typeof low === 'number' && typeof high === 'number' ? [((high - margin) / 100) * choke, ((margin - low) / 100) * choke] : [0, 0];
 }
 
 function line(c: CanvasRenderingContext2D, x0: number, y0: number, x1: number, y1: number): void {

@@ -10,13 +10,13 @@ import { type Flag, type Model, believable } from '../state';
 import type { Palette } from '../palette';
 import { type Column, chokedSpans, columns, decimate, gapSeconds } from '../ring';
 import { clock } from '../time';
-import { celsius, fixed, signed } from '../units';
+import { type UnitSet, fixed, signed } from '../units';
 import { font } from './canvas';
 
 const spans = [60, 120, 300, 600];
 
 interface Line { column: Column; name: string; show: (v: number) => string }
-interface Plot {
+export interface Plot {
   title: string;
   unit: string;
   lines: Line[];
@@ -28,7 +28,8 @@ interface Plot {
 
 const same = (v: number): number => v;
 const none = (): { v: number; name: string }[] => [];
-const plots: Plot[] = [
+/** The plots of the Watch page in a viewer's units. */
+export const watchPlots = (u: UnitSet): Plot[] => [
   {
     title: 'Pressure ratio', unit: '', convert: same, cover: () => [1, 2.5], limits: none,
     lines: [{ column: 'npr', name: 'NPR', show: (v) => fixed(v, 3) }, { column: 'choke_npr', name: 'choke NPR', show: (v) => fixed(v, 3) }],
@@ -38,12 +39,12 @@ const plots: Plot[] = [
     lines: [{ column: 'choke_margin_percent', name: 'margin', show: (v) => signed(v, 1) }],
   },
   {
-    title: 'Indicated EGT', unit: '°C', convert: celsius, cover: (m) => [0, Math.max(800, ...m.bands.map((b) => celsius(b.limit_k) + 70))],
-    limits: (m) => m.bands.map((b) => ({ v: celsius(b.limit_k), name: `${fixed(celsius(b.limit_k), 0)} ${b.kind}` })),
+    title: 'Indicated EGT', unit: u.temperature.sign, convert: u.temperature.of, cover: (m) => [0, u.temperature.of(Math.max(1073, ...m.bands.map((b) => b.limit_k + 70)))],
+    limits: (m) => m.bands.map((b) => ({ v: u.temperature.of(b.limit_k), name: `${fixed(u.temperature.of(b.limit_k), 0)} ${b.kind}` })),
     lines: [{ column: 'egt_indicated_k', name: 'EGT', show: (v) => fixed(v, 0) }],
   },
   {
-    title: 'Flow', unit: 'kg/s', convert: same, cover: () => [0, 8], limits: none,
+    title: 'Flow', unit: u.flow.sign, convert: u.flow.of, cover: () => [0, u.flow.of(8)], limits: none,
     lines: [{ column: 'mass_flow_kg_s', name: 'W8', show: (v) => fixed(v, 2) }, { column: 'independent_flow_kg_s', name: 'air + fuel', show: (v) => fixed(v, 2) }],
   },
   {
@@ -71,14 +72,15 @@ export interface Traces extends View {
   frozen(): boolean;
 }
 
-export function traces(d: Display, markForm: HTMLElement | null): Traces {
+/** `tools` stand at the end of the bar; `make` gives the plots. */
+export function traces(d: Display, tools: HTMLElement | null, make: (u: UnitSet) => Plot[] = watchPlots): Traces {
   const host = h('div', { class: 'plots' });
   const at = h('span', { class: 'at' });
   let span = 120;
   let frozenAt = NaN;
   const choices = spans.map((s) => h('button', { type: 'button', 'aria-pressed': String(s === span), onclick: () => choose(s) }, `${s} s`));
   const freeze = h('button', { type: 'button', 'aria-pressed': 'false', onclick: () => { frozenAt = Number.isNaN(frozenAt) ? d.model().newest : NaN; } }, 'Freeze');
-  const bar = h('div', { class: 'tracebar' }, h('span', { class: 'label' }, 'Last'), ...choices, freeze, at, markForm ?? '');
+  const bar = h('div', { class: 'tracebar' }, h('span', { class: 'label' }, 'Last'), ...choices, freeze, at, tools ?? '');
   const el = h('section', { class: 'traces', 'aria-label': 'Traces' }, bar, host);
 
   function choose(s: number): void {
@@ -89,12 +91,13 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
   interface Row { el: HTMLElement; box: HTMLElement; width: number; plot: Plot; chart: uPlot; values: HTMLElement[] }
   let rows: Row[] = [];
   let pal: Palette | null = null;
+  let units: UnitSet | null = null;
   let [width, height] = [0, 0];
   let shading: [number, number][] = [];
   let flags: Flag[] = [];
   let hover: number | null = null; // time under the cursor, s
   const sync = uPlot.sync(`traces ${Math.random()}`);
-  const axisHeight = 30;
+  const axisHeight = 24;
 
   const observer = new ResizeObserver(([entry]) => {
     if (!entry) return;
@@ -114,9 +117,10 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
     });
   }
 
-  function build(p: Palette): void {
+  function build(p: Palette, u: UnitSet): void {
     for (const r of rows) r.chart.destroy();
     host.replaceChildren();
+    const plots = make(u);
     rows = plots.map((plot, i) => {
       const lastRow = i === plots.length - 1;
       const values = plot.lines.map(() => h('span', { class: 'value' }, '–'));
@@ -218,8 +222,7 @@ export function traces(d: Display, markForm: HTMLElement | null): Traces {
   }
 
   function update(now: number): void {
-    const palette = d.palette();
-    if (palette !== pal) build((pal = palette));
+    if (d.palette() !== pal || d.units() !== units) build((pal = d.palette()), (units = d.units()));
     const m = d.model();
     const isFrozen = !Number.isNaN(frozenAt);
     const end = isFrozen ? frozenAt : m.newest;
