@@ -236,7 +236,11 @@ func (m *Mixture) TFromS0(s, guess float64) float64 {
 		step := (want - p.s(t, x)) / cp
 		step -= step * step * t * p.cpSlope(t) / (2 * cp)
 		x += step
-		t = math.Exp(x)
+		if math.Abs(step) <= 2e-2 {
+			t *= 1 + step*(1+step/2*(1+step*(1.0/3)*(1+step/4*(1+step*(1.0/5)*(1+step*(1.0/6)))))) // e^step to 1e-15
+		} else {
+			t = math.Exp(x)
+		}
 		if math.Abs(step) <= 1e-5 {
 			break
 		}

@@ -100,12 +100,15 @@ type State struct {
 // Result is everything computed. Flow and thrust are NaN where the throat area is
 // not known.
 type Result struct {
-	Regime  Regime
-	Choked  bool // npr ≥ choke npr, without hysteresis; false if there is no flow
-	Throat  State
-	Exit    State   // Throat for a convergent nozzle
-	NPR     float64 // p8/pb
-	NPRRake float64 // p7/pb
+	Regime Regime
+	Choked bool // npr ≥ choke npr, without hysteresis; false if there is no flow
+	Throat State
+	Exit   State // Throat for a convergent nozzle
+	// Expanded is the state after isentropic expansion to back pressure, supersonic
+	// beyond the critical npr: where a subsonic flow is, and where full expansion leads.
+	Expanded State
+	NPR      float64 // p8/pb
+	NPRRake  float64 // p7/pb
 
 	CriticalNPR         float64 // one-dimensional, at which the throat becomes sonic
 	ChokeNPR            float64 // CriticalNPR, or Config.ChokeNPR
@@ -114,6 +117,7 @@ type Result struct {
 	MarginPa            float64 // p8/choke npr − pb: p* − pb for a convergent nozzle without calibration
 	CriticalPressure    float64 // p*, Pa
 	CriticalTemperature float64 // T*, K
+	CriticalVelocity    float64 // a*, m/s
 	ShockAtExitNPR      float64 // second critical npr; NaN for a convergent nozzle
 	DesignNPR           float64 // third critical npr; NaN for a convergent nozzle
 
@@ -164,34 +168,63 @@ func New(c Config) (*Nozzle, error) {
 	return n, nil
 }
 
+// Line is what a nozzle's flow depends on besides the pressures: gas, total
+// temperature and areas, with the states that follow from them. Whoever evaluates
+// several pressures at one of them spares their computation.
+type Line struct {
+	expansion    expansion
+	throat, exit float64 // m²
+}
+
+// Line prepares the temperature and the areas of in; its pressures are not read. g must
+// stay as it is for as long as the line is used. The error is ErrInput or ErrArea.
+func (n *Nozzle) Line(g *gas.Mixture, in Inputs) (l Line, err error) {
+	if !(in.TotalTemperature >= 50 && in.TotalTemperature <= 6000 && g.Valid()) {
+		return l, ErrInput
+	}
+	l.throat, l.exit = n.areas(in)
+	l.expansion = newExpansion(g, in.TotalTemperature)
+	if n.config.Kind == ConvergentDivergent {
+		ratio := l.exit / l.throat
+		if !(ratio >= 1) {
+			return l, ErrArea
+		}
+		l.expansion.diverge(ratio)
+	}
+	return l, nil
+}
+
+// Divergent reports whether the exit is larger than the throat.
+func (l *Line) Divergent() bool { return l.expansion.divergent }
+
 // Evaluate gives the flow for one instant. g and in are not kept. The error is
 // ErrInput or ErrArea; a state outside the model's range is not an error but a
 // warning.
 func (n *Nozzle) Evaluate(g *gas.Mixture, in Inputs) (Result, error) {
-	c := &n.config
-	p7, pb, t0 := float64(in.TotalPressure), float64(in.BackPressure), in.TotalTemperature
-	if !(p7 > 0 && pb > 0 && p7 < math.Inf(1) && pb < math.Inf(1) && t0 >= 50 && t0 <= 6000 && g.Valid()) {
+	l, err := n.Line(g, in)
+	if err != nil {
+		return Result{}, err
+	}
+	return n.On(&l, in.TotalPressure, in.BackPressure)
+}
+
+// On gives the flow along a line of this nozzle at the pressures p7 and pb. The
+// error is ErrInput.
+func (n *Nozzle) On(l *Line, total, back unit.Absolute) (Result, error) {
+	p7, pb := float64(total), float64(back)
+	if !(p7 > 0 && pb > 0 && p7 < math.Inf(1) && pb < math.Inf(1)) {
 		return Result{}, ErrInput
 	}
-	throat, exit := n.areas(in)
-	ratio := exit / throat
-	if c.Kind == ConvergentDivergent && !(ratio >= 1) {
-		return Result{}, ErrArea
-	}
+	c, x, throat, exit := &n.config, &l.expansion, l.throat, l.exit
+	g, t0 := x.g, x.t0
 	p8 := p7 * (1 - c.DuctLoss)
-	critical := g.Critical(t0)
-	x := expansion{g: g, t0: t0, h0: g.H(t0), s0: g.S0(t0), critical: critical, first: 1 / critical.PressureRatio, second: math.NaN(), third: math.NaN()}
-	if c.Kind == ConvergentDivergent {
-		x.diverge(ratio)
-	}
-
 	r := Result{
 		NPR: p8 / pb, NPRRake: p7 / pb,
 		CriticalNPR: x.first, ChokeNPR: x.first,
-		CriticalPressure: p8 * critical.PressureRatio, CriticalTemperature: critical.Temperature,
+		CriticalPressure: p8 * x.critical.PressureRatio, CriticalTemperature: x.critical.Temperature, CriticalVelocity: x.critical.Velocity,
 		ShockAtExitNPR: x.second, DesignNPR: x.third,
 		TotalPressure: p8, ThroatArea: throat,
-		GammaTotal: g.Gamma(t0), GasConstant: g.R(),
+		GammaTotal: x.total.Gamma, GasConstant: g.R(),
 	}
 	if c.ChokeNPR > 0 {
 		r.ChokeNPR, r.ChokeCalibrated = c.ChokeNPR, true
@@ -214,7 +247,7 @@ func (n *Nozzle) Evaluate(g *gas.Mixture, in Inputs) (Result, error) {
 			r.Warnings |= PressureOrder
 		}
 		r.Throat = State{Pressure: pb, Temperature: t0}
-		r.Exit = r.Throat
+		r.Exit, r.Expanded = r.Throat, r.Throat
 		r.MassFlow = 0 * throat // NaN if the area is not known
 		r.GrossThrust, r.GrossThrustNozzleIdeal, r.GrossThrustFullyExpanded = r.MassFlow, r.MassFlow, r.MassFlow
 		r.GasWarnings = g.Warnings(t0, p8, t0)
@@ -224,13 +257,24 @@ func (n *Nozzle) Evaluate(g *gas.Mixture, in Inputs) (Result, error) {
 		r.Warnings |= CoefficientRange
 	}
 	r.Choked = r.NPR >= r.ChokeNPR
-	f := x.flow(r.NPR, ratio)
+	expanded := x.at(r.NPR)
+	f := x.flow(r.NPR, expanded)
 	r.Regime, r.FlowParameter = f.regime, f.throat.flux
-	r.Throat, r.Exit = f.throat.state(g, p8), f.exit.state(g, p8)
-	if f.exit.p == 1/r.NPR {
-		r.Exit.Pressure = pb
-		if c.Kind == Convergent {
-			r.Throat.Pressure = pb
+	r.Expanded = expanded.state(g, p8)
+	r.Expanded.Pressure = pb
+	r.Throat = r.Expanded
+	if f.throat != expanded {
+		r.Throat = f.throat.state(g, p8)
+	}
+	switch f.exit {
+	case expanded:
+		r.Exit = r.Expanded
+	case f.throat:
+		r.Exit = r.Throat
+	default:
+		r.Exit = f.exit.state(g, p8)
+		if f.regime == ShockInside {
+			r.Exit.Pressure = pb
 		}
 	}
 	r.GasWarnings = g.Warnings(t0, p7, f.exit.t)
@@ -243,12 +287,13 @@ func (n *Nozzle) Evaluate(g *gas.Mixture, in Inputs) (Result, error) {
 
 	ideal := f
 	if npr != r.NPR {
-		ideal = x.flow(npr, ratio)
+		expanded = x.at(npr)
+		ideal = x.flow(npr, expanded)
 	}
 	root := math.Sqrt(g.R() * t0)
 	r.MassFlow = r.Discharge * throat * ideal.throat.flux * p0 / root
 	r.GrossThrustNozzleIdeal = r.Thrust * (r.MassFlow*ideal.exit.v + r.Discharge*exit*(ideal.exit.p*p0-pb))
-	r.GrossThrustFullyExpanded = r.Thrust * r.MassFlow * x.at(npr).v
+	r.GrossThrustFullyExpanded = r.Thrust * r.MassFlow * expanded.v
 	r.GrossThrust = r.GrossThrustNozzleIdeal
 	if c.Basis == FullyExpanded {
 		r.GrossThrust = r.GrossThrustFullyExpanded
