@@ -174,14 +174,16 @@ func (c *Core) Header() *RunHeader {
 
 // Cut gives the batch gathered so far, or nil when there is none, and begins a
 // new one. A batch that begins or ends a run must be cut before the next record:
-// Due says so. A chunk is closed when it is ChunkFor old.
+// Due says so. A chunk is closed when it is ChunkFor old, and with it goes a
+// checkpoint: so also when a configuration has closed one, as after each boot.
+// What a restart steps again stays short, however often there is one.
 func (c *Core) Cut() (*Batch, error) {
 	b := c.batch
 	if len(b.Records) == 0 {
 		return nil, nil //nolint:nilnil // nothing to store is no error
 	}
 	now := c.State.Host
-	if now-c.opened >= c.ChunkFor || b.End != nil {
+	if now-c.opened >= c.ChunkFor || b.End != nil || len(b.Columns) > 0 {
 		full := b.End != nil || !c.State.RunActive && now-c.full >= fullEvery
 		if err := c.checkpoint(full); err != nil {
 			return nil, err

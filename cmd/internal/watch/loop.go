@@ -6,7 +6,6 @@ import (
 	"errors"
 	"fmt"
 	"log/slog"
-
 	"time"
 
 	"throatwatch/ingest"
