@@ -262,9 +262,13 @@ func (n *Nozzle) On(l *Line, total, back unit.Absolute) (Result, error) {
 	r.Regime, r.FlowParameter = f.regime, f.throat.flux
 	r.Expanded = expanded.state(g, p8)
 	r.Expanded.Pressure = pb
-	r.Throat = r.Expanded
-	if f.throat != expanded {
+	switch {
+	case f.throat == expanded:
+		r.Throat = r.Expanded
+	case f.regime == Subsonic:
 		r.Throat = f.throat.state(g, p8)
+	default:
+		r.Throat = State{Mach: 1, Pressure: r.CriticalPressure, Temperature: r.CriticalTemperature, Velocity: r.CriticalVelocity}
 	}
 	switch f.exit {
 	case expanded:
@@ -341,3 +345,6 @@ func (b ThrustBasis) String() string {
 	}
 	return "nozzle-ideal"
 }
+
+// ChokeCalibrated reports whether the choke npr is that of a calibration.
+func (n *Nozzle) ChokeCalibrated() bool { return n.config.ChokeNPR > 0 }
