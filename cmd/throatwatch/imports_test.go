@@ -32,7 +32,7 @@ var only = map[string]map[string][]string{
 
 // pure lists packages that compute and nothing else.
 var pure = []string{
-	"monitor", "monitor/unit", "monitor/gas", "monitor/nozzle", "monitor/uncertainty", "monitor/calib", "monitor/phase",
+	"monitor", "monitor/unit", "monitor/gas", "monitor/nozzle", "monitor/uncertainty", "monitor/calib", "monitor/phase", "monitor/steady",
 	"monitor/egt", "monitor/align", "monitor/compute", "monitor/archive", "rules/alarm", "rules",
 }
 
