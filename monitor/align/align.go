@@ -9,23 +9,34 @@
 //
 // A scan is closed by the record that makes it complete: every channel that has
 // lately been in each scan has a sample at or after T. A channel that fails to
-// come is waited for until Lateness has passed: in host time, and while a
-// backlog comes in after a connect, in event time; so is every scan for a while
-// after samples of a channel came out of order. While no session is connected
-// scans wait: what the broker keeps will still come.
+// come is waited for until Lateness has passed in host time; so is every scan for
+// a while after samples of a channel came out of order.
+//
+// While no session is connected scans wait: what the broker keeps will still
+// come. While that backlog comes in after a connect, Lateness counts in event
+// time, by the source that is furthest behind: several sessions bring theirs in
+// turns. Once a source is live again the others are waited for at most
+// gatherFor after the connect.
 //
 // A sample of a scan that is closed already goes into the oldest open one if it
 // is late by no more than Lateness, or if it is the newest of its channel and
 // younger than the hold time: a slow channel from a slow source must not go
 // stale because fast ones close scans. Every other late sample is counted and
-// not used.
+// not used. Nor is one that is further ahead of the oldest open scan than the
+// table may grow; it is counted as one of the future.
+//
+// The clock of a source is not believed when it is ahead of ours, was never set,
+// or lags in step with ours by so much that its samples come too late. Its
+// samples count at receive time then.
 //
 // All that depends on past records is in State; an Aligner holds only what
 // follows from the configuration, and buffers.
 package align
 
 import (
+	"maps"
 	"math"
+	"slices"
 	"strings"
 
 	"throatwatch/ingest"
@@ -35,14 +46,16 @@ import (
 )
 
 const (
-	slotsAtFirst = 64      // open intervals kept before the table grows
-	slotsAtMost  = 1 << 14 // 13 min at 20 scans/s: a channel further ahead closes scans
-	bridge       = int64(120e9)
-	streakFull   = 4           // scans in a row that make a channel expected
-	patience     = int64(10e9) // host time for which scans wait after samples came out of order
-	settle       = int64(2e9)  // host time without a sample of the past that ends a backlog
-	settled      = int64(5e8)  // lag beyond Lateness that makes a sample one of the past
-	suspectFor   = int64(3e9)  // host time over which a lagging clock is compared with ours
+	slotsAtFirst = 64                 // open intervals kept before the table grows
+	slotsAtMost  = 1 << 14            // 13 min at 20 scans/s, and no more
+	bridge       = int64(120e9)       // a gap without any data that is longer makes no scans
+	streakFull   = 4                  // scans in a row that make a channel expected
+	patience     = int64(10e9)        // host time for which scans wait after samples came out of order
+	settle       = int64(2e9)         // host time without a sample of the past that ends a backlog, or of an expected channel after a connect
+	gatherFor    = int64(10e9)        // host time after a connect for which live sources wait for those behind
+	suspectFor   = int64(3e9)         // host time over which a lagging clock is compared with ours
+	neverSet     = int64(946684800e9) // 2000-01-01: a clock before it was never set
+	largest      = 1e290              // a raw value beyond it is none; below it no mean overflows
 )
 
 // Acc gathers the samples of one channel in one interval.
@@ -66,7 +79,9 @@ type SourceState struct {
 	Topic        string
 	Messages     uint64
 	Host         int64 // host time of its newest message
-	Skew         int64 // host − event time of its newest sample, ns
+	Skew         int64 // host time − its own clock at its newest sample, ns; to 1970 at most
+	Event        int64 // time at which its newest sample counts
+	Hold         int64 // shortest hold time of its channels, 0 = not known
 	Skewed       bool  // clock not believed: host time is used
 	SuspectHost  int64 // start of the comparison, 0 = none
 	SuspectEvent int64
@@ -80,8 +95,9 @@ type State struct {
 	Base     int    // row of the oldest open interval in Table
 	Rows     int    // rows of Table
 	Table    []Acc  // Rows × channels, a ring of rows
-	MaxEvent int64  // newest event time of a believed clock
+	MaxEvent int64  // newest time at which a sample counts, not ahead of host time
 	Backlog  int64  // host time until which a backlog is expected, 0 = none
+	Up       int64  // host time of the newest connect
 	Patient  int64  // host time until which scans wait for samples out of order
 	Sessions []Session
 	Channels []ChannelState
@@ -130,22 +146,44 @@ func New(cfg Config) *Aligner {
 	return a
 }
 
-// Reset fits the state to the configuration: channels that keep their place
-// keep their past.
+// Reset fits the state to the configuration, which was from before: a channel
+// with the same raw values keeps its past and its samples in open scans. Samples
+// of one that is gone are counted as of an unknown channel.
 func (a *Aligner) Reset(s *State, from []Channel) {
-	old := s.Channels
-	s.Channels = make([]ChannelState, len(a.cfg.Channels))
-	for i, c := range a.cfg.Channels {
-		for j, o := range from {
-			if o.ID == c.ID && o.Raw == c.Raw && j < len(old) {
-				s.Channels[i] = old[j]
-			}
-		}
-	}
+	n := len(a.cfg.Channels)
+	old := *s
+	s.Channels = make([]ChannelState, n)
 	s.Base, s.Rows = 0, slotsAtFirst
-	s.Table = make([]Acc, s.Rows*len(a.cfg.Channels))
+	s.Table = make([]Acc, s.Rows*n)
 	if s.Next != 0 {
 		s.Next = ceil(s.Next, a.cfg.Period)
+	}
+	s.Sessions = slices.DeleteFunc(s.Sessions, func(se Session) bool {
+		return !slices.ContainsFunc(a.cfg.Inputs, func(in Input) bool { return in.Filter == se.Filter })
+	})
+	for i := range s.Sources {
+		s.Sources[i].Hold = 0
+	}
+	for j := range min(len(from), len(old.Channels)) {
+		i := slices.IndexFunc(a.cfg.Channels, func(c Channel) bool { return c.ID == from[j].ID && c.Raw == from[j].Raw })
+		if i >= 0 {
+			s.Channels[i] = old.Channels[j]
+		}
+		for k := range old.Rows {
+			acc := old.Table[(old.Base+k)%old.Rows*len(old.Channels)+j]
+			switch {
+			case acc.N == 0:
+			case i < 0:
+				s.Counters[ingest.ReasonUnknownChannel] += uint64(acc.N)
+			default:
+				// The same row, but for another period.
+				row := max(0, (acc.Newest-(s.Next-a.cfg.Period)-1)/a.cfg.Period)
+				to := a.slot(s, i, min(row, slotsAtMost-1))
+				to.Sum += acc.Sum
+				to.N += acc.N
+				to.Newest = max(to.Newest, acc.Newest)
+			}
+		}
 	}
 }
 
@@ -169,9 +207,7 @@ func (a *Aligner) topic(topic string) topicInfo {
 	}
 	if own > 0 {
 		info.byName = make(map[string]int, len(a.shared)+own)
-		for name, i := range a.shared {
-			info.byName[name] = i
-		}
+		maps.Copy(info.byName, a.shared)
 		for i, c := range a.cfg.Channels {
 			if c.Topic == topic {
 				info.byName[c.Name] = i
@@ -279,9 +315,21 @@ func (a *Aligner) sample(s *State, src *SourceState, info topicInfo, sm *ingest.
 		}
 		v = c.Raw.FromSI(u.ToSI(v))
 	}
+	if !(math.Abs(v) < largest) {
+		s.Counters[ingest.ReasonNotFinite]++
+		return
+	}
+	if src.Hold == 0 || c.Hold < src.Hold {
+		src.Hold = c.Hold
+	}
 	t := host
 	if sm.Time != ingest.NoTime {
 		t = a.eventTime(s, src, sm.Time, host)
+	}
+	src.Event = t
+	s.MaxEvent = max(s.MaxEvent, min(t, host))
+	if s.Backlog != 0 {
+		a.settle(s, src, host)
 	}
 	a.place(s, ch, t, host, v)
 }
@@ -291,46 +339,50 @@ func (a *Aligner) sample(s *State, src *SourceState, info topicInfo, sm *ingest.
 // clock behind is a backlog if it catches up with ours, and wrong if it runs in
 // step with ours: that takes suspectFor to tell.
 func (a *Aligner) eventTime(s *State, src *SourceState, t, host int64) int64 {
-	src.Skew = host - t
+	src.Skew = host - max(t, 0)
+	limit := a.lag(src)
 	switch {
-	case src.Skew < -a.cfg.MaxFuture:
-		s.Counters[ingest.ReasonFuture]++
+	case t < neverSet, src.Skew < -a.cfg.MaxFuture:
 		src.Skewed = true
-		return host
-	case src.Skew <= a.cfg.MaxPast:
-		if src.Skew <= a.cfg.MaxPast/2 || !src.Skewed {
+	case src.Skew <= limit:
+		if !src.Skewed || src.Skew <= limit/2 && src.Skew >= -a.cfg.MaxFuture/2 {
 			src.Skewed, src.SuspectHost = false, 0
-			if s.Backlog != 0 {
-				a.settle(s, src.Skew, host)
-			}
-			s.MaxEvent = max(s.MaxEvent, t)
-			return t
 		}
 	case src.Skewed:
 	case src.SuspectHost == 0:
 		src.SuspectHost, src.SuspectEvent = host, t
 	case host-src.SuspectHost >= suspectFor:
 		pace := float64(t-src.SuspectEvent) / float64(host-src.SuspectHost)
-		if pace < 1.5 {
-			src.Skewed = true
-		}
+		src.Skewed = pace < 1.5
 		src.SuspectHost, src.SuspectEvent = host, t
 	}
-	if src.Skewed {
+	switch {
+	case !src.Skewed:
+		return t
+	case src.Skew < 0:
+		s.Counters[ingest.ReasonFuture]++
+	default:
 		s.Counters[ingest.ReasonPast]++
-		return host
 	}
-	if s.Backlog != 0 {
-		a.settle(s, src.Skew, host)
-	}
-	s.MaxEvent = max(s.MaxEvent, t)
-	return t
+	return host
+}
+
+// lag gives by how much a live source may be behind: beyond it the samples of its
+// fastest channel come too late for every scan.
+func (a *Aligner) lag(src *SourceState) int64 {
+	return min(a.cfg.MaxPast, a.cfg.Lateness+src.Hold)
+}
+
+// behind tells whether what a source brings is a backlog, as far as it can be told
+// from a wrong clock.
+func (a *Aligner) behind(src *SourceState) bool {
+	return !src.Skewed && src.Host-src.Event > a.lag(src)
 }
 
 // settle moves the end of an expected backlog: a sample of the past says that
 // more will come, one of now that there may be none.
-func (a *Aligner) settle(s *State, lag, host int64) {
-	if lag > a.cfg.Lateness+settled {
+func (a *Aligner) settle(s *State, src *SourceState, host int64) {
+	if a.behind(src) {
 		s.Backlog = max(s.Backlog, host+settle)
 	} else {
 		s.Backlog = min(s.Backlog, host+settle)
@@ -341,7 +393,7 @@ func (a *Aligner) settle(s *State, lag, host int64) {
 func (a *Aligner) place(s *State, ch int, t, host int64, v float64) {
 	p := a.cfg.Period
 	if s.Next == 0 {
-		s.Next = ceil(t, p)
+		s.Next = ceil(min(t, host), p)
 	}
 	cs := &s.Channels[ch]
 	if t < cs.Newest {
@@ -354,38 +406,80 @@ func (a *Aligner) place(s *State, ch int, t, host int64, v float64) {
 			return
 		}
 	} else {
-		if t-s.Next > bridge && s.empty() {
-			next := ceil(t, p)
-			s.Skipped += uint64((next - s.Next) / p)
-			s.Next = next
+		if s.Backlog == 0 {
+			a.skip(s, t)
 		}
 		row = (t - (s.Next - p) - 1) / p
 	}
-	if row >= int64(s.Rows) {
-		if row >= slotsAtMost { // a clock this far ahead is not waited for
-			s.Counters[ingest.ReasonFuture]++
-			row = slotsAtMost - 1
-		}
-		for int64(s.Rows) <= row {
-			a.grow(s)
-		}
+	cs.Newest = max(cs.Newest, t)
+	if row >= slotsAtMost {
+		s.Counters[ingest.ReasonFuture]++
+		return
 	}
-	n := len(a.cfg.Channels)
-	acc := &s.Table[(s.Base+int(row))%s.Rows*n+ch]
+	acc := a.slot(s, ch, row)
 	acc.Sum += v
 	acc.N++
 	acc.Newest = max(acc.Newest, t)
-	cs.Newest = max(cs.Newest, t)
 	s.Samples++
 }
 
-func (s *State) empty() bool {
-	for i := range s.Table {
-		if s.Table[i].N > 0 {
+// slot gives the place of a channel in row after the oldest open one.
+func (a *Aligner) slot(s *State, ch int, row int64) *Acc {
+	for int64(s.Rows) <= row {
+		a.grow(s)
+	}
+	return &s.Table[(s.Base+int(row))%s.Rows*len(a.cfg.Channels)+ch]
+}
+
+// empty tells whether the row k after the oldest open one has no sample.
+func (s *State) empty(k int) bool {
+	n := len(s.Channels)
+	row := s.Table[(s.Base+k)%s.Rows*n:][:n]
+	for i := range row {
+		if row[i].N > 0 {
 			return false
 		}
 	}
 	return true
+}
+
+// skip leaves out the scans of a gap without any data, if it is longer than
+// bridge, up to the first sample or else to the time t.
+func (a *Aligner) skip(s *State, t int64) {
+	p := a.cfg.Period
+	if t-s.Next <= bridge {
+		return
+	}
+	k := 0
+	for k < s.Rows && s.empty(k) {
+		k++
+	}
+	next := s.Next + int64(k)*p
+	if k == s.Rows {
+		next = ceil(t, p)
+	}
+	if next-s.Next > bridge {
+		s.Skipped += uint64((next - s.Next) / p)
+		s.Next = next
+		s.Base = (s.Base + k) % s.Rows
+	}
+}
+
+// shrink gives the room back that a backlog has taken.
+func (a *Aligner) shrink(s *State) {
+	rows := s.Rows
+	for rows > 0 && s.empty(rows-1) {
+		rows--
+	}
+	if s.Rows == slotsAtFirst || rows > slotsAtFirst {
+		return
+	}
+	n := len(s.Channels)
+	table := make([]Acc, slotsAtFirst*n)
+	for k := range rows {
+		copy(table[k*n:], s.Table[(s.Base+k)%s.Rows*n:][:n])
+	}
+	s.Table, s.Base, s.Rows = table, 0, slotsAtFirst
 }
 
 func (a *Aligner) grow(s *State) {
@@ -399,7 +493,7 @@ func (a *Aligner) grow(s *State) {
 // Connect notes that a session is up or down.
 func (a *Aligner) Connect(s *State, filter string, up bool, host int64) {
 	if up {
-		s.Backlog = host + a.cfg.Backlog
+		s.Backlog, s.Up = host+a.cfg.Backlog, host
 	}
 	for i := range s.Sessions {
 		if s.Sessions[i].Filter == filter {
@@ -410,9 +504,12 @@ func (a *Aligner) Connect(s *State, filter string, up bool, host int64) {
 	s.Sessions = append(s.Sessions, Session{Filter: filter, Connected: up})
 }
 
-// Boot notes that a process took over: no session is connected yet.
+// Boot notes that a process took over: of the sessions there were none is
+// connected yet.
 func (a *Aligner) Boot(s *State, host int64) {
-	s.Sessions = s.Sessions[:0]
+	for i := range s.Sessions {
+		s.Sessions[i].Connected = false
+	}
 	s.Backlog = host + a.cfg.Backlog
 }
 
@@ -427,8 +524,10 @@ func (s *State) Waiting() bool {
 	return len(s.Sessions) > 0
 }
 
-// CatchingUp tells that samples of the past are coming in.
-func (s *State) CatchingUp(host int64) bool { return s.Backlog != 0 && host-s.MaxEvent > int64(1e9) }
+// CatchingUp tells that scans of the past are made.
+func (s *State) CatchingUp(host int64) bool {
+	return s.Backlog != 0 && s.Next != 0 && host-s.Next > int64(1e9)
+}
 
 // Scan closes the oldest open interval if it can be closed at host time, fills
 // out with it and reports true. Call it until it reports false. out has one entry
@@ -439,19 +538,18 @@ func (a *Aligner) Scan(s *State, host int64, out *monitor.Scan) bool {
 	}
 	if s.Backlog != 0 && host >= s.Backlog {
 		s.Backlog = 0
+		a.shrink(s)
 	}
-	if host < s.Patient || !a.complete(s) {
+	complete, missing := a.complete(s)
+	if host < s.Patient || !complete {
 		now := host
 		switch {
-		case s.Backlog != 0:
-			now = s.MaxEvent
-		case s.Waiting():
+		case s.Waiting(), s.Backlog != 0 && missing && host-s.Up < settle:
 			return false
-		case host-s.Next > bridge && s.empty():
-			next := ceil(host-a.cfg.Lateness, a.cfg.Period)
-			s.Skipped += uint64((next - s.Next) / a.cfg.Period)
-			s.Next = next
+		case s.Backlog != 0:
+			now = a.reached(s, host)
 		}
+		a.skip(s, now-a.cfg.Lateness)
 		if now < s.Next+a.cfg.Lateness {
 			return false
 		}
@@ -460,20 +558,41 @@ func (a *Aligner) Scan(s *State, host int64, out *monitor.Scan) bool {
 	return true
 }
 
-// complete tells whether every expected channel has a sample at or after Next.
-func (a *Aligner) complete(s *State) bool {
-	expected := false
+// complete tells whether every expected channel has a sample at or after Next, or
+// one that is expected has not.
+func (a *Aligner) complete(s *State) (complete, missing bool) {
 	for i := range s.Channels {
 		cs := &s.Channels[i]
 		if cs.Streak < streakFull {
 			continue
 		}
 		if cs.Newest < s.Next {
-			return false
+			return false, true
 		}
-		expected = true
+		complete = true
 	}
-	return expected
+	return complete, false
+}
+
+// reached gives the event time up to which a backlog has come in: that of the
+// source furthest behind. Sources that are silent are not waited for, and once
+// one is live the others for a while only.
+func (a *Aligner) reached(s *State, host int64) int64 {
+	t, live := s.MaxEvent, false
+	for i := range s.Sources {
+		src := &s.Sources[i]
+		switch {
+		case host-src.Host >= settle:
+		case a.behind(src):
+			t = min(t, src.Event)
+		default:
+			live = true
+		}
+	}
+	if live && host-s.Up >= gatherFor {
+		return s.MaxEvent
+	}
+	return t
 }
 
 func (a *Aligner) closeScan(s *State, out *monitor.Scan) {
