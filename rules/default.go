@@ -2,6 +2,7 @@ package rules
 
 import (
 	"strconv"
+	"strings"
 	"time"
 
 	"throatwatch/monitor/egt"
@@ -12,6 +13,7 @@ type Equipment struct {
 	Bands     []egt.Band
 	EGT       bool // an EGT harness
 	Rake      bool // total-pressure probes at the nozzle entry
+	Speed     bool // rotor speed, without which the phase is unknown
 	FuelFlow  bool
 	Bellmouth bool
 }
@@ -43,7 +45,10 @@ func Default(q Equipment) []Rule {
 		r = append(r, bandRules(&q.Bands[i])...)
 	}
 	if q.EGT {
-		r = append(r, egtRules(q.FuelFlow)...)
+		r = append(r, egtRules()...)
+		if q.Speed {
+			r = append(r, flameRules(q.FuelFlow)...)
+		}
 	}
 	r = append(r, Rule{
 		Name: "unchoke", When: `choke_armed and choke_state != "choked"`, Priority: Caution,
@@ -126,9 +131,9 @@ func seconds(ns int64) string {
 	return strconv.FormatFloat(float64(ns)/1e9, 'f', -1, 64) + " s"
 }
 
-// egtRules gives what needs an EGT harness and rotor speed.
-func egtRules(fuelFlow bool) []Rule {
-	out := []Rule{
+// egtRules gives what needs an EGT harness.
+func egtRules() []Rule {
+	return []Rule{
 		{
 			Name: "egt_lost", When: "lit and not known(egt_indicated_k)", Priority: Warning, OnDelay: 500 * ms, OffDelay: second,
 			Title:    "All EGT lost while lit",
@@ -137,6 +142,12 @@ func egtRules(fuelFlow bool) []Rule {
 			Response: "Facility procedure for lost EGT indication.",
 		},
 		probesLost("egt", "EGT probe", "The mean and the spread rest on fewer probes; a hot streak at a lost probe is not seen."),
+	}
+}
+
+// flameRules gives what needs an EGT harness and rotor speed.
+func flameRules(fuelFlow bool) []Rule {
+	out := []Rule{
 		{
 			Name: "hung_start", When: `phase == "lighting" and speed_rate_rpm_s < 50`, Priority: Caution, OnDelay: 5 * second, OffDelay: second, Deadband: 20, Group: groupFlame,
 			Title:    "Hung start",
@@ -171,7 +182,7 @@ func egtRules(fuelFlow bool) []Rule {
 func probesLost(which, what, caution string) Rule {
 	return Rule{
 		Name: which + "_probe_lost", When: which + "_probes_lost > 0", Priority: Advisory, OnDelay: 3 * second, OffDelay: 5 * second, Group: groupSources,
-		Title:    "A " + what + " is lost",
+		Title:    strings.ToUpper(what[:1]) + what[1:] + " lost",
 		Text:     "{" + which + "_probes_lost:.0} " + what + "(s) excluded or without a value, {" + which + "_probes_used:.0} in use. The Rig page names them and the cause.",
 		Caution:  caution,
 		Response: "Facility procedure for lost instrumentation.",

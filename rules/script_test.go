@@ -30,7 +30,7 @@ func testBands() []egt.Band {
 }
 
 func testDefault() []Rule {
-	return Default(Equipment{Bands: testBands(), EGT: true, Rake: true, FuelFlow: true, Bellmouth: true})
+	return Default(Equipment{Bands: testBands(), EGT: true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true})
 }
 
 // stand runs a set of rules scan by scan.

@@ -323,7 +323,7 @@ func TestParseRefusesWhatIsNoBundle(t *testing.T) {
 func TestRenderedRules(t *testing.T) {
 	list := rules.Default(rules.Equipment{
 		Bands: []egt.Band{{Name: "run_max", Kind: egt.KindRun, Limit: 993.15, Allowance: 5e9}},
-		EGT:   true, Rake: true, FuelFlow: true, Bellmouth: true,
+		EGT:   true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true,
 	})
 	list = append(list, rules.Rule{
 		Name: "all_fields", When: "npr > 1.5 and \"a\" == 'b' # \\ {", Priority: rules.Advisory, OnDelay: 1, OffDelay: 1234567891, Deadband: 1e-9,

@@ -18,6 +18,7 @@ func (r *rig) defaults() File {
 		Bands:     r.cfg.Compute.EGT.Bands,
 		EGT:       len(s.EGT) > 0,
 		Rake:      len(s.P7) > 0,
+		Speed:     s.Speed >= 0,
 		FuelFlow:  s.FuelFlow >= 0,
 		Bellmouth: s.Bellmouth >= 0,
 	})
