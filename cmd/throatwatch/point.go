@@ -13,6 +13,7 @@ import (
 	"throatwatch/monitor"
 	"throatwatch/monitor/gas"
 	"throatwatch/monitor/nozzle"
+	"throatwatch/monitor/uncertainty"
 	"throatwatch/monitor/unit"
 )
 
@@ -23,6 +24,9 @@ const pointUsage = `throatwatch point computes one operating point of a nozzle f
       --fuel-air-ratio 0.02 --throat-area 0.025m2 --discharge-coefficient 0.97
 
 Values carry their unit. Pressures are absolute. --exit-area makes the nozzle convergent-divergent.
+--uncertainty NAME=VALUE states a standard uncertainty (k = 1), once for each input: NAME is that of the
+flag it belongs to, or barometer for an error that total and back pressure share; choke-npr stands for
+the nozzle model. VALUE is as in 1.2kPa, 1.5K, 0.0005, or 0.25% of the value. What is not named is exact.
 
 `
 
@@ -65,9 +69,10 @@ type pointRequest struct {
 	fuelAirRatio, humidityRatio                   pointValue
 	throatArea, exitArea                          pointValue
 	discharge, thrust, ductLoss                   pointValue
-	gamma                                         pointValue
-	gas                                           string
+	chokeNPR, gamma                               pointValue
+	gas, thrustBasis                              string
 	json                                          bool
+	doubt                                         pointDoubt
 }
 
 const (
@@ -79,7 +84,7 @@ const (
 func (r *pointRequest) values() []*pointValue {
 	return []*pointValue{
 		&r.totalPressure, &r.totalTemperature, &r.backPressure, &r.fuelAirRatio, &r.humidityRatio,
-		&r.throatArea, &r.exitArea, &r.discharge, &r.thrust, &r.ductLoss, &r.gamma,
+		&r.throatArea, &r.exitArea, &r.discharge, &r.thrust, &r.ductLoss, &r.chokeNPR, &r.gamma,
 	}
 }
 
@@ -95,8 +100,9 @@ func readPoint(args []string) (*pointRequest, *pflag.FlagSet, error) {
 		throatArea:       pointValue{flag: "throat-area", dimension: unit.Area, low: 1e-9, high: 1e3, usage: "throat area A8 while running, as in 0.05m2; without it no flow and no thrust"},
 		exitArea:         pointValue{flag: "exit-area", dimension: unit.Area, low: 1e-9, high: 1e3, usage: "exit area A9 of a convergent-divergent nozzle"},
 		discharge:        pointValue{flag: "discharge-coefficient", dimension: unit.Ratio, standard: "1", low: 0.01, high: 1.5, usage: "Cd, of p8"},
-		thrust:           pointValue{flag: "thrust-coefficient", dimension: unit.Ratio, standard: "1", low: 0.01, high: 1.5, usage: "CT, basis nozzle-ideal"},
+		thrust:           pointValue{flag: "thrust-coefficient", dimension: unit.Ratio, standard: "1", low: 0.01, high: 1.5, usage: "CT, of the --thrust-basis"},
 		ductLoss:         pointValue{flag: "duct-loss", dimension: unit.Ratio, standard: "0", low: 0, high: 0.99, usage: "(p7 - p8)/p7, a fraction or in %"},
+		chokeNPR:         pointValue{flag: "choke-npr", dimension: unit.Ratio, low: 1.01, high: 10, usage: "p8/pb at which this nozzle chokes by calibration; without it the one-dimensional value"},
 		gamma:            pointValue{flag: "gamma", dimension: unit.Ratio, low: 1.0001, high: 2, usage: "ratio of specific heats, with --gas perfect"},
 	}
 	flags := pflag.NewFlagSet("point", pflag.ContinueOnError)
@@ -106,6 +112,8 @@ func readPoint(args []string) (*pointRequest, *pflag.FlagSet, error) {
 		flags.StringVar(&v.text, v.flag, v.standard, v.usage)
 	}
 	flags.StringVar(&r.gas, "gas", thermallyPerfect, "thermally-perfect or perfect; perfect takes a constant --gamma, and R of the mixture")
+	flags.StringVar(&r.thrustBasis, "thrust-basis", nozzle.NozzleIdeal.String(), "what CT multiplies: nozzle-ideal or fully-expanded")
+	r.doubt.flags(flags)
 	flags.BoolVar(&r.json, "json", false, "print JSON")
 	if err := flags.Parse(args); err != nil {
 		return nil, flags, err
@@ -140,64 +148,69 @@ func readPoint(args []string) (*pointRequest, *pflag.FlagSet, error) {
 	case r.exitArea.si < r.throatArea.si:
 		faults = append(faults, fmt.Errorf("--exit-area: %s is below the throat area %s", r.exitArea.text, r.throatArea.text))
 	}
+	if r.thrustBasis != nozzle.NozzleIdeal.String() && r.thrustBasis != nozzle.FullyExpanded.String() {
+		faults = append(faults, fmt.Errorf("--thrust-basis %q: give %s or %s", r.thrustBasis, nozzle.NozzleIdeal, nozzle.FullyExpanded))
+	}
+	faults = append(faults, r.readDoubt(flags)...)
 	return r, flags, errors.Join(faults...)
 }
 
+// pointAnswer is what point computes.
+type pointAnswer struct {
+	config nozzle.Config
+	result nozzle.Result
+	inputs uncertainty.Inputs
+	doubt  *uncertainty.Result     // nil if no uncertainty is stated
+	check  *uncertainty.Simulation // nil unless asked for
+}
+
 // compute evaluates the nozzle of the request.
-func (r *pointRequest) compute() (nozzle.Result, nozzle.Config, error) {
-	g, err := gas.NewMixture(gas.Kerosene(), r.fuelAirRatio.si, r.humidityRatio.si)
+func (r *pointRequest) compute() (*pointAnswer, error) {
+	fuel := gas.Kerosene()
+	g, err := gas.NewMixture(fuel, r.fuelAirRatio.si, r.humidityRatio.si)
 	if err != nil {
-		return nozzle.Result{}, nozzle.Config{}, err
+		return nil, err
 	}
 	if r.gas == constantGamma {
+		fuel = gas.Fuel{}
 		if g, err = gas.Perfect(r.gamma.si, g.R()); err != nil {
-			return nozzle.Result{}, nozzle.Config{}, err
+			return nil, err
 		}
 	}
-	c := nozzle.Config{
+	a := &pointAnswer{config: nozzle.Config{
 		Discharge: []nozzle.Point{{NPR: 1, Value: r.discharge.si}},
 		Thrust:    []nozzle.Point{{NPR: 1, Value: r.thrust.si}},
 		DuctLoss:  r.ductLoss.si,
-	}
+	}}
+	c := &a.config
 	if r.throatArea.text != "" {
 		c.ThroatArea = r.throatArea.si
 	}
 	if r.exitArea.text != "" {
 		c.Kind, c.ExitArea = nozzle.ConvergentDivergent, r.exitArea.si
 	}
-	n, err := nozzle.New(c)
-	if err != nil {
-		return nozzle.Result{}, c, err
+	if r.chokeNPR.text != "" {
+		c.ChokeNPR = r.chokeNPR.si
 	}
-	result, err := n.Evaluate(&g, nozzle.Inputs{
-		TotalPressure:    unit.Absolute(r.totalPressure.si),
-		BackPressure:     unit.Absolute(r.backPressure.si),
-		TotalTemperature: r.totalTemperature.si,
-	})
-	return result, c, err
-}
-
-// pointJSON is the answer of point --json; its keys are those of operating points
-// everywhere.
-type pointJSON struct {
-	NPR                 float64  `json:"npr"`
-	NPRRake             float64  `json:"npr_rake"`
-	CriticalNPR         float64  `json:"critical_npr"`
-	ChokeNPR            float64  `json:"choke_npr"`
-	ChokeMarginPercent  float64  `json:"choke_margin_percent"`
-	ChokeState          string   `json:"choke_state"`
-	ChokeMarginal       bool     `json:"choke_marginal"` // false: no uncertainty is given
-	ThroatMach          float64  `json:"throat_mach"`
-	ThroatPressure      float64  `json:"throat_pressure_pa"`
-	ThroatTemperature   float64  `json:"throat_temperature_k"`
-	CriticalPressure    float64  `json:"critical_pressure_pa"`
-	CriticalTemperature float64  `json:"critical_temperature_k"`
-	MassFlow            *float64 `json:"mass_flow_kg_s"`
-	ExitVelocity        float64  `json:"exit_velocity_m_s"`
-	GrossThrust         *float64 `json:"gross_thrust_n"`
-	GammaTotal          float64  `json:"gamma_total"`
-	GasConstant         float64  `json:"gas_constant_j_kg_k"`
-	Warnings            []string `json:"warnings"`
+	if r.thrustBasis == nozzle.FullyExpanded.String() {
+		c.Basis = nozzle.FullyExpanded
+	}
+	n, err := nozzle.New(*c)
+	if err != nil {
+		return nil, err
+	}
+	p := uncertainty.Point{
+		Nozzle: n, Gas: &g, Fuel: fuel, FuelAirRatio: r.fuelAirRatio.si, HumidityRatio: r.humidityRatio.si,
+		Inputs: nozzle.Inputs{
+			TotalPressure:    unit.Absolute(r.totalPressure.si),
+			BackPressure:     unit.Absolute(r.backPressure.si),
+			TotalTemperature: r.totalTemperature.si,
+		},
+	}
+	if a.result, err = n.Evaluate(&g, p.Inputs); err != nil {
+		return nil, err
+	}
+	return a, r.propagate(a, &p)
 }
 
 // known gives nil, which is null in JSON, for what is not known.
@@ -218,21 +231,41 @@ func chokeState(r *nozzle.Result) monitor.ChokeState {
 	return monitor.Unchoked
 }
 
-func newPointJSON(r *nozzle.Result) pointJSON {
-	return pointJSON{
-		NPR: r.NPR, NPRRake: r.NPRRake, CriticalNPR: r.CriticalNPR, ChokeNPR: r.ChokeNPR,
-		ChokeMarginPercent: r.MarginPercent, ChokeState: chokeState(r).String(),
-		ThroatMach: r.Throat.Mach, ThroatPressure: r.Throat.Pressure, ThroatTemperature: r.Throat.Temperature,
-		CriticalPressure: r.CriticalPressure, CriticalTemperature: r.CriticalTemperature,
-		MassFlow: known(r.MassFlow), ExitVelocity: r.Exit.Velocity, GrossThrust: known(r.GrossThrust),
-		GammaTotal: r.GammaTotal, GasConstant: r.GasConstant,
-		Warnings: append([]string{}, r.WarningTexts()...),
+// answerJSON gives the answer by the keys that operating points have everywhere.
+func (r *pointRequest) answerJSON(a *pointAnswer) map[string]any {
+	v := &a.result
+	out := map[string]any{
+		"npr": v.NPR, "npr_rake": v.NPRRake, "critical_npr": v.CriticalNPR, "choke_npr": v.ChokeNPR,
+		"choke_margin_percent": v.MarginPercent, "choke_state": chokeState(v).String(), "choke_marginal": false,
+		"throat_mach": v.Throat.Mach, "throat_pressure_pa": v.Throat.Pressure, "throat_temperature_k": v.Throat.Temperature,
+		"critical_pressure_pa": v.CriticalPressure, "critical_temperature_k": v.CriticalTemperature,
+		"mass_flow_kg_s": known(v.MassFlow), "exit_velocity_m_s": v.Exit.Velocity, "gross_thrust_n": known(v.GrossThrust),
+		"gamma_total": v.GammaTotal, "gas_constant_j_kg_k": v.GasConstant,
+		"warnings": append([]string{}, v.WarningTexts()...),
 	}
+	if a.config.Kind == nozzle.ConvergentDivergent {
+		out["first_critical_npr"], out["second_critical_npr"], out["third_critical_npr"] = v.CriticalNPR, v.ShockAtExitNPR, v.DesignNPR
+		out["regime"] = v.Regime.String()
+	}
+	r.doubtJSON(out, a)
+	return out
 }
 
-// pointTable writes the answer for a person: the state and the margin first.
-func pointTable(w io.Writer, r *nozzle.Result, c nozzle.Config) error {
+// table writes the answer for a person: the state and the margin first.
+func (r *pointRequest) table(w io.Writer, a *pointAnswer) error {
 	var text strings.Builder
+	resultTable(&text, &a.result, &a.config)
+	if a.doubt != nil {
+		r.doubtTable(&text, a)
+	} else {
+		text.WriteString("No uncertainty is given, so none is shown: near zero margin the state is open.\n")
+	}
+	text.WriteString("Not protection. Follow the facility's procedures.\n")
+	_, err := io.WriteString(w, text.String())
+	return err
+}
+
+func resultTable(text *strings.Builder, r *nozzle.Result, c *nozzle.Config) {
 	line := func(name, value, remark string) {
 		text.WriteString(strings.TrimRight(fmt.Sprintf("%-23s %-13s %s", name, value, remark), " ") + "\n")
 	}
@@ -253,7 +286,10 @@ func pointTable(w io.Writer, r *nozzle.Result, c nozzle.Config) error {
 	line("Choke margin", number("%+.2f", r.MarginPercent, "%"), fmt.Sprintf("%+.3f kPa of back pressure", r.MarginPa/1e3))
 	line("NPR (p8/pb)", number("%.5f", r.NPR, ""), "")
 	line("Rake NPR (p7/pb)", number("%.5f", r.NPRRake, ""), "")
-	line("Choke NPR", number("%.5f", r.ChokeNPR, ""), "one-dimensional, this gas at this temperature")
+	if r.ChokeCalibrated {
+		line("Choke NPR", number("%.5f", r.ChokeNPR, ""), "of the calibration")
+	}
+	line("Critical NPR", number("%.5f", r.CriticalNPR, ""), "one-dimensional, this gas at this temperature")
 	if c.Kind == nozzle.ConvergentDivergent {
 		line("Shock-at-exit NPR", number("%.5f", r.ShockAtExitNPR, ""), "")
 		line("Design NPR", number("%.5f", r.DesignNPR, ""), "")
@@ -276,10 +312,6 @@ func pointTable(w io.Writer, r *nozzle.Result, c nozzle.Config) error {
 	for _, warning := range r.WarningTexts() {
 		text.WriteString("Warning: " + warning + "\n")
 	}
-	text.WriteString("No uncertainty is given, so none is shown: near zero margin the state is open.\n")
-	text.WriteString("Not protection. Follow the facility's procedures.\n")
-	_, err := io.WriteString(w, text.String())
-	return err
 }
 
 // pointCommand is throatwatch point: one operating point from numbers given by
@@ -304,7 +336,7 @@ func pointCommand(args []string, stdout, stderr io.Writer) int {
 		_, _ = fmt.Fprintln(stderr, "throatwatch point --help lists the flags.")
 		return 2
 	}
-	result, config, err := r.compute()
+	answer, err := r.compute()
 	if err != nil {
 		tell(err)
 		return 2
@@ -313,9 +345,9 @@ func pointCommand(args []string, stdout, stderr io.Writer) int {
 		enc := json.NewEncoder(stdout)
 		enc.SetEscapeHTML(false)
 		enc.SetIndent("", "  ")
-		err = enc.Encode(newPointJSON(&result))
+		err = enc.Encode(r.answerJSON(answer))
 	} else {
-		err = pointTable(stdout, &result, config)
+		err = r.table(stdout, answer)
 	}
 	if err != nil {
 		tell(fmt.Errorf("writing the answer: %w", err))

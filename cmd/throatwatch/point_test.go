@@ -15,6 +15,33 @@ import (
 	"testing"
 )
 
+// pointJSON is the answer of point --json without uncertainties.
+type pointJSON struct {
+	NPR                 float64  `json:"npr"`
+	NPRRake             float64  `json:"npr_rake"`
+	CriticalNPR         float64  `json:"critical_npr"`
+	ChokeNPR            float64  `json:"choke_npr"`
+	ChokeMarginPercent  float64  `json:"choke_margin_percent"`
+	ChokeState          string   `json:"choke_state"`
+	ChokeMarginal       bool     `json:"choke_marginal"`
+	ThroatMach          float64  `json:"throat_mach"`
+	ThroatPressure      float64  `json:"throat_pressure_pa"`
+	ThroatTemperature   float64  `json:"throat_temperature_k"`
+	CriticalPressure    float64  `json:"critical_pressure_pa"`
+	CriticalTemperature float64  `json:"critical_temperature_k"`
+	MassFlow            *float64 `json:"mass_flow_kg_s"`
+	ExitVelocity        float64  `json:"exit_velocity_m_s"`
+	GrossThrust         *float64 `json:"gross_thrust_n"`
+	GammaTotal          float64  `json:"gamma_total"`
+	GasConstant         float64  `json:"gas_constant_j_kg_k"`
+	Warnings            []string `json:"warnings"`
+
+	First  float64 `json:"first_critical_npr"` // with --exit-area
+	Second float64 `json:"second_critical_npr"`
+	Third  float64 `json:"third_critical_npr"`
+	Regime string  `json:"regime"`
+}
+
 // pointVectors reads a file of testdata/vectors, whose first lines name its source.
 func pointVectors(t *testing.T, name string) []map[string]string {
 	t.Helper()
@@ -323,7 +350,7 @@ func TestPointHelp(t *testing.T) {
 	if code := pointCommand([]string{"--help"}, &stdout, &stderr); code != 0 || stderr.Len() > 0 {
 		t.Fatalf("exit %d: %s", code, &stderr)
 	}
-	flags := strings.Fields("--total-pressure --total-temperature --back-pressure --fuel-air-ratio --humidity-ratio --throat-area --exit-area --discharge-coefficient --thrust-coefficient --duct-loss --gas --gamma --json")
+	flags := strings.Fields("--total-pressure --total-temperature --back-pressure --fuel-air-ratio --humidity-ratio --throat-area --exit-area --discharge-coefficient --thrust-coefficient --duct-loss --thrust-basis --choke-npr --uncertainty --budget --monte-carlo --seed --gas --gamma --json")
 	for _, word := range slices.Concat(flags, []string{"absolute"}) {
 		if !strings.Contains(stdout.String(), word) {
 			t.Errorf("help does not say %q", word)
