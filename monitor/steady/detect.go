@@ -1,6 +1,8 @@
 package steady
 
 import (
+	"errors"
+	"fmt"
 	"math"
 
 	"gonum.org/v1/gonum/mathext"
@@ -108,6 +110,23 @@ type Detector struct {
 	Dwell      int64 // ns
 }
 
+// Check tells what is wrong with a Detector.
+func (d *Detector) Check() error {
+	var faults []error
+	for i, c := range d.Quantities {
+		if c.Window.Width <= 0 || c.Window.Bins < minBins || c.Window.Bins > MaxBins {
+			faults = append(faults, fmt.Errorf("steady: quantity %d: window of %d bins of %d ns, want %d to %d of more than 0", i+1, c.Window.Bins, c.Window.Width, minBins, MaxBins))
+		}
+		if !(c.Slope >= 0 && c.Relative >= 0 && c.Slope+c.Relative > 0) {
+			faults = append(faults, fmt.Errorf("steady: quantity %d: no slope limit", i+1))
+		}
+		if !(c.Noise >= 0) {
+			faults = append(faults, fmt.Errorf("steady: quantity %d: noise of %v s", i+1, c.Noise))
+		}
+	}
+	return errors.Join(faults...)
+}
+
 // State is what a Detector remembers. The zero value has seen nothing.
 type State struct {
 	Past   []Past
@@ -144,7 +163,7 @@ func (d *Detector) Step(s *State, t int64, values []float64) Result {
 	if n := len(d.Quantities); len(s.Past) != n {
 		*s = State{Past: make([]Past, n), Stats: make([]Stats, n), Why: make([]Why, n), Result: Result{Quantity: -1, Since: t}}
 		for i := range s.Why {
-			s.Why[i] = Filling
+			s.Why[i], s.Stats[i] = Filling, unknown()
 		}
 	}
 	found, quantity := IsSteady, -1

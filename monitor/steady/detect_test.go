@@ -212,6 +212,38 @@ func TestVonNeumannEdges(t *testing.T) {
 	}
 }
 
+func TestCheck(t *testing.T) {
+	if err := detector().Check(); err != nil {
+		t.Error(err)
+	}
+	for name, change := range map[string]func(*Criterion){
+		"no width":       func(c *Criterion) { c.Window.Width = 0 },
+		"too few bins":   func(c *Criterion) { c.Window.Bins = 4 },
+		"too many bins":  func(c *Criterion) { c.Window.Bins = MaxBins + 1 },
+		"no slope":       func(c *Criterion) { c.Relative = 0 },
+		"negative slope": func(c *Criterion) { c.Slope = -1 },
+		"noise":          func(c *Criterion) { c.Noise = math.NaN() },
+	} {
+		d := detector()
+		change(&d.Quantities[0])
+		if d.Check() == nil {
+			t.Errorf("%s: accepted", name)
+		}
+		// What Check refuses must still not panic.
+		var s State
+		for at := epoch; at < epoch+70*second; at += scan {
+			d.Step(&s, at, []float64{100})
+		}
+	}
+	// Before anything is known, nothing looks like a value.
+	var s State
+	d := detector()
+	d.Step(&s, epoch, []float64{100})
+	if v := Reduce(&s.Stats[0], Part{}); !math.IsNaN(v.Mean) || !math.IsNaN(v.U95) {
+		t.Errorf("after one scan: %+v", v)
+	}
+}
+
 func TestCodes(t *testing.T) {
 	seen := map[string]bool{}
 	for w := IsSteady; w <= Dwell+1; w++ {

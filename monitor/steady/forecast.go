@@ -61,9 +61,9 @@ type Ahead struct {
 // than the standard uncertainty of the difference, the trend is taken to fade from
 // half to half by the ratio q of the slopes, and what it has left to go is
 // b_later·T/2·q/(1 − q); a limit that is farther than that less its standard
-// uncertainty is not forecast. Where the slopes differ with 95 % confidence, the later half alone is
-// used, and for a trend that gathers pace Low95 is that of the parabola whose bend
-// is the largest within that confidence.
+// uncertainty is not forecast. Where the slopes differ with 95 % confidence, the
+// later half alone is used, and for a trend that gathers pace Low95 is that of the
+// parabola whose bend is the largest within that confidence.
 func (l Limit) Forecast(w Window, s *Stats, steady bool) Ahead {
 	span := float64(w.Span()) / 1e9
 	sign := 1.0
