@@ -53,9 +53,10 @@ type due struct {
 // desk is a watch that is stepped by hand, with its server. With a folder it
 // records into a run file there as the daemon does.
 type desk struct {
-	hub  *dashboard.Hub
-	http *httptest.Server
-	dir  string
+	hub    *dashboard.Hub
+	http   *httptest.Server
+	dir    string
+	narrow bool // connections have small buffers: a viewer that does not read is noticed after few frames
 
 	mu      sync.Mutex // protects the fields below; held while a record is stepped
 	machine *pipeline.Machine
@@ -123,7 +124,9 @@ func (d *desk) serve(asked dashboard.Desk) {
 		},
 	}, d.hub)
 	d.http = httptest.NewUnstartedServer(server)
-	d.http.Listener = narrow{d.http.Listener}
+	if d.narrow {
+		d.http.Listener = narrow{d.http.Listener}
+	}
 	d.http.Start()
 }
 
@@ -135,8 +138,18 @@ func (d *desk) close() {
 	}
 }
 
-// narrow gives connections whose send buffer is small, so that a viewer that does
-// not read is noticed after few frames.
+// newNarrowDesk is newDesk with small buffers.
+func newNarrowDesk(t *testing.T) *desk {
+	t.Helper()
+	d := makeDesk()
+	d.narrow = true
+	d.begin()
+	d.serve(d)
+	t.Cleanup(d.close)
+	return d
+}
+
+// narrow gives connections whose send buffer is small.
 type narrow struct{ net.Listener }
 
 func (l narrow) Accept() (net.Conn, error) {
@@ -437,10 +450,10 @@ func (d *desk) view(t *testing.T, query string) *viewer {
 func (d *desk) dial(ctx context.Context, query string, header http.Header) (*viewer, error) {
 	dialer := websocket.Dialer{NetDialContext: func(ctx context.Context, network, addr string) (net.Conn, error) {
 		c, err := (&net.Dialer{}).DialContext(ctx, network, addr)
-		if err != nil {
-			return nil, err
+		if err == nil && d.narrow {
+			err = c.(*net.TCPConn).SetReadBuffer(16 << 10)
 		}
-		return c, c.(*net.TCPConn).SetReadBuffer(16 << 10)
+		return c, err
 	}}
 	conn, res, err := dialer.DialContext(ctx, "ws"+strings.TrimPrefix(d.http.URL, "http")+"/live"+query, header)
 	if err != nil {
@@ -581,6 +594,10 @@ var recorded = sync.OnceValue(func() *recording {
 	dir, err := os.MkdirTemp("", "dashboard")
 	must(err)
 	r := &recording{desk: makeDesk(), acted: map[string]answer{}}
+	discard = func() {
+		r.close()
+		must(os.RemoveAll(dir))
+	}
 	r.record(dir)
 	r.begin()
 	r.serve(r.desk)
@@ -623,12 +640,13 @@ var recorded = sync.OnceValue(func() *recording {
 	return r
 })
 
+// discard ends the recording, once there is one.
+var discard = func() {}
+
 func TestMain(m *testing.M) {
 	code := m.Run()
+	discard()
 	if code == 0 {
-		r := recorded()
-		r.close()
-		must(os.RemoveAll(r.dir))
 		code = leaked()
 	}
 	os.Exit(code)

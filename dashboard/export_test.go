@@ -58,8 +58,30 @@ func NewPlot(name string, cfg *pipeline.Config) (kind, unit string, state bool, 
 	return p.kind, p.unit, p.state != nil, nil
 }
 
-// NewViewer reads what a viewer asks for.
-func NewViewer(q url.Values) error {
-	_, err := newViewer(q)
-	return err
+// NewViewer reads what a viewer asks for; every is the least time between points, ns.
+func NewViewer(q url.Values) (every int64, err error) {
+	v, err := newViewer(q)
+	if err != nil {
+		return 0, err
+	}
+	return v.every, nil
+}
+
+// Attach enters viewers without a connection; each has every frame, and the channels
+// if it asks for them. drain takes what waits for them and tells how much it was.
+func (h *Hub) Attach(n int, channels bool) (drain func() (frames int)) {
+	all := make([]*viewer, n)
+	for i := range all {
+		all[i] = &viewer{all: channels, queue: make(chan queued, clientQueue), gone: make(chan struct{})}
+		h.viewers[all[i]] = struct{}{}
+	}
+	return func() (frames int) {
+		for _, v := range all {
+			for len(v.queue) > 0 {
+				<-v.queue
+				frames++
+			}
+		}
+		return frames
+	}
 }

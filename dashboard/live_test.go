@@ -382,7 +382,7 @@ func TestLiveChannels(t *testing.T) {
 // A viewer that does not read is closed with 4008. Nobody waits for it: neither the
 // watch nor another viewer.
 func TestLiveSlowViewer(t *testing.T) {
-	d := newDesk(t)
+	d := newNarrowDesk(t)
 	slow, err := d.dial(t.Context(), "", nil)
 	if err != nil {
 		t.Fatal(err)
@@ -414,7 +414,7 @@ func TestLiveSlowViewer(t *testing.T) {
 // are.
 func TestLiveLateViewer(t *testing.T) {
 	t.Parallel()
-	d := newDesk(t)
+	d := newNarrowDesk(t)
 	late, err := d.dial(t.Context(), "", nil)
 	if err != nil {
 		t.Fatal(err)
@@ -462,7 +462,7 @@ func TestLiveShutdown(t *testing.T) {
 // The end does not wait for a viewer that does not read.
 func TestLiveShutdownSlowViewer(t *testing.T) {
 	t.Parallel()
-	d := newDesk(t)
+	d := newNarrowDesk(t)
 	slow, err := d.dial(t.Context(), "", nil)
 	if err != nil {
 		t.Fatal(err)

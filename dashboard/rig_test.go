@@ -102,7 +102,10 @@ func rig(title, hash string) pipeline.Config {
 		Run:  pipeline.RunConfig{EndAfter: 120 * second},
 		Hash: hash,
 	}
-	cfg.Rules = append(rules.Default(rules.Equipment{Bands: cfg.Compute.EGT.Bands, EGT: true, Rake: true, FuelFlow: true, Bellmouth: true}), rules.Rule{
+	if title == "perfect gas" {
+		cfg.Compute.Gamma, cfg.Compute.GasR = 1.4, 287.05
+	}
+	cfg.Rules = append(rules.Default(rules.Equipment{Bands: cfg.Compute.EGT.Bands, EGT: true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true}), rules.Rule{
 		Name: "vibration_above_caution", When: "channel.vibration > 0.018", Priority: rules.Caution, OnDelay: 100 * ms, OffDelay: second, Deadband: 0.001,
 		Title: "Vibration above 18 mm/s", Text: "Vibration is above 18 mm/s.", Caution: `Watch "both" bearings & their temperatures.`, Response: "Follow facility procedure EP-14.",
 	})
