@@ -10,6 +10,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"slices"
 
 	"throatwatch/monitor"
 	"throatwatch/monitor/calib"
@@ -42,6 +43,7 @@ type ChannelState struct {
 	Same      float64 // raw value that has not changed …
 	SameSince int64   // … since this event time
 	Seen      bool
+	Judged    monitor.Quality // what judge found of the last scan with samples
 }
 
 // State is all that computation remembers. It is plain data.
@@ -114,19 +116,25 @@ func order(channels []Channel) ([]int, error) {
 	return out, nil
 }
 
-// Reset fits the state to the configuration; channels that are the same as
-// before keep their past.
+// Reset fits the state to the configuration; channels that have the same values
+// as before keep their past.
 func (c *Computer) Reset(s *State, from []Channel) {
 	old := s.Channels
 	s.Channels = make([]ChannelState, len(c.cfg.Channels))
 	for i := range c.cfg.Channels {
-		for j := range from {
-			if from[j].ID == c.cfg.Channels[i].ID && j < len(old) {
+		for j := range min(len(from), len(old)) {
+			if sameValues(&from[j], &c.cfg.Channels[i]) {
 				s.Channels[i] = old[j]
 			}
 		}
 	}
 	c.cfg.EGT.Fit(&s.EGT)
+}
+
+// sameValues tells whether two channels give the same value for the same raw one:
+// after a correction the past would make the new values look like a jump.
+func sameValues(a, b *Channel) bool {
+	return a.ID == b.ID && a.Raw == b.Raw && a.Unit == b.Unit && slices.Equal(a.Polynomial, b.Polynomial)
 }
 
 // Step computes the operating point of a scan and completes the scan: values
@@ -176,10 +184,13 @@ func (c *Computer) calibrate(s *State, scan *monitor.Scan) {
 }
 
 // judge tells what only the course of a channel shows: an impossible rate, or
-// a reading that does not move at all.
+// a reading that does not move at all. What is held is as it was judged.
 func (s *ChannelState) judge(ch *Channel, t int64, raw, v float64, now monitor.Quality) monitor.Quality {
-	if now != monitor.QualityGood { // held: nothing new to judge
-		return monitor.QualityGood
+	if now != monitor.QualityGood {
+		if s.Judged == monitor.QualityMissing {
+			return monitor.QualityGood
+		}
+		return s.Judged
 	}
 	if !s.Seen || raw != s.Same {
 		s.Same, s.SameSince = raw, t
@@ -193,6 +204,7 @@ func (s *ChannelState) judge(ch *Channel, t int64, raw, v float64, now monitor.Q
 	if ch.Stuck > 0 && t-s.SameSince >= ch.Stuck {
 		q = monitor.QualityStuck
 	}
+	s.Judged = q
 	return q
 }
 
@@ -215,22 +227,19 @@ func (c *Computer) probes(scan *monitor.Scan, group []int) ([]float64, []bool) {
 }
 
 // mean gives the mean of the usable channels of a group, NaN when they are
-// fewer than least, with the number used and the first that is not usable.
-func (c *Computer) mean(scan *monitor.Scan, group []int, least int) (mean float64, used int, bad int32) {
+// fewer than least, with the number used.
+func (c *Computer) mean(scan *monitor.Scan, group []int, least int) (mean float64, used int) {
 	sum := 0.0
-	bad = -1
 	for _, i := range group {
 		if scan.Quality[i].Usable() {
 			sum += scan.Value[i]
 			used++
-		} else if bad < 0 {
-			bad = int32(i)
 		}
 	}
 	if used == 0 || used < least {
-		return math.NaN(), used, bad
+		return math.NaN(), used
 	}
-	return sum / float64(used), used, -1
+	return sum / float64(used), used
 }
 
 func (c *Computer) temperatures(scan *monitor.Scan, p *monitor.OperatingPoint) {
@@ -240,17 +249,13 @@ func (c *Computer) temperatures(scan *monitor.Scan, p *monitor.OperatingPoint) {
 	p.EGTProbesUsed = int16(used)
 	if used < st.MinEGT || used == 0 {
 		mean = math.NaN()
-		p.EGTCause = monitor.Cause{Kind: monitor.NotEnoughProbes, Channel: -1}
-		if len(st.EGT) == 0 {
-			p.EGTCause.Kind = monitor.NotConfigured
-		}
+		p.EGTCause = blame(scan, st.EGT)
 	}
 	p.V[monitor.EGTIndicated], p.V[monitor.EGTSpread] = mean, spread
 	p.V[monitor.EGTHottest], p.V[monitor.EGTColdest] = hottest, coldest
 	switch {
 	case len(st.T7) > 0:
-		t7, _, _ := c.mean(scan, st.T7, st.MinT7)
-		p.V[monitor.TotalTemperature] = t7
+		p.V[monitor.TotalTemperature], _ = c.mean(scan, st.T7, st.MinT7)
 		p.TemperatureBy = monitor.SourceRake
 	case st.T7FromEGT > 0:
 		p.V[monitor.TotalTemperature] = st.T7FromEGT * mean
@@ -275,11 +280,11 @@ func (c *Computer) speed(s *State, scan *monitor.Scan, p *monitor.OperatingPoint
 
 func (c *Computer) pressures(scan *monitor.Scan, p *monitor.OperatingPoint) {
 	st := &c.cfg.Stations
-	p7, used, bad := c.mean(scan, st.P7, st.MinP7)
+	p7, used := c.mean(scan, st.P7, st.MinP7)
 	p.RakeProbesUsed = int16(used)
 	p.V[monitor.RakePressure] = p7
 	if math.IsNaN(p7) {
-		p.Cause = c.blame(scan, bad, monitor.NotEnoughProbes)
+		p.Cause = blame(scan, st.P7)
 	}
 	baro := c.channel(scan, st.Barometer)
 	p.V[monitor.Barometer] = baro
@@ -288,28 +293,39 @@ func (c *Computer) pressures(scan *monitor.Scan, p *monitor.OperatingPoint) {
 		p.V[monitor.BackPressure], p.BackFrom = pb, monitor.SourceExitPlane
 	case baro == baro:
 		p.V[monitor.BackPressure], p.BackFrom = baro-st.Depression, monitor.SourceBarometer
+	case st.Barometer >= 0: // also what is gauge against it is lost
+		p.Cause = blame(scan, []int{st.Barometer})
 	default:
-		p.Cause = c.blame(scan, int32(st.Barometer), monitor.NotConfigured)
+		p.Cause = blame(scan, []int{st.ExitPlane})
 	}
 }
 
-// blame names a channel as the cause, or kind when there is none to name.
-func (c *Computer) blame(scan *monitor.Scan, ch int32, kind monitor.CauseKind) monitor.Cause {
-	if ch < 0 {
-		return monitor.Cause{Kind: kind, Channel: -1}
+// blame names the first channel of a group that is not usable as the cause. -1
+// stands for a channel that the rig has not.
+func blame(scan *monitor.Scan, group []int) monitor.Cause {
+	kind := monitor.NotConfigured
+	for _, i := range group {
+		if i < 0 {
+			continue
+		}
+		if q := scan.Quality[i]; !q.Usable() {
+			return monitor.Cause{Kind: monitor.ChannelBad, Channel: int32(i), Quality: q}
+		}
+		kind = monitor.NotEnoughProbes
 	}
-	return monitor.Cause{Kind: monitor.ChannelBad, Channel: ch, Quality: scan.Quality[ch]}
+	return monitor.Cause{Kind: kind, Channel: -1}
 }
 
 // air gives the humid air at the inlet and notes its humidity.
 func (c *Computer) air(scan *monitor.Scan, p *monitor.OperatingPoint) gas.Mixture {
 	war := 0.0
-	rh, t := c.channel(scan, c.cfg.Stations.Humidity), c.channel(scan, c.cfg.Stations.AmbientT)
-	w, err := gas.HumidityRatio(rh, t, p.V[monitor.Barometer])
-	if err == nil && w == w {
-		war = w
-	} else {
-		p.Warnings |= monitor.WarnAssumedHumidity
+	rh, t, baro := c.channel(scan, c.cfg.Stations.Humidity), c.channel(scan, c.cfg.Stations.AmbientT), p.V[monitor.Barometer]
+	p.Warnings |= monitor.WarnAssumedHumidity
+	if rh == rh && t == t && baro == baro {
+		if w, err := gas.HumidityRatio(rh, t, baro); err == nil {
+			war = w
+			p.Warnings &^= monitor.WarnAssumedHumidity
+		}
 	}
 	p.V[monitor.HumidityRatio] = war
 	return c.mixture(0, war)
@@ -340,8 +356,10 @@ func (c *Computer) throat(s *State, scan *monitor.Scan, p *monitor.OperatingPoin
 	p.V[monitor.FuelFlow] = fuel
 	if t7 != t7 || p7 != p7 || pb != pb {
 		if t7 != t7 && p.Cause.Kind == monitor.Available {
-			_, _, bad := c.mean(scan, c.cfg.Stations.T7, c.cfg.Stations.MinT7)
-			p.Cause = c.blame(scan, bad, monitor.NotEnoughProbes)
+			p.Cause = blame(scan, c.cfg.Stations.T7)
+			if len(c.cfg.Stations.T7) == 0 && c.cfg.Stations.T7FromEGT > 0 {
+				p.Cause = p.EGTCause
+			}
 		}
 		s.Choke = monitor.ChokeUnknown
 		return

@@ -11,8 +11,9 @@ import (
 	"throatwatch/monitor/unit"
 )
 
-// coverage is k of the stated 95 % uncertainties [JCGM 100 6.3.3].
-const coverage = 2
+// coverage is k of the stated 95 % uncertainties, the same as of the results
+// [JCGM 100 6.3.3].
+const coverage = uncertainty.Coverage
 
 // part gives the standard uncertainty of a channel at its value. Uncertainties
 // are of the reading against its own reference: that of the port comes apart.
@@ -67,28 +68,27 @@ func relative(u95 float64) uncertainty.Part {
 func (c *Computer) uncertainties(scan *monitor.Scan, p *monitor.OperatingPoint) (u uncertainty.Inputs) {
 	st, n := &c.cfg.Stations, &c.cfg.Nozzle
 	u[uncertainty.TotalPressure] = c.meanPart(scan, st.P7)
-	baro := c.part(scan, st.Barometer)
-	switch p.BackFrom {
-	case monitor.SourceExitPlane:
-		u[uncertainty.BackPressure] = c.part(scan, st.ExitPlane)
-		switch rake, exit := c.refersTo(st.P7, st.Barometer), c.refersTo([]int{st.ExitPlane}, st.Barometer); {
-		case rake && exit:
-			u[uncertainty.CommonPressure] = baro
-		case rake:
-			u[uncertainty.TotalPressure] = add(u[uncertainty.TotalPressure], baro)
-		case exit:
-			u[uncertainty.BackPressure] = add(u[uncertainty.BackPressure], baro)
-		}
-	default:
+	back := st.ExitPlane
+	if p.BackFrom != monitor.SourceExitPlane {
+		back = st.Barometer
 		depression := st.DepressionU / coverage
 		if depression == 0 {
 			depression = math.NaN() // a depression that was entered without saying how well it is known
 		}
 		u[uncertainty.BackPressure] = uncertainty.Part{Systematic: depression}
-		if c.refersTo(st.P7, st.Barometer) {
-			u[uncertainty.CommonPressure] = baro
-		} else {
-			u[uncertainty.BackPressure] = add(u[uncertainty.BackPressure], baro)
+	}
+	// A port that both sides refer to is one error, not two.
+	rake := c.port(st.P7[0])
+	for i := back; i >= 0; i = c.port(i) {
+		in := uncertainty.BackPressure
+		if c.refersTo(rake, i) {
+			in = uncertainty.CommonPressure
+		}
+		u[in] = add(u[in], c.part(scan, i))
+	}
+	for i := rake; i >= 0; i = c.port(i) {
+		if !c.refersTo(back, i) {
+			u[uncertainty.TotalPressure] = add(u[uncertainty.TotalPressure], c.part(scan, i))
 		}
 	}
 	u[uncertainty.TotalTemperature] = c.temperaturePart(scan, p)
@@ -134,14 +134,22 @@ func add(a, b uncertainty.Part) uncertainty.Part {
 	return uncertainty.Part{Systematic: math.Hypot(a.Systematic, b.Systematic), Random: math.Hypot(a.Random, b.Random)}
 }
 
-// refersTo tells whether a group of channels is gauge against port.
-func (c *Computer) refersTo(group []int, port int) bool {
-	for _, i := range group {
-		if i < 0 || c.cfg.Channels[i].Reference != calib.Gauge || c.cfg.Channels[i].Port != port {
-			return false
-		}
+// port gives the channel that channel i is gauge against, -1 for none. The probes
+// of a rake share theirs.
+func (c *Computer) port(i int) int {
+	if c.cfg.Channels[i].Reference != calib.Gauge {
+		return -1
 	}
-	return len(group) > 0
+	return c.cfg.Channels[i].Port
+}
+
+// refersTo tells whether channel i is port, or gauge against it, if need be over
+// other ports.
+func (c *Computer) refersTo(i, port int) bool {
+	for i >= 0 && i != port {
+		i = c.port(i)
+	}
+	return i == port
 }
 
 // doubt carries the uncertainties through the nozzle into the operating point.
@@ -162,7 +170,7 @@ func (c *Computer) doubt(scan *monitor.Scan, p *monitor.OperatingPoint, g *gas.M
 	v[monitor.NPRU95] = r.Outputs[uncertainty.NPR].U95
 	margin := r.Outputs[uncertainty.MarginPercent]
 	v[monitor.ChokeMarginPercentU95] = margin.U95
-	v[monitor.ChokeMarginPercentLow95], v[monitor.ChokeMarginPercentHigh95] = margin.Value-margin.U95, margin.Value+margin.U95
+	v[monitor.ChokeMarginPercentLow95], v[monitor.ChokeMarginPercentHigh95] = margin.Low, margin.High
 	v[monitor.MassFlowU95] = r.Outputs[uncertainty.MassFlow].U95
 	v[monitor.GrossThrustU95] = r.Outputs[uncertainty.GrossThrust].U95
 	v[monitor.PChoked] = r.PChoked
@@ -193,9 +201,12 @@ func (c *Computer) independentU95(scan *monitor.Scan, air *gas.Mixture, in nozzl
 	if errHigh != nil || errLow != nil {
 		return math.NaN()
 	}
-	pressure := total(st.Barometer)
-	if st.InletP >= 0 {
-		pressure = math.Hypot(pressure, total(st.InletP))
+	inlet, pressure := st.InletP, 0.0
+	if inlet < 0 {
+		inlet = st.Barometer
+	}
+	for i := inlet; i >= 0; i = c.port(i) {
+		pressure = math.Hypot(pressure, total(i))
 	}
 	sum := 0.0
 	for _, part := range [...]float64{
