@@ -195,7 +195,7 @@ export function freshness(m: Model, connected: boolean, now: number): Freshness 
     return { kind: 'no_link', since: hostNow(m, connected ? m.statusAt : m.frameAt) };
   }
   const age = dataAge(m, now);
-  if (m.status?.catching_up) return { kind: 'catching_up', age: age ?? NaN };
+  if (m.status?.catching_up && age !== null) return { kind: 'catching_up', age };
   if (now - m.pointAt > pointTimeout * 1000) return { kind: 'no_points', age: (now - m.pointAt) / 1000 };
   return { kind: 'live', age };
 }

@@ -1,212 +1,443 @@
-// Drives the page in Chromium as an operator would: against THROATWATCH_URL, or
-// against the mock when that is not set. Writes screenshots to SHOTS if given.
-// Waits up to WITHIN seconds (default 90) for the run to choke, unchoke and alarm.
+// Drives the page in Chromium, as an operator would, over the real daemon with its
+// rehearsed engine. Needs THROATWATCH, the program with the page built in, and RIG,
+// a rig file. SHOTS is a folder for screenshots; SHOTS_README=1 renews the pictures
+// of the README. Ports, data and the browser's profile are its own.
 import assert from 'node:assert/strict';
-import { mkdirSync, mkdtempSync, rmSync } from 'node:fs';
+import { mkdirSync, mkdtempSync, rmSync, writeFileSync } from 'node:fs';
 import { tmpdir } from 'node:os';
 import { join } from 'node:path';
+import { fileURLToPath } from 'node:url';
+import { gzipSync } from 'node:zlib';
 import { chromium } from 'playwright-core';
-import { start } from './mock.mjs';
+import { build } from 'vite';
+import { command, freePort, watch } from './daemon.mjs';
+import { small } from './picture.mjs';
 
-const mock = process.env.THROATWATCH_URL ? null : await start();
-const base = process.env.THROATWATCH_URL ?? mock.url;
-const shots = process.env.SHOTS ?? '';
-const within = Number(process.env.WITHIN ?? 90) * 1000;
+const { THROATWATCH: program, RIG: rig, SHOTS: shots, SHOTS_README: renew, CHROMIUM = '/usr/bin/chromium' } = process.env;
+if (!program || !rig) {
+  console.error('give THROATWATCH, the path of the program, and RIG, the path of a rig file');
+  process.exit(2);
+}
+const root = fileURLToPath(new URL('..', import.meta.url));
+const pictures = join(root, '../../deploy/pictures');
 if (shots) mkdirSync(shots, { recursive: true });
+if (renew) mkdirSync(pictures, { recursive: true });
 
-const profile = mkdtempSync(join(tmpdir(), 'throatwatch-page-'));
-const context = await chromium.launchPersistentContext(profile, {
-  executablePath: process.env.CHROMIUM ?? '/usr/bin/chromium',
-  viewport: { width: 1440, height: 900 },
+const began = Date.now();
+const place = mkdtempSync(join(tmpdir(), 'throatwatch-page-'));
+const context = await chromium.launchPersistentContext(join(place, 'profile'), {
+  executablePath: CHROMIUM, viewport: { width: 1440, height: 900 },
   args: ['--no-sandbox', '--disable-gpu', '--disable-quic', '--no-first-run', '--disable-background-networking', '--disable-component-update', '--disable-sync', '--disable-dev-shm-usage'],
 });
-const page = context.pages()[0] ?? (await context.newPage());
-const faults = [];
-const outside = [];
-page.on('pageerror', (e) => faults.push(String(e)));
-page.on('request', (r) => { if (new URL(r.url()).origin !== new URL(base).origin && !r.url().startsWith('data:')) outside.push(r.url()); });
+context.setDefaultTimeout(15_000);
 
-// The live socket runs through the test, so that a frozen link can be made of it.
-let frozen = false;
-await page.routeWebSocket(/\/live\?/, (ws) => {
-  const server = ws.connectToServer();
-  server.onMessage((m) => { if (!frozen) ws.send(m); });
+// Faults of any page, unless the daemon is away on purpose.
+const faults = [];
+let away = false;
+const outside = [];
+let server = '';
+function follow(page) {
+  page.on('pageerror', (e) => faults.push(String(e)));
+  page.on('console', (m) => {
+    const moved = m.text().includes('409') && m.location().url.endsWith('/acknowledge'); // the alarm moved on: told and handled
+    if (m.type() === 'error' && !away && !moved) faults.push(`${m.text()} ${m.location().url}`);
+  });
+  page.on('request', (r) => { if (server && !r.url().startsWith(server) && !/^(data|about|blob):/.test(r.url())) outside.push(r.url()); });
+  return page;
+}
+
+// What the page shows is noted four times a second from inside, so that nothing
+// is missed while the test looks elsewhere.
+await context.addInitScript(() => {
+  const text = (name) => document.querySelector(`[data-q="${name}"]`)?.textContent?.trim() ?? '';
+  window.seen = { margins: new Set(), states: new Set(), alarms: [], longest: 0 };
+  new PerformanceObserver((l) => { for (const e of l.getEntries()) window.seen.longest = Math.max(window.seen.longest, e.duration); }).observe({ type: 'longtask' });
+  setInterval(() => {
+    const { margins, states, alarms } = window.seen;
+    if (/\d/.test(text('margin'))) margins.add(text('margin'));
+    if (text('state')) states.add(text('state'));
+    const alarm = { priority: text('alarm-priority'), text: text('alarm-text'), caution: text('alarm-caution'), response: text('alarm-response') };
+    if (alarm.priority && alarms.at(-1)?.text !== alarm.text) alarms.push(alarm);
+  }, 250);
 });
 
-const q = (name) => page.locator(`[data-q="${name}"]`);
-const words = (name) => q(name).first().innerText();
 let passed = 0;
 let failed = 0;
+let page; // the one being looked at
 async function check(name, f) {
-  const began = Date.now();
+  const from = Date.now();
   try {
     await f();
     passed++;
-    console.log(`ok   ${name} (${((Date.now() - began) / 1000).toFixed(1)} s)`);
+    console.log(`ok   ${name} (${((Date.now() - from) / 1000).toFixed(1)} s)`);
   } catch (e) {
     failed++;
     console.log(`FAIL ${name}: ${e instanceof Error ? e.message : e}`);
-    if (shots) await page.screenshot({ path: join(shots, `failed-${failed}.png`) });
+    if (shots) await page.screenshot({ path: join(shots, `failed-${failed}.png`) }).catch(() => undefined);
   }
 }
-async function until(what, f, limit = within) {
+async function until(what, f, limit = 10_000) {
   const end = Date.now() + limit;
-  while (Date.now() < end) {
+  do {
     if (await f()) return;
     await page.waitForTimeout(100);
-  }
+  } while (Date.now() < end);
   throw new Error(`not within ${limit / 1000} s: ${what}`);
 }
-async function shoot(name) {
-  if (!shots) return;
-  for (const [width, height] of [[820, 1180], [1440, 900]]) {
-    await page.setViewportSize({ width, height });
-    await page.waitForTimeout(400);
-    await page.screenshot({ path: join(shots, `${name}-${width}x${height}.png`) });
+const q = (name) => page.locator(`[data-q="${name}"]`);
+const words = async (name) => (await q(name).first().textContent()).trim();
+const json = async (path) => (await fetch(server + path)).json();
+
+/** Screenshots at both sizes, in both schemes when `dark`; `picture` is for the README. */
+async function shoot(name, { dark = false, picture = '' } = {}) {
+  if (picture && renew) {
+    const png = small(await page.screenshot());
+    assert.ok(png.length <= 120_000, `${picture}: ${png.length} bytes`);
+    writeFileSync(join(pictures, picture), png);
   }
+  if (!shots) return;
+  for (const scheme of dark ? ['light', 'dark'] : ['light']) {
+    await page.emulateMedia({ colorScheme: scheme });
+    for (const [width, height] of [[820, 1180], [1440, 900]]) {
+      await page.setViewportSize({ width, height });
+      await page.waitForTimeout(250);
+      await page.screenshot({ path: join(shots, `${name}-${width}${scheme === 'dark' ? '-dark' : ''}.png`) });
+    }
+  }
+  await page.emulateMedia({ colorScheme: 'light' });
 }
 
-try {
-  await page.goto(`${base}#/watch`);
+/** Where everything with a fixed place stands. */
+const places = () => page.evaluate(() => [...document.querySelectorAll('header *:not(.tick *), .cell, .big > *, .tracerow, .tools *, .probe, .bands td, .bands th, .ledger > *')]
+  .map((e) => e.getBoundingClientRect()).map((r) => [r.x, r.y, r.width, r.height].map(Math.round).join()));
 
-  await check('a live margin is shown and changes', async () => {
-    const seen = new Set();
-    await until('three different margins', async () => {
-      const m = await words('margin');
-      if (/\d/.test(m)) seen.add(m);
-      return seen.size >= 3;
-    });
+/** Acknowledges the alarm of the line; gives its text. */
+async function acknowledge() {
+  let text = '';
+  await until('an acknowledged alarm', async () => {
+    text = await words('alarm-text');
+    const answer = page.waitForResponse((r) => r.url().endsWith('/acknowledge'));
+    await q('acknowledge').click();
+    const status = (await answer).status();
+    if (status === 409) return false; // it moved on: look again, press again
+    assert.equal(status, 202);
+    await page.waitForFunction((was) => {
+      const get = (name) => document.querySelector(`[data-q="${name}"]`)?.textContent;
+      return get('alarm-text') !== was || get('acknowledge') === 'Acknowledged';
+    }, text);
+    return true;
+  });
+  return text;
+}
+
+/** Plays the stored run of the open replay page until three margins have been seen. */
+async function plays() {
+  await page.locator('[data-q="replay-frame"] [data-q="margin"]').waitFor();
+  assert.match(await page.title(), /REPLAY/);
+  assert.equal(await page.locator('.watermark').innerText(), 'REPLAY');
+  assert.equal(await q('acknowledge').count(), 0, 'nothing is acknowledged in a replay');
+  const border = await page.locator('[data-q="replay-frame"]').evaluate((e) => parseFloat(getComputedStyle(e).borderTopWidth));
+  assert.ok(border >= 6, `frame of ${border} px`);
+  const before = await words('replay-clock');
+  await q('speed').selectOption('10');
+  await q('play').click();
+  const margins = new Set();
+  await until('the replay moves', async () => {
+    margins.add(await words('margin'));
+    return margins.size >= 3 && (await words('replay-clock')) !== before;
+  });
+}
+
+let daemon;
+let live;
+let other;
+try {
+  // An archive with nothing in it, and no data.
+  const empty = await watch(program, rig, join(place, 'empty'), await freePort());
+  server = empty.url;
+  page = follow(context.pages()[0] ?? (await context.newPage()));
+  await check('an empty archive and a rig without data say so', async () => {
+    await page.goto(`${server}#/runs`);
+    await until('the list', async () => (await page.locator('table').innerText()).includes('No run stored yet'));
+    await shoot('empty-runs');
+    await page.goto(`${server}#/watch`);
+    await until('no operating point', async () => /NO OPERATING POINT/.test(await words('conditions')));
+    assert.equal(await words('margin'), '–');
+    assert.equal(await words('state'), 'unknown');
+    await shoot('empty-watch');
+  });
+  away = true;
+  await page.goto('about:blank');
+  await empty.end();
+
+  // A whole stored test, and a short one live beside it.
+  const data = join(place, 'data');
+  command(program, 'rehearse', rig, '--into', data);
+  const port = await freePort();
+  daemon = await watch(program, rig, data, port, '--rehearse', '--quick');
+  server = daemon.url;
+  away = false;
+  // Latched alarms of the stored test stand until somebody has answered and reset them.
+  for (const action of ['acknowledge', 'reset']) {
+    for (const a of await json('api/alarms')) {
+      const body = JSON.stringify({ revision: a.revision, request_id: `${action} ${a.id}`, by: 'test' });
+      await fetch(`${server}api/alarms/${encodeURIComponent(a.id)}/${action}`, { method: 'POST', body });
+    }
+  }
+  live = page;
+  other = follow(await context.newPage());
+
+  // The live socket runs through the test, so that a frozen link can be made of it.
+  let frozen = false;
+  await live.routeWebSocket(/\/live\?/, (ws) => {
+    const upstream = ws.connectToServer();
+    upstream.onMessage((m) => { if (!frozen) ws.send(m); });
+    upstream.onClose((code, reason) => { void ws.close({ code: code === 1006 || code === 1005 ? 1001 : code, reason }); });
+  });
+
+  await check('the first visit loads at most 150 kB compressed', async () => {
+    const bodies = [];
+    const take = (r) => { if (!r.url().includes('/api/')) bodies.push(r.body()); };
+    live.on('response', take);
+    await live.goto(`${server}#/watch`);
+    await q('margin').waitFor();
+    live.off('response', take);
+    const size = (await Promise.all(bodies)).reduce((sum, b) => sum + gzipSync(b).length, 0);
+    console.log(`     ${bodies.length} files, ${(size / 1000).toFixed(1)} kB compressed`);
+    assert.ok(bodies.length >= 3 && size <= 150_000, `${size} bytes`);
+  });
+
+  await check('a live margin with its uncertainty changes', async () => {
+    await until('three margins', () => live.evaluate(() => window.seen.margins.size >= 3));
+    assert.match(await words('margin-u95'), /^± \d/);
     assert.match(await words('data-age'), /data age \d/);
   });
 
-  const states = new Set();
-  let caution = '';
-  let warned = false;
-  await check('an unchoked and a choked period are seen', () => until('both states', async () => {
-    const state = (await words('state')).trim();
-    if (state === 'choked' && !states.has(state)) await shoot('choked');
-    if (state === 'unchoked' && !states.has(state)) await shoot('unchoked');
-    states.add(state);
-    return states.has('choked') && states.has('unchoked');
-  }));
-
-  await check('an alarm appears with its caution', async () => {
-    await until('a caution or warning with a caution text', async () => {
-      const priority = await words('alarm-priority');
-      caution = await words('alarm-caution');
-      return /WARNING|CAUTION/.test(priority) && caution.length > 10 && (await q('acknowledge').isEnabled());
-    });
-    await shoot('alarm');
+  page = other;
+  await check('a stored run replays, framed REPLAY', async () => {
+    await page.goto(`${server}#/runs`);
+    await page.locator('[data-q="replay"]').first().waitFor();
+    await shoot('runs');
+    await page.locator('[data-q="replay"][data-state="ended"]').first().click();
+    await plays();
+    await page.keyboard.press('PageDown');
+    await page.waitForTimeout(700);
+    await page.locator('[data-q="replay-frame"] [data-q="alarm-priority"]:not(:empty)').waitFor();
+    await shoot('replay', { dark: true, picture: 'replay.png' });
+    await q('play').click();
+    await until('a pause', async () => (await words('play')) === 'Play');
+    const held = await words('replay-clock');
+    await page.waitForTimeout(400);
+    assert.equal(await words('replay-clock'), held, 'pause holds');
+    await page.locator('body').press('ArrowRight');
+    await until('one scan on', async () => (await page.locator('[data-q="replay-frame"]').count()) === 1);
+    await q('scrub').focus();
+    await page.keyboard.press('Home');
+    await until('scrubbed to the start', async () => (await words('replay-clock')).startsWith('0:00:00'));
   });
 
-  await check('the alarm can be acknowledged', async () => {
-    await until('an acknowledged alarm', async () => {
-      const before = await words('alarm-text');
-      const button = q('acknowledge');
-      if (!(await button.isEnabled())) return true;
-      const answer = page.waitForResponse((r) => r.url().includes('/acknowledge'), { timeout: 5000 });
-      await button.click();
-      const status = (await answer).status();
-      if (status === 409) return false; // it moved on: look again, press again
-      assert.equal(status, 202);
-      await page.waitForFunction((was) => {
-        const line = document.querySelector('[data-q="alarm-text"]');
-        const b = document.querySelector('[data-q="acknowledge"]');
-        return line?.textContent !== was || b?.textContent === 'Acknowledged';
-      }, before, { timeout: 5000 });
-      return true;
-    }, 30_000);
+  page = live;
+  await check('an unchoked, then a choked period are shown', async () => {
+    await live.evaluate(() => { window.seen.longest = 0; });
+    await until('choked', async () => (await words('state')) === 'choked', 40_000);
+    const longest = await live.evaluate(() => window.seen.longest); // before a screenshot makes tasks of its own
+    console.log(`     live page: longest task ${longest === 0 ? 'under 50' : longest.toFixed(0)} ms`);
+    assert.ok(await live.evaluate(() => window.seen.states.has('unchoked')));
+    await live.waitForTimeout(1000);
+    await shoot('watch', { dark: true, picture: 'watch.png' });
   });
 
-  await check('a warning of the exhaust temperature appears with its caution', async () => {
-    await until('a warning', async () => {
-      warned = (await words('alarm-priority')).includes('WARNING') && (await words('alarm-caution')).length > 10;
-      return warned;
+  await q('operator').fill('M. Alder');
+  await check('the unchoke caution comes and is acknowledged by name', async () => {
+    let seen;
+    await until('a caution', async () => (seen = await live.evaluate(() => window.seen.alarms.find((a) => /CAUTION/.test(a.priority) && /choke/i.test(a.text)))), 30_000);
+    assert.ok(seen.caution.length > 20 && seen.response.length > 5, JSON.stringify(seen));
+    await shoot('watch-caution');
+    const text = await acknowledge();
+    const listed = (await json('api/alarms')).find((a) => a.text === text);
+    assert.ok(!listed || listed.acknowledged_by === 'M. Alder', `acknowledged by ${listed?.acknowledged_by}`);
+  });
+
+  await check('a frozen link greys the page within 3 s and comes back', async () => {
+    frozen = true;
+    const told = Date.now();
+    await live.locator('.veiled[data-veiled]').waitFor();
+    assert.ok(Date.now() - told < 3500, `after ${Date.now() - told} ms`);
+    assert.match(await live.locator('.veilwords').innerText(), /NO DATA LINK since \d\d:\d\d:\d\d/);
+    assert.equal(await words('margin'), '–', 'no stale margin');
+    assert.ok(await q('acknowledge').isDisabled(), 'nothing to press without a link');
+    frozen = false;
+    await until('the veil is gone', async () => (await live.locator('.veiled[data-veiled]').count()) === 0);
+    await until('a margin again', async () => /\d/.test(await words('margin')));
+  });
+
+  await check('a reload in the middle of a run shows no hole', async () => {
+    await live.setViewportSize({ width: 1440, height: 900 });
+    const run = (await json('api/runs')).find((r) => r.state === 'active');
+    await live.reload();
+    await until('a margin', async () => /\d/.test(await words('margin')));
+    const now = Date.parse((await json(`api/rigs/${run.rig}/hello`)).host_time) / 1000;
+    const age = now - Date.parse(run.started) / 1000;
+    assert.ok(age > 10, `the run is ${age} s old`);
+    // The cursor is led along the first chart, to each second of the run.
+    const holes = await live.evaluate(async (last) => {
+      const chart = document.querySelector('.traces .u-over');
+      const box = chart.getBoundingClientRect();
+      const out = [];
+      for (let back = 1.5; back < last; back++) {
+        chart.dispatchEvent(new MouseEvent('mousemove', { bubbles: true, clientX: box.x + box.width * (1 - back / 120), clientY: box.y + 10 }));
+        await new Promise((r) => setTimeout(r, 120)); // at least one draw
+        if (!/\d/.test(document.querySelector('.keyline .value').textContent)) out.push(back);
+      }
+      chart.dispatchEvent(new MouseEvent('mouseleave'));
+      return out;
+    }, Math.min(age - 1, 118));
+    assert.deepEqual(holes, [], 'seconds back at which there is no value');
+  });
+
+  await check('the over-temperature warning comes with its caution, is acknowledged', async () => {
+    let seen;
+    await until('a warning', async () => (seen = await live.evaluate(() => window.seen.alarms.find((a) => /WARNING/.test(a.priority) && /EGT/.test(a.text)))), 40_000);
+    assert.ok(seen.caution.length > 20 && seen.response.length > 5, JSON.stringify(seen));
+    assert.match(await live.locator('.bands').innerText(), /exceeded/);
+    await shoot('watch-alarm', { dark: true, picture: 'watch-alarm.png' });
+    await live.setViewportSize({ width: 1440, height: 900 });
+    await acknowledge();
+  });
+
+  await check('units switch everywhere, without a shift, and are kept', async () => {
+    const before = await places();
+    assert.match(await words('thrust'), /^\d\.\d\d$/);
+    await q('units').selectOption('us');
+    await until('pounds', async () => /lb\/s/.test(await live.locator('.display').innerText()));
+    await live.waitForTimeout(300);
+    const shown = await live.locator('.display').innerText();
+    for (const sign of ['lb/s', 'lbf', 'psi', '°F']) assert.ok(shown.includes(sign), `${sign} is shown`);
+    for (const sign of ['kg/s', 'kN', 'kPa', ' K\n']) assert.ok(!shown.includes(sign), `${JSON.stringify(sign)} is still shown`);
+    assert.ok(!/°C/.test(await live.locator('.ledger, .traces').allInnerTexts().then((t) => t.join())));
+    assert.deepEqual(await places(), before, 'nothing moved');
+    await shoot('watch-us');
+    assert.equal(await live.evaluate(() => localStorage.getItem('throatwatch.units')), 'us');
+    await q('units').selectOption('si');
+  });
+
+  await check('the key M sets a mark under the operator’s name', async () => {
+    await live.locator('body').click({ position: { x: 700, y: 12 } });
+    await live.keyboard.press('m');
+    await live.keyboard.type('point one');
+    await live.keyboard.press('Enter');
+    const run = (await json('api/runs')).find((r) => r.state === 'active');
+    await until('the mark is stored', async () => {
+      const lines = (await (await fetch(`${server}api/runs/${run.id}/messages?kinds=mark`)).text()).trim().split('\n').filter(Boolean).map((l) => JSON.parse(l));
+      return lines.some((f) => f.mark.text === 'point one' && f.mark.by === 'M. Alder');
     });
-    await shoot('warning');
   });
 
   await check('Watch fits 1440×900 and 820 wide', async () => {
-    await page.setViewportSize({ width: 1440, height: 900 });
-    await page.waitForTimeout(300);
-    const wide = await page.evaluate(() => [document.documentElement.scrollHeight, document.documentElement.scrollWidth]);
-    assert.deepEqual(wide, [900, 1440]);
-    await page.setViewportSize({ width: 820, height: 1180 });
-    await page.waitForTimeout(300);
-    assert.equal(await page.evaluate(() => document.documentElement.scrollWidth), 820);
-    await page.setViewportSize({ width: 1440, height: 900 });
+    for (const [width, height] of [[1440, 900], [820, 1180]]) {
+      await live.setViewportSize({ width, height });
+      await live.waitForTimeout(200);
+      const [w, h, over] = await live.evaluate(() => [document.documentElement.scrollWidth, document.documentElement.scrollHeight,
+        [...document.querySelectorAll('header *, main *')].filter((e) => e.checkVisibility() && !e.closest('.spoken, .plots') && e.getBoundingClientRect().right > innerWidth + 1).map((e) => e.className || e.tagName)]);
+      assert.equal(w, width);
+      if (width === 1440) assert.equal(h, 900);
+      assert.deepEqual(over, [], 'stands out to the right');
+    }
+    await live.setViewportSize({ width: 1440, height: 900 });
   });
 
-  await check('sound is off until armed, and says so', async () => {
-    assert.match(await words('sound'), /off/);
-    await q('sound').click();
-    await until('armed', async () => /armed/.test(await words('sound')), 5000);
-  });
-
-  await check('a frozen link greys the page and it comes back', async () => {
-    const told = Date.now();
-    frozen = true;
-    await page.locator('.veiled[data-veiled]').waitFor({ timeout: 6000 });
-    assert.ok(Date.now() - told < 5000, 'within 5 s');
-    assert.match(await page.locator('.veilwords').innerText(), /NO DATA LINK since \d\d:\d\d:\d\d/);
-    assert.equal((await words('margin')).trim(), '–', 'no stale margin');
-    assert.ok(await q('acknowledge').isDisabled(), 'nothing to press without a link');
-    await shoot('no-link');
-    frozen = false;
-    await until('the veil is gone', async () => (await page.locator('.veiled[data-veiled]').count()) === 0, 15_000);
-    await until('a margin again or its cause', async () => /\d/.test(await words('margin')) || (await words('cause')) !== '', 15_000);
-  });
-
-  for (const name of ['alarms', 'rig', 'help']) {
-    await check(`the page ${name} opens`, async () => {
-      await page.goto(`${base}#/${name}`);
-      await page.locator('h1').waitFor({ timeout: 5000 });
-      await page.waitForTimeout(600);
+  page = other;
+  for (const name of ['rig', 'alarms', 'help']) {
+    await check(`the page ${name}`, async () => {
+      await page.setViewportSize({ width: 1440, height: 900 });
+      await page.goto(`${server}#/${name}`);
+      await page.locator('h1').waitFor();
+      await page.waitForTimeout(500);
       assert.match(await page.locator('footer').innerText(), /only watches.*not protection/);
-      if (name === 'rig') assert.ok((await page.locator('.channels tbody tr').count()) > 3);
-      await shoot(name);
+      if (name === 'alarms') {
+        assert.match(await page.locator('.past').innerText(), /unchoked/i, 'what happened before the page was opened');
+        assert.match(await page.locator('.past').innerText(), /EGT/);
+      }
+      if (name === 'rig') {
+        assert.ok((await page.locator('.channels tbody tr').count()) > 20);
+        assert.match(await words('p-choked'), /%$/);
+      }
+      await shoot(name, { dark: name !== 'help', picture: name === 'rig' ? 'rig.png' : '' });
+      const [w, c] = await page.evaluate(() => [document.documentElement.scrollWidth, innerWidth]);
+      assert.ok(w <= c, `${w} px wide`);
     });
   }
 
-  await check('a stored run plays, framed REPLAY', async () => {
-    await page.goto(`${base}#/runs`);
-    await page.locator('[data-q="replay"]').first().waitFor({ timeout: 10_000 });
-    await shoot('runs');
-    const ended = page.locator('[data-q="replay"][data-state="ended"]');
-    await ((await ended.count()) > 0 ? ended : page.locator('[data-q="replay"]')).first().click();
-    await page.locator('[data-q="replay-frame"] [data-q="margin"]').waitFor({ timeout: 20_000 });
-    assert.match(await page.title(), /REPLAY/);
-    assert.equal(await page.locator('.watermark').innerText(), 'REPLAY');
-    assert.equal(await q('acknowledge').count(), 0, 'nothing is acknowledged in a replay');
-    const border = await page.locator('[data-q="replay-frame"]').evaluate((e) => parseFloat(getComputedStyle(e).borderTopWidth));
-    assert.ok(border >= 6, `frame of ${border} px`);
-    const before = await words('replay-clock');
-    await q('speed').selectOption('10');
-    await q('play').click();
-    const seen = new Set();
-    await until('the replay clock and the margin move', async () => {
-      seen.add(await words('margin'));
-      return seen.size >= 3 && (await words('replay-clock')) !== before;
-    }, 30_000);
-    await page.waitForTimeout(2500);
-    await shoot('replay');
-    if ((await words('play')) === 'Pause') await q('play').click();
-    const held = await words('replay-clock');
-    await page.waitForTimeout(600);
-    assert.equal(await words('replay-clock'), held, 'pause holds');
-    await q('scrub').focus();
-    await page.keyboard.press('Home');
-    await until('scrubbed to the start', async () => (await words('replay-clock')).startsWith('0:00:00'), 10_000);
+  page = live;
+  await check('sound is off until armed, and says so', async () => {
+    assert.match(await words('sound'), /off/);
+    await q('sound').click();
+    await until('armed', async () => /armed/.test(await words('sound')));
   });
 
-  await check('no fault in the page, nothing loaded from outside', async () => {
+  let ended;
+  await check('a run is ended by hand, only after a confirmation', async () => {
+    const active = async () => (await json('api/runs')).find((r) => r.state === 'active');
+    const before = await active();
+    await q('run-button').click();
+    const time = await live.locator('.clock').innerText();
+    await live.getByRole('dialog').getByRole('button', { name: 'Cancel' }).click();
+    assert.equal((await active())?.id, before.id, 'cancelled: it goes on');
+    await q('run-button').click();
+    await until('the page goes on behind the question', async () => (await live.locator('.clock').innerText()) !== time);
+    await shoot('end-run');
+    await q('confirm').click();
+    await until('ended', async () => !(await active()));
+    ended = before.id;
+    await until('the page knows', async () => (await words('run-button')) === 'Start run…' && (await words('run')) === 'none');
+  });
+
+  await check('the run just watched replays', async () => {
+    await live.goto(`${server}#/run/${ended}`);
+    await plays();
+    await live.goto(`${server}#/watch`);
+    await until('live again', async () => (await q('acknowledge').count()) === 1);
+  });
+
+  await check('a killed daemon greys the page; a new one brings it back', async () => {
+    away = true;
+    await daemon.kill();
+    const told = Date.now();
+    await live.locator('.veiled[data-veiled]').waitFor();
+    assert.ok(Date.now() - told < 3000, `after ${Date.now() - told} ms`);
+    assert.match(await live.locator('.veilwords').innerText(), /NO DATA LINK since \d\d:\d\d:\d\d/);
+    for (const name of ['margin', 'npr', 'w8', 'thrust', 'egt']) assert.equal(await words(name), '–', `${name} does not look alive`);
+    await shoot('dead', { dark: true });
+    daemon = await watch(program, rig, data, port, '--rehearse', '--quick');
+    await until('back without a reload', async () => (await live.locator('.veiled[data-veiled]').count()) === 0);
+    await until('a margin', async () => /\d/.test(await words('margin')));
+    away = false;
+  });
+
+  away = true;
+  await live.goto('about:blank');
+  await other.close();
+  await daemon.end();
+
+  await check('12 traces of 10 min at 20 scans/s are drawn at least 15 times a second', async () => {
+    const { output } = await build({ root, configFile: false, logLevel: 'error', publicDir: false, build: { write: false, lib: { entry: 'test/bench.ts', formats: ['iife'], name: 'page' } } }).then((r) => (Array.isArray(r) ? r[0] : r));
+    await live.setViewportSize({ width: 1440, height: 900 });
+    await live.setContent('<!doctype html><title>benchmark</title>');
+    for (const f of output) await (f.type === 'chunk' ? live.addScriptTag({ content: f.code }) : live.addStyleTag({ content: String(f.source) }));
+    const r = await live.evaluate(() => window.bench(5));
+    console.log(`     ${r.charts} charts, ${r.rows} scans: ${r.drawsPerSecond.toFixed(1)} draws/s, script of one ${r.meanDraw.toFixed(1)} ms (longest ${r.longestDraw.toFixed(1)}), longest task ${r.longestTask === 0 ? 'under 50' : r.longestTask.toFixed(0)} ms`);
+    assert.ok(r.rows >= 12_000 && r.drawsPerSecond >= 15, JSON.stringify(r));
+  });
+
+  await check('no fault in the console, nothing loaded from outside', () => {
     assert.deepEqual(faults, []);
     assert.deepEqual(outside, []);
   });
 } finally {
   await context.close();
-  rmSync(profile, { recursive: true, force: true });
-  await mock?.stop();
+  await daemon?.kill();
+  rmSync(place, { recursive: true, force: true });
 }
+console.log(`${((Date.now() - began) / 1000).toFixed(0)} s`);
 console.log(`${passed} passed, ${failed} failed`);
 process.exitCode = failed > 0 ? 1 : 0;

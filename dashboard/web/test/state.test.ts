@@ -96,6 +96,7 @@ test('freshness', async (t) => {
     { name: 'no status for more than 2 s', frames: [[status(t0), 1000], [point(t0), 3000]], connected: true, now: 3001, want: 'no_link' },
     { name: 'socket gone', frames: [[status(t0), 1000], [point(t0), 1100]], connected: false, now: 1150, want: 'no_link' },
     { name: 'points stop, status goes on', frames: [[point(t0), 100], [status(t0 + 1), 1200]], connected: true, now: 1300, want: 'no_points' },
+    { name: 'nothing has ever come: there is nothing to catch up with', frames: [[status(t0, { catching_up: true, data_age_s: null }), 1000]], connected: true, now: 1100, want: 'no_points' },
     { name: 'catching up after an outage', frames: [[status(t0, { catching_up: true, data_age_s: 40 }), 1000], [point(t0 - 40), 1010]], connected: true, now: 1100, want: 'catching_up' },
   ];
   for (const r of rows) {

@@ -144,7 +144,8 @@ export function traces(d: Display, tools: HTMLElement | null, make: (u: UnitSet)
           { ...axis, show: true, size: lastRow ? axisHeight : 0, values: lastRow ? (_u, ticks) => ticks.map(clock) : () => [], space: 90 },
           { ...axis, size: 46, space: 24, gap: 4, values: (_u, ticks) => ticks.map((v) => fixed(v, v % 1 === 0 ? 0 : 1)) },
         ],
-        series: [{}, ...plot.lines.map((_, k) => ({ stroke: k === 0 ? p.data : p.data2, width: k === 0 ? 1.5 : 1.25, ...(k > 0 ? { dash: [6, 3] } : {}), points: { show: false }, spanGaps: false }))],
+        // One pixel wide: a browser without a graphics processor draws that three times as fast as 1.5.
+        series: [{}, ...plot.lines.map((_, k) => ({ stroke: k === 0 ? p.data : p.data2, width: 1, ...(k > 0 ? { dash: [6, 3] } : {}), points: { show: false }, spanGaps: false }))],
         hooks: {
           drawClear: [(u) => paintShading(u, p)],
           draw: [(u) => paintLimits(u, plot, p), (u) => paintFlags(u, p, i === 0)],
