@@ -181,6 +181,9 @@ func (r *pointRequest) compute() (*pointAnswer, error) {
 		Discharge: []nozzle.Point{{NPR: 1, Value: r.discharge.si}},
 		Thrust:    []nozzle.Point{{NPR: 1, Value: r.thrust.si}},
 		DuctLoss:  r.ductLoss.si,
+		// As rigs have it unless they say otherwise: a stopped engine with a zero error of
+		// 0.3 % has no flow.
+		ResolutionFloor: 0.003,
 	}}
 	c := &a.config
 	if r.throatArea.text != "" {

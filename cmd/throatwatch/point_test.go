@@ -279,7 +279,7 @@ func TestPointDuctLoss(t *testing.T) {
 }
 
 func TestPointStates(t *testing.T) {
-	for pressure, want := range map[string]string{"250kPa": "choked", "150kPa": "unchoked", "101.325kPa": "no_flow", "90kPa": "no_flow"} {
+	for pressure, want := range map[string]string{"250kPa": "choked", "150kPa": "unchoked", "101.325kPa": "no_flow", "101.426kPa": "no_flow", "90kPa": "no_flow"} {
 		r := runPoint(t, "--total-pressure", pressure, "--total-temperature", "900K", "--back-pressure", "101.325kPa", "--throat-area", "0.02m2")
 		if r.ChokeState != want || r.ChokeMarginal || (*r.MassFlow == 0) != (want == "no_flow") || (len(r.Warnings) > 0) != (pressure == "90kPa") {
 			t.Errorf("%s: %s, W %v, warnings %q", pressure, r.ChokeState, *r.MassFlow, r.Warnings)

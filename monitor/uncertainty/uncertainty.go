@@ -199,6 +199,7 @@ type propagation struct {
 	follow   float64
 	residual float64 // variance of that rest
 	bounded  bool    // the quantiles of NPR exist
+	extent   float64 // distance of the quantiles over that of low and high, at most 1
 
 	change [thermal]nozzle.Result // base, with one of temperature and composition off
 	factor [thermal]float64       // u over how far off
@@ -326,8 +327,13 @@ func (s *propagation) pressures(p *Point, line *nozzle.Line, size *[NumInputs]fl
 	s.bounded = a > 0 && b > 0 && c > 0
 	// Where the pressures have next to no uncertainty, the slope is still wanted.
 	const least = 1e-5
-	if !s.bounded || !(high-low > 2*least) {
-		low, high = 1-least, 1+least
+	switch {
+	case !s.bounded:
+		s.extent, low, high = 0, 1-least, 1+least
+	case high-low < 2*least:
+		s.extent, low, high = (high-low)/(2*least), 1-least, 1+least
+	default:
+		s.extent = 1
 	}
 	s.logLow, s.logHigh = math.Log(low), math.Log(high)
 	if s.low, err = p.Nozzle.On(line, p7, pb/unit.Absolute(low)); err != nil {
@@ -416,8 +422,8 @@ func (s *propagation) scaled(r *Result, size *[NumInputs]float64) {
 // same total pressure; scale is how the output goes with ln p7 at the same NPR. All
 // other contributions are taken as linear.
 func (s *propagation) bound(e *Estimate, v, atLow, atHigh, scale float64) {
-	atLow += scale * s.follow * s.logLow
-	atHigh += scale * s.follow * s.logHigh
+	atLow = s.extent * (atLow + scale*s.follow*s.logLow)
+	atHigh = s.extent * (atHigh + scale*s.follow*s.logHigh)
 	linear := scale * scale * s.residual
 	for i, c := range e.Contribution {
 		if i > int(CommonPressure) {
@@ -453,10 +459,11 @@ func (s *propagation) convergent(r *Result) {
 	expanded, low, high, critical := full(&s.base), full(&s.low), full(&s.high), sonic(&s.base)
 	for k := range expanded {
 		subsonic, choked := branch{mean: expanded[k]}, branch{mean: critical[k]}
+		slope := 0.0 // the back pressure is as it is
 		if k != int(pressure) {
-			subsonic.atLow, subsonic.atHigh = low[k]-expanded[k], high[k]-expanded[k]
+			slope = (high[k] - low[k]) / (s.logHigh - s.logLow)
+			subsonic.atLow, subsonic.atHigh = s.extent*(low[k]-expanded[k]), s.extent*(high[k]-expanded[k])
 		}
-		slope := (subsonic.atHigh - subsonic.atLow) / (s.logHigh - s.logLow)
 		for i := range thermal {
 			if k == int(pressure) {
 				subsonic.effects[i] = expanded[k] * (s.total[i] - s.npr[i]) // the back pressure

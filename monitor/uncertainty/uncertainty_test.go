@@ -61,6 +61,8 @@ func TestChokedFlowBudget(t *testing.T) {
 		{"upper bound", w.High, 8.03854960 + Coverage*0.01892611, 3e-6},
 		{"lower bound", w.Low, 8.03854960 - Coverage*0.01892611, 3e-6},
 		{"u_c", math.Hypot(w.Systematic, w.Random), 0.01892611, 3e-6},
+		{"lower bound of 1e5 draws", w.Low, 8.001616, 1e-4}, // rectangular p0 and T0
+		{"upper bound of 1e5 draws", w.High, 8.075750, 1e-4},
 		{"relative sensitivity to T0", w.Contribution[TotalTemperature] / (2.5074 / math.Sqrt(3)) * 900 / w.Value, -0.52164206, 1e-5},
 		{"relative sensitivity to f", w.Contribution[FuelAirRatio] / 0.0004 * 0.02 / w.Value, -0.00342181, 1e-4},
 		{"part of Cd", w.Contribution[Discharge] / w.Value, 0.0020619, 1e-4},
@@ -216,6 +218,25 @@ func TestEdges(t *testing.T) {
 	still := point(t, 101400, 300, func(c *nozzle.Config) { c.ResolutionFloor = 0.002 })
 	if r := evaluate(t, still, u); r.Outputs[MassFlow].Value != 0 || !math.IsNaN(r.Outputs[MassFlow].U95) || !(r.Outputs[NPR].U95 > 0) {
 		t.Errorf("no flow: %+v", r.Outputs[MassFlow])
+	}
+	for o := MassFlow; o < NumOutputs; o++ {
+		if e := evaluate(t, still, u).Outputs[o]; !math.IsNaN(e.Low + e.High) {
+			t.Errorf("no flow: %s from %v to %v", o, e.Low, e.High)
+		}
+	}
+	// A pressure that may be next to nothing bounds no ratio.
+	wide := evaluate(t, p, &Inputs{BackPressure: {Systematic: 60e3}, ChokeNPR: {Systematic: 0.01}}).Outputs
+	if e := wide[NPR]; !math.IsNaN(e.High) || !(e.U95 > 0) {
+		t.Errorf("u of back pressure 60 %%: %+v", e)
+	}
+	if e := wide[ChokePoint]; !near(e.High, e.Value*(1+0.01*Coverage), 1e-12) {
+		t.Errorf("u of back pressure 60 %%: %+v", e)
+	}
+	// Nothing stated, nothing spread.
+	for o, e := range evaluate(t, p, &Inputs{}).Outputs {
+		if e.Low != e.Value || e.High != e.Value {
+			t.Errorf("%s without uncertainty: %v from %v to %v", Output(o), e.Value, e.Low, e.High)
+		}
 	}
 	// Without an area there is no flow, but a margin.
 	unknown := point(t, 250e3, 900, func(c *nozzle.Config) { c.ThroatArea = 0 })
