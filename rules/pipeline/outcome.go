@@ -146,8 +146,14 @@ func (d *Digest) Add(o *Outcome) {
 			b = binary.LittleEndian.AppendUint64(b, math.Float64bits(v))
 		}
 		b = append(b, byte(p.Choke), byte(p.Phase), byte(p.BackFrom), byte(p.TemperatureBy), byte(p.ChokeNPRFrom),
-			flag(p.ChokeMarginal), flag(p.ChokeArmed), flag(p.Lit))
+			flag(p.ChokeMarginal), flag(p.ChokeArmed), flag(p.Lit), flag(p.LitKnown))
 		b = binary.LittleEndian.AppendUint32(b, uint32(p.Warnings))
+		b = binary.LittleEndian.AppendUint16(b, uint16(p.EGTProbesUsed))
+		b = binary.LittleEndian.AppendUint16(b, uint16(p.RakeProbesUsed))
+		for _, c := range [...]monitor.Cause{p.Cause, p.EGTCause} {
+			b = append(b, byte(c.Kind), byte(c.Quality))
+			b = binary.LittleEndian.AppendUint32(b, uint32(c.Channel))
+		}
 	} else {
 		text, err := json.Marshal(o.Alarm)
 		if err != nil {

@@ -9,6 +9,7 @@ import (
 	"errors"
 	"fmt"
 	"slices"
+	"strconv"
 	"time"
 
 	"throatwatch/ingest"
@@ -31,6 +32,9 @@ const (
 	abandoned = 600 * second
 	// forgotten is the host time after which a silent source is no longer listed.
 	forgotten = 3600 * second
+	// scansKept is how many scan buffers are kept from step to step: a backlog that
+	// closes thousands in one step must not hold their memory for ever.
+	scansKept = 64
 )
 
 // Boot is the payload of a boot record.
@@ -90,6 +94,7 @@ var (
 	ErrRunActive = errors.New("a run is on already")
 	ErrUnknown   = errors.New("no such action")
 	ErrNoData    = errors.New("no scan yet: there is no event time to put it at")
+	ErrNoConfig  = errors.New("no configuration is in force yet")
 )
 
 // Machine steps records. It belongs to one goroutine.
@@ -176,6 +181,7 @@ func (m *Machine) load(bundle []byte) error {
 // Step steps one record: record numbers must follow each other without a hole,
 // except over a gap record. What it gives is valid until the next step.
 func (m *Machine) Step(s *State, r *ingest.Record) []Outcome {
+	clear(m.outs)
 	m.outs, m.alarm = m.outs[:0], m.alarm[:0]
 	if r.Seq != s.Seq+1 && s.Seq != 0 && r.Kind != ingest.KindGap {
 		panic(fmt.Sprintf("pipeline: record %d follows record %d", r.Seq, s.Seq))
@@ -207,6 +213,10 @@ func (m *Machine) Step(s *State, r *ingest.Record) []Outcome {
 		return m.outs
 	}
 	p := m.prog
+	if len(p.scans) > scansKept {
+		clear(p.scans[scansKept:])
+		p.scans = p.scans[:scansKept]
+	}
 	for p.used, p.listed = 0, 0; ; p.used++ {
 		if p.used == len(p.scans) {
 			p.scans = append(p.scans, &computed{scan: monitor.NewScan(len(p.cfg.Align.Channels))})
@@ -369,10 +379,14 @@ func (m *Machine) runs(s *State, p *monitor.OperatingPoint) {
 
 func (m *Machine) startRun(s *State, t int64, by string) {
 	rig := &m.prog.cfg.Rig
+	id := rig.ID + "-" + time.Unix(0, t).UTC().Format("20060102T150405Z")
 	s.Runs++
+	if s.Run.Started/second == t/second { // another in the same second
+		id += "-" + strconv.FormatUint(s.Runs, 10)
+	}
 	s.RunActive = true
 	s.Run = monitor.Run{
-		ID:     rig.ID + "-" + time.Unix(0, t).UTC().Format("20060102T150405Z"),
+		ID:     id,
 		Number: s.Runs, Rig: rig.ID, Engine: rig.EngineModel + " " + rig.EngineSerial, Started: t, By: by,
 	}
 	s.Compute.EGT.Reset()
@@ -408,14 +422,14 @@ func (m *Machine) status(s *State) {
 // act does what an operator asked for, once per request.
 func (m *Machine) act(s *State, r *ingest.Record) {
 	var a Action
-	if err := json.Unmarshal(r.Payload, &a); err != nil {
-		return
-	}
-	if m.prog == nil {
-		return
-	}
+	err := json.Unmarshal(r.Payload, &a)
 	res := &ActionResult{RequestID: a.RequestID}
-	if a.RequestID == "" || !slices.Contains(s.Done, a.RequestID) {
+	switch {
+	case err != nil:
+		res.Err = fmt.Errorf("action: %w", err)
+	case m.prog == nil:
+		res.Err = fmt.Errorf("%s: %w", a.Do, ErrNoConfig)
+	case a.RequestID == "" || !slices.Contains(s.Done, a.RequestID):
 		res.Err = m.do(s, &a)
 		if res.Err == nil && a.RequestID != "" {
 			if len(s.Done) == requestsKept {
