@@ -40,13 +40,33 @@ tool() {
   echo "$2" >"$stamp"
 }
 
+# need_node puts a Node.js on the path that the page's tools take. Where Debian's
+# is older, a newer one comes as an npm package.
+need_node() {
+  local wanted=20.19 newer=22.23.5 arch
+  need node nodejs npm
+  need npm npm
+  if [ "$(printf '%s\n' "v$wanted" "$(node --version)" | sort -V | head -n 1)" = "v$wanted" ]; then return; fi
+  case "$(uname -m)" in
+    x86_64) arch=x64 ;;
+    aarch64) arch=arm64 ;;
+    *) echo "Node.js $(node --version) is older than $wanted, and there is no package of a newer one for $(uname -m)" >&2; exit 1 ;;
+  esac
+  local dir="$build/node/node_modules/node-linux-$arch/bin"
+  if [ ! -x "$dir/node" ]; then
+    say "installing Node.js $newer, as $(node --version) is older than $wanted"
+    npm install --silent --no-audit --no-fund --prefix "$build/node" "node-linux-$arch@$newer"
+  fi
+  export PATH="$dir:$PATH"
+}
+
 # page builds the web part into dashboard/web/dist when its sources changed.
 page() {
+  need_node
   local web="$root/dashboard/web" now stamp
   now="$(cd "$web" && find . -path ./node_modules -prune -o -path ./dist -prune -o -type f -print0 | sort -z | xargs -0 sha256sum | sha256sum)"
   stamp="$build/page.sum"
   [ -f "$web/dist/index.html" ] && [ "$(cat "$stamp" 2>/dev/null)" = "$now" ] && return
-  need node nodejs npm
   say "building the page"
   (cd "$web" && npm ci --no-audit --no-fund --silent && npm run --silent build)
   touch "$web/dist/.keep"
