@@ -12,8 +12,9 @@ import (
 // TestAgainstMonteCarlo compares with JCGM 101: 10⁶ draws of a fixed seed, half-widths
 // within 2 %, ends of the throat state's intervals within 2 % of the half-width, as a
 // standards laboratory would ask; the bounds of 10⁶ draws themselves scatter by 0.3 % of it.
+// The convergent-divergent nozzle has fewer draws, which scatter by 0.7 %.
 func TestAgainstMonteCarlo(t *testing.T) {
-	const draws, critical = 1_000_000, 1.85852 * 101325
+	const critical = 1.85852 * 101325
 	ordinary := Inputs{
 		TotalPressure: {Systematic: 200, Random: 150}, BackPressure: {Systematic: 60}, CommonPressure: {Systematic: 100},
 		TotalTemperature: {Systematic: 4, Random: 2}, FuelAirRatio: {Systematic: 0.0005}, HumidityRatio: {Systematic: 0.001},
@@ -33,17 +34,18 @@ func TestAgainstMonteCarlo(t *testing.T) {
 		u      *Inputs
 		change func(*nozzle.Config)
 		within float64 // of the half-width
+		draws  int
 	}{
-		{"choked", 250e3, &ordinary, nil, 0.02},
-		{"unchoked, Cd of NPR", 150e3, &ordinary, table, 0.02},
-		{"at Mach 1", critical, &ordinary, nil, 0.02},
-		{"at Mach 1, cold", critical, &cold, nil, 0.02},
-		{"just below Mach 1", critical * 0.998, &cold, nil, 0.02},
-		{"at Mach 1, poor", critical, &poor, nil, 0.02},
-		{"near no flow", 1.01 * 101325, &small, nil, 0.02},
-		{"at no flow", 1.002 * 101325, &small, nil, 0.02},
-		{"divergent, shock inside", 140e3, &ordinary, divergent, 0.02},
-		{"divergent, at the first critical ratio", 1.25678 * 101325, &ordinary, divergent, 0.1},
+		{"choked", 250e3, &ordinary, nil, 0.02, 1_000_000},
+		{"unchoked, Cd of NPR", 150e3, &ordinary, table, 0.02, 1_000_000},
+		{"at Mach 1", critical, &ordinary, nil, 0.02, 1_000_000},
+		{"at Mach 1, cold", critical, &cold, nil, 0.02, 1_000_000},
+		{"just below Mach 1", critical * 0.998, &cold, nil, 0.02, 1_000_000},
+		{"at Mach 1, poor", critical, &poor, nil, 0.02, 1_000_000},
+		{"near no flow", 1.01 * 101325, &small, nil, 0.02, 1_000_000},
+		{"at no flow", 1.002 * 101325, &small, nil, 0.02, 1_000_000},
+		{"divergent, shock inside", 140e3, &ordinary, divergent, 0.02, 200_000},
+		{"divergent, at the first critical ratio", 1.25678 * 101325, &ordinary, divergent, 0.1, 200_000},
 	} {
 		t.Run(tc.name, func(t *testing.T) {
 			t.Parallel()
@@ -55,7 +57,7 @@ func TestAgainstMonteCarlo(t *testing.T) {
 			}
 			p.Gas = &g
 			r := evaluate(t, p, tc.u)
-			mc, err := MonteCarlo(p, tc.u, draws, rand.New(rand.NewPCG(20240601, 1)))
+			mc, err := MonteCarlo(p, tc.u, tc.draws, rand.New(rand.NewPCG(20240601, 1)))
 			if err != nil {
 				t.Fatal(err)
 			}
