@@ -106,7 +106,11 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	if w.store, err = watch.OpenStore(ctx, w.opt.data, runfile.Options{}, w.log); err != nil {
 		return err
 	}
-	defer func() { err = errors.Join(err, w.store.Close(context.WithoutCancel(ctx))) }()
+	defer func() {
+		if !errors.Is(err, watch.ErrHangs) { // the files are in the hands of the disk
+			err = errors.Join(err, w.store.Close(context.WithoutCancel(ctx)))
+		}
+	}()
 	core, err := w.store.Restore(ctx, pipeline.NewMachine(watch.Parse), watch.Build(), runtime.GOARCH)
 	if err != nil {
 		return err

@@ -46,7 +46,7 @@ type Batch struct {
 	Columns    []*pipeline.Columns // to be encoded as chunks
 	Checkpoint *runfile.Checkpoint
 	Begin      *RunHeader // after this batch the records go to a run file
-	End        *RunHeader // with this batch the run file ends
+	End        *RunHeader // with this batch the run file ends, before another begins
 	Raised     int        // alarms raised, for the header
 	First      int64      // host time of the first record
 }
@@ -128,11 +128,14 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 				Event string `json:"event"`
 				Run   any    `json:"run"`
 			}{o.Event, o.Run})
-			if o.Event == "started" {
+			switch {
+			case o.Event == "started":
 				c.batch.Begin = c.Header()
-			} else {
+			case c.batch.Begin != nil: // it began among records that were dropped: nothing of it is stored
+				c.batch.Begin = nil
+			default:
 				h := c.Header()
-				h.Ended, h.State, h.Digest = o.Run.Ended, runfile.StateEnded, c.Digest.String()
+				h.Ended, h.State = o.Run.Ended, runfile.StateEnded
 				c.batch.End = h
 			}
 		case pipeline.OutcomeConfig:
@@ -189,6 +192,9 @@ func (c *Core) Cut() (*Batch, error) {
 			return nil, err
 		}
 	}
+	if b.End != nil { // after a gap it is the digest of what is stored behind it
+		b.End.Digest = c.Digest.String()
+	}
 	c.batch = &Batch{}
 	return b, nil
 }
@@ -196,7 +202,8 @@ func (c *Core) Cut() (*Batch, error) {
 // Due tells that the batch must be cut before the next record.
 func (c *Core) Due() bool { return c.batch.Begin != nil || c.batch.End != nil }
 
-// Drop forgets the batch: its records were stepped and will not be stored.
+// Drop forgets the batch: its records were stepped and will not be stored. That a
+// run began or ended is kept, for the batch behind the gap.
 func (c *Core) Drop() int {
 	n := len(c.batch.Records)
 	c.batch = &Batch{Begin: c.batch.Begin, End: c.batch.End}

@@ -20,6 +20,8 @@ const (
 	// stalledAfter is the age of the oldest record not yet stored at which the
 	// loop stops waiting for the disk, ns.
 	stalledAfter = int64(time.Second)
+	// drainFor is the time that the disk gets when the loop ends.
+	drainFor = 5 * time.Second
 	// clockStep is the least step of the wall clock that is recorded, ns.
 	clockStep = int64(500 * time.Millisecond)
 	// inputsBuffer bounds what waits for a step. When it is full senders wait: the
@@ -29,8 +31,13 @@ const (
 	acksBuffer = 4096
 )
 
-// ErrStopped is returned to whoever asks the loop after its end.
-var ErrStopped = errors.New("the watch has stopped")
+var (
+	// ErrStopped is returned to whoever asks the loop after its end.
+	ErrStopped = errors.New("the watch has stopped")
+	// ErrHangs is returned by Run when the disk has not answered at all: the store is
+	// in its hands and cannot be closed.
+	ErrHangs = errors.New("the disk does not answer")
+)
 
 // Acknowledger lets the broker forget a message that is durable.
 type Acknowledger interface{ Ack(mqtt.Message) bool }
@@ -56,9 +63,9 @@ type Loop struct {
 
 	acks    chan []mqtt.Message
 	jobs    chan *job
-	results chan error
-	queue   []*job // cut and not yet stored; the first may be with the writer
-	busy    bool   // the writer has the first of queue
+	results chan error // one slot: the writer never waits for the loop
+	queue   []*job     // cut and not yet stored; the first may be with the writer
+	busy    bool       // the writer has the first of queue
 	pending []mqtt.Message
 	lost    uint64 // records stepped and not stored since recording stopped
 	stalled bool
@@ -77,18 +84,28 @@ type job struct {
 	acks  []mqtt.Message
 }
 
-// clock gives host time: it never falls, whatever the wall clock does.
+// clock gives host time: it goes on from the last record's, or from the wall clock
+// where that is later, at the pace of the monotonic clock. So it neither falls nor
+// stands still, also where the wall clock was put back before a restart; the
+// difference is a step of the wall clock then.
 type clock struct {
 	boot time.Time
+	base int64 // host time at boot
 	last int64 // difference of wall clock and host time when last compared
+	wall func() time.Time
 }
 
-func (c *clock) host() int64 { return c.boot.UnixNano() + int64(time.Since(c.boot)) }
+func newClock(last int64) clock {
+	boot := time.Now()
+	return clock{boot: boot, base: max(boot.UnixNano(), last), wall: time.Now}
+}
+
+func (c *clock) host() int64 { return c.base + int64(time.Since(c.boot)) }
 
 // step gives by how much the wall clock was stepped since the last call, 0 for
 // less than clockStep.
 func (c *clock) step() int64 {
-	diff := time.Now().Round(0).UnixNano() - c.host()
+	diff := c.wall().UnixNano() - c.host()
 	by := diff - c.last
 	if by > -clockStep && by < clockStep {
 		return 0
@@ -100,7 +117,7 @@ func (c *clock) step() int64 {
 // NewLoop gives a loop; Run starts it.
 func NewLoop(cfg Config) *Loop {
 	return &Loop{
-		cfg: cfg, clock: clock{boot: time.Now()},
+		cfg: cfg, clock: newClock(cfg.Core.State.Host),
 		inputs:  make(chan item, inputsBuffer),
 		asks:    make(chan func(*pipeline.Machine, *pipeline.State)),
 		done:    make(chan struct{}),
@@ -122,6 +139,11 @@ func (l *Loop) PutMessage(ctx context.Context, m mqtt.Message) error {
 }
 
 func (l *Loop) put(ctx context.Context, it item) error {
+	select {
+	case <-l.done: // also where there is room still
+		return ErrStopped
+	default:
+	}
 	select {
 	case l.inputs <- it:
 		return nil
@@ -148,6 +170,11 @@ func (l *Loop) Act(ctx context.Context, a pipeline.Action) (pipeline.Reply, erro
 	case <-ctx.Done():
 		return pipeline.Reply{}, ctx.Err()
 	case <-l.done:
+	}
+	select {
+	case r := <-reply: // the last that the loop did
+		return r, nil
+	default:
 		return pipeline.Reply{}, ErrStopped
 	}
 }
@@ -205,23 +232,24 @@ func (l *Loop) Run(ctx context.Context, boot pipeline.Boot, bundle []byte) error
 	return l.drain(stopWriter, stopAcks)
 }
 
-// drain stores what is left. The disk gets five seconds.
-func (l *Loop) drain(stopWriter, stopAcks func()) error {
-	deadline := time.After(5 * time.Second)
-	l.cut()
-	for len(l.queue) > 0 {
+// drain stores what is left, and what that brings about. The disk gets drainFor.
+func (l *Loop) drain(stopWriter func() bool, stopAcks func()) error {
+	defer stopAcks()
+	deadline := time.After(drainFor)
+	for l.cut(); len(l.queue) > 0; l.cut() {
 		l.submit()
 		select {
 		case err := <-l.results:
 			l.stored(err)
 		case <-deadline:
-			stopWriter()
-			stopAcks()
-			return fmt.Errorf("%d batches of records were not stored: the disk does not answer", len(l.queue))
+			err := fmt.Errorf("%d batches of records were not stored within %v", len(l.queue), drainFor)
+			if !stopWriter() {
+				return fmt.Errorf("%w: %w", err, ErrHangs)
+			}
+			return err
 		}
 	}
 	stopWriter()
-	stopAcks()
 	return nil
 }
 
@@ -408,8 +436,8 @@ func (l *Loop) Health(ctx context.Context, part string, ok bool, why string) err
 }
 
 // startWriter starts the one goroutine that uses the store. It answers every
-// job with a result; a failed one after a pause.
-func (l *Loop) startWriter(ctx context.Context) (stop func()) {
+// job with a result; a failed one after a pause. stop tells whether it has ended.
+func (l *Loop) startWriter(ctx context.Context) (stop func() bool) {
 	ended := make(chan struct{})
 	ctx = context.WithoutCancel(ctx)
 	go func() {
@@ -422,11 +450,13 @@ func (l *Loop) startWriter(ctx context.Context) (stop func()) {
 			l.results <- err
 		}
 	}()
-	return func() {
+	return func() bool {
 		close(l.jobs)
 		select {
 		case <-ended:
+			return true
 		case <-time.After(time.Second): // it hangs in the disk; the process ends with it
+			return false
 		}
 	}
 }

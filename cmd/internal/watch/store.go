@@ -33,6 +33,8 @@ type Store struct {
 	codec   *archive.Codec
 	catalog *runfile.Catalog
 	making  *making
+	wanted  *RunHeader     // of a run whose file could not be made yet
+	over    bool           // the run of the file has ended, and no idle file could be begun yet
 	work    sync.WaitGroup // folding, pruning and making files; Close waits for it
 	stop    context.CancelFunc
 
@@ -43,10 +45,11 @@ type Store struct {
 
 // making is a run file on its way.
 type making struct {
-	upto uint64 // record of the idle file that it holds
-	file *runfile.File
-	err  error
-	done chan struct{}
+	upto   uint64 // record of the idle file that it holds
+	header *RunHeader
+	file   *runfile.File
+	err    error
+	done   chan struct{}
 }
 
 // OpenStore opens the data folder and the file that was written to last. It
@@ -127,6 +130,12 @@ func (s *Store) openLast(ctx context.Context) error {
 		return fmt.Errorf("data folder: %w", err)
 	}
 	s.use(ctx, f, idle)
+	s.clean(idles, path)
+	return nil
+}
+
+// clean removes idle files that are no longer needed, all but path.
+func (s *Store) clean(idles []string, path string) {
 	for _, other := range idles {
 		if other != path {
 			if err := runfile.Remove(other); err != nil {
@@ -134,25 +143,38 @@ func (s *Store) openLast(ctx context.Context) error {
 			}
 		}
 	}
+}
+
+// afterRun begins an idle file behind a run that has ended. Where recording went
+// on in its file, because there could be no idle file, it still does.
+func (s *Store) afterRun(ctx context.Context, path string) error {
+	c, over, err := lastOf(ctx, path)
+	if err != nil {
+		return fmt.Errorf("data folder: %w", err)
+	}
+	if !over {
+		return s.newIdle(ctx, &c)
+	}
+	f, err := runfile.Open(ctx, path, runfile.ReadWrite, s.opt)
+	if err != nil {
+		return fmt.Errorf("data folder: %w", err)
+	}
+	s.use(ctx, f, false)
+	s.over = true
 	return nil
 }
 
-// afterRun begins an idle file behind a run that has ended.
-func (s *Store) afterRun(ctx context.Context, path string) error {
+// lastOf gives the last checkpoint of a file, and whether an idle file cannot begin
+// with it: because there are records behind it, or because it is not a full one.
+func lastOf(ctx context.Context, path string) (c runfile.Checkpoint, over bool, err error) {
 	f, err := runfile.Open(ctx, path, runfile.ReadOnly, runfile.Options{})
 	if err != nil {
-		return fmt.Errorf("data folder: %w", err)
+		return c, false, err
 	}
-	defer f.Close() //nolint:errcheck // it is only read
+	defer func() { err = errors.Join(err, f.Close()) }()
 	seq, _ := f.Durable()
-	c, err := f.LastCheckpoint(ctx, math.MaxInt64)
-	if err != nil {
-		return fmt.Errorf("data folder: %w", err)
-	}
-	if c.Seq != seq {
-		return fmt.Errorf("data folder: %s: ended at record %d without a checkpoint of it: %w", path, seq, runfile.ErrNoCheckpoint)
-	}
-	return s.newIdle(ctx, &c)
+	c, err = f.LastCheckpoint(ctx, math.MaxInt64)
+	return c, c.Seq != seq || !c.Full, err
 }
 
 // newIdle begins an idle file, after a checkpoint unless it is the very first.
@@ -215,7 +237,7 @@ func (s *Store) Restore(ctx context.Context, m *pipeline.Machine, build, goarch 
 	if err != nil {
 		return nil, fmt.Errorf("restore: %w", err)
 	}
-	if s.idle && core.State.RunActive {
+	if (s.idle || s.over) && core.State.RunActive {
 		s.removeHalfMade(core.Header().ID)
 		s.begin(ctx, core.Header(), core.State.Host)
 	}
@@ -231,25 +253,17 @@ func (s *Store) removeHalfMade(id string) {
 // Write stores a batch. After an error nothing of it is stored, and it may be
 // given again.
 func (s *Store) Write(ctx context.Context, b *Batch) error {
-	if s.making != nil {
-		select {
-		case <-s.making.done:
-			s.switchOver(ctx)
-		default:
-			if b.End != nil {
-				s.Settle(ctx)
-			}
-		}
-	}
+	s.make(ctx, b)
 	chunks, err := s.encode(b.Columns)
 	if err != nil {
 		return err
 	}
 	batch := runfile.Batch{Records: b.Records, Chunks: chunks, Events: b.Events, Checkpoint: b.Checkpoint}
-	if !s.idle && (b.Raised > 0 || b.End != nil) {
+	ends := b.End != nil && !s.idle && !s.over
+	if ends || b.Raised > 0 && !s.idle && !s.over {
 		batch.Header = func(h *runfile.Header) {
 			h.Alarms += b.Raised
-			if b.End != nil {
+			if ends {
 				h.State, h.Ended, h.Digest = b.End.State, b.End.Ended, b.End.Digest
 			}
 		}
@@ -257,16 +271,43 @@ func (s *Store) Write(ctx context.Context, b *Batch) error {
 	if err := s.file.Commit(ctx, batch); err != nil {
 		return fmt.Errorf("store: %w", err)
 	}
-	switch {
-	case b.End != nil && !s.idle:
+	full := b.Checkpoint != nil && b.Checkpoint.Full
+	if ends || s.over && full {
 		s.end(ctx, b.Checkpoint)
-	case b.Begin != nil && s.idle:
+	}
+	switch {
+	case b.Begin != nil && (s.idle || s.over):
 		_, host := s.file.Durable()
 		s.begin(ctx, b.Begin, host)
-	case s.idle && b.Checkpoint != nil && b.Checkpoint.Full:
+	case s.idle && full:
 		s.prune(ctx, b.Checkpoint.Host-idleKept)
 	}
 	return nil
+}
+
+// make goes on with the making of a run file, before the batch b is stored: it
+// takes over one that is made, and tries again with each checkpoint to make one
+// that could not be. The end of the run waits for its file.
+func (s *Store) make(ctx context.Context, b *Batch) {
+	if s.making == nil && s.wanted != nil && (b.Checkpoint != nil || b.End != nil) {
+		_, host := s.file.Durable()
+		s.begin(ctx, s.wanted, host)
+	}
+	if s.making == nil {
+		return
+	}
+	select {
+	case <-s.making.done:
+		s.switchOver(ctx)
+	default:
+		if b.End != nil {
+			s.Settle(ctx)
+		}
+	}
+	if b.End != nil && s.wanted != nil {
+		s.log.Error("the run has no file of its own; for some hours its records are in the file they were recorded into", "run", s.wanted.ID, "file", s.file.Path())
+		s.wanted = nil
+	}
 }
 
 func (s *Store) encode(columns []*pipeline.Columns) ([]runfile.Chunk, error) {
@@ -281,23 +322,38 @@ func (s *Store) encode(columns []*pipeline.Columns) ([]runfile.Chunk, error) {
 	return out, nil
 }
 
+// before gives the newest full checkpoint at or before host, or else where the file
+// begins: with a checkpoint, or with the zero one and the first record ever.
+func before(ctx context.Context, f *runfile.File, host int64) (runfile.Checkpoint, error) {
+	c, err := f.CheckpointAtHost(ctx, host, true)
+	if errors.Is(err, runfile.ErrNoCheckpoint) {
+		c, err = f.FirstCheckpoint(ctx)
+	}
+	if errors.Is(err, runfile.ErrNoCheckpoint) {
+		return runfile.Checkpoint{}, nil
+	}
+	if err != nil || c.Host <= host {
+		return c, err
+	}
+	earlier := errors.New("there is a record before it")
+	err = f.Records(ctx, 0, c.Seq, func(*ingest.Record) error { return earlier })
+	if errors.Is(err, earlier) {
+		return runfile.Checkpoint{}, nil
+	}
+	return c, err
+}
+
 // begin makes the file of a run from the idle file, in the background: commits
 // go on to the idle file meanwhile.
 func (s *Store) begin(ctx context.Context, h *RunHeader, host int64) {
 	f := s.file
 	upto, _ := f.Durable()
-	m := &making{upto: upto, done: make(chan struct{})}
-	s.making = m
+	m := &making{upto: upto, header: h, done: make(chan struct{})}
+	s.making, s.wanted = m, nil
 	ctx = context.WithoutCancel(ctx)
 	s.work.Go(func() {
 		defer close(m.done)
-		c, err := f.CheckpointAtHost(ctx, host-preRoll, true)
-		if errors.Is(err, runfile.ErrNoCheckpoint) {
-			c, err = f.FirstCheckpoint(ctx)
-		}
-		if errors.Is(err, runfile.ErrNoCheckpoint) || err == nil && !c.Full {
-			c, err = runfile.Checkpoint{}, nil // the file's very beginning
-		}
+		c, err := before(ctx, f, min(host, h.Started)-preRoll)
 		if err != nil {
 			m.err = err
 			return
@@ -317,17 +373,18 @@ func (s *Store) Settle(ctx context.Context) {
 }
 
 // switchOver moves the writing to the run file that was made. If that fails, the
-// run goes on in the idle file, which a restart finds.
+// run goes on in the idle file for now.
 func (s *Store) switchOver(ctx context.Context) {
 	m := s.making
 	s.making = nil
-	old := s.file
+	old, idle := s.file, s.idle
 	upto, _ := old.Durable()
 	if m.err == nil && m.upto < upto {
 		m.err = m.file.CopyFrom(ctx, old, m.upto, upto)
 	}
 	if m.err != nil {
-		s.log.Error("the run is recorded into the idle file: its own file could not be made", "err", m.err)
+		s.log.Error("the run is recorded into the idle file for now: its own file could not be made", "err", m.err)
+		s.wanted = m.header
 		if m.file != nil {
 			path := m.file.Path()
 			s.log.Debug("half-made run file removed", "file", path, "err", errors.Join(m.file.Close(), runfile.Remove(path)))
@@ -335,9 +392,16 @@ func (s *Store) switchOver(ctx context.Context) {
 		return
 	}
 	s.use(ctx, m.file, false)
+	s.over = false
 	s.catalogue(ctx, m.file.Path())
-	if err := errors.Join(old.Close(), runfile.Remove(old.Path())); err != nil {
-		s.log.Warn("the idle file stays", "file", old.Path(), "err", err)
+	err := old.Close()
+	if idle {
+		err = errors.Join(err, runfile.Remove(old.Path()))
+	} else {
+		s.catalogue(ctx, old.Path())
+	}
+	if err != nil {
+		s.log.Warn("the file recorded into before stays as it is", "file", old.Path(), "err", err)
 	}
 }
 
@@ -346,9 +410,11 @@ func (s *Store) switchOver(ctx context.Context) {
 func (s *Store) end(ctx context.Context, c *runfile.Checkpoint) {
 	old := s.file
 	if err := s.newIdle(ctx, c); err != nil {
-		s.log.Error("recording goes on in the file of the ended run", "err", err)
+		s.log.Error("recording goes on in the file of the ended run for now", "err", err)
+		s.over = true
 		return
 	}
+	s.over = false
 	path := old.Path()
 	if err := old.Close(); err != nil {
 		s.log.Error("closing the run file", "file", path, "err", err)

@@ -1,0 +1,7 @@
+package watch
+
+import "time"
+
+// SetWall replaces the wall clock by which a loop notices steps of it. It must be
+// called before Run.
+func (l *Loop) SetWall(now func() time.Time) { l.clock.wall = now }
