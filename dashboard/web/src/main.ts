@@ -204,6 +204,12 @@ function header(rigs: RigInfo[], rig: RigInfo, d: Display, sound: Sound, setting
     changed();
   } }, ...([['si', 'SI'], ['us', 'US units']] as const).map(([v, label]) => h('option', { value: v, selected: v === settings.system }, label)));
   const choice = h('select', { 'aria-label': 'Rig', onchange: () => { location.search = `?rig=${encodeURIComponent(choice.value)}`; } }, ...rigs.map((r) => h('option', { value: r.id, selected: r.id === rig.id }, r.title || r.id)));
+  window.addEventListener('storage', () => {
+    settings.reload();
+    operator.value = settings.operator;
+    units.value = settings.system;
+    changed();
+  });
   const el = h('header', {},
     h('div', { class: 'bar' }, h('span', { class: 'name' }, 'throatwatch'), rigs.length > 1 ? choice : h('span', { class: 'rig' }, rig.title || rig.id), h('nav', { 'aria-label': 'Pages' }, ...links),
       h('span', { class: 'grow' }), counts, soundButton, h('span', { class: 'feed' }, tick, ageText), time),

@@ -1,7 +1,7 @@
 // The samples behind the traces: fixed columns in one ring, filled in event-time
 // order. A missing value is NaN. When the ring is full the oldest row goes.
 
-import type { PointFrame, SeriesReply } from './frames';
+import type { PointFrame, Series, SeriesReply } from './frames';
 
 export const columns = [
   'npr', 'choke_npr', 'choke_margin_percent', 'egt_indicated_k',
@@ -122,6 +122,13 @@ export function seriesRows(reply: SeriesReply, start: number): { t: number; row:
     r.row[columns.length] = choked;
   }
   return sorted;
+}
+
+export interface Period { from: number; to: number; word: string } // seconds of the run
+
+/** Transitions of a state as the periods between them, the last one up to `end`. */
+export function periods(s: Series | undefined, end: number): Period[] {
+  return (s?.t ?? []).map((from, i) => ({ from, to: s?.t[i + 1] ?? end, word: s?.state?.[i] ?? '' }));
 }
 
 export interface Window { t: number[]; y: (number | null)[][] }

@@ -15,6 +15,11 @@ export class Settings {
     this.operator = this.read('operator');
   }
 
+  /** Takes over what another tab of the same browser has chosen. */
+  reload(): void {
+    Object.assign(this, new Settings(this.keeper));
+  }
+
   setSystem(s: System): void {
     this.system = s;
     this.write('units', s);

@@ -11,7 +11,7 @@ export function stateLook(p: PointFrame | null): StateLook {
   switch (p.choke_state) {
     case 'choked': return { shape: '●', word: 'choked', marginal: p.choke_marginal, cause: '' };
     case 'unchoked': return { shape: '○', word: 'unchoked', marginal: p.choke_marginal, cause: '' };
-    case 'no_flow': return { shape: '—', word: 'no flow', marginal: false, cause: 'below the resolution floor' };
+    case 'no_flow': return { shape: '—', word: 'no flow', marginal: false, cause: 'below resolution' };
     default: return { shape: '?', word: 'unknown', marginal: false, cause: causeWord(p.cause) || 'cause not given' };
   }
 }

@@ -49,15 +49,24 @@ function decode(png) {
   return { width, height, bytes, pixels: out };
 }
 
-/** The same picture with the 256 most frequent colours, every other one by its nearest. */
+/**
+ * The same picture with at most 256 colours: the most frequent ones that differ, so
+ * that a small sign keeps its own; every other one by its nearest.
+ */
 export function small(png) {
   const { width, height, bytes, pixels } = decode(png);
   const count = new Map();
   const colour = (i) => (pixels[i] << 16) | (pixels[i + 1] << 8) | pixels[i + 2];
   for (let i = 0; i < pixels.length; i += bytes) count.set(colour(i), (count.get(colour(i)) ?? 0) + 1);
-  const table = [...count].sort((a, b) => b[1] - a[1]).slice(0, 256).map(([c]) => c);
-  const index = new Map(table.map((c, i) => [c, i]));
   const distance = (a, b) => ((a >> 16) - (b >> 16)) ** 2 + (((a >> 8) & 255) - ((b >> 8) & 255)) ** 2 + ((a & 255) - (b & 255)) ** 2;
+  const frequent = [...count].sort((a, b) => b[1] - a[1]).map(([c]) => c);
+  let table = [];
+  for (let apart = 0; ; apart += 3) {
+    table = [];
+    for (const c of frequent) if (table.length <= 256 && table.every((d) => distance(c, d) > apart * apart)) table.push(c);
+    if (table.length <= 256) break;
+  }
+  const index = new Map(table.map((c, i) => [c, i]));
   const nearest = (c) => table.reduce((best, d, i) => (distance(c, d) < distance(c, table[best]) ? i : best), 0);
   for (const c of count.keys()) if (!index.has(c)) index.set(c, nearest(c));
   const rows = Buffer.alloc((width + 1) * height); // each begins with filter 0

@@ -1,7 +1,7 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
 import type { SeriesReply } from '../src/frames';
-import { Ring, chokedSpans, columns, decimate, seriesRows } from '../src/ring';
+import { Ring, chokedSpans, columns, decimate, periods, seriesRows } from '../src/ring';
 
 const row = (npr: number, choked = 0): number[] => [npr, ...new Array<number>(columns.length - 1).fill(NaN), choked];
 function filled(n: number, dt: number, f: (i: number) => number): Ring {
@@ -107,4 +107,11 @@ test('stored series become rows that keep both extremes and the recorded state',
   };
   const rows = seriesRows(reply, 1000);
   assert.deepEqual(rows.map((r) => [r.t, r.row[0], r.row[columns.length]]), [[1000, 1, 0], [1005, 1.2, 0], [1010, 1.5, 0], [1015, 2.4, 1], [1020, NaN, 1]]);
+});
+
+test('transitions become periods up to the end of the run', () => {
+  const s = { unit: '', t: [0, 3, 17.5], state: ['no_flow', 'unchoked', 'choked'], cause: null };
+  assert.deepEqual(periods(s, 60), [{ from: 0, to: 3, word: 'no_flow' }, { from: 3, to: 17.5, word: 'unchoked' }, { from: 17.5, to: 60, word: 'choked' }]);
+  assert.deepEqual(periods(undefined, 60), []);
+  assert.deepEqual(periods({ unit: '', t: [], cause: 'no rows' }, 60), []);
 });

@@ -3,7 +3,7 @@ import { test } from 'node:test';
 import { clock, duration, rfc3339, seconds } from '../src/time';
 import { Settings } from '../src/settings';
 import { type Scale, age, alarmValue, bytes, celsius, fixed, inUnit, plain, shown, signed, significant, unitSets, width } from '../src/units';
-import { stateLook, uncertainty } from '../src/words';
+import { causeWord, stateLook, uncertainty } from '../src/words';
 import { point, t0 } from './samples';
 
 test('conversions from SI', async (t) => {
@@ -92,6 +92,9 @@ test('choices are kept, also where the browser keeps nothing', () => {
   a.setOperator('  M. Alder ');
   const b = new Settings(keeper);
   assert.deepEqual([b.system, b.operator], ['us', 'M. Alder']);
+  b.setSystem('si');
+  a.reload();
+  assert.equal(a.system, 'si', 'another tab has chosen');
   kept.set('throatwatch.units', 'furlongs');
   assert.equal(new Settings(keeper).system, 'si', 'an unknown choice is none');
   const refusing = { getItem: (): never => { throw new Error('denied'); }, setItem: (): never => { throw new Error('denied'); } };
@@ -143,6 +146,12 @@ test('words of the choke state are never a guess', () => {
   assert.equal(stateLook(point(t0, { choke_state: 'no_flow' })).word, 'no flow');
   assert.ok(stateLook(point(t0, { choke_marginal: true })).marginal);
   assert.equal(new Set(['choked', 'unchoked', 'no_flow', 'unknown'].map((s) => stateLook(point(t0, { choke_state: s as 'choked' })).shape)).size, 4, 'a shape each');
+});
+
+test('a cause keeps the id of its channel', () => {
+  assert.equal(causeWord('p7_2 out_of_range'), 'p7_2 out of range');
+  assert.equal(causeWord('not_enough_probes'), 'not enough probes');
+  assert.equal(causeWord(null), '');
 });
 
 test('uncertainty is a half width, an interval, or nothing', () => {

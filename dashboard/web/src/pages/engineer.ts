@@ -4,8 +4,9 @@
 import type { Display } from '../context';
 import { type View, attr, h, text } from '../dom';
 import type { PointFrame, Quantity } from '../frames';
+import { probability } from '../interval';
 import { believable } from '../state';
-import { type Scale, type UnitSet, fixed, shown, signed, width } from '../units';
+import { type Scale, type UnitSet, shown, signed, width } from '../units';
 import { causeWord, sourceWord, uncertainty } from '../words';
 
 interface Line {
@@ -30,12 +31,6 @@ const line = (name: string, key: Quantity, pick: Pick, u95?: Quantity, note?: (p
 /** A plain number. */
 const plain = (name: string, key: Quantity, decimals: number, u95?: Quantity, note?: (p: PointFrame) => string): Line =>
   line(name, key, () => ({ sign: '', decimals, of: (v) => v, span: (v) => v }), u95, note);
-
-/** A probability in percent; near 0 and 1 as a bound, for no sample tells more. */
-export function probability(p: number | null | undefined): string {
-  if (typeof p !== 'number' || !Number.isFinite(p)) return '–';
-  return p > 0.999 ? '> 99.9 %' : p < 0.001 ? '< 0.1 %' : `${fixed(p * 100, 1)} %`;
-}
 
 const groups: [string, Line[]][] = [
   ['Choke', [
@@ -93,7 +88,7 @@ export function engineerView(d: Display): View {
         text(r.note, note);
         attr(r.note, 'title', note || null);
       }
-      text(warnings, p?.warnings?.length ? `Outside its range: ${p.warnings.join('; ')}.` : '');
+      text(warnings, p?.warnings?.length ? `Note: ${p.warnings.join('; ')}.` : '');
     },
     destroy: () => undefined,
   };

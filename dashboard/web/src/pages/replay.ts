@@ -4,20 +4,14 @@ import { priorityLook } from '../alarms';
 import { api } from '../api';
 import type { Display, Taste } from '../context';
 import { type View, attr, h, text } from '../dom';
-import type { Frame, RunSummary, Series } from '../frames';
+import type { Frame, RunSummary } from '../frames';
 import { firstChunk, reach, rowsOf } from '../history';
 import { Player, speeds } from '../player';
+import { type Period, periods } from '../ring';
 import type { Flag } from '../state';
 import { dateClock, duration, seconds } from '../time';
 import { font, surface } from '../watch/canvas';
 import { watchDisplay } from '../watch/display';
-
-interface Period { from: number; to: number; word: string } // seconds of the run
-
-/** Transitions of a state as the periods between them, the last one up to `end`. */
-export function periods(s: Series | undefined, end: number): Period[] {
-  return (s?.t ?? []).map((from, i) => ({ from, to: s?.t[i + 1] ?? end, word: s?.state?.[i] ?? '' }));
-}
 
 export function replayPage(runID: string, rig: string, taste: Taste): View {
   let player: Player | null = null;

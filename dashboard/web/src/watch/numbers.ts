@@ -57,6 +57,7 @@ export function numbers(d: Display): View {
     text(marginal, look.marginal ? 'marginal' : '');
     attr(word.parentElement as HTMLElement, 'data-none', look.word === 'unknown');
     text(cause, look.cause);
+    attr(cause, 'title', look.cause || null);
 
     const put = (c: ReturnType<typeof cell>, value: string, unit = '', extra = ''): void => {
       text(c.value, value);

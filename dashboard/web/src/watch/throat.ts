@@ -7,6 +7,7 @@ import { api } from '../api';
 import type { Display } from '../context';
 import { type View, attr } from '../dom';
 import type { PointFrame, ThroatCurve } from '../frames';
+import { chokeBand } from '../interval';
 import { columns } from '../ring';
 import { believable } from '../state';
 import { fixed, shown, significant } from '../units';
@@ -205,10 +206,10 @@ export function throatPlane(d: Display): View {
         };
         const [lx, align]: [number, CanvasTextAlign] = !flat ? [x(npr) + 14, 'left'] : toLeft ? [x(npr) + 8, 'right'] : [x(npr), 'center'];
         const low = Math.min(y(anchor) + 2, bottom - 25); // a point on the axis keeps its labels inside
-        const above = far && independent !== null && independent > anchor ? 22 : -18;
-        if (computed !== null) label('○ computed', pal.text, lx, flat ? y(anchor) + above : low, align);
+        const under = independent !== null && y(anchor) - y(independent) > 9; // the computed point has the other above it
+        if (computed !== null) label('○ computed', pal.text, lx, flat ? y(anchor) + (under ? 22 : -18) : low, align);
         if (independent !== null && far) label(`● air + fuel flow${region}`, pal.data, x(npr) + (toLeft ? -9 : 9), Math.max(top + 9, y(independent)), toLeft ? 'right' : 'left');
-        else if (independent !== null) label(`● air + fuel flow${region}`, pal.data, lx, flat ? y(anchor) + 22 : low + 16, align);
+        else if (independent !== null) label(`● air + fuel flow${region}`, pal.data, lx, !flat ? low + 16 : under ? Math.max(top + 9, y(independent) - 14) : y(anchor) + 22, align);
       }
     }
     if (choke !== null) {
@@ -257,14 +258,6 @@ export function throatPlane(d: Display): View {
   }
 
   return { el: plane.el, update, destroy: plane.destroy };
-}
-
-/** How far the choke line may lie below and above its value in NPR, so that the margin keeps its 95 % interval. */
-function chokeBand(p: PointFrame): [below: number, over: number] {
-  const { choke_npr: choke, choke_margin_percent: margin, choke_margin_percent_u95: u95, choke_margin_percent_low95: low, choke_margin_percent_high95: high } = p;
-  if (typeof choke !== 'number' || typeof margin !== 'number') return [0, 0];
-  if (typeof u95 === 'number') return [(u95 / 100) * choke, (u95 / 100) * choke];
-  return typeof low === 'number' && typeof high === 'number' ? [((high - margin) / 100) * choke, ((margin - low) / 100) * choke] : [0, 0];
 }
 
 function line(c: CanvasRenderingContext2D, x0: number, y0: number, x1: number, y1: number): void {
