@@ -74,6 +74,9 @@ func (p *Replay) load(ctx context.Context, c *runfile.Checkpoint) error {
 func rebuildWindow(ctx context.Context, f *runfile.File, state *State, c *runfile.Checkpoint) error {
 	from := uint64(0)
 	full, err := f.CheckpointAtHost(ctx, c.Host, true)
+	if err == nil && full.Seq > c.Seq { // records may share a host time
+		full, err = f.CheckpointAtHost(ctx, c.Host-1, true)
+	}
 	switch {
 	case err == nil:
 		whole, err := Decode(full.State)
