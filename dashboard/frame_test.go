@@ -7,6 +7,7 @@ import (
 	"strings"
 	"testing"
 	"time"
+	"unicode/utf8"
 
 	"throatwatch/dashboard"
 	"throatwatch/ingest"
@@ -240,7 +241,7 @@ func FuzzFrameText(f *testing.F) {
 		o := pipeline.Outcome{Kind: pipeline.OutcomeStatus, T: 1, Status: &pipeline.Status{Sessions: []pipeline.SessionStatus{{Filter: s}}}}
 		body, _, _ := dashboard.EncodeFrame(&o, &cfg)
 		var got struct{ Sessions []struct{ Filter string } }
-		if err := json.Unmarshal(body, &got); err != nil {
+		if err := json.Unmarshal(body, &got); err != nil || !utf8.Valid(body) {
 			t.Fatalf("%v: %q", err, body)
 		}
 		if want := string([]rune(s)); got.Sessions[0].Filter != want { // each stray byte is one replacement character

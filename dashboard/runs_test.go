@@ -607,6 +607,17 @@ func TestSeriesRefused(t *testing.T) {
 	}
 }
 
+// The seconds that an answer gives for a scan are taken back as the time of that scan.
+func TestStretchTakesSecondsBack(t *testing.T) {
+	for k := range int64(100_000) {
+		at := k * second / scans
+		sec := strconv.FormatFloat(float64(at)/1e9, 'g', -1, 64)
+		if from, _, err := dashboard.Stretch(url.Values{"from": {sec}}, start); err != nil || from != start+at {
+			t.Fatalf("%s s is %d ns, want %d: %v", sec, from-start, at, err)
+		}
+	}
+}
+
 // Whatever a stretch is asked as, it is refused or runs forwards, and what the answer
 // calls a time is taken back as the same time.
 func FuzzStretch(f *testing.F) {

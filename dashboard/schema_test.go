@@ -12,6 +12,7 @@ import (
 	"sync"
 	"testing"
 	"time"
+	"unicode/utf8"
 )
 
 // document is openapi.json, decoded.
@@ -191,6 +192,9 @@ func ofType(want, v any) bool {
 // checkJSON checks a text against the schema of a name.
 func checkJSON(t *testing.T, schema string, text []byte) map[string]any {
 	t.Helper()
+	if !utf8.Valid(text) { // a text message must be [RFC 6455 5.6]
+		t.Errorf("%s is no UTF-8: %q", schema, text)
+	}
 	var v any
 	if err := json.Unmarshal(text, &v); err != nil {
 		t.Fatalf("%s is no JSON: %v\n%s", schema, err, text)
