@@ -231,8 +231,14 @@ func readAll(t *testing.T, dir string) *stored {
 			t.Errorf("%s: %v", path, err)
 		}
 		p, err := pipeline.OpenReplay(ctx, f, pipeline.NewMachine(watch.Parse), 0)
+		digest := ""
 		if err == nil {
-			err = p.Run(ctx, 0, func(r *ingest.Record, _ []pipeline.Outcome) error {
+			err = p.Run(ctx, 0, func(r *ingest.Record, outs []pipeline.Outcome) error {
+				for i := range outs {
+					if o := &outs[i]; o.Kind == pipeline.OutcomeRun && o.Event == "ended" && o.Run.ID == h.ID {
+						digest = p.Digest.String()
+					}
+				}
 				bySeq[r.Seq] = ingest.Record{Seq: r.Seq, Host: r.Host, Kind: r.Kind, Topic: r.Topic, Payload: slices.Clone(r.Payload)}
 				return nil
 			})
@@ -240,8 +246,11 @@ func readAll(t *testing.T, dir string) *stored {
 		if err != nil {
 			t.Errorf("%s: replay: %v", path, err)
 		}
-		if h.State == runfile.StateEnded && h.Digest != p.Digest.String() {
-			t.Errorf("%s: digest %s was recorded, the replay gives %s", path, h.Digest, p.Digest)
+		if digest == "" { // its end was not stored
+			digest = p.Digest.String()
+		}
+		if h.State == runfile.StateEnded && h.Digest != digest {
+			t.Errorf("%s: digest %s was recorded, the replay gives %s", path, h.Digest, digest)
 		}
 		if h.State != runfile.StateIdle {
 			s.runs = append(s.runs, h)
