@@ -4,6 +4,7 @@ import (
 	"context"
 	"encoding/json"
 	"log/slog"
+	"slices"
 	"sync"
 	"time"
 
@@ -27,6 +28,7 @@ type Outbox struct {
 	wake chan struct{} // one slot: full means something new is there already
 
 	mu     sync.Mutex // protects the newest, nil = published
+	began  bool       // the alarms were told once
 	point  []byte
 	status []byte
 	alarms []byte
@@ -74,7 +76,10 @@ func (o *Outbox) Take(outs []pipeline.Outcome, m *pipeline.Machine, s *pipeline.
 			o.events = append(o.events, body)
 		}
 	}
-	if changed || o.alarms == nil && o.status != nil && s.Second%60 == 0 {
+	// Also at first: what stands retained is of another life of the daemon; and each
+	// minute: a broker may have lost it.
+	if changed || !o.began || o.alarms == nil && o.status != nil && s.Second%60 == 0 {
+		o.began = true
 		alarms := m.Alarms(s)
 		if alarms == nil {
 			alarms = []rules.Alarm{}
@@ -103,22 +108,18 @@ func (o *Outbox) Run(ctx context.Context) {
 		point, status, alarms, events := o.point, o.status, o.alarms, o.events
 		o.point, o.status, o.alarms, o.events = nil, nil, nil, nil
 		o.mu.Unlock()
-		err := o.send(ctx, "alarm-changes", events, 1, false)
+		sent, err := o.send(ctx, "alarm-changes", events, 1, false)
 		if alarms != nil && err == nil {
-			err = o.send(ctx, "alarms", [][]byte{alarms}, 1, true)
+			_, err = o.send(ctx, "alarms", [][]byte{alarms}, 1, true)
 		}
 		if status != nil && err == nil {
-			err = o.send(ctx, "status", [][]byte{status}, 1, true)
+			_, err = o.send(ctx, "status", [][]byte{status}, 1, true)
 		}
 		if point != nil && err == nil {
-			err = o.send(ctx, "operating-point", [][]byte{point}, 0, false)
+			_, err = o.send(ctx, "operating-point", [][]byte{point}, 0, false)
 		}
 		if err != nil {
-			o.mu.Lock()
-			if o.alarms == nil {
-				o.alarms = alarms // until it gets through
-			}
-			o.mu.Unlock()
+			o.keep(events[sent:], alarms)
 		}
 		if (err != nil) != failing && ctx.Err() == nil {
 			failing = err != nil
@@ -127,13 +128,26 @@ func (o *Outbox) Run(ctx context.Context) {
 	}
 }
 
-func (o *Outbox) send(ctx context.Context, leaf string, bodies [][]byte, qos byte, retained bool) error {
+// keep takes back what must get through once the broker is there again.
+func (o *Outbox) keep(events [][]byte, alarms []byte) {
+	o.mu.Lock()
+	defer o.mu.Unlock()
+	o.events = slices.Concat(events, o.events)
+	o.events = o.events[max(0, len(o.events)-eventsKept):]
+	if o.alarms == nil {
+		o.alarms = alarms
+	}
+}
+
+// send publishes in order and tells how many got through.
+func (o *Outbox) send(ctx context.Context, leaf string, bodies [][]byte, qos byte, retained bool) (sent int, err error) {
 	ctx, cancel := context.WithTimeout(ctx, 5*time.Second)
 	defer cancel()
-	for _, b := range bodies {
-		if err := o.pub.Publish(ctx, "rigs/"+o.rig+"/"+leaf, b, qos, retained); err != nil {
-			return err
+	for sent < len(bodies) {
+		if err := o.pub.Publish(ctx, "rigs/"+o.rig+"/"+leaf, bodies[sent], qos, retained); err != nil {
+			return sent, err
 		}
+		sent++
 	}
-	return nil
+	return sent, nil
 }
