@@ -820,6 +820,19 @@ func TestReset(t *testing.T) {
 	}
 }
 
+// A session of a filter that is no longer one does not keep scans waiting.
+func TestResetForgetsSessions(t *testing.T) {
+	b := newBed(t, rig(t))
+	b.connect("rigs/x/gone", true)
+	b.connect(fast, true)
+	b.connect(fast, false)
+	b.connect("rigs/x/gone", false)
+	b.a.Reset(&b.s, b.cfg.Channels)
+	if len(b.s.Sessions) != 1 || b.s.Sessions[0] != (align.Session{Filter: fast}) || !b.s.Waiting() {
+		t.Errorf("sessions %v", b.s.Sessions)
+	}
+}
+
 // The same records give the same state and scans, bit for bit.
 func TestDeterminism(t *testing.T) {
 	play := func() *bed {

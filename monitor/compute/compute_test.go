@@ -844,3 +844,29 @@ func TestReset(t *testing.T) {
 		t.Errorf("5 kPa in a scan are %v", r4.scan.Quality[0])
 	}
 }
+
+// What is doubtful about a point is said, and nothing else is.
+func TestWarnings(t *testing.T) {
+	for _, tt := range []struct {
+		name string
+		set  map[string]float64
+		want monitor.Warning
+	}{
+		{"an ordinary point", nil, 0},
+		{"hotter than the gas data", map[string]float64{"t7_1": 1810, "t7_2": 1810, "t7_3": 1810, "t7_4": 1810}, monitor.WarnGasRange},
+		{"an NPR above the coefficient tables", map[string]float64{"p7_1": 230e3, "p7_2": 230e3, "p7_3": 230e3, "p7_4": 230e3}, monitor.WarnCoefficientRange},
+		{"and below", map[string]float64{"p7_1": 4e3, "p7_2": 4e3, "p7_3": 4e3, "p7_4": 4e3, "fuel_flow": 0.01}, monitor.WarnCoefficientRange},
+		{"a relative humidity that cannot be", map[string]float64{"humidity": 1.2}, monitor.WarnAssumedHumidity},
+	} {
+		p := full(t).rig().set(running()).set(tt.set).steps(3)
+		if p.Warnings != tt.want || math.IsNaN(p.V[monitor.MassFlow]) {
+			t.Errorf("%s: warnings %b, want %b; flow %g", tt.name, p.Warnings, tt.want, p.V[monitor.MassFlow])
+		}
+	}
+	// A gas of constants that are none evaluates to nothing, and says so.
+	b := full(t)
+	b.Gamma, b.GasR = 0.9, 287
+	if p := b.rig().set(running()).step(); p.Cause.Kind != monitor.OutsideGasRange || p.Choke != monitor.ChokeUnknown {
+		t.Errorf("gamma 0.9: %v, %v", p.Choke, p.Cause.Kind)
+	}
+}

@@ -432,6 +432,9 @@ func TestPast(t *testing.T) {
 	past, now := 0, 0
 	for at := (from/period + 1) * period; at < b.r.Host; at += period {
 		b.r.Host += ms
+		if st := b.m.Status(b.s); st.CatchingUp != (b.r.Host-b.s.Align.Next > second) {
+			t.Fatalf("%d ms behind: catching up %v", (b.r.Host-b.s.Align.Next)/ms, st.CatchingUp)
+		}
 		for _, o := range b.message(topic, low.pack(at)) {
 			if o.Kind != OutcomePoint && (o.Kind != OutcomeAlarm || o.Alarm.Rule != "oil_low") {
 				continue
@@ -448,6 +451,36 @@ func TestPast(t *testing.T) {
 	}
 	if past < 200 || now < 50 {
 		t.Errorf("%d outcomes of the past, %d of now", past, now)
+	}
+	b.play(running, 3*second)
+	if st := b.m.Status(b.s); st.CatchingUp {
+		t.Error("still catching up, 3 s after the backlog")
+	}
+}
+
+// A machine that is given a state of before the first configuration knows none.
+func TestRestore(t *testing.T) {
+	m := NewMachine(parser(t))
+	if err := m.Restore(&State{}); err != nil {
+		t.Error(err)
+	}
+	if _, ok := m.Config(); ok {
+		t.Error("a configuration out of nothing")
+	}
+	if err := m.Restore(&State{Bundle: []byte("rig nine")}); err == nil {
+		t.Error("a bundle that cannot be read is no error")
+	}
+	if err := m.Restore(&State{Bundle: []byte("rig two")}); err != nil {
+		t.Error(err)
+	}
+	if cfg, ok := m.Config(); !ok || cfg.Hash != "two" {
+		t.Errorf("configuration %q", cfg.Hash)
+	}
+	if err := m.Restore(&State{}); err != nil {
+		t.Error(err)
+	}
+	if st := m.Status(&State{}); len(m.Alarms(&State{})) != 0 || st.Messages != 0 || m.Ledger(&State{}) != nil {
+		t.Error("a state of before the first configuration has alarms")
 	}
 }
 

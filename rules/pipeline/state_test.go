@@ -270,6 +270,7 @@ func TestReplay(t *testing.T) {
 	m, s, live := NewMachine(parser(t)), &State{}, NewDigest()
 	var batch []ingest.Record
 	var outs []string
+	gapped := 0 // outcomes up to the gap
 	host := epoch
 	take := func(kind ingest.Kind, topic string, payload []byte) {
 		r := ingest.Record{Seq: s.Seq + 1, Host: host, Kind: kind, Topic: topic, Payload: payload}
@@ -312,6 +313,20 @@ func TestReplay(t *testing.T) {
 		if k > 300 && k%5 == 0 {
 			take(ingest.KindMessage, topic, sent[k-290]) // a copy of long ago, before two checkpoints
 		}
+		if k == 910 {
+			// A disk that fails: what was stepped since the last commit is not stored. A gap
+			// record stands for it, with the state after it, and the digest begins anew.
+			commit(false)
+			for i := range int64(40) {
+				host = at + 4*ms + i
+				take(ingest.KindMessage, topic, e.pack(at+i*ms/10))
+			}
+			batch = nil
+			live.Reset()
+			take(ingest.KindGap, "", []byte("{}"))
+			commit(true)
+			gapped = len(outs)
+		}
 		if k%140 == 139 {
 			commit(k%280 == 279)
 			seqs = append(seqs, s.Seq)
@@ -327,7 +342,7 @@ func TestReplay(t *testing.T) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	if s.Align.Counters[ingest.ReasonDuplicate] != 139 || live.Count() < 500 {
+	if s.Align.Counters[ingest.ReasonDuplicate] < 139 || live.Count() < 80 {
 		t.Fatalf("%d copies, %d outcomes in the digest", s.Align.Counters[ingest.ReasonDuplicate], live.Count())
 	}
 	for _, from := range append([]uint64{0, 2, 100, s.Seq}, seqs...) {
@@ -349,7 +364,8 @@ func TestReplay(t *testing.T) {
 		if err != nil {
 			t.Fatal(err)
 		}
-		if !bytes.Equal(state, want) || p.Digest.String() != live.String() || !slices.Equal(got, outs[len(outs)-len(got):]) {
+		n := min(len(got), len(outs)-gapped)
+		if !bytes.Equal(state, want) || p.Digest.String() != live.String() || !slices.Equal(got[len(got)-n:], outs[len(outs)-n:]) || n == 0 && from < s.Seq {
 			t.Errorf("from record %d: digest %s, live %s; %d copies", from, p.Digest, live, p.State.Align.Counters[ingest.ReasonDuplicate])
 		}
 	}
@@ -367,7 +383,7 @@ func TestReplay(t *testing.T) {
 			t.Errorf("at record %d, want %d", p.State.Seq, upto)
 		}
 	}
-	if p.Digest.String() != live.String() {
+	if p.Digest.String() != live.String() || p.Digest.Count() != live.Count() {
 		t.Error("in three parts the replay gives another digest")
 	}
 }
