@@ -60,7 +60,8 @@ func run(ctx context.Context, args []string, stdout, stderr io.Writer) int {
 	case "help", "--help", "-h":
 		out, code = stdout, 0
 	default:
-		_, _ = fmt.Fprintf(out, "throatwatch: there is no command %q\n\n", name)
+		_, _ = fmt.Fprintf(stderr, "throatwatch: there is no command %q: throatwatch --help lists them\n", name)
+		return code
 	}
 	_, _ = fmt.Fprintf(out, "usage: throatwatch COMMAND\n\n")
 	for _, c := range commands() {

@@ -153,9 +153,13 @@ func rehearseFaults() string {
 	return b.String()
 }
 
-// rehearseLive is rehearseOver for a broker that asks for no password.
-func rehearseLive(ctx context.Context, cfg pipeline.Config, o rehearsal.Options, url string, length time.Duration, stdout, stderr io.Writer) error {
-	return rehearseOver(ctx, cfg, o, mqtt.PublisherConfig{URL: url}, length, stdout, stderr)
+// rehearsable tells what cannot be played on a rig.
+func rehearsable(cfg pipeline.Config, f rehearseFlags) error {
+	o, err := f.options()
+	if err == nil {
+		_, err = rehearsal.New(cfg, o)
+	}
+	return err
 }
 
 // rehearseOver publishes the test in real time, to its end or for length; device

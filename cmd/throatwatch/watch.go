@@ -13,6 +13,7 @@ import (
 	"runtime"
 	"strings"
 	"sync"
+	"syscall"
 	"time"
 
 	"github.com/spf13/pflag"
@@ -61,6 +62,10 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 	if code >= 0 {
 		return code
 	}
+	if err := o.check(fs); err != nil {
+		_, _ = fmt.Fprintln(stderr, "throatwatch watch:", err)
+		return 2
+	}
 	if o.limit > 0 {
 		var cancel context.CancelFunc
 		ctx, cancel = context.WithTimeout(ctx, o.limit)
@@ -72,6 +77,35 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 		return 1
 	}
 	return 0
+}
+
+// check finds what cannot be meant, before anything is touched.
+func (o *watchOptions) check(fs *pflag.FlagSet) error {
+	if o.limit < 0 {
+		return fmt.Errorf("--for %v: give a time above 0", o.limit)
+	}
+	host, _, err := net.SplitHostPort(o.listen)
+	if err != nil {
+		return fmt.Errorf("--listen %q is no address: give host:port", o.listen)
+	}
+	if ip := net.ParseIP(host); !o.remote && host != "localhost" && (ip == nil || !ip.IsLoopback()) {
+		return fmt.Errorf("--listen %s can be reached from other machines, and whoever reaches it can acknowledge alarms: use 127.0.0.1, or --allow-remote on a closed network", o.listen)
+	}
+	if o.broker != "" && fs.Changed("broker-listen") {
+		return errors.New("--broker-listen is for the embedded broker, --broker names another: give one of them")
+	}
+	if o.broker == "" && (o.user != "" || o.passwordFile != "") {
+		return errors.New("--broker-user and --broker-password-file are for a site broker: add --broker")
+	}
+	if !o.rehearse {
+		for _, name := range []string{"seed", "quick", "rate", "speed", "fault"} {
+			if fs.Changed(name) {
+				return fmt.Errorf("--%s says what is rehearsed: add --rehearse", name)
+			}
+		}
+	}
+	_, err = o.play.options()
+	return err
 }
 
 // watcher is the daemon: its parts, started and stopped in order.
@@ -98,6 +132,11 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 		return fmt.Errorf("the configuration has faults; nothing was started:\n%w", err)
 	}
 	w.cfg = cfg
+	if w.opt.rehearse {
+		if err := rehearsable(cfg, w.opt.play); err != nil {
+			return err
+		}
+	}
 	unlock, err := watch.Lock(w.opt.data)
 	if err != nil {
 		return err
@@ -199,18 +238,19 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 
 // listen opens the port of the page.
 func (w *watcher) listen(ctx context.Context) (net.Listener, error) {
-	host, _, err := net.SplitHostPort(w.opt.listen)
-	if err != nil {
-		return nil, fmt.Errorf("--listen %q: %w: give host:port", w.opt.listen, err)
-	}
-	if ip := net.ParseIP(host); !w.opt.remote && host != "localhost" && (ip == nil || !ip.IsLoopback()) {
-		return nil, fmt.Errorf("--listen %s can be reached from other machines, and whoever reaches it can acknowledge alarms: use 127.0.0.1, or --allow-remote on a closed network", w.opt.listen)
-	}
 	l, err := (&net.ListenConfig{}).Listen(ctx, "tcp", w.opt.listen)
+	if inUse(err) {
+		return nil, fmt.Errorf("--listen %s: another program listens there, perhaps another watch: give another address, or port 0 for a free one", w.opt.listen)
+	}
 	if err != nil {
 		return nil, fmt.Errorf("--listen: %w", err)
 	}
 	return l, nil
+}
+
+// inUse tells that an address is taken; of an error of the broker only the text says so.
+func inUse(err error) bool {
+	return errors.Is(err, syscall.EADDRINUSE) || err != nil && strings.Contains(err.Error(), syscall.EADDRINUSE.Error())
 }
 
 // connect starts the embedded broker, unless there is a site broker, and makes
@@ -234,7 +274,9 @@ func (w *watcher) connect(ctx context.Context) (stop func(), err error) {
 		if err != nil {
 			return nil, err
 		}
-		if err := w.broker.Start(ctx); err != nil {
+		if err := w.broker.Start(ctx); inUse(err) {
+			return nil, fmt.Errorf("--broker-listen %s: another program listens there: if it is the site's broker, name it by --broker, else give another address", w.opt.brokerListen)
+		} else if err != nil {
 			return nil, fmt.Errorf("embedded broker: %w", err)
 		}
 		stop = func() {
@@ -301,19 +343,23 @@ func (w *watcher) letIn(ctx context.Context) error {
 	case <-ctx.Done():
 		return ctx.Err()
 	}
-	url := w.opt.broker
+	to := mqtt.PublisherConfig{URL: w.opt.broker, Username: w.opt.user}
 	if w.broker != nil {
 		w.broker.Open()
-		url = w.broker.URL()
+		to.URL = w.broker.URL()
 	}
 	if !w.opt.rehearse {
 		return nil
+	}
+	var err error
+	if to.Password, err = readSecret(w.opt.passwordFile); err != nil {
+		return err
 	}
 	o, err := w.opt.play.options()
 	if err != nil {
 		return err
 	}
-	return rehearseLive(ctx, w.cfg, o, url, 0, w.stdout, w.stderr)
+	return rehearseOver(ctx, w.cfg, o, to, 0, w.stdout, w.stderr)
 }
 
 // announce says what runs where.
