@@ -101,13 +101,17 @@ export function seriesRows(reply: SeriesReply, start: number): { t: number; row:
     if (typeof v !== 'number') return;
     row[k] = v;
   };
+  // The width of a bucket, one for all columns; where data is missing the next one is further away.
+  let width = Infinity;
+  for (const name of columns) {
+    reply.series[name]?.t.forEach((t, i, all) => { if (i > 0) width = Math.min(width, t - (all[i - 1] as number)); });
+  }
   columns.forEach((name, k) => {
     const s = reply.series[name];
     if (!s) return;
     s.t.forEach((t, i) => {
-      const next = s.t[i + 1] ?? t;
       put(start + t, k, s.min?.[i]);
-      if ((s.n?.[i] ?? 1) > 1 && next > t) put(start + (t + next) / 2, k, s.max?.[i]);
+      if ((s.n?.[i] ?? 1) > 1 && width < Infinity) put(start + t + width / 2, k, s.max?.[i]);
     });
   });
   const sorted = [...rows].map(([t, row]) => ({ t, row })).sort((a, b) => a.t - b.t);
@@ -189,8 +193,9 @@ export function chokedSpans(ring: Ring, t0: number, t1: number): [number, number
   for (let i = Math.max(0, ring.lower(t0) - 1); i < last; i++) {
     const t = ring.t(i);
     const choked = ring.choked(i) === 1;
-    if (!Number.isNaN(start) && (!choked || t - before > gapSeconds)) {
-      spans.push([start, choked ? before : t]);
+    const gap = t - before > gapSeconds;
+    if (!Number.isNaN(start) && (!choked || gap)) {
+      spans.push([start, gap ? before : t]);
       start = NaN;
     }
     if (choked && Number.isNaN(start)) start = t;

@@ -95,6 +95,9 @@ test('choked periods end at gaps and at the last row', () => {
   const ring = new Ring();
   [[0, 1], [0.5, 1], [1, 0], [1.5, 1], [2, 1], [9, 1], [9.5, 1]].forEach(([t, c]) => ring.push(t as number, row(2, c)));
   assert.deepEqual(chokedSpans(ring, 0, 10), [[0, 1], [1.5, 2], [9, 9.5]]);
+  ring.push(9.6, row(2, 1));
+  ring.push(20, row(NaN, NaN)); // the first row after a gap does not know the state: the gap stays unshaded
+  assert.deepEqual(chokedSpans(ring, 0, 30), [[0, 1], [1.5, 2], [9, 9.6]]);
 });
 
 test('stored series become rows that keep both extremes and the recorded state', () => {
@@ -107,6 +110,12 @@ test('stored series become rows that keep both extremes and the recorded state',
   };
   const rows = seriesRows(reply, 1000);
   assert.deepEqual(rows.map((r) => [r.t, r.row[0], r.row[columns.length]]), [[1000, 1, 0], [1005, 1.2, 0], [1010, 1.5, 0], [1015, 2.4, 1], [1020, NaN, 1]]);
+});
+
+test('the extremes of a bucket before a gap are not put into the gap', () => {
+  const reply: SeriesReply = { through: '1.9', series: { npr: { unit: '', t: [0, 0.3, 0.6, 40], min: [1, 1, 1, 1], max: [2, 2, 2, 2], last: [1, 1, 1, 1], n: [6, 6, 6, 6], cause: null } } };
+  const times = seriesRows(reply, 0).map((r) => Math.round(r.t * 100) / 100);
+  assert.deepEqual(times, [0, 0.15, 0.3, 0.45, 0.6, 0.75, 40, 40.15]);
 });
 
 test('transitions become periods up to the end of the run', () => {
