@@ -36,6 +36,7 @@ const (
 // storedRun is a run as the list shows it.
 type storedRun struct {
 	ID        string   `json:"id"`
+	Number    uint64   `json:"number"`
 	Rig       string   `json:"rig"`
 	Engine    string   `json:"engine"`
 	Title     string   `json:"title"`
@@ -56,7 +57,7 @@ type storedRun struct {
 
 func viewRun(r *runfile.Run) storedRun {
 	v := storedRun{
-		ID: r.ID, Rig: r.Rig, Engine: strings.TrimSpace(r.Engine + " " + r.EngineSerial), Title: r.Title, By: r.Operator,
+		ID: r.ID, Number: r.Number, Rig: r.Rig, Engine: strings.TrimSpace(r.Engine + " " + r.EngineSerial), Title: r.Title, By: r.Operator,
 		Started: rfc3339(r.Started), Ended: optional(r.Ended), State: r.State, Keep: r.Keep, Notes: r.Notes,
 		Tags: append([]string{}, r.Tags...), SizeBytes: r.Size, Alarms: r.Alarms, Config: r.ConfigHash, Build: r.Build, Digest: r.Digest,
 	}

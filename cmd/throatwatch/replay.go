@@ -35,6 +35,7 @@ func openRuns(ctx context.Context, dir string) (watch.StoredRuns, error) {
 // runLine is a run as `runs --json` prints it.
 type runLine struct {
 	ID           string   `json:"id"`
+	Number       uint64   `json:"number"`
 	Rig          string   `json:"rig"`
 	Engine       string   `json:"engine"`
 	EngineSerial string   `json:"engine_serial"`
@@ -105,7 +106,7 @@ func listRuns(ctx context.Context, dir string) (list []runLine, err error) {
 	for i := range all {
 		r := &all[i]
 		line := runLine{
-			ID: r.ID, Rig: r.Rig, Engine: r.Engine, EngineSerial: r.EngineSerial,
+			ID: r.ID, Number: r.Number, Rig: r.Rig, Engine: r.Engine, EngineSerial: r.EngineSerial,
 			Started: time.Unix(0, r.Started).UTC().Format(time.RFC3339Nano), State: r.State, Alarms: r.Alarms,
 			SizeBytes: r.Size, Keep: r.Keep, ConfigHash: r.ConfigHash, Build: r.Build, Digest: r.Digest,
 		}

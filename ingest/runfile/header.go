@@ -20,6 +20,7 @@ const (
 // this package.
 type Header struct {
 	ID           string   `json:"id"`
+	Number       uint64   `json:"number,omitempty"` // of the run, counted since the first
 	Rig          string   `json:"rig"`
 	Engine       string   `json:"engine,omitempty"`
 	EngineSerial string   `json:"engine_serial,omitempty"`

@@ -27,6 +27,10 @@ const (
 	hostJudge = 100 * int64(time.Millisecond)
 	// silent is the host time after which a source counts as lost.
 	silent = 2 * second
+	// phaseHeld is how long the last known phase goes on suppressing rules: when a
+	// publisher is switched off, speed goes stale a little before other channels,
+	// which must not raise what was suppressed.
+	phaseHeld = 2 * second
 	// abandoned is the event time without a known phase after which a run ends:
 	// the data system was switched off.
 	abandoned = 600 * second
@@ -321,7 +325,11 @@ func (m *Machine) scan(s *State, scan *monitor.Scan, point *monitor.OperatingPoi
 		m.ledger(s, scan.T)
 	}
 	p.frame.fill(s, scan, point)
-	m.judge(s, scan.T, point.Phase, rules.OfData)
+	phase := point.Phase
+	if phase == monitor.PhaseUnknown && scan.T-s.KnownAt <= phaseHeld {
+		phase = s.Compute.Phase.Known
+	}
+	m.judge(s, scan.T, phase, rules.OfData)
 }
 
 // judgeSelf judges the rules on the daemon itself, by host time: they must speak

@@ -169,7 +169,7 @@ func (c *Core) Header() *RunHeader {
 	cfg, _ := c.Machine.Config()
 	run := &c.State.Run
 	return &RunHeader{
-		ID: run.ID, Rig: run.Rig, Engine: cfg.Rig.EngineModel, EngineSerial: cfg.Rig.EngineSerial, Title: cfg.Rig.Title,
+		ID: run.ID, Number: run.Number, Rig: run.Rig, Engine: cfg.Rig.EngineModel, EngineSerial: cfg.Rig.EngineSerial, Title: cfg.Rig.Title,
 		Operator: run.By, Build: c.build, GOARCH: c.goarch, ConfigHash: cfg.Hash, Started: run.Started,
 		State: runfile.StateRunning,
 	}
