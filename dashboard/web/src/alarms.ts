@@ -27,6 +27,19 @@ const waiting = new Set<AlarmState>(['unacknowledged', 'returned_unacknowledged'
 const silent = new Set<AlarmState>(['normal', 'shelved', 'suppressed_by_design', 'out_of_service']);
 
 export const needsAcknowledge = (a: Alarm): boolean => waiting.has(a.state);
+
+/** What an operator can do to a standing alarm next. */
+export interface Step {
+  path: 'acknowledge' | 'reset';
+  word: string;
+  doing: string;
+}
+
+/** The next step: to acknowledge; a latched one whose condition is gone is reset after that. */
+export function nextStep(a: Alarm): Step | null {
+  if (needsAcknowledge(a)) return { path: 'acknowledge', word: 'Acknowledge', doing: 'Acknowledging…' };
+  return a.state === 'latched_acknowledged' ? { path: 'reset', word: 'Reset', doing: 'Resetting…' } : null;
+}
 /** Listed as standing: neither back to normal nor taken out of annunciation. */
 export const isStanding = (a: Alarm): boolean => !silent.has(a.state);
 /** Sounds until acknowledged: present now, not only told of as past. */

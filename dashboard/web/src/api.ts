@@ -1,5 +1,6 @@
 // Requests to the server beside the page. Failures become sentences for people.
 
+import type { Step } from './alarms';
 import type { Alarm, Frame, HelloFrame, RigInfo, RunSummary, SeriesReply, ThroatCurve } from './frames';
 
 /** A refused or failed request; status 0 when the server was not reached. */
@@ -49,7 +50,7 @@ export const api = {
     get<ThroatCurve>(`api/rigs/${id(rig)}/throat-curve?total_temperature=${totalTemperature}&fuel_air_ratio=${fuelAir}&humidity_ratio=${humidity}`),
   alarms: () => get<Alarm[]>('api/alarms'),
   // `by` may be empty: the server then says "console".
-  acknowledge: (a: Alarm, by: string) => post(`api/alarms/${id(a.id)}/acknowledge`, { revision: a.revision, reason: '', by, request_id: uuid() }),
+  alarm: (a: Alarm, path: Step['path'], by: string) => post(`api/alarms/${id(a.id)}/${path}`, { revision: a.revision, reason: '', by, request_id: uuid() }),
   mark: (run: string, text: string, by: string) => post(`api/runs/${id(run)}/marks`, { text, by, request_id: uuid() }),
   run: (rig: string, action: 'start' | 'end', by: string) => post(`api/rigs/${id(rig)}/runs`, { action, by, request_id: uuid() }),
   runs: () => get<RunSummary[]>('api/runs'),

@@ -1,7 +1,7 @@
 // The shell: one live link for all pages, the header that always tells how old
 // the data is, the routes, and the draw loop.
 
-import { needsAcknowledge, priorityLook, sounds, standing } from './alarms';
+import { needsAcknowledge, nextStep, priorityLook, sounds, standing } from './alarms';
 import { RequestError, api } from './api';
 import type { AckState, Acknowledger, Display } from './context';
 import { type View, attr, h, style, text } from './dom';
@@ -117,10 +117,12 @@ function run(rig: RigInfo, rigs: RigInfo[]): void {
       return p.state === 'pending' && performance.now() - p.at > ackTimeout ? 'no answer: try again' : p.state;
     },
     send(a) {
+      const step = nextStep(a);
+      if (!step) return;
       const entry: { revision: number; state: AckState; at: number } = { revision: a.revision, state: 'pending', at: performance.now() };
       pending.set(a.id, entry);
       dirty = true;
-      api.acknowledge(a, settings.operator).catch(async (e: Error) => {
+      api.alarm(a, step.path, settings.operator).catch(async (e: Error) => {
         const moved = e instanceof RequestError && e.status === 409;
         entry.state = moved ? 'it changed meanwhile: look again' : e.message;
         if (moved) await refresh();

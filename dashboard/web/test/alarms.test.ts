@@ -1,6 +1,6 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
-import { needsAcknowledge, sounds, standing } from '../src/alarms';
+import { needsAcknowledge, nextStep, sounds, standing } from '../src/alarms';
 import type { Alarm } from '../src/frames';
 import { rfc3339 } from '../src/time';
 import { alarm, t0 } from './samples';
@@ -35,4 +35,7 @@ test('only a present, unacknowledged warning or caution sounds', () => {
   assert.ok(!sounds(alarm({ priority: 'note' })));
   assert.ok(needsAcknowledge(alarm({ state: 'latched_unacknowledged' })));
   assert.ok(!needsAcknowledge(alarm({ state: 'latched_acknowledged' })));
+  assert.equal(nextStep(alarm({ state: 'latched_unacknowledged' }))?.path, 'acknowledge');
+  assert.equal(nextStep(alarm({ state: 'latched_acknowledged' }))?.path, 'reset');
+  assert.equal(nextStep(alarm({ state: 'acknowledged' })), null);
 });

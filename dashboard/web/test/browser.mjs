@@ -124,7 +124,7 @@ async function acknowledge() {
     assert.equal(status, 202);
     await page.waitForFunction((was) => {
       const get = (name) => document.querySelector(`[data-q="${name}"]`)?.textContent;
-      return get('alarm-text') !== was || get('acknowledge') === 'Acknowledged';
+      return get('alarm-text') !== was || ['Acknowledged', 'Reset'].includes(get('acknowledge'));
     }, text);
     return true;
   });

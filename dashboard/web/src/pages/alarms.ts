@@ -1,7 +1,7 @@
 // Alarms: those that stand, those taken out of annunciation, and what happened
 // since the page was opened.
 
-import { isStanding, needsAcknowledge, priorityLook, standing, stateWord } from '../alarms';
+import { isStanding, needsAcknowledge, nextStep, priorityLook, standing, stateWord } from '../alarms';
 import type { Display } from '../context';
 import { type View, attr, column, h, refill } from '../dom';
 import type { Alarm } from '../frames';
@@ -30,9 +30,10 @@ export function alarmsPage(d: Display): View {
   let gone = false;
 
   function ack(a: Alarm): Node {
-    if (!d.acknowledger || !needsAcknowledge(a)) return h('span', { class: 'extra' }, a.acknowledged_by ? `by ${a.acknowledged_by}` : '');
+    const step = nextStep(a);
+    if (!d.acknowledger || !step) return h('span', { class: 'extra' }, a.acknowledged_by ? `by ${a.acknowledged_by}` : '');
     const state = d.acknowledger.state(a);
-    const b = h('button', { class: 'ack', type: 'button', onclick: () => d.acknowledger?.send(a) }, state === 'pending' ? 'Acknowledging…' : 'Acknowledge');
+    const b = h('button', { class: 'ack', type: 'button', onclick: () => d.acknowledger?.send(a) }, state === 'pending' ? step.doing : step.word);
     attr(b, 'disabled', state === 'pending' || gone);
     return h('div', {}, b, state !== 'idle' && state !== 'pending' ? h('div', { class: 'extra' }, state) : '');
   }

@@ -1,6 +1,6 @@
 // The one alarm line: the most urgent alarm, what it means, what to do.
 
-import { needsAcknowledge, priorityLook, standing, stateWord } from '../alarms';
+import { needsAcknowledge, nextStep, priorityLook, standing, stateWord } from '../alarms';
 import type { Display } from '../context';
 import { type View, attr, h, text } from '../dom';
 import type { Alarm } from '../frames';
@@ -43,8 +43,9 @@ export function alarmLine(d: Display): View {
     text(response, a ? a.response || (a.unknown ? 'Raised because an input is missing: the rule cannot be judged.' : '') : '');
     if (d.acknowledger) {
       const sending = a ? d.acknowledger.state(a) : 'idle';
-      text(button, sending === 'pending' ? 'Acknowledging…' : open ? 'Acknowledge' : 'Acknowledged');
-      attr(button, 'disabled', !open || sending === 'pending' || d.fresh(now).kind === 'no_link' || d.fresh(now).kind === 'waiting');
+      const step = a && nextStep(a);
+      text(button, step ? (sending === 'pending' ? step.doing : step.word) : 'Acknowledged');
+      attr(button, 'disabled', !step || sending === 'pending' || d.fresh(now).kind === 'no_link' || d.fresh(now).kind === 'waiting');
       attr(button, 'data-hidden', a === null);
       const trouble = sending !== 'idle' && sending !== 'pending' ? sending : '';
       text(others, trouble || (list.length > 1 ? `${list.length - 1} other${list.length > 2 ? 's' : ''} standing` : a ? 'no others standing' : ''));
