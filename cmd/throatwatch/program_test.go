@@ -5,6 +5,7 @@ import (
 	"context"
 	"encoding/json"
 	"errors"
+	"flag"
 	"io"
 	"net/http"
 	"os"
@@ -12,7 +13,9 @@ import (
 	"os/signal"
 	"path/filepath"
 	"regexp"
+	"runtime"
 	"slices"
+	"strconv"
 	"strings"
 	"sync"
 	"syscall"
@@ -31,6 +34,10 @@ const patience = 60 * time.Second
 
 func TestMain(m *testing.M) {
 	if os.Getenv(asProgram) == "" {
+		// Tests that play a rehearsal in real time mostly wait. The flag still counts.
+		if err := flag.Set("test.parallel", strconv.Itoa(3*runtime.GOMAXPROCS(0))); err != nil {
+			panic(err)
+		}
 		os.Exit(m.Run())
 	}
 	ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM)
@@ -329,20 +336,21 @@ func dataFolder(t *testing.T) string {
 }
 
 // testRig writes the example rig with allowances and times so short that a test
-// played at double speed shows an exceeded limit and ends its run by itself.
-func testRig(t *testing.T) string {
+// played at double speed shows an exceeded limit and ends its run by itself. edits
+// are further pairs of what stands there and what is to.
+func testRig(t *testing.T, edits ...[2]string) string {
 	t.Helper()
 	text, err := os.ReadFile(rehearseRig)
 	if err != nil {
 		t.Fatal(err)
 	}
 	s := string(text)
-	for _, r := range [][2]string{
+	for _, r := range append([][2]string{
 		{"limit: 720 degC, allowance: 5 s", "limit: 720 degC, allowance: 500 ms"},
 		{"cool_egt: 120 degC", "cool_egt: 190 degC"},
 		{"off_after: 30 s", "off_after: 500 ms"},
 		{"end_after: 120 s", "end_after: 500 ms"},
-	} {
+	}, edits...) {
 		if !strings.Contains(s, r[0]) {
 			t.Fatalf("%s lacks %q", rehearseRig, r[0])
 		}

@@ -160,6 +160,10 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	if w.site != nil {
 		core.ChunkFor = watch.SinkChunkFor
 	}
+	epoch, err := watch.NextEpoch(w.opt.data, core.State.Epoch)
+	if err != nil {
+		return err
+	}
 	listener, err := w.listen(ctx)
 	if err != nil {
 		return err
@@ -199,7 +203,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	clientParts.Go(func() { w.pump(loopCtx) })
 	clientParts.Go(func() { w.report(loopCtx) })
 	go func() {
-		loopEnd <- w.loop.Run(loopCtx, pipeline.Boot{Epoch: core.State.Epoch + 1, Build: watch.Build(), GOARCH: runtime.GOARCH}, bundle.Marshal())
+		loopEnd <- w.loop.Run(loopCtx, pipeline.Boot{Epoch: epoch, Build: watch.Build(), GOARCH: runtime.GOARCH}, bundle.Marshal())
 	}()
 	sideParts.Go(func() {
 		if err := server.Serve(listener); !errors.Is(err, http.ErrServerClosed) {

@@ -3,9 +3,11 @@ package watch
 import (
 	"errors"
 	"fmt"
+	"io/fs"
 	"os"
 	"path/filepath"
 	"runtime/debug"
+	"strconv"
 	"strings"
 	"syscall"
 
@@ -65,4 +67,39 @@ func Lock(dir string) (unlock func(), err error) {
 		return nil, errors.Join(fmt.Errorf("%s: %w: give another one by --data, or stop that process", dir, ErrLocked), f.Close())
 	}
 	return func() { _ = f.Close() }, nil
+}
+
+// NextEpoch gives the number of a new life of the daemon: above last, the newest
+// that is recorded, and above all that it gave before for this data folder. A file
+// keeps it, so that a life that ended before its boot was recorded leaves its
+// number to nobody: what it has shown must not be taken for what the next one shows.
+func NextEpoch(dir string, last uint64) (uint64, error) {
+	path := filepath.Join(dir, "epoch")
+	b, err := os.ReadFile(path)
+	if err != nil && !errors.Is(err, fs.ErrNotExist) {
+		return 0, fmt.Errorf("data folder: %w", err)
+	}
+	kept, err := strconv.ParseUint(strings.TrimSpace(string(b)), 10, 64)
+	if err != nil {
+		kept = 0 // there is none, or somebody has written into it
+	}
+	next := max(last, kept) + 1
+	if err := replace(path, strconv.AppendUint(nil, next, 10)); err != nil {
+		return 0, fmt.Errorf("data folder: %w", err)
+	}
+	return next, nil
+}
+
+// replace gives a file new content in one step.
+func replace(path string, content []byte) error {
+	temp := path + ".new"
+	f, err := os.OpenFile(temp, os.O_CREATE|os.O_TRUNC|os.O_WRONLY, 0o640)
+	if err != nil {
+		return err
+	}
+	_, err = f.Write(append(content, '\n'))
+	if err := errors.Join(err, f.Sync(), f.Close()); err != nil {
+		return err
+	}
+	return os.Rename(temp, path)
 }
