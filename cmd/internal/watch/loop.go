@@ -27,9 +27,14 @@ const (
 	// inputsBuffer bounds what waits for a step. When it is full senders wait: the
 	// broker keeps what they hold.
 	inputsBuffer = 4096
-	// acksBuffer bounds batches whose messages wait to be acknowledged.
-	acksBuffer = 4096
+	// acksBuffer bounds batches whose messages wait to be acknowledged. When it is
+	// full they gather in the loop, which does not wait: the broker's window bounds
+	// them.
+	acksBuffer = 64
 )
+
+// tooSlow is why recording stopped where the disk gave no error.
+const tooSlow = "the disk does not keep up"
 
 var (
 	// ErrStopped is returned to whoever asks the loop after its end.
@@ -66,7 +71,8 @@ type Loop struct {
 	results chan error // one slot: the writer never waits for the loop
 	queue   []*job     // cut and not yet stored; the first may be with the writer
 	busy    bool       // the writer has the first of queue
-	pending []mqtt.Message
+	pending []mqtt.Message // of the batch that gathers
+	acking  []mqtt.Message // to be acknowledged, in order, before what is in no batch yet
 	lost    uint64 // records stepped and not stored since recording stopped
 	stalled bool
 }
@@ -286,7 +292,7 @@ func (l *Loop) take(it item) {
 		l.cut()
 		l.submit()
 	case l.behind():
-		l.stall()
+		l.stall(tooSlow)
 	}
 }
 
@@ -323,6 +329,7 @@ func (l *Loop) tick() {
 
 // flush cuts a batch when the writer is free for it: a slow disk gets larger ones.
 func (l *Loop) flush() {
+	l.acknowledge(nil) // what was not taken before
 	if l.stalled {
 		return
 	}
@@ -331,7 +338,7 @@ func (l *Loop) flush() {
 	}
 	l.submit()
 	if l.behind() {
-		l.stall()
+		l.stall(tooSlow)
 	}
 }
 
@@ -362,19 +369,31 @@ func (l *Loop) submit() {
 func (l *Loop) stored(err error) {
 	l.busy = false
 	if err != nil {
-		l.cfg.Log.Error("not recording", "err", err)
 		if !l.stalled {
-			l.stall()
+			l.stall(err.Error())
 		}
 		return // the writer has waited already; the next flush or tick tries again
 	}
-	l.acks <- l.queue[0].acks
+	l.acknowledge(l.queue[0].acks)
 	l.queue[0] = nil
 	l.queue = l.queue[1:]
 	if len(l.queue) == 0 && l.stalled {
 		l.resume()
 	}
 	l.submit()
+}
+
+// acknowledge hands messages to the goroutine that acknowledges, if it takes them now.
+func (l *Loop) acknowledge(msgs []mqtt.Message) {
+	l.acking = append(l.acking, msgs...)
+	if len(l.acking) == 0 {
+		return
+	}
+	select {
+	case l.acks <- l.acking:
+		l.acking = nil
+	default:
+	}
 }
 
 // behind tells that the disk does not keep up: the oldest record not stored is
@@ -392,23 +411,21 @@ func (l *Loop) behind() bool {
 
 // stall goes on without the disk: watching comes before storing. Messages are
 // acknowledged unrecorded, those that wait for the disk first.
-func (l *Loop) stall() {
+func (l *Loop) stall(why string) {
 	l.stalled = true
-	l.cfg.Log.Error("not recording: the disk does not keep up; the watch goes on")
+	l.cfg.Log.Error("not recording; the watch goes on", "why", why)
 	for _, j := range l.queue {
-		l.acks <- j.acks
+		l.acknowledge(j.acks)
 		j.acks = nil
 	}
-	l.health(pipeline.PartRecording, false, "the disk does not keep up")
+	l.health(pipeline.PartRecording, false, why)
 }
 
 // discard forgets what was stepped since the last cut.
 func (l *Loop) discard() {
 	l.lost += uint64(l.cfg.Core.Drop())
-	if len(l.pending) > 0 {
-		l.acks <- l.pending
-		l.pending = nil
-	}
+	l.acknowledge(l.pending)
+	l.pending = nil
 	if len(l.queue) > 0 {
 		l.submit()
 	} else if !l.busy {
@@ -492,6 +509,9 @@ func (l *Loop) startAcks() (stop func()) {
 		}
 	}()
 	return func() {
+		if len(l.acking) > 0 {
+			l.acks <- l.acking
+		}
 		close(l.acks)
 		<-ended
 	}

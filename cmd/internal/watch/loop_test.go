@@ -703,3 +703,61 @@ func TestClockBehindRecords(t *testing.T) {
 		}
 	})
 }
+
+// A connection that takes no acknowledgements does not hold the watch up, with a
+// disk or without one; what was not acknowledged then is later, in order.
+func TestAcknowledgementsThatHang(t *testing.T) {
+	for _, disk := range []string{"with a disk", "without"} {
+		t.Run(disk, func(t *testing.T) {
+			t.Parallel()
+			dir := memory(t)
+			synctest.Test(t, func(t *testing.T) {
+				var bad atomic.Bool
+				opt := runfile.Options{BeforeCommit: func(context.Context) error {
+					if bad.Load() {
+						return runfile.ErrFull
+					}
+					return nil
+				}}
+				link := &hangingLink{gate: make(chan struct{}, 1)}
+				d := openDesk(t, dir, opt, func(c *watch.Config) { link.to = c.Ack; c.Ack = link })
+				d.feed(time.Second)
+				bad.Store(disk == "without")
+				link.hold(true)
+				before := d.look()
+				for end := time.Now().Add(10 * time.Second); time.Now().Before(end); time.Sleep(5 * time.Millisecond) {
+					d.send(time.Now())
+				}
+				amid := d.look()
+				link.hold(false)
+				bad.Store(false)
+				if n := amid.points - before.points; n < 190 || len(amid.acked) > len(before.acked)+1 {
+					t.Errorf("%d points in 10 s, 20 per second are due; %d messages were acknowledged over a link that hangs", n, len(amid.acked)-len(before.acked))
+				}
+				d.feed(2 * time.Second)
+				d.close()
+				inOrder(t, d.look().acked, d.sent)
+			})
+		})
+	}
+}
+
+// hangingLink acknowledges while nobody holds it.
+type hangingLink struct {
+	to   watch.Acknowledger
+	gate chan struct{} // holds a token while it hangs
+}
+
+func (h *hangingLink) hold(hang bool) {
+	if hang {
+		h.gate <- struct{}{}
+	} else {
+		<-h.gate
+	}
+}
+
+func (h *hangingLink) Ack(m mqtt.Message) bool {
+	h.gate <- struct{}{}
+	defer func() { <-h.gate }()
+	return h.to.Ack(m)
+}
