@@ -68,12 +68,12 @@ type Loop struct {
 
 	acks    chan []mqtt.Message
 	jobs    chan *job
-	results chan error // one slot: the writer never waits for the loop
-	queue   []*job     // cut and not yet stored; the first may be with the writer
-	busy    bool       // the writer has the first of queue
+	results chan error     // one slot: the writer never waits for the loop
+	queue   []*job         // cut and not yet stored; the first may be with the writer
+	busy    bool           // the writer has the first of queue
 	pending []mqtt.Message // of the batch that gathers
 	acking  []mqtt.Message // to be acknowledged, in order, before what is in no batch yet
-	lost    uint64 // records stepped and not stored since recording stopped
+	lost    uint64         // records stepped and not stored since recording stopped
 	stalled bool
 }
 

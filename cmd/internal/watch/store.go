@@ -119,19 +119,60 @@ func (s *Store) openLast(ctx context.Context) error {
 	}
 	path := newest.Path()
 	header, err := newest.Header(ctx)
-	if err := errors.Join(err, newest.Close()); err != nil {
+	switch err = errors.Join(err, newest.Close()); {
+	case errors.Is(err, runfile.ErrCorrupt):
+		return s.setAside(ctx, path, err)
+	case err != nil:
 		return fmt.Errorf("data folder: %w", err)
 	}
 	if !idle && header.State != runfile.StateRunning {
 		return s.afterRun(ctx, path)
 	}
 	f, err := runfile.Open(ctx, path, runfile.ReadWrite, s.opt)
+	if errors.Is(err, runfile.ErrCorrupt) {
+		return s.setAside(ctx, path, err)
+	}
 	if err != nil {
 		return fmt.Errorf("data folder: %w", err)
 	}
 	s.use(ctx, f, idle)
 	s.clean(idles, path)
 	return nil
+}
+
+// setAside puts a damaged file out of the way under a name that ends in ".damaged",
+// where people find what is left in it, and goes on in an idle file from its last checkpoint that can be read.
+func (s *Store) setAside(ctx context.Context, path string, damage error) error {
+	c := lastGood(ctx, path)
+	aside := path + ".damaged"
+	for _, companion := range []string{"", "-wal", "-shm"} {
+		if err := os.Rename(path+companion, aside+companion); err != nil && !errors.Is(err, os.ErrNotExist) {
+			return fmt.Errorf("data folder: %w", errors.Join(damage, err))
+		}
+	}
+	s.log.Error("a damaged file is put aside; what it holds after its last good checkpoint is not gone on from", "file", aside, "err", damage)
+	return s.newIdle(ctx, c)
+}
+
+// lastGood gives the newest checkpoint of a damaged file that can be read, nil when
+// there is none.
+func lastGood(ctx context.Context, path string) *runfile.Checkpoint {
+	f, err := runfile.Open(ctx, path, runfile.ReadOnly, runfile.Options{})
+	if err != nil {
+		return nil
+	}
+	defer f.Close() //nolint:errcheck // it is only read
+	for seq := uint64(math.MaxInt64); ; {
+		c, err := f.LastCheckpoint(ctx, seq)
+		if err == nil {
+			return &c
+		}
+		damage, ok := errors.AsType[*runfile.CorruptError](err)
+		if !ok || damage.Row == 0 || damage.Row > seq {
+			return nil
+		}
+		seq = damage.Row - 1
+	}
 }
 
 // clean removes idle files that are no longer needed, all but path.
@@ -222,18 +263,21 @@ func (s *Store) Current() (f *runfile.File, idle bool) {
 }
 
 // Restore gives a core that goes on where the stored records end: the state of
-// the newest checkpoint, stepped over the records after it.
+// the newest checkpoint, stepped over the records after it. A file that turns out
+// to be damaged is put aside.
 func (s *Store) Restore(ctx context.Context, m *pipeline.Machine, build, goarch string) (*Core, error) {
-	p, err := pipeline.OpenReplay(ctx, s.file, m, math.MaxInt64)
-	if err != nil {
-		return nil, fmt.Errorf("restore: %w", err)
+	core, err := s.restore(ctx, m, build, goarch)
+	if errors.Is(err, runfile.ErrCorrupt) || errors.Is(err, runfile.ErrGap) {
+		path := s.file.Path()
+		s.over = false
+		if closing := s.file.Close(); closing != nil {
+			s.log.Debug("damaged file", "file", path, "err", closing)
+		}
+		if err := s.setAside(ctx, path, err); err != nil {
+			return nil, err
+		}
+		core, err = s.restore(ctx, m, build, goarch)
 	}
-	core := NewCore(m, p, build, goarch)
-	err = p.Run(ctx, 0, func(r *ingest.Record, outs []pipeline.Outcome) error {
-		core.State = p.State
-		core.again(r, outs)
-		return nil
-	})
 	if err != nil {
 		return nil, fmt.Errorf("restore: %w", err)
 	}
@@ -242,6 +286,20 @@ func (s *Store) Restore(ctx context.Context, m *pipeline.Machine, build, goarch 
 		s.begin(ctx, core.Header(), core.State.Host)
 	}
 	return core, nil
+}
+
+func (s *Store) restore(ctx context.Context, m *pipeline.Machine, build, goarch string) (*Core, error) {
+	p, err := pipeline.OpenReplay(ctx, s.file, m, math.MaxInt64)
+	if err != nil {
+		return nil, err
+	}
+	core := NewCore(m, p, build, goarch)
+	err = p.Run(ctx, 0, func(r *ingest.Record, outs []pipeline.Outcome) error {
+		core.State = p.State
+		core.again(r, outs)
+		return nil
+	})
+	return core, err
 }
 
 func (s *Store) removeHalfMade(id string) {

@@ -442,6 +442,81 @@ func TestDataFolderFaults(t *testing.T) {
 	})
 }
 
+// A damaged file does not keep the watch from its work: it is put aside whole, and
+// the run goes on from what can be read, or begins anew.
+func TestDamagedFileIsPutAside(t *testing.T) {
+	t.Parallel()
+	ctx := t.Context()
+	bundle := smallBundle(t)
+	for _, tt := range []struct {
+		name   string
+		run    bool // a run is on
+		damage func(b []byte) []byte
+		goesOn bool // from a checkpoint
+	}{
+		{"cut in a run", true, func(b []byte) []byte { return b[:len(b)*3/4] }, true},
+		{"cut to its first page", true, func(b []byte) []byte { return b[:20_000] }, false},
+		{"a record in a run", true, func(b []byte) []byte {
+			i := bytes.LastIndex(b, []byte("plant/north/bench/")) // not packed: after the last checkpoint
+			b[i] ^= 1
+			return b
+		}, true},
+		{"a record between runs", false, func(b []byte) []byte {
+			i := bytes.LastIndex(b, []byte("plant/north/bench/"))
+			b[i] ^= 1
+			return b
+		}, true},
+	} {
+		t.Run(tt.name, func(t *testing.T) {
+			dir := memory(t)
+			store, core := openCore(t, dir, runfile.Options{})
+			feed := watch.NewFeed(core, store)
+			must(t, feed.Begin(ctx, pipeline.Boot{Epoch: 1}, bundle, testBegin))
+			host := feedSmall(t, feed, testBegin, 40)
+			if tt.run {
+				must(t, feed.Take(ctx, watch.Input{Kind: ingest.KindAction, Payload: []byte(`{"do":"run_start","by":"T. Ester","request_id":"1"}`)}, host))
+			}
+			core.ChunkFor = 20e9
+			host = feedSmall(t, feed, host, 1000)
+			must(t, feed.End(ctx))
+			run, last := core.State.Run.ID, core.State.Seq
+			f, _ := store.Current()
+			path := f.Path()
+			must(t, store.Close(ctx))
+			b, err := os.ReadFile(path)
+			must(t, err)
+			b = tt.damage(b)
+			must(t, os.WriteFile(path, b, 0o600))
+
+			store, core = openCore(t, dir, runfile.Options{})
+			f, err = runfile.Open(ctx, path+".damaged", runfile.ReadOnly, runfile.Options{})
+			must(t, err)
+			if err := f.Verify(ctx); !errors.Is(err, runfile.ErrCorrupt) {
+				t.Errorf("what was put aside is not the damaged file: %v", err)
+			}
+			must(t, f.Close())
+			if seq := core.State.Seq; tt.goesOn != (seq > 1000) || seq > last {
+				t.Errorf("it goes on from record %d of %d", seq, last)
+			}
+			if on := core.State.RunActive; on != (tt.run && tt.goesOn) || on && core.State.Run.ID != run {
+				t.Errorf("run %+v is on: %v", core.State.Run, on)
+			}
+			feed = watch.NewFeed(core, store)
+			must(t, feed.Begin(ctx, pipeline.Boot{Epoch: 2}, bundle, host+1e9))
+			host = feedSmall(t, feed, host+1e9, 40)
+			if core.State.RunActive {
+				must(t, feed.Take(ctx, watch.Input{Kind: ingest.KindAction, Payload: []byte(`{"do":"run_end","by":"T. Ester","request_id":"2"}`)}, host))
+			}
+			must(t, feed.End(ctx))
+			must(t, store.Close(ctx))
+			must(t, os.Remove(path+".damaged"))
+			if s := readAll(t, dir); s.idles != 1 || len(s.runs) > 1 || s.messages < 120 {
+				t.Errorf("then there are %d messages in %d runs and %d idle files", s.messages, len(s.runs), s.idles)
+			}
+		})
+	}
+}
+
 // endedRun leaves a data folder with one run in it.
 func endedRun(t *testing.T, dir string) {
 	t.Helper()
