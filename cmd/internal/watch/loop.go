@@ -216,8 +216,6 @@ func (l *Loop) Run(ctx context.Context, boot pipeline.Boot, bundle []byte) error
 	l.take(item{in: Input{Kind: ingest.KindBoot, Payload: text}})
 	l.take(item{in: Input{Kind: ingest.KindConfig, Payload: bundle}})
 
-	l.own()
-
 	tick := time.NewTicker(tickEvery)
 	defer tick.Stop()
 	flush := time.NewTicker(commitEvery)
@@ -238,19 +236,6 @@ func (l *Loop) Run(ctx context.Context, boot pipeline.Boot, bundle []byte) error
 		}
 	}
 	return l.drain(stopWriter, stopAcks)
-}
-
-// own waits until the boot record is durable, so that no later life counts under
-// the same epoch and a viewer of this one cannot resume in it. A disk that does
-// not answer keeps nobody from watching.
-func (l *Loop) own() {
-	l.cut()
-	l.submit()
-	select {
-	case err := <-l.results:
-		l.stored(err)
-	case <-time.After(time.Duration(stalledAfter)):
-	}
 }
 
 // drain stores what is left, and what that brings about. The disk gets drainFor.
