@@ -85,6 +85,7 @@ func (s *Server) routes() map[string]handler {
 		"GET /api/rigs/{rig}/operating-point": s.newest("operating_point"),
 		"GET /api/rigs/{rig}/channels":        s.newest("channels"),
 		"GET /api/rigs/{rig}/throat-curve":    s.throatCurve,
+		"GET /api/rigs/{rig}/budget":          s.budget,
 		"POST /api/rigs/{rig}/runs":           s.startOrEndRun,
 		"GET /api/alarms":                     s.alarms,
 		"POST /api/alarms/{id}/{action}":      s.alarmAction,

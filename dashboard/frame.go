@@ -47,7 +47,7 @@ func appendFrame(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) (body []
 	case pipeline.OutcomeRun:
 		kind = "run"
 		dst = member(text(open(dst, kind, o), "event", o.Event), "run", runView(o.Run))
-	case pipeline.OutcomeChannels, pipeline.OutcomeConfig, pipeline.OutcomeQuarantine, pipeline.OutcomeAction:
+	case pipeline.OutcomeChannels, pipeline.OutcomeConfig, pipeline.OutcomeQuarantine, pipeline.OutcomeAction, pipeline.OutcomeReduction:
 		return dst, "", false
 	}
 	return append(dst, '}'), kind, true
@@ -150,8 +150,13 @@ func appendPoint(dst []byte, p *monitor.OperatingPoint, cfg *pipeline.Config) []
 	dst = truth(dst, "lit", p.Lit)
 	dst = text(dst, "phase", p.Phase.String())
 	dst = text(dst, "back_pressure_from", p.BackFrom.String())
+	dst = text(dst, "total_pressure_from", p.PressureBy.String())
 	dst = text(dst, "total_temperature_from", p.TemperatureBy.String())
 	dst = text(dst, "choke_npr_from", p.ChokeNPRFrom.String())
+	dst = truth(dst, "steady", p.Steady)
+	dst = reason(dst, "steady_reason", p.NotSteady)
+	dst = reason(dst, "choke_loss_reason", p.NoChokeLoss)
+	dst = reason(dst, "egt_limit_reason", p.NoEGTLimit)
 	dst = count(dst, "egt_probes_used", int64(p.EGTProbesUsed))
 	dst = count(dst, "rake_probes_used", int64(p.RakeProbesUsed))
 	dst = cause(dst, "cause", p.Cause, cfg)
@@ -166,6 +171,14 @@ func appendPoint(dst []byte, p *monitor.OperatingPoint, cfg *pipeline.Config) []
 		dst = quoted(dst, w)
 	}
 	return append(dst, ']')
+}
+
+// reason appends the code of a reason, or null when there is none.
+func reason(dst []byte, key string, r monitor.Reason) []byte {
+	if r == monitor.NoReason {
+		return append(name(dst, key), "null"...)
+	}
+	return text(dst, key, r.String())
 }
 
 func cause(dst []byte, key string, c monitor.Cause, cfg *pipeline.Config) []byte {
@@ -399,6 +412,14 @@ func station(st *compute.Stations, i int) string {
 		return "t7"
 	case slices.Contains(st.EGT, i):
 		return "egt"
+	case slices.Contains(st.WallStatic, i):
+		return "wall_static"
+	case slices.Contains(st.Reheat, i):
+		return "reheat"
+	case slices.Contains(st.ThroatArea, i):
+		return "throat_area"
+	case st.DewPoint && st.Humidity == i:
+		return "dew_point"
 	}
 	for _, s := range []struct {
 		name  string

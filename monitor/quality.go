@@ -87,11 +87,13 @@ const (
 	SourceOneDimensional        // critical NPR of this gas
 	SourceCalibration           // choke NPR from a nozzle calibration
 	SourceEntry                 // entered by hand in the rig file
-	numSources
+	SourceWallStatic            // static pressure at the wall and the learned ratio to the rake
+	SourceHeatBalance           // heat of air and fuel
+	NumSources
 )
 
-var sourceNames = [numSources]string{
-	"none", "rake", "exit_plane", "barometer", "egt_factor", "one_dimensional", "calibration", "entry",
+var sourceNames = [NumSources]string{
+	"none", "rake", "exit_plane", "barometer", "egt_factor", "one_dimensional", "calibration", "entry", "wall_static", "heat_balance",
 }
 
 // String gives the name used in JSON and on the page.

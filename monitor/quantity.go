@@ -20,13 +20,21 @@ const (
 	ChokeMarginPa
 	PChoked
 	ThroatMach
+	ThroatMachLow95
+	ThroatMachHigh95
 	ThroatPressure
+	ThroatPressureLow95
+	ThroatPressureHigh95
 	ThroatTemperature
+	ThroatTemperatureLow95
+	ThroatTemperatureHigh95
 	CriticalPressure
 	CriticalTemperature
 	MassFlow
 	MassFlowU95
 	ExitVelocity
+	ExitVelocityLow95
+	ExitVelocityHigh95
 	GrossThrust
 	GrossThrustU95
 	GammaTotal
@@ -45,6 +53,10 @@ const (
 	AirFlow
 	FuelFlow
 	FlowBalance
+	FlowBalanceU95
+	FlowBalanceBaseline
+	EffectiveArea
+	EffectiveAreaU95
 	IndependentFlow
 	IndependentFlowU95
 	IndependentFlowParameter
@@ -58,6 +70,12 @@ const (
 	ReferredFlow
 	ReferredSpeed
 	ReferredThrust
+	ChokeLossIn
+	ChokeLossInLow95
+	ChokeLossInHigh95
+	EGTLimitIn
+	EGTLimitInLow95
+	EGTLimitInHigh95
 	NumQuantities
 )
 
@@ -81,20 +99,28 @@ var infos = [NumQuantities]Info{
 	ChokeMarginPa:            {"choke_margin_pa", "Pa", "Critical pressure less back pressure"},
 	PChoked:                  {"p_choked", "", "Probability of choked flow"},
 	ThroatMach:               {"throat_mach", "", "Throat Mach number"},
+	ThroatMachLow95:          {"throat_mach_low95", "", "Throat Mach number, lower 95 % bound"},
+	ThroatMachHigh95:         {"throat_mach_high95", "", "Throat Mach number, upper 95 % bound"},
 	ThroatPressure:           {"throat_pressure_pa", "Pa", "Throat static pressure"},
+	ThroatPressureLow95:      {"throat_pressure_pa_low95", "Pa", "Throat static pressure, lower 95 % bound"},
+	ThroatPressureHigh95:     {"throat_pressure_pa_high95", "Pa", "Throat static pressure, upper 95 % bound"},
 	ThroatTemperature:        {"throat_temperature_k", "K", "Throat static temperature"},
+	ThroatTemperatureLow95:   {"throat_temperature_k_low95", "K", "Throat static temperature, lower 95 % bound"},
+	ThroatTemperatureHigh95:  {"throat_temperature_k_high95", "K", "Throat static temperature, upper 95 % bound"},
 	CriticalPressure:         {"critical_pressure_pa", "Pa", "Critical pressure p*"},
 	CriticalTemperature:      {"critical_temperature_k", "K", "Critical temperature T*"},
 	MassFlow:                 {"mass_flow_kg_s", "kg/s", "Nozzle mass flow W8"},
 	MassFlowU95:              {"mass_flow_kg_s_u95", "kg/s", "W8, 95 % uncertainty"},
 	ExitVelocity:             {"exit_velocity_m_s", "m/s", "Throat velocity V8"},
+	ExitVelocityLow95:        {"exit_velocity_m_s_low95", "m/s", "Throat velocity V8, lower 95 % bound"},
+	ExitVelocityHigh95:       {"exit_velocity_m_s_high95", "m/s", "Throat velocity V8, upper 95 % bound"},
 	GrossThrust:              {"gross_thrust_n", "N", "Gross thrust, computed"},
 	GrossThrustU95:           {"gross_thrust_n_u95", "N", "Gross thrust, 95 % uncertainty"},
 	GammaTotal:               {"gamma_total", "", "Ratio of specific heats at T8"},
 	GasConstant:              {"gas_constant_j_kg_k", "J/(kg K)", "Gas constant"},
 	FlowParameter:            {"flow_parameter", "", "Flow parameter W√(R T0)/(A p0)"},
 	TotalPressure:            {"total_pressure_pa", "Pa", "Nozzle total pressure p8"},
-	RakePressure:             {"rake_pressure_pa", "Pa", "Rake total pressure p7"},
+	RakePressure:             {"rake_pressure_pa", "Pa", "Total pressure p7, nozzle entry"},
 	TotalTemperature:         {"total_temperature_k", "K", "Nozzle gas temperature T8"},
 	BackPressure:             {"back_pressure_pa", "Pa", "Back pressure"},
 	Barometer:                {"barometer_pa", "Pa", "Barometer, station pressure"},
@@ -106,6 +132,10 @@ var infos = [NumQuantities]Info{
 	AirFlow:                  {"air_flow_kg_s", "kg/s", "Bellmouth air flow W2"},
 	FuelFlow:                 {"fuel_flow_kg_s", "kg/s", "Fuel flow"},
 	FlowBalance:              {"flow_balance_kg_s", "kg/s", "Air + fuel flow less W8"},
+	FlowBalanceU95:           {"flow_balance_kg_s_u95", "kg/s", "Air + fuel flow less W8, 95 % uncertainty"},
+	FlowBalanceBaseline:      {"flow_balance_baseline_kg_s", "kg/s", "Air + fuel flow less W8, the engine's own baseline"},
+	EffectiveArea:            {"effective_area_m2", "m²", "Throat area that air + fuel flow implies, hot"},
+	EffectiveAreaU95:         {"effective_area_m2_u95", "m²", "Throat area that air + fuel flow implies, 95 % uncertainty"},
 	IndependentFlow:          {"independent_flow_kg_s", "kg/s", "Air + fuel flow"},
 	IndependentFlowU95:       {"independent_flow_kg_s_u95", "kg/s", "Air + fuel flow, 95 % uncertainty"},
 	IndependentFlowParameter: {"independent_flow_parameter", "", "Flow parameter from air + fuel flow"},
@@ -119,6 +149,12 @@ var infos = [NumQuantities]Info{
 	ReferredFlow:             {"referred_flow_kg_s", "kg/s", "Referred flow W√θ/δ"},
 	ReferredSpeed:            {"referred_speed_rpm", "rpm", "Referred speed N/√θ"},
 	ReferredThrust:           {"referred_thrust_n", "N", "Referred thrust F/δ"},
+	ChokeLossIn:              {"choke_loss_in_s", "s", "Forecast: time to the loss of choke"},
+	ChokeLossInLow95:         {"choke_loss_in_s_low95", "s", "Forecast: time to the loss of choke, lower 95 % bound"},
+	ChokeLossInHigh95:        {"choke_loss_in_s_high95", "s", "Forecast: time to the loss of choke, upper 95 % bound"},
+	EGTLimitIn:               {"egt_limit_in_s", "s", "Forecast: time to the next EGT limit"},
+	EGTLimitInLow95:          {"egt_limit_in_s_low95", "s", "Forecast: time to the next EGT limit, lower 95 % bound"},
+	EGTLimitInHigh95:         {"egt_limit_in_s_high95", "s", "Forecast: time to the next EGT limit, upper 95 % bound"},
 }
 
 // Info gives name, unit and title.
@@ -156,15 +192,53 @@ const (
 	NotStated                 // an uncertainty that is needed is not stated
 	NotEnoughProbes           // too few usable probes
 	EngineNotLit              // defined only with a flame
+	ReheatLit                 // the gas behind the turbine burns: neither T8 nor area are those computed
 	numCauseKinds
 )
 
 var causeNames = [numCauseKinds]string{
-	"available", "not_configured", "channel", "no_flow", "outside_gas_range", "area_unknown", "not_stated", "not_enough_probes", "not_lit",
+	"available", "not_configured", "channel", "no_flow", "outside_gas_range", "area_unknown", "not_stated", "not_enough_probes", "not_lit", "reheat",
 }
 
 // String gives the name of the kind.
 func (k CauseKind) String() string { return name(causeNames[:], k) }
+
+// Reason says what speaks against a steady state or a forecast. The zero value says
+// that nothing does.
+type Reason uint8
+
+// The reasons.
+const (
+	NoReason            Reason = iota
+	ReasonNotConfigured        // the rig file asks for none
+	ReasonPhase                // not in a steady phase, nor at idle
+	// Of a steady state: those of steady.Why, in their order.
+	ReasonFilling
+	ReasonGaps
+	ReasonCorrelated
+	ReasonTrend
+	ReasonScatter
+	ReasonSwing
+	ReasonDwell
+	// Of a forecast: those of steady.NoForecast, in their order.
+	ReasonNotSteady
+	ReasonNotEnough
+	ReasonPastLimit
+	ReasonNoTrend
+	ReasonLevelling
+	ReasonTooFarAhead
+	ReasonNoLimit // there is none above
+	numReasons
+)
+
+var reasonNames = [numReasons]string{
+	"", "not_configured", "phase",
+	"filling", "gaps", "correlated", "trend", "scatter", "swing", "dwell",
+	"not_steady", "not_enough", "past_limit", "no_trend", "levelling", "too_far_ahead", "no_limit",
+}
+
+// String gives the code used in JSON, "" for no reason.
+func (r Reason) String() string { return name(reasonNames[:], r) }
 
 // Warning is a bit of OperatingPoint.Warnings.
 type Warning uint32
@@ -179,7 +253,11 @@ const (
 	WarnFuelFrozen    // fuel-air ratio held from before the flow floor
 	WarnAssumedFuel   // fuel-air ratio not measured
 	WarnAssumedHumidity
-	NumWarnings = 8
+	WarnBarometer       // not a station pressure of the rig's elevation
+	WarnPressureBridged // rake lost, p7 from wall static
+	WarnGasBridged      // T7 from another source than the first one
+	WarnFlowBalance     // the residual departs from the engine's baseline
+	NumWarnings         = 12
 )
 
 var warningTexts = [NumWarnings]string{
@@ -191,6 +269,10 @@ var warningTexts = [NumWarnings]string{
 	"fuel-air ratio held: flow too small to close it",
 	"fuel-air ratio not measured: taken as zero",
 	"humidity not measured: dry air assumed",
+	"barometer differs by more than 6 % from the standard atmosphere at the rig's elevation: another unit, or not the station pressure",
+	"total-pressure rake lost: p7 from wall static pressure and the ratio learned before",
+	"first source of T7 lost: another one stands in",
+	"flow balance departs from the engine's baseline",
 }
 
 // Each calls yield with the text of every warning that is set.
@@ -217,6 +299,11 @@ type OperatingPoint struct {
 	BackFrom       Source
 	TemperatureBy  Source
 	ChokeNPRFrom   Source
+	PressureBy     Source // of p7
+	Steady         bool   // steady phase, and nothing speaks against it
+	NotSteady      Reason // why it is not steady
+	NoChokeLoss    Reason // why there is no forecast of the loss of choke
+	NoEGTLimit     Reason // why there is no forecast of the next EGT limit
 	Warnings       Warning
 	Cause          Cause // why the choke state is unknown, when it is
 	EGTCause       Cause // why indicated EGT is missing, when it is

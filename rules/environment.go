@@ -95,7 +95,8 @@ func NewFrame(names []Name) Frame {
 //
 //	every monitor.Quantity by its key
 //	choke_state phase back_pressure_from                   text
-//	choke_armed choke_marginal lit run_active              true or false
+//	total_pressure_from total_temperature_from             text
+//	choke_armed choke_marginal lit run_active steady       true or false
 //	egt_probes_used egt_probes_lost rake_probes_used rake_probes_lost
 //	health.recording health.input_path health.clock health.sources   true = works
 //	sources_lost data_age_s clock_skew_s
@@ -121,7 +122,7 @@ func StandardNames(channels, bands []string) []Name {
 	for p := monitor.Off; p < monitor.NumPhases; p++ {
 		phases = append(phases, p.String())
 	}
-	for s := monitor.SourceNone; s <= monitor.SourceEntry; s++ {
+	for s := range monitor.NumSources {
 		sources = append(sources, s.String())
 	}
 	for q := range monitor.NumQualities {
@@ -135,7 +136,9 @@ func StandardNames(channels, bands []string) []Name {
 		Name{Name: "choke_state", Type: Text, Values: states},
 		Name{Name: "phase", Type: Text, Values: phases},
 		Name{Name: "back_pressure_from", Type: Text, Values: sources},
-		flag("choke_armed"), flag("choke_marginal"), flag("lit"), daemon(flag("run_active")),
+		Name{Name: "total_pressure_from", Type: Text, Values: sources},
+		Name{Name: "total_temperature_from", Type: Text, Values: sources},
+		flag("choke_armed"), flag("choke_marginal"), flag("lit"), flag("steady"), daemon(flag("run_active")),
 		count("egt_probes_used"), count("egt_probes_lost"), count("rake_probes_used"), count("rake_probes_lost"),
 		daemon(flag("health.recording")), daemon(flag("health.input_path")), daemon(flag("health.clock")),
 		daemon(flag("health.sources")), daemon(count("sources_lost")),

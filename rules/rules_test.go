@@ -22,7 +22,7 @@ func simple(name, when string) Rule {
 
 func TestStandardNames(t *testing.T) {
 	names := StandardNames([]string{"p_oil"}, []string{"run_1"})
-	if want := int(monitor.NumQuantities) + 18 + 3 + 4; len(names) != want {
+	if want := int(monitor.NumQuantities) + 21 + 3 + 4; len(names) != want {
 		t.Errorf("%d names, want %d", len(names), want)
 	}
 	ix := indexOf(names)

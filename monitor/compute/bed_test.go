@@ -144,6 +144,7 @@ func full(tb testing.TB) *builder {
 		st.EGT = append(st.EGT, b.add(id, "K", calib.ReferenceNone, -1))
 	}
 	st.MinP7, st.MinT7, st.MinEGT = 3, 3, 3
+	st.P7Watch.Sampling, st.T7Watch.Sampling = 1e-9, 1e-9 // the profile is known from a survey
 	st.InletT = b.add("t_inlet", "K", calib.ReferenceNone, -1)
 	st.InletP = b.add("p_inlet", "Pa", calib.Gauge, st.Barometer)
 	st.Humidity = b.add("humidity", "1", calib.ReferenceNone, -1)

@@ -1,5 +1,6 @@
 // Package compute turns a scan into an operating point: calibration, references,
-// station values, gas, nozzle, uncertainty, EGT ledger and phase, in that order.
+// station values, gas, nozzle, uncertainty, EGT ledger and phase, flow closure and
+// trends.
 //
 // What a scan's computation takes from earlier scans is in State. A Computer
 // holds what follows from the configuration, and buffers; it allocates nothing
@@ -18,6 +19,9 @@ import (
 	"throatwatch/monitor/gas"
 	"throatwatch/monitor/nozzle"
 	"throatwatch/monitor/phase"
+	"throatwatch/monitor/rake"
+	"throatwatch/monitor/steady"
+	"throatwatch/monitor/uncertainty"
 	"throatwatch/monitor/unit"
 )
 
@@ -52,10 +56,22 @@ type State struct {
 	Phase    phase.State
 	EGT      egt.State
 	F        float64 // fuel-air ratio last closed
+	Rise     float64 // T0 − what the probes of station 7 read, K, as last closed
 	Metal    float64 // temperature of the nozzle's metal, K
 	MetalT   int64   // event time of Metal, 0 = not known
 	Choke    monitor.ChokeState
 	Armed    bool
+
+	P7, T7, Harness Probes
+	Head            Bridge  // (p7/ps − 1)/(W8 √(R T0)/p7)², 1/m⁴: dynamic head at the wall taps
+	HeadNow         float64 // (W8 √(R T0)/p7)², as last computed, m⁴
+	HeatRatio       Bridge  // T7 of the rake over that of the heat balance
+	EGTRatio        Bridge  // T7 of the rake over that of the EGT
+	Steady          steady.State
+	ToChokeLoss     Trend
+	ToEGTLimit      Trend
+	Balance         steady.Learned // of flow balance over W8
+	Area            Area           // of the run
 }
 
 // Computer applies a configuration. It belongs to one goroutine.
@@ -65,8 +81,21 @@ type Computer struct {
 	nozzle    *nozzle.Nozzle
 	bellmouth *nozzle.Nozzle
 	richest   float64 // largest fuel-air ratio used
-	values    []float64
+	p7        group
+	t7        group
+	egt       group
+	detector  steady.Detector
+	watched   []monitor.Quantity // by the detector
+	steady    []float64          // their values
 	usable    []bool
+	learns    bool  // patterns and ratios, in this scan
+	flow      meter // of this scan
+	head      bridged
+	gas       source             // of T7, of this scan
+	result    uncertainty.Result // of this scan
+	parts     []part             // behind the inputs of result
+	last      int64              // event time of result, 0 = there is none
+	scan      uint64             // its number
 }
 
 // New checks a configuration and prepares it. The error holds every fault.
@@ -86,8 +115,25 @@ func New(cfg Config) (*Computer, error) {
 			faults = append(faults, fmt.Errorf("bellmouth: %w", err))
 		}
 	}
-	n := max(len(cfg.Stations.P7), len(cfg.Stations.T7), len(cfg.Stations.EGT))
-	c.values, c.usable = make([]float64, n), make([]bool, n)
+	st := &c.cfg.Stations
+	for _, g := range []struct {
+		to    *group
+		name  string
+		watch rake.Watch
+		list  []int
+		least int
+	}{{&c.p7, "p7", st.P7Watch, st.P7, st.MinP7}, {&c.t7, "t7", st.T7Watch, st.T7, st.MinT7}, {&c.egt, "egt", st.EGTWatch, st.EGT, st.MinEGT}} {
+		if *g.to, err = newGroup(g.watch, g.list, g.least); err != nil {
+			faults = append(faults, fmt.Errorf("%s: %w", g.name, err))
+		}
+	}
+	c.egt.watch.KeepHot = true
+	c.usable = make([]bool, len(st.EGT))
+	c.parts = make([]part, 0, 16+2*len(cfg.Channels))
+	c.steadiness()
+	if err = c.detector.Check(); err != nil {
+		faults = append(faults, err)
+	}
 	return c, errors.Join(faults...)
 }
 
@@ -117,7 +163,7 @@ func order(channels []Channel) ([]int, error) {
 }
 
 // Reset fits the state to the configuration; channels that have the same values
-// as before keep their past.
+// as before keep their past. What was learned belongs to the old one and is forgotten.
 func (c *Computer) Reset(s *State, from []Channel) {
 	old := s.Channels
 	s.Channels = make([]ChannelState, len(c.cfg.Channels))
@@ -129,6 +175,11 @@ func (c *Computer) Reset(s *State, from []Channel) {
 		}
 	}
 	c.cfg.EGT.Fit(&s.EGT)
+	s.P7, s.T7, s.Harness = Probes{}, Probes{}, Probes{}
+	s.Head, s.HeatRatio, s.EGTRatio = Bridge{}, Bridge{}, Bridge{}
+	s.Steady, s.Balance, s.Area = steady.State{}, steady.Learned{}, Area{}
+	s.ToChokeLoss, s.ToEGTLimit = Trend{}, Trend{}
+	s.Rise, s.HeadNow = 0, 0
 }
 
 // sameValues tells whether two channels give the same value for the same raw one:
@@ -142,15 +193,22 @@ func sameValues(a, b *Channel) bool {
 func (c *Computer) Step(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) (ledger bool) {
 	p.Reset()
 	p.T, p.Scan = scan.T, scan.N
+	c.last = 0
 	c.calibrate(s, scan)
 
-	c.temperatures(scan, p)
+	// Patterns and ratios are learned while the engine is steady, as of the scan before.
+	c.learns = s.Phase.Phase == monitor.Steady || c.cfg.Stations.Speed < 0 && s.Steady.Result.Steady
+	c.harness(s, scan, p)
 	c.speed(s, scan, p)
 	ledger = c.cfg.EGT.Step(&s.EGT, p.T, p.V[monitor.EGTIndicated], p.Lit, p.Phase)
-	c.pressures(scan, p)
+	c.pressures(s, scan, p)
 	air := c.air(scan, p)
+	c.meterAir(scan, p, &air)
+	c.gasTemperature(s, scan, p, &air)
 	c.throat(s, scan, p)
-	c.independent(scan, p, air)
+	c.steadyNow(s, p)
+	c.balance(s, p)
+	c.forecast(s, p)
 	c.referred(scan, p)
 	return ledger
 }
@@ -217,52 +275,6 @@ func (c *Computer) channel(scan *monitor.Scan, i int) float64 {
 	return scan.Value[i]
 }
 
-// probes copies the values of a group of channels into the buffers.
-func (c *Computer) probes(scan *monitor.Scan, group []int) ([]float64, []bool) {
-	v, u := c.values[:len(group)], c.usable[:len(group)]
-	for k, i := range group {
-		v[k], u[k] = scan.Value[i], scan.Quality[i].Usable()
-	}
-	return v, u
-}
-
-// mean gives the mean of the usable channels of a group, NaN when they are
-// fewer than least, with the number used.
-func (c *Computer) mean(scan *monitor.Scan, group []int, least int) (mean float64, used int) {
-	sum := 0.0
-	for _, i := range group {
-		if scan.Quality[i].Usable() {
-			sum += scan.Value[i]
-			used++
-		}
-	}
-	if used == 0 || used < least {
-		return math.NaN(), used
-	}
-	return sum / float64(used), used
-}
-
-func (c *Computer) temperatures(scan *monitor.Scan, p *monitor.OperatingPoint) {
-	st := &c.cfg.Stations
-	v, u := c.probes(scan, st.EGT)
-	mean, spread, hottest, coldest, used := egt.Indicated(v, u, st.EGTParallel, st.EGTTrim)
-	p.EGTProbesUsed = int16(used)
-	if used < st.MinEGT || used == 0 {
-		mean = math.NaN()
-		p.EGTCause = blame(scan, st.EGT)
-	}
-	p.V[monitor.EGTIndicated], p.V[monitor.EGTSpread] = mean, spread
-	p.V[monitor.EGTHottest], p.V[monitor.EGTColdest] = hottest, coldest
-	switch {
-	case len(st.T7) > 0:
-		p.V[monitor.TotalTemperature], _ = c.mean(scan, st.T7, st.MinT7)
-		p.TemperatureBy = monitor.SourceRake
-	case st.T7FromEGT > 0:
-		p.V[monitor.TotalTemperature] = st.T7FromEGT * mean
-		p.TemperatureBy = monitor.SourceEGTFactor
-	}
-}
-
 func (c *Computer) speed(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 	n := 60 * c.channel(scan, c.cfg.Stations.Speed)
 	p.V[monitor.Speed] = n
@@ -276,28 +288,6 @@ func (c *Computer) speed(s *State, scan *monitor.Scan, p *monitor.OperatingPoint
 		s.Armed = true
 	}
 	p.ChokeArmed = s.Armed
-}
-
-func (c *Computer) pressures(scan *monitor.Scan, p *monitor.OperatingPoint) {
-	st := &c.cfg.Stations
-	p7, used := c.mean(scan, st.P7, st.MinP7)
-	p.RakeProbesUsed = int16(used)
-	p.V[monitor.RakePressure] = p7
-	if math.IsNaN(p7) {
-		p.Cause = blame(scan, st.P7)
-	}
-	baro := c.channel(scan, st.Barometer)
-	p.V[monitor.Barometer] = baro
-	switch pb := c.channel(scan, st.ExitPlane); {
-	case pb == pb:
-		p.V[monitor.BackPressure], p.BackFrom = pb, monitor.SourceExitPlane
-	case baro == baro:
-		p.V[monitor.BackPressure], p.BackFrom = baro-st.Depression, monitor.SourceBarometer
-	case st.Barometer >= 0: // also what is gauge against it is lost
-		p.Cause = blame(scan, []int{st.Barometer})
-	default:
-		p.Cause = blame(scan, []int{st.ExitPlane})
-	}
 }
 
 // blame names the first channel of a group that is not usable as the cause. -1
@@ -314,198 +304,6 @@ func blame(scan *monitor.Scan, group []int) monitor.Cause {
 		kind = monitor.NotEnoughProbes
 	}
 	return monitor.Cause{Kind: kind, Channel: -1}
-}
-
-// air gives the humid air at the inlet and notes its humidity.
-func (c *Computer) air(scan *monitor.Scan, p *monitor.OperatingPoint) gas.Mixture {
-	war := 0.0
-	rh, t, baro := c.channel(scan, c.cfg.Stations.Humidity), c.channel(scan, c.cfg.Stations.AmbientT), p.V[monitor.Barometer]
-	p.Warnings |= monitor.WarnAssumedHumidity
-	if rh == rh && t == t && baro == baro {
-		if w, err := gas.HumidityRatio(rh, t, baro); err == nil {
-			war = w
-			p.Warnings &^= monitor.WarnAssumedHumidity
-		}
-	}
-	p.V[monitor.HumidityRatio] = war
-	return c.mixture(0, war)
-}
-
-// mixture gives the gas of the configuration; a composition that the gas data
-// do not cover gives the zero mixture, with which nothing evaluates.
-func (c *Computer) mixture(f, war float64) gas.Mixture {
-	if c.cfg.Gamma > 0 {
-		g, err := gas.Perfect(c.cfg.Gamma, c.cfg.GasR)
-		if err != nil {
-			return gas.Mixture{}
-		}
-		return g
-	}
-	g, err := gas.NewMixture(c.cfg.Fuel, f, war)
-	if err != nil {
-		return gas.Mixture{}
-	}
-	return g
-}
-
-// throat computes nozzle and choke state, closing the fuel-air ratio with the
-// flow: f = Wf (1 + WAR)/(W8 − Wf), per kg of dry air.
-func (c *Computer) throat(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
-	t7, p7, pb := p.V[monitor.TotalTemperature], p.V[monitor.RakePressure], p.V[monitor.BackPressure]
-	fuel := c.channel(scan, c.cfg.Stations.FuelFlow)
-	p.V[monitor.FuelFlow] = fuel
-	if t7 != t7 || p7 != p7 || pb != pb {
-		if t7 != t7 && p.Cause.Kind == monitor.Available {
-			p.Cause = blame(scan, c.cfg.Stations.T7)
-			if len(c.cfg.Stations.T7) == 0 && c.cfg.Stations.T7FromEGT > 0 {
-				p.Cause = p.EGTCause
-			}
-		}
-		s.Choke = monitor.ChokeUnknown
-		return
-	}
-	c.metal(s, p.T, t7)
-	war := p.V[monitor.HumidityRatio]
-	in := nozzle.Inputs{
-		TotalPressure: unit.Absolute(p7), BackPressure: unit.Absolute(pb),
-		TotalTemperature: t7, MetalTemperature: s.Metal,
-	}
-	f, rounds := 0.0, 1
-	switch {
-	case !p.Lit:
-		s.F = 0
-	case fuel != fuel:
-		f = s.F
-		p.Warnings |= monitor.WarnAssumedFuel
-	default:
-		f, rounds = s.F, closures
-	}
-	var r nozzle.Result
-	var g gas.Mixture
-	for i := range rounds {
-		g = c.mixture(f, war)
-		var err error
-		if r, err = c.nozzle.Evaluate(&g, in); err != nil {
-			p.Cause = monitor.Cause{Kind: monitor.OutsideGasRange, Channel: -1}
-			s.Choke = monitor.ChokeUnknown
-			return
-		}
-		if i == rounds-1 {
-			break
-		}
-		air := r.MassFlow - fuel
-		if !(air > freezeBelow) {
-			p.Warnings |= monitor.WarnFuelFrozen
-			break
-		}
-		f = max(fuel*(1+war)/air, 0)
-		if f > c.richest {
-			f = c.richest
-			p.Warnings |= monitor.WarnOverStoichiometric
-		}
-	}
-	s.F = f
-	p.V[monitor.FuelAirRatio] = f
-	c.take(p, &r)
-	c.doubt(scan, p, &g, in)
-	c.choke(s, p, &r)
-}
-
-// metal lets the metal of the nozzle follow the gas: dT/dt = (Tg − T)/τ.
-func (c *Computer) metal(s *State, t int64, gasT float64) {
-	dt := t - s.MetalT
-	switch {
-	case s.MetalT == 0 || c.cfg.Nozzle.MetalLag <= 0:
-		s.Metal = gasT
-	case dt > 0:
-		s.Metal += (gasT - s.Metal) * -math.Expm1(-float64(dt)/float64(c.cfg.Nozzle.MetalLag))
-	}
-	s.MetalT = t
-}
-
-// take copies a nozzle result into the operating point.
-func (c *Computer) take(p *monitor.OperatingPoint, r *nozzle.Result) {
-	v := &p.V
-	v[monitor.NPR], v[monitor.NPRRake] = r.NPR, r.NPRRake
-	v[monitor.CriticalNPR], v[monitor.ChokeNPR] = r.CriticalNPR, r.ChokeNPR
-	v[monitor.ChokeMarginPercent], v[monitor.ChokeMarginPa] = r.MarginPercent, r.MarginPa
-	v[monitor.ThroatMach], v[monitor.ThroatPressure], v[monitor.ThroatTemperature] = r.Throat.Mach, r.Throat.Pressure, r.Throat.Temperature
-	v[monitor.CriticalPressure], v[monitor.CriticalTemperature] = r.CriticalPressure, r.CriticalTemperature
-	v[monitor.MassFlow], v[monitor.ExitVelocity], v[monitor.GrossThrust] = r.MassFlow, r.Exit.Velocity, r.GrossThrust
-	v[monitor.GammaTotal], v[monitor.GasConstant] = r.GammaTotal, r.GasConstant
-	v[monitor.FlowParameter] = r.Discharge * r.FlowParameter
-	v[monitor.TotalPressure], v[monitor.ThroatArea] = r.TotalPressure, r.ThroatArea
-	v[monitor.DischargeCoefficient], v[monitor.ThrustCoefficient] = r.Discharge, r.Thrust
-	p.ChokeNPRFrom = monitor.SourceOneDimensional
-	if r.ChokeCalibrated {
-		p.ChokeNPRFrom = monitor.SourceCalibration
-	}
-	if r.Warnings&nozzle.CoefficientRange != 0 {
-		p.Warnings |= monitor.WarnCoefficientRange
-	}
-	if r.Warnings&nozzle.PressureOrder != 0 {
-		p.Warnings |= monitor.WarnPressureOrder
-	}
-	if r.GasWarnings&gas.RealGas != 0 {
-		p.Warnings |= monitor.WarnRealGas
-	}
-	if r.GasWarnings&(gas.BelowRange|gas.AboveRange) != 0 {
-		p.Warnings |= monitor.WarnGasRange
-	}
-}
-
-// choke judges the choke state with hysteresis around margin zero.
-func (c *Computer) choke(s *State, p *monitor.OperatingPoint, r *nozzle.Result) {
-	half := c.cfg.Nozzle.Hysteresis / 2
-	switch m := r.MarginPercent; {
-	case r.Regime == nozzle.NoFlow:
-		s.Choke = monitor.NoFlow
-	case m > half:
-		s.Choke = monitor.Choked
-	case m < -half:
-		s.Choke = monitor.Unchoked
-	case s.Choke != monitor.Choked && s.Choke != monitor.Unchoked:
-		s.Choke = monitor.Unchoked
-		if r.Choked {
-			s.Choke = monitor.Choked
-		}
-	}
-	p.Choke = s.Choke
-}
-
-// independent computes the flow from bellmouth and fuel: the evidence that does
-// not rest on the nozzle.
-func (c *Computer) independent(scan *monitor.Scan, p *monitor.OperatingPoint, air gas.Mixture) {
-	st := &c.cfg.Stations
-	dp, t := c.channel(scan, st.Bellmouth), c.channel(scan, st.InletT)
-	p0 := p.V[monitor.Barometer]
-	if st.InletP >= 0 {
-		p0 = c.channel(scan, st.InletP)
-	}
-	if c.bellmouth == nil || dp != dp || t != t || p0 != p0 {
-		return
-	}
-	w2 := 0.0
-	in := nozzle.Inputs{TotalPressure: unit.Absolute(p0), BackPressure: unit.Absolute(p0 - dp), TotalTemperature: t}
-	if dp > 0 {
-		r, err := c.bellmouth.Evaluate(&air, in)
-		if err != nil {
-			return
-		}
-		w2 = r.MassFlow
-	}
-	v := &p.V
-	v[monitor.IndependentFlowU95] = c.independentU95(scan, &air, in, w2)
-	v[monitor.AirFlow] = w2
-	w := w2 + v[monitor.FuelFlow]
-	if w != w {
-		return
-	}
-	v[monitor.IndependentFlow] = w
-	v[monitor.FlowBalance] = w - v[monitor.MassFlow]
-	if p.Choke == monitor.Choked || p.Choke == monitor.Unchoked {
-		v[monitor.IndependentFlowParameter] = w * math.Sqrt(v[monitor.GasConstant]*v[monitor.TotalTemperature]) / (v[monitor.ThroatArea] * v[monitor.TotalPressure])
-	}
 }
 
 // referred computes referred values by station-2 totals: θ = T2/288.15 K,

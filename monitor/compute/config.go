@@ -6,6 +6,8 @@ import (
 	"throatwatch/monitor/gas"
 	"throatwatch/monitor/nozzle"
 	"throatwatch/monitor/phase"
+	"throatwatch/monitor/rake"
+	"throatwatch/monitor/steady"
 )
 
 // Channel is what the computation knows of a channel.
@@ -20,7 +22,7 @@ type Channel struct {
 type Stations struct {
 	P7          []int // total-pressure probes of the nozzle entry rake
 	MinP7       int   // fewest usable probes for a rake mean
-	T7          []int // total-temperature probes of the rake, empty when T7 comes from EGT
+	T7          []int // total-temperature probes of the rake
 	MinT7       int
 	T7FromEGT   float64 // t7 = factor · indicated EGT, 0 = not stated
 	T7FactorU95 float64 // 95 % uncertainty of the factor
@@ -35,11 +37,52 @@ type Stations struct {
 	InletT      int     // total temperature at station 2
 	InletP      int     // total pressure at station 2; the barometer when -1
 	Humidity    int     // relative humidity, fraction
+	DewPoint    bool    // Humidity is a dew point, K, instead
 	AmbientT    int
 	Speed       int
 	FuelFlow    int
 	Bellmouth   int // differential, inlet total less bellmouth throat static
 	Thrust      int
+
+	// How the groups are watched. Probes and Least follow from the lists above; of
+	// the rest, what is zero gets the value that a small gas turbine needs.
+	P7Watch, T7Watch, EGTWatch rake.Watch
+
+	WallStatic []int // static pressure at the wall of station 7, for a lost rake
+	Reheat     []int // flags, > 0.5 = the reheat is lit
+	ThroatArea []int // throat area in m² by position, on the basis of the nozzle
+
+	// StationPressure is that of the standard atmosphere at the rig's elevation, Pa;
+	// 0 = the elevation is not known.
+	StationPressure float64
+}
+
+// Recovery is how thermocouples in the moving gas of station 7 read: T + Factor·(T0 − T),
+// T the static temperature that the flow through Area has.
+type Recovery struct {
+	Factor float64 // 0 = they are taken to read T0
+	Area   float64 // A7, m²
+	U95    float64 // absolute 95 % uncertainty of Factor
+}
+
+// HeatBalance gives T7 from the heat that goes into the gas,
+//
+//	W2 [h_air(T2) − h_air(298.15 K)] + Wf η LHV = (W2 + Wf) [h(T7) − h(298.15 K)]
+//
+// where shaft power and heat through the walls cancel or do not count.
+type HeatBalance struct {
+	Efficiency   float64 // η of combustion
+	HeatingValue float64 // LHV, J/kg, lower, at 25 °C; 0 = none
+	U95          float64 // relative 95 % uncertainty of η·LHV with what the balance leaves out
+}
+
+// Steadiness is what is asked of a steady engine. The zero value finds none.
+type Steadiness struct {
+	Window      steady.Window
+	Dwell       int64   // ns
+	Pressure    float64 // largest slope of the rake pressure, fraction per second
+	Temperature float64 // of T7, K/s
+	Speed       float64 // of the rotor, fraction per second
 }
 
 // Bellmouth is the air-flow meter at the inlet.
@@ -71,6 +114,9 @@ type Config struct {
 	GasR      float64
 	Nozzle    Nozzle
 	Bellmouth Bellmouth
+	Recovery  Recovery
+	Heat      HeatBalance
+	Steady    Steadiness
 	EGT       egt.Config
 	Phase     phase.Config
 }

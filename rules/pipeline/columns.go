@@ -22,6 +22,7 @@ const (
 	FlagMarginal = 1 << iota
 	FlagArmed
 	FlagLit
+	FlagSteady
 )
 
 // Columns gathers the rows of a chunk.
@@ -63,7 +64,7 @@ func (c *Columns) Add(o *Outcome) {
 		c.values[q] = append(c.values[q], p.V[q])
 	}
 	var flags byte
-	for bit, set := range []bool{p.ChokeMarginal, p.ChokeArmed, p.Lit} {
+	for bit, set := range []bool{p.ChokeMarginal, p.ChokeArmed, p.Lit, p.Steady} {
 		if set {
 			flags |= 1 << bit
 		}

@@ -35,6 +35,9 @@ const (
 	fromChokeState
 	fromPhase
 	fromBackPressure
+	fromTotalPressure
+	fromTemperature
+	fromSteady
 	fromArmed
 	fromMarginal
 	fromLit
@@ -61,6 +64,7 @@ const (
 
 var plainSources = map[string]source{
 	"choke_state": fromChokeState, "phase": fromPhase, "back_pressure_from": fromBackPressure,
+	"total_pressure_from": fromTotalPressure, "total_temperature_from": fromTemperature, "steady": fromSteady,
 	"choke_armed": fromArmed, "choke_marginal": fromMarginal, "lit": fromLit, "run_active": fromRunActive,
 	"egt_probes_used": fromEGTUsed, "rake_probes_used": fromRakeUsed,
 	"egt_probes_lost": fromEGTLost, "rake_probes_lost": fromRakeLost,
@@ -153,6 +157,12 @@ func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 			f.Texts[it.slot] = known(p.Phase != monitor.PhaseUnknown, p.Phase.String())
 		case fromBackPressure:
 			f.Texts[it.slot] = p.BackFrom.String()
+		case fromTotalPressure:
+			f.Texts[it.slot] = p.PressureBy.String()
+		case fromTemperature:
+			f.Texts[it.slot] = p.TemperatureBy.String()
+		case fromSteady:
+			f.Bools[it.slot] = rules.TriOf(p.Steady)
 		case fromArmed:
 			f.Bools[it.slot] = rules.TriOf(p.ChokeArmed)
 		case fromMarginal:
@@ -217,8 +227,8 @@ func (f *frame) fillHealth(s *State) {
 			if s.Align.MaxEvent != 0 {
 				f.Numbers[it.slot] = float64(max(s.Host-s.Align.MaxEvent, 0)) / 1e9
 			}
-		case fromQuantity, fromChokeState, fromPhase, fromBackPressure, fromArmed, fromMarginal, fromLit, fromChannel,
-			fromQuality, fromUsable, fromOver, fromExceeded, fromElapsed, fromRemaining, fromEGTUsed, fromRakeUsed,
+		case fromQuantity, fromChokeState, fromPhase, fromBackPressure, fromTotalPressure, fromTemperature, fromSteady,
+			fromArmed, fromMarginal, fromLit, fromChannel, fromQuality, fromUsable, fromOver, fromExceeded, fromElapsed, fromRemaining, fromEGTUsed, fromRakeUsed,
 			fromEGTLost, fromRakeLost:
 		}
 	}

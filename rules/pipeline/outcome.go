@@ -13,6 +13,7 @@ import (
 	"throatwatch/ingest"
 	"throatwatch/monitor"
 	"throatwatch/monitor/egt"
+	"throatwatch/monitor/steady"
 	"throatwatch/rules"
 )
 
@@ -31,6 +32,7 @@ const (
 	OutcomeConfig                            // Text: a configuration came into force, or why it did not
 	OutcomeQuarantine                        // Text: why a message was not used
 	OutcomeAction                            // Action: what became of an operator's action
+	OutcomeReduction                         // Area: what a run that ends says of the engine
 )
 
 // Outcome is one result of a step. What it points to belongs to the machine and
@@ -52,6 +54,7 @@ type Outcome struct {
 	Text   string
 	OK     bool // of a configuration
 	Action *ActionResult
+	Area   *steady.RunArea
 }
 
 // Allowance is a line of the EGT ledger: a band and how much of it is used up.
@@ -146,7 +149,8 @@ func (d *Digest) Add(o *Outcome) {
 			b = binary.LittleEndian.AppendUint64(b, math.Float64bits(v))
 		}
 		b = append(b, byte(p.Choke), byte(p.Phase), byte(p.BackFrom), byte(p.TemperatureBy), byte(p.ChokeNPRFrom),
-			flag(p.ChokeMarginal), flag(p.ChokeArmed), flag(p.Lit), flag(p.LitKnown))
+			byte(p.PressureBy), flag(p.ChokeMarginal), flag(p.ChokeArmed), flag(p.Lit), flag(p.LitKnown),
+			flag(p.Steady), byte(p.NotSteady), byte(p.NoChokeLoss), byte(p.NoEGTLimit))
 		b = binary.LittleEndian.AppendUint32(b, uint32(p.Warnings))
 		b = binary.LittleEndian.AppendUint16(b, uint16(p.EGTProbesUsed))
 		b = binary.LittleEndian.AppendUint16(b, uint16(p.RakeProbesUsed))

@@ -653,9 +653,9 @@ func (s *stamped) at(t int64) []byte {
 	return s.payload
 }
 
-// steady gives a machine in a steady run, whose window of copies is full, and a
+// warmed gives a machine in a steady run, whose window of copies is full, and a
 // function that steps the next message.
-func steady(tb testing.TB) (b *bed, next func()) {
+func warmed(tb testing.TB) (b *bed, next func()) {
 	tb.Helper()
 	b = newBed(tb)
 	b.play(running, 10*second)
@@ -683,7 +683,7 @@ func steady(tb testing.TB) (b *bed, next func()) {
 // In a steady run a message with its scan, its rules and, once a second, its status
 // and ledger allocates nothing, the window of copies included.
 func TestAllocations(t *testing.T) {
-	b, next := steady(t)
+	b, next := warmed(t)
 	scans := b.s.Align.N
 	const n = 2000
 	got := testing.AllocsPerRun(1, func() {
@@ -705,7 +705,7 @@ func TestAllocations(t *testing.T) {
 
 // One message of six channels a scan.
 func BenchmarkStep(b *testing.B) {
-	bd, next := steady(b)
+	bd, next := warmed(b)
 	scans := bd.s.Align.N
 	b.ReportAllocs()
 	n := 0

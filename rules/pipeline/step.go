@@ -398,11 +398,15 @@ func (m *Machine) startRun(s *State, t int64, by string) {
 		Number: s.Runs, Rig: rig.ID, Engine: rig.EngineModel + " " + rig.EngineSerial, Started: t, By: by,
 	}
 	s.Compute.EGT.Reset()
+	s.Compute.Area = compute.Area{}
 	run := s.Run
 	m.emit(s, Outcome{Kind: OutcomeRun, T: t, Run: &run, Event: "started"})
 }
 
 func (m *Machine) endRun(s *State, t int64) {
+	if area, ok := s.Compute.Area.Of(s.Run.ID); ok {
+		m.emit(s, Outcome{Kind: OutcomeReduction, T: t, Area: &area})
+	}
 	s.RunActive = false
 	s.Run.Ended = t
 	run := s.Run
@@ -513,6 +517,14 @@ func (m *Machine) Ledger(s *State) []Allowance {
 		out = append(out, Allowance{Band: m.prog.cfg.Compute.EGT.Bands[i], BandState: b})
 	}
 	return out
+}
+
+// Budget gives the uncertainty budget of the last scan; ok is false if that has none.
+func (m *Machine) Budget() (b compute.Budget, ok bool) {
+	if m.prog == nil {
+		return b, false
+	}
+	return m.prog.compute.Budget()
 }
 
 func (m *Machine) fillStatus(s *State, st *Status) {

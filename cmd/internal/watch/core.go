@@ -15,9 +15,11 @@ package watch
 import (
 	"encoding/json"
 	"fmt"
+	"math"
 
 	"throatwatch/ingest"
 	"throatwatch/ingest/runfile"
+	"throatwatch/monitor/steady"
 	"throatwatch/rules/alarm"
 	"throatwatch/rules/pipeline"
 )
@@ -148,9 +150,32 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 			}
 		case pipeline.OutcomeQuarantine:
 			c.event(o, "quarantine", o.Text)
+		case pipeline.OutcomeReduction:
+			c.event(o, "reduction", reduction(o.Area))
 		case pipeline.OutcomeChannels, pipeline.OutcomeLedger, pipeline.OutcomeStatus, pipeline.OutcomeAction:
 		}
 	}
+}
+
+// reductionJSON is what a run leaves behind of the effective throat area: mean over
+// its steady choked scans, and relative standard uncertainties of what differs from run
+// to run and of what all runs with these instruments share; null if not known.
+type reductionJSON struct {
+	Run        string   `json:"run"`
+	Area       float64  `json:"effective_area_m2"`
+	Random     *float64 `json:"random"`
+	Systematic *float64 `json:"systematic"`
+	Steady     float64  `json:"steady_s"`
+}
+
+func reduction(a *steady.RunArea) reductionJSON {
+	known := func(v float64) *float64 {
+		if math.IsNaN(v) {
+			return nil
+		}
+		return &v
+	}
+	return reductionJSON{a.Run, a.Area, known(a.Random), known(a.Systematic), float64(a.Steady) / 1e9}
 }
 
 func (c *Core) event(o *pipeline.Outcome, kind string, v any) {
