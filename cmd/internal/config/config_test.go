@@ -156,7 +156,7 @@ func TestMeanings(t *testing.T) {
 		name      string
 		got, want any
 	}{
-		{"example: channels", len(ex.Compute.Channels), 40},
+		{"example: channels", len(ex.Compute.Channels), 41},
 		{"example: rig", ex.Rig, pipeline.RigInfo{
 			ID: "cell_2", Title: "Alder Bank cell 2", EngineModel: "Merle 5", EngineSerial: "ML5-0042", EngineBuild: "7",
 			NozzleSerial: "NZ-0311", LimitsVersion: "ML5-LIM-C",
@@ -168,7 +168,7 @@ func TestMeanings(t *testing.T) {
 		{"example: harness needs", ex.Compute.Stations.MinEGT, 6},
 		{"example: last EGT probe", id(&ex, ex.Compute.Stations.EGT[7]), "egt_8"},
 		{"example: exit plane", id(&ex, ex.Compute.Stations.ExitPlane), "p_exit"},
-		{"example: no T7 factor", ex.Compute.Stations.T7FromEGT, 0.0},
+		{"smallest: no T7 factor", mi.Compute.Stations.T7FromEGT, 0.0},
 		{"example: rake is gauge", channelOf(t, &ex, "p7_3").Reference, calib.Gauge},
 		{"example: against", id(&ex, channelOf(t, &ex, "p7_3").Port), "p_baro"},
 		{"example: cell is differential", channelOf(t, &ex, "dp_cell").Reference, calib.Differential},

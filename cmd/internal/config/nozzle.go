@@ -8,18 +8,32 @@ import (
 	"throatwatch/monitor/unit"
 )
 
+// roomy is the least ratio of the passage at the probes to the throat: at 1.1 the gas
+// there has Mach 0.69, and probes do not read its total temperature by a recovery factor.
+const roomy = 1.1
+
 // readNozzle reads the nozzle with the uncertainties of its geometry.
 func (r *rig) readNozzle(n node) {
 	f := n.fields()
 	z := &r.cfg.Compute.Nozzle
 	r.cfg.Rig.NozzleSerial = f.get("serial").label("")
 	f.get("measured_on").label("") // for people: it travels in the text of the bundle
-	z.ThroatArea = f.need("throat_area", "as 0.0250 m2").quantity(unit.Area, 0, positive, between(1e-6, 10, "1 mm2 and 10 m2"))
+	area := f.need("throat_area", "as 0.0250 m2, or {channel: CHANNEL} for a position that is measured")
+	if area.is() && !area.scalar() {
+		g := area.fields()
+		r.cfg.Compute.Stations.ThroatArea = r.probes(g.need("channel", "the area by position; several are averaged"), unit.Area)
+		g.done()
+	} else {
+		z.ThroatArea = area.quantity(unit.Area, 0, positive, between(1e-6, 10, "1 mm2 and 10 m2"))
+	}
 	exit := f.get("exit_area")
 	if f.get("kind").choice("convergent", "convergent", "convergent-divergent") == "convergent-divergent" {
 		z.Kind = nozzle.ConvergentDivergent
 		exit = f.need("exit_area", "a convergent-divergent nozzle has one")
 		z.ExitArea = exit.quantity(unit.Area, 0, positive)
+		if area.is() && !area.scalar() {
+			area.fault("the area ratio of a convergent-divergent nozzle is not followed", "state its throat area")
+		}
 		if z.ExitArea > 0 && z.ExitArea < z.ThroatArea {
 			exit.fault("the exit is smaller than the throat", "correct the areas, or write kind: convergent")
 		}
@@ -56,6 +70,9 @@ func (r *rig) readNozzle(n node) {
 	z.ResolutionFloor = f.get("no_flow_below").number(1.003, between(1, 1.2, "1 and 1.2")) - 1
 	z.ResolutionFloor = round12(z.ResolutionFloor)
 	f.done()
+	if a := r.cfg.Compute.Recovery.Area; a > 0 && a < roomy*z.ThroatArea {
+		r.recovery.fault("the area at the probes is hardly larger than the throat", "state that of the passage at station 7")
+	}
 }
 
 // readThermal reads how the throat area follows the temperature of the metal.

@@ -10,6 +10,7 @@ import (
 	"throatwatch/monitor/align"
 	"throatwatch/monitor/calib"
 	"throatwatch/monitor/gas"
+	"throatwatch/monitor/steady"
 	"throatwatch/monitor/unit"
 	"throatwatch/rules/pipeline"
 )
@@ -24,6 +25,7 @@ type rig struct {
 	docs         []*document
 	channels     []*channel
 	elevation    float64 // m; NaN when not given
+	recovery     node    // stations.t7.recovery
 	used         []bool  // by channel: a station, a reference or a rule needs it
 	defaultRules bool
 	ruleFiles    []node
@@ -49,6 +51,7 @@ func readRig(f File) *rig {
 	r.readBellmouth(m.get("bellmouth"))
 	r.readPhase(m.get("phase"))
 	r.readChoke(m.get("choke"))
+	r.readSteady(m.get("steady"))
 	r.readEGT(m.get("egt"))
 	run := m.get("run").fields()
 	r.cfg.Run.EndAfter = run.get("end_after").duration(120*second, positive)
@@ -183,6 +186,22 @@ func (r *rig) readGas(n node) {
 		g.done()
 	}
 	r.cfg.Compute.Fuel = fuel
+	f.done()
+}
+
+// readSteady reads what is asked of a steady engine.
+func (r *rig) readSteady(n node) {
+	f := n.fields()
+	q := &r.cfg.Compute.Steady
+	window := f.get("window").duration(60*second, between(8, 600, "8 s and 600 s"))
+	// Bins shorter than the noise is correlated cost time and say nothing.
+	width := max(window/120, second/2)
+	q.Window = steady.Window{Width: width, Bins: int(window / width)}
+	q.Dwell = f.get("dwell").duration(10 * second)
+	const minute = 60
+	q.Pressure = f.get("pressure_slope").in("%/min", 0.25, positive) / 100 / minute
+	q.Temperature = f.get("temperature_slope").in("K/min", 6, positive) / minute
+	q.Speed = f.get("speed_slope").in("%/min", 0.25, positive) / 100 / minute
 	f.done()
 }
 

@@ -2,11 +2,14 @@ package config
 
 import (
 	"fmt"
+	"math"
 	"slices"
 	"strings"
 
 	"throatwatch/monitor/calib"
 	"throatwatch/monitor/egt"
+	"throatwatch/monitor/rake"
+	"throatwatch/monitor/uncertainty"
 	"throatwatch/monitor/unit"
 )
 
@@ -19,9 +22,11 @@ func (r *rig) readStations(n node) {
 	p7 := f.need("p7", "the total-pressure probes at the nozzle entry, as {probes: [p7_1, p7_2]}").fields()
 	s.P7 = r.probes(p7.need("probes", "list the channels of the rake"), unit.Pressure, total...)
 	s.MinP7 = atLeast(p7.get("at_least"), len(s.P7))
+	readWatch(p7, &s.P7Watch, unit.Pressure, len(s.P7))
+	s.WallStatic = r.probes(p7.get("wall_static"), unit.Pressure, total...)
 	p7.done()
 
-	r.readT7(f.need("t7", "the gas temperature at the nozzle entry, as {probes: [t7_1]} or {from_egt: {factor: 1.02, uncertainty: 2 %}}"))
+	t7 := f.need("t7", "the gas temperature at the nozzle entry, as {probes: [t7_1]} or {from_egt: {factor: 1.02, uncertainty: 2 %}}")
 	r.readHarness(f.get("egt"))
 	r.readBackPressure(f.need("back_pressure", "write {exit_plane: CHANNEL} or {barometer: CHANNEL, cell_depression: …, depression_uncertainty: …}"))
 
@@ -30,28 +35,93 @@ func (r *rig) readStations(n node) {
 	s.InletP = r.channel(inlet.get("pressure"), unit.Pressure, total...)
 	inlet.done()
 
-	s.Humidity = r.channel(f.get("humidity"), unit.Ratio)
+	humidity, dew := f.get("humidity"), f.get("dew_point")
+	s.Humidity = r.channel(humidity, unit.Ratio)
+	if dew.is() {
+		s.Humidity, s.DewPoint = r.channel(dew, unit.Temperature), true
+		if humidity.is() {
+			dew.fault("the humidity of the air has two sources", "keep humidity with ambient_temperature, or dew_point")
+		}
+	}
 	s.AmbientT = r.channel(f.get("ambient_temperature"), unit.Temperature)
 	s.Speed = r.channel(f.get("speed"), unit.Frequency)
 	s.FuelFlow = r.channel(f.get("fuel_flow"), unit.MassFlow)
 	s.Bellmouth = r.channel(f.get("bellmouth"), unit.Pressure, calib.Differential)
 	s.Thrust = r.channel(f.get("thrust"), unit.Force)
+	s.Reheat = r.probes(f.get("reheat"), unit.Ratio)
+	if !math.IsNaN(r.elevation) {
+		s.StationPressure = stationPressure(seaPressure, r.elevation)
+	}
+	r.readT7(t7) // it may need the others
 	f.done()
+}
+
+// readWatch reads how the probes of a group are weighed and watched.
+func readWatch(f *fields, w *rake.Watch, d unit.Dimension, probes int) {
+	if n := f.get("weights"); n.is() {
+		for _, item := range n.items() {
+			w.Weights = append(w.Weights, item.number(1, positive))
+		}
+		if len(w.Weights) != probes {
+			n.fault(fmt.Sprintf("%d weights for %d probes", len(w.Weights), probes), "one weight per probe, such as the area that it stands for")
+		}
+	}
+	w.Departure = f.get("departure").quantity(difference(d), 0, positive)
+	w.Sampling = f.get("sampling").quantity(difference(d), 0, positive) / uncertainty.Coverage
 }
 
 func (r *rig) readT7(n node) {
 	f := n.fields()
 	s := &r.cfg.Compute.Stations
-	probes, least, factor := f.get("probes"), f.get("at_least"), f.get("from_egt")
+	probes, least, factor, recovery, heat := f.get("probes"), f.get("at_least"), f.get("from_egt"), f.get("recovery"), f.get("heat_balance")
 	s.T7 = r.probes(probes, unit.Temperature)
 	s.MinT7 = atLeast(least, len(s.T7))
+	readWatch(f, &s.T7Watch, unit.Temperature, len(s.T7))
 	g := factor.fields()
 	s.T7FromEGT = g.need("factor", "t7 in K = factor · indicated EGT in K").number(0, between(0.7, 1.4, "0.7 and 1.4"))
 	s.T7FactorU95 = g.need("uncertainty", "at 95 %, as 2 %").share(0, positive, between(0, 0.2, "0 % and 20 %"))
 	g.done()
+	r.readRecovery(recovery, probes)
+	r.readHeatBalance(heat)
 	f.done()
-	if f.is() && f.has("probes") == f.has("from_egt") {
-		f.fault("t7 needs one source", "give either probes, or from_egt with factor and uncertainty")
+	if f.is() && !f.has("probes") && !f.has("from_egt") && !f.has("heat_balance") {
+		f.fault("t7 needs a source", "give probes, heat_balance or from_egt; where there are several, the first of them that is good counts")
+	}
+	if s.T7FromEGT > 0 && len(s.EGT) == 0 {
+		factor.fault("t7 comes from the EGT, but stations.egt names no harness", "add egt: {probes: [CHANNEL, …]}")
+	}
+}
+
+// readRecovery reads how thermocouples in the moving gas read.
+func (r *rig) readRecovery(n, probes node) {
+	if !n.is() {
+		return
+	}
+	f := n.fields()
+	c := &r.cfg.Compute.Recovery
+	c.Factor = f.need("factor", "they read T + factor · (T0 − T), as 0.95").number(0, between(0.5, 1, "0.5 and 1"))
+	c.Area = f.need("area", "of the passage at the probes, as 0.055 m2").quantity(unit.Area, 0, positive)
+	c.U95 = f.need("uncertainty", "of the factor at 95 %, as 0.02").number(0, positive, between(0, 0.5, "0 and 0.5"))
+	f.done()
+	if !probes.is() {
+		f.fault("a recovery without probes", "it belongs to t7.probes; indicated EGT is never corrected for it")
+	}
+	r.recovery = n
+}
+
+// readHeatBalance reads t7 by the heat of air and fuel.
+func (r *rig) readHeatBalance(n node) {
+	if !n.is() {
+		return
+	}
+	f := n.fields()
+	c, s := &r.cfg.Compute.Heat, &r.cfg.Compute.Stations
+	c.Efficiency = f.need("efficiency", "of the combustion, as 99.5 %").share(0, positive, between(0.5, 1, "50 % and 100 %"))
+	c.HeatingValue = f.need("heating_value", "of the fuel, lower, at 25 °C, as 43.1 MJ/kg").quantity(unit.SpecificEnergy, 0, positive, between(5e6, 130e6, "5 MJ/kg and 130 MJ/kg"))
+	c.U95 = f.need("uncertainty", "of efficiency times heating value at 95 %, with what the balance leaves out, as 1 %").share(0, positive, between(0, 0.2, "0 % and 20 %"))
+	f.done()
+	if s.FuelFlow < 0 || s.Bellmouth < 0 || s.InletT < 0 {
+		f.fault("a heat balance needs air flow, fuel flow and inlet temperature", "name channels in stations.bellmouth, fuel_flow and inlet.temperature")
 	}
 }
 
@@ -69,12 +139,10 @@ func (r *rig) readHarness(n node) {
 	}
 	s.EGTTrim = f.get("trim").quantity(unit.TemperatureDifference, 0, between(-200, 200, "-200 K and 200 K"))
 	s.MinEGT = atLeast(f.get("at_least"), len(s.EGT))
+	s.EGTWatch.Departure = f.get("departure").quantity(unit.TemperatureDifference, 0, positive)
 	f.done()
 	if f.is() && f.has("probes") == f.has("parallel") {
 		f.fault("the EGT harness needs one source", "give either probes: [CHANNEL, …], or parallel: CHANNEL for probes wired together")
-	}
-	if s.T7FromEGT > 0 && !n.is() {
-		n.fault("t7 comes from the EGT, but stations.egt names no harness", "add egt: {probes: [CHANNEL, …]}")
 	}
 }
 

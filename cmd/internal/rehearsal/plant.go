@@ -141,6 +141,8 @@ type state struct {
 	ambient   float64
 	humidity  float64 // relative
 	p7, t7    float64
+	p7Static  float64 // at the wall of station 7
+	t7Static  float64
 	egt       float64
 	gasFlow   float64 // nozzle
 	airFlow   float64 // bellmouth
@@ -156,11 +158,12 @@ type state struct {
 type plant struct {
 	line
 	state
-	cfg   *compute.Config
-	exit  *nozzle.Nozzle
-	fuel  gas.Fuel
-	t     float64    // s since the first instant
-	phase [4]float64 // of the slow wander of weather and governor
+	cfg    *compute.Config
+	exit   *nozzle.Nozzle
+	throat float64 // m², as configured
+	fuel   gas.Fuel
+	t      float64    // s since the first instant
+	phase  [4]float64 // of the slow wander of weather and governor
 
 	rate      float64 // dn/dt, 1/s
 	demand    float64
@@ -185,10 +188,15 @@ func newPlant(c *compute.Config, rng *rand.Rand) (*plant, error) {
 	if p.fuel == (gas.Fuel{}) {
 		p.fuel = gas.Kerosene()
 	}
-	if !(c.Nozzle.ThroatArea > 0) {
+	geometry := c.Nozzle.Config
+	if position := c.Stations.ThroatArea; len(position) > 0 { // held in the middle of its range
+		ch := &c.Channels[position[0]]
+		geometry.ThroatArea = (ch.Low + ch.High) / 2
+	}
+	if !(geometry.ThroatArea > 0) {
 		return nil, errors.New("rehearsal: the rig file gives no throat area: add nozzle.throat_area")
 	}
-	geometry := c.Nozzle.Config
+	p.throat = geometry.ThroatArea
 	geometry.ResolutionFloor = 0 // the smallest flow is a flow; telling it from none is the watcher's task
 	var err error
 	if p.exit, err = nozzle.New(geometry); err != nil {
@@ -339,13 +347,7 @@ func (p *plant) gasPath() error {
 	if err != nil {
 		return fmt.Errorf("rehearsal: surroundings: %w", err)
 	}
-	// Heat of the fuel burnt = enthalpy that the gas has gained, mean cp between.
-	cp := 985 + 0.13*(p.t7+p.inletT)/2
-	far := p.flame * max(0, cp*(p.t7-p.inletT)/(heating-cp*(p.t7-p.inletT)))
-	mix, err := gas.NewMixture(p.fuel, far, war)
-	if c.Gamma > 0 {
-		mix, err = gas.Perfect(c.Gamma, c.GasR)
-	}
+	far, mix, err := p.burn(war)
 	if err != nil {
 		return fmt.Errorf("rehearsal: exhaust gas: %w", err)
 	}
@@ -360,12 +362,66 @@ func (p *plant) gasPath() error {
 		return fmt.Errorf("rehearsal: %w", err)
 	}
 	p.gasFlow = r.MassFlow
+	p.static(&mix)
 	dry := p.gasFlow / (1 + far + war)
 	p.fuelFlow = dry * far
 	p.airFlow = dry * (1 + war) / (1 - p.bleed)
 	p.thrust = 0.985*r.GrossThrust - 5*p.airFlow // cell drag, and the momentum of the air that drifts in at 5 m/s
 	p.bellmouth = p.bellmouthDrop(war)
 	return nil
+}
+
+// burn gives the fuel-air ratio, dry basis, that heats the air to T7, and the gas:
+//
+//	(1 + war) [h_air(T2) − h_air(T_ref)] + f q = (1 + war + f) [h(T7) − h(T_ref)]
+func (p *plant) burn(war float64) (far float64, mix gas.Mixture, err error) {
+	c := p.cfg
+	products := func() (gas.Mixture, error) {
+		if c.Gamma > 0 {
+			return gas.Perfect(c.Gamma, c.GasR)
+		}
+		return gas.NewMixture(p.fuel, far, war)
+	}
+	air, err := products()
+	if err != nil {
+		return 0, air, err
+	}
+	const reference = 298.15
+	q := heating
+	if h := &c.Heat; h.HeatingValue > 0 {
+		q = h.Efficiency * h.HeatingValue
+	}
+	in := (1 + war) * (air.H(p.inletT) - air.H(reference))
+	mix = air
+	for range 6 { // the gas depends on f a little
+		h := mix.H(p.t7) - mix.H(reference)
+		far = p.flame * max(0, ((1+war)*h-in)/(q-h))
+		if mix, err = products(); err != nil {
+			return 0, mix, err
+		}
+	}
+	return far, mix, nil
+}
+
+// static finds the static state at the probes of station 7, by the area of the passage
+// there, twice the throat where the rig file has none.
+func (p *plant) static(g *gas.Mixture) {
+	area := p.cfg.Recovery.Area
+	if area == 0 {
+		area = 2 * p.throat
+	}
+	h0, s0 := g.H(p.t7), g.S0(p.t7)
+	pressure := func(t float64) float64 { return p.p7 * math.Exp((g.S0(t)-s0)/g.R()) }
+	lo, hi := g.Critical(p.t7).Temperature, p.t7
+	for range 50 {
+		t := (lo + hi) / 2
+		if area*pressure(t)/(g.R()*t)*math.Sqrt(2*(h0-g.H(t))) > p.gasFlow {
+			lo = t
+		} else {
+			hi = t
+		}
+	}
+	p.t7Static, p.p7Static = hi, pressure(hi)
 }
 
 // bellmouthDrop gives the pressure drop, Pa, by which the bellmouth shows the air

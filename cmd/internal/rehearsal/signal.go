@@ -9,6 +9,7 @@ import (
 	"throatwatch/monitor"
 	"throatwatch/monitor/calib"
 	"throatwatch/monitor/compute"
+	"throatwatch/monitor/gas"
 	"throatwatch/monitor/unit"
 )
 
@@ -88,6 +89,9 @@ func station(c *compute.Config, sensors []sensor, rng *rand.Rand) {
 	set(st.AmbientT, 0, func(p *plant) float64 { return p.ambient })
 	set(st.InletT, 0.5, func(p *plant) float64 { return p.inletT })
 	set(st.Humidity, 0, func(p *plant) float64 { return p.humidity })
+	if st.DewPoint {
+		set(st.Humidity, 1, func(p *plant) float64 { return dewPoint(p.humidity, p.ambient) })
+	}
 	set(st.Speed, 0, func(p *plant) float64 { return p.n * p.max / 60 })
 	set(st.FuelFlow, 0.15, func(p *plant) float64 { return p.fuelFlow })
 	set(st.Thrust, 0.08, func(p *plant) float64 { return p.thrust })
@@ -95,22 +99,56 @@ func station(c *compute.Config, sensors []sensor, rng *rand.Rand) {
 	set(st.InletP, pneumatic, func(p *plant) float64 { return p.inletP })
 	set(st.ExitPlane, pneumatic, func(p *plant) float64 { return p.back })
 	set(st.Bellmouth, pneumatic, func(p *plant) float64 { return p.bellmouth })
-	for k, v := range pattern(len(st.P7), rng) {
+	for _, i := range st.WallStatic {
+		set(i, pneumatic, func(p *plant) float64 { return p.p7Static })
+	}
+	for _, i := range st.Reheat {
+		set(i, 0, func(*plant) float64 { return 0 })
+	}
+	for _, i := range st.ThroatArea {
+		set(i, 0, func(p *plant) float64 { return p.throat })
+	}
+	for k, v := range pattern(st.P7Watch.Weights, len(st.P7), rng) {
 		set(st.P7[k], pneumatic, func(p *plant) float64 { return p.p7 + 0.004*v*(p.p7-p.back) })
 	}
-	for k, v := range pattern(len(st.T7), rng) {
-		set(st.T7[k], 1.2+0.3*rng.Float64(), func(p *plant) float64 { return p.t7 + 8*v*spread(p) })
+	recovery := 1.0
+	if r := c.Recovery.Factor; r > 0 {
+		recovery = r
 	}
-	for k, v := range pattern(len(st.EGT), rng) {
+	for k, v := range pattern(st.T7Watch.Weights, len(st.T7), rng) {
+		set(st.T7[k], 1.2+0.3*rng.Float64(), func(p *plant) float64 {
+			return p.t7Static + recovery*(p.t7-p.t7Static) + 8*v*spread(p)
+		})
+	}
+	for k, v := range pattern(nil, len(st.EGT), rng) {
 		set(st.EGT[k], 0.8+0.3*rng.Float64(), func(p *plant) float64 {
 			return p.egt - st.EGTTrim + 14*v*spread(p)
 		})
 	}
-	for _, i := range append([]int{st.Barometer, st.InletP, st.ExitPlane}, st.P7...) {
+	for _, i := range slices.Concat([]int{st.Barometer, st.InletP, st.ExitPlane}, st.P7, st.WallStatic) {
 		if i >= 0 && i < len(sensors) {
 			sensors[i].absolute = true
 		}
 	}
+}
+
+// dewPoint gives the temperature, K, at which air of relative humidity rh and
+// temperature t would be saturated.
+func dewPoint(rh, t float64) float64 {
+	want, err := gas.SaturationPressure(t)
+	if err != nil {
+		return t
+	}
+	lo, hi := t-60, t
+	for range 40 {
+		middle := (lo + hi) / 2
+		if p, err := gas.SaturationPressure(middle); err == nil && p > rh*want {
+			hi = middle
+		} else {
+			lo = middle
+		}
+	}
+	return hi
 }
 
 // pneumatic is the time constant, s, of a pressure line.
@@ -122,18 +160,23 @@ func barometer(p *plant) float64 { return p.barometer }
 func spread(p *plant) float64 { return mark(p.lit) * (0.35 + 0.65*min(p.power, 1)) }
 
 // pattern gives the circumferential pattern of n probes: a tilt, a second harmonic
-// and something of each probe's own, without mean, about ±1.
-func pattern(n int, rng *rand.Rand) []float64 {
+// and something of each probe's own, without weighted mean, about ±1.
+func pattern(weights []float64, n int, rng *rand.Rand) []float64 {
 	v := make([]float64, n)
 	a, b := 2*math.Pi*rng.Float64(), 2*math.Pi*rng.Float64()
-	var mean float64
+	var mean, all float64
 	for i := range v {
 		x := 2 * math.Pi * float64(i) / float64(n)
 		v[i] = 0.6*math.Cos(x+a) + 0.3*math.Cos(2*x+b) + 0.25*rng.NormFloat64()
-		mean += v[i] / float64(n)
+		w := 1.0
+		if weights != nil {
+			w = weights[i]
+		}
+		mean += w * v[i]
+		all += w
 	}
 	for i := range v {
-		v[i] -= mean
+		v[i] -= mean / all
 	}
 	return v
 }
