@@ -114,7 +114,7 @@ func TestCheckJSON(t *testing.T) {
 	if err := json.Unmarshal([]byte(out), &report); err != nil {
 		t.Fatal(err)
 	}
-	if len(report.Faults) != 0 || len(report.Channels) != 40 || len(report.Bands) != 3 || len(report.Hash) != 64 {
+	if len(report.Faults) != 0 || len(report.Channels) != 41 || len(report.Bands) != 3 || len(report.Hash) != 64 {
 		t.Errorf("%d faults, %d channels, %d bands, hash %q", len(report.Faults), len(report.Channels), len(report.Bands), report.Hash)
 	}
 	if report.Clearance != checkClosing {

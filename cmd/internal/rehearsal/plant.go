@@ -267,7 +267,7 @@ func (p *plant) step(dt float64, s *segment) {
 	var rate float64
 	switch {
 	case p.lit:
-		wander := 2e-4*math.Sin(0.8*p.t+p.phase[0]) + 1e-4*math.Sin(2.1*p.t+p.phase[1])
+		wander := 2e-4*math.Sin(2.1*p.t+p.phase[0]) + 1e-4*math.Sin(4.7*p.t+p.phase[1])
 		rate = (p.demand + wander - p.n) / 0.35
 		accel := l.gain(p.n) * clamp(l.egtAccel-steady, 30, 130)
 		accel = up*accel + (1-up)*0.06
