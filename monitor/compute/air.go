@@ -91,10 +91,15 @@ func (c *Computer) meterAir(scan *monitor.Scan, p *monitor.OperatingPoint, air *
 	c.flow.w2 = w2
 	p.V[monitor.AirFlow] = w2
 	d := c.part(scan, st.Bellmouth)
-	slope := 0.0
-	if u := d.Total(); u > 0 {
-		slope = (at(dp+u) - at(dp-u)) / (2 * u)
+	step := d.Total()
+	if !(step > 0) {
+		step = 1e-3 * dp
 	}
+	slope := 0.0 // ∂W/∂dp
+	if step > 0 {
+		slope = (at(dp+step) - at(dp-step)) / (2 * step)
+	}
+	perPressure := (w2 - dp*slope) / p0 // ∂W/∂p0: W/p0 depends on dp/p0 alone
 	coefficient := stated(c.cfg.Bellmouth.U95)
 	flow := scaled(coefficient, w2)
 	flow = add(flow, scaled(d, slope))
@@ -104,7 +109,7 @@ func (c *Computer) meterAir(scan *monitor.Scan, p *monitor.OperatingPoint, air *
 		inlet = st.Barometer
 	}
 	for i := inlet; i >= 0; i = c.port(i) {
-		if pressure := scaled(c.part(scan, i), w2/2/p0); i == st.Barometer {
+		if pressure := scaled(c.part(scan, i), perPressure); i == st.Barometer {
 			c.flow.barometer = pressure
 		} else {
 			flow = add(flow, pressure)

@@ -68,7 +68,7 @@ func (c *Computer) Budget() (b Budget, ok bool) {
 }
 
 // inputs gives the inputs that have a part in an output. If one of them is not
-// stated, no share is known.
+// stated, it comes first and no share is known.
 func (c *Computer) inputs(e *uncertainty.Estimate) []BudgetInput {
 	var out []BudgetInput
 	for i := range uncertainty.NumInputs {
@@ -91,7 +91,7 @@ func (c *Computer) inputs(e *uncertainty.Estimate) []BudgetInput {
 		slices.SortStableFunc(in.Parts, func(a, b BudgetPart) int { return descending(a.Share, b.Share) })
 		out = append(out, in)
 	}
-	slices.SortStableFunc(out, func(a, b BudgetInput) int { return descending(a.Share, b.Share) })
+	slices.SortStableFunc(out, func(a, b BudgetInput) int { return descending(math.Abs(a.Contribution), math.Abs(b.Contribution)) })
 	return out
 }
 

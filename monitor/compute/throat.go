@@ -155,10 +155,17 @@ func (c *Computer) missing(scan *monitor.Scan, p *monitor.OperatingPoint) (cause
 		return p.Cause, true
 	}
 	if v[monitor.TotalTemperature] != v[monitor.TotalTemperature] {
-		if len(st.T7) == 0 && st.T7FromEGT > 0 {
+		switch {
+		case len(st.T7) > 0:
+			return blame(scan, st.T7), true
+		case st.T7FromEGT > 0:
 			return p.EGTCause, true
+		case c.cfg.Heat.HeatingValue > 0 && !p.Lit:
+			return monitor.Cause{Kind: monitor.EngineNotLit, Channel: -1}, true
+		case c.cfg.Heat.HeatingValue > 0:
+			return blame(scan, []int{st.FuelFlow, st.Bellmouth, st.InletT}), true
 		}
-		return blame(scan, st.T7), true
+		return monitor.Cause{Kind: monitor.NotConfigured, Channel: -1}, true
 	}
 	if len(st.ThroatArea) > 0 && !(mean(scan, st.ThroatArea) > 0) {
 		return blame(scan, st.ThroatArea), true
