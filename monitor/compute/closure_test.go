@@ -335,6 +335,39 @@ func TestBudget(t *testing.T) {
 	}
 }
 
+// The point of the mean of channels is that of a scan of them; its systematic
+// uncertainty is what the scan's would be without random parts.
+func TestOfMean(t *testing.T) {
+	b := full(t)
+	for i := range b.Channels {
+		b.Channels[i].Uncertainty.Random = 0
+	}
+	r := b.rig().lit(100)
+	p, u := r.c.OfMean(r.scan)
+	for _, tt := range []struct{ q, u95 monitor.Quantity }{
+		{monitor.NPR, monitor.NPRU95}, {monitor.ChokeMarginPercent, monitor.ChokeMarginPercentU95}, {monitor.MassFlow, monitor.MassFlowU95},
+		{monitor.GrossThrust, monitor.GrossThrustU95}, {monitor.IndependentFlow, monitor.IndependentFlowU95},
+	} {
+		if !near(p.V[tt.q], r.p.V[tt.q], 1e-7) || !near(u[tt.q]*uncertainty.Coverage, r.p.V[tt.u95], 1e-6) {
+			t.Errorf("%s %.9g ± %.6g, of a scan %.9g ± %.6g", tt.q.Info().Name, p.V[tt.q], u[tt.q]*uncertainty.Coverage, r.p.V[tt.q], r.p.V[tt.u95])
+		}
+	}
+	// Of channels: fixed 1 each. p7 and pb have that of the barometer too.
+	for q, want := range map[monitor.Quantity]float64{
+		monitor.Barometer: 1, monitor.RakePressure: math.Sqrt2, monitor.BackPressure: math.Sqrt2, monitor.TotalTemperature: 1,
+		monitor.EGTIndicated: 1, monitor.FuelFlow: 1, monitor.Speed: 60, monitor.MeasuredThrust: 1,
+	} {
+		if !near(u[q]*uncertainty.Coverage, want, 1e-9) {
+			t.Errorf("%s ± %g, want %g", q.Info().Name, u[q]*uncertainty.Coverage, want)
+		}
+	}
+	for _, q := range []monitor.Quantity{monitor.ThroatMach, monitor.NPRU95, monitor.PChoked, monitor.ReferredFlow} {
+		if !math.IsNaN(u[q]) {
+			t.Errorf("%s ± %g", q.Info().Name, u[q])
+		}
+	}
+}
+
 // everything is the example with every source and statistic.
 func everything(tb testing.TB) *builder {
 	b := example(tb)

@@ -92,6 +92,7 @@ type Computer struct {
 	flow      meter // of this scan
 	head      bridged
 	gas       source             // of T7, of this scan
+	doubts    uncertainty.Inputs // of result
 	result    uncertainty.Result // of this scan
 	parts     []part             // behind the inputs of result
 	last      int64              // event time of result, 0 = there is none
@@ -191,10 +192,15 @@ func sameValues(a, b *Channel) bool {
 // Step computes the operating point of a scan and completes the scan: values
 // and final qualities. It reports whether the EGT ledger changed.
 func (c *Computer) Step(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) (ledger bool) {
+	c.calibrate(s, scan)
+	return c.compute(s, scan, p)
+}
+
+// compute is Step for a scan that has its values.
+func (c *Computer) compute(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) (ledger bool) {
 	p.Reset()
 	p.T, p.Scan = scan.T, scan.N
 	c.last = 0
-	c.calibrate(s, scan)
 
 	// Patterns and ratios are learned while the engine is steady, as of the scan before.
 	c.learns = s.Phase.Phase == monitor.Steady || c.cfg.Stations.Speed < 0 && s.Steady.Result.Steady

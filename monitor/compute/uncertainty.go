@@ -257,7 +257,8 @@ func (c *Computer) uncertainties(s *State, scan *monitor.Scan, p *monitor.Operat
 
 // doubt carries the uncertainties through the nozzle into the operating point.
 func (c *Computer) doubt(s *State, scan *monitor.Scan, p *monitor.OperatingPoint, g *gas.Mixture, in nozzle.Inputs, still float64) {
-	u := c.uncertainties(s, scan, p, still)
+	c.doubts = c.uncertainties(s, scan, p, still)
+	u := &c.doubts
 	point := uncertainty.Point{
 		Nozzle: c.nozzle, Inputs: in, Gas: g, Fuel: c.cfg.Fuel,
 		FuelAirRatio: p.V[monitor.FuelAirRatio], HumidityRatio: p.V[monitor.HumidityRatio],
@@ -266,7 +267,7 @@ func (c *Computer) doubt(s *State, scan *monitor.Scan, p *monitor.OperatingPoint
 		point.Fuel = gas.Fuel{}
 	}
 	var err error
-	if c.result, err = uncertainty.Evaluate(&point, &u); err != nil {
+	if c.result, err = uncertainty.Evaluate(&point, u); err != nil {
 		return // a step out of the gas data: the value stands without an uncertainty
 	}
 	c.last, c.scan = p.T, p.Scan

@@ -1,0 +1,60 @@
+package compute
+
+import (
+	"math"
+
+	"throatwatch/monitor"
+	"throatwatch/monitor/uncertainty"
+)
+
+// Systematic is the systematic standard uncertainty of each quantity, NaN where it is
+// not known: of what has an interval only, of ratios and states, and where something
+// that it needs is not stated.
+type Systematic [monitor.NumQuantities]float64
+
+// OfMean computes the operating point of a scan that is the mean of many: its values
+// and qualities are final, and no history goes into it. What differs from scan to scan
+// is no part of the uncertainty of a mean: that is seen in the scans.
+func (c *Computer) OfMean(scan *monitor.Scan) (p monitor.OperatingPoint, u Systematic) {
+	var s State
+	c.Reset(&s, nil)
+	c.compute(&s, scan, &p)
+	for q := range u {
+		u[q] = math.NaN()
+	}
+	st := &c.cfg.Stations
+	for _, direct := range [...]struct {
+		q     monitor.Quantity
+		index int
+		scale float64
+	}{
+		{monitor.Barometer, st.Barometer, 1},
+		{monitor.Speed, st.Speed, 60},
+		{monitor.FuelFlow, st.FuelFlow, 1},
+		{monitor.MeasuredThrust, st.Thrust, 1},
+	} {
+		u[direct.q] = direct.scale * c.part(scan, direct.index).Systematic
+	}
+	u[monitor.EGTIndicated] = c.groupPart(scan, &c.egt, math.NaN()).Systematic
+	u[monitor.AirFlow] = math.Hypot(c.flow.part.Systematic, c.flow.barometer.Systematic)
+	u[monitor.IndependentFlow] = math.Hypot(u[monitor.AirFlow], c.flow.fuel.Systematic)
+	if c.last == 0 {
+		return p, u
+	}
+	in, out := &c.doubts, &c.result.Outputs
+	u[monitor.RakePressure] = math.Hypot(in[uncertainty.TotalPressure].Systematic, in[uncertainty.CommonPressure].Systematic)
+	u[monitor.BackPressure] = math.Hypot(in[uncertainty.BackPressure].Systematic, in[uncertainty.CommonPressure].Systematic)
+	u[monitor.TotalTemperature] = in[uncertainty.TotalTemperature].Systematic
+	u[monitor.FuelAirRatio] = in[uncertainty.FuelAirRatio].Systematic
+	u[monitor.HumidityRatio] = in[uncertainty.HumidityRatio].Systematic
+	u[monitor.NPR] = out[uncertainty.NPR].Systematic
+	u[monitor.ChokeNPR] = out[uncertainty.ChokePoint].Systematic
+	u[monitor.ChokeMarginPercent] = out[uncertainty.MarginPercent].Systematic
+	u[monitor.MassFlow] = out[uncertainty.MassFlow].Systematic
+	u[monitor.GrossThrust] = out[uncertainty.GrossThrust].Systematic
+	w, w8, area := p.V[monitor.IndependentFlow], p.V[monitor.MassFlow], p.V[monitor.ThroatArea]
+	u[monitor.FlowBalance] = math.Hypot(u[monitor.IndependentFlow], u[monitor.MassFlow])
+	u[monitor.EffectiveArea] = area * w / w8 * math.Hypot(u[monitor.IndependentFlow]/w,
+		math.Sqrt(max(0, square(u[monitor.MassFlow])-square(out[uncertainty.MassFlow].Contribution[uncertainty.ThroatArea])))/w8)
+	return p, u
+}
