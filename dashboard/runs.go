@@ -321,14 +321,14 @@ func newPlot(name string, cfg *pipeline.Config, from, to int64, points int) (*pl
 	case "phase":
 		p.state = func(b byte) string { return monitor.Phase(b).String() }
 		return p, nil
-	case "back_pressure_from":
+	case "back_pressure_from", "total_pressure_from", "total_temperature_from":
 		p.state = func(b byte) string { return monitor.Source(b).String() }
 		return p, nil
 	}
 	group, id, _ := strings.Cut(name, ".")
 	i := slices.IndexFunc(cfg.Compute.Channels, func(c compute.Channel) bool { return c.ID == id })
 	if i < 0 || group != "channel" && group != "quality" {
-		return nil, badRequest("name %q: give a quantity, choke_state, phase, back_pressure_from, channel.<id> or quality.<id>", name)
+		return nil, badRequest("name %q: give a quantity, choke_state, phase, back_pressure_from, total_pressure_from, total_temperature_from, channel.<id> or quality.<id>", name)
 	}
 	p.kind = pipeline.ChunkChannels
 	if group == "channel" {

@@ -543,7 +543,7 @@ func TestSeriesBuckets(t *testing.T) {
 // States come as their transitions.
 func TestSeriesStates(t *testing.T) {
 	r := recorded()
-	names := []string{"choke_state", "phase", "back_pressure_from", "quality.egt_3", "quality.p_baro"}
+	names := []string{"choke_state", "phase", "back_pressure_from", "total_pressure_from", "total_temperature_from", "quality.egt_3", "quality.p_baro"}
 	for _, stretch := range [][2]float64{{0, 1000}, {10, 20}} {
 		got := r.series(t, strings.Join(names, ","), fmt.Sprintf("&from=%v&to=%v&points=1", stretch[0], stretch[1]))
 		for _, name := range names {
@@ -681,7 +681,7 @@ func FuzzNewPlot(f *testing.F) {
 	}
 	cfg := rig("", "")
 	columns := map[string]bool{}
-	for _, name := range append(allQuantities(), "choke_state", "phase", "back_pressure_from") {
+	for _, name := range append(allQuantities(), "choke_state", "phase", "back_pressure_from", "total_pressure_from", "total_temperature_from") {
 		columns[name] = true
 	}
 	for i := range cfg.Compute.Channels {

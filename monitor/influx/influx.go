@@ -22,8 +22,9 @@
 // The one tag is rig, so the number of series is bounded; the run is a field.
 //
 //	operating_point  a float field per quantity in SI by its key (npr, mass_flow_kg_s …),
-//	                 strings choke_state, phase, back_pressure_from, run,
-//	                 booleans choke_marginal, choke_armed, lit
+//	                 strings choke_state, phase, back_pressure_from,
+//	                 total_pressure_from, total_temperature_from, run,
+//	                 booleans choke_marginal, choke_armed, lit, steady
 //	channel          a float field per channel by its id, in SI, absolute for gauge
 //	                 pressures; a string field quality.<id>; run
 //	alarm            one point per change of an alarm

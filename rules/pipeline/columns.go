@@ -15,7 +15,7 @@ const (
 )
 
 // The state columns of ChunkPoints, in the order of their codes below.
-var stateColumns = []string{"choke_state", "phase", "back_pressure_from", "flags"}
+var stateColumns = []string{"choke_state", "phase", "back_pressure_from", "total_pressure_from", "total_temperature_from", "flags"}
 
 // Bits of the column "flags".
 const (
@@ -69,7 +69,7 @@ func (c *Columns) Add(o *Outcome) {
 			flags |= 1 << bit
 		}
 	}
-	for i, v := range [...]byte{byte(p.Choke), byte(p.Phase), byte(p.BackFrom), flags} {
+	for i, v := range [...]byte{byte(p.Choke), byte(p.Phase), byte(p.BackFrom), byte(p.PressureBy), byte(p.TemperatureBy), flags} {
 		c.states[i] = append(c.states[i], v)
 	}
 	for i := range c.readings {

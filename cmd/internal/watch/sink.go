@@ -358,12 +358,13 @@ func (t *table) row(c *influx.Cursor, i int) influx.Row {
 			add(influx.Text(col.Name, monitor.ChokeState(v).String()))
 		case "phase":
 			add(influx.Text(col.Name, monitor.Phase(v).String()))
-		case "back_pressure_from":
+		case "back_pressure_from", "total_pressure_from", "total_temperature_from":
 			add(influx.Text(col.Name, monitor.Source(v).String()))
 		case "flags":
 			add(influx.Bool("choke_marginal", v&pipeline.FlagMarginal != 0))
 			add(influx.Bool("choke_armed", v&pipeline.FlagArmed != 0))
 			add(influx.Bool("lit", v&pipeline.FlagLit != 0))
+			add(influx.Bool("steady", v&pipeline.FlagSteady != 0))
 		default:
 			if t.kind == pipeline.ChunkChannels {
 				add(influx.Text(col.Name, monitor.Quality(v).String()))

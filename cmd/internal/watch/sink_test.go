@@ -191,12 +191,13 @@ func expected(table *archive.Chunk, i int, t int64, runs []runfile.Run) point {
 			p[name] = fmt.Sprint(monitor.ChokeState(col.Byte[i]))
 		case name == "phase":
 			p[name] = fmt.Sprint(monitor.Phase(col.Byte[i]))
-		case name == "back_pressure_from":
+		case strings.HasSuffix(name, "_from"):
 			p[name] = fmt.Sprint(monitor.Source(col.Byte[i]))
 		case name == "flags":
 			p["choke_marginal"] = col.Byte[i]&1 != 0
 			p["choke_armed"] = col.Byte[i]&2 != 0
 			p["lit"] = col.Byte[i]&4 != 0
+			p["steady"] = col.Byte[i]&8 != 0
 		}
 	}
 	for _, run := range runs {
