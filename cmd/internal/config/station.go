@@ -123,6 +123,9 @@ func (r *rig) readHeatBalance(n node) {
 	if s.FuelFlow < 0 || s.Bellmouth < 0 || s.InletT < 0 {
 		f.fault("a heat balance needs air flow, fuel flow and inlet temperature", "name channels in stations.bellmouth, fuel_flow and inlet.temperature")
 	}
+	if len(s.EGT) == 0 {
+		f.fault("a heat balance holds with a flame only, and nothing shows one", "name the EGT harness in stations.egt")
+	}
 }
 
 // readHarness reads the EGT harness.

@@ -19,6 +19,7 @@ import (
 	"throatwatch/monitor/calib"
 	"throatwatch/monitor/compute"
 	"throatwatch/monitor/egt"
+	"throatwatch/monitor/gas"
 	"throatwatch/monitor/unit"
 	"throatwatch/rules/alarm"
 	"throatwatch/rules/pipeline"
@@ -297,6 +298,86 @@ func TestFlowCloses(t *testing.T) {
 				t.Fatalf("%v: %+v", r.now, p.state)
 			}
 		}
+	}
+}
+
+// At station 7 the gas that moves is the gas that flows, and what the sensors read there
+// follows from its static state; the fuel is that of the heat balance.
+func TestStation7(t *testing.T) {
+	cfg := load(t, "example")
+	r, err := New(cfg, Options{Scenario: Full, Rate: 20})
+	if err != nil {
+		t.Fatal(err)
+	}
+	c := &cfg.Compute
+	checked := 0
+	for more := true; more; {
+		_, more = r.Next(nil)
+		p := r.plant
+		if !(p.flame > 0.999 && p.npr > 1.2 && p.bleed < 1e-6) {
+			continue
+		}
+		war, err := gas.HumidityRatio(p.humidity, p.ambient, p.barometer)
+		if err != nil {
+			t.Fatal(err)
+		}
+		g, err := gas.NewMixture(c.Fuel, p.fuelFlow*(1+war)/p.airFlow, war)
+		if err != nil {
+			t.Fatal(err)
+		}
+		air, err := gas.NewMixture(c.Fuel, 0, war)
+		if err != nil {
+			t.Fatal(err)
+		}
+		v := math.Sqrt(2 * (g.H(p.t7) - g.H(p.t7Static)))
+		flow := c.Recovery.Area * p.p7Static / (g.R() * p.t7Static) * v
+		isentropic := g.S0(p.t7) - g.S0(p.t7Static) - g.R()*math.Log(p.p7/p.p7Static)
+		const zero = 298.15
+		in := p.airFlow*(air.H(p.inletT)-air.H(zero)) + p.fuelFlow*c.Heat.Efficiency*c.Heat.HeatingValue
+		out := (p.airFlow + p.fuelFlow) * (g.H(p.t7) - g.H(zero))
+		if math.Abs(flow/p.gasFlow-1) > 1e-6 || math.Abs(isentropic) > 1e-6*g.R() || math.Abs(in/out-1) > 2e-3 {
+			t.Fatalf("%v: flow %.9g of %.9g kg/s, %g J/(kg K), heat in %.9g, out %.9g W", r.now, flow, p.gasFlow, isentropic, in, out)
+		}
+		if read := p.t7Static + c.Recovery.Factor*(p.t7-p.t7Static); !(read < p.t7 && read > p.t7-3) {
+			t.Fatalf("%v: probes read %g K of %g", r.now, read, p.t7)
+		}
+		checked++
+	}
+	if checked < 1000 {
+		t.Errorf("%d instants checked", checked)
+	}
+}
+
+// A rig of every other source is played and watched to agreement: T7 from the heat
+// balance, dew point, position, reheat, wall taps.
+func TestOtherSources(t *testing.T) {
+	b, cfg, faults := config.Load("../../../testdata/config/good/sources.yaml")
+	if len(faults) > 0 {
+		t.Fatal(b.Files[0].Name, faults)
+	}
+	r, err := New(cfg, Options{Seed: 4, Scenario: Quick, Start: epoch})
+	if err != nil {
+		t.Fatal(err)
+	}
+	choked, closed, scans := 0, 0, 0
+	watch(t, r, cfg, func(p *monitor.OperatingPoint) {
+		scans++
+		if p.Warnings&monitor.WarnAssumedHumidity != 0 && scans > 40 {
+			t.Fatalf("scan %d: %x", scans, p.Warnings)
+		}
+		if p.Choke != monitor.Choked || p.Phase != monitor.Steady {
+			return
+		}
+		choked++
+		plant := r.plant
+		off := func(q monitor.Quantity, want float64) float64 { return math.Abs(p.V[q]/want - 1) }
+		if p.TemperatureBy == monitor.SourceHeatBalance && off(monitor.TotalTemperature, plant.t7) < 0.02 &&
+			off(monitor.MassFlow, plant.gasFlow) < 0.02 && off(monitor.ThroatArea, plant.throat) < 0.01 {
+			closed++
+		}
+	})
+	if choked < 60 || closed < choked*9/10 {
+		t.Errorf("%d scans, %d steady and choked, of which %d agree with the plant", scans, choked, closed)
 	}
 }
 
