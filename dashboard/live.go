@@ -124,7 +124,7 @@ func (h *Hub) Publish(outs []pipeline.Outcome, m *pipeline.Machine, _ *pipeline.
 				h.dropAll(websocket.CloseServiceRestart, "the configuration changed")
 			}
 		case pipeline.OutcomePoint, pipeline.OutcomeAlarm, pipeline.OutcomeLedger, pipeline.OutcomeStatus,
-			pipeline.OutcomeMark, pipeline.OutcomeRun, pipeline.OutcomeQuarantine, pipeline.OutcomeAction:
+			pipeline.OutcomeMark, pipeline.OutcomeRun, pipeline.OutcomeQuarantine, pipeline.OutcomeAction, pipeline.OutcomeReduction:
 			h.frame(o, &cfg, now)
 		}
 	}

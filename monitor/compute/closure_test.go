@@ -17,6 +17,7 @@ import (
 
 // watched is full with a window of 20 s.
 func watched(tb testing.TB) *builder {
+	tb.Helper()
 	b := full(tb)
 	b.Steady = compute.Steadiness{
 		Window: steady.Window{Width: second / 2, Bins: 40}, Dwell: 3 * second,
@@ -345,8 +346,11 @@ func TestOfMean(t *testing.T) {
 	r := b.rig().lit(100)
 	p, u := r.c.OfMean(r.scan)
 	for _, tt := range []struct{ q, u95 monitor.Quantity }{
-		{monitor.NPR, monitor.NPRU95}, {monitor.ChokeMarginPercent, monitor.ChokeMarginPercentU95}, {monitor.MassFlow, monitor.MassFlowU95},
-		{monitor.GrossThrust, monitor.GrossThrustU95}, {monitor.IndependentFlow, monitor.IndependentFlowU95},
+		{monitor.NPR, monitor.NPRU95},
+		{monitor.ChokeMarginPercent, monitor.ChokeMarginPercentU95},
+		{monitor.MassFlow, monitor.MassFlowU95},
+		{monitor.GrossThrust, monitor.GrossThrustU95},
+		{monitor.IndependentFlow, monitor.IndependentFlowU95},
 	} {
 		if !near(p.V[tt.q], r.p.V[tt.q], 1e-7) || !near(u[tt.q]*uncertainty.Coverage, r.p.V[tt.u95], 1e-6) {
 			t.Errorf("%s %.9g ± %.6g, of a scan %.9g ± %.6g", tt.q.Info().Name, p.V[tt.q], u[tt.q]*uncertainty.Coverage, r.p.V[tt.q], r.p.V[tt.u95])
@@ -370,6 +374,7 @@ func TestOfMean(t *testing.T) {
 
 // everything is the example with every source and statistic.
 func everything(tb testing.TB) *builder {
+	tb.Helper()
 	b := example(tb)
 	st := &b.Stations
 	st.WallStatic = []int{b.add("p7_wall", "Pa", calib.Gauge, st.Barometer)}

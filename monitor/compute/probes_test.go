@@ -47,7 +47,7 @@ func TestSampling(t *testing.T) {
 }
 
 // learned is full after a minute of steady running, patterns known.
-func learned(tb testing.TB, b *builder) *rig {
+func learned(b *builder) *rig {
 	r := b.rig().lit(100)
 	r.steps(60 * 20)
 	return r
@@ -57,7 +57,7 @@ func learned(tb testing.TB, b *builder) *rig {
 // plausibly again, and counts again after half a minute without fault.
 func TestProofLeavesNoStep(t *testing.T) {
 	for _, id := range []string{"p7_2", "t7_2", "egt_4"} {
-		r := learned(t, full(t))
+		r := learned(full(t))
 		quantity := map[byte]monitor.Quantity{'p': monitor.RakePressure, 't': monitor.TotalTemperature, 'e': monitor.EGTIndicated}[id[0]]
 		before := r.p.V[quantity]
 		left := 0
@@ -104,7 +104,7 @@ func TestDeparture(t *testing.T) {
 	} {
 		b := full(t)
 		b.Stations.P7Watch.Departure, b.Stations.T7Watch.Departure, b.Stations.EGTWatch.Departure = 2000, 40, 40
-		r := learned(t, b)
+		r := learned(b)
 		before := r.p.V[tt.quantity]
 		r.set(map[string]float64{tt.id: running()[tt.id] + tt.by})
 		for n := range 20 * 10 {
@@ -126,7 +126,7 @@ func TestDeparture(t *testing.T) {
 		}
 	}
 	// Without a stated departure none is judged.
-	r := learned(t, full(t))
+	r := learned(full(t))
 	if r.set(map[string]float64{"p7_3": 160e3}).steps(200); r.p.RakeProbesUsed != 4 {
 		t.Errorf("%d probes used", r.p.RakeProbesUsed)
 	}
@@ -160,7 +160,7 @@ func TestCleanRakeOfAnHour(t *testing.T) {
 
 // Of a gauge rake whose barometer is lost no probe is to blame, and none is excluded.
 func TestLostReferenceExcludesNone(t *testing.T) {
-	r := learned(t, full(t))
+	r := learned(full(t))
 	r.mark("p_baro", monitor.QualityStale).steps(100)
 	r.set(map[string]float64{"p_baro": 99800})
 	if p := r.step(); p.RakeProbesUsed != 4 || slices.Contains(r.scan.Quality, monitor.QualityExcluded) {

@@ -94,6 +94,7 @@ func TestRecovery(t *testing.T) {
 
 // bare is full without probes at station 7, with a heat balance.
 func bare(tb testing.TB) *builder {
+	tb.Helper()
 	b := full(tb)
 	b.Stations.T7, b.Stations.MinT7 = nil, 0
 	b.Heat = compute.HeatBalance{Efficiency: 0.995, HeatingValue: 43.1e6, U95: 0.01}
@@ -224,6 +225,7 @@ func TestTemperatureFallsBack(t *testing.T) {
 // tapped is full with a wall tap, and what it reads: the static pressure of the very
 // flow through a passage of 0.055 m².
 func tapped(tb testing.TB) (b *builder, read func(r *rig)) {
+	tb.Helper()
 	b = full(tb)
 	b.Stations.WallStatic = []int{b.add("p7_wall", "Pa", calib.Gauge, b.Stations.Barometer)}
 	b.Channels[b.Stations.WallStatic[0]].Uncertainty = calib.Uncertainty{Fixed: 1, Random: 0.5, Stated: true}

@@ -84,7 +84,7 @@ func (c *Computer) put(u *uncertainty.Inputs, in uncertainty.Input, channel int,
 func (c *Computer) groupPart(scan *monitor.Scan, g *group, all float64) uncertainty.Part {
 	weights, common, random := 0.0, 0.0, 0.0
 	for k, i := range g.channels {
-		p, in := c.member(scan, g, k, i, all)
+		p, in := c.member(scan, i, all)
 		if !in {
 			continue
 		}
@@ -99,7 +99,8 @@ func (c *Computer) groupPart(scan *monitor.Scan, g *group, all float64) uncertai
 	return uncertainty.Part{Systematic: common / weights, Random: math.Sqrt(random) / weights}
 }
 
-func (c *Computer) member(scan *monitor.Scan, g *group, k, i int, all float64) (p uncertainty.Part, in bool) {
+// member gives the part of a channel of a group, at the value all if there is one.
+func (c *Computer) member(scan *monitor.Scan, i int, all float64) (p uncertainty.Part, in bool) {
 	if all == all {
 		return c.partAt(scan, i, all), true
 	}
@@ -116,12 +117,12 @@ func (c *Computer) putGroup(scan *monitor.Scan, u *uncertainty.Inputs, in uncert
 	u[in] = add(u[in], mean)
 	weights := 0.0
 	for k, i := range g.channels {
-		if _, in := c.member(scan, g, k, i, all); in {
+		if _, in := c.member(scan, i, all); in {
 			weights += g.weight(k)
 		}
 	}
 	for k, i := range g.channels {
-		if p, ok := c.member(scan, g, k, i, all); ok {
+		if p, ok := c.member(scan, i, all); ok {
 			w := scale * g.weight(k) / weights
 			c.parts = append(c.parts, part{in, i, "", w*p.Systematic*mean.Systematic + square(w*p.Random)})
 		}

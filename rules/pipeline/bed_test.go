@@ -134,7 +134,7 @@ func (b *bed) step() []Outcome {
 		switch o.Kind {
 		case OutcomeAlarm, OutcomeRun, OutcomeMark, OutcomeAction, OutcomeConfig, OutcomeQuarantine:
 			b.all = append(b.all, o)
-		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus:
+		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeReduction:
 		}
 	}
 	return b.outs
@@ -235,7 +235,7 @@ func (b *bed) told(kind OutcomeKind) string {
 			words = append(words, o.Mark.Text)
 		case OutcomeConfig, OutcomeQuarantine:
 			words = append(words, o.Text)
-		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeAction:
+		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeAction, OutcomeReduction:
 		}
 	}
 	b.all = rest

@@ -79,6 +79,7 @@ func stretch(t *testing.T, cfg *Config, n int, seed uint64) *runfile.File {
 
 // sure is the rig with uncertainties that can be summed by hand.
 func sure(t *testing.T) Config {
+	t.Helper()
 	cfg := rig(t)
 	for i := range cfg.Compute.Channels {
 		cfg.Compute.Channels[i].Uncertainty = calib.Uncertainty{Fixed: 1, Random: 5, Stated: true}
@@ -150,6 +151,7 @@ func TestReduceStretch(t *testing.T) {
 // humid gives by which part a choked flow of air at 900 K falls per unit of humidity
 // ratio: W ∝ C*/√R.
 func humid(t *testing.T) float64 {
+	t.Helper()
 	const step = 1e-3
 	flux := func(war float64) float64 {
 		g, err := gas.NewMixture(gas.Kerosene(), 0, war)

@@ -305,7 +305,7 @@ func TestFlowCloses(t *testing.T) {
 // follows from its static state; the fuel is that of the heat balance.
 func TestStation7(t *testing.T) {
 	cfg := load(t, "example")
-	r, err := New(cfg, Options{Scenario: Full, Rate: 20})
+	r, err := New(cfg, Options{Scenario: Quick, Rate: 20})
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -343,7 +343,7 @@ func TestStation7(t *testing.T) {
 		}
 		checked++
 	}
-	if checked < 1000 {
+	if checked < 300 {
 		t.Errorf("%d instants checked", checked)
 	}
 }
