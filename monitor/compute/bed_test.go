@@ -1,12 +1,8 @@
 package compute_test
 
 import (
-	"encoding/csv"
 	"math"
-	"os"
-	"path/filepath"
 	"slices"
-	"strconv"
 	"testing"
 
 	"throatwatch/monitor"
@@ -14,6 +10,7 @@ import (
 	"throatwatch/monitor/compute"
 	"throatwatch/monitor/egt"
 	"throatwatch/monitor/gas"
+	"throatwatch/monitor/internal/vectors"
 	"throatwatch/monitor/nozzle"
 	"throatwatch/monitor/phase"
 	"throatwatch/monitor/unit"
@@ -28,50 +25,13 @@ const (
 	area  = 0.025
 )
 
-// vectors reads a file of testdata/vectors, whose first lines name its source.
-func vectors(tb testing.TB, name string) []map[string]string {
-	tb.Helper()
-	f, err := os.Open(filepath.Join("..", "..", "testdata", "vectors", name))
-	if err != nil {
-		tb.Fatal(err)
-	}
-	defer f.Close()
-	r := csv.NewReader(f)
-	r.Comment = '#'
-	rows, err := r.ReadAll()
-	if err != nil {
-		tb.Fatal(err)
-	}
-	var out []map[string]string
-	for _, row := range rows[1:] {
-		v := map[string]string{}
-		for i, name := range rows[0] {
-			v[name] = row[i]
-		}
-		out = append(out, v)
-	}
-	if len(out) == 0 {
-		tb.Fatalf("%s has no rows", name)
-	}
-	return out
-}
-
-func number(tb testing.TB, v map[string]string, name string) float64 {
-	tb.Helper()
-	x, err := strconv.ParseFloat(v[name], 64)
-	if err != nil {
-		tb.Fatalf("column %q: %v", name, err)
-	}
-	return x
-}
-
 // worked gives the recomputed answers of a worked example.
 func worked(tb testing.TB, example string) map[string]float64 {
 	tb.Helper()
 	out := map[string]float64{}
-	for _, v := range vectors(tb, "worked_examples.csv") {
+	for _, v := range vectors.Read(tb, "worked_examples.csv") {
 		if v["case"] == example {
-			out[v["quantity"]] = number(tb, v, "value")
+			out[v["quantity"]] = v.Num(tb, "value")
 		}
 	}
 	if len(out) == 0 {

@@ -9,6 +9,7 @@ import (
 	"throatwatch/monitor"
 	"throatwatch/monitor/calib"
 	"throatwatch/monitor/compute"
+	"throatwatch/monitor/internal/vectors"
 	"throatwatch/monitor/nozzle"
 )
 
@@ -18,9 +19,9 @@ import (
 func gasConstants(tb testing.TB) map[string]float64 {
 	tb.Helper()
 	r := map[string]float64{}
-	for _, v := range vectors(tb, "products.csv") {
-		if number(tb, v, "war") == 0 {
-			r[fmt.Sprint(number(tb, v, "f"))] = number(tb, v, "R_J_kgK")
+	for _, v := range vectors.Read(tb, "products.csv") {
+		if v.Num(tb, "war") == 0 {
+			r[fmt.Sprint(v.Num(tb, "f"))] = v.Num(tb, "R_J_kgK")
 		}
 	}
 	return r
@@ -40,8 +41,8 @@ func TestThermallyPerfect(t *testing.T) {
 	b.Stations.Barometer = b.add("p_baro", "Pa", calib.Absolute, -1)
 	b.Stations.MinEGT = 1
 	n := 0
-	for _, v := range vectors(t, "thermally_perfect_sub.csv") {
-		f, t0, npr, phi := number(t, v, "f"), number(t, v, "T0_K"), number(t, v, "npr"), number(t, v, "flow")
+	for _, v := range vectors.Read(t, "thermally_perfect_sub.csv") {
+		f, t0, npr, phi := v.Num(t, "f"), v.Num(t, "T0_K"), v.Num(t, "npr"), v.Num(t, "flow")
 		R, ok := constants[fmt.Sprint(f)]
 		if !ok {
 			continue
@@ -60,9 +61,9 @@ func TestThermallyPerfect(t *testing.T) {
 		// 1e-10; p = 1/NPR and the gas constant are given to 8 and 10 digits.
 		compare(t, name, p, 3e-8, map[monitor.Quantity]float64{
 			monitor.NPR: npr, monitor.NPRRake: npr, monitor.MassFlow: w8,
-			monitor.ThroatMach: number(t, v, "M_exit"), monitor.ThroatTemperature: number(t, v, "Te_T0") * t0,
-			monitor.ThroatPressure: number(t, v, "pe_p0") * p0, monitor.ExitVelocity: number(t, v, "V_RT0") * math.Sqrt(R*t0),
-			monitor.GrossThrust: number(t, v, "thrust") * area * pamb, monitor.FlowParameter: phi, monitor.GasConstant: R,
+			monitor.ThroatMach: v.Num(t, "M_exit"), monitor.ThroatTemperature: v.Num(t, "Te_T0") * t0,
+			monitor.ThroatPressure: v.Num(t, "pe_p0") * p0, monitor.ExitVelocity: v.Num(t, "V_RT0") * math.Sqrt(R*t0),
+			monitor.GrossThrust: v.Num(t, "thrust") * area * pamb, monitor.FlowParameter: phi, monitor.GasConstant: R,
 		})
 		if got := p.V[monitor.FuelAirRatio]; math.Abs(got-f) > 1e-8 {
 			t.Errorf("%s: fuel-air ratio %.12g", name, got)
@@ -84,19 +85,19 @@ func TestThermallyPerfect(t *testing.T) {
 // The critical state of the vectors in thermally_perfect.csv.
 func TestCriticalState(t *testing.T) {
 	b := simple(t)
-	for _, v := range vectors(t, "thermally_perfect.csv") {
+	for _, v := range vectors.Read(t, "thermally_perfect.csv") {
 		if v["gas"] != "dry_air" {
 			continue
 		}
-		t0 := number(t, v, "T0_K")
+		t0 := v.Num(t, "T0_K")
 		p := b.rig().set(map[string]float64{"p7": 250e3, "t7": t0, "p_exit": pamb}).step()
 		compare(t, fmt.Sprintf("air at %g K", t0), p, 3e-8, map[monitor.Quantity]float64{
-			monitor.CriticalNPR: number(t, v, "crit_npr"), monitor.ChokeNPR: number(t, v, "crit_npr"),
-			monitor.CriticalTemperature: number(t, v, "Tstar_T0") * t0, monitor.CriticalPressure: number(t, v, "pstar_p0") * 250e3,
-			monitor.GammaTotal: number(t, v, "gamma_T0"),
+			monitor.CriticalNPR: v.Num(t, "crit_npr"), monitor.ChokeNPR: v.Num(t, "crit_npr"),
+			monitor.CriticalTemperature: v.Num(t, "Tstar_T0") * t0, monitor.CriticalPressure: v.Num(t, "pstar_p0") * 250e3,
+			monitor.GammaTotal: v.Num(t, "gamma_T0"),
 			// margin ≡ (p* − pb)/pb, in percent
-			monitor.ChokeMarginPercent: 100 * (number(t, v, "pstar_p0")*250e3/pamb - 1),
-			monitor.ChokeMarginPa:      number(t, v, "pstar_p0")*250e3 - pamb,
+			monitor.ChokeMarginPercent: 100 * (v.Num(t, "pstar_p0")*250e3/pamb - 1),
+			monitor.ChokeMarginPa:      v.Num(t, "pstar_p0")*250e3 - pamb,
 		})
 	}
 }
@@ -724,8 +725,8 @@ func TestStuck(t *testing.T) {
 // W √(R T)/(A p) = C*/(A/A*), C* = √γ (2/(γ+1))^3.
 func TestBellmouth(t *testing.T) {
 	cstar := math.Sqrt(1.4) / (1.2 * 1.2 * 1.2)
-	for _, v := range vectors(t, "naca1135.csv") {
-		m := number(t, v, "M")
+	for _, v := range vectors.Read(t, "naca1135.csv") {
+		m := v.Num(t, "M")
 		if m == 0 || m >= 1 {
 			continue
 		}
@@ -733,9 +734,9 @@ func TestBellmouth(t *testing.T) {
 		b.Gamma, b.GasR = 1.4, 287.05287
 		r := b.rig().set(running())
 		p0, t0 := 99800-300.0, 290.0
-		r.set(map[string]float64{"dp_bellmouth": p0 * (1 - number(t, v, "p_pt_exact"))})
+		r.set(map[string]float64{"dp_bellmouth": p0 * (1 - v.Num(t, "p_pt_exact"))})
 		p := r.steps(2)
-		want := 0.06 * 0.985 * p0 / math.Sqrt(287.05287*t0) * cstar / number(t, v, "A_Astar_exact")
+		want := 0.06 * 0.985 * p0 / math.Sqrt(287.05287*t0) * cstar / v.Num(t, "A_Astar_exact")
 		compare(t, fmt.Sprintf("bellmouth at Mach %g", m), p, 2e-9, map[monitor.Quantity]float64{
 			monitor.AirFlow: want, monitor.IndependentFlow: want + 0.14, monitor.FlowBalance: want + 0.14 - p.V[monitor.MassFlow],
 		})
@@ -744,13 +745,13 @@ func TestBellmouth(t *testing.T) {
 		compare(t, "independent", p, 2e-9, map[monitor.Quantity]float64{monitor.IndependentFlowParameter: phi})
 	}
 	// Real air, dry: the flow of thermally_perfect_sub.csv at 300 K and NPR 1.05.
-	for _, v := range vectors(t, "thermally_perfect_sub.csv") {
-		if v["gas"] != "dry_air" || number(t, v, "T0_K") != 300 || number(t, v, "npr") > 1.3 {
+	for _, v := range vectors.Read(t, "thermally_perfect_sub.csv") {
+		if v["gas"] != "dry_air" || v.Num(t, "T0_K") != 300 || v.Num(t, "npr") > 1.3 {
 			continue
 		}
 		p0 := 99500.0
-		r := full(t).rig().set(running()).set(map[string]float64{"humidity": 0, "t_inlet": 300, "dp_bellmouth": p0 * (1 - 1/number(t, v, "npr"))})
-		want := 0.06 * 0.985 * p0 / math.Sqrt(gasConstants(t)["0"]*300) * number(t, v, "flow")
+		r := full(t).rig().set(running()).set(map[string]float64{"humidity": 0, "t_inlet": 300, "dp_bellmouth": p0 * (1 - 1/v.Num(t, "npr"))})
+		want := 0.06 * 0.985 * p0 / math.Sqrt(gasConstants(t)["0"]*300) * v.Num(t, "flow")
 		compare(t, "bellmouth of dry air", r.step(), 2e-8, map[monitor.Quantity]float64{monitor.AirFlow: want})
 	}
 	// No pressure drop, no flow; without an inlet pressure the barometer is the total.

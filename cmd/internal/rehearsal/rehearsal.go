@@ -286,7 +286,7 @@ func (r *Rig) publish(dst []Message, g *group) []Message {
 				case f.Kind == NotANumber:
 					reading.Value = math.NaN()
 				case f.Kind == WrongUnit:
-					reading.Unit = foreign(r.sensors[i].spec.Unit)
+					reading.Unit = foreign(r.sensors[i].spec.Raw)
 				}
 			}
 			own = append(own, reading)
