@@ -129,6 +129,9 @@ func New(cfg Config) (*Computer, error) {
 		}
 	}
 	c.egt.watch.KeepHot = true
+	if st.EGTWatch.Return == 0 {
+		c.egt.watch.Return = backHarness
+	}
 	c.usable = make([]bool, len(st.EGT))
 	c.parts = make([]part, 0, 16+2*len(cfg.Channels))
 	c.steadiness()

@@ -28,14 +28,22 @@ type Probes struct {
 	Sampled  bool
 }
 
+// back is the time without fault, ns, after which a probe counts again. It is short, since
+// a probe that comes and goes leaves no step once its pattern is known, and a module that
+// stumbles takes all its probes along: nobody should be blind for long after it.
+const back = 5 * second
+
+// backHarness is that of an EGT harness, on which limits are watched.
+const backHarness = 2 * second
+
 // newGroup prepares a group. What the watch leaves at zero becomes: proof held 1 s,
-// departure held 3 s, taken back after 30 s, learned in 30 s, adapting over 300 s.
+// departure held 3 s, taken back after 5 s, learned in 30 s, adapting over 300 s.
 func newGroup(w rake.Watch, channels []int, least int) (group, error) {
 	w.Probes, w.Least = len(channels), max(least, 1)
 	for _, d := range []struct {
 		to    *int64
 		value int64
-	}{{&w.ProofHold, second}, {&w.DepartureHold, 3 * second}, {&w.Return, 30 * second}, {&w.Learn, 30 * second}, {&w.Memory, 300 * second}} {
+	}{{&w.ProofHold, second}, {&w.DepartureHold, 3 * second}, {&w.Return, back}, {&w.Learn, 30 * second}, {&w.Memory, 300 * second}} {
 		if *d.to == 0 {
 			*d.to = d.value
 		}

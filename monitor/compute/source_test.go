@@ -304,7 +304,7 @@ func TestWallStatic(t *testing.T) {
 			t.Errorf("%g Pa gauge: p7 off by %g Pa, NPR ± %g", gauge, off, r.p.V[monitor.NPRU95])
 		}
 	}
-	// The rake comes back; what was out by proof, half a minute later.
+	// The rake comes back; what was out by proof, some seconds later.
 	r.set(running()).steps(20)
 	if p := r.steps(40 * 20); p.PressureBy != monitor.SourceRake || p.RakeProbesUsed != 4 {
 		t.Errorf("p7 from %v with %d probes", p.PressureBy, p.RakeProbesUsed)
