@@ -686,11 +686,16 @@ func TestAllocations(t *testing.T) {
 	b, next := warmed(t)
 	scans := b.s.Align.N
 	const n = 2000
-	got := testing.AllocsPerRun(1, func() {
-		for range n {
-			next()
-		}
-	})
+	// What other goroutines of the process allocate counts too: the least of a few
+	// tries is the step's own.
+	got := math.Inf(1)
+	for tries := 0; tries < 3 && got > n/1000; tries++ {
+		got = min(got, testing.AllocsPerRun(1, func() {
+			for range n {
+				next()
+			}
+		}))
+	}
 	if b.s.Align.N-scans < 2*n-2 || len(b.m.Alarms(b.s)) != 0 {
 		t.Fatalf("%d scans of %d messages", b.s.Align.N-scans, 2*n)
 	}
