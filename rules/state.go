@@ -140,6 +140,7 @@ func (s *Set) Step(st *State, t int64, run string, phase monitor.Phase, d Domain
 				in.raised(p, f, t)
 			}
 			out = append(out, view(p, in))
+			out[len(out)-1].Raise = input == alarm.Raise
 		}
 	}
 	return out

@@ -35,6 +35,7 @@ type Alarm struct {
 	FirstOut       bool       `json:"first_out"`
 	Group          string     `json:"group"`
 	Unknown        bool       `json:"unknown"` // the condition cannot be judged now
+	Raise          bool       `json:"-"`       // this change is a raise, the first or another
 }
 
 // view shows an instance.

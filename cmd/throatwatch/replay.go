@@ -49,6 +49,11 @@ type runLine struct {
 	ConfigHash   string   `json:"config_hash"`
 	Build        string   `json:"build"`
 	Digest       string   `json:"digest"`
+
+	EffectiveArea    *float64 `json:"effective_area_m2"` // mean over steady choked scans
+	EffectiveAreaU95 *float64 `json:"effective_area_m2_u95"`
+	AreaDrift        *float64 `json:"area_drift_percent"` // since the run before of this engine
+	AreaDriftU95     *float64 `json:"area_drift_percent_u95"`
 }
 
 func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
@@ -76,14 +81,15 @@ func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) i
 		return 0
 	}
 	t := tabwriter.NewWriter(stdout, 0, 0, 2, ' ', 0)
-	_, _ = fmt.Fprintln(t, "RUN\tENGINE\tSTARTED (UTC)\tLENGTH\tALARMS\tSTATE\tSIZE")
+	_, _ = fmt.Fprintln(t, "RUN\tENGINE\tSTARTED (UTC)\tLENGTH\tALARMS\tSTATE\tSIZE\tEFFECTIVE AREA\tDRIFT")
 	for _, r := range list {
 		length := "–"
 		if r.DurationS != nil {
 			length = time.Duration(*r.DurationS * 1e9).Round(time.Second).String()
 		}
-		_, _ = fmt.Fprintf(t, "%s\t%s %s\t%.19s\t%s\t%d\t%s\t%.1f MB\n", r.ID, r.Engine, r.EngineSerial,
-			strings.Replace(r.Started, "T", " ", 1), length, r.Alarms, r.State, float64(r.SizeBytes)/1e6)
+		_, _ = fmt.Fprintf(t, "%s\t%s %s\t%.19s\t%s\t%d\t%s\t%.1f MB\t%s\t%s\n", r.ID, r.Engine, r.EngineSerial,
+			strings.Replace(r.Started, "T", " ", 1), length, r.Alarms, r.State, float64(r.SizeBytes)/1e6,
+			measure(r.EffectiveArea, r.EffectiveAreaU95, 1e4, "%.2f", "cm²"), measure(r.AreaDrift, r.AreaDriftU95, 1, "%+.2f", "%"))
 	}
 	_ = t.Flush()
 	if len(list) == 0 {
@@ -116,7 +122,7 @@ func listRuns(ctx context.Context, dir string) (list []runLine, err error) {
 		}
 		list = append(list, line)
 	}
-	return list, nil
+	return list, drifts(ctx, runs, all, list)
 }
 
 func replayCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {

@@ -20,7 +20,6 @@ import (
 	"throatwatch/ingest"
 	"throatwatch/ingest/runfile"
 	"throatwatch/monitor/steady"
-	"throatwatch/rules/alarm"
 	"throatwatch/rules/pipeline"
 )
 
@@ -120,7 +119,7 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 			c.columns.Add(o)
 		case pipeline.OutcomeAlarm:
 			c.event(o, "alarm", o.Alarm)
-			if alarm.State(o.Alarm.State) == alarm.Unacknowledged && o.Alarm.Changed == o.Alarm.Raised {
+			if o.Alarm.Raise {
 				c.batch.Raised++
 			}
 		case pipeline.OutcomeMark:
@@ -157,10 +156,10 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 	}
 }
 
-// reductionJSON is what a run leaves behind of the effective throat area: mean over
+// Reduction is what a run leaves behind of the effective throat area: mean over
 // its steady choked scans, and relative standard uncertainties of what differs from run
 // to run and of what all runs with these instruments share; null if not known.
-type reductionJSON struct {
+type Reduction struct {
 	Run        string   `json:"run"`
 	Area       float64  `json:"effective_area_m2"`
 	Random     *float64 `json:"random"`
@@ -168,14 +167,27 @@ type reductionJSON struct {
 	Steady     float64  `json:"steady_s"`
 }
 
-func reduction(a *steady.RunArea) reductionJSON {
+// RunArea gives the area back; NaN for what is not known.
+func (r *Reduction) RunArea() *steady.RunArea {
+	of := func(v *float64) float64 {
+		if v == nil {
+			return math.NaN()
+		}
+		return *v
+	}
+	return &steady.RunArea{
+		Run: r.Run, Area: r.Area, Random: of(r.Random), Systematic: of(r.Systematic), Steady: int64(r.Steady * 1e9),
+	}
+}
+
+func reduction(a *steady.RunArea) Reduction {
 	known := func(v float64) *float64 {
 		if math.IsNaN(v) {
 			return nil
 		}
 		return &v
 	}
-	return reductionJSON{a.Run, a.Area, known(a.Random), known(a.Systematic), float64(a.Steady) / 1e9}
+	return Reduction{a.Run, a.Area, known(a.Random), known(a.Systematic), float64(a.Steady) / 1e9}
 }
 
 func (c *Core) event(o *pipeline.Outcome, kind string, v any) {

@@ -43,11 +43,21 @@ export function uuid(): string {
   return `${hex.slice(0, 8)}-${hex.slice(8, 12)}-${hex.slice(12, 16)}-${hex.slice(16, 20)}-${hex.slice(20)}`;
 }
 
+/** The uncertainty budget of the last scan. */
+export interface Budget {
+  t: string;
+  outputs: {
+    quantity: string;
+    inputs: { input: string; share: number | null; parts: { channel: string | null; what: string; share: number | null }[] }[];
+  }[];
+}
+
 export const api = {
   rigs: () => get<RigInfo[]>('api/rigs'),
   hello: (rig: string, signal?: AbortSignal) => get<HelloFrame>(`api/rigs/${id(rig)}/hello`, signal),
   throatCurve: (rig: string, totalTemperature: number, fuelAir: number, humidity: number) =>
     get<ThroatCurve>(`api/rigs/${id(rig)}/throat-curve?total_temperature=${totalTemperature}&fuel_air_ratio=${fuelAir}&humidity_ratio=${humidity}`),
+  budget: (rig: string) => get<Budget>(`api/rigs/${id(rig)}/budget`),
   alarms: () => get<Alarm[]>('api/alarms'),
   // `by` may be empty: the server then says "console".
   alarm: (a: Alarm, path: Step['path'], by: string) => post(`api/alarms/${id(a.id)}/${path}`, { revision: a.revision, reason: '', by, request_id: uuid() }),

@@ -366,6 +366,7 @@ try {
       if (name === 'rig') {
         assert.ok((await page.locator('.channels tbody tr').count()) > 20);
         assert.match(await words('p-choked'), /%$/);
+        await until('a budget of the margin', async () => /choke npr|pressure/.test(await words('budget')));
       }
       await shoot(name, { dark: name !== 'help', picture: name === 'rig' ? 'rig.png' : '' });
       for (const width of [820, 1440]) {

@@ -5,6 +5,7 @@ import type { Display } from '../context';
 import { type View, attr, column, h, refill, text } from '../dom';
 import { activeRun, believable } from '../state';
 import { age, fixed, inUnit, plain, significant } from '../units';
+import { budgetView } from './budget';
 import { engineerView } from './engineer';
 import { veil } from '../watch/display';
 import { runButton } from '../watch/tools';
@@ -20,6 +21,7 @@ export function rigPage(d: Display): View {
   const trouble = h('p', { class: 'trouble', role: 'status' });
   const run = runButton(d, trouble);
   const engineer = engineerView(d);
+  const budget = budgetView(d);
   const cover = veil(h('div', { class: 'page' },
     h('h1', {}, 'Rig'),
     h('div', { class: 'columns' },
@@ -27,6 +29,7 @@ export function rigPage(d: Display): View {
         h('section', {}, h('h2', {}, 'Channels'), h('table', { class: 'list channels' }, head('Channel', '', 'Station', '>Raw', '>Value', 'Unit', 'Quality', '>Age', '>Range'), body))),
       h('div', {},
         h('section', {}, h('h2', {}, 'Rig and files'), facts, h('p', {}, run.el, ' ', trouble)),
+        h('section', {}, h('h2', {}, 'Uncertainty budget of the margin'), budget.el),
         h('section', {}, h('h2', {}, 'Sources'), h('table', { class: 'list' }, head('Topic', '>Age', '>Messages', '>Clock skew', ''), sources)),
         h('section', {}, h('h2', {}, 'Broker sessions'), h('table', { class: 'list' }, head('Topic filter', ''), sessions)),
         h('section', {}, h('h2', {}, 'Counters'), h('table', { class: 'list' }, head('What', '>Count'), counters))))));
@@ -43,6 +46,7 @@ export function rigPage(d: Display): View {
       drawnAt = now;
       const m = d.model();
       engineer.update(now);
+      budget.update(now);
       const set = d.units();
       refill(body, `${set.system}|${m.channels.map((c) => c.id + c.unit).join()}`, () => {
         rows = new Map();
