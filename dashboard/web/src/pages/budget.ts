@@ -38,7 +38,7 @@ export function budgetView(d: Display): View {
         .map((i) => h('tr', {},
           h('th', { scope: 'row' }, i.input),
           h('td', { class: 'num' }, percent(i.share)),
-          h('td', { class: 'extra' }, i.parts.filter((part) => (part.share ?? 0) >= least).map((part) => `${part.channel ?? part.what} ${percent(part.share)}`).join(', ')))));
+          h('td', { class: 'extra' }, i.parts.filter((part) => (part.share ?? 0) >= least && part.what !== i.input).map((part) => `${part.channel ?? part.what} ${percent(part.share)}`).join(', ')))));
     },
     destroy: () => undefined,
   };
