@@ -150,6 +150,7 @@ export interface PointFrame extends Numbered, Partial<Record<Quantity, Num>> {
   lit: boolean;
   phase: string;
   back_pressure_from: string;
+  total_pressure_from?: string; // not in runs of older builds
   total_temperature_from: string;
   choke_npr_from: string;
   egt_probes_used: number;

@@ -45,7 +45,7 @@ const groups: [string, Line[]][] = [
     plain('Throat Mach number', 'throat_mach', 4),
   ]],
   ['Gas and nozzle', [
-    line('Nozzle total pressure p8', 'total_pressure_pa', (u) => u.pressure, undefined, (p) => `${p.rake_probes_used} rake probes`),
+    line('Nozzle total pressure p8', 'total_pressure_pa', (u) => u.pressure, undefined, (p) => (p.total_pressure_from === 'wall_static' ? 'wall static: no rake' : `${p.rake_probes_used} rake probes`)),
     line('Back pressure', 'back_pressure_pa', (u) => u.pressure, undefined, (p) => sourceWord(p.back_pressure_from)),
     line('Barometer', 'barometer_pa', (u) => u.pressure),
     line('Nozzle gas temperature T8', 'total_temperature_k', (u) => u.temperature, undefined, (p) => sourceWord(p.total_temperature_from)),

@@ -228,6 +228,8 @@ export function throatPlane(d: Display): View {
     const { temperature } = d.units();
     const notes = [curveOf && `gas ${shown(temperature, curveOf.t)} ${temperature.sign}, f ${fixed(curveOf.f, 3)}, Cd ${fixed(p?.discharge_coefficient, 3)}`];
     if (p?.back_pressure_from === 'barometer') notes.push('back pressure from barometer');
+    if (p?.total_pressure_from === 'wall_static') notes.push('p7 from wall static');
+    if (p && ['heat_balance', 'egt_factor'].includes(p.total_temperature_from)) notes.push(`T7 from ${sourceWord(p.total_temperature_from)}`);
     if (live && (p.independent_flow_parameter ?? null) === null) notes.push('no independent flow');
     c.font = font(12);
     c.fillStyle = pal.soft;
