@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"slices"
+	"strconv"
 	"strings"
 	"time"
 
@@ -20,9 +21,15 @@ const (
 	ProbeOpen
 	ProbeStuck
 	ProbeDrift
+	ProbeShort
+	ProbeSlow
 	HotStreak
 	PressureZeroShift
+	PressureLeak
+	PressureBlocked
 	BarometerLoss
+	BarometerUnit
+	Dropouts
 	NotANumber
 	WrongUnit
 	PublisherSilent
@@ -47,9 +54,15 @@ var faults = [numFaults]struct {
 	ProbeOpen:         {"probe-open", "a thermocouple opens: its module sends the burn-out code, or full scale", 0, true},
 	ProbeStuck:        {"probe-stuck", "a channel repeats its last value bit for bit", 0, true},
 	ProbeDrift:        {"probe-drift", "a channel drifts up by 0.2 % of its range per second, at most 20 %", 0, true},
+	ProbeShort:        {"probe-short", "a thermocouple shorts: it reads the temperature of its terminals", 0, true},
+	ProbeSlow:         {"probe-slow", "a channel lags 12 times as much, at least 6 s: a broken contact", 0, true},
 	HotStreak:         {"hot-streak", "the gas at one EGT probe is truly 80 K hotter", 0, true},
 	PressureZeroShift: {"pressure-zero-shift", "a pressure channel reads 1 % of its range too high from one sample to the next", 0, true},
+	PressureLeak:      {"pressure-leak", "the line of a pressure channel leaks: it reads 85 % of what there is above the barometer", 0, true},
+	PressureBlocked:   {"pressure-blocked", "the line of a pressure channel is blocked: it follows with 300 s", 0, true},
 	BarometerLoss:     {"barometer-loss", "the barometer, or the named channel, is missing from the messages", 0, true},
+	BarometerUnit:     {"barometer-unit", "the barometer, or the named channel, is sent in inches of mercury under its usual unit", 0, true},
+	Dropouts:          {"dropouts", "every third sample of a channel is missing, at random", 0, true},
 	NotANumber:        {"not-a-number", "a channel is sent as a number that is none (1e999, NaN)", 3 * time.Second, true},
 	WrongUnit:         {"wrong-unit", "a channel is sent in a unit of another dimension", 3 * time.Second, true},
 	PublisherSilent:   {"publisher-silent", "nothing is published", 5 * time.Second, false},
@@ -93,23 +106,25 @@ type Fault struct {
 	Kind    FaultKind
 	At      time.Duration // of the test
 	For     time.Duration // 0 = as long as is usual for the kind: probes to the end, messages some seconds
+	Size    float64       // times what is usual for drift, heat, shift, leak and lag; 0 = 1
 	Channel string        // 0 = a fitting one; for faults of messages, all
 }
 
 // ErrFault is wrapped by what is wrong with a fault on request.
 var ErrFault = errors.New("fault is not understood")
 
-// ParseFault reads "name@time", "name@time+duration", either with ":channel" after
-// it: probe-open@25s:egt_3, publisher-silent@40s+10s.
+// ParseFault reads "name@time", "name@time+duration", either with "*size" and ":channel"
+// after it: probe-open@25s:egt_3, publisher-silent@40s+10s, hot-streak@30s*0.5:egt_2.
 func ParseFault(s string) (Fault, error) {
 	bad := func(what string) (Fault, error) {
-		return Fault{}, fmt.Errorf("rehearsal: %q: %s; write name@time[+duration][:channel], as in probe-open@25s:egt_3: %w", s, what, ErrFault)
+		return Fault{}, fmt.Errorf("rehearsal: %q: %s; write name@time[+duration][*size][:channel], as in probe-open@25s:egt_3: %w", s, what, ErrFault)
 	}
 	name, rest, ok := strings.Cut(s, "@")
 	if !ok {
 		return bad("no time")
 	}
 	when, channel, _ := strings.Cut(rest, ":")
+	when, size, sized := strings.Cut(when, "*")
 	start, length, lasts := strings.Cut(when, "+")
 	kind := faultNone
 	for k := range numFaults {
@@ -134,6 +149,11 @@ func ParseFault(s string) (Fault, error) {
 			return bad(fmt.Sprintf("%q is no duration such as 10s", length))
 		}
 	}
+	if sized {
+		if f.Size, err = strconv.ParseFloat(size, 64); err != nil || !(f.Size > 0 && f.Size <= 100) {
+			return bad(fmt.Sprintf("%q is no size between 0 and 100, 1 being the usual one", size))
+		}
+	}
 	return f, nil
 }
 
@@ -154,6 +174,9 @@ func (f Fault) fit(c *compute.Config) (*active, error) {
 	if f.For == 0 {
 		f.For = faults[f.Kind].lasting
 	}
+	if f.Size == 0 {
+		f.Size = 1
+	}
 	a := &active{Fault: f, channel: -1}
 	if f.Channel != "" {
 		a.channel = slices.IndexFunc(c.Channels, func(ch compute.Channel) bool { return ch.ID == f.Channel })
@@ -169,10 +192,12 @@ func (f Fault) fit(c *compute.Config) (*active, error) {
 	var fitting []int
 	//exhaustive:ignore
 	switch f.Kind {
-	case BarometerLoss:
+	case BarometerLoss, BarometerUnit:
 		fitting = []int{st.Barometer}
-	case PressureZeroShift:
+	case PressureZeroShift, PressureLeak, PressureBlocked:
 		fitting = append(slices.Clone(st.P7), st.ExitPlane, st.Barometer)
+	case ProbeShort:
+		fitting = slices.Concat(st.EGT, st.T7)
 	default:
 		fitting = slices.Concat(st.EGT, st.T7, st.P7)
 	}
@@ -194,16 +219,41 @@ func (r *Rig) heat(i int) float64 {
 	var k float64
 	for _, f := range r.faults {
 		if f.Kind == HotStreak && f.channel == i && f.at(r.now) {
-			k += 80
+			k += 80 * f.Size
 		}
 	}
 	return k
 }
 
+// lags gives the time constant, s, with which channel i follows.
+func (r *Rig) lags(i int) float64 {
+	tau := r.sensors[i].tau
+	for _, f := range r.faults {
+		if f.channel != i || !f.at(r.now) {
+			continue
+		}
+		//exhaustive:ignore
+		switch f.Kind {
+		case ProbeSlow:
+			tau = max(tau, max(6, 12*tau)*f.Size)
+		case PressureBlocked:
+			tau = max(tau, 300*f.Size)
+		}
+	}
+	return tau
+}
+
+// inchOfMercury in Pa, at 0 °C. (NIST SP 811, B.8.)
+const inchOfMercury = 3386.389
+
+// terminals is how much warmer than the surroundings the terminals of a thermocouple
+// are, K.
+const terminals = 5
+
 // shift gives the error, SI, that faults add to channel i.
 func (r *Rig) shift(i int) float64 {
-	sp := r.sensors[i].spec
-	span := sp.High - sp.Low
+	s := &r.sensors[i]
+	span := s.spec.High - s.spec.Low
 	var e float64
 	for _, f := range r.faults {
 		if f.channel != i || !f.at(r.now) {
@@ -212,9 +262,17 @@ func (r *Rig) shift(i int) float64 {
 		//exhaustive:ignore
 		switch f.Kind {
 		case ProbeDrift:
-			e += span * min(0.2, 0.002*(r.now-f.At).Seconds())
+			e += span * min(0.2, 0.002*f.Size*(r.now-f.At).Seconds())
 		case PressureZeroShift:
-			e += 0.01 * span
+			e += 0.01 * f.Size * span
+		case ProbeShort:
+			e += r.plant.ambient + terminals - s.x
+		case PressureLeak:
+			above := s.x
+			if s.absolute && s.port == nil {
+				above -= r.plant.barometer
+			}
+			e -= min(1, 0.15*f.Size) * above
 		}
 	}
 	return e
@@ -244,6 +302,10 @@ func (r *Rig) replace(i int, raw float64) (float64, bool) {
 			raw = f.frozen
 		case BarometerLoss:
 			sent = false
+		case BarometerUnit:
+			raw = s.sentIn().ToSI(raw) / inchOfMercury
+		case Dropouts:
+			sent = sent && r.gaps.Float64() >= 1.0/3
 		}
 	}
 	return raw, sent

@@ -22,6 +22,11 @@ func TestParseFault(t *testing.T) {
 		{"probe-open@1m5s:egt_3", Fault{Kind: ProbeOpen, At: 65 * time.Second, Channel: "egt_3"}, true},
 		{"publisher-silent@0s+10s", Fault{Kind: PublisherSilent, For: 10 * time.Second}, true},
 		{"burst@4s+250ms:p7_1", Fault{Kind: Burst, At: 4 * time.Second, For: 250 * time.Millisecond, Channel: "p7_1"}, true},
+		{"hot-streak@30s*0.5:egt_2", Fault{Kind: HotStreak, At: 30 * time.Second, Size: 0.5, Channel: "egt_2"}, true},
+		{"pressure-leak@1s+2s*2", Fault{Kind: PressureLeak, At: time.Second, For: 2 * time.Second, Size: 2}, true},
+		{"hot-streak@30s*0", Fault{}, false},
+		{"hot-streak@30s*", Fault{}, false},
+		{"hot-streak@30s*NaN", Fault{}, false},
 		{"probe-open", Fault{}, false},
 		{"probe-open@", Fault{}, false},
 		{"probe-open@25", Fault{}, false},
@@ -42,9 +47,10 @@ func TestParseFault(t *testing.T) {
 func FuzzParseFault(f *testing.F) {
 	f.Add("probe-open@25s:egt_3")
 	f.Add("burst@4s+250ms")
+	f.Add("hot-streak@1s+2s*0.5:egt_2")
 	f.Add("@+:")
 	f.Fuzz(func(t *testing.T, s string) {
-		if got, err := ParseFault(s); err == nil && (got.Kind.Text() == "" || got.At < 0 || got.For < 0) {
+		if got, err := ParseFault(s); err == nil && (got.Kind.Text() == "" || got.At < 0 || got.For < 0 || got.Size < 0) {
 			t.Errorf("%q is taken as %+v", s, got)
 		}
 	})
@@ -185,6 +191,74 @@ func TestFaults(t *testing.T) {
 				if d := r.value - plain.between("p7_1", 25, 99)[i].value; math.Abs(d-2.6) > 0.006 {
 					t.Fatalf("shift of %g kPa, want 2.6 kPa", d)
 				}
+			}
+		}},
+		{"probe-short@20s+10s:egt_2", "egt_2", func(t *testing.T, s *stream) {
+			t.Helper()
+			// The terminals are at 12 °C and 5 K; the module is off by 1.6 K at most.
+			if !all(s.between("egt_2", 20, 30), func(r reading) bool { return math.Abs(r.value-17) < 4 }) || !all(s.between("egt_2", 30, 36), func(r reading) bool { return r.value > 300 }) {
+				t.Error("the probe does not read its terminals for 10 s")
+			}
+		}},
+		{"probe-slow@9s:egt_3", "egt_3", func(t *testing.T, s *stream) {
+			t.Helper()
+			// Within 2 s of light-off the others have risen by far more.
+			slow, fast := s.between("egt_3", 9, 9.01)[0].value, plain.between("egt_3", 9, 9.01)[0].value
+			if math.Abs(slow-fast) > 5 {
+				t.Errorf("the probe jumps from %g to %g", fast, slow)
+			}
+			top := 0.0
+			for i, r := range s.between("egt_3", 9, 20) {
+				top = max(top, math.Abs(r.value-plain.between("egt_3", 9, 20)[i].value))
+			}
+			if top < 30 {
+				t.Errorf("the probe is behind by no more than %g K", top)
+			}
+		}},
+		{"pressure-leak@25s*2:p7_3", "p7_3", func(t *testing.T, s *stream) {
+			t.Helper()
+			// 70 % of the gauge pressure; the ADC's step is 0.005 kPa, the offset some 0.05 kPa.
+			for i, r := range s.between("p7_3", 25, 99) {
+				if want := 0.7 * plain.between("p7_3", 25, 99)[i].value; math.Abs(r.value-want) > 0.4 {
+					t.Fatalf("%g kPa, want %g kPa", r.value, want)
+				}
+			}
+		}},
+		{"pressure-leak@25s:p_baro", "p_baro", func(t *testing.T, s *stream) {
+			t.Helper()
+			if !slices.Equal(s.channels["p_baro"], plain.channels["p_baro"]) {
+				t.Error("a leak changes what is at the pressure of its surroundings")
+			}
+		}},
+		{"pressure-blocked@20s:p7_1", "p7_1", func(t *testing.T, s *stream) {
+			t.Helper()
+			before := s.between("p7_1", 19.9, 20)[0].value
+			var same int
+			readings := s.between("p7_1", 20, 30)
+			for i, r := range readings {
+				if math.Abs(r.value-before) > 0.04*before {
+					t.Fatalf("%g kPa, after %g kPa before", r.value, before)
+				}
+				if i > 0 && r.value == readings[i-1].value {
+					same++
+				}
+			}
+			if same > len(readings)/2 {
+				t.Error("a blocked line has no noise")
+			}
+		}},
+		{"barometer-unit@25s", "p_baro", func(t *testing.T, s *stream) {
+			t.Helper()
+			// 1006 hPa is 29.7 inHg.
+			if !all(s.between("p_baro", 25, 99), func(r reading) bool { return math.Abs(r.value-29.7) < 0.1 && r.unit == "hPa" }) {
+				t.Error("the barometer is not sent in inches of mercury")
+			}
+		}},
+		{"dropouts@20s+10s:t7_2", "t7_2", func(t *testing.T, s *stream) {
+			t.Helper()
+			// 200 samples: 133 ± 4 × 6.7 come.
+			if n := len(s.between("t7_2", 20, 30)); n < 106 || n > 160 || len(s.between("t7_2", 30, 36)) != len(plain.between("t7_2", 30, 36)) {
+				t.Errorf("%d samples of 200 come", n)
 			}
 		}},
 		{"barometer-loss@25s", "p_baro", func(t *testing.T, s *stream) {
@@ -333,6 +407,16 @@ func TestDamage(t *testing.T) {
 		}
 		if notFinite[g.topic] < 90 {
 			t.Errorf("%s: %d of 100 messages have a value that is no number", g.topic, notFinite[g.topic])
+		}
+	}
+}
+
+// A fault that a channel cannot have is refused.
+func TestFaultDoesNotFit(t *testing.T) {
+	cfg := load(t, "example")
+	for _, fault := range []string{"barometer-unit@1s:egt_1", "barometer-unit@1s:p_oil", "probe-short@1s:no_such"} {
+		if _, err := New(cfg, Options{Scenario: Quick, Faults: faulty(t, fault)}); !errors.Is(err, ErrFault) {
+			t.Errorf("%s: %v", fault, err)
 		}
 	}
 }

@@ -30,6 +30,7 @@ import (
 
 	"throatwatch/ingest/decode"
 	"throatwatch/monitor/align"
+	"throatwatch/monitor/unit"
 	"throatwatch/rules/pipeline"
 )
 
@@ -78,6 +79,7 @@ type Rig struct {
 	begun    time.Duration // when it began
 	noise    *rand.Rand    // of the readings; untouched by faults
 	link     *rand.Rand    // of delays and damage
+	gaps     *rand.Rand    // of samples that are missing
 	due      int64         // of the newest message
 	outbox   []held
 	sent     []bool
@@ -125,6 +127,7 @@ func New(cfg pipeline.Config, o Options) (*Rig, error) {
 		rate: o.Rate / o.Speed, speed: o.Speed, start: o.Start, due: o.Start,
 		noise: rand.New(rand.NewPCG(o.Seed, 1)),
 		link:  rand.New(rand.NewPCG(o.Seed, 2)),
+		gaps:  rand.New(rand.NewPCG(o.Seed, 3)),
 		sent:  make([]bool, len(c.Channels)),
 	}
 	var err error
@@ -151,6 +154,9 @@ func New(cfg pipeline.Config, o Options) (*Rig, error) {
 		}
 		if f.Kind == WrongUnit && r.formatOf(a.channel) == decode.Lines {
 			return nil, fmt.Errorf("rehearsal: fault %s: %q comes as line protocol, which names no unit: %w", f.Kind, c.Channels[a.channel].ID, ErrFault)
+		}
+		if f.Kind == BarometerUnit && r.sensors[a.channel].sentIn().Dimension != unit.Pressure {
+			return nil, fmt.Errorf("rehearsal: fault %s: %q is not sent as a pressure: %w", f.Kind, c.Channels[a.channel].ID, ErrFault)
 		}
 		r.faults = append(r.faults, a)
 	}
@@ -255,7 +261,7 @@ func (r *Rig) advance(t time.Duration) {
 		}
 	}
 	for i := range r.sensors {
-		r.sensors[i].follow(r.plant, dt, r.heat(i))
+		r.sensors[i].follow(r.plant, dt, r.lags(i), r.heat(i))
 	}
 }
 

@@ -258,11 +258,7 @@ func (s *sensor) convert(id string) error {
 	if !(sp.High > sp.Low) {
 		return fmt.Errorf("rehearsal: channel %q has no range: give it one", id)
 	}
-	raw := sp.Raw
-	if !raw.Valid() {
-		raw = sp.Unit
-	}
-	s.unitName = senmlUnit(raw)
+	s.unitName = senmlUnit(s.sentIn())
 	var err error
 	if s.inverse, err = newInverse(sp); err != nil {
 		return fmt.Errorf("rehearsal: channel %q: %w", id, err)
@@ -292,6 +288,14 @@ func (s *sensor) convert(id string) error {
 	return nil
 }
 
+// sentIn gives the unit in which raw values are sent.
+func (s *sensor) sentIn() unit.Unit {
+	if s.spec.Raw.Valid() {
+		return s.spec.Raw
+	}
+	return s.spec.Unit
+}
+
 func (s *sensor) good(code float64) bool {
 	_, q := s.spec.Convert(s.reading(code))
 	return q == monitor.QualityGood
@@ -316,11 +320,12 @@ func (s *sensor) input(p *plant, extra float64) float64 {
 	return x
 }
 
-// follow lets the sensing element follow its input for dt seconds.
-func (s *sensor) follow(p *plant, dt, extra float64) {
+// follow lets the sensing element follow its input for dt seconds with the time
+// constant tau, s.
+func (s *sensor) follow(p *plant, dt, tau, extra float64) {
 	x := s.input(p, extra)
-	if s.tau > 0 {
-		x = lag(s.x, x, dt, s.tau)
+	if tau > 0 {
+		x = lag(s.x, x, dt, tau)
 	}
 	s.x = x
 }
