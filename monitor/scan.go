@@ -29,6 +29,7 @@ type Run struct {
 	Started int64  `json:"started"` // event time, ns UTC
 	Ended   int64  `json:"ended"`   // 0 while it goes on
 	By      string `json:"by"`      // "engine" or the operator who started it
+	Alarms  int    `json:"alarms"`  // raised so far, each time that one was
 }
 
 // Mark is a note that an operator pins to the run's time line.

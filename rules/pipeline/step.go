@@ -353,6 +353,9 @@ func (m *Machine) judge(s *State, t int64, phase monitor.Phase, d rules.Domain) 
 func (m *Machine) alarms(s *State, t int64, first int) {
 	for i := first; i < len(m.alarm); i++ {
 		m.alarm[i].Past = s.Host-t > past
+		if m.alarm[i].Raise && s.RunActive {
+			s.Run.Alarms++
+		}
 		alarm := m.alarm[i]
 		m.emit(s, Outcome{Kind: OutcomeAlarm, T: t, Alarm: &alarm})
 	}

@@ -48,7 +48,7 @@ type Batch struct {
 	Checkpoint *runfile.Checkpoint
 	Begin      *RunHeader // after this batch the records go to a run file
 	End        *RunHeader // with this batch the run file ends, before another begins
-	Raised     int        // alarms raised, for the header
+	Alarms     int        // raised in the run that is on, for the header; 0 = none since the batch before
 	First      int64      // host time of the first record
 }
 
@@ -119,8 +119,8 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 			c.columns.Add(o)
 		case pipeline.OutcomeAlarm:
 			c.event(o, "alarm", o.Alarm)
-			if o.Alarm.Raise {
-				c.batch.Raised++
+			if o.Alarm.Raise && c.State.RunActive {
+				c.batch.Alarms = c.State.Run.Alarms
 			}
 		case pipeline.OutcomeMark:
 			c.event(o, "mark", o.Mark)
@@ -136,7 +136,7 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 				c.batch.Begin = nil
 			default:
 				h := c.Header()
-				h.Ended, h.State = o.Run.Ended, runfile.StateEnded
+				h.Ended, h.State, h.Alarms = o.Run.Ended, runfile.StateEnded, o.Run.Alarms
 				c.batch.End = h
 			}
 		case pipeline.OutcomeConfig:
@@ -208,7 +208,7 @@ func (c *Core) Header() *RunHeader {
 	return &RunHeader{
 		ID: run.ID, Number: run.Number, Rig: run.Rig, Engine: cfg.Rig.EngineModel, EngineSerial: cfg.Rig.EngineSerial, Title: cfg.Rig.Title,
 		Operator: run.By, Build: c.build, GOARCH: c.goarch, ConfigHash: cfg.Hash, Started: run.Started,
-		State: runfile.StateRunning,
+		State: runfile.StateRunning, Alarms: run.Alarms,
 	}
 }
 

@@ -34,6 +34,7 @@ type Store struct {
 	catalog *runfile.Catalog
 	making  *making
 	wanted  *RunHeader     // of a run whose file could not be made yet
+	alarms  int            // raised in the run that is on, as of the last batch
 	over    bool           // the run of the file has ended, and no idle file could be begun yet
 	work    sync.WaitGroup // folding, pruning and making files; Close waits for it
 	stop    context.CancelFunc
@@ -283,6 +284,7 @@ func (s *Store) Restore(ctx context.Context, m *pipeline.Machine, build, goarch 
 	}
 	if (s.idle || s.over) && core.State.RunActive {
 		s.removeHalfMade(core.Header().ID)
+		s.alarms = core.State.Run.Alarms
 		s.begin(ctx, core.Header(), core.State.Host)
 	}
 	return core, nil
@@ -318,16 +320,22 @@ func (s *Store) Write(ctx context.Context, b *Batch) error {
 	}
 	batch := runfile.Batch{Records: b.Records, Chunks: chunks, Events: b.Events, Checkpoint: b.Checkpoint}
 	ends := b.End != nil && !s.idle && !s.over
-	if ends || b.Raised > 0 && !s.idle && !s.over {
+	switch {
+	case ends:
 		batch.Header = func(h *runfile.Header) {
-			h.Alarms += b.Raised
-			if ends {
-				h.State, h.Ended, h.Digest = b.End.State, b.End.Ended, b.End.Digest
-			}
+			h.State, h.Ended, h.Digest, h.Alarms = b.End.State, b.End.Ended, b.End.Digest, b.End.Alarms
 		}
+	case b.Alarms > 0 && !s.idle && !s.over:
+		batch.Header = func(h *runfile.Header) { h.Alarms = b.Alarms }
 	}
 	if err := s.file.Commit(ctx, batch); err != nil {
 		return fmt.Errorf("store: %w", err)
+	}
+	switch {
+	case b.Begin != nil:
+		s.alarms = b.Begin.Alarms
+	case b.Alarms > 0:
+		s.alarms = b.Alarms
 	}
 	full := b.Checkpoint != nil && b.Checkpoint.Full
 	if ends || s.over && full {
@@ -439,6 +447,9 @@ func (s *Store) switchOver(ctx context.Context) {
 	upto, _ := old.Durable()
 	if m.err == nil && m.upto < upto {
 		m.err = m.file.CopyFrom(ctx, old, m.upto, upto)
+	}
+	if m.err == nil && s.alarms > m.header.Alarms { // raised while the file was being made
+		m.err = m.file.UpdateHeader(ctx, func(h *runfile.Header) { h.Alarms = s.alarms })
 	}
 	if m.err != nil {
 		s.log.Error("the run is recorded into the idle file for now: its own file could not be made", "err", m.err)

@@ -287,6 +287,85 @@ func TestRestartWhileARunFileIsMade(t *testing.T) {
 	}
 }
 
+// The header of a run counts the alarms that were raised while its file was being
+// made, and those that a restart in the middle of it found.
+func TestAlarmsWhileARunFileIsMade(t *testing.T) {
+	t.Parallel()
+	dir := memory(t)
+	ctx := t.Context()
+	during, goOn := make(chan struct{}), make(chan struct{})
+	var inCommit func()
+	opt := runfile.Options{BeforeCommit: func(context.Context) error {
+		if fn := inCommit; fn != nil {
+			fn()
+		}
+		return nil
+	}}
+	store, core := openCore(t, dir, opt)
+	feed := watch.NewFeed(core, store)
+	host := testBegin
+	must(t, feed.Begin(ctx, pipeline.Boot{Epoch: 1}, smallBundle(t), host))
+	deaf := func(deaf bool) { // raises the warning on the input path, or lets it return
+		core.Take(watch.Input{Kind: ingest.KindHealth, Payload: fmt.Appendf(nil, `{"part":"input_path","ok":%t}`, !deaf)}, host)
+		for range 20 {
+			host += 1e8
+			core.Take(watch.Input{Kind: ingest.KindTick}, host)
+		}
+	}
+	commit := func() {
+		t.Helper()
+		b, err := core.Cut()
+		must(t, err)
+		must(t, store.Write(ctx, b))
+	}
+	host = feedSmall(t, feed, host, 40)
+	deaf(true) // before the run: not one of its alarms
+	deaf(false)
+	commit()
+	inCommit = func() { // of the record that begins the run: the next commit is that of the copy
+		inCommit = func() {
+			inCommit = nil
+			close(during)
+			<-goOn
+		}
+	}
+	core.Take(watch.Input{Kind: ingest.KindAction, Payload: []byte(`{"do":"run_start","by":"T. Ester","request_id":"1"}`)}, host)
+	id := core.State.Run.ID
+	commit()
+	<-during
+	deaf(true)
+	deaf(false)
+	commit()
+	crashed := image(t, dir)
+	close(goOn)
+	store.WaitMade()
+	raised := func(dir string, want int) {
+		t.Helper()
+		run, err := runfile.ReadRun(ctx, filepath.Join(dir, "runs", id+".db"))
+		must(t, err)
+		if run.Alarms != want {
+			t.Errorf("the header counts %d alarms, %d were raised", run.Alarms, want)
+		}
+	}
+	core.Take(watch.Input{Kind: ingest.KindTick}, host)
+	commit()
+	if _, idle := store.Current(); idle {
+		t.Fatal("the run is not written to its file")
+	}
+	raised(dir, 2) // the input path, and the probe that nothing comes from
+	deaf(true)
+	commit()
+	raised(dir, 3)
+	must(t, store.Close(ctx))
+
+	again, core := openCore(t, crashed, runfile.Options{})
+	if core.State.Run.Alarms != 2 {
+		t.Errorf("after a restart the run has %d alarms", core.State.Run.Alarms)
+	}
+	must(t, again.Close(ctx))
+	raised(crashed, 2)
+}
+
 func must(t *testing.T, err error) {
 	t.Helper()
 	if err != nil {
