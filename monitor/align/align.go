@@ -98,6 +98,7 @@ type State struct {
 	MaxEvent int64  // newest time at which a sample counts, not ahead of host time
 	Backlog  int64  // host time until which a backlog is expected, 0 = none
 	Up       int64  // host time of the newest connect
+	Heard    bool   // data has come since the newest boot or connect
 	Patient  int64  // host time until which scans wait for samples out of order
 	Sessions []Session
 	Channels []ChannelState
@@ -276,6 +277,7 @@ func (a *Aligner) Message(s *State, r *ingest.Record, seen bool) *decode.Result 
 	src := s.source(r.Topic)
 	src.Messages++
 	src.Host = r.Host
+	s.Heard = true
 	for i := range res.Samples {
 		a.sample(s, src, info, &res.Samples[i], r.Host)
 	}
@@ -493,7 +495,7 @@ func (a *Aligner) grow(s *State) {
 // Connect notes that a session is up or down.
 func (a *Aligner) Connect(s *State, filter string, up bool, host int64) {
 	if up {
-		s.Backlog, s.Up = host+a.cfg.Backlog, host
+		s.Backlog, s.Up, s.Heard = host+a.cfg.Backlog, host, false
 	}
 	for i := range s.Sessions {
 		if s.Sessions[i].Filter == filter {
@@ -510,7 +512,7 @@ func (a *Aligner) Boot(s *State, host int64) {
 	for i := range s.Sessions {
 		s.Sessions[i].Connected = false
 	}
-	s.Backlog = host + a.cfg.Backlog
+	s.Backlog, s.Heard = host+a.cfg.Backlog, false
 }
 
 // Waiting tells that no session is connected, so that scans wait for what the
@@ -524,9 +526,10 @@ func (s *State) Waiting() bool {
 	return len(s.Sessions) > 0
 }
 
-// CatchingUp tells that scans of the past are made.
+// CatchingUp tells that scans of the past are made. Before anything has come there
+// is nothing to catch up with: there is no data yet.
 func (s *State) CatchingUp(host int64) bool {
-	return s.Backlog != 0 && s.Next != 0 && host-s.Next > int64(1e9)
+	return s.Backlog != 0 && s.Heard && s.Next != 0 && host-s.Next > int64(1e9)
 }
 
 // Scan closes the oldest open interval if it can be closed at host time, fills

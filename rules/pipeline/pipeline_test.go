@@ -266,6 +266,26 @@ func TestStatus(t *testing.T) {
 	if st := b.m.Status(b.s); st.DataAge != -1 {
 		t.Errorf("data age %d without data", st.DataAge)
 	}
+	// After a restart nothing is caught up with before something comes.
+	again := newBed(t)
+	connect := func() {
+		again.r.Kind, again.r.Topic, again.r.Payload = ingest.KindConnect, topic, nil
+		again.step()
+	}
+	connect()
+	again.play(running, second)
+	again.r.Kind = ingest.KindDisconnect
+	again.step()
+	again.wait(10 * second)
+	again.record(ingest.KindBoot, `{"epoch":2}`)
+	connect()
+	if st := again.m.Status(again.s); st.CatchingUp || st.DataAge < 10*second {
+		t.Errorf("before any data of this life: %+v", st)
+	}
+	again.message(topic, running.pack(again.r.Host-9*second))
+	if st := again.m.Status(again.s); !st.CatchingUp {
+		t.Errorf("with data of the past: %+v", st)
+	}
 	b.r.Kind, b.r.Topic, b.r.Payload = ingest.KindConnect, topic, nil
 	b.step()
 	n, last := 0, int64(0)
@@ -432,7 +452,7 @@ func TestPast(t *testing.T) {
 	past, now := 0, 0
 	for at := (from/period + 1) * period; at < b.r.Host; at += period {
 		b.r.Host += ms
-		if st := b.m.Status(b.s); st.CatchingUp != (b.r.Host-b.s.Align.Next > second) {
+		if st := b.m.Status(b.s); st.CatchingUp != (b.s.Align.Heard && b.r.Host-b.s.Align.Next > second) {
 			t.Fatalf("%d ms behind: catching up %v", (b.r.Host-b.s.Align.Next)/ms, st.CatchingUp)
 		}
 		for _, o := range b.message(topic, low.pack(at)) {
@@ -449,7 +469,7 @@ func TestPast(t *testing.T) {
 			}
 		}
 	}
-	if past < 200 || now < 50 {
+	if past < 200 || now < 50 || !b.s.Align.Heard {
 		t.Errorf("%d outcomes of the past, %d of now", past, now)
 	}
 	b.play(running, 3*second)
