@@ -237,6 +237,45 @@ func nanos(seconds float64) int64 {
 	return int64(us) * 1000
 }
 
+// powers of ten that float64 holds exactly.
+var tens = [...]float64{1e0, 1e1, 1e2, 1e3, 1e4, 1e5, 1e6, 1e7, 1e8, 1e9, 1e10, 1e11, 1e12, 1e13, 1e14, 1e15, 1e16, 1e17, 1e18}
+
+// exact reads a decimal of at most 18 digits without an exponent from the start of
+// b. Mantissa and power of ten are then exact in float64, so that one division
+// rounds correctly [Clinger 1990, How to read floating point numbers accurately].
+// It gives the bytes that it took, 0 when b starts with anything else: then number
+// has to look at it.
+func exact(b []byte) (v float64, n int) {
+	i := 0
+	if len(b) > 0 && b[0] == '-' {
+		i = 1
+	}
+	first, point, m := i, -1, uint64(0)
+	for ; i < len(b); i++ {
+		if c := b[i] - '0'; c <= 9 {
+			m = m*10 + uint64(c)
+		} else if b[i] == '.' && point < 0 && i > first {
+			point = i
+		} else {
+			break
+		}
+		if i-first > 18 {
+			return 0, 0
+		}
+	}
+	if i == first || point == i-1 || m > 1<<53 {
+		return 0, 0
+	}
+	v = float64(m)
+	if point >= 0 {
+		v /= tens[i-1-point]
+	}
+	if first == 1 {
+		v = -v
+	}
+	return v, i
+}
+
 // number parses a decimal number: digits, sign, point and exponent, correctly
 // rounded. The words NaN and Inf, in any case, and numbers beyond float64 give
 // ReasonNotFinite; everything else gives ReasonSyntax.

@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"encoding/json"
 	"math"
+	"strconv"
 	"testing"
 	"unicode/utf8"
 
@@ -127,6 +128,24 @@ func FuzzRoundTrip(f *testing.F) {
 					t.Fatalf("%s: %s, want %s", format, show(r.Samples[i:i+1]), show(want[i:i+1]))
 				}
 			}
+		}
+	})
+}
+
+// FuzzExact holds the short way of reading a number against the standard
+// library's: where it takes something, it gives the same bits.
+func FuzzExact(f *testing.F) {
+	for _, s := range []string{"0", "-0", "7.", ".5", "-", "101.325", "9007199254740993", "123456789012345.678", "0.1e3", "00.30", "-9999", "1.2.3", "999999999999999999", "0.000000000000000001"} {
+		f.Add(s)
+	}
+	f.Fuzz(func(t *testing.T, s string) {
+		v, n := exact([]byte(s))
+		if n == 0 {
+			return
+		}
+		want, err := strconv.ParseFloat(s[:n], 64)
+		if err != nil || math.Float64bits(v) != math.Float64bits(want) {
+			t.Errorf("exact(%q) = %v of %q, want %v (%v)", s, v, s[:n], want, err)
 		}
 	})
 }

@@ -23,9 +23,7 @@ func (d *Decoder) senmlJSON(payload []byte) {
 		var r record
 		s.expect('{', "a SenML record is an object")
 		for k := 0; s.next('}', k) && !d.res.Refused; k++ {
-			key := s.text()
-			s.expect(':', `":" is due after a label`)
-			s.field(&r, textLabel(key), i)
+			s.field(&r, s.label(), i)
 		}
 		if s.what == "" && !d.res.Refused {
 			d.resolve(&r, i, at)
@@ -38,6 +36,20 @@ func (d *Decoder) senmlJSON(payload []byte) {
 	if s.what != "" {
 		d.refuse(ingest.ReasonSyntax, i, s.at, s.what, nil)
 	}
+}
+
+// label reads a label and the colon after it. Nearly all are one letter, written
+// without white space or escapes.
+func (s *scanner) label() label {
+	if s.i+4 <= len(s.b) {
+		if b := s.b[s.i : s.i+4]; b[0] == '"' && b[1] != '"' && b[1] != '\\' && b[1] >= ' ' && b[2] == '"' && b[3] == ':' {
+			s.i += 4
+			return textLabel(b[1:2])
+		}
+	}
+	key := s.text()
+	s.expect(':', `":" is due after a label`)
+	return textLabel(key)
 }
 
 // field reads the value of a label into r.
@@ -131,24 +143,25 @@ func (s *scanner) end() {
 func (s *scanner) text() []byte {
 	s.expect('"', "a string is due")
 	start, escaped := s.i, false
-	for ; s.i < len(s.b); s.i++ {
-		switch c := s.b[s.i]; {
+	b := s.b
+	for i := start; i < len(b); i++ {
+		switch c := b[i]; {
 		case c == '"':
-			raw := s.b[start:s.i:s.i]
-			s.i++
+			s.i = i + 1
 			if escaped {
-				return s.unescape(raw)
+				return s.unescape(b[start:i:i])
 			}
-			return raw
+			return b[start:i:i]
 		case c == '\\':
 			escaped = true
-			s.i++ // whatever follows is not a closing quote
+			i++ // whatever follows is not a closing quote
 		case c < ' ':
+			s.i = i
 			s.fail("control character in a string")
 			return nil
 		}
 	}
-	s.i = len(s.b)
+	s.i = len(b)
 	s.fail("string has no end")
 	return nil
 }
@@ -233,10 +246,12 @@ func (s *scanner) number() (float64, ingest.Reason) {
 		return 0, ingest.ReasonNotNumber
 	}
 	start := s.i
-	for ; s.i < len(s.b); s.i++ {
-		if c := s.b[s.i]; c == ',' || c == ']' || c == '}' || c <= ' ' {
-			break
-		}
+	if v, n := exact(s.b[start:]); n > 0 && start+n < len(s.b) && ends(s.b[start+n]) {
+		s.i += n
+		return v, ingest.ReasonNone
+	}
+	for s.i < len(s.b) && !ends(s.b[s.i]) {
+		s.i++
 	}
 	token := s.b[start:s.i]
 	switch string(token) {
@@ -250,6 +265,9 @@ func (s *scanner) number() (float64, ingest.Reason) {
 	}
 	return v, reason
 }
+
+// ends tells whether c ends a number.
+func ends(c byte) bool { return c == ',' || c == ']' || c == '}' || c <= ' ' }
 
 // skip passes over any value.
 func (s *scanner) skip(depth int) {
