@@ -27,6 +27,7 @@ type Set struct {
 type program struct {
 	Rule
 	compiled
+	deadband float64 // in the unit of what is compared
 	domain   Domain
 	text     template
 	unit     string
@@ -56,13 +57,13 @@ func Compile(rules []Rule, names []Name) (*Set, []Fault) {
 			add("name", &exprFault{0, fmt.Sprintf("rule %q is there twice", r.Name), "give it another name"})
 		}
 		seen[r.Name] = true
-		p := program{Rule: *r}
+		p := program{Rule: *r, deadband: r.Deadband}
 		var fault *exprFault
 		p.compiled, fault = compileExpression(r.When, names, ix)
 		add("when", fault)
 		p.text, fault = parseTemplate(r.Text, names, ix)
 		add("text", fault)
-		for _, f := range p.checkPlain(fault == nil) {
+		for _, f := range p.checkPlain(fault == nil, names) {
 			add(f.field, &f.exprFault)
 		}
 		p.settle(names)
@@ -80,7 +81,7 @@ type fieldFault struct {
 }
 
 // checkPlain checks the fields that are no expressions.
-func (p *program) checkPlain(compiles bool) (faults []fieldFault) {
+func (p *program) checkPlain(compiles bool, names []Name) (faults []fieldFault) {
 	add := func(field, message, hint string) {
 		faults = append(faults, fieldFault{field, exprFault{0, message, hint}})
 	}
@@ -98,13 +99,42 @@ func (p *program) checkPlain(compiles bool) (faults []fieldFault) {
 		add("deadband", "deadband is not a number of zero or more", "give it in the unit of the quantity that is compared")
 	case p.Deadband > 0 && compiles && p.truth != nil && !p.orders:
 		add("deadband", "deadband without a comparison to which it applies", "compare with <, <=, > or >=, or drop it")
+	case p.truth != nil && p.DeadbandUnit != "":
+		if message, hint := p.convertDeadband(); message != "" {
+			add("deadband", message, hint)
+		}
 	}
 	for _, ph := range p.SuppressIn {
 		if ph == monitor.PhaseUnknown || ph >= monitor.NumPhases {
 			add("suppress_in", "an unknown phase suppresses nothing", "name a phase such as off or cranking")
 		}
+		for _, n := range p.need {
+			if n.text != "" && n.text == ph.String() && names[n.slot].Name == "phase" {
+				add("suppress_in", "suppressed in phase "+n.text+", the only one in which the rule can be true", "correct the expression or the list")
+			}
+		}
 	}
 	return faults
+}
+
+// convertDeadband converts the deadband to the unit of what is compared, which
+// must be the same in every comparison.
+func (p *program) convertDeadband() (message, hint string) {
+	for _, m := range p.ordered {
+		if m != p.ordered[0] || m.plain() {
+			return "deadband with a unit, but not every comparison is in a unit of its own", "write it without unit: it is then in the unit of the quantity"
+		}
+	}
+	if len(p.ordered) == 0 {
+		return "", ""
+	}
+	m := p.ordered[0].difference()
+	u, err := unitAs(p.DeadbandUnit, m.dimension, m.rate)
+	if err != nil {
+		return fmt.Sprintf("deadband %g %s, compared is %s", p.Deadband, p.DeadbandUnit, p.ordered[0]), "write " + m.wants()
+	}
+	p.deadband = round15(p.Deadband * u.Scale / m.scale)
+	return "", ""
 }
 
 // settle derives what a step needs from the compiled parts.

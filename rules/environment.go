@@ -35,8 +35,10 @@ func (t Type) String() string {
 type Name struct {
 	Name      string         // identifiers joined by dots
 	Type      Type           //
-	Unit      string         // of a number as rules see it; "" = a plain number, or SI when Dimension is invalid
-	Dimension unit.Dimension // of a number; Invalid with no Unit = whatever the channel measures, in SI
+	Unit      string         // of a number as rules see it; "" = a plain number
+	Dimension unit.Dimension // of a number; Invalid = its unit does not convert
+	Rate      bool           // of a number: it is per second
+	Low, High float64        // between which a number lies; equal = not known
 	Values    []string       // all values that a text can have
 	Daemon    bool           // says how the daemon does, not the engine: known without a scan
 }
@@ -90,6 +92,13 @@ func NewFrame(names []Name) Frame {
 	return f
 }
 
+// Channel is a channel as rules see it: in SI, a gauge pressure made absolute.
+type Channel struct {
+	ID        string
+	Dimension unit.Dimension
+	Low, High float64 // of its range, SI; equal = not known
+}
+
 // StandardNames gives the environment of a rig with these channels and EGT
 // bands, in a fixed order:
 //
@@ -102,18 +111,18 @@ func NewFrame(names []Name) Frame {
 //	sources_lost data_age_s clock_skew_s
 //	channel.<id> quality.<id> usable.<id>                  SI value, quality, may be used
 //	egt.<band>.over .exceeded .elapsed_s .remaining_s
-func StandardNames(channels, bands []string) []Name {
+func StandardNames(channels []Channel, bands []string) []Name {
 	var names []Name
 	for q := range monitor.NumQuantities {
 		info := q.Info()
-		u, err := unit.Parse(info.Unit)
-		if err != nil {
-			u = unit.Unit{} // a unit without conversions, such as rpm/s
+		u, rate, ok := parseWritten(info.Unit)
+		if !ok {
+			u = unit.Unit{} // a unit without conversions, such as J/(kg K)
 		}
 		if q == monitor.EGTSpread {
 			u = u.Difference()
 		}
-		names = append(names, Name{Name: info.Name, Type: Number, Unit: info.Unit, Dimension: u.Dimension})
+		names = append(names, Name{Name: info.Name, Type: Number, Unit: info.Unit, Dimension: u.Dimension, Rate: rate})
 	}
 	var states, phases, sources, qualities []string
 	for s := monitor.NoFlow; s <= monitor.Choked; s++ {
@@ -144,9 +153,14 @@ func StandardNames(channels, bands []string) []Name {
 		daemon(flag("health.sources")), daemon(count("sources_lost")),
 		daemon(seconds("data_age_s")), daemon(seconds("clock_skew_s")),
 	)
-	for _, id := range channels {
+	for i := range channels {
+		ch := &channels[i]
+		id, name := ch.ID, ch.Dimension.SI().Name
+		if ch.Dimension == unit.Ratio {
+			name = ""
+		}
 		names = append(names,
-			Name{Name: "channel." + id, Type: Number},
+			Name{Name: "channel." + id, Type: Number, Unit: name, Dimension: ch.Dimension, Low: ch.Low, High: ch.High},
 			Name{Name: "quality." + id, Type: Text, Values: slices.Clip(qualities)},
 			flag("usable."+id))
 	}

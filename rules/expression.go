@@ -10,6 +10,8 @@ import (
 	"github.com/expr-lang/expr/ast"
 	"github.com/expr-lang/expr/file"
 	"github.com/expr-lang/expr/parser"
+
+	"throatwatch/monitor/unit"
 )
 
 // maxExpression bounds an expression, bytes, so that no rule file can make the
@@ -35,15 +37,31 @@ type value struct {
 	fixed  bool    // a number or text that is written down
 	n      float64 // the number
 	s      string  // the text
+
+	measure   measure
+	written   *written // unit of a number that has not met another yet
+	bounded   bool     // the number lies between low and high
+	low, high float64
+	need      []need // of a condition: what it needs to be true
+}
+
+// need is something without which a condition cannot be true.
+type need struct {
+	slot      int
+	text      string  // of a text: what it has to be
+	low, high float64 // of a number: where it has to lie
+	open      bool    // and not at the ends
 }
 
 // compiled is an expression that can be judged.
 type compiled struct {
 	truth   boolFunc
-	reads   []int // slots, in the order of the expression
-	orders  bool  // has an ordering comparison, to which a deadband applies
-	subject int   // slot of the number that is compared first, -1 when there is none
-	falling bool  // the rule becomes true as the subject falls
+	reads   []int     // slots, in the order of the expression
+	orders  bool      // has an ordering comparison, to which a deadband applies
+	subject int       // slot of the number that is compared first, -1 when there is none
+	falling bool      // the rule becomes true as the subject falls
+	ordered []measure // what the ordering comparisons compare
+	need    []need
 }
 
 // exprFault is what stops a compilation.
@@ -58,13 +76,14 @@ type compiler struct {
 	src   string
 	names []Name
 	index index
+	units map[int]written // by the character at which the number begins
 	out   compiled
 }
 
 // compileExpression parses an expression, refuses every construct that is not
 // listed here, and compiles it:
 //
-//	names, dotted names, numbers, "texts", true, false, parentheses
+//	names, dotted names, numbers, numbers with a unit, "texts", true, false, parentheses
 //	+ - * /   < <= > >= == !=   and or not (&& || !)   condition ? a : b
 //	abs(x)  min(x, y …)  max(x, y …)  known(name)
 //
@@ -72,30 +91,41 @@ type compiler struct {
 // Kleene's logic: false and x is false, true or x is true; and known(name) is
 // always known. A quotient by zero and what overflows is unknown.
 func compileExpression(src string, names []Name, ix index) (compiled, *exprFault) {
+	out, v, at, fault := compileValue(src, names, ix)
+	switch {
+	case fault != nil:
+		return out, fault
+	case v.typ != Bool:
+		return out, &exprFault{at, "the expression gives " + v.typ.String() + ", wanted is true or false", "compare it with a limit, as in x > 5"}
+	}
+	out.truth, out.need = v.truth, v.need
+	return out, nil
+}
+
+// compileValue compiles an expression of any type, which begins at byte at.
+func compileValue(src string, names []Name, ix index) (out compiled, v value, at int, fault *exprFault) {
 	c := &compiler{src: src, names: names, index: ix, out: compiled{subject: -1}}
 	switch {
 	case strings.TrimSpace(src) == "":
-		return c.out, &exprFault{0, "no expression", `write a condition, such as choke_armed and choke_state != "choked"`}
+		return c.out, v, 0, &exprFault{0, "no expression", `write a condition, such as choke_armed and choke_state != "choked"`}
 	case len(src) > maxExpression:
-		return c.out, &exprFault{maxExpression, fmt.Sprintf("expression longer than %d bytes", maxExpression), "split it into several rules"}
+		return c.out, v, 0, &exprFault{maxExpression, fmt.Sprintf("expression longer than %d bytes", maxExpression), "split it into several rules"}
 	}
-	tree, err := parser.Parse(src)
+	plain, units, fault := takeUnits(src)
+	if fault != nil {
+		return c.out, v, 0, fault
+	}
+	c.units = units
+	tree, err := parser.Parse(plain)
 	if err != nil {
 		at, message := 0, err.Error()
 		if fe, ok := errors.AsType[*file.Error](err); ok {
 			at, message = c.byteOffset(fe.From), plainSyntax(fe.Message)
 		}
-		return c.out, &exprFault{at, message, "comparisons are joined by and, or, not; texts stand in double quotes"}
+		return c.out, v, 0, &exprFault{at, message, "comparisons are joined by and, or, not; texts stand in double quotes"}
 	}
-	v, fault := c.node(tree.Node, 1)
-	if fault != nil {
-		return c.out, fault
-	}
-	if v.typ != Bool {
-		return c.out, &exprFault{c.start(tree.Node), "the expression gives " + v.typ.String() + ", wanted is true or false", "compare it with a limit, as in x > 5"}
-	}
-	c.out.truth = v.truth
-	return c.out, nil
+	v, fault = c.node(tree.Node, 1)
+	return c.out, v, c.start(tree.Node), fault
 }
 
 // plainSyntax turns the parser's name of a token into words.
@@ -157,9 +187,9 @@ const allowed = "use names, numbers, texts, + - * /, comparisons, and or not, a 
 func (c *compiler) node(n ast.Node, sign float64) (value, *exprFault) {
 	switch n := n.(type) {
 	case *ast.IntegerNode:
-		return fixedNumber(float64(n.Value)), nil
+		return c.numberNode(n, float64(n.Value)), nil
 	case *ast.FloatNode:
-		return fixedNumber(n.Value), nil
+		return c.numberNode(n, n.Value), nil
 	case *ast.StringNode:
 		s := n.Value
 		return value{typ: Text, fixed: true, s: s, text: func(*Frame) string { return s }}, nil
@@ -187,8 +217,18 @@ func (c *compiler) node(n ast.Node, sign float64) (value, *exprFault) {
 	return c.fault(n, allowed, "this construct is not allowed in a rule")
 }
 
-func fixedNumber(v float64) value {
-	return value{typ: Number, fixed: true, n: v, number: func(*Frame) float64 { return v }}
+// numberNode gives a number that is written down, with its unit.
+func (c *compiler) numberNode(n ast.Node, number float64) value {
+	v := fixedNumber(number)
+	if u, ok := c.units[n.Location().From]; ok {
+		v.written = &u
+	}
+	return v
+}
+
+func fixedNumber(n float64) (v value) {
+	v.set(n)
+	return v
 }
 
 // dotted gives the name that a node spells.
@@ -231,9 +271,12 @@ func (c *compiler) nameNode(n ast.Node) (value, *exprFault) {
 	if fault != nil {
 		return value{}, fault
 	}
-	v := value{typ: c.names[slot].Type, name: slot, isName: true}
+	name := &c.names[slot]
+	v := value{typ: name.Type, name: slot, isName: true}
 	switch v.typ {
 	case Number:
+		v.measure = name.measure()
+		v.bounded, v.low, v.high = name.Low < name.High, name.Low, name.High
 		v.number = func(f *Frame) float64 { return f.Numbers[slot] }
 	case Bool:
 		v.truth = func(f *Frame, _ float64) Tri { return f.Bools[slot] }
@@ -266,10 +309,17 @@ func (c *compiler) unary(n *ast.UnaryNode, sign float64) (value, *exprFault) {
 			return v, fault
 		}
 		if v.fixed {
-			return fixedNumber(-v.n), nil
+			w := v.written
+			v = fixedNumber(-v.n)
+			v.written = w
+			return v, nil
 		}
-		a := v.number
-		return value{typ: Number, number: func(f *Frame) float64 { return -a(f) }}, nil
+		a, m := v.number, v.measure
+		v = value{typ: Number, number: func(f *Frame) float64 { return -a(f) }, bounded: v.bounded, low: -v.high, high: -v.low}
+		if m.dimension != unit.Temperature {
+			v.measure = m
+		}
+		return v, nil
 	}
 	return c.fault(n, allowed, "operator %s is not allowed in a rule", n.Operator)
 }
@@ -297,7 +347,10 @@ func (c *compiler) binary(n *ast.BinaryNode, sign float64) (value, *exprFault) {
 		if n.Operator == "or" || n.Operator == "||" {
 			return value{typ: Bool, truth: or(l.truth, r.truth)}, nil
 		}
-		return value{typ: Bool, truth: and(l.truth, r.truth)}, nil
+		if fault := c.contradiction(n.Right, l.need, r.need); fault != nil {
+			return value{}, fault
+		}
+		return value{typ: Bool, truth: and(l.truth, r.truth), need: append(slices.Clip(l.need), r.need...)}, nil
 	case "+", "-", "*", "/", "<", "<=", ">", ">=":
 		l, fault := c.want(n.Left, Number, 0, n.Operator)
 		if fault != nil {
@@ -307,15 +360,34 @@ func (c *compiler) binary(n *ast.BinaryNode, sign float64) (value, *exprFault) {
 		if fault != nil {
 			return value{}, fault
 		}
+		lo, ro := operand{&l, n.Left}, operand{&r, n.Right}
 		switch n.Operator {
-		case "<", "<=":
-			c.watch(l, r, sign >= 0)
-			return value{typ: Bool, truth: less(l, r, n.Operator == "<=", sign)}, nil
-		case ">", ">=":
-			c.watch(l, r, sign < 0)
-			return value{typ: Bool, truth: less(r, l, n.Operator == ">=", sign)}, nil
+		case "+", "-":
+			return c.sum(n.Operator, lo, ro)
+		case "*", "/":
+			return c.product(n.Operator, lo, ro)
 		}
-		return arithmetic(n.Operator, l.number, r.number), nil
+		_, fault = c.meet(lo, ro)
+		if fault == nil {
+			fault = c.reach(lo, ro)
+		}
+		if fault != nil {
+			return value{}, fault
+		}
+		m := l.measure
+		if m.plain() {
+			m = r.measure
+		}
+		c.out.ordered = append(c.out.ordered, m)
+		v := value{typ: Bool, need: needs(n.Operator, &l, &r)}
+		if orEqual := len(n.Operator) == 2; n.Operator[0] == '<' {
+			c.watch(l, r, sign >= 0)
+			v.truth = less(l, r, orEqual, sign)
+		} else {
+			c.watch(l, r, sign < 0)
+			v.truth = less(r, l, orEqual, sign)
+		}
+		return v, nil
 	case "==", "!=":
 		return c.equality(n)
 	}
@@ -414,8 +486,16 @@ func (c *compiler) equality(n *ast.BinaryNode) (value, *exprFault) {
 	want := TriOf(n.Operator == "==")
 	switch l.typ {
 	case Number:
+		lo, ro := operand{&l, n.Left}, operand{&r, n.Right}
+		_, fault := c.meet(lo, ro)
+		if fault == nil {
+			fault = c.reach(lo, ro)
+		}
+		if fault != nil {
+			return value{}, fault
+		}
 		a, b := l.number, r.number
-		return value{typ: Bool, truth: func(f *Frame, _ float64) Tri {
+		return value{typ: Bool, need: needs(n.Operator, &l, &r), truth: func(f *Frame, _ float64) Tri {
 			x, y := a(f), b(f)
 			if x-x != 0 || y-y != 0 {
 				return Unknown
@@ -434,7 +514,7 @@ func (c *compiler) equality(n *ast.BinaryNode) (value, *exprFault) {
 		}
 	}
 	a, b := l.text, r.text
-	return value{typ: Bool, truth: func(f *Frame, _ float64) Tri {
+	return value{typ: Bool, need: needs(n.Operator, &l, &r), truth: func(f *Frame, _ float64) Tri {
 		x, y := a(f), b(f)
 		if x == "" || y == "" {
 			return Unknown
@@ -477,6 +557,9 @@ func (c *compiler) conditional(n *ast.ConditionalNode, sign float64) (value, *ex
 	v := value{typ: l.typ}
 	switch l.typ {
 	case Number:
+		if v.measure, fault = c.meet(operand{&l, n.Exp1}, operand{&r, n.Exp2}); fault != nil {
+			return value{}, fault
+		}
 		a, b := l.number, r.number
 		v.number = func(f *Frame) float64 {
 			switch which(f, 0) {
@@ -537,17 +620,41 @@ func (c *compiler) call(n ast.Node, name string, args []ast.Node) (value, *exprF
 		if name != "abs" && len(args) < 2 {
 			return c.fault(n, "as in "+name+"(x, y)", "%s takes two numbers or more", name)
 		}
-		of := make([]numberFunc, len(args))
-		for i, arg := range args {
-			v, fault := c.want(arg, Number, 0, name)
-			if fault != nil {
-				return value{}, fault
-			}
-			of[i] = v.number
-		}
-		return value{typ: Number, number: function(name, of)}, nil
+		return c.function(name, args)
 	}
 	return c.fault(n, allowed, "function %s is not allowed in a rule", name)
+}
+
+// function compiles abs, min or max. The arguments of min and max measure the same.
+func (c *compiler) function(name string, args []ast.Node) (value, *exprFault) {
+	all := make([]value, len(args))
+	for i, arg := range args {
+		var fault *exprFault
+		if all[i], fault = c.want(arg, Number, 0, name); fault != nil {
+			return value{}, fault
+		}
+	}
+	first := max(0, slices.IndexFunc(all, func(v value) bool { return v.written == nil && !v.measure.plain() }))
+	measured := true
+	for i := range all {
+		if i == first {
+			continue
+		}
+		m, fault := c.meet(operand{&all[first], args[first]}, operand{&all[i], args[i]})
+		if fault != nil {
+			return value{}, fault
+		}
+		measured = measured && !m.plain()
+	}
+	var m measure
+	if measured {
+		m = all[first].measure
+	}
+	of := make([]numberFunc, len(all))
+	for i := range all {
+		of[i] = all[i].number
+	}
+	return value{typ: Number, number: function(name, of), measure: m}, nil
 }
 
 func known(t Type, slot int) boolFunc {

@@ -21,17 +21,18 @@ const (
 
 // Rule is one rule as its author wrote it, with the times in ns.
 type Rule struct {
-	Name       string // [a-z][a-z0-9_]*
-	When       string // expression
-	Priority   Priority
-	OnDelay    int64
-	OffDelay   int64
-	Deadband   float64 // a comparison that raised returns only this far beyond, in the unit of the quantity
-	Latching   bool
-	SuppressIn []monitor.Phase // suppressed by design; an unknown phase suppresses nothing
-	Title      string
-	Text       string // what happened, with {name:unit.digits} places
-	Caution    string // what it means and what to watch
-	Response   string // which facility procedure applies
-	Group      string // rules of one cause: the others are listed under the first
+	Name         string // [a-z][a-z0-9_]*
+	When         string // expression
+	Priority     Priority
+	OnDelay      int64
+	OffDelay     int64
+	Deadband     float64 // a comparison that raised returns only this far beyond, in DeadbandUnit
+	DeadbandUnit string  // "" = the unit of the quantity that is compared
+	Latching     bool
+	SuppressIn   []monitor.Phase // suppressed by design; an unknown phase suppresses nothing
+	Title        string
+	Text         string // what happened, with {name:unit.digits} places
+	Caution      string // what it means and what to watch
+	Response     string // which facility procedure applies
+	Group        string // rules of one cause: the others are listed under the first
 }

@@ -165,7 +165,7 @@ func TestStepAllocations(t *testing.T) {
 
 func BenchmarkCompile(b *testing.B) {
 	rules := testDefault()
-	names := StandardNames([]string{"p_oil"}, []string{"run_1", "run_2", "start"})
+	names := StandardNames(testChannels()[:1], []string{"run_1", "run_2", "start"})
 	b.ReportAllocs()
 	for b.Loop() {
 		if set, faults := Compile(rules, names); set == nil {

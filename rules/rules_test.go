@@ -13,6 +13,7 @@ import (
 
 	"throatwatch/monitor"
 	"throatwatch/monitor/egt"
+	"throatwatch/monitor/unit"
 	"throatwatch/rules/alarm"
 )
 
@@ -21,7 +22,7 @@ func simple(name, when string) Rule {
 }
 
 func TestStandardNames(t *testing.T) {
-	names := StandardNames([]string{"p_oil"}, []string{"run_1"})
+	names := StandardNames(testChannels()[:1], []string{"run_1"})
 	if want := int(monitor.NumQuantities) + 21 + 3 + 4; len(names) != want {
 		t.Errorf("%d names, want %d", len(names), want)
 	}
@@ -30,7 +31,7 @@ func TestStandardNames(t *testing.T) {
 		t.Error("a name is there twice")
 	}
 	for _, want := range []Name{
-		{Name: "channel.p_oil", Type: Number},
+		{Name: "channel.p_oil", Type: Number, Unit: "Pa", Dimension: unit.Pressure, High: 900e3},
 		{Name: "usable.p_oil", Type: Bool},
 		{Name: "egt.run_1.exceeded", Type: Bool},
 		{Name: "health.recording", Type: Bool, Daemon: true},
@@ -40,7 +41,7 @@ func TestStandardNames(t *testing.T) {
 			t.Errorf("%s: %+v", want.Name, names[slot])
 		}
 	}
-	again := StandardNames([]string{"p_oil"}, []string{"run_1"})
+	again := StandardNames(testChannels()[:1], []string{"run_1"})
 	if !reflect.DeepEqual(names, again) {
 		t.Error("the order is not fixed")
 	}
@@ -112,7 +113,8 @@ func TestTemplates(t *testing.T) {
 		{"{mass_flow_kg_s:lb/s.3} {back_pressure_pa:kPa.2} {back_pressure_pa:psi.3}", "15.984 lb/s 98.70 kPa 14.315 psi"},
 		{"{npr:.2} {npr}", "1.86 1.8644"},
 		{"{egt.run_1.elapsed_s:s.1} {egt.run_1.elapsed_s:ms.0}", "3.2 s 3240 ms"},
-		{"{channel.p_oil:kPa.0} {channel.p_oil}", "350 kPa 350000"},
+		{"{channel.p_oil:kPa.0} {channel.p_oil}", "350 kPa 350000 Pa"},
+		{"{speed_rate_rpm_s:rpm/min.0} {speed_rate_rpm_s:.1}", "740 rpm/min 12.3 rpm/s"},
 		{"{choke_armed} {egt.run_1.over} {lit} {choke_state} {phase}", "yes no unknown no flow unknown"},
 		{"{flow_balance_kg_s:.1}", "(unknown)"},
 		{"{choke_margin_pa:.1}|{choke_margin_pa:.2}", "0.0 Pa|-0.04 Pa"}, // no minus before a zero
@@ -149,7 +151,8 @@ func TestRefusedTemplates(t *testing.T) {
 		{"{npr:kPa.1}", 5, "pressure"},
 		{"{egt_indicated_k:kPa.1}", 17, "pressure"},
 		{"{channel.p_oil:furlong.1}", 15, "unknown unit"},
-		{"{speed_rate_rpm_s:1/s.1}", 18, "does not convert"},
+		{"{gas_constant_j_kg_k:kJ.1}", 21, "does not convert"},
+		{"{speed_rate_rpm_s:K/s.1}", 18, "unknown unit"},
 		{"{lit:.1}", 5, "has no unit"},
 	}
 	for _, tt := range tests {

@@ -49,7 +49,7 @@ type stand struct {
 
 func newStand(tb testing.TB, rules []Rule) *stand {
 	tb.Helper()
-	names := StandardNames([]string{"p_oil", "vibration"}, []string{"run_1", "run_2", "start"})
+	names := StandardNames(testChannels(), []string{"run_1", "run_2", "start"})
 	set, faults := Compile(rules, names)
 	for _, f := range faults {
 		tb.Errorf("rule %q, %s: %s; %s", rules[f.Rule].Name, f.Field, f.Message, f.Hint)

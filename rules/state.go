@@ -118,7 +118,7 @@ func (s *Set) Step(st *State, t int64, run string, phase monitor.Phase, d Domain
 		in := &st.Instances[i]
 		e := 0.0
 		if in.Active {
-			e = p.Deadband
+			e = p.deadband
 		}
 		v := p.truth(f, e)
 		in.condition(&p.Rule, v, t)

@@ -95,17 +95,12 @@ func parsePlace(src string, names []Name, ix index) (part, *exprFault) {
 		p.from, p.to = unit.Unit{Scale: 1}, unit.Unit{Scale: 1}
 		return p, nil
 	}
-	var err error
-	switch {
-	case n.Dimension != unit.Invalid:
-		p.to, err = unit.ParseAs(unitName, n.Dimension)
-		p.from, _ = unit.ParseAs(n.Unit, n.Dimension)
-	case n.Unit == "": // a channel: SI of whatever the author says that it measures
-		p.to, err = unit.Parse(unitName)
-		p.from = p.to.Dimension.SI()
-	default:
+	if n.Dimension == unit.Invalid {
 		return part{}, &exprFault{at, fmt.Sprintf("%s is in %s, which does not convert", name, n.Unit), "write {" + name + ":.1}"}
 	}
+	var err error
+	p.to, err = unitAs(unitName, n.Dimension, n.Rate)
+	p.from, _ = unitAs(n.Unit, n.Dimension, n.Rate)
 	if err != nil {
 		return part{}, &exprFault{at, err.Error(), "write unit.digits, as in degC.0 or .1"}
 	}

@@ -5,6 +5,7 @@ import (
 	"strings"
 
 	"throatwatch/monitor"
+	"throatwatch/monitor/calib"
 	"throatwatch/monitor/egt"
 	"throatwatch/rules"
 )
@@ -76,11 +77,23 @@ var bandSources = map[string]source{
 	"over": fromOver, "exceeded": fromExceeded, "elapsed_s": fromElapsed, "remaining_s": fromRemaining,
 }
 
-// names gives the environment of a rig's rules.
-func names(cfg *Config) []rules.Name {
-	channels := make([]string, len(cfg.Compute.Channels))
+// barometers are the station pressures between which a rig lies, Pa: 4 km high
+// [ISO 2533 table 1], and the highest ever at sea level (from memory).
+const (
+	leastBarometer   = 60e3
+	highestBarometer = 108.5e3
+)
+
+// Names gives the environment of a rig's rules. Rules see a gauge pressure made
+// absolute, so its range is that of the channel above the barometer.
+func Names(cfg *Config) []rules.Name {
+	channels := make([]rules.Channel, len(cfg.Compute.Channels))
 	for i := range channels {
-		channels[i] = cfg.Compute.Channels[i].ID
+		c := &cfg.Compute.Channels[i]
+		channels[i] = rules.Channel{ID: c.ID, Dimension: c.Unit.Dimension, Low: c.Low, High: c.High}
+		if c.Reference == calib.Gauge {
+			channels[i].Low, channels[i].High = max(0, c.Low+leastBarometer), c.High+highestBarometer
+		}
 	}
 	bands := make([]string, len(cfg.Compute.EGT.Bands))
 	for i := range bands {

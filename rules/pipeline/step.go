@@ -170,7 +170,7 @@ func (m *Machine) load(bundle []byte) error {
 	if err != nil {
 		return fmt.Errorf("pipeline: %w", err)
 	}
-	names := names(&cfg)
+	names := Names(&cfg)
 	set, faults := rules.Compile(cfg.Rules, names)
 	if len(faults) > 0 {
 		return fmt.Errorf("pipeline: rule %q: %s", cfg.Rules[faults[0].Rule].Name, faults[0].Message)

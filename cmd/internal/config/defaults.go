@@ -63,7 +63,7 @@ func render(list []rules.Rule) string {
 		span("on_delay", r.OnDelay)
 		span("off_delay", r.OffDelay)
 		if r.Deadband != 0 {
-			write("deadband", strconv.FormatFloat(r.Deadband, 'g', -1, 64))
+			write("deadband", strings.TrimSpace(strconv.FormatFloat(r.Deadband, 'g', -1, 64)+" "+r.DeadbandUnit))
 		}
 		if r.Latching {
 			write("latching", "true")

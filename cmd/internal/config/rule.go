@@ -4,7 +4,6 @@ import (
 	"errors"
 	"fmt"
 	"math"
-	"regexp"
 	"slices"
 	"strconv"
 	"strings"
@@ -12,6 +11,7 @@ import (
 	"throatwatch/monitor"
 	"throatwatch/monitor/calib"
 	"throatwatch/rules"
+	"throatwatch/rules/pipeline"
 )
 
 // rule is a rule with the places of its fields.
@@ -82,7 +82,7 @@ func readRule(n node) rule {
 	out.Priority = f.priority()
 	out.OnDelay = f.get("on_delay").duration(0)
 	out.OffDelay = f.get("off_delay").duration(0)
-	out.Deadband = f.get("deadband").number(0, notNegative)
+	out.Deadband, out.DeadbandUnit = f.get("deadband").numberWithUnit(notNegative)
 	out.Latching = f.get("latching").flag(false)
 	out.SuppressIn = readPhases(f.get("suppress_in"))
 	out.Title = f.get("title").prose(strings.ReplaceAll(out.Name, "_", " "))
@@ -224,19 +224,14 @@ func (n node) prose(fallback string) string {
 // compileRules compiles all rules and notes their faults where they are
 // written. It marks the channels that a rule judges.
 func (r *rig) compileRules() {
-	var bands []string
-	for i := range r.cfg.Compute.EGT.Bands {
-		bands = append(bands, r.cfg.Compute.EGT.Bands[i].Name)
-	}
 	for i := range r.rules {
 		one := &r.rules[i]
 		r.cfg.Rules = append(r.cfg.Rules, one.Rule)
 		for _, key := range []string{"title", "text", "caution", "response"} {
 			one.at[key].checkText()
 		}
-		r.checkLevels(one)
 	}
-	set, faults := rules.Compile(r.cfg.Rules, rules.StandardNames(r.ids(), bands))
+	set, faults := rules.Compile(r.cfg.Rules, pipeline.Names(&r.cfg))
 	for _, f := range faults {
 		one := &r.rules[f.Rule]
 		place, ok := one.at[f.Field]
@@ -274,35 +269,6 @@ func (n node) checkText() {
 	}
 	line, col := n.inside(max(0, strings.Index(n.text(), bad.Words)))
 	n.faultAt(line, col, fmt.Sprintf("%q %s", bad.Words, bad.Why), bad.Hint)
-}
-
-// level finds comparisons of a channel with a number.
-var level = regexp.MustCompile(`channel\.([a-z][a-z0-9_]*)\s*(?:<=|>=|<|>)\s*([-+]?[0-9.]+(?:[eE][-+]?[0-9]+)?)`)
-
-// checkLevels refuses a comparison that a channel can never cross: rules see SI
-// values, and 12 for a limit of 12 mm/s would keep the alarm silent for ever.
-func (r *rig) checkLevels(one *rule) {
-	when := one.at["when"]
-	for _, m := range level.FindAllStringSubmatchIndex(when.text(), -1) {
-		i := r.index(when.text()[m[2]:m[3]])
-		v, err := strconv.ParseFloat(when.text()[m[4]:m[5]], 64)
-		if i < 0 || err != nil {
-			continue // package rules says so
-		}
-		s := r.spec(i)
-		low, high := s.Low, s.High
-		if s.Reference == calib.Gauge {
-			low, high = 0, high+seaPressure // rules see the absolute pressure
-		}
-		if v >= low && v <= high {
-			continue
-		}
-		line, col := when.inside(m[4])
-		si := s.Unit.Dimension.SI().Name
-		when.faultAt(line, col,
-			fmt.Sprintf("channel %q never comes to %g %s", r.channels[i].id, v, si),
-			fmt.Sprintf("rules see channels in SI: here %g to %g %s; limits: in the channel takes any unit", round12(low), round12(high), si))
-	}
 }
 
 // markRecordedOnly marks the channels that no station, reference and rule uses.

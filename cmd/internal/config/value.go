@@ -122,6 +122,28 @@ func (n node) number(fallback float64, bounds ...bound) float64 {
 	return v
 }
 
+// withUnit parts a number and the unit behind it.
+var withUnit = regexp.MustCompile(`^([-+0-9.]+(?:[eE][-+]?[0-9]+)?)\s*(.*)$`)
+
+// numberWithUnit reads a number and a unit that may follow it, which nobody has
+// looked at yet; 0 without a value or with a faulty one.
+func (n node) numberWithUnit(bounds ...bound) (float64, string) {
+	text := strings.TrimSpace(n.text())
+	m := withUnit.FindStringSubmatch(text)
+	if !n.is() || m == nil || m[2] == "" {
+		return n.number(0, bounds...), ""
+	}
+	v, err := strconv.ParseFloat(m[1], 64)
+	if err != nil || math.IsInf(v, 0) {
+		n.fault(fmt.Sprintf("%q is not a finite number", m[1]), "write a decimal number, and a unit")
+		return 0, ""
+	}
+	if !n.plain(text) || !n.keeps(v, bounds) {
+		return 0, ""
+	}
+	return v, m[2]
+}
+
 // integer reads a whole number.
 func (n node) integer(fallback, lo, hi int) int {
 	if !n.is() {
