@@ -147,6 +147,7 @@ type state struct {
 	gasFlow   float64 // nozzle
 	airFlow   float64 // bellmouth
 	fuelFlow  float64
+	far       float64 // fuel-air ratio, dry basis
 	bleed     float64 // share of the air blown off
 	bellmouth float64 // inlet total less bellmouth throat static
 	thrust    float64
@@ -162,6 +163,7 @@ type plant struct {
 	exit   *nozzle.Nozzle
 	throat float64 // m², as configured
 	fuel   gas.Fuel
+	day    Day
 	t      float64    // s since the first instant
 	phase  [4]float64 // of the slow wander of weather and governor
 
@@ -170,6 +172,7 @@ type plant struct {
 	flame     float64 // 0 to 1
 	fuelled   float64 // s with fuel on
 	richness  float64 // 0 to 1
+	rich      float64 // K, to which richness takes the EGT
 	metal     float64 // K, hot parts that heat the gas of a dead engine
 	wall      float64 // K, metal of the nozzle
 	cell      float64 // Pa, depression
@@ -181,10 +184,15 @@ type plant struct {
 const (
 	day     = 285.0    // K, ambient
 	weather = 100600.0 // Pa, barometer
+	humid   = 0.58     // relative humidity
+	// pickedUp is the part of the way to the temperature of the hot parts that the air
+	// of an engine that lost its flame at speed comes.
+	pickedUp = 0.25
 )
 
-func newPlant(c *compute.Config, rng *rand.Rand) (*plant, error) {
-	p := &plant{line: newLine(c), cfg: c, fuel: c.Fuel}
+func newPlant(c *compute.Config, d Day, rng *rand.Rand) (*plant, error) {
+	d.settle()
+	p := &plant{line: newLine(c), cfg: c, fuel: c.Fuel, day: d}
 	if p.fuel == (gas.Fuel{}) {
 		p.fuel = gas.Kerosene()
 	}
@@ -209,7 +217,10 @@ func newPlant(c *compute.Config, rng *rand.Rand) (*plant, error) {
 	if p.cellTop == 0 && c.Stations.ExitPlane >= 0 {
 		p.cellTop = 400
 	}
-	p.metal, p.wall = day, day
+	if d.Depression > 0 {
+		p.cellTop = d.Depression
+	}
+	p.metal, p.wall = d.Ambient, d.Ambient
 	p.surroundings()
 
 	// The state at 100 % scales what grows with power.
@@ -221,8 +232,8 @@ func newPlant(c *compute.Config, rng *rand.Rand) (*plant, error) {
 		return nil, err
 	}
 	p.gasTop, p.thrustTop = p.gasFlow, p.thrust
-	p.state = state{egt: day}
-	p.flame, p.wall = 0, day
+	p.state = state{egt: d.Ambient}
+	p.flame, p.wall = 0, d.Ambient
 	p.surroundings()
 	return p, p.gasPath()
 }
@@ -232,10 +243,10 @@ const longest = 0.02
 
 // advance moves the plant on by dt seconds with the settings of a segment; part is
 // how much of the segment is over, and from the demand before it.
-func (p *plant) advance(dt float64, s *segment, part, from float64) error {
-	p.demand = s.speed
-	if s.ramp {
-		p.demand = from + (s.speed-from)*part
+func (p *plant) advance(dt float64, s *Segment, part, from float64) error {
+	p.demand = s.Speed
+	if s.Ramp {
+		p.demand = from + (s.Speed-from)*part
 	}
 	n := math.Ceil(dt/longest - 1e-9)
 	for range int(n) {
@@ -246,21 +257,24 @@ func (p *plant) advance(dt float64, s *segment, part, from float64) error {
 }
 
 // step moves rotor, flame and metal on by dt seconds.
-func (p *plant) step(dt float64, s *segment) {
+func (p *plant) step(dt float64, s *Segment) {
 	p.t += dt
 	l := &p.line
 	steady := l.steadyEGT(p.n)
 	up := l.running(p.n)
 
 	// Fuel lights above 8 % speed after the spray has found the igniter.
-	if s.fuel && p.n > 0.08 {
+	if s.Fuel && !s.Quench && p.n > 0.08 {
 		p.fuelled += dt
 	} else {
 		p.fuelled = 0
 	}
 	p.lit = p.fuelled > 0.4
 	p.flame = lag(p.flame, mark(p.lit), dt, 0.4)
-	p.richness = lag(p.richness, mark(s.hot), dt, 0.5)
+	p.richness = lag(p.richness, mark(s.EGT > 0), dt, 0.5)
+	if s.EGT > 0 {
+		p.rich = s.EGT
+	}
 
 	// Rotor: the governor asks for a rate, acceleration and deceleration controls
 	// bound it by temperature, the fuel valve follows with a lag.
@@ -272,7 +286,7 @@ func (p *plant) step(dt float64, s *segment) {
 		accel := l.gain(p.n) * clamp(l.egtAccel-steady, 30, 130)
 		accel = up*accel + (1-up)*0.06
 		rate = clamp(rate, -l.gain(p.n)*150, accel)
-	case s.starter:
+	case s.Starter:
 		rate = clamp((0.16-p.n)/0.8, -0.03, 0.07)
 	default:
 		rate = -(p.n/7 + 0.008) * mark(p.n > 0)
@@ -286,7 +300,7 @@ func (p *plant) step(dt float64, s *segment) {
 	// Indicated EGT without the thermocouples' lag: what the turbine needs, what
 	// the acceleration takes, and what a start or too much fuel adds.
 	hot := steady + up*clamp(p.rate/l.gain(p.n), -160, 140) + (1-up)*110
-	hot += p.richness * max(0, l.egtOver-hot)
+	hot += p.richness * max(0, p.rich-hot)
 	if p.lit {
 		p.metal = lag(p.metal, hot-150, dt, 8)
 	} else {
@@ -296,9 +310,13 @@ func (p *plant) step(dt float64, s *segment) {
 		}
 		p.metal = lag(p.metal, p.ambient, dt, cooling)
 	}
-	p.egt = p.flame*hot + (1-p.flame)*p.metal
+	metal := p.metal
+	if s.Quench {
+		metal = p.ambient + pickedUp*(p.metal-p.ambient)
+	}
+	p.egt = p.flame*hot + (1-p.flame)*metal
 
-	p.bleed = lag(p.bleed, mark(s.bleed)*l.bleedShare(p.n), dt, 0.1)
+	p.bleed = lag(p.bleed, s.Bleed*l.bleedShare(p.n), dt, 0.1)
 	p.cell = lag(p.cell, p.cellTop*square(p.gasFlow/p.gasTop), dt, 0.3)
 	if m := p.cfg.Nozzle.MetalLag; m > 0 {
 		p.wall = lag(p.wall, p.t7, dt, float64(m)/1e9)
@@ -319,9 +337,9 @@ func (l *line) bleedShare(n float64) float64 {
 
 // surroundings sets weather and cell, which wander slowly.
 func (p *plant) surroundings() {
-	p.barometer = weather + 18*math.Sin(p.t/110+p.phase[0]) + 4*math.Sin(p.t/13+p.phase[1])
-	p.ambient = day + 0.4*math.Sin(p.t/170+p.phase[2])
-	p.humidity = 0.58 + 0.015*math.Sin(p.t/90+p.phase[3])
+	p.barometer = p.day.Barometer + 18*math.Sin(p.t/110+p.phase[0]) + 4*math.Sin(p.t/13+p.phase[1])
+	p.ambient = p.day.Ambient + 0.4*math.Sin(p.t/170+p.phase[2])
+	p.humidity = p.day.Humidity + 0.015*math.Sin(p.t/90+p.phase[3])
 	p.inletT = p.ambient + 0.3*math.Sin(p.t/40+p.phase[1])
 	p.back = p.barometer - p.cell
 	p.inletP = p.barometer
@@ -363,6 +381,7 @@ func (p *plant) gasPath() error {
 	}
 	p.gasFlow = r.MassFlow
 	p.static(&mix)
+	p.far = far
 	dry := p.gasFlow / (1 + far + war)
 	p.fuelFlow = dry * far
 	p.airFlow = dry * (1 + war) / (1 - p.bleed)

@@ -42,6 +42,12 @@ type Options struct {
 	Rate     float64 // packs per second of device time, 1 to 1000; 0 = 50
 	Speed    float64 // the test passes this many times faster than on an engine, 0.1 to 100; 0 = 1
 	Start    int64   // device time of the first pack, ns UTC
+
+	Plan    []Segment // instead of a scenario
+	Day     Day
+	Noise   float64  // of the readings, times what the rig file states; 0 = 1
+	Error   float64  // systematic error, times that of a good instrument; 0 = 1
+	Changes []Change // of what single channels measure
 }
 
 // Message is one MQTT message as the rig's data system publishes it.
@@ -67,7 +73,7 @@ type Rig struct {
 	plant    *plant
 	sensors  []sensor
 	groups   []group
-	plan     []segment
+	plan     []Segment
 	faults   []*active
 	rate     float64 // packs per second of the test
 	speed    float64 // seconds of the test per second of device time
@@ -82,7 +88,9 @@ type Rig struct {
 	gaps     *rand.Rand    // of samples that are missing
 	due      int64         // of the newest message
 	outbox   []held
+	changes  []change
 	sent     []bool
+	late     []bool
 	readings []decode.Reading
 }
 
@@ -129,14 +137,20 @@ func New(cfg pipeline.Config, o Options) (*Rig, error) {
 		link:  rand.New(rand.NewPCG(o.Seed, 2)),
 		gaps:  rand.New(rand.NewPCG(o.Seed, 3)),
 		sent:  make([]bool, len(c.Channels)),
+		late:  make([]bool, len(c.Channels)),
 	}
 	var err error
-	if r.plant, err = newPlant(c, r.noise); err != nil {
+	if err = o.Day.check(); err != nil {
+		return nil, err
+	}
+	if r.plant, err = newPlant(c, o.Day, r.noise); err != nil {
 		return nil, err
 	}
 	off := min(300, float64(c.Phase.OffAfter+cfg.Run.EndAfter)/1e9)
-	if r.plan, err = plan(o.Scenario, &r.plant.line, off); err != nil {
-		return nil, err
+	if r.plan = o.Plan; len(r.plan) == 0 {
+		if r.plan, err = plan(o.Scenario, &r.plant.line, off); err != nil {
+			return nil, err
+		}
 	}
 	r.total = total(r.plan)
 	hold := make([]int64, len(c.Channels))
@@ -146,7 +160,14 @@ func New(cfg pipeline.Config, o Options) (*Rig, error) {
 	if r.sensors, err = newSensors(c, o.Rate, hold, r.plant, r.noise); err != nil {
 		return nil, err
 	}
+	for i := range r.sensors {
+		r.sensors[i].sigma *= orOne(o.Noise)
+		r.sensors[i].offset *= orOne(o.Error)
+	}
 	r.groups = newGroups(cfg.Rig.ID, &cfg.Align)
+	if r.changes, err = fitChanges(c, o.Changes); err != nil {
+		return nil, err
+	}
 	for _, f := range o.Faults {
 		a, err := f.fit(c)
 		if err != nil {
@@ -218,7 +239,7 @@ func (r *Rig) Now() int64 { return r.start + int64(float64(r.now)/r.speed) }
 // Status tells how the test stands.
 func (r *Rig) Status() Status {
 	p := r.plant
-	return Status{Segment: r.plan[r.at].name, Elapsed: r.now, Total: r.total, Speed: p.n * p.max, NPR: p.npr, EGT: p.egt}
+	return Status{Segment: r.plan[r.at].Name, Elapsed: r.now, Total: r.total, Speed: p.n * p.max, NPR: p.npr, EGT: p.egt}
 }
 
 // Next takes the test to the next instant and appends the messages that are
@@ -245,23 +266,24 @@ func (r *Rig) Next(dst []Message) (msgs []Message, more bool) {
 func (r *Rig) advance(t time.Duration) {
 	dt := (t - r.now).Seconds()
 	r.now = t
-	for r.at < len(r.plan)-1 && t >= r.begun+seconds(r.plan[r.at].seconds) {
-		r.begun += seconds(r.plan[r.at].seconds)
+	for r.at < len(r.plan)-1 && t >= r.begun+seconds(r.plan[r.at].Seconds) {
+		r.begun += seconds(r.plan[r.at].Seconds)
 		r.at++
 	}
 	s := &r.plan[r.at]
 	from := 0.0
 	if r.at > 0 {
-		from = r.plan[r.at-1].speed
+		from = r.plan[r.at-1].Speed
 	}
 	if dt > 0 {
-		if err := r.plant.advance(dt, s, (t-r.begun).Seconds()/s.seconds, from); err != nil {
+		if err := r.plant.advance(dt, s, (t-r.begun).Seconds()/s.Seconds, from); err != nil {
 			// New has gone through the whole of the running line.
 			panic(err)
 		}
 	}
 	for i := range r.sensors {
-		r.sensors[i].follow(r.plant, dt, r.lags(i), r.heat(i))
+		s := &r.sensors[i]
+		s.follow(r.changed(i, s.input(r.plant, r.heat(i))), dt, r.lags(i))
 	}
 }
 
@@ -273,7 +295,7 @@ func (r *Rig) read() {
 		s := &r.sensors[i]
 		raw := s.read(r.noise.NormFloat64(), r.shift(i))
 		raw, r.sent[i] = r.replace(i, raw)
-		r.sent[i] = r.sent[i] && r.pack%s.every == 0
+		r.sent[i], r.late[i] = r.sent[i] && r.pack%s.every == 0, false
 		r.readings = append(r.readings, decode.Reading{Unit: s.unitName, Value: raw})
 	}
 }
@@ -334,6 +356,10 @@ func (r *Rig) publish(dst []Message, g *group) []Message {
 		case Huge:
 			huge = huge || f.count%25 == 1
 		}
+	}
+	for _, i := range g.channels { // for Truth
+		r.sent[i] = r.sent[i] && !silent && !malformed && !truncated
+		r.late[i] = hold > 0
 	}
 	if silent {
 		return dst

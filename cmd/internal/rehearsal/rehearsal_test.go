@@ -127,7 +127,7 @@ func TestWatched(t *testing.T) {
 				points        int
 			)
 			for i, s := range r.plan {
-				if s.name == "idle" || s.name == "steady" || strings.HasPrefix(s.name, "point") {
+				if s.Name == "idle" || s.Name == "steady" || strings.HasPrefix(s.Name, "point") {
 					balance[i] = nil
 				}
 			}
@@ -156,7 +156,7 @@ func TestWatched(t *testing.T) {
 				longest = max(longest, over)
 				// The second half of a segment at one speed is steady, thermocouples too.
 				_, level := balance[r.at]
-				if s := &r.plan[r.at]; level && r.now-r.begun > seconds(s.seconds/2) {
+				if s := &r.plan[r.at]; level && r.now-r.begun > seconds(s.Seconds/2) {
 					balance[r.at] = append(balance[r.at], p.V[monitor.FlowBalance]/p.V[monitor.MassFlow])
 				}
 			})
@@ -172,7 +172,7 @@ func TestWatched(t *testing.T) {
 					mean += v / float64(len(b))
 				}
 				if len(b) < 20 || !(math.Abs(mean) < 0.01) {
-					t.Errorf("%s: flow balance %.2f %% of %d points", r.plan[i].name, 100*mean, len(b))
+					t.Errorf("%s: flow balance %.2f %% of %d points", r.plan[i].Name, 100*mean, len(b))
 				}
 			}
 			for segment, want := range map[string]monitor.ChokeState{

@@ -22,40 +22,42 @@ func (s Scenario) String() string {
 	return "full"
 }
 
-// segment is a part of a test in which the console's settings do not change.
-type segment struct {
-	name    string
-	seconds float64
-	speed   float64 // demanded rotor speed, fraction of 100 %
-	starter bool
-	fuel    bool
-	ramp    bool // the demand moves in a straight line from the last one
-	bleed   bool // the surge bleed is open
-	hot     bool // over-fuelled: EGT is held above the lowest run limit
+// Segment is a part of a test in which the console's settings do not change. Speeds are
+// fractions of 100 %.
+type Segment struct {
+	Name    string
+	Seconds float64
+	Speed   float64 // demanded rotor speed
+	Starter bool
+	Fuel    bool
+	Ramp    bool    // the demand moves in a straight line from the last one
+	Quench  bool    // the flame goes out though fuel is on, or does not light
+	Bleed   float64 // how far the surge bleed is open; 1 takes the throat to 8 % below choking
+	EGT     float64 // K; over-fuelled so that the indicated EGT comes up to this; 0 = not
 }
 
 // plan gives the segments of a scenario for an engine's running line. Speeds are
 // set where something happens on that engine: just above and below choking,
 // where choke is armed, near the top. off is how many seconds of rest end a run.
-func plan(s Scenario, l *line, off float64) ([]segment, error) {
+func plan(s Scenario, l *line, off float64) ([]Segment, error) {
 	const top, most = 0.95, 1.0
 	armed := min(l.armed+0.01, top)
 	over := l.allowance + 3 // the thermocouples need about 2 s of it to get there
-	run := func(name string, seconds, speed float64) segment {
-		return segment{name: name, seconds: seconds, speed: speed, fuel: true}
+	run := func(name string, seconds, speed float64) Segment {
+		return Segment{Name: name, Seconds: seconds, Speed: speed, Fuel: true}
 	}
-	chop := func(seconds float64) segment {
+	chop := func(seconds float64) Segment {
 		// On a chop the temperature falls at once and the bleed opens, both of which
 		// take pressure from the throat, while the rotor's inertia holds the speed.
-		return segment{name: "throttle chop", seconds: seconds, speed: armed, fuel: true, bleed: true}
+		return Segment{Name: "throttle chop", Seconds: seconds, Speed: armed, Fuel: true, Bleed: 1}
 	}
-	rich := segment{name: "rich acceleration", seconds: over, speed: top, fuel: true, ramp: true, hot: true}
-	crank := segment{name: "crank", seconds: 2.5, starter: true}
-	start := segment{name: "light-off", seconds: 7, speed: l.idle, starter: true, fuel: true}
+	rich := Segment{Name: "rich acceleration", Seconds: over, Speed: top, Fuel: true, Ramp: true, EGT: l.egtOver}
+	crank := Segment{Name: "crank", Seconds: 2.5, Starter: true}
+	start := Segment{Name: "light-off", Seconds: 7, Speed: l.idle, Starter: true, Fuel: true}
 	switch s {
 	case Quick:
-		return []segment{
-			{name: "off", seconds: 2},
+		return []Segment{
+			{Name: "off", Seconds: 2},
 			crank,
 			start,
 			run("idle", 3.5, l.idle),
@@ -66,11 +68,11 @@ func plan(s Scenario, l *line, off float64) ([]segment, error) {
 			rich,
 			run("settling", 2.5, top),
 			run("deceleration", 7, l.idle),
-			{name: "shutdown", seconds: 17},
+			{Name: "shutdown", Seconds: 17},
 		}, nil
 	case Full:
-		return []segment{
-			{name: "off", seconds: 3},
+		return []Segment{
+			{Name: "off", Seconds: 3},
 			crank,
 			start,
 			run("idle", 25, l.idle),
@@ -86,19 +88,19 @@ func plan(s Scenario, l *line, off float64) ([]segment, error) {
 			run("deceleration", 25, l.idle),
 			run("acceleration", 15, top),
 			run("cool-down", 35, l.idle),
-			{name: "shutdown", seconds: 20},
-			{name: "ventilation", seconds: 20, starter: true},
-			{name: "off", seconds: 20 + off},
+			{Name: "shutdown", Seconds: 20},
+			{Name: "ventilation", Seconds: 20, Starter: true},
+			{Name: "off", Seconds: 20 + off},
 		}, nil
 	}
 	return nil, fmt.Errorf("rehearsal: scenario %d is unknown; use full or quick", s)
 }
 
 // total gives the length of a plan.
-func total(segments []segment) time.Duration {
+func total(segments []Segment) time.Duration {
 	var sum float64
 	for i := range segments {
-		sum += segments[i].seconds
+		sum += segments[i].Seconds
 	}
 	return seconds(sum)
 }

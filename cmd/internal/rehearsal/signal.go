@@ -26,6 +26,7 @@ type sensor struct {
 	port     shows   // what is taken off it; nil when shows is what the sensor measures
 	tau      float64 // s
 	x        float64 // SI, lagged
+	sound    float64 // SI, lagged as without a fault
 	offset   float64 // SI, systematic error, the same for the whole run
 	sigma    float64 // SI, standard deviation of the noise
 	inverse  inverse
@@ -320,14 +321,18 @@ func (s *sensor) input(p *plant, extra float64) float64 {
 	return x
 }
 
-// follow lets the sensing element follow its input for dt seconds with the time
+// follow lets the sensing element follow its input x for dt seconds with the time
 // constant tau, s.
-func (s *sensor) follow(p *plant, dt, tau, extra float64) {
-	x := s.input(p, extra)
+func (s *sensor) follow(x, dt, tau float64) {
+	s.sound = lagged(s.sound, x, dt, s.tau)
+	s.x = lagged(s.x, x, dt, tau)
+}
+
+func lagged(was, x, dt, tau float64) float64 {
 	if tau > 0 {
-		x = lag(s.x, x, dt, tau)
+		return lag(was, x, dt, tau)
 	}
-	s.x = x
+	return x
 }
 
 // read gives the raw value of a reading: the element's value with errors, noise
