@@ -53,6 +53,8 @@ type Server struct {
 	cfg Config
 	hub *Hub
 	mux *http.ServeMux
+
+	exporting chan struct{} // a slot per export under way
 }
 
 // handler answers a request, or gives the error to answer it with.
@@ -60,7 +62,7 @@ type handler func(http.ResponseWriter, *http.Request) error
 
 // NewServer gives a server; hub is fed by whoever runs the watch.
 func NewServer(cfg Config, hub *Hub) *Server {
-	s := &Server{cfg: cfg, hub: hub, mux: http.NewServeMux()}
+	s := &Server{cfg: cfg, hub: hub, mux: http.NewServeMux(), exporting: make(chan struct{}, exports)}
 	methods := map[string][]string{} // by path
 	for pattern, h := range s.routes() {
 		s.handle(pattern, h)
@@ -93,6 +95,7 @@ func (s *Server) routes() map[string]handler {
 		"GET /api/runs/{id}":                  s.run,
 		"GET /api/runs/{id}/messages":         s.messages,
 		"GET /api/runs/{id}/series":           s.series,
+		"GET /api/runs/{id}/export":           s.export,
 		"POST /api/runs/{id}/marks":           s.mark,
 		"GET /healthz":                        s.healthz,
 		"GET /metrics":                        s.metrics,

@@ -85,3 +85,9 @@ func (h *Hub) Attach(n int, channels bool) (drain func() (frames int)) {
 		return frames
 	}
 }
+
+// HoldExport takes the place of an export under way until release is called.
+func (s *Server) HoldExport() (release func()) {
+	s.exporting <- struct{}{}
+	return func() { <-s.exporting }
+}

@@ -15,8 +15,8 @@ import (
 	"slices"
 	"strconv"
 	"strings"
-	"time"
 
+	"throatwatch/dashboard/export"
 	"throatwatch/ingest"
 	"throatwatch/ingest/runfile"
 	"throatwatch/monitor"
@@ -113,30 +113,10 @@ func (s *Server) run(w http.ResponseWriter, r *http.Request) error {
 	return reply(w, http.StatusOK, viewRun(line))
 }
 
-// stretch reads from and to of a query: seconds after started, or RFC 3339. from
-// defaults to started, to to the end of time. from is before to.
+// stretch reads from and to of a query; see export.Stretch.
 func stretch(q url.Values, started int64) (from, to int64, err error) {
-	from, to = started, math.MaxInt64
-	for _, p := range []struct {
-		name string
-		dst  *int64
-	}{{"from", &from}, {"to", &to}} {
-		text := q.Get(p.name)
-		if text == "" {
-			continue
-		}
-		if t, err := time.Parse(time.RFC3339Nano, text); err == nil && t.Year() >= 1970 && t.Year() < 2262 {
-			*p.dst = t.UnixNano()
-			continue
-		}
-		sec, err := strconv.ParseFloat(text, 64)
-		if err != nil || !(math.Abs(sec) < 1e8) {
-			return 0, 0, badRequest("%s %q: give seconds of the run, or a time as in 2026-03-02T09:00:00Z", p.name, text)
-		}
-		*p.dst = started + int64(math.Round(sec*1e9))
-	}
-	if to <= from {
-		return 0, 0, badRequest("from must be before to")
+	if from, to, err = export.Stretch(q.Get("from"), q.Get("to"), started); err != nil {
+		return 0, 0, badRequest("%v", err)
 	}
 	return from, to, nil
 }

@@ -35,6 +35,7 @@ func commands() []command {
 		{"point", "one operating point from numbers given by hand", withoutContext(pointCommand)},
 		{"runs", "list the stored runs", runsCommand},
 		{"replay", "step a stored run again, and compare its digest", replayCommand},
+		{"export", "write a table of a stored run for other programs", exportCommand},
 		{"version", "the build", versionCommand},
 	}
 }

@@ -74,6 +74,12 @@ func TestWrongUse(t *testing.T) {
 		{"runs of nothing", []string{"runs", "--data", "DIR"}, 1, "throatwatch runs: DIR holds no runs: give the folder of a watch by --data"},
 		{"unknown flag of runs", []string{"runs", "--jason"}, 2, "throatwatch runs: unknown flag: --jason (--help lists the flags)"},
 		{"replay of nothing", []string{"replay"}, 2, "throatwatch replay: give one run; `throatwatch runs` lists them"},
+		{"export of nothing", []string{"export"}, 2, "throatwatch export: give one run; `throatwatch runs` lists them"},
+		{"export without a form", []string{"export", "x", "--data", "DIR"}, 2, "throatwatch export: format \"\": give one of parquet, csv, lines"},
+		{"export without a folder", []string{"export", "x", "--data", "DIR", "--format", "csv"}, 1, "throatwatch export: DIR holds no runs: give the folder of a watch by --data"},
+		{"export of an unknown table", []string{"export", "x", "--what", "all"}, 2, `throatwatch export: what "all": give one of operating-points, scans, samples, events`},
+		{"export in no time", []string{"export", "x", "--format", "csv", "--every", "0"}, 2, `throatwatch export: every "0": give a time of 1ms or more, as 1s or 250ms`},
+		{"statistics of every row", []string{"export", "x", "--format", "csv", "--statistics", "max"}, 2, "throatwatch export: --statistics is for --every: add it"},
 		{"replay without a folder", []string{"replay", "x", "--data", "DIR"}, 1, "throatwatch replay: DIR holds no runs: give the folder of a watch by --data"},
 	} {
 		t.Run(tt.name, func(t *testing.T) {

@@ -299,28 +299,12 @@ func (s *State) source(topic string) *SourceState {
 }
 
 func (a *Aligner) sample(s *State, src *SourceState, info topicInfo, sm *ingest.Sample, host int64) {
-	ch, ok := info.only, info.only >= 0
-	if !ok {
-		ch, ok = info.byName[string(sm.Name)]
-	}
-	if !ok {
-		s.Counters[ingest.ReasonUnknownChannel]++
+	ch, v, why := a.value(info, sm)
+	if why != ingest.ReasonNone {
+		s.Counters[why]++
 		return
 	}
 	c := &a.cfg.Channels[ch]
-	v := sm.Value
-	if len(sm.Unit) > 0 && string(sm.Unit) != c.Raw.Name {
-		u, known := unit.Lookup(sm.Unit)
-		if !known || u.Dimension != c.Raw.Dimension {
-			s.Counters[ingest.ReasonUnit]++
-			return
-		}
-		v = c.Raw.FromSI(u.ToSI(v))
-	}
-	if !(math.Abs(v) < largest) {
-		s.Counters[ingest.ReasonNotFinite]++
-		return
-	}
 	if src.Hold == 0 || c.Hold < src.Hold {
 		src.Hold = c.Hold
 	}
@@ -334,6 +318,55 @@ func (a *Aligner) sample(s *State, src *SourceState, info topicInfo, sm *ingest.
 		a.settle(s, src, host)
 	}
 	a.place(s, ch, t, host, v)
+}
+
+// value gives the channel of a sample, −1 for none, and its raw value in the raw
+// unit of the channel; or why it cannot be used, with the value as it was sent.
+func (a *Aligner) value(info topicInfo, sm *ingest.Sample) (ch int, v float64, why ingest.Reason) {
+	ch, ok := info.only, info.only >= 0
+	if !ok {
+		ch, ok = info.byName[string(sm.Name)]
+	}
+	if !ok {
+		return -1, sm.Value, ingest.ReasonUnknownChannel
+	}
+	c := &a.cfg.Channels[ch]
+	v = sm.Value
+	if len(sm.Unit) > 0 && string(sm.Unit) != c.Raw.Name {
+		u, known := unit.Lookup(sm.Unit)
+		if !known || u.Dimension != c.Raw.Dimension {
+			return ch, v, ingest.ReasonUnit
+		}
+		v = c.Raw.FromSI(u.ToSI(v))
+	}
+	if !(math.Abs(v) < largest) {
+		return ch, sm.Value, ingest.ReasonNotFinite
+	}
+	return ch, v, ingest.ReasonNone
+}
+
+// Read decodes a message and calls fn with each of its samples: the channel, −1
+// for none, its raw value in the raw unit of the channel, and why it is not used.
+// It takes nothing into a state, so what depends on one, such as being late, is
+// not told. Seen tells that a copy of the message came before.
+func (a *Aligner) Read(r *ingest.Record, seen bool, fn func(sm *ingest.Sample, ch int, raw float64, why ingest.Reason)) {
+	info := a.topic(r.Topic)
+	if info.input < 0 {
+		return
+	}
+	res := a.decoder.Decode(a.cfg.Inputs[info.input].Format, r.Topic, r.Payload, r.Host)
+	for i := range res.Samples {
+		sm := &res.Samples[i]
+		ch, v, why := a.value(info, sm)
+		switch {
+		case why != ingest.ReasonNone:
+		case r.Flags&ingest.FlagRetained != 0:
+			why = ingest.ReasonRetained
+		case seen && (res.DeviceTime || r.Flags&ingest.FlagDuplicate != 0):
+			why = ingest.ReasonDuplicate
+		}
+		fn(sm, ch, v, why)
+	}
 }
 
 // eventTime gives the time at which a sample counts: its own, or host time when
