@@ -161,10 +161,11 @@ type placeJSON struct {
 
 // act does an operator's action and says what became of it.
 func (s *Server) act(w http.ResponseWriter, r *http.Request, a pipeline.Action) error {
-	if a.By == "" {
-		a.By = "console"
+	who, err := s.actor(r, a.By)
+	if err != nil {
+		return err
 	}
-	a.Role = "operator"
+	a.By, a.Role = who.Name, who.Role.String()
 	res, err := s.cfg.Desk.Act(r.Context(), a)
 	switch {
 	case err != nil:

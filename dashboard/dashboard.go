@@ -17,6 +17,7 @@ import (
 	"strings"
 	"time"
 
+	"throatwatch/dashboard/access"
 	"throatwatch/ingest/runfile"
 	"throatwatch/rules"
 	"throatwatch/rules/pipeline"
@@ -46,6 +47,12 @@ type Config struct {
 	Build string
 	Log   *slog.Logger
 	Extra func() []Metric // further metrics, of parts that the server does not know
+
+	Access   *access.Gate // who may come in; nil: nobody is asked who they are
+	OpenRole access.Role  // of everybody where Access is nil; the zero value is Operator
+	Secure   bool         // served over TLS: cookies are for TLS only
+	Local    bool         // requests must name this machine by a loopback address
+	Audit    *slog.Logger // who signs in and out
 }
 
 // Server answers HTTP. It is an http.Handler.
@@ -97,6 +104,9 @@ func (s *Server) routes() map[string]handler {
 		"GET /api/runs/{id}/series":           s.series,
 		"GET /api/runs/{id}/export":           s.export,
 		"POST /api/runs/{id}/marks":           s.mark,
+		"GET /api/session":                    s.session,
+		"POST /api/session":                   s.signIn,
+		"DELETE /api/session":                 s.signOut,
 		"GET /healthz":                        s.healthz,
 		"GET /metrics":                        s.metrics,
 		"GET /openapi.json":                   s.openAPI,
@@ -121,15 +131,30 @@ func notAllowed(allowed []string) handler {
 	}
 }
 
-// contentPolicy lets the page load from this server only.
-const contentPolicy = "default-src 'self'; style-src 'self' 'unsafe-inline'; img-src 'self' data:; connect-src 'self'; frame-ancestors 'none'; base-uri 'none'"
+// headers go with every answer: the page loads from this server only, runs no
+// script or style that stands in a document, is shown in no frame, and says nothing
+// to other sites.
+var headers = map[string]string{
+	"Content-Security-Policy": "default-src 'none'; script-src 'self'; style-src 'self'; img-src 'self' data:; font-src 'self'; connect-src 'self'; " +
+		"form-action 'self'; frame-ancestors 'none'; base-uri 'none'",
+	"X-Content-Type-Options":       "nosniff",
+	"X-Frame-Options":              "DENY",
+	"Referrer-Policy":              "no-referrer",
+	"Cross-Origin-Opener-Policy":   "same-origin",
+	"Cross-Origin-Resource-Policy": "same-origin",
+	"Permissions-Policy":           "camera=(), microphone=(), geolocation=()",
+}
 
 // ServeHTTP answers a request.
 func (s *Server) ServeHTTP(w http.ResponseWriter, r *http.Request) {
-	h := w.Header()
-	h.Set("Content-Security-Policy", contentPolicy)
-	h.Set("X-Content-Type-Options", "nosniff")
-	h.Set("Referrer-Policy", "no-referrer")
+	for name, value := range headers {
+		w.Header().Set(name, value)
+	}
+	r, err := s.admit(r)
+	if err != nil {
+		s.fail(w, r, err)
+		return
+	}
 	s.mux.ServeHTTP(w, r)
 }
 
@@ -176,6 +201,9 @@ func (s *Server) fail(w http.ResponseWriter, r *http.Request, err error) {
 	b, err := json.Marshal(problemJSON{"about:blank", http.StatusText(p.status), p.status, p.detail, r.URL.EscapedPath()})
 	if err != nil {
 		panic("dashboard: problem: " + err.Error()) // four strings and a number encode
+	}
+	if p.status == http.StatusUnauthorized { // [RFC 9110 15.5.2]
+		w.Header().Set("WWW-Authenticate", `Bearer realm="throatwatch"`)
 	}
 	w.Header().Set("Content-Type", "application/problem+json")
 	w.WriteHeader(p.status)

@@ -24,6 +24,7 @@ import (
 	"github.com/gorilla/websocket"
 
 	"throatwatch/dashboard"
+	"throatwatch/dashboard/access"
 	"throatwatch/ingest"
 	"throatwatch/ingest/runfile"
 	"throatwatch/monitor/archive"
@@ -53,6 +54,8 @@ type due struct {
 // desk is a watch that is stepped by hand, with its server. With a folder it
 // records into a run file there as the daemon does.
 type desk struct {
+	cfg dashboard.Config // what serve is to add to
+
 	hub    *dashboard.Hub
 	http   *httptest.Server
 	dir    string
@@ -91,7 +94,10 @@ func newBareDesk(t *testing.T) *desk {
 }
 
 func makeDesk() *desk {
-	return &desk{hub: dashboard.NewHub(build), machine: pipeline.NewMachine(parse), state: &pipeline.State{}}
+	return &desk{
+		cfg: dashboard.Config{OpenRole: access.Engineer},
+		hub: dashboard.NewHub(build), machine: pipeline.NewMachine(parse), state: &pipeline.State{},
+	}
 }
 
 // record makes a desk put what it steps into a run file. The file is sealed each
@@ -114,15 +120,16 @@ func (d *desk) begin() {
 
 // serve begins a server; asked is the desk that it asks.
 func (d *desk) serve(asked dashboard.Desk) {
-	server := dashboard.NewServer(dashboard.Config{
-		Desk: asked, Runs: folder(d.dir), Parse: parse, Build: build, Log: slog.New(slog.DiscardHandler),
-		Extra: func() []dashboard.Metric {
-			return []dashboard.Metric{
-				{Name: "session_unacknowledged", Help: "An extra gauge.", Labels: map[string]string{"filter": "rigs/cell_2/\xff"}, Value: 4},
-				{Name: "session_received_total", Help: "An extra counter.", Total: true, Value: 5},
-			}
-		},
-	}, d.hub)
+	cfg := d.cfg
+	cfg.Desk, cfg.Runs, cfg.Parse, cfg.Build = asked, folder(d.dir), parse, build
+	cfg.Log = slog.New(slog.DiscardHandler)
+	cfg.Extra = func() []dashboard.Metric {
+		return []dashboard.Metric{
+			{Name: "session_unacknowledged", Help: "An extra gauge.", Labels: map[string]string{"filter": "rigs/cell_2/\xff"}, Value: 4},
+			{Name: "session_received_total", Help: "An extra counter.", Total: true, Value: 5},
+		}
+	}
+	server := dashboard.NewServer(cfg, d.hub)
 	d.http = httptest.NewUnstartedServer(server)
 	if d.narrow {
 		d.http.Listener = narrow{d.http.Listener}

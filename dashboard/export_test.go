@@ -14,6 +14,8 @@ const (
 	MaxNames    = maxNames
 	MaxPoints   = maxPoints
 	LargestBody = largestBody
+
+	CloseSignedOut = closeSignedOut
 )
 
 // Patterns gives what the server answers beside the page.

@@ -205,8 +205,9 @@ func TestAlarmActions(t *testing.T) {
 		{"egt_run_max_over", "shelve", `"reason":"x","seconds":3601`, http.StatusConflict, "1h0m0s"},
 		{"egt_run_max_exceeded", "shelve", `"reason":"x","seconds":60`, http.StatusConflict, "warning"},
 		{"egt_run_max_exceeded", "reset", `"reason":""`, http.StatusConflict, "no reset"},
-		{"egt_run_max_over", "out-of-service", `"reason":"x"`, http.StatusConflict, "engineer"},
-		{"egt_run_max_over", "in-service", `"reason":"x"`, http.StatusConflict, "engineer"},
+		{"egt_run_max_over", "out-of-service", `"reason":" "`, http.StatusConflict, "reason"},
+		{"egt_run_max_over", "out-of-service", `"reason":"x"`, http.StatusAccepted, ""},
+		{"egt_run_max_over", "in-service", `"reason":"x"`, http.StatusAccepted, ""},
 	} {
 		a, ok := d.alarm(tt.rule)
 		if !ok {
@@ -330,10 +331,16 @@ func TestPage(t *testing.T) {
 	} else {
 		checkStatus(t, "page that was not built", a, http.StatusNotFound, "deploy/build")
 	}
-	for key, want := range map[string]string{"Content-Security-Policy": "default-src 'self'", "X-Content-Type-Options": "nosniff", "Referrer-Policy": "no-referrer"} {
+	for key, want := range map[string]string{
+		"Content-Security-Policy": "default-src 'none'; script-src 'self'; style-src 'self';", "X-Content-Type-Options": "nosniff", "Referrer-Policy": "no-referrer",
+		"X-Frame-Options": "DENY", "Cross-Origin-Opener-Policy": "same-origin", "Cross-Origin-Resource-Policy": "same-origin",
+	} {
 		if !strings.Contains(a.header.Get(key), want) {
 			t.Errorf("%s: %q", key, a.header.Get(key))
 		}
+	}
+	if policy := a.header.Get("Content-Security-Policy"); strings.Contains(policy, "unsafe") || strings.Contains(policy, "*") {
+		t.Errorf("the policy lets in what stands in a document, or everything: %s", policy)
 	}
 }
 

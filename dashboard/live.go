@@ -26,11 +26,13 @@ const (
 	clientQueue  = 256
 	clientAge    = 2 * time.Second
 	closeTooSlow = 4008
-	writeTimeout = 5 * time.Second
-	closeTimeout = time.Second
-	pingEvery    = 5 * time.Second
-	pongWithin   = 15 * time.Second
-	maxViewers   = 256
+	// closeSignedOut is for a viewer whose session is over.
+	closeSignedOut = 4001
+	writeTimeout   = 5 * time.Second
+	closeTimeout   = time.Second
+	pingEvery      = 5 * time.Second
+	pongWithin     = 15 * time.Second
+	maxViewers     = 256
 )
 
 // Hub keeps the newest frames and hands new ones to every viewer.
@@ -66,9 +68,10 @@ type frame struct {
 
 // viewer is one websocket.
 type viewer struct {
-	all    bool     // every channel
-	ids    []string // channels wanted otherwise
-	wanted []int    // their indices in the configuration of hash
+	still  func() bool // tells that it may go on
+	all    bool        // every channel
+	ids    []string    // channels wanted otherwise
+	wanted []int       // their indices in the configuration of hash
 	hash   string
 	every  int64 // ns between points; 0 = each
 	next   int64 // event time of the next point and channels frame to send
@@ -341,6 +344,7 @@ func (s *Server) live(w http.ResponseWriter, r *http.Request) error {
 	if err != nil {
 		return err
 	}
+	v.still = callerOf(r).still
 	if !websocket.IsWebSocketUpgrade(r) {
 		w.Header().Set("Upgrade", "websocket")
 		return &problem{http.StatusUpgradeRequired, "this is a websocket: connect to it as one"}
@@ -417,6 +421,10 @@ func (v *viewer) write(conn *websocket.Conn) bool {
 				return false
 			}
 		case <-ping.C:
+			if !v.still() {
+				v.drop(closeSignedOut, "signed out")
+				continue
+			}
 			if err := conn.WriteControl(websocket.PingMessage, nil, time.Now().Add(closeTimeout)); err != nil {
 				return false
 			}

@@ -88,6 +88,9 @@ func checkDescribed(t *testing.T, method, path, body string, a answer) {
 	if response == nil {
 		t.Fatalf("%s %s: the status %d is not described", method, template, a.status)
 	}
+	if response["content"] == nil && len(a.body) == 0 {
+		return
+	}
 	kind, _, err := mime.ParseMediaType(a.header.Get("Content-Type"))
 	if err != nil {
 		t.Fatalf("%s %s: %v", method, template, err)
@@ -238,12 +241,15 @@ func TestOpenAPIExamples(t *testing.T) {
 					}
 					return
 				}
-				body, err := json.Marshal(op["requestBody"].(map[string]any)["content"].(map[string]any)["application/json"].(map[string]any)["example"])
-				if err != nil {
-					t.Fatal(err)
+				var body []byte
+				if request, ok := op["requestBody"].(map[string]any); ok {
+					var err error
+					if body, err = json.Marshal(request["content"].(map[string]any)["application/json"].(map[string]any)["example"]); err != nil {
+						t.Fatal(err)
+					}
 				}
 				d := newDesk(t)
-				if a := d.call(t, http.MethodPost, target, string(body)); a.status == http.StatusBadRequest {
+				if a := d.call(t, strings.ToUpper(method), target, string(body)); a.status == http.StatusBadRequest {
 					t.Errorf("the example is refused: %s", a.body)
 				}
 			})
