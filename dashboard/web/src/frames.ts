@@ -138,6 +138,7 @@ export const quantityKeys = [
   'discharge_coefficient', 'air_flow_kg_s', 'fuel_flow_kg_s', 'flow_balance_kg_s',
   'independent_flow_kg_s', 'independent_flow_kg_s_u95', 'independent_flow_parameter',
   'egt_indicated_k', 'egt_spread_k', 'egt_hottest_k', 'egt_coldest_k', 'speed_rpm',
+  'choke_loss_in_s', 'choke_loss_in_s_low95', 'choke_loss_in_s_high95', 'egt_limit_in_s', 'egt_limit_in_s_low95', 'egt_limit_in_s_high95',
 ] as const;
 export type Quantity = (typeof quantityKeys)[number];
 
@@ -153,6 +154,10 @@ export interface PointFrame extends Numbered, Partial<Record<Quantity, Num>> {
   total_pressure_from?: string; // not in runs of older builds
   total_temperature_from: string;
   choke_npr_from: string;
+  steady?: boolean; // this and the reasons: not in runs of older builds
+  steady_reason?: string | null;
+  choke_loss_reason?: string | null;
+  egt_limit_reason?: string | null;
   egt_probes_used: number;
   rake_probes_used: number;
   cause: string | null;

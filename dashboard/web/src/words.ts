@@ -31,9 +31,41 @@ export function causeWord(s: string | null | undefined): string {
 }
 
 const sources: Record<string, string> = {
-  none: 'no source', rake: 'rake', exit_plane: 'exit plane', barometer: 'barometer', egt_factor: 'EGT × factor',
+  none: 'no source', rake: 'rake', exit_plane: 'exit plane', barometer: 'barometer', egt_factor: 'EGT × factor', heat_balance: 'heat balance', wall_static: 'wall static',
   one_dimensional: 'one-dimensional', calibration: 'calibration', entry: 'rig file',
 };
+
+/** Why a state is not steady, or why there is no forecast: reasons of an operating point. */
+const reasons: Record<string, string> = {
+  not_configured: 'not configured', phase: 'no steady phase', filling: 'window filling', gaps: 'data gaps', correlated: 'slow noise',
+  trend: 'trend', scatter: 'scatter', swing: 'swing or step', dwell: 'settling',
+  not_steady: 'no steady phase', not_enough: 'too little data yet', past_limit: 'past it', no_trend: 'no trend toward it',
+  levelling: 'levels off before', too_far_ahead: 'too far ahead to tell', no_limit: 'no limit above',
+};
+const reasonWord = (s: string): string => reasons[s] ?? s.replaceAll('_', ' ');
+
+/** Whether the engine is steady, and if not why; "–" where it is not told. */
+export function steadyText(p: PointFrame | null): string {
+  if (p?.steady === undefined) return '–';
+  return p.steady ? '● steady' : `○ not steady${p.steady_reason ? `: ${reasonWord(p.steady_reason)}` : ''}`;
+}
+
+/** "in 40 s (25–60)", the bounds being those of 95 %, or why there is no forecast. */
+export function forecastText(s: Num | undefined, low: Num | undefined, high: Num | undefined, reason: string | null | undefined): string {
+  if (typeof s !== 'number') return reason ? reasonWord(reason) : '–';
+  const bounds = typeof low !== 'number' ? '' : typeof high === 'number' ? ` (${fixed(low, 0)}–${fixed(high, 0)})` : ` (${fixed(low, 0)} or later)`;
+  return `in ${fixed(s, 0)} s${bounds}`;
+}
+
+/** What stands in for the first source of a value: one note each. */
+export function standIns(p: PointFrame | null): string[] {
+  if (!p) return [];
+  const out: string[] = [];
+  if (p.back_pressure_from === 'barometer') out.push('back pressure from barometer');
+  if (p.total_pressure_from === 'wall_static') out.push('p7 from wall static');
+  if (['heat_balance', 'egt_factor'].includes(p.total_temperature_from)) out.push(`T7 from ${sourceWord(p.total_temperature_from)}`);
+  return out;
+}
 
 /** A source of a value, for people. */
 export const sourceWord = (s: string): string => sources[s] ?? s.replaceAll('_', ' ');

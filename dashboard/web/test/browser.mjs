@@ -173,7 +173,8 @@ try {
 
   // A whole stored test, and a short one live beside it.
   const data = join(place, 'data');
-  command(program, 'rehearse', rig, '--into', data);
+  const lost = ['p7_1', 'p7_2', 'p7_3', 'p7_4', 't7_1', 't7_2', 't7_3', 't7_4', 'p_exit'].flatMap((c) => ['--fault', `barometer-loss@150s+30s:${c}`]);
+  command(program, 'rehearse', rig, '--into', data, ...lost);
   const port = await freePort();
   daemon = await watch(program, rig, data, port, '--rehearse', '--quick');
   server = daemon.url;
@@ -239,6 +240,21 @@ try {
     await q('scrub').focus();
     await page.keyboard.press('Home');
     await until('scrubbed to the start', async () => (await words('replay-clock')).startsWith('0:00:00'));
+  });
+
+  await check('what stands in for a lost rake and exit plane is named beside the point', async () => {
+    await q('scrub').fill('140');
+    await until('none before', async () => (await words('replay-clock')).startsWith('0:02:20') && !/wall static/.test(await words('plane-notes')));
+    await q('scrub').fill('165');
+    for (const note of ['p7 from wall static', 'T7 from heat balance', 'back pressure from barometer']) await until(note, async () => (await words('plane-notes')).includes(note));
+    await shoot('replay-stand-ins');
+  });
+
+  await check('steadiness and forecasts are told, with the reason where there is none', async () => {
+    await q('scrub').fill('105');
+    await until('steady', async () => (await words('steady')) === '● steady' && (await words('choke-loss')) === 'no trend toward it');
+    await q('scrub').fill('120');
+    await until('not steady', async () => (await words('steady')) === '○ not steady: trend' && (await words('egt-limit')) === 'too little data yet');
   });
 
   page = live;
@@ -397,7 +413,7 @@ try {
     await q('confirm').click();
     await until('ended', async () => !(await active()));
     ended = before.id;
-    await until('the page knows', async () => (await words('run-button')) === 'Start run…' && (await words('run')) === 'none');
+    await until('the page knows', async () => (await words('run-button')) === 'Start run…' && (await words('run')) === 'run 2 has ended');
   });
 
   await check('the run just watched replays', async () => {

@@ -3,9 +3,9 @@
 import type { Display } from '../context';
 import { type View, attr, h, text } from '../dom';
 import { activeRun, believable, runSeconds } from '../state';
-import { clock, duration } from '../time';
+import { duration } from '../time';
 import { fixed, shown, signed, width } from '../units';
-import { sourceWord, stateLook, uncertainty } from '../words';
+import { forecastText, sourceWord, stateLook, steadyText, uncertainty } from '../words';
 
 function cell(label: string, name: string): { el: HTMLElement; label: HTMLElement; value: HTMLElement; unit: HTMLElement; extra: HTMLElement } {
   const parts = {
@@ -15,6 +15,11 @@ function cell(label: string, name: string): { el: HTMLElement; label: HTMLElemen
     extra: h('span', { class: 'extra' }),
   };
   return { ...parts, el: h('div', { class: 'cell' }, parts.label, h('dd', {}, parts.value, ' ', parts.unit, ' ', parts.extra)) };
+}
+
+function note(label: string, name: string): { el: HTMLElement; value: HTMLElement } {
+  const value = h('dd', { 'data-q': name }, '–');
+  return { el: h('div', {}, h('dt', {}, label), value), value };
 }
 
 export function numbers(d: Display): View {
@@ -33,13 +38,18 @@ export function numbers(d: Display): View {
   phase.el.classList.add('words');
   const armed = cell('Choke watch', 'armed');
   armed.el.classList.add('words');
-  const run = cell('Run', 'run');
+  const referred = cell('Referred flow W√θ/δ', 'referred');
   const time = cell('Run clock', 'clock');
+  attr(time.extra, 'data-q', 'run');
+  const steady = note('Steadiness', 'steady');
+  const loss = note('Choke loss, forecast', 'choke-loss');
+  const limit = note('EGT limit, forecast', 'egt-limit');
   const big = h('div', { class: 'big' },
     h('div', { class: 'margin' }, h('div', { class: 'label' }, 'Choke margin'), h('div', {}, margin, ' ', h('span', { class: 'unit' }, '%'), ' ', marginU), marginPa),
     h('div', { class: 'state' }, h('div', { class: 'label' }, 'Choke state'), h('div', { class: 'stateword' }, shape, ' ', word, ' ', marginal), cause));
   const el = h('section', { class: 'numbers', 'aria-label': 'Nozzle numbers' }, big,
-    h('dl', { class: 'cells' }, npr.el, choke.el, flow.el, thrust.el, phase.el, armed.el, run.el, time.el));
+    h('dl', { class: 'notes' }, steady.el, loss.el, limit.el),
+    h('dl', { class: 'cells' }, npr.el, choke.el, flow.el, thrust.el, phase.el, armed.el, referred.el, time.el));
 
   function update(now: number): void {
     const m = d.model();
@@ -71,10 +81,19 @@ export function numbers(d: Display): View {
     put(thrust, shown(u.force, p?.gross_thrust_n), u.force.sign, [uncertainty(width(u.force, p?.gross_thrust_n_u95), u.force.decimals), 'computed'].filter(Boolean).join(', '));
     put(phase, p ? p.phase : '–', '', p && !p.lit ? 'not lit' : '');
     put(armed, p ? (p.choke_armed ? '● armed' : '○ not armed') : '–', '', p && m.armedAbove !== null ? `above ${fixed(m.armedAbove, 0)} rpm` : '');
+    put(referred, shown(u.flow, p?.referred_flow_kg_s), u.flow.sign);
     const on = activeRun(m);
-    attr(run.el, 'title', on?.id);
-    put(run, on ? `${on.number}` : 'none', '', on ? on.id : m.run ? `${m.run.number} has ended` : 'between runs');
-    put(time, on && p ? duration(runSeconds(m)) : '–', '', on && p ? `${clock(m.newest)} UTC` : '');
+    attr(time.el, 'title', on?.id);
+    put(time, on && p ? duration(runSeconds(m)) : '–');
+    text(time.extra, on ? `run ${on.number}` : m.run ? `run ${m.run.number} has ended` : 'no run');
+
+    const tell = (n: ReturnType<typeof note>, words: string): void => {
+      text(n.value, words);
+      attr(n.value, 'title', words);
+    };
+    tell(steady, steadyText(p));
+    tell(loss, forecastText(p?.choke_loss_in_s, p?.choke_loss_in_s_low95, p?.choke_loss_in_s_high95, p?.choke_loss_reason));
+    tell(limit, forecastText(p?.egt_limit_in_s, p?.egt_limit_in_s_low95, p?.egt_limit_in_s_high95, p?.egt_limit_reason));
   }
   return { el, update, destroy: () => undefined };
 }

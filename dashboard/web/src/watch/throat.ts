@@ -5,13 +5,13 @@
 
 import { api } from '../api';
 import type { Display } from '../context';
-import { type View, attr } from '../dom';
+import { type View, attr, h, refill } from '../dom';
 import type { PointFrame, ThroatCurve } from '../frames';
 import { chokeBand } from '../interval';
 import { columns } from '../ring';
 import { believable } from '../state';
 import { fixed, shown, significant } from '../units';
-import { causeWord, sourceWord, stateLook } from '../words';
+import { causeWord, sourceWord, standIns, stateLook } from '../words';
 import { font, hatch, surface } from './canvas';
 
 const trailSeconds = 60;
@@ -34,6 +34,8 @@ function gasOf(p: PointFrame | null): Gas | null {
 
 export function throatPlane(d: Display): View {
   const plane = surface('throat', 'Throat plane');
+  const notes = h('div', { class: 'planenotes', 'data-q': 'plane-notes' }); // lower right, where no gas curve passes
+  plane.el.append(notes);
   let curve: ThroatCurve | null = null;
   let curveGas = '';
   let curveOf: Gas | null = null;
@@ -204,7 +206,8 @@ export function throatPlane(d: Display): View {
           c.fillStyle = colour;
           c.fillText(words, px, py);
         };
-        const [lx, align]: [number, CanvasTextAlign] = !flat ? [x(npr) + 14, 'left'] : toLeft ? [x(npr) + 8, 'right'] : [x(npr), 'center'];
+        const nearAxis = x(npr) - left < 90; // a label in the middle would be cut off there
+        const [lx, align]: [number, CanvasTextAlign] = !flat || nearAxis ? [x(npr) + 14, 'left'] : toLeft ? [x(npr) + 8, 'right'] : [x(npr), 'center'];
         const low = Math.min(y(anchor) + 2, bottom - 25); // a point on the axis keeps its labels inside
         const under = independent !== null && y(anchor) - y(independent) > 9; // the computed point has the other above it
         if (computed !== null) label('○ computed', pal.text, lx, flat ? y(anchor) + (under ? 22 : -18) : low, align);
@@ -224,18 +227,10 @@ export function throatPlane(d: Display): View {
     }
     c.restore();
 
-    // Notes, lower right, where no gas curve passes.
     const { temperature } = d.units();
-    const notes = [curveOf && `gas ${shown(temperature, curveOf.t)} ${temperature.sign}, f ${fixed(curveOf.f, 3)}, Cd ${fixed(p?.discharge_coefficient, 3)}`];
-    if (p?.back_pressure_from === 'barometer') notes.push('back pressure from barometer');
-    if (p?.total_pressure_from === 'wall_static') notes.push('p7 from wall static');
-    if (p && ['heat_balance', 'egt_factor'].includes(p.total_temperature_from)) notes.push(`T7 from ${sourceWord(p.total_temperature_from)}`);
-    if (live && (p.independent_flow_parameter ?? null) === null) notes.push('no independent flow');
-    c.font = font(12);
-    c.fillStyle = pal.soft;
-    c.textAlign = 'right';
-    c.textBaseline = 'bottom';
-    notes.filter((n) => n !== null).reverse().forEach((n, i) => c.fillText(n, right - 6, bottom - 5 - 15 * i));
+    const said = [curveOf && `gas ${shown(temperature, curveOf.t)} ${temperature.sign}, f ${fixed(curveOf.f, 3)}, Cd ${fixed(p?.discharge_coefficient, 3)}`, ...standIns(live ? p : null)];
+    if (live && (p.independent_flow_parameter ?? null) === null) said.push('no independent flow');
+    refill(notes, said.join(), () => said.filter((n) => n !== null).map((n) => h('div', {}, n)));
 
     if (!live || npr === null) {
       hatch(c, left, top, right - left, bottom - top, pal.soft);

@@ -1,0 +1,28 @@
+import assert from 'node:assert/strict';
+import { test } from 'node:test';
+import { forecastText, standIns, steadyText } from '../src/words';
+import { point, t0 } from './samples';
+
+test('steadiness names its reason, and nothing where it is not told', () => {
+  assert.equal(steadyText(point(t0, { steady: true, steady_reason: null })), '● steady');
+  assert.equal(steadyText(point(t0, { steady: false, steady_reason: 'swing' })), '○ not steady: swing or step');
+  assert.equal(steadyText(point(t0, { steady: false, steady_reason: 'a_new_one' })), '○ not steady: a new one', 'a reason of a newer server');
+  assert.equal(steadyText(point(t0)), '–', 'a run of an older build');
+  assert.equal(steadyText(null), '–');
+});
+
+test('a forecast is a time with its 95 % bounds, or the reason why there is none', () => {
+  assert.equal(forecastText(40.2, 25, 60, null), 'in 40 s (25–60)');
+  assert.equal(forecastText(40.2, 25, null, null), 'in 40 s (25 or later)');
+  assert.equal(forecastText(12, null, null, null), 'in 12 s');
+  assert.equal(forecastText(null, null, null, 'levelling'), 'levels off before');
+  assert.equal(forecastText(undefined, undefined, undefined, undefined), '–');
+});
+
+test('what stands in is named, each once', () => {
+  assert.deepEqual(standIns(point(t0, { total_pressure_from: 'rake' })), []);
+  assert.deepEqual(standIns(point(t0, { back_pressure_from: 'barometer', total_pressure_from: 'wall_static', total_temperature_from: 'heat_balance' })),
+    ['back pressure from barometer', 'p7 from wall static', 'T7 from heat balance']);
+  assert.deepEqual(standIns(point(t0, { total_temperature_from: 'egt_factor' })), ['T7 from EGT × factor']);
+  assert.deepEqual(standIns(null), []);
+});
