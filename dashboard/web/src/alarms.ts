@@ -28,9 +28,12 @@ const silent = new Set<AlarmState>(['normal', 'shelved', 'suppressed_by_design',
 
 export const needsAcknowledge = (a: Alarm): boolean => waiting.has(a.state);
 
-/** What an operator can do to a standing alarm next. */
+/** The last part of the address of an action on an alarm. */
+export type AlarmPath = 'acknowledge' | 'reset' | 'shelve' | 'unshelve' | 'out-of-service' | 'in-service';
+
+/** What can be done to an alarm. */
 export interface Step {
-  path: 'acknowledge' | 'reset';
+  path: AlarmPath;
   word: string;
   doing: string;
 }
@@ -40,6 +43,18 @@ export function nextStep(a: Alarm): Step | null {
   if (needsAcknowledge(a)) return { path: 'acknowledge', word: 'Acknowledge', doing: 'Acknowledging…' };
   return a.state === 'latched_acknowledged' ? { path: 'reset', word: 'Reset', doing: 'Resetting…' } : null;
 }
+
+/** What puts an alarm aside or brings it back, each with a reason. A warning is never shelved. */
+export function asideSteps(a: Alarm): Step[] {
+  if (a.state === 'normal') return [];
+  if (a.state === 'out_of_service') return [{ path: 'in-service', word: 'Back in service…', doing: 'Restoring…' }];
+  const out: Step[] = [];
+  if (a.state === 'shelved') out.push({ path: 'unshelve', word: 'Unshelve', doing: 'Unshelving…' });
+  else if (a.priority !== 'warning' && a.state !== 'suppressed_by_design') out.push({ path: 'shelve', word: 'Shelve…', doing: 'Shelving…' });
+  out.push({ path: 'out-of-service', word: 'Out of service…', doing: 'Removing…' });
+  return out;
+}
+
 /** Listed as standing: neither back to normal nor taken out of annunciation. */
 export const isStanding = (a: Alarm): boolean => !silent.has(a.state);
 /** Sounds until acknowledged: present now, not only told of as past. */
@@ -72,4 +87,39 @@ export function byUrgency(a: Alarm, b: Alarm): number {
 /** The standing alarms, most urgent first. */
 export function standing(alarms: Iterable<Alarm>): Alarm[] {
   return [...alarms].filter(isStanding).sort(byUrgency);
+}
+
+export interface Branch { alarm: Alarm; under: boolean }
+
+/** Standing alarms with the consequences of each under it, the most urgent tree first. */
+export function grouped(list: readonly Alarm[]): Branch[] {
+  const ids = new Set(list.map((a) => a.id));
+  const head = (a: Alarm): string => (a.under && a.under !== a.id && ids.has(a.under) ? a.under : a.id);
+  const trees = new Map<string, Alarm[]>();
+  // In order of urgency the first of a tree gives its place.
+  for (const a of [...list].sort(byUrgency)) {
+    const tree = trees.get(head(a));
+    if (tree) tree.push(a); else trees.set(head(a), [a]);
+  }
+  return [...trees].flatMap(([id, tree]) => [...tree].sort((a, b) => Number(b.id === id) - Number(a.id === id)).map((alarm) => ({ alarm, under: alarm.id !== id })));
+}
+
+/** Names an occurrence of an alarm that asks for attention: new whenever it asks again. */
+export const occurrence = (a: Alarm): string => `${a.id} ${a.changed}`;
+
+/** The title of the page: the most urgent alarm and how many others stand. */
+export function pageTitle(list: readonly Alarm[], linkLost: boolean, place: string, replay: string): string {
+  const first = list[0];
+  const alarm = linkLost ? 'NO DATA LINK' : first ? `${priorityLook[first.priority].shape} ${first.title}${list.length > 1 ? ` (+${list.length - 1})` : ''}` : '';
+  return [alarm && replay ? `live: ${alarm}` : alarm, replay ? `REPLAY ${replay}` : place, 'throatwatch'].filter(Boolean).slice(0, alarm ? 2 : 3).join(' – ');
+}
+
+/** What a list of alarms is narrowed to; empty fields let everything pass. */
+export interface AlarmFilter { priority: string; words: string }
+
+/** Whether an alarm passes: its priority, and every word somewhere in its rule or texts. */
+export function passes(a: Alarm, f: AlarmFilter): boolean {
+  if (f.priority && a.priority !== f.priority) return false;
+  const all = `${a.rule} ${a.title} ${a.text} ${a.group}`.toLowerCase();
+  return f.words.toLowerCase().split(/\s+/).every((w) => all.includes(w));
 }

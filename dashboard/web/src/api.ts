@@ -1,12 +1,19 @@
 // Requests to the server beside the page. Failures become sentences for people.
 
-import type { Step } from './alarms';
-import type { Alarm, Frame, HelloFrame, RigInfo, RunSummary, SeriesReply, ThroatCurve } from './frames';
+import type { AlarmPath } from './alarms';
+import type { Alarm, AlarmFigures, ExceedanceReply, Frame, HelloFrame, LogEntry, RigInfo, RunSummary, SeriesReply, ThroatCurve } from './frames';
+import type { Session } from './session';
+
+/** What is wrong at a place of a file. */
+export interface Fault { at: string; message: string; hint: string }
 
 /** A refused or failed request; status 0 when the server was not reached. */
 export class RequestError extends Error {
-  constructor(readonly status: number, message: string) { super(message); }
+  constructor(readonly status: number, message: string, readonly faults: Fault[] = []) { super(message); }
 }
+
+/** The token that goes with every change, so that no other site can send one. */
+export const credentials = { csrf: '' };
 
 async function request(path: string, init: RequestInit = {}): Promise<Response> {
   let reply: Response;
@@ -18,19 +25,23 @@ async function request(path: string, init: RequestInit = {}): Promise<Response> 
   }
   if (reply.ok) return reply;
   let detail = `${reply.status} ${reply.statusText}`;
+  let faults: Fault[] = [];
   try {
-    const problem = (await reply.json()) as { title?: string; detail?: string }; // RFC 9457
+    const problem = (await reply.json()) as { title?: string; detail?: string; faults?: Fault[] }; // RFC 9457
     detail = [problem.title, problem.detail].filter(Boolean).join(': ') || detail;
+    faults = problem.faults ?? [];
   } catch { /* not a problem document: the status line has to do */ }
-  throw new RequestError(reply.status, detail);
+  throw new RequestError(reply.status, detail, faults);
 }
 
 async function get<T>(path: string, signal?: AbortSignal): Promise<T> {
   return (await (await request(path, signal ? { signal } : {})).json()) as T;
 }
 
-const post = (path: string, body: unknown): Promise<Response> =>
-  request(path, { method: 'POST', headers: { 'Content-Type': 'application/json' }, body: JSON.stringify(body) });
+const change = (method: string, path: string, body?: unknown): Promise<Response> => request(path, {
+  method, headers: { 'Content-Type': 'application/json', ...(credentials.csrf ? { 'X-Csrf-Token': credentials.csrf } : {}) }, ...(body === undefined ? {} : { body: JSON.stringify(body) }),
+});
+const post = (path: string, body: unknown): Promise<Response> => change('POST', path, body);
 
 const id = encodeURIComponent;
 
@@ -60,9 +71,20 @@ export const api = {
   budget: (rig: string) => get<Budget>(`api/rigs/${id(rig)}/budget`),
   alarms: () => get<Alarm[]>('api/alarms'),
   // `by` may be empty: the server then says "console".
-  alarm: (a: Alarm, path: Step['path'], by: string) => post(`api/alarms/${id(a.id)}/${path}`, { revision: a.revision, reason: '', by, request_id: uuid() }),
+  alarm: (a: Alarm, path: AlarmPath, by: string, reason: string, shelf: number) =>
+    post(`api/alarms/${id(a.id)}/${path}`, { revision: a.revision, reason, by, request_id: uuid(), ...(shelf > 0 ? { seconds: shelf } : {}) }),
   mark: (run: string, text: string, by: string) => post(`api/runs/${id(run)}/marks`, { text, by, request_id: uuid() }),
   run: (rig: string, action: 'start' | 'end', by: string) => post(`api/rigs/${id(rig)}/runs`, { action, by, request_id: uuid() }),
+  entry: (run: string, e: { name: string; value: number | null; unit: string; text: string }, by: string) => post(`api/runs/${id(run)}/entries`, { ...e, by, request_id: uuid() }),
+  swap: (rig: string, e: { channel: string; serial: string; valid_from: string; reason: string }, by: string) => post(`api/rigs/${id(rig)}/swap`, { ...e, by, request_id: uuid() }),
+  readmit: (rig: string, channel: string, reason: string, by: string) => post(`api/rigs/${id(rig)}/readmit`, { channel, reason, by, request_id: uuid() }),
+  config: (rig: string, approvedBy: string, reason: string, by: string) => post(`api/rigs/${id(rig)}/config`, { by, approved_by: approvedBy, reason, request_id: uuid() }),
+  session: () => get<Partial<Session>>('api/session'),
+  login: async (name: string, password: string) => (await (await post('api/session', { name, password })).json()) as Partial<Session>,
+  logout: () => change('DELETE', 'api/session'),
+  figures: (run: string | null) => get<AlarmFigures>(run === null ? 'api/alarms/figures' : `api/runs/${id(run)}/alarm-figures`),
+  exceedances: (run: string) => get<ExceedanceReply>(`api/runs/${id(run)}/exceedances`),
+  log: (run: string) => get<{ entries: LogEntry[] | null }>(`api/runs/${id(run)}/log`),
   runs: () => get<RunSummary[]>('api/runs'),
   runSummary: (run: string) => get<RunSummary>(`api/runs/${id(run)}`),
   series: (run: string, names: readonly string[], from: number, to: number, points: number, signal?: AbortSignal) =>

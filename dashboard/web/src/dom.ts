@@ -38,11 +38,16 @@ export function style(el: HTMLElement, name: string, v: string): void {
   if (el.style.getPropertyValue(name) !== v) el.style.setProperty(name, v);
 }
 
-/** Replaces the children of a list only when its content, told by `key`, changed. */
+/**
+ * Replaces the children of a list only when its content, told by `key`, changed. The
+ * focus stays on the control of the same `data-focus`.
+ */
 export function refill(el: HTMLElement, key: string, make: () => Node[]): void {
   if (el.dataset['key'] === key) return;
   el.dataset['key'] = key;
+  const held = el.contains(document.activeElement) ? (document.activeElement as HTMLElement).dataset['focus'] : undefined;
   el.replaceChildren(...make());
+  if (held !== undefined) [...el.querySelectorAll<HTMLElement>('[data-focus]')].find((e) => e.dataset['focus'] === held)?.focus();
 }
 
 /** What a page or a part of it is to the draw loop. `update` runs at most 20 times a second. */

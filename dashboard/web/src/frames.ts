@@ -30,6 +30,8 @@ export interface Alarm {
   first_out: boolean;
   group: string;
   unknown: boolean;
+  under?: string | null; // id of the alarm that it is a consequence of
+  dimension?: string; // of the value
 }
 
 /** What is used up of the allowance of one EGT band. */
@@ -90,7 +92,89 @@ export interface RigInfo {
 }
 
 export interface Source { topic: string; age_s: Num; messages: number; skew_s: Num; alive: boolean }
+/** Whether a part beside the watch follows, and what is said of it. */
+export interface PartHealth { ok: boolean; text: string }
 export interface Session { filter: string; connected: boolean }
+
+/** A line of the operator log; fields that are not used are left out. */
+export interface LogEntry {
+  t?: string; // in lists; a frame has its own
+  what: string;
+  alarm?: string | null;
+  rule?: string | null;
+  channel?: string | null;
+  name?: string | null;
+  value?: Num;
+  unit?: string | null;
+  text?: string;
+  reason?: string;
+  by?: string;
+  role?: string;
+  valid_from?: string | null;
+  serial?: string | null;
+}
+
+/** The rig and rule files in force. */
+export interface ConfigState {
+  hash: string;
+  by: string;
+  approved_by: string;
+  since: string | null;
+  refused: { t: string; why: string } | null;
+}
+
+/** What an engine has been through, over all its runs. */
+export interface Life {
+  engine_serial: string;
+  starts: number;
+  hot_starts: number;
+  hung_starts: number;
+  no_lights: number;
+  flame_outs: number;
+  hours: number;
+  cycles: number;
+  bands: { name: string; seconds: number; peak_k: Num; excursions: number; exceedances: number }[] | null;
+}
+
+/** One excursion above an EGT band. */
+export interface Exceedance {
+  band: string;
+  kind: string;
+  limit_k: number;
+  allowance_s: number;
+  began: string;
+  ended: string | null;
+  duration_s: number;
+  assumed_s: number;
+  peak_k: Num;
+  exceeded: boolean;
+  above: { band: string; seconds: number }[] | null;
+}
+/** Something that happened to the engine in a run. */
+export interface EngineEvent { t: string; event: string; egt_k: Num; speed_rpm: Num; rundown_s: Num }
+export interface ExceedanceReply { exceedances: Exceedance[] | null; events?: EngineEvent[] | null; life: Life | null }
+
+/** How an alarm system did over a time, against published targets. */
+export interface AlarmFigures {
+  from: string;
+  to: string;
+  seconds: number;
+  graded: boolean;
+  why_not: string | null;
+  raised: number;
+  per_10_min: Num;
+  peak_10_min: Num;
+  peak_at: string | null;
+  standing_now: number;
+  standing_peak: number;
+  standing_mean: Num;
+  chattering: { rule: string; times: number }[] | null;
+  shelved: number;
+  out_of_service: number;
+  acknowledged_after_s_median: Num;
+  by_priority: Partial<Record<Priority, { raised: number; share: Num }>> | null;
+  targets: { figure: string; target: number; met: boolean | null; source: string }[] | null;
+}
 
 interface Numbered { epoch: number; n: number; t: string }
 
@@ -108,6 +192,9 @@ export interface StatusFrame extends Numbered {
   run_active: boolean;
   rules_unknown: number;
   sessions: Session[] | null;
+  clock_skew_s?: Num;
+  database?: PartHealth | null; // where the site has one
+  webhook?: PartHealth | null;
 }
 
 export interface HelloFrame extends Numbered {
@@ -126,6 +213,9 @@ export interface HelloFrame extends Numbered {
   alarms: Alarm[] | null;
   ledgers: Ledger[] | null;
   status: StatusFrame | null;
+  log?: LogEntry[] | null;
+  life?: Life | null;
+  config?: ConfigState | null;
 }
 
 /** Quantities of an operating point that the page shows; keys as in the API. */
@@ -165,18 +255,27 @@ export interface PointFrame extends Numbered, Partial<Record<Quantity, Num>> {
   warnings: string[] | null;
 }
 
-export interface ChannelValue { value: Num; raw: Num; quality: string; age_s: Num }
+export interface ChannelValue {
+  value: Num;
+  raw: Num;
+  quality: string;
+  age_s: Num;
+  finding?: string; // what is wrong with the sensor; "" for nothing
+  proven?: boolean; // else it is suspected
+}
 export interface ChannelsFrame extends Numbered { kind: 'channels'; channels: Record<string, ChannelValue> }
 export interface AlarmFrame extends Numbered { kind: 'alarm'; alarm: Alarm }
 export interface LedgerFrame extends Numbered { kind: 'ledger'; bands: Ledger[] }
 export interface Mark { text: string; by: string }
 export interface MarkFrame extends Numbered { kind: 'mark'; mark: Mark }
 export interface RunFrame extends Numbered { kind: 'run'; event: 'started' | 'ended'; run: Run }
+export interface LogFrame extends Numbered { kind: 'log'; entry: LogEntry }
+export interface ConfigFrame extends Numbered { kind: 'config'; config: ConfigState }
 export interface ResetFrame { kind: 'reset'; reason: string }
 
 export type Frame =
   | HelloFrame | PointFrame | ChannelsFrame | AlarmFrame | LedgerFrame
-  | StatusFrame | MarkFrame | RunFrame | ResetFrame;
+  | StatusFrame | MarkFrame | RunFrame | LogFrame | ConfigFrame | ResetFrame;
 
 /** A line of /api/runs. */
 export interface RunSummary {

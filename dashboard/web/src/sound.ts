@@ -2,6 +2,7 @@
 // has been pressed the page says plainly that sound is off.
 
 import type { Priority } from './frames';
+import { Mute } from './mute';
 
 /** Tones of one burst: frequency Hz, start s, length s. */
 const bursts: Record<'warning' | 'caution' | 'link' | 'test', [number, number, number][]> = {
@@ -16,11 +17,13 @@ const every = { warning: 1200, caution: 6000, link: 10_000 };
 export class Sound {
   private context: AudioContext | null = null;
   private last = { warning: -Infinity, caution: -Infinity, link: -Infinity };
+  private readonly mute = new Mute();
 
   get armed(): boolean { return this.context?.state === 'running'; }
 
   /** Turns sound on (with a short test tone) or off; call from a gesture. */
   async toggle(): Promise<void> {
+    this.mute.end();
     if (this.armed) {
       await this.context?.suspend();
       return;
@@ -30,9 +33,24 @@ export class Sound {
     this.play('test');
   }
 
-  /** To be called often: plays what is due for the most urgent condition. */
-  tick(alarm: Priority | null, linkLost: boolean, now: number): void {
-    if (!this.armed) return;
+  /** A short tone; nothing while sound is off. */
+  test(): void {
+    if (this.armed) this.play('test');
+  }
+
+  /** Silences what sounds for a time, s; 0 ends that. `warnings` name those that are there. */
+  muteFor(now: number, seconds: number, warnings: Iterable<string>): void {
+    if (seconds > 0) this.mute.start(now, seconds, warnings); else this.mute.end();
+  }
+
+  /** Seconds of mute that are left. */
+  muteLeft(now: number): number {
+    return this.mute.left(now);
+  }
+
+  /** To be called often: plays what is due for the most urgent condition; `warnings` name those that sound. */
+  tick(alarm: Priority | null, linkLost: boolean, warnings: readonly string[], now: number): void {
+    if (!this.armed || this.mute.holds(now, warnings)) return;
     const due = alarm === 'warning' ? 'warning' : alarm === 'caution' ? 'caution' : linkLost ? 'link' : null;
     if (!due || now - this.last[due] < every[due]) return;
     this.last[due] = now;

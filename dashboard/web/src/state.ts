@@ -3,9 +3,11 @@
 // time in milliseconds.
 
 import type {
-  Alarm, AlarmFrame, AlarmState, Band, Channel, ChannelValue, Frame, HelloFrame, Ledger, MarkFrame, PointFrame, Priority, RigInfo, Run, StatusFrame,
+  Alarm, AlarmFrame, AlarmState, Band, Channel, ChannelValue, ConfigState, Frame, HelloFrame, Ledger, Life, LogEntry, MarkFrame, PointFrame, Priority, RigInfo, Run, StatusFrame,
 } from './frames';
+import { enter } from './oplog';
 import { Ring, pointRow } from './ring';
+import { Sparks } from './spark';
 import { seconds } from './time';
 
 export interface Flag { t: number; kind: Priority | 'mark'; text: string; id: string }
@@ -29,6 +31,10 @@ export interface Model {
   ledgers: Ledger[];
   status: StatusFrame | null;
   flags: Flag[]; // by time, the last 500
+  log: LogEntry[]; // of the operators, oldest first, the last 500
+  config: ConfigState | null;
+  life: Life | null;
+  sparks: Sparks;
   ring: Ring;
   epoch: number;
   n: number;
@@ -46,7 +52,7 @@ const kept = 500;
 export function newModel(replay = false): Model {
   return {
     replay, rig: null, run: null, channels: [], bands: [], armedAbove: null, scanRate: 20, configHash: '', build: '',
-    point: null, values: {}, valuesAt: -Infinity, alarms: new Map(), history: [], ledgers: [], status: null, flags: [], ring: new Ring(),
+    point: null, values: {}, valuesAt: -Infinity, alarms: new Map(), history: [], ledgers: [], status: null, flags: [], log: [], config: null, life: null, sparks: new Sparks(), ring: new Ring(),
     epoch: 0, n: 0, ticks: 0, frameAt: -Infinity, pointAt: -Infinity, statusAt: -Infinity, hostTime: NaN, newest: NaN, resets: 0,
   };
 }
@@ -70,12 +76,18 @@ export function apply(m: Model, f: Frame, now: number): void {
     case 'channels':
       m.values = { ...m.values, ...f.channels };
       m.valuesAt = now;
+      m.sparks.push(seconds(f.t), f.channels);
       break;
     case 'alarm': alarm(m, f.alarm, seconds(f.t)); break;
     case 'ledger': m.ledgers = f.bands; break;
     case 'status': status(m, f, now); break;
     case 'mark':
       mark(m, f);
+      break;
+    case 'log': enter(m.log, { t: f.t, ...f.entry }, kept); break;
+    case 'config':
+      m.config = f.config;
+      m.configHash = f.config.hash;
       break;
     case 'run':
       m.run = f.event === 'started' ? f.run : m.run && m.run.id === f.run.id ? f.run : m.run;
@@ -101,6 +113,9 @@ function hello(m: Model, f: HelloFrame, now: number): void {
   m.scanRate = f.scan_rate;
   m.configHash = f.config_hash;
   m.build = f.build;
+  m.config = f.config ?? null;
+  m.life = f.life ?? null;
+  for (const e of f.log ?? []) enter(m.log, e, kept);
   if (f.status) status(m, f.status, now);
   const host = seconds(f.host_time);
   if (Number.isFinite(host)) [m.hostTime, m.statusAt] = [host, now];

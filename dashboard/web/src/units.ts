@@ -121,10 +121,10 @@ export const width = (s: Scale, v: Maybe): number | null => (typeof v === 'numbe
 const handy: Record<string, string> = { 'Pa': 'kPa', 'K': 'degC', 'N': 'kN', 'm2': 'cm2' };
 
 /** A value of an alarm, given in the unit of what its rule compares. */
-export function alarmValue(set: UnitSet, v: number, unitName: string, words: string): string {
-  // "K" may be a temperature or a difference of two. No gas here is below 200 K, the
-  // end of the gas model, and an alarm on a larger difference names it.
-  const apart = unitName === 'K' && (v < 200 || /spread|difference/i.test(words));
+export function alarmValue(set: UnitSet, v: number, unitName: string, words: string, dimension = ''): string {
+  // "K" may be a temperature or a difference of two. Where the dimension is not told:
+  // no gas here is below 200 K, the end of the gas model, and a larger difference names it.
+  const apart = unitName === 'K' && (dimension ? /difference/.test(dimension) : v < 200 || /spread|difference/i.test(words));
   const name = set.system === 'us' ? set.channel(unitName) : apart ? 'K' : handy[unitName] ?? unitName;
   const [given, wanted] = [units[unitName], units[name]];
   if (!given || !wanted) return `${significant(v, 4)} ${unitName}`;

@@ -1,6 +1,6 @@
 // How values of an operating point are put into words.
 
-import type { Num, PointFrame } from './frames';
+import type { ChannelValue, Num, PointFrame } from './frames';
 import { fixed, signed } from './units';
 
 export interface StateLook { shape: string; word: string; marginal: boolean; cause: string }
@@ -69,3 +69,8 @@ export function standIns(p: PointFrame | null): string[] {
 
 /** A source of a value, for people. */
 export const sourceWord = (s: string): string => sources[s] ?? s.replaceAll('_', ' ');
+
+/** What is wrong with a sensor, and whether that is proven; "" for nothing. */
+export function findingText(v: ChannelValue): string {
+  return v.finding ? `${v.finding.replaceAll('_', ' ')} (${v.proven ? 'proven' : 'suspected'})` : '';
+}

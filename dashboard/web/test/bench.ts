@@ -5,6 +5,7 @@ import type { Display } from '../src/context';
 import { cssVariables, light } from '../src/palette';
 import { columns } from '../src/ring';
 import { newModel } from '../src/state';
+import { openSession } from '../src/session';
 import '../src/style.css';
 import { fixed, unitSets } from '../src/units';
 import { type Plot, traces } from '../src/watch/traces';
@@ -36,7 +37,7 @@ async function run(seconds: number): Promise<Figures> {
     lines: [{ column: columns[i % columns.length] as (typeof columns)[number], name: '', show: (v) => fixed(v, 2) }],
   });
   const units = unitSets.si;
-  const display: Display = { rig: '', model: () => model, fresh: () => ({ kind: 'live', age: 0 }), palette: () => light, units: () => units, operator: () => '', acknowledger: null };
+  const display: Display = { rig: '', model: () => model, fresh: () => ({ kind: 'live', age: 0 }), palette: () => light, units: () => units, operator: () => '', session: () => openSession, acknowledger: null };
   const view = traces(display, null, () => Array.from({ length: charts }, (_, i) => plot(i)));
   const style = document.createElement('style');
   style.textContent = `:root{${cssVariables(light)}}body{display:block}.traces{height:880px;width:1400px}`;

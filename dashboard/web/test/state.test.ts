@@ -66,6 +66,20 @@ test('a latched alarm that comes again sets a second flag at its new time', () =
   assert.deepEqual(m.flags.map((f) => f.t), [t0, t0 + 60]);
 });
 
+test('log, files in force and life come with the hello and go on by frames', () => {
+  const m = fold(
+    [hello(t0, { log: [{ what: 'mark', t: rfc3339(t0 - 5), text: 'earlier' }], config: { hash: 'aa', by: 'R. Sorrel', approved_by: 'L. Hazel', since: rfc3339(t0), refused: null } }), 0],
+    [{ kind: 'log', epoch: 1, n: 3, t: rfc3339(t0 + 1), entry: { what: 'acknowledge', rule: 'egt', by: 'M. Alder' } }, 1],
+    [{ kind: 'config', epoch: 1, n: 4, t: rfc3339(t0 + 2), config: { hash: 'bb', by: 'R. Sorrel', approved_by: '', since: rfc3339(t0 + 2), refused: { t: rfc3339(t0 + 2), why: 'engine not off' } } }, 2],
+  );
+  assert.deepEqual(m.log.map((e) => e.what), ['mark', 'acknowledge']);
+  assert.equal(m.log[1]?.t, rfc3339(t0 + 1), 'the time of the frame');
+  assert.equal(m.configHash, 'bb');
+  assert.equal(m.config?.refused?.why, 'engine not off');
+  apply(m, hello(t0 + 9), 9);
+  assert.deepEqual([m.config, m.life, m.log.length], [null, null, 2], 'a server that tells nothing of them');
+});
+
 test('history and flags stay bounded', () => {
   const m = newModel();
   for (let i = 0; i < 1200; i++) apply(m, alarmFrame(alarm({ id: `a${i}`, raised: rfc3339(t0 + i) }), t0 + i, i), i);

@@ -76,6 +76,7 @@ test('the value of an alarm', () => {
   assert.deepEqual([alarmValue(si, 993.9, 'K', 'egt_run_max_over'), alarmValue(us, 993.9, 'K', 'egt_run_max_over')], ['720.8 °C', '1329 °F']);
   assert.deepEqual([alarmValue(si, 45, 'K', 'egt_spread'), alarmValue(us, 45, 'K', 'egt_spread')], ['45 K', '81 °F']);
   assert.equal(alarmValue(si, 250, 'K', 'EGT spread wide'), '250 K', 'a large difference says so');
+  assert.deepEqual([alarmValue(si, 250, 'K', 'EGT', 'temperature_difference'), alarmValue(si, 150.45, 'K', 'T2', 'temperature')], ['250 K', '−122.7 °C'], 'the dimension decides where it is told');
   assert.deepEqual([alarmValue(si, 30e3, 'Pa', ''), alarmValue(us, 30e3, 'Pa', '')], ['30 kPa', '4.351 psi']);
   assert.deepEqual([alarmValue(si, 20124, 'rpm', ''), alarmValue(us, 20124, 'rpm', '')], ['20124 rpm', '20124 rpm']);
   assert.equal(alarmValue(si, 5.05, 's', ''), '5.050 s');

@@ -8,8 +8,10 @@ import type { Frame, RunSummary } from '../frames';
 import { firstChunk, reach, rowsOf } from '../history';
 import { Player, speeds } from '../player';
 import { type Period, periods } from '../ring';
+import { openSession } from '../session';
 import type { Flag } from '../state';
 import { dateClock, duration, seconds } from '../time';
+import { recordView } from './record';
 import { font, surface } from '../watch/canvas';
 import { watchDisplay } from '../watch/display';
 
@@ -24,6 +26,8 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
   let choke: Period[] = [];
   let phases: Period[] = [];
   let scrubbing: number | null = null;
+  let record: View | null = null;
+  let shown: 'Display' | 'Record' = 'Display';
   const over = new AbortController();
 
   const button = (label: string, name: string, act: () => void): HTMLButtonElement => h('button', { type: 'button', 'aria-label': name, title: name, onclick: act }, label);
@@ -34,13 +38,23 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
   const bar = surface('scrubshade', 'Choked periods, phases, alarms and marks of the run');
   const scrub = h('input', { type: 'range', min: '0', max: '1', step: '0.05', value: '0', 'aria-label': 'Position in the run', 'data-q': 'scrub',
     oninput: () => { scrubbing = Number(scrub.value); }, onchange: () => { scrubbing = null; go(Number(scrub.value)); } });
+  const choices = (['Display', 'Record'] as const).map((w) => h('button', { type: 'button', 'data-q': `show-${w.toLowerCase()}`, 'aria-pressed': String(w === 'Display'), onclick: () => choose(w) }, w));
   const controls = h('div', { class: 'controls', role: 'group', 'aria-label': 'Replay controls' },
     h('span', { class: 'replayword' }, 'REPLAY'), play,
     button('◂|', 'Back one scan', () => back()), button('|▸', 'Forward one scan', () => forward()),
     speed, button('⚑ ◂', 'Previous alarm or mark', () => jump(-1)), button('▸ ⚑', 'Next alarm or mark', () => jump(1)),
-    h('div', { class: 'scrub' }, bar.el, scrub), clockText, trouble);
+    h('div', { class: 'scrub' }, bar.el, scrub), clockText, trouble, ...choices);
   const body = h('div', { class: 'replaybody' }, h('p', { class: 'loading' }, 'Reading the run…'));
   const el = h('div', { class: 'replay', 'data-q': 'replay-frame' }, controls, body, h('div', { class: 'watermark', 'aria-hidden': 'true' }, 'REPLAY'));
+
+  /** The display as it was at the position, or what is on record of the whole run. */
+  function choose(what: 'Display' | 'Record'): void {
+    if (!inner) return;
+    if (what === 'Record') record ??= recordView(runID, () => run?.ended === null, taste.units);
+    shown = what;
+    choices.forEach((b) => attr(b, 'aria-pressed', String(b.textContent === what)));
+    body.replaceChildren(what === 'Record' && record ? record.el : inner.el);
+  }
 
   const now = (): number => performance.now();
   function go(position: number): void {
@@ -93,7 +107,7 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
       },
       before: async (to, signal) => (to <= 0 ? [] : rowsOf(api, runID, start, Math.max(0, to - reach), to, young, signal)),
     }, start, length);
-    const display: Display = { rig, model: () => p.model, fresh: () => ({ kind: 'replay' }), palette: taste.palette, units: taste.units, operator: () => '', acknowledger: null };
+    const display: Display = { rig, model: () => p.model, fresh: () => ({ kind: 'replay' }), palette: taste.palette, units: taste.units, operator: () => '', session: () => openSession, acknowledger: null };
     inner = watchDisplay(display, null);
     body.replaceChildren(inner.el);
     player = p;
@@ -150,27 +164,28 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
 
   return {
     el,
-    update(at) {
-      const dt = Number.isNaN(last) ? 0 : Math.min(1, (at - last) / 1000); // a hidden page does not leap
-      last = at;
+    update(time) {
+      const dt = Number.isNaN(last) ? 0 : Math.min(1, (time - last) / 1000); // a hidden page does not leap
+      last = time;
       if (!player || !inner || !run) return;
-      player.advance(dt, at);
+      player.advance(dt, time);
       // The fold knows no flags from before a jump; the overview does.
       if (complete) player.model.flags = events.filter((e) => e.t <= start + (player as Player).position);
-      const shown = scrubbing ?? player.position;
-      if (scrubbing === null && Math.abs(Number(scrub.value) - shown) > 0.04) scrub.value = String(shown);
-      const phase = phases.find((k) => shown >= k.from && shown < k.to)?.word ?? '';
-      attr(scrub, 'aria-valuetext', `${duration(shown)} of ${duration(player.length)}${phase && `, ${phase}`}`);
+      const at = scrubbing ?? player.position;
+      if (scrubbing === null && Math.abs(Number(scrub.value) - at) > 0.04) scrub.value = String(at);
+      const phase = phases.find((k) => at >= k.from && at < k.to)?.word ?? '';
+      attr(scrub, 'aria-valuetext', `${duration(at)} of ${duration(player.length)}${phase && `, ${phase}`}`);
       text(play, player.playing ? 'Pause' : 'Play');
-      text(clockText, `${duration(shown)} of ${duration(player.length)} · ${dateClock(start + shown)} UTC`);
+      text(clockText, `${duration(at)} of ${duration(player.length)} · ${dateClock(start + at)} UTC`);
       text(trouble, player.problem ? `Stopped: ${player.problem}` : player.playing && player.waiting ? 'reading…' : '');
       paintBar(player.length);
-      inner.update(at);
+      if (shown === 'Display') inner.update(time); else record?.update(time);
     },
     destroy() {
       over.abort();
       player?.stop();
       inner?.destroy();
+      record?.destroy();
       bar.destroy();
       document.removeEventListener('keydown', onKey);
     },

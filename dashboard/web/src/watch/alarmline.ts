@@ -1,7 +1,7 @@
 // The one alarm line: the most urgent alarm, what it means, what to do.
 
 import { needsAcknowledge, nextStep, priorityLook, standing, stateWord } from '../alarms';
-import type { Display } from '../context';
+import { type Display, hindrance } from '../context';
 import { type View, attr, h, text } from '../dom';
 import type { Alarm } from '../frames';
 import { believable } from '../state';
@@ -14,7 +14,7 @@ export function alarmLine(d: Display): View {
   const title = h('div', { class: 'title', 'data-q': 'alarm-text' });
   const caution = h('div', { class: 'caution', 'data-q': 'alarm-caution' });
   const response = h('div', { class: 'response', 'data-q': 'alarm-response' });
-  const button = h('button', { class: 'ack', type: 'button', 'data-q': 'acknowledge', onclick: () => { if (shown) d.acknowledger?.send(shown); } }, 'Acknowledge');
+  const button = h('button', { class: 'ack', type: 'button', 'data-q': 'acknowledge', 'aria-keyshortcuts': 'A', onclick: press }, 'Acknowledge');
   const others = h('a', { class: 'others', href: '#/alarms' });
   const polite = h('div', { class: 'spoken', role: 'status', 'aria-live': 'polite' });
   const urgent = h('div', { class: 'spoken', role: 'alert', 'aria-live': 'assertive' });
@@ -22,6 +22,10 @@ export function alarmLine(d: Display): View {
   const el = h('section', { class: 'alarmline', 'aria-label': 'Most urgent alarm' },
     h('div', { class: 'priority' }, h('div', {}, shape, ' ', word), state), h('div', { class: 'what' }, title, caution, response), act, polite, urgent);
   let shown: Alarm | null = null;
+  function press(): void {
+    const step = shown && nextStep(shown);
+    if (shown && step) d.acknowledger?.send(shown, step.path).catch(() => undefined); // told by its state
+  }
   let spoken = '';
 
   function update(now: number): void {
@@ -45,9 +49,10 @@ export function alarmLine(d: Display): View {
       const sending = a ? d.acknowledger.state(a) : 'idle';
       const step = a && nextStep(a);
       text(button, step ? (sending === 'pending' ? step.doing : step.word) : 'Acknowledged');
-      attr(button, 'disabled', !step || sending === 'pending' || d.fresh(now).kind === 'no_link' || d.fresh(now).kind === 'waiting');
+      const why = step ? hindrance(d, step.path, now) : '';
+      attr(button, 'disabled', !step || sending === 'pending' || why !== '');
       attr(button, 'data-hidden', a === null);
-      const trouble = sending !== 'idle' && sending !== 'pending' ? sending : '';
+      const trouble = sending !== 'idle' && sending !== 'pending' ? sending : why;
       text(others, trouble || (list.length > 1 ? `${list.length - 1} other${list.length > 2 ? 's' : ''} standing` : a ? 'no others standing' : ''));
     }
     const say = a ? `${a.id} ${a.state}` : '';

@@ -1,15 +1,21 @@
 // The EGT ledger: one bar per probe against the bands, and per band how much of
 // its allowance is used.
 
+import { api } from '../api';
 import type { Display } from '../context';
 import { type View, attr, h, refill, style, text } from '../dom';
+import { exceedanceSummary } from '../exceedance';
+import type { Exceedance } from '../frames';
 import { believable } from '../state';
+import { seconds } from '../time';
 import { celsius, fixed, shown } from '../units';
 import { causeWord } from '../words';
 
 const usable = (quality: string): boolean => quality === 'good' || quality === 'held';
 /** Probe values older than this are not shown as present, ms of the page. */
 const valuesTimeout = 1500;
+/** The record of a run is asked for at most this often, ms: it follows the display by a second or two. */
+const recordEvery = 2000;
 
 export function ledger(d: Display): View {
   const bars = h('div', { class: 'probebars' });
@@ -19,6 +25,7 @@ export function ledger(d: Display): View {
   const spread = h('span', { class: 'value', 'data-q': 'spread' }, '–');
   const probesUsed = h('div', { class: 'extra' });
   const rows = h('tbody');
+  const exceeded = h('p', { class: 'exceeded', 'data-q': 'exceedances' });
   const [egtSign, spreadSign] = [h('span', { class: 'unit' }), h('span', { class: 'unit' })];
   const el = h('section', { class: 'ledger', 'aria-label': 'Exhaust gas temperature ledger' },
     h('div', { class: 'egt' },
@@ -27,14 +34,31 @@ export function ledger(d: Display): View {
     h('div', { class: 'probes' }, bars, limits),
     h('div', { class: 'bands' }, h('table', {},
       h('thead', {}, h('tr', {}, ...['EGT band', 'limit', 'this excursion, of allowance', 'in run', 'peak', 'count'].map((t) => h('th', { scope: 'col' }, t)))),
-      rows)));
+      rows), exceeded));
 
   interface Bar { el: HTMLElement; fill: HTMLElement; value: HTMLElement; mark: HTMLElement }
   let drawn: Bar[] = [];
   let tableRows: Map<string, { el: HTMLElement; fill: HTMLElement; figure: HTMLElement; run: HTMLElement; peak: HTMLElement; count: HTMLElement }> = new Map();
 
+  // What is on record of the run: asked for when an excursion begins, ends or exceeds.
+  let recorded: readonly Exceedance[] = [];
+  let asked = '';
+  let askedAt = -Infinity;
+  function askRecord(now: number): void {
+    const m = d.model();
+    const key = m.run ? `${m.run.id} ${m.replay || m.ledgers.map((l) => `${l.excursions}${l.over}${l.exceeded}`).join()}` : '';
+    if (key === asked || now - askedAt < recordEvery) return;
+    if (asked.split(' ')[0] !== m.run?.id) recorded = [];
+    [asked, askedAt] = [key, now];
+    if (m.run) api.exceedances(m.run.id).then((r) => { if (asked === key) recorded = r.exceedances ?? []; }, () => undefined); // the bands above tell what is used up
+  }
+
   function update(now: number): void {
     const m = d.model();
+    askRecord(now);
+    const said = exceedanceSummary(recorded.filter((e) => !(seconds(e.began) > m.newest)), d.units());
+    text(exceeded, said);
+    attr(exceeded, 'title', said || null);
     const fresh = d.fresh(now);
     const believed = believable(fresh);
     const p = believed ? m.point : null;

@@ -38,7 +38,7 @@ export function numbers(d: Display): View {
   phase.el.classList.add('words');
   const armed = cell('Choke watch', 'armed');
   armed.el.classList.add('words');
-  const referred = cell('Referred flow W√θ/δ', 'referred');
+  const referred = cell('Referred flow', 'referred');
   const time = cell('Run clock', 'clock');
   attr(time.extra, 'data-q', 'run');
   const steady = note('Steadiness', 'steady');

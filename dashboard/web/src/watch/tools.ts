@@ -2,9 +2,9 @@
 // the run's time line, starts or ends a run by hand.
 
 import { api } from '../api';
-import { ask } from '../ask';
-import type { Display } from '../context';
-import { type View, attr, h, text } from '../dom';
+import { ask, withdraw } from '../ask';
+import { type Display, gate } from '../context';
+import { type View, h, text } from '../dom';
 import { activeRun } from '../state';
 
 /** A button that starts or ends a run after a confirmation; `told` says what came of it. */
@@ -30,10 +30,9 @@ export function runButton(d: Display, told: HTMLElement): View & { el: HTMLButto
     el,
     update(now) {
       text(el, activeRun(d.model()) ? 'End run…' : 'Start run…');
-      const gone = d.fresh(now).kind;
-      attr(el, 'disabled', busy || gone === 'no_link' || gone === 'waiting');
+      gate(el, d, 'run', now, busy);
     },
-    destroy: () => document.querySelector<HTMLDialogElement>('dialog.ask')?.close(),
+    destroy: withdraw,
   };
 }
 
@@ -78,7 +77,7 @@ export function watchTools(d: Display): View {
     el,
     update(now) {
       run.update(now);
-      attr(button, 'disabled', d.fresh(now).kind === 'no_link' || !activeRun(d.model()));
+      gate(button, d, 'mark', now, !activeRun(d.model()));
     },
     destroy() {
       document.removeEventListener('keydown', onKey);
