@@ -206,8 +206,8 @@ func TestAlarmActions(t *testing.T) {
 		{"egt_run_max_exceeded", "shelve", `"reason":"x","seconds":60`, http.StatusConflict, "warning"},
 		{"egt_run_max_exceeded", "reset", `"reason":""`, http.StatusConflict, "no reset"},
 		{"egt_run_max_over", "out-of-service", `"reason":" "`, http.StatusConflict, "reason"},
-		{"egt_run_max_over", "out-of-service", `"reason":"x"`, http.StatusAccepted, ""},
-		{"egt_run_max_over", "in-service", `"reason":"x"`, http.StatusAccepted, ""},
+		{"egt_run_max_over", "out-of-service", `"reason":"x"`, http.StatusConflict, "engine off"},
+		{"egt_run_max_over", "in-service", `"reason":"x"`, http.StatusConflict, "no in_service"},
 	} {
 		a, ok := d.alarm(tt.rule)
 		if !ok {

@@ -6,6 +6,7 @@ import (
 	"strings"
 	"time"
 
+	"throatwatch/monitor"
 	"throatwatch/rules/alarm"
 )
 
@@ -30,8 +31,9 @@ type Action struct {
 	Revision uint64 // that the operator saw
 	Reason   string
 	By       string
-	Role     string // out of service and back is for an engineer
-	For      int64  // of shelving, ns
+	Role     string        // out of service and back is for an engineer
+	For      int64         // of shelving, ns
+	Phase    monitor.Phase // of the engine, unknown when it is not known now
 }
 
 // Errors of Act.
@@ -70,7 +72,7 @@ func (s *Set) Act(st *State, t int64, a Action) (Alarm, error) {
 	s.move(st, i, input, t, "")
 	switch input {
 	case alarm.Acknowledge:
-		in.AckBy, in.AckAt = a.By, t
+		in.AckBy, in.AckAt, in.Told = a.By, t, in.Peak // the operator saw it up to here
 	case alarm.Shelve:
 		in.AsideBy, in.Reason, in.Until = a.By, a.Reason, t+a.For
 	case alarm.Remove:
@@ -131,6 +133,10 @@ func (p *program) input(a *Action) (alarm.Input, error) {
 			return 0, refused("out of service and back needs a reason")
 		case strings.ReplaceAll(a.Do, "-", "_") == DoInService:
 			return alarm.Restore, nil
+		case a.Phase == monitor.PhaseUnknown:
+			return 0, refused("an alarm goes out of service only with the engine off, and its phase is not known")
+		case a.Phase != monitor.Off:
+			return 0, refused("an alarm goes out of service only with the engine off; its phase is %s", a.Phase)
 		}
 		return alarm.Remove, nil
 	}

@@ -4,6 +4,8 @@ import (
 	"fmt"
 	"math"
 	"regexp"
+	"slices"
+	"strings"
 
 	"throatwatch/monitor"
 )
@@ -19,7 +21,8 @@ const (
 
 // Set is a compiled set of rules. It is read-only: its state is in a State.
 type Set struct {
-	rules []program
+	rules []program // those that were written, then those that tell that one of them is unknown
+	wrote int       // how many were written
 	names []Name
 }
 
@@ -27,11 +30,15 @@ type Set struct {
 type program struct {
 	Rule
 	compiled
-	deadband float64 // in the unit of what is compared
+	deadband float64    // in the unit of what is compared
+	value    numberFunc // nil = it has none
+	measure  measure    // of the value
+	worsenBy float64    // in the unit of the value
 	domain   Domain
 	text     template
 	unit     string
 	suppress [monitor.NumPhases]bool
+	doubts   int // the rule whose being unknown this one tells; -1 = an ordinary rule
 }
 
 var ruleName = regexp.MustCompile(`^[a-z][a-z0-9_]*$`)
@@ -39,7 +46,7 @@ var ruleName = regexp.MustCompile(`^[a-z][a-z0-9_]*$`)
 // Compile compiles rules against the names of an environment. It gives every
 // fault that it finds; with any, the set is nil.
 func Compile(rules []Rule, names []Name) (*Set, []Fault) {
-	set := &Set{rules: make([]program, len(rules)), names: names}
+	set := &Set{rules: make([]program, len(rules)), wrote: len(rules), names: names}
 	ix := indexOf(names)
 	seen := make(map[string]bool, len(rules))
 	var faults []Fault
@@ -57,7 +64,7 @@ func Compile(rules []Rule, names []Name) (*Set, []Fault) {
 			add("name", &exprFault{0, fmt.Sprintf("rule %q is there twice", r.Name), "give it another name"})
 		}
 		seen[r.Name] = true
-		p := program{Rule: *r, deadband: r.Deadband}
+		p := program{Rule: *r, deadband: r.Deadband, doubts: -1}
 		var fault *exprFault
 		p.compiled, fault = compileExpression(r.When, names, ix)
 		add("when", fault)
@@ -66,11 +73,21 @@ func Compile(rules []Rule, names []Name) (*Set, []Fault) {
 		for _, f := range p.checkPlain(fault == nil, names) {
 			add(f.field, &f.exprFault)
 		}
+		add("unknown", p.checkDoubt(func(name string) bool {
+			return slices.ContainsFunc(rules, func(other Rule) bool { return other.Name == name })
+		}))
+		add("value", p.compileValue(names, ix))
+		add("worsen_by", p.checkWorsening())
 		p.settle(names)
 		set.rules[i] = p
 	}
 	if len(faults) > 0 {
 		return nil, faults
+	}
+	for i := range rules {
+		if rules[i].Unknown.Priority != 0 {
+			set.rules = append(set.rules, set.rules[i].doubting(i))
+		}
 	}
 	return set, nil
 }
@@ -137,19 +154,73 @@ func (p *program) convertDeadband() (message, hint string) {
 	return "", ""
 }
 
-// settle derives what a step needs from the compiled parts.
-func (p *program) settle(names []Name) {
-	if p.subject < 0 {
-		for _, part := range p.text {
-			if part.slot >= 0 && part.typ == Number {
-				p.subject = part.slot
-				break
-			}
+// compileValue compiles what the alarm shows as its value, and in which way that gets
+// worse: as the condition becomes true by it, upward if that does not tell.
+func (p *program) compileValue(names []Name, ix index) *exprFault {
+	if p.Value != "" {
+		_, v, at, fault := compileValue(p.Value, names, ix)
+		switch {
+		case fault != nil:
+			return fault
+		case v.typ != Number:
+			return &exprFault{at, "the value is " + v.typ.String(), "name a number, such as egt_indicated_k"}
+		}
+		p.value, p.measure, p.unit = v.number, v.measure, v.measure.name
+		if v.isName {
+			p.unit = names[v.name].Unit
+			p.falling = p.falling && (p.subject < 0 || p.subject == v.name)
+		}
+		return nil
+	}
+	slot := p.subject
+	for _, part := range p.text {
+		if slot < 0 && part.slot >= 0 && part.typ == Number {
+			slot = part.slot
 		}
 	}
-	if p.subject >= 0 {
-		p.unit = names[p.subject].Unit
+	if slot >= 0 {
+		p.value = func(f *Frame) float64 { return f.Numbers[slot] }
+		p.measure, p.unit = names[slot].measure(), names[slot].Unit
 	}
+	return nil
+}
+
+// checkWorsening converts how far the value has to worsen to its unit.
+func (p *program) checkWorsening() *exprFault {
+	p.worsenBy = p.WorsenBy
+	switch {
+	case !(p.WorsenBy >= 0) || math.IsInf(p.WorsenBy, 0):
+		return &exprFault{0, "worsen_by is not a number of zero or more", "give it in the unit of the value of the alarm"}
+	case p.WorsenBy == 0 || p.truth == nil:
+		return nil
+	case p.value == nil:
+		return &exprFault{0, "worsen_by without a value that can get worse", "compare a number, or give one by value:"}
+	case p.WorsenUnit == "":
+		return nil
+	}
+	m := p.measure.difference()
+	u, err := unitAs(p.WorsenUnit, m.dimension, m.rate)
+	if m.plain() || err != nil {
+		hint := "write it without a unit"
+		if !m.plain() {
+			hint = "write " + m.wants()
+		}
+		return &exprFault{0, fmt.Sprintf("worsen_by %g %s, the value is %s", p.WorsenBy, p.WorsenUnit, p.measure), hint}
+	}
+	p.worsenBy = round15(p.WorsenBy * u.Scale / m.scale)
+	return nil
+}
+
+// dimension names what the value of the alarm measures, "" when that does not convert.
+func (p *program) dimension() string {
+	if p.measure.plain() || p.measure.rate {
+		return ""
+	}
+	return strings.ReplaceAll(p.measure.dimension.String(), " ", "_")
+}
+
+// settle derives what a step needs from the compiled parts.
+func (p *program) settle(names []Name) {
 	daemon := len(p.reads) > 0
 	for _, slot := range p.reads {
 		daemon = daemon && names[slot].Daemon
@@ -164,8 +235,8 @@ func (p *program) settle(names []Name) {
 	}
 }
 
-// Len gives the number of rules.
-func (s *Set) Len() int { return len(s.rules) }
+// Len gives the number of rules that were written.
+func (s *Set) Len() int { return s.wrote }
 
 // Rule gives a rule of the set as its author wrote it.
 func (s *Set) Rule(i int) Rule { return s.rules[i].Rule }

@@ -26,6 +26,10 @@ const (
 	groupFlame   = "flame"
 )
 
+// egtWorse is how much hotter an acknowledged over-temperature has to become to ask
+// again, K: about the uncertainty of a thermocouple, no source.
+const egtWorse = 10
+
 const (
 	notProtection = " This display is not protection."
 	ms            = int64(time.Millisecond)
@@ -99,6 +103,7 @@ func bandRules(b *egt.Band) []Rule {
 	}
 	warning := Rule{
 		Name: "egt_" + b.Name + "_exceeded", When: name + ".exceeded", Priority: Warning, Latching: true, Group: groupEGT,
+		Value: "egt_indicated_k", WorsenBy: egtWorse,
 		Title:    what + " beyond " + limit,
 		Text:     what + " {egt_indicated_k:degC.1}, above " + limit + ", where no time is allowed. " + response[:len(response)-1] + " applies." + notProtection,
 		Caution:  "Hot parts may be damaged. Watch indicated EGT, its spread, rotor speed and vibration. The event is to be entered in the engine's log.",
@@ -119,6 +124,7 @@ func bandRules(b *egt.Band) []Rule {
 		response[:len(response)-1] + " applies." + notProtection
 	return []Rule{warning, {
 		Name: "egt_" + b.Name + "_over", When: name + ".over", Priority: Caution, Group: groupEGT,
+		Value: "egt_indicated_k", WorsenBy: egtWorse,
 		Title:    what + " above " + limit,
 		Text:     what + " {egt_indicated_k:degC.1}, above " + limit + ": {" + name + ".remaining_s:s.1} left of " + allowance + perRun + ". Follow the facility's procedure." + notProtection,
 		Caution:  "The time allowance of this limit is running. Watch indicated EGT and its trend.",
@@ -157,7 +163,7 @@ func flameRules(fuelFlow bool) []Rule {
 		},
 		{
 			Name: "flame_out", When: `(phase == "accelerating" or phase == "steady" or phase == "decelerating") and not lit`, Priority: Caution,
-			OnDelay: 200 * ms, OffDelay: second, Group: groupFlame,
+			OnDelay: 200 * ms, OffDelay: second, Group: groupFlame, Unknown: Doubt{Priority: Advisory, After: 5 * second},
 			Title:    "Flame-out",
 			Text:     "Indicated EGT has fallen to {egt_indicated_k:degC.0} at {speed_rpm:.0}: the flame seems to be out. Follow the facility's procedure for a flame-out." + notProtection,
 			Caution:  "Unburnt fuel may gather in the exhaust. Watch fuel flow, rotor speed and indicated EGT.",
@@ -182,6 +188,7 @@ func flameRules(fuelFlow bool) []Rule {
 func probesLost(which, what, caution string) Rule {
 	return Rule{
 		Name: which + "_probe_lost", When: which + "_probes_lost > 0", Priority: Advisory, OnDelay: 3 * second, OffDelay: 5 * second, Group: groupSources,
+		WorsenBy: 1,
 		Title:    strings.ToUpper(what[:1]) + what[1:] + " lost",
 		Text:     "{" + which + "_probes_lost:.0} " + what + "(s) excluded or without a value, {" + which + "_probes_used:.0} in use. The Rig page names them and the cause.",
 		Caution:  caution,
@@ -194,6 +201,7 @@ func daemonRules() []Rule {
 	return []Rule{
 		{
 			Name: "source_lost", When: "sources_lost > 0", Priority: Caution, OffDelay: 2 * second, Group: groupSources,
+			WorsenBy: 1,
 			Title:    "Data source lost",
 			Text:     "{sources_lost:.0} data source(s) fell silent; the newest data is {data_age_s:s.1} old. Follow the facility's procedure for lost instrumentation." + notProtection,
 			Caution:  "What these sources measure is not watched. Alarms that build on them are unknown.",

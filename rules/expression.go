@@ -398,6 +398,9 @@ func (c *compiler) binary(n *ast.BinaryNode, sign float64) (value, *exprFault) {
 // right side if only that is a name. falling tells that the rule becomes true as
 // the left side falls.
 func (c *compiler) watch(l, r value, falling bool) {
+	if !c.out.orders {
+		c.out.falling = falling
+	}
 	c.out.orders = true
 	switch {
 	case c.out.subject >= 0:

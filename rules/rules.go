@@ -29,10 +29,21 @@ type Rule struct {
 	Deadband     float64 // a comparison that raised returns only this far beyond, in DeadbandUnit
 	DeadbandUnit string  // "" = the unit of the quantity that is compared
 	Latching     bool
+	Value        string          // expression of the number that is the alarm's value; "" = what is compared first, else the first number of the text
+	WorsenBy     float64         // an acknowledged alarm asks again when its value has gone this far beyond what was annunciated, in WorsenUnit; 0 = never
+	WorsenUnit   string          // "" = the unit of the value
+	Unknown      Doubt           // the alarm that tells that this rule cannot be judged
 	SuppressIn   []monitor.Phase // suppressed by design; an unknown phase suppresses nothing
 	Title        string
 	Text         string // what happened, with {name:unit.digits} places
 	Caution      string // what it means and what to watch
 	Response     string // which facility procedure applies
 	Group        string // rules of one cause: the others are listed under the first
+}
+
+// Doubt says how a rule that cannot be judged raises an alarm of its own. The zero
+// value raises none: that the rule is unknown is shown all the same.
+type Doubt struct {
+	Priority Priority
+	After    int64 // ns for which the rule has to be unknown
 }

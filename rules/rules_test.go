@@ -53,6 +53,10 @@ func TestCompileGivesEveryFault(t *testing.T) {
 		{Name: "a", When: "nrp > 1", Priority: Note, Text: "{npr:furlong.1}"},
 		{Name: "a", When: "lit", Priority: 9, OnDelay: -1, OffDelay: -1, Deadband: 2, SuppressIn: []monitor.Phase{monitor.PhaseUnknown}},
 		{Name: "b", When: "npr > 1", Priority: Warning, Deadband: -1},
+		{Name: "c", When: "lit", Priority: Caution, WorsenBy: 1, Unknown: Doubt{Priority: Warning, After: -1}},
+		{Name: "d", When: "npr > 1", Priority: Caution, WorsenBy: -1, Value: "phase", Unknown: Doubt{Priority: 9}},
+		{Name: "e", When: "npr > 1", Priority: Caution, Value: "nrp", Unknown: Doubt{Priority: Advisory}},
+		{Name: "e_unknown", When: "npr > 1", Priority: Caution, Unknown: Doubt{After: second}},
 	}
 	_, faults := Compile(rules, testNames())
 	var got []string
@@ -64,6 +68,7 @@ func TestCompileGivesEveryFault(t *testing.T) {
 	}
 	want := []string{
 		"Good name", "a when", "a text", "a name", "a priority", "a on_delay", "a off_delay", "a deadband", "a suppress_in", "b deadband",
+		"c unknown", "c worsen_by", "d unknown", "d value", "d worsen_by", "e unknown", "e value", "e_unknown unknown",
 	}
 	if !reflect.DeepEqual(got, want) {
 		t.Errorf("got %q\nwant %q", got, want)
@@ -303,7 +308,7 @@ func TestIDsAndGroups(t *testing.T) {
 	s.run = ""
 	s.put("npr", "1.5")
 	s.to(5*second, true)
-	if last = s.seen[len(s.seen)-1]; !strings.HasPrefix(last.ID, "-/a/") || last.AcknowledgedBy != "" {
+	if last = s.last("a"); !strings.HasPrefix(last.ID, "-/a/") || last.AcknowledgedBy != "" {
 		t.Errorf("anew: %+v", last)
 	}
 }
@@ -323,8 +328,11 @@ func TestFirstOutOfDefaults(t *testing.T) {
 	s.to(second, true)
 	s.put("egt.run_1.exceeded", "true")
 	s.to(second+scan, true)
-	if len(s.seen) != 2 || !s.seen[0].FirstOut || !s.seen[1].FirstOut || s.seen[1].Rule != "egt_run_1_exceeded" {
+	if len(s.seen) != 3 || !s.seen[0].FirstOut || !s.seen[1].FirstOut || s.seen[1].Rule != "egt_run_1_exceeded" || s.seen[1].Under != "" {
 		t.Errorf("a warning is listed under a caution: %+v", s.seen)
+	}
+	if now := s.last("egt_run_1_over"); now.Under != Ref(s.seen[1].ID) || now.Revision != 2 {
+		t.Errorf("the caution of the same cause: %+v", now)
 	}
 	s.put("egt.run_1.over", "false")
 	s.put("egt.run_1.exceeded", "false")
@@ -338,6 +346,13 @@ func TestFirstOutOfDefaults(t *testing.T) {
 	got := map[string]bool{}
 	for _, a := range s.seen {
 		got[a.Rule] = a.FirstOut
+		head := Ref("")
+		if !a.FirstOut {
+			head = Ref(s.last("source_lost").ID)
+		}
+		if a.Under != head {
+			t.Errorf("%s is listed under %q", a.Rule, a.Under)
+		}
 	}
 	want := map[string]bool{"source_lost": true, "egt_lost": true, "choke_unknown": false, "egt_probe_lost": false, "rake_probe_lost": false}
 	if !reflect.DeepEqual(got, want) {
@@ -418,6 +433,57 @@ func TestReload(t *testing.T) {
 	}
 }
 
+// What an operator did outlives a restart: shelving ends when it was to end.
+func TestStateSurvivesRestart(t *testing.T) {
+	latching := simple("latching", "npr > 1")
+	latching.Latching = true
+	s := newStand(t, []Rule{simple("shelved", "npr > 1"), simple("acknowledged", "npr > 1"), latching, simple("repaired", "npr > 1"), simple("unseen", "npr > 1")})
+	s.put("npr", "2")
+	s.to(second, true)
+	act := func(a Action) {
+		t.Helper()
+		a.Revision, a.By = s.instance(a.Alarm).Revision, "Mara"
+		if _, err := s.set.Act(&s.st, epoch+s.next, a); err != nil {
+			t.Fatal(err)
+		}
+	}
+	act(Action{Do: DoShelve, Alarm: "shelved", Reason: "loose cable", For: 10 * second})
+	act(Action{Do: DoAcknowledge, Alarm: "acknowledged"})
+	act(Action{Do: DoAcknowledge, Alarm: "latching"})
+	act(Action{Do: DoOutOfService, Alarm: "repaired", Reason: "cable", Role: "engineer", Phase: monitor.Off})
+	var b bytes.Buffer
+	if err := gob.NewEncoder(&b).Encode(&s.st); err != nil {
+		t.Fatal(err)
+	}
+	before := s.st
+	s.st = State{}
+	if err := gob.NewDecoder(&b).Decode(&s.st); err != nil {
+		t.Fatal(err)
+	}
+	if !reflect.DeepEqual(s.st, before) {
+		t.Fatalf("restored %+v\nwas %+v", s.st, before)
+	}
+	s.seen = nil
+	want := func(states ...alarm.State) {
+		t.Helper()
+		for i, state := range states {
+			if in := &s.st.Instances[i]; in.State != state {
+				t.Errorf("%s is %v, want %v", in.Rule, in.State, state)
+			}
+		}
+	}
+	s.to(11*second, true) // shelved just behind the scan at 1 s
+	want(alarm.Shelved, alarm.Acknowledged, alarm.Acknowledged, alarm.OutOfService, alarm.Unacknowledged)
+	if len(s.seen) != 0 {
+		t.Errorf("told anew: %+v", s.seen)
+	}
+	s.to(11*second+scan, true)
+	want(alarm.Unacknowledged)
+	s.put("npr", "0")
+	s.to(12*second, true)
+	want(alarm.ReturnedUnacknowledged, alarm.Normal, alarm.LatchedAcknowledged, alarm.OutOfService, alarm.ReturnedUnacknowledged)
+}
+
 func TestUnknownRulesAndStanding(t *testing.T) {
 	s := newStand(t, []Rule{simple("a", "npr > 1"), simple("b", "speed_rpm > 1"), simple("c", "lit")})
 	s.put("npr", "2")
@@ -428,7 +494,7 @@ func TestUnknownRulesAndStanding(t *testing.T) {
 	if st := s.set.Standing(&s.st, nil); len(st) != 1 || st[0].Rule != "a" {
 		t.Errorf("standing: %+v", st)
 	}
-	if _, err := s.set.Act(&s.st, epoch, Action{Do: "out-of-service", Alarm: "b", Role: "engineer", Reason: "no pickup"}); err != nil {
+	if _, err := s.set.Act(&s.st, epoch, Action{Do: "out-of-service", Alarm: "b", Role: "engineer", Reason: "no pickup", Phase: monitor.Off}); err != nil {
 		t.Fatal(err)
 	}
 	if n := s.set.Unknown(&s.st); n != 1 {
@@ -473,7 +539,7 @@ func TestRandomLife(t *testing.T) {
 		if r.IntN(4) == 0 {
 			a := Action{
 				Do: []string{DoAcknowledge, DoReset, DoShelve, DoUnshelve, DoOutOfService, DoInService}[r.IntN(6)], Role: "engineer",
-				Alarm: s.st.Instances[r.IntN(len(s.st.Instances))].Rule, Reason: "test", For: second * int64(1+r.IntN(9)),
+				Alarm: s.st.Instances[r.IntN(len(s.st.Instances))].Rule, Reason: "test", For: second * int64(1+r.IntN(9)), Phase: s.phase,
 			}
 			a.Revision = s.instance(a.Alarm).Revision
 			x, err := s.set.Act(&s.st, epoch+s.next, a)
@@ -509,7 +575,7 @@ func TestAlarmJSON(t *testing.T) {
 	a := Alarm{
 		ID: "r/unchoke/5", Rule: "unchoke", Title: "T", Text: "X", Priority: Caution, State: AlarmState(alarm.Shelved),
 		Raised: 1_800_000_000_000_000_001, Changed: 1_800_000_000_500_000_000, Revision: 3, Caution: "C", Response: "R",
-		Value: Reading{-2.5, true}, Unit: "%", AcknowledgedBy: "Mara", AsideBy: "Mara", Reason: "noise", Until: 1_800_000_600_000_000_000,
+		Value: Reading{-2.5, true}, Unit: "%", Dimension: "ratio", Under: "r/choke_unknown/4", AcknowledgedBy: "Mara", AsideBy: "Mara", Reason: "noise", Until: 1_800_000_600_000_000_000,
 		Past: true, FirstOut: true, Group: "nozzle", Unknown: true,
 	}
 	b, err := json.Marshal(a)
@@ -518,8 +584,8 @@ func TestAlarmJSON(t *testing.T) {
 	}
 	want := `{"id":"r/unchoke/5","rule":"unchoke","title":"T","text":"X","priority":"caution","state":"shelved",` +
 		`"raised":"2027-01-15T08:00:00.000000001Z","changed":"2027-01-15T08:00:00.5Z","revision":3,"caution":"C","response":"R",` +
-		`"value":-2.5,"peak":null,"unit":"%","acknowledged_by":"Mara","acknowledged_at":null,"aside_by":"Mara","reason":"noise",` +
-		`"until":"2027-01-15T08:10:00Z","past":true,"first_out":true,"group":"nozzle","unknown":true}`
+		`"value":-2.5,"peak":null,"unit":"%","dimension":"ratio","acknowledged_by":"Mara","acknowledged_at":null,"aside_by":"Mara","reason":"noise",` +
+		`"until":"2027-01-15T08:10:00Z","past":true,"first_out":true,"group":"nozzle","under":"r/choke_unknown/4","unknown":true}`
 	if string(b) != want {
 		t.Errorf("got\n%s\nwant\n%s", b, want)
 	}
@@ -527,7 +593,10 @@ func TestAlarmJSON(t *testing.T) {
 	if err := json.Unmarshal(b, &back); err != nil || back != a {
 		t.Errorf("back: %+v, %v", back, err)
 	}
-	for _, bad := range []string{`{"state":"x"}`, `{"priority":"x"}`, `{"raised":"x"}`, `{"value":"x"}`} {
+	if err := json.Unmarshal([]byte(`{"under":null}`), &back); err != nil || back.Under != "" {
+		t.Errorf("under none: %q, %v", back.Under, err)
+	}
+	for _, bad := range []string{`{"state":"x"}`, `{"priority":"x"}`, `{"raised":"x"}`, `{"value":"x"}`, `{"under":5}`} {
 		if json.Unmarshal([]byte(bad), &back) == nil {
 			t.Errorf("%s: taken", bad)
 		}

@@ -106,6 +106,18 @@ func (s *stand) instance(rule string) *Instance {
 	return nil
 }
 
+// last gives the last that was told of a rule.
+func (s *stand) last(rule string) Alarm {
+	s.t.Helper()
+	for _, a := range slices.Backward(s.seen) {
+		if a.Rule == rule {
+			return a
+		}
+	}
+	s.t.Fatalf("nothing was told of %q", rule)
+	return Alarm{}
+}
+
 // parseRule reads "NAME PRIORITY option… : expression".
 func parseRule(tb testing.TB, line string) Rule {
 	tb.Helper()
@@ -122,6 +134,16 @@ func parseRule(tb testing.TB, line string) Rule {
 			r.OffDelay = duration(tb, v)
 		case "deadband":
 			r.Deadband, _ = strconv.ParseFloat(v, 64)
+		case "worsen":
+			by, unit, _ := strings.Cut(v, "_")
+			r.WorsenBy, _ = strconv.ParseFloat(by, 64)
+			r.WorsenUnit = unit
+		case "value":
+			r.Value = v
+		case "unknown":
+			word, after, _ := strings.Cut(v, ",")
+			r.Unknown.Priority, _ = ParsePriority(word)
+			r.Unknown.After = duration(tb, after)
 		case "latching":
 			r.Latching = true
 		case "group":
@@ -150,10 +172,13 @@ func duration(tb testing.TB, s string) int64 {
 // TestScripts runs every script of testdata:
 //
 //	rules default
-//	rule NAME PRIORITY [on=…] [off=…] [deadband=…] [latching] [group=…] [suppress=PHASE,…] : expression
+//	rule NAME PRIORITY [on=…] [off=…] [deadband=…] [latching] [group=…] [value=NAME] [worsen=NUMBER_UNIT]
+//	     [unknown=PRIORITY,DELAY] [suppress=PHASE,…] : expression
 //	TIME set NAME=VALUE …            from the scan at TIME on; ? is unknown
 //	TIME want RULE STATE [unknown]   after the scan at TIME
 //	TIME text RULE TEXT              as rendered
+//	TIME under RULE OTHER             is listed under the other's alarm; - is none
+//	TIME first RULE …                of those that stand exactly these have the first-out mark
 //	TIME act DO RULE [for=…] [role=…] [reason=…] [refused]
 //	TIME transitions N               so many since the begin
 //
@@ -219,6 +244,20 @@ func runScript(t *testing.T, script string) {
 			if got := s.instance(rule).Text; got != strings.TrimSpace(text) {
 				t.Errorf("line %d: got text\n%s\nwant\n%s", number, got, strings.TrimSpace(text))
 			}
+		case "under":
+			under := ""
+			if f[1] != "-" {
+				under = s.instance(f[1]).ID
+			}
+			if got := s.instance(f[0]).Under; got != Ref(under) || s.st.Moved {
+				t.Errorf("line %d: %s: %q", number, line, got)
+			}
+		case "first":
+			for i := range s.st.Instances {
+				if in := &s.st.Instances[i]; in.State.Standing() && in.FirstOut != slices.Contains(f, in.Rule) {
+					t.Errorf("line %d: %s: %s has the mark: %v", number, line, in.Rule, in.FirstOut)
+				}
+			}
 		case "act":
 			s.act(number, at, f)
 		case "transitions":
@@ -234,7 +273,7 @@ func runScript(t *testing.T, script string) {
 func (s *stand) act(line int, at int64, f []string) {
 	s.t.Helper()
 	in := s.instance(f[1])
-	a := Action{Do: f[0], Alarm: f[1], Revision: in.Revision, By: "Mara", Role: "operator"}
+	a := Action{Do: f[0], Alarm: f[1], Revision: in.Revision, By: "Mara", Role: "operator", Phase: s.phase}
 	for _, o := range f[2:] {
 		key, v, _ := strings.Cut(o, "=")
 		switch key {

@@ -30,6 +30,7 @@ func reading(v float64) Reading {
 type State struct {
 	Instances []Instance // one per rule of the set
 	Gone      []Alarm    // alarms of rules that a reload took away, to be told by the next step
+	Moved     bool       // an alarm moved since it was looked which is listed under which
 }
 
 // Instance is the alarm of one rule. Times are event times in ns UTC, 0 = none.
@@ -51,9 +52,13 @@ type Instance struct {
 	Changed  int64
 	Revision uint64 // counts changes
 	Text     string // as rendered when it was raised last
-	FirstOut bool   // the first of its group: see firstOut
+	FirstOut bool   // the first of its group: see mark
+	Under    Ref    // the alarm that it is listed under: see head
 	Value    Reading
 	Peak     Reading // worst value since it was raised
+	Told     Reading // worst value that was annunciated or acknowledged
+	Worse    bool    // it has gone too far beyond Told since WorseAt
+	WorseAt  int64
 
 	AckBy   string
 	AckAt   int64
@@ -89,7 +94,7 @@ func (s *Set) Fit(st *State) {
 	for i := range instances {
 		instances[i].Priority = s.rules[i].Priority
 	}
-	st.Instances = instances
+	st.Instances, st.Moved = instances, true
 }
 
 // Step judges the rules of a domain on a frame at event time t (host time for
@@ -105,6 +110,7 @@ func (s *Set) Step(st *State, t int64, run string, phase monitor.Phase, d Domain
 	if len(st.Instances) != len(s.rules) {
 		s.Fit(st)
 	}
+	first := len(out)
 	for _, a := range st.Gone {
 		a.Changed = Time(t)
 		out = append(out, a)
@@ -116,32 +122,34 @@ func (s *Set) Step(st *State, t int64, run string, phase monitor.Phase, d Domain
 			continue
 		}
 		in := &st.Instances[i]
-		e := 0.0
-		if in.Active {
-			e = p.deadband
-		}
-		v := p.truth(f, e)
+		v := s.judge(st, i, f)
 		in.condition(&p.Rule, v, t)
 		if in.Active {
 			in.watch(p, f)
 		}
+		worse := in.worsened(p, t)
 		if in.doubt(v, t) && in.State != alarm.Normal {
 			in.Revision++
 			in.Changed = t
 			out = append(out, view(p, in))
 		}
 		for {
-			input, ok := p.due(in, t, phase)
+			input, ok := p.due(in, t, phase, worse)
 			if !ok {
 				break
 			}
 			s.move(st, i, input, t, run)
-			if input == alarm.Raise {
-				in.raised(p, f, t)
+			asks := input == alarm.Raise || input == alarm.Worsen
+			if asks {
+				in.annunciated(p, f, input, t)
+				in.Text = s.render(p, f)
 			}
 			out = append(out, view(p, in))
-			out[len(out)-1].Raise = input == alarm.Raise
+			out[len(out)-1].Raise = asks
 		}
+	}
+	if st.Moved {
+		out = s.regroup(st, t, first, out)
 	}
 	return out
 }
@@ -183,20 +191,41 @@ func (in *Instance) doubt(v Tri, t int64) (changed bool) {
 
 // watch keeps the present and the worst value of what the rule compares.
 func (in *Instance) watch(p *program, f *Frame) {
-	if p.subject < 0 {
+	if p.value == nil {
 		return
 	}
-	in.Value = reading(f.Numbers[p.subject])
-	switch v := in.Value; {
-	case !v.Known:
-	case !in.Peak.Known, p.falling && v.V < in.Peak.V, !p.falling && v.V > in.Peak.V:
-		in.Peak = v
+	in.Value = reading(p.value(f))
+	if in.Value.Known && (!in.Peak.Known || p.beyond(in.Value, in.Peak) > 0) {
+		in.Peak = in.Value
 	}
+}
+
+// beyond gives how much worse a is than b.
+func (p *program) beyond(a, b Reading) float64 {
+	if p.falling {
+		return b.V - a.V
+	}
+	return a.V - b.V
+}
+
+// worsened reports whether the value of an acknowledged alarm has been too far
+// beyond what was annunciated, for as long as a raise takes. What was annunciated
+// moves outward only, so that a value that swings asks no second time.
+func (in *Instance) worsened(p *program, t int64) bool {
+	if p.worsenBy == 0 || in.State != alarm.Acknowledged || !in.Active || !in.Value.Known || !in.Told.Known ||
+		p.beyond(in.Value, in.Told) < p.worsenBy {
+		in.Worse, in.WorseAt = false, 0
+		return false
+	}
+	if !in.Worse {
+		in.Worse, in.WorseAt = true, t
+	}
+	return t-in.WorseAt >= p.OnDelay
 }
 
 // due gives the next input that the condition, the phase or the time gives to an
 // alarm.
-func (p *program) due(in *Instance, t int64, phase monitor.Phase) (alarm.Input, bool) {
+func (p *program) due(in *Instance, t int64, phase monitor.Phase, worse bool) (alarm.Input, bool) {
 	input := alarm.NumInputs
 	suppressed := phase < monitor.NumPhases && p.suppress[phase]
 	switch {
@@ -208,6 +237,8 @@ func (p *program) due(in *Instance, t int64, phase monitor.Phase) (alarm.Input, 
 		return input, false
 	case suppressed && p.takes(in.State, alarm.Suppress):
 		input = alarm.Suppress
+	case worse && in.State == alarm.Acknowledged:
+		input = alarm.Worsen
 	case in.Active:
 		input = alarm.Raise
 	default:
@@ -229,50 +260,38 @@ func (s *Set) move(st *State, i int, input alarm.Input, t int64, run string) {
 	in.Revision++
 	in.Changed = t
 	in.Priority = p.Priority
+	st.Moved = true
 	if from == alarm.Normal {
 		// An occurrence begins. Its name is made of what a replay gives again.
 		if run == "" {
 			run = "-"
 		}
 		in.ID = run + "/" + p.Name + "/" + strconv.FormatInt(t, 10)
-		in.Raised, in.Text, in.FirstOut = 0, "", false
+		in.Raised, in.Text = 0, ""
 		in.AckBy, in.AckAt = "", 0
 		if !in.Active {
-			in.Value, in.Peak = Reading{}, Reading{}
+			in.Value, in.Peak, in.Told = Reading{}, Reading{}, Reading{}
 		}
 	}
 	if from.Aside() && !in.State.Aside() {
 		in.AsideBy, in.Reason, in.Until = "", "", 0
 	}
 	if input == alarm.Raise {
-		in.FirstOut = st.firstOut(s, i)
+		s.mark(st, i)
 	}
 }
 
-// firstOut reports whether no condition of another rule of the group is present
-// and annunciated. One of lower priority does not count: a warning is not listed
-// under a caution.
-func (st *State) firstOut(s *Set, i int) bool {
-	r := &s.rules[i]
-	for k := range s.rules {
-		other, state := &s.rules[k], st.Instances[k].State
-		if k != i && r.Group != "" && other.Group == r.Group && other.Priority >= r.Priority &&
-			(state == alarm.Unacknowledged || state == alarm.Acknowledged) {
-			return false
-		}
-	}
-	return true
-}
-
-// raised notes what a raise shows.
-func (in *Instance) raised(p *program, f *Frame, t int64) {
+// annunciated notes what a raise, or a worsening, shows.
+func (in *Instance) annunciated(p *program, f *Frame, input alarm.Input, t int64) {
 	if in.Raised == 0 {
 		in.Raised = t
 	}
 	in.AckBy, in.AckAt = "", 0
-	in.Peak = Reading{}
-	in.watch(p, f)
-	in.Text = string(p.text.append(nil, f))
+	if input == alarm.Raise {
+		in.Peak = Reading{}
+		in.watch(p, f)
+	}
+	in.Told = in.Value
 }
 
 // Unknown counts the rules that are unknown for longer than 2 s and not put

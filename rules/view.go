@@ -26,6 +26,7 @@ type Alarm struct {
 	Value          Reading    `json:"value"` // of what the rule compares first, at the change
 	Peak           Reading    `json:"peak"`  // its worst since the raise
 	Unit           string     `json:"unit"`
+	Dimension      string     `json:"dimension"` // of the value: pressure, temperature_difference …; "" when it is not known
 	AcknowledgedBy string     `json:"acknowledged_by"`
 	AcknowledgedAt Time       `json:"acknowledged_at"`
 	AsideBy        string     `json:"aside_by"` // who shelved it or took it out of service
@@ -34,8 +35,9 @@ type Alarm struct {
 	Past           bool       `json:"past"` // came about well behind host time: no sound
 	FirstOut       bool       `json:"first_out"`
 	Group          string     `json:"group"`
+	Under          Ref        `json:"under"`   // the standing alarm of the group that it is listed under
 	Unknown        bool       `json:"unknown"` // the condition cannot be judged now
-	Raise          bool       `json:"-"`       // this change is a raise, the first or another
+	Raise          bool       `json:"-"`       // this change asks for attention: a raise, the first or another, or a worsening
 }
 
 // view shows an instance.
@@ -47,9 +49,9 @@ func view(p *program, in *Instance) Alarm {
 	return Alarm{
 		ID: in.ID, Rule: p.Name, Title: p.Title, Text: text, Priority: p.Priority, State: AlarmState(in.State),
 		Raised: Time(in.Raised), Changed: Time(in.Changed), Revision: in.Revision,
-		Caution: p.Caution, Response: p.Response, Value: in.Value, Peak: in.Peak, Unit: p.unit,
+		Caution: p.Caution, Response: p.Response, Value: in.Value, Peak: in.Peak, Unit: p.unit, Dimension: p.dimension(),
 		AcknowledgedBy: in.AckBy, AcknowledgedAt: Time(in.AckAt), AsideBy: in.AsideBy,
-		Reason: in.Reason, Until: Time(in.Until), FirstOut: in.FirstOut, Group: p.Group, Unknown: in.Unknown,
+		Reason: in.Reason, Until: Time(in.Until), FirstOut: in.FirstOut, Group: p.Group, Under: in.Under, Unknown: in.Unknown,
 	}
 }
 

@@ -192,6 +192,18 @@ func TestAlarmActions(t *testing.T) {
 	}
 	b.expect(OutcomeAlarm, "over_speed latched_acknowledged, over_speed normal")
 
+	// Out of service only while the engine is known to be off.
+	out := Action{Do: rules.DoOutOfService, Alarm: "clock", By: "C. Cedar", Role: "engineer", Reason: "time server moves"}
+	if err := b.act(out); !errors.Is(err, rules.ErrRefused) || !strings.Contains(err.Error(), "engine off") {
+		t.Errorf("out of service in a run: %v", err)
+	}
+	b.play(atRest, 10*second)
+	b.told(OutcomeAlarm)
+	if err := b.act(out); err != nil {
+		t.Errorf("out of service at rest: %v", err)
+	}
+	b.expect(OutcomeAlarm, "clock out_of_service")
+
 	// Of requests the last are known, not all there ever were.
 	for i := range 3 * requestsKept {
 		if err := b.act(Action{Do: DoMark, Text: "m", RequestID: fmt.Sprint("m", i)}); err != nil {

@@ -481,7 +481,7 @@ func (m *Machine) do(s *State, a *Action) error {
 	default:
 		alarm, err := m.prog.rules.Act(&s.Rules, t, rules.Action{
 			Do: a.Do, Alarm: a.Alarm, Revision: a.Revision, Reason: a.Reason, By: a.By, Role: a.Role,
-			For: int64(a.Seconds * 1e9),
+			For: int64(a.Seconds * 1e9), Phase: s.Compute.Phase.Phase,
 		})
 		if err != nil {
 			return fmt.Errorf("%s %s: %w", a.Do, a.Alarm, err)

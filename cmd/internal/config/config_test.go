@@ -327,6 +327,7 @@ func TestRenderedRules(t *testing.T) {
 	})
 	list = append(list, rules.Rule{
 		Name: "all_fields", When: "npr > 1.5 and \"a\" == 'b' # \\ {", Priority: rules.Advisory, OnDelay: 1, OffDelay: 1234567891, Deadband: 1e-9,
+		Value: "npr - choke_npr", WorsenBy: 0.5, Unknown: rules.Doubt{Priority: rules.Caution, After: 1500e6},
 		Latching: true, SuppressIn: []monitor.Phase{monitor.Off, monitor.Cooling}, Title: "Ein »Titel«: 5 °C", Text: "<a> & {npr}",
 		Caution: "- none", Response: "* none", Group: "nozzle",
 	})

@@ -75,6 +75,13 @@ func render(list []rules.Rule) string {
 			}
 			write("suppress_in", fmt.Sprintf("[%s]", strings.Join(phases, ", ")))
 		}
+		text("value", r.Value)
+		if r.WorsenBy != 0 {
+			write("worsen_by", strings.TrimSpace(strconv.FormatFloat(r.WorsenBy, 'g', -1, 64)+" "+r.WorsenUnit))
+		}
+		if d := r.Unknown; d.Priority != 0 {
+			write("unknown", fmt.Sprintf("{priority: %s, after: %s s}", d.Priority, strconv.FormatFloat(float64(d.After)/1e9, 'f', -1, 64)))
+		}
 		text("title", r.Title)
 		text("text", r.Text)
 		text("caution", r.Caution)

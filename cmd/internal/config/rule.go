@@ -85,6 +85,9 @@ func readRule(n node) rule {
 	out.Deadband, out.DeadbandUnit = f.get("deadband").numberWithUnit(notNegative)
 	out.Latching = f.get("latching").flag(false)
 	out.SuppressIn = readPhases(f.get("suppress_in"))
+	out.Value = oneLine(f.get("value").text())
+	out.WorsenBy, out.WorsenUnit = f.get("worsen_by").numberWithUnit(notNegative)
+	out.Unknown = readDoubt(f.get("unknown"))
 	out.Title = f.get("title").prose(strings.ReplaceAll(out.Name, "_", " "))
 	out.Text = f.get("text").prose(out.Title)
 	out.Caution, out.Response = readAdvice(f, out.Priority)
@@ -120,6 +123,8 @@ func (r *rig) readLimits(c *channel, id, title string, s *calib.Spec) {
 			Deadband:   f.get("deadband").quantity(difference(d), 0, notNegative),
 			Latching:   f.get("latching").flag(false),
 			SuppressIn: readPhases(f.get("suppress_in")),
+			WorsenBy:   f.get("worsen_by").quantity(difference(d), 0, notNegative),
+			Unknown:    readDoubt(f.get("unknown")),
 			Title:      fmt.Sprintf("%s %s %s", title, key, limit.text()),
 		}
 		if out.Name == "" {
@@ -127,6 +132,7 @@ func (r *rig) readLimits(c *channel, id, title string, s *calib.Spec) {
 		}
 		if s.Reference == calib.Gauge && c.port.is() {
 			out.When = fmt.Sprintf("channel.%s - channel.%s %s %s", id, c.port.text(), sign, strconv.FormatFloat(level, 'g', -1, 64))
+			out.Value = fmt.Sprintf("channel.%s - channel.%s", id, c.port.text())
 		}
 		out.Text = out.Title
 		if out.OnDelay > 0 {
@@ -144,6 +150,17 @@ func (r *rig) readLimits(c *channel, id, title string, s *calib.Spec) {
 		}
 		r.limits = append(r.limits, rule{Rule: out, node: item, at: f.at})
 	}
+}
+
+// readDoubt reads how a rule that cannot be judged raises an alarm of its own.
+func readDoubt(n node) rules.Doubt {
+	if !n.is() {
+		return rules.Doubt{}
+	}
+	f := n.placed()
+	out := rules.Doubt{Priority: f.priority(), After: f.get("after").duration(3 * second)}
+	f.done()
+	return out
 }
 
 // readAdvice reads what goes with an alarm. Every alarm has a caution, and one
