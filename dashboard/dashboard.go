@@ -107,6 +107,8 @@ func (s *Server) routes() map[string]handler {
 		"GET /api/session":                    s.session,
 		"POST /api/session":                   s.signIn,
 		"DELETE /api/session":                 s.signOut,
+		"GET /api/runs/{id}/exceedances":      s.exceedances,
+		"GET /api/engines/{serial}/life":      s.life,
 		"GET /healthz":                        s.healthz,
 		"GET /metrics":                        s.metrics,
 		"GET /openapi.json":                   s.openAPI,

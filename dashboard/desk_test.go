@@ -270,6 +270,12 @@ func (d *desk) store(r *ingest.Record, outs []pipeline.Outcome) {
 		d.digest.Add(o)
 		//exhaustive:ignore
 		switch o.Kind {
+		case pipeline.OutcomeExceedance:
+			event(o, "exceedance", o.Exceedance)
+		case pipeline.OutcomeEngine:
+			event(o, "engine", o.Engine)
+		case pipeline.OutcomeLife:
+			event(o, "life", o.Life)
 		case pipeline.OutcomePoint:
 			if d.columns == nil {
 				d.columns = pipeline.NewColumns(&cfg)

@@ -47,7 +47,8 @@ func appendFrame(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) (body []
 	case pipeline.OutcomeRun:
 		kind = "run"
 		dst = member(text(open(dst, kind, o), "event", o.Event), "run", runView(o.Run))
-	case pipeline.OutcomeChannels, pipeline.OutcomeConfig, pipeline.OutcomeQuarantine, pipeline.OutcomeAction, pipeline.OutcomeReduction:
+	case pipeline.OutcomeChannels, pipeline.OutcomeConfig, pipeline.OutcomeQuarantine, pipeline.OutcomeAction, pipeline.OutcomeReduction,
+		pipeline.OutcomeExceedance, pipeline.OutcomeEngine, pipeline.OutcomeLife:
 		return dst, "", false
 	}
 	return append(dst, '}'), kind, true
@@ -399,6 +400,11 @@ func appendHello(dst []byte, m *pipeline.Machine, s *pipeline.State, at place, b
 	dst = list(dst, "bands", len(ledger), func(dst []byte, i int) []byte { return append(appendBand(dst, &ledger[i]), '}') })
 	dst = member(dst, "alarms", append([]rules.Alarm{}, m.Alarms(s)...))
 	dst = appendBands(dst, "ledgers", ledger)
+	if life, ok := s.Life(cfg.Rig.EngineSerial); ok {
+		dst = member(dst, "life", life)
+	} else {
+		dst = append(name(dst, "life"), "null"...)
+	}
 	dst = open(name(dst, "status"), "status", &pipeline.Outcome{Epoch: s.Epoch, N: at.n, T: s.Host})
 	return append(appendStatus(dst, &status), '}', '}')
 }

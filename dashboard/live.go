@@ -127,7 +127,8 @@ func (h *Hub) Publish(outs []pipeline.Outcome, m *pipeline.Machine, _ *pipeline.
 				h.dropAll(websocket.CloseServiceRestart, "the configuration changed")
 			}
 		case pipeline.OutcomePoint, pipeline.OutcomeAlarm, pipeline.OutcomeLedger, pipeline.OutcomeStatus,
-			pipeline.OutcomeMark, pipeline.OutcomeRun, pipeline.OutcomeQuarantine, pipeline.OutcomeAction, pipeline.OutcomeReduction:
+			pipeline.OutcomeMark, pipeline.OutcomeRun, pipeline.OutcomeQuarantine, pipeline.OutcomeAction, pipeline.OutcomeReduction,
+			pipeline.OutcomeExceedance, pipeline.OutcomeEngine, pipeline.OutcomeLife:
 			h.frame(o, &cfg, now)
 		}
 	}

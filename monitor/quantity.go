@@ -76,6 +76,10 @@ const (
 	EGTLimitIn
 	EGTLimitInLow95
 	EGTLimitInHigh95
+	EGTRise
+	StarterTime
+	StarterHour
+	RundownTime
 	NumQuantities
 )
 
@@ -155,6 +159,10 @@ var infos = [NumQuantities]Info{
 	EGTLimitIn:               {"egt_limit_in_s", "s", "Forecast: time to the next EGT limit"},
 	EGTLimitInLow95:          {"egt_limit_in_s_low95", "s", "Forecast: time to the next EGT limit, lower 95 % bound"},
 	EGTLimitInHigh95:         {"egt_limit_in_s_high95", "s", "Forecast: time to the next EGT limit, upper 95 % bound"},
+	EGTRise:                  {"egt_rise_k", "K", "EGT above its lowest since the fuel is off"},
+	StarterTime:              {"starter_s", "s", "Time of cranking in one go"},
+	StarterHour:              {"starter_hour_s", "s", "Time of cranking in the last hour"},
+	RundownTime:              {"rundown_s", "s", "Time of the last rundown, from below idle to rest"},
 }
 
 // Info gives name, unit and title.

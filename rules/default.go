@@ -11,6 +11,7 @@ import (
 // Equipment says what of a rig the default rules can build on.
 type Equipment struct {
 	Bands     []egt.Band
+	Limits    egt.Limits
 	EGT       bool // an EGT harness
 	Rake      bool // total-pressure probes at the nozzle entry
 	Speed     bool // rotor speed, without which the phase is unknown
@@ -54,6 +55,7 @@ func Default(q Equipment) []Rule {
 			r = append(r, flameRules(q.FuelFlow)...)
 		}
 	}
+	r = append(r, limitRules(&q)...)
 	r = append(r, Rule{
 		Name: "unchoke", When: `choke_armed and choke_state != "choked"`, Priority: Caution,
 		OnDelay: 300 * ms, OffDelay: second, Group: groupNozzle,
@@ -134,8 +136,11 @@ func bandRules(b *egt.Band) []Rule {
 
 // seconds writes a time in ns for people.
 func seconds(ns int64) string {
-	return strconv.FormatFloat(float64(ns)/1e9, 'f', -1, 64) + " s"
+	return number(float64(ns)/1e9) + " s"
 }
+
+// number writes a number as expressions take it.
+func number(v float64) string { return strconv.FormatFloat(v, 'f', -1, 64) }
 
 // egtRules gives what needs an EGT harness.
 func egtRules() []Rule {
@@ -155,15 +160,15 @@ func egtRules() []Rule {
 func flameRules(fuelFlow bool) []Rule {
 	out := []Rule{
 		{
-			Name: "hung_start", When: `phase == "lighting" and speed_rate_rpm_s < 50`, Priority: Caution, OnDelay: 5 * second, OffDelay: second, Deadband: 20, Group: groupFlame,
+			Name: "hung_start", When: `phase == "lighting" and speed_rate_rpm_s < ` + number(egt.HungRate), Priority: Caution, OnDelay: egt.HungFor, OffDelay: second, Deadband: 20, Group: groupFlame,
 			Title:    "Hung start",
-			Text:     "Lit, but rotor speed has hung below idle at {speed_rpm:.0} for 5 s; indicated EGT {egt_indicated_k:degC.0}. Follow the facility's procedure for a hung start." + notProtection,
+			Text:     "Lit, but rotor speed has hung below idle at {speed_rpm:.0} for " + seconds(egt.HungFor) + "; indicated EGT {egt_indicated_k:degC.0}. Follow the facility's procedure for a hung start." + notProtection,
 			Caution:  "EGT can climb fast at low air flow. Watch indicated EGT against the start limit.",
 			Response: "Facility procedure for a hung start.",
 		},
 		{
 			Name: "flame_out", When: `(phase == "accelerating" or phase == "steady" or phase == "decelerating") and not lit`, Priority: Caution,
-			OnDelay: 200 * ms, OffDelay: second, Group: groupFlame, Unknown: Doubt{Priority: Advisory, After: 5 * second},
+			OnDelay: egt.FlameOutFor, OffDelay: second, Group: groupFlame, Unknown: Doubt{Priority: Advisory, After: 5 * second},
 			Title:    "Flame-out",
 			Text:     "Indicated EGT has fallen to {egt_indicated_k:degC.0} at {speed_rpm:.0}: the flame seems to be out. Follow the facility's procedure for a flame-out." + notProtection,
 			Caution:  "Unburnt fuel may gather in the exhaust. Watch fuel flow, rotor speed and indicated EGT.",
@@ -172,13 +177,63 @@ func flameRules(fuelFlow bool) []Rule {
 	}
 	if fuelFlow {
 		out = append(out, Rule{
-			Name: "no_light", When: `phase == "cranking" and fuel_flow_kg_s > 0.002`, Priority: Caution, OnDelay: 10 * second, OffDelay: second, Group: groupFlame,
+			Name: "no_light", When: `phase == "cranking" and fuel_flow_kg_s > ` + number(egt.FuelOn), Priority: Caution, OnDelay: egt.NoLightFor, OffDelay: second, Group: groupFlame,
 			Title:    "No light-off",
-			Text:     "Fuel flow of {fuel_flow_kg_s:kg/h.0} for 10 s of cranking without a flame. Follow the facility's procedure for a start without light-off." + notProtection,
+			Text:     "Fuel flow of {fuel_flow_kg_s:kg/h.0} for " + seconds(egt.NoLightFor) + " of cranking without a flame. Follow the facility's procedure for a start without light-off." + notProtection,
 			Caution:  "Unburnt fuel may gather in the exhaust and light late. Watch indicated EGT and fuel flow.",
 			Response: "Facility procedure for a start without light-off.",
 		})
 	}
+	return out
+}
+
+// limitRules gives what the rig file states limits for beside the bands.
+//
+// Of EGT that rises after a shutdown a warning is made: nobody waits for anything then,
+// and a fire in the engine asks for a response at once. Heat that soaks back from the
+// casing raises EGT too, which the limit must be above.
+func limitRules(q *Equipment) []Rule {
+	l := &q.Limits
+	var out []Rule
+	add := func(is bool, r Rule) {
+		if is {
+			out = append(out, r)
+		}
+	}
+	add(q.EGT && q.Speed && l.Rise > 0, Rule{
+		Name: "egt_rise", When: "egt_rise_k > " + number(l.Rise), Priority: Warning, OnDelay: second, OffDelay: 5 * second, Deadband: 10, Latching: true, Group: groupFlame,
+		WorsenBy: 2 * egtWorse,
+		Title:    "EGT rising after shutdown",
+		Text:     "Indicated EGT {egt_indicated_k:degC.0}, {egt_rise_k:.0} above its lowest since the fuel is off (limit " + number(l.Rise) + " K). Facility procedure for an internal fire applies." + notProtection,
+		Caution:  "Fuel may be burning in the engine or the exhaust. Heat that soaks back raises EGT too, but less and more slowly. Watch indicated EGT, fuel flow and the exhaust.",
+		Response: "Facility procedure for an internal fire.",
+	})
+	add(q.EGT && l.Spread > 0, Rule{
+		Name: "egt_spread", When: "egt_spread_k > " + number(l.Spread), Priority: Caution, OnDelay: 3 * second, OffDelay: 3 * second, Deadband: 5, Group: groupEGT,
+		WorsenBy: egtWorse,
+		Title:    "EGT spread beyond " + number(l.Spread) + " K",
+		Text:     "Hottest probe {egt_hottest_k:degC.0}, coldest {egt_coldest_k:degC.0}: spread {egt_spread_k:.0} (limit " + number(l.Spread) + " K). Follow the facility's procedure for EGT spread." + notProtection,
+		Caution:  "A burner or nozzle may be blocked or streaking; the mean does not show how hot the hottest part is. Watch the hottest probe and its neighbours.",
+		Response: "Facility procedure for EGT spread.",
+	})
+	starter := func(name, quantity, span string, limit int64) {
+		add(q.Speed && limit > 0, Rule{
+			Name: name, When: quantity + " > " + number(float64(limit)/1e9), Priority: Caution, OffDelay: second,
+			Title:    "Starter duty beyond " + seconds(limit) + " " + span,
+			Text:     "Cranked for {" + quantity + ":.0} " + span + " (limit " + seconds(limit) + "). Follow the facility's procedure for starter duty.",
+			Caution:  "The starter heats up and needs its time to cool. Cranking counts until idle is reached, since where the starter cuts out is not measured.",
+			Response: "Facility procedure for starter duty.",
+		})
+	}
+	starter("starter_once", "starter_s", "in one go", l.StarterOnce)
+	starter("starter_hour", "starter_hour_s", "in an hour", l.StarterHour)
+	add(q.Speed && l.Rundown > 0, Rule{
+		Name: "rundown_short", When: `phase == "cooling" and rundown_s < ` + number(float64(l.Rundown)/1e9), Priority: Advisory,
+		Title:    "Rundown shorter than " + seconds(l.Rundown),
+		Text:     "The rotor ran down in {rundown_s:.1} (limit " + seconds(l.Rundown) + "). Follow the facility's procedure for rundown times.",
+		Caution:  "A bearing, a seal or blade tips may rub. Watch vibration, oil and bearing temperatures at the next start.",
+		Response: "Facility procedure for rundown times.",
+	})
 	return out
 }
 

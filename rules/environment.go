@@ -119,7 +119,7 @@ func StandardNames(channels []Channel, bands []string) []Name {
 		if !ok {
 			u = unit.Unit{} // a unit without conversions, such as J/(kg K)
 		}
-		if q == monitor.EGTSpread {
+		if q == monitor.EGTSpread || q == monitor.EGTRise {
 			u = u.Difference()
 		}
 		names = append(names, Name{Name: info.Name, Type: Number, Unit: info.Unit, Dimension: u.Dimension, Rate: rate})

@@ -253,10 +253,10 @@ func TestDefaultRules(t *testing.T) {
 			t.Errorf("%s: response %q", r.Name, r.Response)
 		}
 	}
-	// The warnings of the design's default set, no other.
+	// The warnings of the design's default set and a fire after a shutdown, no other.
 	want := map[string]bool{
 		"egt_run_1_exceeded": true, "egt_run_2_exceeded": true, "egt_start_exceeded": true,
-		"egt_lost": true, "not_recording": true, "input_path_deaf": true,
+		"egt_lost": true, "not_recording": true, "input_path_deaf": true, "egt_rise": true,
 	}
 	if !reflect.DeepEqual(warnings, want) {
 		t.Errorf("warnings %v, want %v", warnings, want)

@@ -30,7 +30,7 @@ func testBands() []egt.Band {
 }
 
 func testDefault() []Rule {
-	return Default(Equipment{Bands: testBands(), EGT: true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true})
+	return Default(Equipment{Bands: testBands(), Limits: testLimits(), EGT: true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true})
 }
 
 // stand runs a set of rules scan by scan.
@@ -197,6 +197,10 @@ func TestScripts(t *testing.T) {
 			runScript(t, string(b))
 		})
 	}
+}
+
+func testLimits() egt.Limits {
+	return egt.Limits{Spread: 90, Rise: 80, StarterOnce: 30 * int64(time.Second), StarterHour: 120 * int64(time.Second), Rundown: 8 * int64(time.Second)}
 }
 
 func runScript(t *testing.T, script string) {

@@ -34,6 +34,7 @@ func commands() []command {
 		{"check", "every fault of a rig file at once, then its channels and limits", withoutContext(checkCommand)},
 		{"point", "one operating point from numbers given by hand", withoutContext(pointCommand)},
 		{"runs", "list the stored runs", runsCommand},
+		{"life", "what each engine has been through: starts, cycles, hours, time above EGT limits", lifeCommand},
 		{"replay", "step a stored run again, and compare its digest", replayCommand},
 		{"export", "write a table of a stored run for other programs", exportCommand},
 		{"version", "the build", versionCommand},

@@ -55,6 +55,7 @@ type State struct {
 	Channels []ChannelState
 	Phase    phase.State
 	EGT      egt.State
+	Engine   egt.Engine
 	F        float64 // fuel-air ratio last closed
 	Rise     float64 // T0 − what the probes of station 7 read, K, as last closed
 	Metal    float64 // temperature of the nozzle's metal, K
@@ -193,14 +194,14 @@ func sameValues(a, b *Channel) bool {
 }
 
 // Step computes the operating point of a scan and completes the scan: values
-// and final qualities. It reports whether the EGT ledger changed.
-func (c *Computer) Step(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) (ledger bool) {
+// and final qualities. It reports what changed in the EGT ledger.
+func (c *Computer) Step(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) egt.Changes {
 	c.calibrate(s, scan)
 	return c.compute(s, scan, p)
 }
 
 // compute is Step for a scan that has its values.
-func (c *Computer) compute(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) (ledger bool) {
+func (c *Computer) compute(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) egt.Changes {
 	p.Reset()
 	p.T, p.Scan = scan.T, scan.N
 	c.last = 0
@@ -209,7 +210,7 @@ func (c *Computer) compute(s *State, scan *monitor.Scan, p *monitor.OperatingPoi
 	c.learns = s.Phase.Phase == monitor.Steady || c.cfg.Stations.Speed < 0 && s.Steady.Result.Steady
 	c.harness(s, scan, p)
 	c.speed(s, scan, p)
-	ledger = c.cfg.EGT.Step(&s.EGT, p.T, p.V[monitor.EGTIndicated], p.Lit, p.Phase)
+	ledger := c.ledger(s, scan, p)
 	c.pressures(s, scan, p)
 	air := c.air(scan, p)
 	c.meterAir(scan, p, &air)

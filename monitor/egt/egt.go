@@ -6,6 +6,9 @@
 // are written for it. The clock of an excursion is event time; it runs through
 // gaps in the data while the last good value was above the limit, and what was
 // not seen is kept apart as assumed.
+//
+// Beside it goes the life of each engine: starts and how they went, cycles, hours
+// lit, time above each band.
 package egt
 
 // Kind says when a band holds.
@@ -39,7 +42,19 @@ type Band struct {
 	Rearm     int64   // … for this long, ns
 }
 
-// Config holds the bands of an engine.
+// Config holds the bands of an engine, MaxBands at most, and whose life is counted.
 type Config struct {
-	Bands []Band
+	Bands  []Band
+	Serial string // of the engine; the pipeline sets it
+	Limits Limits
+}
+
+// Limits are what the default rules hold an engine against beside the bands. Zero is
+// none.
+type Limits struct {
+	Spread      float64 // K, hottest less coldest probe
+	Rise        float64 // K above the lowest indicated EGT since the fuel is off
+	StarterOnce int64   // ns of cranking in one go
+	StarterHour int64   // ns of cranking in an hour
+	Rundown     int64   // ns, shortest rundown
 }

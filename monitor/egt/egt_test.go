@@ -222,7 +222,7 @@ func TestChangedTellsTransitionsOnly(t *testing.T) {
 		if i >= 120 {
 			v = 900
 		}
-		if f.c.Step(&f.st, f.t+i*scan, v, true, monitor.Steady) {
+		if f.c.Step(&f.st, f.t+i*scan, v, true, monitor.Steady).Moved {
 			at = append(at, i)
 		}
 	}
@@ -354,7 +354,7 @@ func BenchmarkStep(b *testing.B) {
 	b.ReportAllocs()
 	i, changes := 0, 0
 	for b.Loop() {
-		if f.c.Step(&f.st, f.t, values[i&7], true, monitor.Steady) {
+		if f.c.Step(&f.st, f.t, values[i&7], true, monitor.Steady).Moved {
 			changes++
 		}
 		f.t += scan

@@ -12,6 +12,9 @@ import (
 // over-temperature.
 const ConsecutiveScans = 3
 
+// MaxBands is the largest number of bands.
+const MaxBands = 16
+
 // seenWithin is the longest step between two good values that counts as seen,
 // ns. What lies in a longer one is assumed.
 const seenWithin = int64(time.Second)
@@ -30,22 +33,51 @@ type State struct {
 // BandState is the account of one band. Times are in ns, temperatures in K.
 type BandState struct {
 	Name       string
-	Holds      bool    // the band is in force
-	Over       bool    // an excursion is on: above the limit, or not yet re-armed
-	Exceeded   bool    // this excursion, or the run, has used up its allowance
-	Elapsed    int64   // time above the limit in this excursion, 0 when none is on
-	Assumed    int64   // part of Elapsed for which there was no value
-	Peak       float64 // highest value of this excursion (or of Scans), 0 when there is none
-	Began      int64   // event time at which this excursion began
-	BelowSince int64   // event time since when the value is below limit − deadband
-	Below      bool    // BelowSince holds
-	Scans      int     // scans in a row above the limit, while no excursion is on
+	Holds      bool            // the band is in force
+	Over       bool            // an excursion is on: above the limit, or not yet re-armed
+	Exceeded   bool            // this excursion, or the run, has used up its allowance
+	Elapsed    int64           // time above the limit in this excursion, 0 when none is on
+	Assumed    int64           // part of Elapsed for which there was no value
+	Peak       float64         // highest value of this excursion (or of Scans), 0 when there is none
+	Began      int64           // event time at which this excursion began
+	BelowSince int64           // event time since when the value is below limit − deadband
+	Below      bool            // BelowSince holds
+	Scans      int             // scans in a row above the limit, while no excursion is on
+	Above      [MaxBands]int64 // time above the limit of each band of the configuration, in this excursion
+	Added      int64           // to Elapsed by the last step
+	Closed     Excursion       // that ended last
 	// Of this run.
 	Total        int64   // time above the limit
 	TotalAssumed int64   // part of Total for which there was no value
 	RunPeak      float64 // highest value above the limit, 0 when there was none
 	Excursions   int     // how many began
 	Exceedances  int     // how many used up the allowance
+}
+
+// Excursion is the record of one excursion above the limit of a band. Times of
+// day are event times in ns UTC, other times in ns.
+type Excursion struct {
+	Began    int64
+	Ended    int64   // when the value fell below limit − deadband to stay there for the re-arm time; 0 = it is on
+	Time     int64   // above the limit
+	Assumed  int64   // part of Time for which there was no value
+	Peak     float64 // K
+	Exceeded bool
+	Above    [MaxBands]int64 // time above the limit of each band of the configuration
+}
+
+// Excursion gives the record of the excursion that is on.
+func (s *BandState) Excursion() Excursion {
+	return Excursion{Began: s.Began, Time: s.Elapsed, Assumed: s.Assumed, Peak: s.Peak, Exceeded: s.Exceeded, Above: s.Above}
+}
+
+// Changes is what a step brought about. In a set, bit i stands for band i.
+type Changes struct {
+	Moved    bool   // a band began or ceased to hold, or one of the following
+	Began    uint32 // an excursion began
+	Exceeded uint32 // … used up its allowance
+	Ended    uint32 // … ended: see Closed
+	Engine   Events // what happened to the engine
 }
 
 // Remaining gives what is left of the allowances of b, ns: the smaller of that
@@ -67,10 +99,24 @@ func (c *Config) Fit(s *State) {
 		for j := range s.Bands {
 			if s.Bands[j].Name == c.Bands[i].Name {
 				bands[i] = s.Bands[j]
+				bands[i].Above = c.reorder(s.Bands, &s.Bands[j].Above)
+				bands[i].Closed.Above = c.reorder(s.Bands, &s.Bands[j].Closed.Above)
 			}
 		}
 	}
 	s.Bands = bands
+}
+
+// reorder gives times by band of another configuration in the order of c.
+func (c *Config) reorder(from []BandState, above *[MaxBands]int64) (out [MaxBands]int64) {
+	for i := range c.Bands {
+		for j := range from {
+			if from[j].Name == c.Bands[i].Name {
+				out[i] = above[j]
+			}
+		}
+	}
+	return out
 }
 
 // Reset begins the account of a new run. An excursion that is on goes on, since
@@ -89,8 +135,7 @@ func (s *State) Reset() {
 }
 
 // Step enters one scan: the indicated EGT in K (NaN when there is none) at
-// event time t in ns. It reports whether a band began or ceased to hold, or an
-// excursion began, ended or used up its allowance; the clocks move without that.
+// event time t in ns. It reports what changed; the clocks move without that.
 //
 // A value stands until the next one. Of the time between two scans that part
 // counts which the value at its beginning gives: above the limit or not. In a
@@ -100,7 +145,7 @@ func (s *State) Reset() {
 //
 // A band of kind start holds until the engine reaches idle, and then until an
 // excursion that is on has ended. It holds again from the next start.
-func (c *Config) Step(s *State, t int64, egt float64, lit bool, phase monitor.Phase) (changed bool) {
+func (c *Config) Step(s *State, t int64, egt float64, lit bool, phase monitor.Phase) (ch Changes) {
 	if len(s.Bands) != len(c.Bands) {
 		c.Fit(s)
 	}
@@ -123,21 +168,38 @@ func (c *Config) Step(s *State, t int64, egt float64, lit bool, phase monitor.Ph
 	}
 	for i := range c.Bands {
 		band, b := &c.Bands[i], &s.Bands[i]
-		before := *b
+		held, over, exceeded := b.Holds, b.Over, b.Exceeded
+		b.Added = 0
 		b.count(band, dt, s.Last, assumed)
+		if b.Over || b.Scans > 0 {
+			for k := range c.Bands {
+				if s.Last > c.Bands[k].Limit {
+					b.Above[k] += dt
+				}
+			}
+		}
 		b.Holds = band.Kind == KindRun || !s.IdleSeen || b.Over
 		if !missing {
 			b.enter(band, t, egt)
 		}
 		b.judge(band)
-		changed = changed || b.Holds != before.Holds || b.Over != before.Over ||
-			b.Exceeded != before.Exceeded || b.Excursions != before.Excursions
+		bit := uint32(1) << i
+		switch {
+		case b.Over && !over:
+			ch.Began |= bit
+		case over && !b.Over:
+			ch.Ended |= bit
+		}
+		if b.Exceeded && !exceeded {
+			ch.Exceeded |= bit
+		}
+		ch.Moved = ch.Moved || b.Holds != held || b.Over != over || b.Exceeded != exceeded
 	}
 	s.T, s.Gap = t, missing
 	if !missing {
 		s.Last, s.HaveLast = egt, true
 	}
-	return changed
+	return ch
 }
 
 // count adds the time since the last step if the value then was above the limit.
@@ -146,6 +208,7 @@ func (s *BandState) count(b *Band, dt int64, last float64, assumed bool) {
 		return
 	}
 	s.Elapsed += dt
+	s.Added = dt
 	s.Total += dt
 	if assumed {
 		s.Assumed += dt
@@ -162,7 +225,7 @@ func (s *BandState) enter(b *Band, t int64, egt float64) {
 		return
 	case !s.Over:
 		if s.Scans == 0 {
-			s.Began, s.Peak = t, 0
+			s.Began, s.Peak, s.Above = t, 0, [MaxBands]int64{}
 		}
 		s.Scans++
 		s.Peak = max(s.Peak, egt)
@@ -175,6 +238,7 @@ func (s *BandState) enter(b *Band, t int64, egt float64) {
 		if s.Elapsed > seenWithin {
 			s.Assumed = s.Elapsed
 		}
+		s.Added = s.Elapsed
 		s.Total += s.Elapsed
 		s.TotalAssumed += s.Assumed
 	case egt >= b.Limit-b.Deadband:
@@ -187,6 +251,8 @@ func (s *BandState) enter(b *Band, t int64, egt float64) {
 		s.RunPeak = max(s.RunPeak, s.Peak)
 	}
 	if s.Below && t-s.BelowSince >= b.Rearm {
+		s.Closed = s.Excursion()
+		s.Closed.Ended = s.BelowSince
 		s.Over, s.Below, s.Scans = false, false, 0
 		s.Elapsed, s.Assumed, s.Peak = 0, 0, 0
 	}

@@ -3,6 +3,7 @@ package pipeline
 import (
 	"encoding/json"
 	"errors"
+	"fmt"
 	"slices"
 	"strings"
 	"testing"
@@ -132,7 +133,8 @@ func (b *bed) step() []Outcome {
 	b.outs = b.m.Step(b.s, &b.r)
 	for _, o := range b.outs {
 		switch o.Kind {
-		case OutcomeAlarm, OutcomeRun, OutcomeMark, OutcomeAction, OutcomeConfig, OutcomeQuarantine:
+		case OutcomeAlarm, OutcomeRun, OutcomeMark, OutcomeAction, OutcomeConfig, OutcomeQuarantine,
+			OutcomeExceedance, OutcomeEngine, OutcomeLife:
 			b.all = append(b.all, o)
 		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeReduction:
 		}
@@ -235,6 +237,19 @@ func (b *bed) told(kind OutcomeKind) string {
 			words = append(words, o.Mark.Text)
 		case OutcomeConfig, OutcomeQuarantine:
 			words = append(words, o.Text)
+		case OutcomeEngine:
+			words = append(words, o.Engine.Event)
+		case OutcomeExceedance:
+			word := o.Exceedance.Band + " on"
+			if o.Exceedance.Ended != 0 {
+				word = o.Exceedance.Band + " ended"
+			}
+			if o.Exceedance.Exceeded {
+				word += " exceeded"
+			}
+			words = append(words, word)
+		case OutcomeLife:
+			words = append(words, fmt.Sprintf("%s: %d starts, %d cycles", o.Life.Serial, o.Life.Starts, o.Life.Cycles))
 		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeAction, OutcomeReduction:
 		}
 	}

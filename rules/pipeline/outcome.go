@@ -33,6 +33,9 @@ const (
 	OutcomeQuarantine                        // Text: why a message was not used
 	OutcomeAction                            // Action: what became of an operator's action
 	OutcomeReduction                         // Area: what a run that ends says of the engine
+	OutcomeExceedance                        // Exceedance: an excursion above an EGT band
+	OutcomeEngine                            // Engine: a start, a shutdown or what went wrong with one
+	OutcomeLife                              // Life: of the engine, when a run ends
 )
 
 // Outcome is one result of a step. What it points to belongs to the machine and
@@ -55,6 +58,10 @@ type Outcome struct {
 	OK     bool // of a configuration
 	Action *ActionResult
 	Area   *steady.RunArea
+
+	Exceedance *Exceedance
+	Engine     *EngineEvent
+	Life       *Life
 }
 
 // Allowance is a line of the EGT ledger: a band and how much of it is used up.

@@ -166,6 +166,7 @@ func (m *Machine) load(bundle []byte) error {
 	for i := range cfg.Align.Channels {
 		cfg.Align.Channels[i].Raw = cfg.Compute.Channels[i].Raw
 	}
+	cfg.Compute.EGT.Serial = cfg.Rig.EngineSerial
 	comp, err := compute.New(cfg.Compute)
 	if err != nil {
 		return fmt.Errorf("pipeline: %w", err)
@@ -317,11 +318,12 @@ func (m *Machine) health(s *State, r *ingest.Record) {
 // scan computes and judges one scan.
 func (m *Machine) scan(s *State, scan *monitor.Scan, point *monitor.OperatingPoint) {
 	p := m.prog
-	changed := p.compute.Step(&s.Compute, scan, point)
+	changes := p.compute.Step(&s.Compute, scan, point)
 	m.emit(s, Outcome{Kind: OutcomePoint, T: scan.T, Point: point, Scan: scan})
 	m.emit(s, Outcome{Kind: OutcomeChannels, T: scan.T, Point: point, Scan: scan})
 	m.runs(s, point)
-	if changed || scan.N%uint64(max(1, second/p.cfg.Align.Period)) == 0 {
+	m.account(s, &changes, point)
+	if changes.Moved || scan.N%uint64(max(1, second/p.cfg.Align.Period)) == 0 {
 		m.ledger(s, scan.T)
 	}
 	p.frame.fill(s, scan, point)
@@ -410,6 +412,7 @@ func (m *Machine) endRun(s *State, t int64) {
 	if area, ok := s.Compute.Area.Of(s.Run.ID); ok {
 		m.emit(s, Outcome{Kind: OutcomeReduction, T: t, Area: &area})
 	}
+	m.settle(s, t)
 	s.RunActive = false
 	s.Run.Ended = t
 	run := s.Run

@@ -322,8 +322,9 @@ func TestParseRefusesWhatIsNoBundle(t *testing.T) {
 // The default rules of a rig are the same when they come from their text.
 func TestRenderedRules(t *testing.T) {
 	list := rules.Default(rules.Equipment{
-		Bands: []egt.Band{{Name: "run_max", Kind: egt.KindRun, Limit: 993.15, Allowance: 5e9}},
-		EGT:   true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true,
+		Limits: egt.Limits{Spread: 90, Rise: 80, StarterOnce: 30e9, StarterHour: 120e9, Rundown: 8e9},
+		Bands:  []egt.Band{{Name: "run_max", Kind: egt.KindRun, Limit: 993.15, Allowance: 5e9}},
+		EGT:    true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true,
 	})
 	list = append(list, rules.Rule{
 		Name: "all_fields", When: "npr > 1.5 and \"a\" == 'b' # \\ {", Priority: rules.Advisory, OnDelay: 1, OffDelay: 1234567891, Deadband: 1e-9,

@@ -16,6 +16,7 @@ func (r *rig) defaults() File {
 	s := &r.cfg.Compute.Stations
 	list := rules.Default(rules.Equipment{
 		Bands:     r.cfg.Compute.EGT.Bands,
+		Limits:    r.cfg.Compute.EGT.Limits,
 		EGT:       len(s.EGT) > 0,
 		Rake:      len(s.P7) > 0,
 		Speed:     s.Speed >= 0,

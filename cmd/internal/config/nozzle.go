@@ -153,6 +153,7 @@ func (r *rig) readPhase(n node) {
 	cool := f.get("cool_egt")
 	p.CoolEGT = cool.quantity(unit.Temperature, 393.15)
 	p.OffAfter = f.get("off_after").duration(30*second, positive)
+	r.cfg.Compute.EGT.Limits.Rundown = f.get("rundown_at_least").duration(0, positive)
 	f.done()
 	if p.Max > 0 && p.Idle > 0 && !(p.Turning < p.Idle-p.IdleBand && p.Idle+p.IdleBand < p.Max) {
 		f.fault("the speeds are not in order", "turning < idle − idle_band and idle + idle_band < max")

@@ -53,6 +53,7 @@ func readRig(f File) *rig {
 	r.readChoke(m.get("choke"))
 	r.readSteady(m.get("steady"))
 	r.readEGT(m.get("egt"))
+	r.readStarter(m.get("starter"))
 	run := m.get("run").fields()
 	r.cfg.Run.EndAfter = run.get("end_after").duration(120*second, positive)
 	run.done()
@@ -203,6 +204,18 @@ func (r *rig) readSteady(n node) {
 	q.Temperature = f.get("temperature_slope").in("K/min", 6, positive) / minute
 	q.Speed = f.get("speed_slope").in("%/min", 0.25, positive) / 100 / minute
 	f.done()
+}
+
+// readStarter reads for how long the starter may crank.
+func (r *rig) readStarter(n node) {
+	f := n.fields()
+	l := &r.cfg.Compute.EGT.Limits
+	l.StarterOnce = f.get("at_once").duration(0, positive)
+	l.StarterHour = f.get("per_hour").duration(0, positive)
+	f.done()
+	if n.is() && r.cfg.Compute.Stations.Speed < 0 {
+		f.fault("cranking is told by the rotor speed", "name a channel in stations.speed")
+	}
 }
 
 func (r *rig) readBellmouth(n node) {

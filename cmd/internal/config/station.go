@@ -254,8 +254,22 @@ func (r *rig) readEGT(n node) {
 		*bands = append(*bands, b)
 		places = append(places, item)
 	}
-	f.done()
+	limits := &r.cfg.Compute.EGT.Limits
+	spread, rise := f.get("spread"), f.get("rise_after_shutdown")
+	limits.Spread = spread.quantity(unit.TemperatureDifference, 0, positive)
 	harness := len(r.cfg.Compute.Stations.EGT) > 0
+	if harness && r.cfg.Compute.Stations.Speed >= 0 {
+		limits.Rise = rise.quantity(unit.TemperatureDifference, 80, positive)
+	} else if rise.is() {
+		rise.fault("without an EGT harness and rotor speed a shutdown is not seen", "name their channels in stations.egt and stations.speed")
+	}
+	if spread.is() && (!harness || r.cfg.Compute.Stations.EGTParallel) {
+		spread.fault("there are no single probes to have a spread", "list them in stations.egt.probes")
+	}
+	f.done()
+	if len(*bands) > egt.MaxBands {
+		list.fault(fmt.Sprintf("%d EGT bands", len(*bands)), fmt.Sprintf("%d at most", egt.MaxBands))
+	}
 	switch {
 	case len(*bands) > 0 && !harness:
 		list.fault("EGT bands without an EGT harness", "name its channels in stations.egt")

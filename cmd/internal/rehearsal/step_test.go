@@ -111,17 +111,21 @@ func newStepper() *stepper {
 	return &stepper{m: machine(), s: &pipeline.State{}, d: pipeline.NewDigest(), raised: map[string]bool{}}
 }
 
+// text writes an outcome with all that it points to.
 func text(o *pipeline.Outcome) string {
-	c := *o
-	point, scan, alarm, status, mark, run, action := c.Point, c.Scan, c.Alarm, c.Status, c.Mark, c.Run, c.Action
-	c.Point, c.Scan, c.Alarm, c.Status, c.Mark, c.Run, c.Action = nil, nil, nil, nil, nil, nil, nil
-	out := fmt.Sprintf("%+v", c)
-	for _, part := range []any{point, scan, alarm, status, mark, run, action} {
-		if v := reflect.ValueOf(part); !v.IsNil() {
-			out += fmt.Sprintf(" %+v", v.Elem().Interface())
+	v := reflect.ValueOf(*o)
+	var b strings.Builder
+	for i := range v.NumField() {
+		f := v.Field(i)
+		if f.Kind() == reflect.Pointer {
+			if f.IsNil() {
+				continue
+			}
+			f = f.Elem()
 		}
+		fmt.Fprintf(&b, " %s:%+v", v.Type().Field(i).Name, f.Interface())
 	}
-	return out
+	return b.String()
 }
 
 func (st *stepper) step(rs ...ingest.Record) {

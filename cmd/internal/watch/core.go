@@ -151,6 +151,12 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 			c.event(o, "quarantine", o.Text)
 		case pipeline.OutcomeReduction:
 			c.event(o, "reduction", reduction(o.Area))
+		case pipeline.OutcomeExceedance:
+			c.event(o, "exceedance", o.Exceedance)
+		case pipeline.OutcomeEngine:
+			c.event(o, "engine", o.Engine)
+		case pipeline.OutcomeLife:
+			c.event(o, "life", o.Life)
 		case pipeline.OutcomeChannels, pipeline.OutcomeLedger, pipeline.OutcomeStatus, pipeline.OutcomeAction:
 		}
 	}
