@@ -66,7 +66,7 @@ func budgetView(b *compute.Budget, cfg *pipeline.Config) budgetJSON {
 			Systematic: nullable(o.Systematic), Random: nullable(o.Random), Inputs: []budgetInputJSON{},
 		}
 		for _, in := range o.Inputs {
-			view := budgetInputJSON{Input: in.Input.String(), Contribution: nullable(in.Contribution), Share: nullable(in.Share), Parts: []budgetPartJSON{}}
+			view := budgetInputJSON{Input: in.Name, Contribution: nullable(in.Contribution), Share: nullable(in.Share), Parts: []budgetPartJSON{}}
 			for _, part := range in.Parts {
 				p := budgetPartJSON{What: part.What, Share: nullable(part.Share)}
 				if part.Channel >= 0 {

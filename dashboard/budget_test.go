@@ -41,7 +41,7 @@ func TestBudget(t *testing.T) {
 	d.send(play(start, engineTest(), 24*time.Second, nil))
 	point := into[map[string]any](t, d.get(t, rigPath+"/operating-point"))
 	b := into[budget](t, d.get(t, rigPath+"/budget"))
-	if b.T != point["t"] || float64(b.Scan) != point["scan"] || len(b.Outputs) != 3 {
+	if b.T != point["t"] || float64(b.Scan) != point["scan"] || len(b.Outputs) != 4 {
 		t.Fatalf("budget of %s, scan %d, %d outputs; point of %v, scan %v", b.T, b.Scan, len(b.Outputs), point["t"], point["scan"])
 	}
 	named := map[string]string{}

@@ -440,6 +440,9 @@ func station(st *compute.Stations, i int) string {
 		{"speed", st.Speed},
 		{"fuel_flow", st.FuelFlow},
 		{"bellmouth", st.Bellmouth},
+		{"water_flow", st.WaterFlow},
+		{"bleed_flow", st.BleedFlow},
+		{"bleed_temperature", st.BleedT},
 		{"thrust", st.Thrust},
 	} {
 		if s.index == i {

@@ -47,11 +47,14 @@ const (
 	Barometer
 	FuelAirRatio
 	HumidityRatio
+	WaterAirRatio
 	ThroatArea
 	DischargeCoefficient
 	ThrustCoefficient
 	AirFlow
 	FuelFlow
+	WaterFlow
+	BleedFlow
 	FlowBalance
 	FlowBalanceU95
 	FlowBalanceBaseline
@@ -69,6 +72,7 @@ const (
 	MeasuredThrust
 	ReferredFlow
 	ReferredSpeed
+	ReferredEGT
 	ReferredThrust
 	ChokeLossIn
 	ChokeLossInLow95
@@ -130,19 +134,22 @@ var infos = [NumQuantities]Info{
 	Barometer:                {"barometer_pa", "Pa", "Barometer, station pressure"},
 	FuelAirRatio:             {"fuel_air_ratio", "", "Fuel-air ratio, dry basis"},
 	HumidityRatio:            {"humidity_ratio", "", "Humidity ratio, dry basis"},
+	WaterAirRatio:            {"water_air_ratio", "", "Water-air ratio of the nozzle gas, dry basis"},
 	ThroatArea:               {"throat_area_m2", "m²", "Throat area, hot"},
 	DischargeCoefficient:     {"discharge_coefficient", "", "Discharge coefficient"},
 	ThrustCoefficient:        {"thrust_coefficient", "", "Thrust coefficient"},
 	AirFlow:                  {"air_flow_kg_s", "kg/s", "Bellmouth air flow W2"},
 	FuelFlow:                 {"fuel_flow_kg_s", "kg/s", "Fuel flow"},
-	FlowBalance:              {"flow_balance_kg_s", "kg/s", "Air + fuel flow less W8"},
-	FlowBalanceU95:           {"flow_balance_kg_s_u95", "kg/s", "Air + fuel flow less W8, 95 % uncertainty"},
-	FlowBalanceBaseline:      {"flow_balance_baseline_kg_s", "kg/s", "Air + fuel flow less W8, the engine's own baseline"},
-	EffectiveArea:            {"effective_area_m2", "m²", "Throat area that air + fuel flow implies, hot"},
-	EffectiveAreaU95:         {"effective_area_m2_u95", "m²", "Throat area that air + fuel flow implies, 95 % uncertainty"},
-	IndependentFlow:          {"independent_flow_kg_s", "kg/s", "Air + fuel flow"},
-	IndependentFlowU95:       {"independent_flow_kg_s_u95", "kg/s", "Air + fuel flow, 95 % uncertainty"},
-	IndependentFlowParameter: {"independent_flow_parameter", "", "Flow parameter from air + fuel flow"},
+	WaterFlow:                {"water_flow_kg_s", "kg/s", "Injected water flow"},
+	BleedFlow:                {"bleed_flow_kg_s", "kg/s", "Bleed air flow, overboard"},
+	FlowBalance:              {"flow_balance_kg_s", "kg/s", "Metered flow less W8"},
+	FlowBalanceU95:           {"flow_balance_kg_s_u95", "kg/s", "Metered flow less W8, 95 % uncertainty"},
+	FlowBalanceBaseline:      {"flow_balance_baseline_kg_s", "kg/s", "Metered flow less W8, the engine's own baseline"},
+	EffectiveArea:            {"effective_area_m2", "m²", "Throat area that the metered flow implies, hot"},
+	EffectiveAreaU95:         {"effective_area_m2_u95", "m²", "Throat area that the metered flow implies, 95 % uncertainty"},
+	IndependentFlow:          {"independent_flow_kg_s", "kg/s", "Metered flow: air + fuel + water − bleed"},
+	IndependentFlowU95:       {"independent_flow_kg_s_u95", "kg/s", "Metered flow, 95 % uncertainty"},
+	IndependentFlowParameter: {"independent_flow_parameter", "", "Flow parameter from the metered flow"},
 	EGTIndicated:             {"egt_indicated_k", "K", "Indicated EGT"},
 	EGTSpread:                {"egt_spread_k", "K", "EGT spread, hottest less coldest"},
 	EGTHottest:               {"egt_hottest_k", "K", "Hottest EGT probe"},
@@ -152,6 +159,7 @@ var infos = [NumQuantities]Info{
 	MeasuredThrust:           {"measured_thrust_n", "N", "Load-cell thrust, uncorrected"},
 	ReferredFlow:             {"referred_flow_kg_s", "kg/s", "Referred flow W√θ/δ"},
 	ReferredSpeed:            {"referred_speed_rpm", "rpm", "Referred speed N/√θ"},
+	ReferredEGT:              {"referred_egt_k", "K", "Referred EGT, indicated EGT over θ to a power"},
 	ReferredThrust:           {"referred_thrust_n", "N", "Referred thrust F/δ"},
 	ChokeLossIn:              {"choke_loss_in_s", "s", "Forecast: time to the loss of choke"},
 	ChokeLossInLow95:         {"choke_loss_in_s_low95", "s", "Forecast: time to the loss of choke, lower 95 % bound"},
@@ -265,7 +273,9 @@ const (
 	WarnPressureBridged // rake lost, p7 from wall static
 	WarnGasBridged      // T7 from another source than the first one
 	WarnFlowBalance     // the residual departs from the engine's baseline
-	NumWarnings         = 12
+	WarnAssumedWater    // injected water not measured, its ratio is held
+	WarnWeightsHeld     // mass-flux weights of a rake cannot be formed
+	NumWarnings         = 14
 )
 
 var warningTexts = [NumWarnings]string{
@@ -281,6 +291,8 @@ var warningTexts = [NumWarnings]string{
 	"total-pressure rake lost: p7 from wall static pressure and the ratio learned before",
 	"first source of T7 lost: another one stands in",
 	"flow balance departs from the engine's baseline",
+	"water flow not measured: its ratio is held",
+	"mass-flux weights held: wall static pressure or a probe of the rake is missing",
 }
 
 // Each calls yield with the text of every warning that is set.

@@ -147,8 +147,7 @@ func newCheckReport(bundle config.Bundle, cfg *pipeline.Config, faults []config.
 			ID: c.ID, Title: c.Title, Unit: c.Unit.Name, SI: c.Unit.Dimension.SI().Name, Reference: against(cfg, i),
 			Low: c.Low, High: c.High, Hold: seconds(in.Hold), Topic: in.Topic, Name: in.Name, RecordedOnly: c.RecordedOnly,
 		}
-		if c.Uncertainty.Stated {
-			u := endU95(&c.Spec)
+		if u := endU95(&c.Spec); c.Uncertainty.Stated && !math.IsNaN(u) {
 			one.U95 = &u
 		}
 		out.Channels = append(out.Channels, one)
@@ -264,6 +263,13 @@ func checkNotes(cfg *pipeline.Config) []string {
 		}
 	}
 	note(len(unstated) > 0, "The choke margin has no honest U95: no uncertainty is stated for "+strings.Join(unstated, ", ")+".")
+	for i := range cfg.Compute.Channels {
+		c := &cfg.Compute.Channels[i]
+		wire := c.Uncertainty.Thermocouple
+		if low, high := wire.Range(); wire.Defined() && (c.Low < low || c.High > high) {
+			note(true, fmt.Sprintf("%s has no U95 outside %s to %s °C, for which a thermocouple of type %c, class %d has a tolerance.", c.ID, number(low-273.15), number(high-273.15), wire.Type, wire.Class))
+		}
+	}
 	note(z.ChokeNPRU95 == 0, "The probability of choked flow stays unknown: state nozzle.model_uncertainty, or nozzle.choke_npr from a calibration.")
 	note(len(z.Discharge) == 0, "Flow and thrust are those of an ideal nozzle: no discharge coefficient is stated.")
 	note(z.AreaU95 == 0, "U95 of flow and thrust leaves the throat area out: state nozzle.area_uncertainty.")
@@ -272,6 +278,7 @@ func checkNotes(cfg *pipeline.Config) []string {
 	note(s.Humidity < 0, "The air is taken for dry: no humidity is measured.")
 	note(len(s.T7) == 0, "The nozzle gas temperature is indicated EGT times a factor, not a rake.")
 	note(len(cfg.Compute.EGT.Bands) == 0, "No exhaust temperature is watched: the rig has no EGT bands.")
+	note(s.Bellmouth >= 0 && s.FuelFlow >= 0 && s.BleedFlow < 0 && s.BleedShare == 0, "All air of the bellmouth is taken to pass the nozzle: no bleed is stated.")
 	note(s.Bellmouth < 0, "There is no independent flow: no bellmouth is measured.")
 	note(z.ArmedAboveRPM == 0, "Loss of choke raises no alarm: choke.armed_above is not stated.")
 	return notes
@@ -387,11 +394,15 @@ func channelU95(c *calib.Spec) string {
 	if !c.Uncertainty.Stated {
 		return "not stated"
 	}
-	return "± " + strconv.FormatFloat(endU95(c)/c.Unit.Scale, 'g', 2, 64)
+	u := endU95(c)
+	if math.IsNaN(u) {
+		return "none there"
+	}
+	return "± " + strconv.FormatFloat(u/c.Unit.Scale, 'g', 2, 64)
 }
 
 // endU95 gives the 95 % uncertainty of a single reading at the end of the range
-// that is larger in amount, SI.
+// that is larger in amount, SI; NaN where its thermocouple has no tolerance there.
 func endU95(c *calib.Spec) float64 {
 	u := c.Uncertainty.U95(max(math.Abs(c.Low), math.Abs(c.High)), c.Low, c.High)
 	return math.Hypot(u, c.Uncertainty.Random)
@@ -441,10 +452,16 @@ func printStations(w *strings.Builder, cfg *pipeline.Config) {
 		{"fuel flow", s.FuelFlow},
 		{"bellmouth", s.Bellmouth},
 		{"thrust", s.Thrust},
+		{"water flow", s.WaterFlow},
+		{"bleed flow", s.BleedFlow},
+		{"bleed temperature", s.BleedT},
 	} {
 		if one.channel >= 0 {
 			t.row(one.name, ids([]int{one.channel}))
 		}
+	}
+	if s.BleedShare > 0 {
+		t.row("bleed flow", fmt.Sprintf("%s %% ± %s %% of the air flow", number(100*s.BleedShare), number(100*s.BleedShareU95)))
 	}
 	t.flush()
 }

@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"encoding/json"
 	"os"
+	"path/filepath"
 	"strings"
 	"testing"
 	"unicode/utf8"
@@ -88,6 +89,9 @@ func TestCheckTables(t *testing.T) {
 		"limits ML5-LIM-C",
 		"WARNING   Rotor speed above 22600 rpm",
 		"Follow facility procedure EP-11, rotor over-speed.",
+		"bleed flow           0.4 % ± 0.2 % of the air flow",
+		// √(1.5² + (1.96 · 0.0075 · 1100/√3)² + 0.8²) K = 9.5 K [JCGM 100 4.3.7], IEC 60584-1
+		"t7_1             degC  –                    -40 … 1100    ± 9.5",
 		// √((0.05 % of 260)² + (0.05 % of 250)² + 0.15²) kPa = 0.234 kPa
 		"± 0.23",
 	} {
@@ -108,13 +112,38 @@ func TestCheckTables(t *testing.T) {
 	}
 }
 
+// A thermocouple that its class does not cover over the whole range is noted, and its U95
+// is not made up; class 1 of type K ends at 1000 °C (IEC 60584-1).
+func TestCheckThermocouple(t *testing.T) {
+	text, err := os.ReadFile(exampleRig)
+	if err != nil {
+		t.Fatal(err)
+	}
+	rig := filepath.Join(t.TempDir(), "rig.yaml")
+	if err := os.WriteFile(rig, bytes.Replace(text, []byte("thermocouple: K, class: 2"), []byte("thermocouple: K, class: 1"), 1), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	_, out, _ := runCheck(t, rig)
+	for _, want := range []string{
+		"t7_4             degC  –                    -40 … 1100    none there",
+		"t7_1 has no U95 outside -40 to 1000 °C, for which a thermocouple of type K, class 1 has a",
+	} {
+		if !strings.Contains(out, want) {
+			t.Errorf("not shown: %s", want)
+		}
+	}
+	if _, out, _ := runCheck(t, "--json", rig); !json.Valid([]byte(out)) {
+		t.Errorf("no JSON: %s", out)
+	}
+}
+
 func TestCheckJSON(t *testing.T) {
 	_, out, _ := runCheck(t, "--json", exampleRig)
 	var report checkReport
 	if err := json.Unmarshal([]byte(out), &report); err != nil {
 		t.Fatal(err)
 	}
-	if len(report.Faults) != 0 || len(report.Channels) != 41 || len(report.Bands) != 3 || len(report.Hash) != 64 {
+	if len(report.Faults) != 0 || len(report.Channels) != 42 || len(report.Bands) != 3 || len(report.Hash) != 64 {
 		t.Errorf("%d faults, %d channels, %d bands, hash %q", len(report.Faults), len(report.Channels), len(report.Bands), report.Hash)
 	}
 	if report.Clearance != checkClosing {

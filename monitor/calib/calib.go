@@ -34,6 +34,8 @@ type Uncertainty struct {
 	Fixed     float64 // SI
 	Random    float64 // SI
 	Stated    bool
+
+	Thermocouple Thermocouple // its tolerance comes in as well; the zero value is none
 }
 
 // Spec is the calibration of one channel.
@@ -72,9 +74,15 @@ func (s *Spec) Convert(raw float64) (float64, monitor.Quality) {
 	return v, monitor.QualityGood
 }
 
-// U95 gives the systematic 95 % uncertainty of a value in SI.
+// U95 gives the systematic 95 % uncertainty of a value in SI; NaN where a thermocouple
+// has no tolerance.
 func (u *Uncertainty) U95(value, low, high float64) float64 {
 	full := u.FullScale * (high - low)
 	reading := u.Reading * value
-	return math.Sqrt(full*full + reading*reading + u.Fixed*u.Fixed)
+	sum := full*full + reading*reading + u.Fixed*u.Fixed
+	if u.Thermocouple != (Thermocouple{}) {
+		wire := u.Thermocouple.U95(value)
+		sum += wire * wire
+	}
+	return math.Sqrt(sum)
 }

@@ -52,7 +52,7 @@ func newBuilder(tb testing.TB) *builder {
 	b := &builder{tb: tb}
 	b.Stations = compute.Stations{
 		Barometer: -1, ExitPlane: -1, InletT: -1, InletP: -1, Humidity: -1, AmbientT: -1,
-		Speed: -1, FuelFlow: -1, Bellmouth: -1, Thrust: -1,
+		Speed: -1, FuelFlow: -1, Bellmouth: -1, Thrust: -1, WaterFlow: -1, BleedFlow: -1, BleedT: -1,
 	}
 	b.Fuel = gas.Kerosene()
 	b.Nozzle.Config = nozzle.Config{ThroatArea: area, ResolutionFloor: 0.003}
@@ -103,7 +103,7 @@ func full(tb testing.TB) *builder {
 	for _, id := range []string{"egt_1", "egt_2", "egt_3", "egt_4"} {
 		st.EGT = append(st.EGT, b.add(id, "K", calib.ReferenceNone, -1))
 	}
-	st.MinP7, st.MinT7, st.MinEGT = 3, 3, 3
+	st.MinP7, st.MinT7, st.MinEGT, st.EGTExponent = 3, 3, 3, 1
 	st.P7Watch.Sampling, st.T7Watch.Sampling = 1e-9, 1e-9 // the profile is known from a survey
 	st.InletT = b.add("t_inlet", "K", calib.ReferenceNone, -1)
 	st.InletP = b.add("p_inlet", "Pa", calib.Gauge, st.Barometer)

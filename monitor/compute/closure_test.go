@@ -59,11 +59,10 @@ func (r *rig) noisy(random *rand.Rand, n int, change func(k int, readings map[st
 func TestEffectiveArea(t *testing.T) {
 	b := full(t)
 	for i := range b.Channels {
-		if i == b.Stations.Barometer {
+		if i == b.Stations.Barometer || i == b.Stations.FuelFlow {
 			b.Channels[i].Uncertainty.Fixed, b.Channels[i].Uncertainty.Random = 1e-9, 0 // what is shared
 		}
 	}
-	b.Channels[slices.IndexFunc(b.Channels, func(c compute.Channel) bool { return c.ID == "fuel_flow" })].Uncertainty = calib.Uncertainty{Fixed: 1e-3, Stated: true}
 	r := b.rig().lit(100)
 	p := r.step()
 	v := &p.V
@@ -74,7 +73,7 @@ func TestEffectiveArea(t *testing.T) {
 	flow := budget.Outputs[1]
 	square := 0.0
 	for _, in := range flow.Inputs {
-		if in.Input != uncertainty.ThroatArea {
+		if in.Name != uncertainty.ThroatArea.String() {
 			square += in.Contribution * in.Contribution
 		}
 	}
@@ -277,10 +276,10 @@ func TestBudget(t *testing.T) {
 	check := func(name string, want map[string]bool) {
 		t.Helper()
 		budget, ok := r.c.Budget()
-		if !ok || budget.T != r.p.T || budget.Scan != r.p.Scan || len(budget.Outputs) != 3 {
+		if !ok || budget.T != r.p.T || budget.Scan != r.p.Scan || len(budget.Outputs) != 4 {
 			t.Fatalf("%s: %+v, %v", name, budget, ok)
 		}
-		for i, u := range []monitor.Quantity{monitor.ChokeMarginPercentU95, monitor.MassFlowU95, monitor.GrossThrustU95} {
+		for i, u := range []monitor.Quantity{monitor.ChokeMarginPercentU95, monitor.MassFlowU95, monitor.GrossThrustU95, monitor.FlowBalanceU95} {
 			o := &budget.Outputs[i]
 			if o.U95 != r.p.V[u] || o.Value != r.p.V[o.Quantity] {
 				t.Errorf("%s: %s %g ± %g", name, o.Quantity.Info().Name, o.Value, o.U95)
@@ -297,7 +296,7 @@ func TestBudget(t *testing.T) {
 					delete(want, what)
 				}
 				if math.Abs(parts-in.Share) > 1e-9 || in.Share > last {
-					t.Errorf("%s: %s: %v has %g of which %g are told", name, o.Quantity.Info().Name, in.Input, in.Share, parts)
+					t.Errorf("%s: %s: %v has %g of which %g are told", name, o.Quantity.Info().Name, in.Name, in.Share, parts)
 				}
 				all += in.Share
 				last = in.Share
@@ -322,7 +321,7 @@ func TestBudget(t *testing.T) {
 	b.Nozzle.DischargeU95 = 0
 	r = b.rig().lit(100)
 	budget, _ := r.c.Budget()
-	if o := &budget.Outputs[1]; o.Inputs[0].Input != uncertainty.Discharge || !math.IsNaN(o.Inputs[0].Contribution) || !math.IsNaN(o.Inputs[1].Share) || !math.IsNaN(o.U95) {
+	if o := &budget.Outputs[1]; o.Inputs[0].Name != uncertainty.Discharge.String() || !math.IsNaN(o.Inputs[0].Contribution) || !math.IsNaN(o.Inputs[1].Share) || !math.IsNaN(o.U95) {
 		t.Errorf("not stated: %+v", budget.Outputs[1].Inputs[0])
 	}
 	if o := &budget.Outputs[0]; math.IsNaN(o.U95) {

@@ -57,6 +57,7 @@ type State struct {
 	EGT      egt.State
 	Engine   egt.Engine
 	F        float64 // fuel-air ratio last closed
+	Water    float64 // injected, per kg of dry air, as last closed
 	Rise     float64 // T0 − what the probes of station 7 read, K, as last closed
 	Metal    float64 // temperature of the nozzle's metal, K
 	MetalT   int64   // event time of Metal, 0 = not known
@@ -91,6 +92,7 @@ type Computer struct {
 	usable    []bool
 	learns    bool  // patterns and ratios, in this scan
 	flow      meter // of this scan
+	balanced  bool  // it has a flow balance
 	head      bridged
 	gas       source             // of T7, of this scan
 	doubts    uncertainty.Inputs // of result
@@ -129,12 +131,16 @@ func New(cfg Config) (*Computer, error) {
 			faults = append(faults, fmt.Errorf("%s: %w", g.name, err))
 		}
 	}
+	if st.P7Flux && len(st.WallStatic) == 0 || st.T7Flux && (len(st.WallStatic) == 0 || len(st.T7) != len(st.P7)) {
+		faults = append(faults, errors.New("mass-flux weights: want a wall static pressure, and of each probe of t7 one of p7"))
+	}
 	c.egt.watch.KeepHot = true
 	if st.EGTWatch.Return == 0 {
 		c.egt.watch.Return = backHarness
 	}
 	c.usable = make([]bool, len(st.EGT))
 	c.parts = make([]part, 0, 16+2*len(cfg.Channels))
+	c.flow.terms = make([]term, 0, 8+len(cfg.Channels))
 	c.steadiness()
 	if err = c.detector.Check(); err != nil {
 		faults = append(faults, err)
@@ -184,7 +190,7 @@ func (c *Computer) Reset(s *State, from []Channel) {
 	s.Head, s.HeatRatio, s.EGTRatio = Bridge{}, Bridge{}, Bridge{}
 	s.Steady, s.Balance, s.Area = steady.State{}, steady.Learned{}, Area{}
 	s.ToChokeLoss, s.ToEGTLimit = Trend{}, Trend{}
-	s.Rise, s.HeadNow = 0, 0
+	s.Rise, s.HeadNow, s.Water = 0, 0, 0
 }
 
 // sameValues tells whether two channels give the same value for the same raw one:
@@ -204,7 +210,7 @@ func (c *Computer) Step(s *State, scan *monitor.Scan, p *monitor.OperatingPoint)
 func (c *Computer) compute(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) egt.Changes {
 	p.Reset()
 	p.T, p.Scan = scan.T, scan.N
-	c.last = 0
+	c.last, c.balanced = 0, false
 
 	// Patterns and ratios are learned while the engine is steady, as of the scan before.
 	c.learns = s.Phase.Phase == monitor.Steady || c.cfg.Stations.Speed < 0 && s.Steady.Result.Steady
@@ -213,7 +219,7 @@ func (c *Computer) compute(s *State, scan *monitor.Scan, p *monitor.OperatingPoi
 	ledger := c.ledger(s, scan, p)
 	c.pressures(s, scan, p)
 	air := c.air(scan, p)
-	c.meterAir(scan, p, &air)
+	c.meterFlow(scan, p, &air)
 	c.gasTemperature(s, scan, p, &air)
 	c.throat(s, scan, p)
 	c.steadyNow(s, p)
@@ -332,6 +338,7 @@ func (c *Computer) referred(scan *monitor.Scan, p *monitor.OperatingPoint) {
 	if !(theta > 0 && delta > 0) {
 		return
 	}
+	v[monitor.ReferredEGT] = v[monitor.EGTIndicated] / math.Pow(theta, st.EGTExponent)
 	v[monitor.ReferredSpeed] = v[monitor.Speed] / math.Sqrt(theta)
 	v[monitor.ReferredFlow] = v[monitor.MassFlow] * math.Sqrt(theta) / delta
 	v[monitor.ReferredThrust] = v[monitor.GrossThrust] / delta

@@ -783,6 +783,12 @@ func TestReferred(t *testing.T) {
 		monitor.ReferredThrust: p.V[monitor.GrossThrust] / w12["delta"],
 		monitor.MeasuredThrust: 3900,
 	})
+	// EGT/θ^x, by hand: θ 1.0520562 to the power 0.9 is 1.0467302; 916 K is the mean.
+	b := full(t)
+	b.Stations.EGTExponent = 0.9
+	other := b.rig().set(running()).set(map[string]float64{"t_inlet": 303.15})
+	compare(t, "EGT/θ^0.9", other.steps(2), 1e-6, map[monitor.Quantity]float64{monitor.ReferredEGT: 916 / 1.0467302})
+	compare(t, "EGT/θ", p, 1e-9, map[monitor.Quantity]float64{monitor.ReferredEGT: 916 * 288.15 / 303.15})
 	// At sea-level conditions of ISO 2533 they are the values themselves.
 	r.set(map[string]float64{"p_baro": 101625, "t_inlet": 288.15})
 	p = r.steps(2)

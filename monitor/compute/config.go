@@ -30,6 +30,7 @@ type Stations struct {
 	EGTParallel bool
 	EGTTrim     float64 // K added to the harness mean, as the engine's limits ask
 	MinEGT      int
+	EGTExponent float64 // x of referred EGT = EGT/θ^x; 1 by theory
 	Barometer   int
 	ExitPlane   int     // static pressure in the exit plane
 	Depression  float64 // Pa, barometer − back pressure, used without ExitPlane
@@ -44,11 +45,23 @@ type Stations struct {
 	Bellmouth   int // differential, inlet total less bellmouth throat static
 	Thrust      int
 
+	WaterFlow int // liquid water injected behind the bleed, all of it in the gas of the nozzle
+	BleedFlow int // air bled overboard
+	// Without BleedFlow the bleed is a share of the air flow, 0 = none.
+	BleedShare    float64
+	BleedShareU95 float64 // absolute 95 % uncertainty of the share
+	BleedT        int     // temperature of the bleed air; the heat balance needs it
+
 	// How the groups are watched. Probes and Least follow from the lists above; of
 	// the rest, what is zero gets the value that a small gas turbine needs.
 	P7Watch, T7Watch, EGTWatch rake.Watch
 
 	WallStatic []int // static pressure at the wall of station 7, for a lost rake
+
+	// The probes of the group are weighed by the mass flux at their places too, as the
+	// probes of P7 and WallStatic show it; probe k of T7 stands at the place of k of P7.
+	P7Flux, T7Flux bool
+
 	Reheat     []int // flags, > 0.5 = the reheat is lit
 	ThroatArea []int // throat area in m² by position, on the basis of the nozzle
 
@@ -67,9 +80,11 @@ type Recovery struct {
 
 // HeatBalance gives T7 from the heat that goes into the gas,
 //
-//	W2 [h_air(T2) − h_air(298.15 K)] + Wf η LHV = (W2 + Wf) [h(T7) − h(298.15 K)]
+//	W2 [h_air(T2) − h_air(298.15 K)] + Wf η LHV =
+//	    (W2 + Wf + Ww − Wb) [h(T7) − h(298.15 K)] + Ww L + Wb [h_air(Tb) − h_air(298.15 K)]
 //
-// where shaft power and heat through the walls cancel or do not count.
+// where shaft power and heat through the walls cancel or do not count. Water Ww is liquid at
+// 25 °C, L its latent heat; bleed Wb leaves with the temperature Tb.
 type HeatBalance struct {
 	Efficiency   float64 // η of combustion
 	HeatingValue float64 // LHV, J/kg, lower, at 25 °C; 0 = none

@@ -31,13 +31,18 @@ func (c *Computer) OfMean(scan *monitor.Scan) (p monitor.OperatingPoint, u Syste
 		{monitor.Barometer, st.Barometer, 1},
 		{monitor.Speed, st.Speed, 60},
 		{monitor.FuelFlow, st.FuelFlow, 1},
+		{monitor.WaterFlow, st.WaterFlow, 1},
 		{monitor.MeasuredThrust, st.Thrust, 1},
 	} {
 		u[direct.q] = direct.scale * c.part(scan, direct.index).Systematic
 	}
 	u[monitor.EGTIndicated] = c.groupPart(scan, &c.egt, math.NaN()).Systematic
-	u[monitor.AirFlow] = math.Hypot(c.flow.part.Systematic, c.flow.barometer.Systematic)
-	u[monitor.IndependentFlow] = math.Hypot(u[monitor.AirFlow], c.flow.fuel.Systematic)
+	if !math.IsNaN(p.V[monitor.AirFlow]) {
+		u[monitor.AirFlow] = spread(c.flow.terms[:c.flow.air], systematicOf) / c.flow.kept
+	}
+	if !math.IsNaN(p.V[monitor.IndependentFlow]) {
+		u[monitor.IndependentFlow] = spread(c.flow.terms, systematicOf)
+	}
 	if c.last == 0 {
 		return p, u
 	}
@@ -52,9 +57,9 @@ func (c *Computer) OfMean(scan *monitor.Scan) (p monitor.OperatingPoint, u Syste
 	u[monitor.ChokeMarginPercent] = out[uncertainty.MarginPercent].Systematic
 	u[monitor.MassFlow] = out[uncertainty.MassFlow].Systematic
 	u[monitor.GrossThrust] = out[uncertainty.GrossThrust].Systematic
-	w, w8, area := p.V[monitor.IndependentFlow], p.V[monitor.MassFlow], p.V[monitor.ThroatArea]
-	u[monitor.FlowBalance] = math.Hypot(u[monitor.IndependentFlow], u[monitor.MassFlow])
-	u[monitor.EffectiveArea] = area * w / w8 * math.Hypot(u[monitor.IndependentFlow]/w,
-		math.Sqrt(max(0, square(u[monitor.MassFlow])-square(out[uncertainty.MassFlow].Contribution[uncertainty.ThroatArea])))/w8)
+	if c.balanced {
+		balance, area := c.apart(p.V[monitor.IndependentFlow], p.V[monitor.MassFlow], systematicOf)
+		u[monitor.FlowBalance], u[monitor.EffectiveArea] = balance, p.V[monitor.EffectiveArea]*area
+	}
 	return p, u
 }

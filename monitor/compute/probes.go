@@ -19,6 +19,8 @@ type group struct {
 	quality  []monitor.Quality
 	now      rake.Result // of this scan
 	sampling float64     // standard uncertainty by the places of the probes, as last known
+	places   []float64   // what stands at the place of each probe in this scan
+	weights  []float64   // as they follow the flow; nil = those of the watch
 }
 
 // Probes is what is remembered of a group. It is plain data.
@@ -26,6 +28,7 @@ type Probes struct {
 	rake.State
 	Sampling float64 // standard uncertainty by the places of the probes, as last known
 	Sampled  bool
+	Flow     rake.Live // weights by mass flux
 }
 
 // back is the time without fault, ns, after which a probe counts again. It is short, since
@@ -48,7 +51,7 @@ func newGroup(w rake.Watch, channels []int, least int) (group, error) {
 			*d.to = d.value
 		}
 	}
-	g := group{channels: channels, watch: w, values: make([]float64, len(channels)), quality: make([]monitor.Quality, len(channels))}
+	g := group{channels: channels, watch: w, values: make([]float64, len(channels)), quality: make([]monitor.Quality, len(channels)), places: make([]float64, len(channels))}
 	g.now.Mean = math.NaN()
 	if len(channels) == 0 {
 		return g, nil
@@ -65,6 +68,8 @@ func (g *group) step(s *Probes, scan *monitor.Scan, learn bool) {
 		g.values[k], g.quality[k] = scan.Value[i], scan.Quality[i]
 	}
 	g.now = g.watch.Step(&s.State, scan.T, g.values, g.quality, learn)
+	g.watch.Places(&s.State, &g.now, g.values, g.quality, g.places)
+	g.weights = nil
 	if u := g.now.Sampling; u == u {
 		s.Sampling, s.Sampled = u, true
 	}
@@ -81,8 +86,26 @@ func (g *group) step(s *Probes, scan *monitor.Scan, learn bool) {
 
 func (g *group) out(k int) bool { return g.now.Out&(1<<k) != 0 }
 
+// weighByFlow moves the mean to the weights of the mass flux: as of this scan if rake
+// and wall tell it, else as it was. It reports which.
+func (c *Computer) weighByFlow(s *Probes, g *group, p *monitor.OperatingPoint, temperature []float64) {
+	live := s.Flow.Weigh(p.T, g.watch.Weights, c.p7.places, c.head.substitute, temperature)
+	// At rest there is nothing to weigh by, and nothing amiss.
+	if !live && !(c.p7.now.Mean < (1+leastFlow)*p.V[monitor.BackPressure]) {
+		p.Warnings |= monitor.WarnWeightsHeld
+	}
+	g.weights = s.Flow.Weights
+	g.now.Mean += g.watch.Reweigh(&g.now, g.places, g.weights)
+}
+
+// leastFlow is the NPR − 1 below which no flow is looked for in a rake.
+const leastFlow = 0.05
+
 // weight gives the weight of probe k in the mean.
 func (g *group) weight(k int) float64 {
+	if g.weights != nil {
+		return g.weights[k]
+	}
 	if g.watch.Weights == nil {
 		return 1
 	}
@@ -153,6 +176,10 @@ func (c *Computer) pressures(s *State, scan *monitor.Scan, p *monitor.OperatingP
 		p.Cause = blame(scan, []int{st.Barometer})
 	default:
 		p.Cause = blame(scan, []int{st.ExitPlane})
+	}
+	if st.P7Flux {
+		c.weighByFlow(&s.P7, &c.p7, p, nil)
+		v[monitor.RakePressure] = c.p7.now.Mean
 	}
 }
 

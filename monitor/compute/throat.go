@@ -31,6 +31,9 @@ type bridge struct {
 func (c *Computer) gasTemperature(s *State, scan *monitor.Scan, p *monitor.OperatingPoint, air *gas.Mixture) {
 	st := &c.cfg.Stations
 	c.t7.step(&s.T7, scan, c.learns)
+	if st.T7Flux {
+		c.weighByFlow(&s.T7, &c.t7, p, c.t7.places)
+	}
 	c.gas = source{read: c.t7.now.Mean, bridge: bridge{ratio: 1}}
 	balance, part := c.heat(scan, p, air)
 	egt := math.NaN()
@@ -63,40 +66,77 @@ func (c *Computer) gasTemperature(s *State, scan *monitor.Scan, p *monitor.Opera
 		}
 		p.TemperatureBy = from
 	}
+	if p.TemperatureBy != monitor.SourceHeatBalance {
+		for k := range c.flow.terms {
+			c.flow.terms[k].moves[uncertainty.TotalTemperature] = 0
+		}
+	}
 	p.V[monitor.TotalTemperature] = c.gas.read
 }
 
+// latent is the heat of evaporation of water at 25 °C, J/kg (IAPWS-95, 2441.7 kJ/kg).
+const latent = 2.4417e6
+
 // heat gives T7 by the heat balance, with its standard uncertainty in K. With q = η
-// LHV, h2 and h7 the gains of enthalpy, and the composition held,
+// LHV, h the gains of enthalpy, hw that of steam, and the composition otherwise held,
 //
-//	(W2 + Wf) cp7 dT7 = (h2 − h7) dW2 + (q − h7) dWf + Wf dq + W2 cp2 dT2
+//	(W2 + Wf + Ww − Wb) cp7 dT7 = (h2 − h7) dW2 + (q − h7) dWf − (L + hw) dWw + (h7 − hb) dWb
+//	                              + Wf dq + W2 cp2 dT2 − Wb cpb dTb
 //
-// NaN where an input is missing, and without a flame, when it does not hold.
+// NaN where an input is missing, and without a flame, when it does not hold. If T7 is
+// taken from it, the metered flow is in the flow of the nozzle too: the terms say how.
 func (c *Computer) heat(scan *monitor.Scan, p *monitor.OperatingPoint, air *gas.Mixture) (t7 float64, u uncertainty.Part) {
 	h := &c.cfg.Heat
 	nan := math.NaN()
-	u.Systematic = nan
-	w2, fuel, t2 := c.flow.w2, p.V[monitor.FuelFlow], c.channel(scan, c.cfg.Stations.InletT)
-	if h.HeatingValue <= 0 || !p.Lit || !(w2 > freezeBelow && fuel >= 0) || t2 != t2 {
+	m, fuel, t2, tb := &c.flow, p.V[monitor.FuelFlow], c.channel(scan, c.cfg.Stations.InletT), heatZero
+	if m.bleed != 0 {
+		tb = c.channel(scan, c.cfg.Stations.BleedT)
+	}
+	core := m.w2 - m.bleed
+	if h.HeatingValue <= 0 || !p.Lit || !(core > freezeBelow && fuel >= 0 && m.water >= 0) || t2 != t2 || tb != tb {
 		return nan, u
 	}
 	q := h.Efficiency * h.HeatingValue
 	war := p.V[monitor.HumidityRatio]
-	g := c.mixture(min(fuel*(1+war)/w2, c.richest), war)
+	dry := core / (1 + war)
+	f, ratio := min(fuel/dry, c.richest), war+m.water/dry
+	g := c.mixture(f, ratio)
 	if !g.Valid() || !air.Valid() {
 		return nan, u
 	}
-	h2 := air.H(t2) - air.H(heatZero)
-	h7 := (w2*h2 + fuel*q) / (w2 + fuel)
+	h2, hb := air.H(t2)-air.H(heatZero), air.H(tb)-air.H(heatZero)
+	w := core + fuel + m.water
+	h7 := (m.w2*h2 + fuel*q - m.water*latent - m.bleed*hb) / w
 	t7 = g.TFromH(g.H(heatZero)+h7, 900)
 	if !(t7 > 0) {
 		return nan, u
 	}
-	per := 1 / ((w2 + fuel) * g.Cp(t7)) // K per W
-	u = scaled(add(c.flow.part, c.flow.barometer), (h2-h7)*per)
-	u = add(u, scaled(c.flow.fuel, (q-h7)*per))
+	per := 1 / (w * g.Cp(t7)) // K per W
+	for k := range m.terms {
+		t := &m.terms[k]
+		by := &t.moves[uncertainty.TotalTemperature]
+		switch t.name {
+		case byAir:
+			*by = (h2 - h7 + (1-m.kept)*(h7-hb)) * per * t.flow / m.kept
+			if t.channel == c.cfg.Stations.InletT {
+				*by += m.w2 * air.Cp(t2) * per
+			}
+		case byFuel:
+			*by = (q - h7) * per * t.flow
+		case byWater:
+			const more = 1e-3 // water per kg of dry air: what it takes at T7 is no small difference to the gas
+			moister := c.mixture(f, ratio+more)
+			steam := ((1+f+ratio+more)*(moister.H(t7)-moister.H(heatZero)) - (1+f+ratio)*h7) / more
+			*by = -(latent + steam) * per * t.flow
+		case byBleed:
+			*by = (hb - h7) * per * t.flow
+		}
+		u = add(u, scaled(t.u, *by))
+	}
 	u = add(u, scaled(stated(h.U95), fuel*q*per))
-	u = add(u, scaled(c.part(scan, c.cfg.Stations.InletT), w2*air.Cp(t2)*per))
+	if m.bleed != 0 {
+		u = add(u, scaled(c.part(scan, c.cfg.Stations.BleedT), m.bleed*air.Cp(tb)*per))
+	}
 	return t7, u
 }
 
@@ -163,7 +203,7 @@ func (c *Computer) missing(scan *monitor.Scan, p *monitor.OperatingPoint) (cause
 		case c.cfg.Heat.HeatingValue > 0 && !p.Lit:
 			return monitor.Cause{Kind: monitor.EngineNotLit, Channel: -1}, true
 		case c.cfg.Heat.HeatingValue > 0:
-			return blame(scan, []int{st.FuelFlow, st.Bellmouth, st.InletT}), true
+			return blame(scan, []int{st.FuelFlow, st.Bellmouth, st.InletT, st.WaterFlow, st.BleedFlow, st.BleedT}), true
 		}
 		return monitor.Cause{Kind: monitor.NotConfigured, Channel: -1}, true
 	}
@@ -196,9 +236,10 @@ func (c *Computer) learnHead(s *State, p *monitor.OperatingPoint, r *nozzle.Resu
 const closed = 1e-10
 
 // throat computes nozzle and choke state, and solves with them for what depends on the
-// flow: the fuel-air ratio, f = Wf (1 + WAR)/(W8 − Wf) per kg of dry air; the
-// recovery of the probes, T0 = T_r + (1 − r)(T0 − T); the dynamic head at the wall
-// taps, p7 = ps (1 + k W8² R T0/p7²), where they stand in for the rake.
+// flow: the fuel-air ratio, f = Wf (1 + WAR)/(W8 − Wf − Ww) per kg of dry air, and
+// that of the injected water Ww alike; the recovery of the probes, T0 = T_r +
+// (1 − r)(T0 − T); the dynamic head at the wall taps, p7 = ps (1 + k W8² R T0/p7²), where
+// they stand in for the rake. Bleed leaves ahead of all that.
 func (c *Computer) throat(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 	st, v := &c.cfg.Stations, &p.V
 	fail := func(cause monitor.Cause) {
@@ -228,30 +269,50 @@ func (c *Computer) throat(s *State, scan *monitor.Scan, p *monitor.OperatingPoin
 	c.metal(s, p.T, in.TotalTemperature)
 	in.MetalTemperature = s.Metal
 
-	war, fuel := v[monitor.HumidityRatio], v[monitor.FuelFlow]
-	f, closing := s.F, p.Lit && fuel == fuel
+	war, fuel, water := v[monitor.HumidityRatio], v[monitor.FuelFlow], c.flow.water
+	f, burns := s.F, p.Lit && fuel == fuel
 	switch {
 	case !p.Lit:
 		f = 0
-	case !closing:
+	case !burns:
 		p.Warnings |= monitor.WarnAssumedFuel
 	}
+	injected, wets := s.Water, water > 0
+	switch {
+	case water != water:
+		p.Warnings |= monitor.WarnAssumedWater
+	case !wets:
+		injected = 0
+	}
+	closing := burns || wets
 	var r nozzle.Result
 	var g gas.Mixture
 	still := in.TotalTemperature // static, at the probes
 	for round := range closures {
-		g = c.mixture(f, war)
+		g = c.mixture(f, war+injected)
 		var err error
 		if r, err = c.nozzle.Evaluate(&g, in); err != nil {
 			fail(monitor.Cause{Kind: monitor.OutsideGasRange, Channel: -1})
 			return
 		}
-		nextF, next, moved := f, in, 0.0
+		nextF, nextWater, next, moved := f, injected, in, 0.0
 		if closing {
-			if air := r.MassFlow - fuel; !(air > freezeBelow) {
-				p.Warnings |= monitor.WarnFuelFrozen
+			// What is not metered is in the flow with its ratio.
+			dry := r.MassFlow / (1 + f + war + injected)
+			air := r.MassFlow - f*dry - injected*dry
+			if burns {
+				air += f*dry - fuel
+			}
+			if wets {
+				air += injected*dry - water
+			}
+			if !(air > freezeBelow) {
+				if burns {
+					p.Warnings |= monitor.WarnFuelFrozen
+				}
 				closing = false
-			} else {
+			}
+			if closing && burns {
 				nextF = max(fuel*(1+war)/air, 0)
 				p.Warnings &^= monitor.WarnOverStoichiometric
 				if nextF > c.richest {
@@ -259,6 +320,10 @@ func (c *Computer) throat(s *State, scan *monitor.Scan, p *monitor.OperatingPoin
 					p.Warnings |= monitor.WarnOverStoichiometric
 				}
 				moved = math.Abs(nextF - f)
+			}
+			if closing && wets {
+				nextWater = water * (1 + war) / air
+				moved = max(moved, math.Abs(nextWater-injected))
 			}
 		}
 		p7, t0 := float64(in.TotalPressure), in.TotalTemperature
@@ -276,12 +341,13 @@ func (c *Computer) throat(s *State, scan *monitor.Scan, p *monitor.OperatingPoin
 		if moved <= closed || round == closures-1 {
 			break
 		}
-		f, in = nextF, next
+		f, injected, in = nextF, nextWater, next
 	}
 	if !c.head.in && r.MassFlow >= 0 {
 		c.learnHead(s, p, &r)
 	}
-	s.F = f
+	s.F, s.Water = f, injected
+	v[monitor.WaterAirRatio] = war + injected
 	v[monitor.FuelAirRatio], v[monitor.TotalTemperature], v[monitor.RakePressure] = f, in.TotalTemperature, float64(in.TotalPressure)
 	c.take(p, &r)
 	if r.ThroatArea != r.ThroatArea {

@@ -157,20 +157,31 @@ func (c *Computer) putPressure(s *State, scan *monitor.Scan, p *monitor.Operatin
 		systematic(c.head.substitute*math.Hypot(headKnown*head, s.Head.Scale*s.HeadNow)))
 }
 
-// putPorts adds the back pressure, and what rake and back pressure are measured
-// against. A port that both refer to is one error, not two.
-func (c *Computer) putPorts(scan *monitor.Scan, p *monitor.OperatingPoint, u *uncertainty.Inputs) {
+// references gives the port of what p7 is taken from, and the channel of the back
+// pressure; -1 for none.
+func (c *Computer) references(p *monitor.OperatingPoint) (rake, back int) {
 	st := &c.cfg.Stations
-	back := st.ExitPlane
+	rake, back = -1, st.ExitPlane
 	if p.BackFrom != monitor.SourceExitPlane {
 		back = st.Barometer
-		c.put(u, uncertainty.BackPressure, -1, "cell depression", stated(st.DepressionU))
 	}
 	taps := st.P7
 	if c.head.in {
 		taps = st.WallStatic
 	}
-	rake := c.port(taps[0])
+	if len(taps) > 0 {
+		rake = c.port(taps[0])
+	}
+	return rake, back
+}
+
+// putPorts adds the back pressure, and what rake and back pressure are measured
+// against. A port that both refer to is one error, not two.
+func (c *Computer) putPorts(scan *monitor.Scan, p *monitor.OperatingPoint, u *uncertainty.Inputs) {
+	if p.BackFrom != monitor.SourceExitPlane {
+		c.put(u, uncertainty.BackPressure, -1, "cell depression", stated(c.cfg.Stations.DepressionU))
+	}
+	rake, back := c.references(p)
 	for i := back; i >= 0; i = c.port(i) {
 		in := uncertainty.BackPressure
 		if c.refersTo(rake, i) {
@@ -204,10 +215,22 @@ func (c *Computer) putTemperature(scan *monitor.Scan, p *monitor.OperatingPoint,
 	}
 }
 
-// putHumidity adds what the humidity ratio rests on.
+// putHumidity adds what the water in the gas rests on: humidity and injected water.
 func (c *Computer) putHumidity(scan *monitor.Scan, p *monitor.OperatingPoint, u *uncertainty.Inputs) {
 	st := &c.cfg.Stations
 	const in = uncertainty.HumidityRatio
+	injected, water := p.V[monitor.WaterAirRatio]-p.V[monitor.HumidityRatio], c.flow.water
+	switch {
+	case p.Warnings&monitor.WarnAssumedWater != 0:
+		c.put(u, in, -1, "water flow not measured", unstated())
+	case injected > 0:
+		for k := range c.flow.terms {
+			if t := &c.flow.terms[k]; t.name == byWater {
+				t.moves[in] = injected / water
+				c.put(u, in, st.WaterFlow, "", scaled(t.u, t.moves[in]))
+			}
+		}
+	}
 	if p.Warnings&monitor.WarnAssumedHumidity != 0 {
 		c.put(u, in, -1, "humidity not measured", systematic(dryToWet))
 		return
@@ -239,7 +262,12 @@ func (c *Computer) uncertainties(s *State, scan *monitor.Scan, p *monitor.Operat
 	switch fuel := p.V[monitor.FuelFlow]; {
 	case f == 0:
 	case fuel > 0:
-		c.put(&u, uncertainty.FuelAirRatio, st.FuelFlow, "", scaled(c.part(scan, st.FuelFlow), f/fuel))
+		for k := range c.flow.terms {
+			if t := &c.flow.terms[k]; t.name == byFuel {
+				t.moves[uncertainty.FuelAirRatio] = f / fuel
+				c.put(&u, uncertainty.FuelAirRatio, st.FuelFlow, "", scaled(t.u, t.moves[uncertainty.FuelAirRatio]))
+			}
+		}
 	default:
 		c.put(&u, uncertainty.FuelAirRatio, -1, "fuel flow not measured", unstated())
 	}
@@ -262,7 +290,7 @@ func (c *Computer) doubt(s *State, scan *monitor.Scan, p *monitor.OperatingPoint
 	u := &c.doubts
 	point := uncertainty.Point{
 		Nozzle: c.nozzle, Inputs: in, Gas: g, Fuel: c.cfg.Fuel,
-		FuelAirRatio: p.V[monitor.FuelAirRatio], HumidityRatio: p.V[monitor.HumidityRatio],
+		FuelAirRatio: p.V[monitor.FuelAirRatio], HumidityRatio: p.V[monitor.WaterAirRatio],
 	}
 	if c.cfg.Gamma > 0 {
 		point.Fuel = gas.Fuel{}

@@ -44,7 +44,7 @@ func rig(tb testing.TB) Config {
 		Run: RunConfig{EndAfter: 5 * second},
 	}
 	st := compute.Stations{
-		Barometer: -1, InletT: -1, InletP: -1, Humidity: -1, AmbientT: -1, FuelFlow: -1, Bellmouth: -1, Thrust: -1, MinEGT: 1,
+		Barometer: -1, InletT: -1, InletP: -1, Humidity: -1, AmbientT: -1, FuelFlow: -1, Bellmouth: -1, Thrust: -1, WaterFlow: -1, BleedFlow: -1, BleedT: -1, MinEGT: 1,
 	}
 	add := func(id, name string) int {
 		u, err := unit.Parse(name)

@@ -375,6 +375,28 @@ func readPoints(n node, s *calib.Spec) {
 	}
 }
 
+// readThermocouple reads the type and tolerance class of a thermocouple.
+func readThermocouple(kind, class node, d unit.Dimension, c *calib.Thermocouple) {
+	switch {
+	case !kind.is() && !class.is():
+		return
+	case d != unit.Temperature:
+		kind.fault("a thermocouple measures a temperature", "leave thermocouple and class away, or correct the unit")
+		return
+	case !kind.is() || !class.is():
+		kind.fault("a thermocouple has a type and a class", "write {thermocouple: K, class: 1}")
+		return
+	}
+	word := kind.choice("", "K", "N", "S", "R", "B", "J", "T", "E")
+	if n := class.integer(0, 1, 3); word != "" && n != 0 {
+		*c = calib.Thermocouple{Type: word[0], Class: n}
+		if !c.Defined() {
+			class.fault(fmt.Sprintf("IEC 60584-1 has no class %d of type %s", n, word), "name the class that the wire was bought to")
+			*c = calib.Thermocouple{}
+		}
+	}
+}
+
 // readUncertainty reads the 95 % uncertainty of a channel.
 func readUncertainty(n node, d unit.Dimension, u *calib.Uncertainty) {
 	if !n.is() {
@@ -390,9 +412,10 @@ func readUncertainty(n node, d unit.Dimension, u *calib.Uncertainty) {
 	}
 	u.Fixed = f.get("fixed").quantity(difference(d), 0, notNegative)
 	u.Random = f.get("random").quantity(difference(d), 0, notNegative)
+	readThermocouple(f.get("thermocouple"), f.get("class"), d, &u.Thermocouple)
 	f.done()
 	u.Stated = f.is()
-	if f.is() && u.FullScale == 0 && u.Reading == 0 && u.Fixed == 0 && u.Random == 0 {
+	if f.is() && !f.has("thermocouple") && u.FullScale == 0 && u.Reading == 0 && u.Fixed == 0 && u.Random == 0 {
 		f.fault("the uncertainty is zero", "no sensor is exact: state it, or leave it away as not known")
 	}
 }

@@ -156,7 +156,7 @@ func TestMeanings(t *testing.T) {
 		name      string
 		got, want any
 	}{
-		{"example: channels", len(ex.Compute.Channels), 41},
+		{"example: channels", len(ex.Compute.Channels), 42},
 		{"example: rig", ex.Rig, pipeline.RigInfo{
 			ID: "cell_2", Title: "Alder Bank cell 2", EngineModel: "Merle 5", EngineSerial: "ML5-0042", EngineBuild: "7",
 			NozzleSerial: "NZ-0311", LimitsVersion: "ML5-LIM-C",

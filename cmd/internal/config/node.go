@@ -296,6 +296,15 @@ func (n node) scalar() bool {
 	return ok
 }
 
+// mapping tells whether the value is a group of keys.
+func (n node) mapping() bool {
+	switch n.ast.(type) {
+	case *ast.MappingNode, *ast.MappingValueNode:
+		return true
+	}
+	return false
+}
+
 // inside gives the place of the letter at offset (in bytes) of the text of n.
 func (n node) inside(offset int) (line, col int) {
 	text, ok := n.ast.(ast.ScalarNode)

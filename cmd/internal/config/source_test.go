@@ -5,6 +5,7 @@ import (
 	"reflect"
 	"testing"
 
+	"throatwatch/monitor/calib"
 	"throatwatch/monitor/steady"
 	"throatwatch/monitor/uncertainty"
 )
@@ -39,6 +40,8 @@ func TestSources(t *testing.T) {
 		{"steady: temperature", so.Compute.Steady.Temperature, 3.0 / 60, 1e-12, file},
 		{"steady: speed", so.Compute.Steady.Speed, 0.0025 / 60, 1e-12, "default of this package"},
 		{"steady: dwell", float64(so.Compute.Steady.Dwell), 30e9, 0, file},
+		{"example: bleed", e.Stations.BleedShare, 0.004, 1e-12, file},
+		{"example: bleed, uncertainty", e.Stations.BleedShareU95, 0.002, 1e-12, file},
 		{"example: recovery", e.Recovery.Factor, 0.95, 0, file},
 		{"example: passage", e.Recovery.Area, 0.055, 1e-12, file},
 		{"example: recovery, uncertainty", e.Recovery.U95, 0.02, 0, file},
@@ -59,6 +62,14 @@ func TestSources(t *testing.T) {
 		got, want any
 	}{
 		{"weights", s.P7Watch.Weights, []float64{1, 2, 1.5}},
+		{"by flow too", s.P7Flux, true},
+		{"water, bleed and its temperature", []string{id(s.WaterFlow), id(s.BleedFlow), id(s.BleedT)}, []string{"ww", "wb", "t_3"}},
+		{"no share of bleed", s.BleedShare, 0.0},
+		{"thermocouple", so.Compute.Channels[s.BleedT].Uncertainty, calib.Uncertainty{Thermocouple: calib.Thermocouple{Type: 'N', Class: 1}, Stated: true}},
+		{"example: T7 by flow", e.Stations.T7Flux, true},
+		{"example: p7 by area", e.Stations.P7Flux, false},
+		{"example: thermocouple", e.Channels[e.Stations.T7[3]].Uncertainty.Thermocouple, calib.Thermocouple{Type: 'K', Class: 2}},
+		{"smallest: no water, no bleed", []int{mi.Compute.Stations.WaterFlow, mi.Compute.Stations.BleedFlow, mi.Compute.Stations.BleedT}, []int{-1, -1, -1}},
 		{"taps", []string{id(s.WallStatic[0]), id(s.WallStatic[1])}, []string{"ps_1", "ps_2"}},
 		{"dew point", id(s.Humidity), "t_dew"},
 		{"is one", s.DewPoint, true},

@@ -22,8 +22,8 @@ func (r *rig) readStations(n node) {
 	p7 := f.need("p7", "the total-pressure probes at the nozzle entry, as {probes: [p7_1, p7_2]}").fields()
 	s.P7 = r.probes(p7.need("probes", "list the channels of the rake"), unit.Pressure, total...)
 	s.MinP7 = atLeast(p7.get("at_least"), len(s.P7))
-	readWatch(p7, &s.P7Watch, unit.Pressure, len(s.P7))
 	s.WallStatic = r.probes(p7.get("wall_static"), unit.Pressure, total...)
+	s.P7Flux = r.readWatch(p7, &s.P7Watch, unit.Pressure, len(s.P7))
 	p7.done()
 
 	t7 := f.need("t7", "the gas temperature at the nozzle entry, as {probes: [t7_1]} or {from_egt: {factor: 1.02, uncertainty: 2 %}}")
@@ -47,6 +47,8 @@ func (r *rig) readStations(n node) {
 	s.Speed = r.channel(f.get("speed"), unit.Frequency)
 	s.FuelFlow = r.channel(f.get("fuel_flow"), unit.MassFlow)
 	s.Bellmouth = r.channel(f.get("bellmouth"), unit.Pressure, calib.Differential)
+	s.WaterFlow = r.channel(f.get("water_flow"), unit.MassFlow)
+	r.readBleed(f.get("bleed_flow"), f.get("bleed_temperature"))
 	s.Thrust = r.channel(f.get("thrust"), unit.Force)
 	s.Reheat = r.probes(f.get("reheat"), unit.Ratio)
 	if !math.IsNaN(r.elevation) {
@@ -56,18 +58,66 @@ func (r *rig) readStations(n node) {
 	f.done()
 }
 
-// readWatch reads how the probes of a group are weighed and watched.
-func readWatch(f *fields, w *rake.Watch, d unit.Dimension, probes int) {
-	if n := f.get("weights"); n.is() {
-		for _, item := range n.items() {
-			w.Weights = append(w.Weights, item.number(1, positive))
+// readBleed reads what is bled overboard: a channel, or a share of the air flow.
+func (r *rig) readBleed(flow, temperature node) {
+	s := &r.cfg.Compute.Stations
+	s.BleedFlow = -1
+	switch {
+	case !flow.is():
+	case flow.scalar():
+		s.BleedFlow = r.channel(flow, unit.MassFlow)
+	default:
+		f := flow.fields()
+		s.BleedShare = f.need("share", "of the air flow, as 1.5 %").share(0, positive, between(0, 0.5, "0 % and 50 %"))
+		s.BleedShareU95 = f.need("uncertainty", "of the share at 95 %, in % of the air flow, as 0.3 %").share(0, positive, between(0, 0.2, "0 % and 20 %"))
+		f.done()
+	}
+	if flow.is() && s.Bellmouth < 0 {
+		flow.fault("a bleed without an air flow", "it is taken off the flow of the bellmouth: name its channel in stations.bellmouth")
+	}
+	s.BleedT = r.channel(temperature, unit.Temperature)
+	if temperature.is() && !flow.is() {
+		temperature.fault("the temperature of a bleed that is not there", "name its flow in stations.bleed_flow")
+	}
+}
+
+// readWatch reads how the probes of a group are weighed and watched, and whether the
+// flow at their places weighs them too.
+func (r *rig) readWatch(f *fields, w *rake.Watch, d unit.Dimension, probes int) (flux bool) {
+	n := f.get("weights")
+	switch {
+	case !n.is():
+	case n.scalar():
+		n.choice("mass_flux", "mass_flux")
+		flux = true
+	case n.mapping():
+		m := n.fields()
+		readWeights(m.need("mass_flux", "the areas that the probes stand for, as [0.9, 1.1]"), w, probes)
+		m.done()
+		flux = true
+	default:
+		readWeights(n, w, probes)
+	}
+	if s := &r.cfg.Compute.Stations; flux {
+		if len(s.WallStatic) == 0 {
+			n.fault("mass-flux weights without a static pressure", "name the wall taps of station 7 in stations.p7.wall_static")
 		}
-		if len(w.Weights) != probes {
-			n.fault(fmt.Sprintf("%d weights for %d probes", len(w.Weights), probes), "one weight per probe, such as the area that it stands for")
+		if probes != len(s.P7) {
+			n.fault(fmt.Sprintf("%d probes beside %d of p7", probes, len(s.P7)), "for mass-flux weights each probe stands at the place of one of p7.probes, in their order")
 		}
 	}
 	w.Departure = f.get("departure").quantity(difference(d), 0, positive)
 	w.Sampling = f.get("sampling").quantity(difference(d), 0, positive) / uncertainty.Coverage
+	return flux
+}
+
+func readWeights(n node, w *rake.Watch, probes int) {
+	for _, item := range n.items() {
+		w.Weights = append(w.Weights, item.number(1, positive))
+	}
+	if n.is() && len(w.Weights) != probes {
+		n.fault(fmt.Sprintf("%d weights for %d probes", len(w.Weights), probes), "one weight per probe, such as the area that it stands for")
+	}
 }
 
 func (r *rig) readT7(n node) {
@@ -76,7 +126,7 @@ func (r *rig) readT7(n node) {
 	probes, least, factor, recovery, heat := f.get("probes"), f.get("at_least"), f.get("from_egt"), f.get("recovery"), f.get("heat_balance")
 	s.T7 = r.probes(probes, unit.Temperature)
 	s.MinT7 = atLeast(least, len(s.T7))
-	readWatch(f, &s.T7Watch, unit.Temperature, len(s.T7))
+	s.T7Flux = r.readWatch(f, &s.T7Watch, unit.Temperature, len(s.T7))
 	g := factor.fields()
 	s.T7FromEGT = g.need("factor", "t7 in K = factor · indicated EGT in K").number(0, between(0.7, 1.4, "0.7 and 1.4"))
 	s.T7FactorU95 = g.need("uncertainty", "at 95 %, as 2 %").share(0, positive, between(0, 0.2, "0 % and 20 %"))
@@ -123,6 +173,9 @@ func (r *rig) readHeatBalance(n node) {
 	if s.FuelFlow < 0 || s.Bellmouth < 0 || s.InletT < 0 {
 		f.fault("a heat balance needs air flow, fuel flow and inlet temperature", "name channels in stations.bellmouth, fuel_flow and inlet.temperature")
 	}
+	if (s.BleedFlow >= 0 || s.BleedShare > 0) && s.BleedT < 0 {
+		f.fault("the bleed takes heat along that is not known", "name the temperature of the bleed air in stations.bleed_temperature")
+	}
 	if len(s.EGT) == 0 {
 		f.fault("a heat balance holds with a flame only, and nothing shows one", "name the EGT harness in stations.egt")
 	}
@@ -141,6 +194,7 @@ func (r *rig) readHarness(n node) {
 		}
 	}
 	s.EGTTrim = f.get("trim").quantity(unit.TemperatureDifference, 0, between(-200, 200, "-200 K and 200 K"))
+	s.EGTExponent = f.get("referred_exponent").number(1, between(0, 2, "0 and 2"))
 	s.MinEGT = atLeast(f.get("at_least"), len(s.EGT))
 	s.EGTWatch.Departure = f.get("departure").quantity(unit.TemperatureDifference, 0, positive)
 	f.done()

@@ -349,7 +349,8 @@ func (p *plant) surroundings() {
 }
 
 // gasPath computes pressures, flows and thrust from speed, temperature and bleed.
-// Air, fuel and nozzle flow close exactly: W8 = W2 (1 − bleed) + Wf.
+// Air, fuel and nozzle flow close exactly: W8 = W2 (1 − blown off − bled) + Wf. What the
+// rig file states as bled is taken off at all times.
 func (p *plant) gasPath() error {
 	c := p.cfg
 	p.t7 = p.factor * p.egt
@@ -384,7 +385,7 @@ func (p *plant) gasPath() error {
 	p.far = far
 	dry := p.gasFlow / (1 + far + war)
 	p.fuelFlow = dry * far
-	p.airFlow = dry * (1 + war) / (1 - p.bleed)
+	p.airFlow = dry * (1 + war) / (1 - p.bleed - c.Stations.BleedShare)
 	p.thrust = 0.985*r.GrossThrust - 5*p.airFlow // cell drag, and the momentum of the air that drifts in at 5 m/s
 	p.bellmouth = p.bellmouthDrop(war)
 	return nil

@@ -281,16 +281,17 @@ func watch(t *testing.T, r *Rig, cfg pipeline.Config, each func(*monitor.Operati
 	}
 }
 
-// Mass is conserved in the plant to rounding: W8 = W2 (1 − bleed) + Wf.
+// Mass is conserved in the plant to rounding: W8 = W2 (1 − blown off − bled) + Wf.
 func TestFlowCloses(t *testing.T) {
-	r, err := New(load(t, "example"), Options{Scenario: Full, Rate: 20})
+	cfg := load(t, "example")
+	r, err := New(cfg, Options{Scenario: Full, Rate: 20})
 	if err != nil {
 		t.Fatal(err)
 	}
 	for more := true; more; {
 		_, more = r.Next(nil)
 		p := r.plant
-		if sum := p.airFlow*(1-p.bleed) + p.fuelFlow; math.Abs(sum-p.gasFlow) > 1e-12*(1+p.gasFlow) {
+		if sum := p.airFlow*(1-p.bleed-cfg.Compute.Stations.BleedShare) + p.fuelFlow; math.Abs(sum-p.gasFlow) > 1e-12*(1+p.gasFlow) {
 			t.Fatalf("%v: air and fuel %.15g, nozzle %.15g kg/s", r.now, sum, p.gasFlow)
 		}
 		for _, v := range []float64{p.n, p.npr, p.egt, p.t7, p.gasFlow, p.bellmouth, p.thrust, p.cell} {
@@ -321,7 +322,8 @@ func TestStation7(t *testing.T) {
 		if err != nil {
 			t.Fatal(err)
 		}
-		g, err := gas.NewMixture(c.Fuel, p.fuelFlow*(1+war)/p.airFlow, war)
+		core := p.airFlow * (1 - c.Stations.BleedShare)
+		g, err := gas.NewMixture(c.Fuel, p.fuelFlow*(1+war)/core, war)
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -333,8 +335,8 @@ func TestStation7(t *testing.T) {
 		flow := c.Recovery.Area * p.p7Static / (g.R() * p.t7Static) * v
 		isentropic := g.S0(p.t7) - g.S0(p.t7Static) - g.R()*math.Log(p.p7/p.p7Static)
 		const zero = 298.15
-		in := p.airFlow*(air.H(p.inletT)-air.H(zero)) + p.fuelFlow*c.Heat.Efficiency*c.Heat.HeatingValue
-		out := (p.airFlow + p.fuelFlow) * (g.H(p.t7) - g.H(zero))
+		in := core*(air.H(p.inletT)-air.H(zero)) + p.fuelFlow*c.Heat.Efficiency*c.Heat.HeatingValue
+		out := (core + p.fuelFlow) * (g.H(p.t7) - g.H(zero))
 		if math.Abs(flow/p.gasFlow-1) > 1e-6 || math.Abs(isentropic) > 1e-6*g.R() || math.Abs(in/out-1) > 2e-3 {
 			t.Fatalf("%v: flow %.9g of %.9g kg/s, %g J/(kg K), heat in %.9g, out %.9g W", r.now, flow, p.gasFlow, isentropic, in, out)
 		}
@@ -463,7 +465,7 @@ func invented(tb testing.TB) pipeline.Config {
 		}})
 		return len(cfg.Align.Channels) - 1
 	}
-	st := compute.Stations{Barometer: -1, ExitPlane: -1, InletT: -1, InletP: -1, Humidity: -1, AmbientT: -1, Speed: -1, FuelFlow: -1, Bellmouth: -1, Thrust: -1}
+	st := compute.Stations{Barometer: -1, ExitPlane: -1, InletT: -1, InletP: -1, Humidity: -1, AmbientT: -1, Speed: -1, FuelFlow: -1, Bellmouth: -1, Thrust: -1, WaterFlow: -1, BleedFlow: -1, BleedT: -1}
 	// 4–20 mA with a bend: 0 to 400 kPa over 4 to 20 mA, and 1 % of it in the middle.
 	st.P7 = []int{add("p7", "", "kPa", calib.Gauge, -20e3, 400e3, -103, 25.9, -0.0625, 0.0013)}
 	st.EGT = []int{add("egt", "", "degF", calib.ReferenceNone, 250, 1400)}

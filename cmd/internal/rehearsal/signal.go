@@ -63,7 +63,11 @@ func newSensors(c *compute.Config, rate float64, hold []int64, p *plant, rng *ra
 		s.x = s.input(p, 0)
 		u := &ch.Uncertainty
 		// A good instrument lies well inside the uncertainty that is stated for it.
-		s.offset = 0.2 * clamp(rng.NormFloat64(), -2, 2) * u.U95(0.3*(ch.High-ch.Low), ch.Low, ch.High) / 2
+		u95 := u.U95(ch.Low+0.3*(ch.High-ch.Low), ch.Low, ch.High)
+		if math.IsNaN(u95) { // a thermocouple beyond its class
+			u95 = 0
+		}
+		s.offset = 0.2 * clamp(rng.NormFloat64(), -2, 2) * u95 / 2
 		s.sigma = u.Random / 2
 		if s.sigma == 0 {
 			s.sigma = 1e-4 * (ch.High - ch.Low)
@@ -95,6 +99,8 @@ func station(c *compute.Config, sensors []sensor, rng *rand.Rand) {
 	}
 	set(st.Speed, 0, func(p *plant) float64 { return p.n * p.max / 60 })
 	set(st.FuelFlow, 0.15, func(p *plant) float64 { return p.fuelFlow })
+	set(st.WaterFlow, 0, func(*plant) float64 { return 0 })
+	set(st.BleedFlow, 0.15, func(p *plant) float64 { return p.bleed * p.airFlow })
 	set(st.Thrust, 0.08, func(p *plant) float64 { return p.thrust })
 	set(st.Barometer, 0, barometer)
 	set(st.InletP, pneumatic, func(p *plant) float64 { return p.inletP })

@@ -224,7 +224,7 @@ export const quantityKeys = [
   'choke_margin_percent', 'choke_margin_percent_u95', 'choke_margin_percent_low95', 'choke_margin_percent_high95', 'choke_margin_pa',
   'p_choked', 'throat_mach', 'barometer_pa', 'throat_area_m2', 'exit_velocity_m_s', 'referred_flow_kg_s',
   'mass_flow_kg_s', 'mass_flow_kg_s_u95', 'gross_thrust_n', 'gross_thrust_n_u95', 'measured_thrust_n',
-  'flow_parameter', 'total_pressure_pa', 'total_temperature_k', 'back_pressure_pa', 'fuel_air_ratio', 'humidity_ratio',
+  'flow_parameter', 'total_pressure_pa', 'total_temperature_k', 'back_pressure_pa', 'fuel_air_ratio', 'humidity_ratio', 'water_air_ratio',
   'discharge_coefficient', 'air_flow_kg_s', 'fuel_flow_kg_s', 'flow_balance_kg_s',
   'independent_flow_kg_s', 'independent_flow_kg_s_u95', 'independent_flow_parameter',
   'egt_indicated_k', 'egt_spread_k', 'egt_hottest_k', 'egt_coldest_k', 'speed_rpm',

@@ -51,6 +51,7 @@ const groups: [string, Line[]][] = [
     line('Nozzle gas temperature T8', 'total_temperature_k', (u) => u.temperature, undefined, (p) => sourceWord(p.total_temperature_from)),
     plain('Fuel-air ratio', 'fuel_air_ratio', 5),
     plain('Humidity ratio', 'humidity_ratio', 5),
+    plain('Water-air ratio', 'water_air_ratio', 5),
     line('Throat area, hot', 'throat_area_m2', (u) => u.area),
     plain('Discharge coefficient', 'discharge_coefficient', 4),
   ]],

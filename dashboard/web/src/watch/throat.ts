@@ -28,7 +28,7 @@ function gasOf(p: PointFrame | null): Gas | null {
   return {
     t: Math.min(1800, Math.max(200, Math.round(p.total_temperature_k / 10) * 10)),
     f: Math.round(Math.max(0, p.fuel_air_ratio ?? 0) * 1000) / 1000,
-    w: Math.round(Math.max(0, p.humidity_ratio ?? 0) * 1000) / 1000,
+    w: Math.round(Math.max(0, p.water_air_ratio ?? p.humidity_ratio ?? 0) * 1000) / 1000,
   };
 }
 
