@@ -8,7 +8,7 @@ import type { Alarm, Frame, RigInfo } from './frames';
 import { header } from './header';
 import { firstChunk, opening, reach, rowsOf } from './history';
 import { Link, browser, liveURL } from './link';
-import { cssVariables, dark, light } from './palette';
+import { dark, light, paint } from './palette';
 import { alarmsPage } from './pages/alarms';
 import { helpPage } from './pages/help';
 import { logPage } from './pages/log';
@@ -35,8 +35,10 @@ const ackTimeout = 5000;
 const openTimeout = 8000;
 
 const darkScheme = window.matchMedia('(prefers-color-scheme: dark)');
-document.head.append(h('style', {}, `:root{${cssVariables(light)}}@media(prefers-color-scheme:dark){:root{${cssVariables(dark)}}}`));
 const palette = (): typeof light => (darkScheme.matches ? dark : light);
+const repaint = (): void => paint(document.documentElement.style, palette());
+darkScheme.addEventListener('change', repaint);
+repaint();
 
 /** Without a link the session is asked for again this often, ms: it may have ended. */
 const sessionEvery = 3000;
@@ -220,7 +222,7 @@ function run(rig: RigInfo, rigs: RigInfo[], session: Session): void {
       case 'run': view = replayPage(decodeURIComponent(id), rig.id, display); break;
       case 'rig': view = rigPage(display); break;
       case 'help': view = helpPage(); break;
-      default: view = watchDisplay(display, watchTools(display));
+      default: view = watchDisplay(display, 'Watch', watchTools(display));
     }
     document.body.dataset['page'] = page = name;
     runShown = decodeURIComponent(id);

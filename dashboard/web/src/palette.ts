@@ -51,7 +51,7 @@ export function contrast(a: string, b: string): number {
   return (Math.max(x, y) + 0.05) / (Math.min(x, y) + 0.05);
 }
 
-/** Declarations of the palette as custom properties: ground → --ground. */
-export function cssVariables(p: Palette): string {
-  return Object.entries(p).map(([k, v]) => `--${k}:${v};`).join('');
+/** Sets the palette as custom properties: ground → --ground. A style element would need a weaker content security policy. */
+export function paint(style: Pick<CSSStyleDeclaration, 'setProperty'>, p: Palette): void {
+  for (const [k, v] of Object.entries(p)) style.setProperty(`--${k}`, v);
 }

@@ -14,7 +14,7 @@ export function pathParts(s: StatusFrame, dataAge_: number | null): PathPart[] {
   const silent = (s.sources ?? []).filter((x) => !x.alive).length;
   const out: PathPart[] = [
     { name: 'Broker', said: gone > 0 ? `${gone} of ${sessions.length} sessions not connected` : s.input_path ? `${sessions.length} sessions, probe message returns` : 'deaf: the probe message does not return', bad: gone > 0 || !s.input_path },
-    { name: 'Sources', said: silent > 0 ? `${silent} silent` : `${(s.sources ?? []).length} heard, newest data ${age(dataAge_)} old`, bad: silent > 0 },
+    { name: 'Sources', said: silent > 0 ? `${silent} silent` : `${(s.sources ?? []).length} heard, newest data ${age(dataAge_ === null ? null : Math.max(0, dataAge_))} old`, bad: silent > 0 },
     { name: 'Archive', said: s.recording ? 'recording' : `not recording${s.not_recording_since ? ` since ${clock(seconds(s.not_recording_since))} UTC` : ''}`, bad: !s.recording },
   ];
   for (const [key, name] of [['database', 'Site database'], ['webhook', 'Webhook']] as const) {

@@ -2,7 +2,7 @@
 // with a full ring, fed and drawn as the page does it. Run by the browser test.
 
 import type { Display } from '../src/context';
-import { cssVariables, light } from '../src/palette';
+import { light, paint } from '../src/palette';
 import { columns } from '../src/ring';
 import { newModel } from '../src/state';
 import { openSession } from '../src/session';
@@ -40,7 +40,8 @@ async function run(seconds: number): Promise<Figures> {
   const display: Display = { rig: '', model: () => model, fresh: () => ({ kind: 'live', age: 0 }), palette: () => light, units: () => units, operator: () => '', session: () => openSession, acknowledger: null };
   const view = traces(display, null, () => Array.from({ length: charts }, (_, i) => plot(i)));
   const style = document.createElement('style');
-  style.textContent = `:root{${cssVariables(light)}}body{display:block}.traces{height:880px;width:1400px}`;
+  paint(document.documentElement.style, light);
+  style.textContent = `body{display:block}.traces{height:880px;width:1400px}`;
   document.head.append(style);
   document.body.replaceChildren(view.el);
   ([...view.el.querySelectorAll('button')].find((b) => b.textContent === `${span} s`) as HTMLButtonElement).click();

@@ -83,8 +83,8 @@ function qualityText(v: ChannelValue | undefined): string {
 
 export function channelsView(d: Display): View {
   const body = h('tbody');
-  const names = ['Channel', '', 'Station', '>Raw', '>Value', 'Unit', 'Quality, finding', '>Age', '>Range', 'Last minute', 'Sensor'];
-  const el = h('div', { class: 'scroll' }, h('table', { class: 'list channels' }, h('thead', {}, h('tr', {}, ...names.map(column))), body));
+  const names = ['Channel', 'Title', 'Station', '>Raw', '>Value', 'Unit', 'Quality, finding', '>Age', '>Range', 'Last minute', 'Sensor'];
+  const el = h('div', { class: 'scroll', role: 'region', tabindex: '0', 'aria-label': 'Channels' }, h('table', { class: 'list channels' }, h('thead', {}, h('tr', {}, ...names.map(column))), body));
   let rows = new Map<string, Row>();
 
   function build(c: Channel): HTMLElement {

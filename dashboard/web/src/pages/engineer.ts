@@ -70,12 +70,11 @@ const groups: [string, Line[]][] = [
 export function engineerView(d: Display): View {
   const warnings = h('p', { class: 'extra warnings' });
   const rows: { line: Line; value: HTMLElement; note: HTMLElement }[] = [];
-  const el = h('div', { class: 'engineer' }, ...groups.map(([title, lines]) => h('dl', { 'aria-label': title }, h('div', { class: 'grouptitle', 'aria-hidden': 'true' }, title),
-    ...lines.map((l) => {
+  const el = h('div', { class: 'engineer' }, ...groups.map(([title, lines]) => h('div', {}, h('h3', { class: 'grouptitle' }, title), h('dl', {}, ...lines.map((l) => {
       const row = { line: l, value: h('span', { class: 'value', ...(l.name === 'P(choked)' ? { 'data-q': 'p-choked' } : {}) }), note: h('span', { class: 'extra' }) };
       rows.push(row);
       return h('div', { class: 'pair' }, h('dt', {}, l.name), h('dd', {}, row.value, row.note));
-    }))), warnings);
+    })))), warnings);
   return {
     el,
     update(now) {

@@ -49,7 +49,7 @@ export function recordView(run: string, live: () => boolean, units: () => UnitSe
   const log = logTable();
   const figures = figuresView(() => ({ run, live: live() }));
   const trouble = h('p', { class: 'trouble', role: 'status' });
-  const el = h('div', { class: 'page record', 'data-q': 'record' }, trouble,
+  const el = h('div', { class: 'page record', 'data-q': 'record' }, h('h1', {}, `Record of run ${run}`), trouble,
     h('section', {}, h('h2', {}, 'Excursions above EGT limits'), exceedances.el),
     h('div', { class: 'columns' },
       h('div', {}, h('section', {}, h('h2', {}, 'Operator log'), log.el), h('section', {}, h('h2', {}, 'What the engine did'), events.el)),

@@ -45,7 +45,7 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
     speed, button('⚑ ◂', 'Previous alarm or mark', () => jump(-1)), button('▸ ⚑', 'Next alarm or mark', () => jump(1)),
     h('div', { class: 'scrub' }, bar.el, scrub), clockText, trouble, ...choices);
   const body = h('div', { class: 'replaybody' }, h('p', { class: 'loading' }, 'Reading the run…'));
-  const el = h('div', { class: 'replay', 'data-q': 'replay-frame' }, controls, body, h('div', { class: 'watermark', 'aria-hidden': 'true' }, 'REPLAY'));
+  const el = h('div', { class: 'replay', 'data-q': 'replay-frame' }, controls, body, h('div', { class: 'watermark', 'aria-hidden': 'true', 'data-word': 'REPLAY' }));
 
   /** The display as it was at the position, or what is on record of the whole run. */
   function choose(what: 'Display' | 'Record'): void {
@@ -108,7 +108,7 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
       before: async (to, signal) => (to <= 0 ? [] : rowsOf(api, runID, start, Math.max(0, to - reach), to, young, signal)),
     }, start, length);
     const display: Display = { rig, model: () => p.model, fresh: () => ({ kind: 'replay' }), palette: taste.palette, units: taste.units, operator: () => '', session: () => openSession, acknowledger: null };
-    inner = watchDisplay(display, null);
+    inner = watchDisplay(display, `Replay of run ${runID}`, null);
     body.replaceChildren(inner.el);
     player = p;
     void p.seek(0, now());

@@ -14,7 +14,7 @@ export function runsPage(d: Display): View {
   const body = h('tbody');
   const trouble = h('p', { class: 'trouble', role: 'status' });
   const el = h('div', { class: 'page' }, h('h1', {}, 'Runs'), trouble,
-    h('table', { class: 'list runs' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started, UTC', 'By', '>Duration', '>Alarms', 'State', '>Size', 'Notes', ''].map(column))), body));
+    h('table', { class: 'list runs' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started, UTC', 'By', '>Duration', '>Alarms', 'State', '>Size', 'Notes', 'Replay'].map(column))), body));
   let askedAt = -Infinity;
   let key = '';
   let growing: { cell: HTMLElement; since: number }[] = [];

@@ -43,11 +43,11 @@ export function veil(content: HTMLElement): { el: HTMLElement; update(f: Freshne
   };
 }
 
-/** `tools` are what an operator does from here; none in a replay. */
-export function watchDisplay(d: Display, tools: View | null): View {
+/** `title` is read aloud; `tools` are what an operator does from here, none in a replay. */
+export function watchDisplay(d: Display, title: string, tools: View | null): View {
   const parts = [alarmLine(d), throatPlane(d), numbers(d), traces(d, tools?.el ?? null), ledger(d)];
   const [line, plane, figures, plots, egt] = parts as [View, View, View, View, View];
-  const cover = veil(h('div', { class: 'display' }, line.el, h('div', { class: 'nozzle' }, plane.el, figures.el), plots.el, egt.el));
+  const cover = veil(h('div', { class: 'display' }, h('h1', { class: 'spoken' }, title), line.el, h('div', { class: 'nozzle' }, plane.el, figures.el), plots.el, egt.el));
   return {
     el: cover.el,
     update(now) {
