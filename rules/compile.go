@@ -21,9 +21,10 @@ const (
 
 // Set is a compiled set of rules. It is read-only: its state is in a State.
 type Set struct {
-	rules []program // those that were written, then those that tell that one of them is unknown
-	wrote int       // how many were written
-	names []Name
+	rules   []program // those that were written, then those that tell that one of them is unknown
+	wrote   int       // how many were written
+	derived []derived
+	names   []Name // derived ones last
 }
 
 // program is one compiled rule.
@@ -38,18 +39,21 @@ type program struct {
 	text     template
 	unit     string
 	suppress [monitor.NumPhases]bool
-	doubts   int // the rule whose being unknown this one tells; -1 = an ordinary rule
+	shows    []int // slots that the value is made of, where it is written
+	doubts   int   // the rule whose being unknown this one tells; -1 = an ordinary rule
 }
 
 var ruleName = regexp.MustCompile(`^[a-z][a-z0-9_]*$`)
 
-// Compile compiles rules against the names of an environment. It gives every
-// fault that it finds; with any, the set is nil.
-func Compile(rules []Rule, names []Name) (*Set, []Fault) {
-	set := &Set{rules: make([]program, len(rules)), wrote: len(rules), names: names}
+// Compile compiles rules against the names of an environment, and against derived
+// names, which are added to them. It gives every fault that it finds; with any,
+// the set is nil.
+func Compile(rules []Rule, names []Name, derived ...Derived) (*Set, []Fault) {
+	set := &Set{rules: make([]program, len(rules)), wrote: len(rules), names: slices.Clone(names)}
 	ix := indexOf(names)
+	faults := set.derive(derived, ix)
+	names = set.names
 	seen := make(map[string]bool, len(rules))
-	var faults []Fault
 	for i := range rules {
 		r := &rules[i]
 		add := func(field string, f *exprFault) {
@@ -158,7 +162,8 @@ func (p *program) convertDeadband() (message, hint string) {
 // worse: as the condition becomes true by it, upward if that does not tell.
 func (p *program) compileValue(names []Name, ix index) *exprFault {
 	if p.Value != "" {
-		_, v, at, fault := compileValue(p.Value, names, ix)
+		out, v, at, fault := compileValue(p.Value, names, ix)
+		p.shows = out.reads
 		switch {
 		case fault != nil:
 			return fault
@@ -242,9 +247,11 @@ func (s *Set) Len() int { return s.wrote }
 func (s *Set) Rule(i int) Rule { return s.rules[i].Rule }
 
 // Reads lists the names that the expression of a rule reads, in its order.
-func (s *Set) Reads(i int) []string {
-	out := make([]string, len(s.rules[i].reads))
-	for k, slot := range s.rules[i].reads {
+func (s *Set) Reads(i int) []string { return s.spell(s.rules[i].reads) }
+
+func (s *Set) spell(slots []int) []string {
+	out := make([]string, len(slots))
+	for k, slot := range slots {
 		out[k] = s.names[slot].Name
 	}
 	return out

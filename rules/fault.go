@@ -9,9 +9,10 @@ import (
 	"github.com/agnivade/levenshtein"
 )
 
-// Fault is one thing that is wrong with a rule.
+// Fault is one thing that is wrong with a rule or a derived name.
 type Fault struct {
-	Rule    int    // index of the rule
+	Rule    int    // index of the rule, or of the derived name
+	Derived bool   // it is a derived name
 	Field   string // as rule files name it: name, when, priority, text …
 	Offset  int    // byte in the text of the field at which it shows
 	Message string

@@ -1,10 +1,13 @@
 package rules
 
 import (
+	"bytes"
+	"encoding/gob"
 	"errors"
 	"math"
 	"os"
 	"path/filepath"
+	"reflect"
 	"slices"
 	"strconv"
 	"strings"
@@ -47,16 +50,16 @@ type stand struct {
 	seen  []Alarm
 }
 
-func newStand(tb testing.TB, rules []Rule) *stand {
+func newStand(tb testing.TB, rules []Rule, derived ...Derived) *stand {
 	tb.Helper()
-	names := StandardNames(testChannels(), []string{"run_1", "run_2", "start"})
-	set, faults := Compile(rules, names)
+	set, faults := Compile(rules, StandardNames(testChannels(), []string{"run_1", "run_2", "start"}), derived...)
 	for _, f := range faults {
-		tb.Errorf("rule %q, %s: %s; %s", rules[f.Rule].Name, f.Field, f.Message, f.Hint)
+		tb.Errorf("rule %d (derived %v), %s: %s; %s", f.Rule, f.Derived, f.Field, f.Message, f.Hint)
 	}
 	if set == nil {
 		tb.FailNow()
 	}
+	names := set.Names()
 	return &stand{t: tb, names: names, ix: indexOf(names), set: set, f: NewFrame(names), run: "run-1"}
 }
 
@@ -172,6 +175,7 @@ func duration(tb testing.TB, s string) int64 {
 // TestScripts runs every script of testdata:
 //
 //	rules default
+//	derive NAME KIND [over=…] : expression
 //	rule NAME PRIORITY [on=…] [off=…] [deadband=…] [latching] [group=…] [value=NAME] [worsen=NUMBER_UNIT]
 //	     [unknown=PRIORITY,DELAY] [suppress=PHASE,…] : expression
 //	TIME set NAME=VALUE …            from the scan at TIME on; ? is unknown
@@ -179,6 +183,9 @@ func duration(tb testing.TB, s string) int64 {
 //	TIME text RULE TEXT              as rendered
 //	TIME under RULE OTHER             is listed under the other's alarm; - is none
 //	TIME first RULE …                of those that stand exactly these have the first-out mark
+//	TIME value NAME VALUE            of a derived name, to 9 digits; ? is unknown
+//	TIME gap DURATION                no scans for so long
+//	TIME restart                     the state goes through its stored form
 //	TIME act DO RULE [for=…] [role=…] [reason=…] [refused]
 //	TIME transitions N               so many since the begin
 //
@@ -206,6 +213,7 @@ func testLimits() egt.Limits {
 func runScript(t *testing.T, script string) {
 	t.Helper()
 	var rules []Rule
+	var derived []Derived
 	var s *stand
 	number := 0
 	for line := range strings.Lines(script) {
@@ -221,9 +229,12 @@ func runScript(t *testing.T, script string) {
 		case word == "rule":
 			rules = append(rules, parseRule(t, rest))
 			continue
+		case word == "derive":
+			derived = append(derived, parseDerived(t, rest))
+			continue
 		}
 		if s == nil {
-			s = newStand(t, rules)
+			s = newStand(t, rules, derived...)
 		}
 		at, verb := duration(t, word), ""
 		verb, rest, _ = strings.Cut(strings.TrimSpace(rest), " ")
@@ -262,6 +273,12 @@ func runScript(t *testing.T, script string) {
 					t.Errorf("line %d: %s: %s has the mark: %v", number, line, in.Rule, in.FirstOut)
 				}
 			}
+		case "value":
+			s.value(number, f[0], f[1])
+		case "gap":
+			s.next += duration(t, f[0])
+		case "restart":
+			s.restart()
 		case "act":
 			s.act(number, at, f)
 		case "transitions":
@@ -272,6 +289,53 @@ func runScript(t *testing.T, script string) {
 			t.Fatalf("line %d: %s", number, line)
 		}
 	}
+}
+
+// parseDerived reads "NAME KIND option… : expression".
+func parseDerived(tb testing.TB, line string) Derived {
+	tb.Helper()
+	head, of, _ := strings.Cut(line, " : ")
+	f := strings.Fields(head)
+	d := Derived{Name: f[0], Of: of, Period: scan}
+	d.Kind, _ = ParseDerivation(f[1])
+	if len(f) > 2 {
+		d.Over = duration(tb, strings.TrimPrefix(f[2], "over="))
+	}
+	return d
+}
+
+// value checks a derived name.
+func (s *stand) value(line int, name, want string) {
+	s.t.Helper()
+	got := s.f.Numbers[s.ix[name]]
+	if want == "?" {
+		if got == got {
+			s.t.Errorf("line %d: %s is %g, want it unknown", line, name, got)
+		}
+		return
+	}
+	v, err := strconv.ParseFloat(want, 64)
+	if err != nil || !(math.Abs(got-v) <= 1e-9*max(1, math.Abs(v))) {
+		s.t.Errorf("line %d: %s is %.12g, want %s", line, name, got, want)
+	}
+}
+
+// restart encodes the state and goes on with what is decoded, and a new frame.
+func (s *stand) restart() {
+	s.t.Helper()
+	var b bytes.Buffer
+	var st State
+	err := gob.NewEncoder(&b).Encode(&s.st)
+	if err == nil {
+		err = gob.NewDecoder(&b).Decode(&st)
+	}
+	if err != nil {
+		s.t.Fatal(err)
+	}
+	if !reflect.DeepEqual(st, s.st) {
+		s.t.Error("the state comes back another")
+	}
+	s.st = st
 }
 
 func (s *stand) act(line int, at int64, f []string) {

@@ -29,8 +29,9 @@ func reading(v float64) Reading {
 // encoded, copied and compared.
 type State struct {
 	Instances []Instance // one per rule of the set
-	Gone      []Alarm    // alarms of rules that a reload took away, to be told by the next step
-	Moved     bool       // an alarm moved since it was looked which is listed under which
+	Derived   []DerivedState
+	Gone      []Alarm // alarms of rules that a reload took away, to be told by the next step
+	Moved     bool    // an alarm moved since it was looked which is listed under which
 }
 
 // Instance is the alarm of one rule. Times are event times in ns UTC, 0 = none.
@@ -95,22 +96,27 @@ func (s *Set) Fit(st *State) {
 		instances[i].Priority = s.rules[i].Priority
 	}
 	st.Instances, st.Moved = instances, true
+	s.fitDerived(st)
 }
 
 // Step judges the rules of a domain on a frame at event time t (host time for
 // OfDaemon), in ns UTC, in a run ("" or "-" when there is none) and a phase. It
 // appends each alarm that changed, as it is after the change, to out. It
-// allocates only when something changes.
+// allocates only when something changes. Of data it must be called once per scan:
+// it carries the derived names on and puts them into the frame.
 //
 // A condition must be true for the on-delay before it raises and false for the
 // off-delay before it returns. While it is unknown it does neither; the on-delay
 // goes on, since the last that is known is true, the off-delay begins anew.
 // Suppression follows the phase at once; an unknown phase suppresses nothing.
 func (s *Set) Step(st *State, t int64, run string, phase monitor.Phase, d Domain, f *Frame, out []Alarm) []Alarm {
-	if len(st.Instances) != len(s.rules) {
+	if len(st.Instances) != len(s.rules) || len(st.Derived) != len(s.derived) {
 		s.Fit(st)
 	}
 	first := len(out)
+	if d == OfData {
+		s.stepDerived(st, t, f)
+	}
 	for _, a := range st.Gone {
 		a.Changed = Time(t)
 		out = append(out, a)

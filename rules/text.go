@@ -96,7 +96,11 @@ func parsePlace(src string, names []Name, ix index) (part, *exprFault) {
 		return p, nil
 	}
 	if n.Dimension == unit.Invalid {
-		return part{}, &exprFault{at, fmt.Sprintf("%s is in %s, which does not convert", name, n.Unit), "write {" + name + ":.1}"}
+		in := n.Unit
+		if in == "" {
+			in = "no unit"
+		}
+		return part{}, &exprFault{at, fmt.Sprintf("%s is in %s, which does not convert", name, in), "write {" + name + ":.1}"}
 	}
 	var err error
 	p.to, err = unitAs(unitName, n.Dimension, n.Rate)

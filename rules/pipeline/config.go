@@ -29,6 +29,7 @@ type Config struct {
 	Align   align.Config
 	Compute compute.Config
 	Rules   []rules.Rule
+	Derived []rules.Derived // names that rules may read beside the standard ones
 	Run     RunConfig
 	Hash    string // hex SHA-256 of the text
 }

@@ -102,8 +102,10 @@ func Names(cfg *Config) []rules.Name {
 	return rules.StandardNames(channels, bands)
 }
 
-func newFrame(cfg *Config, names []rules.Name) frame {
-	f := frame{Frame: rules.NewFrame(names), egt: cfg.Compute.Stations.EGT, rake: cfg.Compute.Stations.P7, bands: cfg.Compute.EGT.Bands}
+// newFrame makes a frame for all names, of which it fills the standard ones, names;
+// the derived ones behind them are filled by the rules.
+func newFrame(cfg *Config, names, all []rules.Name) frame {
+	f := frame{Frame: rules.NewFrame(all), egt: cfg.Compute.Stations.EGT, rake: cfg.Compute.Stations.P7, bands: cfg.Compute.EGT.Bands}
 	channel := map[string]int{}
 	for i := range cfg.Compute.Channels {
 		channel[cfg.Compute.Channels[i].ID] = i

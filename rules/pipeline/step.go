@@ -172,13 +172,19 @@ func (m *Machine) load(bundle []byte) error {
 		return fmt.Errorf("pipeline: %w", err)
 	}
 	names := Names(&cfg)
-	set, faults := rules.Compile(cfg.Rules, names)
+	set, faults := rules.Compile(cfg.Rules, names, cfg.Derived...)
 	if len(faults) > 0 {
-		return fmt.Errorf("pipeline: rule %q: %s", cfg.Rules[faults[0].Rule].Name, faults[0].Message)
+		name := ""
+		if f := faults[0]; f.Derived {
+			name = cfg.Derived[f.Rule].Name
+		} else {
+			name = cfg.Rules[f.Rule].Name
+		}
+		return fmt.Errorf("pipeline: rule %q: %s", name, faults[0].Message)
 	}
 	m.bundle = bytes.Clone(bundle)
 	m.prog = &program{
-		cfg: cfg, align: align.New(cfg.Align), compute: comp, rules: set, frame: newFrame(&cfg, names),
+		cfg: cfg, align: align.New(cfg.Align), compute: comp, rules: set, frame: newFrame(&cfg, names, set.Names()),
 	}
 	return nil
 }

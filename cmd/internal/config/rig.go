@@ -31,6 +31,7 @@ type rig struct {
 	ruleFiles    []node
 	limits       []rule // of the channels
 	rules        []rule
+	derived      []derived
 }
 
 // readRig reads a rig file, all but its rules.
@@ -57,6 +58,7 @@ func readRig(f File) *rig {
 	run := m.get("run").fields()
 	r.cfg.Run.EndAfter = run.get("end_after").duration(120*second, positive)
 	run.done()
+	r.readDerive(m.get("derive"))
 	r.readRuleNames(m)
 	m.done()
 	return r

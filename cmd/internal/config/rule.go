@@ -21,6 +21,46 @@ type rule struct {
 	at map[string]node // by key
 }
 
+// derived is a derived name with the places of its fields.
+type derived struct {
+	rules.Derived
+	node
+	at map[string]node // by key
+}
+
+// readDerive reads a list of derived names, of a rig or rule file.
+func (r *rig) readDerive(n node) {
+	for _, item := range n.items() {
+		f := item.placed()
+		one := derived{node: item, at: f.at}
+		one.Name = f.need("name", "rules and texts read it by this name").id()
+		one.Period = r.cfg.Align.Period
+		for _, word := range rules.Derivations() {
+			of := f.get(word)
+			switch {
+			case !of.is():
+			case one.Kind != 0:
+				of.fault(fmt.Sprintf("%s beside %s", word, one.Kind), "a derived name is made in one way")
+			default:
+				one.Kind, _ = rules.ParseDerivation(word)
+				one.Of = strings.TrimRight(of.text(), " \n")
+			}
+		}
+		if one.Kind == 0 {
+			f.fault("it does not say how it is made", "write one of "+strings.Join(rules.Derivations(), ", ")+" with an expression")
+		}
+		over := f.get("over")
+		if one.Kind != rules.DeriveSince && one.Kind != 0 && !over.is() {
+			f.fault(`key "over" is missing`, "the length of the window, as in over: 2 s")
+		}
+		one.Over = over.duration(0, positive)
+		f.done()
+		if one.Name != "" && one.Kind != 0 && (one.Over > 0 || one.Kind == rules.DeriveSince) {
+			r.derived = append(r.derived, one)
+		}
+	}
+}
+
 // readRuleNames reads which rules the rig uses: the default ones, and rule files.
 func (r *rig) readRuleNames(m *fields) {
 	r.defaultRules = m.get("default_rules").choice("keep", "keep", "none") == "keep"
@@ -47,6 +87,7 @@ func (r *rig) readRules(file File) {
 		return
 	}
 	m := top.fields()
+	r.readDerive(m.get("derive"))
 	list := m.need("rules", "write rules: and a list")
 	var here []rule
 	for _, item := range list.items() {
@@ -248,31 +289,59 @@ func (r *rig) compileRules() {
 			one.at[key].checkText()
 		}
 	}
-	set, faults := rules.Compile(r.cfg.Rules, pipeline.Names(&r.cfg))
+	for i := range r.derived {
+		r.cfg.Derived = append(r.cfg.Derived, r.derived[i].Derived)
+	}
+	set, faults := rules.Compile(r.cfg.Rules, pipeline.Names(&r.cfg), r.cfg.Derived...)
 	for _, f := range faults {
-		one := &r.rules[f.Rule]
-		place, ok := one.at[f.Field]
-		switch {
-		case !ok:
-			place = one.node
-		case !place.is(), f.Field == "name" && one.Name == "": // a fault already
-			continue
-		}
-		line, col := place.line, place.col
-		if f.Field != "when" || one.When == strings.TrimRight(place.text(), " \n") {
-			line, col = place.inside(f.Offset)
-		}
-		place.faultAt(line, col, f.Message, f.Hint)
+		r.placeFault(&f)
 	}
 	if set == nil {
 		return
 	}
 	for i := range set.Len() {
-		for _, name := range set.Reads(i) {
-			if _, id, ok := strings.Cut(name, "."); ok {
-				if ch := r.index(id); ch >= 0 {
-					r.used[ch] = true
-				}
+		r.use(set.Reads(i))
+	}
+	for i := range r.derived {
+		r.use(set.DerivedReads(i))
+	}
+}
+
+// placeFault notes a fault of a rule or a derived name where it is written.
+func (r *rig) placeFault(f *rules.Fault) {
+	var place, whole node
+	var ok, written bool // written: the field is what the file says, letter by letter
+	if f.Derived {
+		one := &r.derived[f.Rule]
+		place, ok = one.at[f.Field]
+		whole, written = one.node, true
+	} else {
+		one := &r.rules[f.Rule]
+		place, ok = one.at[f.Field]
+		whole, written = one.node, f.Field != "when" || one.When == strings.TrimRight(place.text(), " \n")
+		if f.Field == "name" && one.Name == "" {
+			return // a fault already
+		}
+	}
+	switch {
+	case !ok:
+		place = whole
+	case !place.is(): // a fault already
+		return
+	}
+	line, col := place.line, place.col
+	if written {
+		line, col = place.inside(f.Offset)
+	}
+	place.faultAt(line, col, f.Message, f.Hint)
+}
+
+// use marks the channels among names as used.
+func (r *rig) use(names []string) {
+	for _, name := range names {
+		if _, id, ok := strings.Cut(name, "."); ok {
+			if ch := r.index(id); ch >= 0 {
+				r.used[ch] = true
 			}
 		}
 	}
