@@ -84,12 +84,14 @@ func say(w io.Writer, text string) { _, _ = io.WriteString(w, text) }
 // checkReport is what --json prints; values in SI, times in seconds.
 type checkReport struct {
 	Faults    []config.Fault    `json:"faults"`
+	Warnings  []config.Fault    `json:"warnings"` // odd and yet usable
 	Files     []string          `json:"files"`
 	Hash      string            `json:"hash,omitempty"`
 	Rig       *pipeline.RigInfo `json:"rig,omitempty"`
 	ScanRate  float64           `json:"scan_rate,omitempty"`
 	Channels  []checkChannel    `json:"channels,omitempty"`
 	Bands     []checkBand       `json:"egt_bands,omitempty"`
+	Derived   []checkDerived    `json:"derived,omitempty"`
 	Rules     []checkRule       `json:"rules,omitempty"`
 	Notes     []string          `json:"notes,omitempty"` // what will not be known for want of an entry
 	Clearance string            `json:"clearance"`
@@ -120,6 +122,13 @@ type checkBand struct {
 	Rearm     float64 `json:"rearm_s"`
 }
 
+type checkDerived struct {
+	Name string  `json:"name"`
+	Kind string  `json:"kind"`
+	Of   string  `json:"of"`
+	Over float64 `json:"over_s"` // 0 = no window
+}
+
 type checkRule struct {
 	Name     string  `json:"name"`
 	Title    string  `json:"title"`
@@ -132,7 +141,7 @@ type checkRule struct {
 }
 
 func newCheckReport(bundle config.Bundle, cfg *pipeline.Config, faults []config.Fault) checkReport {
-	out := checkReport{Faults: faults, Clearance: checkClosing, Files: []string{}}
+	out := checkReport{Faults: faults, Warnings: append([]config.Fault{}, bundle.Warnings...), Clearance: checkClosing, Files: []string{}}
 	for _, f := range bundle.Files {
 		out.Files = append(out.Files, f.Name)
 	}
@@ -156,6 +165,10 @@ func newCheckReport(bundle config.Bundle, cfg *pipeline.Config, faults []config.
 		b := &cfg.Compute.EGT.Bands[i]
 		out.Bands = append(out.Bands, checkBand{b.Name, holds(b), b.Limit, seconds(b.Allowance), seconds(b.PerRun), b.Deadband, seconds(b.Rearm)})
 	}
+	for i := range cfg.Derived {
+		d := &cfg.Derived[i]
+		out.Derived = append(out.Derived, checkDerived{d.Name, d.Kind.String(), d.Of, seconds(d.Over)})
+	}
 	for i := range cfg.Rules {
 		r := &cfg.Rules[i]
 		out.Rules = append(out.Rules, checkRule{r.Name, r.Title, priorityName(r.Priority), r.When, seconds(r.OnDelay), r.Latching, r.Caution, r.Response})
@@ -173,8 +186,18 @@ func holds(b *egt.Band) string {
 	return "always"
 }
 
-// printFaults prints each fault with its hint below, then how many there are.
+// printFaults prints every fault, then how many there are.
 func printFaults(w *strings.Builder, faults []config.Fault) {
+	listFaults(w, faults)
+	noun := "faults"
+	if len(faults) == 1 {
+		noun = "fault"
+	}
+	fmt.Fprintf(w, "%d %s\n%s\n", len(faults), noun, checkClosing)
+}
+
+// listFaults prints each fault with its hint below.
+func listFaults(w *strings.Builder, faults []config.Fault) {
 	for _, f := range faults {
 		hint := f.Hint
 		f.Hint = ""
@@ -183,11 +206,6 @@ func printFaults(w *strings.Builder, faults []config.Fault) {
 			fmt.Fprintln(w, wrap("      hint: ", hint))
 		}
 	}
-	noun := "faults"
-	if len(faults) == 1 {
-		noun = "fault"
-	}
-	fmt.Fprintf(w, "%d %s\n%s\n", len(faults), noun, checkClosing)
 }
 
 // wrap breaks a text into lines of the terminal, all but the first indented like
@@ -232,7 +250,12 @@ func printRig(w *strings.Builder, bundle config.Bundle, cfg *pipeline.Config) {
 	printChannels(w, cfg)
 	printStations(w, cfg)
 	printBands(w, cfg)
+	printDerived(w, cfg)
 	printRules(w, cfg)
+	if len(bundle.Warnings) > 0 {
+		fmt.Fprintf(w, "\nWarnings\n")
+		listFaults(w, bundle.Warnings)
+	}
 	if notes := checkNotes(cfg); len(notes) > 0 {
 		fmt.Fprintf(w, "\nNotes\n")
 		for _, n := range notes {
@@ -483,6 +506,23 @@ func printBands(w *strings.Builder, cfg *pipeline.Config) {
 			allowance = "none"
 		}
 		t.row(b.Name, holds(b), number(b.Limit-273.15)+" °C", allowance, run, number(b.Limit-b.Deadband-273.15)+" °C", span(b.Rearm))
+	}
+	t.flush()
+}
+
+// printDerived prints what rules read beside the standard names.
+func printDerived(w *strings.Builder, cfg *pipeline.Config) {
+	if len(cfg.Derived) == 0 {
+		return
+	}
+	t := newTable(w, "Derived names", "name", "is", "over", "of")
+	for i := range cfg.Derived {
+		d := &cfg.Derived[i]
+		over := "–"
+		if d.Over > 0 {
+			over = span(d.Over)
+		}
+		t.row(d.Name, d.Kind.String(), over, strings.Join(strings.Fields(d.Of), " "))
 	}
 	t.flush()
 }

@@ -44,6 +44,8 @@ type File struct {
 type Bundle struct {
 	Format string `json:"format"`
 	Files  []File `json:"files"`
+
+	Warnings []Fault `json:"-"` // what is odd in the files and yet usable
 }
 
 // Marshal gives the bytes that a config record carries. Their SHA-256 is the
@@ -83,6 +85,10 @@ func Load(name string) (Bundle, pipeline.Config, []Fault) {
 		b.Files = append(b.Files, File{file, text})
 	}
 	cfg, faults := r.finish(b)
+	for _, d := range r.docs {
+		b.Warnings = append(b.Warnings, d.warnings...)
+	}
+	b.Warnings = place(tidy(b.Warnings, b.Files), folder)
 	return b, cfg, place(faults, folder)
 }
 

@@ -208,6 +208,13 @@ func TestMeanings(t *testing.T) {
 		{"options: latching", site.Latching, true},
 		{"options: suppressed", site.SuppressIn, []monitor.Phase{monitor.Off, monitor.Cranking, monitor.Lighting}},
 		{"options: default rules stay", ruleOf(t, &op, "not_recording").Priority, rules.Warning},
+		{"options: derived", op.Derived, []rules.Derived{
+			{Name: "egt_slope", Kind: rules.DeriveRate, Of: "egt_indicated_k", Over: 2e9, Period: 20e6},
+			{Name: "rake_noise", Kind: rules.DeriveStdev, Of: "channel.pt_a", Over: 5e9, Period: 20e6},
+			{Name: "rake_apart_for", Kind: rules.DeriveSince, Of: "abs(channel.pt_a - channel.pt_b) > 5 kPa\n  and lit", Period: 20e6},
+			{Name: "lights", Kind: rules.DeriveCount, Of: "lit", Over: 60e9, Period: 20e6},
+		}},
+		{"options: deadband with a unit", ruleOf(t, &op, "rake_disagrees").DeadbandUnit, "Pa"},
 		{"options: another site rule", ruleOf(t, &op, "rake_disagrees").Title, "rake disagrees"},
 
 		{"smallest: no EGT", len(mi.Compute.Stations.EGT), 0},
@@ -418,6 +425,38 @@ func FuzzLoad(f *testing.F) {
 					t.Errorf("channel %q holds %g", c.ID, v)
 				}
 			}
+		}
+	})
+}
+
+// FuzzRules reads rule files for a rig that has no fault, so that expressions and
+// derived names are compiled. What is taken must compile again as the step does it.
+func FuzzRules(f *testing.F) {
+	rig, err := os.ReadFile(options)
+	if err != nil {
+		f.Fatal(err)
+	}
+	site, err := os.ReadFile(filepath.Join(filepath.Dir(options), "rules/site.yaml"))
+	if err != nil {
+		f.Fatal(err)
+	}
+	f.Add(string(site))
+	f.Add("derive:\n- {name: a, rate: channel.pt_a, over: 1e9 s}\n- {name: a, since: a > 5 kPa/s}\nrules: []")
+	f.Add("derive: [{name: b, max: \"(npr + 5 %) * 3 - 1 kPa\", over: 2 s}]\nrules:\n- {name: x, when: b > 5 °C/min, priority: note, deadband: 5 K/h}")
+	f.Add("rules:\n- name: x\n  when: |\n    npr > 5 in and\n      not (known(phase) ? 3 K : .5e3 mil) < -2 % }\n  priority: note\n  text: '{b:K/s.1} {x:.1}'")
+	f.Fuzz(func(t *testing.T, text string) {
+		b := Bundle{Format: bundleFormat, Files: []File{{"rig.yaml", string(rig)}, {"rules/site.yaml", text}}}
+		cfg, faults := Parse(b.Marshal())
+		for _, fault := range faults {
+			if fault.Line < 1 || fault.Column < 1 || fault.Message == "" || fault.Hint == "" {
+				t.Errorf("incomplete fault: %+v", fault)
+			}
+		}
+		if len(faults) > 0 {
+			return
+		}
+		if set, wrong := rules.Compile(cfg.Rules, pipeline.Names(&cfg), cfg.Derived...); set == nil {
+			t.Errorf("taken, and then refused: %+v", wrong)
 		}
 	})
 }

@@ -18,9 +18,10 @@ const maxText = 1 << 20
 
 // document is one YAML file with the faults found in it.
 type document struct {
-	name   string
-	lines  []string
-	faults []Fault
+	name     string
+	lines    []string
+	faults   []Fault
+	warnings []Fault // what is odd and yet usable
 }
 
 // node is a value in a document. A key that is not there gives a node without
@@ -113,6 +114,13 @@ func (n node) fault(message, hint string) { n.faultAt(n.line, n.col, message, hi
 func (n node) faultAt(line, col int, message, hint string) {
 	n.doc.faults = append(n.doc.faults, Fault{
 		File: n.doc.name, Line: line, Column: col, Path: n.path, Message: message, Hint: hint,
+	})
+}
+
+// warn notes what is odd at the node and yet usable.
+func (n node) warn(message, hint string) {
+	n.doc.warnings = append(n.doc.warnings, Fault{
+		File: n.doc.name, Line: n.line, Column: n.col, Path: n.path, Message: message, Hint: hint,
 	})
 }
 

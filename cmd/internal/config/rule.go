@@ -305,6 +305,9 @@ func (r *rig) compileRules() {
 	for i := range r.derived {
 		r.use(set.DerivedReads(i))
 	}
+	for _, i := range set.Unused() {
+		r.derived[i].at["name"].warn(fmt.Sprintf("nothing reads %q", r.derived[i].Name), "name it in a rule, or leave it away")
+	}
 }
 
 // placeFault notes a fault of a rule or a derived name where it is written.
