@@ -37,6 +37,8 @@ func commands() []command {
 		{"life", "what each engine has been through: starts, cycles, hours, time above EGT limits", lifeCommand},
 		{"replay", "step a stored run again, and compare its digest", replayCommand},
 		{"export", "write a table of a stored run for other programs", exportCommand},
+		{"verify", "read stored runs to the last byte and step them again", verifyCommand},
+		{"copy", "copy a stored run, also while it is recorded", copyCommand},
 		{"version", "the build", versionCommand},
 	}
 }

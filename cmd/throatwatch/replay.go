@@ -161,16 +161,49 @@ func replay(ctx context.Context, dir, id string, asJSON bool, stdout, stderr io.
 	if err != nil {
 		return err
 	}
+	out := bufio.NewWriterSize(stdout, 64<<10)
+	began := time.Now()
+	res, err := restep(ctx, f, &header, func(o *pipeline.Outcome, cfg *pipeline.Config) error {
+		if !asJSON {
+			return nil
+		}
+		if body, _, ok := dashboard.EncodeFrame(o, cfg); ok {
+			_, err := out.Write(append(body, '\n'))
+			return err
+		}
+		return nil
+	}, nil)
+	if err := errors.Join(err, out.Flush()); err != nil {
+		return err
+	}
+	took := time.Since(began)
+	length := time.Duration(float64(res.scans) * float64(res.period))
+	_, _ = fmt.Fprintf(stderr, "run %s: %d operating points, %d alarm transitions, %v replayed in %v (%.0f × real time)\nsha256 %s\n",
+		id, res.scans, res.alarms, length.Round(time.Second), took.Round(time.Millisecond), float64(length)/float64(took), res.digest)
+	return compareDigest(&header, res.digest, stderr)
+}
+
+// restepped is what stepping a run again gave.
+type restepped struct {
+	scans, alarms int // of the run itself, without what lies before it
+	digest        string
+	period        int64 // ns between scans
+}
+
+// restep steps the records of a run again. Point, if it is set, is called with each
+// operating point of the run, and each with every record.
+func restep(ctx context.Context, f *runfile.File, header *runfile.Header, point func(*pipeline.Outcome, *pipeline.Config) error, each func(*ingest.Record)) (res restepped, err error) {
 	m := pipeline.NewMachine(watch.Parse)
 	p, err := pipeline.OpenReplay(ctx, f, m, 0)
 	if err != nil {
-		return err
+		return res, err
 	}
-	out := bufio.NewWriterSize(stdout, 64<<10)
-	began := time.Now()
-	inRun, scans, alarms, digest := false, 0, 0, ""
+	inRun := false
 	err = p.Run(ctx, 0, func(r *ingest.Record, outs []pipeline.Outcome) error {
 		cfg, _ := m.Config()
+		if each != nil {
+			each(r)
+		}
 		if r.Kind == ingest.KindGap { // the run may have begun or ended among the records that are missing
 			inRun = p.State.RunActive && p.State.Run.ID == header.ID
 		}
@@ -179,36 +212,28 @@ func replay(ctx context.Context, dir, id string, asJSON bool, stdout, stderr io.
 			switch {
 			case o.Kind == pipeline.OutcomeRun:
 				if inRun = o.Event == "started" && o.Run.ID == header.ID; o.Run.ID == header.ID {
-					digest = p.Digest.String() // what comes after the end of the run is not of it
+					res.digest = p.Digest.String() // what comes after the end of the run is not of it
 				}
 			case !inRun:
 			case o.Kind == pipeline.OutcomeAlarm:
-				alarms++
+				res.alarms++
 			case o.Kind == pipeline.OutcomePoint:
-				scans++
-				if !asJSON {
+				res.scans++
+				if point == nil {
 					continue
 				}
-				if body, _, ok := dashboard.EncodeFrame(o, &cfg); ok {
-					if _, err := out.Write(append(body, '\n')); err != nil {
-						return err
-					}
+				if err := point(o, &cfg); err != nil {
+					return err
 				}
 			}
 		}
 		return nil
 	})
-	if err := errors.Join(err, out.Flush()); err != nil {
-		return err
+	if inRun || res.digest == "" { // its end is not stored
+		res.digest = p.Digest.String()
 	}
-	if inRun || digest == "" { // its end is not stored
-		digest = p.Digest.String()
-	}
-	took := time.Since(began)
-	length := time.Duration(float64(scans) * float64(period(m)))
-	_, _ = fmt.Fprintf(stderr, "run %s: %d operating points, %d alarm transitions, %v replayed in %v (%.0f × real time)\nsha256 %s\n",
-		id, scans, alarms, length.Round(time.Second), took.Round(time.Millisecond), float64(length)/float64(took), digest)
-	return compareDigest(&header, digest, stderr)
+	res.period = period(m)
+	return res, err
 }
 
 func period(m *pipeline.Machine) int64 {

@@ -80,6 +80,10 @@ func TestWrongUse(t *testing.T) {
 		{"export of an unknown table", []string{"export", "x", "--what", "all"}, 2, `throatwatch export: what "all": give one of operating-points, scans, samples, events`},
 		{"export in no time", []string{"export", "x", "--format", "csv", "--every", "0"}, 2, `throatwatch export: every "0": give a time of 1ms or more, as 1s or 250ms`},
 		{"statistics of every row", []string{"export", "x", "--format", "csv", "--statistics", "max"}, 2, "throatwatch export: --statistics is for --every: add it"},
+		{"verify of nothing", []string{"verify"}, 2, "throatwatch verify: give runs, or --all; `throatwatch runs` lists them"},
+		{"verify of all and one", []string{"verify", "x", "--all"}, 2, "throatwatch verify: give runs, or --all; `throatwatch runs` lists them"},
+		{"verify without a folder", []string{"verify", "x", "--data", "DIR"}, 1, "throatwatch verify: DIR holds no runs: give the folder of a watch by --data"},
+		{"copy to nowhere", []string{"copy", "x"}, 2, "throatwatch copy: give one run and --to FILE; `throatwatch runs` lists the runs"},
 		{"replay without a folder", []string{"replay", "x", "--data", "DIR"}, 1, "throatwatch replay: DIR holds no runs: give the folder of a watch by --data"},
 	} {
 		t.Run(tt.name, func(t *testing.T) {

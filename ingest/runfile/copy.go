@@ -68,6 +68,29 @@ func (f *File) CopyFrom(ctx context.Context, src *File, after, upto uint64) erro
 	return err
 }
 
+// Snapshot makes a file at path of all that src held when it was opened, or for a
+// file that is written to here, holds now: a run that is on can be copied while it
+// is recorded, by any process. It reads in short transactions as every reader, so
+// the recording is never held up; the copy is consistent because what is stored up
+// to a record never changes. The state of a run that is on becomes
+// StateInterrupted: nobody writes to the copy. It gives the number and host time
+// (ns UTC) of the last record in it. Errors: fs.ErrExist, and those of CopyFrom.
+func Snapshot(ctx context.Context, src *File, path string) (seq uint64, host int64, err error) {
+	h, err := src.Header(ctx)
+	if err != nil {
+		return 0, 0, err
+	}
+	if h.State == StateRunning {
+		h.State = StateInterrupted
+	}
+	seq, host = src.Durable()
+	f, err := Create(ctx, path, h, Options{Seed: &Seed{From: src, Upto: seq}})
+	if err != nil {
+		return 0, 0, err
+	}
+	return seq, host, f.Close()
+}
+
 // copier takes over blobs: packed ones as they are, small ones and those cut by
 // the range packed together.
 type copier struct {

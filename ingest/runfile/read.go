@@ -61,6 +61,8 @@ type pager[T any] struct {
 	query string                           // ordered, and ending in LIMIT 256 (pageRows)
 	args  func(last *T) []any              // where to go on; last is nil at first
 	scan  func(*sql.Rows, *T) (int, error) // gives the size in bytes
+
+	damaged func(error) // if set, a damaged row is told to it and passed over
 }
 
 // each calls fn for every row, outside of the transaction that read it. A
@@ -96,7 +98,12 @@ func (p pager[T]) read(ctx context.Context, db *sql.DB, last *T) (page []T, more
 		var row T
 		n, err := p.scan(rows, &row)
 		if err != nil {
-			return page, false, scanError(p.table, err)
+			err = scanError(p.table, err)
+			if p.damaged == nil || !errors.Is(err, ErrCorrupt) {
+				return page, false, err
+			}
+			p.damaged(err)
+			continue
 		}
 		page = append(page, row)
 		if size += n; size >= pageBytes || len(page) == pageRows {
@@ -123,6 +130,10 @@ func limit(seq uint64) int64 { return int64(min(seq, math.MaxInt64)) }
 // the writer may pack blobs again, so each page begins with the blob that holds
 // the next record, wherever it lies by then: fn may see records twice.
 func (f *File) blobs(ctx context.Context, from, to uint64, fn func(*blob) error) error {
+	return f.blobPages(from, to).each(ctx, f, fn)
+}
+
+func (f *File) blobPages(from, to uint64) pager[blob] {
 	return pager[blob]{
 		table: "records",
 		query: "SELECT " + blobColumns + ` FROM records
@@ -138,7 +149,7 @@ func (f *File) blobs(ctx context.Context, from, to uint64, fn func(*blob) error)
 			err := b.scan(rows)
 			return len(b.data), err
 		},
-	}.each(ctx, f, fn)
+	}
 }
 
 // Records calls fn for each record from … to, both inclusive, in order. from 0
@@ -294,6 +305,10 @@ func (f *File) oneCheckpoint(ctx context.Context, which string, args ...any) (Ch
 // Checkpoints calls fn for each checkpoint after the record after and up to the
 // record upto, in order. An error of fn ends the reading and is returned as it is.
 func (f *File) Checkpoints(ctx context.Context, after, upto uint64, fn func(*Checkpoint) error) error {
+	return f.checkpoints(after, upto).each(ctx, f, fn)
+}
+
+func (f *File) checkpoints(after, upto uint64) pager[Checkpoint] {
 	return pager[Checkpoint]{
 		table: "checkpoints",
 		query: "SELECT " + checkpointColumns + " FROM checkpoints WHERE seq>? AND seq<=? ORDER BY seq LIMIT 256",
@@ -307,7 +322,7 @@ func (f *File) Checkpoints(ctx context.Context, after, upto uint64, fn func(*Che
 			*c, err = f.scanCheckpoint(rows.Scan)
 			return len(c.State), err
 		},
-	}.each(ctx, f, fn)
+	}
 }
 
 // row is a chunk or an event with its rowid.
@@ -415,29 +430,4 @@ func lastID[T any](r *row[T]) int64 {
 		return math.MinInt64
 	}
 	return r.id
-}
-
-// Verify reads the whole file: the structure of the database, the checksum of
-// every row, the numbers of the records. It gives all that it found, joined; each
-// part ends at its first fault. Meanwhile the log of a file that is being
-// recorded into grows.
-func (f *File) Verify(ctx context.Context) error {
-	return errors.Join(
-		f.integrity(ctx),
-		f.Records(ctx, 0, 0, func(*ingest.Record) error { return nil }),
-		f.Checkpoints(ctx, 0, math.MaxInt64, func(*Checkpoint) error { return nil }),
-		f.chunksBySeq(0, math.MaxInt64).each(ctx, f, func(*row[Chunk]) error { return nil }),
-		f.eventsBySeq(0, math.MaxInt64).each(ctx, f, func(*row[Event]) error { return nil }),
-	)
-}
-
-func (f *File) integrity(ctx context.Context) error {
-	var said string
-	if err := f.read.QueryRowContext(ctx, "PRAGMA integrity_check(1)").Scan(&said); err != nil {
-		return f.fault("verify", "file", err)
-	}
-	if said != "ok" {
-		return f.fault("verify", "file", &CorruptError{Table: "file", Err: errors.New(said)})
-	}
-	return nil
 }
