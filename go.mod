@@ -19,6 +19,7 @@ require (
 	github.com/prometheus/common v0.72.0
 	github.com/spf13/pflag v1.1.0
 	golang.org/x/crypto v0.58.0
+	golang.org/x/term v0.47.0
 	gonum.org/v1/gonum v0.17.0
 	modernc.org/sqlite v1.62.0
 )

@@ -39,6 +39,7 @@ func commands() []command {
 		{"export", "write a table of a stored run for other programs", exportCommand},
 		{"verify", "read stored runs to the last byte and step them again", verifyCommand},
 		{"copy", "copy a stored run, also while it is recorded", copyCommand},
+		{"user", "people and machines that may use a watch, and their roles", userCommand},
 		{"version", "the build", versionCommand},
 	}
 }

@@ -39,6 +39,7 @@ type watchOptions struct {
 	rehearse                           bool
 	play                               rehearseFlags
 	influx                             influxOptions
+	guard                              guardOptions
 	limit                              time.Duration
 	verbose                            bool
 }
@@ -52,7 +53,8 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 	fs.StringVar(&o.brokerListen, "broker-listen", "127.0.0.1:1883", "address of the embedded broker; port 0 takes a free one")
 	fs.StringVar(&o.user, "broker-user", "", "user name at the site broker")
 	fs.StringVar(&o.passwordFile, "broker-password-file", "", "file with the password at the site broker")
-	fs.BoolVar(&o.remote, "allow-remote", false, "let --listen and --broker-listen be reached from other machines, without TLS or passwords")
+	fs.BoolVar(&o.remote, "allow-remote", false, "let --listen be reached from other machines without TLS and users, and --broker-listen without passwords")
+	o.guard.flags(fs)
 	fs.BoolVar(&o.rehearse, "rehearse", false, "let a simulated rig publish a test to the broker; the next flags say which")
 	o.play = newRehearseFlags(fs)
 	o.influx.flags(fs)
@@ -88,8 +90,11 @@ func (o *watchOptions) check(fs *pflag.FlagSet) error {
 	if err != nil {
 		return fmt.Errorf("--listen %q is no address: give host:port", o.listen)
 	}
-	if ip := net.ParseIP(host); !o.remote && host != "localhost" && (ip == nil || !ip.IsLoopback()) {
-		return fmt.Errorf("--listen %s can be reached from other machines, and whoever reaches it can acknowledge alarms: use 127.0.0.1, or --allow-remote on a closed network", o.listen)
+	if err := o.guard.check(fs); err != nil {
+		return err
+	}
+	if !o.remote && !loopback(host) && !o.guard.closed() {
+		return fmt.Errorf("--listen %s can be reached from other machines, and whoever reaches it can acknowledge alarms: use 127.0.0.1, or --users with --tls-cert and --tls-key, or --allow-remote on a closed network", o.listen)
 	}
 	if o.broker != "" && fs.Changed("broker-listen") {
 		return errors.New("--broker-listen is for the embedded broker, --broker names another: give one of them")
@@ -121,6 +126,7 @@ type watcher struct {
 	client *mqtt.Client
 	loop   *watch.Loop
 	site   *siteDatabase // nil when the site has none
+	guard  *guard        // nil when nobody is asked who they are
 }
 
 // run starts the parts in the order in which they need each other and stops them
@@ -136,6 +142,13 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 		if err := rehearsable(cfg, w.opt.play); err != nil {
 			return err
 		}
+	}
+	if w.guard, err = w.opt.guard.open(w.log); err != nil {
+		return err
+	}
+	secure, err := w.opt.guard.tls()
+	if err != nil {
+		return err
 	}
 	unlock, err := watch.Lock(w.opt.data)
 	if err != nil {
@@ -185,10 +198,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 		},
 	})
 	server := &http.Server{
-		Handler: dashboard.NewServer(dashboard.Config{
-			Desk: w.loop, Runs: watch.StoredRuns{Catalog: w.store.Catalog()}, Parse: watch.Parse,
-			Build: watch.Build(), Log: w.log, Extra: w.metrics,
-		}, hub),
+		Handler: dashboard.NewServer(w.page(secure != nil), hub), TLSConfig: secure,
 		ReadHeaderTimeout: 5 * time.Second, IdleTimeout: 2 * time.Minute, MaxHeaderBytes: 32 << 10,
 		ErrorLog: slog.NewLogLogger(w.log.Handler(), slog.LevelDebug),
 	}
@@ -206,13 +216,20 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 		loopEnd <- w.loop.Run(loopCtx, pipeline.Boot{Epoch: epoch, Build: watch.Build(), GOARCH: runtime.GOARCH}, bundle.Marshal())
 	}()
 	sideParts.Go(func() {
-		if err := server.Serve(listener); !errors.Is(err, http.ErrServerClosed) {
+		serve := server.Serve
+		if secure != nil {
+			serve = func(l net.Listener) error { return server.ServeTLS(l, "", "") }
+		}
+		if err := serve(listener); !errors.Is(err, http.ErrServerClosed) {
 			failed <- fmt.Errorf("page: %w", err)
 		}
 	})
 	sideParts.Go(func() { outbox.Run(sideCtx) })
 	if w.site != nil {
 		sideParts.Go(func() { w.site.run(sideCtx) })
+	}
+	if w.guard != nil {
+		sideParts.Go(func() { w.guard.run(sideCtx) })
 	}
 	w.announce(listener.Addr().String())
 	sideParts.Go(func() {
@@ -238,6 +255,21 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	stopClient()
 	clientParts.Wait()
 	return err
+}
+
+// page sets the server of the page up.
+func (w *watcher) page(secure bool) dashboard.Config {
+	c := dashboard.Config{
+		Desk: w.loop, Runs: watch.StoredRuns{Catalog: w.store.Catalog()}, Parse: watch.Parse,
+		Build: watch.Build(), Log: w.log, Extra: w.metrics,
+		OpenRole: w.opt.guard.role(), Secure: secure, Audit: newLog(w.stderr, true),
+	}
+	if w.guard != nil {
+		c.Access = w.guard.gate
+	} else {
+		c.Local = !w.opt.remote && !w.opt.guard.closed()
+	}
+	return c
 }
 
 // listen opens the port of the page.
@@ -380,18 +412,22 @@ func (w *watcher) announce(addr string) {
 	if w.site != nil {
 		dir += "\n  influx  " + w.site.target.String()
 	}
+	scheme := "http"
+	if w.opt.guard.cert != "" {
+		scheme = "https"
+	}
 	topics := make([]string, len(w.cfg.Align.Inputs))
 	for i, in := range w.cfg.Align.Inputs {
 		topics[i] = in.Filter
 	}
 	_, _ = fmt.Fprintf(w.stdout, `throatwatch watches %s (%s), engine %s %s
-  page    http://%s/
+  page    %s://%s/
   broker  %s
   topics  %s
   data    %s
   config  %.12s: %d channels, %.4g scans/s, %d rules, limits %s
 %s
-`, rig.Title, rig.ID, rig.EngineModel, rig.EngineSerial, addr, where, strings.Join(topics, "  "), dir, w.cfg.Hash,
+`, rig.Title, rig.ID, rig.EngineModel, rig.EngineSerial, scheme, addr, where, strings.Join(topics, "  "), dir, w.cfg.Hash,
 		len(w.cfg.Compute.Channels), 1e9/float64(w.cfg.Align.Period), len(w.cfg.Rules), rig.LimitsVersion, notProtection)
 }
 
