@@ -38,6 +38,26 @@ type markBody struct {
 	By        string `json:"by"`
 }
 
+// entryBody is the body of a manual entry.
+type entryBody struct {
+	Name      string        `json:"name"`
+	Value     rules.Reading `json:"value"`
+	Unit      string        `json:"unit"`
+	Text      string        `json:"text"`
+	RequestID string        `json:"request_id"`
+	By        string        `json:"by"`
+}
+
+// swapBody is the body that tells of another sensor.
+type swapBody struct {
+	Channel   string     `json:"channel"`
+	Serial    string     `json:"serial"`
+	ValidFrom rules.Time `json:"valid_from"`
+	Reason    string     `json:"reason"`
+	RequestID string     `json:"request_id"`
+	By        string     `json:"by"`
+}
+
 // command reads the JSON body of a request that changes something. v is what it
 // is decoded into.
 func command(w http.ResponseWriter, r *http.Request, v any) error {
@@ -139,6 +159,14 @@ func (s *Server) mark(w http.ResponseWriter, r *http.Request) error {
 	if strings.TrimSpace(in.Text) == "" {
 		return badRequest("a mark needs a text")
 	}
+	if err := s.isOn(r, "marks can be set"); err != nil {
+		return err
+	}
+	return s.act(w, r, pipeline.Action{Do: pipeline.DoMark, Text: in.Text, By: in.By, RequestID: in.RequestID})
+}
+
+// isOn refuses what can be done on the run that is on only, if that of the path is not.
+func (s *Server) isOn(r *http.Request, what string) error {
 	id, active := r.PathValue("id"), ""
 	if err := s.ask(r.Context(), "", func(_ *pipeline.Config, _ *pipeline.Machine, st *pipeline.State) {
 		if st.RunActive {
@@ -148,9 +176,35 @@ func (s *Server) mark(w http.ResponseWriter, r *http.Request) error {
 		return err
 	}
 	if id != active {
-		return &problem{http.StatusConflict, fmt.Sprintf("run %q is not on: marks can be set on the run that is", id)}
+		return &problem{http.StatusConflict, fmt.Sprintf("run %q is not on: %s on the run that is", id, what)}
 	}
-	return s.act(w, r, pipeline.Action{Do: pipeline.DoMark, Text: in.Text, By: in.By, RequestID: in.RequestID})
+	return nil
+}
+
+func (s *Server) entry(w http.ResponseWriter, r *http.Request) error {
+	var in entryBody
+	if err := command(w, r, &in); err != nil {
+		return err
+	}
+	if err := s.isOn(r, "entries can be made"); err != nil {
+		return err
+	}
+	return s.act(w, r, pipeline.Action{
+		Do: pipeline.DoEntry, Name: in.Name, Value: in.Value, Unit: in.Unit, Text: in.Text, By: in.By, RequestID: in.RequestID,
+	})
+}
+
+func (s *Server) swap(w http.ResponseWriter, r *http.Request) error {
+	var in swapBody
+	if err := command(w, r, &in); err != nil {
+		return err
+	}
+	if err := s.ask(r.Context(), r.PathValue("rig"), func(*pipeline.Config, *pipeline.Machine, *pipeline.State) {}); err != nil {
+		return err
+	}
+	return s.act(w, r, pipeline.Action{
+		Do: pipeline.DoSwap, Channel: in.Channel, Serial: in.Serial, ValidFrom: in.ValidFrom, Reason: in.Reason, By: in.By, RequestID: in.RequestID,
+	})
 }
 
 // placeJSON is where among the outcomes something came about.
@@ -170,7 +224,9 @@ func (s *Server) act(w http.ResponseWriter, r *http.Request, a pipeline.Action) 
 	switch {
 	case err != nil:
 		return silent(err)
-	case errors.Is(res.Err, rules.ErrNotFound):
+	case errors.Is(res.Err, pipeline.ErrInvalid):
+		return badRequest("%v", res.Err)
+	case errors.Is(res.Err, rules.ErrNotFound), errors.Is(res.Err, pipeline.ErrNoChannel):
 		return notFound("%v", res.Err)
 	case res.Err != nil:
 		return &problem{http.StatusConflict, res.Err.Error()}

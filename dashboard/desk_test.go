@@ -285,6 +285,8 @@ func (d *desk) store(r *ingest.Record, outs []pipeline.Outcome) {
 			event(o, "alarm", o.Alarm)
 		case pipeline.OutcomeMark:
 			event(o, "mark", o.Mark)
+		case pipeline.OutcomeLog:
+			event(o, "log", o.Entry)
 		case pipeline.OutcomeQuarantine:
 			event(o, "quarantine", o.Text)
 		case pipeline.OutcomeRun:

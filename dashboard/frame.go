@@ -44,6 +44,9 @@ func appendFrame(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) (body []
 	case pipeline.OutcomeMark:
 		kind = "mark"
 		dst = member(open(dst, kind, o), "mark", o.Mark)
+	case pipeline.OutcomeLog:
+		kind = "log"
+		dst = member(open(dst, kind, o), "entry", o.Entry)
 	case pipeline.OutcomeRun:
 		kind = "run"
 		dst = member(text(open(dst, kind, o), "event", o.Event), "run", runView(o.Run))
@@ -405,6 +408,7 @@ func appendHello(dst []byte, m *pipeline.Machine, s *pipeline.State, at place, b
 	} else {
 		dst = append(name(dst, "life"), "null"...)
 	}
+	dst = member(dst, "log", append([]pipeline.Entry{}, s.Log...))
 	dst = open(name(dst, "status"), "status", &pipeline.Outcome{Epoch: s.Epoch, N: at.n, T: s.Host})
 	return append(appendStatus(dst, &status), '}', '}')
 }

@@ -60,6 +60,9 @@ func outcomes() []pipeline.Outcome {
 		{Kind: pipeline.OutcomeLedger, Ledger: ledger},
 		{Kind: pipeline.OutcomeStatus, Status: st},
 		{Kind: pipeline.OutcomeMark, Mark: &monitor.Mark{T: t, Text: nasty, By: nasty}},
+		{Kind: pipeline.OutcomeLog, Entry: &pipeline.Entry{
+			T: rules.Time(t), What: "swap", Channel: "egt_1", Serial: nasty, Reason: nasty, By: nasty, Role: "engineer", ValidFrom: rules.Time(t - 1),
+		}},
 		{Kind: pipeline.OutcomeRun, Event: "started", Run: &monitor.Run{ID: nasty, Number: 3, Rig: rigID, Engine: nasty, Started: t, By: nasty}},
 	}
 	for i := range outs {
@@ -127,6 +130,11 @@ func TestFrames(t *testing.T) {
 		case "mark":
 			if m := f["mark"].(map[string]any); m["text"] != nice || m["by"] != nice {
 				t.Errorf("mark: %s", body)
+			}
+		case "log":
+			e := f["entry"].(map[string]any)
+			if _, value := e["value"]; value || e["serial"] != nice || e["by"] != nice || e["valid_from"] != "2026-03-02T09:00:07.049999999Z" || e["t"] != f["t"] {
+				t.Errorf("log: %s", body)
 			}
 		case "run":
 			if r := f["run"].(map[string]any); r["id"] != nice || r["ended"] != nil || r["number"] != 3.0 || f["event"] != "started" {

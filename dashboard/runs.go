@@ -200,8 +200,8 @@ func appendStored(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) ([]byte
 // events answers with the stored frames of some kinds, by event time.
 func (s *Server) events(w http.ResponseWriter, r *http.Request, f *runfile.File, from, to int64, kinds []string) error {
 	for _, k := range kinds {
-		if k != "alarm" && k != "mark" { // an event's JSON is the member of its frame for these
-			return badRequest("kinds %q: give some of alarm, mark, or none for every frame", k)
+		if k != "alarm" && k != "mark" && k != "log" { // an event's JSON is the member of its frame for these
+			return badRequest("kinds %q: give some of alarm, mark, log, or none for every frame", k)
 		}
 	}
 	out, done := stream(w, r)
@@ -212,7 +212,11 @@ func (s *Server) events(w http.ResponseWriter, r *http.Request, f *runfile.File,
 			return nil
 		}
 		buf = open(buf[:0], e.Kind, &pipeline.Outcome{Epoch: e.Epoch, N: e.N, T: e.T})
-		buf = append(append(name(buf, e.Kind), e.JSON...), '}', '\n')
+		key := e.Kind
+		if key == "log" {
+			key = "entry"
+		}
+		buf = append(append(name(buf, key), e.JSON...), '}', '\n')
 		_, err := out.Write(buf)
 		return err
 	})

@@ -44,7 +44,7 @@ func (r *recording) began(t *testing.T) int64 {
 // What was done while the run was recorded was answered with where it came about.
 func TestRecordedActions(t *testing.T) {
 	r := recorded()
-	for what, kind := range map[string]string{"mark": "mark", "acknowledge": "alarm", "end": "run"} {
+	for what, kind := range map[string]string{"mark": "log", "acknowledge": "log", "end": "run"} {
 		a := r.acted[what]
 		place := into[struct{ Epoch, N uint64 }](t, a)
 		i := slices.IndexFunc(r.sent(), func(f due) bool { return f.n == place.N-1 }) // the action is an outcome after what it brought about
@@ -239,13 +239,14 @@ func TestMessagesKinds(t *testing.T) {
 	}
 	checkSame(t, "alarms and marks", get("?kinds=alarm,mark"), kind("alarm", "mark"))
 	checkSame(t, "marks", get("?kinds=mark"), kind("mark"))
+	checkSame(t, "log", get("?kinds=log"), kind("log"))
 	checkSame(t, "a stretch", get("?kinds=alarm&from=14&to=16"), behind(r.sent(), 0, func(f due) bool {
 		return f.kind == "alarm" && f.t >= began+14*second && f.t < began+16*second
 	}))
 	for _, kinds := range []string{"status", "alarm,", "alarm,run", "*"} {
 		checkStatus(t, kinds, r.get(t, "/api/runs/"+r.id+"/messages?kinds="+kinds), http.StatusBadRequest, "alarm, mark")
 	}
-	if len(kind("alarm")) < 8 || len(kind("mark")) != 1 {
+	if len(kind("alarm")) < 8 || len(kind("mark")) != 1 || len(kind("log")) != 2 {
 		t.Error("the run has too few events to compare")
 	}
 }

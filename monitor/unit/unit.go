@@ -35,6 +35,8 @@ const (
 	Time                                   // s
 	SpecificEnergy                         // J/kg; heating value
 	Angle                                  // rad
+	Volume                                 // m³
+	Mass                                   // kg
 	numDimensions
 )
 
@@ -77,6 +79,10 @@ func (d Dimension) String() string {
 		return "energy per mass"
 	case Angle:
 		return "angle"
+	case Volume:
+		return "volume"
+	case Mass:
+		return "mass"
 	case Invalid, numDimensions:
 	}
 	return "invalid"
@@ -250,6 +256,15 @@ var table = []row{
 
 	{Unit{"rad", Angle, 1, 0}, nil},
 	{Unit{"deg", Angle, degree, 0}, []string{"°"}},
+
+	{Unit{"m3", Volume, 1, 0}, []string{"m³"}},
+	{Unit{"l", Volume, 1e-3, 0}, []string{"L"}},
+	{Unit{"ml", Volume, 1e-6, 0}, []string{"mL", "cm3", "cm³"}},
+	{Unit{"gal", Volume, gallonUS, 0}, nil}, // US gallon
+	{Unit{"ft3", Volume, foot * foot * foot, 0}, []string{"ft³"}},
+
+	{Unit{"kg", Mass, 1, 0}, nil},
+	{Unit{"lb", Mass, pound, 0}, []string{"lbm", "[lb_av]"}},
 }
 
 // byName finds a unit by each of its spellings; it is never written to again.

@@ -36,6 +36,7 @@ const (
 	OutcomeExceedance                        // Exceedance: an excursion above an EGT band
 	OutcomeEngine                            // Engine: a start, a shutdown or what went wrong with one
 	OutcomeLife                              // Life: of the engine, when a run ends
+	OutcomeLog                               // Entry: of the operator log
 )
 
 // Outcome is one result of a step. What it points to belongs to the machine and
@@ -62,6 +63,7 @@ type Outcome struct {
 	Exceedance *Exceedance
 	Engine     *EngineEvent
 	Life       *Life
+	Entry      *Entry
 }
 
 // Allowance is a line of the EGT ledger: a band and how much of it is used up.

@@ -30,7 +30,7 @@ func TestRunActions(t *testing.T) {
 	if err := b.act(Action{Do: DoMark, Text: "zero check", By: "A. Alder"}); err != nil {
 		t.Error(err)
 	}
-	mark := b.all[len(b.all)-2]
+	mark := b.all[len(b.all)-3]
 	if mark.Kind != OutcomeMark || mark.T != at || *mark.Mark != (monitor.Mark{T: at, Text: "zero check", By: "A. Alder"}) {
 		t.Errorf("mark %+v at %d, want at %d", mark.Mark, mark.T, at)
 	}

@@ -33,6 +33,8 @@ type State struct {
 	KnownAt   int64    // event time at which the phase was known last
 	Armed     bool     // an engine start begins a run; cleared when a run is ended by hand
 	Done      []string // ids of the last requests, so that a repeated one is done once
+	Log       []Entry  // the last of the operator log, the oldest first
+	Swaps     []Swap   // sensors that were exchanged, in the order of their entry
 	window    Window
 }
 

@@ -68,15 +68,21 @@ type ClockStep struct {
 
 // Action is the payload of an action record: what an operator did.
 type Action struct {
-	Do        string  `json:"do"` // one of the Do constants
-	Alarm     string  `json:"alarm,omitempty"`
-	Revision  uint64  `json:"revision,omitempty"`
-	Reason    string  `json:"reason,omitempty"`
-	Text      string  `json:"text,omitempty"`
-	Seconds   float64 `json:"seconds,omitempty"`
-	By        string  `json:"by"`
-	Role      string  `json:"role"`
-	RequestID string  `json:"request_id"`
+	Do        string        `json:"do"` // one of the Do constants
+	Alarm     string        `json:"alarm,omitempty"`
+	Revision  uint64        `json:"revision,omitempty"`
+	Reason    string        `json:"reason,omitempty"`
+	Text      string        `json:"text,omitempty"`
+	Seconds   float64       `json:"seconds,omitempty"`
+	Channel   string        `json:"channel,omitempty"`
+	Serial    string        `json:"serial,omitempty"` // of a new sensor
+	ValidFrom rules.Time    `json:"valid_from,omitzero"`
+	Name      string        `json:"name,omitempty"` // of an entry
+	Value     rules.Reading `json:"value,omitzero"`
+	Unit      string        `json:"unit,omitempty"`
+	By        string        `json:"by"`
+	Role      string        `json:"role"`
+	RequestID string        `json:"request_id"`
 }
 
 // What an operator can do. The alarm actions are those of package rules.
@@ -84,6 +90,8 @@ const (
 	DoMark     = "mark"
 	DoRunStart = "run_start"
 	DoRunEnd   = "run_end"
+	DoEntry    = "entry" // a reading or a remark, by hand
+	DoSwap     = "swap"  // another sensor is on a channel
 )
 
 // Reply says what became of an action.
@@ -470,9 +478,21 @@ func (m *Machine) do(s *State, a *Action) error {
 	if s.Align.Next == 0 {
 		t = s.Host
 	}
+	if err := a.checkTexts(); err != nil {
+		return fmt.Errorf("%s: %w", a.Do, err)
+	}
 	switch a.Do {
 	case DoMark:
 		m.emit(s, Outcome{Kind: OutcomeMark, T: t, Mark: &monitor.Mark{T: t, Text: a.Text, By: a.By}})
+		m.log(s, a, Entry{T: rules.Time(t), Text: a.Text})
+	case DoEntry:
+		if err := m.enter(s, t, a); err != nil {
+			return fmt.Errorf("entry %q: %w", a.Name, err)
+		}
+	case DoSwap:
+		if err := m.swap(s, t, a); err != nil {
+			return fmt.Errorf("sensor swap: %w", err)
+		}
 	case DoRunStart:
 		if s.RunActive {
 			return fmt.Errorf("start a run: %w: %s", ErrRunActive, s.Run.ID)
@@ -498,6 +518,11 @@ func (m *Machine) do(s *State, a *Action) error {
 		first := len(m.alarm)
 		m.alarm = append(m.alarm, alarm)
 		m.alarms(s, t, first)
+		text := alarm.Title
+		if alarm.Until != 0 {
+			text += ", for " + time.Duration(int64(alarm.Until)-t).String()
+		}
+		m.log(s, a, Entry{T: rules.Time(t), Alarm: alarm.ID, Rule: alarm.Rule, Text: text})
 	}
 	return nil
 }

@@ -248,7 +248,7 @@ func (s *sensor) generic(rng *rand.Rand) {
 		}
 	case unit.Force:
 		s.shows = func(p *plant) float64 { return rest + share*(hi-rest)*p.thrust/p.thrustTop }
-	case unit.Ratio, unit.Voltage, unit.Current, unit.Density, unit.SpecificEnergy, unit.Area, unit.Angle, unit.Time:
+	case unit.Ratio, unit.Voltage, unit.Current, unit.Density, unit.SpecificEnergy, unit.Area, unit.Angle, unit.Time, unit.Volume, unit.Mass:
 		// Supplies, positions, properties: steady.
 		s.shows = func(p *plant) float64 { return lo + span*(share+0.005*math.Sin(p.t/30+shape)) }
 	case unit.VolumeFlow, unit.TemperatureDifference:

@@ -124,6 +124,8 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 			}
 		case pipeline.OutcomeMark:
 			c.event(o, "mark", o.Mark)
+		case pipeline.OutcomeLog:
+			c.event(o, "log", o.Entry)
 		case pipeline.OutcomeRun:
 			c.event(o, "run", struct {
 				Event string `json:"event"`
