@@ -33,11 +33,18 @@ type Desk interface {
 
 // Runs gives the stored runs.
 type Runs interface {
-	List(ctx context.Context) ([]runfile.Run, error)
+	List(ctx context.Context, filter runfile.Filter) ([]runfile.Run, error)
 	// Open opens a run for reading; runfile.ErrNotRunFile or fs.ErrNotExist when
 	// there is none. The caller closes it.
 	Open(ctx context.Context, id string) (*runfile.File, error)
+	// Annotate changes keep, tags and notes of a run; runfile.ErrUnknownRun.
+	Annotate(ctx context.Context, id string, edit func(*runfile.Header)) (runfile.Run, error)
+	// Remove deletes a run: runfile.ErrUnknownRun, runfile.ErrKept, ErrRunning.
+	Remove(ctx context.Context, id, by, why string) error
 }
+
+// ErrRunning is returned for what cannot be done to a run that is being recorded.
+var ErrRunning = errors.New("the run is being recorded: wait for its end")
 
 // Config sets a server up.
 type Config struct {
@@ -100,6 +107,8 @@ func (s *Server) routes() map[string]handler {
 		"POST /api/alarms/{id}/{action}":      s.alarmAction,
 		"GET /api/runs":                       s.runs,
 		"GET /api/runs/{id}":                  s.run,
+		"PATCH /api/runs/{id}":                s.annotate,
+		"DELETE /api/runs/{id}":               s.remove,
 		"GET /api/runs/{id}/messages":         s.messages,
 		"GET /api/runs/{id}/series":           s.series,
 		"GET /api/runs/{id}/export":           s.export,

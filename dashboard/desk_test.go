@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"context"
 	"encoding/json"
+	"errors"
 	"fmt"
 	"io"
 	"log/slog"
@@ -177,13 +178,13 @@ func (f folder) paths() []string {
 }
 
 // List gives the runs of the folder.
-func (f folder) List(ctx context.Context) (runs []runfile.Run, err error) {
+func (f folder) List(ctx context.Context, filter runfile.Filter) (runs []runfile.Run, err error) {
 	for _, path := range f.paths() {
 		r, err := runfile.ReadRun(ctx, path)
 		if err != nil {
 			return nil, err
 		}
-		if r.State != runfile.StateIdle {
+		if r.State != runfile.StateIdle && strings.Contains(r.Notes, filter.Text) {
 			runs = append(runs, r)
 		}
 	}
@@ -198,6 +199,31 @@ func (f folder) Open(ctx context.Context, id string) (*runfile.File, error) {
 		}
 	}
 	return nil, os.ErrNotExist
+}
+
+// Annotate changes the header of a run.
+func (f folder) Annotate(ctx context.Context, id string, edit func(*runfile.Header)) (runfile.Run, error) {
+	path := filepath.Join(string(f), id+".db")
+	if _, err := os.Stat(path); err != nil {
+		return runfile.Run{}, runfile.ErrUnknownRun
+	}
+	file, err := runfile.Open(ctx, path, runfile.ReadWrite, runfile.Options{})
+	if err == nil {
+		err = errors.Join(file.UpdateHeader(ctx, edit), file.Close())
+	}
+	if err != nil {
+		return runfile.Run{}, err
+	}
+	return runfile.ReadRun(ctx, path)
+}
+
+// Remove deletes a run.
+func (f folder) Remove(ctx context.Context, id, _, _ string) error {
+	path := filepath.Join(string(f), id+".db")
+	if r, err := runfile.ReadRun(ctx, path); err != nil || r.Keep {
+		return errors.Join(err, runfile.ErrKept)
+	}
+	return runfile.Remove(path)
 }
 
 // Ask runs fn between two steps.

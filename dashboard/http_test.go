@@ -296,7 +296,7 @@ func TestNotServed(t *testing.T) {
 	d := recorded()
 	for _, tt := range []struct{ method, path, allow string }{
 		{post, "/api/rigs", "GET"},
-		{http.MethodDelete, "/api/runs/x", "GET"},
+		{http.MethodPut, "/api/runs/x", "DELETE, GET, PATCH"},
 		{http.MethodGet, "/api/runs/x/marks", "POST"},
 		{http.MethodGet, "/api/rigs/cell_2/runs", "POST"},
 		{http.MethodPut, "/api/alarms/a%2Fb/acknowledge", "POST"},

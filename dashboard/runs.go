@@ -28,6 +28,7 @@ import (
 const (
 	maxNames  = 64
 	maxPoints = 5000
+	maxFind   = 200 // bytes of a text that is searched for
 	// early is the host time before the start of a stretch at which its replay
 	// begins, ns: a device clock may be ahead of ours by less.
 	early = int64(10e9)
@@ -72,7 +73,12 @@ func viewRun(r *runfile.Run) storedRun {
 }
 
 func (s *Server) runs(w http.ResponseWriter, r *http.Request) error {
-	runs, err := s.cfg.Runs.List(r.Context())
+	q := r.URL.Query()
+	find := q.Get("find")
+	if len(find) > maxFind {
+		return badRequest("find: more than %d bytes", maxFind)
+	}
+	runs, err := s.cfg.Runs.List(r.Context(), runfile.Filter{Text: find, Tag: q.Get("tag")})
 	if err != nil {
 		return fmt.Errorf("runs: %w", err)
 	}
@@ -86,7 +92,7 @@ func (s *Server) runs(w http.ResponseWriter, r *http.Request) error {
 
 // open opens the run of the path and gives its line of the list.
 func (s *Server) open(ctx context.Context, id string) (*runfile.File, *runfile.Run, error) {
-	runs, err := s.cfg.Runs.List(ctx)
+	runs, err := s.cfg.Runs.List(ctx, runfile.Filter{})
 	if err != nil {
 		return nil, nil, fmt.Errorf("runs: %w", err)
 	}

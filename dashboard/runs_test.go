@@ -88,7 +88,7 @@ func TestRuns(t *testing.T) {
 // odd gives a list and fails to open.
 type odd struct{ list, open error }
 
-func (o odd) List(context.Context) ([]runfile.Run, error) {
+func (o odd) List(context.Context, runfile.Filter) ([]runfile.Run, error) {
 	a, b := runfile.Run{}, runfile.Run{}
 	a.ID, a.Started, a.State = "old", start, runfile.StateInterrupted
 	b.ID, b.Started, b.State = "new", start+second, runfile.StateRunning
@@ -96,6 +96,12 @@ func (o odd) List(context.Context) ([]runfile.Run, error) {
 }
 
 func (o odd) Open(context.Context, string) (*runfile.File, error) { return nil, o.open }
+
+func (odd) Annotate(context.Context, string, func(*runfile.Header)) (runfile.Run, error) {
+	return runfile.Run{}, runfile.ErrUnknownRun
+}
+
+func (odd) Remove(context.Context, string, string, string) error { return dashboard.ErrRunning }
 
 // A run that is on or was cut off is listed as such, the newest first; a file that is
 // gone or cannot be read is told.

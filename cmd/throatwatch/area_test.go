@@ -15,7 +15,7 @@ import (
 // the systematic part, which both share, cancels [JCGM 100 F.1.2.3].
 func TestRunsShowDrift(t *testing.T) {
 	dir := t.TempDir()
-	if _, err := listRuns(t.Context(), dir); err == nil {
+	if _, err := listRuns(t.Context(), dir, runfile.Filter{}); err == nil {
 		t.Error("a folder without runs is listed")
 	}
 	if err := os.Mkdir(filepath.Join(dir, "runs"), 0o750); err != nil {
@@ -45,7 +45,7 @@ func TestRunsShowDrift(t *testing.T) {
 			t.Fatal(err)
 		}
 	}
-	list, err := listRuns(t.Context(), dir)
+	list, err := listRuns(t.Context(), dir, runfile.Filter{})
 	if err != nil || len(list) != 4 {
 		t.Fatalf("%d runs, %v", len(list), err)
 	}

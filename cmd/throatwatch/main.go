@@ -35,6 +35,8 @@ func commands() []command {
 		{"point", "one operating point from numbers given by hand", withoutContext(pointCommand)},
 		{"runs", "list the stored runs", runsCommand},
 		{"life", "what each engine has been through: starts, cycles, hours, time above EGT limits", lifeCommand},
+		{"note", "keep, tag or comment a stored run", noteCommand},
+		{"delete", "delete a stored run", deleteCommand},
 		{"replay", "step a stored run again, and compare its digest", replayCommand},
 		{"export", "write a table of a stored run for other programs", exportCommand},
 		{"verify", "read stored runs to the last byte and step them again", verifyCommand},

@@ -46,6 +46,8 @@ type runLine struct {
 	Alarms       int      `json:"alarms"`
 	SizeBytes    int64    `json:"size_bytes"`
 	Keep         bool     `json:"keep"`
+	Tags         []string `json:"tags"`
+	Notes        string   `json:"notes"`
 	ConfigHash   string   `json:"config_hash"`
 	Build        string   `json:"build"`
 	Digest       string   `json:"digest"`
@@ -60,13 +62,15 @@ func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) i
 	fs := newFlags("runs", "List the stored runs, newest first.", stderr)
 	data := fs.String("data", "data", "data folder")
 	asJSON := fs.Bool("json", false, "one JSON array")
+	find := fs.String("find", "", "only runs with this text in what is known of them: rig, engine, serial, notes, tags")
+	tag := fs.String("tag", "", "only runs with this tag")
 	if rest, code := parseArgs(fs, args, stderr); code >= 0 {
 		return code
 	} else if len(rest) > 0 {
 		_, _ = fmt.Fprintln(stderr, "throatwatch runs: takes no arguments")
 		return 2
 	}
-	list, err := listRuns(ctx, *data)
+	list, err := listRuns(ctx, *data, runfile.Filter{Text: *find, Tag: *tag})
 	if err != nil {
 		_, _ = fmt.Fprintln(stderr, "throatwatch runs:", err)
 		return 1
@@ -93,18 +97,18 @@ func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) i
 	}
 	_ = t.Flush()
 	if len(list) == 0 {
-		_, _ = fmt.Fprintln(stdout, "no runs are stored")
+		_, _ = fmt.Fprintln(stdout, "no such runs are stored")
 	}
 	return 0
 }
 
-func listRuns(ctx context.Context, dir string) (list []runLine, err error) {
+func listRuns(ctx context.Context, dir string, filter runfile.Filter) (list []runLine, err error) {
 	runs, err := openRuns(ctx, dir)
 	if err != nil {
 		return nil, err
 	}
 	defer func() { err = errors.Join(err, runs.Catalog.Close()) }()
-	all, err := runs.List(ctx)
+	all, err := runs.List(ctx, filter)
 	if err != nil {
 		return nil, err
 	}
@@ -114,7 +118,7 @@ func listRuns(ctx context.Context, dir string) (list []runLine, err error) {
 		line := runLine{
 			ID: r.ID, Number: r.Number, Rig: r.Rig, Engine: r.Engine, EngineSerial: r.EngineSerial,
 			Started: time.Unix(0, r.Started).UTC().Format(time.RFC3339Nano), State: r.State, Alarms: r.Alarms,
-			SizeBytes: r.Size, Keep: r.Keep, ConfigHash: r.ConfigHash, Build: r.Build, Digest: r.Digest,
+			SizeBytes: r.Size, Keep: r.Keep, Tags: append([]string{}, r.Tags...), Notes: r.Notes, ConfigHash: r.ConfigHash, Build: r.Build, Digest: r.Digest,
 		}
 		if r.Ended != 0 {
 			ended, length := time.Unix(0, r.Ended).UTC().Format(time.RFC3339Nano), float64(r.Ended-r.Started)/1e9

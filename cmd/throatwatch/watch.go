@@ -40,6 +40,8 @@ type watchOptions struct {
 	play                               rehearseFlags
 	influx                             influxOptions
 	guard                              guardOptions
+	retainDays                         int
+	retainGB                           float64
 	limit                              time.Duration
 	verbose                            bool
 }
@@ -58,6 +60,8 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 	fs.BoolVar(&o.rehearse, "rehearse", false, "let a simulated rig publish a test to the broker; the next flags say which")
 	o.play = newRehearseFlags(fs)
 	o.influx.flags(fs)
+	fs.IntVar(&o.retainDays, "retain-days", 0, "remove runs that ended longer ago, except those marked keep (default: none)")
+	fs.Float64Var(&o.retainGB, "retain-gb", 0, "remove the oldest runs until the rest takes no more GB (10^9 bytes), except those marked keep (default: none)")
 	fs.DurationVar(&o.limit, "for", 0, "stop after this time (default: on interrupt)")
 	fs.BoolVar(&o.verbose, "verbose", false, "log what the parts do")
 	rig, code := parseRig(fs, args, stderr)
@@ -83,6 +87,9 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 
 // check finds what cannot be meant, before anything is touched.
 func (o *watchOptions) check(fs *pflag.FlagSet) error {
+	if o.retainDays < 0 || !(o.retainGB >= 0) {
+		return errors.New("--retain-days and --retain-gb: give numbers above 0")
+	}
 	if o.limit < 0 {
 		return fmt.Errorf("--for %v: give a time above 0", o.limit)
 	}
@@ -111,6 +118,11 @@ func (o *watchOptions) check(fs *pflag.FlagSet) error {
 	}
 	_, err = o.play.options()
 	return err
+}
+
+// retention gives which runs are kept.
+func (o *watchOptions) retention() runfile.Retention {
+	return runfile.Retention{Age: int64(o.retainDays) * 24 * int64(time.Hour), Bytes: int64(o.retainGB * 1e9)}
 }
 
 // watcher is the daemon: its parts, started and stopped in order.
@@ -225,6 +237,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 		}
 	})
 	sideParts.Go(func() { outbox.Run(sideCtx) })
+	sideParts.Go(func() { w.store.Retain(sideCtx, w.opt.retention()) })
 	if w.site != nil {
 		sideParts.Go(func() { w.site.run(sideCtx) })
 	}
@@ -260,7 +273,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 // page sets the server of the page up.
 func (w *watcher) page(secure bool) dashboard.Config {
 	c := dashboard.Config{
-		Desk: w.loop, Runs: watch.StoredRuns{Catalog: w.store.Catalog()}, Parse: watch.Parse,
+		Desk: w.loop, Runs: watch.StoredRuns{Catalog: w.store.Catalog(), Store: w.store}, Parse: watch.Parse,
 		Build: watch.Build(), Log: w.log, Extra: w.metrics,
 		OpenRole: w.opt.guard.role(), Secure: secure, Audit: newLog(w.stderr, true),
 	}

@@ -265,6 +265,57 @@ func (c *Catalog) list(ctx context.Context, where string, args ...any) ([]Run, e
 // Path gives the path of a run's file.
 func (c *Catalog) Path(r Run) string { return filepath.Join(c.dir, r.File) }
 
+// Retention says which runs are kept; a zero field removes none.
+type Retention struct {
+	Age   int64 // ns: a run that ended longer ago is removed
+	Bytes int64 // of all run files together: the runs that ended first go until the rest fits
+}
+
+// Expired gives the runs that r removes at now, ns UTC, those that ended first
+// first: never one that is marked keep or has not ended. What is kept or running
+// counts toward the bytes.
+func (c *Catalog) Expired(ctx context.Context, r Retention, now int64) ([]Run, error) {
+	runs, err := c.list(ctx, "ORDER BY ended, id")
+	if err != nil {
+		return nil, err
+	}
+	var total int64
+	for i := range runs {
+		total += runs[i].Size
+	}
+	var out []Run
+	for i := range runs {
+		run := &runs[i]
+		old := r.Age > 0 && now-run.Ended > r.Age
+		if run.Keep || run.State != StateEnded || !old && (r.Bytes <= 0 || total <= r.Bytes) {
+			continue
+		}
+		total -= run.Size
+		out = append(out, *run)
+	}
+	return out, nil
+}
+
+// Annotate changes what people say of a run, in its file and in the catalogue. The
+// file must not be open for writing elsewhere. Errors: ErrUnknownRun, those of Open.
+func (c *Catalog) Annotate(ctx context.Context, id string, edit func(*Header)) (run Run, err error) {
+	if run, err = c.Get(ctx, id); err != nil {
+		return Run{}, err
+	}
+	path := c.Path(run)
+	f, err := Open(ctx, path, ReadWrite, Options{})
+	if err != nil {
+		return Run{}, err
+	}
+	if err := errors.Join(f.UpdateHeader(ctx, edit), f.Close()); err != nil {
+		return Run{}, err
+	}
+	if run, err = ReadRun(ctx, path); err != nil {
+		return Run{}, err
+	}
+	return run, c.Upsert(ctx, run)
+}
+
 // Delete unlinks a run's file with what belongs to it, and its line. The file
 // must not be open here. The file's own header decides whether it is kept
 // (ErrKept), as the catalogue may be behind; a file that cannot be read any more

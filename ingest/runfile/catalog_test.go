@@ -176,6 +176,66 @@ func TestCatalogDelete(t *testing.T) {
 	}
 }
 
+// Retention takes the oldest runs that have ended, and no kept or running one.
+func TestCatalogExpired(t *testing.T) {
+	dir := t.TempDir()
+	c := catalogue(t, filepath.Join(t.TempDir(), "catalog.db"), dir)
+	for _, r := range []struct {
+		id    string
+		ended int64
+		state string
+		keep  bool
+	}{
+		{"first", 10, runfile.StateEnded, false},
+		{"kept", 20, runfile.StateEnded, true},
+		{"second", 30, runfile.StateEnded, false},
+		{"third", 40, runfile.StateEnded, false},
+		{"on", 0, runfile.StateRunning, false},
+	} {
+		h := runfile.Header{ID: r.id, Started: 1, Ended: r.ended * second, State: r.state, Keep: r.keep}
+		if err := c.Upsert(t.Context(), runfile.Run{Header: h, File: r.id + ".db", Size: 100}); err != nil {
+			t.Fatal(err)
+		}
+	}
+	for _, tc := range []struct {
+		name string
+		r    runfile.Retention
+		want string
+	}{
+		{"nothing is asked", runfile.Retention{}, ""},
+		{"age, its bound is kept", runfile.Retention{Age: 70 * second}, "first"},
+		{"older", runfile.Retention{Age: 60 * second}, "first second"},
+		{"all fit", runfile.Retention{Bytes: 500}, ""},
+		{"one byte too many", runfile.Retention{Bytes: 499}, "first"},
+		{"kept and running runs count", runfile.Retention{Bytes: 300}, "first second"},
+		{"no more can go", runfile.Retention{Bytes: 1}, "first second third"},
+		{"age leaves room for bytes", runfile.Retention{Age: 70 * second, Bytes: 400}, "first"},
+	} {
+		got, err := c.Expired(t.Context(), tc.r, 100*second)
+		if err != nil || ids(got) != tc.want {
+			t.Errorf("%s: %q, %v, want %q", tc.name, ids(got), err, tc.want)
+		}
+	}
+}
+
+// A note reaches file and catalogue, and leaves the rest of the header.
+func TestCatalogAnnotate(t *testing.T) {
+	dir := runs(t)
+	c := catalogue(t, filepath.Join(t.TempDir(), "catalog.db"), dir)
+	run, err := c.Annotate(t.Context(), "a", func(h *runfile.Header) { h.Keep, h.Notes = true, "blade scan due" })
+	if err != nil || !run.Keep || run.EngineSerial != "7" {
+		t.Errorf("%+v, %v", run, err)
+	}
+	stored, err := runfile.ReadRun(t.Context(), filepath.Join(dir, "a.db"))
+	listed, errList := c.Get(t.Context(), "a")
+	if err := errors.Join(err, errList); err != nil || !stored.Keep || stored.Notes != "blade scan due" || listed.Notes != stored.Notes {
+		t.Errorf("stored %+v, listed %+v, %v", stored, listed, err)
+	}
+	if _, err := c.Annotate(t.Context(), "nothing", func(*runfile.Header) {}); !errors.Is(err, runfile.ErrUnknownRun) {
+		t.Errorf("unknown run: %v", err)
+	}
+}
+
 func TestCatalogRefusesForeign(t *testing.T) {
 	dir := runs(t)
 	// A run file is a database, but no catalogue.

@@ -1,6 +1,11 @@
 package watch
 
-import "time"
+import (
+	"context"
+	"time"
+
+	"throatwatch/ingest/runfile"
+)
 
 // SetWall replaces the wall clock by which a loop notices steps of it. It must be
 // called before Run.
@@ -11,4 +16,9 @@ func (s *Store) WaitMade() {
 	if s.making != nil {
 		<-s.making.done
 	}
+}
+
+// RetainOnce removes the runs beyond r as of now, ns UTC.
+func RetainOnce(ctx context.Context, s *Store, r runfile.Retention, now int64) error {
+	return s.retain(ctx, r, time.Unix(0, now))
 }

@@ -5,6 +5,8 @@ import (
 	"fmt"
 	"io/fs"
 	"os"
+	"path/filepath"
+	"time"
 
 	"throatwatch/ingest/runfile"
 )
@@ -12,12 +14,13 @@ import (
 // StoredRuns gives the runs of a catalogue.
 type StoredRuns struct {
 	Catalog *runfile.Catalog
+	Store   *Store // that writes the runs; nil where no watch runs in this process
 }
 
-// List gives all runs, with header and size as they are now for a run that is
-// on: the catalogue has its line from when it began.
-func (r StoredRuns) List(ctx context.Context) ([]runfile.Run, error) {
-	runs, err := r.Catalog.List(ctx, runfile.Filter{})
+// List gives the runs that pass a filter, with header and size as they are now for
+// a run that is on: the catalogue has its line from when it began.
+func (r StoredRuns) List(ctx context.Context, filter runfile.Filter) ([]runfile.Run, error) {
+	runs, err := r.Catalog.List(ctx, filter)
 	if err != nil {
 		return nil, err
 	}
@@ -43,4 +46,26 @@ func (r StoredRuns) Open(ctx context.Context, id string) (*runfile.File, error) 
 		return nil, fmt.Errorf("run %q: %w", id, err)
 	}
 	return runfile.Open(ctx, path, runfile.ReadOnly, runfile.Options{})
+}
+
+// Annotate changes what people say of a run: keep, tags, notes.
+func (r StoredRuns) Annotate(ctx context.Context, id string, edit func(*runfile.Header)) (runfile.Run, error) {
+	if r.Store != nil {
+		return r.Store.Annotate(ctx, id, edit)
+	}
+	return r.Catalog.Annotate(ctx, id, edit)
+}
+
+// Remove deletes a run with its file; removed.jsonl says by whom and why. Errors:
+// runfile.ErrUnknownRun, ErrKept, and dashboard.ErrRunning.
+func (r StoredRuns) Remove(ctx context.Context, id, by, why string) error {
+	if r.Store != nil {
+		return r.Store.Remove(ctx, id, by, why)
+	}
+	run, err := r.Catalog.Get(ctx, id)
+	if err != nil {
+		return err
+	}
+	dir := filepath.Dir(filepath.Dir(r.Catalog.Path(run)))
+	return remove(ctx, r.Catalog, dir, &run, by, why, time.Now())
 }

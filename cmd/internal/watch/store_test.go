@@ -634,7 +634,7 @@ func TestStoredRuns(t *testing.T) {
 	must(t, feed.Take(ctx, watch.Input{Kind: ingest.KindAction, Payload: []byte(`{"do":"run_start","by":"T. Ester","request_id":"3"}`)}, host))
 	feedSmall(t, feed, host, 200)
 	runs := watch.StoredRuns{Catalog: store.Catalog()}
-	list, err := runs.List(ctx)
+	list, err := runs.List(ctx, runfile.Filter{})
 	must(t, err)
 	states := map[string]string{}
 	for _, r := range list {
