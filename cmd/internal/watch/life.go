@@ -26,7 +26,7 @@ func Lives(ctx context.Context, dir string, runs StoredRuns) ([]pipeline.Life, e
 	for i := range state.Compute.Engine.Lives {
 		lives = append(lives, pipeline.ViewLife(&state.Compute.Engine.Lives[i]))
 	}
-	list, err := runs.List(ctx)
+	list, err := runs.List(ctx, runfile.Filter{})
 	if err != nil {
 		return nil, err
 	}
