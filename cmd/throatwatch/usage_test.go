@@ -64,7 +64,7 @@ func TestWrongUse(t *testing.T) {
 		{"not a broker", []string{"watch", rig, "--broker", "http://127.0.0.1:1"}, 1, `throatwatch watch: mqtt configuration: broker URL: unknown scheme "http" (give mqtt://host:port or mqtts://host:port)`},
 		{"no password", []string{"watch", rig, "--broker", "mqtt://127.0.0.1:1", "--broker-password-file", "nowhere"}, 1, "throatwatch watch: password file: open nowhere: no such file or directory"},
 		{"fault of nothing", []string{"watch", rig, "--fault", "burst@1s"}, 2, "throatwatch watch: --fault says what is rehearsed: add --rehearse"},
-		{"no time of a fault", []string{"watch", rig, "--rehearse", "--fault", "burst"}, 2, `throatwatch watch: rehearsal: "burst": no time; write name@time[+duration][:channel], as in probe-open@25s:egt_3: fault is not understood`},
+		{"no time of a fault", []string{"watch", rig, "--rehearse", "--fault", "burst"}, 2, `throatwatch watch: rehearsal: "burst": no time; write name@time[+duration][*size][:channel], as in probe-open@25s:egt_3: fault is not understood`},
 		{"fault of a missing channel", []string{"watch", rig, "--rehearse", "--fault", "probe-open@1s:egt_99"}, 1, `throatwatch watch: rehearsal: fault probe-open: the rig has no channel "egt_99": fault is not understood`},
 		{"too fast", []string{"watch", rig, "--rehearse", "--speed", "1000"}, 1, "throatwatch watch: rehearsal: speed 1000: give 0.1 to 100"},
 		{"page in use", []string{"watch", rig, "--listen", "TAKEN"}, 1, "throatwatch watch: --listen TAKEN: another program listens there, perhaps another watch: give another address, or port 0 for a free one"},
