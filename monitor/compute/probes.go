@@ -1,7 +1,9 @@
 package compute
 
 import (
+	"errors"
 	"math"
+	"slices"
 
 	"throatwatch/monitor"
 	"throatwatch/monitor/calib"
@@ -82,6 +84,33 @@ func (g *group) step(s *Probes, scan *monitor.Scan, learn bool) {
 			scan.Quality[i], scan.Value[i] = monitor.QualityExcluded, math.NaN()
 		}
 	}
+}
+
+// ErrNoProbe says that a channel is in no group of probes.
+var ErrNoProbe = errors.New("it is no probe of a rake or of the EGT harness")
+
+// Readmit takes a probe back that is excluded, as a person asks: see rake.State.Readmit. The
+// errors are ErrNoProbe, rake.ErrNotOut and rake.ErrProven; nothing has changed then.
+func (c *Computer) Readmit(s *State, channel int) error {
+	err := ErrNoProbe
+	for _, g := range []struct {
+		channels []int
+		probes   *Probes
+	}{{c.p7.channels, &s.P7}, {c.t7.channels, &s.T7}, {c.egt.channels, &s.Harness}} {
+		k := slices.Index(g.channels, channel)
+		switch {
+		case k < 0:
+			continue
+		case k >= len(g.probes.Probes): // no scan yet
+			err = rake.ErrNotOut
+		default:
+			err = g.probes.Readmit(k)
+		}
+		if err == nil {
+			return nil
+		}
+	}
+	return err
 }
 
 func (g *group) out(k int) bool { return g.now.Out&(1<<k) != 0 }

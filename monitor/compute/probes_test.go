@@ -1,14 +1,18 @@
 package compute_test
 
 import (
+	"errors"
 	"fmt"
 	"math"
 	"math/rand/v2"
 	"slices"
+	"strings"
 	"testing"
 
 	"throatwatch/monitor"
 	"throatwatch/monitor/calib"
+	"throatwatch/monitor/compute"
+	"throatwatch/monitor/rake"
 	"throatwatch/monitor/uncertainty"
 )
 
@@ -162,5 +166,53 @@ func TestLostReferenceExcludesNone(t *testing.T) {
 	r.set(map[string]float64{"p_baro": 99800})
 	if p := r.step(); p.RakeProbesUsed != 4 || slices.Contains(r.scan.Quality, monitor.QualityExcluded) {
 		t.Errorf("%d probes used, %v", p.RakeProbesUsed, r.scan.Quality)
+	}
+}
+
+// A probe that was taken for broken and is not comes back on request: at once after a proof
+// that is gone, and with its new place after a departure; the mean does not step by it. A
+// proof that stands is a refusal with its reason.
+func TestReadmit(t *testing.T) {
+	b := full(t)
+	b.Stations.P7Watch.Departure = 2000
+	b.Stations.P7Watch.Return = 1000 * second
+	r := learned(b)
+	at := r.index("p7_3")
+	if err := r.c.Readmit(&r.s, at); !errors.Is(err, rake.ErrNotOut) {
+		t.Errorf("not out: %v", err)
+	}
+	if err := r.c.Readmit(&r.s, r.index("speed")); !errors.Is(err, compute.ErrNoProbe) {
+		t.Errorf("no probe: %v", err)
+	}
+	if err := r.c.Readmit(&compute.State{}, at); !errors.Is(err, rake.ErrNotOut) {
+		t.Errorf("before the first scan: %v", err)
+	}
+	r.mark("p7_3", monitor.QualityOutOfRange).steps(60)
+	if err := r.c.Readmit(&r.s, at); !errors.Is(err, rake.ErrProven) || !strings.Contains(err.Error(), "out of range") || r.step().RakeProbesUsed != 3 {
+		t.Errorf("proven: %v", err)
+	}
+	if p := r.set(running()).steps(60); p.RakeProbesUsed != 3 {
+		t.Fatalf("%d probes before", p.RakeProbesUsed)
+	}
+	if err := r.c.Readmit(&r.s, at); err != nil || r.step().RakeProbesUsed != 4 || r.scan.Quality[at] != monitor.QualityGood {
+		t.Errorf("back: %v, %d probes", err, r.p.RakeProbesUsed)
+	}
+	r.set(map[string]float64{"p7_3": 140e3})
+	if p := r.steps(20 * 10); p.RakeProbesUsed != 3 || r.s.P7.Probes[2].Out != rake.ByDeparture {
+		t.Fatalf("10 kPa off: %d probes", p.RakeProbesUsed)
+	}
+	before := r.p.V[monitor.RakePressure]
+	if err := r.c.Readmit(&r.s, at); err != nil {
+		t.Error(err)
+	}
+	for range 20 * 45 {
+		p := r.step()
+		// It is in the mean after 30 s; that then moves to the plain one over 300 s.
+		if d := p.V[monitor.RakePressure] - before; p.RakeProbesUsed != 4 || math.Abs(d) > 10e3/4*15/300*1.1 {
+			t.Fatalf("%d probes, p7 moves by %g Pa", p.RakeProbesUsed, d)
+		}
+	}
+	if o := r.s.P7.Probes[2].Offset; math.Abs(o-10e3) > 1200 {
+		t.Errorf("its new place is %g Pa off the mean", o)
 	}
 }

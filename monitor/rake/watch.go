@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"slices"
+	"strings"
 
 	"throatwatch/monitor"
 )
@@ -99,6 +100,7 @@ type Probe struct {
 
 	Proof    bool // proof of failure, not yet without it for ProofHold
 	ProofAt  int64
+	Last     monitor.Quality // of the last proof
 	CleanAt  int64 // event time since when a scan shows no proof
 	Clean    bool
 	Beyond   bool // Depart beyond the limit
@@ -212,6 +214,7 @@ func (p *Probe) prove(t int64, q monitor.Quality, hold int64) (changed bool) {
 		if !p.Proof {
 			p.Proof, p.ProofAt = true, t
 		}
+		p.Last = q
 		p.Clean = false
 		if p.Out == In && t-p.ProofAt >= hold {
 			p.Out, p.Since, p.Fit = ByProof, t, false
@@ -301,14 +304,28 @@ func (p *Probe) back(t int64, q monitor.Quality, w *Watch) bool {
 	return true
 }
 
-// Readmit takes an excluded probe in again, as an operator asks. It is excluded
-// again if what spoke against it still does.
-func (s *State) Readmit(probe int) {
-	if probe < 0 || probe >= len(s.Probes) {
-		return
-	}
+// Reasons for which Readmit takes no probe back.
+var (
+	ErrNotOut = errors.New("it is not excluded")
+	ErrProven = errors.New("its failure is still proven")
+)
+
+// Readmit takes an excluded probe in again, as a person asks who knows it to be sound.
+// The pattern of one that departed from it begins anew: it counts again once that is
+// learned. Another one counts at once. The error is ErrNotOut, or ErrProven with the
+// proof that is not older than ProofHold.
+func (s *State) Readmit(probe int) error {
 	p := &s.Probes[probe]
-	p.Out, p.Proof, p.Beyond, p.Judged = In, false, false, false
+	switch {
+	case p.Out == In:
+		return ErrNotOut
+	case p.Proof:
+		return fmt.Errorf("%w: %s", ErrProven, strings.ReplaceAll(p.Last.String(), "_", " "))
+	case p.Out == ByDeparture:
+		p.Offset, p.Learned = 0, 0
+	}
+	p.Out, p.Since, p.Beyond, p.Judged = In, s.T, false, false
+	return nil
 }
 
 // Relearn forgets the patterns, as after work on the rake. Exclusions stay.

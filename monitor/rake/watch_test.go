@@ -3,10 +3,12 @@ package rake
 import (
 	"bytes"
 	"encoding/gob"
+	"errors"
 	"flag"
 	"math"
 	"math/rand/v2"
 	"reflect"
+	"strings"
 	"testing"
 
 	"throatwatch/monitor"
@@ -241,17 +243,44 @@ func TestReturn(t *testing.T) {
 	if r, _, _, _ := g.run(100, nil); r.Out != 2 {
 		t.Errorf("back by itself: %+v", r)
 	}
-	g.s.Readmit(1)
-	g.s.Readmit(-1)
-	g.s.Readmit(99)
+	if err := g.s.Readmit(1); err != nil {
+		t.Error(err)
+	}
 	if r, _, _, _ := g.run(10, nil); r.Out != 0 || r.Used != 8 {
 		t.Errorf("readmitted: %+v", r)
 	}
-	// It still reads low: out again.
-	g.run(6, off(1, -60))
-	g.s.Readmit(1)
-	if r, out, _, _ := g.run(6, off(1, -60)); r.Out != 2 || !(out >= 3) {
-		t.Errorf("readmitted while it departs: %+v after %v", r, out)
+	if err := g.s.Readmit(1); !errors.Is(err, ErrNotOut) {
+		t.Errorf("not out: %v", err)
+	}
+	// With the proof still there, and for as long as a loose contact may be one.
+	g.run(3, bad(1, monitor.QualityInvalidCode))
+	g.run(0.5, nil)
+	if err := g.s.Readmit(1); !errors.Is(err, ErrProven) || !strings.Contains(err.Error(), "invalid code") {
+		t.Errorf("proven: %v", err)
+	}
+	g.run(1, nil)
+	if err := g.s.Readmit(1); err != nil {
+		t.Error(err)
+	}
+	// It reads low at a place of its own: the mean stays until its pattern is learned anew.
+	g.run(10, nil)
+	before, _, _, _ := g.run(6, off(1, -60))
+	if before.Out != 2 {
+		t.Fatalf("60 K low: %+v", before)
+	}
+	if err := g.s.Readmit(1); err != nil {
+		t.Error(err)
+	}
+	r, out, _, jump := g.run(60, off(1, -60))
+	within(t, "excluded again", out, math.NaN(), 0)
+	within(t, "largest step", jump, 0, 1.5) // the noise of eight probes
+	if r.Used != 8 || r.Out != 0 {
+		t.Errorf("after a minute: %+v", r)
+	}
+	within(t, "new place", g.s.Probes[1].Offset, pattern[1]-60, 3)
+	within(t, "mean", r.Mean, before.Mean, 12) // it drifts to the plain mean over Memory
+	if r, _, _, _ = g.run(10, off(1, -120)); r.Out != 2 {
+		t.Errorf("60 K lower still: %+v", r)
 	}
 	// With Return: only after 30 s without fault.
 	w = harness()
