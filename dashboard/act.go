@@ -58,6 +58,14 @@ type swapBody struct {
 	By        string     `json:"by"`
 }
 
+// readmitBody is the body that takes an excluded probe back.
+type readmitBody struct {
+	Channel   string `json:"channel"`
+	Reason    string `json:"reason"`
+	RequestID string `json:"request_id"`
+	By        string `json:"by"`
+}
+
 // command reads the JSON body of a request that changes something. v is what it
 // is decoded into.
 func command(w http.ResponseWriter, r *http.Request, v any) error {
@@ -149,6 +157,17 @@ func (s *Server) startOrEndRun(w http.ResponseWriter, r *http.Request) error {
 		return err
 	}
 	return s.act(w, r, a)
+}
+
+func (s *Server) readmit(w http.ResponseWriter, r *http.Request) error {
+	var in readmitBody
+	if err := command(w, r, &in); err != nil {
+		return err
+	}
+	if err := s.ask(r.Context(), r.PathValue("rig"), func(*pipeline.Config, *pipeline.Machine, *pipeline.State) {}); err != nil {
+		return err
+	}
+	return s.act(w, r, pipeline.Action{Do: pipeline.DoReadmit, Channel: in.Channel, Reason: in.Reason, By: in.By, RequestID: in.RequestID})
 }
 
 func (s *Server) mark(w http.ResponseWriter, r *http.Request) error {

@@ -103,6 +103,7 @@ func (s *Server) routes() map[string]handler {
 		"GET /api/rigs/{rig}/throat-curve":    s.throatCurve,
 		"GET /api/rigs/{rig}/budget":          s.budget,
 		"POST /api/rigs/{rig}/runs":           s.startOrEndRun,
+		"POST /api/rigs/{rig}/readmit":        s.readmit,
 		"GET /api/alarms":                     s.alarms,
 		"POST /api/alarms/{id}/{action}":      s.alarmAction,
 		"GET /api/runs":                       s.runs,

@@ -19,6 +19,7 @@ import (
 
 	"throatwatch/dashboard"
 	"throatwatch/ingest"
+	"throatwatch/ingest/decode"
 	"throatwatch/rules"
 	"throatwatch/rules/pipeline"
 )
@@ -488,5 +489,44 @@ func TestMetrics(t *testing.T) {
 	e.rest(1)
 	if a := e.get(t, "/metrics"); !bytes.Contains(a.body, []byte("throatwatch_data_age_seconds NaN")) {
 		t.Errorf("without data:\n%s", a.body)
+	}
+}
+
+// A probe that reads beyond its range for a second is excluded; while that is so nobody
+// takes it back, afterwards an engineer does, and the time line shows it.
+func TestReadmit(t *testing.T) {
+	d := newDesk(t)
+	broken := func(id string, _ float64) bool { return id == "p7_2" }
+	var msgs []message
+	for _, m := range play(start, engineTest(), 4*time.Second, broken) {
+		beyond := m
+		beyond.payload = decode.AppendSenMLJSON(nil, "", m.at, []decode.Reading{{Name: "p7_2", Unit: "kPa", Value: 400 + float64(m.at%7)}})
+		msgs = append(msgs, m, beyond)
+	}
+	d.send(msgs)
+	path := rigPath + "/readmit"
+	body := `{"channel":"p7_2","reason":"line purged","by":"M. Oduya","request_id":"b1"}`
+	checkStatus(t, "without a reason", d.call(t, post, path, `{"channel":"p7_2"}`), http.StatusConflict, "needs a reason")
+	checkStatus(t, "no channel", d.call(t, post, path, `{"channel":"p7_9","reason":"a"}`), http.StatusNotFound, "no such channel")
+	checkStatus(t, "no probe", d.call(t, post, path, `{"channel":"speed","reason":"a"}`), http.StatusConflict, "no probe")
+	checkStatus(t, "not out", d.call(t, post, path, `{"channel":"p7_1","reason":"a"}`), http.StatusConflict, "not excluded")
+	checkStatus(t, "another rig", d.call(t, post, "/api/rigs/cell_9/readmit", body), http.StatusNotFound, "cell_9")
+	checkStatus(t, "proven", d.call(t, post, path, body), http.StatusConflict, "proven: out of range")
+	used := func() any {
+		return into[map[string]any](t, d.get(t, rigPath+"/operating-point"))["rake_probes_used"]
+	}
+	d.send(play(start+4*second, engineTest(), 2*time.Second, nil))
+	if n := used(); n != 2.0 {
+		t.Fatalf("%v probes before", n)
+	}
+	_, before := d.n()
+	checkStatus(t, "taken back", d.call(t, post, path, body), http.StatusAccepted, "")
+	checkStatus(t, "the same request", d.call(t, post, path, body), http.StatusAccepted, "")
+	if entry := checkJSON(t, "LogFrame", behind(d.sent(), before, nil)[0]); dig(entry, "entry.what") != "readmit" || dig(entry, "entry.channel") != "p7_2" || dig(entry, "entry.reason") != "line purged" || dig(entry, "entry.by") != "M. Oduya" {
+		t.Errorf("%v", entry)
+	}
+	d.send(play(start+6*second, engineTest(), time.Second, nil))
+	if n := used(); n != 3.0 {
+		t.Errorf("%v probes after", n)
 	}
 }

@@ -112,12 +112,13 @@ func parser(tb testing.TB) func([]byte) (Config, error) {
 
 // bed steps records one by one.
 type bed struct {
-	tb   testing.TB
-	m    *Machine
-	s    *State
-	r    ingest.Record
-	outs []Outcome // of the last record, with what they point to
-	all  []Outcome // alarms, runs, marks, actions, configurations, quarantines
+	tb      testing.TB
+	m       *Machine
+	s       *State
+	r       ingest.Record
+	outs    []Outcome // of the last record, with what they point to
+	records []ingest.Record
+	all     []Outcome // alarms, runs, marks, actions, configurations, quarantines
 }
 
 func newBed(tb testing.TB) *bed {
@@ -130,6 +131,7 @@ func newBed(tb testing.TB) *bed {
 
 func (b *bed) step() []Outcome {
 	b.r.Seq++
+	b.records = append(b.records, b.r)
 	b.outs = b.m.Step(b.s, &b.r)
 	for _, o := range b.outs {
 		switch o.Kind {

@@ -12,6 +12,7 @@ import (
 	"throatwatch/ingest/decode"
 	"throatwatch/monitor"
 	"throatwatch/monitor/archive"
+	"throatwatch/monitor/rake"
 	"throatwatch/rules"
 )
 
@@ -753,4 +754,55 @@ func BenchmarkStep(b *testing.B) {
 	b.ReportMetric(float64(n)/b.Elapsed().Seconds(), "messages/s")
 	b.ReportMetric(float64(bd.s.Align.N-scans)/b.Elapsed().Seconds(), "scans/s")
 	b.ReportMetric(float64(int64(n)*period)/float64(b.Elapsed()), "×real-time")
+}
+
+// A probe is taken back by a record of an engineer's wish, with effect from the next scan on,
+// and stepped again the same comes out of the records.
+func TestReadmit(t *testing.T) {
+	b := newBed(t)
+	b.play(running, 2*second)
+	broken := running
+	broken.p7 = 2e9 // beyond its range
+	b.play(broken, 2*second)
+	readmit := Action{Do: DoReadmit, Channel: "p7", Reason: "line purged", By: "A. Alder", Role: "engineer", RequestID: "r1"}
+	if err := b.act(readmit); !errors.Is(err, rake.ErrProven) || !errors.Is(err, rules.ErrRefused) {
+		t.Errorf("proven: %v", err)
+	}
+	b.play(running, 2*second)
+	if p := b.point(); p.RakeProbesUsed != 0 || p.Choke != monitor.ChokeUnknown {
+		t.Fatalf("before: %d probes, %v", p.RakeProbesUsed, p.Choke)
+	}
+	for _, tt := range []struct {
+		name   string
+		change func(*Action)
+		want   string
+	}{
+		{"an operator", func(a *Action) { a.Role = "operator" }, "by an engineer"},
+		{"no reason", func(a *Action) { a.Reason = " " }, "needs a reason"},
+		{"no channel", func(a *Action) { a.Channel = "p9" }, "no such channel"},
+		{"no probe", func(a *Action) { a.Channel = "speed" }, "no probe"},
+		{"not out", func(a *Action) { a.Channel = "t7" }, "not excluded"},
+	} {
+		a := readmit
+		tt.change(&a)
+		if err := b.act(a); !errors.Is(err, rules.ErrRefused) && !errors.Is(err, ErrNoChannel) || !strings.Contains(err.Error(), tt.want) {
+			t.Errorf("%s: %v", tt.name, err)
+		}
+	}
+	b.expect(OutcomeLog, "")
+	if err := b.act(readmit); err != nil {
+		t.Error(err)
+	}
+	b.expect(OutcomeLog, "readmit by A. Alder")
+	b.play(running, second/4)
+	if p := b.point(); p.RakeProbesUsed != 1 || p.Choke != monitor.Choked {
+		t.Errorf("after: %d probes, %v", p.RakeProbesUsed, p.Choke)
+	}
+	again, state := NewMachine(parser(t)), &State{}
+	for i := range b.records {
+		again.Step(state, &b.records[i])
+	}
+	if !reflect.DeepEqual(state.Compute, b.s.Compute) || state.N != b.s.N {
+		t.Error("stepped again the state differs")
+	}
 }

@@ -90,8 +90,9 @@ const (
 	DoMark     = "mark"
 	DoRunStart = "run_start"
 	DoRunEnd   = "run_end"
-	DoEntry    = "entry" // a reading or a remark, by hand
-	DoSwap     = "swap"  // another sensor is on a channel
+	DoEntry    = "entry"   // a reading or a remark, by hand
+	DoSwap     = "swap"    // another sensor is on a channel
+	DoReadmit  = "readmit" // takes an excluded probe back
 )
 
 // Reply says what became of an action.
@@ -507,6 +508,10 @@ func (m *Machine) do(s *State, a *Action) error {
 		}
 		s.Armed = false
 		m.endRun(s, t)
+	case DoReadmit:
+		if err := m.readmit(s, t, a); err != nil {
+			return fmt.Errorf("take %s back: %w", a.Channel, err)
+		}
 	default:
 		alarm, err := m.prog.rules.Act(&s.Rules, t, rules.Action{
 			Do: a.Do, Alarm: a.Alarm, Revision: a.Revision, Reason: a.Reason, By: a.By, Role: a.Role,
