@@ -101,7 +101,7 @@ type Probe struct {
 	Proof    bool // proof of failure, not yet without it for ProofHold
 	ProofAt  int64
 	Last     monitor.Quality // of the last proof
-	CleanAt  int64 // event time since when a scan shows no proof
+	CleanAt  int64           // event time since when a scan shows no proof
 	Clean    bool
 	Beyond   bool // Depart beyond the limit
 	BeyondAt int64
