@@ -104,6 +104,8 @@ func (s *Server) routes() map[string]handler {
 		"GET /api/rigs/{rig}/budget":          s.budget,
 		"POST /api/rigs/{rig}/runs":           s.startOrEndRun,
 		"POST /api/rigs/{rig}/readmit":        s.readmit,
+		"GET /api/alarms/figures":             s.alarmFigures,
+		"GET /api/runs/{id}/alarm-figures":    s.runFigures,
 		"GET /api/alarms":                     s.alarms,
 		"POST /api/alarms/{id}/{action}":      s.alarmAction,
 		"GET /api/runs":                       s.runs,

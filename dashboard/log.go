@@ -11,10 +11,10 @@ import (
 	"throatwatch/rules/pipeline"
 )
 
-// ReadLog gives the operator log of a run that began at started, ns UTC, from its file.
-func ReadLog(ctx context.Context, f *runfile.File, started int64) ([]pipeline.Entry, error) {
+// ReadLog gives the operator log of a run from its file.
+func ReadLog(ctx context.Context, f *runfile.File, h *runfile.Header) ([]pipeline.Entry, error) {
 	list := []pipeline.Entry{}
-	err := f.Events(ctx, started, math.MaxInt64, func(e *runfile.Event) error {
+	err := f.Events(ctx, h.Started, math.MaxInt64, func(e *runfile.Event) error {
 		if e.Kind != "log" {
 			return nil
 		}
@@ -42,7 +42,7 @@ func (s *Server) operatorLog(w http.ResponseWriter, r *http.Request) error {
 		return err
 	}
 	defer f.Close() //nolint:errcheck // it is only read
-	entries, err := ReadLog(r.Context(), f, run.Started)
+	entries, err := ReadLog(r.Context(), f, &run.Header)
 	if err != nil {
 		return err
 	}

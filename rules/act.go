@@ -34,6 +34,7 @@ type Action struct {
 	Role     string        // out of service and back is for an engineer
 	For      int64         // of shelving, ns
 	Phase    monitor.Phase // of the engine, unknown when it is not known now
+	Host     int64         // host time, by which rules on the daemon go: scans may have stopped
 }
 
 // Errors of Act.
@@ -68,6 +69,9 @@ func (s *Set) Act(st *State, t int64, a Action) (Alarm, error) {
 	}
 	if !p.takes(in.State, input) {
 		return Alarm{}, refused("an alarm that is %s takes no %s", strings.ReplaceAll(in.State.String(), "_", " "), input)
+	}
+	if p.domain == OfDaemon {
+		t = max(t, a.Host)
 	}
 	s.move(st, i, input, t, "")
 	switch input {

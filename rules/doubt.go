@@ -8,18 +8,18 @@ import (
 // doubtSuffix makes the name of the alarm that tells that a rule cannot be judged.
 const doubtSuffix = "_unknown"
 
-// doubting gives the rule that is true while rule i cannot be judged. It is put
-// aside by design with that rule, and grouped under what took its inputs along.
+// doubting gives the rule that is true while rule i cannot be judged and is not put
+// aside. It is grouped under what took the inputs along.
 func (p *program) doubting(i int) program {
 	return program{
 		Rule: Rule{
 			Name: p.Name + doubtSuffix, Priority: p.Unknown.Priority, OnDelay: p.Unknown.After, OffDelay: second,
-			SuppressIn: p.SuppressIn, Group: groupSources,
+			Group:    groupSources,
 			Title:    p.Title + ": cannot be judged",
 			Caution:  "While it is unknown this condition is not watched: its alarm would not be raised.",
 			Response: "Facility procedure for lost instrumentation.",
 		},
-		domain: p.domain, suppress: p.suppress, doubts: i,
+		domain: p.domain, doubts: i,
 	}
 }
 

@@ -42,6 +42,8 @@ func commands() []command {
 		{"verify", "read stored runs to the last byte and step them again", verifyCommand},
 		{"copy", "copy a stored run, also while it is recorded", copyCommand},
 		{"user", "people and machines that may use a watch, and their roles", userCommand},
+		{"log", "what people did in a stored run, who, when and why", logCommand},
+		{"figures", "how the alarms of a stored run did, against published targets", figuresCommand},
 		{"version", "the build", versionCommand},
 	}
 }

@@ -31,7 +31,7 @@ var (
 // Entry is a line of the operator log: what a person did, who and why. A refused
 // action is no entry. Fields that an entry does not use are left out of its JSON.
 type Entry struct {
-	T         rules.Time    `json:"t"`
+	T         rules.Time    `json:"t"`    // host time: people act when they do, whether data comes or not
 	What      string        `json:"what"` // the Do constant of the action
 	Alarm     string        `json:"alarm,omitempty"`
 	Rule      string        `json:"rule,omitempty"`
@@ -52,13 +52,14 @@ type Swap struct {
 	Channel   string
 	Serial    string // of the new sensor
 	ValidFrom int64  // event time from which its values count, ns UTC
-	At        int64  // event time at which it was entered
+	At        int64  // host time at which it was entered
 	By        string
 	Reason    string
 }
 
 // log enters what was done into the operator log.
 func (m *Machine) log(s *State, a *Action, e Entry) {
+	e.T = rules.Time(s.Host)
 	e.What, e.Reason, e.By, e.Role = strings.ReplaceAll(a.Do, "-", "_"), a.Reason, a.By, a.Role
 	if len(s.Log) == logKept {
 		s.Log = slices.Delete(s.Log, 0, 1)
@@ -92,7 +93,7 @@ func (a *Action) checkTexts() error {
 }
 
 // enter does a manual entry: a reading that no channel has, or a remark.
-func (m *Machine) enter(s *State, t int64, a *Action) error {
+func (m *Machine) enter(s *State, a *Action) error {
 	name, unitName := strings.TrimSpace(a.Name), strings.TrimSpace(a.Unit)
 	switch {
 	case name == "":
@@ -107,7 +108,7 @@ func (m *Machine) enter(s *State, t int64, a *Action) error {
 			return invalid("%v", err)
 		}
 	}
-	m.log(s, a, Entry{T: rules.Time(t), Name: name, Value: a.Value, Unit: unitName, Text: a.Text})
+	m.log(s, a, Entry{Name: name, Value: a.Value, Unit: unitName, Text: a.Text})
 	return nil
 }
 
@@ -139,8 +140,8 @@ func (m *Machine) swap(s *State, t int64, a *Action) error {
 	if len(s.Swaps) == swapsKept {
 		s.Swaps = slices.Delete(s.Swaps, 0, 1)
 	}
-	s.Swaps = append(s.Swaps, Swap{Channel: a.Channel, Serial: a.Serial, ValidFrom: from, At: t, By: a.By, Reason: a.Reason})
-	m.log(s, a, Entry{T: rules.Time(t), Channel: a.Channel, Serial: a.Serial, ValidFrom: rules.Time(from), Text: a.Text})
+	s.Swaps = append(s.Swaps, Swap{Channel: a.Channel, Serial: a.Serial, ValidFrom: from, At: s.Host, By: a.By, Reason: a.Reason})
+	m.log(s, a, Entry{Channel: a.Channel, Serial: a.Serial, ValidFrom: rules.Time(from), Text: a.Text})
 	return nil
 }
 

@@ -272,6 +272,36 @@ func TestHealth(t *testing.T) {
 	}
 }
 
+// What is done about the daemon's own alarms goes by host time: scans may have
+// stopped long ago.
+func TestActionsWithoutData(t *testing.T) {
+	b := newBed(t)
+	b.play(running, 3*second)
+	b.wait(60 * second)
+	a, ok := b.alarm("source_lost")
+	if !ok {
+		t.Fatal("a lost source is not told")
+	}
+	if err := b.act(Action{Do: rules.DoAcknowledge, Alarm: a.ID, Revision: a.Revision, By: "A. Alder"}); err != nil {
+		t.Fatal(err)
+	}
+	a, _ = b.alarm("source_lost")
+	if int64(a.AcknowledgedAt) != b.r.Host || int64(a.Changed) != b.r.Host || a.Past {
+		t.Errorf("acknowledged at %d, changed at %d, past %v; it is %d", a.AcknowledgedAt, a.Changed, a.Past, b.r.Host)
+	}
+	if err := b.act(Action{Do: rules.DoShelve, Alarm: a.ID, Revision: a.Revision, By: "A. Alder", Reason: "publisher is off", Seconds: 10}); err != nil {
+		t.Fatal(err)
+	}
+	b.wait(9 * second)
+	if a, _ = b.alarm("source_lost"); a.State.String() != "shelved" {
+		t.Errorf("after 9 of 10 s it is %v", a.State)
+	}
+	b.wait(2 * second)
+	if a, _ = b.alarm("source_lost"); a.State.String() != "unacknowledged" {
+		t.Errorf("after 11 of 10 s it is %v", a.State)
+	}
+}
+
 // A status comes each second of host time, with or without data, and says how the
 // data path stands.
 func TestStatus(t *testing.T) {

@@ -11,7 +11,7 @@ import (
 
 // readmit takes a probe back that is excluded, from the next scan on. It is for an engineer and needs a reason; it is refused while the failure of
 // the probe is proven.
-func (m *Machine) readmit(s *State, t int64, a *Action) error {
+func (m *Machine) readmit(s *State, a *Action) error {
 	at := slices.IndexFunc(m.prog.cfg.Compute.Channels, func(c compute.Channel) bool { return c.ID == a.Channel })
 	switch {
 	case a.Role != "engineer" && a.Role != "facility":
@@ -24,6 +24,6 @@ func (m *Machine) readmit(s *State, t int64, a *Action) error {
 	if err := m.prog.compute.Readmit(&s.Compute, at); err != nil {
 		return fmt.Errorf("%w: %w", rules.ErrRefused, err)
 	}
-	m.log(s, a, Entry{T: rules.Time(t), Channel: a.Channel})
+	m.log(s, a, Entry{Channel: a.Channel})
 	return nil
 }

@@ -485,9 +485,9 @@ func (m *Machine) do(s *State, a *Action) error {
 	switch a.Do {
 	case DoMark:
 		m.emit(s, Outcome{Kind: OutcomeMark, T: t, Mark: &monitor.Mark{T: t, Text: a.Text, By: a.By}})
-		m.log(s, a, Entry{T: rules.Time(t), Text: a.Text})
+		m.log(s, a, Entry{Text: a.Text})
 	case DoEntry:
-		if err := m.enter(s, t, a); err != nil {
+		if err := m.enter(s, a); err != nil {
 			return fmt.Errorf("entry %q: %w", a.Name, err)
 		}
 	case DoSwap:
@@ -509,25 +509,25 @@ func (m *Machine) do(s *State, a *Action) error {
 		s.Armed = false
 		m.endRun(s, t)
 	case DoReadmit:
-		if err := m.readmit(s, t, a); err != nil {
+		if err := m.readmit(s, a); err != nil {
 			return fmt.Errorf("take %s back: %w", a.Channel, err)
 		}
 	default:
 		alarm, err := m.prog.rules.Act(&s.Rules, t, rules.Action{
 			Do: a.Do, Alarm: a.Alarm, Revision: a.Revision, Reason: a.Reason, By: a.By, Role: a.Role,
-			For: int64(a.Seconds * 1e9), Phase: s.Compute.Phase.Phase,
+			For: int64(a.Seconds * 1e9), Phase: s.Compute.Phase.Phase, Host: s.Host,
 		})
 		if err != nil {
 			return fmt.Errorf("%s %s: %w", a.Do, a.Alarm, err)
 		}
 		first := len(m.alarm)
 		m.alarm = append(m.alarm, alarm)
-		m.alarms(s, t, first)
+		m.alarms(s, int64(alarm.Changed), first)
 		text := alarm.Title
 		if alarm.Until != 0 {
-			text += ", for " + time.Duration(int64(alarm.Until)-t).String()
+			text += ", for " + time.Duration(alarm.Until-alarm.Changed).String()
 		}
-		m.log(s, a, Entry{T: rules.Time(t), Alarm: alarm.ID, Rule: alarm.Rule, Text: text})
+		m.log(s, a, Entry{Alarm: alarm.ID, Rule: alarm.Rule, Text: text})
 	}
 	return nil
 }
