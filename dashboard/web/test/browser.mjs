@@ -8,6 +8,7 @@ import { tmpdir } from 'node:os';
 import { join } from 'node:path';
 import { fileURLToPath } from 'node:url';
 import { gzipSync } from 'node:zlib';
+import axe from 'axe-core';
 import { chromium } from 'playwright-core';
 import { build } from 'vite';
 import { command, freePort, watch } from './daemon.mjs';
@@ -50,10 +51,12 @@ function follow(page) {
 // is missed while the test looks elsewhere.
 await context.addInitScript(() => {
   const text = (name) => document.querySelector(`[data-q="${name}"]`)?.textContent?.trim() ?? '';
-  window.seen = { margins: new Set(), states: new Set(), alarms: [], longest: 0 };
+  window.seen = { margins: new Set(), states: new Set(), alarms: [], titles: new Set(), longest: 0, shift: 0 };
+  new PerformanceObserver((l) => { for (const e of l.getEntries()) if (!e.hadRecentInput) window.seen.shift += e.value; }).observe({ type: 'layout-shift' });
   new PerformanceObserver((l) => { for (const e of l.getEntries()) window.seen.longest = Math.max(window.seen.longest, e.duration); }).observe({ type: 'longtask' });
   setInterval(() => {
-    const { margins, states, alarms } = window.seen;
+    const { margins, states, alarms, titles } = window.seen;
+    titles.add(document.title);
     if (/\d/.test(text('margin'))) margins.add(text('margin'));
     if (text('state')) states.add(text('state'));
     const alarm = { priority: text('alarm-priority'), text: text('alarm-text'), caution: text('alarm-caution'), response: text('alarm-response') };
@@ -88,7 +91,7 @@ const q = (name) => page.locator(`[data-q="${name}"]`);
 const words = async (name) => (await q(name).first().textContent()).trim();
 const json = async (path) => (await fetch(server + path)).json();
 
-/** Screenshots at both sizes, in both schemes when `dark`; `picture` is for the README. */
+/** Screenshots at three sizes, in both schemes when `dark`; `picture` is for the README. */
 async function shoot(name, { dark = false, picture = '' } = {}) {
   if (picture && renew) {
     await page.evaluate(() => document.activeElement?.blur());
@@ -99,7 +102,7 @@ async function shoot(name, { dark = false, picture = '' } = {}) {
   if (!shots) return;
   for (const scheme of dark ? ['light', 'dark'] : ['light']) {
     await page.emulateMedia({ colorScheme: scheme });
-    for (const [width, height] of [[820, 1180], [1440, 900]]) {
+    for (const [width, height] of [[820, 1180], [1920, 1080], [1440, 900]]) {
       await page.setViewportSize({ width, height });
       await page.waitForTimeout(250);
       await page.screenshot({ path: join(shots, `${name}-${width}${scheme === 'dark' ? '-dark' : ''}.png`) });
@@ -129,6 +132,20 @@ async function acknowledge() {
     return true;
   });
   return text;
+}
+
+/** What an accessibility checker has against the page, in both schemes. */
+async function accessible(name) {
+  const found = [];
+  for (const colorScheme of ['light', 'dark']) {
+    await page.emulateMedia({ colorScheme });
+    await page.waitForTimeout(300);
+    await page.evaluate(axe.source);
+    const { violations } = await page.evaluate(() => window.axe.run(document, { resultTypes: ['violations'] }));
+    found.push(...violations.map((v) => `${name}, ${colorScheme}: ${v.impact} ${v.id}: ${v.nodes.slice(0, 3).map((n) => n.target.join(' ')).join(', ')}`));
+  }
+  await page.emulateMedia({ colorScheme: 'light' });
+  return found;
 }
 
 /** Plays the stored run of the open replay page until three margins have been seen. */
@@ -176,7 +193,7 @@ try {
   const lost = ['p7_1', 'p7_2', 'p7_3', 'p7_4', 't7_1', 't7_2', 't7_3', 't7_4', 'p_exit'].flatMap((c) => ['--fault', `barometer-loss@150s+30s:${c}`]);
   command(program, 'rehearse', rig, '--into', data, ...lost);
   const port = await freePort();
-  daemon = await watch(program, rig, data, port, '--rehearse', '--quick');
+  daemon = await watch(program, rig, data, port, '--rehearse', '--quick', '--fault', 'probe-open@46s:egt_3');
   server = daemon.url;
   away = false;
   // Latched alarms of the stored test stand until somebody has answered and reset them.
@@ -242,26 +259,13 @@ try {
     await until('scrubbed to the start', async () => (await words('replay-clock')).startsWith('0:00:00'));
   });
 
-  await check('what stands in for a lost rake and exit plane is named beside the point', async () => {
-    await q('scrub').fill('140');
-    await until('none before', async () => (await words('replay-clock')).startsWith('0:02:20') && !/wall static/.test(await words('plane-notes')));
-    await q('scrub').fill('165');
-    for (const note of ['p7 from wall static', 'T7 from heat balance', 'back pressure from barometer']) await until(note, async () => (await words('plane-notes')).includes(note));
-    await shoot('replay-stand-ins');
-  });
-
-  await check('steadiness and forecasts are told, with the reason where there is none', async () => {
-    await q('scrub').fill('105');
-    await until('steady', async () => (await words('steady')) === '● steady' && (await words('choke-loss')) === 'no trend toward it');
-    await q('scrub').fill('120');
-    await until('not steady', async () => (await words('steady')) === '○ not steady: trend' && (await words('egt-limit')) === 'too little data yet');
-  });
-
   page = live;
   await check('an unchoked, then a choked period are shown', async () => {
     await live.evaluate(() => { window.seen.longest = 0; });
+    await live.evaluate(() => { window.seen.shift = 0; });
     await until('choked', async () => (await words('state')) === 'choked', 40_000);
-    const longest = await live.evaluate(() => window.seen.longest); // before a screenshot makes tasks of its own
+    const [longest, shift] = await live.evaluate(() => [window.seen.longest, window.seen.shift]); // before a screenshot makes tasks of its own
+    assert.ok(shift < 0.005, `layout shift ${shift}`);
     console.log(`     live page: longest task ${longest === 0 ? 'under 50' : longest.toFixed(0)} ms`);
     assert.ok(await live.evaluate(() => window.seen.states.has('unchoked')));
     await live.waitForTimeout(1000);
@@ -321,25 +325,11 @@ try {
     await until('a warning', async () => (seen = await live.evaluate(() => window.seen.alarms.find((a) => /WARNING/.test(a.priority) && /EGT/.test(a.text)))), 40_000);
     assert.ok(seen.caution.length > 20 && seen.response.length > 5, JSON.stringify(seen));
     assert.match(await live.locator('.bands').innerText(), /exceeded/);
+    assert.ok(await live.evaluate(() => [...window.seen.titles].some((t) => /^■ .*EGT/.test(t))), 'the title of the page carries the warning');
+    await until('the excursion of this run', async () => /exceeded: run max at/.test(await words('exceedances')));
     await shoot('watch-alarm', { dark: true, picture: 'watch-alarm.png' });
     await live.setViewportSize({ width: 1440, height: 900 });
     await acknowledge();
-  });
-
-  await check('units switch everywhere, without a shift, and are kept', async () => {
-    const before = await places();
-    assert.match(await words('thrust'), /^\d\.\d\d$/);
-    await q('units').selectOption('us');
-    await until('pounds', async () => /lb\/s/.test(await live.locator('.display').innerText()));
-    await live.waitForTimeout(300);
-    const shown = await live.locator('.display').innerText();
-    for (const sign of ['lb/s', 'lbf', 'psi', '°F']) assert.ok(shown.includes(sign), `${sign} is shown`);
-    for (const sign of ['kg/s', 'kN', 'kPa', ' K\n']) assert.ok(!shown.includes(sign), `${JSON.stringify(sign)} is still shown`);
-    assert.ok(!/°C/.test(await live.locator('.ledger, .traces').allInnerTexts().then((t) => t.join())));
-    assert.deepEqual(await places(), before, 'nothing moved');
-    await shoot('watch-us');
-    assert.equal(await live.evaluate(() => localStorage.getItem('throatwatch.units')), 'us');
-    await q('units').selectOption('si');
   });
 
   await check('the key M sets a mark under the operator’s name', async () => {
@@ -368,7 +358,7 @@ try {
   });
 
   page = other;
-  for (const name of ['rig', 'alarms', 'help']) {
+  for (const name of ['alarms', 'log', 'runs', 'help']) {
     await check(`the page ${name}`, async () => {
       await page.setViewportSize({ width: 1440, height: 900 });
       await page.goto(`${server}#/${name}`);
@@ -379,24 +369,71 @@ try {
         assert.match(await page.locator('.past').innerText(), /unchoked/i, 'what happened before the page was opened');
         assert.match(await page.locator('.past').innerText(), /EGT/);
       }
-      if (name === 'rig') {
-        assert.ok((await page.locator('.channels tbody tr').count()) > 20);
-        assert.match(await words('p-choked'), /%$/);
-        await until('a budget of the margin', async () => /choke npr|pressure/.test(await words('budget')));
-      }
-      await shoot(name, { dark: name !== 'help', picture: name === 'rig' ? 'rig.png' : '' });
-      for (const width of [820, 1440]) {
+      await shoot(name, { dark: name !== 'help' });
+      for (const width of [820, 1920, 1440]) {
         await page.setViewportSize({ width, height: 900 });
         assert.equal(await page.evaluate(() => document.documentElement.scrollWidth), width);
       }
+      assert.deepEqual(await accessible(name), []);
     });
   }
+
+  await check('an advisory is shelved with a reason and taken back; a warning cannot be', async () => {
+    await page.goto(`${server}#/alarms`);
+    const lost = async () => (await json('api/alarms')).find((a) => a.rule === 'egt_probe_lost');
+    await until('the probe is told as lost', async () => ['unacknowledged', 'acknowledged'].includes((await lost())?.state), 30_000);
+    const row = page.locator('.alarms tr', { hasText: 'EGT probe(s)' });
+    await row.getByRole('button', { name: /^Shelve/ }).click();
+    await page.locator('[data-q="field-time"]').selectOption('300');
+    await q('confirm').click();
+    assert.equal((await lost()).state === 'shelved', false, 'not without a reason');
+    await page.locator('[data-q="field-reason"]').fill('known since the morning');
+    assert.deepEqual(await accessible('shelving'), []);
+    await shoot('shelve');
+    await q('confirm').click();
+    const aside = page.locator('.aside tr', { hasText: 'EGT probe lost' });
+    await aside.waitFor();
+    assert.match(await aside.innerText(), /shelved[\s\S]*known since the morning/);
+    const shelved = await lost();
+    assert.deepEqual([shelved.state, shelved.reason], ['shelved', 'known since the morning']);
+    assert.ok(Math.abs((Date.parse(shelved.until) - Date.parse(shelved.changed)) / 1000 - 300) < 1, 'for the time that was chosen');
+    await aside.getByRole('button', { name: /^Unshelve/ }).click();
+    await row.waitFor();
+    const out = row.getByRole('button', { name: /^Out of service/ });
+    assert.ok(await out.isDisabled());
+    assert.equal(await out.getAttribute('title'), 'for an engineer');
+    const warnings = page.locator('.alarms tr', { has: page.locator('[data-priority="warning"]') });
+    assert.equal(await warnings.getByRole('button', { name: /^Shelve/ }).count(), 0);
+  });
+
+  await check('the history is narrowed by priority and words, by keyboard', async () => {
+    const rows = () => page.locator('.past tbody tr').count();
+    const all = await rows();
+    await page.locator('h1').click();
+    await page.keyboard.press('/');
+    await page.keyboard.type('unchoke');
+    await until('fewer', async () => (await rows()) < all);
+    for (const text of await page.locator('.past tbody tr').allInnerTexts()) assert.match(text, /unchoked/i);
+    await q('filter-words').fill('');
+    await q('filter-priority').selectOption('warning');
+    await until('warnings only', async () => (await page.locator('.past tbody tr').allInnerTexts()).every((t) => /WARNING/.test(t)));
+    await q('filter-priority').selectOption('');
+    await until('all again', async () => (await rows()) >= all);
+  });
 
   page = live;
   await check('sound is off until armed, and says so', async () => {
     assert.match(await words('sound'), /off/);
     await q('sound').click();
     await until('armed', async () => /armed/.test(await words('sound')));
+    await q('sound-more').click();
+    await shoot('sound');
+    await q('sound-test').click();
+    await q('mute-60').click();
+    await until('muted, counted down', async () => /Muted 0:5\d/.test(await words('sound')));
+    await q('sound-more').click();
+    await q('unmute').click();
+    await until('armed again', async () => /armed/.test(await words('sound')));
   });
 
   let ended;
@@ -432,10 +469,86 @@ try {
     assert.match(await live.locator('.veilwords').innerText(), /NO DATA LINK since \d\d:\d\d:\d\d/);
     for (const name of ['margin', 'npr', 'w8', 'thrust', 'egt']) assert.equal(await words(name), '–', `${name} does not look alive`);
     await shoot('dead', { dark: true });
-    daemon = await watch(program, rig, data, port, '--rehearse', '--quick');
+    daemon = await watch(program, rig, data, port, '--rehearse');
     await until('back without a reload', async () => (await live.locator('.veiled[data-veiled]').count()) === 0);
     await until('a margin', async () => /\d/.test(await words('margin')));
     away = false;
+  });
+
+  page = live;
+  await check('the page rig: budget, path of the data, every channel', async () => {
+    await page.goto(`${server}#/rig`);
+    await until('a budget', async () => /variance of the choke margin/.test(await page.locator('.page').innerText()), 30_000);
+      await q('budget-of').selectOption('mass_flow_kg_s');
+      await until('a budget of the flow', async () => /variance of the nozzle flow/.test(await page.locator('.page').innerText()) && /throat area|discharge/.test(await words('budget')));
+      await q('budget-of').selectOption('choke_margin_percent');
+      assert.match(await words('path'), /Broker.*probe message returns.*Archive.*recording.*Clock/s);
+      assert.ok((await page.locator('.channels tbody tr').count()) > 20);
+      assert.match(await words('p-choked'), /%$/);
+      await until('a budget of the margin', async () => /choke npr|pressure/.test(await words('budget')));
+    await shoot('rig', { dark: true, picture: 'rig.png' });
+    for (const width of [820, 1920, 1440]) {
+      await page.setViewportSize({ width, height: 900 });
+      assert.equal(await page.evaluate(() => document.documentElement.scrollWidth), width);
+    }
+    assert.deepEqual(await accessible('rig'), []);
+    await page.goto(`${server}#/watch`);
+  });
+
+  await check('units switch everywhere, without a shift, and are kept', async () => {
+    const before = await places();
+    await until('a thrust', async () => /^\d\.\d\d$/.test(await words('thrust')));
+    await q('units').selectOption('us');
+    await until('pounds', async () => /lb\/s/.test(await live.locator('.display').innerText()));
+    await live.waitForTimeout(300);
+    const shown = await live.locator('.display').innerText();
+    for (const sign of ['lb/s', 'lbf', 'psi', '°F']) assert.ok(shown.includes(sign), `${sign} is shown`);
+    for (const sign of ['kg/s', 'kN', 'kPa', ' K\n']) assert.ok(!shown.includes(sign), `${JSON.stringify(sign)} is still shown`);
+    assert.ok(!/°C/.test(await live.locator('.ledger, .traces').allInnerTexts().then((t) => t.join())));
+    assert.deepEqual(await places(), before, 'nothing moved');
+    await shoot('watch-us');
+    assert.equal(await live.evaluate(() => localStorage.getItem('throatwatch.units')), 'us');
+    await q('units').selectOption('si');
+  });
+
+  await check('Watch has nothing that an accessibility checker finds', async () => {
+    assert.deepEqual(await accessible('watch'), []);
+  });
+
+  page = other;
+  await check('a stored run opens again', async () => {
+    await page.goto(`${server}#/runs`);
+    await page.locator('[data-q="replay"][data-state="ended"]').last().click();
+    await page.locator('[data-q="replay-frame"] [data-q="margin"]').waitFor();
+    assert.deepEqual(await accessible('replay'), []);
+  });
+
+  await check('the record of a run: excursions, life, figures', async () => {
+    await q('show-record').click();
+    await until('an excursion', async () => /run max.*exceeded/.test(await page.locator('.exceedances').innerText().then((t) => t.replaceAll('\n', ' '))));
+    await until('the life', async () => /Starts\s*1/.test(await q('life').innerText()));
+    await shoot('record', { dark: true });
+    assert.deepEqual(await accessible('record'), []);
+    assert.match(await page.title(), /REPLAY/);
+    await q('show-display').click();
+    await until('the excursions of the run so far', async () => (await words('exceedances')) === '');
+    await q('scrub').fill('455');
+    await until('all of them', async () => /exceeded: run max at/.test(await words('exceedances')));
+  });
+
+  await check('what stands in for a lost rake and exit plane is named beside the point', async () => {
+    await q('scrub').fill('140');
+    await until('none before', async () => (await words('replay-clock')).startsWith('0:02:20') && !/wall static/.test(await words('plane-notes')));
+    await q('scrub').fill('165');
+    for (const note of ['p7 from wall static', 'T7 from heat balance', 'back pressure from barometer']) await until(note, async () => (await words('plane-notes')).includes(note));
+    await shoot('replay-stand-ins');
+  });
+
+  await check('steadiness and forecasts are told, with the reason where there is none', async () => {
+    await q('scrub').fill('105');
+    await until('steady', async () => (await words('steady')) === '● steady' && (await words('choke-loss')) === 'no trend toward it');
+    await q('scrub').fill('120');
+    await until('not steady', async () => (await words('steady')) === '○ not steady: trend' && (await words('egt-limit')) === 'too little data yet');
   });
 
   away = true;
