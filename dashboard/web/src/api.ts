@@ -85,7 +85,10 @@ export const api = {
   figures: (run: string | null) => get<AlarmFigures>(run === null ? 'api/alarms/figures' : `api/runs/${id(run)}/alarm-figures`),
   exceedances: (run: string) => get<ExceedanceReply>(`api/runs/${id(run)}/exceedances`),
   log: (run: string) => get<{ entries: LogEntry[] | null }>(`api/runs/${id(run)}/log`),
-  runs: () => get<RunSummary[]>('api/runs'),
+  runs: (find = '') => get<RunSummary[]>(`api/runs${find ? `?find=${id(find)}` : ''}`),
+  note: (run: string, c: { keep?: boolean; notes?: string; tags?: string[] }) => change('PATCH', `api/runs/${id(run)}`, c),
+  remove: (run: string, number: number, reason: string) => change('DELETE', `api/runs/${id(run)}?number=${number}&reason=${id(reason)}`),
+  exportAddress: (run: string, what: string, format: string) => `api/runs/${id(run)}/export?what=${what}&format=${format}`,
   runSummary: (run: string) => get<RunSummary>(`api/runs/${id(run)}`),
   series: (run: string, names: readonly string[], from: number, to: number, points: number, signal?: AbortSignal) =>
     get<SeriesReply>(`api/runs/${id(run)}/series?names=${names.join(',')}&from=${from}&to=${to}&points=${points}`, signal),

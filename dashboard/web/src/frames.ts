@@ -280,6 +280,7 @@ export type Frame =
 /** A line of /api/runs. */
 export interface RunSummary {
   id: string;
+  number: number;
   rig: string;
   engine: string;
   title?: string;

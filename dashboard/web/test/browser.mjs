@@ -3,7 +3,7 @@
 // a rig file. SHOTS is a folder for screenshots; SHOTS_README=1 renews the pictures
 // of the README. Ports, data and the browser's profile are its own.
 import assert from 'node:assert/strict';
-import { mkdirSync, mkdtempSync, rmSync, writeFileSync } from 'node:fs';
+import { mkdirSync, mkdtempSync, readFileSync, rmSync, writeFileSync } from 'node:fs';
 import { tmpdir } from 'node:os';
 import { join } from 'node:path';
 import { fileURLToPath } from 'node:url';
@@ -436,6 +436,29 @@ try {
     await until('armed again', async () => /armed/.test(await words('sound')));
   });
 
+  page = other;
+  await check('the log takes entries by hand and lists what people did', async () => {
+    await page.goto(`${server}#/log`);
+    await until('the name is known on this page too', async () => (await q('operator').inputValue()) === 'M. Alder');
+    await page.locator('[data-q="field-name"]').fill('oil level');
+    await page.locator('[data-q="field-value"]').fill('62,5');
+    await page.locator('[data-q="field-unit"]').fill('mm');
+    await q('entry-send').click();
+    await until('the entry', async () => /entry\s+oil level 62\.5 mm\s+M\. Alder, operator/.test(await q('log').innerText()));
+    assert.equal(await page.locator('[data-q="field-name"]').inputValue(), '', 'ready for the next');
+    await page.locator('[data-q="field-name"]').fill('oil level');
+    await page.locator('[data-q="field-value"]').fill('much');
+    await q('entry-send').click();
+    assert.equal((await q('log').innerText()).match(/oil level/g).length, 1, 'a value that is none is not sent');
+    const text = await q('log').innerText();
+    for (const deed of [/acknowledged\s+\S*unchoke/, /shelved\s+egt_probe_lost: EGT probe lost, for 5m0s\s+M\. Alder, operator\s+known since the morning/, /taken from the shelf/, /mark\s+point one/]) assert.match(text, deed);
+    const run = (await json('api/runs')).find((r) => r.state === 'active');
+    const stored = (await json(`api/runs/${run.id}/log`)).entries.find((e) => e.what === 'entry');
+    assert.deepEqual([stored.name, stored.value, stored.unit, stored.by], ['oil level', 62.5, 'mm', 'M. Alder']);
+    await shoot('log-entries');
+  });
+  page = live;
+
   let ended;
   await check('a run is ended by hand, only after a confirmation', async () => {
     const active = async () => (await json('api/runs')).find((r) => r.state === 'active');
@@ -534,6 +557,35 @@ try {
     await until('the excursions of the run so far', async () => (await words('exceedances')) === '');
     await q('scrub').fill('455');
     await until('all of them', async () => /exceeded: run max at/.test(await words('exceedances')));
+  });
+
+  await check('a run is noted, tagged, found and exported', async () => {
+    const run = (await json('api/runs')).find((r) => r.state === 'ended' && r.id !== ended);
+    await page.goto(`${server}#/runs`);
+    await page.getByRole('button', { name: `Note… run ${run.number}` }).click();
+    await page.locator('[data-q="field-notes"]').fill('rake lost on purpose');
+    await page.locator('[data-q="field-tags"]').fill('rehearsal, rake, rake');
+    await page.locator('[data-q="field-keep"]').selectOption('keep');
+    await q('confirm').click();
+    await until('noted', async () => (await json(`api/runs/${run.id}`)).keep);
+    const noted = await json(`api/runs/${run.id}`);
+    assert.deepEqual([noted.notes, noted.tags], ['rake lost on purpose', ['rehearsal', 'rake']]);
+    await page.locator('h1').click();
+    await page.keyboard.press('/');
+    await page.keyboard.type('on purpose');
+    await until('one run', async () => (await page.locator('.runs tbody tr').count()) === 1 && /rake lost on purpose\s+rehearsal, rake/.test(await page.locator('.runs').innerText()));
+    assert.ok(await page.getByRole('button', { name: /^Delete/ }).isDisabled());
+    await shoot('runs-found');
+    await q('replay').click();
+    await q('show-record').click();
+    await q('export-what').selectOption('events');
+    await q('export-format').selectOption('csv');
+    const saved = page.waitForEvent('download');
+    await q('export').click();
+    const file = await saved;
+    assert.match(file.suggestedFilename(), /\.csv$/);
+    assert.match(readFileSync(await file.path(), 'utf8'), /egt_run_max/);
+    await q('show-display').click();
   });
 
   await check('what stands in for a lost rake and exit plane is named beside the point', async () => {

@@ -7,8 +7,8 @@ const who = (role: Session['role']): Session => ({ name: 'R. Sorrel', role, csrf
 test('what each role may do', () => {
   // The server's own list: an operator acts on alarms, marks, enters, starts and ends
   // runs; all else that changes something is for an engineer.
-  const operator: Deed[] = ['acknowledge', 'reset', 'shelve', 'unshelve', 'mark', 'entry', 'run'];
-  const engineer: Deed[] = ['out-of-service', 'in-service', 'readmit', 'swap', 'config'];
+  const operator: Deed[] = ['acknowledge', 'reset', 'shelve', 'unshelve', 'mark', 'entry', 'run', 'note'];
+  const engineer: Deed[] = ['out-of-service', 'in-service', 'readmit', 'swap', 'config', 'delete'];
   for (const d of operator) assert.deepEqual([refusal(who('viewer'), d), refusal(who('operator'), d), refusal(who('engineer'), d)], ['for an operator', '', ''], d);
   for (const d of engineer) assert.deepEqual([refusal(who('viewer'), d), refusal(who('operator'), d), refusal(who('engineer'), d)], ['for an engineer', 'for an engineer', ''], d);
   assert.equal(refusal(openSession, 'acknowledge'), '', 'a server without users');

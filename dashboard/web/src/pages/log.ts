@@ -57,7 +57,7 @@ export function logPage(d: Display): View {
 
   const mark = form('Mark', 'mark', 'Set mark', [{ name: 'text', label: 'Mark on the time line' }], (run, v) => api.mark(run, v['text'] ?? '', d.operator()));
   const entry = form('Entry by hand', 'entry', 'Enter', [
-    { name: 'name', label: 'Entry by hand: what', hint: 'oil level' }, { name: 'value', label: 'Value', kind: 'number', optional: true }, { name: 'unit', label: 'Unit', optional: true, hint: 'l' }, { name: 'note', label: 'Note', optional: true },
+    { name: 'name', label: 'Entry by hand: what', hint: 'oil level' }, { name: 'value', label: 'Value', kind: 'number', optional: true }, { name: 'unit', label: 'Unit', optional: true, hint: 'mm' }, { name: 'note', label: 'Note', optional: true },
   ], (run, v) => {
     const value = numberOf(v['value'] ?? '');
     return api.entry(run, { name: v['name'] ?? '', value: Number.isNaN(value) ? null : value, unit: v['unit'] ?? '', text: v['note'] ?? '' }, d.operator());

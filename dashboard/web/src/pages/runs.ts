@@ -1,23 +1,31 @@
-// Runs: what is stored, newest first, each with its replay.
+// Runs: what is stored, newest first, each with its replay, notes and tags.
 
 import { api } from '../api';
-import type { Display } from '../context';
+import { askForm, withdraw } from '../ask';
+import { type Display, gate } from '../context';
 import { type View, attr, column, h, text } from '../dom';
 import type { RunSummary } from '../frames';
+import type { Deed } from '../session';
 import { hostNow } from '../state';
 import { dateClock, duration, seconds } from '../time';
 import { bytes } from '../units';
 
 const refreshEvery = 5000; // ms
+const stateWords: Record<string, string> = { active: '● recording', ended: 'ended', interrupted: '▲ interrupted' };
+
+/** Tags as they are typed: separated by commas, each once. */
+export const tagsOf = (s: string): string[] => [...new Set(s.split(',').map((t) => t.trim()).filter(Boolean))];
 
 export function runsPage(d: Display): View {
   const body = h('tbody');
   const trouble = h('p', { class: 'trouble', role: 'status' });
-  const el = h('div', { class: 'page' }, h('h1', {}, 'Runs'), trouble,
-    h('table', { class: 'list runs' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started, UTC', 'By', '>Duration', '>Alarms', 'State', '>Size', 'Notes', 'Replay'].map(column))), body));
+  const find = h('input', { type: 'search', placeholder: 'find: engine, note, tag (key /)', 'aria-label': 'Find a run', 'aria-keyshortcuts': '/', maxlength: '200', 'data-q': 'find', oninput: () => { askedAt = -Infinity; } });
+  const el = h('div', { class: 'page' }, h('h1', {}, 'Runs'), h('div', { class: 'filter', role: 'search' }, find), trouble,
+    h('table', { class: 'list runs' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started, UTC', 'By', '>Duration', '>Alarms', 'State', '>Size', 'Notes and tags', 'Actions'].map(column))), body));
   let askedAt = -Infinity;
   let key = '';
   let growing: { cell: HTMLElement; since: number }[] = [];
+  let gated: { button: HTMLElement; deed: Deed; never: boolean }[] = [];
 
   /** The cell of a run's length; one that is on gets longer. */
   function length(r: RunSummary): HTMLElement {
@@ -26,35 +34,80 @@ export function runsPage(d: Display): View {
     return cell;
   }
 
+  const again = (): void => { askedAt = -Infinity; };
+
+  function note(r: RunSummary): void {
+    askForm(`Run ${r.number} (${r.id})`, [
+      { name: 'notes', label: 'Notes', value: r.notes, optional: true },
+      { name: 'tags', label: 'Tags, separated by commas', value: (r.tags ?? []).join(', '), optional: true },
+      { name: 'keep', label: 'Retention', kind: 'select', options: [['', 'removed when its time comes'], ['keep', 'keep: never removed']], value: r.keep ? 'keep' : '', optional: true },
+    ], 'Save', async (v) => {
+      await api.note(r.id, { notes: v['notes'] ?? '', tags: tagsOf(v['tags'] ?? ''), keep: v['keep'] === 'keep' });
+      again();
+    });
+  }
+
+  function remove(r: RunSummary): void {
+    askForm(`Delete run ${r.number} (${r.id}) of ${dateClock(seconds(r.started))} UTC with its file? It cannot be brought back. Type its number to confirm.`, [
+      { name: 'number', label: 'Number of the run', kind: 'number' }, { name: 'reason', label: 'Reason' },
+    ], 'Delete the run', async (v) => {
+      if (Number(v['number']) !== r.number) throw new Error(`the number of this run is ${r.number}`);
+      await api.remove(r.id, r.number, v['reason'] ?? '');
+      again();
+    });
+  }
+
+  function button(r: RunSummary, word: string, deed: Deed, never: boolean, act: (r: RunSummary) => void): HTMLElement {
+    const b = h('button', { type: 'button', class: 'small', 'data-focus': `${word} ${r.id}`, 'aria-label': `${word} run ${r.number}`, onclick: () => act(r) }, word);
+    gated.push({ button: b, deed, never });
+    return b;
+  }
+
   const row = (r: RunSummary): Node => h('tr', {},
     h('th', { scope: 'row' }, r.id, r.title ? h('div', { class: 'extra' }, r.title) : ''),
     h('td', {}, r.engine), h('td', { class: 'num' }, dateClock(seconds(r.started))), h('td', {}, r.by), length(r),
-    h('td', { class: 'num' }, String(r.alarms)), h('td', {}, r.state === 'active' ? '● recording' : 'ended', r.keep ? h('div', { class: 'extra' }, 'keep') : ''),
+    h('td', { class: 'num' }, String(r.alarms)), h('td', {}, stateWords[r.state] ?? r.state, r.keep ? h('div', { class: 'extra' }, 'keep') : ''),
     h('td', { class: 'num' }, bytes(r.size_bytes)), h('td', {}, r.notes, r.tags && r.tags.length > 0 ? h('div', { class: 'extra' }, r.tags.join(', ')) : ''),
-    h('td', {}, h('a', { class: 'button', href: `#/run/${encodeURIComponent(r.id)}`, 'data-q': 'replay', 'data-state': r.state }, 'Replay')));
+    h('td', {}, h('a', { class: 'button', href: `#/run/${encodeURIComponent(r.id)}`, 'data-focus': `replay ${r.id}`, 'aria-label': `Replay run ${r.number}`, 'data-q': 'replay', 'data-state': r.state }, 'Replay'),
+      h('div', { class: 'asides' }, button(r, 'Note…', 'note', false, note), button(r, 'Delete…', 'delete', r.keep || r.state === 'active', remove))));
+
+  function onKey(e: KeyboardEvent): void {
+    if (e.key !== '/' || /^(INPUT|SELECT|TEXTAREA)$/.test((e.target as HTMLElement).tagName)) return;
+    e.preventDefault();
+    find.focus();
+  }
+  document.addEventListener('keydown', onKey);
 
   return {
     el,
     update(now) {
       for (const g of growing) text(g.cell, duration(hostNow(d.model(), now) - g.since));
+      for (const g of gated) gate(g.button, d, g.deed, now, g.never);
       if (now - askedAt < refreshEvery) return;
       askedAt = now;
-      api.runs().then((list) => {
+      const wanted = find.value.trim();
+      api.runs(wanted).then((list) => {
+        if (wanted !== find.value.trim()) return; // a later answer is on its way
         text(trouble, '');
         const fresh = JSON.stringify(list);
         if (fresh === key) return;
         key = fresh;
         growing = [];
+        gated = [];
         list.sort((a, b) => (a.started < b.started ? 1 : -1));
-        const focused = (document.activeElement as HTMLAnchorElement | null)?.href; // the list is rebuilt under the reader's hands
-        body.replaceChildren(...(list.length > 0 ? list.map(row) : [h('tr', {}, h('td', { colspan: '10', class: 'extra' }, 'No run stored yet. A run begins when the engine is started, or by hand on the Watch page.'))]));
-        if (focused) [...body.querySelectorAll('a')].find((a) => a.href === focused)?.focus();
+        const none = wanted ? 'No run is like that.' : 'No run stored yet. A run begins when the engine is started, or by hand on the Watch page.';
+        const focused = body.contains(document.activeElement) ? (document.activeElement as HTMLElement).dataset['focus'] : undefined; // the list is rebuilt under the reader's hands
+        body.replaceChildren(...(list.length > 0 ? list.map(row) : [h('tr', {}, h('td', { colspan: '10', class: 'extra' }, none))]));
+        if (focused) [...body.querySelectorAll<HTMLElement>('[data-focus]')].find((a) => a.dataset['focus'] === focused)?.focus();
         attr(el, 'data-stale', false);
       }, (e: Error) => {
         text(trouble, `The list could not be read: ${e.message}. Trying again.`);
         attr(el, 'data-stale', true);
       });
     },
-    destroy: () => undefined,
+    destroy() {
+      document.removeEventListener('keydown', onKey);
+      withdraw();
+    },
   };
 }
