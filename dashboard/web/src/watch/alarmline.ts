@@ -63,5 +63,10 @@ export function alarmLine(d: Display): View {
       text(polite, a?.priority === 'warning' && open ? '' : words);
     }
   }
-  return { el, update, destroy: () => undefined };
+  function onKey(e: KeyboardEvent): void {
+    if (e.key.toLowerCase() !== 'a' || /^(INPUT|SELECT|TEXTAREA)$/.test((e.target as HTMLElement).tagName) || e.ctrlKey || e.metaKey || e.altKey) return;
+    button.focus(); // to press it is a second, deliberate step
+  }
+  if (d.acknowledger) document.addEventListener('keydown', onKey);
+  return { el, update, destroy: () => document.removeEventListener('keydown', onKey) };
 }
