@@ -783,6 +783,20 @@ func TestReferred(t *testing.T) {
 		monitor.ReferredThrust: p.V[monitor.GrossThrust] / w12["delta"],
 		monitor.MeasuredThrust: 3900,
 	})
+	// The other rows of W12: θ, δ, and the largest flux of air at sea level, whatever the size.
+	v := &p.V
+	sonic := simple(t)
+	sonic.Gamma, sonic.GasR, sonic.Nozzle.ThroatArea = 1.4, 287.05287, 1
+	flux := sonic.rig().set(map[string]float64{"p7": 101325, "t7": 288.15, "p_exit": 20e3}).step().V[monitor.MassFlow]
+	const pound, foot = 0.45359237, 0.3048 // kg and m, exact
+	for name, got := range map[string]float64{
+		"theta": math.Pow(v[monitor.Speed]/v[monitor.ReferredSpeed], 2), "delta": v[monitor.GrossThrust] / v[monitor.ReferredThrust],
+		"choked_corrected_flux_kg_s_m2": flux, "same_lbm_s_ft2": flux / pound * foot * foot, "same_lbm_s_in2": flux / pound * foot * foot / 144,
+	} {
+		if !near(got, w12[name], 3e-8) {
+			t.Errorf("W12 %s: %.9g, want %.9g", name, got, w12[name])
+		}
+	}
 	// EGT/θ^x, by hand: θ 1.0520562 to the power 0.9 is 1.0467302; 916 K is the mean.
 	b := full(t)
 	b.Stations.EGTExponent = 0.9
