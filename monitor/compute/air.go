@@ -230,38 +230,46 @@ func (c *Computer) balance(s *State, p *monitor.OperatingPoint) {
 //	u²(W − W8) = Σ (a − b)² + rest²,  u²(W/W8) = Σ (a/W − b/W8)² + (rest/W8)²
 func (c *Computer) apart(w, w8 float64, of func(uncertainty.Part) float64) (balance, area float64) {
 	slopes := c.slopes()
+	rests := c.rests(of)
 	for k := range c.flow.terms {
 		t := &c.flow.terms[k]
 		through, u := t.through(&slopes), of(t.u)
 		balance += square((t.flow - through) * u)
 		area += square((t.flow/w - through/w8) * u)
 	}
-	for i := range uncertainty.NumInputs {
-		rest := c.rest(i, &slopes, of)
+	for i, slope := range slopes {
+		if slope == 0 {
+			continue
+		}
+		rest := slope * slope * rests[i]
 		balance += rest
-		if i != uncertainty.ThroatArea {
+		if uncertainty.Input(i) != uncertainty.ThroatArea {
 			area += rest / (w8 * w8)
 		}
 	}
 	return math.Sqrt(balance), math.Sqrt(area)
 }
 
-// rest gives the variance in W8, kg²/s², that an input has beside the terms of the
-// metered flow.
-func (c *Computer) rest(i uncertainty.Input, slopes *[uncertainty.NumInputs]float64, of func(uncertainty.Part) float64) float64 {
-	if slopes[i] == 0 {
-		return 0
+// rests gives the variance that each input of the nozzle's flow has beside the terms of
+// the metered flow, in its unit squared.
+func (c *Computer) rests(of func(uncertainty.Part) float64) (rests [uncertainty.NumInputs]float64) {
+	for i := range rests {
+		rests[i] = square(of(c.doubts[i]))
 	}
-	rest := square(of(c.doubts[i]))
 	for k := range c.flow.terms {
-		if t := &c.flow.terms[k]; t.moves[i] != 0 {
-			rest -= square(t.moves[i] * of(t.u))
+		t := &c.flow.terms[k]
+		for i, by := range t.moves {
+			if by != 0 {
+				rests[i] -= square(by * of(t.u))
+			}
 		}
 	}
-	if rest < 0 { // rounding
-		return 0
+	for i, rest := range rests {
+		if rest < 0 { // rounding
+			rests[i] = 0
+		}
 	}
-	return square(slopes[i]) * rest
+	return rests
 }
 
 // slopes gives ∂W8/∂x of the inputs of the nozzle's flow; 0 for one without uncertainty.

@@ -103,9 +103,10 @@ func (c *Computer) balanceBudget() BudgetOutput {
 		in.Share += by * by / variance
 		in.Parts = append(in.Parts, BudgetPart{Channel: t.channel, What: t.what, Share: by * by / variance})
 	}
+	rests := c.rests(uncertainty.Part.Total)
 	for i := range uncertainty.NumInputs {
-		rest := c.rest(i, &slopes, uncertainty.Part.Total)
-		if rest == 0 {
+		rest := square(slopes[i]) * rests[i]
+		if slopes[i] == 0 || rest == 0 {
 			continue
 		}
 		by := -math.Copysign(math.Sqrt(rest), slopes[i])

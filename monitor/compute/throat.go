@@ -287,11 +287,15 @@ func (c *Computer) throat(s *State, scan *monitor.Scan, p *monitor.OperatingPoin
 	closing := burns || wets
 	var r nozzle.Result
 	var g gas.Mixture
+	var line nozzle.Line
 	still := in.TotalTemperature // static, at the probes
 	for round := range closures {
 		g = c.mixture(f, war+injected)
 		var err error
-		if r, err = c.nozzle.Evaluate(&g, in); err != nil {
+		if line, err = c.nozzle.Line(&g, in); err == nil {
+			r, err = c.nozzle.On(&line, in.TotalPressure, in.BackPressure)
+		}
+		if err != nil {
 			fail(monitor.Cause{Kind: monitor.OutsideGasRange, Channel: -1})
 			return
 		}
@@ -355,7 +359,7 @@ func (c *Computer) throat(s *State, scan *monitor.Scan, p *monitor.OperatingPoin
 	} else {
 		c.choke(s, p, &r)
 	}
-	c.doubt(s, scan, p, &g, in, still)
+	c.doubt(s, scan, p, &g, &line, in, still)
 }
 
 // mixture gives the gas of the configuration; a composition that the gas data

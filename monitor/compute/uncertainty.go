@@ -285,11 +285,11 @@ func (c *Computer) uncertainties(s *State, scan *monitor.Scan, p *monitor.Operat
 }
 
 // doubt carries the uncertainties through the nozzle into the operating point.
-func (c *Computer) doubt(s *State, scan *monitor.Scan, p *monitor.OperatingPoint, g *gas.Mixture, in nozzle.Inputs, still float64) {
+func (c *Computer) doubt(s *State, scan *monitor.Scan, p *monitor.OperatingPoint, g *gas.Mixture, line *nozzle.Line, in nozzle.Inputs, still float64) {
 	c.doubts = c.uncertainties(s, scan, p, still)
 	u := &c.doubts
 	point := uncertainty.Point{
-		Nozzle: c.nozzle, Inputs: in, Gas: g, Fuel: c.cfg.Fuel,
+		Nozzle: c.nozzle, Inputs: in, Gas: g, Fuel: c.cfg.Fuel, Line: line,
 		FuelAirRatio: p.V[monitor.FuelAirRatio], HumidityRatio: p.V[monitor.WaterAirRatio],
 	}
 	if c.cfg.Gamma > 0 {

@@ -405,7 +405,14 @@ func example(tb testing.TB) *builder {
 		egt.Band{Name: "run_over", Kind: egt.KindRun, Limit: 1030, Deadband: 5, Rearm: 2 * second})
 	for i := range b.Channels {
 		b.Channels[i].MaxRate, b.Channels[i].Stuck, b.Channels[i].Codes = 1e9, 10*second, []float64{-9999}
-		b.Channels[i].Uncertainty = calib.Uncertainty{FullScale: 1e-8, Reading: 5e-4, Fixed: 1, Random: 0.5, Stated: true}
+		u := calib.Uncertainty{Reading: 5e-4, Fixed: 1, Random: 0.5, Stated: true}
+		switch b.Channels[i].ID {
+		case "fuel_flow":
+			u.Fixed, u.Random = 1e-3, 2e-4
+		case "humidity":
+			u.Fixed, u.Random = 0.02, 0
+		}
+		b.Channels[i].Uncertainty = u
 	}
 	n := &b.Nozzle
 	n.AreaBasis, n.ReferenceTemperature, n.ExpansionCoefficient, n.MetalLag = 1, 293.15, 15e-6, 20*second

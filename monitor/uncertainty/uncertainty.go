@@ -131,6 +131,7 @@ type Point struct {
 	Fuel          gas.Fuel // the fuel that Gas is made of; the zero value for a gas that does not depend on f and humidity
 	FuelAirRatio  float64
 	HumidityRatio float64
+	Line          *nozzle.Line // of Nozzle, Gas and Inputs where it is at hand; nil = made here
 }
 
 // Estimate is an output with its uncertainty.
@@ -217,11 +218,15 @@ func Evaluate(p *Point, u *Inputs) (r Result, err error) {
 		}
 	}
 	var s propagation
-	line, err := p.Nozzle.Line(p.Gas, p.Inputs)
-	if err != nil {
-		return r, err
+	line := p.Line
+	if line == nil {
+		own, err := p.Nozzle.Line(p.Gas, p.Inputs)
+		if err != nil {
+			return r, err
+		}
+		line = &own
 	}
-	if err := s.pressures(p, &line, &size); err != nil {
+	if err := s.pressures(p, line, &size); err != nil {
 		return r, err
 	}
 	if err := s.gas(p, &size); err != nil {
