@@ -214,7 +214,7 @@ func (f *frame) fillHealth(s *State) {
 	for i := range s.Align.Sources {
 		src := &s.Align.Sources[i]
 		age := s.Host - src.Host
-		if age > silent && age <= forgotten {
+		if s.silence(src) > silent && age <= forgotten {
 			lost++
 		}
 		if src.Skewed && age <= silent {

@@ -216,6 +216,36 @@ func TestAlarmActions(t *testing.T) {
 	}
 }
 
+// A source is not silent because nobody listened. (Common practice, no source.)
+func TestRestartSilencesNoSource(t *testing.T) {
+	for _, tt := range []struct {
+		name          string
+		silent        int64 // before the daemon goes
+		before, after string
+		data          bool // after it is back
+	}{
+		{name: "live before and after", data: true},
+		{name: "silent before and after", silent: 3 * second, before: "source_lost unacknowledged"},
+		{name: "live before, silent after", after: "source_lost unacknowledged"},
+	} {
+		t.Run(tt.name, func(t *testing.T) {
+			b := newBed(t)
+			b.play(running, 3*second)
+			b.wait(tt.silent)
+			b.expect(OutcomeAlarm, tt.before)
+			b.r.Host += 60 * second
+			b.record(ingest.KindBoot, `{"epoch":2}`)
+			b.expect(OutcomeAlarm, "")
+			if tt.data {
+				b.play(running, 3*second)
+			} else {
+				b.wait(3 * second)
+			}
+			b.expect(OutcomeAlarm, tt.after)
+		})
+	}
+}
+
 // The daemon's own state has rules that speak without any scan, by host time.
 func TestHealth(t *testing.T) {
 	b := newBed(t)

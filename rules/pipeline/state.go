@@ -26,6 +26,8 @@ type State struct {
 	Compute   compute.State
 	Rules     rules.State
 	Health    Health
+	Left      int64 // host time of the last record before the last boot
+	Booted    int64 // host time of the last boot
 	Run       monitor.Run
 	RunActive bool
 	Runs      uint64   // runs ever
@@ -39,6 +41,15 @@ type State struct {
 }
 
 const requestsKept = 64
+
+// silence gives for how long a source has been silent, ns of host time. While the daemon
+// was away nobody was, unless silent already when it went.
+func (s *State) silence(src *align.SourceState) int64 {
+	if s.Left-src.Host > silent {
+		return s.Host - src.Host
+	}
+	return s.Host - max(src.Host, s.Booted)
+}
 
 // Encode gives the state as bytes. A full checkpoint carries the hashes by which
 // copies of messages are recognised; another leaves them to the records before.

@@ -206,10 +206,11 @@ func (m *Machine) Step(s *State, r *ingest.Record) []Outcome {
 	if r.Seq != s.Seq+1 && s.Seq != 0 && r.Kind != ingest.KindGap {
 		panic(fmt.Sprintf("pipeline: record %d follows record %d", r.Seq, s.Seq))
 	}
+	before := s.Host
 	s.Seq, s.Host = r.Seq, r.Host
 	switch r.Kind {
 	case ingest.KindBoot:
-		m.boot(s, r)
+		m.boot(s, r, before)
 	case ingest.KindConfig:
 		m.config(s, r)
 	case ingest.KindMessage:
@@ -266,14 +267,16 @@ func (m *Machine) emit(s *State, o Outcome) {
 	m.outs = append(m.outs, o)
 }
 
-func (m *Machine) boot(s *State, r *ingest.Record) {
+// boot begins a life of the process; before is the host time of the last record of the
+// life before.
+func (m *Machine) boot(s *State, r *ingest.Record, before int64) {
 	var b Boot
 	if json.Unmarshal(r.Payload, &b) == nil && b.Epoch > s.Epoch {
 		s.Epoch = b.Epoch
 	} else {
 		s.Epoch++
 	}
-	s.Health = Health{}
+	s.Health, s.Left, s.Booted = Health{}, before, r.Host
 	if m.prog != nil {
 		m.prog.align.Boot(&s.Align, r.Host)
 	}
@@ -587,7 +590,7 @@ func (m *Machine) fillStatus(s *State, st *Status) {
 		}
 		ss := SourceStatus{
 			Topic: src.Topic, Age: s.Host - src.Host, Messages: src.Messages, Skew: src.Skew,
-			Skewed: src.Skewed, Alive: s.Host-src.Host <= silent,
+			Skewed: src.Skewed, Alive: s.silence(src) <= silent,
 		}
 		if src.Skewed {
 			st.Skew = ss.Skew
