@@ -54,6 +54,7 @@ const (
 	settle       = int64(2e9)         // host time without a sample of the past that ends a backlog, or of an expected channel after a connect
 	gatherFor    = int64(10e9)        // host time after a connect for which live sources wait for those behind
 	suspectFor   = int64(3e9)         // host time over which a lagging clock is compared with ours
+	jumpFor      = int64(150e6)       // the same for a clock that jumped back while its source was live
 	neverSet     = int64(946684800e9) // 2000-01-01: a clock before it was never set
 	largest      = 1e290              // a raw value beyond it is none; below it no mean overflows
 )
@@ -85,6 +86,7 @@ type SourceState struct {
 	Skewed       bool  // clock not believed: host time is used
 	SuspectHost  int64 // start of the comparison, 0 = none
 	SuspectEvent int64
+	Jumped       bool // the comparison began with a jump back
 }
 
 // State is all that alignment depends on besides the record and the
@@ -372,7 +374,9 @@ func (a *Aligner) Read(r *ingest.Record, seen bool, fn func(sm *ingest.Sample, c
 // eventTime gives the time at which a sample counts: its own, or host time when
 // the clock of its source cannot be believed. A clock ahead of ours is wrong. A
 // clock behind is a backlog if it catches up with ours, and wrong if it runs in
-// step with ours: that takes suspectFor to tell.
+// step with ours: that takes suspectFor to tell. If it jumped back, and nothing live
+// comes any more, it takes jumpFor: a backlog goes on from where its source was cut
+// off, and nobody should be blind for seconds because a clock was set.
 func (a *Aligner) eventTime(s *State, src *SourceState, t, host int64) int64 {
 	src.Skew = host - max(t, 0)
 	limit := a.lag(src)
@@ -386,7 +390,8 @@ func (a *Aligner) eventTime(s *State, src *SourceState, t, host int64) int64 {
 	case src.Skewed:
 	case src.SuspectHost == 0:
 		src.SuspectHost, src.SuspectEvent = host, t
-	case host-src.SuspectHost >= suspectFor:
+		src.Jumped = s.Backlog == 0 && t < src.Event-limit
+	case host-src.SuspectHost >= suspectFor, src.Jumped && host-src.SuspectHost >= jumpFor:
 		pace := float64(t-src.SuspectEvent) / float64(host-src.SuspectHost)
 		src.Skewed = pace < 1.5
 		src.SuspectHost, src.SuspectEvent = host, t

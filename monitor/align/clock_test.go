@@ -120,6 +120,70 @@ func TestWrongClock(t *testing.T) {
 	}
 }
 
+// A clock that jumps back under a live source blinds nobody for longer than a channel
+// is held. What was stored by a publisher and comes beside live samples, or after a
+// silence, is no jump. (Expectations are those of the package comment.)
+func TestClockJumpsBack(t *testing.T) {
+	send := func(b *bed, at, clock int64) {
+		b.to(at + 3*ms)
+		b.send(fast, pack(clock, "a", 1.0, "b", 1.0))
+	}
+	b := newBed(t, rig(t))
+	for at := epoch; at < epoch+20*second; at += period {
+		clock := at
+		if at >= epoch+10*second {
+			clock -= 600 * second
+		}
+		send(b, at, clock)
+	}
+	blind := 0
+	rows := b.between(epoch+second, epoch+19*second)
+	for i := range rows {
+		if !rows[i].Quality[0].Usable() {
+			blind++
+		}
+	}
+	if blind > 0 || !b.s.Sources[0].Skewed {
+		t.Errorf("blind in %d scans of %d after a jump, source %+v", blind, len(rows), b.s.Sources[0])
+	}
+	b.check()
+
+	for _, tt := range []struct {
+		name    string
+		silence int64
+		live    bool // live samples come in between
+		pace    int64
+	}{
+		{"stored samples beside live ones", 0, true, 1},
+		{"stored samples in haste", 0, false, 5},
+		{"what a cut line kept, slowly", 15 * second, false, 1},
+	} {
+		b := newBed(t, rig(t))
+		at := epoch
+		for ; at < epoch+10*second; at += period {
+			send(b, at, at)
+		}
+		stored := at - 60*second
+		if tt.silence > 0 {
+			stored = at
+		}
+		at += tt.silence
+		for end := at + 2*second; at < end; at += period {
+			for range tt.pace {
+				send(b, at, stored)
+				stored += period
+			}
+			if tt.live {
+				send(b, at, at)
+			}
+		}
+		if n := b.s.Counters[ingest.ReasonPast]; n != 0 {
+			t.Errorf("%s: %d samples are of a wrong clock", tt.name, n)
+		}
+		b.check()
+	}
+}
+
 // A clock within the bounds is believed, and neither its samples nor those of
 // the others are lost: not after a connect either.
 func TestToleratedClock(t *testing.T) {
