@@ -258,6 +258,8 @@ func appendStatus(dst []byte, st *pipeline.Status) []byte {
 	dst = instant(dst, "not_recording_since", st.Health.NotRecordingSince)
 	dst = truth(dst, "input_path", !st.Health.InputPathDeaf)
 	dst = truth(dst, "clock", st.Skew == 0)
+	dst = failure(dst, "webhook", &st.Health.Webhook)
+	dst = failure(dst, "database", &st.Health.Database)
 	dst = number(dst, "clock_skew_s", seconds(st.Skew))
 	dst = truth(dst, "run_active", st.RunActive)
 	dst = count(dst, "rules_unknown", int64(st.Unknown))
@@ -283,6 +285,21 @@ func appendStatus(dst []byte, st *pipeline.Status) []byte {
 		dst = count(dst, r.String(), int64(st.Counters[r]))
 	}
 	return append(dst, '}')
+}
+
+// failureJSON says that a part does not work.
+type failureJSON struct {
+	Since  string  `json:"since"`
+	Why    string  `json:"why"`
+	Behind float64 `json:"behind"`
+}
+
+// failure appends null while a part works.
+func failure(dst []byte, key string, p *pipeline.Part) []byte {
+	if p.Since == 0 {
+		return append(name(dst, key), "null"...)
+	}
+	return member(dst, key, failureJSON{rfc3339(p.Since), p.Why, p.Behind})
 }
 
 // runJSON is a run as frames and HTTP show it.

@@ -25,7 +25,7 @@ var free = []string{"/", "GET /healthz", "GET /api/session", "POST /api/session"
 // forOperator lists what changes something and an operator may. Everything else that
 // changes something is for an engineer.
 var forOperator = []string{
-	"POST /api/alarms/{id}/{action}", "POST /api/rigs/{rig}/runs", "POST /api/runs/{id}/marks", "POST /api/runs/{id}/entries",
+	"POST /api/alarms/{id}/{action}", "POST /api/rigs/{rig}/runs", "POST /api/runs/{id}/marks", "POST /api/runs/{id}/entries", "PATCH /api/runs/{id}",
 	"PATCH /api/runs/{id}",
 }
 

@@ -21,10 +21,11 @@ type Equipment struct {
 
 // Groups of the default rules: one cause, one first alarm.
 const (
-	groupEGT     = "egt"     // over-temperature
-	groupSources = "sources" // what a lost publisher takes along
-	groupNozzle  = "nozzle"
-	groupFlame   = "flame"
+	groupEGT      = "egt"     // over-temperature
+	groupSources  = "sources" // what a lost publisher takes along
+	groupNozzle   = "nozzle"
+	groupFlame    = "flame"
+	groupDelivery = "delivery" // what takes alarms and values to others
 )
 
 // egtWorse is how much hotter an acknowledged over-temperature has to become to ask
@@ -290,6 +291,20 @@ func daemonRules() []Rule {
 			Text:     "A source's clock differs by {clock_skew_s:s.1}: receive time is used for its data.",
 			Caution:  "Times of its data are those of arrival: delays in the network shift them.",
 			Response: "Facility procedure for time synchronisation.",
+		},
+		{
+			Name: "webhook_not_delivering", When: "not health.webhook", Priority: Advisory, OnDelay: 5 * second, OffDelay: second, Group: groupDelivery,
+			Title:    "Webhook not delivering",
+			Text:     "The site's receiver does not take alarms: {webhook_waiting:.0} wait. The Alarms page and MQTT have them.",
+			Caution:  "Whoever relies on that receiver for awareness gets nothing new. What waits is sent in order once it takes alarms again.",
+			Response: "Facility procedure for lost alarm forwarding.",
+		},
+		{
+			Name: "database_behind", When: "not health.database", Priority: Advisory, OnDelay: 10 * second, OffDelay: 5 * second, Group: groupDelivery,
+			Title:    "Site database behind",
+			Text:     "The site's database does not take what is recorded: it is {database_lag_s:s.0} behind. The data folder has everything.",
+			Caution:  "Displays that read the site's database show old values. What it lacks is written once it works again.",
+			Response: "Facility procedure for a lost site database.",
 		},
 	}
 }

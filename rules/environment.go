@@ -108,7 +108,8 @@ type Channel struct {
 //	choke_armed choke_marginal lit run_active steady       true or false
 //	egt_probes_used egt_probes_lost rake_probes_used rake_probes_lost
 //	health.recording health.input_path health.clock health.sources   true = works
-//	sources_lost data_age_s clock_skew_s
+//	health.webhook health.database                         true = works, or there is none
+//	sources_lost data_age_s clock_skew_s webhook_waiting database_lag_s
 //	channel.<id> quality.<id> usable.<id>                  SI value, quality, may be used
 //	egt.<band>.over .exceeded .elapsed_s .remaining_s
 func StandardNames(channels []Channel, bands []string) []Name {
@@ -152,6 +153,7 @@ func StandardNames(channels []Channel, bands []string) []Name {
 		daemon(flag("health.recording")), daemon(flag("health.input_path")), daemon(flag("health.clock")),
 		daemon(flag("health.sources")), daemon(count("sources_lost")),
 		daemon(seconds("data_age_s")), daemon(seconds("clock_skew_s")),
+		daemon(flag("health.webhook")), daemon(flag("health.database")), daemon(count("webhook_waiting")), daemon(seconds("database_lag_s")),
 	)
 	for i := range channels {
 		ch := &channels[i]

@@ -39,6 +39,7 @@ type watchOptions struct {
 	rehearse                           bool
 	play                               rehearseFlags
 	influx                             influxOptions
+	webhook                            webhookOptions
 	guard                              guardOptions
 	retainDays                         int
 	retainGB                           float64
@@ -60,6 +61,7 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 	fs.BoolVar(&o.rehearse, "rehearse", false, "let a simulated rig publish a test to the broker; the next flags say which")
 	o.play = newRehearseFlags(fs)
 	o.influx.flags(fs)
+	o.webhook.flags(fs)
 	fs.IntVar(&o.retainDays, "retain-days", 0, "remove runs that ended longer ago, except those marked keep (default: none)")
 	fs.Float64Var(&o.retainGB, "retain-gb", 0, "remove the oldest runs until the rest takes no more GB (10^9 bytes), except those marked keep (default: none)")
 	fs.DurationVar(&o.limit, "for", 0, "stop after this time (default: on interrupt)")
@@ -138,6 +140,7 @@ type watcher struct {
 	client *mqtt.Client
 	loop   *watch.Loop
 	site   *siteDatabase // nil when the site has none
+	hook   *receiver     // nil when the site has none
 	guard  *guard        // nil when nobody is asked who they are
 }
 
@@ -185,6 +188,9 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	if w.site != nil {
 		core.ChunkFor = watch.SinkChunkFor
 	}
+	if w.hook, err = w.opt.webhook.open(w.store, w.opt.data, cfg.Rig.ID, w.log); err != nil {
+		return err
+	}
 	epoch, err := watch.NextEpoch(w.opt.data, core.State.Epoch)
 	if err != nil {
 		return err
@@ -207,6 +213,9 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 		Shown: func(outs []pipeline.Outcome, m *pipeline.Machine, s *pipeline.State) {
 			hub.Publish(outs, m, s)
 			outbox.Take(outs, m, s)
+			if w.hook != nil {
+				w.hook.transitions.Show(w.hook.sender, outs, s)
+			}
 		},
 	})
 	server := &http.Server{
@@ -241,6 +250,10 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	if w.site != nil {
 		sideParts.Go(func() { w.site.run(sideCtx) })
 	}
+	if w.hook != nil {
+		sideParts.Go(func() { w.hook.run(sideCtx) })
+	}
+	sideParts.Go(func() { w.watchParts(sideCtx) })
 	if w.guard != nil {
 		sideParts.Go(func() { w.guard.run(sideCtx) })
 	}
@@ -376,7 +389,7 @@ func (w *watcher) report(ctx context.Context) {
 			delete(deaf, e.Session)
 		}
 		if (before == 0) != (len(deaf) == 0) && err == nil {
-			err = w.loop.Health(ctx, pipeline.PartInputPath, len(deaf) == 0, e.String())
+			err = w.loop.Health(ctx, pipeline.HealthChange{Part: pipeline.PartInputPath, OK: len(deaf) == 0, Why: e.String()})
 		}
 		if err != nil {
 			return
@@ -429,6 +442,9 @@ func (w *watcher) announce(addr string) {
 	if w.opt.guard.cert != "" {
 		scheme = "https"
 	}
+	if w.hook != nil {
+		dir += "\n  webhook " + w.hook.sender.Where()
+	}
 	topics := make([]string, len(w.cfg.Align.Inputs))
 	for i, in := range w.cfg.Align.Inputs {
 		topics[i] = in.Filter
@@ -449,6 +465,9 @@ func (w *watcher) metrics() []dashboard.Metric {
 	var out []dashboard.Metric
 	if w.site != nil {
 		out = w.site.metrics()
+	}
+	if w.hook != nil {
+		out = append(out, w.hook.metrics()...)
 	}
 	for _, s := range w.client.Stats() {
 		labels := map[string]string{"filter": s.Filter}

@@ -397,11 +397,13 @@ func (f *File) Events(ctx context.Context, from, to int64, fn func(*Event) error
 
 // Follow calls chunk and event for what was committed after the record after
 // and up to the record upto, each in the order of the commits: this is how a
-// sink goes on from the seq it has stored. An error of either ends the reading
-// and is returned as it is; damage gives ErrCorrupt.
+// sink goes on from the seq it has stored. Without chunk none are read. An error of
+// either ends the reading and is returned as it is; damage gives ErrCorrupt.
 func (f *File) Follow(ctx context.Context, after, upto uint64, chunk func(*Chunk) error, event func(*Event) error) error {
-	if err := f.chunksBySeq(after, upto).each(ctx, f, func(r *row[Chunk]) error { return chunk(&r.v) }); err != nil {
-		return err
+	if chunk != nil {
+		if err := f.chunksBySeq(after, upto).each(ctx, f, func(r *row[Chunk]) error { return chunk(&r.v) }); err != nil {
+			return err
+		}
 	}
 	return f.eventsBySeq(after, upto).each(ctx, f, func(r *row[Event]) error { return event(&r.v) })
 }

@@ -57,6 +57,10 @@ const (
 	fromRecording
 	fromInputPath
 	fromClock
+	fromWebhook
+	fromDatabase
+	fromWebhookWaiting
+	fromDatabaseLag
 	fromSources
 	fromSourcesLost
 	fromDataAge
@@ -70,6 +74,7 @@ var plainSources = map[string]source{
 	"egt_probes_used": fromEGTUsed, "rake_probes_used": fromRakeUsed,
 	"egt_probes_lost": fromEGTLost, "rake_probes_lost": fromRakeLost,
 	"health.recording": fromRecording, "health.input_path": fromInputPath, "health.clock": fromClock,
+	"health.webhook": fromWebhook, "health.database": fromDatabase, "webhook_waiting": fromWebhookWaiting, "database_lag_s": fromDatabaseLag,
 	"health.sources": fromSources, "sources_lost": fromSourcesLost, "data_age_s": fromDataAge, "clock_skew_s": fromSkew,
 }
 
@@ -203,7 +208,8 @@ func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 			f.Numbers[it.slot] = float64(len(f.egt) - int(p.EGTProbesUsed))
 		case fromRakeLost:
 			f.Numbers[it.slot] = float64(len(f.rake) - int(p.RakeProbesUsed))
-		case fromRunActive, fromRecording, fromInputPath, fromClock, fromSources, fromSourcesLost, fromDataAge, fromSkew:
+		case fromRunActive, fromRecording, fromInputPath, fromClock, fromSources, fromSourcesLost, fromDataAge, fromSkew,
+			fromWebhook, fromDatabase, fromWebhookWaiting, fromDatabaseLag:
 		}
 	}
 }
@@ -231,6 +237,14 @@ func (f *frame) fillHealth(s *State) {
 			f.Bools[it.slot] = rules.TriOf(!s.Health.InputPathDeaf)
 		case fromClock:
 			f.Bools[it.slot] = rules.TriOf(skew == 0)
+		case fromWebhook:
+			f.Bools[it.slot] = rules.TriOf(s.Health.Webhook.Since == 0)
+		case fromDatabase:
+			f.Bools[it.slot] = rules.TriOf(s.Health.Database.Since == 0)
+		case fromWebhookWaiting:
+			f.Numbers[it.slot] = s.Health.Webhook.behind()
+		case fromDatabaseLag:
+			f.Numbers[it.slot] = s.Health.Database.behind()
 		case fromSources:
 			f.Bools[it.slot] = rules.TriOf(lost == 0)
 		case fromSourcesLost:

@@ -84,6 +84,34 @@ type Health struct {
 	NotRecordingSince int64 // host time, 0 = recording
 	InputPathDeaf     bool
 	ClockStepped      int64 // sum of wall-clock steps since boot, ns
+	Webhook           Part
+	Database          Part
+}
+
+// Part tells how a part stands that takes what is recorded to others.
+type Part struct {
+	Since  int64   // host time since when it does not work, ns UTC; 0 = it works
+	Why    string  // it does not
+	Behind float64 // of a webhook: transitions that wait; of a database: s; 0 = not known
+}
+
+func (p *Part) change(h *HealthChange, host int64) {
+	if h.OK {
+		*p = Part{}
+		return
+	}
+	if p.Since == 0 {
+		p.Since = host
+	}
+	p.Why, p.Behind = h.Why, h.Behind
+}
+
+// behind gives what a rule reads: 0 while the part works, NaN where it is not known.
+func (p *Part) behind() float64 {
+	if p.Since != 0 && p.Behind == 0 {
+		return math.NaN()
+	}
+	return p.Behind
 }
 
 // Status is the state of the data path, each second of host time.

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"reflect"
+	"slices"
 	"strings"
 	"testing"
 
@@ -329,6 +330,59 @@ func TestActionsWithoutData(t *testing.T) {
 	b.wait(2 * second)
 	if a, _ = b.alarm("source_lost"); a.State.String() != "unacknowledged" {
 		t.Errorf("after 11 of 10 s it is %v", a.State)
+	}
+}
+
+// Parts that take alarms and values to others tell by health records since when they
+// do not, why and how far they are behind; a rule sees it, and a boot forgets it.
+func TestHealthOfParts(t *testing.T) {
+	b := newBed(t)
+	b.play(running, second)
+	frame := func(name string) (number float64, works rules.Tri) {
+		names := Names(&b.m.prog.cfg)
+		b.m.prog.frame.fillHealth(b.s)
+		slot := slices.IndexFunc(names, func(n rules.Name) bool { return n.Name == name })
+		return b.m.prog.frame.Numbers[slot], b.m.prog.frame.Bools[slot]
+	}
+	for _, tt := range []struct {
+		record  string
+		part    func() *Part
+		flag    string
+		number  string
+		why     string
+		behind  float64
+		unknown bool // how far it is behind
+	}{
+		{`{"part":"webhook","ok":false,"why":"no route","behind":2}`, func() *Part { return &b.s.Health.Webhook }, "health.webhook", "webhook_waiting", "no route", 2, false},
+		{`{"part":"database","ok":false,"why":"status 401"}`, func() *Part { return &b.s.Health.Database }, "health.database", "database_lag_s", "status 401", 0, true},
+	} {
+		if n, works := frame(tt.number); n != 0 || works != rules.Unknown {
+			t.Errorf("%s is %g before", tt.number, n)
+		}
+		if _, works := frame(tt.flag); works != rules.True {
+			t.Errorf("%s is %v before", tt.flag, works)
+		}
+		b.record(ingest.KindHealth, tt.record)
+		since := b.r.Host
+		b.wait(second)
+		b.record(ingest.KindHealth, tt.record)
+		if p := tt.part(); p.Since != since || p.Why != tt.why || p.Behind != tt.behind {
+			t.Errorf("%s: %+v", tt.record, *p)
+		}
+		if n, _ := frame(tt.number); math.IsNaN(n) != tt.unknown || !tt.unknown && n != tt.behind {
+			t.Errorf("%s is %g", tt.number, n)
+		}
+		if _, works := frame(tt.flag); works != rules.False {
+			t.Errorf("%s is %v", tt.flag, works)
+		}
+	}
+	b.record(ingest.KindHealth, `{"part":"webhook","ok":true}`)
+	if b.s.Health.Webhook != (Part{}) || b.s.Health.Database == (Part{}) {
+		t.Errorf("%+v", b.s.Health)
+	}
+	b.record(ingest.KindBoot, `{"epoch":2}`)
+	if b.s.Health != (Health{}) {
+		t.Errorf("after a boot %+v", b.s.Health)
 	}
 }
 

@@ -50,15 +50,18 @@ type Boot struct {
 
 // HealthChange is the payload of a health record.
 type HealthChange struct {
-	Part string `json:"part"` // PartRecording or PartInputPath
-	OK   bool   `json:"ok"`
-	Why  string `json:"why"`
+	Part   string  `json:"part"` // one of the Part constants
+	OK     bool    `json:"ok"`
+	Why    string  `json:"why"`
+	Behind float64 `json:"behind,omitempty"` // of a webhook: transitions that wait; of a database: s; 0 = not known
 }
 
 // The parts of the daemon that a health record is about.
 const (
 	PartRecording = "recording"
 	PartInputPath = "input_path"
+	PartWebhook   = "webhook"
+	PartDatabase  = "database"
 )
 
 // ClockStep is the payload of a clock record.
@@ -330,6 +333,10 @@ func (m *Machine) health(s *State, r *ingest.Record) {
 		s.Health.NotRecordingSince = 0
 	case h.Part == PartRecording && s.Health.NotRecordingSince == 0:
 		s.Health.NotRecordingSince = r.Host
+	case h.Part == PartWebhook:
+		s.Health.Webhook.change(&h, r.Host)
+	case h.Part == PartDatabase:
+		s.Health.Database.change(&h, r.Host)
 	}
 }
 

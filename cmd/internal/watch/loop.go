@@ -444,8 +444,8 @@ func (l *Loop) health(part string, ok bool, why string) {
 }
 
 // Health gives the loop the news that a part failed or works again.
-func (l *Loop) Health(ctx context.Context, part string, ok bool, why string) error {
-	text, err := json.Marshal(pipeline.HealthChange{Part: part, OK: ok, Why: why})
+func (l *Loop) Health(ctx context.Context, h pipeline.HealthChange) error {
+	text, err := json.Marshal(h)
 	if err != nil {
 		return fmt.Errorf("health: %w", err)
 	}
