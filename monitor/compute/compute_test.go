@@ -790,7 +790,7 @@ func TestReferred(t *testing.T) {
 	flux := sonic.rig().set(map[string]float64{"p7": 101325, "t7": 288.15, "p_exit": 20e3}).step().V[monitor.MassFlow]
 	const pound, foot = 0.45359237, 0.3048 // kg and m, exact
 	for name, got := range map[string]float64{
-		"theta": math.Pow(v[monitor.Speed]/v[monitor.ReferredSpeed], 2), "delta": v[monitor.GrossThrust] / v[monitor.ReferredThrust],
+		"theta": square(v[monitor.Speed] / v[monitor.ReferredSpeed]), "delta": v[monitor.GrossThrust] / v[monitor.ReferredThrust],
 		"choked_corrected_flux_kg_s_m2": flux, "same_lbm_s_ft2": flux / pound * foot * foot, "same_lbm_s_in2": flux / pound * foot * foot / 144,
 	} {
 		if !near(got, w12[name], 3e-8) {
