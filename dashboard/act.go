@@ -226,6 +226,49 @@ func (s *Server) swap(w http.ResponseWriter, r *http.Request) error {
 	})
 }
 
+// configBody is the body that takes files into force.
+type configBody struct {
+	By         string `json:"by"`
+	ApprovedBy string `json:"approved_by"`
+	Reason     string `json:"reason"`
+	RequestID  string `json:"request_id"`
+}
+
+// reload takes the rig and rule files as they are now into force.
+func (s *Server) reload(w http.ResponseWriter, r *http.Request) error {
+	var in configBody
+	if err := command(w, r, &in); err != nil {
+		return err
+	}
+	if err := s.ask(r.Context(), r.PathValue("rig"), func(*pipeline.Config, *pipeline.Machine, *pipeline.State) {}); err != nil {
+		return err
+	}
+	if s.cfg.Reload == nil {
+		return notFound("this watch has no rig file to read again")
+	}
+	who, err := s.actor(r, in.By)
+	if err != nil {
+		return err
+	}
+	if callerOf(r).open {
+		who.Name = in.By // without one, who the files name
+	}
+	res, faults, err := s.cfg.Reload(r.Context(), pipeline.Action{
+		By: who.Name, Role: who.Role.String(), ApprovedBy: in.ApprovedBy, Reason: in.Reason, RequestID: in.RequestID,
+	})
+	switch {
+	case err != nil:
+		return silent(err)
+	case len(faults) > 0:
+		return &faulty{problem{http.StatusUnprocessableEntity, "the files have faults; what was in force stays"}, faults}
+	case errors.Is(res.Err, pipeline.ErrSamePerson):
+		return badRequest("%v", res.Err)
+	case res.Err != nil:
+		return &problem{http.StatusConflict, res.Err.Error()}
+	}
+	return reply(w, http.StatusAccepted, placeJSON{res.Epoch, res.N})
+}
+
 // placeJSON is where among the outcomes something came about.
 type placeJSON struct {
 	Epoch uint64 `json:"epoch"`

@@ -53,7 +53,10 @@ type Config struct {
 	Parse func(bundle []byte) (pipeline.Config, error) // for stored runs
 	Build string
 	Log   *slog.Logger
-	Extra func() []Metric // further metrics, of parts that the server does not know
+	// Reload takes the rig and rule files as they are now into force, for who a says.
+	// It gives what is wrong with them; nil = the files cannot be read here.
+	Reload func(ctx context.Context, a pipeline.Action) (pipeline.Reply, []Fault, error)
+	Extra  func() []Metric // further metrics, of parts that the server does not know
 
 	Access   *access.Gate // who may come in; nil: nobody is asked who they are
 	OpenRole access.Role  // of everybody where Access is nil; the zero value is Operator
@@ -106,6 +109,7 @@ func (s *Server) routes() map[string]handler {
 		"POST /api/rigs/{rig}/readmit":        s.readmit,
 		"GET /api/alarms/figures":             s.alarmFigures,
 		"GET /api/runs/{id}/alarm-figures":    s.runFigures,
+		"POST /api/rigs/{rig}/config":         s.reload,
 		"GET /api/alarms":                     s.alarms,
 		"POST /api/alarms/{id}/{action}":      s.alarmAction,
 		"GET /api/runs":                       s.runs,
@@ -181,6 +185,19 @@ type problem struct {
 	detail string
 }
 
+// Fault is one thing that is wrong with a rig or rule file.
+type Fault struct {
+	At      string `json:"at"` // file:line:column
+	Message string `json:"message"`
+	Hint    string `json:"hint"` // what to do
+}
+
+// faulty is the problem of files that cannot come into force.
+type faulty struct {
+	problem
+	faults []Fault
+}
+
 func (p *problem) Error() string { return p.detail }
 
 func badRequest(format string, args ...any) error {
@@ -203,21 +220,26 @@ type problemJSON struct {
 	Status   int    `json:"status"`
 	Detail   string `json:"detail"`
 	Instance string `json:"instance"`
+
+	Faults []Fault `json:"faults,omitempty"` // of rig and rule files
 }
 
 // fail answers with an error as application/problem+json.
 func (s *Server) fail(w http.ResponseWriter, r *http.Request, err error) {
 	var p *problem
-	if !errors.As(err, &p) {
+	var faults []Fault
+	if f, ok := errors.AsType[*faulty](err); ok {
+		p, faults = &f.problem, f.faults
+	} else if !errors.As(err, &p) {
 		if r.Context().Err() != nil {
 			return // the client is gone
 		}
 		s.cfg.Log.Error("request", "path", r.URL.Path, "err", err)
 		p = &problem{http.StatusInternalServerError, err.Error()}
 	}
-	b, err := json.Marshal(problemJSON{"about:blank", http.StatusText(p.status), p.status, p.detail, r.URL.EscapedPath()})
+	b, err := json.Marshal(problemJSON{"about:blank", http.StatusText(p.status), p.status, p.detail, r.URL.EscapedPath(), faults})
 	if err != nil {
-		panic("dashboard: problem: " + err.Error()) // four strings and a number encode
+		panic("dashboard: problem: " + err.Error()) // strings and a number encode
 	}
 	if p.status == http.StatusUnauthorized { // [RFC 9110 15.5.2]
 		w.Header().Set("WWW-Authenticate", `Bearer realm="throatwatch"`)
@@ -315,6 +337,7 @@ type healthJSON struct {
 	Stepping  bool `json:"stepping"`
 	Recording bool `json:"recording"`
 	InputPath bool `json:"input_path"`
+	Refused   bool `json:"config_refused"` // the files are others than what is in force
 }
 
 func (s *Server) healthz(w http.ResponseWriter, r *http.Request) error {
@@ -323,6 +346,7 @@ func (s *Server) healthz(w http.ResponseWriter, r *http.Request) error {
 	out := healthJSON{Stepping: true}
 	if err := s.ask(ctx, "", func(_ *pipeline.Config, _ *pipeline.Machine, st *pipeline.State) {
 		out.Recording, out.InputPath = st.Health.NotRecordingSince == 0, !st.Health.InputPathDeaf
+		out.Refused = st.InForce.Refused.T != 0
 	}); err != nil {
 		return err
 	}

@@ -50,7 +50,13 @@ func appendFrame(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) (body []
 	case pipeline.OutcomeRun:
 		kind = "run"
 		dst = member(text(open(dst, kind, o), "event", o.Event), "run", runView(o.Run))
-	case pipeline.OutcomeChannels, pipeline.OutcomeConfig, pipeline.OutcomeQuarantine, pipeline.OutcomeAction, pipeline.OutcomeReduction,
+	case pipeline.OutcomeConfig:
+		if o.Event == pipeline.ConfigKept {
+			return dst, "", false
+		}
+		kind = "config"
+		dst = member(open(dst, kind, o), "config", o.Config)
+	case pipeline.OutcomeChannels, pipeline.OutcomeQuarantine, pipeline.OutcomeAction, pipeline.OutcomeReduction,
 		pipeline.OutcomeExceedance, pipeline.OutcomeEngine, pipeline.OutcomeLife:
 		return dst, "", false
 	}
@@ -402,6 +408,7 @@ func appendHello(dst []byte, m *pipeline.Machine, s *pipeline.State, at place, b
 	dst = instant(dst, "host_time", s.Host)
 	dst = number(dst, "scan_rate", 1e9/float64(max(cfg.Align.Period, 1)))
 	dst = text(dst, "config_hash", cfg.Hash)
+	dst = member(dst, "config", s.InForce)
 	dst = text(dst, "build", build)
 	if s.RunActive {
 		dst = member(dst, "run", runView(&s.Run))

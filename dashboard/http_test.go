@@ -18,6 +18,7 @@ import (
 	"github.com/prometheus/common/model"
 
 	"throatwatch/dashboard"
+	"throatwatch/dashboard/access"
 	"throatwatch/ingest"
 	"throatwatch/ingest/decode"
 	"throatwatch/rules"
@@ -116,11 +117,11 @@ func TestHealth(t *testing.T) {
 		status int
 		body   string
 	}{
-		{"", http.StatusOK, `{"stepping":true,"recording":true,"input_path":true}`},
-		{`{"part":"input_path","ok":false}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":true,"input_path":false}`},
-		{`{"part":"recording","ok":false}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":false,"input_path":false}`},
-		{`{"part":"input_path","ok":true}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":false,"input_path":true}`},
-		{`{"part":"recording","ok":true}`, http.StatusOK, `{"stepping":true,"recording":true,"input_path":true}`},
+		{"", http.StatusOK, `{"stepping":true,"recording":true,"input_path":true,"config_refused":false}`},
+		{`{"part":"input_path","ok":false}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":true,"input_path":false,"config_refused":false}`},
+		{`{"part":"recording","ok":false}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":false,"input_path":false,"config_refused":false}`},
+		{`{"part":"input_path","ok":true}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":false,"input_path":true,"config_refused":false}`},
+		{`{"part":"recording","ok":true}`, http.StatusOK, `{"stepping":true,"recording":true,"input_path":true,"config_refused":false}`},
 	} {
 		if tt.health != "" {
 			d.take(ingest.KindHealth, tt.health, d.host())
@@ -528,5 +529,72 @@ func TestReadmit(t *testing.T) {
 	d.send(play(start+6*second, engineTest(), time.Second, nil))
 	if n := used(); n != 3.0 {
 		t.Errorf("%v probes after", n)
+	}
+}
+
+// The files are taken in by whoever the request names; what is wrong with them comes
+// back whole, and an engine that is not off is a conflict.
+func TestReload(t *testing.T) {
+	d := makeDesk()
+	d.cfg.OpenRole = access.Operator
+	var got pipeline.Action
+	d.cfg.Reload = func(ctx context.Context, a pipeline.Action) (pipeline.Reply, []dashboard.Fault, error) {
+		got = a
+		switch a.Reason {
+		case "faults":
+			return pipeline.Reply{}, []dashboard.Fault{{At: "rig.yaml:3:7", Message: "no such key", Hint: "leave it away"}, {At: "rules.yaml"}}, nil
+		case "gone":
+			return pipeline.Reply{}, nil, errors.New("stopped")
+		case "running":
+			return pipeline.Reply{Err: fmt.Errorf("%w: it is lit", pipeline.ErrNotOff)}, nil, nil
+		}
+		a.Do = pipeline.DoConfig
+		res, err := d.Act(ctx, a)
+		if res.Err == nil {
+			d.take(ingest.KindConfig, "Alder Bank cell 2, new rake", d.host())
+		}
+		return res, nil, err
+	}
+	d.begin()
+	d.serve(d)
+	t.Cleanup(d.close)
+	d.rest(1)
+	path := rigPath + "/config"
+	checkStatus(t, "another rig", d.call(t, post, "/api/rigs/cell_9/config", `{}`), http.StatusNotFound, "cell_9")
+	checkStatus(t, "unknown field", d.call(t, post, path, `{"who":"x"}`), http.StatusBadRequest, "who")
+	checkStatus(t, "one person", d.call(t, post, path, `{"by":"E. Marsh","approved_by":"e. marsh","request_id":"1"}`), http.StatusBadRequest, "another person")
+	checkStatus(t, "running", d.call(t, post, path, `{"reason":"running"}`), http.StatusConflict, "it is lit")
+	checkStatus(t, "stopped", d.call(t, post, path, `{"reason":"gone"}`), http.StatusServiceUnavailable, "stopped")
+	a := d.call(t, post, path, `{"reason":"faults"}`)
+	checkStatus(t, "faults", a, http.StatusUnprocessableEntity, "faults")
+	faults := into[struct{ Faults []dashboard.Fault }](t, a).Faults
+	if len(faults) != 2 || faults[0] != (dashboard.Fault{At: "rig.yaml:3:7", Message: "no such key", Hint: "leave it away"}) {
+		t.Errorf("faults %+v", faults)
+	}
+	checkStatus(t, "taken", d.call(t, post, path, `{"by":"E. Marsh","approved_by":"M. Oduya","reason":"issue C","request_id":"2"}`), http.StatusAccepted, "")
+	if got.By != "E. Marsh" || got.Role != "operator" {
+		t.Errorf("action %+v", got)
+	}
+	hello := checkJSON(t, "HelloFrame", d.get(t, rigPath+"/hello").body)
+	if dig(hello, "config.by") != "E. Marsh" || dig(hello, "config.approved_by") != "M. Oduya" || dig(hello, "config.reason") != "issue C" || dig(hello, "rig.title") != "Alder Bank cell 2, new rake" {
+		t.Errorf("hello %v", hello["config"])
+	}
+	checkStatus(t, "who the files name", d.call(t, post, path, `{"request_id":"3"}`), http.StatusAccepted, "")
+	if got.By != "" {
+		t.Errorf("by %q, want nobody named", got.By)
+	}
+
+	e := newDesk(t)
+	checkStatus(t, "without files", e.call(t, post, path, `{}`), http.StatusNotFound, "no rig file")
+}
+
+// Where the watch has users, the files are for an engineer.
+func TestReloadNeedsAnEngineer(t *testing.T) {
+	g := newGuarded(t)
+	for name, status := range map[string]int{"Vera Lindqvist": http.StatusForbidden, "Mo Oduya": http.StatusForbidden, "Edda Marsh": http.StatusNotFound} {
+		p := g.signIn(t, name)
+		if a := g.raw(t, post, rigPath+"/config", `{"request_id":"1"}`, p.headers()); a.status != status {
+			t.Errorf("%s: %d %s", name, a.status, a.body)
+		}
 	}
 }

@@ -121,7 +121,8 @@ func (h *Hub) Publish(outs []pipeline.Outcome, m *pipeline.Machine, _ *pipeline.
 		case pipeline.OutcomeChannels:
 			h.channels(o, &cfg, now)
 		case pipeline.OutcomeConfig:
-			if o.OK { // what came before cannot be joined on: a viewer must begin with a hello
+			h.frame(o, &cfg, now)
+			if o.Event == pipeline.ConfigChanged { // what came before cannot be joined on: a viewer must begin with a hello
 				h.ring, h.head = nil, 0
 				clear(h.newest)
 				h.dropAll(websocket.CloseServiceRestart, "the configuration changed")
@@ -402,6 +403,21 @@ func readPongs(conn *websocket.Conn, v *viewer) {
 	}
 }
 
+// rest sends what is in the queue.
+func (v *viewer) rest(conn *websocket.Conn) {
+	for {
+		select {
+		case f := <-v.queue:
+			_ = conn.SetWriteDeadline(time.Now().Add(closeTimeout))
+			if conn.WriteMessage(websocket.TextMessage, f.body) != nil {
+				return
+			}
+		default:
+			return
+		}
+	}
+}
+
 // write sends frames until the viewer is dropped, and tells whether it was told
 // so. It is the only writer.
 func (v *viewer) write(conn *websocket.Conn) bool {
@@ -410,6 +426,9 @@ func (v *viewer) write(conn *websocket.Conn) bool {
 	for {
 		select {
 		case <-v.gone:
+			if v.code == websocket.CloseServiceRestart {
+				v.rest(conn)
+			}
 			message := websocket.FormatCloseMessage(v.code, v.reason)
 			return conn.WriteControl(websocket.CloseMessage, message, time.Now().Add(closeTimeout)) == nil
 		case f := <-v.queue:

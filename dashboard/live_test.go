@@ -494,8 +494,12 @@ func TestLiveConfigChange(t *testing.T) {
 
 	_, n = d.n()
 	d.take(ingest.KindConfig, "Alder Bank cell 2, new rake", d.host())
-	if _, code, _ := v.ended(t); code != websocket.CloseServiceRestart {
-		t.Errorf("closed with %d", code)
+	last, code, _ := v.ended(t)
+	if code != websocket.CloseServiceRestart || len(last) == 0 {
+		t.Fatalf("closed with %d after %d frames", code, len(last))
+	}
+	if f := checkJSON(t, "ConfigFrame", last[len(last)-1]); f["config"].(map[string]any)["refused"] != nil {
+		t.Errorf("%s", last[len(last)-1])
 	}
 	if a := d.get(t, "/api/rigs/"+rigID+"/operating-point"); a.status != http.StatusServiceUnavailable {
 		t.Errorf("status %d: the point is that of the configuration before", a.status)

@@ -184,7 +184,11 @@ func (s *Server) messages(w http.ResponseWriter, r *http.Request) error {
 			if buf, ok = appendStored(buf, o, &cfg); !ok {
 				continue
 			}
-			if _, err := out.Write(append(buf, '\n')); err != nil {
+			buf = append(buf, '\n')
+			if o.Kind == pipeline.OutcomeConfig && o.OK { // other channels from here on
+				buf = append(appendHello(buf, m, replay.State, place{o.N, o.T}, s.cfg.Build), '\n')
+			}
+			if _, err := out.Write(buf); err != nil {
 				return err
 			}
 		}

@@ -32,6 +32,7 @@ func commands() []command {
 		{"watch", "watch a rig: broker, computation, alarms, archive, page", watchCommand},
 		{"rehearse", "let a simulated rig publish a whole test", rehearseCommand},
 		{"check", "every fault of a rig file at once, then its channels and limits", withoutContext(checkCommand)},
+		{"reload", "let a running watch take its rig and rule files in anew", reloadCommand},
 		{"point", "one operating point from numbers given by hand", withoutContext(pointCommand)},
 		{"runs", "list the stored runs", runsCommand},
 		{"life", "what each engine has been through: starts, cycles, hours, time above EGT limits", lifeCommand},

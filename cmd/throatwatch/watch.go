@@ -134,7 +134,8 @@ type watcher struct {
 	stderr io.Writer
 	log    *slog.Logger
 
-	cfg    pipeline.Config
+	rig    string          // its file
+	cfg    pipeline.Config // in force at the start
 	store  *watch.Store
 	broker *broker.Broker
 	client *mqtt.Client
@@ -152,7 +153,6 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	if err := watch.Faults(faults); err != nil {
 		return fmt.Errorf("the configuration has faults; nothing was started:\n%w", err)
 	}
-	w.cfg = cfg
 	if w.opt.rehearse {
 		if err := rehearsable(cfg, w.opt.play); err != nil {
 			return err
@@ -182,7 +182,8 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	if err != nil {
 		return err
 	}
-	if w.site, err = w.opt.influx.open(w.store, w.opt.data, cfg.Rig.ID, w.log); err != nil {
+	w.rig, w.cfg = rig, w.inForce(core, cfg)
+	if w.site, err = w.opt.influx.open(w.store, w.opt.data, w.cfg.Rig.ID, w.log); err != nil {
 		return err
 	}
 	if w.site != nil {
@@ -207,7 +208,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	defer stopBroker()
 
 	hub := dashboard.NewHub(watch.Build())
-	outbox := watch.NewOutbox(cfg.Rig.ID, w.client, w.log)
+	outbox := watch.NewOutbox(w.cfg.Rig.ID, w.client, w.log)
 	w.loop = watch.NewLoop(watch.Config{
 		Core: core, Store: w.store, Ack: w.client, Window: mqtt.DefaultWindow, Log: w.log,
 		Shown: func(outs []pipeline.Outcome, m *pipeline.Machine, s *pipeline.State) {
@@ -287,7 +288,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 func (w *watcher) page(secure bool) dashboard.Config {
 	c := dashboard.Config{
 		Desk: w.loop, Runs: watch.StoredRuns{Catalog: w.store.Catalog(), Store: w.store}, Parse: watch.Parse,
-		Build: watch.Build(), Log: w.log, Extra: w.metrics,
+		Build: watch.Build(), Log: w.log, Extra: w.metrics, Reload: w.reload,
 		OpenRole: w.opt.guard.role(), Secure: secure, Audit: newLog(w.stderr, true),
 	}
 	if w.guard != nil {

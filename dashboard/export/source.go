@@ -251,11 +251,17 @@ func (e *Export) samples(ctx context.Context, fn func(*batch) error) error {
 			return err
 		}
 	}
+	refused, err := e.refused(ctx)
+	if err != nil {
+		return err
+	}
 	err = e.file.Records(ctx, first, 0, func(r *ingest.Record) error {
 		switch r.Kind {
 		case ingest.KindConfig:
-			// One that was refused changed nothing.
-			_ = s.configure(e.parse, r.Payload)
+			if slices.Contains(refused, r.Host) {
+				return nil
+			}
+			_ = s.configure(e.parse, r.Payload) // one with faults changed nothing
 		case ingest.KindMessage:
 			s.message(r)
 			return s.full(false, fn)
@@ -268,6 +274,20 @@ func (e *Export) samples(ctx context.Context, fn func(*batch) error) error {
 		return err
 	}
 	return s.full(true, fn)
+}
+
+// refused gives the host times of configurations that did not come into force.
+func (e *Export) refused(ctx context.Context) (at []int64, err error) {
+	err = e.file.Events(ctx, math.MinInt64, math.MaxInt64, func(ev *runfile.Event) error {
+		var config struct {
+			OK bool `json:"ok"`
+		}
+		if ev.Kind == "config" && json.Unmarshal(ev.JSON, &config) == nil && !config.OK {
+			at = append(at, ev.T)
+		}
+		return nil
+	})
+	return at, err
 }
 
 // sampler makes rows of messages.

@@ -31,5 +31,6 @@ type Config struct {
 	Rules   []rules.Rule
 	Derived []rules.Derived // names that rules may read beside the standard ones
 	Run     RunConfig
+	Change  Change
 	Hash    string // hex SHA-256 of the text
 }

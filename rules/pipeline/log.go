@@ -83,6 +83,7 @@ func (a *Action) checkTexts() error {
 		{"name", a.Name, mostName},
 		{"serial", a.Serial, mostName},
 		{"by", a.By, mostName},
+		{"approved by", a.ApprovedBy, mostName},
 		{"request id", a.RequestID, mostName},
 	} {
 		if len(f.text) > f.most {

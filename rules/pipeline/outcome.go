@@ -29,7 +29,7 @@ const (
 	OutcomeStatus                            // Status: each second of host time
 	OutcomeMark                              // Mark
 	OutcomeRun                               // Run, Event: a run started or ended
-	OutcomeConfig                            // Text: a configuration came into force, or why it did not
+	OutcomeConfig                            // Event, Config, Text: a configuration came into force, or why it did not
 	OutcomeQuarantine                        // Text: why a message was not used
 	OutcomeAction                            // Action: what became of an operator's action
 	OutcomeReduction                         // Area: what a run that ends says of the engine
@@ -54,9 +54,11 @@ type Outcome struct {
 	Status *Status
 	Mark   *monitor.Mark
 	Run    *monitor.Run
-	Event  string // of a run: "started" or "ended"
+	Event  string // of a run: "started" or "ended"; of a configuration: one of the Config constants
 	Text   string
-	OK     bool // of a configuration
+	OK     bool // of a configuration: it is in force
+	Config *InForce
+	Err    error // why a configuration was refused
 	Action *ActionResult
 	Area   *steady.RunArea
 

@@ -638,9 +638,12 @@ func TestConfigChanges(t *testing.T) {
 	hot := running
 	hot.egt, hot.oil = 1000, 10
 	b.play(hot, 6*second)
+	rest := atRest
+	rest.oil = 10
+	b.play(rest, 6*second) // off: the run goes on for a while
 	b.all = nil
 	alarms, ledger := b.m.Alarms(b.s), b.m.Ledger(b.s)
-	if len(alarms) != 2 || !ledger[0].Exceeded {
+	if len(alarms) != 2 || ledger[0].Exceedances != 1 {
 		t.Fatalf("%d alarms, ledger %+v", len(alarms), ledger)
 	}
 	for _, bad := range []string{"", "rig nine", "rig with a bad rule", "rig with a bad nozzle"} {
@@ -672,8 +675,8 @@ func TestConfigChanges(t *testing.T) {
 	if got := b.m.Ledger(b.s); !reflect.DeepEqual(got, ledger) {
 		t.Errorf("ledger %+v, before %+v", got, ledger)
 	}
-	b.play(hot, 100*ms)
-	if p := b.point(); p.Choke != monitor.Choked || p.Phase == monitor.PhaseUnknown {
+	b.play(rest, 100*ms)
+	if p := b.point(); p.Choke != monitor.NoFlow || p.Phase != monitor.Off {
 		t.Errorf("after the change %v, %v", p.Choke, p.Phase)
 	}
 	// "exceeded" is no longer a rule; "oil_low" stands as it did.

@@ -30,10 +30,12 @@ type State struct {
 	Booted    int64 // host time of the last boot
 	Run       monitor.Run
 	RunActive bool
-	Runs      uint64   // runs ever
-	OffSince  int64    // event time since when the phase is off, 0 = it is not
-	KnownAt   int64    // event time at which the phase was known last
-	Armed     bool     // an engine start begins a run; cleared when a run is ended by hand
+	Runs      uint64 // runs ever
+	OffSince  int64  // event time since when the phase is off, 0 = it is not
+	KnownAt   int64  // event time at which the phase was known last
+	Armed     bool   // an engine start begins a run; cleared when a run is ended by hand
+	InForce   InForce
+	Proposed  Action   // who brings the configuration of the next record
 	Done      []string // ids of the last requests, so that a repeated one is done once
 	Log       []Entry  // the last of the operator log, the oldest first
 	Swaps     []Swap   // sensors that were exchanged, in the order of their entry

@@ -86,6 +86,8 @@ type Action struct {
 	By        string        `json:"by"`
 	Role      string        `json:"role"`
 	RequestID string        `json:"request_id"`
+
+	ApprovedBy string `json:"approved_by,omitempty"` // of a configuration
 }
 
 // What an operator can do. The alarm actions are those of package rules.
@@ -96,6 +98,10 @@ const (
 	DoEntry    = "entry"   // a reading or a remark, by hand
 	DoSwap     = "swap"    // another sensor is on a channel
 	DoReadmit  = "readmit" // takes an excluded probe back
+	// DoConfig tells who brings the configuration of the next record; DoConfigRefused
+	// that one was refused before it came to that, and by Text why.
+	DoConfig        = "config"
+	DoConfigRefused = "config_refused"
 )
 
 // Reply says what became of an action.
@@ -280,15 +286,26 @@ func (m *Machine) boot(s *State, r *ingest.Record, before int64) {
 		s.Epoch++
 	}
 	s.Health, s.Left, s.Booted = Health{}, before, r.Host
+	s.Proposed = Action{}
 	if m.prog != nil {
 		m.prog.align.Boot(&s.Align, r.Host)
 	}
 }
 
+// config takes the configuration of a record into force, unless it is faulty or the
+// engine is not known to be off: the old one stays then.
 func (m *Machine) config(s *State, r *ingest.Record) {
-	old := m.prog
-	if err := m.load(r.Payload); err != nil { // the old one stays in force
-		m.emit(s, Outcome{Kind: OutcomeConfig, T: r.Host, Text: err.Error()})
+	by := s.Proposed
+	s.Proposed = Action{}
+	old, bundle := m.prog, m.bundle
+	err := m.load(r.Payload)
+	if err == nil && old != nil && old.cfg.Hash != m.prog.cfg.Hash {
+		if err = s.MayChange(r.Host); err != nil {
+			m.prog, m.bundle = old, bundle
+		}
+	}
+	if err != nil {
+		m.refuse(s, by.By, err)
 		return
 	}
 	p := m.prog
@@ -307,7 +324,10 @@ func (m *Machine) config(s *State, r *ingest.Record) {
 		s.Armed = true
 	}
 	s.Bundle = append(s.Bundle[:0], r.Payload...)
-	m.emit(s, Outcome{Kind: OutcomeConfig, T: r.Host, Text: p.cfg.Hash, OK: true})
+	m.enforce(s, &by)
+	if by.Do == DoConfig {
+		m.log(s, &by, Entry{T: rules.Time(r.Host), Text: "files " + p.cfg.Hash + approval(s.InForce.ApprovedBy)})
+	}
 }
 
 func (m *Machine) message(s *State, r *ingest.Record) {
@@ -493,6 +513,10 @@ func (m *Machine) do(s *State, a *Action) error {
 		return fmt.Errorf("%s: %w", a.Do, err)
 	}
 	switch a.Do {
+	case DoConfig:
+		return s.propose(a)
+	case DoConfigRefused:
+		m.refuse(s, a.By, errors.New(a.Text))
 	case DoMark:
 		m.emit(s, Outcome{Kind: OutcomeMark, T: t, Mark: &monitor.Mark{T: t, Text: a.Text, By: a.By}})
 		m.log(s, a, Entry{Text: a.Text})

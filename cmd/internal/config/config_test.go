@@ -186,6 +186,10 @@ func TestMeanings(t *testing.T) {
 		{"example: suppressed at rest", slices.Contains(oil.SuppressIn, monitor.Off), true},
 		{"example: limits of like:", ruleOf(t, &ex, "vibration_rear_above_caution").Title, "Vibration, rear bearing above 18 mm/s"},
 
+		{"example: who changed the limits", ex.Change, pipeline.Change{
+			Engineer: "Mara Lindqvist", Approver: "Tomas Eklund", Date: "2026-02-20", Note: "Limits document ML5-LIM-C",
+		}},
+
 		{"options: perfect gas", op.Compute.Gamma, 1.33},
 		{"options: fuel", op.Compute.Fuel.Hydrogen, 22.0},
 		{"options: kind", op.Compute.Nozzle.Kind, nozzle.ConvergentDivergent},
@@ -227,6 +231,27 @@ func TestMeanings(t *testing.T) {
 	} {
 		if !reflect.DeepEqual(tt.got, tt.want) {
 			t.Errorf("%s: %v, want %v", tt.name, tt.got, tt.want)
+		}
+	}
+}
+
+// What is odd and yet usable is told with its place.
+func TestWarnings(t *testing.T) {
+	for name, want := range map[string][]string{
+		example: nil,
+		minimal: {"minimal.yaml:1:1: change: limits and rules are not approved"},
+		options: {"options.yaml:"},
+	} {
+		b, _ := load(t, name)
+		var got []string
+		for _, w := range b.Warnings {
+			got = append(got, strings.TrimPrefix(filepath.ToSlash(w.String()), filepath.ToSlash(filepath.Dir(name))+"/"))
+			if w.Hint == "" || w.Line == 0 {
+				t.Errorf("%s: incomplete: %+v", name, w)
+			}
+		}
+		if len(got) != len(want) || len(got) > 0 && !strings.HasPrefix(got[0], want[0]) {
+			t.Errorf("%s: warnings %q", name, got)
 		}
 	}
 }

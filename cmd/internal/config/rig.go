@@ -5,6 +5,7 @@ import (
 	"math"
 	"slices"
 	"strings"
+	"time"
 
 	"throatwatch/ingest/decode"
 	"throatwatch/monitor/align"
@@ -58,6 +59,7 @@ func readRig(f File) *rig {
 	run := m.get("run").fields()
 	r.cfg.Run.EndAfter = run.get("end_after").duration(120*second, positive)
 	run.done()
+	r.readChange(m)
 	r.readDerive(m.get("derive"))
 	r.readRuleNames(m)
 	m.done()
@@ -87,6 +89,31 @@ func (r *rig) readIdentity(m *fields) {
 	info.EngineBuild = f.get("build").label("")
 	info.LimitsVersion = f.get("limits_version").label("")
 	f.done()
+}
+
+// readChange reads who changed limits and rules last, and who approved it.
+func (r *rig) readChange(m *fields) {
+	n := m.get("change")
+	c := &r.cfg.Change
+	f := n.fields()
+	if n.is() {
+		c.Engineer = f.need("engineer", "name who made the change").label("")
+	}
+	approver := f.get("approver")
+	c.Approver = approver.label("")
+	date := f.get("date")
+	c.Date = date.label("")
+	c.Note = f.get("note").label("")
+	f.done()
+	if _, err := time.Parse(time.DateOnly, c.Date); c.Date != "" && err != nil {
+		date.fault(fmt.Sprintf("%q is no date", c.Date), "write it as 2026-03-31")
+	}
+	switch {
+	case c.Approver == "":
+		n.warn("limits and rules are not approved: every page and report says so", "write change: {engineer: …, approver: …, date: …, note: …}")
+	case strings.EqualFold(c.Engineer, c.Approver):
+		approver.fault("engineer and approver are the same person", "a change is approved by another person than who made it")
+	}
 }
 
 func (r *rig) readScan(m *fields) {

@@ -143,9 +143,10 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 			}
 		case pipeline.OutcomeConfig:
 			c.event(o, "config", struct {
-				OK   bool   `json:"ok"`
-				Text string `json:"text"`
-			}{o.OK, o.Text})
+				OK     bool              `json:"ok"`
+				Text   string            `json:"text"`
+				Config *pipeline.InForce `json:"config"`
+			}{o.OK, o.Text, o.Config})
 			if o.OK && c.columns != nil {
 				c.seal() // other channels from here on
 			}

@@ -82,6 +82,7 @@ type item struct {
 	msg   mqtt.Message
 	reply chan<- pipeline.Reply
 	id    string
+	then  []byte // a configuration that follows if the action is done; it gives the reply then
 }
 
 // job is a batch on its way to the disk with the messages it holds.
@@ -162,12 +163,23 @@ func (l *Loop) put(ctx context.Context, it item) error {
 
 // Act does what an operator asks for and waits for what becomes of it.
 func (l *Loop) Act(ctx context.Context, a pipeline.Action) (pipeline.Reply, error) {
+	return l.act(ctx, a, nil)
+}
+
+// Configure takes a configuration into force, if that can be, as a says who brings
+// it.
+func (l *Loop) Configure(ctx context.Context, a pipeline.Action, bundle []byte) (pipeline.Reply, error) {
+	a.Do = pipeline.DoConfig
+	return l.act(ctx, a, bundle)
+}
+
+func (l *Loop) act(ctx context.Context, a pipeline.Action, then []byte) (pipeline.Reply, error) {
 	text, err := json.Marshal(a)
 	if err != nil {
 		return pipeline.Reply{}, fmt.Errorf("action: %w", err)
 	}
 	reply := make(chan pipeline.Reply, 1)
-	if err := l.put(ctx, item{in: Input{Kind: ingest.KindAction, Payload: text}, reply: reply, id: a.RequestID}); err != nil {
+	if err := l.put(ctx, item{in: Input{Kind: ingest.KindAction, Payload: text}, reply: reply, id: a.RequestID, then: then}); err != nil {
 		return pipeline.Reply{}, err
 	}
 	select {
@@ -264,8 +276,10 @@ func (l *Loop) take(it item) {
 	core := l.cfg.Core
 	outs := core.Take(it.in, l.clock.host())
 	l.show(outs)
-	if it.reply != nil {
-		it.reply <- replyOf(outs, it.id)
+	reply := replyOf(outs, it.id)
+	follows := it.then != nil && reply.Err == nil
+	if it.reply != nil && !follows {
+		it.reply <- reply
 	}
 	if it.in.Kind == ingest.KindMessage {
 		l.pending = append(l.pending, it.msg)
@@ -279,6 +293,9 @@ func (l *Loop) take(it item) {
 	case l.behind():
 		l.stall(tooSlow)
 	}
+	if follows {
+		l.take(item{in: Input{Kind: ingest.KindConfig, Payload: it.then}, reply: it.reply})
+	}
 }
 
 func replyOf(outs []pipeline.Outcome, id string) pipeline.Reply {
@@ -287,6 +304,10 @@ func replyOf(outs []pipeline.Outcome, id string) pipeline.Reply {
 		r.Epoch, r.N = outs[i].Epoch, outs[i].N
 		if outs[i].Kind == pipeline.OutcomeAction && outs[i].Action.RequestID == id {
 			r.Err = outs[i].Action.Err
+			return r
+		}
+		if outs[i].Kind == pipeline.OutcomeConfig && id == "" {
+			r.Err = outs[i].Err
 			return r
 		}
 	}
