@@ -40,6 +40,7 @@ func commands() []command {
 		{"delete", "delete a stored run", deleteCommand},
 		{"replay", "step a stored run again, and compare its digest", replayCommand},
 		{"export", "write a table of a stored run for other programs", exportCommand},
+		{"import", "make a run of a recording of another data system", importCommand},
 		{"verify", "read stored runs to the last byte and step them again", verifyCommand},
 		{"copy", "copy a stored run, also while it is recorded", copyCommand},
 		{"user", "people and machines that may use a watch, and their roles", userCommand},

@@ -87,6 +87,7 @@ func TestWrongUse(t *testing.T) {
 		{"verify of all and one", []string{"verify", "x", "--all"}, 2, "throatwatch verify: give runs, or --all; `throatwatch runs` lists them"},
 		{"verify without a folder", []string{"verify", "x", "--data", "DIR"}, 1, "throatwatch verify: DIR holds no runs: give the folder of a watch by --data"},
 		{"copy to nowhere", []string{"copy", "x"}, 2, "throatwatch copy: give one run and --to FILE; `throatwatch runs` lists the runs"},
+		{"import of nothing", []string{"import", "x.csv"}, 2, "throatwatch import: give one recording, --map MAP.yaml and --rig RIG.yaml"},
 		{"replay without a folder", []string{"replay", "x", "--data", "DIR"}, 1, "throatwatch replay: DIR holds no runs: give the folder of a watch by --data"},
 	} {
 		t.Run(tt.name, func(t *testing.T) {

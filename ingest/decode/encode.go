@@ -2,8 +2,13 @@ package decode
 
 import (
 	"encoding/binary"
+	"fmt"
 	"math"
 	"strconv"
+	"strings"
+	"time"
+
+	"github.com/influxdata/line-protocol/v2/lineprotocol"
 )
 
 // Reading is one value to be encoded.
@@ -68,6 +73,33 @@ func AppendSenMLCBOR(dst []byte, baseName string, t int64, readings []Reading) [
 		dst = appendFloat(appendLabel(dst, labelValue), r.Value)
 	}
 	return dst
+}
+
+// AppendLines appends line protocol with times in ns: a line per reading, its name
+// the measurement and its value the field "value", so that name, value and time
+// come back as they are. A reading without a finite value is left out. An error
+// names a reading whose name no line can hold.
+func AppendLines(dst []byte, t int64, readings []Reading) ([]byte, error) {
+	var enc lineprotocol.Encoder
+	enc.SetPrecision(lineprotocol.Nanosecond)
+	enc.SetBuffer(dst)
+	for i := range readings {
+		r := &readings[i]
+		v, ok := lineprotocol.FloatValue(r.Value)
+		if !ok {
+			continue
+		}
+		if strings.HasPrefix(r.Name, "#") { // a comment, to every reader
+			return dst, fmt.Errorf("decode: line of %q: a line that begins with # is a comment", r.Name)
+		}
+		enc.StartLine(r.Name)
+		enc.AddField("value", v)
+		enc.EndLine(time.Unix(0, t))
+		if err := enc.Err(); err != nil {
+			return dst, fmt.Errorf("decode: line of %q: %w", r.Name, err)
+		}
+	}
+	return enc.Bytes(), nil
 }
 
 // appendSeconds appends a time in ns as seconds with six decimals.

@@ -37,6 +37,22 @@ type Header struct {
 	Notes        string   `json:"notes,omitempty"`
 	Digest       string   `json:"digest,omitempty"` // over the recorded outcomes, hexadecimal
 	Alarms       int      `json:"alarms,omitempty"` // number raised
+	Origin       *Origin  `json:"origin,omitempty"` // nil for a run that a watch recorded
+}
+
+// OriginImport is the Kind of a run that was made from a recording of another
+// data system.
+const OriginImport = "import"
+
+// Origin says what a run was made from that no watch recorded. Its record numbers
+// are its own and do not continue those of the data folder.
+type Origin struct {
+	Kind      string `json:"kind"`
+	File      string `json:"file"`       // name of the recording
+	SHA256    string `json:"sha256"`     // of its bytes, hexadecimal
+	MapSHA256 string `json:"map_sha256"` // of the text of the column map, hexadecimal
+	Rows      uint64 `json:"rows"`       // read
+	Bad       uint64 `json:"bad"`        // times, cells and lines that could not be used
 }
 
 // headerKey is where the header lies in the table meta; the owner's keys are

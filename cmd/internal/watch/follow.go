@@ -175,6 +175,9 @@ func (o *follower[T]) span(ctx context.Context, path, live string) (r records, e
 	if err == nil {
 		h, err = f.Header(ctx)
 	}
+	if h.Origin != nil { // not recorded here: its records do not continue those of the folder
+		r = records{}
+	}
 	switch {
 	case ctx.Err() != nil:
 		return records{}, ctx.Err()

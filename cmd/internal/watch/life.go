@@ -32,7 +32,7 @@ func Lives(ctx context.Context, dir string, runs StoredRuns) ([]pipeline.Life, e
 	}
 	slices.SortStableFunc(list, func(a, b runfile.Run) int { return cmp.Compare(b.Started, a.Started) })
 	for i := range list {
-		if slices.ContainsFunc(lives, func(l pipeline.Life) bool { return l.Serial == list[i].EngineSerial }) {
+		if list[i].Origin != nil || slices.ContainsFunc(lives, func(l pipeline.Life) bool { return l.Serial == list[i].EngineSerial }) {
 			continue
 		}
 		life, ok, err := lifeOf(ctx, runs, &list[i])
@@ -74,12 +74,20 @@ func newestState(ctx context.Context, dir string) (*pipeline.State, error) {
 	return pipeline.Decode(newest.State)
 }
 
+// lastCheckpoint gives the newest checkpoint of a file that a watch recorded.
 func lastCheckpoint(ctx context.Context, path string) (runfile.Checkpoint, error) {
 	f, err := runfile.Open(ctx, path, runfile.ReadOnly, runfile.Options{})
 	if err != nil {
 		return runfile.Checkpoint{}, err
 	}
 	defer f.Close() //nolint:errcheck // it is only read
+	h, err := f.Header(ctx)
+	if err != nil {
+		return runfile.Checkpoint{}, err
+	}
+	if h.Origin != nil { // its records do not continue those of the folder
+		return runfile.Checkpoint{}, runfile.ErrNoCheckpoint
+	}
 	return f.LastCheckpoint(ctx, math.MaxInt64)
 }
 

@@ -101,6 +101,10 @@ func (s *Store) openLast(ctx context.Context) error {
 			s.log.Error("a stored file cannot be read; it is left as it is", "file", path, "err", err)
 			continue
 		}
+		if h, err := f.Header(ctx); err == nil && h.Origin != nil {
+			_ = f.Close() // its records do not continue those of the folder
+			continue
+		}
 		seq, _ := f.Durable()
 		best := uint64(0)
 		if newest != nil {
