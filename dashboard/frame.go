@@ -213,7 +213,9 @@ func appendChannels(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config, wante
 		dst = float(dst, scan.Value[i])
 		dst = number(dst, "raw", scan.Raw[i])
 		dst = text(dst, "quality", scan.Quality[i].String())
-		dst = append(number(dst, "age_s", age(scan.Age[i])), '}')
+		dst = number(dst, "age_s", age(scan.Age[i]))
+		dst = text(dst, "finding", scan.Finding[i].Kind.String())
+		dst = append(truth(dst, "proven", scan.Finding[i].Proven), '}')
 	}
 	return append(dst, '}', '}')
 }

@@ -10,13 +10,14 @@ type Scan struct {
 	Quality []Quality
 	Samples []uint16 // samples that fell into this scan
 	Age     []int64  // ns from the newest sample to T; -1 when there is none
+	Finding []Finding
 }
 
 // NewScan gives a scan with room for n channels.
 func NewScan(n int) *Scan {
 	return &Scan{
 		Raw: make([]float64, n), Value: make([]float64, n), Quality: make([]Quality, n),
-		Samples: make([]uint16, n), Age: make([]int64, n),
+		Samples: make([]uint16, n), Age: make([]int64, n), Finding: make([]Finding, n),
 	}
 }
 

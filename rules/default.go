@@ -65,6 +65,7 @@ func Default(q Equipment) []Rule {
 		}
 	}
 	r = append(r, limitRules(&q)...)
+	r = append(r, sensorRules(&q)...)
 	r = append(r, Rule{
 		Name: "unchoke", When: `choke_armed and choke_state != "choked"`, Priority: Caution,
 		OnDelay: 300 * ms, OffDelay: second, Group: groupNozzle,
@@ -243,6 +244,41 @@ func limitRules(q *Equipment) []Rule {
 		Caution:  "A bearing, a seal or blade tips may rub. Watch vibration, oil and bearing temperatures at the next start.",
 		Response: "Facility procedure for rundown times.",
 	})
+	return out
+}
+
+// sensorRules gives what is said of sensors: one alarm for all that is proven and one for
+// what is suspected, each with the first sensor and how many there are. An EGT probe that
+// reads hot without proof may tell of the gas: that is an alarm on EGT.
+func sensorRules(q *Equipment) []Rule {
+	out := []Rule{
+		{
+			Name: "sensor_failed", When: "sensors_failed > 0", Priority: Advisory, OffDelay: 5 * second, Group: groupSources,
+			WorsenBy: 1,
+			Title:    "Sensor failed",
+			Text:     "{failed_sensor}: {failed_finding}, proven. {sensors_failed:.0} sensor(s) in all; the Rig page names them. Follow the facility's procedure for lost instrumentation.",
+			Caution:  "A probe of a rake or harness is left out where its reading is wrong; any other value of this sensor is not to be relied on.",
+			Response: "Facility procedure for lost instrumentation.",
+		},
+		{
+			Name: "sensor_doubtful", When: "sensors_doubtful > 0", Priority: Advisory, OffDelay: 5 * second, Group: groupSources,
+			WorsenBy: 1,
+			Title:    "Sensor doubtful",
+			Text:     "{doubtful_sensor}: {doubtful_finding}, suspected, not proven. {sensors_doubtful:.0} sensor(s) in all; the Rig page names them. Follow the facility's procedure for instrumentation checks.",
+			Caution:  "What this sensor reads may be real. Watch its mates.",
+			Response: "Facility procedure for instrumentation checks.",
+		},
+	}
+	if q.EGT {
+		out = append(out, Rule{
+			Name: "egt_hot_streak", When: "egt_hot_probes > 0", Priority: Caution, OffDelay: 3 * second, Group: groupEGT,
+			WorsenBy: 1,
+			Title:    "EGT probe reads hot",
+			Text:     "{egt_hot_probe} reads {egt_hot_by_k:.0} above its own pattern without proof of failure: a hot streak must be assumed. {egt_hot_probes:.0} probe(s) in all. Follow the facility's procedure for EGT spread." + notProtection,
+			Caution:  "A part of the gas may be hotter than the indicated EGT shows. The probe stays in the mean. Watch the hottest probe, its neighbours and the spread.",
+			Response: "Facility procedure for EGT spread.",
+		})
+	}
 	return out
 }
 

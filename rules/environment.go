@@ -110,7 +110,10 @@ type Channel struct {
 //	health.recording health.input_path health.clock health.sources   true = works
 //	health.webhook health.database                         true = works, or there is none
 //	sources_lost data_age_s clock_skew_s webhook_waiting database_lag_s
-//	channel.<id> quality.<id> usable.<id>                  SI value, quality, may be used
+//	sensors_failed failed_sensor failed_finding            proven findings: how many, the first of them
+//	sensors_doubtful doubtful_sensor doubtful_finding      suspected ones, but for hot EGT probes:
+//	egt_hot_probes egt_hot_probe egt_hot_by_k
+//	channel.<id> quality.<id> finding.<id> usable.<id>     SI value, quality, what is wrong, may be used
 //	egt.<band>.over .exceeded .elapsed_s .remaining_s
 func StandardNames(channels []Channel, bands []string) []Name {
 	var names []Name
@@ -138,6 +141,7 @@ func StandardNames(channels []Channel, bands []string) []Name {
 	for q := range monitor.NumQualities {
 		qualities = append(qualities, q.String())
 	}
+	findings := append([]string{"none"}, monitor.FindingKinds()...)
 	count := func(name string) Name { return Name{Name: name, Type: Number, Dimension: unit.Ratio} }
 	seconds := func(name string) Name { return Name{Name: name, Type: Number, Unit: "s", Dimension: unit.Time} }
 	flag := func(name string) Name { return Name{Name: name, Type: Bool} }
@@ -150,6 +154,10 @@ func StandardNames(channels []Channel, bands []string) []Name {
 		Name{Name: "total_temperature_from", Type: Text, Values: sources},
 		flag("choke_armed"), flag("choke_marginal"), flag("lit"), flag("steady"), daemon(flag("run_active")),
 		count("egt_probes_used"), count("egt_probes_lost"), count("rake_probes_used"), count("rake_probes_lost"),
+		count("sensors_failed"), Name{Name: "failed_sensor", Type: Text}, Name{Name: "failed_finding", Type: Text, Values: findings},
+		count("sensors_doubtful"), Name{Name: "doubtful_sensor", Type: Text}, Name{Name: "doubtful_finding", Type: Text, Values: findings},
+		count("egt_hot_probes"), Name{Name: "egt_hot_probe", Type: Text},
+		Name{Name: "egt_hot_by_k", Type: Number, Unit: "K", Dimension: unit.TemperatureDifference},
 		daemon(flag("health.recording")), daemon(flag("health.input_path")), daemon(flag("health.clock")),
 		daemon(flag("health.sources")), daemon(count("sources_lost")),
 		daemon(seconds("data_age_s")), daemon(seconds("clock_skew_s")),
@@ -164,6 +172,7 @@ func StandardNames(channels []Channel, bands []string) []Name {
 		names = append(names,
 			Name{Name: "channel." + id, Type: Number, Unit: name, Dimension: ch.Dimension, Low: ch.Low, High: ch.High},
 			Name{Name: "quality." + id, Type: Text, Values: slices.Clip(qualities)},
+			Name{Name: "finding." + id, Type: Text, Values: findings},
 			flag("usable."+id))
 	}
 	for _, b := range bands {

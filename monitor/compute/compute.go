@@ -64,6 +64,10 @@ type State struct {
 	Choke    monitor.ChokeState
 	Armed    bool
 
+	Sensors []Sensor // by channel
+	Rest    int64    // ns for which the rotor has been at rest …
+	RestT   int64    // … as of this event time
+
 	P7, T7, Harness Probes
 	Head            Bridge  // (p7/ps − 1)/(W8 √(R T0)/p7)², 1/m⁴: dynamic head at the wall taps
 	HeadNow         float64 // (W8 √(R T0)/p7)², as last computed, m⁴
@@ -90,9 +94,11 @@ type Computer struct {
 	watched   []monitor.Quantity // by the detector
 	steady    []float64          // their values
 	usable    []bool
-	learns    bool  // patterns and ratios, in this scan
-	flow      meter // of this scan
-	balanced  bool  // it has a flow balance
+	zeroed    []int     // channels whose zero is looked at
+	zeros     []float64 // of them
+	learns    bool      // patterns and ratios, in this scan
+	flow      meter     // of this scan
+	balanced  bool      // it has a flow balance
 	head      bridged
 	gas       source             // of T7, of this scan
 	doubts    uncertainty.Inputs // of result
@@ -139,6 +145,11 @@ func New(cfg Config) (*Computer, error) {
 		c.egt.watch.Return = backHarness
 	}
 	c.usable = make([]bool, len(st.EGT))
+	c.zeroed = zeroed(&c.cfg)
+	c.zeros = make([]float64, len(c.zeroed))
+	c.p7.sense = sense(&c.cfg, &st.P7Watch, st.P7, true)
+	c.t7.sense = sense(&c.cfg, &st.T7Watch, st.T7, false)
+	c.egt.sense = sense(&c.cfg, &st.EGTWatch, st.EGT, false)
 	c.parts = make([]part, 0, 16+2*len(cfg.Channels))
 	c.flow.terms = make([]term, 0, 8+len(cfg.Channels))
 	c.steadiness()
@@ -187,6 +198,7 @@ func (c *Computer) Reset(s *State, from []Channel) {
 	}
 	c.cfg.EGT.Fit(&s.EGT)
 	s.P7, s.T7, s.Harness = Probes{}, Probes{}, Probes{}
+	s.Sensors, s.Rest = nil, 0
 	s.Head, s.HeatRatio, s.EGTRatio = Bridge{}, Bridge{}, Bridge{}
 	s.Steady, s.Balance, s.Area = steady.State{}, steady.Learned{}, Area{}
 	s.ToChokeLoss, s.ToEGTLimit = Trend{}, Trend{}
@@ -211,6 +223,7 @@ func (c *Computer) compute(s *State, scan *monitor.Scan, p *monitor.OperatingPoi
 	p.Reset()
 	p.T, p.Scan = scan.T, scan.N
 	c.last, c.balanced = 0, false
+	c.failures(s, scan)
 
 	// Patterns and ratios are learned while the engine is steady, as of the scan before.
 	c.learns = s.Phase.Phase == monitor.Steady || c.cfg.Stations.Speed < 0 && s.Steady.Result.Steady
@@ -226,6 +239,8 @@ func (c *Computer) compute(s *State, scan *monitor.Scan, p *monitor.OperatingPoi
 	c.balance(s, p)
 	c.forecast(s, p)
 	c.referred(scan, p)
+	c.zeroes(s, scan, p)
+	c.findings(s, scan)
 	return ledger
 }
 

@@ -17,6 +17,7 @@ const second = int64(1e9)
 type group struct {
 	channels []int
 	watch    rake.Watch
+	sense    rake.Sense
 	values   []float64
 	quality  []monitor.Quality
 	now      rake.Result // of this scan
@@ -31,6 +32,7 @@ type Probes struct {
 	Sampling float64 // standard uncertainty by the places of the probes, as last known
 	Sampled  bool
 	Flow     rake.Live // weights by mass flux
+	Suspects rake.Suspects
 }
 
 // back is the time without fault, ns, after which a probe counts again. It is short, since
@@ -61,15 +63,32 @@ func newGroup(w rake.Watch, channels []int, least int) (group, error) {
 	return g, w.Check()
 }
 
-// step enters a scan and marks the probes that are out in it.
-func (g *group) step(s *Probes, scan *monitor.Scan, learn bool) {
+// sense gives how it is told what is wrong with the probes of a group. Where no
+// departure is stated it is 40 K, four times what the pattern of an annulus changes from
+// idle to full power, or 2 % of the range. (Common practice, no source.)
+func sense(c *Config, w *rake.Watch, channels []int, pressure bool) rake.Sense {
+	out := rake.Sense{Pressure: pressure, Limit: w.Departure}
+	switch {
+	case out.Limit > 0 || len(channels) == 0:
+	case pressure:
+		out.Limit = 0.02 * (c.Channels[channels[0]].High - c.Channels[channels[0]].Low)
+	default:
+		out.Limit = 40
+	}
+	return out
+}
+
+// step enters a scan and marks the probes that are out in it. base is what rake.Sense
+// asks for.
+func (g *group) step(s *Probes, scan *monitor.Scan, learn bool, base float64) {
 	if len(g.channels) == 0 {
 		return
 	}
 	for k, i := range g.channels {
 		g.values[k], g.quality[k] = scan.Value[i], scan.Quality[i]
 	}
-	g.now = g.watch.Step(&s.State, scan.T, g.values, g.quality, learn)
+	g.now = g.watch.Step(&s.State, scan.T, g.values, g.quality, learn && !g.sense.Departs(&s.Suspects, &s.State))
+	g.sense.Step(&s.Suspects, &g.watch, &s.State, scan.T, g.values, g.quality, base)
 	g.watch.Places(&s.State, &g.now, g.values, g.quality, g.places)
 	g.weights = nil
 	if u := g.now.Sampling; u == u {
@@ -104,7 +123,9 @@ func (c *Computer) Readmit(s *State, channel int) error {
 		case k >= len(g.probes.Probes): // no scan yet
 			err = rake.ErrNotOut
 		default:
-			err = g.probes.Readmit(k)
+			if err = g.probes.Readmit(k); err == nil && k < len(g.probes.Suspects.Probes) {
+				g.probes.Suspects.Probes[k] = rake.Suspect{}
+			}
 		}
 		if err == nil {
 			return nil
@@ -158,7 +179,7 @@ func mean(scan *monitor.Scan, channels []int) float64 {
 func (c *Computer) harness(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 	st := &c.cfg.Stations
 	g := &c.egt
-	g.step(&s.Harness, scan, c.learns)
+	g.step(&s.Harness, scan, c.learns, c.surroundings(scan))
 	for k, i := range g.channels {
 		c.usable[k] = scan.Quality[i].Usable()
 	}
@@ -172,11 +193,23 @@ func (c *Computer) harness(s *State, scan *monitor.Scan, p *monitor.OperatingPoi
 	}
 }
 
+// surroundings gives the temperature of the terminals of thermocouples, about, K.
+func (c *Computer) surroundings(scan *monitor.Scan) float64 {
+	if t := c.channel(scan, c.cfg.Stations.AmbientT); t == t {
+		return t
+	}
+	return c.channel(scan, c.cfg.Stations.InletT)
+}
+
 // pressures finds p7, barometer and back pressure.
 func (c *Computer) pressures(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 	st := &c.cfg.Stations
 	v := &p.V
-	c.p7.step(&s.P7, scan, c.learns)
+	base := c.channel(scan, st.Barometer)
+	if base != base {
+		base = c.channel(scan, st.ExitPlane)
+	}
+	c.p7.step(&s.P7, scan, c.learns, base)
 	p.RakeProbesUsed = int16(c.p7.now.Used)
 	v[monitor.RakePressure], p.PressureBy = c.p7.now.Mean, monitor.SourceRake
 	c.head = bridged{substitute: mean(scan, st.WallStatic)}

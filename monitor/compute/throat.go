@@ -30,7 +30,7 @@ type bridge struct {
 // else from the indicated EGT. A substitute is led over by its ratio to the probes.
 func (c *Computer) gasTemperature(s *State, scan *monitor.Scan, p *monitor.OperatingPoint, air *gas.Mixture) {
 	st := &c.cfg.Stations
-	c.t7.step(&s.T7, scan, c.learns)
+	c.t7.step(&s.T7, scan, c.learns, c.surroundings(scan))
 	if st.T7Flux {
 		c.weighByFlow(&s.T7, &c.t7, p, c.t7.places)
 	}

@@ -114,6 +114,7 @@ type State struct {
 	Probes []Probe
 	T      int64
 	Seen   bool
+	Proven uint64 // probes of which Sense proves that they are shorted or do not respond
 }
 
 // Result is what a scan says. Sets have bit i for probe i.
@@ -153,13 +154,11 @@ func (w *Watch) Step(s *State, t int64, values []float64, quality []monitor.Qual
 	}
 	s.T, s.Seen = max(t, s.T), true
 
-	known := false
-	for i := range s.Probes {
-		known = known || s.Probes[i].Learned > 0 && s.Probes[i].Learned >= w.Learn
-	}
+	known := s.known(w)
 	r := Result{Known: known}
 	for i := range s.Probes {
-		if s.Probes[i].prove(t, quality[i], w.ProofHold) {
+		proven := s.Proven&(1<<i) != 0
+		if s.Probes[i].prove(t, quality[i], proven, w.ProofHold) {
 			r.Changed |= 1 << i
 		}
 	}
@@ -206,9 +205,28 @@ func (w *Watch) Step(s *State, t int64, values []float64, quality []monitor.Qual
 	return r
 }
 
+// known tells whether there is a probe whose pattern is known.
+func (s *State) known(w *Watch) bool {
+	for i := range s.Probes {
+		if s.Probes[i].Learned > 0 && s.Probes[i].Learned >= w.Learn {
+			return true
+		}
+	}
+	return false
+}
+
 // prove judges what the quality of a reading proves. Proof goes on through scans
-// without it that last less than hold, as a loose contact makes them.
-func (p *Probe) prove(t int64, q monitor.Quality, hold int64) (changed bool) {
+// without it that last less than hold, as a loose contact makes them. What is proven
+// otherwise has been held already.
+func (p *Probe) prove(t int64, q monitor.Quality, proven bool, hold int64) (changed bool) {
+	if proven {
+		p.Proof, p.Clean = true, false
+		if p.Out == In {
+			p.Out, p.Since, p.Fit = ByProof, t, false
+			return true
+		}
+		return false
+	}
 	switch q {
 	case monitor.QualityOutOfRange, monitor.QualityInvalidCode, monitor.QualityRate, monitor.QualityStuck:
 		if !p.Proof {
@@ -319,6 +337,8 @@ func (s *State) Readmit(probe int) error {
 	switch {
 	case p.Out == In:
 		return ErrNotOut
+	case p.Proof && s.Proven&(1<<probe) != 0:
+		return fmt.Errorf("%w: against its mates it is shorted or does not respond", ErrProven)
 	case p.Proof:
 		return fmt.Errorf("%w: %s", ErrProven, strings.ReplaceAll(p.Last.String(), "_", " "))
 	case p.Out == ByDeparture:

@@ -2,6 +2,7 @@ package pipeline
 
 import (
 	"math"
+	"slices"
 	"strings"
 
 	"throatwatch/monitor"
@@ -20,6 +21,8 @@ type frame struct {
 	bands  []egt.Band
 	egt    []int
 	rake   []int
+	titles []string // of channels
+	hot    []bool   // by channel: an EGT probe, of which what reads hot is told apart
 }
 
 // fill writes slot from source; index tells which quantity, channel or band.
@@ -54,6 +57,16 @@ const (
 	fromRakeUsed
 	fromEGTLost
 	fromRakeLost
+	fromFailed
+	fromFailedSensor
+	fromFailedFinding
+	fromDoubtful
+	fromDoubtfulSensor
+	fromDoubtfulFinding
+	fromHot
+	fromHotProbe
+	fromHotBy
+	fromFinding
 	fromRecording
 	fromInputPath
 	fromClock
@@ -73,6 +86,9 @@ var plainSources = map[string]source{
 	"choke_armed": fromArmed, "choke_marginal": fromMarginal, "lit": fromLit, "run_active": fromRunActive,
 	"egt_probes_used": fromEGTUsed, "rake_probes_used": fromRakeUsed,
 	"egt_probes_lost": fromEGTLost, "rake_probes_lost": fromRakeLost,
+	"sensors_failed": fromFailed, "failed_sensor": fromFailedSensor, "failed_finding": fromFailedFinding,
+	"sensors_doubtful": fromDoubtful, "doubtful_sensor": fromDoubtfulSensor, "doubtful_finding": fromDoubtfulFinding,
+	"egt_hot_probes": fromHot, "egt_hot_probe": fromHotProbe, "egt_hot_by_k": fromHotBy,
 	"health.recording": fromRecording, "health.input_path": fromInputPath, "health.clock": fromClock,
 	"health.webhook": fromWebhook, "health.database": fromDatabase, "webhook_waiting": fromWebhookWaiting, "database_lag_s": fromDatabaseLag,
 	"health.sources": fromSources, "sources_lost": fromSourcesLost, "data_age_s": fromDataAge, "clock_skew_s": fromSkew,
@@ -111,6 +127,14 @@ func Names(cfg *Config) []rules.Name {
 // the derived ones behind them are filled by the rules.
 func newFrame(cfg *Config, names, all []rules.Name) frame {
 	f := frame{Frame: rules.NewFrame(all), egt: cfg.Compute.Stations.EGT, rake: cfg.Compute.Stations.P7, bands: cfg.Compute.EGT.Bands}
+	for i := range cfg.Compute.Channels {
+		ch := &cfg.Compute.Channels[i]
+		title := ch.Title
+		if title == "" {
+			title = ch.ID
+		}
+		f.titles, f.hot = append(f.titles, title), append(f.hot, slices.Contains(f.egt, i))
+	}
 	channel := map[string]int{}
 	for i := range cfg.Compute.Channels {
 		channel[cfg.Compute.Channels[i].ID] = i
@@ -139,6 +163,8 @@ func newFrame(cfg *Config, names, all []rules.Name) frame {
 		switch head {
 		case "channel":
 			item.source, item.index = fromChannel, channel[rest]
+		case "finding":
+			item.source, item.index = fromFinding, channel[rest]
 		case "quality":
 			item.source, item.index = fromQuality, channel[rest]
 		case "usable":
@@ -161,6 +187,7 @@ func newFrame(cfg *Config, names, all []rules.Name) frame {
 // fill sets every name from a scan, its operating point and the state.
 func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 	f.fillHealth(s)
+	found := f.findings(scan)
 	for _, it := range f.scan {
 		switch it.source {
 		case fromQuantity:
@@ -208,10 +235,81 @@ func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 			f.Numbers[it.slot] = float64(len(f.egt) - int(p.EGTProbesUsed))
 		case fromRakeLost:
 			f.Numbers[it.slot] = float64(len(f.rake) - int(p.RakeProbesUsed))
+		case fromFailed:
+			f.Numbers[it.slot] = float64(found.failed.n)
+		case fromFailedSensor:
+			f.Texts[it.slot] = f.sensor(&found.failed)
+		case fromFailedFinding:
+			f.Texts[it.slot] = found.failed.kind(scan)
+		case fromDoubtful:
+			f.Numbers[it.slot] = float64(found.doubtful.n)
+		case fromDoubtfulSensor:
+			f.Texts[it.slot] = f.sensor(&found.doubtful)
+		case fromDoubtfulFinding:
+			f.Texts[it.slot] = found.doubtful.kind(scan)
+		case fromHot:
+			f.Numbers[it.slot] = float64(found.hot.n)
+		case fromHotProbe:
+			f.Texts[it.slot] = f.sensor(&found.hot)
+		case fromHotBy:
+			f.Numbers[it.slot] = 0
+			if found.hot.n > 0 {
+				f.Numbers[it.slot] = scan.Finding[found.hot.first].Size
+			}
+		case fromFinding:
+			f.Texts[it.slot] = none(scan.Finding[it.index].Kind.String())
 		case fromRunActive, fromRecording, fromInputPath, fromClock, fromSources, fromSourcesLost, fromDataAge, fromSkew,
 			fromWebhook, fromDatabase, fromWebhookWaiting, fromDatabaseLag:
 		}
 	}
+}
+
+// found counts findings; first is the channel of the first of them.
+type found struct{ n, first int }
+
+// findings sorts what was found of sensors in a scan: what is proven, what is suspected,
+// and of the suspected the EGT probes that read hot, which may be the gas.
+func (f *frame) findings(scan *monitor.Scan) (out struct{ failed, doubtful, hot found }) {
+	for i := range scan.Finding {
+		is := &scan.Finding[i]
+		of := &out.doubtful
+		switch {
+		case is.Kind == monitor.NoFinding:
+			continue
+		case is.Proven:
+			of = &out.failed
+		case f.hot[i] && is.Size > 0:
+			of = &out.hot
+		}
+		if of.n == 0 {
+			of.first = i
+		}
+		of.n++
+	}
+	return out
+}
+
+// sensor names the first channel, "none" when there is none.
+func (f *frame) sensor(of *found) string {
+	if of.n == 0 {
+		return "none"
+	}
+	return f.titles[of.first]
+}
+
+// kind gives the finding of the first channel, "none" when there is none.
+func (of *found) kind(scan *monitor.Scan) string {
+	if of.n == 0 {
+		return "none"
+	}
+	return scan.Finding[of.first].Kind.String()
+}
+
+func none(code string) string {
+	if code == "" {
+		return "none"
+	}
+	return code
 }
 
 // fillHealth sets the names that say how the daemon itself does.
@@ -258,7 +356,8 @@ func (f *frame) fillHealth(s *State) {
 			}
 		case fromQuantity, fromChokeState, fromPhase, fromBackPressure, fromTotalPressure, fromTemperature, fromSteady,
 			fromArmed, fromMarginal, fromLit, fromChannel, fromQuality, fromUsable, fromOver, fromExceeded, fromElapsed, fromRemaining, fromEGTUsed, fromRakeUsed,
-			fromEGTLost, fromRakeLost:
+			fromEGTLost, fromRakeLost, fromFailed, fromFailedSensor, fromFailedFinding, fromDoubtful, fromDoubtfulSensor, fromDoubtfulFinding,
+			fromHot, fromHotProbe, fromHotBy, fromFinding:
 		}
 	}
 }
