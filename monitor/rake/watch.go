@@ -115,6 +115,8 @@ type State struct {
 	T      int64
 	Seen   bool
 	Proven uint64 // probes of which Sense proves that they are shorted or do not respond
+
+	Disagree int64 // ns of steady time in which the patterns that are learned were held against
 }
 
 // Result is what a scan says. Sets have bit i for probe i.
@@ -197,7 +199,7 @@ func (w *Watch) Step(s *State, t int64, values []float64, quality []monitor.Qual
 		if mean := sum / all; r.Used >= w.Least {
 			r.Mean = mean
 		}
-		if learn && dt > 0 && w.settled(s) {
+		if learn && dt > 0 && w.settled(s) && w.agrees(s, dt, sum/all, values, quality) {
 			w.learn(s, dt, sum/all, values, quality)
 		}
 	}
@@ -362,6 +364,35 @@ func (w *Watch) settled(s *State) bool {
 		p := &s.Probes[i]
 		if w.Departure > 0 && p.Out == In && p.Judged && math.Abs(p.Depart) > quiet*w.Departure {
 			return false
+		}
+	}
+	return true
+}
+
+// agrees tells whether the probes read about what they did while their patterns were
+// learned so far: what a probe reads that goes wrong meanwhile would be its pattern, and
+// it would depart once it is right again. If they do not agree for as long as learning
+// takes, it was wrong before, and learning begins anew.
+func (w *Watch) agrees(s *State, dt int64, mean float64, values []float64, quality []monitor.Quality) bool {
+	young := func(p *Probe) bool { return p.Learned > 0 && p.Learned < w.Learn }
+	agree := true
+	for i := range s.Probes {
+		p := &s.Probes[i]
+		if w.Departure > 0 && young(p) && p.Learned >= longest && p.Out == In && quality[i].Usable() {
+			agree = agree && math.Abs(values[i]-mean-p.Offset) <= quiet*w.Departure
+		}
+	}
+	if agree {
+		s.Disagree = 0
+		return true
+	}
+	if s.Disagree += dt; s.Disagree < w.Learn {
+		return false
+	}
+	s.Disagree = 0
+	for i := range s.Probes {
+		if p := &s.Probes[i]; young(p) {
+			p.Learned, p.Offset = 0, 0
 		}
 	}
 	return true

@@ -351,6 +351,39 @@ func TestPatternIsLearnedInSteadyPhasesOnly(t *testing.T) {
 	}
 }
 
+// What a probe reads that is wrong for a while is not learned as its pattern: it would be
+// left out, and the mean be off, once it is right again. What goes on is a pattern.
+func TestFaultWhileLearning(t *testing.T) {
+	for _, tt := range []struct {
+		name        string
+		from, until float64 // s
+		off         float64 // K
+		mean        float64 // K at the end; the eight are 900 on the mean
+	}{
+		{"cold for a while", 10, 25, -200, 900},
+		{"hot for a while", 3, 12, 30, 900},
+		{"from then on", 10, 300, -80, 900 - 80.0/8},
+	} {
+		g := newRig(1, harness(), 0.5)
+		for k := range 200 * 20 {
+			at := float64(k) / 20
+			r := g.step(func(v []float64, _ []monitor.Quality) {
+				if at >= tt.from && at < tt.until {
+					v[2] += tt.off
+				}
+			})
+			if r.Out != 0 {
+				t.Errorf("%s: probes %b are out at %g s", tt.name, r.Out, at)
+				break
+			}
+			if at > 150 && math.Abs(r.Mean-tt.mean) > 2 {
+				t.Errorf("%s: mean %g at %g s, want %g", tt.name, r.Mean, at, tt.mean)
+				break
+			}
+		}
+	}
+}
+
 func TestSampling(t *testing.T) {
 	g := newRig(9, harness(), 0)
 	g.run(1, nil)
