@@ -344,14 +344,14 @@ try {
     });
   });
 
-  await check('Watch fits 1440×900 and 820 wide', async () => {
-    for (const [width, height] of [[1440, 900], [820, 1180]]) {
+  await check('Watch fits 1440×900, 1920×1080 and 820×1180', async () => {
+    for (const [width, height] of [[1440, 900], [1920, 1080], [820, 1180]]) {
       await live.setViewportSize({ width, height });
       await live.waitForTimeout(200);
       const [w, h, over] = await live.evaluate(() => [document.documentElement.scrollWidth, document.documentElement.scrollHeight,
         [...document.querySelectorAll('header *, main *')].filter((e) => e.checkVisibility() && !e.closest('.spoken, .plots') && e.getBoundingClientRect().right > innerWidth + 1).map((e) => e.className || e.tagName)]);
       assert.equal(w, width);
-      if (width === 1440) assert.equal(h, 900);
+      assert.equal(h, height);
       assert.deepEqual(over, [], 'stands out to the right');
     }
     await live.setViewportSize({ width: 1440, height: 900 });

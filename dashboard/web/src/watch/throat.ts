@@ -215,22 +215,23 @@ export function throatPlane(d: Display): View {
         else if (independent !== null) label(`● air + fuel flow${region}`, pal.data, lx, !flat ? low + 16 : under ? Math.max(top + 9, y(independent) - 14) : y(anchor) + 22, align);
       }
     }
+    const { temperature } = d.units();
+    const said: string[] = [...(curveOf ? [`gas ${shown(temperature, curveOf.t)} ${temperature.sign}, f ${fixed(curveOf.f, 3)}, Cd ${fixed(p?.discharge_coefficient, 3)}`] : []), ...standIns(live ? p : null)];
+    if (live && (p.independent_flow_parameter ?? null) === null) said.push('no independent flow');
     if (choke !== null) {
       c.font = font(12);
       c.fillStyle = pal.text;
       c.textAlign = 'right';
       c.textBaseline = 'bottom';
-      const base = right - x(choke) < 200 ? bottom - 36 : bottom - 5; // above the notes where they need the width
+      const widest = Math.max(0, ...said.map((n) => n.length)) * 6.6;
+      const base = right - x(choke) < widest + 12 ? bottom - 8 - 15 * said.length : bottom - 5; // above the notes where they need the width
       c.fillText(`choke NPR ${fixed(choke, 3)}`, x(choke) - 5, base - 15);
       c.fillStyle = pal.soft;
       c.fillText(sourceWord(p?.choke_npr_from ?? 'none'), x(choke) - 5, base);
     }
     c.restore();
 
-    const { temperature } = d.units();
-    const said = [curveOf && `gas ${shown(temperature, curveOf.t)} ${temperature.sign}, f ${fixed(curveOf.f, 3)}, Cd ${fixed(p?.discharge_coefficient, 3)}`, ...standIns(live ? p : null)];
-    if (live && (p.independent_flow_parameter ?? null) === null) said.push('no independent flow');
-    refill(notes, said.join(), () => said.filter((n) => n !== null).map((n) => h('div', {}, n)));
+    refill(notes, said.join(), () => said.map((n) => h('div', {}, n)));
 
     if (!live || npr === null) {
       hatch(c, left, top, right - left, bottom - top, pal.soft);
