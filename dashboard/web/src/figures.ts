@@ -5,7 +5,7 @@ import type { AlarmFigures, Priority } from './frames';
 import { clock, seconds } from './time';
 import { fixed } from './units';
 
-interface Line { name: string; value: string; target: string; met: boolean | null; source: string }
+export interface Line { name: string; value: string; target: string; met: boolean | null; source: string }
 
 /** Names of figures that have a target. */
 const titles: Record<string, string> = {
@@ -23,7 +23,7 @@ export function figureLines(f: AlarmFigures): Line[] {
   const line = (figure: string, value: string, name = titles[figure] ?? figure.replaceAll('_', ' ')): Line => {
     const t = targets.get(figure);
     targets.delete(figure);
-    return { name, value, target: t ? (figure.startsWith('share') ? percent(t.target) : fixed(t.target, t.target % 1 === 0 ? 0 : 2)) : '', met: t?.met ?? null, source: t?.source ?? '' };
+    return { name, value, target: t ? (figure.startsWith('share') ? `about ${percent(t.target)}` : t.target === 0 ? 'none' : `≤ ${fixed(t.target, t.target % 1 === 0 ? 0 : 2)}`) : '', met: t?.met ?? null, source: t?.source ?? '' };
   };
   const out = [
     line('raised', String(f.raised), 'Raised'),
@@ -34,6 +34,7 @@ export function figureLines(f: AlarmFigures): Line[] {
     line('standing_mean', fixed(f.standing_mean, 1)),
     line('chattering', (f.chattering ?? []).length === 0 ? '0' : (f.chattering ?? []).map((c) => `${c.rule} ${c.times}×`).join(', ')),
     line('acknowledged_after_s_median', f.acknowledged_after_s_median === null ? '–' : `${fixed(f.acknowledged_after_s_median, 0)} s`),
+    ...(typeof f.stale === 'number' ? [line('stale', String(f.stale), 'Stale: standing for long')] : []),
     line('shelved', String(f.shelved), 'Shelved'),
     line('out_of_service', String(f.out_of_service), 'Out of service'),
   ];

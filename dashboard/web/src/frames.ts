@@ -168,6 +168,7 @@ export interface AlarmFigures {
   standing_now: number;
   standing_peak: number;
   standing_mean: Num;
+  stale?: number;
   chattering: { rule: string; times: number }[] | null;
   shelved: number;
   out_of_service: number;

@@ -37,10 +37,10 @@ export function figuresView(which: () => Which | null): View {
       }
       const f = known;
       refill(body, JSON.stringify(f), () => (f ? figureLines(f) : []).map((l) => h('tr', {},
-        h('th', { scope: 'row' }, l.name), h('td', { class: 'num' }, l.value), h('td', { class: 'num' }, l.target && `≤ ${l.target}`),
+        h('th', { scope: 'row' }, l.name), h('td', { class: 'num' }, l.value), h('td', { class: 'num', title: l.source || null }, l.target),
         h('td', {}, l.target === '' || l.met === null ? '' : l.met ? 'met' : '◇ not met'))));
       text(about, !w ? 'No run is on.' : f ? `${duration(f.seconds)} from ${clock(seconds(f.from))} UTC.${f.graded ? '' : ` Not graded: ${f.why_not ?? 'too short'}.`}` : why);
-      const from = [...new Set((f?.targets ?? []).map((t) => t.source))];
+      const from = [...new Set((f?.targets ?? []).map((t) => t.source.split(': ')[0]))];
       refill(sources, from.join(), () => (from.length === 0 ? [] : [h('div', {}, `Targets: ${from.join('; ')}.`)]));
     },
     destroy: () => undefined,

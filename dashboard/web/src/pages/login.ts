@@ -26,7 +26,7 @@ export function login(place: HTMLElement, why: string): Promise<Session> {
       },
     }, h('h1', {}, 'throatwatch'), h('label', { class: 'field' }, h('span', { class: 'label' }, 'Name'), name), h('label', { class: 'field' }, h('span', { class: 'label' }, 'Password'), password), button, trouble,
       h('p', { class: 'extra' }, 'Alarms are watched and sounded only on a page that is logged in. This display is not protection.'));
-    place.replaceChildren(form);
+    place.replaceChildren(place === document.body ? h('main', {}, form) : form);
     name.focus();
   });
 }
