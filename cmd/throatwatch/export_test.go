@@ -7,10 +7,13 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"strconv"
 	"strings"
 	"testing"
 
 	"github.com/parquet-go/parquet-go"
+
+	"throatwatch/monitor/influx/influxtest"
 )
 
 // rehearsed plays a short test into a data folder and gives the id of its run.
@@ -143,5 +146,60 @@ func TestExportToNowhere(t *testing.T) {
 	}
 	if _, err := os.Lstat(full); err == nil {
 		t.Error("a file that was not written is there")
+	}
+}
+
+// A real database takes the lines of an export as they are, every row once, under the
+// names that its own sink uses.
+func TestExportedLinesInDatabase(t *testing.T) {
+	server := influxtest.Start(t, influxtest.Options{})
+	server.Query("", "CREATE DATABASE hall")
+	data := dataFolder(t)
+	id := rehearsed(t, data)
+	count := func(table, measurement, field string) int64 {
+		t.Helper()
+		out := filepath.Join(t.TempDir(), "table.lines")
+		code, stdout, stderr := invoke(t, "export", id, "--data", data, "--what", table, "--out", out, "--json", "--to", "20")
+		var said exported
+		if err := json.Unmarshal([]byte(stdout), &said); code != 0 || err != nil {
+			t.Fatalf("exit code %d, %v: %s", code, err, stderr)
+		}
+		text, err := os.ReadFile(out)
+		if err != nil {
+			t.Fatal(err)
+		}
+		const most = 5000 // lines in a request
+		lines := strings.SplitAfter(string(text), "\n")
+		for from := 0; from < len(lines); from += most {
+			server.Write("hall", strings.Join(lines[from:min(from+most, len(lines))], ""))
+		}
+		got := server.Query("hall", `SELECT count("`+field+`") FROM `+measurement+` WHERE rig = 'cell_2'`)
+		if len(got) != 1 {
+			t.Fatalf("the database has no %s", measurement)
+		}
+		n, err := got[0].Values[0][1].(json.Number).Int64()
+		if err != nil {
+			t.Fatal(err)
+		}
+		if said.Rows != n && table != "events" {
+			t.Errorf("%s: %d rows were written, the database has %d", table, said.Rows, n)
+		}
+		return n
+	}
+	if n := count("operating-points", "operating_point", "npr"); n < 350 {
+		t.Errorf("%d operating points", n)
+	}
+	count("scans", "channel", "p_baro")
+	count("samples", "sample", "value")
+	count("events", "run", "event")
+	got := server.Query("hall", `SELECT last(npr) FROM operating_point`)
+	at, rows := pointsOf(t, data, id), 0
+	for _, row := range at {
+		if v, err := got[0].Values[0][1].(json.Number).Float64(); err == nil && row[2] == strconv.FormatFloat(v, 'g', -1, 64) {
+			rows++
+		}
+	}
+	if rows == 0 {
+		t.Errorf("no operating point has the NPR %v of the database", got[0].Values[0][1])
 	}
 }
