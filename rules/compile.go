@@ -90,7 +90,7 @@ func Compile(rules []Rule, names []Name, derived ...Derived) (*Set, []Fault) {
 	}
 	for i := range rules {
 		if rules[i].Unknown.Priority != 0 {
-			set.rules = append(set.rules, set.rules[i].doubting(i))
+			set.rules = append(set.rules, set.rules[i].doubting(i, responseFor(rules, lostInstrumentation)))
 		}
 	}
 	return set, nil

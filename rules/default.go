@@ -19,6 +19,15 @@ type Equipment struct {
 	Bellmouth bool
 }
 
+// AllEquipment is that of a rig which has every default rule.
+func AllEquipment() Equipment {
+	return Equipment{
+		Bands:  []egt.Band{{Name: "start", Kind: egt.KindStart, Allowance: second}, {Name: "run", Kind: egt.KindRun, Allowance: second}},
+		Limits: egt.Limits{Spread: 1, Rise: 1, StarterOnce: second, StarterHour: second, Rundown: second},
+		EGT:    true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true,
+	}
+}
+
 // Groups of the default rules: one cause, one first alarm.
 const (
 	groupEGT      = "egt"     // over-temperature
@@ -72,7 +81,7 @@ func Default(q Equipment) []Rule {
 		Title:    "Throat unchoked",
 		Text:     "Throat not choked while choke is expected: margin {choke_margin_percent:%.1}, NPR {npr:.3} against {choke_npr:.3}. Follow the facility's test-point procedure." + notProtection,
 		Caution:  "Flow and thrust now depend on the back pressure; values taken at this point are not those of a choked nozzle. Watch cell depression, rake pressures and indicated EGT.",
-		Response: "Facility procedure for a test point that is lost.",
+		Response: "Facility procedure for a lost test point.",
 	}, Rule{
 		Name: "choke_unknown", When: "choke_armed and not known(choke_state)", Priority: Caution,
 		OnDelay: 3 * second, OffDelay: second, Group: groupSources,

@@ -10,14 +10,14 @@ const doubtSuffix = "_unknown"
 
 // doubting gives the rule that is true while rule i cannot be judged and is not put
 // aside. It is grouped under what took the inputs along.
-func (p *program) doubting(i int) program {
+func (p *program) doubting(i int, response string) program {
 	return program{
 		Rule: Rule{
 			Name: p.Name + doubtSuffix, Priority: p.Unknown.Priority, OnDelay: p.Unknown.After, OffDelay: second,
 			Group:    groupSources,
 			Title:    p.Title + ": cannot be judged",
 			Caution:  "While it is unknown this condition is not watched: its alarm would not be raised.",
-			Response: "Facility procedure for lost instrumentation.",
+			Response: response,
 		},
 		domain: p.domain, doubts: i,
 	}

@@ -179,9 +179,9 @@ func call(ctx context.Context, method, to, token string, body []byte, v any) err
 	case json.Unmarshal(answer, &problem) != nil || problem.Detail == "":
 		return fmt.Errorf("%s: %s", to, res.Status)
 	}
-	text := problem.Detail
+	lines := []string{problem.Detail}
 	for _, f := range problem.Faults {
-		text += "\n" + f.At + ": " + f.Message + "\n" + wrap("      hint: ", f.Hint)
+		lines = append(lines, f.At+": "+f.Message, wrap("      hint: ", f.Hint))
 	}
-	return errors.New(text)
+	return errors.New(strings.Join(lines, "\n"))
 }

@@ -186,6 +186,8 @@ func TestMeanings(t *testing.T) {
 		{"example: suppressed at rest", slices.Contains(oil.SuppressIn, monitor.Off), true},
 		{"example: limits of like:", ruleOf(t, &ex, "vibration_rear_above_caution").Title, "Vibration, rear bearing above 18 mm/s"},
 
+		{"example: a procedure of the facility", ruleOf(t, &ex, "egt_run_max_exceeded").Response, "Follow facility procedure EP-10 for over-temperature."},
+		{"smallest: one that nobody has named", ruleOf(t, &mi, "not_recording").Response, "Follow facility procedure ___ for lost recording."},
 		{"example: who changed the limits", ex.Change, pipeline.Change{
 			Engineer: "Mara Lindqvist", Approver: "Tomas Eklund", Date: "2026-02-20", Note: "Limits document ML5-LIM-C",
 		}},
@@ -215,6 +217,7 @@ func TestMeanings(t *testing.T) {
 		{"options: derived", op.Derived, []rules.Derived{
 			{Name: "egt_slope", Kind: rules.DeriveRate, Of: "egt_indicated_k", Over: 2e9, Period: 20e6},
 			{Name: "rake_noise", Kind: rules.DeriveStdev, Of: "channel.pt_a", Over: 5e9, Period: 20e6},
+			{Name: "margin_mean", Kind: rules.DeriveMean, Of: "choke_margin_percent", Over: 60e9, Period: 20e6},
 			{Name: "rake_apart_for", Kind: rules.DeriveSince, Of: "abs(channel.pt_a - channel.pt_b) > 5 kPa\n  and lit", Period: 20e6},
 			{Name: "lights", Kind: rules.DeriveCount, Of: "lit", Over: 60e9, Period: 20e6},
 		}},
@@ -239,8 +242,11 @@ func TestMeanings(t *testing.T) {
 func TestWarnings(t *testing.T) {
 	for name, want := range map[string][]string{
 		example: nil,
-		minimal: {"minimal.yaml:1:1: change: limits and rules are not approved"},
-		options: {"options.yaml:"},
+		minimal: {"minimal.yaml:1:1: change: limits and rules are not approved", "minimal.yaml:1:1: procedures: no procedure is named for "},
+		options: {
+			"options.yaml:1:1: change: limits", "options.yaml:1:1: procedures: no procedure is named for ",
+			"options.yaml:60:12: derive[2].name: nothing reads \"margin_mean\"",
+		},
 	} {
 		b, _ := load(t, name)
 		var got []string
@@ -250,7 +256,7 @@ func TestWarnings(t *testing.T) {
 				t.Errorf("%s: incomplete: %+v", name, w)
 			}
 		}
-		if len(got) != len(want) || len(got) > 0 && !strings.HasPrefix(got[0], want[0]) {
+		if !slices.EqualFunc(got, want, strings.HasPrefix) {
 			t.Errorf("%s: warnings %q", name, got)
 		}
 	}

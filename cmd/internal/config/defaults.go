@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"encoding/json"
 	"fmt"
+	"slices"
 	"strconv"
 	"strings"
 
@@ -13,8 +14,15 @@ import (
 // defaults gives the default rules of the rig as a rule file. As a text in the
 // bundle they stay what they were when a later program words them anew.
 func (r *rig) defaults() File {
+	list := rules.Default(r.equipment())
+	rules.NameProcedures(list, func(key string) string { return r.procedures[key] })
+	return File{Name: defaultRules, Text: render(list)}
+}
+
+// equipment says what the default rules can build on.
+func (r *rig) equipment() rules.Equipment {
 	s := &r.cfg.Compute.Stations
-	list := rules.Default(rules.Equipment{
+	return rules.Equipment{
 		Bands:     r.cfg.Compute.EGT.Bands,
 		Limits:    r.cfg.Compute.EGT.Limits,
 		EGT:       len(s.EGT) > 0,
@@ -22,8 +30,34 @@ func (r *rig) defaults() File {
 		Speed:     s.Speed >= 0,
 		FuelFlow:  s.FuelFlow >= 0,
 		Bellmouth: s.Bellmouth >= 0,
-	})
-	return File{Name: defaultRules, Text: render(list)}
+	}
+}
+
+// readProcedures reads the facility's procedures, by the situations that default
+// rules are about.
+func (r *rig) readProcedures(m *fields) {
+	n := m.get("procedures")
+	f := n.fields()
+	r.procedures = make(map[string]string)
+	for _, key := range rules.Situations(rules.Default(rules.AllEquipment())) {
+		r.procedures[key] = f.get(key).label("")
+	}
+	f.done()
+	r.blank = n
+}
+
+// warnUnnamed tells of the situations for which a rule in force refers to a procedure
+// that nobody has named.
+func (r *rig) warnUnnamed() {
+	var keys []string
+	for i := range r.cfg.Rules {
+		if key, ok := rules.Unnamed(r.cfg.Rules[i].Response); ok && !slices.Contains(keys, key) {
+			keys = append(keys, key)
+		}
+	}
+	if len(keys) > 0 {
+		r.blank.warn("no procedure is named for "+strings.Join(keys, ", ")+": their alarms show "+rules.Blank, "write procedures: {"+keys[0]+": …}, by the facility's own numbers")
+	}
 }
 
 // DefaultRules gives the text of the default rules in the bundle, to begin a

@@ -33,6 +33,8 @@ type rig struct {
 	limits       []rule // of the channels
 	rules        []rule
 	derived      []derived
+	procedures   map[string]string // of the facility, by situation
+	blank        node              // procedures:, where those that are missing are told
 }
 
 // readRig reads a rig file, all but its rules.
@@ -60,6 +62,7 @@ func readRig(f File) *rig {
 	r.cfg.Run.EndAfter = run.get("end_after").duration(120*second, positive)
 	run.done()
 	r.readChange(m)
+	r.readProcedures(m)
 	r.readDerive(m.get("derive"))
 	r.readRuleNames(m)
 	m.done()

@@ -141,6 +141,7 @@ func readRule(n node) rule {
 // limit is in the reading of the channel: of a gauge channel it is a gauge
 // pressure, whereas rules see absolute ones.
 func (r *rig) readLimits(c *channel, id, title string, s *calib.Spec) {
+	var own []limit
 	for _, item := range c.get("limits").items() {
 		f := item.placed()
 		key, sign := "above", ">"
@@ -152,8 +153,8 @@ func (r *rig) readLimits(c *channel, id, title string, s *calib.Spec) {
 			f.taken = append(f.taken, "above", "below")
 		}
 		d := s.Unit.Dimension
-		limit := f.get(key)
-		level := limit.quantity(d, math.NaN(), bound{func(v float64) bool { return v > s.Low && v < s.High }, "lie inside the range of the channel"})
+		at := f.get(key)
+		level := at.quantity(d, math.NaN(), bound{func(v float64) bool { return v > s.Low && v < s.High }, "lie inside the range of the channel"})
 		level = round12(level)
 		out := rules.Rule{
 			Name:       f.get("name").id(),
@@ -166,7 +167,7 @@ func (r *rig) readLimits(c *channel, id, title string, s *calib.Spec) {
 			SuppressIn: readPhases(f.get("suppress_in")),
 			WorsenBy:   f.get("worsen_by").quantity(difference(d), 0, notNegative),
 			Unknown:    readDoubt(f.get("unknown")),
-			Title:      fmt.Sprintf("%s %s %s", title, key, limit.text()),
+			Title:      fmt.Sprintf("%s %s %s", title, key, at.text()),
 		}
 		if out.Name == "" {
 			out.Name = strings.Join([]string{id, key, priorities()[out.Priority-1]}, "_")
@@ -185,12 +186,58 @@ func (r *rig) readLimits(c *channel, id, title string, s *calib.Spec) {
 		if math.IsNaN(level) {
 			continue // a fault already
 		}
-		f.at["when"] = limit
+		f.at["when"] = at
 		if slices.ContainsFunc(r.limits, func(other rule) bool { return other.Name == out.Name }) {
 			item.fault(fmt.Sprintf("rule %q is there twice", out.Name), "give each limit its own name:, or leave names away when a like: repeats them")
 		}
 		r.limits = append(r.limits, rule{Rule: out, node: item, at: f.at})
+		this := limit{level, key == "above", out.Priority, out.SuppressIn, at}
+		for i := range own {
+			if own[i].contradicts(&this) {
+				break
+			}
+		}
+		own = append(own, this)
 	}
+}
+
+// limit is a limit of a channel among the others of that channel.
+type limit struct {
+	level    float64
+	above    bool
+	priority rules.Priority
+	suppress []monitor.Phase
+	node
+}
+
+// contradicts notes that two limits of a channel cannot both be meant, where there
+// is a phase in which both act.
+func (a *limit) contradicts(b *limit) bool {
+	together := false
+	for p := monitor.Off; p < monitor.NumPhases; p++ {
+		together = together || !slices.Contains(a.suppress, p) && !slices.Contains(b.suppress, p)
+	}
+	if !together {
+		return false
+	}
+	beyond, before := b, a // which of two on the same side lies further out
+	if (b.level < a.level) == b.above {
+		beyond, before = a, b
+	}
+	switch {
+	case a.above == b.above && a.level == b.level:
+		b.fault(fmt.Sprintf("limit %s is there twice", b.text()), "keep one, or suppress each in the phases of the other")
+	case a.above == b.above && beyond.priority < before.priority:
+		b.fault(
+			fmt.Sprintf("limit %s has priority %s, and %s beyond it only %s", before.text(), before.priority, beyond.text(), beyond.priority),
+			"further out the priority is the same or higher",
+		)
+	case a.above != b.above && (a.level <= b.level) == a.above:
+		b.fault(fmt.Sprintf("every value is beyond one of the limits %s and %s", a.text(), b.text()), "above: lies higher than below:")
+	default:
+		return false
+	}
+	return true
 }
 
 // readDoubt reads how a rule that cannot be judged raises an alarm of its own.
@@ -305,6 +352,7 @@ func (r *rig) compileRules() {
 	for i := range r.derived {
 		r.use(set.DerivedReads(i))
 	}
+	r.warnUnnamed()
 	for _, i := range set.Unused() {
 		r.derived[i].at["name"].warn(fmt.Sprintf("nothing reads %q", r.derived[i].Name), "name it in a rule, or leave it away")
 	}
