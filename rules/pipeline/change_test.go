@@ -1,6 +1,7 @@
 package pipeline
 
 import (
+	"bytes"
 	"encoding/json"
 	"errors"
 	"strings"
@@ -172,5 +173,92 @@ func TestRefusedFilesAreNoted(t *testing.T) {
 	text, err = json.Marshal(InForce{})
 	if err != nil || !strings.Contains(string(text), `"refused":null`) {
 		t.Errorf("%s, %v", text, err)
+	}
+}
+
+// A change in the middle of a run, with the engine off and the run still on, steps to
+// the same bits again, also from a checkpoint right before it; what is derived in the
+// same way goes on over it.
+func TestChangeIsSteppedAgain(t *testing.T) {
+	withDerived := func(bundle []byte) (Config, error) {
+		cfg, err := parser(t)(bundle)
+		cfg.Derived = []rules.Derived{
+			{Name: "oil_mean", Kind: rules.DeriveMean, Of: "channel.p_oil", Over: 3 * second, Period: period},
+			{Name: "oil_low_for", Kind: rules.DeriveSince, Of: "channel.p_oil < 30 kPa", Period: period},
+		}
+		if err == nil && cfg.Hash == "two" {
+			cfg.Derived = cfg.Derived[1:]
+		}
+		for i := range cfg.Rules {
+			if cfg.Rules[i].Name == "oil_low" {
+				cfg.Rules[i].When, cfg.Rules[i].Text = "oil_low_for > 4 s", "low for {oil_low_for:s.2}"
+			}
+		}
+		return cfg, err
+	}
+	run := func(restart bool) (digest string, state []byte) {
+		b := newBed(t)
+		b.m, b.s = NewMachine(withDerived), &State{}
+		b.r = ingest.Record{Host: epoch - second}
+		digester := NewDigest()
+		step := func(kind ingest.Kind, payload []byte) {
+			b.r.Kind, b.r.Topic, b.r.Payload = kind, "", payload
+			if kind == ingest.KindMessage {
+				b.r.Topic = topic
+			}
+			for _, o := range b.step() {
+				digester.Add(&o)
+			}
+		}
+		play := func(e engine, d int64) {
+			for end := b.r.Host + d; b.r.Host < end; {
+				at := (b.r.Host/period + 1) * period
+				b.r.Host = at + 3*ms
+				step(ingest.KindMessage, e.pack(at))
+			}
+		}
+		step(ingest.KindBoot, []byte(`{"epoch":1}`))
+		step(ingest.KindConfig, []byte("rig one"))
+		play(running, 8*second)
+		play(atRest, 3500*ms) // the oil is low all the time, and for 4 s only after the change
+		if !b.s.RunActive || b.s.Compute.Phase.Phase != monitor.Off {
+			t.Fatalf("run %v, phase %v", b.s.RunActive, b.s.Compute.Phase.Phase)
+		}
+		if _, early := b.alarm("oil_low"); early {
+			t.Error("the oil alarm came before the change")
+		}
+		if restart {
+			state, err := b.s.Encode(true)
+			if err != nil {
+				t.Fatal(err)
+			}
+			if b.s, err = Decode(state); err != nil {
+				t.Fatal(err)
+			}
+			b.m = NewMachine(withDerived)
+			if err := b.m.Restore(b.s); err != nil {
+				t.Fatal(err)
+			}
+		}
+		step(ingest.KindConfig, []byte("rig two"))
+		play(atRest, second)
+		if b.s.InForce.Hash != "two" {
+			t.Fatalf("in force %+v", b.s.InForce)
+		}
+		a, ok := b.alarm("oil_low")
+		if !ok || !strings.HasPrefix(a.Text, "low for 4.") {
+			t.Errorf("alarm %v: %q", ok, a.Text)
+		}
+		state, err := b.s.Encode(true)
+		if err != nil {
+			t.Fatal(err)
+		}
+		return digester.String(), state
+	}
+	digest, state := run(false)
+	for _, restart := range []bool{false, true} {
+		if d, s := run(restart); d != digest || !bytes.Equal(s, state) {
+			t.Errorf("restart %v: digest %s, want %s; the state is the same: %v", restart, d, digest, bytes.Equal(s, state))
+		}
 	}
 }
