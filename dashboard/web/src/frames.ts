@@ -92,8 +92,8 @@ export interface RigInfo {
 }
 
 export interface Source { topic: string; age_s: Num; messages: number; skew_s: Num; alive: boolean }
-/** Whether a part beside the watch follows, and what is said of it. */
-export interface PartHealth { ok: boolean; text: string }
+/** A part beside the watch that fails: since when, why, and how much waits for it. */
+export interface PartFailure { since: string; why: string; behind: number }
 export interface Session { filter: string; connected: boolean }
 
 /** A line of the operator log; fields that are not used are left out. */
@@ -194,8 +194,8 @@ export interface StatusFrame extends Numbered {
   rules_unknown: number;
   sessions: Session[] | null;
   clock_skew_s?: Num;
-  database?: PartHealth | null; // where the site has one
-  webhook?: PartHealth | null;
+  database?: PartFailure | null; // null while it follows, or where there is none
+  webhook?: PartFailure | null;
 }
 
 export interface HelloFrame extends Numbered {

@@ -19,7 +19,8 @@ export function pathParts(s: StatusFrame, dataAge_: number | null): PathPart[] {
   ];
   for (const [key, name] of [['database', 'Site database'], ['webhook', 'Webhook']] as const) {
     const part = s[key];
-    if (part) out.push({ name, said: part.text || (part.ok ? 'follows' : 'does not follow'), bad: !part.ok });
+    if (part) out.push({ name, said: `fails since ${clock(seconds(part.since))} UTC: ${part.why}; ${fixed(part.behind, 0)} waiting`, bad: true });
+    else if (part === null) out.push({ name, said: 'no failure, or none is set up', bad: false });
   }
   out.push({ name: 'Clock', said: s.clock ? 'steady' : `a source differs${typeof s.clock_skew_s === 'number' ? ` by ${fixed(s.clock_skew_s, 1)} s` : ''}, or a step was seen`, bad: !s.clock });
   return out;

@@ -72,5 +72,6 @@ export const sourceWord = (s: string): string => sources[s] ?? s.replaceAll('_',
 
 /** What is wrong with a sensor, and whether that is proven; "" for nothing. */
 export function findingText(v: ChannelValue): string {
-  return v.finding ? `${v.finding.replaceAll('_', ' ')} (${v.proven ? 'proven' : 'suspected'})` : '';
+  const what = v.finding === 'departs' ? 'departs, not told yet how' : v.finding?.replaceAll('_', ' ');
+  return what ? `${what} (${v.proven ? 'proven' : 'suspected'})` : '';
 }

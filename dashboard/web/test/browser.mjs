@@ -3,9 +3,9 @@
 // a rig file. SHOTS is a folder for screenshots; SHOTS_README=1 renews the pictures
 // of the README. Ports, data and the browser's profile are its own.
 import assert from 'node:assert/strict';
-import { mkdirSync, mkdtempSync, readFileSync, rmSync, writeFileSync } from 'node:fs';
+import { appendFileSync, cpSync, mkdirSync, mkdtempSync, readFileSync, rmSync, writeFileSync } from 'node:fs';
 import { tmpdir } from 'node:os';
-import { join } from 'node:path';
+import { basename, dirname, join } from 'node:path';
 import { fileURLToPath } from 'node:url';
 import { gzipSync } from 'node:zlib';
 import axe from 'axe-core';
@@ -616,7 +616,9 @@ try {
   writeFileSync(join(place, 'password'), 'quince and medlar\n');
   for (const [name, role] of [['l.hazel', 'viewer'], ['r.sorrel', 'engineer']]) command(program, 'user', 'add', name, '--role', role, '--users', users, '--password-file', join(place, 'password'));
   const guarded = join(place, 'guarded');
-  daemon = await watch(program, rig, guarded, port, '--rehearse', '--quick', '--users', users);
+  cpSync(dirname(rig), join(place, 'rigs'), { recursive: true });
+  const own = join(place, 'rigs', basename(rig));
+  daemon = await watch(program, own, guarded, port, '--rehearse', '--quick', '--users', users);
   away = false;
   page = live;
   const logIn = async (name, password) => {
@@ -652,6 +654,20 @@ try {
     await shoot('swap');
     await q('confirm').click();
     await until('taken', async () => (await page.getByRole('dialog').count()) === 0);
+    const hash = (await words('config')).match(/hash\s*([0-9a-f]+)/)?.[1];
+    appendFileSync(own, '# revised\n');
+    await q('reload-files').click();
+    await page.locator('[data-q="field-reason"]').fill('limits revised');
+    away = true; // what is refused is an error to the console
+    await q('confirm').click();
+    await until('refused: the engine is not off', async () => /Not done: .*engine.*off/is.test(await page.getByRole('dialog').innerText()));
+    await shoot('reload-refused');
+    await page.keyboard.press('Escape');
+    away = false;
+    assert.ok(hash && (await words('config')).includes(hash), 'the old files stay in force');
+    writeFileSync(own, readFileSync(rig)); // as it was, for the next start
+    assert.match(await words('files'), /approved/);
+    await until('the refused change is told', async () => /Refused/.test(await words('config')));
     await page.goto(`${server}#/log`);
     await until('the entry', async () => /sensor swapped\s+egt_3 serial TC-991 from [\d:]+ UTC\s+r\.sorrel, engineer\s+open circuit at warm-up/.test(await q('log').innerText()));
   });
@@ -660,7 +676,7 @@ try {
     away = true;
     await page.goto(`${server}#/watch`);
     await daemon.kill();
-    daemon = await watch(program, rig, guarded, port, '--rehearse', '--quick', '--users', users);
+    daemon = await watch(program, own, guarded, port, '--rehearse', '--quick', '--users', users);
     const again = page.getByRole('dialog', { name: 'Log in again' });
     await again.waitFor();
     assert.ok(await page.locator('.veiled[data-veiled]').count(), 'what is under it is not present');

@@ -41,5 +41,6 @@ test('the path of the data names what does not work', () => {
   assert.deepEqual(said({ input_path: false }), ['Broker: deaf: the probe message does not return']);
   assert.deepEqual(said({ sessions: [{ filter: 'a', connected: true }, { filter: 'b', connected: false }] }), ['Broker: 1 of 2 sessions not connected']);
   assert.deepEqual(said({ recording: false, not_recording_since: rfc3339(t0) }), ['Archive: not recording since 09:00:00 UTC']);
+  assert.deepEqual(said({ webhook: { since: rfc3339(t0), why: 'connection refused', behind: 3 }, database: null }), ['Webhook: fails since 09:00:00 UTC: connection refused; 3 waiting']);
   assert.deepEqual(said({ sources: [{ topic: 't', age_s: 9, messages: 1, skew_s: 0, alive: false }] }), ['Sources: 1 silent']);
 });

@@ -12,6 +12,8 @@ test('what each role may do', () => {
   for (const d of operator) assert.deepEqual([refusal(who('viewer'), d), refusal(who('operator'), d), refusal(who('engineer'), d)], ['for an operator', '', ''], d);
   for (const d of engineer) assert.deepEqual([refusal(who('viewer'), d), refusal(who('operator'), d), refusal(who('engineer'), d)], ['for an engineer', 'for an engineer', ''], d);
   assert.equal(refusal(openSession, 'acknowledge'), '', 'a server without users');
+  assert.equal(refusal(openSession, 'config'), '', 'whoever reaches it may take changed files into force');
+  assert.equal(refusal(openSession, 'swap'), 'for an engineer');
 });
 
 test('an answer of the server is read without trust', () => {

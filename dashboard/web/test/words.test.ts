@@ -1,6 +1,6 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
-import { forecastText, standIns, steadyText } from '../src/words';
+import { findingText, forecastText, standIns, steadyText } from '../src/words';
 import { point, t0 } from './samples';
 
 test('steadiness names its reason, and nothing where it is not told', () => {
@@ -17,6 +17,14 @@ test('a forecast is a time with its 95 % bounds, or the reason why there is none
   assert.equal(forecastText(12, null, null, null), 'in 12 s');
   assert.equal(forecastText(null, null, null, 'levelling'), 'levels off before');
   assert.equal(forecastText(undefined, undefined, undefined, undefined), '–');
+});
+
+test('what is wrong with a sensor is proven or suspected', () => {
+  const v = { value: 1, raw: 1, quality: 'good', age_s: 0 };
+  assert.equal(findingText({ ...v, finding: 'open', proven: true }), 'open (proven)');
+  assert.equal(findingText({ ...v, finding: 'hot_streak', proven: false }), 'hot streak (suspected)');
+  assert.equal(findingText({ ...v, finding: '', proven: false }), '');
+  assert.equal(findingText(v), '', 'a server that does not tell');
 });
 
 test('what stands in is named, each once', () => {
