@@ -46,6 +46,26 @@ var lags = [...]int64{3e9, 6e9, 12e9, 25e9, 50e9, 100e9, 250e9}
 type Sense struct {
 	Pressure bool    // total pressures; else thermocouples
 	Limit    float64 // departure from its own pattern that is told, K or Pa
+
+	parts parts // of the last scan, which most often are those of the next
+}
+
+// parts are the parts of the way that first-order lags go in dt.
+type parts struct {
+	dt            int64
+	quick, smooth float64
+	lags          [len(lags)]float64
+}
+
+// of gives the parts for dt.
+func (p *parts) of(dt int64) *parts {
+	if p.dt != dt || dt == 0 {
+		*p = parts{dt: dt, quick: part(dt, restless), smooth: part(dt, smooth)}
+		for k, tau := range lags {
+			p.lags[k] = part(dt, tau)
+		}
+	}
+	return p
 }
 
 // Hold is since when a condition is true.
@@ -179,11 +199,8 @@ func (w *Watch) level(s *State, values []float64, quality []monitor.Quality) (le
 
 // all judges every probe that is read. gauge is by how much the group is above base.
 func (c *Sense) all(f *Suspects, w *Watch, s *State, t, dt int64, level, gauge float64, values []float64, quality []monitor.Quality, base float64) {
-	var parts [len(lags)]float64
-	for k, tau := range lags {
-		parts[k] = part(dt, tau)
-	}
-	f.Lagged += parts[2] * (level - f.Lagged)
+	by := c.parts.of(dt)
+	f.Lagged += by.lags[2] * (level - f.Lagged)
 	for i := range f.Probes {
 		p, of := &f.Probes[i], &s.Probes[i]
 		if !quality[i].Usable() {
@@ -192,7 +209,7 @@ func (c *Sense) all(f *Suspects, w *Watch, s *State, t, dt int64, level, gauge f
 		}
 		// A pattern is one of hot gas: cold metal has another.
 		p.Usual = of.Learned > 0 && of.Learned >= w.Learn && (c.Pressure || !(gauge < apart))
-		c.enter(p, values[i], values[i]-of.Offset, level, dt, &parts)
+		c.enter(p, values[i], values[i]-of.Offset, level, by)
 		if !c.short(p, t, values[i], level, base) && !c.slow(p, f, t, level) {
 			c.depart(p, t, values[i]-base, gauge)
 		}
@@ -202,25 +219,24 @@ func (c *Sense) all(f *Suspects, w *Watch, s *State, t, dt int64, level, gauge f
 // part is the part of the way that a first-order lag of tau goes in dt.
 func part(dt, tau int64) float64 { return -math.Expm1(-float64(dt) / float64(tau)) }
 
-// enter takes a reading v of a probe in; y is v less its pattern, parts is part for each
-// of the lags.
-func (c *Sense) enter(p *Suspect, v, y, level float64, dt int64, parts *[len(lags)]float64) {
+// enter takes a reading v of a probe in; y is v less its pattern.
+func (c *Sense) enter(p *Suspect, v, y, level float64, by *parts) {
 	if !p.Known {
 		p.Known, p.Value, p.Depart = true, v, y-level
 		p.sync(y, level)
 		return
 	}
-	p.Value += part(dt, restless) * (v - p.Value)
-	p.Depart += part(dt, smooth) * (y - level - p.Depart)
+	p.Value += by.quick * (v - p.Value)
+	p.Depart += by.smooth * (y - level - p.Depart)
 	if with := inStep * c.Limit; math.Abs(p.Depart) < with && math.Abs(y-level) < with {
 		p.sync(y, level)
 		return
 	}
 	p.Moved, p.Most = max(p.Moved, math.Abs(level-p.From)), max(p.Most, math.Abs(p.Depart))
-	seconds := float64(dt) / 1e9
+	seconds := float64(by.dt) / 1e9
 	p.Behind[0] += seconds * (y - level) * (y - level)
 	for k := range lags {
-		p.Lagged[k] += parts[k] * (level - p.Lagged[k])
+		p.Lagged[k] += by.lags[k] * (level - p.Lagged[k])
 		d := y - p.Lagged[k]
 		p.Behind[k+1] += seconds * d * d
 	}
