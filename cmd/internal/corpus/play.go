@@ -238,16 +238,22 @@ func (tr *truth) calm() bool {
 	return true
 }
 
-// sensorFaults are the faults that strike a sensor, and are none of the process.
+// sensorFaults are the faults that strike one sensor, and streaks of hot gas.
 func (c *Corpus) sensorFaults(list []rehearsal.Fault) []fault {
 	var out []fault
 	for _, f := range list {
 		i := c.channel(f.Channel)
-		if i < 0 || f.Kind == rehearsal.HotStreak {
+		if i < 0 {
 			continue
 		}
-		ch := &c.cfg.Compute.Channels[i]
-		out = append(out, fault{i, int64(f.At), int64(f.At + f.For), provenAfter(f.Kind, ch.Stuck)})
+		one := fault{channel: i, from: int64(f.At), to: int64(f.At + f.For), proven: provenAfter(f.Kind, c.cfg.Compute.Channels[i].Stuck)}
+		if f.Kind == rehearsal.HotStreak {
+			one.heat = rehearsal.StreakHeat
+			if f.Size > 0 {
+				one.heat *= f.Size
+			}
+		}
+		out = append(out, one)
 	}
 	return out
 }

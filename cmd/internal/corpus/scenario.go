@@ -8,6 +8,7 @@ import (
 	"throatwatch/cmd/internal/rehearsal"
 	"throatwatch/monitor/egt"
 	"throatwatch/monitor/unit"
+	"throatwatch/rules"
 	"throatwatch/rules/pipeline"
 )
 
@@ -83,19 +84,20 @@ type writer struct {
 	arm  float64
 }
 
-// kinds are the kinds of run with events, with the number of each that an hour of
-// calm goes with in the full corpus.
+// kinds are the kinds of run with events, and how many of each make the corpus: enough
+// for 300 events of every rule that warns.
 var kinds = []struct {
 	name  string
 	runs  int
 	write func(*writer)
 }{
-	{"over-temperature", 120, (*writer).overTemperature},
-	{"starts", 120, (*writer).starts},
+	{"over-temperature", 220, (*writer).overTemperature},
+	{"starts", 320, (*writer).starts},
 	{"choke", 60, (*writer).choke},
-	{"channels", 60, (*writer).channels},
-	{"lost", 80, (*writer).lost},
+	{"channels", 90, (*writer).channels},
+	{"lost", 120, (*writer).lost},
 	{"flame-out", 60, (*writer).flameOut},
+	{"streaks", 60, (*writer).streaks},
 }
 
 // newRun writes run number n of a kind; its seed and n alone say what happens.
@@ -335,7 +337,11 @@ func (w *writer) channels() {
 		}
 		ch := &w.cfg.Compute.Channels[l.channel]
 		u := tr.u95(l.channel, l.value)
-		for range 4 {
+		n := 3
+		if r.Priority == rules.Warning {
+			n = 10
+		}
+		for range n {
 			ramp := w.in(0.3, 1)
 			if ch.MaxRate > 0 {
 				ramp = max(ramp, (ch.High-ch.Low)/ch.MaxRate)
@@ -397,13 +403,24 @@ func (w *writer) flameOut() {
 	for range 6 {
 		speed := w.in(0.8, 0.95)
 		w.hold(12, speed)
-		if w.chance(3) { // a burner that streaks: one probe truly hot
-			w.fault(rehearsal.HotStreak, w.id(one(w, w.cfg.Compute.Stations.EGT)), -9, w.in(2, 9))
-			w.faults[len(w.faults)-1].Size = w.in(0.5, 2)
-		}
 		w.add(rehearsal.Segment{Name: "quench", Seconds: w.in(0.3, 6), Speed: speed, Fuel: true, Quench: true})
 		w.hold(6, speed)
 		w.hold(8, w.idle+0.1)
+	}
+	w.stop()
+}
+
+// streaks are burners that streak: the gas at one probe is truly hotter, once the
+// pattern of the harness is known.
+func (w *writer) streaks() {
+	w.start()
+	speed := w.in(w.idle+0.1, 0.9)
+	w.hold(w.in(130, 150), speed)
+	for range 6 {
+		seconds := w.in(3, 25)
+		w.fault(rehearsal.HotStreak, w.id(one(w, w.cfg.Compute.Stations.EGT)), 1, seconds)
+		w.faults[len(w.faults)-1].Size = w.in(0.2, 2)
+		w.hold(seconds+w.in(25, 35), speed)
 	}
 	w.stop()
 }
@@ -452,16 +469,16 @@ func (w *writer) quiet(seconds float64) {
 
 // near takes a channel near one of its limits for a while.
 func (w *writer) near(tr *truth, seconds float64) {
-	var rules []string
+	var names []string
 	for _, r := range w.cfg.Rules {
 		if _, ok := tr.limits[r.Name]; ok {
-			rules = append(rules, r.Name)
+			names = append(names, r.Name)
 		}
 	}
-	if len(rules) == 0 {
+	if len(names) == 0 {
 		return
 	}
-	l := tr.limits[one(w, rules)]
+	l := tr.limits[one(w, names)]
 	ch := &w.cfg.Compute.Channels[l.channel]
 	if l.channel == w.cfg.Compute.Stations.Speed {
 		return // the rest of the engine would not agree with it

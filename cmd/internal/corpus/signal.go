@@ -24,11 +24,13 @@ type signal struct {
 	hidden  bool    // nothing proves the fault (yet)
 }
 
-// fault is a fault of a sensor with the time after which it must be known.
+// fault is a fault of a sensor with the time after which it must be known, or gas that
+// is hotter at one probe.
 type fault struct {
 	channel  int
-	from, to int64 // ns since the begin
-	proven   int64 // ns after from; < 0 = never
+	from, to int64   // ns since the begin
+	proven   int64   // ns after from; < 0 = never
+	heat     float64 // K, of the gas: no fault
 }
 
 const (
@@ -80,7 +82,7 @@ func (s *signals) step(t *rehearsal.Truth) {
 		c.faulty, c.hidden = false, false
 		for k := range s.faults {
 			f := &s.faults[k]
-			if since := s.t - s.begin - f.from; f.channel == i && since >= -s.period && s.t-s.begin < f.to+recovers {
+			if since := s.t - s.begin - f.from; f.channel == i && f.heat == 0 && since >= -s.period && s.t-s.begin < f.to+recovers {
 				c.faulty = true
 				c.hidden = c.hidden || f.proven < 0 || since < f.proven || s.t-s.begin >= f.to
 			}

@@ -122,6 +122,8 @@ type truth struct {
 	after    [2]afterglow // surely and possibly since the fuel is off
 	spread   [2]float64   // K, of the harness
 	cranked  [2]cranking  // surely and possibly
+	quiet    int64        // ns for which the rotor has moved little
+	learned  int64        // ns of steady running with a sound harness
 	rules    []rules.Rule
 	expect   []expectation
 }
@@ -335,6 +337,12 @@ func (tr *truth) aftermath(dt int64) {
 			lo, hi = min(lo, c.reads), max(hi, c.reads)
 		}
 	}
+	if tr.quiet += dt; !tr.fast[0] || math.Abs(tr.cutoff) > ph.MoveRate/2 {
+		tr.quiet = 0
+	}
+	if tr.quiet > 2*ph.SteadyAfter && !slices.ContainsFunc(st.EGT, func(i int) bool { return tr.ch[i].faulty }) {
+		tr.learned += dt
+	}
 	both := math.Sqrt2 * tr.u95(st.EGT[0], 0)
 	tr.spread = [2]float64{soundHi - soundLo - both, hi - lo + both}
 }
@@ -486,6 +494,8 @@ func (tr *truth) named(name string) condition {
 	case "egt_spread":
 		limit := tr.cfg.Compute.EGT.Limits.Spread
 		return plain(tr.spread[1] > limit, tr.harness.sure && tr.spread[0] > limit)
+	case "egt_hot_streak":
+		return plain(tr.streak())
 	case "egt_rise":
 		limit := tr.cfg.Compute.EGT.Limits.Rise
 		sure, maybe := &tr.after[0], &tr.after[1]
@@ -511,6 +521,30 @@ func (tr *truth) named(name string) condition {
 		return tr.part(pipeline.PartRecording)
 	}
 	return condition{}
+}
+
+// streak tells whether a probe of the harness possibly, or surely, reads hotter than its
+// pattern by more than its limit. Every fault may look like that, a streak must when the
+// pattern is known and the filters have followed.
+func (tr *truth) streak() (may, must bool) {
+	st := &tr.cfg.Compute.Stations
+	const (
+		known   = 90 * second // three times what learning takes
+		follows = 9 * second  // lag of a probe, filter of the departure, and its hold of 3 s
+	)
+	limit := st.EGTWatch.Departure
+	if limit == 0 {
+		limit = 40 // K, where none is stated, from the documents
+	}
+	now := tr.t - tr.begin
+	for _, f := range tr.faults {
+		if !slices.Contains(st.EGT, f.channel) || now < f.from || now >= f.to+recovers {
+			continue
+		}
+		may = true
+		must = must || f.heat > 1.3*limit && now > f.from+follows && now < f.to && tr.learned > known && tr.quiet > follows && tr.harness.sure
+	}
+	return may, must && tr.harness.doubtful == 0
 }
 
 // part judges a part of the daemon.

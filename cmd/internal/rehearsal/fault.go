@@ -214,12 +214,15 @@ func (a *active) at(t time.Duration) bool {
 	return t >= a.At && (a.For == 0 || t < a.At+a.For)
 }
 
+// StreakHeat is by how much the gas is hotter at a probe in a streak of size 1, K.
+const StreakHeat = 80.0
+
 // heat gives what the sensor of channel i feels on top, K.
 func (r *Rig) heat(i int) float64 {
 	var k float64
 	for _, f := range r.faults {
 		if f.Kind == HotStreak && f.channel == i && f.at(r.now) {
-			k += 80 * f.Size
+			k += StreakHeat * f.Size
 		}
 	}
 	return k

@@ -66,6 +66,9 @@ func TestScript(t *testing.T) {
 	})
 	t.Run("day", func(t *testing.T) {
 		channel, truths := playScript(t, Options{Seed: 1, Rate: 20, Plan: running(), Day: Day{Ambient: 303, Barometer: 97000, Humidity: 0.9, Depression: 900}})
+		if first := truths[0].Indicated[channel("egt_1")]; math.Abs(first-303) > 1 {
+			t.Errorf("the harness begins at %g K, want that of the day", first)
+		}
 		last := truths[len(truths)-1].Indicated
 		for _, want := range []struct {
 			id         string

@@ -61,6 +61,7 @@ func newSensors(c *compute.Config, rate float64, hold []int64, p *plant, rng *ra
 			return nil, err
 		}
 		s.x = s.input(p, 0)
+		s.sound = s.x
 		u := &ch.Uncertainty
 		// A good instrument lies well inside the uncertainty that is stated for it.
 		u95 := u.U95(ch.Low+0.3*(ch.High-ch.Low), ch.Low, ch.High)
