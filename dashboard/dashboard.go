@@ -119,6 +119,7 @@ func (s *Server) routes() map[string]handler {
 		"GET /api/runs/{id}/messages":         s.messages,
 		"GET /api/runs/{id}/series":           s.series,
 		"GET /api/runs/{id}/export":           s.export,
+		"GET /api/runs/{id}/points":           s.testPoints,
 		"POST /api/runs/{id}/marks":           s.mark,
 		"POST /api/runs/{id}/entries":         s.entry,
 		"GET /api/runs/{id}/log":              s.operatorLog,

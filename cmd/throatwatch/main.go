@@ -39,6 +39,7 @@ func commands() []command {
 		{"note", "keep, tag or comment a stored run", noteCommand},
 		{"delete", "delete a stored run", deleteCommand},
 		{"replay", "step a stored run again, and compare its digest", replayCommand},
+		{"points", "test points of a stored run with their uncertainty", pointsCommand},
 		{"export", "write a table of a stored run for other programs", exportCommand},
 		{"import", "make a run of a recording of another data system", importCommand},
 		{"verify", "read stored runs to the last byte and step them again", verifyCommand},

@@ -364,9 +364,29 @@ func TestOfMean(t *testing.T) {
 			t.Errorf("%s ± %g, want %g", q.Info().Name, u[q]*uncertainty.Coverage, want)
 		}
 	}
-	for _, q := range []monitor.Quantity{monitor.ThroatMach, monitor.NPRU95, monitor.PChoked, monitor.ReferredFlow} {
+	for _, q := range []monitor.Quantity{monitor.ThroatMach, monitor.NPRU95, monitor.PChoked} {
 		if !math.IsNaN(u[q]) {
 			t.Errorf("%s ± %g", q.Info().Name, u[q])
+		}
+	}
+	// By hand: X θ^a δ^b with T2 and p2 of 1 K and 1 Pa each, EGT over θ itself.
+	unit := 1 / uncertainty.Coverage
+	relative := func(q monitor.Quantity) float64 { return u[q] / p.V[q] }
+	root := p.V[monitor.Speed] / p.V[monitor.ReferredSpeed] // √θ
+	t2 := unit / (288.15 * root * root)
+	p2 := unit / (101325 * p.V[monitor.GrossThrust] / p.V[monitor.ReferredThrust])
+	for _, tt := range []struct {
+		q, of monitor.Quantity
+		a, b  float64
+	}{
+		{monitor.ReferredFlow, monitor.MassFlow, 0.5, 1},
+		{monitor.ReferredSpeed, monitor.Speed, 0.5, 0},
+		{monitor.ReferredThrust, monitor.GrossThrust, 0, 1},
+		{monitor.ReferredEGT, monitor.EGTIndicated, 1, 0},
+	} {
+		want := math.Hypot(relative(tt.of), math.Hypot(tt.a*t2, tt.b*p2))
+		if !near(relative(tt.q), want, 1e-9) {
+			t.Errorf("%s ± %g relative, want %g", tt.q.Info().Name, relative(tt.q), want)
 		}
 	}
 }

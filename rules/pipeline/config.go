@@ -1,6 +1,8 @@
 package pipeline
 
 import (
+	"time"
+
 	"throatwatch/monitor/align"
 	"throatwatch/monitor/compute"
 	"throatwatch/rules"
@@ -15,6 +17,17 @@ type RigInfo struct {
 	EngineBuild   string `json:"engine_build"`
 	NozzleSerial  string `json:"nozzle_serial"`
 	LimitsVersion string `json:"limits_version"`
+	TimeZone      string `json:"time_zone"` // of the facility, a name of the IANA database; "" = UTC
+}
+
+// Zone gives the facility's time zone, in which people are told times; UTC where none is
+// stated, or none of this name is known.
+func (r *RigInfo) Zone() *time.Location {
+	zone, err := time.LoadLocation(r.TimeZone) // "" is UTC
+	if err != nil {
+		return time.UTC
+	}
+	return zone
 }
 
 // RunConfig says when a run begins and ends by the state of the engine.

@@ -55,7 +55,7 @@ func ReduceStretch(ctx context.Context, f *runfile.File, codec *archive.Codec, c
 	tp := TestPoint{From: from, To: to, Values: make([]steady.Value, monitor.NumQuantities)}
 	pasts := make([]steady.Past, monitor.NumQuantities)
 	shift := w.Width - from // the stretch begins with the second bin
-	err := rows(ctx, f, codec, ChunkPoints, from, to, func(c *archive.Chunk, first, last int) {
+	err := Rows(ctx, f, codec, ChunkPoints, nil, from, to, func(c *archive.Chunk, first, last int) {
 		tp.Scans += last - first
 		for i := range c.Columns {
 			col := &c.Columns[i]
@@ -95,11 +95,16 @@ func ReduceStretch(ctx context.Context, f *runfile.File, codec *archive.Codec, c
 	return tp, nil
 }
 
-// rows calls fn for the chunks of a kind that have rows of a stretch, and which.
-func rows(ctx context.Context, f *runfile.File, codec *archive.Codec, kind string, from, to int64, fn func(c *archive.Chunk, first, last int)) error {
+// Rows calls fn for the chunks of a kind that have rows of a stretch, from (inclusive)
+// to to (exclusive), ns UTC, and tells which; c is valid until fn returns. Columns names
+// those that are read, nil for all. Errors are those of the run file and of the codec.
+func Rows(
+	ctx context.Context, f *runfile.File, codec *archive.Codec, kind string, columns []string, from, to int64,
+	fn func(c *archive.Chunk, first, last int),
+) error {
 	var c archive.Chunk
 	return f.Chunks(ctx, kind, from, to, func(stored *runfile.Chunk) error {
-		if err := codec.Decode(&c, stored.Bytes, nil); err != nil {
+		if err := codec.Decode(&c, stored.Bytes, columns); err != nil {
 			return err
 		}
 		first, _ := slices.BinarySearch(c.Times, from)
@@ -116,7 +121,7 @@ func meanScan(ctx context.Context, f *runfile.File, codec *archive.Codec, cfg *C
 	scan.T, scan.N = to-cfg.Align.Period, 1
 	all := 0
 	used := make([]int, len(channels))
-	err := rows(ctx, f, codec, ChunkChannels, from, to, func(c *archive.Chunk, first, last int) {
+	err := Rows(ctx, f, codec, ChunkChannels, nil, from, to, func(c *archive.Chunk, first, last int) {
 		all += last - first
 		for i := range c.Columns {
 			id, ok := strings.CutPrefix(c.Columns[i].Name, "channel.")

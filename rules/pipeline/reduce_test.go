@@ -182,3 +182,44 @@ func TestReduceStretchRefuses(t *testing.T) {
 		}
 	}
 }
+
+// Against a reduction of its own: the plain mean of the stored rows, and for noise of an
+// AR(1) process with coefficient ρ the standard error s √((1 + ρ)/((1 − ρ) n)), the
+// effective sample size of Zięba, Metrol. Meas. Syst. 17 (2010) 3, from memory. The
+// effective size is an estimate from 60 s, so its mean over 15 runs is compared.
+func TestReduceStretchAgainstPlain(t *testing.T) {
+	cfg := sure(t)
+	const n, runs = 1200, 15
+	rho := math.Exp(-float64(period) / float64(second))
+	ratio := 0.0
+	for seed := range uint64(runs) {
+		f := stretch(t, &cfg, n, 100+seed)
+		codec := archive.NewCodec()
+		tp, err := ReduceStretch(t.Context(), f, codec, &cfg, epoch, epoch+n*period)
+		if err != nil {
+			t.Fatal(err)
+		}
+		var rows []float64
+		name := monitor.RakePressure.Info().Name
+		if err := Rows(t.Context(), f, codec, ChunkPoints, []string{name}, epoch, epoch+n*period, func(c *archive.Chunk, first, last int) {
+			rows = append(rows, c.Columns[0].Float[first:last]...)
+		}); err != nil {
+			t.Fatal(err)
+		}
+		mean, deviation := 0.0, 0.0
+		for _, v := range rows {
+			mean += v / n
+		}
+		for _, v := range rows {
+			deviation += (v - mean) * (v - mean) / (n - 1)
+		}
+		v := &tp.Values[monitor.RakePressure]
+		if len(rows) != n || math.Abs(v.Mean/mean-1) > 1e-12 || math.Abs(v.SD/math.Sqrt(deviation)-1) > 1e-9 {
+			t.Fatalf("%d rows: mean %.9g, plain %.9g; deviation %.9g, plain %.9g", len(rows), v.Mean, mean, v.SD, math.Sqrt(deviation))
+		}
+		ratio += v.TypeA.U / math.Sqrt(deviation*(1+rho)/(1-rho)/n) / runs
+	}
+	if math.Abs(ratio-1) > 0.15 {
+		t.Errorf("Type A is %.3f of that of the AR(1) process", ratio)
+	}
+}

@@ -1,0 +1,89 @@
+package main
+
+import (
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"io"
+	"net/url"
+
+	"github.com/spf13/pflag"
+
+	"throatwatch/cmd/internal/watch"
+	"throatwatch/dashboard/points"
+	"throatwatch/ingest/runfile"
+)
+
+// pointsCommand prints the test points of a stored run.
+func pointsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
+	fs := newFlags("points RUN", "Reduce steady stretches of a stored run, stretches beside its marks, or given ones to one value per quantity,\n"+
+		"with uncertainty and with what is doubtful. Times are s of the run, or as 2026-03-02T09:00:00Z.", stderr)
+	data := fs.String("data", "data", "data folder")
+	fs.String("at", "auto", "auto: where the engine was steady; marks: beside each mark")
+	fs.StringArray("stretch", nil, "a stretch as 120s..180s instead; may be given more than once")
+	fs.String("from", "", "look from here on (default: the start of the run)")
+	fs.String("to", "", "look up to here (default: its end)")
+	fs.String("least", "10s", "with --at auto, the shortest stretch")
+	fs.String("before", "0s", "with --at marks, time before each mark")
+	fs.String("after", "30s", "with --at marks, time after each mark")
+	format := fs.String("format", "table", "table, csv or json")
+	rest, code := parseArgs(fs, args, stderr)
+	if code >= 0 {
+		return code
+	}
+	if len(rest) != 1 {
+		_, _ = fmt.Fprintln(stderr, "throatwatch points: give one run; `throatwatch runs` lists them")
+		return 2
+	}
+	var write func(*points.Table) error
+	switch *format {
+	case "table":
+		write = func(t *points.Table) error { return t.WriteTable(stdout) }
+	case "csv":
+		write = func(t *points.Table) error { return t.WriteCSV(stdout) }
+	case "json":
+		write = func(t *points.Table) error { return printJSON(stdout, t) }
+	default:
+		_, _ = fmt.Fprintf(stderr, "throatwatch points: --format %q: give table, csv or json\n", *format)
+		return 2
+	}
+	query := queryOf(fs, "at", "from", "to", "least", "before", "after")
+	query["stretch"], _ = fs.GetStringArray("stretch") // it is one
+	t, err := ofRun(ctx, *data, rest[0], func(ctx context.Context, f *runfile.File, h *runfile.Header) (t points.Table, err error) {
+		o, err := points.ParseOptions(query, h.Started)
+		if err != nil {
+			return t, err
+		}
+		return points.Read(ctx, f, h, watch.Parse, o)
+	})
+	if err == nil {
+		err = write(&t)
+	}
+	if err == nil {
+		return 0
+	}
+	_, _ = fmt.Fprintln(stderr, "throatwatch points:", err)
+	if errors.Is(err, points.ErrOption) {
+		return 2
+	}
+	return 1
+}
+
+// queryOf gives text flags as a query has them, so that command and interface read the
+// same.
+func queryOf(fs *pflag.FlagSet, names ...string) url.Values {
+	q := url.Values{}
+	for _, name := range names {
+		q.Set(name, fs.Lookup(name).Value.String())
+	}
+	return q
+}
+
+func printJSON(w io.Writer, v any) error {
+	text, err := json.MarshalIndent(v, "", "  ")
+	if err == nil {
+		_, err = fmt.Fprintf(w, "%s\n", text)
+	}
+	return err
+}
