@@ -134,6 +134,7 @@ export function header(p: HeaderParts): View & { route(name: string): void } {
       if (silent > 0) bad.push(`${silent} source${silent > 1 ? 's' : ''} silent`);
       if (s && s.rules_unknown > 0) bad.push(`${s.rules_unknown} rule${s.rules_unknown > 1 ? 's' : ''} unknown`);
       text(conditions, bad.length > 0 ? `▲ ${bad.join(' · ')}` : s?.recording ? '● recording' : '');
+      attr(conditions, 'title', bad.join(' · ') || null);
       attr(conditions, 'data-bad', bad.length > 0);
       text(facts, activeRun(m) ? `live run ${m.run?.number} · ${duration(runSeconds(m))} · ${m.run?.engine}` : m.rig ? `no run · ${m.rig.engine_model} ${m.rig.engine_serial}` : '');
       text(files, filesText(m));

@@ -555,6 +555,10 @@ try {
     await until('an excursion', async () => /run max.*exceeded/.test(await page.locator('.exceedances').innerText().then((t) => t.replaceAll('\n', ' '))));
     await until('the life', async () => /Starts\s*1/.test(await q('life').innerText()));
     await shoot('record', { dark: true });
+    for (const width of [820, 1440]) {
+      await page.setViewportSize({ width, height: 900 });
+      assert.equal(await page.evaluate(() => document.documentElement.scrollWidth), width);
+    }
     assert.deepEqual(await accessible('record'), []);
     assert.match(await page.title(), /REPLAY/);
     await q('show-display').click();

@@ -19,7 +19,7 @@ export const tagsOf = (s: string): string[] => [...new Set(s.split(',').map((t) 
 export function runsPage(d: Display): View {
   const body = h('tbody');
   const trouble = h('p', { class: 'trouble', role: 'status' });
-  const find = h('input', { type: 'search', placeholder: 'find: engine, note, tag (key /)', 'aria-label': 'Find a run', 'aria-keyshortcuts': '/', maxlength: '200', 'data-q': 'find', oninput: () => { askedAt = -Infinity; } });
+  const find = h('input', { type: 'search', placeholder: 'find by any word (key /)', 'aria-label': 'Find a run', 'aria-keyshortcuts': '/', maxlength: '200', 'data-q': 'find', oninput: () => { askedAt = -Infinity; } });
   const el = h('div', { class: 'page' }, h('h1', {}, 'Runs'), h('div', { class: 'filter', role: 'search' }, find), trouble,
     h('table', { class: 'list runs' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started, UTC', 'By', '>Duration', '>Alarms', 'State', '>Size', 'Notes and tags', 'Actions'].map(column))), body));
   let askedAt = -Infinity;
