@@ -20,5 +20,5 @@ export function exceedanceSummary(list: readonly Exceedance[], u: UnitSet): stri
   const over = list.filter((e) => e.exceeded);
   if (list.length === 0) return '';
   const worst = over.length > 0 ? over : list;
-  return `${over.length} of ${list.length} excursion${list.length > 1 ? 's' : ''} exceeded: ${worst.map((e) => `${name(e.band)} at ${clock(seconds(e.began))}, ${fixed(e.duration_s, 1)} s, peak ${degrees(u, e.peak_k)}`).join('; ')}`;
+  return `${over.length} of ${list.length} excursion${list.length > 1 ? 's' : ''} exceeded: ${worst.map((e) => `${name(e.band)} at ${clock(seconds(e.began))}, ${e.ended ? `${fixed(e.duration_s, 1)} s, peak ${degrees(u, e.peak_k)}` : 'goes on'}`).join('; ')}`;
 }

@@ -26,11 +26,12 @@ test('figures stand beside their targets', () => {
 });
 
 test('excursions above EGT limits', () => {
-  const e: Exceedance = { band: 'run_max', kind: 'run', limit_k: 993.15, allowance_s: 5, began: rfc3339(t0), ended: null, duration_s: 9.4, assumed_s: 0, peak_k: 1011.15, exceeded: true, above: null };
+  const e: Exceedance = { band: 'run_max', kind: 'run', limit_k: 993.15, allowance_s: 5, began: rfc3339(t0), ended: rfc3339(t0 + 12), duration_s: 9.4, assumed_s: 0, peak_k: 1011.15, exceeded: true, above: null };
   assert.equal(exceedanceWord(e), '■ exceeded (of 5.0 s)');
   assert.equal(exceedanceWord({ ...e, exceeded: false, allowance_s: 0 }), 'within (none allowed)');
   assert.equal(exceedanceSummary([], unitSets.si), '');
   assert.equal(exceedanceSummary([e, { ...e, exceeded: false }], unitSets.si), '1 of 2 excursions exceeded: run max at 09:00:00, 9.4 s, peak 738 °C');
+  assert.match(exceedanceSummary([{ ...e, ended: null }], unitSets.si), /run max at 09:00:00, goes on$/, 'its length stands in the bands');
   assert.match(exceedanceSummary([{ ...e, exceeded: false }], unitSets.us), /^0 of 1 excursion exceeded: .* peak 1360 °F$/);
 });
 
