@@ -184,9 +184,12 @@ func TestRoles(t *testing.T) {
 	}
 	operator := []string{
 		"POST /api/alarms/x/acknowledge", "POST /api/alarms/x/shelve", "POST /api/alarms/x/unshelve", "POST /api/alarms/x/reset",
-		"POST /api/rigs/cell_2/runs", "POST /api/runs/x/marks",
+		"POST /api/rigs/cell_2/runs", "POST /api/runs/x/marks", "POST /api/runs/x/entries", "PATCH /api/runs/x",
 	}
-	engineer := []string{"POST /api/alarms/x/out-of-service", "POST /api/alarms/x/in-service", "POST /api/alarms/x%2Fy/out-of-service"}
+	engineer := []string{
+		"POST /api/alarms/x/out-of-service", "POST /api/alarms/x/in-service", "POST /api/alarms/x%2Fy/out-of-service",
+		"POST /api/rigs/cell_2/swap", "POST /api/rigs/cell_2/readmit", "POST /api/rigs/cell_2/config", "DELETE /api/runs/x",
+	}
 	free := []string{"GET /", "GET /healthz"}
 	asked := slices.Concat(free, operator, engineer)
 	for _, p := range dashboard.NewServer(dashboard.Config{}, dashboard.NewHub("")).Patterns() {
@@ -225,6 +228,9 @@ func TestRoles(t *testing.T) {
 		}
 		if a := g.raw(t, method, path, "", bearer); a.status != http.StatusForbidden {
 			t.Errorf("a viewer may %s: %d", p, a.status)
+		}
+		if request := method + " " + path; !slices.Contains(operator, request) && !slices.Contains(engineer, request) {
+			t.Errorf("%s changes something: say here who may", p)
 		}
 	}
 }
