@@ -4,7 +4,7 @@
 import { type Branch, type Step, asideSteps, grouped, isStanding, needsAcknowledge, nextStep, passes, priorityLook, standing, stateWord } from '../alarms';
 import { askForm, withdraw } from '../ask';
 import { type Display, gate } from '../context';
-import { type View, attr, column, h, refill, text } from '../dom';
+import { type View, column, h, refill, text } from '../dom';
 import type { Alarm } from '../frames';
 import { activeRun } from '../state';
 import { clock, seconds } from '../time';
@@ -122,7 +122,6 @@ export function alarmsPage(d: Display): View {
           h('td', { class: 'num' }, clock(e.t)), h('td', {}, priorityBadge(e.alarm)), h('td', { title: e.alarm.rule }, e.alarm.title), h('td', {}, stateWord[e.from]), h('td', {}, stateWord[e.to]), h('td', {}, e.note)));
       });
       figures.update(now);
-      attr(cover.el, 'data-alarms', list.length);
     },
     destroy() {
       document.removeEventListener('keydown', onKey);

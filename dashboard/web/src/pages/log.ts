@@ -3,7 +3,7 @@
 import { api } from '../api';
 import { control, numberOf } from '../ask';
 import { type Display, gate } from '../context';
-import { type View, attr, column, h, refill, text } from '../dom';
+import { type View, column, h, refill, text } from '../dom';
 import type { LogEntry } from '../frames';
 import { actor, deedWord, enter, entryTime, subject } from '../oplog';
 import type { Deed } from '../session';
@@ -62,11 +62,12 @@ export function logPage(d: Display): View {
     const value = numberOf(v['value'] ?? '');
     return api.entry(run, { name: v['name'] ?? '', value: Number.isNaN(value) ? null : value, unit: v['unit'] ?? '', text: v['note'] ?? '' }, d.operator());
   });
-  const cover = veil(h('div', { class: 'page' }, h('h1', {}, 'Log'), h('div', { class: 'forms' }, mark, entry), told, h('section', {}, h('h2', {}, 'What people did in this run, newest first'), table.el)));
+  const cover = veil(h('div', { class: 'page' }, h('h1', {}, 'Log'), h('div', { class: 'forms' }, mark, entry), told, h('section', {}, h('h2', {}, 'What people did, newest first'), table.el)));
 
   // What this page did not hear of: the log of the run from its beginning.
   let earlier: LogEntry[] = [];
   let asked: string | null = null;
+  let merged = '';
 
   return {
     el: cover.el,
@@ -80,10 +81,12 @@ export function logPage(d: Display): View {
         earlier = [];
         if (id !== null) api.log(id).then((r) => { if (asked === id) earlier = r.entries ?? []; }, () => undefined); // what was heard is shown
       }
+      const stand = `${earlier.length} ${m.log.length} ${m.log[m.log.length - 1]?.t}`;
+      if (stand === merged) return;
+      merged = stand;
       const all = [...earlier];
       for (const e of m.log) enter(all, e, most);
       table.show(all, hostNow(m, now));
-      attr(cover.el, 'data-entries', all.length);
     },
     destroy: () => undefined,
   };
