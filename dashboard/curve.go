@@ -6,18 +6,11 @@ import (
 	"strconv"
 
 	"throatwatch/monitor/compute"
-	"throatwatch/monitor/gas"
-	"throatwatch/monitor/nozzle"
-	"throatwatch/monitor/unit"
 	"throatwatch/rules/pipeline"
 )
 
-// The curve of the throat plane reaches from curveFrom to curveTo in NPR.
-const (
-	curveFrom   = 1.0
-	curveTo     = 4.0
-	curvePoints = 151
-)
+// curveTo is the NPR up to which the curve of the throat plane reaches.
+const curveTo = 4.0
 
 // curveJSON is the flow parameter against NPR, discharge coefficient included.
 type curveJSON struct {
@@ -27,17 +20,12 @@ type curveJSON struct {
 	ChokeNPR      float64    `json:"choke_npr"`
 }
 
-// curveQuery is the gas that a curve is asked for.
-type curveQuery struct {
-	temperature, fuel, humidity float64 // K; fuel-air and humidity ratio, dry basis
-}
-
-func parseCurve(q url.Values) (in curveQuery, err error) {
-	in.temperature = 288.15
+func parseCurve(q url.Values) (in compute.CurveGas, err error) {
+	in.Temperature = 288.15
 	for _, p := range []struct {
 		name string
 		dst  *float64
-	}{{"total_temperature", &in.temperature}, {"fuel_air_ratio", &in.fuel}, {"humidity_ratio", &in.humidity}} {
+	}{{"total_temperature", &in.Temperature}, {"fuel_air_ratio", &in.FuelAirRatio}, {"humidity_ratio", &in.HumidityRatio}} {
 		text := q.Get(p.name)
 		if text == "" {
 			continue
@@ -63,41 +51,9 @@ func (s *Server) throatCurve(w http.ResponseWriter, r *http.Request) error {
 	}); err != nil {
 		return err
 	}
-	out, err := curve(&comp, in)
+	c, err := compute.ThroatCurve(&comp, in, curveTo)
 	if err != nil {
 		return badRequest("%v", err)
 	}
-	return reply(w, http.StatusOK, out)
-}
-
-// curve evaluates the nozzle from curveFrom to curveTo, closer where the curve
-// rises steeply.
-func curve(comp *compute.Config, in curveQuery) (out curveJSON, err error) {
-	g, err := gas.NewMixture(comp.Fuel, in.fuel, in.humidity)
-	if comp.Gamma > 0 {
-		g, err = gas.Perfect(comp.Gamma, comp.GasR)
-	}
-	if err != nil {
-		return out, err
-	}
-	n, err := nozzle.New(comp.Nozzle.Config)
-	if err != nil {
-		return out, err
-	}
-	const pb = 101325.0 // Pa; the curve does not depend on it
-	for i := range curvePoints {
-		x := float64(i) / (curvePoints - 1)
-		npr := curveFrom + (curveTo-curveFrom)*x*x
-		res, err := n.Evaluate(&g, nozzle.Inputs{
-			TotalPressure: unit.Absolute(npr * pb / (1 - comp.Nozzle.DuctLoss)), BackPressure: pb,
-			TotalTemperature: in.temperature, MetalTemperature: in.temperature,
-		})
-		if err != nil {
-			return out, err
-		}
-		out.NPR = append(out.NPR, npr)
-		out.FlowParameter = append(out.FlowParameter, nullable(res.Discharge*res.FlowParameter))
-		out.CriticalNPR, out.ChokeNPR = res.CriticalNPR, res.ChokeNPR
-	}
-	return out, nil
+	return reply(w, http.StatusOK, curveJSON{c.NPR, nullables(c.FlowParameter), c.CriticalNPR, c.ChokeNPR})
 }
