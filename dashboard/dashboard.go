@@ -71,7 +71,7 @@ type Server struct {
 	hub *Hub
 	mux *http.ServeMux
 
-	exporting chan struct{} // a slot per export under way
+	exporting chan struct{} // a slot per export or report under way
 }
 
 // handler answers a request, or gives the error to answer it with.
@@ -120,6 +120,7 @@ func (s *Server) routes() map[string]handler {
 		"GET /api/runs/{id}/series":           s.series,
 		"GET /api/runs/{id}/export":           s.export,
 		"GET /api/runs/{id}/points":           s.testPoints,
+		"GET /api/runs/{id}/report":           s.report,
 		"POST /api/runs/{id}/marks":           s.mark,
 		"POST /api/runs/{id}/entries":         s.entry,
 		"GET /api/runs/{id}/log":              s.operatorLog,

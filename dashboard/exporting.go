@@ -10,9 +10,20 @@ import (
 	"throatwatch/dashboard/export"
 )
 
-// exports is how many exports are served at a time: one heavy reader beside a run
-// that is on. Further ones are answered 503 with the time to wait.
+// exports is how many exports and reports are served at a time: one heavy reader beside
+// a run that is on. Further ones are answered 503 with the time to wait.
 const exports = 1
+
+// heavy takes a slot of a heavy reader; release gives it back.
+func (s *Server) heavy(w http.ResponseWriter) (release func(), err error) {
+	select {
+	case s.exporting <- struct{}{}:
+		return func() { <-s.exporting }, nil
+	default:
+		w.Header().Set("Retry-After", "10")
+		return nil, &problem{http.StatusServiceUnavailable, "another export or report is being written: try again when it is done"}
+	}
+}
 
 // exportOptions reads what of a run is asked for. Its errors are ErrOption.
 func exportOptions(q url.Values, started int64) (o export.Options, err error) {
@@ -43,13 +54,11 @@ func (s *Server) export(w http.ResponseWriter, r *http.Request) error {
 		return err
 	}
 	defer f.Close() //nolint:errcheck // it is only read
-	select {
-	case s.exporting <- struct{}{}:
-		defer func() { <-s.exporting }()
-	default:
-		w.Header().Set("Retry-After", "10")
-		return &problem{http.StatusServiceUnavailable, "another export is being written: try again when it is done"}
+	release, err := s.heavy(w)
+	if err != nil {
+		return err
 	}
+	defer release()
 	o, err := exportOptions(r.URL.Query(), run.Started)
 	var e *export.Export
 	if err == nil {

@@ -1,6 +1,7 @@
 package dashboard
 
 import (
+	"context"
 	"encoding/json"
 	"fmt"
 	"math"
@@ -20,6 +21,8 @@ type exceedancesJSON struct {
 type engineEventJSON struct {
 	T string `json:"t"`
 	pipeline.EngineEvent
+
+	at int64 // T in ns UTC
 }
 
 // exceedances answers with the excursions above EGT limits of a run, by their
@@ -30,27 +33,9 @@ func (s *Server) exceedances(w http.ResponseWriter, r *http.Request) error {
 		return err
 	}
 	defer f.Close() //nolint:errcheck // it is only read
-	out := exceedancesJSON{Exceedances: []pipeline.Exceedance{}, Events: []engineEventJSON{}}
-	err = f.Events(r.Context(), run.Started, math.MaxInt64, func(e *runfile.Event) error {
-		switch e.Kind {
-		case "exceedance":
-			var v pipeline.Exceedance
-			err := json.Unmarshal(e.JSON, &v)
-			out.enter(&v)
-			return err
-		case "engine":
-			v := engineEventJSON{T: rfc3339(e.T)}
-			err := json.Unmarshal(e.JSON, &v.EngineEvent)
-			out.Events = append(out.Events, v)
-			return err
-		case "life":
-			out.Life = new(pipeline.Life)
-			return json.Unmarshal(e.JSON, out.Life)
-		}
-		return nil
-	})
+	out, err := readExceedances(r.Context(), f, &run.Header)
 	if err != nil {
-		return fmt.Errorf("exceedances: %w", err)
+		return err
 	}
 	if run.State == runfile.StateRunning {
 		if err := s.ask(r.Context(), "", func(cfg *pipeline.Config, _ *pipeline.Machine, st *pipeline.State) {
@@ -62,6 +47,33 @@ func (s *Server) exceedances(w http.ResponseWriter, r *http.Request) error {
 		}
 	}
 	return reply(w, http.StatusOK, out)
+}
+
+// readExceedances reads what a run has on record of its EGT limits and its engine.
+func readExceedances(ctx context.Context, f *runfile.File, h *runfile.Header) (exceedancesJSON, error) {
+	out := exceedancesJSON{Exceedances: []pipeline.Exceedance{}, Events: []engineEventJSON{}}
+	err := f.Events(ctx, h.Started, math.MaxInt64, func(e *runfile.Event) error {
+		switch e.Kind {
+		case "exceedance":
+			var v pipeline.Exceedance
+			err := json.Unmarshal(e.JSON, &v)
+			out.enter(&v)
+			return err
+		case "engine":
+			v := engineEventJSON{T: rfc3339(e.T), at: e.T}
+			err := json.Unmarshal(e.JSON, &v.EngineEvent)
+			out.Events = append(out.Events, v)
+			return err
+		case "life":
+			out.Life = new(pipeline.Life)
+			return json.Unmarshal(e.JSON, out.Life)
+		}
+		return nil
+	})
+	if err != nil {
+		return out, fmt.Errorf("exceedances: %w", err)
+	}
+	return out, nil
 }
 
 // enter puts a record in the place of an earlier one of the same excursion.

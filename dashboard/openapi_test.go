@@ -105,7 +105,7 @@ func checkDescribed(t *testing.T, method, path, body string, a answer) {
 		for i, line := range lines(a.body) {
 			checkValue(t, schema, line, fmt.Sprintf("line %d of %s", i+1, template))
 		}
-	case "text/plain", "text/csv", "application/vnd.apache.parquet":
+	case "text/plain", "text/csv", "text/html", "application/vnd.apache.parquet":
 	default:
 		checkValue(t, schema, a.body, template)
 	}

@@ -40,6 +40,7 @@ func commands() []command {
 		{"delete", "delete a stored run", deleteCommand},
 		{"replay", "step a stored run again, and compare its digest", replayCommand},
 		{"points", "test points of a stored run with their uncertainty", pointsCommand},
+		{"report", "write the report of a stored run, to be printed and signed", reportCommand},
 		{"export", "write a table of a stored run for other programs", exportCommand},
 		{"import", "make a run of a recording of another data system", importCommand},
 		{"verify", "read stored runs to the last byte and step them again", verifyCommand},
