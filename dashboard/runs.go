@@ -54,6 +54,10 @@ type storedRun struct {
 	Config    string   `json:"config_hash"`
 	Build     string   `json:"build"`
 	Digest    string   `json:"digest"`
+
+	Parent       *string `json:"parent"` // of a reduction; else null
+	ParentDigest *string `json:"parent_digest"`
+	ReducedBy    *string `json:"reduced_by"`
 }
 
 func viewRun(r *runfile.Run) storedRun {
@@ -64,6 +68,9 @@ func viewRun(r *runfile.Run) storedRun {
 	}
 	if r.State == runfile.StateRunning {
 		v.State = "active"
+	}
+	if o := r.Reduction(); o != nil {
+		v.Parent, v.ParentDigest, v.ReducedBy = &o.Parent, &o.ParentDigest, &o.By
 	}
 	if r.Ended != 0 {
 		d := seconds(r.Ended - r.Started)
@@ -83,6 +90,7 @@ func (s *Server) runs(w http.ResponseWriter, r *http.Request) error {
 		return fmt.Errorf("runs: %w", err)
 	}
 	slices.SortStableFunc(runs, func(a, b runfile.Run) int { return cmp.Compare(b.Started, a.Started) })
+	runs = runfile.Families(runs)
 	list := make([]storedRun, len(runs))
 	for i := range runs {
 		list[i] = viewRun(&runs[i])

@@ -38,7 +38,8 @@ func areaOf(ctx context.Context, runs watch.StoredRuns, r *runfile.Run) (area *s
 }
 
 // drifts fills in the effective areas of the lines, newest first, and their
-// change since the run before of the same engine on the same rig.
+// change since the run before of the same engine on the same rig. A reduction is
+// compared with no other run: it is one of them again.
 func drifts(ctx context.Context, runs watch.StoredRuns, all []runfile.Run, list []runLine) error {
 	type engine struct{ rig, model, serial string }
 	before := map[engine]*steady.RunArea{}
@@ -52,6 +53,9 @@ func drifts(ctx context.Context, runs watch.StoredRuns, all []runfile.Run, list 
 		}
 		key, line := engine{all[i].Rig, all[i].Engine, all[i].EngineSerial}, &list[i]
 		line.EffectiveArea, line.EffectiveAreaU95 = known(area.Area), known(2*area.Area*math.Hypot(area.Random, area.Systematic))
+		if all[i].Reduction() != nil {
+			continue
+		}
 		if last := before[key]; last != nil {
 			change, u95 := last.Drift(area)
 			line.AreaDrift, line.AreaDriftU95 = known(100*change), known(100*u95)

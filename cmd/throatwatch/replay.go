@@ -52,6 +52,10 @@ type runLine struct {
 	Build        string   `json:"build"`
 	Digest       string   `json:"digest"`
 
+	Parent       string `json:"parent,omitempty"` // of a reduction
+	ParentDigest string `json:"parent_digest,omitempty"`
+	ReducedBy    string `json:"reduced_by,omitempty"`
+
 	EffectiveArea    *float64 `json:"effective_area_m2"` // mean over steady choked scans
 	EffectiveAreaU95 *float64 `json:"effective_area_m2_u95"`
 	AreaDrift        *float64 `json:"area_drift_percent"` // since the run before of this engine
@@ -91,7 +95,11 @@ func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) i
 		if r.DurationS != nil {
 			length = time.Duration(*r.DurationS * 1e9).Round(time.Second).String()
 		}
-		_, _ = fmt.Fprintf(t, "%s\t%s %s\t%.19s\t%s\t%d\t%s\t%.1f MB\t%s\t%s\n", r.ID, r.Engine, r.EngineSerial,
+		id := r.ID
+		if r.Parent != "" {
+			id = "  of it: " + id
+		}
+		_, _ = fmt.Fprintf(t, "%s\t%s %s\t%.19s\t%s\t%d\t%s\t%.1f MB\t%s\t%s\n", id, r.Engine, r.EngineSerial,
 			strings.Replace(r.Started, "T", " ", 1), length, r.Alarms, r.State, float64(r.SizeBytes)/1e6,
 			measure(r.EffectiveArea, r.EffectiveAreaU95, 1e4, "%.2f", "cm²"), measure(r.AreaDrift, r.AreaDriftU95, 1, "%+.2f", "%"))
 	}
@@ -112,6 +120,7 @@ func listRuns(ctx context.Context, dir string, filter runfile.Filter) (list []ru
 	if err != nil {
 		return nil, err
 	}
+	all = runfile.Families(all)
 	list = []runLine{}
 	for i := range all {
 		r := &all[i]
@@ -119,6 +128,9 @@ func listRuns(ctx context.Context, dir string, filter runfile.Filter) (list []ru
 			ID: r.ID, Number: r.Number, Rig: r.Rig, Engine: r.Engine, EngineSerial: r.EngineSerial,
 			Started: time.Unix(0, r.Started).UTC().Format(time.RFC3339Nano), State: r.State, Alarms: r.Alarms,
 			SizeBytes: r.Size, Keep: r.Keep, Tags: append([]string{}, r.Tags...), Notes: r.Notes, ConfigHash: r.ConfigHash, Build: r.Build, Digest: r.Digest,
+		}
+		if o := r.Reduction(); o != nil {
+			line.Parent, line.ParentDigest, line.ReducedBy = o.Parent, o.ParentDigest, o.By
 		}
 		if r.Ended != 0 {
 			ended, length := time.Unix(0, r.Ended).UTC().Format(time.RFC3339Nano), float64(r.Ended-r.Started)/1e9
@@ -209,13 +221,13 @@ func restep(ctx context.Context, f *runfile.File, header *runfile.Header, point 
 			each(r)
 		}
 		if r.Kind == ingest.KindGap { // the run may have begun or ended among the records that are missing
-			inRun = p.State.RunActive && p.State.Run.ID == header.ID
+			inRun = p.State.RunActive && p.State.Run.ID == header.Stepped()
 		}
 		for i := range outs {
 			o := &outs[i]
 			switch {
 			case o.Kind == pipeline.OutcomeRun:
-				if inRun = o.Event == "started" && o.Run.ID == header.ID; o.Run.ID == header.ID {
+				if inRun = o.Event == "started" && o.Run.ID == header.Stepped(); o.Run.ID == header.Stepped() {
 					res.digest = p.Digest.String() // what comes after the end of the run is not of it
 				}
 			case !inRun:

@@ -1,6 +1,7 @@
 package runfile
 
 import (
+	"cmp"
 	"context"
 	"database/sql"
 	"encoding/json"
@@ -10,6 +11,7 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 )
 
@@ -208,6 +210,38 @@ type Filter struct {
 	Text                             string // somewhere in the header, case aside
 	From, To                         int64  // started at or after From and before To, ns UTC
 	Limit                            int    // at most so many, the newest
+}
+
+// Families gives the runs in the same order, but that the reductions of a run that is
+// among them come right behind it, the first first.
+func Families(runs []Run) []Run {
+	children := map[string][]Run{}
+	known := map[string]bool{}
+	for i := range runs {
+		known[runs[i].ID] = true
+	}
+	var heads []Run
+	for i := range runs {
+		if o := runs[i].Reduction(); o != nil && known[o.Parent] && o.Parent != runs[i].ID {
+			children[o.Parent] = append(children[o.Parent], runs[i])
+		} else {
+			heads = append(heads, runs[i])
+		}
+	}
+	out := make([]Run, 0, len(runs))
+	var add func(family []Run)
+	add = func(family []Run) {
+		for i := range family {
+			out = append(out, family[i])
+			below := children[family[i].ID]
+			slices.SortStableFunc(below, func(a, b Run) int {
+				return cmp.Or(cmp.Compare(len(a.ID), len(b.ID)), cmp.Compare(a.ID, b.ID)) // r2 before r10
+			})
+			add(below)
+		}
+	}
+	add(heads)
+	return out
 }
 
 // List gives the runs that pass the filter, the newest first.

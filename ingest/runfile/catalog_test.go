@@ -248,3 +248,23 @@ func TestCatalogRefusesForeign(t *testing.T) {
 	f := open(t, filepath.Join(dir, "a.db"), runfile.ReadOnly)
 	wantRecords(t, f, 0, 0, messages(1, 10, 10))
 }
+
+// Reductions stand behind the run that they were made from, in the order of their making.
+func TestFamilies(t *testing.T) {
+	run := func(id, parent string) runfile.Run {
+		r := runfile.Run{Header: runfile.Header{ID: id}}
+		if parent != "" {
+			r.Origin = &runfile.Origin{Kind: runfile.OriginReduction, Parent: parent}
+		}
+		return r
+	}
+	imported := run("c", "")
+	imported.Origin = &runfile.Origin{Kind: runfile.OriginImport}
+	var got []string
+	for _, r := range runfile.Families([]runfile.Run{run("b-r10", "b"), run("b-r2", "b"), imported, run("b", ""), run("b-r2-r1", "b-r2"), run("lost-r1", "lost"), run("a", ""), run("self", "self")}) {
+		got = append(got, r.ID)
+	}
+	if want := []string{"c", "b", "b-r2", "b-r2-r1", "b-r10", "lost-r1", "a", "self"}; !slices.Equal(got, want) {
+		t.Errorf("%v, want %v", got, want)
+	}
+}

@@ -40,19 +40,45 @@ type Header struct {
 	Origin       *Origin  `json:"origin,omitempty"` // nil for a run that a watch recorded
 }
 
-// OriginImport is the Kind of a run that was made from a recording of another
-// data system.
-const OriginImport = "import"
+// Kinds of an Origin.
+const (
+	OriginImport    = "import"    // a recording of another data system
+	OriginReduction = "reduction" // a stored run, stepped through another configuration
+)
 
 // Origin says what a run was made from that no watch recorded. Its record numbers
-// are its own and do not continue those of the data folder.
+// are its own and do not continue those of the data folder. Fields of the other kind are
+// zero.
 type Origin struct {
 	Kind      string `json:"kind"`
-	File      string `json:"file"`       // name of the recording
-	SHA256    string `json:"sha256"`     // of its bytes, hexadecimal
-	MapSHA256 string `json:"map_sha256"` // of the text of the column map, hexadecimal
-	Rows      uint64 `json:"rows"`       // read
-	Bad       uint64 `json:"bad"`        // times, cells and lines that could not be used
+	File      string `json:"file,omitempty"`       // name of the recording
+	SHA256    string `json:"sha256,omitempty"`     // of its bytes, hexadecimal
+	MapSHA256 string `json:"map_sha256,omitempty"` // of the text of the column map, hexadecimal
+	Rows      uint64 `json:"rows,omitempty"`       // read
+	Bad       uint64 `json:"bad,omitempty"`        // times, cells and lines that could not be used
+
+	Parent       string `json:"parent,omitempty"`        // id of the run that was reduced
+	ParentDigest string `json:"parent_digest,omitempty"` // its digest then
+	Stepped      string `json:"stepped,omitempty"`       // id that the records themselves give the run
+	By           string `json:"by,omitempty"`            // who reduced it
+}
+
+// Reduction gives the origin of a run that is the reduction of another, nil for any other
+// run.
+func (h *Header) Reduction() *Origin {
+	if h.Origin == nil || h.Origin.Kind != OriginReduction {
+		return nil
+	}
+	return h.Origin
+}
+
+// Stepped gives the id that a run has in the outcomes of its records: its own, but for a
+// reduction.
+func (h *Header) Stepped() string {
+	if o := h.Reduction(); o != nil {
+		return o.Stepped
+	}
+	return h.ID
 }
 
 // headerKey is where the header lies in the table meta; the owner's keys are

@@ -16,6 +16,7 @@ type Replay struct {
 	State   *State
 	Digest  *Digest
 	file    *runfile.File
+	other   []byte // configuration instead of the recorded ones; nil = none
 }
 
 // errFirst ends the reading at the first record.
@@ -66,7 +67,28 @@ func (p *Replay) load(ctx context.Context, c *runfile.Checkpoint) error {
 		}
 	}
 	p.State = state
-	return p.Machine.Restore(state)
+	if err := p.Machine.Restore(state); err != nil {
+		return err
+	}
+	return p.reconfigure()
+}
+
+// Reconfigure puts another configuration in the place of all that were recorded: of that
+// in force where the replay begins, at once, and of those of the records to come. What
+// was learned by the recorded one is kept as at any change of configuration.
+func (p *Replay) Reconfigure(bundle []byte) error {
+	p.other = bundle
+	if err := p.reconfigure(); err != nil {
+		return fmt.Errorf("replay: %w", err)
+	}
+	return nil
+}
+
+func (p *Replay) reconfigure() error {
+	if p.other == nil || len(p.State.Bundle) == 0 { // the first record of a configuration brings it
+		return nil
+	}
+	return p.Machine.replace(p.State, p.other)
 }
 
 // rebuildWindow takes the hashes of the full checkpoint before c and those of
@@ -117,6 +139,9 @@ func (p *Replay) Run(ctx context.Context, upto uint64, fn func(r *ingest.Record,
 				return fmt.Errorf("replay: gap before record %d: %w", r.Seq, err)
 			}
 			return fn(r, nil)
+		}
+		if r.Kind == ingest.KindConfig && p.other != nil {
+			r.Payload = p.other
 		}
 		outs := p.Machine.Step(p.State, r)
 		for i := range outs {

@@ -309,15 +309,8 @@ func (m *Machine) config(s *State, r *ingest.Record) {
 		return
 	}
 	p := m.prog
-	var from []align.Channel
-	var fromComp []compute.Channel
-	if old != nil {
-		from, fromComp = old.cfg.Align.Channels, old.cfg.Compute.Channels
-	}
 	if old == nil || old.cfg.Hash != p.cfg.Hash {
-		p.align.Reset(&s.Align, from)
-		p.compute.Reset(&s.Compute, fromComp)
-		p.rules.Fit(&s.Rules)
+		m.fit(s, old)
 	}
 	if old == nil {
 		p.align.Boot(&s.Align, r.Host)
@@ -328,6 +321,32 @@ func (m *Machine) config(s *State, r *ingest.Record) {
 	if by.Do == DoConfig {
 		m.log(s, &by, Entry{T: rules.Time(r.Host), Text: "files " + p.cfg.Hash + approval(s.InForce.ApprovedBy)})
 	}
+}
+
+// fit makes the state one of the program in force, which takes the place of old.
+func (m *Machine) fit(s *State, old *program) {
+	var from []align.Channel
+	var fromComp []compute.Channel
+	if old != nil {
+		from, fromComp = old.cfg.Align.Channels, old.cfg.Compute.Channels
+	}
+	m.prog.align.Reset(&s.Align, from)
+	m.prog.compute.Reset(&s.Compute, fromComp)
+	m.prog.rules.Fit(&s.Rules)
+}
+
+// replace puts a configuration in the place of the one in force as if it had been there,
+// with no outcome of it.
+func (m *Machine) replace(s *State, bundle []byte) error {
+	old := m.prog
+	if err := m.load(bundle); err != nil {
+		return err
+	}
+	if old == nil || old.cfg.Hash != m.prog.cfg.Hash {
+		m.fit(s, old)
+	}
+	s.Bundle = append(s.Bundle[:0], bundle...)
+	return nil
 }
 
 func (m *Machine) message(s *State, r *ingest.Record) {

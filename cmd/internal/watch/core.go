@@ -81,19 +81,24 @@ func (c *Core) Take(in Input, host int64) []pipeline.Outcome {
 	r := ingest.Record{
 		Seq: c.State.Seq + 1, Host: max(host, c.State.Host), Kind: in.Kind, Flags: in.Flags, Topic: in.Topic, Payload: in.Payload,
 	}
-	if c.opened == 0 {
-		c.opened = r.Host
-	}
 	outs := c.Machine.Step(c.State, &r)
 	for i := range outs {
 		c.Digest.Add(&outs[i])
 	}
+	c.stepped(&r, outs)
+	return outs
+}
+
+// stepped adds a record to the batch, with what came of it.
+func (c *Core) stepped(r *ingest.Record, outs []pipeline.Outcome) {
+	if c.opened == 0 {
+		c.opened = r.Host
+	}
 	if len(c.batch.Records) == 0 {
 		c.batch.First = r.Host
 	}
-	c.batch.Records = append(c.batch.Records, r)
+	c.batch.Records = append(c.batch.Records, *r)
 	c.keep(outs)
-	return outs
 }
 
 // again takes the outcomes of a record that is stored already, after a restart:

@@ -318,7 +318,7 @@ func (s *Store) removeHalfMade(id string) {
 // given again.
 func (s *Store) Write(ctx context.Context, b *Batch) error {
 	s.make(ctx, b)
-	chunks, err := s.encode(b.Columns)
+	chunks, err := encodeColumns(s.codec, b.Columns)
 	if err != nil {
 		return err
 	}
@@ -380,10 +380,10 @@ func (s *Store) make(ctx context.Context, b *Batch) {
 	}
 }
 
-func (s *Store) encode(columns []*pipeline.Columns) ([]runfile.Chunk, error) {
+func encodeColumns(codec *archive.Codec, columns []*pipeline.Columns) ([]runfile.Chunk, error) {
 	var out []runfile.Chunk
 	for _, c := range columns {
-		chunks, err := c.Chunks(s.codec)
+		chunks, err := c.Chunks(codec)
 		if err != nil {
 			return nil, fmt.Errorf("store: %w", err)
 		}

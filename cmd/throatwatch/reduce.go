@@ -1,0 +1,132 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io"
+	"os/user"
+	"time"
+
+	"throatwatch/cmd/internal/config"
+	"throatwatch/cmd/internal/watch"
+	"throatwatch/ingest/runfile"
+	"throatwatch/rules/pipeline"
+)
+
+// reduceCommand steps a stored run through another configuration.
+func reduceCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
+	fs := newFlags("reduce RUN --rig OTHER.yaml", "Step the records of a stored run through another rig file: corrected calibrations, throat area, coefficients, rules.\n"+
+		"The result is stored as a run of its own beside it, RUN-r1 and so on; the run itself stays as it is.\n"+
+		"`throatwatch compare RUN RUN-r1` tells the differences.", stderr)
+	data := fs.String("data", "data", "data folder")
+	rig := fs.String("rig", "", "the other rig file")
+	note := fs.String("note", "", "what is corrected, and why")
+	by := fs.String("by", "", "who reduces it (default: the user of this machine)")
+	asJSON := fs.Bool("json", false, "progress and result as JSON")
+	rest, code := parseArgs(fs, args, stderr)
+	if code >= 0 {
+		return code
+	}
+	if len(rest) != 1 || *rig == "" {
+		_, _ = fmt.Fprintln(stderr, "throatwatch reduce: give one run and --rig; `throatwatch runs` lists the runs")
+		return 2
+	}
+	if u, err := user.Current(); *by == "" && err == nil {
+		*by = u.Username
+	}
+	progress := newProgress(stderr, *asJSON)
+	o := watch.ReduceOptions{Run: rest[0], By: *by, Note: *note}
+	o.Progress = func(part float64, n int64) { progress.show(part, n, "records") }
+	res, err := reduceRun(ctx, *data, *rig, o)
+	progress.end()
+	if err == nil && *asJSON {
+		err = printJSON(stdout, reducedView(&res))
+	}
+	switch {
+	case err != nil:
+		_, _ = fmt.Fprintln(stderr, "throatwatch reduce:", err)
+		return 1
+	case !*asJSON:
+		printReduced(stdout, &res)
+	}
+	return 0
+}
+
+// reduceRun reads the rig file and reduces the run by it.
+func reduceRun(ctx context.Context, dir, rig string, o watch.ReduceOptions) (res watch.Reduced, err error) {
+	bundle, cfg, faults := config.Load(rig)
+	if err := watch.Faults(faults); err != nil {
+		return res, err
+	}
+	o.Bundle, o.Config = bundle.Marshal(), cfg
+	runs, err := openRuns(ctx, dir)
+	if err != nil {
+		return res, err
+	}
+	defer func() { err = errors.Join(err, runs.Catalog.Close()) }()
+	return runs.Reduce(ctx, o)
+}
+
+// reducedJSON is a reduction as --json prints it.
+type reducedJSON struct {
+	Run          string     `json:"run"`
+	Parent       string     `json:"parent"`
+	Digest       string     `json:"digest"`
+	ParentDigest string     `json:"parent_digest"`
+	Same         bool       `json:"same"`
+	ConfigHash   string     `json:"config_hash"`
+	Alarms       int        `json:"alarms"`
+	ParentAlarms int        `json:"parent_alarms"`
+	Swaps        []swapJSON `json:"swaps"`
+}
+
+type swapJSON struct {
+	Channel   string `json:"channel"`
+	Serial    string `json:"serial"`
+	ValidFrom string `json:"valid_from"`
+	By        string `json:"by"`
+	Reason    string `json:"reason"`
+}
+
+func reducedView(r *watch.Reduced) reducedJSON {
+	v := reducedJSON{
+		Run: r.Run.ID, Parent: r.Parent.ID, Digest: r.Run.Digest, ParentDigest: r.Parent.Digest, Same: r.Same,
+		ConfigHash: r.Run.ConfigHash, Alarms: r.Run.Alarms, ParentAlarms: r.Parent.Alarms, Swaps: []swapJSON{},
+	}
+	for _, s := range swapsOf(r) {
+		v.Swaps = append(v.Swaps, swapJSON{s.Channel, s.Serial, *utc(s.ValidFrom), s.By, s.Reason})
+	}
+	return v
+}
+
+// swapsOf gives the sensor swaps that were entered up to the end of the run: whoever
+// corrects a calibration has to know them.
+func swapsOf(r *watch.Reduced) (list []pipeline.Swap) {
+	for _, s := range r.Swaps {
+		if r.Run.Ended == 0 || s.ValidFrom <= r.Run.Ended {
+			list = append(list, s)
+		}
+	}
+	return list
+}
+
+func printReduced(w io.Writer, r *watch.Reduced) {
+	_, _ = fmt.Fprintf(w, "%s: %s stepped through configuration %.12s; its own is %.12s\n", r.Run.ID, r.Parent.ID, r.Run.ConfigHash, r.Parent.ConfigHash)
+	switch {
+	case r.Same:
+		_, _ = fmt.Fprintf(w, "the same as %s, bit for bit: sha256 %s\n", r.Parent.ID, r.Run.Digest)
+	case r.Run.ConfigHash == r.Parent.ConfigHash && r.Parent.Build != watch.Build():
+		_, _ = fmt.Fprintf(w, "the configuration is the same, the build is another: %s, recorded by %s\n", watch.Build(), r.Parent.Build)
+	default:
+		_, _ = fmt.Fprintf(w, "sha256 %s\n%d alarms were raised, %d in %s; `throatwatch compare %s %s` tells more\n",
+			r.Run.Digest, r.Run.Alarms, r.Parent.Alarms, r.Parent.ID, r.Parent.ID, r.Run.ID)
+	}
+	if r.Run.State == runfile.StateInterrupted {
+		_, _ = fmt.Fprintln(w, "the run does not end in its records")
+	}
+	for _, s := range swapsOf(r) {
+		_, _ = fmt.Fprintf(w, "sensor swap: %s has %s since %s UTC (%s, %s): one calibration of the rig file holds for the whole run\n",
+			s.Channel, s.Serial, time.Unix(0, s.ValidFrom).UTC().Format("2006-01-02 15:04:05"), s.By, oneLine(s.Reason))
+	}
+}
