@@ -4,6 +4,7 @@ import (
 	"encoding/json"
 	"fmt"
 	"slices"
+	"time"
 )
 
 // Ref is the id of another alarm; "" is none, and null as JSON.
@@ -52,9 +53,14 @@ func (s *Set) mark(st *State, i int) {
 	in.FirstOut = in.FirstOut || first
 }
 
+// lateCause is how much later than its consequences a cause may be raised, ns: a
+// silent source is told after what became stale by it.
+const lateCause = 10 * int64(time.Second)
+
 // head gives the alarm that alarm i is listed under: of those of its group that
-// stand the most urgent, among equals the first-out, then the earliest. It is none
-// for that alarm itself; and a warning stands for itself always.
+// stand and were not raised long after it the most urgent, among equals the
+// first-out, then the earliest. It is none for that alarm itself; and a warning
+// stands for itself always.
 func (s *Set) head(st *State, i int) Ref {
 	group := s.rules[i].Group
 	if group == "" || s.rules[i].Priority == Warning || !st.Instances[i].State.Standing() {
@@ -62,7 +68,8 @@ func (s *Set) head(st *State, i int) Ref {
 	}
 	best := i
 	for k := range s.rules {
-		if s.rules[k].Group == group && st.Instances[k].State.Standing() && s.before(st, k, best) {
+		other := &st.Instances[k]
+		if s.rules[k].Group == group && other.State.Standing() && other.Raised-st.Instances[i].Raised <= lateCause && s.before(st, k, best) {
 			best = k
 		}
 	}

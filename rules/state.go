@@ -245,6 +245,10 @@ func (p *program) due(in *Instance, t int64, phase monitor.Phase, worse bool) (a
 		input = alarm.Suppress
 	case worse && in.State == alarm.Acknowledged:
 		input = alarm.Worsen
+	case in.Active && in.InDoubt && in.State == alarm.Normal:
+		// It comes back from where it was put aside, and whether its condition still
+		// stands is not known: that is shown as such, and is no reason to raise it.
+		return input, false
 	case in.Active:
 		input = alarm.Raise
 	default:
