@@ -86,6 +86,7 @@ func NewServer(cfg Config, hub *Hub) *Server {
 		method, path, _ := strings.Cut(pattern, " ")
 		methods[path] = append(methods[path], method)
 	}
+	delete(methods, "/api/runs/compare") // other methods are those of a run of that name
 	for path, allowed := range methods {
 		s.handle(path, notAllowed(allowed))
 	}
@@ -120,6 +121,7 @@ func (s *Server) routes() map[string]handler {
 		"GET /api/runs/{id}/series":           s.series,
 		"GET /api/runs/{id}/export":           s.export,
 		"GET /api/runs/{id}/points":           s.testPoints,
+		"GET /api/runs/compare":               s.compare,
 		"GET /api/runs/{id}/report":           s.report,
 		"POST /api/runs/{id}/marks":           s.mark,
 		"POST /api/runs/{id}/entries":         s.entry,

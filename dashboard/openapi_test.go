@@ -19,6 +19,11 @@ import (
 
 // operation finds the description of a request, "" when there is none.
 func (d document) operation(method, path string) (template string, op map[string]any) {
+	if item, ok := d.at("paths")[path].(map[string]any); ok { // before any path with a variable
+		if op, ok := item[strings.ToLower(method)].(map[string]any); ok {
+			return path, op
+		}
+	}
 	for template, item := range d.at("paths") {
 		op, ok := item.(map[string]any)[strings.ToLower(method)].(map[string]any)
 		if !ok {
@@ -228,7 +233,11 @@ func TestOpenAPIExamples(t *testing.T) {
 				}
 				query := url.Values{}
 				for name, p := range doc.parameters(op, "query") {
-					if p["example"] != nil {
+					switch p["example"] {
+					case nil:
+					case doc.at("components", "parameters", "run")["example"]:
+						query.Set(name, r.id)
+					default:
 						query.Set(name, fmt.Sprint(p["example"]))
 					}
 				}

@@ -40,6 +40,7 @@ func commands() []command {
 		{"delete", "delete a stored run", deleteCommand},
 		{"replay", "step a stored run again, and compare its digest", replayCommand},
 		{"reduce", "step a stored run through another configuration", reduceCommand},
+		{"compare", "tell stored runs apart: differences, alarms that move, baseline and scatter", compareCommand},
 		{"points", "test points of a stored run with their uncertainty", pointsCommand},
 		{"report", "write the report of a stored run, to be printed and signed", reportCommand},
 		{"export", "write a table of a stored run for other programs", exportCommand},
