@@ -268,6 +268,7 @@ func appendStatus(dst []byte, st *pipeline.Status) []byte {
 	dst = truth(dst, "clock", st.Skew == 0)
 	dst = failure(dst, "webhook", &st.Health.Webhook)
 	dst = failure(dst, "database", &st.Health.Database)
+	dst = failure(dst, "disk", &st.Health.Disk)
 	dst = number(dst, "clock_skew_s", seconds(st.Skew))
 	dst = truth(dst, "run_active", st.RunActive)
 	dst = count(dst, "rules_unknown", int64(st.Unknown))

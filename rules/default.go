@@ -331,6 +331,13 @@ func daemonRules() []Rule {
 			Response: "Facility procedure for lost recording.",
 		},
 		{
+			Name: "disk_low", When: "not health.disk", Priority: Caution, OnDelay: second, OffDelay: second,
+			Title:    "Disk soon full",
+			Text:     "The disk of the data folder has {disk_free_gb:.1} GB left; the Rig page says for how long. Follow the facility's procedure for a disk that runs full.",
+			Caution:  "On a full disk nothing is recorded. The watch itself goes on.",
+			Response: "Facility procedure for a disk that runs full.",
+		},
+		{
 			Name: "clock_skew", When: "not health.clock", Priority: Advisory, OnDelay: second, OffDelay: 5 * second,
 			Title:    "Clock of a source is wrong",
 			Text:     "A source's clock differs by {clock_skew_s:s.1}: receive time is used for its data.",

@@ -109,7 +109,9 @@ type Channel struct {
 //	egt_probes_used egt_probes_lost rake_probes_used rake_probes_lost
 //	health.recording health.input_path health.clock health.sources   true = works
 //	health.webhook health.database                         true = works, or there is none
+//	health.disk                                            true = not soon full
 //	sources_lost data_age_s clock_skew_s webhook_waiting database_lag_s
+//	disk_free_gb                                           while it will soon be full, else 0
 //	sensors_failed failed_sensor failed_finding            proven findings: how many, the first of them
 //	sensors_doubtful doubtful_sensor doubtful_finding      suspected ones, but for hot EGT probes:
 //	egt_hot_probes egt_hot_probe egt_hot_by_k
@@ -162,6 +164,7 @@ func StandardNames(channels []Channel, bands []string) []Name {
 		daemon(flag("health.sources")), daemon(count("sources_lost")),
 		daemon(seconds("data_age_s")), daemon(seconds("clock_skew_s")),
 		daemon(flag("health.webhook")), daemon(flag("health.database")), daemon(count("webhook_waiting")), daemon(seconds("database_lag_s")),
+		daemon(flag("health.disk")), daemon(count("disk_free_gb")),
 	)
 	for i := range channels {
 		ch := &channels[i]

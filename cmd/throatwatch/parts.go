@@ -4,16 +4,18 @@ import (
 	"context"
 	"fmt"
 	"math"
+	"sync"
 	"time"
 
+	"throatwatch/cmd/internal/watch"
 	"throatwatch/dashboard/webhook"
 	"throatwatch/monitor/influx"
 	"throatwatch/rules/pipeline"
 )
 
 const (
-	// partsEvery is how often the parts that take alarms and values to others are
-	// looked at, and partsAgain how often a failure is told again with its figure.
+	// partsEvery is how often the disk and the parts that take alarms and values to
+	// others are looked at, and partsAgain how often a failure is told again with its figure.
 	partsEvery = time.Second
 	partsAgain = 30 * time.Second
 	// lagAtMost is how far the site's database may be behind while it takes what it
@@ -28,9 +30,47 @@ type part struct {
 	behind float64 // as in pipeline.HealthChange
 }
 
+// diskWatch looks at the disk of the data folder.
+type diskWatch struct {
+	mu   sync.Mutex // protects part
+	part part
+}
+
+func (d *diskWatch) standing() part {
+	d.mu.Lock()
+	defer d.mu.Unlock()
+	return d.part
+}
+
+// run looks each second until ctx ends. Nobody waits for its end: a disk that hangs
+// does not answer.
+func (d *diskWatch) run(ctx context.Context, dir string, disk watch.Disk) {
+	tick := time.NewTicker(partsEvery)
+	defer tick.Stop()
+	for {
+		free, err := watch.FreeSpace(dir)
+		now := part{}
+		if err != nil {
+			now.why = err.Error()
+		} else {
+			var low bool
+			low, now.why = disk.See(free, time.Now())
+			now.ok, now.behind = !low, max(free/1e9, 1e-3) // 0 says that it is not known
+		}
+		d.mu.Lock()
+		d.part = now
+		d.mu.Unlock()
+		select {
+		case <-ctx.Done():
+			return
+		case <-tick.C:
+		}
+	}
+}
+
 // standing gives how the parts stand that there are.
 func (w *watcher) standing() map[string]part {
-	out := map[string]part{}
+	out := map[string]part{pipeline.PartDisk: w.disk.standing()}
 	if w.site != nil {
 		out[pipeline.PartDatabase] = databasePart(w.site.sink.Status(), time.Now())
 	}
@@ -62,7 +102,7 @@ func (w *watcher) watchParts(ctx context.Context) {
 	failing := map[string]time.Time{} // when that was told last
 	for {
 		standing := w.standing()
-		for _, name := range []string{pipeline.PartWebhook, pipeline.PartDatabase} {
+		for _, name := range []string{pipeline.PartWebhook, pipeline.PartDatabase, pipeline.PartDisk} {
 			p, there := standing[name]
 			told, fails := failing[name]
 			if !there || p.ok && !fails || !p.ok && fails && time.Since(told) < partsAgain {
@@ -76,8 +116,12 @@ func (w *watcher) watchParts(ctx context.Context) {
 			} else {
 				failing[name] = time.Now()
 			}
-			if p.ok == fails && name == pipeline.PartWebhook { // the database tells itself
+			switch { // the database tells itself
+			case p.ok != fails:
+			case name == pipeline.PartWebhook:
 				w.log.Warn("webhook", "receiver", w.hook.sender.Where(), "works", p.ok, "waiting", p.behind, "why", p.why)
+			case name == pipeline.PartDisk:
+				w.log.Warn("disk of the data folder", "folder", w.opt.data, "soon_full", !p.ok, "what", p.why)
 			}
 		}
 		select {

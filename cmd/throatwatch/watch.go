@@ -43,6 +43,7 @@ type watchOptions struct {
 	guard                              guardOptions
 	retainDays                         int
 	retainGB                           float64
+	diskHours, diskGB                  float64
 	limit                              time.Duration
 	verbose                            bool
 }
@@ -64,6 +65,8 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 	o.webhook.flags(fs)
 	fs.IntVar(&o.retainDays, "retain-days", 0, "remove runs that ended longer ago, except those marked keep (default: none)")
 	fs.Float64Var(&o.retainGB, "retain-gb", 0, "remove the oldest runs until the rest takes no more GB (10^9 bytes), except those marked keep (default: none)")
+	fs.Float64Var(&o.diskHours, "disk-hours", 4, "alarm when the disk of the data folder will be full in so many hours as it fills now; 0 = do not")
+	fs.Float64Var(&o.diskGB, "disk-gb", 2, "alarm when it has fewer GB (10^9 bytes) left; 0 = do not")
 	fs.DurationVar(&o.limit, "for", 0, "stop after this time (default: on interrupt)")
 	fs.BoolVar(&o.verbose, "verbose", false, "log what the parts do")
 	rig, code := parseRig(fs, args, stderr)
@@ -79,7 +82,7 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 		ctx, cancel = context.WithTimeout(ctx, o.limit)
 		defer cancel()
 	}
-	w := &watcher{opt: o, stdout: stdout, stderr: stderr, log: newLog(stderr, o.verbose)}
+	w := &watcher{opt: o, stdout: stdout, stderr: stderr, log: newLog(stderr, o.verbose), disk: diskWatch{part: part{ok: true}}}
 	if err := w.run(ctx, rig); err != nil {
 		_, _ = fmt.Fprintln(stderr, "throatwatch watch:", err)
 		return 1
@@ -91,6 +94,9 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 func (o *watchOptions) check(fs *pflag.FlagSet) error {
 	if o.retainDays < 0 || !(o.retainGB >= 0) {
 		return errors.New("--retain-days and --retain-gb: give numbers above 0")
+	}
+	if !(o.diskHours >= 0 && o.diskHours < 1e5) || !(o.diskGB >= 0) {
+		return errors.New("--disk-hours and --disk-gb: give numbers above 0, or 0 for no alarm; at most 100000 hours")
 	}
 	if o.limit < 0 {
 		return fmt.Errorf("--for %v: give a time above 0", o.limit)
@@ -142,7 +148,8 @@ type watcher struct {
 	loop   *watch.Loop
 	site   *siteDatabase // nil when the site has none
 	hook   *receiver     // nil when the site has none
-	guard  *guard        // nil when nobody is asked who they are
+	disk   diskWatch
+	guard  *guard // nil when nobody is asked who they are
 }
 
 // run starts the parts in the order in which they need each other and stops them
@@ -254,6 +261,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	if w.hook != nil {
 		sideParts.Go(func() { w.hook.run(sideCtx) })
 	}
+	go w.disk.run(sideCtx, w.opt.data, watch.Disk{Floor: w.opt.diskGB * 1e9, Ahead: time.Duration(w.opt.diskHours * float64(time.Hour))})
 	sideParts.Go(func() { w.watchParts(sideCtx) })
 	if w.guard != nil {
 		sideParts.Go(func() { w.guard.run(sideCtx) })
@@ -470,6 +478,7 @@ func (w *watcher) metrics() []dashboard.Metric {
 	if w.hook != nil {
 		out = append(out, w.hook.metrics()...)
 	}
+	out = append(out, dashboard.Metric{Name: "disk_free_bytes", Help: "What is left on the disk of the data folder.", Value: w.disk.standing().behind * 1e9})
 	for _, s := range w.client.Stats() {
 		labels := map[string]string{"filter": s.Filter}
 		out = append(out,

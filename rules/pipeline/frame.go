@@ -74,6 +74,8 @@ const (
 	fromDatabase
 	fromWebhookWaiting
 	fromDatabaseLag
+	fromDisk
+	fromDiskFree
 	fromSources
 	fromSourcesLost
 	fromDataAge
@@ -91,6 +93,7 @@ var plainSources = map[string]source{
 	"egt_hot_probes": fromHot, "egt_hot_probe": fromHotProbe, "egt_hot_by_k": fromHotBy,
 	"health.recording": fromRecording, "health.input_path": fromInputPath, "health.clock": fromClock,
 	"health.webhook": fromWebhook, "health.database": fromDatabase, "webhook_waiting": fromWebhookWaiting, "database_lag_s": fromDatabaseLag,
+	"health.disk": fromDisk, "disk_free_gb": fromDiskFree,
 	"health.sources": fromSources, "sources_lost": fromSourcesLost, "data_age_s": fromDataAge, "clock_skew_s": fromSkew,
 }
 
@@ -259,7 +262,7 @@ func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 		case fromFinding:
 			f.Texts[it.slot] = none(scan.Finding[it.index].Kind.String())
 		case fromRunActive, fromRecording, fromInputPath, fromClock, fromSources, fromSourcesLost, fromDataAge, fromSkew,
-			fromWebhook, fromDatabase, fromWebhookWaiting, fromDatabaseLag:
+			fromWebhook, fromDatabase, fromWebhookWaiting, fromDatabaseLag, fromDisk, fromDiskFree:
 		}
 	}
 }
@@ -343,6 +346,10 @@ func (f *frame) fillHealth(s *State) {
 			f.Numbers[it.slot] = s.Health.Webhook.behind()
 		case fromDatabaseLag:
 			f.Numbers[it.slot] = s.Health.Database.behind()
+		case fromDisk:
+			f.Bools[it.slot] = rules.TriOf(s.Health.Disk.Since == 0)
+		case fromDiskFree:
+			f.Numbers[it.slot] = s.Health.Disk.behind()
 		case fromSources:
 			f.Bools[it.slot] = rules.TriOf(lost == 0)
 		case fromSourcesLost:

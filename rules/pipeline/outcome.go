@@ -88,13 +88,14 @@ type Health struct {
 	ClockStepped      int64 // sum of wall-clock steps since boot, ns
 	Webhook           Part
 	Database          Part
+	Disk              Part
 }
 
-// Part tells how a part stands that takes what is recorded to others.
+// Part tells how a part stands that takes what is recorded, for others or for good.
 type Part struct {
 	Since  int64   // host time since when it does not work, ns UTC; 0 = it works
 	Why    string  // it does not
-	Behind float64 // of a webhook: transitions that wait; of a database: s; 0 = not known
+	Behind float64 // of a webhook: transitions that wait; of a database: s; of a disk: free GB (10⁹ bytes); 0 = not known
 }
 
 func (p *Part) change(h *HealthChange, host int64) {

@@ -355,6 +355,7 @@ func TestHealthOfParts(t *testing.T) {
 	}{
 		{`{"part":"webhook","ok":false,"why":"no route","behind":2}`, func() *Part { return &b.s.Health.Webhook }, "health.webhook", "webhook_waiting", "no route", 2, false},
 		{`{"part":"database","ok":false,"why":"status 401"}`, func() *Part { return &b.s.Health.Database }, "health.database", "database_lag_s", "status 401", 0, true},
+		{`{"part":"disk","ok":false,"why":"1.5 GB free","behind":1.5}`, func() *Part { return &b.s.Health.Disk }, "health.disk", "disk_free_gb", "1.5 GB free", 1.5, false},
 	} {
 		if n, works := frame(tt.number); n != 0 || works != rules.Unknown {
 			t.Errorf("%s is %g before", tt.number, n)

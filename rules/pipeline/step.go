@@ -53,7 +53,7 @@ type HealthChange struct {
 	Part   string  `json:"part"` // one of the Part constants
 	OK     bool    `json:"ok"`
 	Why    string  `json:"why"`
-	Behind float64 `json:"behind,omitempty"` // of a webhook: transitions that wait; of a database: s; 0 = not known
+	Behind float64 `json:"behind,omitempty"` // as in Part
 }
 
 // The parts of the daemon that a health record is about.
@@ -62,6 +62,7 @@ const (
 	PartInputPath = "input_path"
 	PartWebhook   = "webhook"
 	PartDatabase  = "database"
+	PartDisk      = "disk" // fails when it will soon be full
 )
 
 // ClockStep is the payload of a clock record.
@@ -376,6 +377,8 @@ func (m *Machine) health(s *State, r *ingest.Record) {
 		s.Health.Webhook.change(&h, r.Host)
 	case h.Part == PartDatabase:
 		s.Health.Database.change(&h, r.Host)
+	case h.Part == PartDisk:
+		s.Health.Disk.change(&h, r.Host)
 	}
 }
 

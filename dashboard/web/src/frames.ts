@@ -196,6 +196,7 @@ export interface StatusFrame extends Numbered {
   clock_skew_s?: Num;
   database?: PartFailure | null; // null while it follows, or where there is none
   webhook?: PartFailure | null;
+  disk?: PartFailure | null; // null unless it will soon be full
 }
 
 export interface HelloFrame extends Numbered {

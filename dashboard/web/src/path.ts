@@ -22,6 +22,8 @@ export function pathParts(s: StatusFrame, dataAge_: number | null): PathPart[] {
     if (part) out.push({ name, said: `fails since ${clock(seconds(part.since))} UTC: ${part.why}; ${fixed(part.behind, 0)} waiting`, bad: true });
     else if (part === null) out.push({ name, said: 'no failure, or none is set up', bad: false });
   }
+  if (s.disk) out.push({ name: 'Disk', said: `soon full, since ${clock(seconds(s.disk.since))} UTC: ${s.disk.why}`, bad: true });
+  else if (s.disk === null) out.push({ name: 'Disk', said: 'not soon full', bad: false });
   out.push({ name: 'Clock', said: s.clock ? 'steady' : `a source differs${typeof s.clock_skew_s === 'number' ? ` by ${fixed(s.clock_skew_s, 1)} s` : ''}, or a step was seen`, bad: !s.clock });
   return out;
 }
