@@ -147,7 +147,7 @@ func bandRules(b *egt.Band) []Rule {
 		Name: "egt_" + b.Name + "_over", When: name + ".over", Priority: Caution, Group: groupEGT,
 		Value: "egt_indicated_k", WorsenBy: egtWorse,
 		Title:    what + " above " + limit,
-		Text:     what + " {egt_indicated_k:degC.1}, above " + limit + ": {" + name + ".remaining_s:s.1} left of " + allowance + perRun + ". Follow the facility's procedure." + notProtection,
+		Text:     what + " above " + limit + ", where " + allowance + " are allowed" + perRun + ". Follow the facility's procedure." + notProtection,
 		Caution:  "The time allowance of this limit is running. Watch indicated EGT and its trend.",
 		Response: response,
 	}}
