@@ -52,19 +52,21 @@ func (r *run) skewed(t int64) (out [2]bool) {
 const jumpShows = second / 4
 
 // astray tells whether what is sent at a time since the begin may find no place in
-// event time: with a clock that has just jumped back, or a wrong one while the daemon
-// was away and there is no time of arrival.
+// event time: with a clock that has just jumped back, or while the daemon was away if a
+// clock was wrong then. What the broker kept has no time of arrival, and late samples
+// of a clock that is right again look like those of one that is wrong still.
 func (r *run) astray(t int64) bool {
 	for _, f := range r.faults {
 		from, to := int64(f.At), int64(f.At+f.For)
 		if f.Kind == rehearsal.ClockPast && t >= from && t < from+jumpShows {
 			return true
 		}
-		if (f.Kind == rehearsal.ClockPast || f.Kind == rehearsal.ClockSkew) && t >= from && t < to {
-			for _, d := range r.restarts {
-				if t >= d.at && t <= d.at+d.down {
-					return true
-				}
+		if f.Kind != rehearsal.ClockPast && f.Kind != rehearsal.ClockSkew {
+			continue
+		}
+		for _, d := range r.restarts {
+			if t >= d.at && t <= d.at+d.down && from <= d.at+d.down && to >= d.at {
+				return true
 			}
 		}
 	}
