@@ -150,6 +150,9 @@ func New(cfg Config) (*Computer, error) {
 	c.p7.sense = sense(&c.cfg, &st.P7Watch, st.P7, true)
 	c.t7.sense = sense(&c.cfg, &st.T7Watch, st.T7, false)
 	c.egt.sense = sense(&c.cfg, &st.EGTWatch, st.EGT, false)
+	for _, g := range []*group{&c.p7, &c.t7, &c.egt} {
+		g.watch.Agree = g.sense.Limit
+	}
 	c.parts = make([]part, 0, 16+2*len(cfg.Channels))
 	c.flow.terms = make([]term, 0, 8+len(cfg.Channels))
 	c.steadiness()

@@ -56,9 +56,11 @@ type Watch struct {
 	// it excludes healthy ones.
 	Departure     float64
 	DepartureHold int64 // 3 s
-	ProofHold     int64 // 1 s
-	KeepHot       bool  // an EGT harness: reading hot excludes no probe
-	Return        int64 // ns without fault after which a probe is taken back; 0 = by Readmit only
+	// Agree is the same for learning where no departure excludes: see agrees; 0 = learn all.
+	Agree     float64
+	ProofHold int64 // 1 s
+	KeepHot   bool  // an EGT harness: reading hot excludes no probe
+	Return    int64 // ns without fault after which a probe is taken back; 0 = by Readmit only
 
 	Learn  int64 // ns of steady time after which a pattern is known
 	Memory int64 // ns of steady time over which a pattern adapts, ≥ Learn. A drift slower than Departure/Memory is learned and not found
@@ -83,8 +85,8 @@ func (w *Watch) Check() error {
 	if w.Memory < w.Learn {
 		faults = append(faults, fmt.Errorf("rake: memory of %v ns is shorter than the %v ns to learn", w.Memory, w.Learn))
 	}
-	if !(w.Departure >= 0) || !(w.Sampling >= 0) {
-		faults = append(faults, fmt.Errorf("rake: departure %v, sampling %v: want none or a positive number", w.Departure, w.Sampling))
+	if !(w.Departure >= 0) || !(w.Agree >= 0) || !(w.Sampling >= 0) {
+		faults = append(faults, fmt.Errorf("rake: departure %v, agreement %v, sampling %v: want none or a positive number", w.Departure, w.Agree, w.Sampling))
 	}
 	return errors.Join(faults...)
 }
@@ -164,15 +166,23 @@ func (w *Watch) Step(s *State, t int64, values []float64, quality []monitor.Qual
 			r.Changed |= 1 << i
 		}
 	}
+	if r.Changed != 0 && !known {
+		s.restart(w) // what has failed may have been learned for a while, and spoilt the others
+	}
 	r.Changed |= w.depart(s, t, dt, values, quality, known)
 
-	// The mean, over probes whose offset is known if there are any.
+	// The mean, over probes whose offset is known if there are any. Until then offsets are
+	// half learned: it is the plain one.
 	var sum, all float64
 	for _, need := range [...]bool{known, false} {
 		for i := range s.Probes {
 			p := &s.Probes[i]
 			if p.Out == In && quality[i].Usable() && (!need || p.Learned >= w.Learn) {
-				sum += w.weight(i) * (values[i] - p.Offset)
+				v := values[i]
+				if known {
+					v -= p.Offset
+				}
+				sum += w.weight(i) * v
 				all += w.weight(i)
 			}
 		}
@@ -374,12 +384,15 @@ func (w *Watch) settled(s *State) bool {
 // it would depart once it is right again. If they do not agree for as long as learning
 // takes, it was wrong before, and learning begins anew.
 func (w *Watch) agrees(s *State, dt int64, mean float64, values []float64, quality []monitor.Quality) bool {
-	young := func(p *Probe) bool { return p.Learned > 0 && p.Learned < w.Learn }
+	limit := w.Departure
+	if limit == 0 {
+		limit = w.Agree
+	}
 	agree := true
 	for i := range s.Probes {
 		p := &s.Probes[i]
-		if w.Departure > 0 && young(p) && p.Learned >= longest && p.Out == In && quality[i].Usable() {
-			agree = agree && math.Abs(values[i]-mean-p.Offset) <= quiet*w.Departure
+		if limit > 0 && p.young(w) && p.Learned >= longest && p.Out == In && quality[i].Usable() {
+			agree = agree && math.Abs(values[i]-mean-p.Offset) <= quiet*limit
 		}
 	}
 	if agree {
@@ -389,13 +402,21 @@ func (w *Watch) agrees(s *State, dt int64, mean float64, values []float64, quali
 	if s.Disagree += dt; s.Disagree < w.Learn {
 		return false
 	}
+	s.restart(w)
+	return true
+}
+
+// young tells whether something is learned of a pattern that is not known yet.
+func (p *Probe) young(w *Watch) bool { return p.Learned > 0 && p.Learned < w.Learn }
+
+// restart forgets what is half learned.
+func (s *State) restart(w *Watch) {
 	s.Disagree = 0
 	for i := range s.Probes {
-		if p := &s.Probes[i]; young(p) {
+		if p := &s.Probes[i]; p.young(w) {
 			p.Learned, p.Offset = 0, 0
 		}
 	}
-	return true
 }
 
 // learn moves the offsets toward what this scan shows, and lets those that are

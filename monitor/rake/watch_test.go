@@ -359,12 +359,18 @@ func TestFaultWhileLearning(t *testing.T) {
 		from, until float64 // s
 		off         float64 // K
 		mean        float64 // K at the end; the eight are 900 on the mean
+		departs     bool    // a departure excludes
 	}{
-		{"cold for a while", 10, 25, -200, 900},
-		{"hot for a while", 3, 12, 30, 900},
-		{"from then on", 10, 300, -80, 900 - 80.0/8},
+		{"cold for a while", 10, 25, -200, 900, true},
+		{"hot for a while", 3, 12, 30, 900, true},
+		{"from then on", 10, 300, -80, 900 - 80.0/8, true},
+		{"cold in a harness where nothing is left out", 10, 25, -200, 900, false},
 	} {
-		g := newRig(1, harness(), 0.5)
+		w := harness()
+		if !tt.departs {
+			w.Departure, w.Agree = 0, 20
+		}
+		g := newRig(1, w, 0.5)
 		for k := range 200 * 20 {
 			at := float64(k) / 20
 			r := g.step(func(v []float64, _ []monitor.Quality) {
@@ -378,6 +384,32 @@ func TestFaultWhileLearning(t *testing.T) {
 			}
 			if at > 150 && math.Abs(r.Mean-tt.mean) > 2 {
 				t.Errorf("%s: mean %g at %g s, want %g", tt.name, r.Mean, at, tt.mean)
+				break
+			}
+		}
+	}
+}
+
+// A probe that fails for good while patterns are half learned leaves nothing of it in
+// the mean of the others, nor in their patterns: one that shorts right after light-off
+// took 22 K off an indicated EGT. The mean is the plain one of the seven that are left.
+func TestFailedWhileLearning(t *testing.T) {
+	for _, from := range []float64{0, 0.5, 5} {
+		w := harness()
+		w.Departure, w.Agree = 0, 40
+		g := newRig(2, w, 0.5)
+		for k := range 20 * 20 {
+			at := float64(k) / 20
+			r := g.step(func(v []float64, q []monitor.Quality) {
+				if at >= from {
+					v[2] = 300
+				}
+				if at >= from+2 {
+					q[2] = monitor.QualityInvalidCode
+				}
+			})
+			if want := 900 - pattern[2]/7; at > from+2 && math.Abs(r.Mean-want) > 2 {
+				t.Errorf("failed at %g s: mean %g at %g s, want %g", from, r.Mean, at, want)
 				break
 			}
 		}
