@@ -26,7 +26,7 @@ func (d *data) figures() ([]figure, error) {
 	flow := scaleOf(monitor.MassFlow)
 	zone := d.clock.name(d.Run.Started)
 	on := func(title, y string, layers ...plot.Layer) plot.Figure {
-		return plot.Figure{Title: title, X: "Time, " + zone, Y: y, Clock: d.clock.zone, Width: 170, Height: 58, Layers: layers}
+		return plot.Figure{Title: title, X: "Time, " + zone, Y: y, Clock: d.clock.zone, Width: 170, Height: 62, Layers: layers}
 	}
 	bands := []plot.Layer{
 		d.curve("Hottest probe", lineHottest, celsiusScale, plot.Second),
@@ -40,6 +40,10 @@ func (d *data) figures() ([]figure, error) {
 	plane, err := d.throatPlane()
 	if err != nil {
 		return nil, err
+	}
+	caption := "NPR p8/pb and the choke NPR that decides the state. Shaded: choked."
+	if len(d.events.marks) > 0 {
+		caption += " Upright lines: marks of the operators, numbered as in the time line."
 	}
 	var out []figure
 	for _, f := range []struct {

@@ -233,6 +233,9 @@ func (d *data) head() []fact {
 		{"Configuration hash", d.cfg.Hash},
 		{"Recorded by", "throatwatch " + or(joined(h.Build, h.GOARCH))},
 	}
+	if o := h.Origin; o != nil && o.Kind == runfile.OriginImport {
+		facts = append(facts, fact{"Made from", fmt.Sprintf("%s, a recording of another data system: %d rows, %d of its cells could not be used; SHA-256 %s", o.File, o.Rows, o.Bad, o.SHA256)})
+	}
 	if h.Notes != "" {
 		facts = append(facts, fact{"Notes", h.Notes})
 	}
@@ -466,7 +469,7 @@ func configText(c *change) string {
 
 func (d *data) exceedances() table {
 	t := table{
-		Head:  words("Band", "Began", "Ended", "Limit", "Peak", "Above limit", "Allowance", "Without a value", "Allowance"),
+		Head:  words("Band", "Began", "Ended", "Limit", "Peak", "Above limit", "Allowance", "Without a value", "Outcome"),
 		Empty: "No EGT limit was exceeded.",
 	}
 	t.numbers(map[int]string{3: "°C", 4: "°C", 5: "s", 6: "s", 7: "s"})
@@ -501,7 +504,7 @@ func (d *data) life() table {
 		texts("Hours with a flame", decimal(l.Hours, 3)),
 	}
 	for _, b := range l.Bands {
-		t.Rows = append(t.Rows, texts(fmt.Sprintf("Time above %s, s (%d excursions, %d beyond the allowance)", b.Name, b.Excursions, b.Exceedances), decimal(b.Seconds, 1)))
+		t.Rows = append(t.Rows, texts(fmt.Sprintf("Time above %s, s (%s, %d beyond the allowance)", b.Name, counted(int(b.Excursions), "excursion"), b.Exceedances), decimal(b.Seconds, 1)))
 	}
 	return t.aligned()
 }

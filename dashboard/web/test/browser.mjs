@@ -261,6 +261,26 @@ try {
     await until('scrubbed to the start', async () => (await words('replay-clock')).startsWith('0:00:00'));
   });
 
+  await check('the report of a run prints on A4 and needs nothing but itself', async () => {
+    await page.goto(`${server}#/runs`);
+    await page.locator('[data-q="report"]').first().waitFor();
+    const row = page.locator('tr', { has: page.locator('[data-q="replay"][data-state="ended"]') }).first();
+    const [sheet] = await Promise.all([context.waitForEvent('page'), row.locator('[data-q="report"]').click()]);
+    follow(sheet);
+    await sheet.setViewportSize({ width: 794, height: 1123 }); // A4 at 96 dpi
+    await sheet.waitForLoadState();
+    assert.match(await sheet.title(), /^Run /);
+    const pdf = (await sheet.pdf({ preferCSSPageSize: true })).toString('latin1');
+    const pages = pdf.match(/\/Type \/Page\b/g)?.length ?? 0;
+    assert.ok(pages >= 6 && pages <= 20, `${pages} pages`);
+    if (renew) {
+      const png = small(await sheet.screenshot({ animations: 'disabled' }));
+      assert.ok(png.length <= 120_000, `report.png: ${png.length} bytes`);
+      writeFileSync(join(pictures, 'report.png'), png);
+    }
+    await sheet.close();
+  });
+
   page = live;
   await check('an unchoked, then a choked period are shown', async () => {
     await live.evaluate(() => { window.seen.longest = 0; });

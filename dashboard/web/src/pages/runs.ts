@@ -69,7 +69,8 @@ export function runsPage(d: Display): View {
     h('td', { class: 'num' }, String(r.alarms)), h('td', {}, stateWords[r.state] ?? r.state, r.keep ? h('div', { class: 'extra' }, 'keep') : ''),
     h('td', { class: 'num' }, bytes(r.size_bytes)), h('td', {}, r.notes, r.tags && r.tags.length > 0 ? h('div', { class: 'extra' }, r.tags.join(', ')) : ''),
     h('td', {}, h('a', { class: 'button', href: `#/run/${encodeURIComponent(r.id)}`, 'data-focus': `replay ${r.id}`, 'aria-label': `Replay run ${r.number}`, 'data-q': 'replay', 'data-state': r.state }, 'Replay'),
-      h('div', { class: 'asides' }, button(r, 'Note…', 'note', false, note), button(r, 'Delete…', 'delete', r.keep || r.state === 'active', remove))));
+      h('div', { class: 'asides' }, h('a', { class: 'button small', href: `api/runs/${encodeURIComponent(r.id)}/report`, target: '_blank', rel: 'noopener', 'data-focus': `report ${r.id}`, 'aria-label': `Report of run ${r.number}`, 'data-q': 'report' }, 'Report'),
+        button(r, 'Note…', 'note', false, note), button(r, 'Delete…', 'delete', r.keep || r.state === 'active', remove))));
 
   function onKey(e: KeyboardEvent): void {
     if (e.key !== '/' || /^(INPUT|SELECT|TEXTAREA)$/.test((e.target as HTMLElement).tagName)) return;
