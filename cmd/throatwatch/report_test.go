@@ -41,6 +41,17 @@ func TestReportCommand(t *testing.T) {
 		t.Errorf("%v: %v is left", err, left)
 	}
 	printed(t, out)
+
+	if code, _, stderr := invoke(t, "reduce", id, "--rig", testRig(t), "--note", "zero of p7_2 <entered> again", "--by", "C. Vega", "--data", data); code != 0 {
+		t.Fatalf("reduce: exit code %d: %s", code, stderr)
+	}
+	if code, _, stderr := invoke(t, "report", id+"-r1", "--data", data, "--out", out, "--replace"); code != 0 {
+		t.Fatalf("reduction: exit code %d, %q", code, stderr)
+	}
+	child, err := os.ReadFile(out)
+	if err != nil || !bytes.Contains(child, []byte("run "+id+", its records stepped again through the configuration above, by C. Vega. Change: zero of p7_2 &lt;entered&gt; again.")) {
+		t.Errorf("%v: the reduction does not tell what it is", err)
+	}
 }
 
 // printed prints a report with Chromium: whole pages of A4, with the title of the run.

@@ -53,7 +53,7 @@ func (d *data) figures() ([]figure, error) {
 		{
 			on("Nozzle pressure ratio", "NPR", append(d.choked(),
 				d.curve("NPR", lineNPR, scale{factor: 1}, plot.Data), d.curve("choke NPR", lineChokeNPR, scale{factor: 1}, plot.Quiet))...),
-			"NPR p8/pb and the choke NPR that decides the state. Shaded: choked. Upright lines: marks of the operators, numbered as in the time line.",
+			caption,
 		},
 		{
 			on("Choke margin", "Margin, %",

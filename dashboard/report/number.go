@@ -3,6 +3,7 @@ package report
 import (
 	"fmt"
 	"math"
+	"slices"
 	"strconv"
 	"strings"
 	"time"
@@ -28,12 +29,13 @@ type scale struct {
 
 // scaleOf gives the unit in which a quantity is printed.
 func scaleOf(q monitor.Quantity) scale {
+	is := func(of ...monitor.Quantity) bool { return slices.Contains(of, q) }
 	switch {
-	case q == monitor.EGTSpread || q == monitor.EGTRise || q == monitor.ReferredEGT: // differences, and a ratio to θ
+	case is(monitor.EGTSpread, monitor.EGTRise, monitor.ReferredEGT): // differences, and a ratio to θ
 		return scale{"K", 1, 0, 1}
-	case q == monitor.FuelFlow || q == monitor.WaterFlow:
+	case is(monitor.FuelFlow, monitor.WaterFlow):
 		return scale{"kg/h", 3600, 0, 1}
-	case q == monitor.FuelAirRatio || q == monitor.HumidityRatio || q == monitor.WaterAirRatio:
+	case is(monitor.FuelAirRatio, monitor.HumidityRatio, monitor.WaterAirRatio):
 		return scale{"", 1, 0, 5}
 	}
 	switch u := q.Info().Unit; u {

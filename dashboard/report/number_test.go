@@ -171,3 +171,11 @@ func TestGrouped(t *testing.T) {
 		t.Errorf("%+v", got)
 	}
 }
+
+// A number and its unit are not parted at the end of a line.
+func TestKept(t *testing.T) {
+	got := kept([]fact{{"Choke", "Choked for 2 min 19 s, W8 7.369 ± 0.047 kg/s at point 1, 95 %."}})[0].Value
+	if want := "Choked for 2\u00a0min 19\u00a0s, W8 7.369 ±\u00a00.047\u00a0kg/s at point 1, 95\u00a0%."; got != want {
+		t.Errorf("%q, want %q", got, want)
+	}
+}

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"html/template"
 	"math"
+	"regexp"
 	"slices"
 	"strconv"
 	"strings"
@@ -189,7 +190,7 @@ func (d *data) view() (*view, error) {
 	case runfile.StateInterrupted:
 		v.Interim = "The recording of this run was interrupted. The report reaches to " + d.clock.long(d.scans.last) + "; what came after is in no column and in no figure of it."
 	}
-	v.Head, v.Summary = d.head(), d.summary()
+	v.Head, v.Summary = d.head(), kept(d.summary())
 	v.Engine, v.Nozzle = d.sources(), d.nozzle()
 	v.Limits, v.Channels = d.limits(), d.channels()
 	v.Faults, v.Out, v.Gaps = d.faults(), d.outs(), d.gaps()
@@ -233,14 +234,30 @@ func (d *data) head() []fact {
 		{"Configuration hash", d.cfg.Hash},
 		{"Recorded by", "throatwatch " + or(joined(h.Build, h.GOARCH))},
 	}
-	if o := h.Origin; o != nil && o.Kind == runfile.OriginImport {
+	switch o := h.Origin; {
+	case o == nil:
+	case o.Kind == runfile.OriginReduction:
+		facts = append(facts, fact{"Reduced from", fmt.Sprintf("run %s, its records stepped again through the configuration above, by %s. Change: %s. Digest of that run then: %s",
+			o.Parent, or(o.By), or(strings.TrimRight(h.Notes, ".")), or(o.ParentDigest))})
+	case o.Kind == runfile.OriginImport:
 		facts = append(facts, fact{"Made from", fmt.Sprintf("%s, a recording of another data system: %d rows, %d of its cells could not be used; SHA-256 %s", o.File, o.Rows, o.Bad, o.SHA256)})
 	}
-	if h.Notes != "" {
+	if h.Notes != "" && h.Reduction() == nil {
 		facts = append(facts, fact{"Notes", h.Notes})
 	}
 	if len(h.Tags) > 0 {
 		facts = append(facts, fact{"Tags", strings.Join(h.Tags, ", ")})
+	}
+	return facts
+}
+
+// unitBehind is a number and what stands behind it.
+var unitBehind = regexp.MustCompile(`(\d) ([\pL%°])`)
+
+// kept keeps numbers and their units on one line.
+func kept(facts []fact) []fact {
+	for i := range facts {
+		facts[i].Value = strings.ReplaceAll(unitBehind.ReplaceAllString(facts[i].Value, "$1\u00a0$2"), "± ", "±\u00a0")
 	}
 	return facts
 }
