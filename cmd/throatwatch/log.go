@@ -32,7 +32,7 @@ func figuresCommand(ctx context.Context, args []string, stdout, stderr io.Writer
 // aboutRun is a command that reads something of a stored run and prints it.
 func aboutRun[T any](
 	ctx context.Context, args []string, stdout, stderr io.Writer, name, what string,
-	read func(context.Context, *runfile.File, *runfile.Header) (T, error), show func(io.Writer, T),
+	read func(context.Context, *runfile.File, *runfile.Header) (T, error), show func(io.Writer, T, *time.Location),
 ) int {
 	fs := newFlags(name+" RUN", what, stderr)
 	data := fs.String("data", "data", "data folder")
@@ -45,7 +45,11 @@ func aboutRun[T any](
 		_, _ = fmt.Fprintf(stderr, "throatwatch %s: give one run; `throatwatch runs` lists them\n", name)
 		return 2
 	}
-	v, err := ofRun(ctx, *data, rest[0], read)
+	zone := time.UTC
+	v, err := ofRun(ctx, *data, rest[0], func(ctx context.Context, f *runfile.File, h *runfile.Header) (T, error) {
+		zone = zoneOf(h.TimeZone)
+		return read(ctx, f, h)
+	})
 	var text []byte
 	if err == nil && *asJSON {
 		text, err = json.MarshalIndent(v, "", "  ")
@@ -57,7 +61,7 @@ func aboutRun[T any](
 	case *asJSON:
 		_, _ = fmt.Fprintf(stdout, "%s\n", text)
 	default:
-		show(stdout, v)
+		show(stdout, v, zone)
 	}
 	return 0
 }
@@ -75,29 +79,29 @@ func ofRun[T any](ctx context.Context, dir, id string, read func(context.Context
 	return read(ctx, f, &h)
 }
 
-func printLog(w io.Writer, entries []pipeline.Entry) {
+func printLog(w io.Writer, entries []pipeline.Entry, zone *time.Location) {
 	if len(entries) == 0 {
 		_, _ = fmt.Fprintln(w, "nobody entered anything")
 		return
 	}
 	t := tabwriter.NewWriter(w, 0, 0, 2, ' ', 0)
-	_, _ = fmt.Fprintln(t, "TIME (UTC)\tWHAT\tOF\tENTERED\tREASON\tBY")
+	_, _ = fmt.Fprintln(t, "TIME ("+zoneName(zone)+")\tWHAT\tOF\tENTERED\tREASON\tBY")
 	for i := range entries {
 		e := &entries[i]
-		_, _ = fmt.Fprintf(t, "%s\t%s\t%s\t%s\t%s\t%s (%s)\n", stamp(e.T), strings.ReplaceAll(e.What, "_", " "),
-			e.Rule+e.Channel+e.Name, entered(e), oneLine(e.Reason), oneLine(e.By), e.Role)
+		_, _ = fmt.Fprintf(t, "%s\t%s\t%s\t%s\t%s\t%s (%s)\n", stamp(e.T, zone), strings.ReplaceAll(e.What, "_", " "),
+			e.Rule+e.Channel+e.Name, entered(e, zone), oneLine(e.Reason), oneLine(e.By), e.Role)
 	}
 	_ = t.Flush()
 }
 
 // entered says what an entry carries beside its reason.
-func entered(e *pipeline.Entry) string {
+func entered(e *pipeline.Entry, zone *time.Location) string {
 	var parts []string
 	if e.Value.Known {
 		parts = append(parts, strings.TrimSpace(strconv.FormatFloat(e.Value.V, 'g', -1, 64)+" "+e.Unit))
 	}
 	if e.Serial != "" {
-		parts = append(parts, "sensor "+e.Serial+" from "+stamp(e.ValidFrom))
+		parts = append(parts, "sensor "+e.Serial+" from "+stamp(e.ValidFrom, zone))
 	}
 	if e.Text != "" {
 		parts = append(parts, oneLine(e.Text))
@@ -108,9 +112,30 @@ func entered(e *pipeline.Entry) string {
 // oneLine keeps what somebody typed from breaking a table.
 func oneLine(s string) string { return strings.Join(strings.Fields(s), " ") }
 
-func stamp(t rules.Time) string { return time.Unix(0, int64(t)).UTC().Format("2006-01-02 15:04:05") }
+// stamp writes a time for people, with the offset to UTC where the zone is another.
+func stamp(t rules.Time, zone *time.Location) string {
+	at := time.Unix(0, int64(t)).In(zone)
+	if _, offset := at.Zone(); offset == 0 && zoneName(zone) == "UTC" {
+		return at.Format("2006-01-02 15:04:05")
+	}
+	return at.Format("2006-01-02 15:04:05 -07:00")
+}
 
-func printFigures(w io.Writer, f figures.Figures) {
+// zoneOf gives the time zone of a name, UTC where there is none.
+func zoneOf(name string) *time.Location {
+	rig := pipeline.RigInfo{TimeZone: name}
+	return rig.Zone()
+}
+
+// zoneName names a zone in a table's head.
+func zoneName(zone *time.Location) string {
+	if zone.String() == "Etc/UTC" {
+		return "UTC"
+	}
+	return zone.String()
+}
+
+func printFigures(w io.Writer, f figures.Figures, zone *time.Location) {
 	targets := map[string]figures.Target{}
 	for _, g := range f.Targets {
 		targets[g.Figure] = g
@@ -121,7 +146,7 @@ func printFigures(w io.Writer, f figures.Figures) {
 		}
 		return fmt.Sprintf(format, *v)
 	}
-	_, _ = fmt.Fprintf(w, "%s to %s UTC, %v\n\n", stamp(f.From), stamp(f.To), time.Duration(f.Seconds*1e9).Round(time.Second))
+	_, _ = fmt.Fprintf(w, "%s to %s %s, %v\n\n", stamp(f.From, zone), stamp(f.To, zone), zoneName(zone), time.Duration(f.Seconds*1e9).Round(time.Second))
 	t := tabwriter.NewWriter(w, 0, 0, 2, ' ', 0)
 	_, _ = fmt.Fprintln(t, "FIGURE\tOF THIS RUN\tTARGET\t")
 	row := func(name, value, key, bound string) {
@@ -143,7 +168,7 @@ func printFigures(w io.Writer, f figures.Figures) {
 	row("raised per 10 min, mean", number(f.Per10Min, "%.2f"), "per_10_min", "≤ ")
 	peak := strconv.Itoa(f.Peak10Min)
 	if f.PeakAt != 0 {
-		peak += " at " + stamp(f.PeakAt)
+		peak += " at " + stamp(f.PeakAt, zone)
 	}
 	row("raised in 10 min, most", peak, "peak_10_min", "≤ ")
 	row("standing now", strconv.Itoa(f.StandingNow), "", "")

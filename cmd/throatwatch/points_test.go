@@ -53,3 +53,33 @@ func TestPointsCommand(t *testing.T) {
 		}
 	}
 }
+
+// People are told times in the zone of the facility, with the offset; inside, and in JSON,
+// all is UTC. The computation does not know the zone.
+func TestFacilityTime(t *testing.T) {
+	dir := t.TempDir()
+	rig := otherRig(t, "time_zone: Etc/UTC", "time_zone: Asia/Kolkata") // UTC + 5:30 all year, IANA tz database
+	code, _, stderr := invoke(t, "rehearse", rig, "--into", dir, "--start", "2026-03-02T09:00:00Z", "--quick")
+	if code != 0 {
+		t.Fatal(stderr)
+	}
+	run := storedRuns(t, dir)[0]
+	if run.TimeZone != "Asia/Kolkata" || !strings.HasPrefix(run.Started, "2026-03-02T09:0") || !strings.HasSuffix(run.Started, "Z") {
+		t.Errorf("%+v", run)
+	}
+	for _, tt := range []struct {
+		args []string
+		want []string
+	}{
+		{[]string{"runs"}, []string{"STARTED (FACILITY)", "2026-03-02 14:30:", " +05:30"}},
+		{[]string{"points", run.ID, "--stretch", "5s..15s"}, []string{"from 2026-03-02 14:30:", " +05:30"}},
+		{[]string{"figures", run.ID}, []string{"2026-03-02 14:30:", " +05:30 Asia/Kolkata"}},
+	} {
+		_, stdout, stderr := invoke(t, append(tt.args, "--data", dir)...)
+		for _, want := range tt.want {
+			if !strings.Contains(stdout, want) {
+				t.Errorf("%v: %q is not in %s%s", tt.args, want, stdout, stderr)
+			}
+		}
+	}
+}

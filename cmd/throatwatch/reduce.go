@@ -6,11 +6,11 @@ import (
 	"fmt"
 	"io"
 	"os/user"
-	"time"
 
 	"throatwatch/cmd/internal/config"
 	"throatwatch/cmd/internal/watch"
 	"throatwatch/ingest/runfile"
+	"throatwatch/rules"
 	"throatwatch/rules/pipeline"
 )
 
@@ -126,7 +126,7 @@ func printReduced(w io.Writer, r *watch.Reduced) {
 		_, _ = fmt.Fprintln(w, "the run does not end in its records")
 	}
 	for _, s := range swapsOf(r) {
-		_, _ = fmt.Fprintf(w, "sensor swap: %s has %s since %s UTC (%s, %s): one calibration of the rig file holds for the whole run\n",
-			s.Channel, s.Serial, time.Unix(0, s.ValidFrom).UTC().Format("2006-01-02 15:04:05"), s.By, oneLine(s.Reason))
+		_, _ = fmt.Fprintf(w, "sensor swap: %s has %s since %s (%s, %s): one calibration of the rig file holds for the whole run\n",
+			s.Channel, s.Serial, stamp(rules.Time(s.ValidFrom), zoneOf(r.Run.TimeZone)), s.By, oneLine(s.Reason))
 	}
 }

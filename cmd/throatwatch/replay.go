@@ -9,7 +9,7 @@ import (
 	"io"
 	"os"
 	"path/filepath"
-	"strings"
+	"slices"
 	"text/tabwriter"
 	"time"
 
@@ -17,6 +17,7 @@ import (
 	"throatwatch/dashboard"
 	"throatwatch/ingest"
 	"throatwatch/ingest/runfile"
+	"throatwatch/rules"
 	"throatwatch/rules/pipeline"
 )
 
@@ -55,6 +56,9 @@ type runLine struct {
 	Parent       string `json:"parent,omitempty"` // of a reduction
 	ParentDigest string `json:"parent_digest,omitempty"`
 	ReducedBy    string `json:"reduced_by,omitempty"`
+	TimeZone     string `json:"time_zone"` // of the facility, "" = UTC
+
+	started rules.Time
 
 	EffectiveArea    *float64 `json:"effective_area_m2"` // mean over steady choked scans
 	EffectiveAreaU95 *float64 `json:"effective_area_m2_u95"`
@@ -89,7 +93,11 @@ func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) i
 		return 0
 	}
 	t := tabwriter.NewWriter(stdout, 0, 0, 2, ' ', 0)
-	_, _ = fmt.Fprintln(t, "RUN\tENGINE\tSTARTED (UTC)\tLENGTH\tALARMS\tSTATE\tSIZE\tEFFECTIVE AREA\tDRIFT")
+	started := "STARTED (UTC)"
+	if slices.ContainsFunc(list, func(r runLine) bool { return zoneName(zoneOf(r.TimeZone)) != "UTC" }) {
+		started = "STARTED (FACILITY)"
+	}
+	_, _ = fmt.Fprintln(t, "RUN\tENGINE\t"+started+"\tLENGTH\tALARMS\tSTATE\tSIZE\tEFFECTIVE AREA\tDRIFT")
 	for _, r := range list {
 		length := "–"
 		if r.DurationS != nil {
@@ -99,8 +107,8 @@ func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) i
 		if r.Parent != "" {
 			id = "  of it: " + id
 		}
-		_, _ = fmt.Fprintf(t, "%s\t%s %s\t%.19s\t%s\t%d\t%s\t%.1f MB\t%s\t%s\n", id, r.Engine, r.EngineSerial,
-			strings.Replace(r.Started, "T", " ", 1), length, r.Alarms, r.State, float64(r.SizeBytes)/1e6,
+		_, _ = fmt.Fprintf(t, "%s\t%s %s\t%s\t%s\t%d\t%s\t%.1f MB\t%s\t%s\n", id, r.Engine, r.EngineSerial,
+			stamp(r.started, zoneOf(r.TimeZone)), length, r.Alarms, r.State, float64(r.SizeBytes)/1e6,
 			measure(r.EffectiveArea, r.EffectiveAreaU95, 1e4, "%.2f", "cm²"), measure(r.AreaDrift, r.AreaDriftU95, 1, "%+.2f", "%"))
 	}
 	_ = t.Flush()
@@ -127,7 +135,7 @@ func listRuns(ctx context.Context, dir string, filter runfile.Filter) (list []ru
 		line := runLine{
 			ID: r.ID, Number: r.Number, Rig: r.Rig, Engine: r.Engine, EngineSerial: r.EngineSerial,
 			Started: time.Unix(0, r.Started).UTC().Format(time.RFC3339Nano), State: r.State, Alarms: r.Alarms,
-			SizeBytes: r.Size, Keep: r.Keep, Tags: append([]string{}, r.Tags...), Notes: r.Notes, ConfigHash: r.ConfigHash, Build: r.Build, Digest: r.Digest,
+			SizeBytes: r.Size, TimeZone: r.TimeZone, started: rules.Time(r.Started), Keep: r.Keep, Tags: append([]string{}, r.Tags...), Notes: r.Notes, ConfigHash: r.ConfigHash, Build: r.Build, Digest: r.Digest,
 		}
 		if o := r.Reduction(); o != nil {
 			line.Parent, line.ParentDigest, line.ReducedBy = o.Parent, o.ParentDigest, o.By

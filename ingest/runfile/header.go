@@ -29,8 +29,9 @@ type Header struct {
 	Build        string   `json:"build,omitempty"`  // build id of the last writer
 	GOARCH       string   `json:"goarch,omitempty"` // of the last writer
 	ConfigHash   string   `json:"config_hash,omitempty"`
-	Started      int64    `json:"started"`         // ns UTC
-	Ended        int64    `json:"ended,omitempty"` // ns UTC, 0 while it goes on
+	TimeZone     string   `json:"time_zone,omitempty"` // of the facility, "" = UTC
+	Started      int64    `json:"started"`             // ns UTC
+	Ended        int64    `json:"ended,omitempty"`     // ns UTC, 0 while it goes on
 	State        string   `json:"state"`
 	Keep         bool     `json:"keep,omitempty"` // never to be removed by retention
 	Tags         []string `json:"tags,omitempty"`

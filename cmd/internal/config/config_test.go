@@ -159,7 +159,7 @@ func TestMeanings(t *testing.T) {
 		{"example: channels", len(ex.Compute.Channels), 42},
 		{"example: rig", ex.Rig, pipeline.RigInfo{
 			ID: "cell_2", Title: "Alder Bank cell 2", EngineModel: "Merle 5", EngineSerial: "ML5-0042", EngineBuild: "7",
-			NozzleSerial: "NZ-0311", LimitsVersion: "ML5-LIM-C",
+			NozzleSerial: "NZ-0311", LimitsVersion: "ML5-LIM-C", TimeZone: "Etc/UTC",
 		}},
 		{"example: inputs of the rig's own topics", ex.Align.Inputs[3].Filter, "rigs/cell_2/channels/+"},
 		{"example: their format", ex.Align.Inputs[3].Format, decode.Value},

@@ -83,6 +83,7 @@ func (r *rig) readIdentity(m *fields) {
 	info := &r.cfg.Rig
 	info.ID = f.need("id", "the id becomes part of the topics rigs/ID/…").id()
 	info.Title = f.get("title").label(info.ID)
+	info.TimeZone = f.get("time_zone").zoneName()
 	r.elevation = f.get("elevation").quantity(unit.Length, math.NaN(), between(-500, 6000, "-500 m and 6000 m"))
 	f.done()
 

@@ -8,6 +8,7 @@ import (
 	"slices"
 	"strconv"
 	"strings"
+	"time"
 
 	"throatwatch/monitor/unit"
 )
@@ -280,6 +281,20 @@ func (n node) id() string {
 	text := n.text()
 	if n.is() && !name.MatchString(text) {
 		n.fault(fmt.Sprintf("%q is not an id", text), "begin with a small letter, then small letters, digits and _, 64 at most")
+		return ""
+	}
+	return text
+}
+
+// zoneName reads the name of a time zone, "" for none.
+func (n node) zoneName() string {
+	text := n.text()
+	if !n.is() {
+		return ""
+	}
+	// Local is that of whatever machine reads the file.
+	if _, err := time.LoadLocation(text); err != nil || text == "" || text == "Local" {
+		n.fault(fmt.Sprintf("there is no time zone %q", text), "write a name of the IANA database, as Europe/Zurich or Etc/UTC")
 		return ""
 	}
 	return text

@@ -221,7 +221,7 @@ func (c *Core) Header() *RunHeader {
 	run := &c.State.Run
 	return &RunHeader{
 		ID: run.ID, Number: run.Number, Rig: run.Rig, Engine: cfg.Rig.EngineModel, EngineSerial: cfg.Rig.EngineSerial, Title: cfg.Rig.Title,
-		Operator: run.By, Build: c.build, GOARCH: c.goarch, ConfigHash: cfg.Hash, Started: run.Started,
+		Operator: run.By, Build: c.build, GOARCH: c.goarch, ConfigHash: cfg.Hash, TimeZone: cfg.Rig.TimeZone, Started: run.Started,
 		State: runfile.StateRunning, Alarms: run.Alarms,
 	}
 }

@@ -89,6 +89,8 @@ export interface RigInfo {
   engine_build: string;
   nozzle_serial: string;
   limits_version: string;
+  /** Of the facility, a name of the IANA database; empty = UTC. */
+  time_zone?: string;
 }
 
 export interface Source { topic: string; age_s: Num; messages: number; skew_s: Num; alive: boolean }

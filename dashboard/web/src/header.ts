@@ -9,7 +9,7 @@ import { muteTimes } from './mute';
 import type { Settings } from './settings';
 import type { Sound } from './sound';
 import { type Model, activeRun, dataAge, hostNow, runSeconds } from './state';
-import { clock, duration, seconds } from './time';
+import { clock, duration, seconds, zoneClock } from './time';
 import { type System, age } from './units';
 import { troubleText, veilText } from './watch/display';
 
@@ -121,7 +121,8 @@ export function header(p: HeaderParts): View & { route(name: string): void } {
       style(tick.firstElementChild as HTMLElement, 'left', `${(m.ticks % 10) * 10}%`);
       text(ageText, gone ? 'no data' : `data age ${age(dataAge(m, now))}`);
       attr(ageText.parentElement as HTMLElement, 'data-bad', f.kind !== 'live' || !((f.age ?? Infinity) < 1));
-      text(time, gone ? '–' : `${clock(hostNow(m, now))} UTC`);
+      const local = zoneClock(hostNow(m, now), m.rig?.time_zone);
+      text(time, gone ? '–' : `${local ? `${local} · ` : ''}${clock(hostNow(m, now))} UTC`);
       const s = m.status;
       const bad: string[] = [];
       if (gone) bad.push(gone);

@@ -30,6 +30,18 @@ export function dateClock(s: number): string {
   return Number.isFinite(s) ? `${new Date(s * 1000).toISOString().slice(0, 10)} ${clock(s)}` : '–';
 }
 
+/** hh:mm:ss with the offset in a time zone of the IANA database, as 10:00:00 +01:00; "" where it is UTC or not known. */
+export function zoneClock(s: number, zone: string | undefined): string {
+  if (!zone || zone === 'UTC' || zone === 'Etc/UTC' || !Number.isFinite(s)) return '';
+  try {
+    const parts = new Intl.DateTimeFormat('en-GB', { timeZone: zone, hour: '2-digit', minute: '2-digit', second: '2-digit', hourCycle: 'h23', timeZoneName: 'longOffset' }).formatToParts(s * 1000);
+    const part = (type: string): string => parts.find((p) => p.type === type)?.value ?? '';
+    return `${part('hour')}:${part('minute')}:${part('second')} ${part('timeZoneName').replace('GMT', '') || '+00:00'}`;
+  } catch {
+    return '';
+  }
+}
+
 /** A duration as h:mm:ss, without sign below zero. */
 export function duration(s: number): string {
   if (!Number.isFinite(s)) return '–';

@@ -1,6 +1,6 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
-import { clock, duration, rfc3339, seconds } from '../src/time';
+import { clock, duration, rfc3339, seconds, zoneClock } from '../src/time';
 import { Settings } from '../src/settings';
 import { type Scale, age, alarmValue, bytes, celsius, fixed, inUnit, plain, shown, signed, significant, unitSets, width } from '../src/units';
 import { causeWord, stateLook, uncertainty } from '../src/words';
@@ -159,4 +159,14 @@ test('uncertainty is a half width, an interval, or nothing', () => {
   assert.equal(uncertainty(1.25, 1), '± 1.3');
   assert.equal(uncertainty(null, 1, -2, 3.5), '−2.0 … +3.5');
   assert.equal(uncertainty(null, 1, null, 3), '');
+});
+
+// Zurich is UTC + 1 in winter and + 2 in summer from 2026-03-29 01:00 UTC, Kolkata + 5:30 all year [IANA tz database].
+test('the facility clock has the offset of its zone', () => {
+  const at = (t: string): number => Date.parse(t) / 1000;
+  assert.equal(zoneClock(at('2026-03-02T09:00:05Z'), 'Europe/Zurich'), '10:00:05 +01:00');
+  assert.equal(zoneClock(at('2026-03-29T01:00:00Z'), 'Europe/Zurich'), '03:00:00 +02:00');
+  assert.equal(zoneClock(at('2026-03-02T18:45:00Z'), 'Asia/Kolkata'), '00:15:00 +05:30');
+  for (const zone of ['', undefined, 'UTC', 'Etc/UTC', 'No/Where']) assert.equal(zoneClock(at('2026-03-02T09:00:00Z'), zone), '');
+  assert.equal(zoneClock(NaN, 'Europe/Zurich'), '');
 });
