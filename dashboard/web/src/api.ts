@@ -1,7 +1,7 @@
 // Requests to the server beside the page. Failures become sentences for people.
 
 import type { AlarmPath } from './alarms';
-import type { Alarm, AlarmFigures, ExceedanceReply, Frame, HelloFrame, LogEntry, RigInfo, RunSummary, SeriesReply, ThroatCurve } from './frames';
+import type { Alarm, AlarmFigures, ExceedanceReply, Frame, HelloFrame, LogEntry, RigInfo, RunSummary, SeriesReply, TestPoints, ThroatCurve } from './frames';
 import type { Session } from './session';
 
 /** What is wrong at a place of a file. */
@@ -88,7 +88,10 @@ export const api = {
   runs: (find = '') => get<RunSummary[]>(`api/runs${find ? `?find=${id(find)}` : ''}`),
   note: (run: string, c: { keep?: boolean; notes?: string; tags?: string[] }) => change('PATCH', `api/runs/${id(run)}`, c),
   remove: (run: string, number: number, reason: string) => change('DELETE', `api/runs/${id(run)}?number=${number}&reason=${id(reason)}`),
-  exportAddress: (run: string, what: string, format: string) => `api/runs/${id(run)}/export?what=${what}&format=${format}`,
+  export: (run: string, what: string, format: string, signal: AbortSignal) => request(`api/runs/${id(run)}/export?what=${what}&format=${format}`, { signal }),
+  reportAddress: (run: string) => `api/runs/${id(run)}/report`,
+  report: (run: string, signal: AbortSignal) => request(`api/runs/${id(run)}/report`, { signal }),
+  points: (run: string, at: string, signal: AbortSignal) => get<TestPoints>(`api/runs/${id(run)}/points?at=${at}`, signal),
   runSummary: (run: string) => get<RunSummary>(`api/runs/${id(run)}`),
   series: (run: string, names: readonly string[], from: number, to: number, points: number, signal?: AbortSignal) =>
     get<SeriesReply>(`api/runs/${id(run)}/series?names=${names.join(',')}&from=${from}&to=${to}&points=${points}`, signal),

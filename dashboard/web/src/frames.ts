@@ -179,6 +179,8 @@ export interface AlarmFigures {
   targets: { figure: string; target: number; met: boolean | null; source: string }[] | null;
 }
 
+export interface QuantityInfo { name: string; unit: string; title: string }
+
 interface Numbered { epoch: number; n: number; t: string }
 
 export interface StatusFrame extends Numbered {
@@ -211,7 +213,7 @@ export interface HelloFrame extends Numbered {
   run: Run | null;
   rig: RigInfo;
   channels: Channel[] | null;
-  quantities: { name: string; unit: string; title: string }[] | null;
+  quantities: QuantityInfo[] | null;
   bands: Band[] | null;
   choke_armed_above_rpm: Num;
   alarms: Alarm[] | null;
@@ -298,7 +300,25 @@ export interface RunSummary {
   size_bytes: number;
   alarms: number;
   duration_s: Num; // null while it goes on
+  parent?: string | null; // of a reduction: the run whose records were stepped again
+  reduced_by?: string | null;
 }
+
+/** A quantity of a test point; standard uncertainties, and both combined at 95 %. */
+export interface TestValue { name: string; unit: string; value: Num; type_a: Num; type_b: Num; u95: Num; coverage_factor: Num; effective_samples: Num; standard_deviation: Num }
+export interface TestPoint {
+  number: number;
+  name: string;
+  from: string;
+  to: string;
+  from_s: number;
+  to_s: number;
+  scans: number;
+  steady_share: number;
+  values: TestValue[];
+  doubts: string[] | null;
+}
+export interface TestPoints { run: string; how: string; points: TestPoint[]; left_out: string[] }
 
 export interface ThroatCurve { npr: number[]; flow_parameter: number[]; critical_npr: number }
 

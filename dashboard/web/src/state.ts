@@ -3,7 +3,7 @@
 // time in milliseconds.
 
 import type {
-  Alarm, AlarmFrame, AlarmState, Band, Channel, ChannelValue, ConfigState, Frame, HelloFrame, Ledger, Life, LogEntry, MarkFrame, PointFrame, Priority, RigInfo, Run, StatusFrame,
+  Alarm, AlarmFrame, AlarmState, Band, Channel, ChannelValue, ConfigState, Frame, HelloFrame, Ledger, Life, LogEntry, MarkFrame, PointFrame, Priority, QuantityInfo, RigInfo, Run, StatusFrame,
 } from './frames';
 import { enter } from './oplog';
 import { Ring, pointRow } from './ring';
@@ -18,6 +18,7 @@ export interface Model {
   rig: RigInfo | null;
   run: Run | null;
   channels: Channel[];
+  quantities: QuantityInfo[];
   bands: Band[];
   armedAbove: number | null;
   scanRate: number;
@@ -51,7 +52,7 @@ const kept = 500;
 
 export function newModel(replay = false): Model {
   return {
-    replay, rig: null, run: null, channels: [], bands: [], armedAbove: null, scanRate: 20, configHash: '', build: '',
+    replay, rig: null, run: null, channels: [], quantities: [], bands: [], armedAbove: null, scanRate: 20, configHash: '', build: '',
     point: null, values: {}, valuesAt: -Infinity, alarms: new Map(), history: [], ledgers: [], status: null, flags: [], log: [], config: null, life: null, sparks: new Sparks(), ring: new Ring(),
     epoch: 0, n: 0, ticks: 0, frameAt: -Infinity, pointAt: -Infinity, statusAt: -Infinity, hostTime: NaN, newest: NaN, resets: 0,
   };
@@ -106,6 +107,7 @@ function hello(m: Model, f: HelloFrame, now: number): void {
   m.alarms = list;
   m.ledgers = f.ledgers ?? [];
   m.channels = f.channels ?? [];
+  m.quantities = f.quantities ?? [];
   m.bands = f.bands ?? [];
   m.rig = f.rig;
   m.run = f.run;

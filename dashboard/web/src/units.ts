@@ -109,6 +109,19 @@ export const unitSets: Record<System, UnitSet> = {
   },
 };
 
+/** The scale of a quantity whose unit the API gives; `name` tells temperatures from their differences, and fuel. */
+export function scaleOf(set: UnitSet, unitName: string, name: string): Scale {
+  switch (unitName) {
+    case 'Pa': return set.pressure;
+    case 'K': return /spread|difference|rise|u95/.test(name) ? set.difference : set.temperature;
+    case 'kg/s': return name.startsWith('fuel') ? set.fuel : set.flow;
+    case 'N': return set.force;
+    case 'm²': return set.area;
+    case 'm/s': return set.velocity;
+    default: return { sign: unitName, decimals: 3, of: (v) => v, span: (v) => v };
+  }
+}
+
 type Maybe = number | null | undefined;
 
 /** A value in its unit, without the sign; "–" for none. */

@@ -574,6 +574,15 @@ try {
     await q('show-record').click();
     await until('an excursion', async () => /run max.*exceeded/.test(await page.locator('.exceedances').innerText().then((t) => t.replaceAll('\n', ' '))));
     await until('the life', async () => /Starts\s*1/.test(await q('life').innerText()));
+    await until('a test point with its uncertainty', async () => /\d ± \d/.test(await q('points').innerText()), 60_000);
+    await q('point-open').first().click();
+    await until('what it is made of', async () => /Nozzle mass flow W8\s+[\d.]+\s+[\d.]+\s+[\d.]+\s+[\d.]+\s+\d+\s+kg\/s/.test(await page.locator('.values').innerText()));
+    const { points } = await json(`api/runs/${page.url().split('/').at(-1)}/points`);
+    assert.equal(await q('point-open').count(), points.length, 'every point is listed');
+    await q('points-at').selectOption('marks');
+    await until('by marks', async () => /mark/i.test(await words('points-how')));
+    await q('points-at').selectOption('auto');
+    await q('point-open').first().waitFor();
     await shoot('record', { dark: true });
     for (const width of [820, 1440]) {
       await page.setViewportSize({ width, height: 900 });
@@ -613,6 +622,24 @@ try {
     const file = await saved;
     assert.match(file.suggestedFilename(), /\.csv$/);
     assert.match(readFileSync(await file.path(), 'utf8'), /egt_run_max/);
+    await until('its size', async () => /\.csv, [\d.]+ kB, is saved/.test(await words('export-told')));
+    await shoot('export');
+    let held;
+    await page.route('**/export?*', (r) => { held = r; }); // a server that is slow
+    await q('export').click();
+    await until('told', async () => (await words('export-told')) === 'being written…' && held);
+    await q('export-cancel').click();
+    await until('called off', async () => /Called off; nothing is saved/.test(await words('export-told')));
+    await page.unroute('**/export?*');
+    away = true; // what is refused is an error to the console
+    await page.route('**/export?*', (r) => r.fulfill({ status: 503, contentType: 'application/problem+json', body: JSON.stringify({ title: 'Service Unavailable', detail: 'another export or report is being written: try again when it is done' }) }));
+    await q('export').click();
+    await until('busy', async () => /Not saved: .*another export/.test(await words('export-told')));
+    await page.unroute('**/export?*');
+    away = false;
+    const [report] = await Promise.all([context.waitForEvent('page'), q('report').click()]);
+    assert.match(await report.locator('body').innerText(), new RegExp(run.id));
+    await report.close();
     await q('show-display').click();
   });
 

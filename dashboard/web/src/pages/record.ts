@@ -1,14 +1,16 @@
-// What a run has on record: exceedances of EGT limits, what happened to the engine, its
+// What a run has on record: its files and test points, exceedances of EGT limits, what happened to the engine, its
 // life so far, the operator log and the alarm figures.
 
 import { api } from '../api';
-import { type View, attr, column, h, refill, text } from '../dom';
+import { type View, column, h, refill, text } from '../dom';
 import { degrees, exceedanceWord } from '../exceedance';
-import type { ExceedanceReply, Life, LogEntry } from '../frames';
+import type { ExceedanceReply, Life, LogEntry, QuantityInfo } from '../frames';
 import { clock, seconds } from '../time';
 import { type UnitSet, fixed } from '../units';
 import { figuresView } from './figures';
+import { filesView } from './files';
 import { logTable } from './log';
+import { pointsView } from './points';
 
 /** How often the record of a run that is on is asked for, ms. */
 const every = 5000;
@@ -41,22 +43,10 @@ export function lifeView(): { el: HTMLElement; show(l: Life | null, u: UnitSet):
   };
 }
 
-const tables = [['operating-points', 'operating points'], ['scans', 'scans of the channels'], ['samples', 'samples as received'], ['events', 'events']] as const;
-const formats = [['parquet', 'Parquet'], ['csv', 'CSV'], ['lines', 'line protocol']] as const;
-
-/** Gives a table of the run as a file; the browser shows how far it is. */
-function exporter(run: string): HTMLElement {
-  const choice = (label: string, name: string, all: readonly (readonly [string, string])[]): HTMLSelectElement => h('select', { 'aria-label': label, 'data-q': name, onchange: () => point() }, ...all.map(([v, word]) => h('option', { value: v }, word)));
-  const what = choice('Table', 'export-what', tables);
-  const format = choice('Format', 'export-format', formats);
-  const link = h('a', { class: 'button', download: true, 'data-q': 'export' }, 'Save as a file');
-  const point = (): void => attr(link, 'href', api.exportAddress(run, what.value, format.value));
-  point();
-  return h('div', { class: 'filter' }, what, format, link);
-}
-
 /** `live` says that the run goes on. */
-export function recordView(run: string, live: () => boolean, units: () => UnitSet): View {
+export function recordView(run: string, live: () => boolean, units: () => UnitSet, quantities: () => readonly QuantityInfo[]): View {
+  const files = filesView(run);
+  const points = pointsView(run, units, quantities);
   const exceedances = table('exceedances', 'Band', '>Limit', '>Began, UTC', '>Ended', '>Time above', '>of it assumed', '>Peak', 'Allowance', 'Time above other bands');
   const events = table('', '>Time, UTC', 'Engine', '>EGT', '>Speed', '>Rundown');
   const life = lifeView();
@@ -64,7 +54,7 @@ export function recordView(run: string, live: () => boolean, units: () => UnitSe
   const figures = figuresView(() => ({ run, live: live() }));
   const trouble = h('p', { class: 'trouble', role: 'status' });
   const el = h('div', { class: 'page record', 'data-q': 'record' }, h('h1', {}, `Record of run ${run}`), trouble,
-    h('section', {}, h('h2', {}, 'Export'), exporter(run)),
+    h('section', {}, h('h2', {}, 'Report and export'), files.el), h('section', {}, h('h2', {}, 'Test points'), points.el),
     h('section', {}, h('h2', {}, 'Excursions above EGT limits'), exceedances.el),
     h('div', { class: 'columns' },
       h('div', {}, h('section', {}, h('h2', {}, 'Operator log'), log.el), h('section', {}, h('h2', {}, 'What the engine did'), events.el)),
@@ -92,7 +82,11 @@ export function recordView(run: string, live: () => boolean, units: () => UnitSe
       life.show(reply?.life ?? null, u);
       log.show(entries, seconds(entries[0]?.t ?? null));
       figures.update(now);
+      points.update(now);
     },
-    destroy: () => undefined,
+    destroy() {
+      files.destroy();
+      points.destroy();
+    },
   };
 }

@@ -50,7 +50,7 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
   /** The display as it was at the position, or what is on record of the whole run. */
   function choose(what: 'Display' | 'Record'): void {
     if (!inner) return;
-    if (what === 'Record') record ??= recordView(runID, () => run?.ended === null, taste.units);
+    if (what === 'Record') record ??= recordView(runID, () => run?.ended === null, taste.units, () => player?.model.quantities ?? []);
     shown = what;
     choices.forEach((b) => attr(b, 'aria-pressed', String(b.textContent === what)));
     body.replaceChildren(what === 'Record' && record ? record.el : inner.el);
