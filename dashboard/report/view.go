@@ -346,9 +346,9 @@ func (d *data) alarmSummary() string {
 			first = " First: " + a.Title + " at " + d.short(int64(a.Raised)) + "."
 		}
 	}
-	advisories := strconv.Itoa(h.by[rules.Advisory]) + " advisories"
-	if h.by[rules.Advisory] == 1 {
-		advisories = "1 advisory"
+	advisories := "1 advisory"
+	if n := h.by[rules.Advisory]; n != 1 {
+		advisories = counted(n, "advisorie")
 	}
 	text := fmt.Sprintf("%s, %s, %s, %s; %d never acknowledged.%s",
 		counted(h.by[rules.Warning], "warning"), counted(h.by[rules.Caution], "caution"), advisories, counted(h.by[rules.Note], "note"), unseen, first)
