@@ -8,12 +8,12 @@
 // The bytes are the same for the same chunk in one build; another version of the
 // compressor may find other bytes that mean the same.
 //
-// # Format, version 1
+// # Format, version 2
 //
 // Integers are little-endian of the width given, uvarint, or varint (zig-zag), both
 // as in encoding/binary. Float64 are their IEEE 754 bits as u64.
 //
-//	"twa" u8 version = 1
+//	"twa" u8 version = 2; 1 is read too, it has encodings to 6
 //	u64 xxhash64 of the directory
 //	u32 length of the directory in bytes
 //	directory
@@ -40,6 +40,14 @@
 //	  4 planes    u64 of every value, byte-transposed: all lowest bytes first
 //	  5 xor       as 4, of u64 XOR u64 of the last value that is not NaN (first: 0)
 //	  6 bytes     as they are
+//	  7 distinct  uvarint number of distinct values, then these in rising order, then per
+//	              row varint (index − previous index), index from 0. The distinct values
+//	              are u64 differences (of 0 at first), byte-transposed as in 4, of keys that
+//	              rise with the value: bits of the float64, all flipped when the sign bit
+//	              is set, else the sign bit alone
+//	  8 decimals  u8 digits; per row uvarint 0 = missing, or 1 + zig-zag (number − previous
+//	              number), a missing row leaving the previous one; then per row i8 rest;
+//	              value = number / 10^digits, moved by rest units in the last place
 //
 // A reader refuses what its limits do not allow before it allocates: MaxRows,
 // MaxCells, and lengths that the bytes at hand do not cover.

@@ -7,6 +7,7 @@ import (
 	"fmt"
 	"math"
 	"math/rand/v2"
+	"os"
 	"slices"
 	"testing"
 
@@ -36,6 +37,13 @@ var signals = []signal{
 		return float64(20000+r.IntN(7)) * 0.1
 	}},
 	{"decimal, step not declared", 0, func(r *rand.Rand, _ int) float64 { return float64(20000+r.IntN(7)) / 10 }},
+	{"mean in kelvin", 0, func(r *rand.Rand, i int) float64 {
+		if i%97 == 11 {
+			return math.NaN()
+		}
+		return math.Round(25*(500+20*math.Sin(float64(i)/300)+r.NormFloat64()))/25/5 + 273.15
+	}},
+	{"pulses per minute in radians", 0, func(r *rand.Rand, _ int) float64 { return float64(15000+r.IntN(90)) * math.Pi / 30 }},
 	{"computed, smooth", 0, func(_ *rand.Rand, i int) float64 { return 2.4 + 0.3*math.Sin(float64(i)/500) }},
 	{"computed, noisy", 0, func(r *rand.Rand, i int) float64 { return 2.4 + 0.3*math.Sin(float64(i)/500) + 1e-3*r.NormFloat64() }},
 	{"computed, half missing", 0, func(r *rand.Rand, i int) float64 {
@@ -123,7 +131,8 @@ func TestRoundTrip(t *testing.T) {
 func TestEncodings(t *testing.T) {
 	want := map[string]encoding{
 		"adc16": encCodes, "adc24": encCodes, "adc16 with gaps": encCodes, "constant": encConstant, "missing": encConstant,
-		"computed, noisy": encXOR, "decimal, step not declared": encPlanes, "quality": encBytes,
+		"computed, noisy": encXOR, "decimal, step not declared": encDistinct,
+		"mean in kelvin": encDecimals, "pulses per minute in radians": encDistinct, "quality": encBytes,
 	}
 	codec := NewCodec()
 	h, err := ReadHead(mustAppend(t, codec, rigChunk(1200, 7)))
@@ -135,6 +144,37 @@ func TestEncodings(t *testing.T) {
 		if w, ok := want[e.Name]; ok && e.encoding&^flagZstd != w {
 			t.Errorf("%s: encoding %d, want %d", e.Name, e.encoding&^flagZstd, w)
 		}
+	}
+}
+
+// TestVersion1: what the version before has written is read. The file is
+// rigChunk(60, 3) without the signals that came later.
+func TestVersion1(t *testing.T) {
+	packed, err := os.ReadFile("testdata/version1.chunk")
+	if err != nil {
+		t.Fatal(err)
+	}
+	if packed[len(magic)] != 1 {
+		t.Fatalf("the file is of version %d", packed[len(magic)])
+	}
+	var got Chunk
+	if err := NewCodec().Decode(&got, packed, nil); err != nil {
+		t.Fatal(err)
+	}
+	want := rigChunk(60, 3)
+	if !slices.Equal(got.Times, want.Times) || len(got.Columns) != 17 {
+		t.Fatalf("%d rows, %d columns", len(got.Times), len(got.Columns))
+	}
+	for _, name := range []string{"adc16", "adc24", "adc16 with gaps", "decimal, step not declared", "computed, smooth", "constant", "missing", "quality", "choke_state"} {
+		is := func(c Column) bool { return c.Name == name }
+		i, k := slices.IndexFunc(got.Columns, is), slices.IndexFunc(want.Columns, is)
+		if i < 0 || !same(&got.Columns[i], &want.Columns[k]) {
+			t.Errorf("column %q differs", name)
+		}
+	}
+	packed[len(magic)] = version + 1
+	if err := NewCodec().Decode(&got, packed, nil); !errors.Is(err, ErrVersion) {
+		t.Errorf("a later version gives %v, want ErrVersion", err)
 	}
 }
 

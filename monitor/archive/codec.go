@@ -16,7 +16,9 @@ type Codec struct {
 	zr *zstd.Decoder
 
 	raw, packed, best []byte   // an encoding, its zstd frame, the smallest so far
-	bits              []uint64 // values of a column as encPlanes or encXOR store them
+	bits              []uint64 // values of a column as encPlanes or encXOR store them, keys as encDistinct does
+	keys              []uint64 // distinct ones of a column
+	rests             []byte   // of decimals
 	blocks            []byte
 	entries           []Entry
 }
@@ -272,13 +274,19 @@ func (c *Codec) floats(values []float64, scale float64) block {
 			last = bits
 		}
 	}
-	c.transpose()
+	c.raw = c.transpose(c.raw[:0])
 	c.try(&b, encXOR)
 	for i, v := range values {
 		c.bits[i] = canonical(v)
 	}
-	c.transpose()
+	c.raw = c.transpose(c.raw[:0])
 	c.try(&b, encPlanes)
+	if c.decimals(values) {
+		c.try(&b, encDecimals)
+	}
+	if c.distinct(values) {
+		c.try(&b, encDistinct)
+	}
 	return c.put(b)
 }
 
@@ -310,16 +318,171 @@ func (c *Codec) codes(values []float64, scale float64) bool {
 	return true
 }
 
-// transpose writes c.bits to c.raw, all lowest bytes first.
-func (c *Codec) transpose() {
-	n := len(c.bits)
-	c.raw = resize(c.raw, 8*n)
-	for p := range 8 {
-		plane := c.raw[p*n : (p+1)*n]
-		for i, bits := range c.bits {
-			plane[i] = byte(bits >> (8 * p))
+// mostDigits is how many digits behind the point are looked for.
+const mostDigits = 9
+
+// decimal gives the whole number that makes v when divided by power, and by how many
+// units in the last place that is beside v. It gives false when there is none.
+func decimal(v, power float64) (number int64, rest int8, ok bool) {
+	q := math.Round(v * power)
+	if !(math.Abs(q) < 1<<52) {
+		return 0, 0, false
+	}
+	d := int64(math.Float64bits(v)) - int64(math.Float64bits(float64(int64(q))/power)) // −0 has no number
+	return int64(q), int8(d), d == int64(int8(d))
+}
+
+// decimals writes the values as decimal numbers to c.raw. Means of readings and
+// readings in other units are such, but for the last place. It gives false when
+// one of them is none.
+func (c *Codec) decimals(values []float64) bool {
+	digits := 0
+	for _, v := range values {
+		for v == v {
+			if _, _, ok := decimal(v, math.Pow10(digits)); ok {
+				break
+			}
+			if digits++; digits > mostDigits {
+				return false
+			}
 		}
 	}
+	power := math.Pow10(digits)
+	c.raw = append(c.raw[:0], byte(digits))
+	c.rests = c.rests[:0]
+	var last int64
+	for _, v := range values {
+		if v != v {
+			c.raw, c.rests = append(c.raw, 0), append(c.rests, 0)
+			continue
+		}
+		number, rest, ok := decimal(v, power)
+		if !ok { // more digits lost one that fewer gave
+			return false
+		}
+		d := number - last
+		c.raw = binary.AppendUvarint(c.raw, 1+(uint64(d)<<1^uint64(d>>63)))
+		c.rests = append(c.rests, byte(rest))
+		last = number
+	}
+	c.raw = append(c.raw, c.rests...)
+	return len(c.raw) <= 8*len(values)
+}
+
+func readDecimals(dst []float64, raw []byte) string {
+	if len(raw) < 1+len(dst) || raw[0] > mostDigits {
+		return wrongLength
+	}
+	power := math.Pow10(int(raw[0]))
+	rests, raw := raw[len(raw)-len(dst):], raw[1:len(raw)-len(dst)]
+	var number int64
+	for i := range dst {
+		u, n := binary.Uvarint(raw)
+		if n <= 0 {
+			return wrongLength
+		}
+		raw = raw[n:]
+		if u == 0 {
+			dst[i] = math.NaN()
+			continue
+		}
+		u--
+		number += int64(u>>1) ^ -int64(u&1)
+		dst[i] = math.Float64frombits(math.Float64bits(float64(number)/power) + uint64(int64(int8(rests[i]))))
+	}
+	if len(raw) > 0 {
+		return wrongLength
+	}
+	return ""
+}
+
+// key gives bits an order that is that of the values.
+func key(bits uint64) uint64 {
+	if bits>>63 != 0 {
+		return ^bits
+	}
+	return bits | 1<<63
+}
+
+// value is the inverse of key.
+func value(key uint64) float64 {
+	if key>>63 != 0 {
+		return math.Float64frombits(key &^ (1 << 63))
+	}
+	return math.Float64frombits(^key)
+}
+
+// distinct writes the values to c.raw as places among the distinct ones. Readings
+// are few distinct values, steps of a converter apart, whose bits look like noise. It
+// gives false when that takes more than the values themselves.
+func (c *Codec) distinct(values []float64) bool {
+	c.keys = c.keys[:0]
+	for _, v := range values {
+		c.keys = append(c.keys, key(canonical(v)))
+	}
+	slices.Sort(c.keys)
+	c.keys = slices.Compact(c.keys)
+	c.bits = c.bits[:0]
+	var last uint64
+	for _, k := range c.keys {
+		c.bits = append(c.bits, k-last)
+		last = k
+	}
+	c.raw = c.transpose(binary.AppendUvarint(c.raw[:0], uint64(len(c.keys))))
+	at := 0
+	for _, v := range values {
+		i, _ := slices.BinarySearch(c.keys, key(canonical(v)))
+		c.raw = binary.AppendVarint(c.raw, int64(i-at))
+		at = i
+	}
+	return len(c.raw) <= 8*len(values)
+}
+
+func (c *Codec) readDistinct(dst []float64, raw []byte) string {
+	count, n := binary.Uvarint(raw)
+	if n <= 0 || count > uint64(len(dst)) || uint64(len(raw)-n) < 8*count {
+		return wrongLength
+	}
+	planes, raw := raw[n:n+8*int(count)], raw[n+8*int(count):]
+	c.keys = c.keys[:0]
+	var last uint64
+	for i := range int(count) {
+		last += plane(planes, int(count), i)
+		c.keys = append(c.keys, last)
+	}
+	at := int64(0)
+	for i := range dst {
+		d, n := binary.Varint(raw)
+		at += d
+		if n <= 0 || at < 0 || at >= int64(count) {
+			return wrongLength
+		}
+		raw = raw[n:]
+		dst[i] = value(c.keys[at])
+	}
+	if len(raw) > 0 {
+		return wrongLength
+	}
+	return ""
+}
+
+// plane gives the i-th of n byte-transposed values.
+func plane(raw []byte, n, i int) uint64 {
+	return uint64(raw[i]) | uint64(raw[n+i])<<8 | uint64(raw[2*n+i])<<16 | uint64(raw[3*n+i])<<24 |
+		uint64(raw[4*n+i])<<32 | uint64(raw[5*n+i])<<40 | uint64(raw[6*n+i])<<48 | uint64(raw[7*n+i])<<56
+}
+
+// transpose appends c.bits to dst, all lowest bytes first.
+func (c *Codec) transpose(dst []byte) []byte {
+	n, from := len(c.bits), len(dst)
+	dst = slices.Grow(dst, 8*n)[:from+8*n]
+	for p := range 8 {
+		to := dst[from+p*n : from+(p+1)*n]
+		for i, bits := range c.bits {
+			to[i] = byte(bits >> (8 * p))
+		}
+	}
+	return dst
 }
 
 func (c *Codec) readFloats(dst []float64, blocks []byte, b *block) string {
@@ -330,6 +493,10 @@ func (c *Codec) readFloats(dst []float64, blocks []byte, b *block) string {
 		return what
 	case enc == encCodes:
 		return readCodes(dst, raw, b.scale)
+	case enc == encDecimals:
+		return readDecimals(dst, raw)
+	case enc == encDistinct:
+		return c.readDistinct(dst, raw)
 	case enc == encConstant && len(raw) == 8:
 		v := math.Float64frombits(binary.LittleEndian.Uint64(raw))
 		for i := range dst {
@@ -338,8 +505,7 @@ func (c *Codec) readFloats(dst []float64, blocks []byte, b *block) string {
 	case (enc == encPlanes || enc == encXOR) && len(raw) == 8*n:
 		var last uint64
 		for i := range dst {
-			bits := uint64(raw[i]) | uint64(raw[n+i])<<8 | uint64(raw[2*n+i])<<16 | uint64(raw[3*n+i])<<24 |
-				uint64(raw[4*n+i])<<32 | uint64(raw[5*n+i])<<40 | uint64(raw[6*n+i])<<48 | uint64(raw[7*n+i])<<56
+			bits := plane(raw, n, i)
 			if enc == encXOR {
 				bits ^= last
 			}

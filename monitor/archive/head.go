@@ -9,7 +9,8 @@ import (
 
 const (
 	magic      = "twa"
-	version    = 1
+	version    = 2
+	oldest     = 1                      // version that is read
 	headLength = len(magic) + 1 + 8 + 4 // before the directory
 )
 
@@ -23,6 +24,8 @@ const (
 	encPlanes
 	encXOR
 	encBytes
+	encDistinct
+	encDecimals
 
 	flagZstd encoding = 0x80
 )
@@ -83,7 +86,7 @@ func ReadHead(src []byte) (Head, error) {
 	if len(src) < headLength || string(src[:len(magic)]) != magic {
 		return bad("not a chunk")
 	}
-	if src[len(magic)] != version {
+	if v := src[len(magic)]; v < oldest || v > version {
 		return Head{}, ErrVersion
 	}
 	sum := binary.LittleEndian.Uint64(src[len(magic)+1:])
