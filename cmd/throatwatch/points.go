@@ -7,6 +7,8 @@ import (
 	"fmt"
 	"io"
 	"net/url"
+	"os"
+	"path/filepath"
 
 	"github.com/spf13/pflag"
 
@@ -27,6 +29,7 @@ func pointsCommand(ctx context.Context, args []string, stdout, stderr io.Writer)
 	fs.String("least", "10s", "with --at auto, the shortest stretch")
 	fs.String("before", "0s", "with --at marks, time before each mark")
 	fs.String("after", "30s", "with --at marks, time after each mark")
+	rig := fs.String("rig", "", "by another rig file: the records are stepped through it first, and nothing is stored (see reduce)")
 	format := fs.String("format", "table", "table, csv or json")
 	rest, code := parseArgs(fs, args, stderr)
 	if code >= 0 {
@@ -50,13 +53,20 @@ func pointsCommand(ctx context.Context, args []string, stdout, stderr io.Writer)
 	}
 	query := queryOf(fs, "at", "from", "to", "least", "before", "after")
 	query["stretch"], _ = fs.GetStringArray("stretch") // it is one
-	t, err := ofRun(ctx, *data, rest[0], func(ctx context.Context, f *runfile.File, h *runfile.Header) (t points.Table, err error) {
+	read := func(ctx context.Context, f *runfile.File, h *runfile.Header) (t points.Table, err error) {
 		o, err := points.ParseOptions(query, h.Started)
 		if err != nil {
 			return t, err
 		}
 		return points.Read(ctx, f, h, watch.Parse, o)
-	})
+	}
+	var t points.Table
+	var err error
+	if *rig == "" {
+		t, err = ofRun(ctx, *data, rest[0], read)
+	} else {
+		t, err = ofReduced(ctx, *data, *rig, rest[0], read)
+	}
 	if err == nil {
 		err = write(&t)
 	}
@@ -68,6 +78,35 @@ func pointsCommand(ctx context.Context, args []string, stdout, stderr io.Writer)
 		return 2
 	}
 	return 1
+}
+
+// ofReduced reads something of a run that is stepped through another rig file for it.
+func ofReduced[T any](ctx context.Context, dir, rig, id string, read func(context.Context, *runfile.File, *runfile.Header) (T, error)) (v T, err error) {
+	o, err := reduceOptions(rig, watch.ReduceOptions{Run: id})
+	if err != nil {
+		return v, err
+	}
+	runs, err := openRuns(ctx, dir)
+	if err != nil {
+		return v, err
+	}
+	defer func() { err = errors.Join(err, runs.Catalog.Close()) }()
+	temp, err := os.MkdirTemp("", "throatwatch-")
+	if err != nil {
+		return v, err
+	}
+	defer func() { err = errors.Join(err, os.RemoveAll(temp)) }()
+	path := filepath.Join(temp, "reduction.db")
+	res, err := runs.ReduceTo(ctx, o, path)
+	if err != nil {
+		return v, err
+	}
+	f, err := runfile.Open(ctx, path, runfile.ReadOnly, runfile.Options{})
+	if err != nil {
+		return v, err
+	}
+	defer func() { err = errors.Join(err, f.Close()) }()
+	return read(ctx, f, &res.Run.Header)
 }
 
 // queryOf gives text flags as a query has them, so that command and interface read the

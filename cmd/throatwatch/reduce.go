@@ -55,17 +55,22 @@ func reduceCommand(ctx context.Context, args []string, stdout, stderr io.Writer)
 
 // reduceRun reads the rig file and reduces the run by it.
 func reduceRun(ctx context.Context, dir, rig string, o watch.ReduceOptions) (res watch.Reduced, err error) {
-	bundle, cfg, faults := config.Load(rig)
-	if err := watch.Faults(faults); err != nil {
+	if o, err = reduceOptions(rig, o); err != nil {
 		return res, err
 	}
-	o.Bundle, o.Config = bundle.Marshal(), cfg
 	runs, err := openRuns(ctx, dir)
 	if err != nil {
 		return res, err
 	}
 	defer func() { err = errors.Join(err, runs.Catalog.Close()) }()
 	return runs.Reduce(ctx, o)
+}
+
+// reduceOptions adds the configuration of a rig file.
+func reduceOptions(rig string, o watch.ReduceOptions) (watch.ReduceOptions, error) {
+	bundle, cfg, faults := config.Load(rig)
+	o.Bundle, o.Config = bundle.Marshal(), cfg
+	return o, watch.Faults(faults)
 }
 
 // reducedJSON is a reduction as --json prints it.

@@ -2,6 +2,7 @@ package main
 
 import (
 	"encoding/json"
+	"maps"
 	"math"
 	"os"
 	"path/filepath"
@@ -37,9 +38,9 @@ func reduceBy(t *testing.T, dir, id, rig string) (v reducedJSON) {
 }
 
 // means gives the quantities of a choked stretch of a run.
-func means(t *testing.T, dir, id string) map[string]float64 {
+func means(t *testing.T, dir, id string, more ...string) map[string]float64 {
 	t.Helper()
-	code, stdout, stderr := invoke(t, "points", id, "--data", dir, "--stretch", "105s..115s", "--format", "json")
+	code, stdout, stderr := invoke(t, append([]string{"points", id, "--data", dir, "--stretch", "105s..115s", "--format", "json"}, more...)...)
 	var v struct {
 		Points []struct {
 			Values []struct {
@@ -99,11 +100,18 @@ func TestReduceWithoutChange(t *testing.T) {
 // NPR stays to the bit. The fuel-air ratio follows the flow, which moves R and φ a little.
 func TestReduceByArea(t *testing.T) {
 	dir, id := aTest(t)
-	v := reduceBy(t, dir, id, otherRig(t, "throat_area: 0.0250 m2", "throat_area: 0.0255 m2"))
+	rig := otherRig(t, "throat_area: 0.0250 m2", "throat_area: 0.0255 m2")
+	v := reduceBy(t, dir, id, rig)
 	if v.Same || v.ConfigHash == "" {
 		t.Errorf("%+v", v)
 	}
 	was, is := means(t, dir, id), means(t, dir, v.Run)
+	if by := means(t, dir, id, "--rig", rig); !maps.Equal(by, is) {
+		t.Errorf("points by the other rig file %v, of the reduction %v", by, is)
+	}
+	if n := len(storedRuns(t, dir)); n != 2 {
+		t.Errorf("%d runs are stored", n)
+	}
 	for _, name := range []string{"npr", "rake_pressure_pa", "back_pressure_pa", "egt_indicated_k", "air_flow_kg_s", "referred_speed_rpm"} {
 		if was[name] != is[name] || was[name] == 0 {
 			t.Errorf("%s moved from %v to %v", name, was[name], is[name])

@@ -48,6 +48,29 @@ type Reduced struct {
 // configuration had learned before: what another one keeps of it is as at any change of
 // configuration. The five minutes before a run serve to settle.
 func (r StoredRuns) Reduce(ctx context.Context, o ReduceOptions) (res Reduced, err error) {
+	line, err := r.Catalog.Get(ctx, o.Run)
+	if err != nil {
+		return res, err
+	}
+	folder := filepath.Dir(r.Catalog.Path(line))
+	temp, err := os.MkdirTemp(filepath.Dir(folder), "reduction-")
+	if err != nil {
+		return res, fmt.Errorf("reduce %s: %w", o.Run, err)
+	}
+	defer func() { err = errors.Join(err, os.RemoveAll(temp)) }()
+	path := filepath.Join(temp, "child.db")
+	if res, err = r.ReduceTo(ctx, o, path); err != nil {
+		return res, err
+	}
+	if res.Run, err = r.adopt(ctx, o, path, folder, res.Run.Header); err != nil {
+		return res, fmt.Errorf("reduce %s: %w", o.Run, err)
+	}
+	return res, nil
+}
+
+// ReduceTo is Reduce into a file of its own, which becomes no stored run and whose run has
+// the id of its parent. There must be nothing at path.
+func (r StoredRuns) ReduceTo(ctx context.Context, o ReduceOptions, path string) (res Reduced, err error) {
 	f, err := r.Open(ctx, o.Run)
 	if err != nil {
 		return res, err
@@ -62,25 +85,12 @@ func (r StoredRuns) Reduce(ctx context.Context, o ReduceOptions) (res Reduced, e
 	case o.Config.Rig.ID != res.Parent.Rig:
 		return res, fmt.Errorf("reduce %s: it is of rig %q, the configuration of rig %q", o.Run, res.Parent.Rig, o.Config.Rig.ID)
 	}
-	line, err := r.Catalog.Get(ctx, o.Run)
-	if err != nil {
-		return res, err
-	}
-	folder := filepath.Dir(r.Catalog.Path(line))
-	temp, err := os.MkdirTemp(filepath.Dir(folder), "reduction-")
+	h, swaps, err := reduceTo(ctx, f, &res.Parent, o, path)
 	if err != nil {
 		return res, fmt.Errorf("reduce %s: %w", o.Run, err)
 	}
-	defer func() { err = errors.Join(err, os.RemoveAll(temp)) }()
-	path := filepath.Join(temp, "child.db")
-	header, swaps, err := reduceTo(ctx, f, &res.Parent, o, path)
-	if err != nil {
-		return res, fmt.Errorf("reduce %s: %w", o.Run, err)
-	}
-	res.Swaps, res.Same = swaps, header.Digest == res.Parent.Digest
-	if res.Run, err = r.adopt(ctx, o, path, folder, header); err != nil {
-		return res, fmt.Errorf("reduce %s: %w", o.Run, err)
-	}
+	h.ID = res.Parent.ID
+	res.Run.Header, res.Swaps, res.Same = h, swaps, h.Digest == res.Parent.Digest
 	return res, nil
 }
 
