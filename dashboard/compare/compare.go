@@ -92,7 +92,9 @@ type Scans struct {
 	A           string       `json:"a"`
 	B           string       `json:"b"`
 	By          By           `json:"by"`
-	Zero        string       `json:"zero"` // what time counts from, in words
+	Zero        string       `json:"zero"`     // what time counts from, in words
+	ZeroA       float64      `json:"zero_a_s"` // where that is, s of A
+	ZeroB       float64      `json:"zero_b_s"` // s of B
 	Paired      int          `json:"paired"`
 	OnlyA       int          `json:"only_a"` // scans without a counterpart
 	OnlyB       int          `json:"only_b"`
@@ -223,6 +225,7 @@ func ByTime(ctx context.Context, a, b *Run, o Options) (Scans, error) {
 	if err != nil {
 		return s, err
 	}
+	s.ZeroA, s.ZeroB = float64(zeroA-a.Header.Started)/1e9, float64(zeroB-b.Header.Started)/1e9
 	for from := monitor.Quantity(0); from < monitor.NumQuantities; from += group {
 		if err := s.group(ctx, a, b, codec, from, min(from+group, monitor.NumQuantities), zeroA, zeroB); err != nil {
 			return s, err

@@ -1,7 +1,7 @@
 // Requests to the server beside the page. Failures become sentences for people.
 
 import type { AlarmPath } from './alarms';
-import type { Alarm, AlarmFigures, ExceedanceReply, Frame, HelloFrame, LogEntry, RigInfo, RunSummary, SeriesReply, TestPoints, ThroatCurve } from './frames';
+import type { Alarm, AlarmFigures, CurvesCompared, ExceedanceReply, Frame, HelloFrame, LogEntry, RigInfo, RunSummary, ScansCompared, SeriesReply, TestPoints, ThroatCurve } from './frames';
 import type { Session } from './session';
 
 /** What is wrong at a place of a file. */
@@ -92,6 +92,8 @@ export const api = {
   reportAddress: (run: string) => `api/runs/${id(run)}/report`,
   report: (run: string, signal: AbortSignal) => request(`api/runs/${id(run)}/report`, { signal }),
   points: (run: string, at: string, signal: AbortSignal) => get<TestPoints>(`api/runs/${id(run)}/points?at=${at}`, signal),
+  compare: (a: string, b: string, by: string, mark: string, signal: AbortSignal) =>
+    get<ScansCompared | CurvesCompared>(`api/runs/compare?a=${id(a)}&b=${id(b)}${by && `&by=${by}`}${mark && `&mark=${id(mark)}`}`, signal),
   runSummary: (run: string) => get<RunSummary>(`api/runs/${id(run)}`),
   series: (run: string, names: readonly string[], from: number, to: number, points: number, signal?: AbortSignal) =>
     get<SeriesReply>(`api/runs/${id(run)}/series?names=${names.join(',')}&from=${from}&to=${to}&points=${points}`, signal),

@@ -333,3 +333,35 @@ export interface Series {
   cause: string | null;
 }
 export interface SeriesReply { through: string; series: Record<string, Series> }
+
+/** How a quantity of run b differs from that of run a, b − a, over the scans that have both. */
+export interface Difference { name: string; unit: string; scans: number; mean: Num; rms: Num; largest: Num; at_s: Num; a: Num; b: Num; only_a: number; only_b: number }
+export interface AlarmChange { change: 'appears' | 'vanishes' | 'moves'; rule: string; title: string; a_s: Num; b_s: Num; moved_s: Num }
+/** Two runs scan by scan. */
+export interface ScansCompared {
+  a: string;
+  b: string;
+  by: string;
+  zero: string; // what time counts from, in words
+  zero_a_s: number;
+  zero_b_s: number;
+  paired: number;
+  only_a: number;
+  only_b: number;
+  same: boolean;
+  differences: Difference[];
+  equal: string[];
+  alarms: AlarmChange[];
+  alarms_same: number;
+}
+export interface Bin { x: Num; baseline: Num; scatter: Num; scans: number; value: Num; departure: Num; departure_u95: Num; beyond: boolean; scans_last: number }
+export interface Curve { x: string; y: string; x_unit: string; y_unit: string; bins: Bin[] }
+/** The last run against the curves of the others, over an operating parameter. */
+export interface CurvesCompared {
+  baseline: string[];
+  last: string;
+  by: string;
+  steady_only: boolean;
+  curves: Curve[];
+  runs: { run: string; started: string; effective_area_m2: Num; effective_area_m2_u95: Num; area_drift_percent: Num; area_drift_percent_u95: Num; egt_margin_k: Num }[];
+}

@@ -105,7 +105,7 @@ export function header(p: HeaderParts): View & { route(name: string): void } {
   return {
     el,
     route(name) {
-      const own = name === 'run' ? 'runs' : name;
+      const own = name === 'run' || name === 'compare' ? 'runs' : name;
       links.forEach((a, i) => attr(a, 'aria-current', pages[i]?.[0] === own ? 'page' : null));
     },
     update(now) {

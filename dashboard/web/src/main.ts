@@ -10,6 +10,7 @@ import { firstChunk, opening, reach, rowsOf } from './history';
 import { Link, browser, liveURL } from './link';
 import { dark, light, paint } from './palette';
 import { alarmsPage } from './pages/alarms';
+import { comparePage } from './pages/compare';
 import { helpPage } from './pages/help';
 import { logPage } from './pages/log';
 import { login } from './pages/login';
@@ -214,11 +215,12 @@ function run(rig: RigInfo, rigs: RigInfo[], session: Session): void {
     if (next === route) return;
     route = next;
     view?.destroy();
-    const [, name = 'watch', id = ''] = next.split('/');
+    const [, name = 'watch', id = '', other = ''] = next.split('/');
     switch (name) {
       case 'alarms': view = alarmsPage(display); break;
       case 'log': view = logPage(display); break;
       case 'runs': view = runsPage(display); break;
+      case 'compare': view = comparePage(display, decodeURIComponent(id), decodeURIComponent(other)); break;
       case 'run': view = replayPage(decodeURIComponent(id), rig.id, display); break;
       case 'rig': view = rigPage(display); break;
       case 'help': view = helpPage(); break;

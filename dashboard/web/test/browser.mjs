@@ -643,6 +643,39 @@ try {
     await q('show-display').click();
   });
 
+  await check('two runs are chosen and compared: old solid, new dashed, by time and over NPR', async () => {
+    await page.goto(`${server}#/runs`);
+    for (const box of await q('compare-choose').all()) if ((await json(`api/runs/${await box.inputValue()}`)).state === 'ended') await box.check();
+    assert.match(await words('compare'), /^Compare \S+ with \S+$/);
+    await shoot('runs-compare');
+    await q('compare').click();
+    await until('the differences', async () => (await page.locator('[data-q="differences"] tbody tr').count()) > 10 && /from light-off: \d+ scans of both/.test(await words('compare-said')), 30_000);
+    await until('four plots', async () => (await page.locator('.overlay canvas').count()) === 4);
+    assert.match(await q('alarm-changes').innerText(), /only in the|later|earlier|None/);
+    const box = await page.locator('.overlay .u-over').nth(1).boundingBox();
+    await page.mouse.move(box.x + box.width * 0.15, box.y + 30);
+    await until('both values under the cursor', async () => /old [\d.−]+\s+new [\d.−]+\s+new − old [+−]?[\d.]+/.test(await page.locator('.overlay .tracerow').nth(1).innerText()));
+    await page.mouse.down();
+    await page.mouse.move(box.x + box.width * 0.4, box.y + 30, { steps: 4 });
+    await page.mouse.up();
+    await until('zoomed', async () => q('zoom-reset').isEnabled());
+    await shoot('compare', { dark: true });
+    await q('zoom-reset').click();
+    assert.ok(await q('zoom-reset').isDisabled());
+    for (const width of [820, 1440]) {
+      await page.setViewportSize({ width, height: 900 });
+      assert.equal(await page.evaluate(() => document.documentElement.scrollWidth), width);
+    }
+    assert.deepEqual(await accessible('compare'), []);
+    await q('compare-by').selectOption('npr');
+    await until('the curves', async () => /Curve and scatter of the old run/.test(await words('compare-said')) && (await page.locator('[data-q="drift"] tbody tr').count()) === 2, 30_000);
+    await shoot('compare-npr');
+    await page.goBack();
+    await page.locator('[data-q="replay"][data-state="ended"]').last().click();
+    await q('scrub').waitFor();
+    await until('open', async () => /of 0:0\d/.test(await words('replay-clock')));
+  });
+
   await check('what stands in for a lost rake and exit plane is named beside the point', async () => {
     await q('scrub').fill('140');
     await until('none before', async () => (await words('replay-clock')).startsWith('0:02:20') && !/wall static/.test(await words('plane-notes')));

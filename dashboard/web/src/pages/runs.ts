@@ -7,6 +7,7 @@ import { type View, attr, column, h, text } from '../dom';
 import type { RunSummary } from '../frames';
 import type { Deed } from '../session';
 import { hostNow } from '../state';
+import { familiesOf } from '../compare';
 import { dateClock, duration, seconds } from '../time';
 import { bytes } from '../units';
 
@@ -18,9 +19,11 @@ export const tagsOf = (s: string): string[] => [...new Set(s.split(',').map((t) 
 
 export function runsPage(d: Display): View {
   const body = h('tbody');
+  const chosen: string[] = []; // at most two, in the order in which they were chosen
+  const compare = h('a', { class: 'button', 'data-q': 'compare' });
   const trouble = h('p', { class: 'trouble', role: 'status' });
   const find = h('input', { type: 'search', placeholder: 'find by any word (key /)', 'aria-label': 'Find a run', 'aria-keyshortcuts': '/', maxlength: '200', 'data-q': 'find', oninput: () => { askedAt = -Infinity; } });
-  const el = h('div', { class: 'page' }, h('h1', {}, 'Runs'), h('div', { class: 'filter', role: 'search' }, find), trouble,
+  const el = h('div', { class: 'page' }, h('h1', {}, 'Runs'), h('div', { class: 'filter' }, h('div', { role: 'search' }, find), compare), trouble,
     h('table', { class: 'list runs' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started, UTC', 'By', '>Duration', '>Alarms', 'State', '>Size', 'Notes and tags', 'Actions'].map(column))), body));
   let askedAt = -Infinity;
   let key = '';
@@ -33,6 +36,26 @@ export function runsPage(d: Display): View {
     if (r.duration_s === null) growing.push({ cell, since: seconds(r.started) });
     return cell;
   }
+
+  let list: RunSummary[] = [];
+
+  /** The two chosen runs, the older first, a reduction after its parent. */
+  function offer(): void {
+    const runs = familiesOf(list.filter((r) => chosen.includes(r.id)).reverse());
+    attr(compare, 'href', runs.length === 2 ? `#/compare/${runs.map((r) => encodeURIComponent(r.id)).join('/')}` : null);
+    attr(compare, 'aria-disabled', runs.length !== 2);
+    text(compare, runs.length === 2 ? `Compare ${runs.map((r) => r.id).join(' with ')}` : 'Compare: choose two runs');
+    for (const box of body.querySelectorAll<HTMLInputElement>('input[type="checkbox"]')) box.checked = chosen.includes(box.value);
+  }
+
+  function choose(id: string, on: boolean): void {
+    const at = chosen.indexOf(id);
+    if (at >= 0) chosen.splice(at, 1);
+    if (on) chosen.push(id);
+    if (chosen.length > 2) chosen.shift();
+    offer();
+  }
+  offer();
 
   const again = (): void => { askedAt = -Infinity; };
 
@@ -63,12 +86,13 @@ export function runsPage(d: Display): View {
     return b;
   }
 
-  const row = (r: RunSummary): Node => h('tr', {},
-    h('th', { scope: 'row' }, r.id, r.title ? h('div', { class: 'extra' }, r.title) : ''),
+  const row = (r: RunSummary): Node => h('tr', { 'data-under': r.parent && list.some((p) => p.id === r.parent) ? r.parent : null },
+    h('th', { scope: 'row' }, r.id, r.title ? h('div', { class: 'extra' }, r.title) : '', r.parent ? h('div', { class: 'extra' }, `reduced again from ${r.parent}${r.reduced_by ? ` by ${r.reduced_by}` : ''}`) : ''),
     h('td', {}, r.engine), h('td', { class: 'num' }, dateClock(seconds(r.started))), h('td', {}, r.by), length(r),
     h('td', { class: 'num' }, String(r.alarms)), h('td', {}, stateWords[r.state] ?? r.state, r.keep ? h('div', { class: 'extra' }, 'keep') : ''),
     h('td', { class: 'num' }, bytes(r.size_bytes)), h('td', {}, r.notes, r.tags && r.tags.length > 0 ? h('div', { class: 'extra' }, r.tags.join(', ')) : ''),
     h('td', {}, h('a', { class: 'button', href: `#/run/${encodeURIComponent(r.id)}`, 'data-focus': `replay ${r.id}`, 'aria-label': `Replay run ${r.number}`, 'data-q': 'replay', 'data-state': r.state }, 'Replay'),
+      h('label', { class: 'choose' }, h('input', { type: 'checkbox', value: r.id, 'aria-label': `Compare run ${r.id}`, 'data-focus': `compare ${r.id}`, 'data-q': 'compare-choose', onchange: (e: Event) => choose(r.id, (e.target as HTMLInputElement).checked) }), 'compare'),
       h('div', { class: 'asides' }, h('a', { class: 'button small', href: `api/runs/${encodeURIComponent(r.id)}/report`, target: '_blank', rel: 'noopener', 'data-focus': `report ${r.id}`, 'aria-label': `Report of run ${r.number}`, 'data-q': 'report' }, 'Report'),
         button(r, 'Note…', 'note', false, note), button(r, 'Delete…', 'delete', r.keep || r.state === 'active', remove))));
 
@@ -87,18 +111,19 @@ export function runsPage(d: Display): View {
       if (now - askedAt < refreshEvery) return;
       askedAt = now;
       const wanted = find.value.trim();
-      api.runs(wanted).then((list) => {
+      api.runs(wanted).then((found) => {
         if (wanted !== find.value.trim()) return; // a later answer is on its way
         text(trouble, '');
-        const fresh = JSON.stringify(list);
+        const fresh = JSON.stringify(found);
         if (fresh === key) return;
         key = fresh;
         growing = [];
         gated = [];
-        list.sort((a, b) => (a.started < b.started ? 1 : -1));
+        list = familiesOf(found.sort((a, b) => (a.started < b.started ? 1 : -1)));
         const none = wanted ? 'No run is like that.' : 'No run stored yet. A run begins when the engine is started, or by hand on the Watch page.';
         const focused = body.contains(document.activeElement) ? (document.activeElement as HTMLElement).dataset['focus'] : undefined; // the list is rebuilt under the reader's hands
         body.replaceChildren(...(list.length > 0 ? list.map(row) : [h('tr', {}, h('td', { colspan: '10', class: 'extra' }, none))]));
+        offer();
         if (focused) [...body.querySelectorAll<HTMLElement>('[data-focus]')].find((a) => a.dataset['focus'] === focused)?.focus();
         attr(el, 'data-stale', false);
       }, (e: Error) => {

@@ -211,8 +211,8 @@ export function throatPlane(d: Display): View {
         const low = Math.min(y(anchor) + 2, bottom - 25); // a point on the axis keeps its labels inside
         const under = independent !== null && y(anchor) - y(independent) > 9; // the computed point has the other above it
         if (computed !== null) label('○ computed', pal.text, lx, flat ? y(anchor) + (under ? 22 : -18) : low, align);
-        if (independent !== null && far) label(`● air + fuel flow${region}`, pal.data, x(npr) + (toLeft ? -9 : 9), Math.max(top + 9, y(independent)), toLeft ? 'right' : 'left');
-        else if (independent !== null) label(`● air + fuel flow${region}`, pal.data, lx, !flat ? low + 16 : under ? Math.max(top + 9, y(independent) - 14) : y(anchor) + 22, align);
+        if (independent !== null && far) label(`● metered flow${region}`, pal.data, x(npr) + (toLeft ? -9 : 9), Math.max(top + 9, y(independent)), toLeft ? 'right' : 'left');
+        else if (independent !== null) label(`● metered flow${region}`, pal.data, lx, !flat ? low + 16 : under ? Math.max(top + 9, y(independent) - 14) : y(anchor) + 22, align);
       }
     }
     const { temperature } = d.units();

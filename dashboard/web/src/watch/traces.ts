@@ -45,7 +45,7 @@ export const watchPlots = (u: UnitSet): Plot[] => [
   },
   {
     title: 'Flow', unit: u.flow.sign, convert: u.flow.of, cover: () => [0, u.flow.of(8)], limits: none,
-    lines: [{ column: 'mass_flow_kg_s', name: 'W8', show: (v) => fixed(v, 2) }, { column: 'independent_flow_kg_s', name: 'air + fuel', show: (v) => fixed(v, 2) }],
+    lines: [{ column: 'mass_flow_kg_s', name: 'W8', show: (v) => fixed(v, 2) }, { column: 'independent_flow_kg_s', name: 'metered', show: (v) => fixed(v, 2) }],
   },
   {
     title: 'Rotor speed', unit: 'rpm', convert: same, cover: (m) => [0, m.armedAbove ? m.armedAbove * 1.15 : 1000],
