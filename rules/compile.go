@@ -159,8 +159,9 @@ func (p *program) convertDeadband() (message, hint string) {
 }
 
 // compileValue compiles what the alarm shows as its value, and in which way that gets
-// worse: as the condition becomes true by it, upward if that does not tell.
+// worse: as the condition becomes true by it; if that does not tell, as the rule says.
 func (p *program) compileValue(names []Name, ix index) *exprFault {
+	p.falling = p.falling || p.Downward && !p.orders
 	if p.Value != "" {
 		out, v, at, fault := compileValue(p.Value, names, ix)
 		p.shows = out.reads
@@ -173,7 +174,7 @@ func (p *program) compileValue(names []Name, ix index) *exprFault {
 		p.value, p.measure, p.unit = v.number, v.measure, v.measure.name
 		if v.isName {
 			p.unit = names[v.name].Unit
-			p.falling = p.falling && (p.subject < 0 || p.subject == v.name)
+			p.falling = p.falling && (p.subject < 0 || p.subject == v.name) || p.Downward && p.subject != v.name
 		}
 		return nil
 	}

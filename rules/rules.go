@@ -30,6 +30,7 @@ type Rule struct {
 	DeadbandUnit string  // "" = the unit of the quantity that is compared
 	Latching     bool
 	Value        string          // expression of the number that is the alarm's value; "" = what is compared first, else the first number of the text
+	Downward     bool            // the value gets worse as it falls; a comparison of it with a limit tells by itself
 	WorsenBy     float64         // an acknowledged alarm asks again when its value has gone this far beyond what was annunciated, in WorsenUnit; 0 = never
 	WorsenUnit   string          // "" = the unit of the value
 	Unknown      Doubt           // the alarm that tells that this rule cannot be judged

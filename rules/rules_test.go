@@ -377,6 +377,35 @@ func TestValueAndPeak(t *testing.T) {
 	}
 }
 
+// A value that the condition compares with nothing gets worse upward, or downward
+// where the rule says so.
+func TestDownward(t *testing.T) {
+	for _, tt := range []struct {
+		name, when string
+		downward   bool
+		want       float64
+	}{
+		{"nothing tells", `choke_state == "unchoked"`, false, 7},
+		{"the rule tells", `choke_state == "unchoked"`, true, -9},
+		{"another value is compared", "npr > 1", true, -9},
+		{"the comparison tells", "choke_margin_percent < 20", false, -9},
+		{"the comparison tells, whatever the rule says", "choke_margin_percent > -20", true, 7},
+	} {
+		r := simple("r", tt.when)
+		r.Value, r.Downward = "choke_margin_percent", tt.downward
+		s := newStand(t, []Rule{r})
+		s.put("npr", "2")
+		s.put("choke_state", "unchoked")
+		for _, v := range []string{"3", "-9", "7"} {
+			s.put("choke_margin_percent", v)
+			s.to(s.next, true)
+		}
+		if got := s.st.Instances[0].Peak; got != (Reading{tt.want, true}) {
+			t.Errorf("%s: peak %+v, want %g", tt.name, got, tt.want)
+		}
+	}
+}
+
 func TestActErrors(t *testing.T) {
 	s := newStand(t, []Rule{simple("a", "npr > 1")})
 	s.put("npr", "2")

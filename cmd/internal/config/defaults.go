@@ -111,6 +111,9 @@ func render(list []rules.Rule) string {
 			write("suppress_in", fmt.Sprintf("[%s]", strings.Join(phases, ", ")))
 		}
 		text("value", r.Value)
+		if r.Downward {
+			write("downward", "true")
+		}
 		if r.WorsenBy != 0 {
 			write("worsen_by", strings.TrimSpace(strconv.FormatFloat(r.WorsenBy, 'g', -1, 64)+" "+r.WorsenUnit))
 		}

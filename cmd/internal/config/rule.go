@@ -127,6 +127,7 @@ func readRule(n node) rule {
 	out.Latching = f.get("latching").flag(false)
 	out.SuppressIn = readPhases(f.get("suppress_in"))
 	out.Value = oneLine(f.get("value").text())
+	out.Downward = f.get("downward").flag(false)
 	out.WorsenBy, out.WorsenUnit = f.get("worsen_by").numberWithUnit(notNegative)
 	out.Unknown = readDoubt(f.get("unknown"))
 	out.Title = f.get("title").prose(strings.ReplaceAll(out.Name, "_", " "))
