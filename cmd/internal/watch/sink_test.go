@@ -41,7 +41,13 @@ type recorder struct {
 
 func newRecorder(t *testing.T) *recorder {
 	t.Helper()
-	b, cfg, faults := config.Load("../../../testdata/rigs/example.yaml")
+	return newRecorderOf(t, "../../../testdata/rigs/example.yaml")
+}
+
+// newRecorderOf is newRecorder for a rig file.
+func newRecorderOf(t *testing.T, rig string) *recorder {
+	t.Helper()
+	b, cfg, faults := config.Load(rig)
 	if err := watch.Faults(faults); err != nil {
 		t.Fatal(err)
 	}
@@ -320,6 +326,102 @@ func TestSinkAgainstRealServer(t *testing.T) {
 	if n := got[0].Values[0][1]; n != json.Number(fmt.Sprint(inRun)) {
 		t.Errorf("the database gives %v points for the run, want %d", n, inRun)
 	}
+}
+
+// TestDatabaseAwayForAWholeRun: the site's database is away while a run with 20 000
+// received values per second is recorded. Started again, it gets every point once,
+// counted by its own queries, also from a sink that is killed on the way; nothing is
+// set aside.
+func TestDatabaseAwayForAWholeRun(t *testing.T) {
+	const channels, rate = 200, 100
+	server := influxtest.Start(t, influxtest.Options{})
+	server.Query("", "CREATE DATABASE hall")
+	server.Stop()
+	r := newRecorderOf(t, rigOf(t, channels))
+	rig, err := rehearsal.New(r.cfg, rehearsal.Options{Seed: 5, Rate: rate, Scenario: rehearsal.Quick, Start: r.core.State.Host + 1e9})
+	r.must(err)
+	cursors := &forgetful{CursorFile: watch.CursorFile{Path: filepath.Join(r.dir, "cursor.json"), Target: "hall"}}
+	rejected := filepath.Join(r.dir, "rejected.lp")
+	open := func() (*influx.Sink, *watch.Outcomes) {
+		outcomes := newOutcomes(t, r.store)
+		sink, err := influx.New(influx.Config{
+			Target: influx.Target{URL: server.URL, Bucket: "hall/autogen"}, Rig: r.cfg.Rig.ID,
+			Source: outcomes, Cursor: cursors, Rejected: rejected, Lines: 400,
+		})
+		r.must(err)
+		t.Cleanup(sink.Close)
+		return sink, outcomes
+	}
+	sink, _ := open()
+	var msgs []rehearsal.Message
+	for more := true; more; {
+		if msgs, more = rig.Next(msgs[:0]); len(msgs) > 0 {
+			for _, m := range msgs {
+				r.must(r.feed.Until(t.Context(), m.At+m.Delay))
+				r.must(r.feed.Take(t.Context(), watch.Input{Kind: ingest.KindMessage, Flags: ingest.FlagQoS1, Topic: m.Topic, Payload: m.Payload}, m.At+m.Delay))
+			}
+		}
+	}
+	r.must(r.feed.End(t.Context()))
+	r.act(pipeline.DoRunEnd, "")
+	r.rest(15 * time.Second)
+	for range 3 {
+		if sink.Step(t.Context()) == 0 {
+			t.Fatal("a step without a database says that it wrote")
+		}
+	}
+	if st := sink.Status(); st.State != influx.Waiting || st.Written != 0 || st.Err == "" {
+		t.Errorf("without a database: %+v", st)
+	}
+	if rows := float64(r.core.State.Align.Samples) / rig.Length().Seconds(); rows < 0.8*channels*rate {
+		t.Errorf("%.0f values per second were received, some %d are due", rows, channels*rate)
+	}
+
+	server.Start()
+	steps := 0
+	for sink.Step(t.Context()) == 0 && steps < 3 { // then it is killed
+		steps++
+	}
+	sink, outcomes := open()
+	began := time.Now()
+	for sink.Step(t.Context()) == 0 {
+	}
+	st := sink.Status()
+	t.Logf("%d points in %v, after %d steps of the sink before", st.Written, time.Since(began).Round(time.Millisecond), steps)
+	if steps != 3 || st.Written < 1000 {
+		t.Errorf("%d points after %d steps of the sink before: it was not killed on the way", st.Written, steps)
+	}
+	if _, err := os.Stat(rejected); st.State != influx.Working || st.Rejected+st.Expired+outcomes.Skipped() != 0 || !errors.Is(err, os.ErrNotExist) {
+		t.Errorf("%+v, %d records skipped, file of rejected lines: %v", st, outcomes.Skipped(), err)
+	}
+	points, _ := r.stored()
+	for name, field := range map[string]string{"operating_point": "choke_state", "channel": "quality.added_199", "alarm": "rule", "run": "event"} {
+		got := server.Query("hall", fmt.Sprintf(`SELECT count(%q) FROM %q`, field, name))
+		if len(got) != 1 || got[0].Values[0][1] != json.Number(fmt.Sprint(len(points[name]))) {
+			t.Errorf("%s: the database counts %+v, the files hold %d", name, got, len(points[name]))
+		}
+	}
+	if n := len(points["channel"]); n < 20*55 {
+		t.Errorf("%d scans are stored, of a minute at 20 per second", n)
+	}
+}
+
+// rigOf gives a rig file with so many channels.
+func rigOf(t *testing.T, channels int) string {
+	t.Helper()
+	text, err := os.ReadFile("../../../testdata/rigs/example.yaml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	b := bytes.NewBuffer(text)
+	for i := bytes.Count(text, []byte("\n  - id:")) + bytes.Count(text, []byte("\n  - {id:")); i < channels; i++ {
+		fmt.Fprintf(b, "  - {id: added_%d, like: p_compressor, title: \"Added channel %d\"}\n", i, i)
+	}
+	path := filepath.Join(t.TempDir(), "rig.yaml")
+	if err := os.WriteFile(path, b.Bytes(), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	return path
 }
 
 // compare reads a measurement back and holds it against want.
