@@ -91,31 +91,47 @@ func (p *Replay) reconfigure() error {
 	return p.Machine.replace(p.State, p.other)
 }
 
-// rebuildWindow takes the hashes of the full checkpoint before c and those of
-// the messages between the two.
+// rebuildWindow takes the hashes of the messages before c, as far back as a window
+// reaches: what it holds of the full checkpoint before c, and of the records between
+// the two.
 func rebuildWindow(ctx context.Context, f *runfile.File, state *State, c *runfile.Checkpoint) error {
-	from := uint64(0)
+	first := uint64(0)
 	full, err := f.CheckpointAtHost(ctx, c.Host, true)
 	if err == nil && full.Seq > c.Seq { // records may share a host time
 		full, err = f.CheckpointAtHost(ctx, c.Host-1, true)
 	}
 	switch {
 	case err == nil:
-		whole, err := Decode(full.State)
-		if err != nil {
-			return err
-		}
-		state.window = whole.window
-		from = full.Seq + 1
+		first = full.Seq + 1
 	case !errors.Is(err, runfile.ErrNoCheckpoint):
 		return err
 	}
-	return f.Records(ctx, from, c.Seq, func(r *ingest.Record) error {
-		if r.Kind == ingest.KindMessage {
-			state.window.Push(r)
+	// Not every record is a message: where a window is not filled, twice as many are read.
+	for span := uint64(windowSize + windowSize/16); ; span *= 2 {
+		from := first
+		if c.Seq > span {
+			from = max(first, c.Seq-span+1)
 		}
-		return nil
-	})
+		state.window = Window{}
+		if from == first && first != 0 {
+			whole, err := Decode(full.State)
+			if err != nil {
+				return err
+			}
+			state.window = whole.window
+		}
+		n := 0
+		err := f.Records(ctx, from, c.Seq, func(r *ingest.Record) error {
+			if r.Kind == ingest.KindMessage {
+				state.window.Push(r)
+				n++
+			}
+			return nil
+		})
+		if err != nil || n >= windowSize || from == first {
+			return err
+		}
+	}
 }
 
 // Run steps the records up to the record upto, 0 for all there are, and calls fn
