@@ -37,7 +37,7 @@ func command(ctx context.Context, args []string, stdout, stderr io.Writer) int {
 	flags.IntVar(&o.channels, "channels", 60, "channels")
 	flags.Float64Var(&o.rate, "rate", 100, "values of each channel per second")
 	flags.DurationVar(&o.length, "length", 4*time.Minute, "length of the test, at least 2m; the promise is for 4h")
-	flags.StringVar(&o.dir, "data", "", "data folder, which is kept (default: a temporary one)")
+	flags.StringVar(&o.dir, "data", "", "data folder, which is kept; the run of an earlier measurement is measured again (default: a temporary one)")
 	if err := flags.Parse(args); err != nil || flags.NArg() > 0 || o.length < 2*time.Minute {
 		if err == nil {
 			_, _ = fmt.Fprintln(stderr, "storage-figures: takes no arguments; --length is at least 2m")
