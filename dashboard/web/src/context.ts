@@ -22,6 +22,9 @@ export interface Acknowledger {
 export interface Taste {
   palette(): Palette;
   units(): UnitSet;
+  /** The keys of the plots of the traces. */
+  plots(): readonly string[];
+  choosePlots(keys: readonly string[]): void;
 }
 
 export interface Display extends Taste {

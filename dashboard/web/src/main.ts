@@ -17,7 +17,7 @@ import { login } from './pages/login';
 import { replayPage } from './pages/replay';
 import { rigPage } from './pages/rig';
 import { runsPage } from './pages/runs';
-import { gapSeconds } from './ring';
+import { gapSeconds, renewed, widened } from './ring';
 import { type Session, openSession, sessionOf } from './session';
 import { Settings, browserKeeper } from './settings';
 import { Sound } from './sound';
@@ -26,6 +26,7 @@ import './style.css';
 import { seconds } from './time';
 import { type UnitSet, unitSets } from './units';
 import { watchDisplay } from './watch/display';
+import { columnsOf } from './watch/plots';
 import { watchTools } from './watch/tools';
 
 const drawEvery = 50; // ms: at most 20 draws a second
@@ -94,9 +95,9 @@ async function firstRigs(): Promise<RigInfo[]> {
 }
 
 function run(rig: RigInfo, rigs: RigInfo[], session: Session): void {
-  const model = newModel();
   const sound = new Sound();
   const settings = new Settings(browserKeeper());
+  const model = newModel(false, columnsOf(settings.plots));
   let dirty = true;
 
   const link = new Link(browser, (afresh) => liveURL(location.href, rig.id, model.n > 0 && !afresh ? `${model.epoch}.${model.n}` : ''), onFrame, () => { dirty = true; });
@@ -104,7 +105,7 @@ function run(rig: RigInfo, rigs: RigInfo[], session: Session): void {
   /** Fetches the run so far and goes on behind it; without it the link begins with a hello. */
   async function open(): Promise<void> {
     try {
-      const past = await opening(api, rig.id, AbortSignal.timeout(openTimeout));
+      const past = await opening(api, rig.id, AbortSignal.timeout(openTimeout), model.ring.names);
       apply(model, past.hello, performance.now());
       recall(model, past.events);
       model.ring.fill(past.rows);
@@ -131,10 +132,31 @@ function run(rig: RigInfo, rigs: RigInfo[], session: Session): void {
     const last = model.ring.size > 0 ? model.ring.t(model.ring.size - 1) - start : 0;
     const from = Math.max(0, to - reach, last);
     if (to - from < gapSeconds) return;
-    rowsOf(api, r.id, start, from, to, to < firstChunk, AbortSignal.timeout(openTimeout)).then((rows) => {
+    rowsOf(api, r.id, start, from, to, to < firstChunk, AbortSignal.timeout(openTimeout), model.ring.names).then((rows) => {
       model.ring.fill(rows);
       dirty = true;
     }, () => undefined); // the hole stays visible as one
+  }
+
+  function choosePlots(keys: readonly string[]): void {
+    settings.setPlots(keys);
+    trace();
+  }
+
+  /** Gives the ring the columns of the traces at once, what is behind them from what is stored. */
+  function trace(): void {
+    dirty = true;
+    const names = columnsOf(settings.plots);
+    if (names.every((name) => model.ring.names.includes(name))) return;
+    model.ring = widened(model.ring, names);
+    const r = activeRun(model);
+    if (!r) return;
+    const start = seconds(r.started);
+    const to = hostNow(model, performance.now()) - start;
+    rowsOf(api, r.id, start, Math.max(0, to - reach), to, to < firstChunk, AbortSignal.timeout(openTimeout), names).then((rows) => {
+      if (model.ring.names === names) model.ring = renewed(model.ring, rows);
+      dirty = true;
+    }, () => undefined); // the traces then begin at the choice
   }
 
   /** Names of the warnings that sound. */
@@ -194,14 +216,14 @@ function run(rig: RigInfo, rigs: RigInfo[], session: Session): void {
 
   const units = (): UnitSet => unitSets[settings.system];
   const display: Display = {
-    rig: rig.id, model: () => model, palette, units, acknowledger, session: () => session, operator: () => (session.open ? settings.operator : session.name),
+    rig: rig.id, model: () => model, palette, units, plots: () => settings.plots, choosePlots, acknowledger, session: () => session, operator: () => (session.open ? settings.operator : session.name),
     fresh: (now) => (link.opened ? freshness(model, link.connected, now) : { kind: 'waiting' }),
   };
   const head = header({
     rigs, rig, display, sound, settings,
     mute: (time) => sound.muteFor(performance.now(), time, warnings()),
     logout: () => { void api.logout().catch(() => undefined).then(() => location.reload()); },
-    changed: () => { dirty = true; },
+    changed: trace,
   });
   const place = h('main', { id: 'main', tabindex: '-1' });
   document.body.replaceChildren(h('a', { class: 'skip', href: '#main', onclick: (e: Event) => { e.preventDefault(); place.focus(); } }, 'To the content'), head.el, place, h('footer', {}, footer));

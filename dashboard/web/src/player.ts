@@ -4,7 +4,7 @@
 import type { Frame } from './frames';
 import { type Model, apply, newModel } from './state';
 import { seconds } from './time';
-import type { Row } from './ring';
+import { type Row, columns } from './ring';
 
 export const speeds = [1, 2, 5, 10, 20, 50] as const;
 
@@ -34,8 +34,8 @@ export class Player {
   private seeking = new AbortController();
   private loading = false;
 
-  /** `start` is the time of second 0, `length` the length of the run, both in s. */
-  constructor(private readonly store: Store, private readonly start: number, readonly length: number) {}
+  /** `start` is the time of second 0, `length` the length of the run, both in s; `names` gives the columns of the traces. */
+  constructor(private readonly store: Store, private readonly start: number, readonly length: number, private readonly names: () => readonly string[] = () => columns) {}
 
   /** Shows the run as it was at `position`. */
   async seek(position: number, now: number): Promise<void> {
@@ -47,7 +47,7 @@ export class Player {
     this.loading = false;
     this.waiting = true;
     this.problem = '';
-    const model = newModel(true);
+    const model = newModel(true, this.names());
     const prefill = this.store.before(this.position, seeking.signal).then(
       (rows) => { if (!seeking.signal.aborted) model.ring.fill(rows); },
       () => undefined, // the traces then begin at the position

@@ -1,13 +1,13 @@
-// The samples behind the traces: fixed columns in one ring, filled in event-time
+// The samples behind the traces: named columns in one ring, filled in event-time
 // order. A missing value is NaN. When the ring is full the oldest row goes.
 
 import type { PointFrame, Series, SeriesReply } from './frames';
 
-export const columns = [
+/** The columns that are always there; a viewer's choice adds to them. */
+export const columns: readonly string[] = [
   'npr', 'choke_npr', 'choke_margin_percent', 'egt_indicated_k',
   'mass_flow_kg_s', 'independent_flow_kg_s', 'speed_rpm', 'flow_parameter',
-] as const;
-export type Column = (typeof columns)[number];
+];
 
 /** Samples further apart than this are not joined by a line, s. */
 export const gapSeconds = 1;
@@ -19,9 +19,24 @@ export type Row = ArrayLike<number>;
 
 export class Ring {
   private readonly time = new Float64Array(capacity);
-  private readonly data = Array.from({ length: columns.length + 1 }, () => new Float64Array(capacity));
+  private readonly data: Float64Array[];
   private head = 0; // where the next row goes
   size = 0;
+
+  constructor(readonly names: readonly string[] = columns) {
+    this.data = Array.from({ length: names.length + 1 }, () => new Float64Array(capacity));
+  }
+
+  /** All rows, oldest first. */
+  rows(): { t: number; row: Row }[] {
+    return Array.from({ length: this.size }, (_, i) => ({ t: this.t(i), row: this.data.map((_c, k) => this.value(k, i)) }));
+  }
+
+  /** Enters a value into the newest row, if that is the one of t. */
+  amend(t: number, name: string, v: number): void {
+    const k = this.names.indexOf(name);
+    if (k >= 0 && this.size > 0 && this.t(this.size - 1) === t) (this.data[k] as Float64Array)[this.at(this.size - 1)] = v;
+  }
 
   /** Adds a row; one that is not newer than the last is ignored. */
   push(t: number, row: Row): void {
@@ -34,7 +49,7 @@ export class Ring {
 
   /** Puts rows where the ring has none: before its first row and into its gaps. */
   fill(rows: { t: number; row: Row }[]): void {
-    const kept = Array.from({ length: this.size }, (_, i) => ({ t: this.t(i), row: this.data.map((_, k) => this.value(k, i)) as Row }));
+    const kept = this.rows();
     const added = rows.filter((r) => {
       const i = this.lower(r.t);
       const before = i > 0 ? this.t(i - 1) : -Infinity;
@@ -65,7 +80,7 @@ export class Ring {
 
   value(column: number, i: number): number { return (this.data[column] as Float64Array)[this.at(i)] as number; }
 
-  choked(i: number): number { return this.value(columns.length, i); }
+  choked(i: number): number { return this.value(this.names.length, i); }
 
   /** Index of the first row at or after t. */
   lower(t: number): number {
@@ -78,35 +93,52 @@ export class Ring {
   }
 }
 
-/** The row of an operating point. */
-export function pointRow(p: PointFrame): number[] {
-  const row = columns.map((c) => p[c] ?? NaN);
+/** The row of an operating point; channels are not in it. */
+export function pointRow(p: PointFrame, names: readonly string[] = columns): number[] {
+  const row = names.map((c) => (p as unknown as Record<string, number | null>)[c] ?? NaN);
   row.push(p.choke_state === 'choked' ? 1 : p.choke_state === 'unknown' ? NaN : 0);
   return row;
 }
 
+/** A ring of other columns with the rows of one; columns that it had not are empty. */
+export function widened(ring: Ring, names: readonly string[]): Ring {
+  const out = new Ring(names);
+  const from = names.map((name) => ring.names.indexOf(name));
+  for (const { t, row } of ring.rows()) out.push(t, [...from.map((k) => (k < 0 ? NaN : row[k] as number)), row[ring.names.length] as number]);
+  return out;
+}
+
+/** The ring with `rows` in the place of what it has of their time. */
+export function renewed(ring: Ring, rows: readonly { t: number; row: Row }[]): Ring {
+  const out = new Ring(ring.names);
+  const [first, last] = [rows[0]?.t ?? Infinity, rows[rows.length - 1]?.t ?? Infinity];
+  const old = ring.rows();
+  for (const r of [...old.filter((o) => o.t < first), ...rows, ...old.filter((o) => o.t > last)]) out.push(r.t, r.row);
+  return out;
+}
+
 /** What a /series request has to name for seriesRows. */
-export const seriesNames = [...columns, 'choke_state'] as const;
+export const seriesNames = (names: readonly string[] = columns): string[] => [...names, 'choke_state'];
 
 /**
  * Rows of a /series reply; `start` is the time of second 0 of the run. A bucket
  * of several samples becomes two rows, its lowest and its highest values, so that
  * no excursion is lost. Choked comes from the transitions of the choke state.
  */
-export function seriesRows(reply: SeriesReply, start: number): { t: number; row: number[] }[] {
+export function seriesRows(reply: SeriesReply, start: number, names: readonly string[] = columns): { t: number; row: number[] }[] {
   const rows = new Map<number, number[]>();
   const put = (t: number, k: number, v: unknown): void => {
     let row = rows.get(t);
-    if (!row) rows.set(t, (row = new Array<number>(columns.length + 1).fill(NaN)));
+    if (!row) rows.set(t, (row = new Array<number>(names.length + 1).fill(NaN)));
     if (typeof v !== 'number') return;
     row[k] = v;
   };
   // The width of a bucket, one for all columns; where data is missing the next one is further away.
   let width = Infinity;
-  for (const name of columns) {
+  for (const name of names) {
     reply.series[name]?.t.forEach((t, i, all) => { if (i > 0) width = Math.min(width, t - (all[i - 1] as number)); });
   }
-  columns.forEach((name, k) => {
+  names.forEach((name, k) => {
     const s = reply.series[name];
     if (!s) return;
     s.t.forEach((t, i) => {
@@ -123,7 +155,7 @@ export function seriesRows(reply: SeriesReply, start: number): { t: number; row:
       const word = states.state?.[next];
       choked = word === 'choked' ? 1 : word === 'unknown' ? NaN : 0;
     }
-    r.row[columns.length] = choked;
+    r.row[names.length] = choked;
   }
   return sorted;
 }
@@ -143,8 +175,8 @@ export interface Window { t: number[]; y: (number | null)[][] }
  * one scan stays visible at any zoom. Bucket edges are multiples of their width:
  * the picture does not shimmer while the window slides. Gaps become nulls.
  */
-export function decimate(ring: Ring, wanted: readonly Column[], t0: number, t1: number, buckets: number): Window {
-  const index = wanted.map((c) => columns.indexOf(c));
+export function decimate(ring: Ring, wanted: readonly string[], t0: number, t1: number, buckets: number): Window {
+  const index = wanted.map((c) => ring.names.indexOf(c));
   const out: Window = { t: [], y: wanted.map(() => []) };
   const first = Math.max(0, ring.lower(t0) - 1);
   const last = Math.min(ring.size, ring.lower(t1) + 1);

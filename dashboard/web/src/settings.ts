@@ -1,6 +1,7 @@
 // What a viewer has chosen, kept in the browser.
 
 import type { System } from './units';
+import { standardPlots } from './watch/plots';
 
 /** The part of localStorage that is used; a test puts its own here. */
 export type Keeper = Pick<Storage, 'getItem' | 'setItem'>;
@@ -8,11 +9,14 @@ export type Keeper = Pick<Storage, 'getItem' | 'setItem'>;
 export class Settings {
   system: System;
   operator: string;
+  plots: readonly string[]; // keys of the plots of the traces, from top to bottom
 
   /** Without a keeper, or with one that refuses, the choice lasts as long as the page. */
   constructor(private readonly keeper: Keeper | null) {
     this.system = this.read('units') === 'us' ? 'us' : 'si';
     this.operator = this.read('operator');
+    const plots = this.read('plots').split(',').filter(Boolean);
+    this.plots = plots.length > 0 ? plots : standardPlots;
   }
 
   /** Takes over what another tab of the same browser has chosen. */
@@ -23,6 +27,11 @@ export class Settings {
   setSystem(s: System): void {
     this.system = s;
     this.write('units', s);
+  }
+
+  setPlots(plots: readonly string[]): void {
+    this.plots = plots;
+    this.write('plots', plots.join(','));
   }
 
   /** The name that goes with every action, as typed; at most 40 characters. */

@@ -6,7 +6,7 @@ import type {
   Alarm, AlarmFrame, AlarmState, Band, Channel, ChannelValue, ConfigState, Frame, HelloFrame, Ledger, Life, LogEntry, MarkFrame, PointFrame, Priority, QuantityInfo, RigInfo, Run, StatusFrame,
 } from './frames';
 import { enter } from './oplog';
-import { Ring, pointRow } from './ring';
+import { Ring, columns, pointRow } from './ring';
 import { Sparks } from './spark';
 import { seconds } from './time';
 
@@ -27,6 +27,7 @@ export interface Model {
   point: PointFrame | null;
   values: Record<string, ChannelValue>;
   valuesAt: number;
+  valuesTime: number; // event time of the newest values, s
   alarms: Map<string, Alarm>;
   history: HistoryEntry[]; // oldest first, the last 500
   ledgers: Ledger[];
@@ -50,10 +51,11 @@ export interface Model {
 
 const kept = 500;
 
-export function newModel(replay = false): Model {
+/** `names` are the columns of its ring. */
+export function newModel(replay = false, names: readonly string[] = columns): Model {
   return {
     replay, rig: null, run: null, channels: [], quantities: [], bands: [], armedAbove: null, scanRate: 20, configHash: '', build: '',
-    point: null, values: {}, valuesAt: -Infinity, alarms: new Map(), history: [], ledgers: [], status: null, flags: [], log: [], config: null, life: null, sparks: new Sparks(), ring: new Ring(),
+    point: null, values: {}, valuesAt: -Infinity, valuesTime: NaN, alarms: new Map(), history: [], ledgers: [], status: null, flags: [], log: [], config: null, life: null, sparks: new Sparks(), ring: new Ring(names),
     epoch: 0, n: 0, ticks: 0, frameAt: -Infinity, pointAt: -Infinity, statusAt: -Infinity, hostTime: NaN, newest: NaN, resets: 0,
   };
 }
@@ -72,11 +74,14 @@ export function apply(m: Model, f: Frame, now: number): void {
       m.point = f;
       m.pointAt = now;
       m.newest = seconds(f.t);
-      m.ring.push(m.newest, pointRow(f));
+      m.ring.push(m.newest, pointRow(f, m.ring.names));
+      traceChannels(m, m.newest, m.values);
       break;
     case 'channels':
       m.values = { ...m.values, ...f.channels };
       m.valuesAt = now;
+      m.valuesTime = seconds(f.t);
+      traceChannels(m, m.valuesTime, f.channels);
       m.sparks.push(seconds(f.t), f.channels);
       break;
     case 'alarm': alarm(m, f.alarm, seconds(f.t)); break;
@@ -93,6 +98,14 @@ export function apply(m: Model, f: Frame, now: number): void {
     case 'run':
       m.run = f.event === 'started' ? f.run : m.run && m.run.id === f.run.id ? f.run : m.run;
       break;
+  }
+}
+
+/** Enters the channels that are traced into the row of their scan, whichever of the two came first. */
+function traceChannels(m: Model, t: number, values: Record<string, ChannelValue>): void {
+  if (t !== m.valuesTime) return;
+  for (const name of m.ring.names) {
+    if (name.startsWith('channel.')) m.ring.amend(t, name, values[name.slice(8)]?.value ?? NaN);
   }
 }
 

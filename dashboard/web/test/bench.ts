@@ -8,7 +8,8 @@ import { newModel } from '../src/state';
 import { openSession } from '../src/session';
 import '../src/style.css';
 import { fixed, unitSets } from '../src/units';
-import { type Plot, traces } from '../src/watch/traces';
+import type { Plot } from '../src/watch/plots';
+import { traces } from '../src/watch/traces';
 
 const [charts, span, rate, drawEvery] = [12, 600, 20, 50];
 
@@ -34,10 +35,10 @@ async function run(seconds: number): Promise<Figures> {
   model.newest = t0 + span - 1 / rate;
   const plot = (i: number): Plot => ({
     title: `trace ${i}`, unit: '', convert: (v) => v, cover: () => [0, 20], limits: () => [{ v: 18, name: 'limit' }],
-    lines: [{ column: columns[i % columns.length] as (typeof columns)[number], name: '', show: (v) => fixed(v, 2) }],
+    lines: [{ column: columns[i % columns.length] as string, name: '', show: (v) => fixed(v, 2) }],
   });
   const units = unitSets.si;
-  const display: Display = { rig: '', model: () => model, fresh: () => ({ kind: 'live', age: 0 }), palette: () => light, units: () => units, operator: () => '', session: () => openSession, acknowledger: null };
+  const display: Display = { rig: '', model: () => model, fresh: () => ({ kind: 'live', age: 0 }), palette: () => light, units: () => units, plots: () => [], choosePlots: () => undefined, operator: () => '', session: () => openSession, acknowledger: null };
   const view = traces(display, null, () => Array.from({ length: charts }, (_, i) => plot(i)));
   const style = document.createElement('style');
   paint(document.documentElement.style, light);

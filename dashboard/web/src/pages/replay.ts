@@ -10,10 +10,11 @@ import { Player, speeds } from '../player';
 import { type Period, periods } from '../ring';
 import { openSession } from '../session';
 import type { Flag } from '../state';
-import { dateClock, duration, seconds } from '../time';
+import { dateClock, duration, seconds, zoneClock } from '../time';
 import { recordView } from './record';
 import { font, surface } from '../watch/canvas';
 import { watchDisplay } from '../watch/display';
+import { columnsOf } from '../watch/plots';
 
 export function replayPage(runID: string, rig: string, taste: Taste): View {
   let player: Player | null = null;
@@ -92,6 +93,12 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
   }
   document.addEventListener('keydown', onKey);
 
+  /** Other traces are read from what is stored. */
+  function choosePlots(keys: readonly string[]): void {
+    taste.choosePlots(keys);
+    if (player) go(player.position);
+  }
+
   async function open(): Promise<void> {
     run = await api.runSummary(runID);
     start = seconds(run.started);
@@ -105,9 +112,9 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
         await api.messages(runID, from, to, '', signal, (f) => { frames.push(f); });
         return frames;
       },
-      before: async (to, signal) => (to <= 0 ? [] : rowsOf(api, runID, start, Math.max(0, to - reach), to, young, signal)),
-    }, start, length);
-    const display: Display = { rig, model: () => p.model, fresh: () => ({ kind: 'replay' }), palette: taste.palette, units: taste.units, operator: () => '', session: () => openSession, acknowledger: null };
+      before: async (to, signal) => (to <= 0 ? [] : rowsOf(api, runID, start, Math.max(0, to - reach), to, young, signal, columnsOf(taste.plots()))),
+    }, start, length, () => columnsOf(taste.plots()));
+    const display: Display = { rig, model: () => p.model, fresh: () => ({ kind: 'replay' }), palette: taste.palette, units: taste.units, plots: taste.plots, choosePlots, operator: () => '', session: () => openSession, acknowledger: null };
     inner = watchDisplay(display, `Replay of run ${runID}`, null);
     body.replaceChildren(inner.el);
     player = p;
@@ -176,7 +183,8 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
       const phase = phases.find((k) => at >= k.from && at < k.to)?.word ?? '';
       attr(scrub, 'aria-valuetext', `${duration(at)} of ${duration(player.length)}${phase && `, ${phase}`}`);
       text(play, player.playing ? 'Pause' : 'Play');
-      text(clockText, `${duration(at)} of ${duration(player.length)} · ${dateClock(start + at)} UTC`);
+      const local = zoneClock(start + at, player.model.rig?.time_zone);
+      text(clockText, `${duration(at)} of ${duration(player.length)} · ${dateClock(start + at)} UTC${local && ` · ${local}`}`);
       text(trouble, player.problem ? `Stopped: ${player.problem}` : player.playing && player.waiting ? 'reading…' : '');
       paintBar(player.length);
       if (shown === 'Display') inner.update(time); else record?.update(time);

@@ -1,5 +1,5 @@
-// Traces on one shared time axis: event time, UTC. Shading marks choked periods;
-// flags mark alarms and the operator's marks.
+// Traces on one shared time axis: event time. Shading marks choked periods; flags mark
+// alarms and the operator's marks. What is drawn is a viewer's choice.
 
 import uPlot from 'uplot';
 import 'uplot/dist/uPlot.min.css';
@@ -8,51 +8,14 @@ import type { Display } from '../context';
 import { type View, attr, h, text } from '../dom';
 import { type Flag, type Model, believable } from '../state';
 import type { Palette } from '../palette';
-import { type Column, chokedSpans, columns, decimate, gapSeconds } from '../ring';
+import { chokedSpans, decimate, gapSeconds } from '../ring';
 import { clock } from '../time';
-import { type UnitSet, fixed, signed } from '../units';
+import { type UnitSet, age, fixed } from '../units';
 import { font } from './canvas';
+import { picker } from './picker';
+import { type Plot, chosenPlots, same } from './plots';
 
 const spans = [60, 120, 300, 600];
-
-interface Line { column: Column; name: string; show: (v: number) => string }
-export interface Plot {
-  title: string;
-  unit: string;
-  lines: Line[];
-  convert: (v: number) => number;
-  /** Values that the axis always covers, so that it seldom moves. */
-  cover: (m: Model) => [number, number];
-  limits: (m: Model) => { v: number; name: string }[];
-}
-
-const same = (v: number): number => v;
-const none = (): { v: number; name: string }[] => [];
-/** The plots of the Watch page in a viewer's units. */
-export const watchPlots = (u: UnitSet): Plot[] => [
-  {
-    title: 'Pressure ratio', unit: '', convert: same, cover: () => [1, 2.5], limits: none,
-    lines: [{ column: 'npr', name: 'NPR', show: (v) => fixed(v, 3) }, { column: 'choke_npr', name: 'choke NPR', show: (v) => fixed(v, 3) }],
-  },
-  {
-    title: 'Choke margin', unit: '%', convert: same, cover: () => [-50, 25], limits: () => [{ v: 0, name: '' }],
-    lines: [{ column: 'choke_margin_percent', name: 'margin', show: (v) => signed(v, 1) }],
-  },
-  {
-    title: 'Indicated EGT', unit: u.temperature.sign, convert: u.temperature.of, cover: (m) => [0, u.temperature.of(Math.max(1073, ...m.bands.map((b) => b.limit_k + 70)))],
-    limits: (m) => m.bands.map((b) => ({ v: u.temperature.of(b.limit_k), name: `${fixed(u.temperature.of(b.limit_k), 0)} ${b.kind}` })),
-    lines: [{ column: 'egt_indicated_k', name: 'EGT', show: (v) => fixed(v, 0) }],
-  },
-  {
-    title: 'Flow', unit: u.flow.sign, convert: u.flow.of, cover: () => [0, u.flow.of(8)], limits: none,
-    lines: [{ column: 'mass_flow_kg_s', name: 'W8', show: (v) => fixed(v, 2) }, { column: 'independent_flow_kg_s', name: 'metered', show: (v) => fixed(v, 2) }],
-  },
-  {
-    title: 'Rotor speed', unit: 'rpm', convert: same, cover: (m) => [0, m.armedAbove ? m.armedAbove * 1.15 : 1000],
-    limits: (m) => (m.armedAbove ? [{ v: m.armedAbove, name: 'choke armed above' }] : []),
-    lines: [{ column: 'speed_rpm', name: 'speed', show: (v) => fixed(v, 0) }],
-  },
-];
 
 /** The smallest of 1, 2, 5 times a power of ten that is at least v. */
 function niceStep(v: number): number {
@@ -63,6 +26,7 @@ function niceStep(v: number): number {
 /** The axis range over data and cover, in whole steps so that it does not creep. */
 export function axisRange(low: number, high: number, cover: [number, number]): [number, number] {
   const [a, b] = [Math.min(low, cover[0]), Math.max(high, cover[1])];
+  if (!(a <= b)) return [0, 1]; // nothing to show yet
   const step = niceStep((b - a || 1) / 8);
   return [a >= cover[0] ? cover[0] : Math.floor(a / step) * step, b <= cover[1] ? cover[1] : Math.ceil(b / step) * step];
 }
@@ -73,18 +37,23 @@ export interface Traces extends View {
 }
 
 /** `tools` stand at the end of the bar; `make` gives the plots. */
-export function traces(d: Display, tools: HTMLElement | null, make: (u: UnitSet) => Plot[] = watchPlots): Traces {
+export function traces(d: Display, tools: HTMLElement | null, make: (d: Display) => Plot[] = chosenPlots): Traces {
   const host = h('div', { class: 'plots' });
   const at = h('span', { class: 'at' });
   let span = 120;
   let frozenAt = NaN;
+  let zoomed: [number, number] | null = null;
+  let held = NaN; // the end of the axis while a stretch is being drawn on it
   const choices = spans.map((s) => h('button', { type: 'button', 'aria-pressed': String(s === span), onclick: () => choose(s) }, `${s} s`));
   const freeze = h('button', { type: 'button', 'aria-pressed': 'false', onclick: () => { frozenAt = Number.isNaN(frozenAt) ? d.model().newest : NaN; } }, 'Freeze');
-  const bar = h('div', { class: 'tracebar' }, h('span', { class: 'label' }, 'Last'), ...choices, freeze, at, tools ?? '');
+  const whole = h('button', { type: 'button', 'data-q': 'trace-reset', hidden: true, title: 'Also by a double click', onclick: () => { zoomed = null; } }, 'Reset zoom');
+  const pick = picker(d);
+  const bar = h('div', { class: 'tracebar' }, h('span', { class: 'label' }, 'Last'), ...choices, freeze, whole, pick.el, at, tools ?? '');
   const el = h('section', { class: 'traces', 'aria-label': 'Traces' }, bar, host);
 
   function choose(s: number): void {
     span = s;
+    zoomed = null;
     choices.forEach((b, i) => attr(b, 'aria-pressed', String(spans[i] === span)));
   }
 
@@ -92,6 +61,8 @@ export function traces(d: Display, tools: HTMLElement | null, make: (u: UnitSet)
   let rows: Row[] = [];
   let pal: Palette | null = null;
   let units: UnitSet | null = null;
+  let drawn: readonly string[] | null = null;
+  let known = NaN; // how many channels and quantities
   let [width, height] = [0, 0];
   let shading: [number, number][] = [];
   let flags: Flag[] = [];
@@ -105,6 +76,9 @@ export function traces(d: Display, tools: HTMLElement | null, make: (u: UnitSet)
     layout();
   });
   observer.observe(host);
+  host.addEventListener('pointerdown', () => { held = d.model().newest; });
+  const letGo = (): void => { held = NaN; };
+  window.addEventListener('pointerup', letGo);
 
   function layout(): void {
     if (width < 200 || height < 150 || rows.length === 0) return;
@@ -117,16 +91,17 @@ export function traces(d: Display, tools: HTMLElement | null, make: (u: UnitSet)
     });
   }
 
-  function build(p: Palette, u: UnitSet): void {
+  function build(p: Palette): void {
     for (const r of rows) r.chart.destroy();
     host.replaceChildren();
-    const plots = make(u);
+    const plots = make(d);
+    host.dataset['rows'] = String(plots.length);
     rows = plots.map((plot, i) => {
       const lastRow = i === plots.length - 1;
       const values = plot.lines.map(() => h('span', { class: 'value' }, '–'));
       const box = h('div', { class: 'chart' });
       const row = h('div', { class: 'tracerow' },
-        h('div', { class: 'key' }, h('div', { class: 'keytitle' }, plot.title, plot.unit ? h('span', { class: 'unit' }, ` ${plot.unit}`) : ''),
+        h('div', { class: 'key' }, h('div', { class: 'keytitle', title: plot.title }, plot.title, plot.unit ? h('span', { class: 'unit' }, ` ${plot.unit}`) : ''),
           ...plot.lines.map((l, k) => h('div', { class: 'keyline' }, h('span', { class: `swatch s${k}`, 'aria-hidden': 'true' }), plot.lines.length > 1 ? `${l.name} ` : '', values[k] as HTMLElement))),
         box);
       host.append(row);
@@ -134,7 +109,7 @@ export function traces(d: Display, tools: HTMLElement | null, make: (u: UnitSet)
       const chart = new uPlot({
         width: Math.max(60, box.clientWidth || width - 130), height: 80, padding: [9, 30, 5, 0],
         legend: { show: false },
-        cursor: { sync: { key: sync.key }, drag: { x: false, y: false }, points: { show: false }, y: false },
+        cursor: { sync: { key: sync.key }, drag: { x: true, y: false, setScale: false }, points: { show: false }, y: false, bind: { dblclick: () => () => { zoomed = null; return null; } } },
         tzDate: (t) => uPlot.tzDate(new Date(t * 1e3), 'Etc/UTC'),
         scales: {
           x: { time: true },
@@ -149,6 +124,11 @@ export function traces(d: Display, tools: HTMLElement | null, make: (u: UnitSet)
         hooks: {
           drawClear: [(u) => paintShading(u, p)],
           draw: [(u) => paintLimits(u, plot, p), (u) => paintFlags(u, p, i === 0)],
+          setSelect: [(u) => {
+            if (u.select.width < 4) return;
+            zoomed = [u.posToVal(u.select.left, 'x'), u.posToVal(u.select.left + u.select.width, 'x')];
+            u.setSelect({ left: 0, top: 0, width: 0, height: 0 }, false);
+          }],
           setCursor: [(u) => {
             const left = u.cursor.left ?? -1;
             hover = left >= 0 ? u.posToVal(left, 'x') : null;
@@ -223,19 +203,26 @@ export function traces(d: Display, tools: HTMLElement | null, make: (u: UnitSet)
   }
 
   function update(now: number): void {
-    if (d.palette() !== pal || d.units() !== units) build((pal = d.palette()), (units = d.units()));
+    const { channels, quantities } = d.model(); // those of the rig come with the first hello
+    if (d.palette() !== pal || d.units() !== units || d.plots() !== drawn || channels.length + quantities.length !== known) {
+      [units, drawn, known] = [d.units(), d.plots(), channels.length + quantities.length];
+      build((pal = d.palette()));
+    }
+    pick.update(now);
     const m = d.model();
     const isFrozen = !Number.isNaN(frozenAt);
-    const end = isFrozen ? frozenAt : m.newest;
+    const end = zoomed ? zoomed[1] : isFrozen ? frozenAt : Number.isNaN(held) ? m.newest : held;
     attr(freeze, 'aria-pressed', String(isFrozen));
     if (!Number.isFinite(end) || width < 200) return;
-    const start = end - span;
+    attr(whole, 'hidden', zoomed === null);
+    attr(freeze, 'hidden', zoomed !== null);
+    const start = zoomed ? zoomed[0] : end - span;
     shading = chokedSpans(m.ring, start, end);
     flags = m.flags.filter((f) => f.t >= start && f.t <= end);
     const cursor = hover !== null ? hover : null;
-    const past = cursor !== null || isFrozen; // values of a chosen instant; otherwise they claim to be present
+    const past = cursor !== null || isFrozen || zoomed !== null; // values of a chosen instant; otherwise they claim to be present
     const shown = past || believable(d.fresh(now));
-    const atRow = !shown ? -1 : cursor === null ? m.ring.lower(end + 1e-6) - 1 : nearest(m, cursor);
+    const atRow = !shown ? -1 : cursor === null ? m.ring.lower(end + 1e-6) - 1 : nearest(m, cursor, end - start);
     for (const r of rows) {
       const w = decimate(m.ring, r.plot.lines.map((l) => l.column), start, end, Math.max(60, Math.floor(r.width / 2)));
       const y = w.y.map((s) => (r.plot.convert === same ? s : s.map((v) => (v === null ? null : r.plot.convert(v)))));
@@ -243,28 +230,31 @@ export function traces(d: Display, tools: HTMLElement | null, make: (u: UnitSet)
         r.chart.setData([w.t, ...y] as uPlot.AlignedData, false);
         r.chart.setScale('x', { min: start, max: end });
       });
-      r.plot.lines.forEach((l, k) => {
-        const v = atRow >= 0 ? m.ring.value(columns.indexOf(l.column), atRow) : NaN;
-        text(r.values[k] as HTMLElement, Number.isNaN(v) ? '–' : l.show(r.plot.convert(v)));
+      r.plot.lines.forEach((l, i) => {
+        const k = m.ring.names.indexOf(l.column);
+        const v = atRow >= 0 && k >= 0 ? m.ring.value(k, atRow) : NaN;
+        text(r.values[i] as HTMLElement, Number.isNaN(v) ? '–' : l.show(r.plot.convert(v)));
       });
     }
-    text(at, cursor !== null && atRow >= 0 ? `values at ${clock(m.ring.t(atRow))} UTC` : isFrozen ? `FROZEN at ${clock(frozenAt)} UTC` : 'UTC; shaded: choked');
-    attr(at, 'data-frozen', isFrozen);
+    text(at, cursor !== null && atRow >= 0 ? `at ${clock(m.ring.t(atRow))} UTC` : zoomed ? `ZOOMED to ${age(end - start)}` : isFrozen ? `FROZEN at ${clock(frozenAt)} UTC` : 'UTC; shaded: choked');
+    attr(at, 'data-frozen', isFrozen || zoomed !== null);
   }
 
   /** The row at t; -1 in a gap. */
-  function nearest(m: Model, t: number): number {
+  function nearest(m: Model, t: number, shown: number): number {
     const i = m.ring.lower(t);
     const near = i > 0 && (i >= m.ring.size || t - m.ring.t(i - 1) < m.ring.t(i) - t) ? i - 1 : i;
-    return near < m.ring.size && Math.abs(m.ring.t(near) - t) <= Math.max(gapSeconds, span / 200) ? near : -1;
+    return near < m.ring.size && Math.abs(m.ring.t(near) - t) <= Math.max(gapSeconds, shown / 200) ? near : -1;
   }
 
   return {
     el,
     update,
-    frozen: () => !Number.isNaN(frozenAt),
+    frozen: () => !Number.isNaN(frozenAt) || zoomed !== null,
     destroy() {
       observer.disconnect();
+      window.removeEventListener('pointerup', letGo);
+      pick.destroy();
       for (const r of rows) r.chart.destroy();
     },
   };
