@@ -11,6 +11,7 @@ import (
 	"os/signal"
 	"runtime"
 	"strings"
+	"syscall"
 
 	"github.com/spf13/pflag"
 
@@ -18,7 +19,7 @@ import (
 )
 
 func main() {
-	ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt)
+	ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM)
 	code := command(ctx, os.Args[1:], os.Stdout, os.Stderr)
 	stop()
 	os.Exit(code)
@@ -26,6 +27,13 @@ func main() {
 
 // command gives 0 when everything was measured, 1 when not, 2 when called wrongly.
 func command(ctx context.Context, args []string, stdout, stderr io.Writer) int {
+	if len(args) > 0 && args[0] == "part" {
+		if err := bench.Part(ctx, args[1:], stdout); err != nil {
+			_, _ = fmt.Fprintln(stderr, "bench:", err)
+			return 1
+		}
+		return 0
+	}
 	flags := pflag.NewFlagSet("bench", pflag.ContinueOnError)
 	flags.SetOutput(stderr)
 	var groups []string
@@ -33,10 +41,11 @@ func command(ctx context.Context, args []string, stdout, stderr io.Writer) int {
 		groups = append(groups, g.Name)
 	}
 	var (
-		rig   = flags.String("rig", "testdata/rigs/example.yaml", "rig file")
-		out   = flags.String("out", ".build/bench.json", "file for the figures")
-		quick = flags.Bool("quick", false, "one short pair each: that it works, not how fast")
-		only  = flags.String("only", "", "one group of figures: "+strings.Join(groups, ", "))
+		program = flags.String("program", ".build/throatwatch", "throatwatch, as it was built")
+		rig     = flags.String("rig", "testdata/rigs/example.yaml", "rig file")
+		out     = flags.String("out", ".build/bench.json", "file for the figures")
+		quick   = flags.Bool("quick", false, "one short pair each: that it works, not how fast")
+		only    = flags.String("only", "", "one group of figures: "+strings.Join(groups, ", "))
 	)
 	if err := flags.Parse(args); err != nil || flags.NArg() > 0 {
 		if err == nil {
@@ -44,7 +53,7 @@ func command(ctx context.Context, args []string, stdout, stderr io.Writer) int {
 		}
 		return 2
 	}
-	if err := measure(ctx, bench.Options{Rig: *rig, Quick: *quick, Only: *only}, *out, stdout, stderr); err != nil {
+	if err := measure(ctx, bench.Options{Rig: *rig, Program: *program, Quick: *quick, Only: *only}, *out, stdout, stderr); err != nil {
 		_, _ = fmt.Fprintln(stderr, "bench:", err)
 		return 1
 	}

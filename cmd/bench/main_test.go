@@ -19,6 +19,7 @@ func TestUsage(t *testing.T) {
 		want string
 	}{
 		{[]string{"example.yaml"}, 2, "no arguments"},
+		{[]string{"part", "publish"}, 1, "not called by bench"},
 		{[]string{"--only", "none", "--rig", rig}, 1, "no figures"},
 		{[]string{"--only", "rules", "--rig", "none.yaml"}, 1, "none.yaml"},
 	} {

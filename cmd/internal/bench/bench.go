@@ -31,10 +31,11 @@ type Figure struct {
 
 // Options say how long is measured and with what.
 type Options struct {
-	Rig   string // rig file, the example
-	Dir   string // scratch
-	Quick bool   // one short pair each: that it works, not how fast
-	Only  string // the group to be measured; "" = all
+	Rig     string // rig file, the example
+	Program string // throatwatch
+	Dir     string // scratch
+	Quick   bool   // one short pair each: that it works, not how fast
+	Only    string // the group to be measured; "" = all
 }
 
 // pairs gives how many pairs a figure is the median of.
@@ -62,10 +63,13 @@ type Group struct {
 // Groups gives all groups in the order of the table.
 func Groups() []Group {
 	return []Group{
+		{"intake", intake},
+		{"latency", latency},
 		{"stored", stored},
 		{"point", points},
 		{"critical", critical},
 		{"rules", hundredRules},
+		{"growth", growth},
 	}
 }
 

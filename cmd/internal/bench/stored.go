@@ -40,7 +40,7 @@ func stored(ctx context.Context, o *Options) ([]Figure, error) {
 	if o.Quick {
 		scenario = rehearsal.Quick
 	}
-	run, values, err := rehearse(ctx, filepath.Join(o.Dir, "stored"), bundle, cfg, scenario)
+	run, values, err := rehearse(ctx, filepath.Join(o.Dir, "stored"), bundle, cfg, scenario, rate)
 	if err != nil {
 		return nil, err
 	}
@@ -69,7 +69,7 @@ type recorded struct {
 }
 
 // rehearse puts a rehearsed test into a data folder and counts the values received.
-func rehearse(ctx context.Context, dir string, bundle config.Bundle, cfg pipeline.Config, scenario rehearsal.Scenario) (r recorded, values float64, err error) {
+func rehearse(ctx context.Context, dir string, bundle config.Bundle, cfg pipeline.Config, scenario rehearsal.Scenario, perSecond float64) (r recorded, values float64, err error) {
 	store, err := watch.OpenStore(ctx, dir, runfile.Options{}, slog.New(slog.DiscardHandler))
 	if err != nil {
 		return r, 0, err
@@ -84,7 +84,7 @@ func rehearse(ctx context.Context, dir string, bundle config.Bundle, cfg pipelin
 	if err != nil {
 		return r, 0, err
 	}
-	rig, err := rehearsal.New(cfg, rehearsal.Options{Seed: 1, Scenario: scenario, Rate: rate, Start: start})
+	rig, err := rehearsal.New(cfg, rehearsal.Options{Seed: 1, Scenario: scenario, Rate: perSecond, Start: start})
 	if err != nil {
 		return r, 0, err
 	}
@@ -123,7 +123,7 @@ func rehearse(ctx context.Context, dir string, bundle config.Bundle, cfg pipelin
 		return r, 0, err
 	}
 	r.size = info.Size()
-	return r, rig.Length().Seconds() * rate * float64(len(cfg.Compute.Channels)), nil
+	return r, rig.Length().Seconds() * perSecond * float64(len(cfg.Compute.Channels)), nil
 }
 
 // sizes compares the chunks with the same columns as Parquet, and the whole file with
