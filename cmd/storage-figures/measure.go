@@ -46,7 +46,9 @@ func measure(ctx context.Context, o options, tell func(string)) (list []figure, 
 		defer func() { err = errors.Join(err, os.RemoveAll(o.dir)) }()
 	}
 	runsList := filepath.Join(o.dir, "catalog.db")
-	if _, err := os.Stat(runsList); err != nil {
+	_, err = os.Stat(runsList)
+	fresh := err != nil
+	if fresh {
 		tell(fmt.Sprintf("recording %v of %d channels at %g/s", o.length, o.channels, o.rate))
 		if err := record(ctx, o); err != nil {
 			return nil, err
@@ -77,7 +79,7 @@ func measure(ctx context.Context, o options, tell func(string)) (list []figure, 
 	if err != nil {
 		return nil, err
 	}
-	if again.digest != run.Digest && run.Build == watch.Build() {
+	if fresh && again.digest != run.Digest { // an earlier one may be of another build
 		return nil, fmt.Errorf("the replay gives the digest %.12s, the recording gave %.12s", again.digest, run.Digest)
 	}
 	length := float64(run.Ended-run.Started) / 1e9

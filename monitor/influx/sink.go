@@ -13,7 +13,7 @@ import (
 )
 
 const (
-	defaultLines   = 2000             // lines in a request
+	defaultLines   = 2000             // lines in a request; see BenchmarkBatch
 	mostLines      = 5000             // … at most
 	defaultTimeout = 30 * time.Second // of a request
 	pollEvery      = time.Second      // while there is nothing to write
