@@ -9,7 +9,7 @@ import { muteTimes } from './mute';
 import type { Settings } from './settings';
 import type { Sound } from './sound';
 import { type Model, activeRun, dataAge, hostNow, runSeconds } from './state';
-import { clock, duration, seconds, zoneClock } from './time';
+import { duration, seconds, signedClock } from './time';
 import { type System, age } from './units';
 import { troubleText, veilText } from './watch/display';
 
@@ -121,14 +121,13 @@ export function header(p: HeaderParts): View & { route(name: string): void } {
       style(tick.firstElementChild as HTMLElement, 'left', `${(m.ticks % 10) * 10}%`);
       text(ageText, gone ? 'no data' : `data age ${age(dataAge(m, now))}`);
       attr(ageText.parentElement as HTMLElement, 'data-bad', f.kind !== 'live' || !((f.age ?? Infinity) < 1));
-      const local = zoneClock(hostNow(m, now), m.rig?.time_zone);
-      text(time, gone ? '–' : `${local ? `${local} · ` : ''}${clock(hostNow(m, now))} UTC`);
+      text(time, gone ? '–' : signedClock(hostNow(m, now)));
       const s = m.status;
       const bad: string[] = [];
       if (gone) bad.push(gone);
       const trouble = troubleText(f);
       if (trouble) bad.push(trouble);
-      if (s && !s.recording) bad.push(`NOT RECORDING${s.not_recording_since ? ` since ${clock(seconds(s.not_recording_since))} UTC` : ''}`);
+      if (s && !s.recording) bad.push(`NOT RECORDING${s.not_recording_since ? ` since ${signedClock(seconds(s.not_recording_since))}` : ''}`);
       if (s && !s.input_path) bad.push('input path deaf');
       if (s && !s.clock) bad.push('clock not steady');
       const silent = (s?.sources ?? []).filter((x) => !x.alive).length;

@@ -23,7 +23,7 @@ import { Settings, browserKeeper } from './settings';
 import { Sound } from './sound';
 import { activeRun, apply, freshness, hostNow, newModel, recall } from './state';
 import './style.css';
-import { seconds } from './time';
+import { facility, seconds } from './time';
 import { type UnitSet, unitSets } from './units';
 import { watchDisplay } from './watch/display';
 import { columnsOf } from './watch/plots';
@@ -95,6 +95,7 @@ async function firstRigs(): Promise<RigInfo[]> {
 }
 
 function run(rig: RigInfo, rigs: RigInfo[], session: Session): void {
+  facility.set(rig.time_zone, Date.now() / 1000);
   const sound = new Sound();
   const settings = new Settings(browserKeeper());
   const model = newModel(false, columnsOf(settings.plots));

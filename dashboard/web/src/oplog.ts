@@ -1,7 +1,7 @@
 // The operator log in words: who did what, when and why.
 
 import type { LogEntry } from './frames';
-import { clock, dateClock, seconds } from './time';
+import { clock, dateClock, day, seconds, signedClock } from './time';
 
 const deeds: Record<string, string> = {
   acknowledge: 'acknowledged', reset: 'reset', shelve: 'shelved', unshelve: 'taken from the shelf', out_of_service: 'out of service', in_service: 'back in service',
@@ -19,7 +19,7 @@ export function subject(e: LogEntry): string {
   if (e.name) parts.push(e.name);
   if (typeof e.value === 'number') parts.push(`${String(Number(e.value.toPrecision(9))).replace('-', '−')}${e.unit ? ` ${e.unit}` : ''}`);
   if (e.serial) parts.push(`serial ${e.serial}`);
-  if (e.valid_from) parts.push(`from ${clock(seconds(e.valid_from))} UTC`);
+  if (e.valid_from) parts.push(`from ${signedClock(seconds(e.valid_from))}`);
   const said = parts.join(' ');
   return e.text ? (said ? `${said}: ${e.text}` : e.text) : said;
 }
@@ -41,5 +41,5 @@ export function enter(log: LogEntry[], e: LogEntry, most: number): void {
 /** The time of an entry; with its day when that is not the day of `now`, both s. */
 export function entryTime(e: LogEntry, now: number): string {
   const t = seconds(e.t ?? null);
-  return Math.floor(t / 86_400) === Math.floor(now / 86_400) ? clock(t) : dateClock(t);
+  return day(t) === day(now) ? clock(t) : dateClock(t);
 }

@@ -18,29 +18,71 @@ export function rfc3339(s: number): string {
 
 const two = (n: number): string => String(n).padStart(2, '0');
 
-/** hh:mm:ss UTC; "–" for no time. */
-export function clock(s: number): string {
-  if (!Number.isFinite(s)) return '–';
-  const d = new Date(s * 1000);
+/** The zone of the facility, in which people are told times; UTC until it is set. */
+class Facility {
+  private format: Intl.DateTimeFormat | null = null; // null is UTC
+  private slot = NaN; // the quarter of an hour that `east` holds for: no offset changes within one
+  private east = 0;
+  private home = 0; // the offset when the zone was set
+
+  /** Sets the zone, a name of the IANA database; the offset at `now`, s, is that of the heads of tables. */
+  set(zone: string | undefined, now: number): void {
+    this.format = null;
+    if (zone && !/^(Etc\/)?UTC$/.test(zone)) {
+      try {
+        this.format = new Intl.DateTimeFormat('en-GB', { timeZone: zone, timeZoneName: 'longOffset' });
+      } catch { /* a zone that this browser does not know: UTC, which is written beside each time */ }
+    }
+    this.slot = NaN;
+    this.home = this.offset(now);
+  }
+
+  /** Seconds east of UTC at s. */
+  offset(s: number): number {
+    const slot = Math.floor(s / 900);
+    if (this.format === null || !Number.isFinite(s)) return 0;
+    if (slot === this.slot) return this.east;
+    const name = this.format.formatToParts(s * 1000).find((p) => p.type === 'timeZoneName')?.value ?? '';
+    const [, sign, hours = '0', minutes = '0'] = /([+-])(\d\d):(\d\d)/.exec(name) ?? [];
+    [this.slot, this.east] = [slot, (sign === '-' ? -1 : 1) * (Number(hours) * 3600 + Number(minutes) * 60)];
+    return this.east;
+  }
+
+  /** The offset as it is written: UTC, +01:00. */
+  sign(east = this.home): string {
+    if (this.format === null) return 'UTC';
+    const minutes = Math.abs(Math.round(east / 60));
+    return `${east < 0 ? '−' : '+'}${two(Math.floor(minutes / 60))}:${two(minutes % 60)}`;
+  }
+
+  /** Whether the offset at s is another than that of the heads. */
+  away(s: number): boolean { return this.offset(s) !== this.home; }
+}
+export const facility = new Facility();
+
+function plainClock(s: number): string {
+  const d = new Date((s + facility.offset(s)) * 1000);
   return `${two(d.getUTCHours())}:${two(d.getUTCMinutes())}:${two(d.getUTCSeconds())}`;
 }
 
-/** yyyy-mm-dd hh:mm:ss UTC. */
-export function dateClock(s: number): string {
-  return Number.isFinite(s) ? `${new Date(s * 1000).toISOString().slice(0, 10)} ${clock(s)}` : '–';
+/** hh:mm:ss of the facility, under a head that tells the offset; where it is another one at that time, with it. "–" for no time. */
+export function clock(s: number): string {
+  if (!Number.isFinite(s)) return '–';
+  return facility.away(s) ? signedClock(s) : plainClock(s);
 }
 
-/** hh:mm:ss with the offset in a time zone of the IANA database, as 10:00:00 +01:00; "" where it is UTC or not known. */
-export function zoneClock(s: number, zone: string | undefined): string {
-  if (!zone || zone === 'UTC' || zone === 'Etc/UTC' || !Number.isFinite(s)) return '';
-  try {
-    const parts = new Intl.DateTimeFormat('en-GB', { timeZone: zone, hour: '2-digit', minute: '2-digit', second: '2-digit', hourCycle: 'h23', timeZoneName: 'longOffset' }).formatToParts(s * 1000);
-    const part = (type: string): string => parts.find((p) => p.type === type)?.value ?? '';
-    return `${part('hour')}:${part('minute')}:${part('second')} ${part('timeZoneName').replace('GMT', '') || '+00:00'}`;
-  } catch {
-    return '';
-  }
+/** hh:mm:ss of the facility with the offset. */
+export function signedClock(s: number): string {
+  return Number.isFinite(s) ? `${plainClock(s)} ${facility.sign(facility.offset(s))}` : '–';
 }
+
+/** yyyy-mm-dd hh:mm:ss of the facility with the offset. */
+export function dateClock(s: number): string {
+  return Number.isFinite(s) ? `${new Date((s + facility.offset(s)) * 1000).toISOString().slice(0, 10)} ${signedClock(s)}` : '–';
+}
+
+/** The day of the facility, counted. */
+export const day = (s: number): number => Math.floor((s + facility.offset(s)) / 86_400);
 
 /** A duration as h:mm:ss, without sign below zero. */
 export function duration(s: number): string {

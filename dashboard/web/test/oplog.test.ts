@@ -31,5 +31,5 @@ test('entries stand by time, each once, the newest kept', () => {
 test('the time of an entry names the day when it is another', () => {
   const e: LogEntry = { what: 'mark', t: rfc3339(t0) };
   assert.equal(entryTime(e, t0 + 60), '09:00:00');
-  assert.equal(entryTime(e, t0 + 86_400), '2026-12-01 09:00:00');
+  assert.equal(entryTime(e, t0 + 86_400), '2026-12-01 09:00:00 UTC');
 });

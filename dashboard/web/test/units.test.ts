@@ -1,6 +1,6 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
-import { clock, duration, rfc3339, seconds, zoneClock } from '../src/time';
+import { clock, dateClock, day, duration, facility, rfc3339, seconds, signedClock } from '../src/time';
 import { Settings } from '../src/settings';
 import { type Scale, age, alarmValue, bytes, celsius, fixed, inUnit, plain, shown, signed, significant, unitSets, width } from '../src/units';
 import { causeWord, stateLook, uncertainty } from '../src/words';
@@ -162,11 +162,21 @@ test('uncertainty is a half width, an interval, or nothing', () => {
 });
 
 // Zurich is UTC + 1 in winter and + 2 in summer from 2026-03-29 01:00 UTC, Kolkata + 5:30 all year [IANA tz database].
-test('the facility clock has the offset of its zone', () => {
-  const at = (t: string): number => Date.parse(t) / 1000;
-  assert.equal(zoneClock(at('2026-03-02T09:00:05Z'), 'Europe/Zurich'), '10:00:05 +01:00');
-  assert.equal(zoneClock(at('2026-03-29T01:00:00Z'), 'Europe/Zurich'), '03:00:00 +02:00');
-  assert.equal(zoneClock(at('2026-03-02T18:45:00Z'), 'Asia/Kolkata'), '00:15:00 +05:30');
-  for (const zone of ['', undefined, 'UTC', 'Etc/UTC', 'No/Where']) assert.equal(zoneClock(at('2026-03-02T09:00:00Z'), zone), '');
-  assert.equal(zoneClock(NaN, 'Europe/Zurich'), '');
+test('times are those of the facility, with its offset', () => {
+  const at = (s: string): number => Date.parse(s) / 1000;
+  facility.set('Europe/Zurich', at('2026-03-02T09:00:00Z'));
+  assert.equal(facility.sign(), '+01:00');
+  assert.equal(clock(at('2026-03-02T09:00:05Z')), '10:00:05');
+  assert.equal(clock(at('2026-03-29T01:00:00Z')), '03:00:00 +02:00', 'another offset than that of the head');
+  assert.equal(signedClock(at('2026-03-02T09:00:05Z')), '10:00:05 +01:00');
+  assert.equal(dateClock(at('2026-03-02T23:30:00Z')), '2026-03-03 00:30:00 +01:00');
+  assert.notEqual(day(at('2026-03-02T22:30:00Z')), day(at('2026-03-02T23:30:00Z')));
+  facility.set('Asia/Kolkata', 0);
+  assert.equal(signedClock(at('2026-03-02T18:45:00Z')), '00:15:00 +05:30');
+  facility.set('America/St_Johns', at('2026-01-01T00:00:00Z'));
+  assert.equal(signedClock(at('2026-01-01T00:00:00Z')), '20:30:00 −03:30');
+  for (const zone of [undefined, '', 'UTC', 'Etc/UTC', 'No/Where']) {
+    facility.set(zone, 0);
+    assert.deepEqual([facility.sign(), clock(at('2026-03-02T09:00:00Z')), dateClock(NaN)], ['UTC', '09:00:00', '–']);
+  }
 });

@@ -7,7 +7,7 @@ import { type Display, gate } from '../context';
 import { type View, column, h, refill, text } from '../dom';
 import type { Alarm } from '../frames';
 import { activeRun } from '../state';
-import { clock, seconds } from '../time';
+import { clock, facility, seconds } from '../time';
 import { alarmValue } from '../units';
 import { veil } from '../watch/display';
 import { figuresView } from './figures';
@@ -50,11 +50,11 @@ export function alarmsPage(d: Display): View {
   const figures = figuresView(() => (activeRun(d.model()) ? { run: null, live: true } : d.model().run ? { run: d.model().run?.id ?? null, live: false } : null));
   const cover = veil(h('div', { class: 'page' },
     h('h1', {}, 'Alarms'),
-    h('section', {}, h('h2', {}, 'Standing'), h('table', { class: 'list alarms' }, head('Priority', 'State', '>Raised, UTC', 'Alarm and caution', 'Response', '>Value', 'Action'), now_), unknown),
+    h('section', {}, h('h2', {}, 'Standing'), h('table', { class: 'list alarms' }, head('Priority', 'State', `>Raised, ${facility.sign()}`, 'Alarm and caution', 'Response', '>Value', 'Action'), now_), unknown),
     h('section', {}, h('h2', {}, 'Not annunciated: shelved, suppressed by design, out of service'), h('table', { class: 'list aside' }, head('Priority', 'State', '>Until', 'Alarm', 'Reason', 'Action'), quiet)),
     h('div', { class: 'columns' },
       h('section', {}, h('h2', {}, 'History of this run, newest first'), h('div', { class: 'filter', role: 'search' }, priority, words, matches),
-        h('table', { class: 'list past' }, head('>Time, UTC', 'Priority', 'Alarm', 'From', 'To', 'Note'), past)),
+        h('table', { class: 'list past' }, head(`>Time, ${facility.sign()}`, 'Priority', 'Alarm', 'From', 'To', 'Note'), past)),
       h('section', {}, h('h2', {}, 'Alarm figures of this run'), figures.el))));
 
   function button(a: Alarm, step: Step, cls: string): HTMLElement {

@@ -8,7 +8,7 @@ import { type View, attr, column, h, refill, text } from '../dom';
 import type { Channel, ChannelValue } from '../frames';
 import { sparkSpan } from '../spark';
 import { believable, hostNow } from '../state';
-import { dateClock, rfc3339 } from '../time';
+import { rfc3339 } from '../time';
 import { age, inUnit, plain, significant } from '../units';
 import { findingText } from '../words';
 
@@ -58,7 +58,7 @@ const typed = (s: string): number => Date.parse(`${s.trim().replace(' ', 'T')}Z`
 function swap(d: Display, c: Channel): void {
   const fields: Field[] = [
     { name: 'serial', label: 'Serial number of the new sensor' },
-    { name: 'from', label: 'Valid from, UTC', value: dateClock(hostNow(d.model(), performance.now())), pattern: '\\d{4}-\\d\\d-\\d\\d \\d\\d:\\d\\d:\\d\\d' },
+    { name: 'from', label: 'Valid from, UTC', value: rfc3339(hostNow(d.model(), performance.now())).slice(0, 19).replace('T', ' '), pattern: '\\d{4}-\\d\\d-\\d\\d \\d\\d:\\d\\d:\\d\\d' },
     { name: 'reason', label: 'Reason' },
   ];
   askForm(`A sensor of ${c.id} (${c.title}) was swapped.`, fields, 'Enter the swap', async (v) => {

@@ -19,7 +19,7 @@ const points = 1200;
 const plotHeight = 130;
 
 const isCurves = (r: ScansCompared | CurvesCompared): r is CurvesCompared => 'curves' in r;
-const table = (q: string, columns: string[], rows: Node[], none: string): HTMLElement => h('div', { class: 'scroll', tabindex: '0', role: 'region', 'aria-label': none }, h('table', { class: 'list', 'data-q': q },
+const table = (q: string, columns: string[], rows: Node[], none: string): HTMLElement => h('div', { class: 'scroll', tabindex: '0', role: 'region', 'aria-label': q.replace('-', ' ') }, h('table', { class: 'list', 'data-q': q },
   h('thead', {}, h('tr', {}, ...columns.map(column))), h('tbody', {}, ...(rows.length > 0 ? rows : [h('tr', {}, h('td', { colspan: String(columns.length), class: 'extra' }, none))]))));
 const num = (words: string): HTMLElement => h('td', { class: 'num' }, words);
 const times = (t: Num): string => (t === null ? '–' : duration(t));
@@ -207,7 +207,7 @@ export function comparePage(d: Display, a: string, b: string): View {
           num(pair(y, bin.departure, bin.departure_u95, signed, y.span)), h('td', {}, y.sign), h('td', {}, bin.beyond ? '◆ beyond its uncertainty' : '')));
       }), 'The new run has no scan within the range of the old'),
       h('h2', {}, 'From run to run'),
-      table('drift', ['Run', 'Started', '>Effective area', '>Drift, %', '>EGT margin'], r.runs.map((x) => h('tr', {}, h('th', { scope: 'row' }, x.run), h('td', {}, `${dateClock(seconds(x.started))} UTC`),
+      table('drift', ['Run', 'Started', '>Effective area', '>Drift, %', '>EGT margin'], r.runs.map((x) => h('tr', {}, h('th', { scope: 'row' }, x.run), h('td', {}, `${dateClock(seconds(x.started))}`),
         num(`${pair(u.area, x.effective_area_m2, x.effective_area_m2_u95, fixed, u.area.of)} ${u.area.sign}`), num(x.area_drift_percent_u95 === null ? signed(x.area_drift_percent, 3) : pair(scaleOf(u, '%', ''), x.area_drift_percent, x.area_drift_percent_u95, signed, (v) => v)),
         num(x.egt_margin_k === null ? '–' : `${fixed(u.difference.of(x.egt_margin_k), 1)} ${u.difference.sign}`))), 'Not known'),
     ];

@@ -4,7 +4,7 @@ import { api } from '../api';
 import { type View, column, h, refill, text } from '../dom';
 import { figureLines } from '../figures';
 import type { AlarmFigures } from '../frames';
-import { clock, duration, seconds } from '../time';
+import { duration, seconds, signedClock } from '../time';
 
 /** How often the figures of a run that is on are asked for, ms. */
 const every = 5000;
@@ -39,7 +39,7 @@ export function figuresView(which: () => Which | null): View {
       refill(body, JSON.stringify(f), () => (f ? figureLines(f) : []).map((l) => h('tr', {},
         h('th', { scope: 'row' }, l.name), h('td', { class: 'num' }, l.value), h('td', { class: 'num', title: l.source || null }, l.target),
         h('td', {}, l.target === '' || l.met === null ? '' : l.met ? 'met' : '◇ not met'))));
-      text(about, !w ? 'No run is on.' : f ? `${duration(f.seconds)} from ${clock(seconds(f.from))} UTC.${f.graded ? '' : ` Not graded: ${f.why_not ?? 'too short'}.`}` : why);
+      text(about, !w ? 'No run is on.' : f ? `${duration(f.seconds)} from ${signedClock(seconds(f.from))}.${f.graded ? '' : ` Not graded: ${f.why_not ?? 'too short'}.`}` : why);
       const from = [...new Set((f?.targets ?? []).map((t) => t.source.split(': ')[0]))];
       refill(sources, from.join(), () => (from.length === 0 ? [] : [h('div', {}, `Targets: ${from.join('; ')}.`)]));
     },

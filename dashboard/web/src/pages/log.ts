@@ -9,6 +9,7 @@ import { actor, deedWord, enter, entryTime, subject } from '../oplog';
 import type { Deed } from '../session';
 import { activeRun, hostNow } from '../state';
 import { veil } from '../watch/display';
+import { facility } from '../time';
 
 /** The most entries shown. */
 const most = 500;
@@ -17,7 +18,7 @@ const most = 500;
 export function logTable(): { el: HTMLElement; show(entries: readonly LogEntry[], now: number): void } {
   const body = h('tbody');
   return {
-    el: h('table', { class: 'list log', 'data-q': 'log' }, h('thead', {}, h('tr', {}, ...['>Time, UTC', 'What', 'About', 'By', 'Reason'].map(column))), body),
+    el: h('table', { class: 'list log', 'data-q': 'log' }, h('thead', {}, h('tr', {}, ...[`>Time, ${facility.sign()}`, 'What', 'About', 'By', 'Reason'].map(column))), body),
     show(entries, now) {
       const last = entries[entries.length - 1];
       refill(body, `${entries.length}:${last?.t}:${last?.what}`, () => (last

@@ -4,7 +4,7 @@ import { api } from '../api';
 import { type View, attr, column, h, refill, text } from '../dom';
 import type { QuantityInfo, TestPoint, TestPoints } from '../frames';
 import { brief, headline, shownValue } from '../points';
-import { clock, duration, seconds } from '../time';
+import { clock, duration, facility, seconds } from '../time';
 import { type UnitSet, fixed } from '../units';
 
 /** Columns of the list. */
@@ -63,7 +63,7 @@ export function pointsView(run: string, units: () => UnitSet, quantities: () => 
     el,
     update() {
       const u = units();
-      refill(head, `${u.system}${reply?.run ?? ''}`, () => ['Point', '>From, UTC', '>Length', '>Steady', ...headline.map(([name, word]) => {
+      refill(head, `${u.system}${reply?.run ?? ''}`, () => ['Point', `>From, ${facility.sign()}`, '>Length', '>Steady', ...headline.map(([name, word]) => {
         const v = reply?.points.flatMap((p) => p.values).find((x) => x.name === name);
         const sign = v ? shownValue(v, u).sign : '';
         return `>${word}${sign ? `, ${sign}` : ''}`;

@@ -5,7 +5,7 @@ import { api } from '../api';
 import { type View, column, h, refill, text } from '../dom';
 import { degrees, exceedanceWord } from '../exceedance';
 import type { ExceedanceReply, Life, LogEntry, QuantityInfo } from '../frames';
-import { clock, seconds } from '../time';
+import { clock, facility, seconds } from '../time';
 import { type UnitSet, fixed } from '../units';
 import { figuresView } from './figures';
 import { filesView } from './files';
@@ -47,8 +47,8 @@ export function lifeView(): { el: HTMLElement; show(l: Life | null, u: UnitSet):
 export function recordView(run: string, live: () => boolean, units: () => UnitSet, quantities: () => readonly QuantityInfo[]): View {
   const files = filesView(run);
   const points = pointsView(run, units, quantities);
-  const exceedances = table('exceedances', 'Band', '>Limit', '>Began, UTC', '>Ended', '>Time above', '>of it assumed', '>Peak', 'Allowance', 'Time above other bands');
-  const events = table('', '>Time, UTC', 'Engine', '>EGT', '>Speed', '>Rundown');
+  const exceedances = table('exceedances', 'Band', '>Limit', `>Began, ${facility.sign()}`, '>Ended', '>Time above', '>of it assumed', '>Peak', 'Allowance', 'Time above other bands');
+  const events = table('', `>Time, ${facility.sign()}`, 'Engine', '>EGT', '>Speed', '>Rundown');
   const life = lifeView();
   const log = logTable();
   const figures = figuresView(() => ({ run, live: live() }));

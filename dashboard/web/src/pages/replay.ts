@@ -10,7 +10,7 @@ import { Player, speeds } from '../player';
 import { type Period, periods } from '../ring';
 import { openSession } from '../session';
 import type { Flag } from '../state';
-import { dateClock, duration, seconds, zoneClock } from '../time';
+import { dateClock, duration, seconds } from '../time';
 import { recordView } from './record';
 import { font, surface } from '../watch/canvas';
 import { watchDisplay } from '../watch/display';
@@ -183,8 +183,7 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
       const phase = phases.find((k) => at >= k.from && at < k.to)?.word ?? '';
       attr(scrub, 'aria-valuetext', `${duration(at)} of ${duration(player.length)}${phase && `, ${phase}`}`);
       text(play, player.playing ? 'Pause' : 'Play');
-      const local = zoneClock(start + at, player.model.rig?.time_zone);
-      text(clockText, `${duration(at)} of ${duration(player.length)} · ${dateClock(start + at)} UTC${local && ` · ${local}`}`);
+      text(clockText, `${duration(at)} of ${duration(player.length)} · ${dateClock(start + at)}`);
       text(trouble, player.problem ? `Stopped: ${player.problem}` : player.playing && player.waiting ? 'reading…' : '');
       paintBar(player.length);
       if (shown === 'Display') inner.update(time); else record?.update(time);

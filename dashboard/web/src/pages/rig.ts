@@ -83,9 +83,9 @@ export function rigPage(d: Display): View {
         ['Limits', m.rig?.limits_version || '–'],
         ['Files, hash', m.configHash.slice(0, 16) || '–'],
         ...(config ? [
-          ['Changed by', config.by ? `${config.by}${config.since ? `, in force since ${dateClock(seconds(config.since))} UTC` : ''}` : 'not stated'],
+          ['Changed by', config.by ? `${config.by}${config.since ? `, in force since ${dateClock(seconds(config.since))}` : ''}` : 'not stated'],
           ['Approved by', config.approved_by || 'not approved'],
-          ...(config.refused ? [['Refused', `▲ a change at ${dateClock(seconds(config.refused.t))} UTC: ${config.refused.why}`]] : []),
+          ...(config.refused ? [['Refused', `▲ a change at ${dateClock(seconds(config.refused.t))}: ${config.refused.why}`]] : []),
         ] as [string, string][] : []),
         ['Program build', m.build || '–'],
         ['Scan rate', `${fixed(m.scanRate, 0)} scans/s`],

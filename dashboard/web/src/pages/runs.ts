@@ -24,7 +24,7 @@ export function runsPage(d: Display): View {
   const trouble = h('p', { class: 'trouble', role: 'status' });
   const find = h('input', { type: 'search', placeholder: 'find by any word (key /)', 'aria-label': 'Find a run', 'aria-keyshortcuts': '/', maxlength: '200', 'data-q': 'find', oninput: () => { askedAt = -Infinity; } });
   const el = h('div', { class: 'page' }, h('h1', {}, 'Runs'), h('div', { class: 'filter' }, h('div', { role: 'search' }, find), compare), trouble,
-    h('table', { class: 'list runs' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started, UTC', 'By', '>Duration', '>Alarms', 'State', '>Size', 'Notes and tags', 'Actions'].map(column))), body));
+    h('table', { class: 'list runs' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started', 'By', '>Duration', '>Alarms', 'State', '>Size', 'Notes and tags', 'Actions'].map(column))), body));
   let askedAt = -Infinity;
   let key = '';
   let growing: { cell: HTMLElement; since: number }[] = [];
@@ -71,7 +71,7 @@ export function runsPage(d: Display): View {
   }
 
   function remove(r: RunSummary): void {
-    askForm(`Delete run ${r.number} (${r.id}) of ${dateClock(seconds(r.started))} UTC with its file? It cannot be brought back. Type its number to confirm.`, [
+    askForm(`Delete run ${r.number} (${r.id}) of ${dateClock(seconds(r.started))} with its file? It cannot be brought back. Type its number to confirm.`, [
       { name: 'number', label: 'Number of the run', kind: 'number' }, { name: 'reason', label: 'Reason' },
     ], 'Delete the run', async (v) => {
       if (Number(v['number']) !== r.number) throw new Error(`the number of this run is ${r.number}`);

@@ -3,7 +3,7 @@
 import type { Display } from '../context';
 import { type View, attr, h, text } from '../dom';
 import type { Freshness } from '../state';
-import { clock } from '../time';
+import { signedClock } from '../time';
 import { age } from '../units';
 import { alarmLine } from './alarmline';
 import { ledger } from './ledger';
@@ -15,7 +15,7 @@ import { traces } from './traces';
 export function veilText(f: Freshness): string {
   switch (f.kind) {
     case 'waiting': return 'WAITING FOR DATA LINK';
-    case 'no_link': return `NO DATA LINK since ${clock(f.since)} UTC`;
+    case 'no_link': return `NO DATA LINK since ${signedClock(f.since)}`;
     default: return '';
   }
 }

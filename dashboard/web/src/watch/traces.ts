@@ -9,7 +9,7 @@ import { type View, attr, h, text } from '../dom';
 import { type Flag, type Model, believable } from '../state';
 import type { Palette } from '../palette';
 import { chokedSpans, decimate, gapSeconds } from '../ring';
-import { clock } from '../time';
+import { clock, facility, signedClock } from '../time';
 import { type UnitSet, age, fixed } from '../units';
 import { font } from './canvas';
 import { picker } from './picker';
@@ -236,7 +236,7 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
         text(r.values[i] as HTMLElement, Number.isNaN(v) ? '–' : l.show(r.plot.convert(v)));
       });
     }
-    text(at, cursor !== null && atRow >= 0 ? `at ${clock(m.ring.t(atRow))} UTC` : zoomed ? `ZOOMED to ${age(end - start)}` : isFrozen ? `FROZEN at ${clock(frozenAt)} UTC` : 'UTC; shaded: choked');
+    text(at, cursor !== null && atRow >= 0 ? `at ${signedClock(m.ring.t(atRow))}` : zoomed ? `ZOOMED to ${age(end - start)}` : isFrozen ? `FROZEN at ${signedClock(frozenAt)}` : `${facility.sign()}; shaded: choked`);
     attr(at, 'data-frozen', isFrozen || zoomed !== null);
   }
 
