@@ -570,7 +570,7 @@ try {
     await until('back without a reload', async () => (await live.locator('.veiled[data-veiled]').count()) === 0);
     await until('a margin', async () => /\d/.test(await words('margin')));
     away = false;
-    assert.ok(took < 3500, `after ${took} ms`);
+    assert.ok(took < 3000, `after ${took} ms`);
   });
 
   page = live;
