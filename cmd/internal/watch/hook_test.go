@@ -24,7 +24,7 @@ import (
 	"throatwatch/cmd/internal/watch"
 	"throatwatch/dashboard"
 	"throatwatch/dashboard/webhook"
-	"throatwatch/ingest"
+	"throatwatch/ingest/mqtt"
 	"throatwatch/ingest/runfile"
 	"throatwatch/monitor/influx"
 	"throatwatch/rules"
@@ -391,7 +391,9 @@ func TestNothingAboutAnAlarmWaits(t *testing.T) {
 	}()
 	go func() { // readings, as they come; ends with ctx
 		for tick := time.NewTicker(50 * time.Millisecond); ctx.Err() == nil; <-tick.C {
-			if d.loop.Put(ctx, watch.Input{Kind: ingest.KindTick}) != nil {
+			now := time.Now()
+			text := fmt.Appendf(nil, `{"t":%d.%06d,"v":1.5,"u":"bar"}`, now.Unix(), now.Nanosecond()/1000)
+			if d.loop.PutMessage(ctx, mqtt.Message{Topic: "plant/north/bench/PT-101", Payload: text}) != nil {
 				return
 			}
 		}

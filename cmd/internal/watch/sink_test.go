@@ -648,7 +648,7 @@ func TestOutcomesPassDamage(t *testing.T) {
 	}
 	file, err := os.ReadFile(paths[0])
 	r.must(err)
-	at := bytes.Index(file[len(file)/2:], []byte("twa\x01")) // the head of a chunk, see archive
+	at := bytes.Index(file[len(file)/2:], []byte("twa\x02")) // the head of a chunk, see archive
 	if at < 0 {
 		t.Fatal("no chunk found")
 	}
