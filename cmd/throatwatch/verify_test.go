@@ -68,7 +68,7 @@ func TestVerify(t *testing.T) {
 	}{
 		{"a byte of a chunk", func() {
 			content := bytes.Clone(whole)
-			i := bytes.LastIndex(content, []byte("twa\x01")) // begin of a chunk, as the archive's format says
+			i := bytes.LastIndex(content, []byte("twa\x02")) // begin of a chunk, as the archive's format says
 			content[i+20] ^= 4
 			write(content)
 		}, digestNotStepped, "chunks row "},
