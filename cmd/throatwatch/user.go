@@ -10,7 +10,6 @@ import (
 	"io/fs"
 	"os"
 	"strings"
-	"syscall"
 
 	"github.com/spf13/pflag"
 	"golang.org/x/term"
@@ -197,8 +196,8 @@ func readUsers(path string) (*access.Users, error) {
 	if err != nil {
 		return nil, fmt.Errorf("users file: %w", err)
 	}
-	if mode := info.Mode().Perm(); mode&0o027 != 0 {
-		return nil, fmt.Errorf("users file %s: its mode %04o lets others read or change it: chmod 600 (or 640)", path, mode)
+	if err := closedToOthers(info); err != nil {
+		return nil, fmt.Errorf("users file %s: %w", path, err)
 	}
 	text, err := os.ReadFile(path)
 	if err != nil {
@@ -221,9 +220,7 @@ func writeUsers(path string, users *access.Users) error {
 	owner, group := -1, -1
 	if info, err := os.Stat(path); err == nil {
 		mode = info.Mode().Perm()
-		if st, ok := info.Sys().(*syscall.Stat_t); ok {
-			owner, group = int(st.Uid), int(st.Gid)
-		}
+		owner, group = ownerOf(info)
 	}
 	temp := path + ".new"
 	if err := os.Remove(temp); err != nil && !errors.Is(err, fs.ErrNotExist) {

@@ -3,7 +3,6 @@ package watch
 import (
 	"fmt"
 	"math"
-	"syscall"
 	"time"
 )
 
@@ -54,13 +53,4 @@ func (d *Disk) See(free float64, at time.Time) (low bool, what string) {
 		what += fmt.Sprintf(", enough for about %.1f h as it fills now", hours)
 	}
 	return d.low, what
-}
-
-// FreeSpace gives the bytes that this user may still write to the disk of a path.
-func FreeSpace(path string) (float64, error) {
-	var st syscall.Statfs_t
-	if err := syscall.Statfs(path, &st); err != nil {
-		return 0, fmt.Errorf("free space of %s: %w", path, err)
-	}
-	return float64(st.Bavail) * float64(st.Bsize), nil
 }

@@ -9,7 +9,6 @@ import (
 	"runtime/debug"
 	"strconv"
 	"strings"
-	"syscall"
 
 	"throatwatch/cmd/internal/config"
 	"throatwatch/rules/pipeline"
@@ -63,7 +62,7 @@ func Lock(dir string) (unlock func(), err error) {
 	if err != nil {
 		return nil, fmt.Errorf("data folder: %w", err)
 	}
-	if err := syscall.Flock(int(f.Fd()), syscall.LOCK_EX|syscall.LOCK_NB); err != nil {
+	if err := hold(f); err != nil {
 		return nil, errors.Join(fmt.Errorf("%s: %w: give another one by --data, or stop that process", dir, ErrLocked), f.Close())
 	}
 	return func() { _ = f.Close() }, nil
