@@ -33,14 +33,13 @@ const (
 func rehearseCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
 	flags := newFlags("rehearse RIG.yaml", "A simulated engine on the rig of the rig file publishes a whole test.", stderr)
 	var (
-		play      = newRehearseFlags(flags)
-		brokerURL = flags.String("broker", rehearseBroker, "broker to publish to, mqtt://host:port or mqtts://host:port")
-		user      = flags.String("broker-user", "", "user name at the broker")
-		secret    = flags.String("broker-password-file", "", "file with the password at the broker")
-		length    = flags.Duration("for", 0, "stop after this time (default: at the end of the test)")
-		into      = flags.String("into", "", "play into the run files of this data folder instead, without waiting")
-		start     = flags.String("start", "", "with --into: device time of the first reading, as 2026-03-02T09:00:00Z (default: so that the test ends now)")
+		play   = newRehearseFlags(flags)
+		site   brokerOptions
+		length = flags.Duration("for", 0, "stop after this time (default: at the end of the test)")
+		into   = flags.String("into", "", "play into the run files of this data folder instead, without waiting")
+		start  = flags.String("start", "", "with --into: device time of the first reading, as 2026-03-02T09:00:00Z (default: so that the test ends now)")
 	)
+	site.flags(flags, rehearseBroker, "broker to publish to, mqtt://host:port or mqtts://host:port")
 	usage := flags.Usage
 	flags.Usage = func() {
 		usage()
@@ -67,6 +66,9 @@ func rehearseCommand(ctx context.Context, args []string, stdout, stderr io.Write
 	case *into == "" && *start != "":
 		err = errors.New("--start is for --into: device time is this machine's on a broker")
 	}
+	if err == nil {
+		err = site.check()
+	}
 	if err != nil {
 		tell(err)
 		return 2
@@ -81,8 +83,8 @@ func rehearseCommand(ctx context.Context, args []string, stdout, stderr io.Write
 			err = rehearseInto(ctx, bundle, cfg, options, *into, stdout, newLog(stderr, false))
 		}
 	} else {
-		broker := mqtt.PublisherConfig{URL: *brokerURL, Username: *user}
-		if broker.Password, err = readSecret(*secret); err == nil {
+		var broker mqtt.PublisherConfig
+		if broker, err = site.publisher(); err == nil {
 			err = rehearseOver(ctx, cfg, options, broker, *length, stdout, stderr)
 		}
 	}

@@ -13,7 +13,6 @@ import (
 	"runtime"
 	"strings"
 	"sync"
-	"syscall"
 	"time"
 
 	"github.com/spf13/pflag"
@@ -33,19 +32,19 @@ const notProtection = "It only watches. Facility safety procedures, hard-wired p
 
 // watchOptions are the flags of `throatwatch watch`.
 type watchOptions struct {
-	listen, data, broker, brokerListen string
-	user, passwordFile                 string
-	remote                             bool
-	rehearse                           bool
-	play                               rehearseFlags
-	influx                             influxOptions
-	webhook                            webhookOptions
-	guard                              guardOptions
-	retainDays                         int
-	retainGB                           float64
-	diskHours, diskGB                  float64
-	limit                              time.Duration
-	verbose                            bool
+	listen, data, brokerListen string
+	broker                     brokerOptions
+	remote                     bool
+	rehearse                   bool
+	play                       rehearseFlags
+	influx                     influxOptions
+	webhook                    webhookOptions
+	guard                      guardOptions
+	retainDays                 int
+	retainGB                   float64
+	diskHours, diskGB          float64
+	limit                      time.Duration
+	verbose                    bool
 }
 
 func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
@@ -53,10 +52,8 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 	fs := newFlags("watch RIG.yaml", "Watch a rig: take its messages in, compute, alarm, store, and serve the page.", stderr)
 	fs.StringVar(&o.listen, "listen", "127.0.0.1:8189", "address of the page and the HTTP interface")
 	fs.StringVar(&o.data, "data", "data", "folder for runs, catalogue and broker store")
-	fs.StringVar(&o.broker, "broker", "", "site broker, mqtt://host:port or mqtts://host:port (default: an embedded one)")
 	fs.StringVar(&o.brokerListen, "broker-listen", "127.0.0.1:1883", "address of the embedded broker; port 0 takes a free one")
-	fs.StringVar(&o.user, "broker-user", "", "user name at the site broker")
-	fs.StringVar(&o.passwordFile, "broker-password-file", "", "file with the password at the site broker")
+	o.broker.flags(fs, "", "site broker instead of the embedded one, mqtt://host:port or mqtts://host:port")
 	fs.BoolVar(&o.remote, "allow-remote", false, "let --listen be reached from other machines without TLS and users, and --broker-listen without passwords")
 	o.guard.flags(fs)
 	fs.BoolVar(&o.rehearse, "rehearse", false, "let a simulated rig publish a test to the broker; the next flags say which")
@@ -82,7 +79,7 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 		ctx, cancel = context.WithTimeout(ctx, o.limit)
 		defer cancel()
 	}
-	w := &watcher{opt: o, stdout: stdout, stderr: stderr, log: newLog(stderr, o.verbose), disk: diskWatch{part: part{ok: true}}}
+	w := &watcher{opt: o, stdout: stdout, stderr: stderr, log: newLog(stderr, o.verbose), disk: diskWatch{part: part{ok: true}}, listens: make(chan struct{})}
 	if err := w.run(ctx, rig); err != nil {
 		_, _ = fmt.Fprintln(stderr, "throatwatch watch:", err)
 		return 1
@@ -111,11 +108,11 @@ func (o *watchOptions) check(fs *pflag.FlagSet) error {
 	if !o.remote && !loopback(host) && !o.guard.closed() {
 		return fmt.Errorf("--listen %s can be reached from other machines, and whoever reaches it can acknowledge alarms: use 127.0.0.1, or --users with --tls-cert and --tls-key, or --allow-remote on a closed network", o.listen)
 	}
-	if o.broker != "" && fs.Changed("broker-listen") {
+	if o.broker.url != "" && fs.Changed("broker-listen") {
 		return errors.New("--broker-listen is for the embedded broker, --broker names another: give one of them")
 	}
-	if o.broker == "" && (o.user != "" || o.passwordFile != "") {
-		return errors.New("--broker-user and --broker-password-file are for a site broker: add --broker")
+	if err := o.broker.check(); err != nil {
+		return err
 	}
 	if !o.rehearse {
 		for _, name := range []string{"seed", "quick", "rate", "speed", "fault"} {
@@ -150,6 +147,9 @@ type watcher struct {
 	hook   *receiver     // nil when the site has none
 	disk   diskWatch
 	guard  *guard // nil when nobody is asked who they are
+
+	manager *serviceManager // nil where nobody manages this
+	listens chan struct{}   // closed when the broker keeps messages for this watch
 }
 
 // run starts the parts in the order in which they need each other and stops them
@@ -165,6 +165,10 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 			return err
 		}
 	}
+	if w.manager, err = openServiceManager(ctx, os.Getenv, w.log); err != nil {
+		return err
+	}
+	defer w.manager.close()
 	if w.guard, err = w.opt.guard.open(w.log); err != nil {
 		return err
 	}
@@ -267,6 +271,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 		sideParts.Go(func() { w.guard.run(sideCtx) })
 	}
 	w.announce(listener.Addr().String())
+	sideParts.Go(func() { w.manager.watch(sideCtx, w.loop, w.listens) })
 	sideParts.Go(func() {
 		if err := w.letIn(sideCtx); err != nil && sideCtx.Err() == nil {
 			failed <- err
@@ -279,6 +284,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	case err = <-loopEnd:
 		loopEnd <- nil
 	}
+	w.manager.tell("STOPPING=1")
 	stopSide()
 	hub.Shutdown()
 	closing, cancel := context.WithTimeout(context.WithoutCancel(ctx), 2*time.Second)
@@ -321,24 +327,25 @@ func (w *watcher) listen(ctx context.Context) (net.Listener, error) {
 
 // inUse tells that an address is taken; of an error of the broker only the text says so.
 func inUse(err error) bool {
-	return errors.Is(err, syscall.EADDRINUSE) || err != nil && strings.Contains(err.Error(), syscall.EADDRINUSE.Error())
+	return errors.Is(err, addressInUse) || err != nil && strings.Contains(err.Error(), addressInUse.Error())
 }
 
 // connect starts the embedded broker, unless there is a site broker, and makes
 // the client.
 func (w *watcher) connect(ctx context.Context) (stop func(), err error) {
+	site, err := w.opt.broker.publisher()
+	if err != nil {
+		return nil, err
+	}
 	c := mqtt.Config{
-		URL: w.opt.broker, Dir: w.opt.data, Username: w.opt.user,
+		URL: site.URL, Dir: w.opt.data, Username: site.Username, Password: site.Password, TLS: site.TLS,
 		Will: &mqtt.Will{Topic: watch.StatusTopic(w.cfg.Rig.ID), Payload: watch.OfflineStatus()},
 	}
 	for _, in := range w.cfg.Align.Inputs {
 		c.Filters = append(c.Filters, in.Filter)
 	}
-	if c.Password, err = readSecret(w.opt.passwordFile); err != nil {
-		return nil, err
-	}
 	stop = func() {}
-	if w.opt.broker == "" {
+	if w.opt.broker.url == "" {
 		w.broker, err = broker.New(broker.Config{
 			Listen: w.opt.brokerListen, AllowRemote: w.opt.remote, StoreDir: filepath.Join(w.opt.data, "broker"),
 		}, w.log)
@@ -414,17 +421,19 @@ func (w *watcher) letIn(ctx context.Context) error {
 	case <-ctx.Done():
 		return ctx.Err()
 	}
-	to := mqtt.PublisherConfig{URL: w.opt.broker, Username: w.opt.user}
 	if w.broker != nil {
 		w.broker.Open()
-		to.URL = w.broker.URL()
 	}
+	close(w.listens)
 	if !w.opt.rehearse {
 		return nil
 	}
-	var err error
-	if to.Password, err = readSecret(w.opt.passwordFile); err != nil {
+	to, err := w.opt.broker.publisher()
+	if err != nil {
 		return err
+	}
+	if w.broker != nil {
+		to.URL = w.broker.URL()
 	}
 	o, err := w.opt.play.options()
 	if err != nil {
@@ -436,7 +445,7 @@ func (w *watcher) letIn(ctx context.Context) error {
 // announce says what runs where.
 func (w *watcher) announce(addr string) {
 	rig := &w.cfg.Rig
-	where := w.opt.broker
+	where := w.opt.broker.url
 	if w.broker != nil {
 		where = w.broker.URL() + " (embedded)"
 	}

@@ -9,11 +9,9 @@ import (
 	"log/slog"
 	"net"
 	"os"
-	"os/exec"
 	"path/filepath"
 	"strings"
 	"sync"
-	"syscall"
 	"testing"
 	"time"
 
@@ -91,10 +89,6 @@ func Mosquitto(tb testing.TB, lines ...string) *Server {
 // listener nor a place for its data.
 func MosquittoWith(tb testing.TB, conf string) *Server {
 	tb.Helper()
-	program, err := exec.LookPath("mosquitto")
-	if err != nil {
-		program = "/usr/sbin/mosquitto" // not on everyone's path
-	}
 	dir := tb.TempDir()
 	addr := FreeAddr(tb)
 	host, port, err := net.SplitHostPort(addr)
@@ -109,26 +103,7 @@ func MosquittoWith(tb testing.TB, conf string) *Server {
 	if err := os.WriteFile(path, []byte(head+conf), 0o600); err != nil {
 		tb.Fatal(err)
 	}
-	var cmd *exec.Cmd
-	s := &Server{Addr: addr, URL: "mqtt://" + addr}
-	s.start = func() {
-		tb.Helper()
-		cmd = exec.CommandContext(context.Background(), program, "-c", path)
-		if err := cmd.Start(); err != nil {
-			tb.Fatal(err)
-		}
-		waitListening(tb, addr)
-	}
-	s.stop = func() {
-		if cmd.ProcessState != nil {
-			return // stopped before
-		}
-		// It writes its persistence file on SIGTERM.
-		if err := cmd.Process.Signal(syscall.SIGTERM); err != nil {
-			tb.Error(err)
-		}
-		_ = cmd.Wait() // ending by a signal counts as an error
-	}
+	s := mosquitto(tb, path, addr)
 	s.start()
 	tb.Cleanup(s.stop)
 	return s
