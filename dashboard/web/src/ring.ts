@@ -12,7 +12,7 @@ export const columns: readonly string[] = [
 /** Samples further apart than this are not joined by a line, s. */
 export const gapSeconds = 1;
 
-const capacity = 1 << 15; // 600 s at 50 scans/s
+const capacity = 1 << 15; // 600 s at 50 scans/s; a power of two
 
 /** One row: the columns in their order, then 1 choked, 0 not choked, NaN unknown. */
 export type Row = ArrayLike<number>;
@@ -22,6 +22,8 @@ export class Ring {
   private readonly data: Float64Array[];
   private head = 0; // where the next row goes
   size = 0;
+  /** Grows when rows changed other than at the end: what was derived from them is void. */
+  version = 0;
 
   constructor(readonly names: readonly string[] = columns) {
     this.data = Array.from({ length: names.length + 1 }, () => new Float64Array(capacity));
@@ -62,6 +64,7 @@ export class Ring {
 
   /** Forgets the rows after t. */
   cut(t: number): void {
+    this.version++;
     while (this.size > 0 && this.t(this.size - 1) > t) {
       this.head = (this.head - 1 + capacity) % capacity;
       this.size--;
@@ -69,11 +72,12 @@ export class Ring {
   }
 
   clear(): void {
+    this.version++;
     this.head = 0;
     this.size = 0;
   }
 
-  private at(i: number): number { return (this.head - this.size + i + capacity) % capacity; }
+  private at(i: number): number { return (this.head - this.size + i) & (capacity - 1); }
 
   /** Time of row i, 0 being the oldest. */
   t(i: number): number { return this.time[this.at(i)] as number; }
@@ -170,50 +174,101 @@ export function periods(s: Series | undefined, end: number): Period[] {
 export interface Window { t: number[]; y: (number | null)[][] }
 
 /**
- * The rows of [t0, t1] for drawing, at most about 2 per bucket: each bucket gives
- * its lowest and highest value in the order of their occurrence, so a spike of
- * one scan stays visible at any zoom. Bucket edges are multiples of their width:
+ * The rows of the last `span` seconds up to `end` for drawing, at most about 2 per bucket:
+ * each bucket gives its lowest and highest value in the order of their occurrence, so a
+ * spike of one scan stays visible at any zoom. Bucket edges are multiples of their width:
  * the picture does not shimmer while the window slides. Gaps become nulls.
+ *
+ * Earlier buckets are kept: while the window slides, only the rows from the last one on are
+ * read. The arrays are the decimator's own and change with the next call. `convert` has
+ * to be rising.
  */
-export function decimate(ring: Ring, wanted: readonly string[], t0: number, t1: number, buckets: number): Window {
-  const index = wanted.map((c) => ring.names.indexOf(c));
-  const out: Window = { t: [], y: wanted.map(() => []) };
-  const first = Math.max(0, ring.lower(t0) - 1);
-  const last = Math.min(ring.size, ring.lower(t1) + 1);
-  const gap = (t: number): void => {
-    out.t.push(t);
-    for (const y of out.y) y.push(null);
-  };
-  if (last - first <= 2 * buckets) {
+export class Decimator {
+  private readonly out: Window;
+  private ring: Ring | null = null;
+  private index: number[] = [];
+  private version = -1;
+  private width = NaN; // of a bucket, s; 0 when rows stand as they are
+  private from = NaN; // time of the first row that is kept
+  private tail = 0; // where the last bucket begins in out
+  private tailAt = NaN; // time of its first row
+
+  constructor(private readonly wanted: readonly string[], private readonly convert: (v: number) => number) {
+    this.out = { t: [], y: wanted.map(() => []) };
+  }
+
+  window(ring: Ring, end: number, span: number, buckets: number): Window {
+    const first = Math.max(0, ring.lower(end - span) - 1);
+    const last = Math.min(ring.size, ring.lower(end) + 1);
+    const width = last - first <= 2 * buckets ? 0 : span / buckets;
+    const kept = width > 0 && width === this.width && ring === this.ring && ring.version === this.version && ring.t(first) >= this.from && ring.t(last - 1) >= this.tailAt;
+    if (ring !== this.ring) this.index = this.wanted.map((c) => ring.names.indexOf(c));
+    this.ring = ring;
+    this.version = ring.version;
+    this.width = width;
+    this.from = last > first ? ring.t(first) : NaN;
+    this.cut(kept ? this.tail : 0);
+    if (kept) this.drop((Math.floor(this.from / width) + 0.25) * width);
+    if (width === 0) this.rows(ring, first, last);
+    else this.buckets(ring, kept ? ring.lower(this.tailAt) : first, last, width);
+    return this.out;
+  }
+
+  /** Forgets what was put out from i on. */
+  private cut(i: number): void {
+    this.out.t.length = i;
+    for (const y of this.out.y) y.length = i;
+  }
+
+  /** Forgets the buckets before t. */
+  private drop(t: number): void {
+    let n = 0;
+    while (n < this.out.t.length && (this.out.t[n] as number) < t) n++;
+    this.out.t.splice(0, n);
+    for (const y of this.out.y) y.splice(0, n);
+  }
+
+  private gap(t: number): void {
+    this.out.t.push(t);
+    for (const y of this.out.y) y.push(null);
+  }
+
+  private rows(ring: Ring, first: number, last: number): void {
     for (let i = first; i < last; i++) {
       const t = ring.t(i);
-      if (i > first && t - ring.t(i - 1) > gapSeconds) gap((t + ring.t(i - 1)) / 2);
-      out.t.push(t);
-      index.forEach((k, s) => { const v = ring.value(k, i); out.y[s]?.push(Number.isFinite(v) ? v : null); });
+      if (i > first && t - ring.t(i - 1) > gapSeconds) this.gap((t + ring.t(i - 1)) / 2);
+      this.out.t.push(t);
+      this.index.forEach((k, s) => {
+        const v = ring.value(k, i);
+        this.out.y[s]?.push(Number.isFinite(v) ? this.convert(v) : null);
+      });
     }
-    return out;
   }
-  const width = (t1 - t0) / buckets;
-  for (let i = first; i < last;) {
-    const bucket = Math.floor(ring.t(i) / width);
-    let end = i + 1;
-    while (end < last && Math.floor(ring.t(end) / width) === bucket) end++;
-    if (i > first && ring.t(i) - ring.t(i - 1) > Math.max(gapSeconds, width)) gap((ring.t(i) + ring.t(i - 1)) / 2);
-    out.t.push((bucket + 0.25) * width, (bucket + 0.75) * width);
-    index.forEach((k, s) => {
-      let [low, high, lowAt, highAt] = [Infinity, -Infinity, -1, -1];
-      for (let j = i; j < end; j++) {
-        const v = ring.value(k, j);
-        if (v < low) [low, lowAt] = [v, j];
-        if (v > high) [high, highAt] = [v, j];
-      }
-      if (lowAt < 0) out.y[s]?.push(null, null);
-      else if (lowAt <= highAt) out.y[s]?.push(low, high);
-      else out.y[s]?.push(high, low);
-    });
-    i = end;
+
+  private buckets(ring: Ring, first: number, last: number, width: number): void {
+    for (let i = first; i < last;) {
+      const bucket = Math.floor(ring.t(i) / width);
+      let end = i + 1;
+      while (end < last && Math.floor(ring.t(end) / width) === bucket) end++;
+      this.tail = this.out.t.length;
+      this.tailAt = ring.t(i);
+      if (this.out.t.length > 0 && ring.t(i) - ring.t(i - 1) > Math.max(gapSeconds, width)) this.gap((ring.t(i) + ring.t(i - 1)) / 2);
+      this.out.t.push((bucket + 0.25) * width, (bucket + 0.75) * width);
+      this.index.forEach((k, s) => {
+        let [low, high, lowAt, highAt] = [Infinity, -Infinity, -1, -1];
+        for (let j = i; j < end; j++) {
+          const v = ring.value(k, j);
+          if (v < low) { low = v; lowAt = j; }
+          if (v > high) { high = v; highAt = j; }
+        }
+        const y = this.out.y[s] as (number | null)[];
+        if (lowAt < 0) y.push(null, null);
+        else if (lowAt <= highAt) y.push(this.convert(low), this.convert(high));
+        else y.push(this.convert(high), this.convert(low));
+      });
+      i = end;
+    }
   }
-  return out;
 }
 
 /** The periods within [t0, t1] in which the throat was choked. */

@@ -8,7 +8,7 @@ import { newModel } from '../src/state';
 import { openSession } from '../src/session';
 import '../src/style.css';
 import { fixed, unitSets } from '../src/units';
-import type { Plot } from '../src/watch/plots';
+import { type Plot, standardPlots } from '../src/watch/plots';
 import { traces } from '../src/watch/traces';
 
 const [charts, span, rate, drawEvery] = [12, 600, 20, 50];
@@ -17,8 +17,6 @@ export interface Figures {
   charts: number;
   rows: number;
   drawsPerSecond: number;
-  meanDraw: number; // script of one draw, ms
-  longestDraw: number;
   longestTask: number; // ms; 0 when none was over 50 ms
 }
 
@@ -31,14 +29,20 @@ function row(t: number): number[] {
 async function run(seconds: number): Promise<Figures> {
   const model = newModel();
   const t0 = 1_700_000_000;
+  let begun = Infinity;
+  let draws = 0; // of all charts
   for (let i = 0; i < span * rate; i++) model.ring.push(t0 + i / rate, row(i / rate));
   model.newest = t0 + span - 1 / rate;
   const plot = (i: number): Plot => ({
-    title: `trace ${i}`, unit: '', convert: (v) => v, cover: () => [0, 20], limits: () => [{ v: 18, name: 'limit' }],
+    title: `trace ${i}`, unit: '', convert: (v) => v, cover: () => [0, 20],
+    limits: () => { // asked for once in each draw
+      if (i === charts - 1 && performance.now() >= begun) draws++;
+      return [{ v: 18, name: 'limit' }];
+    },
     lines: [{ column: columns[i % columns.length] as string, name: '', show: (v) => fixed(v, 2) }],
   });
   const units = unitSets.si;
-  const display: Display = { rig: '', model: () => model, fresh: () => ({ kind: 'live', age: 0 }), palette: () => light, units: () => units, plots: () => [], choosePlots: () => undefined, operator: () => '', session: () => openSession, acknowledger: null };
+  const display: Display = { rig: '', model: () => model, fresh: () => ({ kind: 'live', age: 0 }), palette: () => light, units: () => units, plots: () => standardPlots, choosePlots: () => undefined, operator: () => '', session: () => openSession, acknowledger: null };
   const view = traces(display, null, () => Array.from({ length: charts }, (_, i) => plot(i)));
   const style = document.createElement('style');
   paint(document.documentElement.style, light);
@@ -49,9 +53,7 @@ async function run(seconds: number): Promise<Figures> {
 
   const tasks: number[] = [];
   const observer = new PerformanceObserver((list) => { tasks.push(...list.getEntries().map((e) => e.duration)); });
-  const draws: number[] = [];
   let last = -Infinity;
-  let begun = Infinity;
   let scan = span * rate;
   const feed = setInterval(() => {
     model.newest = t0 + scan / rate;
@@ -63,14 +65,13 @@ async function run(seconds: number): Promise<Figures> {
     const draw = (now: number): void => {
       if (now - from > 1000 && begun === Infinity) { // the first second compiles and lays out
         begun = now;
+        performance.mark('bench');
         observer.observe({ type: 'longtask' });
       }
       if (now - begun > seconds * 1000) return done();
       if (now - last >= drawEvery) {
         last = now;
-        const before = performance.now();
         view.update(now);
-        if (now >= begun) draws.push(performance.now() - before);
       }
       requestAnimationFrame(draw);
     };
@@ -80,8 +81,7 @@ async function run(seconds: number): Promise<Figures> {
   tasks.push(...observer.takeRecords().map((e) => e.duration));
   view.destroy();
   return {
-    charts, rows: model.ring.size, drawsPerSecond: draws.length / seconds,
-    meanDraw: draws.reduce((a, b) => a + b, 0) / draws.length, longestDraw: Math.max(...draws), longestTask: Math.max(0, ...tasks),
+    charts, rows: model.ring.size, drawsPerSecond: draws / seconds, longestTask: Math.max(0, ...tasks),
   };
 }
 

@@ -114,6 +114,25 @@ async function shoot(name, { dark = false, picture = '' } = {}) {
   await page.emulateMedia({ colorScheme: 'light' });
 }
 
+/**
+ * Traces the tasks of a page. What is given back ends it and gives the processor time of the
+ * longest task after a mark of that name, ms: other programs on the machine do not add to it.
+ */
+async function traced(p) {
+  const client = await context.newCDPSession(p);
+  const events = [];
+  client.on('Tracing.dataCollected', ({ value }) => events.push(...value));
+  await client.send('Tracing.start', { transferMode: 'ReportEvents', traceConfig: { includedCategories: ['toplevel', 'blink.user_timing'] } });
+  return async (mark) => {
+    const complete = new Promise((done) => client.once('Tracing.tracingComplete', done));
+    await client.send('Tracing.end');
+    await complete;
+    await client.detach();
+    const from = events.find((e) => e.name === mark && e.cat.includes('blink.user_timing'));
+    return events.filter((e) => e.pid === from.pid && e.tid === from.tid && e.ts > from.ts && /RunTask/.test(e.name)).reduce((most, e) => Math.max(most, (e.tdur ?? 0) / 1000), 0);
+  };
+}
+
 /** Where everything with a fixed place stands. */
 const places = () => page.evaluate(() => [...document.querySelectorAll('header *:not(.tick *), .cell, .big > *, .tracerow, .tools *, .probe, .bands td, .bands th, .ledger > *')]
   .map((e) => e.getBoundingClientRect()).map((r) => [r.x, r.y, r.width, r.height].map(Math.round).join()));
@@ -832,12 +851,17 @@ try {
     await live.setViewportSize({ width: 1440, height: 900 });
     await live.setContent('<!doctype html><title>benchmark</title>');
     for (const f of output) await (f.type === 'chunk' ? live.addScriptTag({ content: f.code }) : live.addStyleTag({ content: String(f.source) }));
-    let r = await live.evaluate(() => window.bench(5));
-    for (let tries = 1; tries < 3 && r.drawsPerSecond < 15; tries++) { // something else took the machine
+    const bench = async () => {
+      const stop = await traced(live);
+      return { ...await live.evaluate(() => window.bench(4)), busiest: await stop('bench') };
+    };
+    let r = await bench();
+    for (let tries = 1; tries < 3 && (r.drawsPerSecond < 15 || r.busiest >= 50); tries++) { // something else took the machine
       await live.waitForTimeout(3000);
-      r = await live.evaluate(() => window.bench(5));
+      r = await bench();
     }
-    console.log(`     ${r.charts} charts, ${r.rows} scans: ${r.drawsPerSecond.toFixed(1)} draws/s, script of one ${r.meanDraw.toFixed(1)} ms (longest ${r.longestDraw.toFixed(1)}), longest task ${r.longestTask === 0 ? 'under 50' : r.longestTask.toFixed(0)} ms`);
+    console.log(`     ${r.charts} charts, ${r.rows} scans: ${r.drawsPerSecond.toFixed(1)} draws/s, longest task ${r.longestTask === 0 ? 'under 50' : r.longestTask.toFixed(0)} ms, of the processor's time ${r.busiest.toFixed(1)} ms`);
+    assert.ok(r.busiest > 0 && r.busiest < 50, `a task of ${r.busiest} ms`);
     assert.ok(r.rows >= 12_000 && r.drawsPerSecond >= 15, JSON.stringify(r));
   });
 

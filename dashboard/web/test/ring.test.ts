@@ -1,7 +1,7 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
 import type { SeriesReply } from '../src/frames';
-import { Ring, chokedSpans, columns, decimate, periods, seriesRows } from '../src/ring';
+import { Decimator, Ring, type Window, chokedSpans, columns, periods, seriesRows } from '../src/ring';
 
 const row = (npr: number, choked = 0): number[] => [npr, ...new Array<number>(columns.length - 1).fill(NaN), choked];
 function filled(n: number, dt: number, f: (i: number) => number): Ring {
@@ -9,6 +9,8 @@ function filled(n: number, dt: number, f: (i: number) => number): Ring {
   for (let i = 0; i < n; i++) ring.push(i * dt, row(f(i)));
   return ring;
 }
+
+const decimate = (ring: Ring, wanted: string[], t0: number, t1: number, buckets: number): Window => new Decimator(wanted, (v) => v).window(ring, t1, t1 - t0, buckets);
 
 test('the ring keeps the newest rows in order and refuses older ones', () => {
   const ring = filled(40_000, 0.05, (i) => i);
@@ -73,6 +75,27 @@ test('the picture does not shimmer: buckets stay put while the window slides', (
   const [a, b] = [decimate(ring, ['npr'], 100, 400, 100), decimate(ring, ['npr'], 100.35, 400.35, 100)];
   const inside = a.t.slice(4, -4);
   assert.ok(inside.every((t) => b.t.includes(t)));
+});
+
+test('what a decimator keeps is what a new one reads', () => {
+  const ring = new Ring();
+  const kept = new Decimator(['npr', 'speed_rpm'], (v) => 2 * v);
+  const rising = (v: number): number => 2 * v;
+  let t = 1_700_000_000;
+  for (let i = 0; i < 60_000; i++) { // the ring overflows
+    t += i % 997 === 0 ? 5 : 0.05; // with gaps
+    ring.push(t, [Math.sin(i * 0.7), ...new Array<number>(5).fill(NaN), i % 89 === 0 ? NaN : Math.cos(i * 0.01), NaN, 0]);
+    if (i % 31 === 0) ring.amend(t, 'npr', 5);
+    if (i === 30_000) ring.cut(t - 20);
+    if (i === 40_000) ring.fill([{ t: ring.t(0) - 1, row: row(3) }]);
+    if (i % 53 !== 0) continue;
+    const end = i % 371 === 0 ? t - 30 : t; // a stretch is being drawn: the axis stands
+    const [a, b] = [kept.window(ring, end, 600, 250), new Decimator(['npr', 'speed_rpm'], rising).window(ring, end, 600, 250)];
+    const from = a.t.length - b.t.length; // the first bucket may reach before the window
+    assert.ok(from >= 0 && from <= 1, `${from} more`);
+    assert.deepEqual(a.t.slice(from + 2), b.t.slice(2));
+    assert.deepEqual(a.y.map((y) => y.slice(from + 2)), b.y.map((y) => y.slice(2)));
+  }
 });
 
 test('a gap and a missing value break the line', () => {

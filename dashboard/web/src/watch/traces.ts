@@ -8,14 +8,16 @@ import type { Display } from '../context';
 import { type View, attr, h, text } from '../dom';
 import { type Flag, type Model, believable } from '../state';
 import type { Palette } from '../palette';
-import { chokedSpans, decimate, gapSeconds } from '../ring';
+import { Decimator, chokedSpans, gapSeconds } from '../ring';
 import { clock, facility, signedClock } from '../time';
 import { type UnitSet, age, fixed } from '../units';
 import { font } from './canvas';
 import { picker } from './picker';
-import { type Plot, chosenPlots, same } from './plots';
+import { type Plot, chosenPlots } from './plots';
 
 const spans = [60, 120, 300, 600];
+/** Charts are drawn for this long in a frame, ms; the others have the next one. */
+const drawTime = 6;
 
 /** The smallest of 1, 2, 5 times a power of ten that is at least v. */
 function niceStep(v: number): number {
@@ -57,8 +59,9 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
     choices.forEach((b, i) => attr(b, 'aria-pressed', String(spans[i] === span)));
   }
 
-  interface Row { el: HTMLElement; box: HTMLElement; width: number; plot: Plot; chart: uPlot; values: HTMLElement[] }
+  interface Row { el: HTMLElement; box: HTMLElement; width: number; plot: Plot; chart: uPlot; thin: Decimator; values: HTMLElement[] }
   let rows: Row[] = [];
+  let round: { end: number; span: number; next: number } | null = null; // what of it is drawn
   let pal: Palette | null = null;
   let units: UnitSet | null = null;
   let drawn: readonly string[] | null = null;
@@ -68,6 +71,7 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
   let flags: Flag[] = [];
   let hover: number | null = null; // time under the cursor, s
   const sync = uPlot.sync(`traces ${Math.random()}`);
+  let frame = 0; // the request for the next part of a round
   const axisHeight = 24;
 
   const observer = new ResizeObserver(([entry]) => {
@@ -93,6 +97,8 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
 
   function build(p: Palette): void {
     for (const r of rows) r.chart.destroy();
+    round = null;
+    cancelAnimationFrame(frame);
     host.replaceChildren();
     const plots = make(d);
     host.dataset['rows'] = String(plots.length);
@@ -135,7 +141,7 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
           }],
         },
       }, [[], ...plot.lines.map(() => [])] as unknown as uPlot.AlignedData, box);
-      return { el: row, box, width: 0, plot, chart, values };
+      return { el: row, box, width: 0, plot, chart, thin: new Decimator(plot.lines.map((l) => l.column), plot.convert), values };
     });
     layout();
   }
@@ -202,6 +208,26 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
     c.restore();
   }
 
+  /** Draws the next charts of the round, and asks for a frame for those that are left. */
+  function drawSome(): void {
+    const began = performance.now();
+    const { ring } = d.model();
+    while (round && performance.now() - began < drawTime) {
+      const r = rows[round.next++];
+      if (!r) {
+        round = null;
+        return;
+      }
+      const { end, span: shown } = round;
+      const w = r.thin.window(ring, end, shown, Math.max(60, Math.floor(r.width / 2)));
+      r.chart.batch(() => {
+        r.chart.setData([w.t, ...w.y] as uPlot.AlignedData, false);
+        r.chart.setScale('x', { min: end - shown, max: end });
+      });
+    }
+    if (round) frame = requestAnimationFrame(drawSome);
+  }
+
   function update(now: number): void {
     const { channels, quantities } = d.model(); // those of the rig come with the first hello
     if (d.palette() !== pal || d.units() !== units || d.plots() !== drawn || channels.length + quantities.length !== known) {
@@ -216,27 +242,26 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
     if (!Number.isFinite(end) || width < 200) return;
     attr(whole, 'hidden', zoomed === null);
     attr(freeze, 'hidden', zoomed !== null);
-    const start = zoomed ? zoomed[0] : end - span;
-    shading = chokedSpans(m.ring, start, end);
-    flags = m.flags.filter((f) => f.t >= start && f.t <= end);
+    const wide = zoomed ? zoomed[1] - zoomed[0] : span;
+    const start = end - wide;
+    if (!round) {
+      shading = chokedSpans(m.ring, start, end);
+      flags = m.flags.filter((f) => f.t >= start && f.t <= end);
+      round = { end, span: wide, next: 0 };
+      drawSome();
+    }
     const cursor = hover !== null ? hover : null;
     const past = cursor !== null || isFrozen || zoomed !== null; // values of a chosen instant; otherwise they claim to be present
     const shown = past || believable(d.fresh(now));
-    const atRow = !shown ? -1 : cursor === null ? m.ring.lower(end + 1e-6) - 1 : nearest(m, cursor, end - start);
+    const atRow = !shown ? -1 : cursor === null ? m.ring.lower(end + 1e-6) - 1 : nearest(m, cursor, wide);
     for (const r of rows) {
-      const w = decimate(m.ring, r.plot.lines.map((l) => l.column), start, end, Math.max(60, Math.floor(r.width / 2)));
-      const y = w.y.map((s) => (r.plot.convert === same ? s : s.map((v) => (v === null ? null : r.plot.convert(v)))));
-      r.chart.batch(() => {
-        r.chart.setData([w.t, ...y] as uPlot.AlignedData, false);
-        r.chart.setScale('x', { min: start, max: end });
-      });
       r.plot.lines.forEach((l, i) => {
         const k = m.ring.names.indexOf(l.column);
         const v = atRow >= 0 && k >= 0 ? m.ring.value(k, atRow) : NaN;
         text(r.values[i] as HTMLElement, Number.isNaN(v) ? '–' : l.show(r.plot.convert(v)));
       });
     }
-    text(at, cursor !== null && atRow >= 0 ? `at ${signedClock(m.ring.t(atRow))}` : zoomed ? `ZOOMED to ${age(end - start)}` : isFrozen ? `FROZEN at ${signedClock(frozenAt)}` : `${facility.sign()}; shaded: choked`);
+    text(at, cursor !== null && atRow >= 0 ? `at ${signedClock(m.ring.t(atRow))}` : zoomed ? `ZOOMED to ${age(wide)}` : isFrozen ? `FROZEN at ${signedClock(frozenAt)}` : `${facility.sign()}; shaded: choked`);
     attr(at, 'data-frozen', isFrozen || zoomed !== null);
   }
 
@@ -255,6 +280,7 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
       observer.disconnect();
       window.removeEventListener('pointerup', letGo);
       pick.destroy();
+      cancelAnimationFrame(frame);
       for (const r of rows) r.chart.destroy();
     },
   };
