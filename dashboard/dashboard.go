@@ -53,6 +53,8 @@ type Config struct {
 	Parse func(bundle []byte) (pipeline.Config, error) // for stored runs
 	Build string
 	Log   *slog.Logger
+	// Follows names what is set up to follow the record: "database", "webhook".
+	Follows []string
 	// Reload takes the rig and rule files as they are now into force, for who a says.
 	// It gives what is wrong with them; nil = the files cannot be read here.
 	Reload func(ctx context.Context, a pipeline.Action) (pipeline.Reply, []Fault, error)
@@ -290,10 +292,17 @@ func (s *Server) ask(ctx context.Context, rig string, fn func(cfg *pipeline.Conf
 	return wrong
 }
 
+// rigJSON is a rig as it is watched here.
+type rigJSON struct {
+	pipeline.RigInfo
+
+	Follows []string `json:"follows"`
+}
+
 func (s *Server) rigs(w http.ResponseWriter, r *http.Request) error {
-	list := []pipeline.RigInfo{}
+	list := []rigJSON{}
 	if err := s.ask(r.Context(), "", func(cfg *pipeline.Config, _ *pipeline.Machine, _ *pipeline.State) {
-		list = append(list, cfg.Rig)
+		list = append(list, rigJSON{cfg.Rig, append([]string{}, s.cfg.Follows...)})
 	}); err != nil {
 		return err
 	}

@@ -123,7 +123,7 @@ func (d *desk) begin() {
 func (d *desk) serve(asked dashboard.Desk) {
 	cfg := d.cfg
 	cfg.Desk, cfg.Runs, cfg.Parse, cfg.Build = asked, folder(d.dir), parse, build
-	cfg.Log = slog.New(slog.DiscardHandler)
+	cfg.Log, cfg.Follows = slog.New(slog.DiscardHandler), []string{"database"}
 	cfg.Extra = func() []dashboard.Metric {
 		return []dashboard.Metric{
 			{Name: "session_unacknowledged", Help: "An extra gauge.", Labels: map[string]string{"filter": "rigs/cell_2/\xff"}, Value: 4},

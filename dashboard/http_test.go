@@ -40,8 +40,12 @@ func checkStatus(t *testing.T, what string, a answer, status int, detail string)
 
 func TestRigs(t *testing.T) {
 	d := newDesk(t)
-	list := into[[]pipeline.RigInfo](t, d.get(t, "/api/rigs"))
-	if want := rig("Alder Bank cell 2", "").Rig; len(list) != 1 || list[0] != want {
+	list := into[[]struct {
+		pipeline.RigInfo
+
+		Follows []string `json:"follows"`
+	}](t, d.get(t, "/api/rigs"))
+	if want := rig("Alder Bank cell 2", "").Rig; len(list) != 1 || list[0].RigInfo != want || !slices.Equal(list[0].Follows, []string{"database"}) {
 		t.Errorf("%+v", list)
 	}
 }

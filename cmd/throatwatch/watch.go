@@ -305,6 +305,12 @@ func (w *watcher) page(secure bool) dashboard.Config {
 		Build: watch.Build(), Log: w.log, Extra: w.metrics, Reload: w.reload,
 		OpenRole: w.opt.guard.role(), Secure: secure, Audit: newLog(w.stderr, true),
 	}
+	if w.site != nil {
+		c.Follows = append(c.Follows, "database")
+	}
+	if w.hook != nil {
+		c.Follows = append(c.Follows, "webhook")
+	}
 	if w.guard != nil {
 		c.Access = w.guard.gate
 	} else {

@@ -44,9 +44,8 @@ export function nextStep(a: Alarm): Step | null {
   return a.state === 'latched_acknowledged' ? { path: 'reset', word: 'Reset', doing: 'Resetting…' } : null;
 }
 
-/** What puts an alarm aside or brings it back, each with a reason. A warning is never shelved. */
+/** What puts an alarm aside, also one that has returned to normal, or brings it back, each with a reason. A warning is never shelved. */
 export function asideSteps(a: Alarm): Step[] {
-  if (a.state === 'normal') return [];
   if (a.state === 'out_of_service') return [{ path: 'in-service', word: 'Back in service…', doing: 'Restoring…' }];
   const out: Step[] = [];
   if (a.state === 'shelved') out.push({ path: 'unshelve', word: 'Unshelve', doing: 'Unshelving…' });

@@ -29,6 +29,8 @@ export interface Taste {
 
 export interface Display extends Taste {
   rig: string;
+  /** What follows the record and is set up, of "database" and "webhook". */
+  follows: readonly string[];
   model(): Model;
   fresh(now: number): Freshness;
   /** Who acts at this page; the name goes with every action. */

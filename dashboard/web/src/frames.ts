@@ -91,6 +91,8 @@ export interface RigInfo {
   limits_version: string;
   /** Of the facility, a name of the IANA database; empty = UTC. */
   time_zone?: string;
+  /** What follows the record and is set up: "database", "webhook"; only in /api/rigs. */
+  follows?: string[];
 }
 
 export interface Source { topic: string; age_s: Num; messages: number; skew_s: Num; alive: boolean }

@@ -217,7 +217,7 @@ function run(rig: RigInfo, rigs: RigInfo[], session: Session): void {
 
   const units = (): UnitSet => unitSets[settings.system];
   const display: Display = {
-    rig: rig.id, model: () => model, palette, units, plots: () => settings.plots, choosePlots, acknowledger, session: () => session, operator: () => (session.open ? settings.operator : session.name),
+    rig: rig.id, follows: rig.follows ?? [], model: () => model, palette, units, plots: () => settings.plots, choosePlots, acknowledger, session: () => session, operator: () => (session.open ? settings.operator : session.name),
     fresh: (now) => (link.opened ? freshness(model, link.connected, now) : { kind: 'waiting' }),
   };
   const head = header({

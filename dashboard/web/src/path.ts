@@ -7,8 +7,8 @@ import { age, fixed } from './units';
 /** One part of the path of the data: its name, what is said of it, whether that is good. */
 export interface PathPart { name: string; said: string; bad: boolean }
 
-/** How the parts do through which the data goes; what a server does not tell is left out. */
-export function pathParts(s: StatusFrame, dataAge_: number | null): PathPart[] {
+/** How the parts do through which the data goes; what a server does not tell is left out. `follows` are the parts that are set up. */
+export function pathParts(s: StatusFrame, dataAge_: number | null, follows: readonly string[]): PathPart[] {
   const sessions = s.sessions ?? [];
   const gone = sessions.filter((x) => !x.connected).length;
   const silent = (s.sources ?? []).filter((x) => !x.alive).length;
@@ -20,7 +20,7 @@ export function pathParts(s: StatusFrame, dataAge_: number | null): PathPart[] {
   for (const [key, name] of [['database', 'Site database'], ['webhook', 'Webhook']] as const) {
     const part = s[key];
     if (part) out.push({ name, said: `fails since ${signedClock(seconds(part.since))}: ${part.why}; ${fixed(part.behind, 0)} waiting`, bad: true });
-    else if (part === null) out.push({ name, said: 'no failure, or none is set up', bad: false });
+    else if (part === null) out.push({ name, said: follows.includes(key) ? 'no failure' : 'none is set up', bad: false });
   }
   if (s.disk) out.push({ name: 'Disk', said: `soon full, since ${signedClock(seconds(s.disk.since))}: ${s.disk.why}`, bad: true });
   else if (s.disk === null) out.push({ name: 'Disk', said: 'not soon full', bad: false });

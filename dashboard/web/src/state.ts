@@ -212,8 +212,10 @@ export type Freshness =
   | { kind: 'no_points'; age: number } // the link lives, no operating point comes
   | { kind: 'live'; age: number | null };
 
-/** No status for this long means the link is gone, s. The server sends one each second. */
-export const linkTimeout = 2;
+/** Without any frame for this long the link is gone, s: one comes each second, and a page is to be grey within 2 s. */
+export const linkTimeout = 1.75;
+/** Without a status for this long what else comes is not believed, s. */
+export const statusTimeout = 2;
 /** An operating point older than this is not shown as present, s. */
 export const pointTimeout = 1;
 
@@ -221,9 +223,8 @@ export const pointTimeout = 1;
 export function freshness(m: Model, connected: boolean, now: number): Freshness {
   if (m.replay) return { kind: 'replay' };
   if (!Number.isFinite(m.statusAt)) return { kind: 'waiting' };
-  if (!connected || now - m.statusAt > linkTimeout * 1000) {
-    return { kind: 'no_link', since: hostNow(m, connected ? m.statusAt : m.frameAt) };
-  }
+  if (!connected || now - m.frameAt > linkTimeout * 1000) return { kind: 'no_link', since: hostNow(m, m.frameAt) };
+  if (now - m.statusAt > statusTimeout * 1000) return { kind: 'no_link', since: hostNow(m, m.statusAt) };
   const age = dataAge(m, now);
   if (m.status?.catching_up && age !== null) return { kind: 'catching_up', age };
   if (now - m.pointAt > pointTimeout * 1000) return { kind: 'no_points', age: (now - m.pointAt) / 1000 };

@@ -81,6 +81,19 @@ export function dateClock(s: number): string {
   return Number.isFinite(s) ? `${new Date((s + facility.offset(s)) * 1000).toISOString().slice(0, 10)} ${signedClock(s)}` : '–';
 }
 
+/** yyyy-mm-dd hh:mm:ss of the facility, as it is typed. */
+export function typedClock(s: number): string {
+  return dateClock(s).slice(0, 19);
+}
+
+/** The time of yyyy-mm-dd hh:mm:ss of the facility; NaN if it is none. Of an hour that comes twice it is the first. */
+export function typed(words: string): number {
+  const wall = Date.parse(`${words.trim().replace(' ', 'T')}Z`) / 1000;
+  const hour = 3600;
+  const found = [-hour, hour].map((near) => wall - facility.offset(wall - facility.offset(wall) + near)).sort((a, b) => a - b);
+  return found.find((s) => s + facility.offset(s) === wall) ?? NaN; // an hour that was left out has no time
+}
+
 /** The day of the facility, counted. */
 export const day = (s: number): number => Math.floor((s + facility.offset(s)) / 86_400);
 

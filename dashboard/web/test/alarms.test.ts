@@ -47,7 +47,7 @@ test('what puts an alarm aside: never a warning on the shelf', () => {
   assert.deepEqual(paths({ priority: 'caution', state: 'shelved' }), ['unshelve', 'out-of-service']);
   assert.deepEqual(paths({ state: 'out_of_service' }), ['in-service']);
   assert.deepEqual(paths({ priority: 'advisory', state: 'suppressed_by_design' }), ['out-of-service']);
-  assert.deepEqual(paths({ state: 'normal' }), []);
+  assert.deepEqual(paths({ state: 'normal', priority: 'caution' }), ['shelve', 'out-of-service'], 'one of the history');
 });
 
 test('consequences stand under their cause', () => {

@@ -42,7 +42,7 @@ async function run(seconds: number): Promise<Figures> {
     lines: [{ column: columns[i % columns.length] as string, name: '', show: (v) => fixed(v, 2) }],
   });
   const units = unitSets.si;
-  const display: Display = { rig: '', model: () => model, fresh: () => ({ kind: 'live', age: 0 }), palette: () => light, units: () => units, plots: () => standardPlots, choosePlots: () => undefined, operator: () => '', session: () => openSession, acknowledger: null };
+  const display: Display = { rig: '', follows: [], model: () => model, fresh: () => ({ kind: 'live', age: 0 }), palette: () => light, units: () => units, plots: () => standardPlots, choosePlots: () => undefined, operator: () => '', session: () => openSession, acknowledger: null };
   const view = traces(display, null, () => Array.from({ length: charts }, (_, i) => plot(i)));
   const style = document.createElement('style');
   paint(document.documentElement.style, light);

@@ -36,13 +36,14 @@ test('excursions above EGT limits', () => {
 });
 
 test('the path of the data names what does not work', () => {
-  const said = (body: Parameters<typeof status>[1]): string[] => pathParts(status(t0, body), 0.05).filter((p) => p.bad).map((p) => `${p.name}: ${p.said}`);
+  const said = (body: Parameters<typeof status>[1]): string[] => pathParts(status(t0, body), 0.05, []).filter((p) => p.bad).map((p) => `${p.name}: ${p.said}`);
   assert.deepEqual(said({}), []);
-  assert.deepEqual(pathParts(status(t0), 0.05).map((p) => p.name), ['Broker', 'Sources', 'Archive', 'Clock'], 'what the server does not tell of is left out');
+  assert.deepEqual(pathParts(status(t0), 0.05, []).map((p) => p.name), ['Broker', 'Sources', 'Archive', 'Clock'], 'what the server does not tell of is left out');
   assert.deepEqual(said({ input_path: false }), ['Broker: deaf: the probe message does not return']);
   assert.deepEqual(said({ sessions: [{ filter: 'a', connected: true }, { filter: 'b', connected: false }] }), ['Broker: 1 of 2 sessions not connected']);
   assert.deepEqual(said({ recording: false, not_recording_since: rfc3339(t0) }), ['Archive: not recording since 09:00:00 UTC']);
   assert.deepEqual(said({ disk: { since: rfc3339(t0), why: '2.1 GB free, enough for about 3 h as it fills now', behind: 2.1 } }), ['Disk: soon full, since 09:00:00 UTC: 2.1 GB free, enough for about 3 h as it fills now']);
   assert.deepEqual(said({ webhook: { since: rfc3339(t0), why: 'connection refused', behind: 3 }, database: null }), ['Webhook: fails since 09:00:00 UTC: connection refused; 3 waiting']);
+  assert.deepEqual(pathParts(status(t0, { database: null, webhook: null }), 0.05, ['webhook']).slice(3, 5).map((p) => p.said), ['none is set up', 'no failure']);
   assert.deepEqual(said({ sources: [{ topic: 't', age_s: 9, messages: 1, skew_s: 0, alive: false }] }), ['Sources: 1 silent']);
 });

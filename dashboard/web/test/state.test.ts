@@ -108,6 +108,8 @@ test('freshness', async (t) => {
     { name: 'points and status come', frames: [[status(t0), 1000], [point(t0), 1100]], connected: true, now: 1150, want: 'live' },
     { name: 'status 2 s old is still the link', frames: [[status(t0), 1000], [point(t0), 2900]], connected: true, now: 3000, want: 'live' },
     { name: 'no status for more than 2 s', frames: [[status(t0), 1000], [point(t0), 3000]], connected: true, now: 3001, want: 'no_link' },
+    { name: 'no frame for less than 1.75 s', frames: [[status(t0), 1000]], connected: true, now: 2749, want: 'no_points' },
+    { name: 'no frame for longer: grey within 2 s', frames: [[status(t0), 1000], [point(t0), 1100]], connected: true, now: 2851, want: 'no_link' },
     { name: 'socket gone', frames: [[status(t0), 1000], [point(t0), 1100]], connected: false, now: 1150, want: 'no_link' },
     { name: 'points stop, status goes on', frames: [[point(t0), 100], [status(t0 + 1), 1200]], connected: true, now: 1300, want: 'no_points' },
     { name: 'nothing has ever come: there is nothing to catch up with', frames: [[status(t0, { catching_up: true, data_age_s: null }), 1000]], connected: true, now: 1100, want: 'no_points' },

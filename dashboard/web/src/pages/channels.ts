@@ -8,7 +8,7 @@ import { type View, attr, column, h, refill, text } from '../dom';
 import type { Channel, ChannelValue } from '../frames';
 import { sparkSpan } from '../spark';
 import { believable, hostNow } from '../state';
-import { rfc3339 } from '../time';
+import { facility, rfc3339, typed, typedClock } from '../time';
 import { age, inUnit, plain, significant } from '../units';
 import { findingText } from '../words';
 
@@ -52,13 +52,11 @@ function drawSpark(canvas: HTMLCanvasElement, colour: string, end: number, s: { 
   c.stroke();
 }
 
-/** A time as it is typed, UTC; NaN for none. */
-const typed = (s: string): number => Date.parse(`${s.trim().replace(' ', 'T')}Z`) / 1000;
-
 function swap(d: Display, c: Channel): void {
+  const now = hostNow(d.model(), performance.now());
   const fields: Field[] = [
     { name: 'serial', label: 'Serial number of the new sensor' },
-    { name: 'from', label: 'Valid from, UTC', value: rfc3339(hostNow(d.model(), performance.now())).slice(0, 19).replace('T', ' '), pattern: '\\d{4}-\\d\\d-\\d\\d \\d\\d:\\d\\d:\\d\\d' },
+    { name: 'from', label: `Valid from, ${facility.sign(facility.offset(now))}`, value: typedClock(now), pattern: '\\d{4}-\\d\\d-\\d\\d \\d\\d:\\d\\d:\\d\\d' },
     { name: 'reason', label: 'Reason' },
   ];
   askForm(`A sensor of ${c.id} (${c.title}) was swapped.`, fields, 'Enter the swap', async (v) => {

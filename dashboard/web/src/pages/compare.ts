@@ -11,6 +11,7 @@ import { digits } from '../points';
 import { dateClock, duration, seconds } from '../time';
 import { type Scale, type UnitSet, fixed, scaleOf, signed } from '../units';
 import { font } from '../watch/canvas';
+import { type Stretch, zoomHelp, zoomed } from '../zoom';
 
 const ways = [['', 'by time; the same records scan by scan'], ['time', 'by time from light-off'], ['mark', 'by time from a mark'], ['npr', 'over NPR'], ['referred_speed', 'over referred speed']] as const;
 /** What is drawn over time before more is asked for. */
@@ -30,7 +31,7 @@ export function comparePage(d: Display, a: string, b: string): View {
   const more = h('select', { 'aria-label': 'Draw also', 'data-q': 'compare-more', onchange: () => { if (more.value) names.push(more.value); void draw(); } });
   const reset = h('button', { type: 'button', 'data-q': 'zoom-reset', onclick: () => zoom(null) }, 'Reset zoom');
   const said = h('p', { role: 'status', 'data-q': 'compare-said' });
-  const plots = h('div', { class: 'overlay', 'data-q': 'overlay' });
+  const plots = h('div', { class: 'overlay', 'data-q': 'overlay', tabindex: '0', role: 'group', 'aria-label': `Plots of both runs: ${zoomHelp}`, onkeydown: (e: Event) => onKey(e as KeyboardEvent) });
   const tables = h('div', {});
   const el = h('div', { class: 'page compare' }, h('h1', {}, 'Two runs beside each other'),
     h('p', {}, h('span', { class: 'swatch s0', 'aria-hidden': 'true' }), 'old, solid: ', h('a', { href: `#/run/${encodeURIComponent(a)}` }, a), '  ·  ', h('span', { class: 'swatch s1', 'aria-hidden': 'true' }), 'new, dashed: ', h('a', { href: `#/run/${encodeURIComponent(b)}` }, b), '  ·  ',
@@ -78,6 +79,17 @@ export function comparePage(d: Display, a: string, b: string): View {
       c.setScale('x', to ?? { min: x[0] as number, max: x[x.length - 1] as number });
     }
     attr(reset, 'disabled', to === null);
+  }
+
+  function onKey(e: KeyboardEvent): void {
+    const c = charts[0];
+    const x = c?.data[0];
+    if (!c || !x || x.length < 2 || !reply || isCurves(reply) || e.ctrlKey || e.metaKey || e.altKey) return;
+    const shown: Stretch = [c.scales['x']?.min ?? 0, c.scales['x']?.max ?? 0];
+    const next = zoomed(e.key, shown, [x[0] as number, x[x.length - 1] as number]);
+    if (next === undefined) return;
+    e.preventDefault();
+    zoom(next && { min: next[0], max: next[1] });
   }
 
   const axes = (p: Palette, values: (ticks: number[]) => string[]): uPlot.Axis[] => {

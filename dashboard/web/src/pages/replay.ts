@@ -114,7 +114,7 @@ export function replayPage(runID: string, rig: string, taste: Taste): View {
       },
       before: async (to, signal) => (to <= 0 ? [] : rowsOf(api, runID, start, Math.max(0, to - reach), to, young, signal, columnsOf(taste.plots()))),
     }, start, length, () => columnsOf(taste.plots()));
-    const display: Display = { rig, model: () => p.model, fresh: () => ({ kind: 'replay' }), palette: taste.palette, units: taste.units, plots: taste.plots, choosePlots, operator: () => '', session: () => openSession, acknowledger: null };
+    const display: Display = { rig, follows: [], model: () => p.model, fresh: () => ({ kind: 'replay' }), palette: taste.palette, units: taste.units, plots: taste.plots, choosePlots, operator: () => '', session: () => openSession, acknowledger: null };
     inner = watchDisplay(display, `Replay of run ${runID}`, null);
     body.replaceChildren(inner.el);
     player = p;

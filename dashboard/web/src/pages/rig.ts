@@ -93,7 +93,7 @@ export function rigPage(d: Display): View {
         ['Run', on ? `${on.number} (${on.id}), started by ${on.by}` : 'none'],
       ];
       refill(facts, JSON.stringify(list), () => list.flatMap(([k, v]) => [h('dt', {}, k), h('dd', {}, v)]));
-      const parts = s ? pathParts(s, dataAge(m, now)) : [];
+      const parts = s ? pathParts(s, dataAge(m, now), d.follows) : [];
       refill(path, JSON.stringify(parts), () => parts.map((x) => h('tr', { 'data-bad': x.bad }, h('th', { scope: 'row' }, x.name), h('td', {}, x.bad ? `▲ ${x.said}` : x.said))));
       attr(lifeSection, 'hidden', m.life === null);
       life.show(m.life, u);

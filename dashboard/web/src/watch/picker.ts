@@ -5,19 +5,34 @@ import { type View, attr, h, refill } from '../dom';
 import { mostPlots, plotsOf, standardPlots, standardTitles } from './plots';
 
 export function picker(d: Display): View {
-  const main = h('button', { type: 'button', 'aria-expanded': 'false', 'data-q': 'pick', onclick: () => show(panel.hidden === true) }, 'Traces…');
+  const main = h('button', { type: 'button', 'aria-expanded': 'false', 'aria-keyshortcuts': 'T', title: 'Choose what is traced (key T)', 'data-q': 'pick', onclick: () => show(panel.hidden === true) }, 'Traces…');
   const find = h('input', { type: 'search', placeholder: 'find', 'aria-label': 'Find a quantity or channel', 'data-q': 'pick-find' });
   const list = h('div', { class: 'picklist' });
   const reset = h('button', { type: 'button', 'data-q': 'pick-reset', onclick: () => d.choosePlots(standardPlots) }, 'As at first');
   const full = h('span', { class: 'extra', role: 'status' });
   const panel = h('div', { class: 'pickpanel', role: 'group', 'aria-label': 'What is traced', hidden: true }, h('div', { class: 'filter' }, find, reset), full, list);
-  const el = h('div', { class: 'picker', onkeydown: (e: Event) => { if ((e as KeyboardEvent).key === 'Escape') show(false); } }, main, panel);
+  const el = h('div', { class: 'picker', onkeydown: (e: Event) => inPanel(e as KeyboardEvent) }, main, panel);
 
   function show(open: boolean): void {
     if (panel.hidden === !open) return;
     panel.hidden = !open;
     (open ? find : main).focus();
   }
+  /** Escape closes; the arrows go through the list from the field on. */
+  function inPanel(e: KeyboardEvent): void {
+    if (e.key === 'Escape') show(false);
+    if (panel.hidden || (e.key !== 'ArrowDown' && e.key !== 'ArrowUp')) return;
+    e.preventDefault();
+    const stops = [find, ...list.querySelectorAll<HTMLElement>('input:enabled')];
+    stops[stops.indexOf(document.activeElement as HTMLElement) + (e.key === 'ArrowDown' ? 1 : -1)]?.focus();
+  }
+
+  function onKey(e: KeyboardEvent): void {
+    if (e.key.toLowerCase() !== 't' || /^(INPUT|SELECT|TEXTAREA)$/.test((e.target as HTMLElement).tagName) || e.ctrlKey || e.metaKey || e.altKey) return;
+    e.preventDefault(); // the letter is the key, not the text
+    show(true);
+  }
+  document.addEventListener('keydown', onKey);
   const outside = (e: Event): void => { if (!el.contains(e.target as Node)) panel.hidden = true; };
   document.addEventListener('pointerdown', outside);
 
@@ -53,6 +68,9 @@ export function picker(d: Display): View {
         })];
       }));
     },
-    destroy: () => document.removeEventListener('pointerdown', outside),
+    destroy() {
+      document.removeEventListener('pointerdown', outside);
+      document.removeEventListener('keydown', onKey);
+    },
   };
 }

@@ -11,6 +11,7 @@ import type { Palette } from '../palette';
 import { Decimator, chokedSpans, gapSeconds } from '../ring';
 import { clock, facility, signedClock } from '../time';
 import { type UnitSet, age, fixed } from '../units';
+import { type Stretch, zoomHelp, zoomed as afterKey } from '../zoom';
 import { font } from './canvas';
 import { picker } from './picker';
 import { type Plot, chosenPlots } from './plots';
@@ -40,11 +41,11 @@ export interface Traces extends View {
 
 /** `tools` stand at the end of the bar; `make` gives the plots. */
 export function traces(d: Display, tools: HTMLElement | null, make: (d: Display) => Plot[] = chosenPlots): Traces {
-  const host = h('div', { class: 'plots' });
+  const host = h('div', { class: 'plots', tabindex: '0', role: 'group', 'aria-label': `Traces: ${zoomHelp}; with shift the arrow keys move the cursor`, 'data-q': 'plots', onkeydown: (e: Event) => onKey(e as KeyboardEvent) });
   const at = h('span', { class: 'at' });
   let span = 120;
   let frozenAt = NaN;
-  let zoomed: [number, number] | null = null;
+  let zoomed: Stretch | null = null;
   let held = NaN; // the end of the axis while a stretch is being drawn on it
   const choices = spans.map((s) => h('button', { type: 'button', 'aria-pressed': String(s === span), onclick: () => choose(s) }, `${s} s`));
   const freeze = h('button', { type: 'button', 'aria-pressed': 'false', onclick: () => { frozenAt = Number.isNaN(frozenAt) ? d.model().newest : NaN; } }, 'Freeze');
@@ -57,6 +58,36 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
     span = s;
     zoomed = null;
     choices.forEach((b, i) => attr(b, 'aria-pressed', String(spans[i] === span)));
+  }
+
+  /** The end of the axis. */
+  function axisEnd(): number {
+    if (zoomed) return zoomed[1];
+    return !Number.isNaN(frozenAt) ? frozenAt : Number.isNaN(held) ? d.model().newest : held;
+  }
+
+  function onKey(e: KeyboardEvent): void {
+    const m = d.model();
+    if (e.ctrlKey || e.metaKey || e.altKey || m.ring.size === 0) return;
+    const end = axisEnd();
+    const shown: Stretch = zoomed ?? [end - span, end];
+    if (e.shiftKey && (e.key === 'ArrowLeft' || e.key === 'ArrowRight')) point(e.key === 'ArrowLeft' ? -1 : 1);
+    else {
+      const next = afterKey(e.key, shown, [Math.min(shown[0], m.ring.t(0)), Math.max(end, m.newest)]);
+      if (next === undefined) return;
+      zoomed = next;
+    }
+    e.preventDefault();
+    e.stopPropagation(); // in a replay the arrow keys step scans elsewhere
+  }
+
+  /** Moves the cursor by a hundredth of the axis; it begins at the end. */
+  function point(way: -1 | 1): void {
+    const first = rows[0]?.chart;
+    if (!first) return;
+    const wide = first.over.clientWidth;
+    const left = (first.cursor.left ?? -1) < 0 ? wide - 1 : first.cursor.left as number;
+    first.setCursor({ left: Math.max(0, Math.min(wide - 1, left + (way * wide) / 100)), top: 1 });
   }
 
   interface Row { el: HTMLElement; box: HTMLElement; width: number; plot: Plot; chart: uPlot; thin: Decimator; values: HTMLElement[] }
@@ -80,6 +111,7 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
     layout();
   });
   observer.observe(host);
+  host.addEventListener('mousedown', (e) => e.preventDefault()); // a press draws a stretch, it does not take the keys
   host.addEventListener('pointerdown', () => { held = d.model().newest; });
   const letGo = (): void => { held = NaN; };
   window.addEventListener('pointerup', letGo);
@@ -237,7 +269,7 @@ export function traces(d: Display, tools: HTMLElement | null, make: (d: Display)
     pick.update(now);
     const m = d.model();
     const isFrozen = !Number.isNaN(frozenAt);
-    const end = zoomed ? zoomed[1] : isFrozen ? frozenAt : Number.isNaN(held) ? m.newest : held;
+    const end = axisEnd();
     attr(freeze, 'aria-pressed', String(isFrozen));
     if (!Number.isFinite(end) || width < 200) return;
     attr(whole, 'hidden', zoomed === null);
