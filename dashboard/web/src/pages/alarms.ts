@@ -54,7 +54,7 @@ export function alarmsPage(d: Display): View {
     h('section', {}, h('h2', {}, 'Not annunciated: shelved, suppressed by design, out of service'), h('table', { class: 'list aside' }, head('Priority', 'State', '>Until', 'Alarm', 'Reason', 'Action'), quiet)),
     h('div', { class: 'columns' },
       h('section', {}, h('h2', {}, 'History of this run, newest first'), h('div', { class: 'filter', role: 'search' }, priority, words, matches),
-        h('table', { class: 'list past' }, head(`>Time, ${facility.sign()}`, 'Priority', 'Alarm', 'From', 'To', 'Note', 'Action'), past)),
+        h('table', { class: 'list past' }, head(`>Time, ${facility.sign()}`, 'Priority', 'Alarm', 'From', 'To', 'Note, action'), past)),
       h('section', {}, h('h2', {}, 'Alarm figures of this run'), figures.el))));
 
   function button(a: Alarm, step: Step, cls: string): HTMLElement {
@@ -119,10 +119,10 @@ export function alarmsPage(d: Display): View {
       refill(past, (last ? `${m.history.length}:${last.t}:${last.alarm.id}:${last.to}:${JSON.stringify(filter)}` : 'none') + [...latest.values()].map((e) => d.acknowledger?.state(e.alarm)).join() + mayAct, () => {
         const found = [...m.history].reverse().filter((e) => passes(e.alarm, filter));
         text(matches, found.length < m.history.length ? `${found.length} of ${m.history.length}` : '');
-        if (found.length === 0) return empty(last ? 'Nothing passes the filter' : 'Nothing yet', 7);
+        if (found.length === 0) return empty(last ? 'Nothing passes the filter' : 'Nothing yet', 6);
         return found.map((e) => h('tr', {},
-          h('td', { class: 'num' }, clock(e.t)), h('td', {}, priorityBadge(e.alarm)), h('td', { title: e.alarm.rule }, e.alarm.title), h('td', {}, stateWord[e.from]), h('td', {}, stateWord[e.to]), h('td', {}, e.note),
-          h('td', {}, h('div', { class: 'asides' }, ...(latest.get(e.alarm.rule) === e ? asideSteps(e.alarm).map((s) => button(e.alarm, s, 'small')) : [])))));
+          h('td', { class: 'num' }, clock(e.t)), h('td', {}, priorityBadge(e.alarm)), h('td', { title: e.alarm.rule }, e.alarm.title), h('td', {}, stateWord[e.from]), h('td', {}, stateWord[e.to]),
+          h('td', {}, e.note, h('div', { class: 'asides' }, ...(latest.get(e.alarm.rule) === e ? asideSteps(e.alarm).map((s) => button(e.alarm, s, 'small')) : [])))));
       });
       figures.update(now);
     },
