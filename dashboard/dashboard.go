@@ -134,6 +134,7 @@ func (s *Server) routes() map[string]handler {
 		"DELETE /api/session":                 s.signOut,
 		"GET /api/runs/{id}/exceedances":      s.exceedances,
 		"GET /api/engines/{serial}/life":      s.life,
+		"GET /api/nozzles/{serial}/life":      s.nozzleLife,
 		"GET /healthz":                        s.healthz,
 		"GET /metrics":                        s.metrics,
 		"GET /openapi.json":                   s.openAPI,

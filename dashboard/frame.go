@@ -320,6 +320,19 @@ type runJSON struct {
 	Started string  `json:"started"`
 	Ended   *string `json:"ended"`
 	By      string  `json:"by"`
+
+	identityJSON
+}
+
+// identityJSON says of what a run is a run.
+type identityJSON struct {
+	Designation  string `json:"designation"` // number by the rig file's scheme, "" = none
+	Test         string `json:"test"`
+	Purpose      string `json:"purpose"`
+	EngineBuild  string `json:"engine_build"`
+	NozzleSerial string `json:"nozzle_serial"`
+	FuelBatch    string `json:"fuel_batch"`
+	Aborted      bool   `json:"aborted"` // it ended, and its start had not reached idle
 }
 
 func rfc3339(ns int64) string { return time.Unix(0, ns).UTC().Format(time.RFC3339Nano) }
@@ -333,7 +346,10 @@ func optional(ns int64) *string {
 }
 
 func runView(r *monitor.Run) runJSON {
-	return runJSON{ID: r.ID, Number: r.Number, Rig: r.Rig, Engine: r.Engine, Started: rfc3339(r.Started), Ended: optional(r.Ended), By: r.By}
+	return runJSON{
+		ID: r.ID, Number: r.Number, Rig: r.Rig, Engine: r.Engine, Started: rfc3339(r.Started), Ended: optional(r.Ended), By: r.By,
+		identityJSON: identityJSON{r.Designation, r.Test, r.Purpose, r.EngineBuild, r.NozzleSerial, r.FuelBatch, r.Aborted},
+	}
 }
 
 // channelJSON is what hello says of a channel.
@@ -389,6 +405,12 @@ func quantityViews() []quantityJSON {
 	return out
 }
 
+// coolDownJSON is what is asked for before the next start; 0 = nothing.
+type coolDownJSON struct {
+	AtLeast       float64 `json:"at_least_s"`       // since the fuel is off
+	BeforeRestart float64 `json:"before_restart_s"` // since the rotor rests
+}
+
 // place is where among outcomes and scans a hello stands.
 type place struct {
 	n uint64 // of the outcome before
@@ -435,6 +457,13 @@ func appendHello(dst []byte, m *pipeline.Machine, s *pipeline.State, at place, b
 	} else {
 		dst = append(name(dst, "life"), "null"...)
 	}
+	if life, ok := s.NozzleLife(cfg.Rig.NozzleSerial); ok {
+		dst = member(dst, "nozzle_life", life)
+	} else {
+		dst = append(name(dst, "nozzle_life"), "null"...)
+	}
+	l := &cfg.Compute.EGT.Limits
+	dst = member(dst, "cooldown", coolDownJSON{seconds(l.CoolFuelOff), seconds(l.CoolRest)})
 	dst = member(dst, "log", append([]pipeline.Entry{}, s.Log...))
 	dst = open(name(dst, "status"), "status", &pipeline.Outcome{Epoch: s.Epoch, N: at.n, T: s.Host})
 	return append(appendStatus(dst, &status), '}', '}')

@@ -16,6 +16,7 @@ type exceedancesJSON struct {
 	Exceedances []pipeline.Exceedance `json:"exceedances"`
 	Events      []engineEventJSON     `json:"events"`
 	Life        *pipeline.Life        `json:"life"` // when the run ended; now while it is on
+	NozzleLife  *pipeline.NozzleLife  `json:"nozzle_life"`
 }
 
 type engineEventJSON struct {
@@ -41,6 +42,9 @@ func (s *Server) exceedances(w http.ResponseWriter, r *http.Request) error {
 		if err := s.ask(r.Context(), "", func(cfg *pipeline.Config, _ *pipeline.Machine, st *pipeline.State) {
 			if life, ok := st.Life(cfg.Rig.EngineSerial); ok && st.Run.ID == run.ID {
 				out.Life = &life
+			}
+			if life, ok := st.NozzleLife(cfg.Rig.NozzleSerial); ok && st.Run.ID == run.ID {
+				out.NozzleLife = &life
 			}
 		}); err != nil {
 			return err
@@ -70,6 +74,10 @@ func readExceedances(ctx context.Context, f *runfile.File, h *runfile.Header) (e
 		}
 		return nil
 	})
+	if err == nil && len(h.NozzleLife) > 0 {
+		out.NozzleLife = new(pipeline.NozzleLife)
+		err = json.Unmarshal(h.NozzleLife, out.NozzleLife)
+	}
 	if err != nil {
 		return out, fmt.Errorf("exceedances: %w", err)
 	}
@@ -99,6 +107,22 @@ func (s *Server) life(w http.ResponseWriter, r *http.Request) error {
 	}
 	if !known {
 		return notFound("no engine %q was watched here", serial)
+	}
+	return reply(w, http.StatusOK, life)
+}
+
+// nozzleLife answers with what a nozzle has been through.
+func (s *Server) nozzleLife(w http.ResponseWriter, r *http.Request) error {
+	serial := r.PathValue("serial")
+	var life pipeline.NozzleLife
+	known := false
+	if err := s.ask(r.Context(), "", func(_ *pipeline.Config, _ *pipeline.Machine, st *pipeline.State) {
+		life, known = st.NozzleLife(serial)
+	}); err != nil {
+		return err
+	}
+	if !known {
+		return notFound("no nozzle %q was watched here", serial)
 	}
 	return reply(w, http.StatusOK, life)
 }

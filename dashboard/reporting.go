@@ -37,7 +37,7 @@ func WriteReport(ctx context.Context, w io.Writer, f *runfile.File, h *runfile.H
 		return err
 	}
 	s := report.Source{
-		File: f, Run: *h, Parse: o.Parse, Log: entries, Figures: figures, Exceedances: engine.Exceedances, Life: engine.Life,
+		File: f, Run: *h, Parse: o.Parse, Log: entries, Figures: figures, Exceedances: engine.Exceedances, Life: engine.Life, NozzleLife: engine.NozzleLife,
 		Build: o.Build, At: o.At, Progress: o.Progress,
 	}
 	for _, e := range engine.Events {

@@ -58,6 +58,8 @@ type storedRun struct {
 	Parent       *string `json:"parent"` // of a reduction; else null
 	ParentDigest *string `json:"parent_digest"`
 	ReducedBy    *string `json:"reduced_by"`
+
+	identityJSON
 }
 
 func viewRun(r *runfile.Run) storedRun {
@@ -65,6 +67,7 @@ func viewRun(r *runfile.Run) storedRun {
 		ID: r.ID, Number: r.Number, Rig: r.Rig, Engine: strings.TrimSpace(r.Engine + " " + r.EngineSerial), Title: r.Title, By: r.Operator,
 		Started: rfc3339(r.Started), Ended: optional(r.Ended), State: r.State, Keep: r.Keep, Notes: r.Notes,
 		Tags: append([]string{}, r.Tags...), SizeBytes: r.Size, Alarms: r.Alarms, Config: r.ConfigHash, Build: r.Build, Digest: r.Digest,
+		identityJSON: identityJSON{r.Designation, r.Test, r.Purpose, r.EngineBuild, r.NozzleSerial, r.FuelBatch, r.Aborted},
 	}
 	if r.State == runfile.StateRunning {
 		v.State = "active"

@@ -84,6 +84,10 @@ const (
 	StarterTime
 	StarterHour
 	RundownTime
+	StarterStarts
+	SinceFuelOff
+	SinceRest
+	CoolDownLeft
 	NumQuantities
 )
 
@@ -171,6 +175,10 @@ var infos = [NumQuantities]Info{
 	StarterTime:              {"starter_s", "s", "Time of cranking in one go"},
 	StarterHour:              {"starter_hour_s", "s", "Time of cranking in the last hour"},
 	RundownTime:              {"rundown_s", "s", "Time of the last rundown, from below idle to rest"},
+	StarterStarts:            {"starter_starts_hour", "", "Starter engagements in the last hour"},
+	SinceFuelOff:             {"fuel_off_s", "s", "Time since the fuel is off after a run"},
+	SinceRest:                {"rest_s", "s", "Time since the rotor rests after a run"},
+	CoolDownLeft:             {"cooldown_left_s", "s", "Time left of the cool-down"},
 }
 
 // Info gives name, unit and title.

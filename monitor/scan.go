@@ -31,6 +31,16 @@ type Run struct {
 	Ended   int64  `json:"ended"`   // 0 while it goes on
 	By      string `json:"by"`      // "engine" or the operator who started it
 	Alarms  int    `json:"alarms"`  // raised so far, each time that one was
+
+	Designation  string `json:"designation"`   // number by the rig file's scheme, "" = none
+	Series       string `json:"series"`        // of Designation: the same with a place for the number
+	InSeries     uint64 `json:"in_series"`     // the number, from 1
+	Test         string `json:"test"`          // that it belongs to
+	Purpose      string `json:"purpose"`       //
+	EngineBuild  string `json:"engine_build"`  // build standard
+	NozzleSerial string `json:"nozzle_serial"` //
+	FuelBatch    string `json:"fuel_batch"`    //
+	Aborted      bool   `json:"aborted"`       // ended: its start did not reach idle
 }
 
 // Mark is a note that an operator pins to the run's time line.

@@ -1,6 +1,7 @@
 package rules
 
 import (
+	"fmt"
 	"strconv"
 	"strings"
 	"time"
@@ -23,7 +24,7 @@ type Equipment struct {
 func AllEquipment() Equipment {
 	return Equipment{
 		Bands:  []egt.Band{{Name: "start", Kind: egt.KindStart, Allowance: second}, {Name: "run", Kind: egt.KindRun, Allowance: second}},
-		Limits: egt.Limits{Spread: 1, Rise: 1, StarterOnce: second, StarterHour: second, Rundown: second},
+		Limits: egt.Limits{Spread: 1, Rise: 1, StarterOnce: second, StarterHour: second, StarterRuns: 1, Rundown: second, CoolFuelOff: second},
 		EGT:    true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true,
 	}
 }
@@ -246,6 +247,24 @@ func limitRules(q *Equipment) []Rule {
 	}
 	starter("starter_once", "starter_s", "in one go", l.StarterOnce)
 	starter("starter_hour", "starter_hour_s", "in an hour", l.StarterHour)
+	add(q.Speed && l.StarterRuns > 0, Rule{
+		Name: "starter_starts", When: fmt.Sprintf("starter_starts_hour > %d", l.StarterRuns), Priority: Advisory,
+		Title:    fmt.Sprintf("More than %d starts in an hour", l.StarterRuns),
+		Text:     fmt.Sprintf("The starter was engaged {starter_starts_hour:.0} times within an hour (limit %d). Follow the facility's procedure for starter duty.", l.StarterRuns),
+		Caution:  "The starter and its supply heat up with each engagement and need their time to cool, however short it was.",
+		Response: "Facility procedure for starter duty.",
+	})
+	early := `phase == "lighting"`
+	if q.FuelFlow {
+		early = `(phase == "lighting" or phase == "cranking" and fuel_flow_kg_s > ` + number(egt.FuelOn) + ")"
+	}
+	add(q.Speed && (l.CoolFuelOff > 0 || l.CoolRest > 0), Rule{
+		Name: "start_before_cooldown", When: early + " and cooldown_left_s > 0", Priority: Note, OffDelay: second,
+		Title:    "Start before the cool-down is over",
+		Text:     "A start has begun with {cooldown_left_s:.0} of the cool-down left. Follow the facility's procedure for cool-down times.",
+		Caution:  "Shaft and casing may still have different temperatures: the rotor may be bowed and rub. Watch vibration and the speed at which the start accelerates.",
+		Response: "Facility procedure for cool-down times.",
+	})
 	add(q.Speed && l.Rundown > 0, Rule{
 		Name: "rundown_short", When: `phase == "cooling" and rundown_s < ` + number(float64(l.Rundown)/1e9), Priority: Advisory,
 		Title:    "Rundown shorter than " + seconds(l.Rundown),

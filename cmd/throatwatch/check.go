@@ -238,6 +238,12 @@ func printRig(w *strings.Builder, bundle config.Bundle, cfg *pipeline.Config) {
 	fmt.Fprintf(w, "Rig     %s\n", phrase(info.ID, info.Title))
 	fmt.Fprintf(w, "Engine  %s\n", phrase(info.EngineModel, named("serial ", info.EngineSerial), named("build ", info.EngineBuild), named("limits ", info.LimitsVersion)))
 	printNozzle(w, cfg)
+	fmt.Fprintf(w, "Fuel    %s\n", fuel(&info.Fuel))
+	runs := "not numbered"
+	if cfg.Run.Series != "" {
+		runs = "numbered " + strings.Replace(cfg.Run.Series, pipeline.RunPlace, strings.Repeat("0", cfg.Run.Width-1)+"1", 1) + " and on"
+	}
+	fmt.Fprintf(w, "Runs    %s\n", phrase(runs, named("test ", info.Test), info.Purpose))
 	fmt.Fprintf(w, "Scans   %g per second; a sample is waited for %s; a run ends after %s off\n",
 		1e9/float64(cfg.Align.Period), span(cfg.Align.Lateness), span(cfg.Run.EndAfter))
 	for i, in := range cfg.Align.Inputs {
@@ -321,6 +327,17 @@ func phrase(parts ...string) string {
 	return strings.Join(out, ", ")
 }
 
+// fuel sums up what is stated of the batch.
+func fuel(f *pipeline.Fuel) string {
+	value := func(v rules.Reading, before string, scale float64, after string) string {
+		if !v.Known {
+			return ""
+		}
+		return before + number(v.V/scale) + after
+	}
+	return phrase(named("batch ", f.Batch), value(f.Density, "", 1, " kg/m³"), value(f.HeatingValue, "lower heating value ", 1e6, " MJ/kg"), value(f.HydrogenToCarbon, "H/C ", 1, ""))
+}
+
 func named(name, value string) string {
 	if value == "" {
 		return ""
@@ -334,7 +351,7 @@ func printNozzle(w *strings.Builder, cfg *pipeline.Config) {
 	if z.AreaBasis == nozzle.AreaCold {
 		area = fmt.Sprintf("throat %s mm² at %s °C, grows %s/K", number(z.ThroatArea*1e6), number(z.ReferenceTemperature-273.15), number(z.ExpansionCoefficient))
 	}
-	fmt.Fprintf(w, "Nozzle  %s\n", phrase(z.Kind.String(), named("serial ", cfg.Rig.NozzleSerial), area+", "+stated(z.AreaU95)))
+	fmt.Fprintf(w, "Nozzle  %s\n", phrase(z.Kind.String(), named("serial ", cfg.Rig.NozzleSerial), named("measured ", cfg.Rig.NozzleMeasured), area+", "+stated(z.AreaU95)))
 	fmt.Fprintf(w, "        Cd %s, CT %s (%s)\n        NPR of tables at station %d, duct loss %s %% of p7\n",
 		coefficient(z.Discharge, z.DischargeU95), coefficient(z.Thrust, z.ThrustU95), z.Basis, z.CoefficientStation, number(100*z.DuctLoss))
 	choke := "one-dimensional critical NPR"

@@ -301,7 +301,7 @@ func (in *importer) step(ctx context.Context, reader *recording.Reader, bundle c
 	}
 	feed := watch.NewFeed(core, store)
 	host := row.T
-	if err := feed.Begin(ctx, pipeline.Boot{Epoch: 1, Build: watch.Build(), GOARCH: runtime.GOARCH}, bundle.Marshal(), host); err != nil {
+	if err := feed.Begin(ctx, pipeline.Boot{Epoch: 1, Build: watch.Build(), GOARCH: runtime.GOARCH, Imported: true}, bundle.Marshal(), host); err != nil {
 		return err
 	}
 	act := func(do string) error {

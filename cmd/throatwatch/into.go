@@ -41,8 +41,12 @@ func rehearseInto(ctx context.Context, bundle config.Bundle, cfg pipeline.Config
 	if err != nil {
 		return err
 	}
+	past, err := store.Past(ctx, core.State)
+	if err != nil {
+		return err
+	}
 	feed := watch.NewFeed(core, store)
-	if err := feed.Begin(ctx, pipeline.Boot{Epoch: core.State.Epoch + 1, Build: watch.Build(), GOARCH: runtime.GOARCH}, bundle.Marshal(), o.Start); err != nil {
+	if err := feed.Begin(ctx, pipeline.Boot{Epoch: core.State.Epoch + 1, Build: watch.Build(), GOARCH: runtime.GOARCH, Past: past}, bundle.Marshal(), o.Start); err != nil {
 		return err
 	}
 	began, messages := time.Now(), 0

@@ -2,7 +2,11 @@ package main
 
 import (
 	"bytes"
+	"encoding/csv"
 	"encoding/json"
+	"os"
+	"path/filepath"
+	"strconv"
 	"strings"
 	"testing"
 
@@ -40,10 +44,57 @@ func TestLifeCommand(t *testing.T) {
 	if code, text, _ = run("ML5-0042"); code != 0 || !strings.Contains(text, "ML5-0042") || !strings.Contains(text, "run_max") {
 		t.Errorf("exit code %d: %s", code, text)
 	}
+	var nozzles []pipeline.NozzleLife
+	if code, text, _ = run("--nozzles", "--json"); code != 0 || json.Unmarshal([]byte(text), &nozzles) != nil ||
+		len(nozzles) != 1 || nozzles[0].Serial != "NZ-0311" || nozzles[0].Starts != 2 || nozzles[0].HoursChoked <= 0 || nozzles[0].HoursChoked >= nozzles[0].Hours {
+		t.Errorf("exit code %d: %s", code, text)
+	}
+	code, text, _ = run("--csv")
+	rows, err := csv.NewReader(strings.NewReader(text)).ReadAll()
+	if code != 0 || err != nil || len(rows) != 2 || rows[0][0] != "engine_serial" || rows[1][0] != "ML5-0042" || rows[1][1] != "2" || len(rows[0]) != 10+3*4 {
+		t.Errorf("exit code %d, %v: %q", code, err, rows)
+	}
+	outlasting(t, dir, nozzles[0])
 	if code, _, text = run("other"); code != 1 || !strings.Contains(text, `no engine "other"`) {
 		t.Errorf("exit code %d: %s", code, text)
 	}
 	if code, _, _ = run("one", "two"); code != 2 {
 		t.Errorf("exit code %d with two serial numbers", code)
+	}
+}
+
+// outlasting takes away the runs and the state of a data folder of two tests: lives and run
+// numbers go on all the same, by what is left of the runs that were removed.
+func outlasting(t *testing.T, dir string, before pipeline.NozzleLife) {
+	t.Helper()
+	list := storedRuns(t, dir)
+	if len(list) != 2 || list[0].Designation != "ML5-0042/7/T-114/002" || list[1].Designation != "ML5-0042/7/T-114/001" ||
+		list[0].Test != "T-114" || list[0].NozzleSerial != "NZ-0311" || list[0].EngineBuild != "7" || list[0].FuelBatch != "AB-2026-007" || list[0].Aborted {
+		t.Fatalf("%+v", list)
+	}
+	for _, r := range list {
+		if code, _, stderr := invoke(t, "delete", r.ID, "--data", dir, "--number", strconv.FormatUint(r.Number, 10), "--by", "T. Ester", "--reason", "test"); code != 0 {
+			t.Fatal(stderr)
+		}
+	}
+	idle, err := filepath.Glob(filepath.Join(dir, "idle-*.db*"))
+	if err != nil || len(idle) == 0 {
+		t.Fatal(idle, err)
+	}
+	for _, name := range idle {
+		if err := os.Remove(name); err != nil {
+			t.Fatal(err)
+		}
+	}
+	if code, _, stderr := invoke(t, "rehearse", rehearseRig, "--into", dir, "--start", "2026-03-03T09:00:00Z", "--quick", "--rate", "10"); code != 0 {
+		t.Fatal(stderr)
+	}
+	if list := storedRuns(t, dir); len(list) != 1 || list[0].Designation != "ML5-0042/7/T-114/003" || list[0].Number != 3 {
+		t.Errorf("%+v", list)
+	}
+	code, text, _ := invoke(t, "life", "NZ-0311", "--nozzles", "--json", "--data", dir)
+	var now []pipeline.NozzleLife
+	if err := json.Unmarshal([]byte(text), &now); code != 0 || err != nil || len(now) != 1 || now[0].Starts != before.Starts+1 || now[0].HoursChoked <= before.HoursChoked {
+		t.Errorf("%s, before %+v", text, before)
 	}
 }

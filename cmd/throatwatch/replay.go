@@ -2,6 +2,7 @@ package main
 
 import (
 	"bufio"
+	"cmp"
 	"context"
 	"encoding/json"
 	"errors"
@@ -58,6 +59,14 @@ type runLine struct {
 	ReducedBy    string `json:"reduced_by,omitempty"`
 	TimeZone     string `json:"time_zone"` // of the facility, "" = UTC
 
+	Designation  string `json:"designation"` // number by the rig file's scheme, "" = none
+	Test         string `json:"test"`
+	Purpose      string `json:"purpose"`
+	EngineBuild  string `json:"engine_build"`
+	NozzleSerial string `json:"nozzle_serial"`
+	FuelBatch    string `json:"fuel_batch"`
+	Aborted      bool   `json:"aborted"` // its start did not reach idle
+
 	started rules.Time
 
 	EffectiveArea    *float64 `json:"effective_area_m2"` // mean over steady choked scans
@@ -97,7 +106,7 @@ func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) i
 	if slices.ContainsFunc(list, func(r runLine) bool { return zoneName(zoneOf(r.TimeZone)) != "UTC" }) {
 		started = "STARTED (FACILITY)"
 	}
-	_, _ = fmt.Fprintln(t, "RUN\tENGINE\t"+started+"\tLENGTH\tALARMS\tSTATE\tSIZE\tEFFECTIVE AREA\tDRIFT")
+	_, _ = fmt.Fprintln(t, "RUN\tNUMBER\tENGINE\t"+started+"\tLENGTH\tALARMS\tSTATE\tSIZE\tEFFECTIVE AREA\tDRIFT")
 	for _, r := range list {
 		length := "–"
 		if r.DurationS != nil {
@@ -107,8 +116,8 @@ func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) i
 		if r.Parent != "" {
 			id = "  of it: " + id
 		}
-		_, _ = fmt.Fprintf(t, "%s\t%s %s\t%s\t%s\t%d\t%s\t%.1f MB\t%s\t%s\n", id, r.Engine, r.EngineSerial,
-			stamp(r.started, zoneOf(r.TimeZone)), length, r.Alarms, r.State, float64(r.SizeBytes)/1e6,
+		_, _ = fmt.Fprintf(t, "%s\t%s\t%s %s\t%s\t%s\t%d\t%s\t%.1f MB\t%s\t%s\n", id, cmp.Or(r.Designation, "–"), r.Engine, r.EngineSerial,
+			stamp(r.started, zoneOf(r.TimeZone)), length, r.Alarms, stateOf(&r), float64(r.SizeBytes)/1e6,
 			measure(r.EffectiveArea, r.EffectiveAreaU95, 1e4, "%.2f", "cm²"), measure(r.AreaDrift, r.AreaDriftU95, 1, "%+.2f", "%"))
 	}
 	_ = t.Flush()
@@ -116,6 +125,14 @@ func runsCommand(ctx context.Context, args []string, stdout, stderr io.Writer) i
 		_, _ = fmt.Fprintln(stdout, "no such runs are stored")
 	}
 	return 0
+}
+
+// stateOf says how a run stands.
+func stateOf(r *runLine) string {
+	if r.Aborted {
+		return r.State + ", start aborted"
+	}
+	return r.State
 }
 
 func listRuns(ctx context.Context, dir string, filter runfile.Filter) (list []runLine, err error) {
@@ -136,6 +153,7 @@ func listRuns(ctx context.Context, dir string, filter runfile.Filter) (list []ru
 			ID: r.ID, Number: r.Number, Rig: r.Rig, Engine: r.Engine, EngineSerial: r.EngineSerial,
 			Started: time.Unix(0, r.Started).UTC().Format(time.RFC3339Nano), State: r.State, Alarms: r.Alarms,
 			SizeBytes: r.Size, TimeZone: r.TimeZone, started: rules.Time(r.Started), Keep: r.Keep, Tags: append([]string{}, r.Tags...), Notes: r.Notes, ConfigHash: r.ConfigHash, Build: r.Build, Digest: r.Digest,
+			Designation: r.Designation, Test: r.Test, Purpose: r.Purpose, EngineBuild: r.EngineBuild, NozzleSerial: r.NozzleSerial, FuelBatch: r.FuelBatch, Aborted: r.Aborted,
 		}
 		if o := r.Reduction(); o != nil {
 			line.Parent, line.ParentDigest, line.ReducedBy = o.Parent, o.ParentDigest, o.By

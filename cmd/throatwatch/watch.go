@@ -207,6 +207,10 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	if err != nil {
 		return err
 	}
+	past, err := w.store.Past(ctx, core.State)
+	if err != nil {
+		return err
+	}
 	listener, err := w.listen(ctx)
 	if err != nil {
 		return err
@@ -246,7 +250,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	clientParts.Go(func() { w.pump(loopCtx) })
 	clientParts.Go(func() { w.report(loopCtx) })
 	go func() {
-		loopEnd <- w.loop.Run(loopCtx, pipeline.Boot{Epoch: epoch, Build: watch.Build(), GOARCH: runtime.GOARCH}, bundle.Marshal())
+		loopEnd <- w.loop.Run(loopCtx, pipeline.Boot{Epoch: epoch, Build: watch.Build(), GOARCH: runtime.GOARCH, Past: past}, bundle.Marshal())
 	}()
 	sideParts.Go(func() {
 		serve := server.Serve

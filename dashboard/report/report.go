@@ -41,6 +41,7 @@ type Source struct {
 	Exceedances []pipeline.Exceedance
 	Engine      []EngineEvent
 	Life        *pipeline.Life // when the run ended; nil = as of its last checkpoint
+	NozzleLife  *pipeline.NozzleLife
 
 	Build    string             // that writes the report
 	At       int64              // when, ns UTC
@@ -107,6 +108,9 @@ func (s *Source) read(ctx context.Context) (*data, error) {
 	d.cfg, d.clock = &cfg, clock{cfg.Rig.Zone()}
 	if life, ok := d.state.Life(cfg.Rig.EngineSerial); ok && s.Life == nil {
 		s.Life = &life // as of the checkpoint
+	}
+	if life, ok := d.state.NozzleLife(cfg.Rig.NozzleSerial); ok && s.NozzleLife == nil {
+		s.NozzleLife = &life
 	}
 	// No row is behind the newest scan; the run of a later stretch is not this one.
 	d.to = d.state.Align.Next

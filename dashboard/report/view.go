@@ -16,6 +16,7 @@ import (
 	"throatwatch/rules"
 	"throatwatch/rules/alarm"
 	"throatwatch/rules/figures"
+	"throatwatch/rules/pipeline"
 )
 
 const (
@@ -42,6 +43,7 @@ type view struct {
 	Details              []table
 	Left                 []string
 	Exceedances, Life    table
+	NozzleLife           table
 	Alarms, AlarmFigures table
 	AlarmNote            string
 	Targets              string
@@ -174,7 +176,10 @@ func (d *data) view() (*view, error) {
 	}
 	h, rig := &d.Run, &d.cfg.Rig
 	name := h.ID
-	if h.Number > 0 {
+	switch {
+	case h.Designation != "":
+		name = h.Designation
+	case h.Number > 0:
 		name = fmt.Sprintf("%d", h.Number)
 	}
 	v := &view{
@@ -196,7 +201,7 @@ func (d *data) view() (*view, error) {
 	v.Faults, v.Out, v.Gaps = d.faults(), d.outs(), d.gaps()
 	v.Timeline = d.timeline()
 	v.Points, v.Details = d.overview(), d.details()
-	v.Exceedances, v.Life = d.exceedances(), d.life()
+	v.Exceedances, v.Life, v.NozzleLife = d.exceedances(), d.life(), d.lifeOfNozzle()
 	v.Alarms = d.alarms()
 	figs, sources := alarmFigures(&d.Figures, d.short)
 	v.AlarmFigures, v.Targets = figs, strings.Join(sources, "; ")
@@ -217,15 +222,21 @@ func (d *data) head() []fact {
 	if h.Ended != 0 {
 		end = d.clock.long(h.Ended) + ", after " + duration(float64(h.Ended-h.Started)/1e9)
 	}
+	if h.Aborted {
+		end += "; its start was given up before idle"
+	}
 	run := h.ID
 	if h.Title != rig.Title {
 		run = joined(run, h.Title)
 	}
 	facts := []fact{
 		{"Run", run},
+		{"Number", or(h.Designation)},
+		{"Test", or(joined(h.Test, h.Purpose))},
 		{"Rig", joined(rig.ID, rig.Title)},
 		{"Engine", or(joined(rig.EngineModel, prefixed("serial ", rig.EngineSerial), prefixed("build ", rig.EngineBuild)))},
-		{"Nozzle", or(joined(d.cfg.Compute.Nozzle.Kind.String(), prefixed("serial ", rig.NozzleSerial)))},
+		{"Nozzle", or(joined(d.cfg.Compute.Nozzle.Kind.String(), prefixed("serial ", rig.NozzleSerial), prefixed("throat area measured on ", rig.NozzleMeasured)))},
+		{"Fuel", or(fuel(&rig.Fuel))},
 		{"Begin", d.clock.long(h.Started)},
 		{"End", end},
 		{"Started by", or(h.Operator)},
@@ -512,18 +523,50 @@ func (d *data) life() table {
 	if d.Life == nil {
 		return t
 	}
-	l := d.Life
-	t.Head[0].Text = "Engine " + or(l.Serial) + ", since it is watched"
-	whole := func(n uint64) string { return strconv.FormatUint(n, 10) }
-	t.Rows = [][]cell{
-		texts("Starts", whole(l.Starts)), texts("Hot starts", whole(l.HotStarts)), texts("Hung starts", whole(l.Hung)),
-		texts("No-lights", whole(l.NoLights)), texts("Flame-outs", whole(l.FlameOuts)), texts("Cycles", whole(l.Cycles)),
-		texts("Hours with a flame", decimal(l.Hours, 3)),
-	}
-	for _, b := range l.Bands {
-		t.Rows = append(t.Rows, texts(fmt.Sprintf("Time above %s, s (%s, %d beyond the allowance)", b.Name, counted(int(b.Excursions), "excursion"), b.Exceedances), decimal(b.Seconds, 1)))
-	}
+	t.Head[0].Text = "Engine " + or(d.Life.Serial) + ", since it is watched"
+	t.Rows = counts(&d.Life.Counts)
 	return t.aligned()
+}
+
+func (d *data) lifeOfNozzle() table {
+	t := table{Head: words("Since it is watched", ""), Empty: "The life of the nozzle is not on record."}
+	t.Head[1].Number = true
+	if d.NozzleLife == nil {
+		return t
+	}
+	t.Head[0].Text = "Nozzle " + or(d.NozzleLife.Serial) + ", on whichever engine, since it is watched"
+	t.Rows = counts(&d.NozzleLife.Counts)
+	return t.aligned()
+}
+
+// counts gives the rows of a life.
+func counts(c *pipeline.Counts) [][]cell {
+	whole := func(n uint64) string { return strconv.FormatUint(n, 10) }
+	rows := [][]cell{
+		texts("Starts", whole(c.Starts)), texts("Aborted starts", whole(c.Aborted)), texts("Hot starts", whole(c.HotStarts)), texts("Hung starts", whole(c.Hung)),
+		texts("No-lights", whole(c.NoLights)), texts("Flame-outs", whole(c.FlameOuts)), texts("Cycles", whole(c.Cycles)),
+		texts("Hours with a flame", decimal(c.Hours, 3)), texts("Hours with the throat choked", decimal(c.HoursChoked, 3)),
+	}
+	for _, b := range c.Bands {
+		name := fmt.Sprintf("Time above %s, s (%s, %d beyond the allowance)", b.Name, counted(int(b.Excursions), "excursion"), b.Exceedances)
+		if b.Peak.Known {
+			name += fmt.Sprintf(", peak %s °C", decimal(b.Peak.V-celsius, 1))
+		}
+		rows = append(rows, texts(name, decimal(b.Seconds, 1)))
+	}
+	return rows
+}
+
+// fuel says what is stated of the batch of fuel.
+func fuel(f *pipeline.Fuel) string {
+	value := func(before string, v rules.Reading, scale float64, unit string) string {
+		if !v.Known {
+			return ""
+		}
+		return before + significant(v.V/scale, 5) + unit
+	}
+	return joined(prefixed("batch ", f.Batch), value("density ", f.Density, 1, " kg/m³"),
+		value("lower heating value ", f.HeatingValue, 1e6, " MJ/kg"), value("H/C ", f.HydrogenToCarbon, 1, ""))
 }
 
 // shape is a sign of a priority that needs no colour.

@@ -39,6 +39,27 @@ type Header struct {
 	Digest       string   `json:"digest,omitempty"` // over the recorded outcomes, hexadecimal
 	Alarms       int      `json:"alarms,omitempty"` // number raised
 	Origin       *Origin  `json:"origin,omitempty"` // nil for a run that a watch recorded
+
+	Identity
+
+	// What the engine and the nozzle have been through when the run ended, in the form of
+	// whoever writes it; empty before, and where it is not known.
+	Life       json.RawMessage `json:"life,omitempty"`
+	NozzleLife json.RawMessage `json:"nozzle_life,omitempty"`
+}
+
+// Identity says of what a run is a run, as people number and file it.
+type Identity struct {
+	Designation    string `json:"designation,omitempty"` // number by the scheme of the rig file
+	Series         string `json:"series,omitempty"`      // of Designation: the same with a place for the number
+	InSeries       uint64 `json:"in_series,omitempty"`   // the number, from 1; never given twice
+	Test           string `json:"test,omitempty"`
+	Purpose        string `json:"purpose,omitempty"`
+	EngineBuild    string `json:"engine_build,omitempty"` // build standard
+	NozzleSerial   string `json:"nozzle_serial,omitempty"`
+	NozzleMeasured string `json:"nozzle_measured_on,omitempty"` // date of its throat area
+	FuelBatch      string `json:"fuel_batch,omitempty"`
+	Aborted        bool   `json:"aborted,omitempty"` // it ended, and its start had not reached idle
 }
 
 // Kinds of an Origin.

@@ -8,7 +8,7 @@
 // not seen is kept apart as assumed.
 //
 // Beside it goes the life of each engine: starts and how they went, cycles, hours
-// lit, time above each band.
+// lit, time above each band; and of each nozzle.
 package egt
 
 // Kind says when a band holds.
@@ -46,6 +46,7 @@ type Band struct {
 type Config struct {
 	Bands  []Band
 	Serial string // of the engine; the pipeline sets it
+	Nozzle string // serial number of the nozzle, "" = not stated; likewise
 	Limits Limits
 }
 
@@ -56,5 +57,8 @@ type Limits struct {
 	Rise        float64 // K above the lowest indicated EGT since the fuel is off
 	StarterOnce int64   // ns of cranking in one go
 	StarterHour int64   // ns of cranking in an hour
+	StarterRuns int     // how often the starter may be engaged in an hour
 	Rundown     int64   // ns, shortest rundown
+	CoolFuelOff int64   // ns from the fuel being off to the next start
+	CoolRest    int64   // ns from the rotor at rest to the next start
 }

@@ -2,6 +2,7 @@ package egt
 
 import (
 	"math"
+	"slices"
 
 	"throatwatch/monitor"
 )
@@ -22,28 +23,32 @@ const (
 	minute      = 60 * second
 )
 
-// MaxEngines is the number of engines whose lives are kept. A further one takes the
-// place of the one that was watched least lately; what that one had been through is in
-// the files of its runs.
+// MaxEngines is the number of engines whose lives are kept, and of nozzles. A further one
+// takes the place of the one that was watched least lately; what that one had been through
+// is in the files of its runs.
 const MaxEngines = 32
 
-// Life is what an engine has been through, as far as it was watched.
+// Life is what an engine, or a nozzle on whichever engine, has been through, as far as it
+// was watched.
 //
 // A start is a light-off below idle after the rotor was at rest or running down; a
 // flame that is lost and lit again while the rotor is kept turning up belongs to the
 // same start. Cranking without a flame is none. A cycle ends with a shutdown after
 // idle was reached: the rotor comes to rest, or is started again on its way down. A
 // hot start is one that exceeded a start band. Hung starts, no lights and flame-outs
-// count once for each start, crank or flame.
+// count once for each start, crank or flame. A start is aborted that is given up before
+// idle: a light-off, or fuel without one for NoLightFor, and the rotor runs down or rests.
 type Life struct {
 	Serial     string
 	Starts     uint64
 	HotStarts  uint64
 	HungStarts uint64
 	NoLights   uint64
+	Aborted    uint64
 	FlameOuts  uint64
 	Cycles     uint64
 	Lit        int64 // ns with a flame
+	Choked     int64 // ns with the throat choked
 	Bands      []BandLife
 	T          int64 // event time of the last scan
 }
@@ -70,11 +75,12 @@ const (
 	EventNoLight
 	EventFlameOut
 	EventIdle // a start reached idle
-	NumEvents = 8
+	EventAborted
+	NumEvents = 9
 )
 
 var eventNames = [NumEvents]string{
-	"rest", "cycle", "start", "hot_start", "hung_start", "no_light", "flame_out", "idle",
+	"rest", "cycle", "start", "hot_start", "hung_start", "no_light", "flame_out", "idle", "aborted_start",
 }
 
 // Each calls yield with the name of every event in the set.
@@ -121,12 +127,14 @@ const hour = 60
 // plain data; the zero value has seen nothing.
 type Engine struct {
 	Lives   []Life
+	Nozzles []Life
 	Serial  string // that the following is about
 	T       int64
 	Seen    bool
 	WasLit  bool
 	Stage   stage
 	Cut     bool   // while running down: the fuel or the flame was off
+	Tried   bool   // a start was tried that has neither reached idle nor been given up
 	Told    Events // what of this start, crank or flame was told already
 	Hung    Timer
 	NoLight Timer
@@ -135,6 +143,9 @@ type Engine struct {
 	Crank   int64       // ns of cranking in one go
 	Cranked [hour]int64 // ns of cranking by minute
 	Minute  int64       // that Cranked was last entered in
+
+	Cranking bool
+	Engaged  [hour]uint8 // starter engagements by minute
 
 	Before      monitor.Phase // of the last scan
 	Down        bool          // running down from idle …
@@ -147,6 +158,10 @@ type Engine struct {
 	Have   bool    // Lowest holds
 	Now    float64 // K, the last value
 	Gap    bool    // there is no value now
+
+	Fired   bool  // there was a flame that no shutdown has followed
+	FuelOff int64 // event time of the last shutdown; 0 = not seen, or idle was reached since
+	Rest    int64 // event time at which the rotor first rested since; 0 = not yet
 }
 
 // Scan is what an engine shows in a scan. NaN stands for what is not known.
@@ -157,6 +172,7 @@ type Scan struct {
 	Fuel      float64 // kg/s
 	Lit       bool
 	LitKnown  bool
+	Choked    bool // since the scan before
 	Phase     monitor.Phase
 }
 
@@ -165,54 +181,105 @@ type Scan struct {
 // the first time only.
 func (c *Config) Watch(e *Engine, s *State, ch *Changes, in *Scan) {
 	if e.Serial != c.Serial {
-		*e = Engine{Lives: e.Lives, Serial: c.Serial}
+		*e = Engine{Lives: e.Lives, Nozzles: e.Nozzles, Serial: c.Serial}
 	}
-	life := c.life(e, in.T)
 	dt := int64(0)
 	if e.Seen {
 		dt = max(in.T-e.T, 0)
 	}
-	e.T, e.Seen, life.T = in.T, true, in.T
+	burnt, choked := int64(0), int64(0)
 	if in.LitKnown && in.Lit && e.WasLit {
-		life.Lit += dt
+		burnt = dt
 	}
+	if in.Choked {
+		choked = min(dt, seenWithin)
+	}
+	e.T, e.Seen = in.T, true
 	e.WasLit = in.LitKnown && in.Lit
 
-	ch.Engine = e.start(life, in)
+	ch.Engine = e.start(in)
 	for i := range c.Bands {
-		c.band(life, e, ch, i, &s.Bands[i])
+		if ch.Exceeded&(uint32(1)<<i) != 0 && c.Bands[i].Kind == KindStart && e.Told&EventHotStart == 0 {
+			e.Told |= EventHotStart
+			ch.Engine |= EventHotStart
+		}
 	}
 	e.starter(in, min(dt, seenWithin))
 	ch.Engine |= e.rundown(in)
 	e.afterglow(in)
+	e.coolDown(in)
 	ch.Moved = ch.Moved || ch.Engine != 0
+
+	c.enter(account(&e.Lives, c.Serial, in.T), s, ch, burnt, choked)
+	if c.Nozzle != "" {
+		c.enter(account(&e.Nozzles, c.Nozzle, in.T), s, ch, burnt, choked)
+	}
 }
 
-// life gives the account of the engine, with the bands of c.
-func (c *Config) life(e *Engine, t int64) *Life {
+// Watched tells whether a serial number is among lives.
+func Watched(lives []Life, serial string) bool {
+	return slices.ContainsFunc(lives, func(l Life) bool { return l.Serial == serial })
+}
+
+// account gives the life of a serial number at event time t.
+func account(lives *[]Life, serial string, t int64) *Life {
 	at, oldest := -1, 0
-	for i := range e.Lives {
-		if e.Lives[i].Serial == c.Serial {
+	for i := range *lives {
+		if (*lives)[i].Serial == serial {
 			at = i
 		}
-		if e.Lives[i].T < e.Lives[oldest].T {
+		if (*lives)[i].T < (*lives)[oldest].T {
 			oldest = i
 		}
 	}
 	switch {
 	case at >= 0:
-	case len(e.Lives) < MaxEngines:
-		at = len(e.Lives)
-		e.Lives = append(e.Lives, Life{Serial: c.Serial, T: t})
+	case len(*lives) < MaxEngines:
+		at = len(*lives)
+		*lives = append(*lives, Life{Serial: serial})
 	default:
 		at = oldest
-		e.Lives[at] = Life{Serial: c.Serial, T: t}
+		(*lives)[at] = Life{Serial: serial}
 	}
-	life := &e.Lives[at]
-	for i := range c.Bands {
-		life.of(c.Bands[i].Name)
-	}
+	life := &(*lives)[at]
+	life.T = t
 	return life
+}
+
+// enter adds what a scan brought to a life.
+func (c *Config) enter(l *Life, s *State, ch *Changes, burnt, choked int64) {
+	l.Lit += burnt
+	l.Choked += choked
+	for _, one := range [...]struct {
+		event Events
+		count *uint64
+	}{
+		{EventStart, &l.Starts},
+		{EventHotStart, &l.HotStarts},
+		{EventHungStart, &l.HungStarts},
+		{EventNoLight, &l.NoLights},
+		{EventAborted, &l.Aborted},
+		{EventFlameOut, &l.FlameOuts},
+		{EventCycle, &l.Cycles},
+	} {
+		if ch.Engine&one.event != 0 {
+			*one.count++
+		}
+	}
+	for i := range c.Bands {
+		b, bit := &s.Bands[i], uint32(1)<<i
+		of := l.of(c.Bands[i].Name)
+		of.Time += b.Added
+		if b.Over {
+			of.Peak = max(of.Peak, b.Peak)
+		}
+		if ch.Began&bit != 0 {
+			of.Excursions++
+		}
+		if ch.Exceeded&bit != 0 {
+			of.Exceedances++
+		}
+	}
 }
 
 // of gives the part of a band; one that is no longer configured keeps its own.
@@ -226,34 +293,12 @@ func (l *Life) of(band string) *BandLife {
 	return &l.Bands[len(l.Bands)-1]
 }
 
-// band adds what the last step did to band i.
-func (c *Config) band(life *Life, e *Engine, ch *Changes, i int, b *BandState) {
-	l, bit := life.of(b.Name), uint32(1)<<i
-	l.Time += b.Added
-	if b.Over {
-		l.Peak = max(l.Peak, b.Peak)
-	}
-	if ch.Began&bit != 0 {
-		l.Excursions++
-	}
-	if ch.Exceeded&bit == 0 {
-		return
-	}
-	l.Exceedances++
-	if c.Bands[i].Kind == KindStart && e.Told&EventHotStart == 0 {
-		e.Told |= EventHotStart
-		life.HotStarts++
-		ch.Engine |= EventHotStart
-	}
-}
-
 // start follows the engine from rest to rest.
-func (e *Engine) start(life *Life, in *Scan) (ev Events) {
+func (e *Engine) start(in *Scan) (ev Events) {
 	now := e.Stage
 	down := in.Phase == monitor.Off || in.Phase == monitor.Cooling || in.Phase == monitor.Cranking || in.Phase == monitor.Lighting && e.Cut
 	if now == running && down {
 		now = resting
-		life.Cycles++
 		ev |= EventCycle
 		e.Told = 0
 	}
@@ -272,13 +317,11 @@ func (e *Engine) start(life *Life, in *Scan) (ev Events) {
 	case monitor.Lighting:
 		if now != starting && now != running { // a speed that dips below idle with the flame on is no start
 			now = starting
-			life.Starts++
 			ev |= EventStart
 			e.Told &^= EventHungStart | EventHotStart
 		}
 	case monitor.Idle, monitor.Accelerating, monitor.Steady, monitor.Decelerating:
 		if now == resting { // lighting was not seen
-			life.Starts++
 			ev |= EventStart
 		}
 		if now == resting || now == starting {
@@ -299,17 +342,24 @@ func (e *Engine) start(life *Life, in *Scan) (ev Events) {
 		timer *Timer
 		true  bool
 		d     int64
-		count *uint64
 	}{
-		{EventHungStart, &e.Hung, in.Phase == monitor.Lighting && (in.SpeedRate < HungRate || e.Hung.On && math.IsNaN(in.SpeedRate)), HungFor, &life.HungStarts},
-		{EventNoLight, &e.NoLight, in.Phase == monitor.Cranking && (fuelled || e.NoLight.On && math.IsNaN(in.Fuel)), NoLightFor, &life.NoLights},
-		{EventFlameOut, &e.Out, above && in.LitKnown && !in.Lit, FlameOutFor, &life.FlameOuts},
+		{EventHungStart, &e.Hung, in.Phase == monitor.Lighting && (in.SpeedRate < HungRate || e.Hung.On && math.IsNaN(in.SpeedRate)), HungFor},
+		{EventNoLight, &e.NoLight, in.Phase == monitor.Cranking && (fuelled || e.NoLight.On && math.IsNaN(in.Fuel)), NoLightFor},
+		{EventFlameOut, &e.Out, above && in.LitKnown && !in.Lit, FlameOutFor},
 	} {
 		if is.timer.held(in.T, is.true, is.d) && e.Told&is.event == 0 {
 			e.Told |= is.event
-			*is.count++
 			ev |= is.event
 		}
+	}
+	switch in.Phase {
+	case monitor.Off, monitor.Cooling, monitor.Rundown:
+		if e.Tried {
+			ev |= EventAborted
+		}
+		e.Tried = false
+	case monitor.PhaseUnknown, monitor.Cranking, monitor.Lighting, monitor.Idle, monitor.Accelerating, monitor.Steady, monitor.Decelerating, monitor.NumPhases:
+		e.Tried = (e.Tried || ev&(EventStart|EventNoLight) != 0) && e.Stage != running
 	}
 	return ev
 }
@@ -319,20 +369,24 @@ func (e *Engine) start(life *Life, in *Scan) (ev Events) {
 func (e *Engine) starter(in *Scan, dt int64) {
 	now := in.T / minute
 	if now-e.Minute >= hour {
-		e.Cranked = [hour]int64{}
+		e.Cranked, e.Engaged = [hour]int64{}, [hour]uint8{}
 	} else {
 		for m := e.Minute + 1; m <= now; m++ {
-			e.Cranked[m%hour] = 0
+			e.Cranked[m%hour], e.Engaged[m%hour] = 0, 0
 		}
 	}
 	e.Minute = max(e.Minute, now)
 	switch in.Phase {
 	case monitor.Cranking, monitor.Lighting:
+		if n := &e.Engaged[e.Minute%hour]; !e.Cranking && e.Stage != running && *n < math.MaxUint8 {
+			*n++
+		}
+		e.Cranking = true
 		e.Crank += dt
 		e.Cranked[e.Minute%hour] += dt
 	case monitor.PhaseUnknown:
 	case monitor.Off, monitor.Idle, monitor.Accelerating, monitor.Steady, monitor.Decelerating, monitor.Rundown, monitor.Cooling, monitor.NumPhases:
-		e.Crank = 0
+		e.Crank, e.Cranking = 0, false
 	}
 }
 
@@ -341,6 +395,15 @@ func (e *Engine) StarterHour() int64 {
 	sum := int64(0)
 	for _, d := range e.Cranked {
 		sum += d
+	}
+	return sum
+}
+
+// StarterStarts gives how often the starter was engaged in this minute and the 59 before.
+func (e *Engine) StarterStarts() int {
+	sum := 0
+	for _, n := range e.Engaged {
+		sum += int(n)
 	}
 	return sum
 }
@@ -405,4 +468,53 @@ func (e *Engine) Rise() float64 {
 		return 0
 	}
 	return e.Now - e.Lowest
+}
+
+// coolDown follows how far the last shutdown lies back: the fuel that goes off behind a
+// flame, and the rotor that first comes to rest after it. It goes on while the engine is
+// cranked or lit again, until idle is reached.
+func (e *Engine) coolDown(in *Scan) {
+	e.Fired = e.Fired || e.WasLit
+	switch in.Phase {
+	case monitor.Idle, monitor.Accelerating, monitor.Steady, monitor.Decelerating:
+		e.FuelOff, e.Rest = 0, 0
+	case monitor.Off, monitor.Cooling, monitor.Rundown:
+		if e.Fired && e.After {
+			e.Fired, e.FuelOff, e.Rest = false, in.T, 0
+		}
+		if e.FuelOff != 0 && e.Rest == 0 && in.Phase != monitor.Rundown {
+			e.Rest = in.T
+		}
+	case monitor.PhaseUnknown, monitor.Cranking, monitor.Lighting, monitor.NumPhases:
+	}
+}
+
+// SinceFuelOff gives the time since the fuel went off after a flame, s; NaN without a
+// shutdown, and once idle is reached again.
+func (e *Engine) SinceFuelOff() float64 { return e.since(e.FuelOff) }
+
+// SinceRest gives the time since the rotor first came to rest after a shutdown, s; NaN as
+// for SinceFuelOff, and while it has not.
+func (e *Engine) SinceRest() float64 { return e.since(e.Rest) }
+
+func (e *Engine) since(t int64) float64 {
+	if t == 0 {
+		return math.NaN()
+	}
+	return float64(e.T-t) / 1e9
+}
+
+// CoolDownLeft gives what is left of the cool-down that l asks for, s; 0 when it is over,
+// NaN where none is asked for and without a shutdown.
+func (e *Engine) CoolDownLeft(l *Limits) float64 {
+	if e.FuelOff == 0 || l.CoolFuelOff == 0 && l.CoolRest == 0 {
+		return math.NaN()
+	}
+	left := l.CoolFuelOff - (e.T - e.FuelOff)
+	if rest := e.Rest; rest == 0 {
+		left = max(left, l.CoolRest)
+	} else {
+		left = max(left, l.CoolRest-(e.T-rest))
+	}
+	return float64(max(left, 0)) / 1e9
 }

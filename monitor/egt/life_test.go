@@ -30,6 +30,8 @@ type watched struct {
 	e    egt.Engine
 	t    int64
 	seen []string
+
+	choked bool
 }
 
 func newWatched() *watched {
@@ -43,7 +45,7 @@ func (w *watched) play(parts ...stretch) {
 	for _, p := range parts {
 		for end := w.t + p.d; w.t < end; w.t += scan {
 			ch := w.c.Step(&w.led, w.t, p.egt, p.lit, p.phase)
-			w.c.Watch(&w.e, &w.led, &ch, &egt.Scan{T: w.t, EGT: p.egt, SpeedRate: p.rate, Fuel: p.fuel, Lit: p.lit, LitKnown: true, Phase: p.phase})
+			w.c.Watch(&w.e, &w.led, &ch, &egt.Scan{T: w.t, EGT: p.egt, SpeedRate: p.rate, Fuel: p.fuel, Lit: p.lit, LitKnown: true, Choked: w.choked, Phase: p.phase})
 			for name := range ch.Engine.Each {
 				w.seen = append(w.seen, name)
 			}
@@ -86,12 +88,12 @@ func TestLifeCounts(t *testing.T) {
 	}{
 		{"start to rest", []stretch{rest, crank, fuelled, lighting, idle, steady, idle, rundown, cooling}, egt.Life{Starts: 1, Cycles: 1}, []string{"start", "idle", "rest", "cycle"}},
 		{"cranked without fuel", []stretch{rest, crank, rundown, cooling}, egt.Life{}, nil},
-		{"no light", []stretch{rest, crank, with(fuelled, func(p *stretch) { p.d = 11 * s }), rundown, cooling}, egt.Life{NoLights: 1}, []string{"no_light"}},
+		{"no light", []stretch{rest, crank, with(fuelled, func(p *stretch) { p.d = 11 * s }), rundown, cooling}, egt.Life{NoLights: 1, Aborted: 1}, []string{"no_light", "aborted_start"}},
 		{"fuel for 10 s less a scan", []stretch{rest, crank, with(fuelled, func(p *stretch) { p.d = 10 * s }), rundown, cooling}, egt.Life{}, nil},
 		{"no light twice in two cranks", []stretch{
 			rest, with(fuelled, func(p *stretch) { p.d = 30 * s }), rundown, cooling, with(fuelled, func(p *stretch) { p.d = 30 * s }), rundown, cooling,
-		}, egt.Life{NoLights: 2}, []string{"no_light", "no_light"}},
-		{"hung once, however long", []stretch{rest, crank, hung, hung, hung, rundown, cooling}, egt.Life{Starts: 1, HungStarts: 1}, []string{"start", "hung_start"}},
+		}, egt.Life{NoLights: 2, Aborted: 2}, []string{"no_light", "aborted_start", "no_light", "aborted_start"}},
+		{"hung once, however long", []stretch{rest, crank, hung, hung, hung, rundown, cooling}, egt.Life{Starts: 1, HungStarts: 1, Aborted: 1}, []string{"start", "hung_start", "aborted_start"}},
 		{"slow for less than 5 s", []stretch{rest, crank, with(hung, func(p *stretch) { p.d = 5 * s }), lighting, idle}, egt.Life{Starts: 1}, []string{"start", "idle"}},
 		{"hung, and up after all", []stretch{rest, crank, hung, lighting, idle, rundown, cooling}, egt.Life{Starts: 1, HungStarts: 1, Cycles: 1}, []string{"start", "hung_start", "idle", "rest", "cycle"}},
 		{"hot start", []stretch{rest, crank, with(lighting, func(p *stretch) { p.egt = 1080; p.d = 4 * s }), lighting, idle}, egt.Life{Starts: 1, HotStarts: 1}, []string{"start", "hot_start", "idle"}},
@@ -105,6 +107,8 @@ func TestLifeCounts(t *testing.T) {
 		{"flame-out, lit again, flame-out", []stretch{rest, crank, lighting, idle, steady, lost, steady, lost}, egt.Life{Starts: 1, FlameOuts: 2}, []string{"start", "idle", "flame_out", "flame_out"}},
 		{"out for less than 0.2 s", []stretch{rest, crank, lighting, idle, steady, with(lost, func(p *stretch) { p.d = 4 * scan }), steady}, egt.Life{Starts: 1}, []string{"start", "idle"}},
 		{"the watch comes up while it runs", []stretch{steady, idle, rundown, cooling}, egt.Life{Cycles: 1}, []string{"rest", "cycle"}},
+		{"lit, and given up before idle", []stretch{rest, crank, lighting, rundown, cooling, rest}, egt.Life{Starts: 1, Aborted: 1}, []string{"start", "aborted_start"}},
+		{"given up, then a start", []stretch{rest, crank, lighting, rundown, cooling, crank, lighting, idle, rundown, cooling}, egt.Life{Starts: 2, Aborted: 1, Cycles: 1}, []string{"start", "aborted_start", "start", "idle", "rest", "cycle"}},
 		{"speed is lost during the start", []stretch{rest, crank, with(lighting, func(p *stretch) { p.phase = monitor.PhaseUnknown }), idle}, egt.Life{Starts: 1}, []string{"start", "idle"}},
 		{"speed is lost at power", []stretch{rest, crank, lighting, idle, with(steady, func(p *stretch) { p.phase = monitor.PhaseUnknown }), steady, rundown, cooling}, egt.Life{Starts: 1, Cycles: 1}, []string{"start", "idle", "rest", "cycle"}},
 	} {
@@ -173,6 +177,98 @@ func TestLivesAreKept(t *testing.T) {
 	}
 	if l := w.e.Lives[1]; l.Serial != "new" || l.Cycles != 0 || l.Starts != 0 {
 		t.Errorf("the new engine has %+v of the old one", l)
+	}
+}
+
+// A nozzle that goes from one engine to another takes its life along. Hours choked are
+// those that were seen: of a gap in the data a second counts.
+func TestNozzleLife(t *testing.T) {
+	w := newWatched()
+	w.c.Nozzle = "NZ-1"
+	w.play(rest, crank, lighting, idle)
+	w.choked = true
+	w.play(steady)
+	w.t += 60 * s
+	w.play(with(steady, func(p *stretch) { p.d = scan }))
+	w.choked = false
+	w.play(idle, rundown, cooling)
+	w.c.Serial = "ML5-0043"
+	w.play(rest, crank, lighting, rundown, cooling)
+	w.c.Nozzle = "NZ-2"
+	w.play(rest, crank, lighting, idle)
+	type counts struct {
+		serial                  string
+		starts, aborted, cycles uint64
+		choked                  int64
+	}
+	of := func(lives []egt.Life) (out []counts) {
+		for _, l := range lives {
+			out = append(out, counts{l.Serial, l.Starts, l.Aborted, l.Cycles, l.Choked})
+		}
+		return out
+	}
+	choked := 20*s + s
+	if got, want := of(w.e.Nozzles), []counts{{"NZ-1", 2, 1, 1, choked}, {"NZ-2", 1, 0, 0, 0}}; !slices.Equal(got, want) {
+		t.Errorf("nozzles %+v, want %+v", got, want)
+	}
+	if got, want := of(w.e.Lives), []counts{{"ML5-0042", 1, 0, 1, choked}, {"ML5-0043", 2, 1, 0, 0}}; !slices.Equal(got, want) {
+		t.Errorf("engines %+v, want %+v", got, want)
+	}
+	// With the same bands and no other engine the two accounts are one.
+	if a, b := w.e.Lives[1].Bands, w.e.Nozzles[1].Bands; len(a) != len(b) {
+		t.Errorf("bands %+v and %+v", a, b)
+	}
+}
+
+// Times by hand, exact to a scan: common practice, no source.
+func TestCoolDown(t *testing.T) {
+	w := newWatched()
+	l := egt.Limits{CoolFuelOff: 100 * s, CoolRest: 60 * s}
+	short := with(rundown, func(p *stretch) { p.d = scan })
+	for _, tt := range []struct {
+		name              string
+		parts             []stretch
+		fuelOff, at, left float64 // s
+	}{
+		{"nothing was seen", []stretch{rest}, math.NaN(), math.NaN(), math.NaN()},
+		{"cranked without a flame", []stretch{crank, rundown, cooling}, math.NaN(), math.NaN(), math.NaN()},
+		{"it runs", []stretch{crank, lighting, idle}, math.NaN(), math.NaN(), math.NaN()},
+		{"fuel on below idle", []stretch{with(short, func(p *stretch) { p.fuel = 0.03 })}, math.NaN(), math.NaN(), math.NaN()},
+		{"fuel off", []stretch{short}, 0, math.NaN(), 100},
+		{"runs down", []stretch{with(rundown, func(p *stretch) { p.d = 50 * s })}, 50, math.NaN(), 60},
+		{"at rest", []stretch{with(cooling, func(p *stretch) { p.d = 10*s + scan })}, 60.05, 10, 50},
+		{"cranked to cool it", []stretch{crank, rundown}, 78.05, 28, 32},
+		{"a start before time", []stretch{fuelled, lighting}, 88.05, 38, 22},
+		{"given up", []stretch{short}, 0, math.NaN(), 100},
+		{"it has cooled", []stretch{with(cooling, func(p *stretch) { p.d = 200 * s })}, 200, 199.95, 0},
+		{"idle", []stretch{crank, lighting, idle}, math.NaN(), math.NaN(), math.NaN()},
+	} {
+		w.play(tt.parts...)
+		for _, v := range []struct {
+			name      string
+			got, want float64
+		}{{"fuel off", w.e.SinceFuelOff(), tt.fuelOff}, {"rest", w.e.SinceRest(), tt.at}, {"left", w.e.CoolDownLeft(&l), tt.left}} {
+			if v.got != v.want && !(math.IsNaN(v.got) && math.IsNaN(v.want)) {
+				t.Errorf("%s: %s %g s, want %g s", tt.name, v.name, v.got, v.want)
+			}
+		}
+	}
+	if got := w.e.CoolDownLeft(&egt.Limits{}); !math.IsNaN(got) {
+		t.Errorf("%g s are left of no cool-down", got)
+	}
+}
+
+// The starter is engaged once for each crank, whatever is lit in it.
+func TestStarterStarts(t *testing.T) {
+	w := newWatched()
+	dip := with(rundown, func(p *stretch) { p.lit = true; p.fuel = 0.03; p.d = s })
+	w.play(rest, crank, lighting, crank, lighting, idle, dip, lighting, idle, rundown, crank, rundown, cooling, fuelled, cooling)
+	if got := w.e.StarterStarts(); got != 3 {
+		t.Errorf("%d engagements, want 3", got)
+	}
+	w.play(with(rest, func(p *stretch) { p.d = 61 * 60 * s }))
+	if got := w.e.StarterStarts(); got != 0 {
+		t.Errorf("%d engagements in an hour of rest", got)
 	}
 }
 

@@ -18,6 +18,19 @@ type RigInfo struct {
 	NozzleSerial  string `json:"nozzle_serial"`
 	LimitsVersion string `json:"limits_version"`
 	TimeZone      string `json:"time_zone"` // of the facility, a name of the IANA database; "" = UTC
+
+	NozzleMeasured string `json:"nozzle_measured_on"` // date of its throat area, YYYY-MM-DD
+	Test           string `json:"test"`               // that the runs belong to
+	Purpose        string `json:"purpose"`            // of the runs
+	Fuel           Fuel   `json:"fuel"`
+}
+
+// Fuel is the batch of fuel that is burnt, as its certificate says.
+type Fuel struct {
+	Batch            string        `json:"batch"`
+	Density          rules.Reading `json:"density_kg_m3"`
+	HeatingValue     rules.Reading `json:"lower_heating_value_j_kg"` // at 25 °C
+	HydrogenToCarbon rules.Reading `json:"hydrogen_to_carbon"`       // atoms
 }
 
 // Zone gives the facility's time zone, in which people are told times; UTC where none is
@@ -30,9 +43,12 @@ func (r *RigInfo) Zone() *time.Location {
 	return zone
 }
 
-// RunConfig says when a run begins and ends by the state of the engine.
+// RunConfig says when a run ends by the state of the engine, and how runs are numbered.
 type RunConfig struct {
 	EndAfter int64 // ns in phase off before the run ends by itself
+
+	Series string // of run numbers: what a number is made of, with RunPlace for the count; "" = none
+	Width  int    // digits of the count at least
 }
 
 // Config is a whole rig as the step sees it: the parsed form of the text that a

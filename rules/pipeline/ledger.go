@@ -1,6 +1,7 @@
 package pipeline
 
 import (
+	"math"
 	"slices"
 
 	"throatwatch/monitor"
@@ -56,15 +57,28 @@ type EngineEvent struct {
 // Life is what an engine has been through, as it is stored and shown. What counts as
 // what says egt.Life.
 type Life struct {
-	Serial    string     `json:"engine_serial"`
-	Starts    uint64     `json:"starts"`
-	HotStarts uint64     `json:"hot_starts"`
-	Hung      uint64     `json:"hung_starts"`
-	NoLights  uint64     `json:"no_lights"`
-	FlameOuts uint64     `json:"flame_outs"`
-	Hours     float64    `json:"hours"` // with a flame
-	Cycles    uint64     `json:"cycles"`
-	Bands     []BandLife `json:"bands"`
+	Serial string `json:"engine_serial"`
+	Counts
+}
+
+// NozzleLife is what a nozzle has been through, on whichever engine.
+type NozzleLife struct {
+	Serial string `json:"nozzle_serial"`
+	Counts
+}
+
+// Counts are what a life counts.
+type Counts struct {
+	Starts      uint64     `json:"starts"`
+	HotStarts   uint64     `json:"hot_starts"`
+	Hung        uint64     `json:"hung_starts"`
+	NoLights    uint64     `json:"no_lights"`
+	Aborted     uint64     `json:"aborted_starts"`
+	FlameOuts   uint64     `json:"flame_outs"`
+	Hours       float64    `json:"hours"`        // with a flame
+	HoursChoked float64    `json:"hours_choked"` // with the throat choked
+	Cycles      uint64     `json:"cycles"`
+	Bands       []BandLife `json:"bands"`
 }
 
 // BandLife is the part of a life above one band.
@@ -76,16 +90,38 @@ type BandLife struct {
 	Exceedances uint64        `json:"exceedances"`
 }
 
-// ViewLife gives a life as it is shown.
-func ViewLife(l *egt.Life) Life {
-	out := Life{
-		Serial: l.Serial, Starts: l.Starts, HotStarts: l.HotStarts, Hung: l.HungStarts, NoLights: l.NoLights,
-		FlameOuts: l.FlameOuts, Hours: float64(l.Lit) / 3.6e12, Cycles: l.Cycles, Bands: []BandLife{},
+// ViewLife gives the life of an engine as it is shown.
+func ViewLife(l *egt.Life) Life { return Life{l.Serial, viewCounts(l)} }
+
+// ViewNozzle gives the life of a nozzle as it is shown.
+func ViewNozzle(l *egt.Life) NozzleLife { return NozzleLife{l.Serial, viewCounts(l)} }
+
+func viewCounts(l *egt.Life) Counts {
+	out := Counts{
+		Starts: l.Starts, HotStarts: l.HotStarts, Hung: l.HungStarts, NoLights: l.NoLights, Aborted: l.Aborted,
+		FlameOuts: l.FlameOuts, Hours: float64(l.Lit) / hour, HoursChoked: float64(l.Choked) / hour, Cycles: l.Cycles, Bands: []BandLife{},
 	}
 	for _, b := range l.Bands {
 		out.Bands = append(out.Bands, BandLife{
 			Name: b.Name, Seconds: float64(b.Time) / 1e9, Peak: rules.Reading{V: b.Peak, Known: b.Peak > 0},
 			Excursions: b.Excursions, Exceedances: b.Exceedances,
+		})
+	}
+	return out
+}
+
+// hour in ns.
+const hour = 3.6e12
+
+// counted is the inverse of viewCounts.
+func (c *Counts) counted(serial string) egt.Life {
+	out := egt.Life{
+		Serial: serial, Starts: c.Starts, HotStarts: c.HotStarts, HungStarts: c.Hung, NoLights: c.NoLights, Aborted: c.Aborted,
+		FlameOuts: c.FlameOuts, Lit: int64(math.Round(c.Hours * hour)), Choked: int64(math.Round(c.HoursChoked * hour)), Cycles: c.Cycles,
+	}
+	for _, b := range c.Bands {
+		out.Bands = append(out.Bands, egt.BandLife{
+			Name: b.Name, Time: int64(math.Round(b.Seconds * 1e9)), Peak: b.Peak.V, Excursions: b.Excursions, Exceedances: b.Exceedances,
 		})
 	}
 	return out
@@ -100,6 +136,17 @@ func (s *State) Life(serial string) (l Life, ok bool) {
 		return l, false
 	}
 	return ViewLife(&lives[i]), true
+}
+
+// NozzleLife gives the life of the nozzle with a serial number as of the last record; ok
+// is false for one that was not watched.
+func (s *State) NozzleLife(serial string) (l NozzleLife, ok bool) {
+	lives := s.Compute.Engine.Nozzles
+	i := slices.IndexFunc(lives, func(l egt.Life) bool { return l.Serial == serial })
+	if i < 0 {
+		return l, false
+	}
+	return ViewNozzle(&lives[i]), true
 }
 
 // account emits what changed in the ledger.
@@ -117,6 +164,9 @@ func (m *Machine) account(s *State, ch *egt.Changes, p *monitor.OperatingPoint) 
 		if ch.Ended&bit != 0 {
 			m.emit(s, Outcome{Kind: OutcomeExceedance, T: p.T, Exceedance: exceedance(bands, i, &b.Closed)})
 		}
+	}
+	if s.RunActive {
+		s.Trial.see(ch.Engine)
 	}
 	for name := range ch.Engine.Each {
 		m.emit(s, Outcome{Kind: OutcomeEngine, T: p.T, Engine: &EngineEvent{

@@ -39,6 +39,9 @@ type State struct {
 	Done      []string // ids of the last requests, so that a repeated one is done once
 	Log       []Entry  // the last of the operator log, the oldest first
 	Swaps     []Swap   // sensors that were exchanged, in the order of their entry
+	Numbers   Numbering
+	Trial     Trial // of the run that is on
+	Imported  bool  // the records are those of another data system: runs get no number of ours
 	window    Window
 }
 

@@ -46,6 +46,9 @@ type Boot struct {
 	Epoch  uint64 `json:"epoch"`
 	Build  string `json:"build"`
 	GOARCH string `json:"goarch"`
+
+	Imported bool `json:"imported,omitempty"` // the records are made of a recording of another data system
+	Past     Past `json:"past,omitzero"`
 }
 
 // HealthChange is the payload of a health record.
@@ -185,7 +188,7 @@ func (m *Machine) load(bundle []byte) error {
 	for i := range cfg.Align.Channels {
 		cfg.Align.Channels[i].Raw = cfg.Compute.Channels[i].Raw
 	}
-	cfg.Compute.EGT.Serial = cfg.Rig.EngineSerial
+	cfg.Compute.EGT.Serial, cfg.Compute.EGT.Nozzle = cfg.Rig.EngineSerial, cfg.Rig.NozzleSerial
 	comp, err := compute.New(cfg.Compute)
 	if err != nil {
 		return fmt.Errorf("pipeline: %w", err)
@@ -281,10 +284,15 @@ func (m *Machine) emit(s *State, o Outcome) {
 // life before.
 func (m *Machine) boot(s *State, r *ingest.Record, before int64) {
 	var b Boot
-	if json.Unmarshal(r.Payload, &b) == nil && b.Epoch > s.Epoch {
+	ok := json.Unmarshal(r.Payload, &b) == nil
+	if ok && b.Epoch > s.Epoch {
 		s.Epoch = b.Epoch
 	} else {
 		s.Epoch++
+	}
+	if ok {
+		s.Imported = b.Imported
+		s.remember(b.Past)
 	}
 	s.Health, s.Left, s.Booted = Health{}, before, r.Host
 	s.Proposed = Action{}
@@ -469,6 +477,8 @@ func (m *Machine) startRun(s *State, t int64, by string) {
 		ID:     id,
 		Number: s.Runs, Rig: rig.ID, Engine: rig.EngineModel + " " + rig.EngineSerial, Started: t, By: by,
 	}
+	s.identify(&m.prog.cfg, &s.Run)
+	s.Trial = Trial{}
 	s.Compute.EGT.Reset()
 	s.Compute.Area = compute.Area{}
 	run := s.Run
@@ -481,7 +491,7 @@ func (m *Machine) endRun(s *State, t int64) {
 	}
 	m.settle(s, t)
 	s.RunActive = false
-	s.Run.Ended = t
+	s.Run.Ended, s.Run.Aborted = t, s.Trial.aborted()
 	run := s.Run
 	m.emit(s, Outcome{Kind: OutcomeRun, T: t, Run: &run, Event: "ended"})
 }

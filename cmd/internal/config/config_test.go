@@ -15,6 +15,7 @@ import (
 	"throatwatch/monitor/calib"
 	"throatwatch/monitor/compute"
 	"throatwatch/monitor/egt"
+	"throatwatch/monitor/gas"
 	"throatwatch/monitor/nozzle"
 	"throatwatch/rules"
 	"throatwatch/rules/pipeline"
@@ -160,7 +161,19 @@ func TestMeanings(t *testing.T) {
 		{"example: rig", ex.Rig, pipeline.RigInfo{
 			ID: "cell_2", Title: "Alder Bank cell 2", EngineModel: "Merle 5", EngineSerial: "ML5-0042", EngineBuild: "7",
 			NozzleSerial: "NZ-0311", LimitsVersion: "ML5-LIM-C", TimeZone: "Etc/UTC",
+			NozzleMeasured: "2026-03-02", Test: "T-114", Purpose: "Choke margin of nozzle NZ-0311",
+			Fuel: pipeline.Fuel{
+				Batch: "AB-2026-007", Density: rules.Reading{V: 803, Known: true},
+				HeatingValue: rules.Reading{V: 43.1e6, Known: true}, HydrogenToCarbon: rules.Reading{V: 1.917, Known: true},
+			},
 		}},
+		{"example: series of run numbers", ex.Run.Series, "ML5-0042/7/T-114/{run}"},
+		{"example: digits of run numbers", ex.Run.Width, 3},
+		{"example: the heat balance takes the heating value of the batch", ex.Compute.Heat.HeatingValue, 43.1e6},
+		{"example: a fuel of the gas that is stated stays", ex.Compute.Fuel, gas.Kerosene()},
+		{"example: cool-down", [2]int64{ex.Compute.EGT.Limits.CoolFuelOff, ex.Compute.EGT.Limits.CoolRest}, [2]int64{120e9, 60e9}},
+		{"example: starts in an hour", ex.Compute.EGT.Limits.StarterRuns, 6},
+		{"smallest: no series of run numbers", mi.Run.Series, ""},
 		{"example: inputs of the rig's own topics", ex.Align.Inputs[3].Filter, "rigs/cell_2/channels/+"},
 		{"example: their format", ex.Align.Inputs[3].Format, decode.Value},
 		{"example: rake", len(ex.Compute.Stations.P7), 4},

@@ -17,7 +17,7 @@ func (r *rig) readNozzle(n node) {
 	f := n.fields()
 	z := &r.cfg.Compute.Nozzle
 	r.cfg.Rig.NozzleSerial = f.get("serial").label("")
-	f.get("measured_on").label("") // for people: it travels in the text of the bundle
+	r.cfg.Rig.NozzleMeasured = f.get("measured_on").date()
 	area := f.need("throat_area", "as 0.0250 m2, or {channel: CHANNEL} for a position that is measured")
 	if area.is() && !area.scalar() {
 		g := area.fields()

@@ -5,7 +5,6 @@ import (
 	"math"
 	"slices"
 	"strings"
-	"time"
 
 	"throatwatch/ingest/decode"
 	"throatwatch/monitor/align"
@@ -27,7 +26,8 @@ type rig struct {
 	channels     []*channel
 	elevation    float64 // m; NaN when not given
 	recovery     node    // stations.t7.recovery
-	used         []bool  // by channel: a station, a reference or a rule needs it
+	fuel         *fields
+	used         []bool // by channel: a station, a reference or a rule needs it
 	defaultRules bool
 	ruleFiles    []node
 	limits       []rule // of the channels
@@ -49,6 +49,7 @@ func readRig(f File) *rig {
 	r.readScan(m)
 	r.readInputs(m.get("inputs"))
 	r.readChannels(m.need("channels", "list the measured signals"))
+	r.readFuel(m.get("fuel"))
 	r.readStations(m.need("stations", "say which channels make p7, t7 and the back pressure"))
 	r.readGas(m.get("gas"))
 	r.readNozzle(m.need("nozzle", "state at least throat_area"))
@@ -58,9 +59,8 @@ func readRig(f File) *rig {
 	r.readSteady(m.get("steady"))
 	r.readEGT(m.get("egt"))
 	r.readStarter(m.get("starter"))
-	run := m.get("run").fields()
-	r.cfg.Run.EndAfter = run.get("end_after").duration(120*second, positive)
-	run.done()
+	r.readCoolDown(m.get("cooldown"))
+	r.readRun(m.get("run"))
 	r.readChange(m)
 	r.readProcedures(m)
 	r.readDerive(m.get("derive"))
@@ -105,13 +105,9 @@ func (r *rig) readChange(m *fields) {
 	}
 	approver := f.get("approver")
 	c.Approver = approver.label("")
-	date := f.get("date")
-	c.Date = date.label("")
+	c.Date = f.get("date").date()
 	c.Note = f.get("note").label("")
 	f.done()
-	if _, err := time.Parse(time.DateOnly, c.Date); c.Date != "" && err != nil {
-		date.fault(fmt.Sprintf("%q is no date", c.Date), "write it as 2026-03-31")
-	}
 	switch {
 	case c.Approver == "":
 		n.warn("limits and rules are not approved: every page and report says so", "write change: {engineer: …, approver: …, date: …, note: …}")
@@ -220,6 +216,7 @@ func (r *rig) readGas(n node) {
 		g.done()
 	}
 	r.cfg.Compute.Fuel = fuel
+	r.fitFuel(f.get("fuel").is())
 	f.done()
 }
 
@@ -245,6 +242,7 @@ func (r *rig) readStarter(n node) {
 	l := &r.cfg.Compute.EGT.Limits
 	l.StarterOnce = f.get("at_once").duration(0, positive)
 	l.StarterHour = f.get("per_hour").duration(0, positive)
+	l.StarterRuns = f.get("starts_per_hour").integer(0, 1, 60)
 	f.done()
 	if n.is() && r.cfg.Compute.Stations.Speed < 0 {
 		f.fault("cranking is told by the rotor speed", "name a channel in stations.speed")

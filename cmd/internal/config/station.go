@@ -167,7 +167,11 @@ func (r *rig) readHeatBalance(n node) {
 	f := n.fields()
 	c, s := &r.cfg.Compute.Heat, &r.cfg.Compute.Stations
 	c.Efficiency = f.need("efficiency", "of the combustion, as 99.5 %").share(0, positive, between(0.5, 1, "50 % and 100 %"))
-	c.HeatingValue = f.need("heating_value", "of the fuel, lower, at 25 °C, as 43.1 MJ/kg").quantity(unit.SpecificEnergy, 0, positive, between(5e6, 130e6, "5 MJ/kg and 130 MJ/kg"))
+	if value := r.cfg.Rig.Fuel.HeatingValue; value.Known && !f.has("heating_value") {
+		c.HeatingValue = value.V
+	} else {
+		c.HeatingValue = f.need("heating_value", "of the fuel, lower, at 25 °C, as 43.1 MJ/kg; or state fuel.lower_heating_value").quantity(unit.SpecificEnergy, 0, positive, between(5e6, 130e6, "5 MJ/kg and 130 MJ/kg"))
+	}
 	c.U95 = f.need("uncertainty", "of efficiency times heating value at 95 %, with what the balance leaves out, as 1 %").share(0, positive, between(0, 0.2, "0 % and 20 %"))
 	f.done()
 	if s.FuelFlow < 0 || s.Bellmouth < 0 || s.InletT < 0 {

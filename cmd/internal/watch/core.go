@@ -144,6 +144,7 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 			default:
 				h := c.Header()
 				h.Ended, h.State, h.Alarms = o.Run.Ended, runfile.StateEnded, o.Run.Alarms
+				h.Life, h.NozzleLife = c.lives(h)
 				c.batch.End = h
 			}
 		case pipeline.OutcomeConfig:
@@ -223,7 +224,29 @@ func (c *Core) Header() *RunHeader {
 		ID: run.ID, Number: run.Number, Rig: run.Rig, Engine: cfg.Rig.EngineModel, EngineSerial: cfg.Rig.EngineSerial, Title: cfg.Rig.Title,
 		Operator: run.By, Build: c.build, GOARCH: c.goarch, ConfigHash: cfg.Hash, TimeZone: cfg.Rig.TimeZone, Started: run.Started,
 		State: runfile.StateRunning, Alarms: run.Alarms,
+		Identity: runfile.Identity{
+			Designation: run.Designation, Series: run.Series, InSeries: run.InSeries, Test: run.Test, Purpose: run.Purpose,
+			EngineBuild: run.EngineBuild, NozzleSerial: run.NozzleSerial, NozzleMeasured: cfg.Rig.NozzleMeasured, FuelBatch: run.FuelBatch, Aborted: run.Aborted,
+		},
 	}
+}
+
+// lives gives what the engine and the nozzle of a run have been through so far.
+func (c *Core) lives(h *RunHeader) (engine, nozzle json.RawMessage) {
+	text := func(v any) json.RawMessage {
+		b, err := json.Marshal(v)
+		if err != nil {
+			panic(fmt.Sprintf("watch: a life does not encode: %v", err))
+		}
+		return b
+	}
+	if l, ok := c.State.Life(h.EngineSerial); ok {
+		engine = text(l)
+	}
+	if l, ok := c.State.NozzleLife(h.NozzleSerial); ok {
+		nozzle = text(l)
+	}
+	return engine, nozzle
 }
 
 // Cut gives the batch gathered so far, or nil when there is none, and begins a

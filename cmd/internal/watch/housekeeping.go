@@ -28,7 +28,17 @@ type Removal struct {
 	Digest       string `json:"digest"`
 	By           string `json:"by"`
 	Why          string `json:"why"`
+
+	// So that run numbers and lives outlast the runs.
+	Derived   bool  `json:"derived,omitempty"` // no watch recorded it: it has an origin
+	StartedNS int64 `json:"started_ns,omitempty"`
+	runfile.Identity
+	Life       json.RawMessage `json:"life,omitempty"`
+	NozzleLife json.RawMessage `json:"nozzle_life,omitempty"`
 }
+
+// removedName is the file of removals in a data folder.
+const removedName = "removed.jsonl"
 
 // Retain removes the runs beyond r every ten minutes until ctx ends. Each removal is
 // logged and stands in removed.jsonl; a run that cannot be removed is logged and tried again.
@@ -87,11 +97,12 @@ func remove(ctx context.Context, c *runfile.Catalog, dir string, run *runfile.Ru
 	line, err := json.Marshal(Removal{
 		At: now.UTC().Format(time.RFC3339Nano), Run: run.ID, Number: run.Number, Rig: run.Rig, EngineSerial: run.EngineSerial,
 		Started: time.Unix(0, run.Started).UTC().Format(time.RFC3339Nano), Bytes: run.Size, Digest: run.Digest, By: by, Why: why,
+		Derived: run.Origin != nil, StartedNS: run.Started, Identity: run.Identity, Life: run.Life, NozzleLife: run.NozzleLife,
 	})
 	if err != nil {
 		return fmt.Errorf("remove run %q: %w", run.ID, err)
 	}
-	f, err := os.OpenFile(filepath.Join(dir, "removed.jsonl"), os.O_APPEND|os.O_CREATE|os.O_WRONLY, 0o600)
+	f, err := os.OpenFile(filepath.Join(dir, removedName), os.O_APPEND|os.O_CREATE|os.O_WRONLY, 0o600)
 	if err != nil {
 		return fmt.Errorf("remove run %q: %w", run.ID, err)
 	}

@@ -1,11 +1,11 @@
 package watch
 
 import (
-	"cmp"
 	"context"
 	"encoding/json"
 	"errors"
 	"fmt"
+	"io/fs"
 	"math"
 	"path/filepath"
 	"slices"
@@ -14,36 +14,51 @@ import (
 	"throatwatch/rules/pipeline"
 )
 
-// Lives gives what each engine has been through that a data folder knows of: as of the
-// newest checkpoint, which is a minute old at most, and for an engine that the watch
-// no longer keeps as of the end of its last run.
-func Lives(ctx context.Context, dir string, runs StoredRuns) ([]pipeline.Life, error) {
+// Lived is what engines and nozzles have been through.
+type Lived struct {
+	Engines []pipeline.Life
+	Nozzles []pipeline.NozzleLife
+}
+
+// Lives gives what each engine and nozzle has been through that a data folder knows of: as
+// of the newest checkpoint, which is a minute old at most, and for one that the watch no
+// longer keeps as of the end of its last run, which may have been removed since.
+func Lives(ctx context.Context, dir string, runs StoredRuns) (Lived, error) {
+	out := Lived{Engines: []pipeline.Life{}, Nozzles: []pipeline.NozzleLife{}}
 	state, err := newestState(ctx, dir)
 	if err != nil {
-		return nil, err
+		return out, err
 	}
-	lives := []pipeline.Life{}
-	for i := range state.Compute.Engine.Lives {
-		lives = append(lives, pipeline.ViewLife(&state.Compute.Engine.Lives[i]))
+	e := &state.Compute.Engine
+	for i := range e.Lives {
+		out.Engines = append(out.Engines, pipeline.ViewLife(&e.Lives[i]))
 	}
-	list, err := runs.List(ctx, runfile.Filter{})
+	for i := range e.Nozzles {
+		out.Nozzles = append(out.Nozzles, pipeline.ViewNozzle(&e.Nozzles[i]))
+	}
+	list, err := pastRuns(ctx, runs.Catalog, dir)
 	if err != nil {
-		return nil, err
+		return out, err
 	}
-	slices.SortStableFunc(list, func(a, b runfile.Run) int { return cmp.Compare(b.Started, a.Started) })
 	for i := range list {
-		if list[i].Origin != nil || slices.ContainsFunc(lives, func(l pipeline.Life) bool { return l.Serial == list[i].EngineSerial }) {
+		h := &list[i]
+		if life, ok := nozzleOf(h); ok && !slices.ContainsFunc(out.Nozzles, func(l pipeline.NozzleLife) bool { return l.Serial == life.Serial }) {
+			out.Nozzles = append(out.Nozzles, life)
+		}
+		if slices.ContainsFunc(out.Engines, func(l pipeline.Life) bool { return l.Serial == h.EngineSerial }) {
 			continue
 		}
-		life, ok, err := lifeOf(ctx, runs, &list[i])
-		if err != nil {
-			return nil, err
+		life, ok := engineOf(h)
+		if !ok { // an earlier build wrote it beside the header
+			if life, ok, err = lifeOf(ctx, runs, h); err != nil {
+				return out, err
+			}
 		}
 		if ok {
-			lives = append(lives, life)
+			out.Engines = append(out.Engines, life)
 		}
 	}
-	return lives, nil
+	return out, nil
 }
 
 // newestState gives the newest checkpoint of the files of a folder; a state that has
@@ -92,8 +107,11 @@ func lastCheckpoint(ctx context.Context, path string) (runfile.Checkpoint, error
 }
 
 // lifeOf gives the life that a run left behind when it ended.
-func lifeOf(ctx context.Context, runs StoredRuns, r *runfile.Run) (life pipeline.Life, ok bool, err error) {
+func lifeOf(ctx context.Context, runs StoredRuns, r *runfile.Header) (life pipeline.Life, ok bool, err error) {
 	f, err := runs.Open(ctx, r.ID)
+	if errors.Is(err, fs.ErrNotExist) {
+		return life, false, nil // removed
+	}
 	if err != nil {
 		return life, false, err
 	}

@@ -165,6 +165,9 @@ func reduceTo(ctx context.Context, f *runfile.File, parent *runfile.Header, o Re
 	h = *found
 	h.Origin = &runfile.Origin{Kind: runfile.OriginReduction, Parent: parent.ID, ParentDigest: parent.Digest, Stepped: found.ID, By: o.By}
 	h.Number, h.Operator, h.Notes = parent.Number, parent.Operator, o.Note
+	aborted := h.Aborted
+	h.Identity = parent.Identity // it is the same run, seen otherwise
+	h.Aborted = aborted
 	return h, p.State.Swaps, nil
 }
 

@@ -328,6 +328,7 @@ func (s *Store) Write(ctx context.Context, b *Batch) error {
 	case ends:
 		batch.Header = func(h *runfile.Header) {
 			h.State, h.Ended, h.Digest, h.Alarms = b.End.State, b.End.Ended, b.End.Digest, b.End.Alarms
+			h.Aborted, h.Life, h.NozzleLife = b.End.Aborted, b.End.Life, b.End.NozzleLife
 		}
 	case b.Alarms > 0 && !s.idle && !s.over:
 		batch.Header = func(h *runfile.Header) { h.Alarms = b.Alarms }
