@@ -92,6 +92,10 @@ func TestWatchWritesIntoTheSiteDatabase(t *testing.T) {
 	if strings.Contains(said, influxtest.Password) || !strings.Contains(said, "influx  "+server.URL) {
 		t.Errorf("the output shows the token, or not the database:\n%s", said)
 	}
+	examined := examine(t, 0, "--influx", server.URL, "--influx-bucket", "hall/autogen", "--influx-token-file", token)
+	wants(t, examined, "database", passed, "and gives it back")
+	examined = examine(t, 1, "--influx", server.URL, "--influx-bucket", "hall/autogen", "--influx-token-file", secretFile(t, "token", influxtest.User+":other"))
+	wants(t, examined, "database", failed, "status 401")
 	cursor, err := os.ReadFile(filepath.Join(dir, "data", "influx-cursor.json"))
 	if err != nil || strings.Contains(string(cursor), influxtest.Password) || !strings.Contains(string(cursor), `"seq":`) {
 		t.Errorf("cursor file: %s, %v", cursor, err)

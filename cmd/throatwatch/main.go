@@ -47,6 +47,7 @@ func commands() []command {
 		{"import", "make a run of a recording of another data system", importCommand},
 		{"verify", "read stored runs to the last byte and step them again", verifyCommand},
 		{"copy", "copy a stored run, also while it is recorded", copyCommand},
+		{"doctor", "look at disk, clock, broker, database, ports and files before a watch is started", doctorCommand},
 		{"user", "people and machines that may use a watch, and their roles", userCommand},
 		{"log", "what people did in a stored run, who, when and why", logCommand},
 		{"figures", "how the alarms of a stored run did, against published targets", figuresCommand},

@@ -74,7 +74,8 @@ func TestServiceManager(t *testing.T) {
 	t.Setenv("NOTIFY_SOCKET", m.path)
 	t.Setenv("WATCHDOG_USEC", "400000")
 	site := mqtttest.MosquittoSite(t, "../../deploy")
-	p := start(t, "watch", rehearseRig, "--data", dataFolder(t), "--listen", "127.0.0.1:0", "--broker", site.URL,
+	data := dataFolder(t)
+	p := start(t, "watch", rehearseRig, "--data", data, "--listen", "127.0.0.1:0", "--broker", site.URL,
 		"--broker-ca", site.CA, "--broker-cert", site.Cert, "--broker-key", site.Key)
 	m.await(t, "STATUS=watches cell_2, no run is on; waits for the broker")
 	if slices.Contains(m.all(), "READY=1") {
@@ -86,6 +87,9 @@ func TestServiceManager(t *testing.T) {
 	if status, body := fetch(t, http.MethodGet, p.page()+"/healthz", nil); status != http.StatusOK {
 		t.Errorf("ready, yet %d %s", status, body)
 	}
+	beside := examine(t, 0, "--data", data, "--listen", strings.TrimPrefix(p.page(), "http://"), "--broker", site.URL,
+		"--broker-ca", site.CA, "--broker-cert", site.Cert, "--broker-key", site.Key)
+	wants(t, beside, "page address", passed, "a watch runs on the data folder")
 	p.stop()
 	m.await(t, "STOPPING=1")
 	if n := strings.Count(strings.Join(m.all(), "\n"), "WATCHDOG=1"); n < 2 {

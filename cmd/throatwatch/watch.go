@@ -50,22 +50,7 @@ type watchOptions struct {
 func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
 	var o watchOptions
 	fs := newFlags("watch RIG.yaml", "Watch a rig: take its messages in, compute, alarm, store, and serve the page.", stderr)
-	fs.StringVar(&o.listen, "listen", "127.0.0.1:8189", "address of the page and the HTTP interface")
-	fs.StringVar(&o.data, "data", "data", "folder for runs, catalogue and broker store")
-	fs.StringVar(&o.brokerListen, "broker-listen", "127.0.0.1:1883", "address of the embedded broker; port 0 takes a free one")
-	o.broker.flags(fs, "", "site broker instead of the embedded one, mqtt://host:port or mqtts://host:port")
-	fs.BoolVar(&o.remote, "allow-remote", false, "let --listen be reached from other machines without TLS and users, and --broker-listen without passwords")
-	o.guard.flags(fs)
-	fs.BoolVar(&o.rehearse, "rehearse", false, "let a simulated rig publish a test to the broker; the next flags say which")
-	o.play = newRehearseFlags(fs)
-	o.influx.flags(fs)
-	o.webhook.flags(fs)
-	fs.IntVar(&o.retainDays, "retain-days", 0, "remove runs that ended longer ago, except those marked keep (default: none)")
-	fs.Float64Var(&o.retainGB, "retain-gb", 0, "remove the oldest runs until the rest takes no more GB (10^9 bytes), except those marked keep (default: none)")
-	fs.Float64Var(&o.diskHours, "disk-hours", 4, "alarm when the disk of the data folder will be full in so many hours as it fills now; 0 = do not")
-	fs.Float64Var(&o.diskGB, "disk-gb", 2, "alarm when it has fewer GB (10^9 bytes) left; 0 = do not")
-	fs.DurationVar(&o.limit, "for", 0, "stop after this time (default: on interrupt)")
-	fs.BoolVar(&o.verbose, "verbose", false, "log what the parts do")
+	o.flags(fs)
 	rig, code := parseRig(fs, args, stderr)
 	if code >= 0 {
 		return code
@@ -85,6 +70,25 @@ func watchCommand(ctx context.Context, args []string, stdout, stderr io.Writer) 
 		return 1
 	}
 	return 0
+}
+
+func (o *watchOptions) flags(fs *pflag.FlagSet) {
+	fs.StringVar(&o.listen, "listen", "127.0.0.1:8189", "address of the page and the HTTP interface")
+	fs.StringVar(&o.data, "data", "data", "folder for runs, catalogue and broker store")
+	fs.StringVar(&o.brokerListen, "broker-listen", "127.0.0.1:1883", "address of the embedded broker; port 0 takes a free one")
+	o.broker.flags(fs, "", "site broker instead of the embedded one, mqtt://host:port or mqtts://host:port")
+	fs.BoolVar(&o.remote, "allow-remote", false, "let --listen be reached from other machines without TLS and users, and --broker-listen without passwords")
+	o.guard.flags(fs)
+	fs.BoolVar(&o.rehearse, "rehearse", false, "let a simulated rig publish a test to the broker; the next flags say which")
+	o.play = newRehearseFlags(fs)
+	o.influx.flags(fs)
+	o.webhook.flags(fs)
+	fs.IntVar(&o.retainDays, "retain-days", 0, "remove runs that ended longer ago, except those marked keep (default: none)")
+	fs.Float64Var(&o.retainGB, "retain-gb", 0, "remove the oldest runs until the rest takes no more GB (10^9 bytes), except those marked keep (default: none)")
+	fs.Float64Var(&o.diskHours, "disk-hours", 4, "alarm when the disk of the data folder will be full in so many hours as it fills now; 0 = do not")
+	fs.Float64Var(&o.diskGB, "disk-gb", 2, "alarm when it has fewer GB (10^9 bytes) left; 0 = do not")
+	fs.DurationVar(&o.limit, "for", 0, "stop after this time (default: on interrupt)")
+	fs.BoolVar(&o.verbose, "verbose", false, "log what the parts do")
 }
 
 // check finds what cannot be meant, before anything is touched.

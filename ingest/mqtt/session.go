@@ -394,3 +394,16 @@ func (s *session) erase(ctx context.Context) bool {
 	conn.disconnect()
 	return true
 }
+
+// Forget ends the client's sessions at the broker, with all that it holds for them.
+// Call it after Run has ended.
+func (c *Client) Forget(ctx context.Context) error {
+	for _, s := range c.sessions {
+		conn := newConnection(0)
+		if _, err := newSession(c, PublisherSession, "", s.id).connect(ctx, conn); err != nil {
+			return fmt.Errorf("mqtt: session %q is not ended at the broker: %w", s.filter, err)
+		}
+		conn.disconnect()
+	}
+	return nil
+}
