@@ -39,6 +39,7 @@ type Options struct {
 	Hours   float64 // of calm running; 0 = 300
 	Events  float64 // times the usual number of runs with events, which gives at least 300 events per warning; 0 = 1
 	Workers int     // 0 = 1
+	kinds   int     // only the first kinds of runs with events; 0 = all
 }
 
 // Corpus is a rig with its rules, ready to be measured.
@@ -86,6 +87,9 @@ func (c *Corpus) Run(ctx context.Context, o Options, progress func(done, of int)
 	type job struct{ kind, n int }
 	var jobs []job
 	for k := range kinds {
+		if o.kinds > 0 && k >= o.kinds {
+			break
+		}
 		for n := range max(1, int(float64(kinds[k].runs)*o.Events)) {
 			jobs = append(jobs, job{k, n})
 		}

@@ -94,7 +94,7 @@ func paces() []rehearsal.Segment {
 // the probe is left out if that is due. Times are from the strike or the first throttle
 // movement that shows it.
 func TestFindings(t *testing.T) {
-	for _, tt := range []struct {
+	for i, tt := range []struct {
 		fault  string
 		want   []string // findings of the struck channel one after the other
 		by     float64  // s of the test: when the last of them stands
@@ -131,6 +131,9 @@ func TestFindings(t *testing.T) {
 		{"dropouts@90s:egt_3", nil, 0, false, nil},
 		{"barometer-loss@90s:p_baro", nil, 0, false, nil}, // no reading says nothing of the sensor
 	} {
+		if testing.Short() && i%6 != 0 {
+			continue
+		}
 		t.Run(tt.fault, func(t *testing.T) {
 			t.Parallel()
 			all, out, raised := findings(t, rehearsal.Options{Seed: 3, Rate: 20, Plan: paces()}, tt.fault)
@@ -200,6 +203,9 @@ func TestNoFalseFindings(t *testing.T) {
 		"paces":          {Seed: 5, Rate: 20, Plan: paces()},
 		"paces, at 50/s": {Seed: 6, Rate: 50, Plan: paces()},
 	} {
+		if testing.Short() && name != "quick" {
+			continue
+		}
 		t.Run(name, func(t *testing.T) {
 			t.Parallel()
 			all, out, raised := findings(t, o)

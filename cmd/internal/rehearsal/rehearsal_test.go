@@ -105,6 +105,9 @@ func TestSpeed(t *testing.T) {
 func TestWatched(t *testing.T) {
 	cfg := load(t, "example")
 	for _, scenario := range []Scenario{Quick, Full} {
+		if testing.Short() && scenario != Quick {
+			continue
+		}
 		t.Run(scenario.String(), func(t *testing.T) {
 			r, err := New(cfg, Options{Seed: 1, Scenario: scenario, Rate: 20, Start: epoch})
 			if err != nil {
