@@ -20,6 +20,13 @@ func TestCompareWithItself(t *testing.T) {
 	if scans.By != "records" || !scans.Same || scans.Paired < 100 || scans.OnlyA != 0 || len(scans.Differences)+len(scans.Alarms) > 0 || len(scans.Equal) < 20 || scans.AlarmsSame == 0 {
 		t.Errorf("%+v", scans)
 	}
+	marked := into[struct {
+		By, Zero string
+		Paired   int
+	}](t, r.get(t, "/api/runs/compare?a="+r.id+"&b="+r.id+"&by=mark&mark=opened"))
+	if marked.By != "mark" || marked.Zero != `the mark "opened"` || marked.Paired < 100 {
+		t.Errorf("from a mark: %+v", marked)
+	}
 	curves := into[struct {
 		Baseline []string
 		Curves   []struct {
