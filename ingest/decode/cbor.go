@@ -37,7 +37,7 @@ func (d *Decoder) senmlCBOR(payload []byte) {
 		d.refuse(reason, 0, -1, "payload is not well-formed or over a limit", err)
 		return
 	}
-	d.base = record{}
+	d.base = base{t: ingest.NoTime}
 	w := walker{b: payload}
 	pack := w.head()
 	if pack.major != cborArray {

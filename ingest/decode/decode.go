@@ -140,7 +140,7 @@ type Decoder struct {
 	host  int64
 	names []byte // names that had to be put together, unescaped strings
 
-	base record // SenML base fields in force
+	base base // SenML base fields in force
 }
 
 // New gives a decoder with the given limits.

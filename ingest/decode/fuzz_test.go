@@ -149,3 +149,30 @@ func FuzzExact(f *testing.F) {
 		}
 	})
 }
+
+// FuzzPlain: a record that is read in one go means the same as one with white space,
+// which is read the general way.
+func FuzzPlain(f *testing.F) {
+	for _, s := range []string{
+		rfcSeries, rfcTypes, `[{"n":"a","u":"K","v":1.5,"t":-2}]`, `[{"v":1,"n":"a","v":2}]`, `[{"bn":"r:","bt":1.7e9,"n":"a","v":1e3},{"n":"b","v":-0,"u":"K"}]`,
+		`[{"n":"a","v":1,"x":2}]`, `[{"n":"a\u0062","v":1}]`, `[{"n":"a","v":null},{"n":"b","v":"1"}]`, `[{"n":"a"},{"u":"K","v":1}]`, `[{"t":1e300,"n":"a","v":1}]`,
+	} {
+		f.Add([]byte(s))
+	}
+	one, two := New(Limits{}), New(Limits{})
+	f.Fuzz(func(t *testing.T, b []byte) {
+		var spaced bytes.Buffer
+		if json.Indent(&spaced, b, "", " ") != nil {
+			return
+		}
+		got, want := one.Decode(SenMLJSON, "", b, host), two.Decode(SenMLJSON, "", spaced.Bytes(), host)
+		if got.Faults != want.Faults || got.Refused != want.Refused || got.DeviceTime != want.DeviceTime || len(got.Samples) != len(want.Samples) {
+			t.Fatalf("%s: %d samples, %v; with white space %d, %v", b, len(got.Samples), got.Fault, len(want.Samples), want.Fault)
+		}
+		for i, s := range got.Samples {
+			if w := want.Samples[i]; !bytes.Equal(s.Name, w.Name) || !bytes.Equal(s.Unit, w.Unit) || s.Time != w.Time || math.Float64bits(s.Value) != math.Float64bits(w.Value) {
+				t.Fatalf("%s: sample %d is %+v, with white space %+v", b, i, s, w)
+			}
+		}
+	})
+}

@@ -9,7 +9,7 @@ import (
 
 // senmlJSON decodes a SenML pack in JSON [RFC 8428 5].
 func (d *Decoder) senmlJSON(payload []byte) {
-	d.base = record{}
+	d.base = base{t: ingest.NoTime}
 	s := scanner{b: payload, d: d}
 	s.expect('[', "a SenML pack is an array of records")
 	i := 0
@@ -21,9 +21,12 @@ func (d *Decoder) senmlJSON(payload []byte) {
 		i++
 		at := s.i
 		var r record
-		s.expect('{', "a SenML record is an object")
-		for k := 0; s.next('}', k) && !d.res.Refused; k++ {
-			s.field(&r, s.label(), i)
+		if !s.plain(&r) {
+			r = record{}
+			s.expect('{', "a SenML record is an object")
+			for k := 0; s.next('}', k) && !d.res.Refused; k++ {
+				s.field(&r, s.label(), i)
+			}
 		}
 		if s.what == "" && !d.res.Refused {
 			d.resolve(&r, i, at)
@@ -36,6 +39,79 @@ func (d *Decoder) senmlJSON(payload []byte) {
 	if s.what != "" {
 		d.refuse(ingest.ReasonSyntax, i, s.at, s.what, nil)
 	}
+}
+
+// plain reads a record as nearly all senders write it, in one go: labels n, u, v and t
+// in any order, no white space, no escapes. It gives false for any other, of which
+// it has taken nothing then: the general way has to read it.
+func (s *scanner) plain(r *record) bool {
+	b, i := s.b, s.i
+	if i == len(b) || b[i] != '{' {
+		return false
+	}
+	for {
+		i++ // over the brace or the comma
+		if len(b)-i < len(`"n":0}`) || b[i] != '"' || b[i+2] != '"' || b[i+3] != ':' {
+			return false
+		}
+		l := b[i+1]
+		i += 4
+		n := 0
+		switch l {
+		case 'n':
+			r.n, n = plainText(b[i:])
+			r.mark(labelName)
+		case 'u':
+			r.u, n = plainText(b[i:])
+			r.mark(labelUnit)
+		case 'v':
+			r.v, n = plainNumber(b[i:])
+			r.mark(labelValue)
+		case 't':
+			r.t, n = plainNumber(b[i:])
+			r.mark(labelTime)
+		}
+		if n == 0 {
+			return false
+		}
+		i += n
+		switch {
+		case i == len(b):
+			return false
+		case b[i] == '}':
+			s.i = i + 1
+			return true
+		case b[i] != ',':
+			return false
+		}
+	}
+}
+
+// plainText gives the string that b begins with, and the bytes it takes, quotes
+// included; 0 when there is none or it has escapes.
+func plainText(b []byte) (text []byte, n int) {
+	if len(b) == 0 || b[0] != '"' {
+		return nil, 0
+	}
+	for i := 1; i < len(b); i++ {
+		switch c := b[i]; {
+		case c == '"':
+			return b[1:i:i], i + 1
+		case c == '\\' || c < ' ':
+			return nil, 0
+		}
+	}
+	return nil, 0
+}
+
+// plainNumber gives the finite number that b begins with, and the bytes it takes; 0
+// when there is none.
+func plainNumber(b []byte) (v float64, n int) {
+	v, n, reason := decimal(b)
+	if reason != ingest.ReasonNone {
+		return 0, 0
+	}
+	return v, n
 }
 
 // label reads a label and the colon after it. Nearly all are one letter, written
@@ -245,25 +321,29 @@ func (s *scanner) number() (float64, ingest.Reason) {
 		s.skip(0)
 		return 0, ingest.ReasonNotNumber
 	}
-	start := s.i
-	if v, n := exact(s.b[start:]); n > 0 && start+n < len(s.b) && ends(s.b[start+n]) {
-		s.i += n
-		return v, ingest.ReasonNone
-	}
-	for s.i < len(s.b) && !ends(s.b[s.i]) {
-		s.i++
-	}
-	token := s.b[start:s.i]
-	switch string(token) {
-	case "null", "true", "false":
-		return 0, ingest.ReasonNotNumber
-	}
-	v, reason := number(token)
+	v, n, reason := decimal(s.b[s.i:])
 	if reason == ingest.ReasonSyntax {
-		s.i = start
 		s.fail("a value is due")
+		return 0, reason
 	}
+	s.i += n
 	return v, reason
+}
+
+// decimal reads what b begins with up to where a number ends, n bytes. The words for
+// what is no number give ReasonNotNumber.
+func decimal(b []byte) (v float64, n int, reason ingest.Reason) {
+	if v, n = exact(b); n > 0 && n < len(b) && ends(b[n]) {
+		return v, n, ingest.ReasonNone
+	}
+	for n = 0; n < len(b) && !ends(b[n]); n++ {
+	}
+	switch string(b[:n]) {
+	case "null", "true", "false":
+		return 0, n, ingest.ReasonNotNumber
+	}
+	v, reason = number(b[:n])
+	return v, n, reason
 }
 
 // ends tells whether c ends a number.

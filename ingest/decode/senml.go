@@ -83,6 +83,17 @@ type record struct {
 	what   string
 }
 
+// base holds the base fields in force [RFC 8428 4.1].
+type base struct {
+	bn, bu []byte
+	bt, bv float64
+	t      int64 // what bt comes to, and whether it is the sender's own
+	own    bool
+}
+
+// baseLabels are the bits of those labels in record.set.
+const baseLabels = 1<<(labelName-labelBaseSum) - 1
+
 func (r *record) mark(l label)     { r.set |= 1 << (l - labelBaseSum) }
 func (r *record) has(l label) bool { return r.set&(1<<(l-labelBaseSum)) != 0 }
 
@@ -144,23 +155,9 @@ func (d *Decoder) wrong(r *record, l label, reason ingest.Reason, i, at int) {
 // is no fault, nor is one that has base fields only.
 func (d *Decoder) resolve(r *record, i, at int) {
 	base := &d.base
-	if r.has(labelBaseVersion) && r.bver > senmlVersion {
-		d.refuse(ingest.ReasonMustUnderstand, i, at, "bver is over 10, a SenML version that is not known", nil)
+	if r.set&baseLabels != 0 && !d.rebase(r, i, at) {
 		return
 	}
-	if r.has(labelBaseName) {
-		base.bn = r.bn
-	}
-	if r.has(labelBaseUnit) {
-		base.bu = r.bu
-	}
-	if r.has(labelBaseTime) {
-		base.bt = r.bt
-	}
-	if r.has(labelBaseValue) {
-		base.bv = r.bv
-	}
-	base.set |= r.set
 
 	switch {
 	case r.reason != ingest.ReasonNone:
@@ -200,11 +197,35 @@ func (d *Decoder) resolve(r *record, i, at int) {
 	if !r.has(labelUnit) {
 		unit = base.bu
 	}
-	t, own := ingest.NoTime, false
-	if base.has(labelBaseTime) || r.has(labelTime) {
+	t, own := base.t, base.own
+	if r.has(labelTime) {
 		t, own = d.senmlTime(base.bt + r.t)
 	}
 	d.add(name, unit, t, own, v)
+}
+
+// rebase takes the base fields of record i, which starts at byte at, into force; false
+// when the pack is refused.
+func (d *Decoder) rebase(r *record, i, at int) bool {
+	base := &d.base
+	if r.has(labelBaseVersion) && r.bver > senmlVersion {
+		d.refuse(ingest.ReasonMustUnderstand, i, at, "bver is over 10, a SenML version that is not known", nil)
+		return false
+	}
+	if r.has(labelBaseName) {
+		base.bn = r.bn
+	}
+	if r.has(labelBaseUnit) {
+		base.bu = r.bu
+	}
+	if r.has(labelBaseTime) {
+		base.bt = r.bt
+		base.t, base.own = d.senmlTime(r.bt)
+	}
+	if r.has(labelBaseValue) {
+		base.bv = r.bv
+	}
+	return true
 }
 
 // senmlTime resolves a SenML time: below 2^28 s it is relative to now
@@ -224,7 +245,7 @@ func (d *Decoder) senmlTime(seconds float64) (int64, bool) {
 func validName(b []byte) bool {
 	for i, c := range b {
 		switch {
-		case c >= 'a' && c <= 'z', c >= 'A' && c <= 'Z', c >= '0' && c <= '9':
+		case c|0x20 >= 'a' && c|0x20 <= 'z', c >= '0' && c <= '9':
 		case i > 0 && (c == '-' || c == ':' || c == '.' || c == '/' || c == '_'):
 		default:
 			return false
