@@ -56,6 +56,7 @@ const (
 	suspectFor   = int64(3e9)         // host time over which a lagging clock is compared with ours
 	jumpFor      = int64(150e6)       // the same for a clock that jumped back while its source was live
 	neverSet     = int64(946684800e9) // 2000-01-01: a clock before it was never set
+	orderKept    = 1024               // samples of a message whose channels are remembered
 	largest      = 1e290              // a raw value beyond it is none; below it no mean overflows
 )
 
@@ -121,7 +122,8 @@ type Session struct {
 type topicInfo struct {
 	input  int // index of Config.Inputs, -1 = none takes it
 	byName map[string]int
-	only   int // the one channel of a value topic, -1 = go by name
+	only   int   // the one channel of a value topic, -1 = go by name
+	order  []int // channel of each sample of the newest message, −1 = none: senders keep to one order
 }
 
 // Aligner applies a configuration. It belongs to one goroutine.
@@ -129,7 +131,8 @@ type Aligner struct {
 	cfg     Config
 	decoder *decode.Decoder
 	shared  map[string]int // channels found by name on any input
-	topics  map[string]topicInfo
+	topics  map[string]*topicInfo
+	sent    []unit.Unit // of each channel the first unit that was sent and is not its own, by the name it was sent with
 }
 
 // New gives an aligner. The configuration must be valid: Period > 0, names
@@ -139,7 +142,8 @@ func New(cfg Config) *Aligner {
 		cfg:     cfg,
 		decoder: decode.New(decode.Limits{}),
 		shared:  make(map[string]int, len(cfg.Channels)),
-		topics:  map[string]topicInfo{},
+		topics:  map[string]*topicInfo{},
+		sent:    make([]unit.Unit, len(cfg.Channels)),
 	}
 	for i, c := range cfg.Channels {
 		if c.Topic == "" {
@@ -191,11 +195,11 @@ func (a *Aligner) Reset(s *State, from []Channel) {
 }
 
 // topic looks a topic up, and remembers what it found.
-func (a *Aligner) topic(topic string) topicInfo {
+func (a *Aligner) topic(topic string) *topicInfo {
 	if info, ok := a.topics[topic]; ok {
 		return info
 	}
-	info := topicInfo{input: -1, byName: a.shared, only: -1}
+	info := &topicInfo{input: -1, byName: a.shared, only: -1}
 	for i, in := range a.cfg.Inputs {
 		if Match(in.Filter, topic) {
 			info.input = i
@@ -281,7 +285,7 @@ func (a *Aligner) Message(s *State, r *ingest.Record, seen bool) *decode.Result 
 	src.Host = r.Host
 	s.Heard = true
 	for i := range res.Samples {
-		a.sample(s, src, info, &res.Samples[i], r.Host)
+		a.sample(s, src, info, i, &res.Samples[i], r.Host)
 	}
 	return res
 }
@@ -300,8 +304,8 @@ func (s *State) source(topic string) *SourceState {
 	return &s.Sources[len(s.Sources)-1]
 }
 
-func (a *Aligner) sample(s *State, src *SourceState, info topicInfo, sm *ingest.Sample, host int64) {
-	ch, v, why := a.value(info, sm)
+func (a *Aligner) sample(s *State, src *SourceState, info *topicInfo, i int, sm *ingest.Sample, host int64) {
+	ch, v, why := a.value(info, i, sm)
 	if why != ingest.ReasonNone {
 		s.Counters[why]++
 		return
@@ -322,29 +326,56 @@ func (a *Aligner) sample(s *State, src *SourceState, info topicInfo, sm *ingest.
 	a.place(s, ch, t, host, v)
 }
 
-// value gives the channel of a sample, −1 for none, and its raw value in the raw
-// unit of the channel; or why it cannot be used, with the value as it was sent.
-func (a *Aligner) value(info topicInfo, sm *ingest.Sample) (ch int, v float64, why ingest.Reason) {
-	ch, ok := info.only, info.only >= 0
-	if !ok {
-		ch, ok = info.byName[string(sm.Name)]
-	}
+// value gives the channel of sample i of a message, −1 for none, and its raw value in
+// the raw unit of the channel; or why it cannot be used, with the value as it was sent.
+func (a *Aligner) value(info *topicInfo, i int, sm *ingest.Sample) (ch int, v float64, why ingest.Reason) {
+	ch, ok := info.channel(a.cfg.Channels, i, sm.Name)
 	if !ok {
 		return -1, sm.Value, ingest.ReasonUnknownChannel
 	}
 	c := &a.cfg.Channels[ch]
 	v = sm.Value
 	if len(sm.Unit) > 0 && string(sm.Unit) != c.Raw.Name {
-		u, known := unit.Lookup(sm.Unit)
-		if !known || u.Dimension != c.Raw.Dimension {
-			return ch, v, ingest.ReasonUnit
+		u := &a.sent[ch]
+		if string(sm.Unit) != u.Name {
+			known, ok := unit.Lookup(sm.Unit)
+			if !ok || known.Dimension != c.Raw.Dimension {
+				return ch, v, ingest.ReasonUnit
+			}
+			if u.Name == "" {
+				*u, u.Name = known, string(sm.Unit)
+			}
+			v = c.Raw.FromSI(known.ToSI(v))
+		} else {
+			v = c.Raw.FromSI(u.ToSI(v))
 		}
-		v = c.Raw.FromSI(u.ToSI(v))
 	}
 	if !(math.Abs(v) < largest) {
 		return ch, sm.Value, ingest.ReasonNotFinite
 	}
 	return ch, v, ingest.ReasonNone
+}
+
+// channel finds the channel of sample i of a message by its name.
+func (info *topicInfo) channel(channels []Channel, i int, name []byte) (ch int, ok bool) {
+	if info.only >= 0 {
+		return info.only, true
+	}
+	if i < len(info.order) {
+		if ch = info.order[i]; ch >= 0 && channels[ch].Name == string(name) {
+			return ch, true
+		}
+	}
+	if ch, ok = info.byName[string(name)]; !ok {
+		ch = -1
+	}
+	switch {
+	case i < len(info.order):
+		info.order[i] = ch
+	case i < orderKept:
+		info.order = append(info.order, ch)
+	}
+	return ch, ok
 }
 
 // Read decodes a message and calls fn with each of its samples: the channel, −1
@@ -359,7 +390,7 @@ func (a *Aligner) Read(r *ingest.Record, seen bool, fn func(sm *ingest.Sample, c
 	res := a.decoder.Decode(a.cfg.Inputs[info.input].Format, r.Topic, r.Payload, r.Host)
 	for i := range res.Samples {
 		sm := &res.Samples[i]
-		ch, v, why := a.value(info, sm)
+		ch, v, why := a.value(info, i, sm)
 		switch {
 		case why != ingest.ReasonNone:
 		case r.Flags&ingest.FlagRetained != 0:
@@ -449,7 +480,9 @@ func (a *Aligner) place(s *State, ch int, t, host int64, v float64) {
 		if s.Backlog == 0 {
 			a.skip(s, t)
 		}
-		row = (t - (s.Next - p) - 1) / p
+		if t > s.Next {
+			row = (t - (s.Next - p) - 1) / p
+		}
 	}
 	cs.Newest = max(cs.Newest, t)
 	if row >= slotsAtMost {
@@ -468,7 +501,11 @@ func (a *Aligner) slot(s *State, ch int, row int64) *Acc {
 	for int64(s.Rows) <= row {
 		a.grow(s)
 	}
-	return &s.Table[(s.Base+int(row))%s.Rows*len(a.cfg.Channels)+ch]
+	at := s.Base + int(row)
+	if at >= s.Rows {
+		at -= s.Rows
+	}
+	return &s.Table[at*len(a.cfg.Channels)+ch]
 }
 
 // empty tells whether the row k after the oldest open one has no sample.

@@ -3,6 +3,7 @@ package align_test
 import (
 	"fmt"
 	"math"
+	"math/rand/v2"
 	"reflect"
 	"testing"
 
@@ -564,6 +565,33 @@ func TestUnits(t *testing.T) {
 		if got := b.rows[0].Raw[i]; math.Abs(got-tt.want) > 1e-12*tt.want {
 			t.Errorf("%g %s is %.15g, want %.15g", tt.v, tt.unit, got, tt.want)
 		}
+	}
+}
+
+// TestOrderOfSamples: what is remembered of the order and the units of one message never
+// changes what another means. The expectation is an aligner that remembers nothing.
+func TestOrderOfSamples(t *testing.T) {
+	cfg := rig(t)
+	senders := [][]byte{
+		[]byte(`[{"bt":1764579600,"n":"a","u":"kPa","v":1},{"n":"b","v":2},{"n":"slow","u":"Cel","v":3}]`),
+		[]byte(`[{"bt":1764579600,"n":"b","u":"kPa","v":4},{"n":"a","u":"bar","v":5}]`),
+		[]byte(`[{"bt":1764579600,"n":"a","v":6},{"n":"unknown","v":7},{"n":"slow","u":"K","v":300},{"n":"b","u":"Pa","v":8}]`),
+		[]byte(`[{"bt":1764579600,"n":"slow","u":"degF","v":9},{"n":"a","u":"K","v":10},{"n":"a","u":"Pa","v":11}]`),
+		[]byte(`[{"bt":1764579600,"n":"slow","u":"Cel","v":12},{"n":"a","u":"bar","v":13},{"n":"b","u":"furlong","v":14},{"n":"b","u":"bar","v":15}]`),
+	}
+	one, two := newBed(t, cfg), newBed(t, cfg)
+	rnd := rand.New(rand.NewPCG(1, 1))
+	for i := range 200 {
+		p := senders[rnd.IntN(len(senders))]
+		two.a = align.New(cfg)
+		one.send(fast, p)
+		two.send(fast, p)
+		if !reflect.DeepEqual(one.s, two.s) {
+			t.Fatalf("message %d, %s: the state differs", i, p)
+		}
+	}
+	if one.s.Samples < 400 || one.s.Counters[ingest.ReasonUnknownChannel] == 0 || one.s.Counters[ingest.ReasonUnit] == 0 {
+		t.Errorf("%d samples, counters %v: the messages test little", one.s.Samples, one.s.Counters)
 	}
 }
 
