@@ -291,7 +291,7 @@ func (f *File) seal(ctx context.Context, tx *sql.Tx, t *tail) error {
 		if err := b.scan(rows); err != nil {
 			return err
 		}
-		if records, err = f.decode(records, &b); err != nil {
+		if records, _, err = f.decode(records, &b, nil); err != nil {
 			return nil //nolint:nilerr // reading will report it; recording goes on
 		}
 	}

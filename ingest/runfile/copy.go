@@ -111,7 +111,7 @@ func (c *copier) blob(ctx context.Context, src *File, b *blob) error {
 		c.t.seq, c.t.host = b.last, b.lastHost
 		return c.f.insertBlob(ctx, c.tx, b)
 	}
-	records, err := src.decode(nil, b)
+	records, _, err := src.decode(nil, b, nil)
 	if err != nil {
 		return err
 	}

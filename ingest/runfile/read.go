@@ -6,6 +6,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"slices"
 
 	"modernc.org/sqlite"
 
@@ -31,28 +32,30 @@ func (b *blob) checksum() int64 {
 	return checksum(b.data, "", int64(b.first), int64(b.last), b.firstHost, b.lastHost, int64(b.codec), int64(b.bytes))
 }
 
-// decode appends the records of a blob to dst. They alias fresh memory or b.data.
-func (f *File) decode(dst []ingest.Record, b *blob) ([]ingest.Record, error) {
+// decode appends the records of a blob to dst. They alias room, which it unpacks
+// into and gives back, grown where that was needed, or else b.data.
+func (f *File) decode(dst []ingest.Record, b *blob, room []byte) ([]ingest.Record, []byte, error) {
 	bad := func(err error) error { return &CorruptError{Table: "records", Row: b.first, Err: err} }
 	if b.sum != b.checksum() {
-		return dst, bad(errChecksum)
+		return dst, room, bad(errChecksum)
 	}
 	raw := b.data
 	if b.codec == codecZstd {
 		var err error
-		if raw, err = f.dec.DecodeAll(b.data, make([]byte, 0, b.bytes)); err != nil {
-			return dst, bad(err)
+		if room, err = f.dec.DecodeAll(b.data, slices.Grow(room[:0], b.bytes)); err != nil {
+			return dst, room, bad(err)
 		}
+		raw = room
 	}
 	n := len(dst)
 	dst, err := ingest.DecodeRecords(dst, b.first, raw)
 	if err != nil {
-		return dst[:n], bad(err)
+		return dst[:n], room, bad(err)
 	}
 	if got := uint64(len(dst) - n); got != b.last-b.first+1 {
-		return dst[:n], bad(fmt.Errorf("%d records instead of %d to %d", got, b.first, b.last))
+		return dst[:n], room, bad(fmt.Errorf("%d records instead of %d to %d", got, b.first, b.last))
 	}
-	return dst, nil
+	return dst, room, nil
 }
 
 // pager reads rows of one table in short transactions, each ended by size.
@@ -164,8 +167,9 @@ func (f *File) Records(ctx context.Context, from, to uint64, fn func(*ingest.Rec
 	}
 	want := from
 	var records []ingest.Record
+	var room []byte
 	return f.blobs(ctx, from, to, func(b *blob) (err error) {
-		if records, err = f.decode(records[:0], b); err != nil {
+		if records, room, err = f.decode(records[:0], b, room); err != nil {
 			return f.fault("read", "records", err)
 		}
 		for i := range records {
@@ -241,7 +245,7 @@ func (f *File) seqAtHost(ctx context.Context, host int64) (uint64, error) {
 	if b.lastHost <= host {
 		return b.last, nil
 	}
-	records, err := f.decode(nil, &b)
+	records, _, err := f.decode(nil, &b, nil)
 	if err != nil {
 		return 0, err
 	}

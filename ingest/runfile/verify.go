@@ -92,11 +92,12 @@ func (f *File) Verify(ctx context.Context) error {
 func (f *File) checkRecords(ctx context.Context, n *Counts, tell func(error)) {
 	want, host := uint64(0), int64(math.MinInt64)
 	var records []ingest.Record
+	var room []byte
 	blobs := f.blobPages(0, math.MaxInt64)
 	blobs.damaged = func(err error) { tell(f.fault("read", "records", err)) }
 	err := blobs.each(ctx, f, func(b *blob) error {
 		var err error
-		if records, err = f.decode(records[:0], b); err != nil {
+		if records, room, err = f.decode(records[:0], b, room); err != nil {
 			tell(f.fault("read", "records", err))
 			if b.last >= b.first && b.first >= want {
 				want = b.last + 1 // the hole is the damaged blob, which is told
