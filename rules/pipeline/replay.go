@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"slices"
 
 	"throatwatch/ingest"
 	"throatwatch/ingest/runfile"
@@ -91,45 +92,71 @@ func (p *Replay) reconfigure() error {
 	return p.Machine.replace(p.State, p.other)
 }
 
-// rebuildWindow takes the hashes of the messages before c, as far back as a window
-// reaches: what it holds of the full checkpoint before c, and of the records between
-// the two.
+// rebuildWindow gathers the hashes of the messages before c, as far back as a window
+// reaches, from the checkpoints, the newest first.
 func rebuildWindow(ctx context.Context, f *runfile.File, state *State, c *runfile.Checkpoint) error {
-	first := uint64(0)
-	full, err := f.CheckpointAtHost(ctx, c.Host, true)
-	if err == nil && full.Seq > c.Seq { // records may share a host time
-		full, err = f.CheckpointAtHost(ctx, c.Host-1, true)
-	}
-	switch {
-	case err == nil:
-		first = full.Seq + 1
-	case !errors.Is(err, runfile.ErrNoCheckpoint):
-		return err
-	}
-	// Not every record is a message: where a window is not filled, twice as many are read.
-	for span := uint64(windowSize + windowSize/16); ; span *= 2 {
-		from := first
-		if c.Seq > span {
-			from = max(first, c.Seq-span+1)
+	var parts [][]uint64
+	n := 0
+	for at := *c; n < windowSize; {
+		_, stored, err := cutState(at.State)
+		if err != nil {
+			return err
 		}
-		state.window = Window{}
-		if from == first && first != 0 {
-			whole, err := Decode(full.State)
-			if err != nil {
+		if at.Full {
+			parts = append(parts, wholeWindow(stored))
+			break
+		}
+		before, err := f.LastCheckpoint(ctx, at.Seq-1)
+		first := errors.Is(err, runfile.ErrNoCheckpoint)
+		if err != nil && !first {
+			return err
+		}
+		since, hashes, ok := windowPart(stored)
+		if !ok || since < before.Seq {
+			since, hashes = at.Seq, nil
+		}
+		parts = append(parts, hashes)
+		n += len(hashes)
+		if since > before.Seq && n < windowSize {
+			if hashes, err = messageHashes(ctx, f, before.Seq, since, windowSize-n); err != nil {
 				return err
 			}
-			state.window = whole.window
+			parts = append(parts, hashes)
+			n += len(hashes)
 		}
-		n := 0
-		err := f.Records(ctx, from, c.Seq, func(r *ingest.Record) error {
+		if first {
+			break
+		}
+		at = before
+	}
+	slices.Reverse(parts)
+	state.window.load(slices.Concat(parts...))
+	state.window.keep(c.Seq)
+	return nil
+}
+
+// messageHashes gives the hashes of the messages after the record after, 0 = where the
+// file begins, up to the record upto; of more than want the newest, want at least.
+func messageHashes(ctx context.Context, f *runfile.File, after, upto uint64, want int) (hashes []uint64, err error) {
+	first := after
+	if after > 0 {
+		first++
+	}
+	// Not every record is a message: where they are too few, twice as many are read.
+	for span := uint64(want + windowSize/16); ; span *= 2 {
+		from := first
+		if upto > span {
+			from = max(first, upto-span+1)
+		}
+		hashes = hashes[:0]
+		err := f.Records(ctx, from, upto, func(r *ingest.Record) error {
 			if r.Kind == ingest.KindMessage {
-				state.window.Push(r)
-				n++
+				hashes = append(hashes, messageHash(r))
 			}
 			return nil
 		})
-		if err != nil || n >= windowSize || from == first {
-			return err
+		if err != nil || len(hashes) >= want || from == first {
+			return hashes, err
 		}
 	}
 }

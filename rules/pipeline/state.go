@@ -56,8 +56,11 @@ func (s *State) silence(src *align.SourceState) int64 {
 	return s.Host - max(src.Host, s.Booted)
 }
 
-// Encode gives the state as bytes. A full checkpoint carries the hashes by which
-// copies of messages are recognised; another leaves them to the records before.
+// Encode gives the state as bytes, for a checkpoint. A full one carries the hashes by
+// which copies of messages are recognised; another carries those since the state was
+// last encoded or decoded, and OpenReplay gathers the rest.
+//
+// Layout: length of the state (8 bytes, little endian), gob of the state, hashes.
 func (s *State) Encode(full bool) ([]byte, error) {
 	var b bytes.Buffer
 	b.Write(make([]byte, 8))
@@ -67,24 +70,37 @@ func (s *State) Encode(full bool) ([]byte, error) {
 	out := b.Bytes()
 	binary.LittleEndian.PutUint64(out, uint64(len(out)-8))
 	if full {
-		out = s.window.append(out)
+		out = s.window.append(out, 0)
+	} else {
+		out = s.window.appendPart(out)
 	}
+	s.window.keep(s.Seq)
 	return out, nil
 }
 
-// Decode is the inverse of Encode.
+// Decode is the inverse of Encode. Of a checkpoint that is not full the hashes are left out.
 func Decode(b []byte) (*State, error) {
+	state, hashes, err := cutState(b)
+	if err != nil {
+		return nil, err
+	}
+	s := &State{}
+	if err := gob.NewDecoder(bytes.NewReader(state)).Decode(s); err != nil {
+		return nil, fmt.Errorf("pipeline: state: %w", err)
+	}
+	s.window.load(wholeWindow(hashes))
+	s.window.keep(s.Seq)
+	return s, nil
+}
+
+// cutState cuts what Encode gave into the gob of the state and the hashes.
+func cutState(b []byte) (state, hashes []byte, err error) {
 	if len(b) < 8 {
-		return nil, fmt.Errorf("pipeline: state of %d bytes is cut", len(b))
+		return nil, nil, fmt.Errorf("pipeline: state of %d bytes is cut", len(b))
 	}
 	size := binary.LittleEndian.Uint64(b)
 	if size > uint64(len(b)-8) {
-		return nil, fmt.Errorf("pipeline: state of %d bytes is cut, %d are due", len(b)-8, size)
+		return nil, nil, fmt.Errorf("pipeline: state of %d bytes is cut, %d are due", len(b)-8, size)
 	}
-	s := &State{}
-	if err := gob.NewDecoder(bytes.NewReader(b[8 : 8+size])).Decode(s); err != nil {
-		return nil, fmt.Errorf("pipeline: state: %w", err)
-	}
-	s.window.load(b[8+size:])
-	return s, nil
+	return b[8 : 8+size], b[8+size:], nil
 }

@@ -2,6 +2,7 @@ package pipeline
 
 import (
 	"bytes"
+	"encoding/binary"
 	"fmt"
 	"math/rand/v2"
 	"path/filepath"
@@ -36,6 +37,9 @@ func TestEncode(t *testing.T) {
 			t.Fatal(err)
 		}
 		again, err := got.Encode(full)
+		if !full { // nothing came since
+			text, _ = b.s.Encode(full)
+		}
 		if err != nil || !bytes.Equal(again, text) {
 			t.Errorf("full %v: what was decoded encodes to other bytes: %v", full, err)
 		}
@@ -50,7 +54,7 @@ func TestEncode(t *testing.T) {
 			t.Errorf("full %v: the state differs", full)
 		}
 		// Cut anywhere it is an error, or, in the window, a shorter window.
-		size := len(text) - int(want)*8
+		size := 8 + int(binary.LittleEndian.Uint64(text))
 		for n := range size {
 			if n%7 == 0 || n > size-20 {
 				if _, err := Decode(text[:n]); err == nil {
@@ -115,9 +119,22 @@ func TestWindow(t *testing.T) {
 		t.Errorf("%d hashes are known, want %d", len(w.last), len(count))
 	}
 	var again Window
-	again.load(w.append(nil))
-	if !reflect.DeepEqual(w.last, again.reckon(w.n)) || !bytes.Equal(w.append(nil), again.append(nil)) {
+	again.load(wholeWindow(w.append(nil, 0)))
+	if !reflect.DeepEqual(w.last, again.reckon(w.n)) || !bytes.Equal(w.append(nil, 0), again.append(nil, 0)) {
 		t.Error("a window that was written and read differs")
+	}
+	// A part holds what came since, but never more than a window.
+	for _, n := range []uint64{0, 1, windowSize, windowSize + 5} {
+		w.kept, w.since = w.n-n, 77
+		since, hashes, ok := windowPart(w.appendPart(nil))
+		if want := list[len(list)-int(min(n, windowSize)):]; !ok || since != 77 || !slices.Equal(hashes, want) {
+			t.Errorf("the part of %d hashes has %d, since record %d: %v", n, len(hashes), since, ok)
+		}
+	}
+	for _, b := range [][]byte{nil, w.append(nil, 0), {partMark}, append([]byte{'q'}, make([]byte, 16)...), make([]byte, 10)} {
+		if _, _, ok := windowPart(b); ok {
+			t.Errorf("%d bytes are the part of a window", len(b))
+		}
 	}
 	// Topic and payload both count, and where one ends.
 	hashes := map[uint64]bool{}

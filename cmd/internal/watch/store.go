@@ -173,8 +173,16 @@ func lastGood(ctx context.Context, path string) *runfile.Checkpoint {
 			return &c
 		}
 		damage, ok := errors.AsType[*runfile.CorruptError](err)
-		if !ok || damage.Row == 0 || damage.Row > seq {
+		if !ok || damage.Row > seq {
 			return nil
+		}
+		if damage.Row == 0 { // the way to the newest is cut: go forward from the first
+			var last *runfile.Checkpoint
+			_ = f.Checkpoints(ctx, 0, seq, func(c *runfile.Checkpoint) error { // ends with the damage
+				last = c
+				return nil
+			})
+			return last
 		}
 		seq = damage.Row - 1
 	}

@@ -530,17 +530,18 @@ func TestDamagedFileIsPutAside(t *testing.T) {
 	for _, tt := range []struct {
 		name   string
 		run    bool // a run is on
+		chunk  int64
 		damage func(b []byte) []byte
 		goesOn bool // from a checkpoint
 	}{
-		{"cut in a run", true, func(b []byte) []byte { return b[:len(b)*3/4] }, true},
-		{"cut to its first page", true, func(b []byte) []byte { return b[:20_000] }, false},
-		{"a record in a run", true, func(b []byte) []byte {
+		{"cut in a run", true, 5e9, func(b []byte) []byte { return b[:len(b)*3/4] }, true},
+		{"cut to its first page", true, 20e9, func(b []byte) []byte { return b[:20_000] }, false},
+		{"a record in a run", true, 20e9, func(b []byte) []byte {
 			i := bytes.LastIndex(b, []byte("plant/north/bench/")) // not packed: after the last checkpoint
 			b[i] ^= 1
 			return b
 		}, true},
-		{"a record between runs", false, func(b []byte) []byte {
+		{"a record between runs", false, 20e9, func(b []byte) []byte {
 			i := bytes.LastIndex(b, []byte("plant/north/bench/"))
 			b[i] ^= 1
 			return b
@@ -555,7 +556,7 @@ func TestDamagedFileIsPutAside(t *testing.T) {
 			if tt.run {
 				must(t, feed.Take(ctx, watch.Input{Kind: ingest.KindAction, Payload: []byte(`{"do":"run_start","by":"T. Ester","request_id":"1"}`)}, host))
 			}
-			core.ChunkFor = 20e9
+			core.ChunkFor = tt.chunk
 			host = feedSmall(t, feed, host, 1000)
 			must(t, feed.End(ctx))
 			run, last := core.State.Run.ID, core.State.Seq
