@@ -369,10 +369,10 @@ func TestValueAndPeak(t *testing.T) {
 		s.to(s.next, true)
 	}
 	raised, returned := s.seen[0], s.seen[1]
-	if raised.Value != (Reading{1.9, true}) || raised.Text != "low 1.90" {
+	if raised.Value != reading(1.9) || raised.Text != "low 1.90" {
 		t.Errorf("raised: %+v", raised)
 	}
-	if returned.Peak != (Reading{1.2, true}) || returned.Text != "low 1.90" {
+	if returned.Peak != reading(1.2) || returned.Text != "low 1.90" {
 		t.Errorf("returned: %+v", returned)
 	}
 }
@@ -400,7 +400,7 @@ func TestDownward(t *testing.T) {
 			s.put("choke_margin_percent", v)
 			s.to(s.next, true)
 		}
-		if got := s.st.Instances[0].Peak; got != (Reading{tt.want, true}) {
+		if got := s.st.Instances[0].Peak; got != reading(tt.want) {
 			t.Errorf("%s: peak %+v, want %g", tt.name, got, tt.want)
 		}
 	}
@@ -604,7 +604,7 @@ func TestAlarmJSON(t *testing.T) {
 	a := Alarm{
 		ID: "r/unchoke/5", Rule: "unchoke", Title: "T", Text: "X", Priority: Caution, State: AlarmState(alarm.Shelved),
 		Raised: 1_800_000_000_000_000_001, Changed: 1_800_000_000_500_000_000, Revision: 3, Caution: "C", Response: "R",
-		Value: Reading{-2.5, true}, Unit: "%", Dimension: "ratio", Under: "r/choke_unknown/4", AcknowledgedBy: "Mara", AsideBy: "Mara", Reason: "noise", Until: 1_800_000_600_000_000_000,
+		Value: reading(-2.5), Unit: "%", Dimension: "ratio", Under: "r/choke_unknown/4", AcknowledgedBy: "Mara", AsideBy: "Mara", Reason: "noise", Until: 1_800_000_600_000_000_000,
 		Past: true, FirstOut: true, Group: "nozzle", Unknown: true,
 	}
 	b, err := json.Marshal(a)

@@ -12,18 +12,10 @@ import (
 // longer than a scan that came late, short for a person who watches.
 const unknownAfter = 2 * int64(time.Second)
 
-// Reading is a number that may not be known. It is comparable, as NaN is not.
-type Reading struct {
-	V     float64
-	Known bool
-}
+// Reading is a number that may not be known.
+type Reading = monitor.Reading
 
-func reading(v float64) Reading {
-	if v-v != 0 {
-		return Reading{}
-	}
-	return Reading{v, true}
-}
+func reading(v float64) Reading { return monitor.ReadingOf(v) }
 
 // State is all that judging rules remembers. It is plain data: it may be
 // encoded, copied and compared.

@@ -2,11 +2,9 @@ package rules
 
 import (
 	"bytes"
-	"encoding/json"
 	"fmt"
-	"strconv"
-	"time"
 
+	"throatwatch/monitor"
 	"throatwatch/rules/alarm"
 )
 
@@ -55,53 +53,8 @@ func view(p *program, in *Instance) Alarm {
 	}
 }
 
-// Time is an event time in ns UTC; 0 is none. As JSON it is RFC 3339 in UTC to
-// the nanosecond, or null.
-type Time int64
-
-// MarshalJSON writes RFC 3339 or null.
-func (t Time) MarshalJSON() ([]byte, error) {
-	if t == 0 {
-		return []byte("null"), nil
-	}
-	return time.Unix(0, int64(t)).UTC().AppendFormat(nil, `"`+time.RFC3339Nano+`"`), nil
-}
-
-// UnmarshalJSON reads what MarshalJSON writes.
-func (t *Time) UnmarshalJSON(b []byte) error {
-	if string(b) == "null" {
-		*t = 0
-		return nil
-	}
-	at, err := time.Parse(`"`+time.RFC3339Nano+`"`, string(b))
-	if err != nil {
-		return fmt.Errorf("alarm time %s: %w", b, err)
-	}
-	*t = Time(at.UnixNano())
-	return nil
-}
-
-// MarshalJSON writes the number, or null when it is not known.
-func (r Reading) MarshalJSON() ([]byte, error) {
-	if !r.Known {
-		return []byte("null"), nil
-	}
-	return json.Marshal(r.V)
-}
-
-// UnmarshalJSON reads a number or null.
-func (r *Reading) UnmarshalJSON(b []byte) error {
-	if string(b) == "null" {
-		*r = Reading{}
-		return nil
-	}
-	v, err := strconv.ParseFloat(string(b), 64)
-	if err != nil {
-		return fmt.Errorf("alarm value %s: %w", b, err)
-	}
-	*r = reading(v)
-	return nil
-}
+// Time is an event time in ns UTC; 0 is none.
+type Time = monitor.Time
 
 // AlarmState is a state of package alarm that knows its JSON name.
 type AlarmState alarm.State
