@@ -59,6 +59,7 @@ type Config struct {
 	// It gives what is wrong with them; nil = the files cannot be read here.
 	Reload func(ctx context.Context, a pipeline.Action) (pipeline.Reply, []Fault, error)
 	Extra  func() []Metric // further metrics, of parts that the server does not know
+	Free   func() float64  // bytes on the disk of the data folder, 0 = not known; nil = the same
 
 	Access   *access.Gate // who may come in; nil: nobody is asked who they are
 	OpenRole access.Role  // of everybody where Access is nil; the zero value is Operator
@@ -129,6 +130,9 @@ func (s *Server) routes() map[string]handler {
 		"POST /api/runs/{id}/entries":         s.entry,
 		"GET /api/runs/{id}/log":              s.operatorLog,
 		"POST /api/rigs/{rig}/swap":           s.swap,
+		"GET /api/rigs/{rig}/checks":          s.checks,
+		"POST /api/rigs/{rig}/checks":         s.check,
+		"GET /api/runs/{id}/checks":           s.runChecks,
 		"GET /api/session":                    s.session,
 		"POST /api/session":                   s.signIn,
 		"DELETE /api/session":                 s.signOut,

@@ -313,6 +313,8 @@ func (d *desk) store(r *ingest.Record, outs []pipeline.Outcome) {
 			event(o, "mark", o.Mark)
 		case pipeline.OutcomeLog:
 			event(o, "log", o.Entry)
+		case pipeline.OutcomeChecks:
+			event(o, "checks", o.Check)
 		case pipeline.OutcomeQuarantine:
 			event(o, "quarantine", o.Text)
 		case pipeline.OutcomeRun:

@@ -44,6 +44,9 @@ func appendFrame(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) (body []
 	case pipeline.OutcomeMark:
 		kind = "mark"
 		dst = member(open(dst, kind, o), "mark", o.Mark)
+	case pipeline.OutcomeChecks:
+		kind = "checks"
+		dst = member(open(dst, kind, o), "checks", o.Check)
 	case pipeline.OutcomeLog:
 		kind = "log"
 		dst = member(open(dst, kind, o), "entry", o.Entry)
@@ -465,6 +468,7 @@ func appendHello(dst []byte, m *pipeline.Machine, s *pipeline.State, at place, b
 	l := &cfg.Compute.EGT.Limits
 	dst = member(dst, "cooldown", coolDownJSON{seconds(l.CoolFuelOff), seconds(l.CoolRest)})
 	dst = member(dst, "log", append([]pipeline.Entry{}, s.Log...))
+	dst = member(dst, "checks", m.Checks(s))
 	dst = open(name(dst, "status"), "status", &pipeline.Outcome{Epoch: s.Epoch, N: at.n, T: s.Host})
 	return append(appendStatus(dst, &status), '}', '}')
 }

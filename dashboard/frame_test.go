@@ -12,6 +12,7 @@ import (
 	"throatwatch/dashboard"
 	"throatwatch/ingest"
 	"throatwatch/monitor"
+	"throatwatch/monitor/check"
 	"throatwatch/monitor/egt"
 	"throatwatch/rules"
 	"throatwatch/rules/alarm"
@@ -62,6 +63,13 @@ func outcomes() []pipeline.Outcome {
 		{Kind: pipeline.OutcomeMark, Mark: &monitor.Mark{T: t, Text: nasty, By: nasty}},
 		{Kind: pipeline.OutcomeLog, Entry: &pipeline.Entry{
 			T: rules.Time(t), What: "swap", Channel: "egt_1", Serial: nasty, Reason: nasty, By: nasty, Role: "engineer", ValidFrom: rules.Time(t - 1),
+		}},
+		{Kind: pipeline.OutcomeChecks, Check: &check.Result{
+			Phase: check.Before, State: check.Done, Began: rules.Time(t - 1e10), Ended: rules.Time(t), Warmth: check.Cold, By: nasty, Note: nasty, Passed: 1, Of: 2,
+			Summary: "Data-system checks passed 1 of 2. Not a clearance to start.", Items: []check.Item{
+				{ID: "zero.p7", Kind: check.KindZero, Channel: "p7", Title: nasty, Text: nasty, Value: rules.Reading{V: 2.5, Known: true}, Unit: "Pa"},
+				{ID: "tick.alarm_sound", Kind: check.KindTick, Title: nasty, Passed: true, By: nasty},
+			},
 		}},
 		{Kind: pipeline.OutcomeRun, Event: "started", Run: &monitor.Run{ID: nasty, Number: 3, Rig: rigID, Engine: nasty, Started: t, By: nasty}},
 	}

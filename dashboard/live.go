@@ -129,7 +129,7 @@ func (h *Hub) Publish(outs []pipeline.Outcome, m *pipeline.Machine, _ *pipeline.
 			}
 		case pipeline.OutcomePoint, pipeline.OutcomeAlarm, pipeline.OutcomeLedger, pipeline.OutcomeStatus,
 			pipeline.OutcomeMark, pipeline.OutcomeRun, pipeline.OutcomeQuarantine, pipeline.OutcomeAction, pipeline.OutcomeReduction,
-			pipeline.OutcomeExceedance, pipeline.OutcomeEngine, pipeline.OutcomeLife, pipeline.OutcomeLog:
+			pipeline.OutcomeExceedance, pipeline.OutcomeEngine, pipeline.OutcomeLife, pipeline.OutcomeLog, pipeline.OutcomeChecks:
 			h.frame(o, &cfg, now)
 		}
 	}

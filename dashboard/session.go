@@ -26,7 +26,7 @@ var free = []string{"/", "GET /healthz", "GET /api/session", "POST /api/session"
 // changes something is for an engineer.
 var forOperator = []string{
 	"POST /api/alarms/{id}/{action}", "POST /api/rigs/{rig}/runs", "POST /api/runs/{id}/marks", "POST /api/runs/{id}/entries", "PATCH /api/runs/{id}",
-	"PATCH /api/runs/{id}",
+	"POST /api/rigs/{rig}/checks",
 }
 
 // caller is who makes a request.

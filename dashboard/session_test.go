@@ -184,7 +184,7 @@ func TestRoles(t *testing.T) {
 	}
 	operator := []string{
 		"POST /api/alarms/x/acknowledge", "POST /api/alarms/x/shelve", "POST /api/alarms/x/unshelve", "POST /api/alarms/x/reset",
-		"POST /api/rigs/cell_2/runs", "POST /api/runs/x/marks", "POST /api/runs/x/entries", "PATCH /api/runs/x",
+		"POST /api/rigs/cell_2/runs", "POST /api/rigs/cell_2/checks", "POST /api/runs/x/marks", "POST /api/runs/x/entries", "PATCH /api/runs/x",
 	}
 	engineer := []string{
 		"POST /api/alarms/x/out-of-service", "POST /api/alarms/x/in-service", "POST /api/alarms/x%2Fy/out-of-service",

@@ -311,6 +311,7 @@ func (w *watcher) page(secure bool) dashboard.Config {
 	c := dashboard.Config{
 		Desk: w.loop, Runs: watch.StoredRuns{Catalog: w.store.Catalog(), Store: w.store}, Parse: watch.Parse,
 		Build: watch.Build(), Log: w.log, Extra: w.metrics, Reload: w.reload,
+		Free:     func() float64 { free, _ := watch.FreeSpace(w.opt.data); return free }, // 0 where that is not known
 		OpenRole: w.opt.guard.role(), Secure: secure, Audit: newLog(w.stderr, true),
 	}
 	if w.site != nil {

@@ -136,7 +136,7 @@ func (b *bed) step() []Outcome {
 	for _, o := range b.outs {
 		switch o.Kind {
 		case OutcomeAlarm, OutcomeRun, OutcomeMark, OutcomeAction, OutcomeConfig, OutcomeQuarantine,
-			OutcomeExceedance, OutcomeEngine, OutcomeLife, OutcomeLog:
+			OutcomeExceedance, OutcomeEngine, OutcomeLife, OutcomeLog, OutcomeChecks:
 			b.all = append(b.all, o)
 		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeReduction:
 		}
@@ -252,6 +252,8 @@ func (b *bed) told(kind OutcomeKind) string {
 			words = append(words, word)
 		case OutcomeLife:
 			words = append(words, fmt.Sprintf("%s: %d starts, %d cycles", o.Life.Serial, o.Life.Starts, o.Life.Cycles))
+		case OutcomeChecks:
+			words = append(words, o.Check.Phase+" "+o.Check.State)
 		case OutcomeLog:
 			words = append(words, o.Entry.What+" by "+o.Entry.By)
 		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeAction, OutcomeReduction:

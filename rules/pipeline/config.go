@@ -4,6 +4,7 @@ import (
 	"time"
 
 	"throatwatch/monitor/align"
+	"throatwatch/monitor/check"
 	"throatwatch/monitor/compute"
 	"throatwatch/rules"
 )
@@ -61,5 +62,6 @@ type Config struct {
 	Derived []rules.Derived // names that rules may read beside the standard ones
 	Run     RunConfig
 	Change  Change
-	Hash    string // hex SHA-256 of the text
+	Checks  check.Limits // what is zero is as check.Defaults has it
+	Hash    string       // hex SHA-256 of the text
 }

@@ -12,6 +12,7 @@ import (
 
 	"throatwatch/ingest"
 	"throatwatch/monitor"
+	"throatwatch/monitor/check"
 	"throatwatch/monitor/egt"
 	"throatwatch/monitor/steady"
 	"throatwatch/rules"
@@ -37,6 +38,7 @@ const (
 	OutcomeEngine                            // Engine: a start, a shutdown or what went wrong with one
 	OutcomeLife                              // Life: of the engine, when a run ends
 	OutcomeLog                               // Entry: of the operator log
+	OutcomeChecks                            // Check: one of the data system began or ended, or counts for the run that starts
 )
 
 // Outcome is one result of a step. What it points to belongs to the machine and
@@ -66,6 +68,7 @@ type Outcome struct {
 	Engine     *EngineEvent
 	Life       *Life
 	Entry      *Entry
+	Check      *check.Result
 }
 
 // Allowance is a line of the EGT ledger: a band and how much of it is used up.

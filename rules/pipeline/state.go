@@ -40,8 +40,9 @@ type State struct {
 	Log       []Entry  // the last of the operator log, the oldest first
 	Swaps     []Swap   // sensors that were exchanged, in the order of their entry
 	Numbers   Numbering
-	Trial     Trial // of the run that is on
-	Imported  bool  // the records are those of another data system: runs get no number of ours
+	Trial     Trial  // of the run that is on
+	Imported  bool   // the records are those of another data system: runs get no number of ours
+	Checks    Checks // of the data system, before and after a run
 	window    Window
 }
 

@@ -15,6 +15,7 @@ import (
 	"throatwatch/ingest"
 	"throatwatch/monitor"
 	"throatwatch/monitor/align"
+	"throatwatch/monitor/check"
 	"throatwatch/monitor/compute"
 	"throatwatch/rules"
 )
@@ -92,6 +93,8 @@ type Action struct {
 	RequestID string        `json:"request_id"`
 
 	ApprovedBy string `json:"approved_by,omitempty"` // of a configuration
+
+	Check CheckRequest `json:"check,omitzero"`
 }
 
 // What an operator can do. The alarm actions are those of package rules.
@@ -102,6 +105,7 @@ const (
 	DoEntry    = "entry"   // a reading or a remark, by hand
 	DoSwap     = "swap"    // another sensor is on a channel
 	DoReadmit  = "readmit" // takes an excluded probe back
+	DoCheck    = "check"   // of the data system, before or after a run
 	// DoConfig tells who brings the configuration of the next record; DoConfigRefused
 	// that one was refused before it came to that, and by Text why.
 	DoConfig        = "config"
@@ -144,6 +148,7 @@ type program struct {
 	ledgers [][]Allowance // buffers
 	listed  int           // of ledgers, by this step
 	status  Status
+	limits  check.Limits // of checks
 }
 
 // computed holds a scan with its operating point.
@@ -207,6 +212,7 @@ func (m *Machine) load(bundle []byte) error {
 	m.bundle = bytes.Clone(bundle)
 	m.prog = &program{
 		cfg: cfg, align: align.New(cfg.Align), compute: comp, rules: set, frame: newFrame(&cfg, names, set.Names()),
+		limits: cfg.Checks.WithDefaults(),
 	}
 	return nil
 }
@@ -261,6 +267,7 @@ func (m *Machine) Step(s *State, r *ingest.Record) []Outcome {
 		}
 		m.scan(s, c.scan, &c.point)
 	}
+	m.overdue(s)
 	if r.Host-s.HostJudge >= hostJudge {
 		s.HostJudge = r.Host
 		m.judgeSelf(s)
@@ -319,6 +326,7 @@ func (m *Machine) config(s *State, r *ingest.Record) {
 	}
 	p := m.prog
 	if old == nil || old.cfg.Hash != p.cfg.Hash {
+		m.breakOff(s, r.Host, "limits and rules were changed")
 		m.fit(s, old)
 	}
 	if old == nil {
@@ -342,6 +350,7 @@ func (m *Machine) fit(s *State, old *program) {
 	m.prog.align.Reset(&s.Align, from)
 	m.prog.compute.Reset(&s.Compute, fromComp)
 	m.prog.rules.Fit(&s.Rules)
+	s.Checks.Gather = check.Gather{} // of the old channels
 }
 
 // replace puts a configuration in the place of the one in force as if it had been there,
@@ -397,6 +406,7 @@ func (m *Machine) scan(s *State, scan *monitor.Scan, point *monitor.OperatingPoi
 	m.emit(s, Outcome{Kind: OutcomePoint, T: scan.T, Point: point, Scan: scan})
 	m.emit(s, Outcome{Kind: OutcomeChannels, T: scan.T, Point: point, Scan: scan})
 	m.runs(s, point)
+	m.gather(s, scan)
 	m.account(s, &changes, point)
 	if changes.Moved || scan.N%uint64(max(1, second/p.cfg.Align.Period)) == 0 {
 		m.ledger(s, scan.T)
@@ -483,6 +493,7 @@ func (m *Machine) startRun(s *State, t int64, by string) {
 	s.Compute.Area = compute.Area{}
 	run := s.Run
 	m.emit(s, Outcome{Kind: OutcomeRun, T: t, Run: &run, Event: "started"})
+	m.checked(s, t)
 }
 
 func (m *Machine) endRun(s *State, t int64) {
@@ -574,6 +585,10 @@ func (m *Machine) do(s *State, a *Action) error {
 		}
 		s.Armed = false
 		m.endRun(s, t)
+	case DoCheck:
+		if err := m.check(s, t, a); err != nil {
+			return fmt.Errorf("check: %w", err)
+		}
 	case DoReadmit:
 		if err := m.readmit(s, a); err != nil {
 			return fmt.Errorf("take %s back: %w", a.Channel, err)

@@ -60,6 +60,7 @@ func readRig(f File) *rig {
 	r.readEGT(m.get("egt"))
 	r.readStarter(m.get("starter"))
 	r.readCoolDown(m.get("cooldown"))
+	r.readChecks(m.get("checks"))
 	r.readRun(m.get("run"))
 	r.readChange(m)
 	r.readProcedures(m)

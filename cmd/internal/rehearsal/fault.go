@@ -23,6 +23,8 @@ const (
 	ProbeDrift
 	ProbeShort
 	ProbeSlow
+	ProbeOffset
+	Noisy
 	HotStreak
 	PressureZeroShift
 	PressureLeak
@@ -56,6 +58,8 @@ var faults = [numFaults]struct {
 	ProbeDrift:        {"probe-drift", "a channel drifts up by 0.2 % of its range per second, at most 20 %", 0, true},
 	ProbeShort:        {"probe-short", "a thermocouple shorts: it reads the temperature of its terminals", 0, true},
 	ProbeSlow:         {"probe-slow", "a channel lags 12 times as much, at least 6 s: a broken contact", 0, true},
+	ProbeOffset:       {"probe-offset", "a thermocouple reads 15 K too high: another wire, a wrong terminal", 0, true},
+	Noisy:             {"noisy", "a channel scatters 6 times as much as it is stated to: a loose screen", 0, true},
 	HotStreak:         {"hot-streak", "the gas at one EGT probe is truly 80 K hotter", 0, true},
 	PressureZeroShift: {"pressure-zero-shift", "a pressure channel reads 1 % of its range too high from one sample to the next", 0, true},
 	PressureLeak:      {"pressure-leak", "the line of a pressure channel leaks: it reads 85 % of what there is above the barometer", 0, true},
@@ -106,7 +110,7 @@ type Fault struct {
 	Kind    FaultKind
 	At      time.Duration // of the test
 	For     time.Duration // 0 = as long as is usual for the kind: probes to the end, messages some seconds
-	Size    float64       // times what is usual for drift, heat, shift, leak and lag; 0 = 1
+	Size    float64       // times what is usual for drift, heat, shift, offset, scatter, leak and lag; 0 = 1
 	Channel string        // 0 = a fitting one; for faults of messages, all
 }
 
@@ -196,7 +200,7 @@ func (f Fault) fit(c *compute.Config) (*active, error) {
 		fitting = []int{st.Barometer}
 	case PressureZeroShift, PressureLeak, PressureBlocked:
 		fitting = append(slices.Clone(st.P7), st.ExitPlane, st.Barometer)
-	case ProbeShort:
+	case ProbeShort, ProbeOffset:
 		fitting = slices.Concat(st.EGT, st.T7)
 	default:
 		fitting = slices.Concat(st.EGT, st.T7, st.P7)
@@ -249,6 +253,20 @@ func (r *Rig) lags(i int) float64 {
 // inchOfMercury in Pa, at 0 °C. (NIST SP 811, B.8.)
 const inchOfMercury = 3386.389
 
+// probeOffset is by how much a thermocouple is off, K.
+const probeOffset = 15
+
+// scatter gives how many times its usual noise channel i has.
+func (r *Rig) scatter(i int) float64 {
+	k := 1.0
+	for _, f := range r.faults {
+		if f.Kind == Noisy && f.channel == i && f.at(r.now) {
+			k *= max(1, 6*f.Size)
+		}
+	}
+	return k
+}
+
 // terminals is how much warmer than the surroundings the terminals of a thermocouple
 // are, K.
 const terminals = 5
@@ -268,6 +286,8 @@ func (r *Rig) shift(i int) float64 {
 			e += span * min(0.2, 0.002*f.Size*(r.now-f.At).Seconds())
 		case PressureZeroShift:
 			e += 0.01 * f.Size * span
+		case ProbeOffset:
+			e += probeOffset * f.Size
 		case ProbeShort:
 			e += r.plant.ambient + terminals - s.x
 		case PressureLeak:

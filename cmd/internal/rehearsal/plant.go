@@ -226,7 +226,7 @@ func newPlant(c *compute.Config, d Day, rng *rand.Rand) (*plant, error) {
 	// The state at 100 % scales what grows with power.
 	p.n, p.flame, p.lit = 1, 1, true
 	p.egt = p.egtMax
-	p.wall = p.egt * p.factor
+	p.wall = p.egt * p.mixed(p.egt)
 	p.gasTop = 1
 	if err := p.gasPath(); err != nil {
 		return nil, err
@@ -348,12 +348,19 @@ func (p *plant) surroundings() {
 	}
 }
 
+// mixed gives T7 over EGT: the factor of the rig file in hot gas, and 1 in a cold engine,
+// all of which has the temperature of its surroundings.
+func (p *plant) mixed(egt float64) float64 {
+	const hot = 150 // K above them
+	return 1 - (1-p.factor)*clamp((egt-p.ambient)/hot, 0, 1)
+}
+
 // gasPath computes pressures, flows and thrust from speed, temperature and bleed.
 // Air, fuel and nozzle flow close exactly: W8 = W2 (1 − blown off − bled) + Wf. What the
 // rig file states as bled is taken off at all times.
 func (p *plant) gasPath() error {
 	c := p.cfg
-	p.t7 = p.factor * p.egt
+	p.t7 = p.egt * p.mixed(p.egt)
 	// Off the running line the throat passes W √T ∝ p7: the rise of pressure goes
 	// with temperature and, while the compressor pumps the same air, with the
 	// square of what is not blown off.

@@ -293,7 +293,7 @@ func (r *Rig) read() {
 	r.readings = r.readings[:0]
 	for i := range r.sensors {
 		s := &r.sensors[i]
-		raw := s.read(r.noise.NormFloat64(), r.shift(i))
+		raw := s.read(r.noise.NormFloat64()*r.scatter(i), r.shift(i))
 		raw, r.sent[i] = r.replace(i, raw)
 		r.sent[i], r.late[i] = r.sent[i] && r.pack%s.every == 0, false
 		r.readings = append(r.readings, decode.Reading{Unit: s.unitName, Value: raw})

@@ -166,6 +166,8 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 			c.event(o, "engine", o.Engine)
 		case pipeline.OutcomeLife:
 			c.event(o, "life", o.Life)
+		case pipeline.OutcomeChecks:
+			c.event(o, "checks", o.Check)
 		case pipeline.OutcomeChannels, pipeline.OutcomeLedger, pipeline.OutcomeStatus, pipeline.OutcomeAction:
 		}
 	}
