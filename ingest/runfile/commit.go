@@ -69,10 +69,11 @@ type Batch struct {
 func (f *File) Commit(ctx context.Context, b Batch) error {
 	size := 0
 	err := f.transact(ctx, "commit", func(tx *sql.Tx, t *tail) error {
-		if err := f.addRecords(ctx, tx, t, b.Records); err != nil {
+		packed, err := f.addRecords(ctx, tx, t, b.Records)
+		if err != nil {
 			return err
 		}
-		size = t.bytes
+		size = packed + t.bytes
 		if c := b.Checkpoint; c != nil && t.seq == 0 {
 			t.seq, t.host = c.Seq, c.Host // an empty file may begin with a checkpoint
 		}
@@ -205,21 +206,36 @@ func loadTail(ctx context.Context, q querier) (t tail, err error) {
 	return t, err
 }
 
-// addRecords checks and stores records, as they are.
-func (f *File) addRecords(ctx context.Context, tx *sql.Tx, t *tail, records []ingest.Record) error {
+// addRecords checks and stores records: few as they are, many packed. So a disk that is
+// slow, before which records gather, gets the fewer bytes. It gives how many bytes
+// were packed into the file.
+func (f *File) addRecords(ctx context.Context, tx *sql.Tx, t *tail, records []ingest.Record) (packed int, err error) {
 	seq, host := t.seq, t.host
 	for i := range records {
 		r := &records[i]
 		follows := r.Seq == seq+1 || seq == 0 || r.Kind == ingest.KindGap && r.Seq > seq
 		if !follows || r.Seq == 0 || r.Seq > math.MaxInt64 || r.Host < host && seq != 0 || r.Kind == ingest.KindInvalid {
-			return fmt.Errorf("record %d (kind %d, host %d) after record %d (host %d): %w", r.Seq, r.Kind, r.Host, seq, host, ErrOrder)
+			return 0, fmt.Errorf("record %d (kind %d, host %d) after record %d (host %d): %w", r.Seq, r.Kind, r.Host, seq, host, ErrOrder)
 		}
 		seq, host = r.Seq, r.Host
 	}
-	for part := range pieces(records, sealBytes) {
-		n, err := f.addBlob(ctx, tx, part, codecPlain)
+	for part, size := range pieces(records, sealBytes) {
+		codec := codecPlain
+		if size >= packBytes { // large enough by itself: nothing is gained by writing it twice
+			codec = codecZstd
+			if t.small != 0 {
+				if err := f.seal(ctx, tx, t); err != nil {
+					return 0, err
+				}
+			}
+		}
+		n, err := f.addBlob(ctx, tx, part, codec)
 		if err != nil {
-			return err
+			return 0, err
+		}
+		if codec == codecZstd {
+			packed += len(f.packed)
+			continue
 		}
 		if t.small == 0 {
 			t.small = part[0].Seq
@@ -227,16 +243,17 @@ func (f *File) addRecords(ctx context.Context, tx *sql.Tx, t *tail, records []in
 		t.bytes += n
 	}
 	t.seq, t.host = seq, host
-	return nil
+	return packed, nil
 }
 
-// pieces cuts records where numbers jump and where a piece has come to limit bytes.
-func pieces(records []ingest.Record, limit int) iter.Seq[[]ingest.Record] {
-	return func(yield func([]ingest.Record) bool) {
+// pieces cuts records where numbers jump and where a piece has come to limit bytes; with
+// each it gives about how many it has.
+func pieces(records []ingest.Record, limit int) iter.Seq2[[]ingest.Record, int] {
+	return func(yield func([]ingest.Record, int) bool) {
 		start, size := 0, 0
 		for i := range records {
 			if i > start && (size >= limit || records[i].Seq != records[i-1].Seq+1) {
-				if !yield(records[start:i]) {
+				if !yield(records[start:i], size) {
 					return
 				}
 				start, size = i, 0
@@ -244,7 +261,7 @@ func pieces(records []ingest.Record, limit int) iter.Seq[[]ingest.Record] {
 			size += weight(&records[i])
 		}
 		if start < len(records) {
-			yield(records[start:])
+			yield(records[start:], size)
 		}
 	}
 }

@@ -24,3 +24,12 @@ func ReadTransaction(ctx context.Context, f *File) (end func() error, err error)
 	}
 	return tx.Rollback, nil
 }
+
+// Codecs gives the codec of each blob of records, 0 = as committed, 1 = packed.
+func Codecs(ctx context.Context, f *File) (list []int, err error) {
+	err = f.blobs(ctx, 0, 1<<62, func(b *blob) error {
+		list = append(list, b.codec)
+		return nil
+	})
+	return list, err
+}

@@ -28,7 +28,8 @@
 //
 // Records lie as they were committed until about 1 MiB has come together or a
 // checkpoint comes; then they are packed again into blobs of about 1 MiB under
-// zstd in the same transaction. A checkpoint therefore always lies on a blob
+// zstd in the same transaction. Those of a commit of 256 KiB and more are packed at
+// once, after what lies there still. A checkpoint therefore always lies on a blob
 // boundary. The rowid of a blob is its first record number, so no index is kept
 // beside it; a host time is found by bisection, as host time never falls.
 // Times are integers in ns UTC. Rows of chunks, events and checkpoints carry
@@ -65,6 +66,7 @@ const (
 // Bounds of what is read or packed at a time.
 const (
 	sealBytes   = 1 << 20 // small records are packed when this much has come together
+	packBytes   = 1 << 18 // records that come together in one commit are packed at once from this size on
 	pageBytes   = 4 << 20 // one read transaction ends after this much …
 	pageRows    = 256     // … or this many rows
 	readers     = 4       // read transactions at once

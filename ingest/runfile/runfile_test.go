@@ -349,3 +349,36 @@ func TestFailedCommitLeavesNothing(t *testing.T) {
 	}
 	verify(t, f)
 }
+
+// Few records lie as they came, many are packed at once, after the few before them; and
+// it is the same file afterwards, also when it is opened again between.
+func TestManyRecordsArePackedAtOnce(t *testing.T) {
+	f := create(t, "run.db", runfile.Options{})
+	var all []ingest.Record
+	for i, step := range []struct {
+		n, size int
+		codecs  []int
+	}{
+		{10, 100, []int{0}},
+		{10, 100, []int{0, 0}},
+		{300, 1000, []int{1, 1}}, // over 256 KiB
+		{300, 1000, []int{1, 1, 1}},
+		{5, 100, []int{1, 1, 1, 0}},
+		{2500, 1000, []int{1, 1, 1, 1, 1, 1, 1}}, // of 1 MiB each at most
+		{5, 100, []int{1, 1, 1, 1, 1, 1, 1, 0}},
+	} {
+		next := uint64(len(all)) + 1
+		records := messages(next, next+uint64(step.n)-1, step.size)
+		commit(t, f, runfile.Batch{Records: records})
+		all = append(all, records...)
+		got, err := runfile.Codecs(t.Context(), f)
+		if err != nil || !slices.Equal(got, step.codecs) {
+			t.Errorf("commit %d: blobs of codecs %v, want %v: %v", i+1, got, step.codecs, err)
+		}
+		if i == 4 {
+			f = reopen(t, f, runfile.ReadWrite)
+		}
+	}
+	wantRecords(t, f, 0, 0, all)
+	verify(t, f)
+}
