@@ -50,6 +50,12 @@ func appendFrame(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config) (body []
 	case pipeline.OutcomeLog:
 		kind = "log"
 		dst = member(open(dst, kind, o), "entry", o.Entry)
+	case pipeline.OutcomeCard:
+		kind = "card"
+		dst = member(open(dst, kind, o), "card", o.Card.Shown(false))
+	case pipeline.OutcomeCardPoint:
+		kind = "card_point"
+		dst = member(open(dst, kind, o), "point", o.Taken)
 	case pipeline.OutcomeRun:
 		kind = "run"
 		dst = member(text(open(dst, kind, o), "event", o.Event), "run", runView(o.Run))
@@ -160,6 +166,12 @@ func appendPoint(dst []byte, p *monitor.OperatingPoint, cfg *pipeline.Config) []
 	dst = text(dst, "choke_state", p.Choke.String())
 	dst = truth(dst, "choke_marginal", p.ChokeMarginal)
 	dst = truth(dst, "choke_armed", p.ChokeArmed)
+	dst = name(dst, "choke_armed_by")
+	if p.ArmedBy == monitor.ByNobody {
+		dst = append(dst, "null"...)
+	} else {
+		dst = quoted(dst, p.ArmedBy.String())
+	}
 	dst = truth(dst, "lit", p.Lit)
 	dst = text(dst, "phase", p.Phase.String())
 	dst = text(dst, "back_pressure_from", p.BackFrom.String())
@@ -469,6 +481,7 @@ func appendHello(dst []byte, m *pipeline.Machine, s *pipeline.State, at place, b
 	dst = member(dst, "cooldown", coolDownJSON{seconds(l.CoolFuelOff), seconds(l.CoolRest)})
 	dst = member(dst, "log", append([]pipeline.Entry{}, s.Log...))
 	dst = member(dst, "checks", m.Checks(s))
+	dst = member(dst, "card", cardView(&s.Card))
 	dst = open(name(dst, "status"), "status", &pipeline.Outcome{Epoch: s.Epoch, N: at.n, T: s.Host})
 	return append(appendStatus(dst, &status), '}', '}')
 }

@@ -129,7 +129,8 @@ func (h *Hub) Publish(outs []pipeline.Outcome, m *pipeline.Machine, _ *pipeline.
 			}
 		case pipeline.OutcomePoint, pipeline.OutcomeAlarm, pipeline.OutcomeLedger, pipeline.OutcomeStatus,
 			pipeline.OutcomeMark, pipeline.OutcomeRun, pipeline.OutcomeQuarantine, pipeline.OutcomeAction, pipeline.OutcomeReduction,
-			pipeline.OutcomeExceedance, pipeline.OutcomeEngine, pipeline.OutcomeLife, pipeline.OutcomeLog, pipeline.OutcomeChecks:
+			pipeline.OutcomeExceedance, pipeline.OutcomeEngine, pipeline.OutcomeLife, pipeline.OutcomeLog, pipeline.OutcomeChecks,
+			pipeline.OutcomeCard, pipeline.OutcomeCardPoint:
 			h.frame(o, &cfg, now)
 		}
 	}

@@ -264,6 +264,22 @@ var reasonNames = [numReasons]string{
 // String gives the code used in JSON, "" for no reason.
 func (r Reason) String() string { return name(reasonNames[:], r) }
 
+// ArmedBy says what decides whether the throat is expected choked.
+type ArmedBy uint8
+
+// What decides it. The zero value is nothing.
+const (
+	ByNobody ArmedBy = iota
+	BySpeed          // the speed rule of the rig file arms
+	ByCard           // the current point of the test card arms or disarms
+	numArmedBy
+)
+
+var armedByNames = [numArmedBy]string{"", "speed_rule", "test_card"}
+
+// String gives the code used in JSON, "" for nothing.
+func (a ArmedBy) String() string { return name(armedByNames[:], a) }
+
 // Warning is a bit of OperatingPoint.Warnings.
 type Warning uint32
 
@@ -321,6 +337,7 @@ type OperatingPoint struct {
 	Choke          ChokeState
 	ChokeMarginal  bool
 	ChokeArmed     bool
+	ArmedBy        ArmedBy // who says so; ByNobody where choke is not armed and no card disarms it
 	Lit            bool
 	LitKnown       bool // false until Lit says something
 	Phase          Phase

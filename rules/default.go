@@ -80,7 +80,7 @@ func Default(q Equipment) []Rule {
 		Name: "unchoke", When: `choke_armed and choke_state != "choked"`, Priority: Caution,
 		OnDelay: 300 * ms, OffDelay: second, Group: groupNozzle, Value: "choke_margin_percent", Downward: true,
 		Title:    "Throat unchoked",
-		Text:     "Throat not choked while choke is expected: margin {choke_margin_percent:%.1}, NPR {npr:.3} against {choke_npr:.3}. Follow the facility's test-point procedure." + notProtection,
+		Text:     "Throat not choked while choke is expected by the {choke_armed_by}: margin {choke_margin_percent:%.1}, NPR {npr:.3} against {choke_npr:.3}. Follow the facility's test-point procedure." + notProtection,
 		Caution:  "Flow and thrust now depend on the back pressure; values taken at this point are not those of a choked nozzle. Watch cell depression, rake pressures and indicated EGT.",
 		Response: "Facility procedure for a lost test point.",
 	}, Rule{

@@ -105,6 +105,7 @@ type Channel struct {
 //	every monitor.Quantity by its key
 //	choke_state phase back_pressure_from                   text
 //	total_pressure_from total_temperature_from             text
+//	choke_armed_by                                         text: what arms choke, or disarms it
 //	choke_armed choke_marginal lit run_active steady       true or false
 //	egt_probes_used egt_probes_lost rake_probes_used rake_probes_lost
 //	health.recording health.input_path health.clock health.sources   true = works
@@ -148,7 +149,9 @@ func StandardNames(channels []Channel, bands []string) []Name {
 	seconds := func(name string) Name { return Name{Name: name, Type: Number, Unit: "s", Dimension: unit.Time} }
 	flag := func(name string) Name { return Name{Name: name, Type: Bool} }
 	daemon := func(n Name) Name { n.Daemon = true; return n }
+	armedBy := []string{"speed rule", "test card"}
 	names = append(names,
+		Name{Name: "choke_armed_by", Type: Text, Values: armedBy},
 		Name{Name: "choke_state", Type: Text, Values: states},
 		Name{Name: "phase", Type: Text, Values: phases},
 		Name{Name: "back_pressure_from", Type: Text, Values: sources},

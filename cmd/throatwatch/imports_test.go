@@ -33,7 +33,7 @@ var only = map[string]map[string][]string{
 // pure lists packages that compute and nothing else.
 var pure = []string{
 	"monitor", "monitor/unit", "monitor/gas", "monitor/nozzle", "monitor/uncertainty", "monitor/calib", "monitor/phase",
-	"monitor/steady", "monitor/rake", "monitor/egt", "monitor/align", "monitor/compute", "monitor/check", "monitor/archive", "rules/alarm", "rules", "rules/figures",
+	"monitor/steady", "monitor/rake", "monitor/egt", "monitor/align", "monitor/compute", "monitor/check", "monitor/archive", "rules/alarm", "rules", "rules/figures", "rules/card",
 }
 
 var impure = []string{"net", "net/http", "os", "database/sql", "log", "log/slog", "math/rand", "math/rand/v2"}

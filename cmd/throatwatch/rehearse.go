@@ -112,6 +112,7 @@ func rehearseStart(cfg pipeline.Config, o rehearsal.Options, begin time.Time) (i
 type rehearseFlags struct {
 	seed   *uint64
 	quick  *bool
+	points *bool
 	rate   *float64
 	speed  *float64
 	faults *[]string
@@ -121,6 +122,7 @@ func newRehearseFlags(flags *pflag.FlagSet) rehearseFlags {
 	return rehearseFlags{
 		seed:   flags.Uint64("seed", 1, "number that all chance comes from; the same gives the same readings"),
 		quick:  flags.Bool("quick", false, "the events of a test within a minute"),
+		points: flags.Bool("points", false, "five steady points instead, those of testdata/cards/example.yaml"),
 		rate:   flags.Float64("rate", 50, "packs of readings per second"),
 		speed:  flags.Float64("speed", 1, "let the test pass this many times faster; allowances and delays stay in real time"),
 		faults: flags.StringArray("fault", nil, "a fault, name@time[+duration][:channel]; may be given more than once"),
@@ -130,10 +132,15 @@ func newRehearseFlags(flags *pflag.FlagSet) rehearseFlags {
 // options gives the options without the start; its error names every bad fault.
 func (f rehearseFlags) options() (rehearsal.Options, error) {
 	o := rehearsal.Options{Seed: *f.seed, Rate: *f.rate, Speed: *f.speed}
-	if *f.quick {
-		o.Scenario = rehearsal.Quick
-	}
 	var bad []error
+	switch {
+	case *f.quick && *f.points:
+		bad = append(bad, errors.New("--quick and --points are two tests: give one"))
+	case *f.quick:
+		o.Scenario = rehearsal.Quick
+	case *f.points:
+		o.Scenario = rehearsal.Points
+	}
 	for _, s := range *f.faults {
 		fault, err := rehearsal.ParseFault(s)
 		if err != nil {

@@ -119,7 +119,7 @@ func (o *watchOptions) check(fs *pflag.FlagSet) error {
 		return err
 	}
 	if !o.rehearse {
-		for _, name := range []string{"seed", "quick", "rate", "speed", "fault"} {
+		for _, name := range []string{"seed", "quick", "points", "rate", "speed", "fault"} {
 			if fs.Changed(name) {
 				return fmt.Errorf("--%s says what is rehearsed: add --rehearse", name)
 			}

@@ -121,14 +121,7 @@ type Table struct {
 }
 
 // Quantities are those of a point, in the order of the tables.
-func Quantities() []monitor.Quantity {
-	return []monitor.Quantity{
-		monitor.NPR, monitor.ChokeMarginPercent, monitor.RakePressure, monitor.TotalTemperature, monitor.BackPressure, monitor.Barometer,
-		monitor.MassFlow, monitor.AirFlow, monitor.FuelFlow, monitor.WaterFlow, monitor.BleedFlow, monitor.IndependentFlow,
-		monitor.FlowBalance, monitor.EffectiveArea, monitor.GrossThrust, monitor.MeasuredThrust, monitor.Speed, monitor.EGTIndicated,
-		monitor.EGTSpread, monitor.ReferredFlow, monitor.ReferredSpeed, monitor.ReferredThrust, monitor.ReferredEGT,
-	}
-}
+func Quantities() []monitor.Quantity { return pipeline.PointQuantities() }
 
 // Read gives the test points of a run. Parse gives the configuration of a stored bundle.
 // The error is ErrOption, or that of the run file.

@@ -322,6 +322,9 @@ func (c *Computer) speed(s *State, scan *monitor.Scan, p *monitor.OperatingPoint
 		s.Armed = true
 	}
 	p.ChokeArmed = s.Armed
+	if s.Armed {
+		p.ArmedBy = monitor.BySpeed
+	}
 }
 
 // blame names the first channel of a group that is not usable as the cause. -1

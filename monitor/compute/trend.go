@@ -48,6 +48,16 @@ func (c *Computer) steadyNow(s *State, p *monitor.OperatingPoint) {
 	}
 }
 
+// Unsteady gives the first quantity that is not steady by its window as of the last scan,
+// and its slope per second; NumQuantities where none is to blame.
+func (c *Computer) Unsteady(s *State) (q monitor.Quantity, slope float64) {
+	i := s.Steady.Result.Quantity
+	if len(s.Steady.Stats) == 0 || i < 0 || i >= len(c.watched) {
+		return monitor.NumQuantities, math.NaN()
+	}
+	return c.watched[i], s.Steady.Stats[i].Slope
+}
+
 // Trend is what is remembered of a quantity that may reach a limit. It is plain data.
 type Trend struct {
 	Past  steady.Past

@@ -136,9 +136,9 @@ func (b *bed) step() []Outcome {
 	for _, o := range b.outs {
 		switch o.Kind {
 		case OutcomeAlarm, OutcomeRun, OutcomeMark, OutcomeAction, OutcomeConfig, OutcomeQuarantine,
-			OutcomeExceedance, OutcomeEngine, OutcomeLife, OutcomeLog, OutcomeChecks:
+			OutcomeExceedance, OutcomeEngine, OutcomeLife, OutcomeLog, OutcomeChecks, OutcomeCardPoint:
 			b.all = append(b.all, o)
-		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeReduction:
+		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeReduction, OutcomeCard:
 		}
 	}
 	return b.outs
@@ -256,7 +256,9 @@ func (b *bed) told(kind OutcomeKind) string {
 			words = append(words, o.Check.Phase+" "+o.Check.State)
 		case OutcomeLog:
 			words = append(words, o.Entry.What+" by "+o.Entry.By)
-		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeAction, OutcomeReduction:
+		case OutcomeCardPoint:
+			words = append(words, fmt.Sprintf("%d %s", o.Taken.Number, o.Taken.Status))
+		case OutcomePoint, OutcomeChannels, OutcomeLedger, OutcomeStatus, OutcomeAction, OutcomeReduction, OutcomeCard:
 		}
 	}
 	b.all = rest

@@ -43,6 +43,7 @@ const (
 	fromTemperature
 	fromSteady
 	fromArmed
+	fromArmedBy
 	fromMarginal
 	fromLit
 	fromRunActive
@@ -85,7 +86,7 @@ const (
 var plainSources = map[string]source{
 	"choke_state": fromChokeState, "phase": fromPhase, "back_pressure_from": fromBackPressure,
 	"total_pressure_from": fromTotalPressure, "total_temperature_from": fromTemperature, "steady": fromSteady,
-	"choke_armed": fromArmed, "choke_marginal": fromMarginal, "lit": fromLit, "run_active": fromRunActive,
+	"choke_armed": fromArmed, "choke_armed_by": fromArmedBy, "choke_marginal": fromMarginal, "lit": fromLit, "run_active": fromRunActive,
 	"egt_probes_used": fromEGTUsed, "rake_probes_used": fromRakeUsed,
 	"egt_probes_lost": fromEGTLost, "rake_probes_lost": fromRakeLost,
 	"sensors_failed": fromFailed, "failed_sensor": fromFailedSensor, "failed_finding": fromFailedFinding,
@@ -215,6 +216,8 @@ func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 			f.Bools[it.slot] = rules.TriOf(p.Steady)
 		case fromArmed:
 			f.Bools[it.slot] = rules.TriOf(p.ChokeArmed)
+		case fromArmedBy:
+			f.Texts[it.slot] = armedBy(p.ArmedBy)
 		case fromMarginal:
 			f.Bools[it.slot] = rules.TriOf(p.ChokeMarginal)
 		case fromLit:
@@ -265,6 +268,18 @@ func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 			fromWebhook, fromDatabase, fromWebhookWaiting, fromDatabaseLag, fromDisk, fromDiskFree:
 		}
 	}
+}
+
+// armedBy names what arms choke, or disarms it, as alarms do; "" is not known to a rule.
+func armedBy(a monitor.ArmedBy) string {
+	switch a {
+	case monitor.BySpeed:
+		return "speed rule"
+	case monitor.ByCard:
+		return "test card"
+	case monitor.ByNobody:
+	}
+	return ""
 }
 
 // found counts findings; first is the channel of the first of them.
@@ -362,7 +377,7 @@ func (f *frame) fillHealth(s *State) {
 				f.Numbers[it.slot] = float64(max(s.Host-s.Align.MaxEvent, 0)) / 1e9
 			}
 		case fromQuantity, fromChokeState, fromPhase, fromBackPressure, fromTotalPressure, fromTemperature, fromSteady,
-			fromArmed, fromMarginal, fromLit, fromChannel, fromQuality, fromUsable, fromOver, fromExceeded, fromElapsed, fromRemaining, fromEGTUsed, fromRakeUsed,
+			fromArmed, fromArmedBy, fromMarginal, fromLit, fromChannel, fromQuality, fromUsable, fromOver, fromExceeded, fromElapsed, fromRemaining, fromEGTUsed, fromRakeUsed,
 			fromEGTLost, fromRakeLost, fromFailed, fromFailedSensor, fromFailedFinding, fromDoubtful, fromDoubtfulSensor, fromDoubtfulFinding,
 			fromHot, fromHotProbe, fromHotBy, fromFinding:
 		}

@@ -10,6 +10,7 @@ import (
 	"throatwatch/monitor/compute"
 	"throatwatch/monitor/unit"
 	"throatwatch/rules"
+	"throatwatch/rules/card"
 )
 
 const (
@@ -85,6 +86,8 @@ func (a *Action) checkTexts() error {
 		{"by", a.By, mostName},
 		{"approved by", a.ApprovedBy, mostName},
 		{"request id", a.RequestID, mostName},
+		{"card text", a.CardText, card.MostText},
+		{"card hash", a.CardHash, mostName},
 	} {
 		if len(f.text) > f.most {
 			return invalid("the %s has more than %d bytes", f.name, f.most)

@@ -16,6 +16,7 @@ import (
 	"throatwatch/monitor/egt"
 	"throatwatch/monitor/steady"
 	"throatwatch/rules"
+	"throatwatch/rules/card"
 )
 
 // OutcomeKind tells what an outcome is.
@@ -39,6 +40,8 @@ const (
 	OutcomeLife                              // Life: of the engine, when a run ends
 	OutcomeLog                               // Entry: of the operator log
 	OutcomeChecks                            // Check: one of the data system began or ended, or counts for the run that starts
+	OutcomeCard                              // Card, Event: the test card and how the engine stands to it
+	OutcomeCardPoint                         // Taken: a point of a test card was taken, accepted or rejected
 )
 
 // Outcome is one result of a step. What it points to belongs to the machine and
@@ -69,6 +72,8 @@ type Outcome struct {
 	Life       *Life
 	Entry      *Entry
 	Check      *check.Result
+	Card       *card.State
+	Taken      *card.Taken
 }
 
 // Allowance is a line of the EGT ledger: a band and how much of it is used up.
@@ -155,8 +160,8 @@ type SessionStatus struct {
 	Connected bool
 }
 
-// Digest is the SHA-256 over the operating points and alarm transitions of a
-// run, from the outcome that starts it to the one that ends it. It covers every
+// Digest is the SHA-256 over the operating points, alarm transitions and points of
+// test cards of a run, from the outcome that starts it to the one that ends it. It covers every
 // bit of them, so two runs of the computation with equal digests computed the
 // same.
 type Digest struct {
@@ -179,14 +184,15 @@ func (d *Digest) Add(o *Outcome) {
 		}
 		return
 	}
-	if !d.active || o.Kind != OutcomePoint && o.Kind != OutcomeAlarm {
+	if !d.active || o.Kind != OutcomePoint && o.Kind != OutcomeAlarm && o.Kind != OutcomeCardPoint {
 		return
 	}
 	b := append(d.buf[:0], byte(o.Kind))
 	b = binary.LittleEndian.AppendUint64(b, o.Epoch)
 	b = binary.LittleEndian.AppendUint64(b, o.N)
 	b = binary.LittleEndian.AppendUint64(b, uint64(o.T))
-	if o.Kind == OutcomePoint {
+	switch o.Kind {
+	case OutcomePoint:
 		p := o.Point
 		for _, v := range p.V {
 			b = binary.LittleEndian.AppendUint64(b, math.Float64bits(v))
@@ -197,11 +203,20 @@ func (d *Digest) Add(o *Outcome) {
 		b = binary.LittleEndian.AppendUint32(b, uint32(p.Warnings))
 		b = binary.LittleEndian.AppendUint16(b, uint16(p.EGTProbesUsed))
 		b = binary.LittleEndian.AppendUint16(b, uint16(p.RakeProbesUsed))
+		if by := p.ArmedBy; by != monitor.ByNobody && (by != monitor.BySpeed || !p.ChokeArmed) { // else it follows: a run without a card keeps its digest
+			b = append(b, byte(by))
+		}
 		for _, c := range [...]monitor.Cause{p.Cause, p.EGTCause} {
 			b = append(b, byte(c.Kind), byte(c.Quality))
 			b = binary.LittleEndian.AppendUint32(b, uint32(c.Channel))
 		}
-	} else {
+	case OutcomeCardPoint:
+		text, err := json.Marshal(o.Taken)
+		if err != nil {
+			panic(fmt.Sprintf("pipeline: point %d does not encode: %v", o.Taken.Number, err))
+		}
+		b = append(b, text...)
+	default:
 		text, err := json.Marshal(o.Alarm)
 		if err != nil {
 			panic(fmt.Sprintf("pipeline: alarm %s does not encode: %v", o.Alarm.ID, err))

@@ -47,25 +47,22 @@ const (
 // of the run file.
 func ReduceStretch(ctx context.Context, f *runfile.File, codec *archive.Codec, cfg *Config, from, to int64) (TestPoint, error) {
 	span := to - from
-	w := steady.Window{Width: max(span/reduceBins, cfg.Align.Period)}
-	if span <= 0 || span/max(w.Width, 1) < leastBins {
+	if span <= 0 || span/max(windowOf(span, cfg.Align.Period).Width, 1) < leastBins {
 		return TestPoint{}, fmt.Errorf("reduce %d ns: %w", span, ErrTooFew)
 	}
-	w.Bins = int((span + w.Width - 1) / w.Width)
-	tp := TestPoint{From: from, To: to, Values: make([]steady.Value, monitor.NumQuantities)}
-	pasts := make([]steady.Past, monitor.NumQuantities)
-	shift := w.Width - from // the stretch begins with the second bin
+	g := gather(cfg, from, to)
+	tp := TestPoint{From: from, To: to}
 	err := Rows(ctx, f, codec, ChunkPoints, nil, from, to, func(c *archive.Chunk, first, last int) {
-		tp.Scans += last - first
+		g.Scans += last - first
 		for i := range c.Columns {
 			col := &c.Columns[i]
 			if q, ok := monitor.ParseQuantity(col.Name); ok && col.Kind == archive.KindFloat {
 				for k := first; k < last; k++ {
-					w.Add(&pasts[q], c.Times[k]+shift, col.Float[k])
+					g.value(q, c.Times[k], col.Float[k])
 				}
 			} else if col.Name == "flags" {
 				for k := first; k < last; k++ {
-					tp.Steady += float64(col.Byte[k] & FlagSteady / FlagSteady)
+					g.Steady += int(col.Byte[k] & FlagSteady / FlagSteady)
 				}
 			}
 		}
@@ -73,23 +70,97 @@ func ReduceStretch(ctx context.Context, f *runfile.File, codec *archive.Codec, c
 	if err != nil {
 		return tp, fmt.Errorf("reduce: %w", err)
 	}
-	if tp.Scans < leastBins {
-		return tp, fmt.Errorf("reduce: %d scans: %w", tp.Scans, ErrTooFew)
+	err = Rows(ctx, f, codec, ChunkChannels, nil, from, to, func(c *archive.Chunk, first, last int) {
+		g.Rows += last - first
+		for i := range c.Columns {
+			id, ok := strings.CutPrefix(c.Columns[i].Name, "channel.")
+			ch := slices.IndexFunc(cfg.Compute.Channels, func(c compute.Channel) bool { return c.ID == id })
+			if !ok || ch < 0 || c.Columns[i].Kind != archive.KindFloat {
+				continue
+			}
+			for _, v := range c.Columns[i].Float[first:last] {
+				g.channel(ch, v)
+			}
+		}
+	})
+	if err != nil {
+		return tp, fmt.Errorf("reduce: %w", err)
 	}
-	tp.Steady /= float64(tp.Scans)
+	return g.reduce(cfg)
+}
+
+// gathering is a stretch of scans on its way to a test point. It is plain data of a size
+// that does not depend on the number of scans.
+type gathering struct {
+	From, To int64
+	Window   steady.Window
+	Pasts    []steady.Past // by quantity
+	Mean     []float64     // by channel …
+	Used     []int         // … of so many scans
+	Scans    int
+	Steady   int // scans that were steady
+	Rows     int // scans of the channels
+}
+
+// windowOf gives bins for a stretch of a length, ns.
+func windowOf(span, period int64) steady.Window {
+	w := steady.Window{Width: max(span/reduceBins, period)}
+	w.Bins = int((span + w.Width - 1) / w.Width)
+	return w
+}
+
+// gather begins a stretch.
+func gather(cfg *Config, from, to int64) gathering {
+	n := len(cfg.Compute.Channels)
+	return gathering{
+		From: from, To: to, Window: windowOf(to-from, cfg.Align.Period),
+		Pasts: make([]steady.Past, monitor.NumQuantities), Mean: make([]float64, n), Used: make([]int, n),
+	}
+}
+
+// add enters a scan with its operating point.
+func (g *gathering) add(scan *monitor.Scan, p *monitor.OperatingPoint) {
+	for q := range p.V {
+		g.value(monitor.Quantity(q), scan.T, p.V[q])
+	}
+	for i := range min(len(g.Mean), len(scan.Value)) {
+		g.channel(i, scan.Value[i])
+	}
+	g.Scans++
+	g.Rows++
+	if p.Steady {
+		g.Steady++
+	}
+}
+
+func (g *gathering) value(q monitor.Quantity, t int64, v float64) {
+	g.Window.Add(&g.Pasts[q], t+g.Window.Width-g.From, v) // the stretch begins with the second bin
+}
+
+func (g *gathering) channel(i int, v float64) {
+	if !math.IsNaN(v) {
+		g.Used[i]++
+		g.Mean[i] += (v - g.Mean[i]) / float64(g.Used[i])
+	}
+}
+
+// reduce gives the test point. The error is ErrTooFew, or that of a configuration that
+// cannot be computed by.
+func (g *gathering) reduce(cfg *Config) (TestPoint, error) {
+	tp := TestPoint{From: g.From, To: g.To, Scans: g.Scans, Values: make([]steady.Value, monitor.NumQuantities)}
+	if g.Scans < leastBins {
+		return tp, fmt.Errorf("reduce: %d scans: %w", g.Scans, ErrTooFew)
+	}
+	tp.Steady = float64(g.Steady) / float64(g.Scans)
 	comp, err := compute.New(cfg.Compute)
 	if err != nil {
 		return tp, fmt.Errorf("reduce: %w", err)
 	}
-	scan, err := meanScan(ctx, f, codec, cfg, from, to)
-	if err != nil {
-		return tp, fmt.Errorf("reduce: %w", err)
-	}
 	var systematic compute.Systematic
-	tp.Mean, systematic = comp.OfMean(scan)
+	tp.Mean, systematic = comp.OfMean(g.meanScan(cfg))
 	for q := range tp.Values {
-		w.Add(&pasts[q], int64(w.Bins+1)*w.Width, 0) // closes the last bin
-		stats := w.Stats(&pasts[q])
+		g.Window.Add(&g.Pasts[q], int64(g.Window.Bins+1)*g.Window.Width, 0) // closes the last bin
+		stats := g.Window.Stats(&g.Pasts[q])
 		tp.Values[q] = steady.Reduce(&stats, steady.Part{U: systematic[q]})
 	}
 	return tp, nil
@@ -114,34 +185,16 @@ func Rows(
 	})
 }
 
-// meanScan gives the means of the channels over a stretch.
-func meanScan(ctx context.Context, f *runfile.File, codec *archive.Codec, cfg *Config, from, to int64) (*monitor.Scan, error) {
-	channels := cfg.Compute.Channels
-	scan := monitor.NewScan(len(channels))
-	scan.T, scan.N = to-cfg.Align.Period, 1
-	all := 0
-	used := make([]int, len(channels))
-	err := Rows(ctx, f, codec, ChunkChannels, nil, from, to, func(c *archive.Chunk, first, last int) {
-		all += last - first
-		for i := range c.Columns {
-			id, ok := strings.CutPrefix(c.Columns[i].Name, "channel.")
-			ch := slices.IndexFunc(channels, func(c compute.Channel) bool { return c.ID == id })
-			if !ok || ch < 0 || c.Columns[i].Kind != archive.KindFloat {
-				continue
-			}
-			for _, v := range c.Columns[i].Float[first:last] {
-				if !math.IsNaN(v) {
-					used[ch]++
-					scan.Value[ch] += (v - scan.Value[ch]) / float64(used[ch])
-				}
-			}
-		}
-	})
-	for i := range channels {
+// meanScan gives the means of the channels over the stretch.
+func (g *gathering) meanScan(cfg *Config) *monitor.Scan {
+	scan := monitor.NewScan(len(g.Mean))
+	scan.T, scan.N = g.To-cfg.Align.Period, 1
+	copy(scan.Value, g.Mean)
+	for i := range g.Mean {
 		scan.Quality[i] = monitor.QualityGood
-		if float64(used[i]) < heldShare*float64(all) || all == 0 {
+		if float64(g.Used[i]) < heldShare*float64(g.Rows) || g.Rows == 0 {
 			scan.Value[i], scan.Quality[i] = math.NaN(), monitor.QualityMissing
 		}
 	}
-	return scan, err
+	return scan
 }

@@ -10,6 +10,7 @@ import (
 	"throatwatch/monitor/align"
 	"throatwatch/monitor/compute"
 	"throatwatch/rules"
+	"throatwatch/rules/card"
 )
 
 // State is all that a step depends on besides its record. It is plain data: no
@@ -43,6 +44,8 @@ type State struct {
 	Trial     Trial  // of the run that is on
 	Imported  bool   // the records are those of another data system: runs get no number of ours
 	Checks    Checks // of the data system, before and after a run
+	Card      card.State
+	Gathering gathering // of the point that is being averaged
 	window    Window
 }
 

@@ -10,6 +10,7 @@ import (
 	"fmt"
 	"slices"
 	"strconv"
+	"strings"
 	"time"
 
 	"throatwatch/ingest"
@@ -18,6 +19,7 @@ import (
 	"throatwatch/monitor/check"
 	"throatwatch/monitor/compute"
 	"throatwatch/rules"
+	"throatwatch/rules/card"
 )
 
 const (
@@ -94,7 +96,12 @@ type Action struct {
 
 	ApprovedBy string `json:"approved_by,omitempty"` // of a configuration
 
-	Check CheckRequest `json:"check,omitzero"`
+	Check    CheckRequest `json:"check,omitzero"`
+	Card     *card.Card   `json:"card,omitempty"` // a test card, as its text was read
+	CardText string       `json:"card_text,omitempty"`
+	CardHash string       `json:"card_hash,omitempty"` // hex SHA-256 of CardText
+	Point    int          `json:"point,omitempty"`     // of the card, counted from 1
+	Number   uint64       `json:"number,omitempty"`    // of a point that was taken
 }
 
 // What an operator can do. The alarm actions are those of package rules.
@@ -110,6 +117,13 @@ const (
 	// that one was refused before it came to that, and by Text why.
 	DoConfig        = "config"
 	DoConfigRefused = "config_refused"
+	// On the test card.
+	DoCardLoad  = "card_load"
+	DoTake      = "take" // the current point
+	DoAccept    = "accept"
+	DoReject    = "reject"
+	DoSkip      = "skip" // the current point
+	DoGoToPoint = "go_to_point"
 )
 
 // Reply says what became of an action.
@@ -134,6 +148,7 @@ type Machine struct {
 	bundle []byte // that prog was made of
 	outs   []Outcome
 	alarm  []rules.Alarm
+	card   cardPlan
 }
 
 // program is a compiled configuration with its buffers.
@@ -165,6 +180,7 @@ func NewMachine(parse func(bundle []byte) (Config, error)) *Machine {
 
 // Restore prepares the machine for a state that was decoded.
 func (m *Machine) Restore(s *State) error {
+	m.card = cardPlan{}
 	if len(s.Bundle) == 0 {
 		m.prog = nil
 		return nil
@@ -351,6 +367,8 @@ func (m *Machine) fit(s *State, old *program) {
 	m.prog.compute.Reset(&s.Compute, fromComp)
 	m.prog.rules.Fit(&s.Rules)
 	s.Checks.Gather = check.Gather{} // of the old channels
+	s.Card.Break()                   // what was averaged is not that of these channels
+	s.Gathering = gathering{}
 }
 
 // replace puts a configuration in the place of the one in force as if it had been there,
@@ -403,11 +421,13 @@ func (m *Machine) health(s *State, r *ingest.Record) {
 func (m *Machine) scan(s *State, scan *monitor.Scan, point *monitor.OperatingPoint) {
 	p := m.prog
 	changes := p.compute.Step(&s.Compute, scan, point)
+	taking := m.followCard(s, scan, point)
 	m.emit(s, Outcome{Kind: OutcomePoint, T: scan.T, Point: point, Scan: scan})
 	m.emit(s, Outcome{Kind: OutcomeChannels, T: scan.T, Point: point, Scan: scan})
 	m.runs(s, point)
 	m.gather(s, scan)
 	m.account(s, &changes, point)
+	m.tellCard(s, scan, point, taking)
 	if changes.Moved || scan.N%uint64(max(1, second/p.cfg.Align.Period)) == 0 {
 		m.ledger(s, scan.T)
 	}
@@ -494,6 +514,9 @@ func (m *Machine) startRun(s *State, t int64, by string) {
 	run := s.Run
 	m.emit(s, Outcome{Kind: OutcomeRun, T: t, Run: &run, Event: "started"})
 	m.checked(s, t)
+	if s.Card.On() {
+		m.emitCard(s, t, CardStands)
+	}
 }
 
 func (m *Machine) endRun(s *State, t int64) {
@@ -501,6 +524,7 @@ func (m *Machine) endRun(s *State, t int64) {
 		m.emit(s, Outcome{Kind: OutcomeReduction, T: t, Area: &area})
 	}
 	m.settle(s, t)
+	m.breakCard(s, t)
 	s.RunActive = false
 	s.Run.Ended, s.Run.Aborted = t, s.Trial.aborted()
 	run := s.Run
@@ -554,6 +578,12 @@ func (m *Machine) do(s *State, a *Action) error {
 	}
 	if err := a.checkTexts(); err != nil {
 		return fmt.Errorf("%s: %w", a.Do, err)
+	}
+	if isCardAction(a.Do) {
+		if err := m.cardAction(s, t, a); err != nil {
+			return fmt.Errorf("%s: %w", strings.ReplaceAll(a.Do, "_", " "), err)
+		}
+		return nil
 	}
 	switch a.Do {
 	case DoConfig:

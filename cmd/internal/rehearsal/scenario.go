@@ -12,12 +12,17 @@ type Scenario uint8
 const (
 	Full  Scenario = iota // a whole test: six minutes, and rest until the run ends by itself
 	Quick                 // the same events within a minute
+	Points                // five steady points, two of them below choking, without any event
 )
 
 // String gives the name of the scenario.
 func (s Scenario) String() string {
-	if s == Quick {
+	switch s {
+	case Quick:
 		return "quick"
+	case Points:
+		return "points"
+	case Full:
 	}
 	return "full"
 }
@@ -70,6 +75,22 @@ func plan(s Scenario, l *line, off float64) ([]Segment, error) {
 			run("deceleration", 7, l.idle),
 			{Name: "shutdown", Seconds: 17},
 		}, nil
+	case Points: // each long enough for a window of 20 s, a soak and averaging
+		const long = 50
+		return []Segment{
+			{Name: "off", Seconds: 3},
+			crank,
+			start,
+			run("idle", 10, l.idle),
+			run("point below choking", long, max(l.idle, l.choke-0.09)),
+			run("point below choking", long, max(l.idle, l.choke-0.03)),
+			run("point", long, armed+0.005),
+			run("point", long, top),
+			run("point", long, most),
+			run("deceleration", 15, l.idle),
+			{Name: "shutdown", Seconds: 20},
+			{Name: "off", Seconds: 20 + off},
+		}, nil
 	case Full:
 		return []Segment{
 			{Name: "off", Seconds: 3},
@@ -93,7 +114,7 @@ func plan(s Scenario, l *line, off float64) ([]Segment, error) {
 			{Name: "off", Seconds: 20 + off},
 		}, nil
 	}
-	return nil, fmt.Errorf("rehearsal: scenario %d is unknown; use full or quick", s)
+	return nil, fmt.Errorf("rehearsal: scenario %d is unknown; use full, quick or points", s)
 }
 
 // total gives the length of a plan.

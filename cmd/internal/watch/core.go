@@ -131,6 +131,12 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 			c.event(o, "mark", o.Mark)
 		case pipeline.OutcomeLog:
 			c.event(o, "log", o.Entry)
+		case pipeline.OutcomeCard:
+			if o.Event != "" {
+				c.event(o, "card", o.Card.Stored())
+			}
+		case pipeline.OutcomeCardPoint:
+			c.event(o, "card_point", o.Taken)
 		case pipeline.OutcomeRun:
 			c.event(o, "run", struct {
 				Event string `json:"event"`
