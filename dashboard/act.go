@@ -9,6 +9,7 @@ import (
 	"strings"
 
 	"throatwatch/rules"
+	"throatwatch/rules/card"
 	"throatwatch/rules/pipeline"
 )
 
@@ -286,9 +287,10 @@ func (s *Server) act(w http.ResponseWriter, r *http.Request, a pipeline.Action) 
 	switch {
 	case err != nil:
 		return silent(err)
-	case errors.Is(res.Err, pipeline.ErrInvalid):
+	case errors.Is(res.Err, pipeline.ErrInvalid), errors.Is(res.Err, card.ErrReason):
 		return badRequest("%v", res.Err)
-	case errors.Is(res.Err, rules.ErrNotFound), errors.Is(res.Err, pipeline.ErrNoChannel):
+	case errors.Is(res.Err, rules.ErrNotFound), errors.Is(res.Err, pipeline.ErrNoChannel),
+		errors.Is(res.Err, card.ErrNoNumber), errors.Is(res.Err, card.ErrNoPoint):
 		return notFound("%v", res.Err)
 	case res.Err != nil:
 		return &problem{http.StatusConflict, res.Err.Error()}

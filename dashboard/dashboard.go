@@ -20,6 +20,7 @@ import (
 	"throatwatch/dashboard/access"
 	"throatwatch/ingest/runfile"
 	"throatwatch/rules"
+	"throatwatch/rules/card"
 	"throatwatch/rules/pipeline"
 )
 
@@ -58,8 +59,11 @@ type Config struct {
 	// Reload takes the rig and rule files as they are now into force, for who a says.
 	// It gives what is wrong with them; nil = the files cannot be read here.
 	Reload func(ctx context.Context, a pipeline.Action) (pipeline.Reply, []Fault, error)
-	Extra  func() []Metric // further metrics, of parts that the server does not know
-	Free   func() float64  // bytes on the disk of the data folder, 0 = not known; nil = the same
+	// ParseCard reads the text of a test card for a rig. It gives its hash, and what is
+	// wrong with it; nil = none can be loaded here.
+	ParseCard func(text string, cfg *pipeline.Config) (c card.Card, hash string, faults []Fault)
+	Extra     func() []Metric // further metrics, of parts that the server does not know
+	Free      func() float64  // bytes on the disk of the data folder, 0 = not known; nil = the same
 
 	Access   *access.Gate // who may come in; nil: nobody is asked who they are
 	OpenRole access.Role  // of everybody where Access is nil; the zero value is Operator
@@ -109,6 +113,11 @@ func (s *Server) routes() map[string]handler {
 		"GET /api/rigs/{rig}/channels":        s.newest("channels"),
 		"GET /api/rigs/{rig}/throat-curve":    s.throatCurve,
 		"GET /api/rigs/{rig}/budget":          s.budget,
+		"GET /api/rigs/{rig}/card":            s.card,
+		"POST /api/rigs/{rig}/card":           s.loadCard,
+		"POST /api/rigs/{rig}/card/{action}":  s.cardAction,
+		"GET /api/rigs/{rig}/handover":        s.handover,
+		"GET /api/runs/{id}/card":             s.runCard,
 		"POST /api/rigs/{rig}/runs":           s.startOrEndRun,
 		"POST /api/rigs/{rig}/readmit":        s.readmit,
 		"GET /api/alarms/figures":             s.alarmFigures,

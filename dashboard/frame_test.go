@@ -16,6 +16,7 @@ import (
 	"throatwatch/monitor/egt"
 	"throatwatch/rules"
 	"throatwatch/rules/alarm"
+	"throatwatch/rules/card"
 	"throatwatch/rules/pipeline"
 )
 
@@ -50,6 +51,11 @@ func outcomes() []pipeline.Outcome {
 	for r := range st.Counters {
 		st.Counters[r] = uint64(10 + r)
 	}
+	someCard := card.State{
+		Card:     card.Card{Title: nasty, Number: nasty, Points: []card.Point{{Name: nasty, Targets: []card.Target{{Quantity: "npr", Low: rules.Reading{V: 2, Known: true}}}}}},
+		Progress: []card.Progress{{Status: card.Open}}, Now: card.Now{T: rules.Time(t), Targets: make([]card.TargetNow, 1)},
+		Taken: []card.Taken{{Number: 3, Name: nasty, From: rules.Time(t), Status: card.IsTaken, Doubts: []string{nasty}, Values: []card.Value{{Name: "npr"}}}},
+	}
 	ledger := []pipeline.Allowance{
 		{Band: egt.Band{Name: nasty, Kind: egt.KindRun, Limit: 993.15, Allowance: 5e9, PerRun: 60e9}, BandState: egt.BandState{Over: true, Elapsed: 15e8, RunPeak: 1000.5, Excursions: 2}},
 		{Band: egt.Band{Name: "start", Kind: egt.KindStart}},
@@ -71,6 +77,8 @@ func outcomes() []pipeline.Outcome {
 				{ID: "tick.alarm_sound", Kind: check.KindTick, Title: nasty, Passed: true, By: nasty},
 			},
 		}},
+		{Kind: pipeline.OutcomeCard, Card: &someCard},
+		{Kind: pipeline.OutcomeCardPoint, Taken: &someCard.Taken[0]},
 		{Kind: pipeline.OutcomeRun, Event: "started", Run: &monitor.Run{ID: nasty, Number: 3, Rig: rigID, Engine: nasty, Started: t, By: nasty}},
 	}
 	for i := range outs {

@@ -27,6 +27,7 @@ var free = []string{"/", "GET /healthz", "GET /api/session", "POST /api/session"
 var forOperator = []string{
 	"POST /api/alarms/{id}/{action}", "POST /api/rigs/{rig}/runs", "POST /api/runs/{id}/marks", "POST /api/runs/{id}/entries", "PATCH /api/runs/{id}",
 	"POST /api/rigs/{rig}/checks",
+	"POST /api/rigs/{rig}/card/{action}",
 }
 
 // caller is who makes a request.
@@ -83,7 +84,8 @@ func needed(pattern string, r *http.Request) access.Role {
 		return access.Nobody
 	case r.Method == http.MethodGet || r.Method == http.MethodHead || !strings.Contains(pattern, " "): // the last is told what is served
 		return access.Viewer
-	case !slices.Contains(forOperator, pattern), strings.HasSuffix(action, "/out-of-service"), strings.HasSuffix(action, "/in-service"):
+	case !slices.Contains(forOperator, pattern), strings.HasSuffix(action, "/out-of-service"), strings.HasSuffix(action, "/in-service"),
+		strings.HasSuffix(r.URL.Path, "/card/accept"), strings.HasSuffix(r.URL.Path, "/card/reject"):
 		return access.Engineer
 	}
 	return access.Operator

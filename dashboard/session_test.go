@@ -185,9 +185,11 @@ func TestRoles(t *testing.T) {
 	operator := []string{
 		"POST /api/alarms/x/acknowledge", "POST /api/alarms/x/shelve", "POST /api/alarms/x/unshelve", "POST /api/alarms/x/reset",
 		"POST /api/rigs/cell_2/runs", "POST /api/rigs/cell_2/checks", "POST /api/runs/x/marks", "POST /api/runs/x/entries", "PATCH /api/runs/x",
+		"POST /api/rigs/cell_2/card/take", "POST /api/rigs/cell_2/card/skip", "POST /api/rigs/cell_2/card/go-to",
 	}
 	engineer := []string{
 		"POST /api/alarms/x/out-of-service", "POST /api/alarms/x/in-service", "POST /api/alarms/x%2Fy/out-of-service",
+		"POST /api/rigs/cell_2/card", "POST /api/rigs/cell_2/card/accept", "POST /api/rigs/cell_2/card/reject",
 		"POST /api/rigs/cell_2/swap", "POST /api/rigs/cell_2/readmit", "POST /api/rigs/cell_2/config", "DELETE /api/runs/x",
 	}
 	free := []string{"GET /", "GET /healthz"}
@@ -222,7 +224,7 @@ func TestRoles(t *testing.T) {
 	}
 	for _, p := range dashboard.NewServer(dashboard.Config{}, dashboard.NewHub("")).Patterns() {
 		method, path, _ := strings.Cut(p, " ")
-		path = strings.NewReplacer("{rig}", rigID, "{id}", "x", "{action}", "acknowledge").Replace(path)
+		path = strings.NewReplacer("{rig}", rigID, "{id}", "x", "card/{action}", "card/take", "{action}", "acknowledge").Replace(path)
 		if method == http.MethodGet || path == "/api/session" {
 			continue
 		}

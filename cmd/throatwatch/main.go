@@ -33,6 +33,8 @@ func commands() []command {
 		{"rehearse", "let a simulated rig publish a whole test", rehearseCommand},
 		{"check", "every fault of a rig file at once, then its channels and limits", withoutContext(checkCommand)},
 		{"reload", "let a running watch take its rig and rule files in anew", reloadCommand},
+		{"card", "the test card of a running watch: show, load, take, accept, reject, skip", cardCommand},
+		{"handover", "the hand-over sheet of a running watch", handoverCommand},
 		{"point", "one operating point from numbers given by hand", withoutContext(pointCommand)},
 		{"runs", "list the stored runs", runsCommand},
 		{"life", "what each engine has been through: starts, cycles, hours, time above EGT limits", lifeCommand},

@@ -22,7 +22,7 @@ func pointsCommand(ctx context.Context, args []string, stdout, stderr io.Writer)
 	fs := newFlags("points RUN", "Reduce steady stretches of a stored run, stretches beside its marks, or given ones to one value per quantity,\n"+
 		"with uncertainty and with what is doubtful. Times are s of the run, or as 2026-03-02T09:00:00Z.", stderr)
 	data := fs.String("data", "data", "data folder")
-	fs.String("at", "auto", "auto: where the engine was steady; marks: beside each mark")
+	fs.String("at", "auto", "auto: where the engine was steady; marks: beside each mark; card: as taken by the test card")
 	fs.StringArray("stretch", nil, "a stretch as 120s..180s instead; may be given more than once")
 	fs.String("from", "", "look from here on (default: the start of the run)")
 	fs.String("to", "", "look up to here (default: its end)")

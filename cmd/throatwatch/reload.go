@@ -50,14 +50,7 @@ func (w *watcher) reload(ctx context.Context, a pipeline.Action) (pipeline.Reply
 		res, err := w.loop.Configure(ctx, a, bundle.Marshal())
 		return res, nil, err
 	}
-	out := make([]dashboard.Fault, len(faults))
-	for i, f := range faults {
-		at := f.File
-		if f.Line > 0 {
-			at = fmt.Sprintf("%s:%d:%d", f.File, f.Line, f.Column)
-		}
-		out[i] = dashboard.Fault{At: at, Message: strings.TrimPrefix(f.Path+": "+f.Message, ": "), Hint: f.Hint}
-	}
+	out := shownFaults(faults)
 	a.Do = pipeline.DoConfigRefused
 	a.Text = out[0].At + ": " + out[0].Message
 	if more := len(out) - 1; more > 0 {
@@ -66,6 +59,19 @@ func (w *watcher) reload(ctx context.Context, a pipeline.Action) (pipeline.Reply
 	a.Text = a.Text[:min(len(a.Text), mostWhy)]
 	res, err := w.loop.Act(ctx, a)
 	return res, out, err
+}
+
+// shownFaults gives faults as the page and the interface tell them.
+func shownFaults(faults []config.Fault) []dashboard.Fault {
+	out := make([]dashboard.Fault, len(faults))
+	for i, f := range faults {
+		at := f.File
+		if f.Line > 0 {
+			at = fmt.Sprintf("%s:%d:%d", f.File, f.Line, f.Column)
+		}
+		out[i] = dashboard.Fault{At: at, Message: strings.TrimPrefix(f.Path+": "+f.Message, ": "), Hint: f.Hint}
+	}
+	return out
 }
 
 // needRestart tells what the sessions of the broker were opened for, and cannot

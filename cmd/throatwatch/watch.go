@@ -35,6 +35,7 @@ type watchOptions struct {
 	listen, data, brokerListen string
 	broker                     brokerOptions
 	remote                     bool
+	card                       string
 	rehearse                   bool
 	play                       rehearseFlags
 	influx                     influxOptions
@@ -79,6 +80,7 @@ func (o *watchOptions) flags(fs *pflag.FlagSet) {
 	o.broker.flags(fs, "", "site broker instead of the embedded one, mqtt://host:port or mqtts://host:port")
 	fs.BoolVar(&o.remote, "allow-remote", false, "let --listen be reached from other machines without TLS and users, and --broker-listen without passwords")
 	o.guard.flags(fs)
+	fs.StringVar(&o.card, "card", "", "test card to load at the start; `throatwatch card load` does so later")
 	fs.BoolVar(&o.rehearse, "rehearse", false, "let a simulated rig publish a test to the broker; the next flags say which")
 	o.play = newRehearseFlags(fs)
 	o.influx.flags(fs)
@@ -173,6 +175,12 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 		return err
 	}
 	defer w.manager.close()
+	if w.opt.card != "" {
+		_, _, faults := config.LoadCard(w.opt.card, &cfg)
+		if err := faultsOf("the test card has faults; nothing was started", faults); err != nil {
+			return err
+		}
+	}
 	if w.guard, err = w.opt.guard.open(w.log); err != nil {
 		return err
 	}
@@ -280,6 +288,9 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	}
 	w.announce(listener.Addr().String())
 	sideParts.Go(func() { w.manager.watch(sideCtx, w.loop, w.listens) })
+	if err := w.beginCard(ctx); err != nil {
+		failed <- err
+	}
 	sideParts.Go(func() {
 		if err := w.letIn(sideCtx); err != nil && sideCtx.Err() == nil {
 			failed <- err
@@ -310,7 +321,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 func (w *watcher) page(secure bool) dashboard.Config {
 	c := dashboard.Config{
 		Desk: w.loop, Runs: watch.StoredRuns{Catalog: w.store.Catalog(), Store: w.store}, Parse: watch.Parse,
-		Build: watch.Build(), Log: w.log, Extra: w.metrics, Reload: w.reload,
+		Build: watch.Build(), Log: w.log, Extra: w.metrics, Reload: w.reload, ParseCard: parseCard,
 		Free:     func() float64 { free, _ := watch.FreeSpace(w.opt.data); return free }, // 0 where that is not known
 		OpenRole: w.opt.guard.role(), Secure: secure, Audit: newLog(w.stderr, true),
 	}

@@ -11,7 +11,7 @@ import (
 	"throatwatch/dashboard/export"
 )
 
-// ParseOptions reads what is asked for: from, to, at (auto or marks), least, before and
+// ParseOptions reads what is asked for: from, to, at (auto, marks or card), least, before and
 // after as 20s, and stretch as 120s..180s or with times, any number of it. Times are s of
 // the run, which started at started, ns UTC, or RFC 3339. The error wraps ErrOption.
 func ParseOptions(q url.Values, started int64) (o Options, err error) {
@@ -29,8 +29,10 @@ func ParseOptions(q url.Values, started int64) (o Options, err error) {
 	case "", "auto":
 	case "marks":
 		o.Marks = true
+	case "card":
+		o.Card = true
 	default:
-		return o, fmt.Errorf("%w: at %q: give auto or marks", ErrOption, at)
+		return o, fmt.Errorf("%w: at %q: give auto, marks or card", ErrOption, at)
 	}
 	for _, d := range []struct {
 		name string

@@ -8,6 +8,7 @@ package points
 
 import (
 	"bytes"
+	"cmp"
 	"context"
 	"encoding/json"
 	"errors"
@@ -43,7 +44,10 @@ var ErrOption = errors.New("stretches")
 // Stretch is a part of a run.
 type Stretch struct {
 	From, To int64  // event time, ns UTC: from inclusive, to exclusive
-	Name     string // text of the mark; "" for none
+	Name     string // text of the mark, name of the point of a test card; "" for none
+	Number   int    // of the point of a test card; 0 = it is counted in the run
+	Status   string // of the point of a test card, in words; "" for none
+	doubts   []string
 }
 
 // Options say which stretches become points. The zero value finds steady stretches of 10 s
@@ -53,6 +57,7 @@ type Options struct {
 	Least         int64     // ns, the shortest steady stretch; 0 = 10 s
 	Marks         bool      // a point per mark instead
 	Before, After int64     // ns of the run that belong to a mark; both 0 = the 30 s after it
+	Card          bool      // a point per one that was taken by a test card
 	Given         []Stretch // these instead of all others
 }
 
@@ -92,7 +97,7 @@ func (n *Number) UnmarshalJSON(b []byte) error {
 
 // Point is a test point.
 type Point struct {
-	Number int
+	Number int // of a test card, or counted in the run
 	Stretch
 	Scans  int
 	Steady float64 // part of the scans that were steady
@@ -151,7 +156,7 @@ func Read(ctx context.Context, f *runfile.File, h *runfile.Header, parse func([]
 		case err != nil:
 			return t, fmt.Errorf("test points of %s: %w", h.ID, err)
 		default:
-			p.Number = len(t.Points) + 1
+			p.Number = cmp.Or(s.Number, len(t.Points)+1)
 			t.Points = append(t.Points, p)
 		}
 	}
@@ -179,6 +184,9 @@ func (r *reader) stretches(ctx context.Context, o Options) ([]Stretch, string, e
 			return nil, "", fmt.Errorf("%d of them, %d at most: %w", len(o.Given), most, ErrOption)
 		}
 		return o.Given, "The stretches were given.", nil
+	case o.Card:
+		list, err := r.card(ctx, o)
+		return list, "The points that were taken by the test card, rejected ones too, under their numbers.", err
 	case o.Marks:
 		if o.Before == 0 && o.After == 0 {
 			o.After = 30 * second
@@ -291,7 +299,7 @@ func (r *reader) point(ctx context.Context, s Stretch) (Point, error) {
 			p.Values = append(p.Values, view(q, v))
 		}
 	}
-	p.Doubts = doubts(&p, &tp, cfg)
+	p.Doubts = append(slices.Clone(s.doubts), doubts(&p, &tp, cfg)...)
 	more, err := r.channels(ctx, s, cfg)
 	if err != nil {
 		return p, err

@@ -18,6 +18,7 @@ import (
 type pointJSON struct {
 	Number int      `json:"number"`
 	Name   string   `json:"name"`
+	Status string   `json:"status"` // of a test card
 	From   string   `json:"from"`
 	To     string   `json:"to"`
 	FromS  float64  `json:"from_s"` // s of the run
@@ -34,7 +35,7 @@ func (t Table) MarshalJSON() ([]byte, error) {
 	for i := range t.Points {
 		p := &t.Points[i]
 		list[i] = pointJSON{
-			p.Number, p.Name, rfc3339(p.From), rfc3339(p.To), float64(p.From-t.Started) / 1e9, float64(p.To-t.Started) / 1e9,
+			p.Number, p.Name, p.Status, rfc3339(p.From), rfc3339(p.To), float64(p.From-t.Started) / 1e9, float64(p.To-t.Started) / 1e9,
 			p.Scans, p.Steady, p.Values, p.Doubts,
 		}
 	}
@@ -61,6 +62,9 @@ func (t *Table) WriteTable(w io.Writer) error {
 		fmt.Fprintf(&b, "\nPoint %d", p.Number)
 		if p.Name != "" {
 			fmt.Fprintf(&b, ", %s", strings.Join(strings.Fields(p.Name), " "))
+		}
+		if p.Status != "" {
+			fmt.Fprintf(&b, " (%s)", strings.Join(strings.Fields(p.Status), " "))
 		}
 		fmt.Fprintf(&b, ": %s to %s of the run, from %s, %d scans, steady in %s\n", t.clock(p.From), t.clock(p.To),
 			time.Unix(0, p.From).In(t.Zone).Format(form), p.Scans, percent(p.Steady))
@@ -110,7 +114,7 @@ func (t *Table) WriteCSV(w io.Writer) error {
 		}
 		head = append(head, info.Name+"_effective_samples")
 	}
-	_ = c.Write(append(head, "doubts")) // Error tells
+	_ = c.Write(append(head, "status", "doubts")) // Error tells
 	for i := range t.Points {
 		p := &t.Points[i]
 		row := []string{
@@ -120,7 +124,7 @@ func (t *Table) WriteCSV(w io.Writer) error {
 		for _, q := range Quantities() {
 			row = append(row, cells(p, q)...)
 		}
-		_ = c.Write(append(row, strings.Join(p.Doubts, "; ")))
+		_ = c.Write(append(row, p.Status, strings.Join(p.Doubts, "; ")))
 	}
 	c.Flush()
 	return c.Error()
