@@ -69,14 +69,13 @@ func handoverOf(cfg *pipeline.Config, m *pipeline.Machine, st *pipeline.State, b
 	a.Standing, a.Shelved, a.OutOfService, a.Suppressed = []rules.Alarm{}, []rules.Alarm{}, []rules.Alarm{}, []rules.Alarm{}
 	for _, one := range m.Alarms(st) {
 		to := &a.Standing
-		switch alarm.State(one.State) {
-		case alarm.Shelved:
+		switch state := alarm.State(one.State); { // what is not aside stands
+		case state == alarm.Shelved:
 			to = &a.Shelved
-		case alarm.OutOfService:
+		case state == alarm.OutOfService:
 			to = &a.OutOfService
-		case alarm.SuppressedByDesign:
+		case state == alarm.SuppressedByDesign:
 			to = &a.Suppressed
-		default:
 		}
 		*to = append(*to, one)
 	}

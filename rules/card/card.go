@@ -20,9 +20,10 @@ import (
 )
 
 const (
-	// MostPoints bounds the points of a card, MostTargets the targets of a point and
-	// the things that must be good for it.
-	MostPoints, MostTargets = 100, 12
+	// MostPoints bounds the points of a card.
+	MostPoints = 100
+	// MostTargets bounds the targets of a point, and the things that must be good for it.
+	MostTargets = 12
 	// MostText bounds the text of a card, bytes.
 	MostText = 48 << 10
 	// takenKept is how many points that were taken the state holds, for those who begin
@@ -105,6 +106,11 @@ type source struct {
 	setting  bool // something that is set: it does not say itself whether the throat is choked
 }
 
+// sayChoked are the quantities that say themselves whether the throat is choked.
+var sayChoked = []monitor.Quantity{
+	monitor.ChokeMarginPercent, monitor.ChokeMarginPercentLow95, monitor.ChokeMarginPa, monitor.PChoked, monitor.ThroatMach,
+}
+
 // NewPlan resolves the names of a card; channels are the ids of the rig's, in order. The
 // error wraps ErrUnknown or ErrCard and says what is wrong with which point.
 func NewPlan(c *Card, channels []string) (*Plan, error) {
@@ -134,7 +140,7 @@ func (d *planned) resolve(pt *Point, channels []string) error {
 		if !t.Low.Known && !t.High.Known || t.Low.Known && t.High.Known && !(t.Low.V < t.High.V) || t.Value.Known && !(t.Tolerance.V > 0) {
 			return fmt.Errorf("target %s has no bounds: %w", t.Quantity, ErrCard)
 		}
-		s := source{channel: -1, setting: true}
+		s := source{channel: -1}
 		if id, ok := strings.CutPrefix(t.Quantity, "channel."); ok {
 			if s.channel = slices.Index(channels, id); s.channel < 0 {
 				return fmt.Errorf("channel %q: %w", id, ErrUnknown)
@@ -142,11 +148,7 @@ func (d *planned) resolve(pt *Point, channels []string) error {
 		} else if s.quantity, ok = monitor.ParseQuantity(t.Quantity); !ok {
 			return fmt.Errorf("quantity %q: %w", t.Quantity, ErrUnknown)
 		}
-		switch s.quantity {
-		case monitor.ChokeMarginPercent, monitor.ChokeMarginPa, monitor.PChoked, monitor.ThroatMach, monitor.ChokeMarginPercentLow95:
-			s.setting = s.channel >= 0
-		default:
-		}
+		s.setting = s.channel >= 0 || !slices.Contains(sayChoked, s.quantity)
 		d.targets = append(d.targets, s)
 	}
 	for i := range pt.Needs {

@@ -135,11 +135,15 @@ func TestStabilised(t *testing.T) {
 		{"before the first scan", func(*bed) {}, NoData, "no scan", "", 0, 0, 0},
 		{"at the target, in the soak", func(b *bed) { b.play(second) }, Soaking, "1.1 s of the soak", "", 1.05, 0, 0},
 		{"stabilised", func(b *bed) { b.play(3 * second) }, Stabilised, "", "", 0, 0, 0},
-		{"off the target", func(b *bed) { b.set(15100, -10, true); b.play(3 * second) }, OffTarget,
-			"Referred speed N/√θ is not at 92 % ± 0.3 %: 15100 rpm, off by 100", "referred_speed_rpm", 2, 100, 2},
+		{
+			"off the target", func(b *bed) { b.set(15100, -10, true); b.play(3 * second) }, OffTarget,
+			"Referred speed N/√θ is not at 92 % ± 0.3 %: 15100 rpm, off by 100", "referred_speed_rpm", 2, 100, 2,
+		},
 		{"on the edge", func(b *bed) { b.set(15050, -10, true); b.play(3 * second) }, Stabilised, "", "", 0, 50, 1},
-		{"no value", func(b *bed) { b.set(math.NaN(), -10, true); b.play(3 * second) }, OffTarget,
-			"Referred speed N/√θ is not at 92 % ± 0.3 %: not known", "referred_speed_rpm", 2, 0, 0},
+		{
+			"no value", func(b *bed) { b.set(math.NaN(), -10, true); b.play(3 * second) }, OffTarget,
+			"Referred speed N/√θ is not at 92 % ± 0.3 %: not known", "referred_speed_rpm", 2, 0, 0,
+		},
 		{"a channel bad", func(b *bed) { b.in.Scan.Quality[1] = monitor.QualityStale; b.play(3 * second) }, BadChannel, "fuel is not good", "fuel", 2, 0, 0},
 		{"a scan off the target is forgiven", func(b *bed) {
 			b.play(3 * second)

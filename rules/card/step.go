@@ -99,7 +99,7 @@ func (p *Plan) Step(s *State, in *Input) Change {
 	if s.OutAt != 0 && (t-s.OutAt > forgiven || now.Held == 0) {
 		now.Held = 0
 	}
-	now.why(pt, d, in, off, bad)
+	now.why(pt, in, off, bad)
 	return s.average(now, t, in)
 }
 
@@ -192,7 +192,7 @@ func (s *State) Choke() string {
 }
 
 // why finds what speaks against stabilised.
-func (n *Now) why(pt *Point, d *planned, in *Input, off, bad int) {
+func (n *Now) why(pt *Point, in *Input, off, bad int) {
 	n.Quantity, n.Channel, n.Steady, n.Slope, n.SoakLeft = "", "", "", rules.Reading{}, pt.Soak
 	if n.Held != 0 {
 		n.SoakLeft = max(0, pt.Soak-float64(in.Scan.T-int64(n.Held))/1e9)

@@ -56,6 +56,7 @@ func loadCard(b *bed, c card.Card) {
 
 // started is a bed with an engine at idle and a card.
 func started(tb testing.TB) *bed {
+	tb.Helper()
 	b := newBed(tb)
 	b.play(atRest, 3*second)
 	loadCard(b, fivePoints())
@@ -89,6 +90,7 @@ func take(b *bed, e engine) {
 // cardDay takes five points: one is rejected and retaken, one is taken by itself. The
 // same is done again by a replay, and number and card survive a restart.
 func cardDay(tb testing.TB) *bed {
+	tb.Helper()
 	b := started(tb)
 	take(b, pointOne)
 	if err := b.act(engineer(Action{Do: "reject", Number: 1, Reason: "valve moved"})); err != nil {

@@ -191,8 +191,8 @@ func (d *Digest) Add(o *Outcome) {
 	b = binary.LittleEndian.AppendUint64(b, o.Epoch)
 	b = binary.LittleEndian.AppendUint64(b, o.N)
 	b = binary.LittleEndian.AppendUint64(b, uint64(o.T))
-	switch o.Kind {
-	case OutcomePoint:
+	switch {
+	case o.Kind == OutcomePoint:
 		p := o.Point
 		for _, v := range p.V {
 			b = binary.LittleEndian.AppendUint64(b, math.Float64bits(v))
@@ -210,22 +210,23 @@ func (d *Digest) Add(o *Outcome) {
 			b = append(b, byte(c.Kind), byte(c.Quality))
 			b = binary.LittleEndian.AppendUint32(b, uint32(c.Channel))
 		}
-	case OutcomeCardPoint:
-		text, err := json.Marshal(o.Taken)
-		if err != nil {
-			panic(fmt.Sprintf("pipeline: point %d does not encode: %v", o.Taken.Number, err))
-		}
-		b = append(b, text...)
+	case o.Kind == OutcomeCardPoint:
+		b = appendJSON(b, o.Taken)
 	default:
-		text, err := json.Marshal(o.Alarm)
-		if err != nil {
-			panic(fmt.Sprintf("pipeline: alarm %s does not encode: %v", o.Alarm.ID, err))
-		}
-		b = append(b, text...)
+		b = appendJSON(b, o.Alarm)
 	}
 	d.buf = b
 	d.n++
 	_, _ = d.h.Write(b)
+}
+
+// appendJSON appends an outcome that is covered as JSON.
+func appendJSON(b []byte, v any) []byte {
+	text, err := json.Marshal(v)
+	if err != nil {
+		panic(fmt.Sprintf("pipeline: %T does not encode: %v", v, err))
+	}
+	return append(b, text...)
 }
 
 // Reset begins anew within the run: after records that were not stored there is

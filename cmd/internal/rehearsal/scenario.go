@@ -10,9 +10,9 @@ type Scenario uint8
 
 // The scenarios. The zero value is Full.
 const (
-	Full  Scenario = iota // a whole test: six minutes, and rest until the run ends by itself
-	Quick                 // the same events within a minute
-	Points                // five steady points, two of them below choking, without any event
+	Full   Scenario = iota // a whole test: six minutes, and rest until the run ends by itself
+	Quick                  // the same events within a minute
+	Points                 // five steady points, two of them below choking, without any event
 )
 
 // String gives the name of the scenario.
