@@ -112,7 +112,7 @@ func (m *Machine) tellCard(s *State, scan *monitor.Scan, p *monitor.OperatingPoi
 		m.emitCard(s, scan.T, CardBroken)
 		return
 	case change&card.Began != 0:
-		s.Gathering = gather(&m.prog.cfg, k.Average.From, k.Average.To)
+		s.Gathering = newGathering(&m.prog.cfg, k.Average.From, k.Average.To)
 		m.emitCard(s, scan.T, CardBegan)
 	case scan.N%uint64(max(1, second/m.prog.cfg.Align.Period)) == 0:
 		m.emitCard(s, scan.T, "")
@@ -238,7 +238,7 @@ func (m *Machine) cardAction(s *State, t int64, a *Action) error {
 		if err := k.Take(s.Align.Next, a.By, a.Reason); err != nil {
 			return err
 		}
-		s.Gathering = gather(&m.prog.cfg, k.Average.From, k.Average.To)
+		s.Gathering = newGathering(&m.prog.cfg, k.Average.From, k.Average.To)
 		event = CardBegan
 		e.Text = k.Current().Name
 	case DoAccept, DoReject:

@@ -50,7 +50,7 @@ func ReduceStretch(ctx context.Context, f *runfile.File, codec *archive.Codec, c
 	if span <= 0 || span/max(windowOf(span, cfg.Align.Period).Width, 1) < leastBins {
 		return TestPoint{}, fmt.Errorf("reduce %d ns: %w", span, ErrTooFew)
 	}
-	g := gather(cfg, from, to)
+	g := newGathering(cfg, from, to)
 	tp := TestPoint{From: from, To: to}
 	err := Rows(ctx, f, codec, ChunkPoints, nil, from, to, func(c *archive.Chunk, first, last int) {
 		g.Scans += last - first
@@ -109,8 +109,8 @@ func windowOf(span, period int64) steady.Window {
 	return w
 }
 
-// gather begins a stretch.
-func gather(cfg *Config, from, to int64) gathering {
+// newGathering begins a stretch.
+func newGathering(cfg *Config, from, to int64) gathering {
 	n := len(cfg.Compute.Channels)
 	return gathering{
 		From: from, To: to, Window: windowOf(to-from, cfg.Align.Period),
