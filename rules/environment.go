@@ -149,7 +149,7 @@ func StandardNames(channels []Channel, bands []string) []Name {
 	seconds := func(name string) Name { return Name{Name: name, Type: Number, Unit: "s", Dimension: unit.Time} }
 	flag := func(name string) Name { return Name{Name: name, Type: Bool} }
 	daemon := func(n Name) Name { n.Daemon = true; return n }
-	armedBy := []string{"speed rule", "test card"}
+	armedBy := []string{monitor.BySpeed.String(), monitor.ByCard.String()}
 	names = append(names,
 		Name{Name: "choke_armed_by", Type: Text, Values: armedBy},
 		Name{Name: "choke_state", Type: Text, Values: states},

@@ -217,7 +217,7 @@ func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 		case fromArmed:
 			f.Bools[it.slot] = rules.TriOf(p.ChokeArmed)
 		case fromArmedBy:
-			f.Texts[it.slot] = armedBy(p.ArmedBy)
+			f.Texts[it.slot] = p.ArmedBy.String()
 		case fromMarginal:
 			f.Bools[it.slot] = rules.TriOf(p.ChokeMarginal)
 		case fromLit:
@@ -268,18 +268,6 @@ func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 			fromWebhook, fromDatabase, fromWebhookWaiting, fromDatabaseLag, fromDisk, fromDiskFree:
 		}
 	}
-}
-
-// armedBy names what arms choke, or disarms it, as alarms do; "" is not known to a rule.
-func armedBy(a monitor.ArmedBy) string {
-	switch a {
-	case monitor.BySpeed:
-		return "speed rule"
-	case monitor.ByCard:
-		return "test card"
-	case monitor.ByNobody:
-	}
-	return ""
 }
 
 // found counts findings; first is the channel of the first of them.
