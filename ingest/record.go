@@ -4,6 +4,7 @@ import (
 	"encoding/binary"
 	"errors"
 	"fmt"
+	"math"
 )
 
 // Kind tells what a record is. The zero value is invalid.
@@ -98,7 +99,7 @@ func DecodeRecords(dst []Record, first uint64, src []byte) ([]Record, error) {
 		}
 		p := rest[2:]
 		delta, n := binary.Uvarint(p)
-		if n <= 0 {
+		if n <= 0 || delta > uint64(math.MaxInt64-host) {
 			return dst, bad("host time")
 		}
 		p = p[n:]
