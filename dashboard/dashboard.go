@@ -365,12 +365,14 @@ type healthJSON struct {
 	Recording bool `json:"recording"`
 	InputPath bool `json:"input_path"`
 	Refused   bool `json:"config_refused"` // the files are others than what is in force
+
+	Reasons []string `json:"reasons"` // why one of them is not as it should be
 }
 
 func (s *Server) healthz(w http.ResponseWriter, r *http.Request) error {
 	ctx, cancel := context.WithTimeout(r.Context(), 2*time.Second)
 	defer cancel()
-	out := healthJSON{Stepping: true}
+	out := healthJSON{Stepping: true, Reasons: []string{}}
 	if err := s.ask(ctx, "", func(_ *pipeline.Config, _ *pipeline.Machine, st *pipeline.State) {
 		out.Recording, out.InputPath = st.Health.NotRecordingSince == 0, !st.Health.InputPathDeaf
 		out.Refused = st.InForce.Refused.T != 0
@@ -378,8 +380,17 @@ func (s *Server) healthz(w http.ResponseWriter, r *http.Request) error {
 		return err
 	}
 	status := http.StatusOK
-	if !out.Recording || !out.InputPath {
+	if !out.Recording {
+		out.Reasons = append(out.Reasons, "records are not stored")
+	}
+	if !out.InputPath {
+		out.Reasons = append(out.Reasons, "the sessions at the broker do not hear what is published")
+	}
+	if len(out.Reasons) > 0 {
 		status = http.StatusServiceUnavailable
+	}
+	if out.Refused {
+		out.Reasons = append(out.Reasons, "the rig and rule files were refused: what was in force before stays")
 	}
 	return reply(w, status, out)
 }

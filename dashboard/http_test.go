@@ -121,11 +121,11 @@ func TestHealth(t *testing.T) {
 		status int
 		body   string
 	}{
-		{"", http.StatusOK, `{"stepping":true,"recording":true,"input_path":true,"config_refused":false}`},
-		{`{"part":"input_path","ok":false}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":true,"input_path":false,"config_refused":false}`},
-		{`{"part":"recording","ok":false}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":false,"input_path":false,"config_refused":false}`},
-		{`{"part":"input_path","ok":true}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":false,"input_path":true,"config_refused":false}`},
-		{`{"part":"recording","ok":true}`, http.StatusOK, `{"stepping":true,"recording":true,"input_path":true,"config_refused":false}`},
+		{"", http.StatusOK, `{"stepping":true,"recording":true,"input_path":true,"config_refused":false,"reasons":[]}`},
+		{`{"part":"input_path","ok":false}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":true,"input_path":false,"config_refused":false,"reasons":["the sessions at the broker do not hear what is published"]}`},
+		{`{"part":"recording","ok":false}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":false,"input_path":false,"config_refused":false,"reasons":["records are not stored","the sessions at the broker do not hear what is published"]}`},
+		{`{"part":"input_path","ok":true}`, http.StatusServiceUnavailable, `{"stepping":true,"recording":false,"input_path":true,"config_refused":false,"reasons":["records are not stored"]}`},
+		{`{"part":"recording","ok":true}`, http.StatusOK, `{"stepping":true,"recording":true,"input_path":true,"config_refused":false,"reasons":[]}`},
 	} {
 		if tt.health != "" {
 			d.take(ingest.KindHealth, tt.health, d.host())
@@ -457,6 +457,12 @@ func TestMetrics(t *testing.T) {
 			}
 		}
 		return math.NaN()
+	}
+	if v := value("build_info", "", ""); v != 1 {
+		t.Errorf("build_info is %g", v)
+	}
+	if v := value("process_resident_memory_bytes", "", ""); !(v > 1<<20) {
+		t.Errorf("the process takes %g B", v)
 	}
 	d.mu.Lock()
 	st := d.machine.Status(d.state)

@@ -1,10 +1,12 @@
 package dashboard
 
 import (
+	"errors"
 	"net/http"
 	"strings"
 
 	"github.com/prometheus/client_golang/prometheus"
+	"github.com/prometheus/client_golang/prometheus/collectors"
 	"github.com/prometheus/client_golang/prometheus/promhttp"
 
 	"throatwatch/ingest"
@@ -22,6 +24,7 @@ type Metric struct {
 
 // collector makes metrics of one look at the watch.
 type collector struct {
+	build   string
 	status  pipeline.Status
 	viewers int
 	extra   []Metric
@@ -47,6 +50,7 @@ func (c *collector) Collect(out chan<- prometheus.Metric) {
 	total := func(name, help string, v uint64) {
 		send(Metric{Name: name, Help: help, Total: true, Value: float64(v)})
 	}
+	send(Metric{Name: "build_info", Help: "1, with the build that watches.", Labels: map[string]string{"build": c.build}, Value: 1})
 	total("messages_total", "MQTT messages stepped.", st.Messages)
 	total("samples_total", "Samples that fell into a scan.", st.Samples)
 	total("scans_total", "Scans computed.", st.Scans)
@@ -80,7 +84,7 @@ func (c *collector) Collect(out chan<- prometheus.Metric) {
 
 // metrics answers in the Prometheus text format.
 func (s *Server) metrics(w http.ResponseWriter, r *http.Request) error {
-	c := &collector{viewers: s.hub.Viewers()}
+	c := &collector{build: s.cfg.Build, viewers: s.hub.Viewers()}
 	if err := s.ask(r.Context(), "", func(_ *pipeline.Config, m *pipeline.Machine, st *pipeline.State) { c.status = m.Status(st) }); err != nil {
 		return err
 	}
@@ -88,7 +92,8 @@ func (s *Server) metrics(w http.ResponseWriter, r *http.Request) error {
 		c.extra = s.cfg.Extra()
 	}
 	reg := prometheus.NewRegistry()
-	if err := reg.Register(c); err != nil {
+	process := collectors.NewProcessCollector(collectors.ProcessCollectorOpts{Namespace: "throatwatch"})
+	if err := errors.Join(reg.Register(c), reg.Register(process)); err != nil {
 		return err
 	}
 	promhttp.HandlerFor(reg, promhttp.HandlerOpts{}).ServeHTTP(w, r)

@@ -409,9 +409,9 @@ func (w *watcher) pump(ctx context.Context) {
 
 // report feeds the loop with what becomes of the broker sessions.
 func (w *watcher) report(ctx context.Context) {
-	deaf := map[int]bool{}
+	deaf, down := map[int]bool{}, map[int]bool{}
 	for e := range w.client.Events() {
-		w.log.Info(e.String())
+		w.logEvent(&e, down)
 		if e.Session == mqtt.PublisherSession {
 			continue
 		}
@@ -436,6 +436,20 @@ func (w *watcher) report(ctx context.Context) {
 		if err != nil {
 			return
 		}
+	}
+}
+
+// logEvent logs what becomes of a session: trouble, and its end, as a warning.
+func (w *watcher) logEvent(e *mqtt.Event, down map[int]bool) {
+	if e.Err == nil && !down[e.Session] {
+		w.log.Info(e.String())
+		return
+	}
+	w.log.Warn(e.String())
+	if e.Err != nil {
+		down[e.Session] = true
+	} else {
+		delete(down, e.Session)
 	}
 }
 
