@@ -1,6 +1,7 @@
 package dashboard
 
 import (
+	"bytes"
 	"encoding/json"
 	"errors"
 	"fmt"
@@ -54,9 +55,12 @@ type swapBody struct {
 	Channel   string     `json:"channel"`
 	Serial    string     `json:"serial"`
 	ValidFrom rules.Time `json:"valid_from"`
-	Reason    string     `json:"reason"`
-	RequestID string     `json:"request_id"`
-	By        string     `json:"by"`
+	// As a rig file states it: keys calibration, uncertainty and sensor; "" = not stated.
+	Calibration string `json:"calibration"`
+
+	Reason    string `json:"reason"`
+	RequestID string `json:"request_id"`
+	By        string `json:"by"`
 }
 
 // readmitBody is the body that takes an excluded probe back.
@@ -219,11 +223,20 @@ func (s *Server) swap(w http.ResponseWriter, r *http.Request) error {
 	if err := command(w, r, &in); err != nil {
 		return err
 	}
-	if err := s.ask(r.Context(), r.PathValue("rig"), func(*pipeline.Config, *pipeline.Machine, *pipeline.State) {}); err != nil {
+	var bundle []byte
+	if err := s.ask(r.Context(), r.PathValue("rig"), func(_ *pipeline.Config, _ *pipeline.Machine, st *pipeline.State) {
+		bundle = bytes.Clone(st.Bundle)
+	}); err != nil {
 		return err
+	}
+	if in.Calibration != "" && s.cfg.CheckSwap != nil {
+		if faults := s.cfg.CheckSwap(bundle, in.Channel, in.Serial, in.Calibration); len(faults) > 0 {
+			return &faulty{problem{http.StatusUnprocessableEntity, "the calibration of the new sensor has faults"}, faults}
+		}
 	}
 	return s.act(w, r, pipeline.Action{
 		Do: pipeline.DoSwap, Channel: in.Channel, Serial: in.Serial, ValidFrom: in.ValidFrom, Reason: in.Reason, By: in.By, RequestID: in.RequestID,
+		Calibration: in.Calibration,
 	})
 }
 

@@ -62,6 +62,9 @@ type Config struct {
 	// ParseCard reads the text of a test card for a rig. It gives its hash, and what is
 	// wrong with it; nil = none can be loaded here.
 	ParseCard func(text string, cfg *pipeline.Config) (c card.Card, hash string, faults []Fault)
+	// CheckSwap gives what is wrong with the calibration of a new sensor, as text of a rig
+	// file, where bundle is in force; nil = nobody looks at it.
+	CheckSwap func(bundle []byte, channel, serial, calibration string) []Fault
 	Extra     func() []Metric // further metrics, of parts that the server does not know
 	Free      func() float64  // bytes on the disk of the data folder, 0 = not known; nil = the same
 

@@ -230,7 +230,8 @@ func appendChannels(dst []byte, o *pipeline.Outcome, cfg *pipeline.Config, wante
 		dst = text(dst, "quality", scan.Quality[i].String())
 		dst = number(dst, "age_s", age(scan.Age[i]))
 		dst = text(dst, "finding", scan.Finding[i].Kind.String())
-		dst = append(truth(dst, "proven", scan.Finding[i].Proven), '}')
+		dst = truth(dst, "proven", scan.Finding[i].Proven)
+		dst = append(text(dst, "calibration", cfg.Compute.Channels[i].RecordAt(scan.T).State(scan.T).String()), '}')
 	}
 	return append(dst, '}', '}')
 }
@@ -378,6 +379,33 @@ type channelJSON struct {
 	High         float64 `json:"high"`
 	RecordedOnly bool    `json:"recorded_only"`
 	Station      string  `json:"station"`
+
+	Sensor *sensorJSON  `json:"sensor"` // null = nothing is on file
+	Swaps  []sensorJSON `json:"swaps"`  // that took its place, by the rig file
+}
+
+// sensorJSON is what is on file of a sensor. Dates are YYYY-MM-DD, "" = not stated.
+type sensorJSON struct {
+	ValidFrom   *string     `json:"valid_from"` // of its first sample; null = from the beginning
+	Serial      string      `json:"serial"`
+	Certificate string      `json:"certificate"`
+	Calibrated  string      `json:"calibrated"`
+	Due         string      `json:"due"`
+	Waiver      *waiverJSON `json:"waiver"`
+}
+
+type waiverJSON struct {
+	Who   string `json:"who"`
+	Why   string `json:"why"`
+	Until string `json:"until"`
+}
+
+func sensorView(r *calib.Record, from int64) sensorJSON {
+	v := sensorJSON{ValidFrom: optional(from), Serial: r.Serial, Certificate: r.Certificate, Calibrated: r.Calibrated, Due: r.Due}
+	if r.Waiver.Who != "" {
+		v.Waiver = &waiverJSON{r.Waiver.Who, r.Waiver.Why, r.Waiver.Until}
+	}
+	return v
 }
 
 func channelViews(cfg *pipeline.Config) []channelJSON {
@@ -386,7 +414,14 @@ func channelViews(cfg *pipeline.Config) []channelJSON {
 		c := &cfg.Compute.Channels[i]
 		out[i] = channelJSON{
 			ID: c.ID, Title: c.Title, Unit: c.Unit.Name, Dimension: c.Unit.Dimension.String(), Reference: referenceName(c.Reference),
-			Low: c.Low, High: c.High, RecordedOnly: c.RecordedOnly, Station: station(&cfg.Compute.Stations, i),
+			Low: c.Low, High: c.High, RecordedOnly: c.RecordedOnly, Station: station(&cfg.Compute.Stations, i), Swaps: []sensorJSON{},
+		}
+		if c.Record.Serial != "" {
+			v := sensorView(&c.Record, 0)
+			out[i].Sensor = &v
+		}
+		for k := range c.Swaps {
+			out[i].Swaps = append(out[i].Swaps, sensorView(&c.Swaps[k].Record, c.Swaps[k].From))
 		}
 	}
 	return out

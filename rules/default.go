@@ -18,6 +18,7 @@ type Equipment struct {
 	Speed     bool // rotor speed, without which the phase is unknown
 	FuelFlow  bool
 	Bellmouth bool
+	OnFile    bool // due dates of calibrations
 }
 
 // AllEquipment is that of a rig which has every default rule.
@@ -25,7 +26,7 @@ func AllEquipment() Equipment {
 	return Equipment{
 		Bands:  []egt.Band{{Name: "start", Kind: egt.KindStart, Allowance: second}, {Name: "run", Kind: egt.KindRun, Allowance: second}},
 		Limits: egt.Limits{Spread: 1, Rise: 1, StarterOnce: second, StarterHour: second, StarterRuns: 1, Rundown: second, CoolFuelOff: second},
-		EGT:    true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true,
+		EGT:    true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true, OnFile: true,
 	}
 }
 
@@ -296,6 +297,16 @@ func sensorRules(q *Equipment) []Rule {
 			Caution:  "What this sensor reads may be real. Watch its mates.",
 			Response: "Facility procedure for instrumentation checks.",
 		},
+	}
+	if q.OnFile {
+		out = append(out, Rule{
+			Name: "calibration_expired", When: "calibrations_expired > 0", Priority: Advisory, OnDelay: second, OffDelay: 5 * second,
+			WorsenBy: 1,
+			Title:    "Calibration expired",
+			Text:     "{expired_sensor}: its calibration has expired, and nobody has waived it. {calibrations_expired:.0} sensor(s) of station values in all; the Rig page names them. Follow the facility's procedure for instrumentation checks.",
+			Caution:  "What is computed from this sensor rests on a calibration that is out of date. A waiver in the rig file names who answers for it.",
+			Response: "Facility procedure for instrumentation checks.",
+		})
 	}
 	if q.EGT {
 		out = append(out, Rule{

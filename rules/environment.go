@@ -116,6 +116,7 @@ type Channel struct {
 //	sensors_failed failed_sensor failed_finding            proven findings: how many, the first of them
 //	sensors_doubtful doubtful_sensor doubtful_finding      suspected ones, but for hot EGT probes:
 //	egt_hot_probes egt_hot_probe egt_hot_by_k
+//	calibrations_expired expired_sensor                    of sensors that make station values, without a waiver
 //	channel.<id> quality.<id> finding.<id> usable.<id>     SI value, quality, what is wrong, may be used
 //	egt.<band>.over .exceeded .elapsed_s .remaining_s
 func StandardNames(channels []Channel, bands []string) []Name {
@@ -162,6 +163,7 @@ func StandardNames(channels []Channel, bands []string) []Name {
 		count("sensors_failed"), Name{Name: "failed_sensor", Type: Text}, Name{Name: "failed_finding", Type: Text, Values: findings},
 		count("sensors_doubtful"), Name{Name: "doubtful_sensor", Type: Text}, Name{Name: "doubtful_finding", Type: Text, Values: findings},
 		count("egt_hot_probes"), Name{Name: "egt_hot_probe", Type: Text},
+		count("calibrations_expired"), Name{Name: "expired_sensor", Type: Text},
 		Name{Name: "egt_hot_by_k", Type: Number, Unit: "K", Dimension: unit.TemperatureDifference},
 		daemon(flag("health.recording")), daemon(flag("health.input_path")), daemon(flag("health.clock")),
 		daemon(flag("health.sources")), daemon(count("sources_lost")),

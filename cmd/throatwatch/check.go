@@ -10,6 +10,7 @@ import (
 	"strconv"
 	"strings"
 	"text/tabwriter"
+	"time"
 
 	"github.com/spf13/pflag"
 
@@ -38,6 +39,7 @@ func checkCommand(args []string, stdout, stderr io.Writer) int {
 		say(stderr, "throatwatch check RIG.yaml [--json | --default-rules]\n\nPrints every fault of a rig file and its rule files at once, or what they say.\n"+checkClosing+"\n\n"+flags.FlagUsages())
 	}
 	asJSON := flags.Bool("json", false, "print one JSON object, values in SI")
+	on := flags.String("on", time.Now().Format(time.DateOnly), "the day on which calibrations must be in date")
 	asRules := flags.Bool("default-rules", false, "print the default rules of the rig, to begin a rule file from")
 	if err := flags.Parse(args); err != nil {
 		if errors.Is(err, pflag.ErrHelp) {
@@ -51,6 +53,12 @@ func checkCommand(args []string, stdout, stderr io.Writer) int {
 		return 2
 	}
 	bundle, cfg, faults := config.Load(flags.Arg(0))
+	day, err := time.ParseInLocation(time.DateOnly, *on, cfg.Rig.Zone())
+	if err != nil {
+		say(stderr, fmt.Sprintf("check: --on %q: write it as 2026-03-31\n", *on))
+		return 2
+	}
+	bundle.Warnings = append(bundle.Warnings, config.Expired(flags.Arg(0), &cfg, day.UnixNano())...)
 	var out strings.Builder
 	switch {
 	case *asRules && len(faults) == 0:
@@ -110,6 +118,12 @@ type checkChannel struct {
 	Topic        string   `json:"topic"` // "" = any input
 	Name         string   `json:"name"`
 	RecordedOnly bool     `json:"recorded_only"`
+
+	Sensor      string `json:"sensor"` // serial number, "" = not on file
+	Certificate string `json:"certificate"`
+	Calibrated  string `json:"calibrated"`
+	Due         string `json:"due"`
+	Waiver      string `json:"waiver"` // who answers for it, and why
 }
 
 type checkBand struct {
@@ -155,6 +169,7 @@ func newCheckReport(bundle config.Bundle, cfg *pipeline.Config, faults []config.
 		one := checkChannel{
 			ID: c.ID, Title: c.Title, Unit: c.Unit.Name, SI: c.Unit.Dimension.SI().Name, Reference: against(cfg, i),
 			Low: c.Low, High: c.High, Hold: seconds(in.Hold), Topic: in.Topic, Name: in.Name, RecordedOnly: c.RecordedOnly,
+			Sensor: c.Record.Serial, Certificate: c.Record.Certificate, Calibrated: c.Record.Calibrated, Due: c.Record.Due, Waiver: waived(&c.Record),
 		}
 		if u := endU95(&c.Spec); c.Uncertainty.Stated && !math.IsNaN(u) {
 			one.U95 = &u
@@ -254,6 +269,7 @@ func printRig(w *strings.Builder, bundle config.Bundle, cfg *pipeline.Config) {
 		fmt.Fprintf(w, "%s%s (%s)\n", head, in.Filter, in.Format)
 	}
 	printChannels(w, cfg)
+	printSensors(w, cfg)
 	printStations(w, cfg)
 	printBands(w, cfg)
 	printDerived(w, cfg)
@@ -409,6 +425,42 @@ func printChannels(w *strings.Builder, cfg *pipeline.Config) {
 			channelU95(&c.Spec), span(in.Hold), topic, note)
 	}
 	t.flush()
+}
+
+// waived says who answers for an expired sensor and why, "" = nobody.
+func waived(r *calib.Record) string {
+	if r.Waiver.Who == "" {
+		return ""
+	}
+	return r.Waiver.Who + ": " + r.Waiver.Why + named(", until ", r.Waiver.Until)
+}
+
+// printSensors prints what is on file of the sensors.
+func printSensors(w *strings.Builder, cfg *pipeline.Config) {
+	var t textTable
+	row := func(id string, r *calib.Record, from int64) {
+		if r.Serial == "" {
+			return
+		}
+		if t.Writer == nil {
+			t = newTable(w, "Sensors on file", "channel", "since", "sensor", "certificate", "calibrated", "due", "waiver")
+		}
+		since := "–"
+		if from != 0 {
+			since = stamp(rules.Time(from), cfg.Rig.Zone())
+		}
+		t.row(id, since, r.Serial, phrase(r.Certificate), phrase(r.Calibrated), phrase(r.Due), r.Waiver.Who+named(", until ", r.Waiver.Until))
+	}
+	for i := range cfg.Compute.Channels {
+		c := &cfg.Compute.Channels[i]
+		row(c.ID, &c.Record, 0)
+		for k := range c.Swaps {
+			row(c.ID, &c.Swaps[k].Record, c.Swaps[k].From)
+		}
+	}
+	if t.Writer != nil {
+		t.flush()
+	}
 }
 
 func against(cfg *pipeline.Config, i int) string {

@@ -103,6 +103,9 @@ func entered(e *pipeline.Entry, zone *time.Location) string {
 	if e.Serial != "" {
 		parts = append(parts, "sensor "+e.Serial+" from "+stamp(e.ValidFrom, zone))
 	}
+	if e.Calibration != "" {
+		parts = append(parts, "with "+oneLine(e.Calibration))
+	}
 	if e.Text != "" {
 		parts = append(parts, oneLine(e.Text))
 	}

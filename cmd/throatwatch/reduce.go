@@ -6,21 +6,24 @@ import (
 	"fmt"
 	"io"
 	"os/user"
+	"slices"
 
 	"throatwatch/cmd/internal/config"
 	"throatwatch/cmd/internal/watch"
 	"throatwatch/ingest/runfile"
+	"throatwatch/monitor/compute"
 	"throatwatch/rules"
 	"throatwatch/rules/pipeline"
 )
 
 // reduceCommand steps a stored run through another configuration.
 func reduceCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
-	fs := newFlags("reduce RUN --rig OTHER.yaml", "Step the records of a stored run through another rig file: corrected calibrations, throat area, coefficients, rules.\n"+
+	fs := newFlags("reduce RUN --rig OTHER.yaml | --swaps", "Step the records of a stored run through another rig file: corrected calibrations, throat area, coefficients, rules.\n"+
 		"The result is stored as a run of its own beside it, RUN-r1 and so on; the run itself stays as it is.\n"+
 		"`throatwatch compare RUN RUN-r1` tells the differences.", stderr)
 	data := fs.String("data", "data", "data folder")
 	rig := fs.String("rig", "", "the other rig file")
+	swaps := fs.Bool("swaps", false, "use the calibrations that were entered with sensor swaps, each from its time on; without --rig with the files of the run")
 	note := fs.String("note", "", "what is corrected, and why")
 	by := fs.String("by", "", "who reduces it (default: the user of this machine)")
 	asJSON := fs.Bool("json", false, "progress and result as JSON")
@@ -28,8 +31,8 @@ func reduceCommand(ctx context.Context, args []string, stdout, stderr io.Writer)
 	if code >= 0 {
 		return code
 	}
-	if len(rest) != 1 || *rig == "" {
-		_, _ = fmt.Fprintln(stderr, "throatwatch reduce: give one run and --rig; `throatwatch runs` lists the runs")
+	if len(rest) != 1 || *rig == "" && !*swaps {
+		_, _ = fmt.Fprintln(stderr, "throatwatch reduce: give one run, and --rig or --swaps; `throatwatch runs` lists the runs")
 		return 2
 	}
 	if u, err := user.Current(); *by == "" && err == nil {
@@ -38,7 +41,7 @@ func reduceCommand(ctx context.Context, args []string, stdout, stderr io.Writer)
 	progress := newProgress(stderr, *asJSON)
 	o := watch.ReduceOptions{Run: rest[0], By: *by, Note: *note}
 	o.Progress = func(part float64, n int64) { progress.show(part, n, "records") }
-	res, err := reduceRun(ctx, *data, *rig, o)
+	res, err := reduceRun(ctx, *data, *rig, *swaps, o)
 	progress.end()
 	if err == nil && *asJSON {
 		err = printJSON(stdout, reducedView(&res))
@@ -53,17 +56,43 @@ func reduceCommand(ctx context.Context, args []string, stdout, stderr io.Writer)
 	return 0
 }
 
-// reduceRun reads the rig file and reduces the run by it.
-func reduceRun(ctx context.Context, dir, rig string, o watch.ReduceOptions) (res watch.Reduced, err error) {
-	if o, err = reduceOptions(rig, o); err != nil {
-		return res, err
+// reduceRun reduces the run by a rig file, by the swaps that were entered, or both.
+func reduceRun(ctx context.Context, dir, rig string, swaps bool, o watch.ReduceOptions) (res watch.Reduced, err error) {
+	if rig != "" {
+		if o, err = reduceOptions(rig, o); err != nil {
+			return res, err
+		}
 	}
 	runs, err := openRuns(ctx, dir)
 	if err != nil {
 		return res, err
 	}
 	defer func() { err = errors.Join(err, runs.Catalog.Close()) }()
+	if swaps {
+		if o, err = withSwaps(ctx, runs, o); err != nil {
+			return res, err
+		}
+	}
 	return runs.Reduce(ctx, o)
+}
+
+// withSwaps adds the swaps that were entered to the configuration, or to that of the run.
+func withSwaps(ctx context.Context, runs watch.StoredRuns, o watch.ReduceOptions) (watch.ReduceOptions, error) {
+	swaps, bundle, err := runs.Swaps(ctx, o.Run)
+	switch {
+	case err != nil:
+		return o, err
+	case len(swaps) == 0:
+		return o, fmt.Errorf("no calibration was entered with a swap in run %s that its files do not have: `throatwatch log %s` lists the swaps; a rig file with swaps: goes with --rig", o.Run, o.Run)
+	case o.Bundle != nil:
+		bundle = o.Bundle
+	}
+	var faults []config.Fault
+	if o.Bundle, faults = config.WithSwaps(bundle, swaps); len(faults) > 0 {
+		return o, watch.Faults(faults)
+	}
+	o.Config, faults = config.Parse(o.Bundle)
+	return o, watch.Faults(faults)
 }
 
 // reduceOptions adds the configuration of a rig file.
@@ -131,7 +160,13 @@ func printReduced(w io.Writer, r *watch.Reduced) {
 		_, _ = fmt.Fprintln(w, "the run does not end in its records")
 	}
 	for _, s := range swapsOf(r) {
-		_, _ = fmt.Fprintf(w, "sensor swap: %s has %s since %s (%s, %s): one calibration of the rig file holds for the whole run\n",
-			s.Channel, s.Serial, stamp(rules.Time(s.ValidFrom), zoneOf(r.Run.TimeZone)), s.By, oneLine(s.Reason))
+		used := "one calibration of the rig file holds for the whole run"
+		if slices.ContainsFunc(r.Config.Compute.Channels, func(c compute.Channel) bool {
+			return c.ID == s.Channel && slices.ContainsFunc(c.Swaps, func(of compute.Swap) bool { return of.From == s.ValidFrom })
+		}) {
+			used = "its own calibration holds since then"
+		}
+		_, _ = fmt.Fprintf(w, "sensor swap: %s has %s since %s (%s, %s): %s\n",
+			s.Channel, s.Serial, stamp(rules.Time(s.ValidFrom), zoneOf(r.Run.TimeZone)), s.By, oneLine(s.Reason), used)
 	}
 }

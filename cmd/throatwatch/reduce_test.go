@@ -148,7 +148,8 @@ func TestReduceRefuses(t *testing.T) {
 		code int
 		want string
 	}{
-		{[]string{"reduce", id, "--data", dir}, 2, "give one run and --rig"},
+		{[]string{"reduce", id, "--data", dir}, 2, "give one run, and --rig or --swaps"},
+		{[]string{"reduce", id, "--data", dir, "--swaps"}, 1, "no calibration was entered with a swap"},
 		{[]string{"reduce", id, "--data", dir, "--rig", "no-such.yaml"}, 1, "no-such.yaml"},
 		{[]string{"reduce", "none", "--data", dir, "--rig", rehearseRig}, 1, "none"},
 		{[]string{"reduce", id, "--data", dir, "--rig", otherRig(t, "  id: cell_2\n", "  id: cell_3\n")}, 1, `the configuration of rig "cell_3"`},

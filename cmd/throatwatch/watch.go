@@ -317,11 +317,17 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	return err
 }
 
+// checkSwap tells what is wrong with the calibration of a new sensor.
+func checkSwap(bundle []byte, channel, serial, calibration string) []dashboard.Fault {
+	_, faults := config.WithSwaps(bundle, []config.Swapped{{Channel: channel, Serial: serial, ValidFrom: 1, Calibration: calibration}})
+	return shownFaults(faults)
+}
+
 // page sets the server of the page up.
 func (w *watcher) page(secure bool) dashboard.Config {
 	c := dashboard.Config{
 		Desk: w.loop, Runs: watch.StoredRuns{Catalog: w.store.Catalog(), Store: w.store}, Parse: watch.Parse,
-		Build: watch.Build(), Log: w.log, Extra: w.metrics, Reload: w.reload, ParseCard: parseCard,
+		Build: watch.Build(), Log: w.log, Extra: w.metrics, Reload: w.reload, ParseCard: parseCard, CheckSwap: checkSwap,
 		Free:     func() float64 { free, _ := watch.FreeSpace(w.opt.data); return free }, // 0 where that is not known
 		OpenRole: w.opt.guard.role(), Secure: secure, Audit: newLog(w.stderr, true),
 	}

@@ -21,6 +21,8 @@ import (
 	"throatwatch/ingest/runfile"
 	"throatwatch/monitor"
 	"throatwatch/monitor/archive"
+	"throatwatch/monitor/calib"
+	"throatwatch/monitor/compute"
 	"throatwatch/monitor/steady"
 	"throatwatch/rules/pipeline"
 )
@@ -305,7 +307,7 @@ func (r *reader) point(ctx context.Context, s Stretch) (Point, error) {
 		return p, err
 	}
 	p.Doubts = append(p.Doubts, more...)
-	more, err = r.swaps(ctx, s)
+	more, err = r.swaps(ctx, s, cfg)
 	p.Doubts = append(p.Doubts, more...)
 	return p, err
 }
@@ -344,6 +346,15 @@ func doubts(p *Point, tp *pipeline.TestPoint, cfg *pipeline.Config) []string {
 		if v, ok := p.Get(q); ok && math.IsNaN(float64(v.U95)) {
 			add("no uncertainty of %s: that of a channel or of the nozzle is not stated", v.Name)
 		}
+	}
+	var expired []string
+	for _, i := range cfg.OnFile() {
+		if ch := &cfg.Compute.Channels[i]; cfg.Compute.InUse(i) && ch.RecordAt(p.From).State(p.From) == calib.Expired {
+			expired = append(expired, fmt.Sprintf("%s on %s", ch.ID, ch.RecordAt(p.From).Due))
+		}
+	}
+	if len(expired) > 0 {
+		add("calibration expired without a waiver: %s", strings.Join(expired, ", "))
 	}
 	if v, ok := p.Get(monitor.ChokeMarginPercent); ok && math.Abs(float64(v.Value)) < float64(v.U95) {
 		add("choked or not is within the uncertainty of the margin")
@@ -406,7 +417,7 @@ func (r *reader) channels(ctx context.Context, s Stretch, cfg *pipeline.Config) 
 
 // swaps says which sensors are others than those that the run began with: the
 // calibration is that of the configuration, until the run is reduced by another.
-func (r *reader) swaps(ctx context.Context, s Stretch) (list []string, err error) {
+func (r *reader) swaps(ctx context.Context, s Stretch, cfg *pipeline.Config) (list []string, err error) {
 	err = r.f.Events(ctx, r.h.Started, math.MaxInt64, func(e *runfile.Event) error {
 		if e.Kind != "log" {
 			return nil
@@ -416,8 +427,13 @@ func (r *reader) swaps(ctx context.Context, s Stretch) (list []string, err error
 			return fmt.Errorf("entry %d.%d: %w", e.Epoch, e.N, err)
 		}
 		if entry.What == pipeline.DoSwap && int64(entry.ValidFrom) < s.To {
-			list = append(list, fmt.Sprintf("%s has the sensor %s since %.1f s of the run: the calibration is that of the rig file",
-				entry.Channel, entry.Serial, float64(int64(entry.ValidFrom)-r.h.Started)/1e9))
+			which := "that of the rig file"
+			if i := slices.IndexFunc(cfg.Compute.Channels, func(c compute.Channel) bool { return c.ID == entry.Channel }); i >= 0 &&
+				cfg.Compute.Channels[i].RecordAt(s.From).Serial == entry.Serial {
+				which = "its own"
+			}
+			list = append(list, fmt.Sprintf("%s has the sensor %s since %.1f s of the run: the calibration is %s",
+				entry.Channel, entry.Serial, float64(int64(entry.ValidFrom)-r.h.Started)/1e9, which))
 		}
 		return nil
 	})

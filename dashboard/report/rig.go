@@ -1,6 +1,7 @@
 package report
 
 import (
+	"cmp"
 	"fmt"
 	"math"
 	"slices"
@@ -130,6 +131,59 @@ func (d *data) channels() table {
 		t.Rows = append(t.Rows, row)
 	}
 	return t.aligned()
+}
+
+// sensors lists what is on file of the sensors, as of the beginning of the run or of their
+// first sample in it.
+func (d *data) sensors() table {
+	t := table{
+		Head:  words("Channel", "Sensor", "Certificate", "Calibrated", "Due", "Calibration and uncertainty, 95 %", "State in the run"),
+		Empty: "No sensor is on file: state sensor: with its certificate and due date in the rig file.",
+	}
+	t.keep(3, 4)
+	missing := 0
+	for i := range d.cfg.Compute.Channels {
+		c := &d.cfg.Compute.Channels[i]
+		if c.Record.Serial == "" && len(c.Swaps) == 0 {
+			missing++
+			continue
+		}
+		t.Rows = append(t.Rows, d.sensor(c.ID, &c.Spec, &c.Record, 0))
+		for k := range c.Swaps {
+			spec := c.Spec
+			spec.Polynomial, spec.Uncertainty = c.Swaps[k].Polynomial, c.Swaps[k].Uncertainty
+			t.Rows = append(t.Rows, d.sensor(c.ID, &spec, &c.Swaps[k].Record, c.Swaps[k].From))
+		}
+	}
+	if len(t.Rows) > 0 && missing > 0 {
+		t.More = fmt.Sprintf("Of the other %d channels no sensor is on file.", missing)
+	}
+	return t.aligned()
+}
+
+// sensor is a row of sensors: the sensor of a channel from event time from on.
+func (d *data) sensor(id string, spec *calib.Spec, r *calib.Record, from int64) []cell {
+	at := max(from, d.Run.Started)
+	state := "no due date on file"
+	switch r.State(at) {
+	case calib.NotOnFile:
+	case calib.InDate:
+		state = "in date"
+		if r.State(d.to) != calib.InDate {
+			state = "expired in the run"
+		}
+	case calib.Waived:
+		state = "EXPIRED, waived by " + r.Waiver.Who + prefixed(" until ", r.Waiver.Until) + ": " + r.Waiver.Why
+	case calib.Expired:
+		state = "EXPIRED"
+	}
+	dash := func(s string) string { return cmp.Or(s, none) }
+	row := texts(id, dash(r.Serial), dash(r.Certificate), dash(r.Calibrated), dash(r.Due), calibration(spec), state)
+	row[5].Sub = uncertainty(spec)
+	if from != 0 {
+		row[0].Sub = "since " + d.short(from)
+	}
+	return row
 }
 
 func (d *data) against(c *calib.Spec) string {

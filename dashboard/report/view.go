@@ -34,6 +34,7 @@ type view struct {
 	Summary              []fact
 	Engine, Nozzle       []fact
 	Limits, Channels     table
+	Sensors              table
 	Faults, Out          table
 	Gaps                 table
 	Timeline             table
@@ -197,7 +198,7 @@ func (d *data) view() (*view, error) {
 	}
 	v.Head, v.Summary = d.head(), kept(d.summary())
 	v.Engine, v.Nozzle = d.sources(), d.nozzle()
-	v.Limits, v.Channels = d.limits(), d.channels()
+	v.Limits, v.Channels, v.Sensors = d.limits(), d.channels(), d.sensors()
 	v.Faults, v.Out, v.Gaps = d.faults(), d.outs(), d.gaps()
 	v.Timeline = d.timeline()
 	v.Points, v.Details = d.overview(), d.details()

@@ -96,9 +96,10 @@ type Computer struct {
 	usable    []bool
 	zeroed    []int     // channels whose zero is looked at
 	zeros     []float64 // of them
-	learns    bool      // patterns and ratios, in this scan
-	flow      meter     // of this scan
-	balanced  bool      // it has a flow balance
+	swapped   []swapped
+	learns    bool  // patterns and ratios, in this scan
+	flow      meter // of this scan
+	balanced  bool  // it has a flow balance
 	head      bridged
 	gas       source             // of T7, of this scan
 	doubts    uncertainty.Inputs // of result
@@ -111,6 +112,7 @@ type Computer struct {
 // New checks a configuration and prepares it. The error holds every fault.
 func New(cfg Config) (*Computer, error) {
 	c := &Computer{cfg: cfg, richest: leanest * gas.StoichiometricRatio(cfg.Fuel)}
+	c.swaps()
 	var faults []error
 	var err error
 	if c.order, err = order(cfg.Channels); err != nil {
@@ -211,7 +213,8 @@ func (c *Computer) Reset(s *State, from []Channel) {
 // sameValues tells whether two channels give the same value for the same raw one:
 // after a correction the past would make the new values look like a jump.
 func sameValues(a, b *Channel) bool {
-	return a.ID == b.ID && a.Raw == b.Raw && a.Unit == b.Unit && slices.Equal(a.Polynomial, b.Polynomial)
+	return a.ID == b.ID && a.Raw == b.Raw && a.Unit == b.Unit && slices.Equal(a.Polynomial, b.Polynomial) &&
+		slices.EqualFunc(a.Swaps, b.Swaps, func(x, y Swap) bool { return x.From == y.From && slices.Equal(x.Polynomial, y.Polynomial) })
 }
 
 // Step computes the operating point of a scan and completes the scan: values
@@ -249,6 +252,7 @@ func (c *Computer) compute(s *State, scan *monitor.Scan, p *monitor.OperatingPoi
 
 // calibrate fills values and qualities of the scan.
 func (c *Computer) calibrate(s *State, scan *monitor.Scan) {
+	c.fitSensors(s, scan)
 	for _, i := range c.order {
 		ch, cs := &c.cfg.Channels[i], &s.Channels[i]
 		scan.Value[i] = math.NaN()

@@ -15,6 +15,8 @@ type Channel struct {
 	ID    string
 	Title string
 	calib.Spec
+	Record calib.Record
+	Swaps  []Swap // sensors that took the place of the first, by rising From
 }
 
 // Stations says which channels make which station value. Every entry is an

@@ -18,6 +18,7 @@ type Systematic [monitor.NumQuantities]float64
 func (c *Computer) OfMean(scan *monitor.Scan) (p monitor.OperatingPoint, u Systematic) {
 	var s State
 	c.Reset(&s, nil)
+	c.fitSensors(&s, scan)
 	c.compute(&s, scan, &p)
 	for q := range u {
 		u[q] = math.NaN()

@@ -1,6 +1,7 @@
 package pipeline
 
 import (
+	"slices"
 	"time"
 
 	"throatwatch/monitor/align"
@@ -50,6 +51,17 @@ type RunConfig struct {
 
 	Series string // of run numbers: what a number is made of, with RunPlace for the count; "" = none
 	Width  int    // digits of the count at least
+}
+
+// OnFile lists the channels that have, or come to have, a sensor with a due date.
+func (c *Config) OnFile() (channels []int) {
+	for i := range c.Compute.Channels {
+		ch := &c.Compute.Channels[i]
+		if ch.Record.Expires != 0 || slices.ContainsFunc(ch.Swaps, func(s compute.Swap) bool { return s.Record.Expires != 0 }) {
+			channels = append(channels, i)
+		}
+	}
+	return channels
 }
 
 // Config is a whole rig as the step sees it: the parsed form of the text that a

@@ -7,6 +7,7 @@ import (
 
 	"throatwatch/monitor"
 	"throatwatch/monitor/calib"
+	"throatwatch/monitor/compute"
 	"throatwatch/monitor/egt"
 	"throatwatch/rules"
 )
@@ -22,6 +23,7 @@ type frame struct {
 	egt    []int
 	rake   []int
 	titles []string // of channels
+	dated  []dated  // those that station values need and whose calibration can expire
 	hot    []bool   // by channel: an EGT probe, of which what reads hot is told apart
 }
 
@@ -68,6 +70,8 @@ const (
 	fromHotProbe
 	fromHotBy
 	fromFinding
+	fromExpired
+	fromExpiredSensor
 	fromRecording
 	fromInputPath
 	fromClock
@@ -92,6 +96,7 @@ var plainSources = map[string]source{
 	"sensors_failed": fromFailed, "failed_sensor": fromFailedSensor, "failed_finding": fromFailedFinding,
 	"sensors_doubtful": fromDoubtful, "doubtful_sensor": fromDoubtfulSensor, "doubtful_finding": fromDoubtfulFinding,
 	"egt_hot_probes": fromHot, "egt_hot_probe": fromHotProbe, "egt_hot_by_k": fromHotBy,
+	"calibrations_expired": fromExpired, "expired_sensor": fromExpiredSensor,
 	"health.recording": fromRecording, "health.input_path": fromInputPath, "health.clock": fromClock,
 	"health.webhook": fromWebhook, "health.database": fromDatabase, "webhook_waiting": fromWebhookWaiting, "database_lag_s": fromDatabaseLag,
 	"health.disk": fromDisk, "disk_free_gb": fromDiskFree,
@@ -138,6 +143,11 @@ func newFrame(cfg *Config, names, all []rules.Name) frame {
 			title = ch.ID
 		}
 		f.titles, f.hot = append(f.titles, title), append(f.hot, slices.Contains(f.egt, i))
+	}
+	for _, i := range cfg.OnFile() {
+		if cfg.Compute.InUse(i) {
+			f.dated = append(f.dated, dated{i, &cfg.Compute.Channels[i]})
+		}
 	}
 	channel := map[string]int{}
 	for i := range cfg.Compute.Channels {
@@ -262,6 +272,11 @@ func (f *frame) fill(s *State, scan *monitor.Scan, p *monitor.OperatingPoint) {
 			if found.hot.n > 0 {
 				f.Numbers[it.slot] = scan.Finding[found.hot.first].Size
 			}
+		case fromExpired:
+			f.Numbers[it.slot] = float64(f.expired(p.T).n)
+		case fromExpiredSensor:
+			expired := f.expired(p.T)
+			f.Texts[it.slot] = f.sensor(&expired)
 		case fromFinding:
 			f.Texts[it.slot] = none(scan.Finding[it.index].Kind.String())
 		case fromRunActive, fromRecording, fromInputPath, fromClock, fromSources, fromSourcesLost, fromDataAge, fromSkew,
@@ -291,6 +306,26 @@ func (f *frame) findings(scan *monitor.Scan) (out struct{ failed, doubtful, hot 
 			of.first = i
 		}
 		of.n++
+	}
+	return out
+}
+
+// dated is a channel whose calibration can expire.
+type dated struct {
+	index   int
+	channel *compute.Channel
+}
+
+// expired counts the sensors whose calibration has expired at t and that nobody waived.
+func (f *frame) expired(t int64) (out found) {
+	for _, d := range f.dated {
+		if d.channel.RecordAt(t).State(t) != calib.Expired {
+			continue
+		}
+		if out.n == 0 {
+			out.first = d.index
+		}
+		out.n++
 	}
 	return out
 }
@@ -367,7 +402,7 @@ func (f *frame) fillHealth(s *State) {
 		case fromQuantity, fromChokeState, fromPhase, fromBackPressure, fromTotalPressure, fromTemperature, fromSteady,
 			fromArmed, fromArmedBy, fromMarginal, fromLit, fromChannel, fromQuality, fromUsable, fromOver, fromExceeded, fromElapsed, fromRemaining, fromEGTUsed, fromRakeUsed,
 			fromEGTLost, fromRakeLost, fromFailed, fromFailedSensor, fromFailedFinding, fromDoubtful, fromDoubtfulSensor, fromDoubtfulFinding,
-			fromHot, fromHotProbe, fromHotBy, fromFinding:
+			fromHot, fromHotProbe, fromHotBy, fromFinding, fromExpired, fromExpiredSensor:
 		}
 	}
 }

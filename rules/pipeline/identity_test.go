@@ -6,6 +6,9 @@ import (
 	"testing"
 
 	"throatwatch/ingest"
+	"throatwatch/monitor/calib"
+	"throatwatch/monitor/compute"
+	"throatwatch/rules"
 )
 
 // numbered is a bed whose runs are numbered in a series.
@@ -122,5 +125,39 @@ func TestManySeries(t *testing.T) {
 	}
 	if len(n.Series) != seriesKept {
 		t.Errorf("%d series are kept", len(n.Series))
+	}
+}
+
+// A sensor that a station value rests on raises an alarm once its due day is over, unless
+// somebody answers for it; one that nothing rests on does not.
+func TestExpiredCalibration(t *testing.T) {
+	parse := parser(t)
+	b := &bed{tb: t, s: &State{}, r: ingest.Record{Host: epoch - second}}
+	b.m = NewMachine(func(bundle []byte) (Config, error) {
+		cfg, err := parse(bundle)
+		list := cfg.Compute.Channels
+		list[0].Record = calib.Record{Serial: "P-1", Expires: epoch + 5*second} // p7
+		list[2].Record = calib.Record{Serial: "T-1", Expires: epoch, Waiver: calib.Waiver{Who: "M. Oduya", Why: "spare", Ends: epoch + 10*second}}
+		list[5].Record = calib.Record{Serial: "O-1", Expires: epoch} // p_oil, of no station
+		list[3].Record = calib.Record{Serial: "X-1", Expires: epoch}
+		list[3].Swaps = []compute.Swap{{From: epoch, Record: calib.Record{Serial: "X-2", Expires: epoch + 15*second}}}
+		cfg.Rules = append(cfg.Rules, rules.Rule{
+			Name: "expired", When: "calibrations_expired > 0", Priority: rules.Advisory, WorsenBy: 1,
+			Title: "expired", Text: "{expired_sensor} of {calibrations_expired:.0}", Caution: "-", Response: "-",
+		})
+		return cfg, err
+	})
+	b.record(ingest.KindBoot, `{"epoch":1}`)
+	b.record(ingest.KindConfig, "rig one")
+	for _, tt := range []struct {
+		d     int64
+		count float64
+		text  string
+	}{{4 * second, 0, ""}, {5 * second, 1, "p7 of 1"}, {5 * second, 2, "p7 of 1"}, {5 * second, 3, "p7 of 1"}} {
+		b.play(atRest, tt.d)
+		a, ok := b.alarm("expired")
+		if ok != (tt.text != "") || a.Text != tt.text || a.Value.V != tt.count && ok {
+			t.Errorf("after %v: %v %q %+v, want %q and %g", tt.d, ok, a.Text, a.Value, tt.text, tt.count)
+		}
 	}
 }

@@ -46,6 +46,8 @@ type Entry struct {
 	Role      string        `json:"role"`
 	ValidFrom rules.Time    `json:"valid_from,omitzero"`
 	Serial    string        `json:"serial,omitempty"`
+
+	Calibration string `json:"calibration,omitempty"` // of a new sensor, as a rig file states it
 }
 
 // Swap is a sensor that took the place of another on a channel.
@@ -56,6 +58,8 @@ type Swap struct {
 	At        int64  // host time at which it was entered
 	By        string
 	Reason    string
+
+	Calibration string // keys calibration, uncertainty and sensor, as in a rig file; "" = not stated
 }
 
 // log enters what was done into the operator log.
@@ -83,6 +87,7 @@ func (a *Action) checkTexts() error {
 		{"reason", a.Reason, mostText},
 		{"name", a.Name, mostName},
 		{"serial", a.Serial, mostName},
+		{"calibration", a.Calibration, mostText},
 		{"by", a.By, mostName},
 		{"approved by", a.ApprovedBy, mostName},
 		{"request id", a.RequestID, mostName},
@@ -117,7 +122,8 @@ func (m *Machine) enter(s *State, a *Action) error {
 }
 
 // swap notes that the sensor of a channel is another one. It changes no computation:
-// the calibration of a run stays that of its configuration.
+// the calibration of a run stays that of its configuration until it is reduced by that of
+// the new sensor.
 func (m *Machine) swap(s *State, t int64, a *Action) error {
 	from := int64(a.ValidFrom)
 	if from == 0 {
@@ -144,8 +150,8 @@ func (m *Machine) swap(s *State, t int64, a *Action) error {
 	if len(s.Swaps) == swapsKept {
 		s.Swaps = slices.Delete(s.Swaps, 0, 1)
 	}
-	s.Swaps = append(s.Swaps, Swap{Channel: a.Channel, Serial: a.Serial, ValidFrom: from, At: s.Host, By: a.By, Reason: a.Reason})
-	m.log(s, a, Entry{Channel: a.Channel, Serial: a.Serial, ValidFrom: rules.Time(from), Text: a.Text})
+	s.Swaps = append(s.Swaps, Swap{Channel: a.Channel, Serial: a.Serial, ValidFrom: from, At: s.Host, By: a.By, Reason: a.Reason, Calibration: a.Calibration})
+	m.log(s, a, Entry{Channel: a.Channel, Serial: a.Serial, ValidFrom: rules.Time(from), Text: a.Text, Calibration: a.Calibration})
 	return nil
 }
 

@@ -8,6 +8,7 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	"reflect"
 	"slices"
 	"strconv"
 	"strings"
@@ -78,14 +79,17 @@ type ClockStep struct {
 
 // Action is the payload of an action record: what an operator did.
 type Action struct {
-	Do        string        `json:"do"` // one of the Do constants
-	Alarm     string        `json:"alarm,omitempty"`
-	Revision  uint64        `json:"revision,omitempty"`
-	Reason    string        `json:"reason,omitempty"`
-	Text      string        `json:"text,omitempty"`
-	Seconds   float64       `json:"seconds,omitempty"`
-	Channel   string        `json:"channel,omitempty"`
-	Serial    string        `json:"serial,omitempty"` // of a new sensor
+	Do       string  `json:"do"` // one of the Do constants
+	Alarm    string  `json:"alarm,omitempty"`
+	Revision uint64  `json:"revision,omitempty"`
+	Reason   string  `json:"reason,omitempty"`
+	Text     string  `json:"text,omitempty"`
+	Seconds  float64 `json:"seconds,omitempty"`
+	Channel  string  `json:"channel,omitempty"`
+	Serial   string  `json:"serial,omitempty"` // of a new sensor
+	// Of a new sensor: keys calibration, uncertainty and sensor, as in a rig file; "" = as before.
+	Calibration string `json:"calibration,omitempty"`
+
 	ValidFrom rules.Time    `json:"valid_from,omitzero"`
 	Name      string        `json:"name,omitempty"` // of an entry
 	Value     rules.Reading `json:"value,omitzero"`
@@ -378,11 +382,26 @@ func (m *Machine) replace(s *State, bundle []byte) error {
 	if err := m.load(bundle); err != nil {
 		return err
 	}
-	if old == nil || old.cfg.Hash != m.prog.cfg.Hash {
+	if old == nil || old.cfg.Hash != m.prog.cfg.Hash && !sameButSwaps(&old.cfg, &m.prog.cfg) {
 		m.fit(s, old)
 	}
 	s.Bundle = append(s.Bundle[:0], bundle...)
 	return nil
+}
+
+// sameButSwaps tells whether two configurations differ in swaps of sensors at most: what was
+// learned by one holds for the other.
+func sameButSwaps(a, b *Config) bool {
+	without := func(c *Config) Config {
+		out := *c
+		out.Hash = ""
+		out.Compute.Channels = slices.Clone(c.Compute.Channels)
+		for i := range out.Compute.Channels {
+			out.Compute.Channels[i].Swaps = nil
+		}
+		return out
+	}
+	return reflect.DeepEqual(without(a), without(b))
 }
 
 func (m *Machine) message(s *State, r *ingest.Record) {

@@ -61,7 +61,7 @@ func (r *rig) ids() []string {
 
 func (r *rig) readChannel(n node) {
 	f := n.fields()
-	f.own = []string{"id", "title", "topic", "name", "like"}
+	f.own = []string{"id", "title", "topic", "name", "like", "sensor"}
 	c := &channel{fields: f}
 	id := f.need("id", "the name that stations, rules and records use")
 	c.id = id.id()
@@ -84,7 +84,7 @@ func (r *rig) readChannel(n node) {
 	if in.Hold < r.cfg.Align.Period {
 		hold.fault("the hold time is shorter than a scan", "a channel must last from scan to scan at least")
 	}
-	out := compute.Channel{ID: c.id, Title: f.get("title").label(c.id)}
+	out := compute.Channel{ID: c.id, Title: f.get("title").label(c.id), Record: r.readSensor(f.get("sensor"))}
 	r.readSpec(c, &out.Spec)
 	r.readLimits(c, c.id, out.Title, &out.Spec)
 	in.Raw = out.Raw

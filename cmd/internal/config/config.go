@@ -94,11 +94,9 @@ func Load(name string) (Bundle, pipeline.Config, []Fault) {
 
 // Parse gives the configuration of a marshalled bundle.
 func Parse(bundle []byte) (pipeline.Config, []Fault) {
-	var b Bundle
-	if err := json.Unmarshal(bundle, &b); err != nil || b.Format != bundleFormat || len(b.Files) == 0 {
-		return pipeline.Config{}, []Fault{{
-			File: "bundle", Message: "no bundle of rig and rule files", Hint: "it was written by another program or is damaged",
-		}}
+	b, faults := unmarshal(bundle)
+	if len(faults) > 0 {
+		return pipeline.Config{}, faults
 	}
 	return readRig(b.Files[0]).finish(b)
 }

@@ -30,6 +30,7 @@ func (r *rig) equipment() rules.Equipment {
 		Speed:     s.Speed >= 0,
 		FuelFlow:  s.FuelFlow >= 0,
 		Bellmouth: s.Bellmouth >= 0,
+		OnFile:    slices.ContainsFunc(r.cfg.OnFile(), func(i int) bool { return r.cfg.Compute.InUse(i) }),
 	}
 }
 

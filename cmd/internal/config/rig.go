@@ -40,7 +40,7 @@ type rig struct {
 // readRig reads a rig file, all but its rules.
 func readRig(f File) *rig {
 	top := open(f)
-	r := &rig{doc: top.doc, docs: []*document{top.doc}}
+	r := &rig{doc: top.doc, docs: []*document{top.doc}, blank: top}
 	if !top.is() {
 		return r
 	}
@@ -49,6 +49,7 @@ func readRig(f File) *rig {
 	r.readScan(m)
 	r.readInputs(m.get("inputs"))
 	r.readChannels(m.need("channels", "list the measured signals"))
+	r.readSwaps(m.get("swaps"))
 	r.readFuel(m.get("fuel"))
 	r.readStations(m.need("stations", "say which channels make p7, t7 and the back pressure"))
 	r.readGas(m.get("gas"))

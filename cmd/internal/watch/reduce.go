@@ -2,14 +2,18 @@ package watch
 
 import (
 	"bytes"
+	"cmp"
 	"context"
 	"errors"
 	"fmt"
 	"io/fs"
+	"math"
 	"os"
 	"path/filepath"
 	"runtime"
+	"slices"
 
+	"throatwatch/cmd/internal/config"
 	"throatwatch/ingest"
 	"throatwatch/ingest/runfile"
 	"throatwatch/monitor/archive"
@@ -37,6 +41,7 @@ type Reduced struct {
 	Parent runfile.Header
 	Same   bool            // the digest is that of the parent
 	Swaps  []pipeline.Swap // sensors that were exchanged during the run
+	Config pipeline.Config // that it was stepped through
 }
 
 // Reduce steps the records of a stored run through another configuration, which takes the
@@ -68,6 +73,40 @@ func (r StoredRuns) Reduce(ctx context.Context, o ReduceOptions) (res Reduced, e
 	return res, nil
 }
 
+// Swaps gives the sensors that were exchanged up to the end of a run and whose calibration
+// was entered, of which the files do not know that it was recorded with: they were in force
+// before. An entry for the same channel and time supersedes the one before it. bundle is
+// those files.
+func (r StoredRuns) Swaps(ctx context.Context, id string) (swaps []config.Swapped, bundle []byte, err error) {
+	f, err := r.Open(ctx, id)
+	if err != nil {
+		return nil, nil, err
+	}
+	defer func() { err = errors.Join(err, f.Close()) }()
+	h, err := f.Header(ctx)
+	if err != nil {
+		return nil, nil, err
+	}
+	c, err := f.LastCheckpoint(ctx, math.MaxInt64)
+	if err != nil {
+		return nil, nil, fmt.Errorf("swaps of %s: %w", id, err)
+	}
+	state, err := pipeline.Decode(c.State)
+	if err != nil {
+		return nil, nil, fmt.Errorf("swaps of %s: %w", id, err)
+	}
+	for i := range state.Swaps {
+		s := &state.Swaps[i]
+		if s.Calibration == "" || s.At < int64(state.InForce.Since) || h.Ended != 0 && s.ValidFrom > h.Ended {
+			continue
+		}
+		swaps = slices.DeleteFunc(swaps, func(o config.Swapped) bool { return o.Channel == s.Channel && o.ValidFrom == s.ValidFrom })
+		swaps = append(swaps, config.Swapped{Channel: s.Channel, Serial: s.Serial, ValidFrom: s.ValidFrom, Calibration: s.Calibration})
+	}
+	slices.SortStableFunc(swaps, func(a, b config.Swapped) int { return cmp.Compare(a.ValidFrom, b.ValidFrom) })
+	return swaps, state.Bundle, nil
+}
+
 // ReduceTo is Reduce into a file of its own, which becomes no stored run and whose run has
 // the id of its parent. There must be nothing at path.
 func (r StoredRuns) ReduceTo(ctx context.Context, o ReduceOptions, path string) (res Reduced, err error) {
@@ -90,7 +129,7 @@ func (r StoredRuns) ReduceTo(ctx context.Context, o ReduceOptions, path string) 
 		return res, fmt.Errorf("reduce %s: %w", o.Run, err)
 	}
 	h.ID = res.Parent.ID
-	res.Run.Header, res.Swaps, res.Same = h, swaps, h.Digest == res.Parent.Digest
+	res.Run.Header, res.Swaps, res.Config, res.Same = h, swaps, o.Config, h.Digest == res.Parent.Digest
 	return res, nil
 }
 
