@@ -30,7 +30,7 @@ func FuzzRecord(f *testing.F) {
 		{ingest.KindHealth, `{"part":"disk","ok":false,"behind":1e308}`},
 		{ingest.KindGap, `{"lost":18446744073709551615}`},
 	} {
-		f.Add(uint8(seed.kind), topic, []byte(seed.payload), int64(second))
+		f.Add(uint8(seed.kind), topic, []byte(seed.payload), second)
 	}
 	f.Fuzz(func(t *testing.T, kind uint8, topic string, payload []byte, later int64) {
 		s, err := Decode(state)
