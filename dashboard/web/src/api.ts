@@ -1,8 +1,11 @@
 // Requests to the server beside the page. Failures become sentences for people.
 
 import type { AlarmPath } from './alarms';
-import type { Alarm, AlarmFigures, CurvesCompared, ExceedanceReply, Frame, HelloFrame, LogEntry, RigInfo, RunSummary, ScansCompared, SeriesReply, TestPoints, ThroatCurve } from './frames';
+import type { Alarm, AlarmFigures, Card, CheckSet, CurvesCompared, ExceedanceReply, Frame, Handover, HelloFrame, LogEntry, RigInfo, RunSummary, ScansCompared, SeriesReply, TakenPoint, TestPoints, ThroatCurve } from './frames';
 import type { Session } from './session';
+
+/** What is done to a test card, the last part of an address. */
+export type CardStep = 'take' | 'accept' | 'reject' | 'skip' | 'go-to';
 
 /** What is wrong at a place of a file. */
 export interface Fault { at: string; message: string; hint: string }
@@ -10,6 +13,12 @@ export interface Fault { at: string; message: string; hint: string }
 /** A refused or failed request; status 0 when the server was not reached. */
 export class RequestError extends Error {
   constructor(readonly status: number, message: string, readonly faults: Fault[] = []) { super(message); }
+}
+
+/** What was refused, with what is wrong in the files. */
+export function withFaults(e: unknown): Error {
+  if (!(e instanceof RequestError) || e.faults.length === 0) return e instanceof Error ? e : new Error(String(e));
+  return new Error([e.message, ...e.faults.map((f) => `${f.at}: ${f.message}${f.hint ? ` (${f.hint})` : ''}`)].join('\n'));
 }
 
 /** The token that goes with every change, so that no other site can send one. */
@@ -79,6 +88,12 @@ export const api = {
   swap: (rig: string, e: { channel: string; serial: string; valid_from: string; reason: string }, by: string) => post(`api/rigs/${id(rig)}/swap`, { ...e, by, request_id: uuid() }),
   readmit: (rig: string, channel: string, reason: string, by: string) => post(`api/rigs/${id(rig)}/readmit`, { channel, reason, by, request_id: uuid() }),
   config: (rig: string, approvedBy: string, reason: string, by: string) => post(`api/rigs/${id(rig)}/config`, { by, approved_by: approvedBy, reason, request_id: uuid() }),
+  check: (rig: string, c: { phase: string; warmth: string; ticks: Record<string, string>; planned_s: number | null; note: string }, by: string) => post(`api/rigs/${id(rig)}/checks`, { ...c, by, request_id: uuid() }),
+  checks: (run: string) => get<CheckSet[]>(`api/runs/${id(run)}/checks`),
+  loadCard: (rig: string, text: string, reason: string, by: string) => post(`api/rigs/${id(rig)}/card`, { text, reason, by, request_id: uuid() }),
+  cardStep: (rig: string, step: CardStep, e: { point?: number; number?: number; reason?: string }, by: string) => post(`api/rigs/${id(rig)}/card/${step}`, { ...e, by, request_id: uuid() }),
+  card: (run: string) => get<{ card: Card | null; taken: TakenPoint[] | null }>(`api/runs/${id(run)}/card`),
+  handover: (rig: string, by: string) => get<Handover>(`api/rigs/${id(rig)}/handover?by=${id(by)}`),
   session: () => get<Partial<Session>>('api/session'),
   login: async (name: string, password: string) => (await (await post('api/session', { name, password })).json()) as Partial<Session>,
   logout: () => change('DELETE', 'api/session'),

@@ -181,6 +181,107 @@ export interface AlarmFigures {
   targets: { figure: string; target: number; met: boolean | null; source: string }[] | null;
 }
 
+/** What a point of a test card asks of one quantity: target ± tolerance, or a bound. */
+export interface CardTarget { quantity: string; title: string; unit: string; text: string; target: Num; tolerance: Num; low: Num; high: Num }
+export interface CardPoint {
+  name: string;
+  targets: CardTarget[] | null;
+  soak_s: number;
+  average_s: number;
+  automatic: boolean;
+  good: { name: string; channels: string[] | null; at_least: number }[] | null;
+  expect_choke: '' | 'armed' | 'disarmed'; // "": by speed
+}
+export interface CardProgress { status: 'open' | 'taken' | 'accepted' | 'skipped'; numbers: number[] | null; reason: string; by: string }
+/** How the current point stands in the last scan. */
+export interface CardNow {
+  t: string;
+  targets: { value: Num; off: Num; off_tolerances: Num; inside: boolean }[] | null; // in the order of the point's
+  held_since: string | null;
+  soak_left_s: Num;
+  stabilised: boolean;
+  why: '' | 'no_data' | 'target' | 'channel' | 'soak' | 'unsteady';
+  quantity: string;
+  channel: string;
+  steady_reason: string;
+  slope: Num;
+  averaging: boolean;
+  averaging_left_s: Num;
+  armed: boolean;
+}
+/** A point that was taken; its number is never given again. */
+export interface TakenPoint {
+  number: number;
+  point: number;
+  name: string;
+  card: string;
+  run: string;
+  from: string;
+  to: string;
+  scans: number;
+  steady: number;
+  automatic: boolean;
+  status: 'taken' | 'accepted' | 'rejected';
+  by: string;
+  judged_by: string;
+  judged: string | null;
+  reason: string;
+  doubts: string[] | null;
+  values?: TestValue[] | null; // not in frames of kind card
+}
+export interface Card {
+  title: string;
+  number: string;
+  revision: string;
+  by: string;
+  for: string;
+  hash: string;
+  loaded: string;
+  loaded_by: string;
+  points: CardPoint[];
+  progress: CardProgress[];
+  current: number; // index into points; −1 when nothing is left
+  now?: CardNow | null;
+  taken: TakenPoint[] | null;
+}
+
+export interface CheckItem { id: string; kind: string; channel: string; title: string; passed: boolean; text: string; value: Num; limit: Num; u95: Num; unit: string; by: string }
+/** The checks of the data system before or after a run. */
+export interface CheckSet {
+  phase: 'before' | 'after';
+  state: 'running' | 'done' | 'broken_off';
+  why: string;
+  run: string;
+  began: string;
+  ended: string | null;
+  warmth: 'cold' | 'warm';
+  by: string;
+  note: string;
+  planned_s: Num;
+  passed: number;
+  of: number;
+  summary: string;
+  config_hash: string;
+  limits_version: string;
+  items: CheckItem[] | null;
+}
+export interface Checks { before: CheckSet | null; after: CheckSet | null; running: CheckSet | null; window_s: number; ticks: { id: string; title: string }[] | null }
+
+/** What one shift leaves to the next. */
+export interface Handover {
+  t: string;
+  by: string;
+  rig: RigInfo;
+  run: Run | null;
+  alarms: Partial<Record<'standing' | 'shelved' | 'out_of_service' | 'suppressed', Alarm[] | null>>;
+  waivers: unknown[] | null;
+  card: { title: string; number: string; revision: string; open: string[] | null; awaiting: number[] | null } | null;
+  limits_version: string;
+  config: ConfigState & { reason?: string };
+  checks: Checks | CheckSet | null;
+  notes: LogEntry[] | null;
+}
+
 export interface QuantityInfo { name: string; unit: string; title: string }
 
 interface Numbered { epoch: number; n: number; t: string }
@@ -224,6 +325,8 @@ export interface HelloFrame extends Numbered {
   log?: LogEntry[] | null;
   life?: Life | null;
   config?: ConfigState | null;
+  card?: Card | null;
+  checks?: Checks | null;
 }
 
 /** Quantities of an operating point that the page shows; keys as in the API. */
@@ -246,6 +349,7 @@ export interface PointFrame extends Numbered, Partial<Record<Quantity, Num>> {
   choke_state: ChokeState;
   choke_marginal: boolean;
   choke_armed: boolean;
+  choke_armed_by?: string | null; // "speed_rule", "test_card"
   lit: boolean;
   phase: string;
   back_pressure_from: string;
@@ -279,11 +383,14 @@ export interface MarkFrame extends Numbered { kind: 'mark'; mark: Mark }
 export interface RunFrame extends Numbered { kind: 'run'; event: 'started' | 'ended'; run: Run }
 export interface LogFrame extends Numbered { kind: 'log'; entry: LogEntry }
 export interface ConfigFrame extends Numbered { kind: 'config'; config: ConfigState }
+export interface CardFrame extends Numbered { kind: 'card'; card: Card | null }
+export interface CardPointFrame extends Numbered { kind: 'card_point'; point: TakenPoint }
+export interface ChecksFrame extends Numbered { kind: 'checks'; checks: CheckSet }
 export interface ResetFrame { kind: 'reset'; reason: string }
 
 export type Frame =
   | HelloFrame | PointFrame | ChannelsFrame | AlarmFrame | LedgerFrame
-  | StatusFrame | MarkFrame | RunFrame | LogFrame | ConfigFrame | ResetFrame;
+  | StatusFrame | MarkFrame | RunFrame | LogFrame | ConfigFrame | CardFrame | CardPointFrame | ChecksFrame | ResetFrame;
 
 /** A line of /api/runs. */
 export interface RunSummary {

@@ -6,6 +6,7 @@ import type { Display } from './context';
 import { type View, attr, h, style, text } from './dom';
 import type { Priority, RigInfo } from './frames';
 import { muteTimes } from './mute';
+import { testDay } from './pages/testday';
 import type { Settings } from './settings';
 import type { Sound } from './sound';
 import { type Model, activeRun, dataAge, hostNow, runSeconds } from './state';
@@ -24,7 +25,7 @@ export interface HeaderParts {
   changed(): void;
 }
 
-const pages: [string, string][] = [['watch', 'Watch'], ['alarms', 'Alarms'], ['log', 'Log'], ['runs', 'Runs'], ['rig', 'Rig'], ['help', 'Help']];
+const pages: [string, string][] = [['watch', 'Watch'], ['alarms', 'Alarms'], ['log', 'Log'], ['checks', 'Test day'], ['runs', 'Runs'], ['rig', 'Rig'], ['help', 'Help']];
 
 /** The files in force and who approved them. */
 export function filesText(m: Model): string {
@@ -105,7 +106,7 @@ export function header(p: HeaderParts): View & { route(name: string): void } {
   return {
     el,
     route(name) {
-      const own = name === 'run' || name === 'compare' ? 'runs' : name;
+      const own = name === 'run' || name === 'compare' ? 'runs' : testDay.some(([page]) => page === name) ? 'checks' : name;
       links.forEach((a, i) => attr(a, 'aria-current', pages[i]?.[0] === own ? 'page' : null));
     },
     update(now) {

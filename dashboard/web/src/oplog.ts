@@ -6,6 +6,7 @@ import { clock, dateClock, day, seconds, signedClock } from './time';
 const deeds: Record<string, string> = {
   acknowledge: 'acknowledged', reset: 'reset', shelve: 'shelved', unshelve: 'taken from the shelf', out_of_service: 'out of service', in_service: 'back in service',
   mark: 'mark', entry: 'entry', swap: 'sensor swapped', readmit: 'probe taken back', config: 'files changed',
+  card_load: 'test card loaded', take: 'point taken', accept: 'point accepted', reject: 'point rejected', skip: 'point skipped', go_to_point: 'went to point', check: 'checks',
 };
 
 /** What was done. */

@@ -1,7 +1,7 @@
 // Test points as the page writes them: each value with as many digits as its
 // uncertainty leaves sense.
 
-import type { Num, TestPoint, TestValue } from './frames';
+import type { Num, TestValue } from './frames';
 import { type Scale, type UnitSet, fixed, scaleOf, signed } from './units';
 
 /** The decimals at which an uncertainty has two digits [JCGM 100 7.2.6]; without one, those at which the value has five. */
@@ -34,8 +34,8 @@ export const headline = [
 ] as const;
 
 /** A value of the list with its U95: "1.912 ± 0.011"; "–" where the point has none. */
-export function brief(p: TestPoint, name: string, set: UnitSet): string {
-  const v = p.values.find((x) => x.name === name);
+export function brief(p: { values?: TestValue[] | null }, name: string, set: UnitSet): string {
+  const v = p.values?.find((x) => x.name === name);
   if (!v || v.value === null) return '–';
   const s = shownValue(v, set);
   return s.u95 === '–' ? s.value : `${s.value} ± ${s.u95}`;

@@ -13,9 +13,10 @@ export interface Session {
 /** What can be done from the page. */
 export type Deed =
   | 'acknowledge' | 'reset' | 'shelve' | 'unshelve' | 'mark' | 'entry' | 'run' | 'note'
-  | 'out-of-service' | 'in-service' | 'readmit' | 'swap' | 'config' | 'delete';
+  | 'checks' | 'take' | 'skip' | 'go-to'
+  | 'out-of-service' | 'in-service' | 'readmit' | 'swap' | 'config' | 'delete' | 'card' | 'accept' | 'reject';
 
-const engineers = new Set<Deed>(['out-of-service', 'in-service', 'readmit', 'swap', 'config', 'delete']);
+const engineers = new Set<Deed>(['out-of-service', 'in-service', 'readmit', 'swap', 'config', 'delete', 'card', 'accept', 'reject']);
 
 /** The session of a server that knows none. */
 export const openSession: Session = { name: '', role: 'operator', csrf: '', open: true };

@@ -3,8 +3,10 @@
 // time in milliseconds.
 
 import type {
-  Alarm, AlarmFrame, AlarmState, Band, Channel, ChannelValue, ConfigState, Frame, HelloFrame, Ledger, Life, LogEntry, MarkFrame, PointFrame, Priority, QuantityInfo, RigInfo, Run, StatusFrame,
+  Alarm, AlarmFrame, AlarmState, Band, Card, Channel, ChannelValue, Checks, ConfigState, Frame, HelloFrame, Ledger, Life, LogEntry, MarkFrame, PointFrame, Priority, QuantityInfo, RigInfo, Run, StatusFrame,
 } from './frames';
+import { withFrame, withPoint } from './card';
+import { withSet } from './checks';
 import { enter } from './oplog';
 import { Ring, columns, pointRow } from './ring';
 import { Sparks } from './spark';
@@ -36,6 +38,8 @@ export interface Model {
   log: LogEntry[]; // of the operators, oldest first, the last 500
   config: ConfigState | null;
   life: Life | null;
+  card: Card | null;
+  checks: Checks | null;
   sparks: Sparks;
   ring: Ring;
   epoch: number;
@@ -55,7 +59,7 @@ const kept = 500;
 export function newModel(replay = false, names: readonly string[] = columns): Model {
   return {
     replay, rig: null, run: null, channels: [], quantities: [], bands: [], armedAbove: null, scanRate: 20, configHash: '', build: '',
-    point: null, values: {}, valuesAt: -Infinity, valuesTime: NaN, alarms: new Map(), history: [], ledgers: [], status: null, flags: [], log: [], config: null, life: null, sparks: new Sparks(), ring: new Ring(names),
+    point: null, values: {}, valuesAt: -Infinity, valuesTime: NaN, alarms: new Map(), history: [], ledgers: [], status: null, flags: [], log: [], config: null, life: null, card: null, checks: null, sparks: new Sparks(), ring: new Ring(names),
     epoch: 0, n: 0, ticks: 0, frameAt: -Infinity, pointAt: -Infinity, statusAt: -Infinity, hostTime: NaN, newest: NaN, resets: 0,
   };
 }
@@ -95,6 +99,9 @@ export function apply(m: Model, f: Frame, now: number): void {
       m.config = f.config;
       m.configHash = f.config.hash;
       break;
+    case 'card': m.card = withFrame(m.card, f.card); break;
+    case 'card_point': m.card = withPoint(m.card, f.point); break;
+    case 'checks': m.checks = withSet(m.checks, f.checks); break;
     case 'run':
       m.run = f.event === 'started' ? f.run : m.run && m.run.id === f.run.id ? f.run : m.run;
       break;
@@ -130,6 +137,8 @@ function hello(m: Model, f: HelloFrame, now: number): void {
   m.build = f.build;
   m.config = f.config ?? null;
   m.life = f.life ?? null;
+  m.card = f.card ?? null;
+  m.checks = f.checks ?? null;
   for (const e of f.log ?? []) enter(m.log, e, kept);
   if (f.status) status(m, f.status, now);
   const host = seconds(f.host_time);

@@ -166,6 +166,11 @@ export function significant(v: number | null | undefined, digits = 5): string {
   return fixed(v, Math.min(6, Math.max(0, digits - 1 - Math.max(magnitude, 0))));
 }
 
+/** A small figure, a difference or an error, with three significant digits. */
+export function few(v: number): string {
+  return fixed(v, v === 0 ? 0 : Math.min(6, Math.max(0, 2 - Math.floor(Math.log10(Math.abs(v))))));
+}
+
 /** A round figure without trailing zeros, for the ends of a range. */
 export function plain(v: number): string {
   return fixed(v, 2).replace(/\.?0+$/, '');

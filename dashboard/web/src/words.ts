@@ -42,7 +42,7 @@ const reasons: Record<string, string> = {
   not_steady: 'no steady phase', not_enough: 'too little data yet', past_limit: 'past it', no_trend: 'no trend toward it',
   levelling: 'levels off before', too_far_ahead: 'too far ahead to tell', no_limit: 'no limit above',
 };
-const reasonWord = (s: string): string => reasons[s] ?? s.replaceAll('_', ' ');
+export const reasonWord = (s: string): string => reasons[s] ?? s.replaceAll('_', ' ');
 
 /** Whether the engine is steady, and if not why; "–" where it is not told. */
 export function steadyText(p: PointFrame | null): string {

@@ -1,7 +1,7 @@
 // Rig: the nozzle with its uncertainties, the files in force, how the path of the data
 // does, every channel, and what was refused and why.
 
-import { RequestError, api } from '../api';
+import { api, withFaults } from '../api';
 import { askForm, withdraw } from '../ask';
 import { type Display, gate } from '../context';
 import { type View, attr, column, h, refill } from '../dom';
@@ -30,12 +30,7 @@ export function rigPage(d: Display): View {
     'Take the rig and rule files as they are on the disk now. Possible only with the engine off; who changed them and who approved them is recorded.',
     [{ name: 'approved', label: 'Approved by (empty: as the rig file says)', optional: true }, { name: 'reason', label: 'Reason' }], 'Take the files',
     async (v) => {
-      try {
-        await api.config(d.rig, v['approved'] ?? '', v['reason'] ?? '', d.operator());
-      } catch (e) {
-        if (!(e instanceof RequestError) || e.faults.length === 0) throw e;
-        throw new Error([e.message, ...e.faults.map((f) => `${f.at}: ${f.message}${f.hint ? ` (${f.hint})` : ''}`)].join('\n'));
-      }
+      await api.config(d.rig, v['approved'] ?? '', v['reason'] ?? '', d.operator()).catch((e: unknown) => { throw withFaults(e); });
     },
   ) }, 'Take changed files…');
   const engineer = engineerView(d);

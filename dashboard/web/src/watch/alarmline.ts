@@ -53,6 +53,7 @@ export function alarmLine(d: Display): View {
       attr(button, 'disabled', !step || sending === 'pending' || why !== '');
       attr(button, 'data-hidden', a === null);
       const trouble = sending !== 'idle' && sending !== 'pending' ? sending : why;
+      attr(others, 'hidden', a === null); // a link without words is none
       text(others, trouble || (list.length > 1 ? `${list.length - 1} other${list.length > 2 ? 's' : ''} standing` : a ? 'no others standing' : ''));
     }
     const say = a ? `${a.id} ${a.state}` : '';

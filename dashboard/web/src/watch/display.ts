@@ -6,6 +6,7 @@ import type { Freshness } from '../state';
 import { signedClock } from '../time';
 import { age } from '../units';
 import { alarmLine } from './alarmline';
+import { cardLine } from './cardline';
 import { ledger } from './ledger';
 import { numbers } from './numbers';
 import { throatPlane } from './throat';
@@ -45,13 +46,15 @@ export function veil(content: HTMLElement): { el: HTMLElement; update(f: Freshne
 
 /** `title` is read aloud; `tools` are what an operator does from here, none in a replay. */
 export function watchDisplay(d: Display, title: string, tools: View | null): View {
-  const parts = [alarmLine(d), throatPlane(d), numbers(d), traces(d, tools?.el ?? null), ledger(d)];
-  const [line, plane, figures, plots, egt] = parts as [View, View, View, View, View];
-  const cover = veil(h('div', { class: 'display' }, h('h1', { class: 'spoken' }, title), line.el, h('div', { class: 'nozzle' }, plane.el, figures.el), plots.el, egt.el));
+  const parts = [alarmLine(d), throatPlane(d), numbers(d), traces(d, tools?.el ?? null), ledger(d), cardLine(d)];
+  const [line, plane, figures, plots, egt, card] = parts as [View, View, View, View, View, View];
+  const grid = h('div', { class: 'display' }, h('h1', { class: 'spoken' }, title), line.el, card.el, h('div', { class: 'nozzle' }, plane.el, figures.el), plots.el, egt.el);
+  const cover = veil(grid);
   return {
     el: cover.el,
     update(now) {
       cover.update(d.fresh(now));
+      attr(grid, 'data-card', d.model().card !== null);
       for (const p of parts) p.update(now);
       tools?.update(now);
     },

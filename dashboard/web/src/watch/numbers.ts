@@ -80,7 +80,7 @@ export function numbers(d: Display): View {
     put(flow, shown(u.flow, p?.mass_flow_kg_s), u.flow.sign, uncertainty(width(u.flow, p?.mass_flow_kg_s_u95), u.flow.decimals));
     put(thrust, shown(u.force, p?.gross_thrust_n), u.force.sign, [uncertainty(width(u.force, p?.gross_thrust_n_u95), u.force.decimals), 'computed'].filter(Boolean).join(', '));
     put(phase, p ? p.phase : '–', '', p && !p.lit ? 'not lit' : '');
-    put(armed, p ? (p.choke_armed ? '● armed' : '○ not armed') : '–', '', p && m.armedAbove !== null ? `above ${fixed(m.armedAbove, 0)} rpm` : '');
+    put(armed, p ? (p.choke_armed ? '● armed' : '○ not armed') : '–', '', p?.choke_armed_by === 'test_card' ? 'by the test card' : p && m.armedAbove !== null ? `above ${fixed(m.armedAbove, 0)} rpm` : '');
     put(referred, shown(u.flow, p?.referred_flow_kg_s), u.flow.sign);
     const on = activeRun(m);
     attr(time.el, 'title', on?.id);

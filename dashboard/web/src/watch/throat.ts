@@ -109,7 +109,7 @@ export function throatPlane(d: Display): View {
     c.rotate(-Math.PI / 2);
     c.textBaseline = 'middle';
     c.textAlign = 'right';
-    c.fillText('flow parameter W√(R T₀)/(A p₀)', 0, 0);
+    c.fillText(height < 230 ? 'W√(R T₀)/(A p₀)' : 'flow parameter W√(R T₀)/(A p₀)', 0, 0);
     c.restore();
 
     c.save();
