@@ -67,6 +67,13 @@ export interface Run {
   started: string;
   ended: string | null;
   by: string;
+  designation?: string; // by the scheme of the rig file; this and what follows: not in runs of older builds
+  test?: string;
+  purpose?: string;
+  engine_build?: string;
+  nozzle_serial?: string;
+  fuel_batch?: string;
+  aborted?: boolean; // its start was given up before idle
 }
 
 export interface Channel {
@@ -89,6 +96,10 @@ export interface RigInfo {
   engine_build: string;
   nozzle_serial: string;
   limits_version: string;
+  nozzle_measured_on?: string;
+  test?: string;
+  purpose?: string;
+  fuel?: { batch: string; density_kg_m3: Num; lower_heating_value_j_kg: Num; hydrogen_to_carbon: Num };
   /** Of the facility, a name of the IANA database; empty = UTC. */
   time_zone?: string;
   /** What follows the record and is set up: "database", "webhook"; only in /api/rigs. */
@@ -129,7 +140,10 @@ export interface ConfigState {
 
 /** What an engine has been through, over all its runs. */
 export interface Life {
-  engine_serial: string;
+  engine_serial?: string; // of an engine
+  nozzle_serial?: string; // of a nozzle
+  aborted_starts?: number;
+  hours_choked?: number;
   starts: number;
   hot_starts: number;
   hung_starts: number;
@@ -156,7 +170,7 @@ export interface Exceedance {
 }
 /** Something that happened to the engine in a run. */
 export interface EngineEvent { t: string; event: string; egt_k: Num; speed_rpm: Num; rundown_s: Num }
-export interface ExceedanceReply { exceedances: Exceedance[] | null; events?: EngineEvent[] | null; life: Life | null }
+export interface ExceedanceReply { exceedances: Exceedance[] | null; events?: EngineEvent[] | null; life: Life | null; nozzle_life?: Life | null }
 
 /** How an alarm system did over a time, against published targets. */
 export interface AlarmFigures {
@@ -324,6 +338,8 @@ export interface HelloFrame extends Numbered {
   status: StatusFrame | null;
   log?: LogEntry[] | null;
   life?: Life | null;
+  nozzle_life?: Life | null;
+  cooldown?: { at_least_s: number; before_restart_s: number };
   config?: ConfigState | null;
   card?: Card | null;
   checks?: Checks | null;
@@ -339,6 +355,7 @@ export const quantityKeys = [
   'discharge_coefficient', 'air_flow_kg_s', 'fuel_flow_kg_s', 'flow_balance_kg_s',
   'independent_flow_kg_s', 'independent_flow_kg_s_u95', 'independent_flow_parameter',
   'egt_indicated_k', 'egt_spread_k', 'egt_hottest_k', 'egt_coldest_k', 'speed_rpm',
+  'fuel_off_s', 'rest_s', 'cooldown_left_s',
   'choke_loss_in_s', 'choke_loss_in_s_low95', 'choke_loss_in_s_high95', 'egt_limit_in_s', 'egt_limit_in_s_low95', 'egt_limit_in_s_high95',
 ] as const;
 export type Quantity = (typeof quantityKeys)[number];
@@ -393,7 +410,7 @@ export type Frame =
   | StatusFrame | MarkFrame | RunFrame | LogFrame | ConfigFrame | CardFrame | CardPointFrame | ChecksFrame | ResetFrame;
 
 /** A line of /api/runs. */
-export interface RunSummary {
+export interface RunSummary extends Partial<Pick<Run, 'designation' | 'test' | 'purpose' | 'aborted'>> {
   id: string;
   number: number;
   rig: string;

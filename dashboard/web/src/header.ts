@@ -137,7 +137,7 @@ export function header(p: HeaderParts): View & { route(name: string): void } {
       text(conditions, bad.length > 0 ? `▲ ${bad.join(' · ')}` : s?.recording ? '● recording' : '');
       attr(conditions, 'title', bad.join(' · ') || null);
       attr(conditions, 'data-bad', bad.length > 0);
-      text(facts, activeRun(m) ? `live run ${m.run?.number} · ${duration(runSeconds(m))} · ${m.run?.engine}` : m.rig ? `no run · ${m.rig.engine_model} ${m.rig.engine_serial}` : '');
+      text(facts, activeRun(m) ? `live run ${m.run?.designation || m.run?.number} · ${duration(runSeconds(m))} · ${m.run?.engine}` : m.rig ? `no run · ${m.rig.engine_model} ${m.rig.engine_serial}` : '');
       text(files, filesText(m));
       attr(files, 'title', filesText(m));
       const who = d.session();

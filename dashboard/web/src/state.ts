@@ -38,6 +38,7 @@ export interface Model {
   log: LogEntry[]; // of the operators, oldest first, the last 500
   config: ConfigState | null;
   life: Life | null;
+  nozzleLife: Life | null;
   card: Card | null;
   checks: Checks | null;
   sparks: Sparks;
@@ -59,7 +60,7 @@ const kept = 500;
 export function newModel(replay = false, names: readonly string[] = columns): Model {
   return {
     replay, rig: null, run: null, channels: [], quantities: [], bands: [], armedAbove: null, scanRate: 20, configHash: '', build: '',
-    point: null, values: {}, valuesAt: -Infinity, valuesTime: NaN, alarms: new Map(), history: [], ledgers: [], status: null, flags: [], log: [], config: null, life: null, card: null, checks: null, sparks: new Sparks(), ring: new Ring(names),
+    point: null, values: {}, valuesAt: -Infinity, valuesTime: NaN, alarms: new Map(), history: [], ledgers: [], status: null, flags: [], log: [], config: null, life: null, nozzleLife: null, card: null, checks: null, sparks: new Sparks(), ring: new Ring(names),
     epoch: 0, n: 0, ticks: 0, frameAt: -Infinity, pointAt: -Infinity, statusAt: -Infinity, hostTime: NaN, newest: NaN, resets: 0,
   };
 }
@@ -137,6 +138,7 @@ function hello(m: Model, f: HelloFrame, now: number): void {
   m.build = f.build;
   m.config = f.config ?? null;
   m.life = f.life ?? null;
+  m.nozzleLife = f.nozzle_life ?? null;
   m.card = f.card ?? null;
   m.checks = f.checks ?? null;
   for (const e of f.log ?? []) enter(m.log, e, kept);

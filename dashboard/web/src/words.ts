@@ -1,6 +1,7 @@
 // How values of an operating point are put into words.
 
 import type { ChannelValue, Num, PointFrame } from './frames';
+import { duration } from './time';
 import { fixed, signed } from './units';
 
 export interface StateLook { shape: string; word: string; marginal: boolean; cause: string }
@@ -55,6 +56,12 @@ export function forecastText(s: Num | undefined, low: Num | undefined, high: Num
   if (typeof s !== 'number') return reason ? reasonWord(reason) : '–';
   const bounds = typeof low !== 'number' ? '' : typeof high === 'number' ? ` (${fixed(low, 0)}–${fixed(high, 0)})` : ` (${fixed(low, 0)} or later)`;
   return `in ${fixed(s, 0)} s${bounds}`;
+}
+
+/** What is left of the cool-down that the rig file asks for; without one how long the rotor rests. */
+export function coolDownText(left: Num | undefined, rest: Num | undefined): string {
+  if (typeof left === 'number') return left > 0 ? `${duration(Math.ceil(left))} left` : 'its time is over';
+  return typeof rest === 'number' ? `at rest for ${duration(rest)}` : 'rotor turns';
 }
 
 /** What stands in for the first source of a value: one note each. */

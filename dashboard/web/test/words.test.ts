@@ -1,7 +1,14 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
-import { findingText, forecastText, standIns, steadyText } from '../src/words';
+import { coolDownText, findingText, forecastText, standIns, steadyText } from '../src/words';
 import { point, t0 } from './samples';
+
+test('the cool-down is counted down, and promises nothing', () => {
+  assert.equal(coolDownText(80.2, null), '0:01:21 left');
+  assert.equal(coolDownText(0, 300), 'its time is over');
+  assert.equal(coolDownText(null, 65), 'at rest for 0:01:05');
+  assert.equal(coolDownText(undefined, null), 'rotor turns');
+});
 
 test('steadiness names its reason, and nothing where it is not told', () => {
   assert.equal(steadyText(point(t0, { steady: true, steady_reason: null })), '● steady');

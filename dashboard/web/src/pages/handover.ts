@@ -46,7 +46,7 @@ export function handoverPage(d: Display): View {
   function sheet(s: Handover): Node[] {
     const facts: [string, string][] = [
       ['Rig', `${s.rig.title} (${s.rig.id})`], ['Engine', `${s.rig.engine_model}, serial ${s.rig.engine_serial}, build ${s.rig.engine_build || '–'}`], ['Nozzle', s.rig.nozzle_serial || '–'],
-      ['As of', dateClock(seconds(s.t))], ['Handed over by', s.by || '–'], ['Run', s.run ? `${s.run.number} (${s.run.id})${s.run.ended ? ', ended' : ', goes on'}` : 'none'],
+      ['As of', dateClock(seconds(s.t))], ['Handed over by', s.by || '–'], ['Run', s.run ? `${s.run.designation || s.run.number} (${s.run.id})${s.run.ended ? ', ended' : ', goes on'}` : 'none'],
       ['Limits', s.limits_version || '–'], ['Files', `${s.config.hash.slice(0, 16)}, ${s.config.approved_by ? `approved by ${s.config.approved_by}` : 'not approved'}${s.config.refused ? `; a change was refused: ${s.config.refused.why}` : ''}`],
     ];
     const sets = checkSets(s.checks);

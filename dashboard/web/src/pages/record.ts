@@ -2,7 +2,7 @@
 // life so far, the operator log and the alarm figures.
 
 import { api } from '../api';
-import { type View, column, h, refill, text } from '../dom';
+import { type View, attr, column, h, refill, text } from '../dom';
 import { degrees, exceedanceWord } from '../exceedance';
 import type { ExceedanceReply, Life, LogEntry, QuantityInfo } from '../frames';
 import { clock, facility, seconds } from '../time';
@@ -24,15 +24,16 @@ const name = (s: string): string => s.replaceAll('_', ' ');
 
 /** Life counters as pairs. */
 export const lifePairs = (l: Life): [string, string][] => [
-  ['Engine', l.engine_serial], ['Hours lit', fixed(l.hours, 1)], ['Starts', String(l.starts)], ['Cycles', String(l.cycles)], ['Hot starts', String(l.hot_starts)], ['Hung starts', String(l.hung_starts)],
+  l.nozzle_serial === undefined ? ['Engine', l.engine_serial ?? '–'] : ['Nozzle', l.nozzle_serial], ['Hours lit', fixed(l.hours, 1)], ['Starts', String(l.starts)], ['Cycles', String(l.cycles)], ['Hot starts', String(l.hot_starts)], ['Hung starts', String(l.hung_starts)],
   ['No light-off', String(l.no_lights)], ['Flame-outs', String(l.flame_outs)],
+  ...(l.aborted_starts === undefined ? [] : [['Aborted starts', String(l.aborted_starts)] as [string, string]]), ...(l.hours_choked === undefined ? [] : [['Hours choked', fixed(l.hours_choked, 2)] as [string, string]]),
 ];
 
 /** The life counters of an engine. */
-export function lifeView(): { el: HTMLElement; show(l: Life | null, u: UnitSet): void } {
+export function lifeView(name_ = 'life'): { el: HTMLElement; show(l: Life | null, u: UnitSet): void } {
   const counts = h('dl', { class: 'facts counts2' });
   const bands = table('life', 'Band', '>Time above', '>Peak', '>Excursions', '>Exceeded');
-  const el = h('div', { 'data-q': 'life' }, counts, bands.el);
+  const el = h('div', { 'data-q': name_ }, counts, bands.el);
   return {
     el,
     show(l, u) {
@@ -50,6 +51,7 @@ export function recordView(run: string, live: () => boolean, units: () => UnitSe
   const exceedances = table('exceedances', 'Band', '>Limit', `>Began, ${facility.sign()}`, '>Ended', '>Time above', '>of it assumed', '>Peak', 'Allowance', 'Time above other bands');
   const events = table('', `>Time, ${facility.sign()}`, 'Engine', '>EGT', '>Speed', '>Rundown');
   const life = lifeView();
+  const nozzle = lifeView('nozzle-life');
   const log = logTable();
   const figures = figuresView(() => ({ run, live: live() }));
   const trouble = h('p', { class: 'trouble', role: 'status' });
@@ -58,7 +60,7 @@ export function recordView(run: string, live: () => boolean, units: () => UnitSe
     h('section', {}, h('h2', {}, 'Excursions above EGT limits'), exceedances.el),
     h('div', { class: 'columns' },
       h('div', {}, h('section', {}, h('h2', {}, 'Operator log'), log.el), h('section', {}, h('h2', {}, 'What the engine did'), events.el)),
-      h('div', {}, h('section', {}, h('h2', {}, 'Life of the engine, with this run'), life.el), h('section', {}, h('h2', {}, 'Alarm figures'), figures.el))));
+      h('div', {}, h('section', {}, h('h2', {}, 'Life of the engine and of the nozzle, with this run'), life.el, nozzle.el), h('section', {}, h('h2', {}, 'Alarm figures'), figures.el))));
   let askedAt = -Infinity;
   let reply: ExceedanceReply | null = null;
   let entries: LogEntry[] = [];
@@ -80,6 +82,8 @@ export function recordView(run: string, live: () => boolean, units: () => UnitSe
       refill(events.body, JSON.stringify(reply?.events) + u.system, () => ((reply?.events ?? []).length === 0 ? none('Nothing on record', 5) : (reply?.events ?? []).map((e) => h('tr', {},
         h('td', { class: 'num' }, clock(seconds(e.t))), h('td', {}, name(e.event)), h('td', { class: 'num' }, degrees(u, e.egt_k)), h('td', { class: 'num' }, e.speed_rpm === null ? '–' : `${fixed(e.speed_rpm, 0)} rpm`), h('td', { class: 'num' }, e.rundown_s === null ? '' : `${fixed(e.rundown_s, 0)} s`)))));
       life.show(reply?.life ?? null, u);
+      attr(nozzle.el, 'hidden', !reply?.nozzle_life);
+      nozzle.show(reply?.nozzle_life ?? null, u);
       log.show(entries, seconds(entries[0]?.t ?? null));
       figures.update(now);
       points.update(now);

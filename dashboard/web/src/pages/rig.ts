@@ -37,7 +37,8 @@ export function rigPage(d: Display): View {
   const budget = budgetView(d);
   const channels = channelsView(d);
   const life = lifeView();
-  const lifeSection = h('section', {}, h('h2', {}, 'Life of the engine, as watched here'), life.el);
+  const nozzle = lifeView('nozzle-life');
+  const lifeSection = h('section', {}, h('h2', {}, 'Life of the engine and of the nozzle, as watched here'), life.el, nozzle.el);
   const cover = veil(h('div', { class: 'page' },
     h('h1', {}, 'Rig'),
     h('div', { class: 'columns' },
@@ -74,7 +75,9 @@ export function rigPage(d: Display): View {
       const list: [string, string][] = [
         ['Rig', m.rig ? `${m.rig.title} (${m.rig.id})` : '–'],
         ['Engine', m.rig ? `${m.rig.engine_model}, serial ${m.rig.engine_serial}, build ${m.rig.engine_build || '–'}` : '–'],
-        ['Nozzle', m.rig?.nozzle_serial || '–'],
+        ['Nozzle', m.rig?.nozzle_serial ? `${m.rig.nozzle_serial}${m.rig.nozzle_measured_on ? `, throat measured on ${m.rig.nozzle_measured_on}` : ''}` : '–'],
+        ...(m.rig?.fuel?.batch ? [['Fuel batch', m.rig.fuel.batch]] as [string, string][] : []),
+        ...(m.rig?.test || m.rig?.purpose ? [['Test', [m.rig.test, m.rig.purpose].filter(Boolean).join(': ')]] as [string, string][] : []),
         ['Limits', m.rig?.limits_version || '–'],
         ['Files, hash', m.configHash.slice(0, 16) || '–'],
         ...(config ? [
@@ -85,13 +88,15 @@ export function rigPage(d: Display): View {
         ['Program build', m.build || '–'],
         ['Scan rate', `${fixed(m.scanRate, 0)} scans/s`],
         ['Rules unknown', s ? String(s.rules_unknown) : '–'],
-        ['Run', on ? `${on.number} (${on.id}), started by ${on.by}` : 'none'],
+        ['Run', on ? `${on.designation || on.number} (${on.id}), started by ${on.by}` : 'none'],
       ];
       refill(facts, JSON.stringify(list), () => list.flatMap(([k, v]) => [h('dt', {}, k), h('dd', {}, v)]));
       const parts = s ? pathParts(s, dataAge(m, now), d.follows) : [];
       refill(path, JSON.stringify(parts), () => parts.map((x) => h('tr', { 'data-bad': x.bad }, h('th', { scope: 'row' }, x.name), h('td', {}, x.bad ? `▲ ${x.said}` : x.said))));
       attr(lifeSection, 'hidden', m.life === null);
       life.show(m.life, u);
+      attr(nozzle.el, 'hidden', m.nozzleLife === null);
+      nozzle.show(m.nozzleLife, u);
       refill(sources, JSON.stringify(s?.sources ?? []), () => (s?.sources ?? []).map((x) => h('tr', { 'data-none': !x.alive },
         h('th', { scope: 'row' }, x.topic), h('td', { class: 'num' }, age(x.age_s)), h('td', { class: 'num' }, String(x.messages)), h('td', { class: 'num' }, x.skew_s === null ? '–' : `${fixed(x.skew_s, 2)} s`), h('td', {}, x.alive ? 'heard' : '▲ silent'))));
       refill(sessions, JSON.stringify(s?.sessions ?? []), () => (s?.sessions ?? []).map((x) => h('tr', { 'data-none': !x.connected }, h('th', { scope: 'row' }, x.filter), h('td', {}, x.connected ? 'connected' : '▲ not connected'))));

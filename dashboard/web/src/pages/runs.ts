@@ -24,7 +24,7 @@ export function runsPage(d: Display): View {
   const trouble = h('p', { class: 'trouble', role: 'status' });
   const find = h('input', { type: 'search', placeholder: 'find by any word (key /)', 'aria-label': 'Find a run', 'aria-keyshortcuts': '/', maxlength: '200', 'data-q': 'find', oninput: () => { askedAt = -Infinity; } });
   const el = h('div', { class: 'page' }, h('h1', {}, 'Runs'), h('div', { class: 'filter' }, h('div', { role: 'search' }, find), compare), trouble,
-    h('table', { class: 'list runs' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started', 'By', '>Duration', '>Alarms', 'State', '>Size', 'Notes and tags', 'Actions'].map(column))), body));
+    h('table', { class: 'list runs' }, h('thead', {}, h('tr', {}, ...['Run', 'Engine', '>Started', 'By', '>Duration', '>Alarms', 'State', '>Size', 'Test, notes, tags', 'Actions'].map(column))), body));
   let askedAt = -Infinity;
   let key = '';
   let growing: { cell: HTMLElement; since: number }[] = [];
@@ -87,10 +87,10 @@ export function runsPage(d: Display): View {
   }
 
   const row = (r: RunSummary): Node => h('tr', { 'data-under': r.parent && list.some((p) => p.id === r.parent) ? r.parent : null },
-    h('th', { scope: 'row' }, r.id, r.title ? h('div', { class: 'extra' }, r.title) : '', r.parent ? h('div', { class: 'extra' }, `reduced again from ${r.parent}${r.reduced_by ? ` by ${r.reduced_by}` : ''}`) : ''),
+    h('th', { scope: 'row' }, r.designation || r.id, r.designation ? h('div', { class: 'extra' }, r.id) : '', r.title ? h('div', { class: 'extra' }, r.title) : '', r.parent ? h('div', { class: 'extra' }, `reduced again from ${r.parent}${r.reduced_by ? ` by ${r.reduced_by}` : ''}`) : ''),
     h('td', {}, r.engine), h('td', { class: 'num' }, dateClock(seconds(r.started))), h('td', {}, r.by), length(r),
-    h('td', { class: 'num' }, String(r.alarms)), h('td', {}, stateWords[r.state] ?? r.state, r.keep ? h('div', { class: 'extra' }, 'keep') : ''),
-    h('td', { class: 'num' }, bytes(r.size_bytes)), h('td', {}, r.notes, r.tags && r.tags.length > 0 ? h('div', { class: 'extra' }, r.tags.join(', ')) : ''),
+    h('td', { class: 'num' }, String(r.alarms)), h('td', {}, stateWords[r.state] ?? r.state, r.aborted ? h('div', { class: 'extra' }, 'start aborted') : '', r.keep ? h('div', { class: 'extra' }, 'keep') : ''),
+    h('td', { class: 'num' }, bytes(r.size_bytes)), h('td', {}, [r.test, r.purpose].filter(Boolean).join(': '), h('div', {}, r.notes), r.tags && r.tags.length > 0 ? h('div', { class: 'extra' }, r.tags.join(', ')) : ''),
     h('td', {}, h('a', { class: 'button', href: `#/run/${encodeURIComponent(r.id)}`, 'data-focus': `replay ${r.id}`, 'aria-label': `Replay run ${r.number}`, 'data-q': 'replay', 'data-state': r.state }, 'Replay'),
       h('label', { class: 'choose' }, h('input', { type: 'checkbox', value: r.id, 'aria-label': `Compare run ${r.id}`, 'data-focus': `compare ${r.id}`, 'data-q': 'compare-choose', onchange: (e: Event) => choose(r.id, (e.target as HTMLInputElement).checked) }), 'compare'),
       h('div', { class: 'asides' }, h('a', { class: 'button small', href: `api/runs/${encodeURIComponent(r.id)}/report`, target: '_blank', rel: 'noopener', 'data-focus': `report ${r.id}`, 'aria-label': `Report of run ${r.number}`, 'data-q': 'report' }, 'Report'),

@@ -5,7 +5,7 @@ import { type View, attr, h, text } from '../dom';
 import { activeRun, believable, runSeconds } from '../state';
 import { duration } from '../time';
 import { fixed, shown, signed, width } from '../units';
-import { forecastText, sourceWord, stateLook, steadyText, uncertainty } from '../words';
+import { coolDownText, forecastText, sourceWord, stateLook, steadyText, uncertainty } from '../words';
 
 function cell(label: string, name: string): { el: HTMLElement; label: HTMLElement; value: HTMLElement; unit: HTMLElement; extra: HTMLElement } {
   const parts = {
@@ -17,9 +17,9 @@ function cell(label: string, name: string): { el: HTMLElement; label: HTMLElemen
   return { ...parts, el: h('div', { class: 'cell' }, parts.label, h('dd', {}, parts.value, ' ', parts.unit, ' ', parts.extra)) };
 }
 
-function note(label: string, name: string): { el: HTMLElement; value: HTMLElement } {
-  const value = h('dd', { 'data-q': name }, '–');
-  return { el: h('div', {}, h('dt', {}, label), value), value };
+function note(title: string, name: string): { el: HTMLElement; label: HTMLElement; value: HTMLElement } {
+  const [label, value] = [h('dt', {}, title), h('dd', { 'data-q': name }, '–')];
+  return { el: h('div', {}, label, value), label, value };
 }
 
 export function numbers(d: Display): View {
@@ -92,8 +92,11 @@ export function numbers(d: Display): View {
       attr(n.value, 'title', words);
     };
     tell(steady, steadyText(p));
-    tell(loss, forecastText(p?.choke_loss_in_s, p?.choke_loss_in_s_low95, p?.choke_loss_in_s_high95, p?.choke_loss_reason));
-    tell(limit, forecastText(p?.egt_limit_in_s, p?.egt_limit_in_s_low95, p?.egt_limit_in_s_high95, p?.egt_limit_reason));
+    const off = p && !p.lit && typeof p.fuel_off_s === 'number' ? p.fuel_off_s : null; // the engine cools: there is nothing to forecast
+    text(loss.label, off === null ? 'Choke loss, forecast' : 'Fuel off for');
+    text(limit.label, off === null ? 'EGT limit, forecast' : 'Cool-down');
+    tell(loss, off !== null ? duration(off) : forecastText(p?.choke_loss_in_s, p?.choke_loss_in_s_low95, p?.choke_loss_in_s_high95, p?.choke_loss_reason));
+    tell(limit, off !== null ? coolDownText(p?.cooldown_left_s, p?.rest_s) : forecastText(p?.egt_limit_in_s, p?.egt_limit_in_s_low95, p?.egt_limit_in_s_high95, p?.egt_limit_reason));
   }
   return { el, update, destroy: () => undefined };
 }
