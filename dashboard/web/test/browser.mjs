@@ -114,6 +114,15 @@ async function shoot(name, { dark = false, picture = '' } = {}) {
   await page.emulateMedia({ colorScheme: 'light' });
 }
 
+/** Puts a bundle of the page's own modules into an empty page. */
+async function bundled(p, entry) {
+  const { output } = await build({ root, configFile: false, logLevel: 'error', publicDir: false, build: { write: false, lib: { entry, formats: ['iife'], name: 'page' } } }).then((r) => (Array.isArray(r) ? r[0] : r));
+  await p.setViewportSize({ width: 1440, height: 900 });
+  await p.goto('about:blank');
+  await p.setContent('<!doctype html><title>benchmark</title>');
+  for (const f of output) await (f.type === 'chunk' ? p.addScriptTag({ content: f.code }) : p.addStyleTag({ content: String(f.source) }));
+}
+
 /**
  * Traces the tasks of a page. What is given back ends it and gives the processor time of the
  * longest task after a mark of that name, ms: other programs on the machine do not add to it.
@@ -324,11 +333,17 @@ try {
     assert.ok(!listed || listed.acknowledged_by === 'M. Alder', `acknowledged by ${listed?.acknowledged_by}`);
   });
 
-  await check('a frozen link greys the page within 3 s and comes back', async () => {
+  await check('a frozen link greys the page within 2 s and comes back', async () => {
+    const greyed = live.evaluate(() => new Promise((done) => {
+      const look = setInterval(() => {
+        if (!document.querySelector('.veiled[data-veiled]')) return;
+        clearInterval(look);
+        done(Date.now());
+      }, 10);
+    }));
     frozen = true;
-    const told = Date.now();
-    await live.locator('.veiled[data-veiled]').waitFor();
-    assert.ok(Date.now() - told < 3500, `after ${Date.now() - told} ms`);
+    const took = -Date.now() + (await greyed);
+    assert.ok(took > 1000 && took < 2300, `after ${took} ms: 2 s, and some for a busy machine`);
     assert.match(await live.locator('.veilwords').innerText(), /NO DATA LINK since \d\d:\d\d:\d\d/);
     assert.equal(await words('margin'), '–', 'no stale margin');
     assert.ok(await q('acknowledge').isDisabled(), 'nothing to press without a link');
@@ -462,6 +477,19 @@ try {
     await until('all again', async () => (await rows()) >= all);
   });
 
+  await check('an alarm of the history is shelved and taken back', async () => {
+    const old = page.locator('.past tr', { hasText: /choke/i }).getByRole('button', { name: /^Shelve/ });
+    await until('one that has returned', async () => (await old.count()) === 1, 30_000);
+    await old.click();
+    await page.locator('[data-q="field-reason"]').fill('bleed test to come');
+    await q('confirm').click();
+    const aside = page.locator('.aside tr', { hasText: 'bleed test to come' });
+    await aside.waitFor();
+    assert.equal(await old.count(), 0, 'it is acted on where it stands now');
+    await aside.getByRole('button', { name: /^Unshelve/ }).click();
+    await aside.waitFor({ state: 'detached' });
+  });
+
   page = live;
   await check('sound is off until armed, and says so', async () => {
     assert.match(await words('sound'), /off/);
@@ -478,9 +506,10 @@ try {
   });
 
   await check('traces are chosen, kept, and a stretch is drawn large', async () => {
-    await q('pick').click();
-    await q('pick-find').fill('oil');
-    await q('pick-channel.p_oil').check();
+    await live.locator('body').press('t');
+    await live.keyboard.type('p_oil');
+    await live.keyboard.press('ArrowDown');
+    await live.keyboard.press(' ');
     await q('pick-find').fill('spread');
     await q('pick-egt_spread_k').check();
     await until('two plots more', async () => (await live.locator('.tracerow').count()) === 7);
@@ -517,6 +546,20 @@ try {
     await shoot('watch-zoom');
     await q('trace-reset').click();
     await until('as before', async () => !(await q('trace-reset').isVisible()));
+    await live.mouse.move(5, 400);
+    const said = () => live.locator('.tracebar .at').innerText();
+    await q('plots').focus();
+    await live.keyboard.press('+');
+    await until('zoomed by key', async () => (await said()) === 'ZOOMED to 60.0 s');
+    await live.keyboard.press('Shift+ArrowLeft');
+    await until('a cursor by key', async () => /^at [\d:]+ /.test(await said()));
+    const cursor = await said();
+    await live.keyboard.press('ArrowLeft');
+    await until('moved by key', async () => /^at [\d:]+ /.test(await said()) && (await said()) !== cursor, 3000).catch(() => undefined); // a gap has no value under the cursor
+    await live.keyboard.press('0');
+    await until('whole by key', async () => !(await q('trace-reset').isVisible()));
+    await q('units').focus(); // the cursor goes with the focus
+    await until('no cursor', async () => /shaded: choked/.test(await said()));
     await q('units').selectOption('us');
     await until('psi', async () => /p_oil psi/.test(await row.locator('.keytitle').innerText()));
     await q('units').selectOption('si');
@@ -599,7 +642,7 @@ try {
       await q('budget-of').selectOption('mass_flow_kg_s');
       await until('a budget of the flow', async () => /variance of the nozzle flow/.test(await page.locator('.page').innerText()) && /throat area|discharge/.test(await words('budget')));
       await q('budget-of').selectOption('choke_margin_percent');
-      assert.match(await words('path'), /Broker.*probe message returns.*Archive.*recording.*Clock/s);
+      assert.match(await words('path'), /Broker.*probe message returns.*Archive.*recording.*Site database\s*none is set up.*Webhook\s*none is set up.*Clock/s);
       assert.ok((await page.locator('.channels tbody tr').count()) > 20);
       assert.match(await words('p-choked'), /%$/);
       await until('a budget of the margin', async () => /choke npr|pressure/.test(await words('budget')));
@@ -748,6 +791,30 @@ try {
     await until('open', async () => /of 0:0\d/.test(await words('replay-clock')));
   });
 
+  await check('US units leave no SI unit on any page', async () => {
+    const run = page.url().split('/').at(-1);
+    const pair = (await json('api/runs')).filter((r) => r.state === 'ended').slice(0, 2).map((r) => r.id);
+    await q('units').selectOption('us');
+    for (const [name, ready] of [['watch', '.bands td'], ['rig', '.channels tbody tr'], ['checks', '.halves h2'], ['card', '.cardpoints'], [`compare/${pair.join('/')}`, '.overlay canvas'], [`run/${run}`, '[data-q="margin"]']]) {
+      await page.goto(`${server}#/${name}`);
+      await page.locator(ready).first().waitFor();
+      if (name.startsWith('run/')) {
+        await q('show-record').click();
+        await q('point-open').first().click();
+      }
+      await page.waitForTimeout(400);
+      // What the rules say stands as it was recorded.
+      const left = await page.evaluate(() => {
+        const copy = document.querySelector('main').cloneNode(true);
+        for (const e of copy.querySelectorAll('.alarmline, .what, .log, option, [data-q="config"]')) e.remove();
+        return copy.textContent.match(/.{0,30}(kPa|hPa|kg\/s|kN\b|°C|\d K\b|cm²|m\/s\b).{0,10}/g) ?? [];
+      });
+      assert.deepEqual(left, [], name);
+    }
+    await q('show-display').click();
+    await q('units').selectOption('si');
+  });
+
   await check('what stands in for a lost rake and exit plane is named beside the point', async () => {
     await q('scrub').fill('140');
     await until('none before', async () => (await words('replay-clock')).startsWith('0:02:20') && !/wall static/.test(await words('plane-notes')));
@@ -847,10 +914,7 @@ try {
   await daemon.end();
 
   await check('12 traces of 10 min at 20 scans/s are drawn at least 15 times a second', async () => {
-    const { output } = await build({ root, configFile: false, logLevel: 'error', publicDir: false, build: { write: false, lib: { entry: 'test/bench.ts', formats: ['iife'], name: 'page' } } }).then((r) => (Array.isArray(r) ? r[0] : r));
-    await live.setViewportSize({ width: 1440, height: 900 });
-    await live.setContent('<!doctype html><title>benchmark</title>');
-    for (const f of output) await (f.type === 'chunk' ? live.addScriptTag({ content: f.code }) : live.addStyleTag({ content: String(f.source) }));
+    await bundled(live, 'test/bench.ts');
     const bench = async () => {
       const stop = await traced(live);
       return { ...await live.evaluate(() => window.bench(4)), busiest: await stop('bench') };
@@ -863,6 +927,25 @@ try {
     console.log(`     ${r.charts} charts, ${r.rows} scans: ${r.drawsPerSecond.toFixed(1)} draws/s, longest task ${r.longestTask === 0 ? 'under 50' : r.longestTask.toFixed(0)} ms, of the processor's time ${r.busiest.toFixed(1)} ms`);
     assert.ok(r.busiest > 0 && r.busiest < 50, `a task of ${r.busiest} ms`);
     assert.ok(r.rows >= 12_000 && r.drawsPerSecond >= 15, JSON.stringify(r));
+  });
+
+  await check('an hour of frames leaves the heap as it was', async () => {
+    await bundled(live, 'test/hour.ts');
+    const client = await context.newCDPSession(live);
+    const used = async () => {
+      await client.send('HeapProfiler.collectGarbage');
+      return (await client.send('Runtime.getHeapUsage')).usedSize;
+    };
+    const heap = [];
+    let frames = 0;
+    for (const minutes of [20, 20, 20]) { // the lists and the ring are full after the first
+      frames += await live.evaluate((m) => window.play(m), minutes);
+      heap.push(await used());
+    }
+    await client.detach();
+    const [first, , last] = heap;
+    console.log(`     ${frames} frames; heap after 20, 40, 60 min: ${heap.map((b) => (b / 1e6).toFixed(1)).join(', ')} MB`);
+    assert.ok(frames > 120_000 && last < first * 1.05 + 500_000, `${heap.join(', ')} bytes`);
   });
 
   await check('no fault in the console, nothing loaded from outside', () => {

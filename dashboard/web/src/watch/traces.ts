@@ -41,7 +41,7 @@ export interface Traces extends View {
 
 /** `tools` stand at the end of the bar; `make` gives the plots. */
 export function traces(d: Display, tools: HTMLElement | null, make: (d: Display) => Plot[] = chosenPlots): Traces {
-  const host = h('div', { class: 'plots', tabindex: '0', role: 'group', 'aria-label': `Traces: ${zoomHelp}; with shift the arrow keys move the cursor`, 'data-q': 'plots', onkeydown: (e: Event) => onKey(e as KeyboardEvent) });
+  const host = h('div', { class: 'plots', tabindex: '0', role: 'group', 'aria-label': `Traces: ${zoomHelp}; with shift the arrow keys move the cursor`, 'data-q': 'plots', onkeydown: (e: Event) => onKey(e as KeyboardEvent), onblur: () => rows[0]?.chart.setCursor({ left: -10, top: -10 }) });
   const at = h('span', { class: 'at' });
   let span = 120;
   let frozenAt = NaN;
