@@ -508,6 +508,7 @@ try {
   await check('traces are chosen, kept, and a stretch is drawn large', async () => {
     await live.locator('body').press('t');
     await live.keyboard.type('p_oil');
+    await until('found', async () => (await live.locator('.picklist input').count()) === 1);
     await live.keyboard.press('ArrowDown');
     await live.keyboard.press(' ');
     await q('pick-find').fill('spread');
@@ -806,7 +807,7 @@ try {
       // What the rules say stands as it was recorded.
       const left = await page.evaluate(() => {
         const copy = document.querySelector('main').cloneNode(true);
-        for (const e of copy.querySelectorAll('.alarmline, .what, .log, option, [data-q="config"]')) e.remove();
+        for (const e of copy.querySelectorAll('.alarmline, .what, .log, option, [data-q="config"], [data-q="alarm-changes"]')) e.remove();
         return copy.textContent.match(/.{0,30}(kPa|hPa|kg\/s|kN\b|°C|\d K\b|cm²|m\/s\b).{0,10}/g) ?? [];
       });
       assert.deepEqual(left, [], name);
