@@ -732,6 +732,12 @@ try {
     await shoot('runs-found');
     await q('replay').click();
     await q('show-record').click();
+    const parquet = page.waitForEvent('download');
+    await q('export').click(); // operating points as Parquet, if nothing else is chosen
+    const points = await parquet;
+    assert.match(points.suggestedFilename(), /operating-points.*\.parquet$/);
+    assert.equal(readFileSync(await points.path()).subarray(0, 4).toString(), 'PAR1');
+    await until('saved', async () => /\.parquet, .* is saved/.test(await words('export-told')));
     await q('export-what').selectOption('events');
     await q('export-format').selectOption('csv');
     const saved = page.waitForEvent('download');
