@@ -89,6 +89,7 @@ export function askForm(title: string, fields: readonly Field[], action: string,
       send(Object.fromEntries(controls.map((c) => [c.input.name, c.input.value.trim()]))).then(() => dialog.close('sent'), (why: Error) => {
         text(trouble, `Not done: ${why.message}`);
         attr(yes, 'disabled', false);
+        yes.focus(); // a button that is disabled loses it, and with it the keys
       });
     },
   }, h('p', { id: 'question' }, title), ...controls.map((c) => c.el), trouble, h('div', { class: 'answers' }, no, yes));

@@ -5,9 +5,9 @@ import { askForm } from './ask';
 import type { Display } from './context';
 import type { Card } from './frames';
 
-/** Sends a step of the card; asks for a reason where one is needed. */
-export function step(d: Display, name: CardStep, e: { point?: number; number?: number }, question: string, action: string): void {
-  askForm(question, [{ name: 'reason', label: 'Reason' }], action, async (v) => { await api.cardStep(d.rig, name, { ...e, reason: v['reason'] ?? '' }, d.operator()); });
+/** Asks for the reason of a step of the card and sends it. */
+export function step(d: Display, name: CardStep, e: { point?: number; number?: number }, question: string, action: string, optional = false): void {
+  askForm(question, [{ name: 'reason', label: 'Reason', optional }], action, async (v) => { await api.cardStep(d.rig, name, { ...e, reason: v['reason'] ?? '' }, d.operator()); });
 }
 
 /** Takes the current point; one that is not stabilised only with a reason. */

@@ -67,7 +67,7 @@ export function cardPage(d: Display): View {
       const word = progress?.status === 'skipped' ? `skipped by ${progress.by}: ${progress.reason}` : [progress?.status, (progress?.numbers ?? []).length > 0 ? `no. ${(progress?.numbers ?? []).join(', ')}` : ''].filter(Boolean).join(', ');
       const acts = here
         ? [button('take', c.now?.stabilised ? 'Take' : 'Take…', `take ${i}`, p.name, pressTake(c)), button('skip', 'Skip…', `skip ${i}`, p.name, () => step(d, 'skip', { point: i + 1 }, `Skip “${p.name}”?`, 'Skip'))]
-        : [button('go-to', 'Go to…', `go ${i}`, p.name, () => step(d, 'go-to', { point: i + 1 }, `Go to “${p.name}”: it is the next to be taken.`, 'Go to'))];
+        : [button('go-to', 'Go to…', `go ${i}`, p.name, () => step(d, 'go-to', { point: i + 1 }, `Go to “${p.name}”: it is the next to be taken.`, 'Go to', true))];
       return targets.map((t, k) => {
         const at = t ? distance(t, here ? c.now?.targets?.[k] : undefined, u) : { value: '', off: '' };
         return h('tr', { 'data-here': here, 'data-first': k === 0, 'aria-current': here && k === 0 ? 'step' : null },
@@ -88,7 +88,7 @@ export function cardPage(d: Display): View {
       ...quantities.map((t) => h('td', { class: 'num' }, brief(p, t.quantity, d.units()))),
       h('td', {}, p.status), h('td', {}, [p.by, p.judged_by && p.judged_by !== p.by ? `judged by ${p.judged_by}` : ''].filter(Boolean).join(', '), p.reason ? h('div', { class: 'extra' }, p.reason) : ''),
       h('td', {}, h('div', { class: 'asides' },
-        p.status !== 'accepted' ? button('accept', 'Accept…', `accept ${p.number}`, `point ${p.number}`, () => step(d, 'accept', { number: p.number }, `Accept point ${p.number}, “${p.name}”.`, 'Accept')) : '',
+        p.status !== 'accepted' ? button('accept', 'Accept…', `accept ${p.number}`, `point ${p.number}`, () => step(d, 'accept', { number: p.number }, `Accept point ${p.number}, “${p.name}”.`, 'Accept', true)) : '',
         p.status !== 'rejected' ? button('reject', 'Reject…', `reject ${p.number}`, `point ${p.number}`, () => step(d, 'reject', { number: p.number }, `Reject point ${p.number}, “${p.name}”: the card goes back to it, and its number is not given again.`, 'Reject')) : ''))),
     ...((p.doubts ?? []).length > 0 ? [h('tr', { class: 'doubts' }, h('td', { colspan: String(width) }, `▲ doubtful: ${(p.doubts ?? []).join('; ')}`))] : [])];
   };
