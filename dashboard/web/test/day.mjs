@@ -145,7 +145,7 @@ try {
     await go('card');
     const last = (await taken()).at(-1).number;
     const deed = i === 1 && !rejected ? 'reject' : 'accept';
-    await page.getByRole('button', { name: new RegExp(`^${deed} .*point ${last}$`, 'i') }).click();
+    await page.getByRole('button', { name: new RegExp(`^${deed}… point ${last}$`, 'i') }).click();
     if (deed === 'reject') {
       await confirm('bleed valve was open');
       rejected = true;
