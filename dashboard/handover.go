@@ -25,10 +25,11 @@ type Handover struct {
 		OutOfService []rules.Alarm `json:"out_of_service"`
 		Suppressed   []rules.Alarm `json:"suppressed"` // by design
 	} `json:"alarms"`
-	Card          *OpenCard        `json:"card"`
-	LimitsVersion string           `json:"limits_version"`
-	Config        pipeline.InForce `json:"config"`
-	Notes         []pipeline.Entry `json:"notes"` // of the run, or of the time since the last one
+	Card          *OpenCard           `json:"card"`
+	Checks        pipeline.ChecksView `json:"checks"`
+	LimitsVersion string              `json:"limits_version"`
+	Config        pipeline.InForce    `json:"config"`
+	Notes         []pipeline.Entry    `json:"notes"` // of the run, or of the time since the last one
 }
 
 // OpenCard is what is left to be done of a test card.
@@ -64,7 +65,7 @@ func (s *Server) handover(w http.ResponseWriter, r *http.Request) error {
 }
 
 func handoverOf(cfg *pipeline.Config, m *pipeline.Machine, st *pipeline.State, by string) Handover {
-	h := Handover{T: rules.Time(st.Host), By: by, Rig: cfg.Rig, Card: openCard(&st.Card), LimitsVersion: cfg.Rig.LimitsVersion, Config: st.InForce, Notes: []pipeline.Entry{}}
+	h := Handover{T: rules.Time(st.Host), By: by, Rig: cfg.Rig, Card: openCard(&st.Card), Checks: m.Checks(st), LimitsVersion: cfg.Rig.LimitsVersion, Config: st.InForce, Notes: []pipeline.Entry{}}
 	a := &h.Alarms
 	a.Standing, a.Shelved, a.OutOfService, a.Suppressed = []rules.Alarm{}, []rules.Alarm{}, []rules.Alarm{}, []rules.Alarm{}
 	for _, one := range m.Alarms(st) {

@@ -36,10 +36,11 @@ func checkCommand(args []string, stdout, stderr io.Writer) int {
 	flags := pflag.NewFlagSet("check", pflag.ContinueOnError)
 	flags.SetOutput(stderr)
 	flags.Usage = func() {
-		say(stderr, "throatwatch check RIG.yaml [--json | --default-rules]\n\nPrints every fault of a rig file and its rule files at once, or what they say.\n"+checkClosing+"\n\n"+flags.FlagUsages())
+		say(stderr, "throatwatch check RIG.yaml [--card CARD.yaml] [--json | --default-rules]\n\nPrints every fault of a rig file and its rule files at once, or what they say.\n"+checkClosing+"\n\n"+flags.FlagUsages())
 	}
 	asJSON := flags.Bool("json", false, "print one JSON object, values in SI")
 	on := flags.String("on", time.Now().Format(time.DateOnly), "the day on which calibrations must be in date")
+	cards := flags.StringArray("card", nil, "a test card to be checked for this rig too; may be given more than once")
 	asRules := flags.Bool("default-rules", false, "print the default rules of the rig, to begin a rule file from")
 	if err := flags.Parse(args); err != nil {
 		if errors.Is(err, pflag.ErrHelp) {
@@ -59,6 +60,12 @@ func checkCommand(args []string, stdout, stderr io.Writer) int {
 		return 2
 	}
 	bundle.Warnings = append(bundle.Warnings, config.Expired(flags.Arg(0), &cfg, day.UnixNano())...)
+	if len(faults) == 0 { // a card is of a rig
+		for _, name := range *cards {
+			_, _, more := config.LoadCard(name, &cfg)
+			faults = append(faults, more...)
+		}
+	}
 	var out strings.Builder
 	switch {
 	case *asRules && len(faults) == 0:

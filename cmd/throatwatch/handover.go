@@ -10,6 +10,7 @@ import (
 	"time"
 
 	"throatwatch/dashboard"
+	"throatwatch/monitor/check"
 	"throatwatch/rules"
 )
 
@@ -56,7 +57,7 @@ func printHandover(w io.Writer, h *dashboard.Handover) {
 	if h.Run == nil {
 		line("Run      none is on")
 	} else {
-		line("Run      %s, since %s", h.Run.ID, h.Run.Started)
+		line("Run      %s", h.Run.ID)
 	}
 	approval := "not approved"
 	if h.Config.ApprovedBy != "" {
@@ -77,6 +78,13 @@ func printHandover(w io.Writer, h *dashboard.Handover) {
 		}
 	}
 	line("\nTest card: %s", cardLeft(h.Card))
+	line("")
+	for _, c := range []struct {
+		name string
+		is   *check.Result
+	}{{"Checks before the run", h.Checks.Before}, {"Checks after the run", h.Checks.After}} {
+		line("%s: %s", c.name, checked(c.is, zone))
+	}
 	line("\nNotes: %s", counted(len(h.Notes)))
 	for i := range h.Notes {
 		e := &h.Notes[i]
@@ -90,6 +98,20 @@ func counted(n int) string {
 		return "none"
 	}
 	return strconv.Itoa(n)
+}
+
+// checked says how a check of the data system ended, with what did not pass.
+func checked(c *check.Result, zone *time.Location) string {
+	if c == nil {
+		return "none was made"
+	}
+	text := phrase(stamp(c.Ended, zone), "by "+oneLine(c.By), strings.ReplaceAll(c.State, "_", " ")) + ". " + c.Summary
+	for i := range c.Items {
+		if it := &c.Items[i]; !it.Passed {
+			text += "\n  " + oneLine(it.Title+": "+it.Text)
+		}
+	}
+	return text
 }
 
 // aside says who put an alarm aside, why and until when.

@@ -86,6 +86,7 @@ type data struct {
 	scans  *scans
 	events *happenings
 	points points.Table
+	card   points.Card
 	clock  clock
 }
 
@@ -135,6 +136,9 @@ func (s *Source) read(ctx context.Context) (*data, error) {
 		}
 	}
 	if d.scans, err = gather(ctx, s.File, s.Run.Started, d.to, cfg.Align.Period, tell); err != nil {
+		return nil, err
+	}
+	if d.card, err = points.ReadCard(ctx, s.File, &s.Run); err != nil {
 		return nil, err
 	}
 	d.points, err = points.Read(ctx, s.File, &s.Run, s.Parse, points.Options{})

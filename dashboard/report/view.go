@@ -40,6 +40,8 @@ type view struct {
 	Timeline             table
 	Figures              []figure
 	PointsHow            string
+	CardHead             string // "" without a test card
+	Card, Taken          table
 	Points               table
 	Details              []table
 	Left                 []string
@@ -202,6 +204,7 @@ func (d *data) view() (*view, error) {
 	v.Faults, v.Out, v.Gaps = d.faults(), d.outs(), d.gaps()
 	v.Timeline = d.timeline()
 	v.Points, v.Details = d.overview(), d.details()
+	v.CardHead, v.Card, v.Taken = d.cardHead(), d.cardPoints(), d.cardTaken()
 	v.Exceedances, v.Life, v.NozzleLife = d.exceedances(), d.life(), d.lifeOfNozzle()
 	v.Alarms = d.alarms()
 	figs, sources := alarmFigures(&d.Figures, d.short)

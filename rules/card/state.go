@@ -223,6 +223,7 @@ func (s *State) Take(from int64, by, reason string) error {
 }
 
 func (s *State) begin(from int64, by string, auto bool, doubts []string) {
+	s.Now.Averaging, s.Now.AveragingLeft = true, s.Points[s.At].Average
 	s.Average = Averaging{On: true, From: from, To: from + ns(s.Points[s.At].Average), Auto: auto, By: by, Doubts: doubts}
 }
 

@@ -112,16 +112,16 @@ func (d *planned) measure(pt *Point, now *Now, in *Input) int {
 		if src.channel >= 0 {
 			v = in.Scan.Value[src.channel]
 		}
-		n := TargetNow{Value: known(v)}
+		n := TargetNow{Value: monitor.ReadingOf(v)}
 		if n.Value.Known {
 			n.Inside = (!tg.Low.Known || v >= tg.Low.V) && (!tg.High.Known || v <= tg.High.V)
 			switch {
 			case tg.Value.Known:
-				n.Off, n.OffTol = known(v-tg.Value.V), known((v-tg.Value.V)/tg.Tolerance.V)
+				n.Off, n.OffTol = monitor.ReadingOf(v-tg.Value.V), monitor.ReadingOf((v-tg.Value.V)/tg.Tolerance.V)
 			case !tg.High.Known || tg.Low.Known && math.Abs(v-tg.Low.V) <= math.Abs(v-tg.High.V):
-				n.Off = known(v - tg.Low.V)
+				n.Off = monitor.ReadingOf(v - tg.Low.V)
 			default:
-				n.Off = known(v - tg.High.V)
+				n.Off = monitor.ReadingOf(v - tg.High.V)
 			}
 		}
 		now.Targets[i] = n
@@ -207,7 +207,7 @@ func (n *Now) why(pt *Point, in *Input, off, bad int) {
 	case in.Point.NotSteady != monitor.NoReason && in.Point.NotSteady != monitor.ReasonNotConfigured:
 		n.Why, n.Steady = Unsteady, in.Point.NotSteady.String()
 		if in.Point.NotSteady != monitor.ReasonPhase && in.Unsteady < monitor.NumQuantities {
-			n.Quantity, n.Slope = in.Unsteady.Info().Name, known(in.Slope)
+			n.Quantity, n.Slope = in.Unsteady.Info().Name, monitor.ReadingOf(in.Slope)
 		}
 	default:
 		n.Why = Stabilised
@@ -288,11 +288,4 @@ func (n *TargetNow) words(tg *Target) string {
 	}
 	text := fmt.Sprintf("%s %s, off by %s", strconv.FormatFloat(n.Value.V, 'g', 6, 64), tg.Unit, strconv.FormatFloat(n.Off.V, 'g', 3, 64))
 	return strings.ReplaceAll(text, " ,", ",")
-}
-
-func known(v float64) rules.Reading {
-	if math.IsNaN(v) || math.IsInf(v, 0) {
-		return rules.Reading{}
-	}
-	return rules.Reading{V: v, Known: true}
 }

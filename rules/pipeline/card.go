@@ -3,7 +3,6 @@ package pipeline
 import (
 	"errors"
 	"fmt"
-	"math"
 	"slices"
 	"strings"
 
@@ -163,12 +162,7 @@ func (m *Machine) pointDoubts(s *State, tp *TestPoint) (list []string) {
 }
 
 func cardValue(q monitor.Quantity, v *steady.Value) card.Value {
-	known := func(x float64) rules.Reading {
-		if math.IsNaN(x) || math.IsInf(x, 0) {
-			return rules.Reading{}
-		}
-		return rules.Reading{V: x, Known: true}
-	}
+	known := monitor.ReadingOf
 	info := q.Info()
 	return card.Value{
 		Name: info.Name, Unit: info.Unit, Value: known(v.Mean), TypeA: known(v.TypeA.U), TypeB: known(v.TypeB.U),
