@@ -6,6 +6,7 @@ import (
 	"net/http"
 	"time"
 
+	"throatwatch/monitor/calib"
 	"throatwatch/rules"
 	"throatwatch/rules/alarm"
 	"throatwatch/rules/card"
@@ -25,11 +26,39 @@ type Handover struct {
 		OutOfService []rules.Alarm `json:"out_of_service"`
 		Suppressed   []rules.Alarm `json:"suppressed"` // by design
 	} `json:"alarms"`
+	Waivers       []Waiver            `json:"waivers"`
 	Card          *OpenCard           `json:"card"`
 	Checks        pipeline.ChecksView `json:"checks"`
 	LimitsVersion string              `json:"limits_version"`
 	Config        pipeline.InForce    `json:"config"`
 	Notes         []pipeline.Entry    `json:"notes"` // of the run, or of the time since the last one
+}
+
+// Waiver is a sensor whose calibration has expired, with who answers for it.
+type Waiver struct {
+	Channel string `json:"channel"`
+	Serial  string `json:"serial"`
+	Due     string `json:"due"`
+	State   string `json:"state"` // waived, or expired: nobody answers for it
+	Who     string `json:"who"`
+	Why     string `json:"why"`
+	Until   string `json:"until"`
+}
+
+// waivers lists the sensors whose calibration has expired at host time t, ns.
+func waivers(cfg *pipeline.Config, t int64) []Waiver {
+	list := []Waiver{}
+	for i := range cfg.Compute.Channels {
+		c := &cfg.Compute.Channels[i]
+		if state := c.Record.State(t); state == calib.Waived || state == calib.Expired {
+			w := Waiver{Channel: c.ID, Serial: c.Record.Serial, Due: c.Record.Due, State: state.String()}
+			if state == calib.Waived {
+				w.Who, w.Why, w.Until = c.Record.Waiver.Who, c.Record.Waiver.Why, c.Record.Waiver.Until
+			}
+			list = append(list, w)
+		}
+	}
+	return list
 }
 
 // OpenCard is what is left to be done of a test card.
@@ -65,17 +94,16 @@ func (s *Server) handover(w http.ResponseWriter, r *http.Request) error {
 }
 
 func handoverOf(cfg *pipeline.Config, m *pipeline.Machine, st *pipeline.State, by string) Handover {
-	h := Handover{T: rules.Time(st.Host), By: by, Rig: cfg.Rig, Card: openCard(&st.Card), Checks: m.Checks(st), LimitsVersion: cfg.Rig.LimitsVersion, Config: st.InForce, Notes: []pipeline.Entry{}}
+	h := Handover{T: rules.Time(st.Host), By: by, Rig: cfg.Rig, Waivers: waivers(cfg, st.Host), Card: openCard(&st.Card), Checks: m.Checks(st), LimitsVersion: cfg.Rig.LimitsVersion, Config: st.InForce, Notes: []pipeline.Entry{}}
 	a := &h.Alarms
 	a.Standing, a.Shelved, a.OutOfService, a.Suppressed = []rules.Alarm{}, []rules.Alarm{}, []rules.Alarm{}, []rules.Alarm{}
 	for _, one := range m.Alarms(st) {
 		to := &a.Standing
-		switch state := alarm.State(one.State); { // what is not aside stands
-		case state == alarm.Shelved:
+		if state := alarm.State(one.State); state == alarm.Shelved {
 			to = &a.Shelved
-		case state == alarm.OutOfService:
+		} else if state == alarm.OutOfService {
 			to = &a.OutOfService
-		case state == alarm.SuppressedByDesign:
+		} else if state == alarm.SuppressedByDesign {
 			to = &a.Suppressed
 		}
 		*to = append(*to, one)

@@ -77,6 +77,14 @@ func printHandover(w io.Writer, h *dashboard.Handover) {
 			line("  %-8s  %s, %s%s", a.Priority, oneLine(a.Title), strings.ReplaceAll(a.State.String(), "_", " "), aside(a, zone))
 		}
 	}
+	line("\nCalibrations expired: %s", counted(len(h.Waivers)))
+	for _, v := range h.Waivers {
+		answers := "nobody answers for it"
+		if v.Who != "" {
+			answers = phrase("waived by "+oneLine(v.Who), oneLine(v.Why), named("until ", v.Until))
+		}
+		line("  %s", phrase(v.Channel, named("sensor ", v.Serial), "due "+v.Due, answers))
+	}
 	line("\nTest card: %s", cardLeft(h.Card))
 	line("")
 	for _, c := range []struct {
@@ -105,13 +113,13 @@ func checked(c *check.Result, zone *time.Location) string {
 	if c == nil {
 		return "none was made"
 	}
-	text := phrase(stamp(c.Ended, zone), "by "+oneLine(c.By), strings.ReplaceAll(c.State, "_", " ")) + ". " + c.Summary
+	lines := []string{phrase(stamp(c.Ended, zone), "by "+oneLine(c.By), strings.ReplaceAll(c.State, "_", " ")) + ". " + c.Summary}
 	for i := range c.Items {
 		if it := &c.Items[i]; !it.Passed {
-			text += "\n  " + oneLine(it.Title+": "+it.Text)
+			lines = append(lines, "  "+oneLine(it.Title+": "+it.Text))
 		}
 	}
-	return text
+	return strings.Join(lines, "\n")
 }
 
 // aside says who put an alarm aside, why and until when.

@@ -191,8 +191,7 @@ func (d *Digest) Add(o *Outcome) {
 	b = binary.LittleEndian.AppendUint64(b, o.Epoch)
 	b = binary.LittleEndian.AppendUint64(b, o.N)
 	b = binary.LittleEndian.AppendUint64(b, uint64(o.T))
-	switch {
-	case o.Kind == OutcomePoint:
+	if o.Kind == OutcomePoint {
 		p := o.Point
 		for _, v := range p.V {
 			b = binary.LittleEndian.AppendUint64(b, math.Float64bits(v))
@@ -210,9 +209,9 @@ func (d *Digest) Add(o *Outcome) {
 			b = append(b, byte(c.Kind), byte(c.Quality))
 			b = binary.LittleEndian.AppendUint32(b, uint32(c.Channel))
 		}
-	case o.Kind == OutcomeCardPoint:
+	} else if o.Taken != nil {
 		b = appendJSON(b, o.Taken)
-	default:
+	} else {
 		b = appendJSON(b, o.Alarm)
 	}
 	d.buf = b
