@@ -14,6 +14,7 @@ import (
 	"os"
 	"path/filepath"
 	"slices"
+	"strings"
 	"time"
 
 	"github.com/spf13/pflag"
@@ -92,8 +93,10 @@ func (d *doctor) broker(ctx context.Context) {
 			return
 		}
 		c.Username, c.Password, c.TLS = site.Username, site.Password, site.TLS
-		if u, err := url.Parse(c.URL); err == nil && u.Scheme == "mqtts" {
-			d.far(ctx, "broker's certificate", u, "8883", c.TLS)
+		for _, node := range strings.Split(c.URL, ",") {
+			if u, err := url.Parse(strings.TrimSpace(node)); err == nil && u.Scheme == "mqtts" {
+				d.far(ctx, "broker's certificate", u, "8883", c.TLS)
+			}
 		}
 	}
 	t, err := tryBroker(ctx, c)

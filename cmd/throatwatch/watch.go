@@ -77,7 +77,7 @@ func (o *watchOptions) flags(fs *pflag.FlagSet) {
 	fs.StringVar(&o.listen, "listen", "127.0.0.1:8189", "address of the page and the HTTP interface")
 	fs.StringVar(&o.data, "data", "data", "folder for runs, catalogue and broker store")
 	fs.StringVar(&o.brokerListen, "broker-listen", "127.0.0.1:1883", "address of the embedded broker; port 0 takes a free one")
-	o.broker.flags(fs, "", "site broker instead of the embedded one, mqtt://host:port or mqtts://host:port")
+	o.broker.flags(fs, "", "site broker instead of the embedded one, mqtt://host:port or mqtts://host:port; the nodes of a cluster separated by commas")
 	fs.BoolVar(&o.remote, "allow-remote", false, "let --listen be reached from other machines without TLS and users, and --broker-listen without passwords")
 	o.guard.flags(fs)
 	fs.StringVar(&o.card, "card", "", "test card to load at the start; `throatwatch card load` does so later")

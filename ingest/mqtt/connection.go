@@ -51,8 +51,10 @@ func (s *session) connect(ctx context.Context, conn *connection) (resumed bool, 
 	cfg := &s.client.cfg
 	ctx, cancel := context.WithTimeout(ctx, connectTimeout)
 	defer cancel()
+	address := s.client.addresses[s.node]
+	s.node = (s.node + 1) % len(s.client.addresses) // whatever becomes of it: a node that is lost may not even refuse
 	opts := paho.NewClientOptions().
-		AddBroker("tcp://" + s.client.address).
+		AddBroker("tcp://" + address).
 		SetClientID(s.id).
 		SetUsername(cfg.Username).
 		SetPassword(cfg.Password).
@@ -73,7 +75,7 @@ func (s *session) connect(ctx context.Context, conn *connection) (resumed bool, 
 		SetDefaultPublishHandler(func(_ paho.Client, m paho.Message) { s.receive(conn, m) }).
 		SetConnectionLostHandler(func(_ paho.Client, err error) { conn.lost <- err }).
 		SetCustomOpenConnectionFn(func(*url.URL, paho.ClientOptions) (net.Conn, error) {
-			c, err := dial(ctx, s.client.address, cfg.TLS)
+			c, err := dial(ctx, address, cfg.TLS)
 			if err != nil {
 				return nil, err // not a nil *socket in the interface
 			}
@@ -122,6 +124,10 @@ func dial(ctx context.Context, address string, cfg *tls.Config) (*socket, error)
 		return nil, err
 	}
 	if cfg != nil {
+		if cfg.ServerName == "" {
+			cfg = cfg.Clone()
+			cfg.ServerName, _, _ = net.SplitHostPort(address) // it was joined by us
+		}
 		secure := tls.Client(c, cfg)
 		if err := secure.HandshakeContext(ctx); err != nil {
 			return nil, errors.Join(err, c.Close())

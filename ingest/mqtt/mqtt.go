@@ -29,6 +29,7 @@ import (
 	"net"
 	"net/url"
 	"slices"
+	"strings"
 	"sync"
 	"sync/atomic"
 	"time"
@@ -78,7 +79,9 @@ type Will struct {
 
 // Config sets a Client up. URL, Dir and Filters are required.
 type Config struct {
-	URL      string   // mqtt://host:port, or mqtts://host:port for TLS
+	// URL is mqtt://host:port, or mqtts://host:port for TLS; several, separated by
+	// commas, are the nodes of one cluster: each connection is made to the next.
+	URL      string
 	Dir      string   // data directory; keeps the client id
 	Filters  []string // one session each; they must not overlap
 	Username string
@@ -105,6 +108,7 @@ type Message struct {
 	// more: its redelivered copy will be.
 	Generation uint64
 
+	from *session
 	conn *connection
 	src  paho.Message
 }
@@ -182,12 +186,12 @@ type SessionStats struct {
 
 // Client holds the sessions. Use New, then Run once.
 type Client struct {
-	cfg      Config
-	address  string // host:port
-	start    time.Time
-	identity *identity
-	sessions []*session // one for each filter
-	out      *session   // publishes
+	cfg       Config
+	addresses []string // host:port
+	start     time.Time
+	identity  *identity
+	sessions  []*session // one for each filter
+	out       *session   // publishes
 
 	messages chan Message
 	// events: when full, further events are dropped; Stats tells the state.
@@ -207,7 +211,7 @@ func New(cfg Config) (*Client, error) {
 	if cfg.Window == 0 {
 		cfg.Window = DefaultWindow
 	}
-	address, err := parseURL(&cfg)
+	addresses, err := parseURL(&cfg)
 	if err != nil {
 		return nil, err
 	}
@@ -236,7 +240,7 @@ func New(cfg Config) (*Client, error) {
 		return nil, err
 	}
 	c := &Client{
-		cfg: cfg, address: address, start: time.Now(), identity: id,
+		cfg: cfg, addresses: addresses, start: time.Now(), identity: id,
 		messages: make(chan Message, messagesBuffer),
 		events:   make(chan Event, eventsBuffer),
 		ready:    make(chan struct{}),
@@ -252,43 +256,58 @@ func New(cfg Config) (*Client, error) {
 	return c, nil
 }
 
-// parseURL gives the host:port of cfg.URL and completes cfg.TLS.
-func parseURL(cfg *Config) (string, error) {
-	bad := func(why string) (string, error) {
-		return "", fmt.Errorf("%w: broker URL: %s (give mqtt://host:port or mqtts://host:port)", ErrConfig, why)
+// mostNodes bounds the list of Config.URL.
+const mostNodes = 16
+
+// parseURL gives the host:port of each node in cfg.URL and completes cfg.TLS.
+func parseURL(cfg *Config) ([]string, error) {
+	list := strings.Split(cfg.URL, ",")
+	if len(list) > mostNodes {
+		return nil, fmt.Errorf("%w: broker URL: %d are given, more than %d", ErrConfig, len(list), mostNodes)
 	}
-	u, err := url.Parse(cfg.URL)
+	addresses := make([]string, len(list))
+	for i, text := range list {
+		address, secure, err := parseNode(strings.TrimSpace(text))
+		switch {
+		case err != nil:
+			return nil, fmt.Errorf("%w: broker URL: %w (give mqtt://host:port or mqtts://host:port, several separated by commas)", ErrConfig, err)
+		case !secure && cfg.TLS != nil:
+			return nil, fmt.Errorf("%w: broker URL: TLS is configured but the URL does not ask for it (give mqtts://host:port for every node)", ErrConfig)
+		case secure && cfg.TLS == nil:
+			if i > 0 {
+				return nil, fmt.Errorf("%w: broker URL: one node is asked for TLS and another is not", ErrConfig)
+			}
+			cfg.TLS = &tls.Config{MinVersion: tls.VersionTLS12}
+		}
+		addresses[i] = address
+	}
+	return addresses, nil
+}
+
+// parseNode gives the host:port of a URL, and whether it asks for TLS.
+func parseNode(text string) (address string, secure bool, err error) {
+	u, err := url.Parse(text)
 	if err != nil {
-		return bad("does not parse") // the text may hold a password
+		return "", false, errors.New("does not parse") // the text may hold a password
 	}
 	port := ""
 	switch u.Scheme {
 	case "mqtt", "tcp":
 		port = "1883"
-		if cfg.TLS != nil {
-			return bad("TLS is configured but the URL does not ask for it")
-		}
 	case "mqtts", "ssl", "tls":
-		port = "8883"
-		if cfg.TLS == nil {
-			cfg.TLS = &tls.Config{MinVersion: tls.VersionTLS12}
-		}
-		if cfg.TLS.ServerName == "" {
-			cfg.TLS = cfg.TLS.Clone()
-			cfg.TLS.ServerName = u.Hostname()
-		}
+		port, secure = "8883", true
 	default:
-		return bad(fmt.Sprintf("unknown scheme %q", u.Scheme))
+		return "", false, fmt.Errorf("unknown scheme %q", u.Scheme)
 	}
 	switch {
 	case u.Hostname() == "":
-		return bad("no host")
+		return "", false, errors.New("no host")
 	case u.User != nil:
-		return bad("give user name and password apart from the URL, which is logged")
+		return "", false, errors.New("give user name and password apart from the URL, which is logged")
 	case u.Port() != "":
 		port = u.Port()
 	}
-	return net.JoinHostPort(u.Hostname(), port), nil
+	return net.JoinHostPort(u.Hostname(), port), secure, nil
 }
 
 // Run connects and keeps every session up until ctx ends. It then publishes the
@@ -322,13 +341,13 @@ func (c *Client) Events() <-chan Event { return c.events }
 // keeps messages for this client, and publishers may be let in.
 func (c *Client) Ready() <-chan struct{} { return c.ready }
 
-// Ack acknowledges m to the broker and reports whether it did: false when the
+// Ack acknowledges m, of this or another client, to the broker and reports whether it did: false when the
 // connection that delivered m is gone, and the broker will deliver m again. Call
 // it once for every Message, also for one whose copy was recorded before, in the
 // order of arrival. It may wait for the connection's writer, at most
 // writeTimeout.
-func (c *Client) Ack(m Message) bool {
-	if m.conn == nil || c.sessions[m.Session].current.Load() != m.conn {
+func (*Client) Ack(m Message) bool {
+	if m.conn == nil || m.from.current.Load() != m.conn {
 		return false
 	}
 	if m.Flags&ingest.FlagQoS1 != 0 {

@@ -601,6 +601,27 @@ func TestShippedMosquittoConfiguration(t *testing.T) {
 	}
 }
 
+// A client that is given the nodes of a cluster goes on to the next when one does not
+// answer, and its sessions live on there: the nodes share them.
+func TestNodesOfACluster(t *testing.T) {
+	t.Parallel()
+	b := mqtttest.Mosquitto(t)
+	first, second := mqtttest.NewProxy(t, b.Addr), mqtttest.NewProxy(t, b.Addr)
+	dead := "mqtt://" + mqtttest.FreeAddr(t)
+	c := ready(t, mqtt.Config{URL: strings.Join([]string{dead, first.URL, second.URL}, ", "), Filters: []string{"rigs/r1/senml"}})
+	p := publisher(t, b.URL)
+	publish(t, p, "rigs/r1/senml", 0, 10)
+	c.ack(c.take(10)...)
+	first.Swallow()
+	first.Cut()
+	publish(t, p, "rigs/r1/senml", 10, 20)
+	for m := c.next(); string(m.Payload) != "19"; m = c.next() { // what was not acknowledged in time comes again
+		if m.Generation < 2 {
+			t.Errorf("message %q came by the node that is lost", m.Payload)
+		}
+	}
+}
+
 func TestConfigFaults(t *testing.T) {
 	good := mqtt.Config{URL: "mqtt://127.0.0.1:1", Filters: []string{"a/b"}}
 	tests := []struct {
@@ -612,6 +633,10 @@ func TestConfigFaults(t *testing.T) {
 		{"unknown scheme", func(c *mqtt.Config) { c.URL = "http://x" }, "http"},
 		{"no host", func(c *mqtt.Config) { c.URL = "mqtt://:1883" }, "no host"},
 		{"TLS without mqtts", func(c *mqtt.Config) { c.TLS = &tls.Config{MinVersion: tls.VersionTLS12} }, "TLS"},
+		{"one node with TLS", func(c *mqtt.Config) { c.URL = "mqtt://a,mqtts://b" }, "another is not"},
+		{"one node without TLS", func(c *mqtt.Config) { c.URL = "mqtts://a,mqtt://b" }, "every node"},
+		{"an empty node", func(c *mqtt.Config) { c.URL = "mqtt://a," }, "scheme"},
+		{"too many nodes", func(c *mqtt.Config) { c.URL = strings.Repeat("mqtt://a,", 16) + "mqtt://a" }, "more than 16"},
 		{"fraction of a second", func(c *mqtt.Config) { c.KeepAlive = 1500 * time.Millisecond }, "whole seconds"},
 		{"window", func(c *mqtt.Config) { c.Window = 65536 }, "window"},
 		{"no filter", func(c *mqtt.Config) { c.Filters = nil }, "no topic filter"},

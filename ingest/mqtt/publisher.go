@@ -22,7 +22,7 @@ const publisherWindow = 20
 
 // PublisherConfig sets a Publisher up. URL is required.
 type PublisherConfig struct {
-	URL       string // mqtt://host:port, or mqtts://host:port for TLS
+	URL       string // as in Config
 	Username  string
 	Password  string
 	TLS       *tls.Config   // for mqtts; nil trusts the system's authorities
@@ -77,7 +77,7 @@ func NewPublisher(cfg PublisherConfig) (*Publisher, error) {
 		return nil, fmt.Errorf("%w: publisher queue of %d messages", ErrConfig, cfg.Queue)
 	}
 	var err error
-	if c.address, err = parseURL(&c.cfg); err != nil {
+	if c.addresses, err = parseURL(&c.cfg); err != nil {
 		return nil, err
 	}
 	return &Publisher{

@@ -65,6 +65,7 @@ type session struct {
 	failure    atomic.Pointer[string]
 
 	// The fields below belong to the goroutine of run.
+	node      int    // index into Client.addresses of the next connection
 	lastProbe uint64 // number
 	down      bool   // reported as down
 	hasBeen   bool   // up once
@@ -287,7 +288,7 @@ func (s *session) receive(conn *connection, m paho.Message) {
 	}
 	msg := Message{
 		Topic: m.Topic(), Payload: m.Payload(),
-		Session: s.index, Generation: conn.generation, conn: conn, src: m,
+		Session: s.index, Generation: conn.generation, from: s, conn: conn, src: m,
 	}
 	if m.Duplicate() {
 		msg.Flags |= ingest.FlagDuplicate
