@@ -23,7 +23,7 @@ func simple(name, when string) Rule {
 
 func TestStandardNames(t *testing.T) {
 	names := StandardNames(testChannels()[:1], []string{"run_1"})
-	if want := int(monitor.NumQuantities) + 37 + 4 + 4; len(names) != want {
+	if want := int(monitor.NumQuantities) + 39 + 4 + 4; len(names) != want {
 		t.Errorf("%d names, want %d", len(names), want)
 	}
 	ix := indexOf(names)

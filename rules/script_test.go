@@ -33,7 +33,7 @@ func testBands() []egt.Band {
 }
 
 func testDefault() []Rule {
-	return Default(Equipment{Bands: testBands(), Limits: testLimits(), EGT: true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true})
+	return Default(Equipment{Bands: testBands(), Limits: testLimits(), EGT: true, Rake: true, Speed: true, FuelFlow: true, Bellmouth: true, OnFile: true})
 }
 
 // stand runs a set of rules scan by scan.
@@ -207,7 +207,10 @@ func TestScripts(t *testing.T) {
 }
 
 func testLimits() egt.Limits {
-	return egt.Limits{Spread: 90, Rise: 80, StarterOnce: 30 * int64(time.Second), StarterHour: 120 * int64(time.Second), Rundown: 8 * int64(time.Second)}
+	return egt.Limits{
+		Spread: 90, Rise: 80, StarterOnce: 30 * int64(time.Second), StarterHour: 120 * int64(time.Second), StarterRuns: 2,
+		Rundown: 8 * int64(time.Second), CoolFuelOff: 120 * int64(time.Second),
+	}
 }
 
 func runScript(t *testing.T, script string) {

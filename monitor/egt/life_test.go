@@ -369,6 +369,37 @@ func TestEngineSurvivesEncoding(t *testing.T) {
 	}
 }
 
+// A checkpoint of a build that counted neither aborted starts nor nozzles is read on.
+func TestEngineOfAnEarlierBuild(t *testing.T) {
+	type life struct {
+		Serial string
+		Starts uint64
+		Lit    int64
+		Bands  []egt.BandLife
+	}
+	type engine struct {
+		Lives  []life
+		Serial string
+		Crank  int64
+	}
+	var b bytes.Buffer
+	if err := gob.NewEncoder(&b).Encode(engine{[]life{{"ML5-0042", 7, 9 * s, []egt.BandLife{{Name: "run_1", Time: s}}}}, "ML5-0042", s}); err != nil {
+		t.Fatal(err)
+	}
+	w := newWatched()
+	w.c.Nozzle = "NZ-1"
+	if err := gob.NewDecoder(&b).Decode(&w.e); err != nil {
+		t.Fatal(err)
+	}
+	w.play(rest, crank, lighting, rundown, cooling)
+	if l := w.life(); l.Starts != 8 || l.Aborted != 1 || l.Lit < 9*s || l.Bands[0].Time != s {
+		t.Errorf("%+v", l)
+	}
+	if n := w.e.Nozzles; len(n) != 1 || n[0].Starts != 1 {
+		t.Errorf("%+v", n)
+	}
+}
+
 func TestWatchDoesNotAllocate(t *testing.T) {
 	w := newWatched()
 	w.play(rest, crank)

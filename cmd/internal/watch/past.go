@@ -36,7 +36,13 @@ func (s *Store) Past(ctx context.Context, st *pipeline.State) (pipeline.Past, er
 			}
 			past.Series[k].Last = max(past.Series[k].Last, r.InSeries)
 		}
-		if life, ok := engineOf(r); ok && !slices.ContainsFunc(past.Engines, func(l pipeline.Life) bool { return l.Serial == life.Serial }) {
+		life, ok := engineOf(r)
+		if _, known := st.Life(r.EngineSerial); !ok && !known && r.EngineSerial != "" {
+			if life, ok, err = lifeOf(ctx, StoredRuns{Catalog: s.catalog}, r); err != nil { // it must not keep the watch from starting
+				s.log.Warn("what an engine had been through is not read from its run", "run", r.ID, "engine", r.EngineSerial, "err", err)
+			}
+		}
+		if ok && !slices.ContainsFunc(past.Engines, func(l pipeline.Life) bool { return l.Serial == life.Serial }) {
 			past.Engines = append(past.Engines, life)
 		}
 		if life, ok := nozzleOf(r); ok && !slices.ContainsFunc(past.Nozzles, func(l pipeline.NozzleLife) bool { return l.Serial == life.Serial }) {
