@@ -65,10 +65,7 @@ const mostPlanned = 7 * 86400.0
 // ReadChecks gives the checks of the data system that are stored with a run: those before
 // it that count for it, and those after it, in the order in which they were made.
 func ReadChecks(ctx context.Context, f *runfile.File, h *runfile.Header) ([]check.Result, error) {
-	run := h.ID
-	if h.Origin != nil {
-		run = cmp.Or(h.Origin.Stepped, run)
-	}
+	run := h.Stepped()
 	list := []check.Result{}
 	err := f.Events(ctx, 0, math.MaxInt64, func(e *runfile.Event) error {
 		if e.Kind != "checks" {

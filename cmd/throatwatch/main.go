@@ -32,6 +32,7 @@ func commands() []command {
 		{"watch", "watch a rig: broker, computation, alarms, archive, page", watchCommand},
 		{"rehearse", "let a simulated rig publish a whole test", rehearseCommand},
 		{"check", "every fault of a rig file at once, then its channels and limits", withoutContext(checkCommand)},
+		{"checks", "check the data system with the engine at rest, before a run and after it", checksCommand},
 		{"reload", "let a running watch take its rig and rule files in anew", reloadCommand},
 		{"card", "the test card of a running watch: show, load, take, accept, reject, skip", cardCommand},
 		{"handover", "the hand-over sheet of a running watch", handoverCommand},

@@ -12,18 +12,20 @@ import (
 	"throatwatch/cmd/internal/watch"
 	"throatwatch/ingest/runfile"
 	"throatwatch/monitor/compute"
+	"throatwatch/monitor"
 	"throatwatch/rules"
 	"throatwatch/rules/pipeline"
 )
 
 // reduceCommand steps a stored run through another configuration.
 func reduceCommand(ctx context.Context, args []string, stdout, stderr io.Writer) int {
-	fs := newFlags("reduce RUN --rig OTHER.yaml | --swaps", "Step the records of a stored run through another rig file: corrected calibrations, throat area, coefficients, rules.\n"+
+	fs := newFlags("reduce RUN --rig OTHER.yaml | --swaps | --zero WHICH", "Step the records of a stored run through another rig file: corrected calibrations, throat area, coefficients, rules.\n"+
 		"The result is stored as a run of its own beside it, RUN-r1 and so on; the run itself stays as it is.\n"+
 		"`throatwatch compare RUN RUN-r1` tells the differences.", stderr)
 	data := fs.String("data", "data", "data folder")
 	rig := fs.String("rig", "", "the other rig file")
 	swaps := fs.Bool("swaps", false, "use the calibrations that were entered with sensor swaps, each from its time on; without --rig with the files of the run")
+	zero := fs.String("zero", "", "subtract the zeros of the pressures that the checks have found: before, after or interpolated between the two")
 	note := fs.String("note", "", "what is corrected, and why")
 	by := fs.String("by", "", "who reduces it (default: the user of this machine)")
 	asJSON := fs.Bool("json", false, "progress and result as JSON")
@@ -31,15 +33,15 @@ func reduceCommand(ctx context.Context, args []string, stdout, stderr io.Writer)
 	if code >= 0 {
 		return code
 	}
-	if len(rest) != 1 || *rig == "" && !*swaps {
-		_, _ = fmt.Fprintln(stderr, "throatwatch reduce: give one run, and --rig or --swaps; `throatwatch runs` lists the runs")
+	if len(rest) != 1 || *rig == "" && !*swaps && *zero == "" {
+		_, _ = fmt.Fprintln(stderr, "throatwatch reduce: give one run, and --rig, --swaps or --zero; `throatwatch runs` lists the runs")
 		return 2
 	}
 	if u, err := user.Current(); *by == "" && err == nil {
 		*by = u.Username
 	}
 	progress := newProgress(stderr, *asJSON)
-	o := watch.ReduceOptions{Run: rest[0], By: *by, Note: *note}
+	o := watch.ReduceOptions{Run: rest[0], By: *by, Note: *note, Zero: *zero}
 	o.Progress = func(part float64, n int64) { progress.show(part, n, "records") }
 	res, err := reduceRun(ctx, *data, *rig, *swaps, o)
 	progress.end()
@@ -113,6 +115,15 @@ type reducedJSON struct {
 	Alarms       int        `json:"alarms"`
 	ParentAlarms int        `json:"parent_alarms"`
 	Swaps        []swapJSON `json:"swaps"`
+	Zero         string     `json:"zero"`  // which zeros were subtracted, "" = none
+	Zeros        []zeroJSON `json:"zeros"` // each where it was found
+}
+
+type zeroJSON struct {
+	Channel string       `json:"channel"`
+	T       monitor.Time `json:"t"`
+	Offset  float64      `json:"offset_pa"`
+	U95     float64      `json:"u95_pa"`
 }
 
 type swapJSON struct {
@@ -127,6 +138,12 @@ func reducedView(r *watch.Reduced) reducedJSON {
 	v := reducedJSON{
 		Run: r.Run.ID, Parent: r.Parent.ID, Digest: r.Run.Digest, ParentDigest: r.Parent.Digest, Same: r.Same,
 		ConfigHash: r.Run.ConfigHash, Alarms: r.Run.Alarms, ParentAlarms: r.Parent.Alarms, Swaps: []swapJSON{},
+		Zero: r.Run.Origin.Zero, Zeros: []zeroJSON{},
+	}
+	for _, z := range r.Zeros {
+		for _, p := range z.Points {
+			v.Zeros = append(v.Zeros, zeroJSON{z.Channel, p.T, p.Offset, p.U95})
+		}
 	}
 	for _, s := range swapsOf(r) {
 		v.Swaps = append(v.Swaps, swapJSON{s.Channel, s.Serial, *utc(s.ValidFrom), s.By, s.Reason})
@@ -158,6 +175,11 @@ func printReduced(w io.Writer, r *watch.Reduced) {
 	}
 	if r.Run.State == runfile.StateInterrupted {
 		_, _ = fmt.Fprintln(w, "the run does not end in its records")
+	}
+	for _, z := range r.Zeros {
+		for _, p := range z.Points {
+			_, _ = fmt.Fprintf(w, "zero subtracted: %s %+.1f Pa ± %.1f Pa, found at %s\n", z.Channel, p.Offset, p.U95, stamp(p.T, zoneOf(r.Run.TimeZone)))
+		}
 	}
 	for _, s := range swapsOf(r) {
 		used := "one calibration of the rig file holds for the whole run"

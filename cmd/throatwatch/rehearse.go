@@ -115,6 +115,7 @@ type rehearseFlags struct {
 	points *bool
 	rate   *float64
 	speed  *float64
+	rest   *time.Duration
 	faults *[]string
 }
 
@@ -125,13 +126,14 @@ func newRehearseFlags(flags *pflag.FlagSet) rehearseFlags {
 		points: flags.Bool("points", false, "five steady points instead, those of testdata/cards/example.yaml"),
 		rate:   flags.Float64("rate", 50, "packs of readings per second"),
 		speed:  flags.Float64("speed", 1, "let the test pass this many times faster; allowances and delays stay in real time"),
+		rest:   flags.Duration("rest", 0, "be at rest for so long before the test and after it as well: for checks of the data system; times of faults count from its begin"),
 		faults: flags.StringArray("fault", nil, "a fault, name@time[+duration][:channel]; may be given more than once"),
 	}
 }
 
 // options gives the options without the start; its error names every bad fault.
 func (f rehearseFlags) options() (rehearsal.Options, error) {
-	o := rehearsal.Options{Seed: *f.seed, Rate: *f.rate, Speed: *f.speed}
+	o := rehearsal.Options{Seed: *f.seed, Rate: *f.rate, Speed: *f.speed, Rest: *f.rest}
 	var bad []error
 	switch {
 	case *f.quick && *f.points:

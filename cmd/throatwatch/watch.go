@@ -121,7 +121,7 @@ func (o *watchOptions) check(fs *pflag.FlagSet) error {
 		return err
 	}
 	if !o.rehearse {
-		for _, name := range []string{"seed", "quick", "points", "rate", "speed", "fault"} {
+		for _, name := range []string{"seed", "quick", "points", "rate", "speed", "rest", "fault"} {
 			if fs.Changed(name) {
 				return fmt.Errorf("--%s says what is rehearsed: add --rehearse", name)
 			}

@@ -329,7 +329,7 @@ func (s *sampler) message(r *ingest.Record) {
 				v, q := c.Convert(raw)
 				quality = q.String()
 				if q.Usable() {
-					si = v
+					si = v - c.Zero.At(t)
 				}
 			}
 		}

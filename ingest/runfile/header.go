@@ -83,6 +83,7 @@ type Origin struct {
 	ParentDigest string `json:"parent_digest,omitempty"` // its digest then
 	Stepped      string `json:"stepped,omitempty"`       // id that the records themselves give the run
 	By           string `json:"by,omitempty"`            // who reduced it
+	Zero         string `json:"zero,omitempty"`          // which zeros of the checks were subtracted: before, after or interpolated
 }
 
 // Reduction gives the origin of a run that is the reduction of another, nil for any other

@@ -263,6 +263,9 @@ func (c *Computer) calibrate(s *State, scan *monitor.Scan) {
 		if q == monitor.QualityGood {
 			q = cs.judge(ch, scan.T-max(scan.Age[i], 0), scan.Raw[i], v, scan.Quality[i])
 		}
+		if ch.Zero.Stated() {
+			v -= ch.Zero.At(scan.T - max(scan.Age[i], 0))
+		}
 		if q == monitor.QualityGood && ch.Reference == calib.Gauge {
 			ref := scan.Value[ch.Port]
 			if scan.Quality[ch.Port].Usable() {

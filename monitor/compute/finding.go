@@ -177,7 +177,7 @@ func (c *Computer) zero(scan *monitor.Scan, i int) (z, u95 float64) {
 	if !scan.Quality[i].Usable() && scan.Quality[i] != monitor.QualityExcluded {
 		return math.NaN(), 0
 	}
-	z = ch.reading(scan.Raw[i])
+	z = ch.reading(scan.Raw[i]) - ch.Zero.At(scan.T-max(scan.Age[i], 0))
 	u95 = math.Hypot(ch.Uncertainty.U95(z, ch.Low, ch.High), ch.Uncertainty.Random)
 	if ch.Reference == calib.Absolute {
 		b := c.cfg.Stations.Barometer

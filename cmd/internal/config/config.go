@@ -44,6 +44,7 @@ type File struct {
 type Bundle struct {
 	Format string `json:"format"`
 	Files  []File `json:"files"`
+	Zeros  []Zero `json:"zeros,omitempty"` // that checks have found, for a reduction
 
 	Warnings []Fault `json:"-"` // what is odd in the files and yet usable
 }
@@ -113,6 +114,7 @@ func (r *rig) finish(b Bundle) (pipeline.Config, []Fault) {
 		r.readRules(f)
 	}
 	r.compileRules()
+	r.subtract(b.Zeros)
 	r.markRecordedOnly()
 	sum := sha256.Sum256(b.Marshal())
 	r.cfg.Hash = hex.EncodeToString(sum[:])

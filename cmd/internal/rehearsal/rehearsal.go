@@ -43,7 +43,8 @@ type Options struct {
 	Speed    float64 // the test passes this many times faster than on an engine, 0.1 to 100; 0 = 1
 	Start    int64   // device time of the first pack, ns UTC
 
-	Plan    []Segment // instead of a scenario
+	Rest    time.Duration // for so long the rig is at rest before the test and after it as well, up to an hour
+	Plan    []Segment     // instead of a scenario
 	Day     Day
 	Noise   float64  // of the readings, times what the rig file states; 0 = 1
 	Error   float64  // systematic error, times that of a good instrument; 0 = 1
@@ -151,6 +152,13 @@ func New(cfg pipeline.Config, o Options) (*Rig, error) {
 		if r.plan, err = plan(o.Scenario, &r.plant.line, off); err != nil {
 			return nil, err
 		}
+	}
+	if o.Rest < 0 || o.Rest > time.Hour {
+		return nil, fmt.Errorf("rehearsal: rest of %v: give up to an hour", o.Rest)
+	}
+	if o.Rest > 0 {
+		rest := Segment{Name: "at rest", Seconds: o.Rest.Seconds()}
+		r.plan = append(append([]Segment{rest}, r.plan...), rest)
 	}
 	r.total = total(r.plan)
 	hold := make([]int64, len(c.Channels))

@@ -2,6 +2,11 @@ package watch_test
 
 import (
 	"encoding/json"
+	"errors"
+	"log/slog"
+	"math"
+	"path/filepath"
+	"runtime"
 	"slices"
 	"strings"
 	"testing"
@@ -10,7 +15,10 @@ import (
 	"throatwatch/cmd/internal/config"
 	"throatwatch/cmd/internal/rehearsal"
 	"throatwatch/cmd/internal/watch"
+	"throatwatch/dashboard"
 	"throatwatch/ingest"
+	"throatwatch/ingest/runfile"
+	"throatwatch/monitor/archive"
 	"throatwatch/monitor/check"
 	"throatwatch/rules/pipeline"
 )
@@ -42,15 +50,14 @@ func checkOf(cfg *pipeline.Config, phase, warmth string) pipeline.Action {
 	return pipeline.Action{Do: pipeline.DoCheck, Check: q, By: "R. Aldous", RequestID: phase}
 }
 
-// checkedDay plays the short day with faults and a check before and after the run. It gives
-// the records, and what was told of checks as JSON.
-func checkedDay(t *testing.T, faults ...string) (records []ingest.Record, told []string) {
+// playDay plays the short day with faults, and what people do at its times.
+func playDay(t *testing.T, after float64, faults []string, acts []doing, take func(in watch.Input, host int64)) {
 	t.Helper()
 	b, cfg, wrong := config.Load(exampleRig)
 	if err := watch.Faults(wrong); err != nil {
 		t.Fatal(err)
 	}
-	o := rehearsal.Options{Seed: 3, Rate: 20, Start: testBegin, Plan: shortDay()}
+	o := rehearsal.Options{Seed: 3, Rate: 20, Start: testBegin, Plan: append(shortDay(), rehearsal.Segment{Name: "off", Seconds: after})}
 	for _, text := range faults {
 		f, err := rehearsal.ParseFault(text)
 		if err != nil {
@@ -61,17 +68,6 @@ func checkedDay(t *testing.T, faults ...string) (records []ingest.Record, told [
 	rig, err := rehearsal.New(cfg, o)
 	if err != nil {
 		t.Fatal(err)
-	}
-	acts := []doing{{33 * time.Second, checkOf(&cfg, check.Before, check.Cold)}, {110 * time.Second, checkOf(&cfg, check.After, check.Warm)}}
-	core := watch.NewCore(pipeline.NewMachine(parseOnce()), &pipeline.Replay{State: &pipeline.State{}, Digest: pipeline.NewDigest()}, "test", "test")
-	take := func(in watch.Input, host int64) {
-		outs := core.Take(in, host)
-		told = append(told, checksOf(t, outs)...)
-		batch, err := core.Cut()
-		if err != nil {
-			t.Fatal(err)
-		}
-		records = append(records, batch.Records...)
 	}
 	take(watch.Input{Kind: ingest.KindBoot, Payload: []byte(`{}`)}, testBegin)
 	take(watch.Input{Kind: ingest.KindConfig, Payload: b.Marshal()}, testBegin)
@@ -90,6 +86,23 @@ func checkedDay(t *testing.T, faults ...string) (records []ingest.Record, told [
 			take(watch.Input{Kind: ingest.KindMessage, Topic: m.Topic, Payload: m.Payload}, m.At+m.Delay)
 		}
 	}
+}
+
+// checkedDay plays the short day with faults and a check before and after the run. It gives
+// the records, and what was told of checks as JSON.
+func checkedDay(t *testing.T, faults ...string) (records []ingest.Record, told []string) {
+	t.Helper()
+	_, cfg, _ := config.Load(exampleRig)
+	core := watch.NewCore(pipeline.NewMachine(parseOnce()), &pipeline.Replay{State: &pipeline.State{}, Digest: pipeline.NewDigest()}, "test", "test")
+	acts := []doing{{33 * time.Second, checkOf(&cfg, check.Before, check.Cold)}, {110 * time.Second, checkOf(&cfg, check.After, check.Warm)}}
+	playDay(t, 1, faults, acts, func(in watch.Input, host int64) {
+		told = append(told, checksOf(t, core.Take(in, host))...)
+		batch, err := core.Cut()
+		if err != nil {
+			t.Fatal(err)
+		}
+		records = append(records, batch.Records...)
+	})
 	return records, told
 }
 
@@ -187,4 +200,128 @@ func TestChecks(t *testing.T) {
 			t.Errorf("%s: stepped again the records give other checks", tt.name)
 		}
 	}
+}
+
+// A reduction subtracts the zeros that the checks of its run have found: that before, that
+// after, or what lies between by event time. A check after the end of a run is stored with
+// it too. Channels that are no pressure, and all else of the run, stay.
+func TestReduceZero(t *testing.T) {
+	t.Parallel()
+	dir := t.TempDir()
+	_, cfg, _ := config.Load(exampleRig)
+	store, err := watch.OpenStore(t.Context(), dir, runfile.Options{}, slog.New(slog.DiscardHandler))
+	if err != nil {
+		t.Fatal(err)
+	}
+	core, err := store.Restore(t.Context(), pipeline.NewMachine(parseOnce()), watch.Build(), runtime.GOARCH)
+	if err != nil {
+		t.Fatal(err)
+	}
+	feed := watch.NewFeed(core, store)
+	var run string
+	ended := false
+	acts := []doing{{33 * time.Second, checkOf(&cfg, check.Before, check.Cold)}, {250 * time.Second, checkOf(&cfg, check.After, check.Warm)}}
+	playDay(t, 150, []string{"pressure-zero-shift@60s:p7_2"}, acts, func(in watch.Input, host int64) {
+		if err := feed.Take(t.Context(), in, host); err != nil {
+			t.Fatal(err)
+		}
+		run = core.State.Run.ID
+		ended = ended || run != "" && !core.State.RunActive
+	})
+	if err := errors.Join(feed.End(t.Context()), store.Close(t.Context())); err != nil || !ended {
+		t.Fatalf("ended %v: %v", ended, err)
+	}
+
+	catalog, err := runfile.OpenCatalog(t.Context(), filepath.Join(dir, "catalog.db"), filepath.Join(dir, "runs"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer catalog.Close()
+	runs := watch.StoredRuns{Catalog: catalog}
+	checks, values := stretchOf(t, runs, run)
+	if len(checks) != 2 || checks[1].Phase != check.After {
+		t.Fatalf("%d checks are stored with the run", len(checks))
+	}
+	zeroOf := func(c *check.Result, channel string) (t, offset float64) {
+		for _, it := range c.Zeros() {
+			if it.Channel == channel {
+				return float64(c.Began+(c.Ended-c.Began)/2) / 1e9, it.Value.V
+			}
+		}
+		return 0, 0
+	}
+	for _, which := range []string{watch.ZeroBefore, watch.ZeroAfter, watch.ZeroInterpolated} {
+		res, err := runs.Reduce(t.Context(), watch.ReduceOptions{Run: run, Zero: which, By: "R. Aldous"})
+		if err != nil {
+			t.Fatal(err)
+		}
+		if res.Same || res.Run.Origin == nil || res.Run.Origin.Zero != which || len(res.Zeros) < 10 {
+			t.Errorf("%s: same %v, origin %+v, %d zeros", which, res.Same, res.Run.Origin, len(res.Zeros))
+		}
+		again, reduced := stretchOf(t, runs, res.Run.ID)
+		if len(again) != 1 { // that after the end is among no records of the run
+			t.Errorf("%s: %d checks in the child, want that before", which, len(again))
+		}
+		for i := range cfg.Compute.Channels {
+			id := cfg.Compute.Channels[i].ID
+			t0, a := zeroOf(&checks[0], id)
+			t1, b := zeroOf(&checks[1], id)
+			if len(reduced[id]) == 0 || len(reduced[id]) != len(values[id]) {
+				t.Errorf("%s: %s has %d values, %d in the run", which, id, len(reduced[id]), len(values[id]))
+			}
+			for at, v := range values[id] {
+				want := map[string]float64{watch.ZeroBefore: a, watch.ZeroAfter: b, watch.ZeroInterpolated: a + (b-a)*(float64(at)/1e9-t0)/max(t1-t0, 1)}[which]
+				// A sample is up to its hold time older than its scan: 0.25 s of the slope.
+				if got := v - reduced[id][at]; math.Abs(got-want) > 1e-6+0.3*math.Abs(b-a)/max(t1-t0, 1) {
+					t.Fatalf("%s: %s at %d loses %g, want %g", which, id, at, got, want)
+				}
+			}
+		}
+	}
+	if _, err := runs.Reduce(t.Context(), watch.ReduceOptions{Run: run, Zero: "middle"}); err == nil {
+		t.Error("a zero of the middle is taken")
+	}
+	if _, err := runs.Reduce(t.Context(), watch.ReduceOptions{Run: run + "-r1", Zero: watch.ZeroAfter}); !errors.Is(err, watch.ErrNoZero) {
+		t.Errorf("a zero after that there is not: %v", err)
+	}
+}
+
+// stretchOf gives the checks of a stored run and the values of its channels while the
+// engine idles, by time.
+func stretchOf(t *testing.T, runs watch.StoredRuns, id string) (checks []check.Result, values map[string]map[int64]float64) {
+	t.Helper()
+	f, err := runs.Open(t.Context(), id)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer f.Close()
+	h, err := f.Header(t.Context())
+	if err != nil {
+		t.Fatal(err)
+	}
+	if checks, err = dashboard.ReadChecks(t.Context(), f, &h); err != nil {
+		t.Fatal(err)
+	}
+	values = map[string]map[int64]float64{}
+	from := testBegin + int64(55*time.Second)
+	err = pipeline.Rows(t.Context(), f, archive.NewCodec(), pipeline.ChunkChannels, nil, from, from+int64(8*time.Second), func(c *archive.Chunk, first, last int) {
+		for i := range c.Columns {
+			id, ok := strings.CutPrefix(c.Columns[i].Name, "channel.")
+			if !ok || c.Columns[i].Kind != archive.KindFloat {
+				continue
+			}
+			if values[id] == nil {
+				values[id] = map[int64]float64{}
+			}
+			for k := first; k < last; k++ {
+				if v := c.Columns[i].Float[k]; !math.IsNaN(v) {
+					values[id][c.Times[k]] = v
+				}
+			}
+		}
+	})
+	if err != nil {
+		t.Fatal(err)
+	}
+	return checks, values
 }

@@ -19,6 +19,7 @@ import (
 
 	"throatwatch/ingest"
 	"throatwatch/ingest/runfile"
+	"throatwatch/monitor/check"
 	"throatwatch/monitor/steady"
 	"throatwatch/rules/pipeline"
 )
@@ -50,6 +51,14 @@ type Batch struct {
 	End        *RunHeader // with this batch the run file ends, before another begins
 	Alarms     int        // raised in the run that is on, for the header; 0 = none since the batch before
 	First      int64      // host time of the first record
+	Amend      []Amendment
+}
+
+// Amendment is an event that belongs to a run that has ended: it goes into the file of that
+// as well.
+type Amendment struct {
+	Run   string
+	Event runfile.Event
 }
 
 // Core numbers and steps records and gathers them into batches. It belongs to
@@ -174,6 +183,9 @@ func (c *Core) keep(outs []pipeline.Outcome) {
 			c.event(o, "life", o.Life)
 		case pipeline.OutcomeChecks:
 			c.event(o, "checks", o.Check)
+			if o.Check.Phase == check.After && o.Check.State == check.Done && !c.State.RunActive {
+				c.batch.Amend = append(c.batch.Amend, Amendment{o.Check.Run, c.batch.Events[len(c.batch.Events)-1]})
+			}
 		case pipeline.OutcomeChannels, pipeline.OutcomeLedger, pipeline.OutcomeStatus, pipeline.OutcomeAction:
 		}
 	}

@@ -29,8 +29,9 @@ var ErrNoRunInIt = errors.New("with this configuration no run begins in the reco
 // ReduceOptions say how a stored run is stepped through another configuration.
 type ReduceOptions struct {
 	Run      string
-	Bundle   []byte // marshalled
+	Bundle   []byte // marshalled; nil = that of the run, where Zero is given
 	Config   pipeline.Config
+	Zero     string // which zeros of its checks are subtracted, one of the Zero constants; "" = none
 	By, Note string
 	Progress func(part float64, records int64) // may be nil
 }
@@ -42,6 +43,7 @@ type Reduced struct {
 	Same   bool            // the digest is that of the parent
 	Swaps  []pipeline.Swap // sensors that were exchanged during the run
 	Config pipeline.Config // that it was stepped through
+	Zeros  []config.Zero   // that were subtracted
 }
 
 // Reduce steps the records of a stored run through another configuration, which takes the
@@ -118,10 +120,15 @@ func (r StoredRuns) ReduceTo(ctx context.Context, o ReduceOptions, path string) 
 	if res.Parent, err = f.Header(ctx); err != nil {
 		return res, err
 	}
-	switch {
-	case res.Parent.State == runfile.StateRunning:
+	if res.Parent.State == runfile.StateRunning {
 		return res, fmt.Errorf("reduce %s: it is being recorded: wait for its end", o.Run)
-	case o.Config.Rig.ID != res.Parent.Rig:
+	}
+	if o.Zero != "" {
+		if o, res.Zeros, err = zeroed(ctx, f, &res.Parent, o); err != nil {
+			return res, fmt.Errorf("reduce %s: %w", o.Run, err)
+		}
+	}
+	if o.Config.Rig.ID != res.Parent.Rig {
 		return res, fmt.Errorf("reduce %s: it is of rig %q, the configuration of rig %q", o.Run, res.Parent.Rig, o.Config.Rig.ID)
 	}
 	h, swaps, err := reduceTo(ctx, f, &res.Parent, o, path)
@@ -202,7 +209,7 @@ func reduceTo(ctx context.Context, f *runfile.File, parent *runfile.Header, o Re
 		return h, nil, err
 	}
 	h = *found
-	h.Origin = &runfile.Origin{Kind: runfile.OriginReduction, Parent: parent.ID, ParentDigest: parent.Digest, Stepped: found.ID, By: o.By}
+	h.Origin = &runfile.Origin{Kind: runfile.OriginReduction, Parent: parent.ID, ParentDigest: parent.Digest, Stepped: found.ID, By: o.By, Zero: o.Zero}
 	h.Number, h.Operator, h.Notes = parent.Number, parent.Operator, o.Note
 	aborted := h.Aborted
 	h.Identity = parent.Identity // it is the same run, seen otherwise

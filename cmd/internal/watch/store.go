@@ -344,6 +344,9 @@ func (s *Store) Write(ctx context.Context, b *Batch) error {
 	if err := s.file.Commit(ctx, batch); err != nil {
 		return fmt.Errorf("store: %w", err)
 	}
+	for _, a := range b.Amend {
+		s.amend(ctx, a)
+	}
 	switch {
 	case b.Begin != nil:
 		s.alarms = b.Begin.Alarms
@@ -362,6 +365,22 @@ func (s *Store) Write(ctx context.Context, b *Batch) error {
 		s.prune(ctx, b.Checkpoint.Host-idleKept)
 	}
 	return nil
+}
+
+// amend adds an event to the file of a run that has ended, in the background. The records
+// and all that came of them stay as they are.
+func (s *Store) amend(ctx context.Context, a Amendment) {
+	path := s.runPath(a.Run)
+	ctx = context.WithoutCancel(ctx)
+	s.work.Go(func() {
+		f, err := runfile.Open(ctx, path, runfile.ReadWrite, s.opt)
+		if err == nil {
+			err = errors.Join(f.Commit(ctx, runfile.Batch{Events: []runfile.Event{a.Event}}), f.Close())
+		}
+		if err != nil {
+			s.log.Warn("a check after a run is not in the file of the run, only in that recorded into now", "file", path, "err", err)
+		}
+	})
 }
 
 // make goes on with the making of a run file, before the batch b is stored: it
