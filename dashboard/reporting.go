@@ -24,6 +24,10 @@ type ReportOptions struct {
 // WriteReport writes the report of a stored run as one HTML file. The error is
 // report.ErrTooEarly, or that of the run file.
 func WriteReport(ctx context.Context, w io.Writer, f *runfile.File, h *runfile.Header, o ReportOptions) error {
+	checks, err := ReadChecks(ctx, f, h)
+	if err != nil {
+		return err
+	}
 	entries, err := ReadLog(ctx, f, h)
 	if err != nil {
 		return err
@@ -37,7 +41,7 @@ func WriteReport(ctx context.Context, w io.Writer, f *runfile.File, h *runfile.H
 		return err
 	}
 	s := report.Source{
-		File: f, Run: *h, Parse: o.Parse, Log: entries, Figures: figures, Exceedances: engine.Exceedances, Life: engine.Life, NozzleLife: engine.NozzleLife,
+		File: f, Run: *h, Parse: o.Parse, Log: entries, Checks: checks, Figures: figures, Exceedances: engine.Exceedances, Life: engine.Life, NozzleLife: engine.NozzleLife,
 		Build: o.Build, At: o.At, Progress: o.Progress,
 	}
 	for _, e := range engine.Events {

@@ -125,7 +125,7 @@ func (o *checksOptions) checks(ctx context.Context, what string, live bool, stdo
 		r, err := o.ask(ctx, at, what, &now)
 		return []check.Result{r}, rigs[0].Zone(), err
 	}
-	var list []check.Result
+	list := []check.Result{}
 	for _, r := range []*check.Result{now.Before, now.After, now.Running} {
 		if r != nil {
 			list = append(list, *r)

@@ -150,6 +150,8 @@ func TestReduceRefuses(t *testing.T) {
 	}{
 		{[]string{"reduce", id, "--data", dir}, 2, "give one run, and --rig or --swaps"},
 		{[]string{"reduce", id, "--data", dir, "--swaps"}, 1, "no calibration was entered with a swap"},
+		{[]string{"reduce", id, "--data", dir, "--zero", "before"}, 1, "no check before the run is stored with it"},
+		{[]string{"reduce", id, "--data", dir, "--zero", "middle"}, 1, "give before, after or interpolated"},
 		{[]string{"reduce", id, "--data", dir, "--rig", "no-such.yaml"}, 1, "no-such.yaml"},
 		{[]string{"reduce", "none", "--data", dir, "--rig", rehearseRig}, 1, "none"},
 		{[]string{"reduce", id, "--data", dir, "--rig", otherRig(t, "  id: cell_2\n", "  id: cell_3\n")}, 1, `the configuration of rig "cell_3"`},

@@ -22,6 +22,7 @@ import (
 
 	"throatwatch/dashboard/points"
 	"throatwatch/ingest/runfile"
+	"throatwatch/monitor/check"
 	"throatwatch/rules/figures"
 	"throatwatch/rules/pipeline"
 )
@@ -37,6 +38,7 @@ type Source struct {
 	Parse func(bundle []byte) (pipeline.Config, error)
 
 	Log         []pipeline.Entry
+	Checks      []check.Result // of the data system, the oldest first
 	Figures     figures.Figures
 	Exceedances []pipeline.Exceedance
 	Engine      []EngineEvent

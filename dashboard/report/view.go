@@ -36,6 +36,9 @@ type view struct {
 	Limits, Channels     table
 	Sensors              table
 	Faults, Out          table
+	Checks               []fact
+	Zeros                table
+	ZeroNote             string // "" without zeros
 	Gaps                 table
 	Timeline             table
 	Figures              []figure
@@ -202,6 +205,10 @@ func (d *data) view() (*view, error) {
 	v.Engine, v.Nozzle = d.sources(), d.nozzle()
 	v.Limits, v.Channels, v.Sensors = d.limits(), d.channels(), d.sensors()
 	v.Faults, v.Out, v.Gaps = d.faults(), d.outs(), d.gaps()
+	v.Checks = kept(d.checkFacts())
+	if d.checked() {
+		v.Zeros, v.ZeroNote = d.zeros(), d.zeroNote()
+	}
 	v.Timeline = d.timeline()
 	v.Points, v.Details = d.overview(), d.details()
 	v.CardHead, v.Card, v.Taken = d.cardHead(), d.cardPoints(), d.cardTaken()

@@ -208,6 +208,9 @@ func reduceTo(ctx context.Context, f *runfile.File, parent *runfile.Header, o Re
 	if err != nil {
 		return h, nil, err
 	}
+	if err := copyAmended(ctx, f, child, parent); err != nil {
+		return h, nil, err
+	}
 	h = *found
 	h.Origin = &runfile.Origin{Kind: runfile.OriginReduction, Parent: parent.ID, ParentDigest: parent.Digest, Stepped: found.ID, By: o.By, Zero: o.Zero}
 	h.Number, h.Operator, h.Notes = parent.Number, parent.Operator, o.Note

@@ -1,7 +1,9 @@
 package watch
 
 import (
+	"bytes"
 	"context"
+	"encoding/json"
 	"errors"
 	"fmt"
 	"math"
@@ -53,6 +55,34 @@ func zeroed(ctx context.Context, f *runfile.File, h *runfile.Header, o ReduceOpt
 	}
 	o.Config, err = Parse(o.Bundle)
 	return o, zeros, err
+}
+
+// copyAmended takes the checks over that were made after the end of a run: they came of no
+// record of its file.
+func copyAmended(ctx context.Context, from, to *runfile.File, h *runfile.Header) error {
+	if h.Ended == 0 {
+		return nil
+	}
+	var events []runfile.Event
+	err := from.Events(ctx, h.Ended, math.MaxInt64, func(e *runfile.Event) error {
+		if e.Kind != "checks" {
+			return nil
+		}
+		var c check.Result
+		if err := json.Unmarshal(e.JSON, &c); err != nil {
+			return fmt.Errorf("event %d.%d: %w", e.Epoch, e.N, err)
+		}
+		if c.Run == h.Stepped() && int64(c.Began) >= h.Ended {
+			own := *e
+			own.JSON = bytes.Clone(e.JSON)
+			events = append(events, own)
+		}
+		return nil
+	})
+	if err != nil || len(events) == 0 {
+		return err
+	}
+	return to.Commit(ctx, runfile.Batch{Events: events})
 }
 
 // zerosOf gives the zeros of the checks of a run, at the middle of each window.
