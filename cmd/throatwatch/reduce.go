@@ -11,8 +11,8 @@ import (
 	"throatwatch/cmd/internal/config"
 	"throatwatch/cmd/internal/watch"
 	"throatwatch/ingest/runfile"
-	"throatwatch/monitor/compute"
 	"throatwatch/monitor"
+	"throatwatch/monitor/compute"
 	"throatwatch/rules"
 	"throatwatch/rules/pipeline"
 )

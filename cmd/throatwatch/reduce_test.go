@@ -148,7 +148,7 @@ func TestReduceRefuses(t *testing.T) {
 		code int
 		want string
 	}{
-		{[]string{"reduce", id, "--data", dir}, 2, "give one run, and --rig or --swaps"},
+		{[]string{"reduce", id, "--data", dir}, 2, "give one run, and --rig, --swaps or --zero"},
 		{[]string{"reduce", id, "--data", dir, "--swaps"}, 1, "no calibration was entered with a swap"},
 		{[]string{"reduce", id, "--data", dir, "--zero", "before"}, 1, "no check before the run is stored with it"},
 		{[]string{"reduce", id, "--data", dir, "--zero", "middle"}, 1, "give before, after or interpolated"},

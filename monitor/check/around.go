@@ -7,12 +7,37 @@ import (
 	"strings"
 
 	"throatwatch/monitor"
+	"throatwatch/monitor/calib"
 )
 
-// around judges what no channel shows: calibration, clocks, broker, disk, limits in force.
+// calibrations judges that no sensor is past the date of its calibration at the event time
+// t, unless somebody answers for its use.
+func (j *judge) calibrations(t int64) {
+	var expired, waived []string
+	on := 0
+	for i := range j.c.Channels {
+		r := j.c.Channels[i].RecordAt(t)
+		switch r.State(t) {
+		case calib.Expired:
+			expired = append(expired, fmt.Sprintf("%s, sensor %s, was due on %s", j.c.Channels[i].ID, r.Serial, r.Due))
+		case calib.Waived:
+			waived = append(waived, fmt.Sprintf("%s, due on %s, is answered for by %s", j.c.Channels[i].ID, r.Due, r.Waiver.Who))
+			on++
+		case calib.InDate:
+			on++
+		case calib.NotOnFile:
+		}
+	}
+	good := fmt.Sprintf("%d have a date, none is past it", on)
+	if len(waived) > 0 {
+		good = strings.Join(waived, "; ")
+	}
+	j.either(KindCalibration, "Calibrations in date", expired, good)
+}
+
+// around judges what no channel shows: clocks, broker, disk, limits in force.
 func (j *judge) around(q *Request, b *Bench) {
 	a := &b.Around
-	j.either(KindCalibration, "Calibrations in date", b.Expired, "none is past its date")
 	var late, dead, lost []string
 	for _, s := range a.Sources {
 		if s.Skewed || max(s.Skew, -s.Skew) > j.l.Skew {

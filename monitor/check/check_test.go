@@ -129,9 +129,11 @@ func good() check.Around {
 }
 
 // judge gives the result of a check, and the ids of what failed in it.
-func judge(c *compute.Config, l *check.Limits, q *check.Request, g *check.Gather, around check.Around, earlier *check.Result) (check.Result, []string) {
+func judge(
+	c *compute.Config, l *check.Limits, q *check.Request, g *check.Gather, around check.Around, earlier *check.Result, swapped ...string,
+) (check.Result, []string) {
 	r := q.Begin(g.From, around.Hash, around.Version)
-	check.Judge(&r, l, q, g, &check.Bench{Compute: c, Period: period, Around: around, Earlier: earlier}, g.To)
+	check.Judge(&r, l, q, g, &check.Bench{Compute: c, Period: period, Around: around, Earlier: earlier, Swapped: swapped}, g.To)
 	ids := []string{}
 	for i := range r.Items {
 		if !r.Items[i].Passed {
@@ -191,6 +193,7 @@ func TestVerdicts(t *testing.T) {
 		{"left out", check.Before, check.Cold, func(k *cell, _ *check.Around, _ *check.Request, _ *check.Limits) {
 			k.quality[egt2] = monitor.QualityExcluded
 		}, "", ""},
+		{"expired calibration", check.Before, check.Cold, func(_ *cell, _ *check.Around, _ *check.Request, _ *check.Limits) {}, "calibration", "p_1, sensor S-7, was due on 2023-11-01"},
 		{"clock", check.Before, check.Cold, func(_ *cell, a *check.Around, _ *check.Request, _ *check.Limits) { a.Sources[0].Skew = -3 * second }, "clock", "3.0 s off"},
 		{"publisher", check.Before, check.Cold, func(_ *cell, a *check.Around, _ *check.Request, _ *check.Limits) { a.Sources[0].Alive = false }, "sources", "fallen silent"},
 		{"broker", check.Before, check.Cold, func(_ *cell, a *check.Around, _ *check.Request, _ *check.Limits) { a.Sessions[0].Connected = false }, "broker", "not connected"},
@@ -210,6 +213,10 @@ func TestVerdicts(t *testing.T) {
 	} {
 		c, l := rig(t), check.Defaults()
 		k, a, q := sound(c), good(), request(tt.phase, tt.warmth)
+		if tt.want == "calibration" {
+			c.Channels[gauge1].Record = calib.Record{Serial: "S-7", Due: "2023-11-01", Expires: 1_698_883_200 * second}
+			c.Channels[gauge2].Record = calib.Record{Serial: "S-8", Due: "2023-11-01", Expires: 1_698_883_200 * second, Waiver: calib.Waiver{Who: "T. Eklund", Why: "spare at the laboratory"}}
+		}
 		if tt.wrong != nil {
 			tt.wrong(&k, &a, q, &l)
 		}
@@ -261,6 +268,19 @@ func TestShift(t *testing.T) {
 		if got := after.Items[i].Value.V; math.Abs(got-tt.moved) > 25 { // 2 · 51 Pa/√200 · √2 and a bit
 			t.Errorf("%s: shift %.1f Pa, want %.1f", tt.name, got, tt.moved)
 		}
+	}
+}
+
+// Of a channel with another sensor than in the check before no shift is told.
+func TestShiftOfAnotherSensor(t *testing.T) {
+	c, l := rig(t), check.Defaults()
+	rng := rand.New(rand.NewPCG(3, 3))
+	k := sound(c)
+	before, _ := judge(c, &l, request(check.Before, check.Cold), k.gather(c, &l, rng), good(), nil)
+	after, ids := judge(c, &l, request(check.After, check.Cold), k.gather(c, &l, rng), good(), &before, "p_2")
+	i := slices.IndexFunc(after.Items, func(it check.Item) bool { return it.ID == "shift.p_2" })
+	if strings.Join(ids, " ") != "shift.p_2" || !strings.Contains(after.Items[i].Text, "exchanged") || after.Items[i].Value.Known {
+		t.Errorf("failed %q: %+v", ids, after.Items[i])
 	}
 }
 

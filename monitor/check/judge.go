@@ -34,7 +34,8 @@ type Bench struct {
 	Around  Around
 	// Earlier is the check before the run, for the shift of the zeros; nil = there was none.
 	Earlier *Result
-	Expired []string // what is past its calibration date, one line each
+	// Swapped names the channels that have had another sensor since then.
+	Swapped []string
 }
 
 // Around is what the daemon knows of itself at the end of the window.
@@ -78,9 +79,10 @@ func Judge(r *Result, l *Limits, q *Request, g *Gather, b *Bench, t int64) {
 		j.zero(i)
 	}
 	if q.Phase == After {
-		j.shifts(b.Earlier)
+		j.shifts(b.Earlier, b.Swapped)
 	}
 	j.temperatures(q.Warmth == Cold)
+	j.calibrations(t)
 	j.around(q, b)
 	if q.Phase == Before {
 		j.ticks(q)
@@ -251,7 +253,7 @@ func (j *judge) zero(i int) {
 // drift that is stated:
 //
 //	U² = U²(zero before) + U²(zero after) + U²(drift)
-func (j *judge) shifts(before *Result) {
+func (j *judge) shifts(before *Result, swapped []string) {
 	if before == nil {
 		j.add(KindShift, "", "Shift of the zeros", false, "there was no check before this run to compare with")
 		return
@@ -263,6 +265,10 @@ func (j *judge) shifts(before *Result) {
 		ch := &j.c.Channels[i]
 		if k < 0 {
 			j.of(KindShift, i, false, "there was no zero of it in the check before")
+			continue
+		}
+		if slices.Contains(swapped, now.Channel) {
+			j.of(KindShift, i, false, "its sensor was exchanged since the check before: how the zero of either has moved is not known")
 			continue
 		}
 		shift := now.Value.V - earlier[k].Value.V

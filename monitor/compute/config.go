@@ -17,7 +17,7 @@ type Channel struct {
 	calib.Spec
 	Record calib.Record
 	Swaps  []Swap // sensors that took the place of the first, by rising From
-	Zero Zero // of a pressure, where checks have found one and a reduction subtracts it
+	Zero   Zero   // of a pressure, where checks have found one and a reduction subtracts it
 }
 
 // Stations says which channels make which station value. Every entry is an

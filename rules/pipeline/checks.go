@@ -145,6 +145,11 @@ func (m *Machine) judgeCheck(s *State, t int64) {
 	b := check.Bench{Compute: &cfg.Compute, Period: cfg.Align.Period, Around: m.aroundCheck(s)}
 	if c.Before.Run == s.Run.ID && c.Before.State == check.Done {
 		b.Earlier = &c.Before
+		for i := range s.Swaps {
+			if w := &s.Swaps[i]; w.ValidFrom > int64(c.Before.Began) {
+				b.Swapped = append(b.Swapped, w.Channel)
+			}
+		}
 	}
 	check.Judge(&c.Running, &m.prog.limits, &c.Request, &c.Gather, &b, t)
 	m.tellCheck(s, t, &c.Running)

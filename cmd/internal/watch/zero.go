@@ -34,20 +34,20 @@ func zeroed(ctx context.Context, f *runfile.File, h *runfile.Header, o ReduceOpt
 	if err != nil {
 		return o, nil, err
 	}
-	zeros, err := zerosOf(checks, o.Zero)
+	c, err := f.LastCheckpoint(ctx, math.MaxInt64)
+	if err != nil {
+		return o, nil, err
+	}
+	state, err := pipeline.Decode(c.State)
 	if err != nil {
 		return o, nil, err
 	}
 	if o.Bundle == nil {
-		c, err := f.LastCheckpoint(ctx, math.MaxInt64)
-		if err != nil {
-			return o, nil, err
-		}
-		state, err := pipeline.Decode(c.State)
-		if err != nil {
-			return o, nil, err
-		}
 		o.Bundle = state.Bundle
+	}
+	zeros, err := zerosOf(checks, o.Zero, state.Swaps)
+	if err != nil {
+		return o, nil, err
 	}
 	var faults []config.Fault
 	if o.Bundle, faults = config.WithZeros(o.Bundle, zeros); len(faults) > 0 {
@@ -85,8 +85,10 @@ func copyAmended(ctx context.Context, from, to *runfile.File, h *runfile.Header)
 	return to.Commit(ctx, runfile.Batch{Events: events})
 }
 
-// zerosOf gives the zeros of the checks of a run, at the middle of each window.
-func zerosOf(checks []check.Result, which string) ([]config.Zero, error) {
+// zerosOf gives the zeros of the checks of a run, at the middle of each window. A channel
+// whose sensor was exchanged from the first check on has none: that of one sensor is not
+// that of the other.
+func zerosOf(checks []check.Result, which string, swaps []pipeline.Swap) ([]config.Zero, error) {
 	var last [2]*check.Result // before, after
 	for i := range checks {
 		last[min(1, slices.Index([]string{check.Before, check.After}, checks[i].Phase))] = &checks[i]
@@ -113,6 +115,9 @@ func zerosOf(checks []check.Result, which string) ([]config.Zero, error) {
 	}
 	var out []config.Zero
 	for _, it := range from[0].Zeros() {
+		if slices.ContainsFunc(swaps, func(s pipeline.Swap) bool { return s.Channel == it.Channel && s.ValidFrom > int64(checks[0].Began) }) {
+			continue
+		}
 		z := config.Zero{Channel: it.Channel}
 		for _, c := range from {
 			zeros := c.Zeros()
