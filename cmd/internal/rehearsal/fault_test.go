@@ -200,6 +200,27 @@ func TestFaults(t *testing.T) {
 				t.Error("the probe does not read its terminals for 10 s")
 			}
 		}},
+		{"probe-offset@20s*2:egt_2", "egt_2", func(t *testing.T, s *stream) {
+			t.Helper()
+			for i, r := range s.between("egt_2", 20, 99) { // 30 K; the ADC's step is 0.05 K
+				if d := r.value - plain.between("egt_2", 20, 99)[i].value; math.Abs(d-30) > 0.06 {
+					t.Fatalf("the probe is off by %g K", d)
+				}
+			}
+		}},
+		{"noisy@0s+1.5s:p_inlet", "p_inlet", func(t *testing.T, s *stream) {
+			t.Helper()
+			// At rest: six times the scatter, from the same chance, but for steps of the ADC of 0.5 Pa.
+			scatter := func(rs []reading) (sum float64) {
+				for i := range rs[1:] {
+					sum += math.Abs(rs[i+1].value - rs[i].value)
+				}
+				return sum
+			}
+			if k := scatter(s.between("p_inlet", 0, 1.5)) / scatter(plain.between("p_inlet", 0, 1.5)); math.Abs(k-6) > 0.5 {
+				t.Errorf("the channel scatters %g times as much", k)
+			}
+		}},
 		{"probe-slow@9s:egt_3", "egt_3", func(t *testing.T, s *stream) {
 			t.Helper()
 			// Within 2 s of light-off the others have risen by far more.

@@ -643,3 +643,32 @@ func BenchmarkNext(b *testing.B) {
 		})
 	}
 }
+
+// A rest stands before the test and after it; nothing turns in it.
+func TestRest(t *testing.T) {
+	cfg := load(t, "example")
+	const rest = 20 * time.Second
+	plain, err := New(cfg, Options{Scenario: Quick, Rate: 2})
+	if err != nil {
+		t.Fatal(err)
+	}
+	r, err := New(cfg, Options{Scenario: Quick, Rate: 2, Rest: rest})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if got, want := r.Length(), plain.Length()+2*rest; got != want {
+		t.Errorf("length %v, want %v", got, want)
+	}
+	var msgs []Message
+	for more := true; more; {
+		msgs, more = r.Next(msgs[:0])
+		if st := r.Status(); (st.Elapsed < rest || st.Elapsed > st.Total-2*time.Second) && st.Speed > 50 {
+			t.Fatalf("after %v it turns at %g rpm", st.Elapsed, st.Speed)
+		}
+	}
+	for _, bad := range []time.Duration{-time.Second, 2 * time.Hour} {
+		if _, err := New(cfg, Options{Scenario: Quick, Rest: bad}); err == nil {
+			t.Errorf("a rest of %v is taken", bad)
+		}
+	}
+}
