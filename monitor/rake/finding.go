@@ -20,12 +20,15 @@ const (
 
 	restless   = int64(300e6)
 	proofHold  = int64(1e9)
+	leftHold   = int64(500e6)
 	lagHold    = int64(2e9)
 	departHold = int64(3e9)
 	clearHold  = int64(5e9)
 	forget     = int64(2e9) // a gap after which all that is compared begins anew
 
 	follows = 0.1        // part of the square of a departure that may remain when it is explained
+	decays  = 0.85       // part of its largest departure that a slow probe, being hot, must have come down to
+	outside = 0.25       // part of the limit by which a lag cannot leave where its mates have been
 	inStep  = 0.125      // part of the limit within which a probe is with its mates
 	respond = 0.75       // part of the limit that a slow probe must have been behind by
 	gradual = int64(4e9) // a departure that takes longer from a quarter of the limit to all of it is a drift
@@ -40,7 +43,10 @@ const (
 var lags = [...]int64{3e9, 6e9, 12e9, 25e9, 50e9, 100e9, 250e9}
 
 // Sense is how it is told what is wrong with the probes of a group. A slow probe follows
-// the level of its mates behind a lag. A shift of zero is the same at every pressure, a
+// the level of its mates behind a lag: it never leaves the range that they have gone
+// through, and comes closer in time. As long as a thermocouple that is hotter than its
+// mates does not come closer, it may be the gas, and that is never voted away; it is dead
+// only if its reading does not change at all. A shift of zero is the same at every pressure, a
 // leak takes the same part of it. A drift grows slowly. What is hot or cold of a sudden
 // may be the gas.
 type Sense struct {
@@ -100,6 +106,15 @@ type Suspect struct {
 	From   float64                // level of the group then
 	Moved  float64                // farthest that the group has gone from there
 	Most   float64                // largest departure since then
+	Low    float64                // lowest and highest level of the group since then
+	High   float64
+	Left   bool // it has left that range: no lag explains it
+
+	Leaves Hold // it is outside of the range
+
+	Last    float64
+	Changed int64 // when the reading was another one before
+	Still   bool  // what was found is of a reading that did not change
 
 	Short, Slow, Early, Beyond, Clear Hold   // Early: Depart is beyond a quarter of the limit
 	Past                              Models // since Early
@@ -209,7 +224,7 @@ func (c *Sense) all(f *Suspects, w *Watch, s *State, t, dt int64, level, gauge f
 		}
 		// A pattern is one of hot gas: cold metal has another.
 		p.Usual = of.Learned > 0 && of.Learned >= w.Learn && (c.Pressure || !(gauge < apart))
-		c.enter(p, values[i], values[i]-of.Offset, level, by)
+		c.enter(p, t, values[i], values[i]-of.Offset, level, by)
 		if !c.short(p, t, values[i], level, base) && !c.slow(p, f, t, level) {
 			c.depart(p, t, values[i]-base, gauge)
 		}
@@ -220,7 +235,10 @@ func (c *Sense) all(f *Suspects, w *Watch, s *State, t, dt int64, level, gauge f
 func part(dt, tau int64) float64 { return -math.Expm1(-float64(dt) / float64(tau)) }
 
 // enter takes a reading v of a probe in; y is v less its pattern.
-func (c *Sense) enter(p *Suspect, v, y, level float64, by *parts) {
+func (c *Sense) enter(p *Suspect, t int64, v, y, level float64, by *parts) {
+	if !p.Known || v != p.Last {
+		p.Last, p.Changed = v, t
+	}
 	if !p.Known {
 		p.Known, p.Value, p.Depart = true, v, y-level
 		p.sync(y, level)
@@ -233,6 +251,11 @@ func (c *Sense) enter(p *Suspect, v, y, level float64, by *parts) {
 		return
 	}
 	p.Moved, p.Most = max(p.Moved, math.Abs(level-p.From)), max(p.Most, math.Abs(p.Depart))
+	p.Low, p.High = min(p.Low, level), max(p.High, level)
+	beyond := outside * c.Limit
+	if p.Leaves.For(t, y < p.Low-beyond || y > p.High+beyond, leftHold) {
+		p.Left = true
+	}
 	seconds := float64(by.dt) / 1e9
 	p.Behind[0] += seconds * (y - level) * (y - level)
 	for k := range lags {
@@ -244,7 +267,8 @@ func (c *Sense) enter(p *Suspect, v, y, level float64, by *parts) {
 
 // sync begins anew with a probe that is in step.
 func (p *Suspect) sync(y, level float64) {
-	p.From, p.Moved, p.Most = level, 0, 0
+	p.From, p.Moved, p.Most, p.Low, p.High = level, 0, 0, level, level
+	p.Left, p.Leaves = false, Hold{}
 	for k := range p.Lagged {
 		p.Lagged[k] = y
 	}
@@ -271,9 +295,12 @@ func (c *Sense) short(p *Suspect, t int64, v, level, base float64) bool {
 }
 
 // slow tells a probe that follows its mates behind a lag; it stays so until they move
-// and it is in step.
+// and it is in step. One that did not change at all stays so until it does and is in step.
 func (c *Sense) slow(p *Suspect, f *Suspects, t int64, level float64) bool {
 	switch kind := p.Found.Kind; {
+	case p.Still && (kind == monitor.FindingSlow || kind.Dead()):
+		p.clear(t, t-p.Changed < proofHold && p.Behind[0] == 0, clearHold)
+		return true
 	case kind == monitor.FindingSlow || kind.Dead():
 		p.clear(t, math.Abs(level-f.Lagged) > c.Limit && p.Behind[0] == 0, lagHold)
 		return true
@@ -286,11 +313,15 @@ func (c *Sense) slow(p *Suspect, f *Suspects, t int64, level float64) bool {
 			best = k
 		}
 	}
-	enough := p.Moved > c.Limit && p.Most > respond*c.Limit && p.Behind[0] > c.Limit*c.Limit
+	tau := lags[best-1]
+	enough := p.Moved > c.Limit && p.Most > respond*c.Limit && p.Behind[0] > c.Limit*c.Limit && !p.Left
+	still := t-p.Changed >= lagHold
+	if !c.Pressure && p.Depart > 0 {
+		enough = enough && (still || tau <= dead && p.Depart < decays*p.Most)
+	}
 	if !p.Slow.For(t, enough && p.Behind[best] < follows*p.Behind[0], lagHold) {
 		return false
 	}
-	tau := lags[best-1]
 	kind := monitor.FindingSlow
 	switch {
 	case c.Pressure && tau > blocked:
@@ -299,6 +330,7 @@ func (c *Sense) slow(p *Suspect, f *Suspects, t int64, level float64) bool {
 		kind = monitor.FindingStuck
 	}
 	p.find(kind, true, p.Slow.Since, float64(tau)/1e9)
+	p.Still = still
 	return true
 }
 

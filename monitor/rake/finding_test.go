@@ -108,6 +108,53 @@ func TestStuckIsLeftOut(t *testing.T) {
 	}
 }
 
+// Gas that gets hotter at one probe while its mates cool down leaves the reading about
+// where it was, as a dead or a slow probe would: it is told as what may be gas, and counts.
+func TestHotGasIsNotVotedAway(t *testing.T) {
+	for _, heat := range []float64{45, 60, 80, 100, 130} {
+		for _, cools := range []float64{45, 60, 80, 100} {
+			g := newSensed(6, false, 40)
+			noise := 0.4
+			streak := func(heat float64) func(float64) float64 {
+				hot := behind(0, 1)
+				return func(level float64) float64 {
+					noise = -noise
+					return level + hot(heat) + noise
+				}
+			}
+			g.run(40, 900, 290, streak(0))
+			hot := streak(heat)
+			level := behind(900, 0.8)
+			for range 20 * 15 {
+				g.run(0.05, level(900-cools), 290, hot)
+			}
+			if f := g.f.Probes[0].Found; f.Kind != monitor.FindingHot || g.out != 0 {
+				t.Errorf("%g K hotter while the mates cool by %g K: found %v, left out %b", heat, cools, f.Kind, g.out)
+			}
+		}
+	}
+}
+
+// A reading that did not change, and does so again in step with its mates, is that of a
+// probe: nobody needs to wait for a throttle movement.
+func TestStuckThatMovesAgain(t *testing.T) {
+	g := newSensed(6, false, 40)
+	g.run(40, 900, 290, nil)
+	g.run(5, 800, 290, func(float64) float64 { return 899 })
+	g.found(t, monitor.FindingStuck, true)
+	noise := 0.4
+	alive := func(level float64) float64 {
+		noise = -noise
+		return level - 1 + noise
+	}
+	g.run(3, 800, 290, alive)
+	g.found(t, monitor.FindingStuck, true)
+	g.run(8, 800, 290, alive)
+	if g.found(t, monitor.NoFinding, false); g.out != 0 {
+		t.Errorf("left out %b", g.out)
+	}
+}
+
 // A short is told with and without a measured temperature of the terminals; one that is
 // out of reach of it is none. It ends when the probe is seen to be warm.
 func TestShort(t *testing.T) {

@@ -94,7 +94,7 @@ func (c *Corpus) Run(ctx context.Context, o Options, progress func(done, of int)
 			jobs = append(jobs, job{k, n})
 		}
 	}
-	for n := range int(o.Hours*1.06*3600/calmFor) + 1 { // a part of each hour is no calm
+	for n := range int(o.Hours*1.14*3600/calmFor) + 1 { // a part of each hour is no calm
 		jobs = append(jobs, job{-1, n})
 	}
 

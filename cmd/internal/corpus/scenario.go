@@ -38,7 +38,7 @@ func (r *run) skewed(t int64) (out [2]bool) {
 		//exhaustive:ignore
 		switch f.Kind {
 		case rehearsal.ClockSkew:
-			out[0] = out[0] || t > from+second/5 && t < to
+			out[0] = out[0] || t > from+second/5 && t < to && !r.away(t)
 			out[1] = out[1] || t >= from && t < to+3*second
 		case rehearsal.ClockPast, rehearsal.Burst, rehearsal.PublisherSilent:
 			out[1] = out[1] || t >= from && t < to+10*second
@@ -47,14 +47,26 @@ func (r *run) skewed(t int64) (out [2]bool) {
 	return out
 }
 
+// away tells whether the daemon is down at a time since the begin, or has not caught up:
+// what the broker kept has no time of arrival.
+func (r *run) away(t int64) bool {
+	for _, d := range r.restarts {
+		if t >= d.at && t <= d.at+d.down+catchesUp {
+			return true
+		}
+	}
+	return false
+}
+
 // jumpShows is how long it may take to tell a clock that jumped back, ns: a channel is
 // held for as long.
 const jumpShows = second / 4
 
 // astray tells whether what is sent at a time since the begin may find no place in
 // event time: with a clock that has just jumped back, or while the daemon was away if a
-// clock was wrong then. What the broker kept has no time of arrival, and late samples
-// of a clock that is right again look like those of one that is wrong still.
+// clock was wrong then, or until it had caught up. What the broker kept has no time of
+// arrival, late samples of a clock that is right again look like those of one that is
+// wrong still, and until the backlog is through a clock that lags looks like more of it.
 func (r *run) astray(t int64) bool {
 	for _, f := range r.faults {
 		from, to := int64(f.At), int64(f.At+f.For)
@@ -65,7 +77,7 @@ func (r *run) astray(t int64) bool {
 			continue
 		}
 		for _, d := range r.restarts {
-			if t >= d.at && t <= d.at+d.down && from <= d.at+d.down && to >= d.at {
+			if end := d.at + d.down + catchesUp; t >= d.at && t <= end && from <= end && to >= d.at {
 				return true
 			}
 		}
@@ -94,7 +106,7 @@ var kinds = []struct {
 	write func(*writer)
 }{
 	{"over-temperature", 220, (*writer).overTemperature},
-	{"starts", 320, (*writer).starts},
+	{"starts", 360, (*writer).starts},
 	{"choke", 60, (*writer).choke},
 	{"channels", 90, (*writer).channels},
 	{"lost", 120, (*writer).lost},

@@ -15,7 +15,8 @@ const second = int64(time.Second)
 // signal is what is known of a channel at an instant, without noise and error of
 // its sensor. While it is not certain which samples count, it is a range.
 type signal struct {
-	lo, hi  float64 // SI, as the channel reads
+	truly   float64 // SI, as a sound sensor would read now, sent or not
+	lo, hi  float64 // of what was sent
 	sure    int64   // time of the newest sample that counts, ns UTC
 	maybe   int64   // of the newest that may
 	reads   float64 // what the sensor says, faults and noise included; NaN if that is refused
@@ -87,10 +88,11 @@ func (s *signals) step(t *rehearsal.Truth) {
 				c.hidden = c.hidden || f.proven < 0 || since < f.proven || s.t-s.begin >= f.to
 			}
 		}
+		c.truly = t.Indicated[i]
 		if !t.Sent[i] {
 			continue
 		}
-		v := t.Indicated[i]
+		v := c.truly
 		if t.Late[i] {
 			c.lo, c.hi, c.maybe = min(c.lo, v), max(c.hi, v), s.t
 			continue
@@ -166,6 +168,9 @@ func (s *signals) mean(g *group, list []int, weights []float64, least int) {
 		}
 		c := &s.ch[i]
 		lo, hi := c.lo, c.hi
+		if c.sure != s.t { // the true mean goes on
+			lo, hi = min(lo, c.truly), max(hi, c.truly)
+		}
 		pLo, pHi := 0.0, 0.0
 		if p := s.port(i); p >= 0 {
 			pLo, pHi = s.absolute(p)

@@ -77,7 +77,9 @@ func (a *allowance) step(t, dt int64, v float64, holds bool) {
 type band struct {
 	egt.Band
 	sure, maybe allowance
-	straight    int64 // ns surely above without a break
+	straight    int64  // ns surely above without a break
+	beyond      string // names of its rules
+	over        string
 }
 
 // limit is a limit of a channel.
@@ -123,7 +125,7 @@ type truth struct {
 	spread   [2]float64   // K, of the harness
 	cranked  [2]cranking  // surely and possibly
 	quiet    int64        // ns for which the rotor has moved little
-	learned  int64        // ns of steady running with a sound harness
+	learned  int64        // ns of steady running with a sound harness, and no streak
 	rules    []rules.Rule
 	expect   []expectation
 }
@@ -160,7 +162,7 @@ func newTruth(cfg *pipeline.Config, begin int64, faults []fault, bad []health) *
 	}
 	u /= float64(len(st.EGT))
 	for _, b := range c.EGT.Bands {
-		one := band{Band: b}
+		one := band{Band: b, beyond: "egt_" + b.Name + "_exceeded", over: "egt_" + b.Name + "_over"}
 		one.sure = allowance{above: b.Limit + u, below: b.Limit - b.Deadband + u, rearm: b.Rearm - 2*tr.period}
 		one.maybe = allowance{above: b.Limit - u, below: b.Limit - b.Deadband - u, rearm: b.Rearm + 2*tr.period}
 		tr.bands = append(tr.bands, one)
@@ -340,11 +342,19 @@ func (tr *truth) aftermath(dt int64) {
 	if tr.quiet += dt; !tr.fast[0] || math.Abs(tr.cutoff) > ph.MoveRate/2 {
 		tr.quiet = 0
 	}
-	if tr.quiet > 2*ph.SteadyAfter && !slices.ContainsFunc(st.EGT, func(i int) bool { return tr.ch[i].faulty }) {
+	if tr.quiet > 2*ph.SteadyAfter && !slices.ContainsFunc(st.EGT, tr.strikes) {
 		tr.learned += dt
 	}
 	both := math.Sqrt2 * tr.u95(st.EGT[0], 0)
 	tr.spread = [2]float64{soundHi - soundLo - both, hi - lo + both}
+}
+
+// strikes tells whether a fault or a streak of hot gas is at a channel, or was a little ago.
+func (tr *truth) strikes(i int) bool {
+	now := tr.t - tr.begin
+	return slices.ContainsFunc(tr.faults, func(f fault) bool {
+		return f.channel == i && now >= f.from && now < f.to+recovers
+	})
 }
 
 // throat finds the margin and whether choke is armed.
@@ -429,9 +439,9 @@ func (tr *truth) condition(r *rules.Rule) condition {
 	for i := range tr.bands {
 		b := &tr.bands[i]
 		switch r.Name {
-		case "egt_" + b.Name + "_exceeded":
+		case b.beyond:
 			return plain(b.exceeded(tr.period))
-		case "egt_" + b.Name + "_over":
+		case b.over:
 			return plain(b.maybe.on, b.sure.on && b.sure.last > b.sure.above && b.straight > tr.period)
 		}
 	}
@@ -488,9 +498,12 @@ func (tr *truth) named(name string) condition {
 		const least = 0.002 // kg/s, from the rule
 		fuel := &tr.ch[st.FuelFlow]
 		u := tr.u95(st.FuelFlow, least)
+		// A single reading below begins the on-delay anew: with 95 % the lowest of the
+		// 200 in it is not more than 1.8 times its U95 below (JCGM 100, G.1.3: normal).
+		every := math.Hypot(u, 1.5*tr.cfg.Compute.Channels[st.FuelFlow].Uncertainty.Random)
 		sure, _ := tr.known(st.FuelFlow)
 		return plain(tr.rest && !tr.burns[0] && fuel.hi+u > least,
-			tr.rest && turns && !tr.burns[1] && sure && fuel.lo-u > least && tr.cutoff > -ph.MoveRate/2)
+			tr.rest && turns && !tr.burns[1] && sure && fuel.lo-every > least && tr.cutoff > -ph.MoveRate/2)
 	case "egt_spread":
 		limit := tr.cfg.Compute.EGT.Limits.Spread
 		return plain(tr.spread[1] > limit, tr.harness.sure && tr.spread[0] > limit)

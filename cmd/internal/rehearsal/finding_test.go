@@ -110,10 +110,11 @@ func TestFindings(t *testing.T) {
 		{"probe-short@90s:t7_2", []string{"short proven"}, 92.5, true, []string{"sensor_failed"}},
 		{"probe-stuck@90s:egt_3", []string{"stuck proven"}, 114, true, []string{"sensor_failed"}}, // 20 s of one value; by its mates at the step
 		{"probe-stuck@90s:p7_2", []string{"stuck proven"}, 101.1, false, []string{"sensor_failed"}},
-		{"probe-slow@90s:egt_3", []string{"slow proven"}, 114, false, []string{"sensor_failed"}},
-		{"probe-slow@90s*0.5:egt_3", []string{"slow proven"}, 114, false, []string{"sensor_failed"}},
+		// A slow probe is hot after the step down: gas, until it is seen to come closer.
+		{"probe-slow@90s:egt_3", []string{"hot_streak suspected", "slow proven"}, 119, false, []string{"egt_hot_streak", "sensor_failed"}},
+		{"probe-slow@90s*0.5:egt_3", []string{"slow proven"}, 117, false, []string{"sensor_failed"}},
 		{"probe-slow@1s:egt_3", []string{"slow proven"}, 20, false, []string{"sensor_failed"}},
-		{"probe-slow@90s:t7_2", []string{"slow proven"}, 114, true, []string{"sensor_failed"}},
+		{"probe-slow@90s:t7_2", []string{"hot_streak suspected", "slow proven"}, 121, true, []string{"sensor_failed"}},
 		{"probe-drift@90s:egt_3", []string{"drift suspected"}, 116, false, []string{"egt_hot_streak"}}, // 2.3 K/s past 40 K
 		{"probe-drift@90s:t7_2", []string{"drift suspected"}, 116, true, []string{"sensor_doubtful"}},
 		{"hot-streak@90s:egt_3", []string{"hot_streak suspected"}, 96, false, []string{"egt_hot_streak"}},
