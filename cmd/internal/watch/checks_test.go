@@ -1,10 +1,12 @@
 package watch_test
 
 import (
+	"bytes"
 	"encoding/json"
 	"errors"
 	"log/slog"
 	"math"
+	"os"
 	"path/filepath"
 	"runtime"
 	"slices"
@@ -29,15 +31,40 @@ type doing struct {
 	do pipeline.Action
 }
 
+// dayRig loads the example rig, with fewer scans and a run that ends soon after the engine
+// is at rest, so that a day is short.
+func dayRig(t *testing.T) (config.Bundle, pipeline.Config) {
+	t.Helper()
+	text, err := os.ReadFile(exampleRig)
+	if err != nil {
+		t.Fatal(err)
+	}
+	for _, edit := range [][2]string{{"rate: 20/s", "rate: 10/s"}, {"off_after: 30 s", "off_after: 3 s"}, {"end_after: 120 s", "end_after: 3 s"}} {
+		if bytes.Count(text, []byte(edit[0])) != 1 {
+			t.Fatalf("the rig file has not one %q", edit[0])
+		}
+		text = bytes.ReplaceAll(text, []byte(edit[0]), []byte(edit[1]))
+	}
+	path := filepath.Join(t.TempDir(), "rig.yaml")
+	if err := os.WriteFile(path, text, 0o600); err != nil {
+		t.Fatal(err)
+	}
+	b, cfg, wrong := config.Load(path)
+	if err := watch.Faults(wrong); err != nil {
+		t.Fatal(err)
+	}
+	return b, cfg
+}
+
 // shortDay is a test with rest enough before and after it for a check: the engine begins
-// to turn at 45 s and is at rest again before 100 s.
+// to turn at 20 s, idles from 30 s on, and is at rest again before 80 s.
 func shortDay() []rehearsal.Segment {
 	return []rehearsal.Segment{
-		{Name: "off", Seconds: 45},
+		{Name: "off", Seconds: 20},
 		{Name: "crank", Seconds: 2.5, Starter: true},
 		{Name: "light-off", Seconds: 7, Speed: 0.45, Starter: true, Fuel: true},
 		{Name: "idle", Seconds: 8, Speed: 0.45, Fuel: true},
-		{Name: "shutdown", Seconds: 60},
+		{Name: "shutdown", Seconds: 43},
 	}
 }
 
@@ -50,14 +77,12 @@ func checkOf(cfg *pipeline.Config, phase, warmth string) pipeline.Action {
 	return pipeline.Action{Do: pipeline.DoCheck, Check: q, By: "R. Aldous", RequestID: phase}
 }
 
-// playDay plays the short day with faults, and what people do at its times.
-func playDay(t *testing.T, after float64, faults []string, acts []doing, take func(in watch.Input, host int64)) {
+// playDay plays the short day with faults, rest for so many seconds after it, and a check before
+// and after the run.
+func playDay(t *testing.T, after float64, faults []string, take func(in watch.Input, host int64)) {
 	t.Helper()
-	b, cfg, wrong := config.Load(exampleRig)
-	if err := watch.Faults(wrong); err != nil {
-		t.Fatal(err)
-	}
-	o := rehearsal.Options{Seed: 3, Rate: 20, Start: testBegin, Plan: append(shortDay(), rehearsal.Segment{Name: "off", Seconds: after})}
+	b, cfg := dayRig(t)
+	o := rehearsal.Options{Seed: 3, Rate: 10, Start: testBegin, Plan: append(shortDay(), rehearsal.Segment{Name: "off", Seconds: after})}
 	for _, text := range faults {
 		f, err := rehearsal.ParseFault(text)
 		if err != nil {
@@ -69,6 +94,7 @@ func playDay(t *testing.T, after float64, faults []string, acts []doing, take fu
 	if err != nil {
 		t.Fatal(err)
 	}
+	acts := []doing{{8 * time.Second, checkOf(&cfg, check.Before, check.Cold)}, {85 * time.Second, checkOf(&cfg, check.After, check.Warm)}}
 	take(watch.Input{Kind: ingest.KindBoot, Payload: []byte(`{}`)}, testBegin)
 	take(watch.Input{Kind: ingest.KindConfig, Payload: b.Marshal()}, testBegin)
 	var msgs []rehearsal.Message
@@ -92,10 +118,8 @@ func playDay(t *testing.T, after float64, faults []string, acts []doing, take fu
 // the records, and what was told of checks as JSON.
 func checkedDay(t *testing.T, faults ...string) (records []ingest.Record, told []string) {
 	t.Helper()
-	_, cfg, _ := config.Load(exampleRig)
 	core := watch.NewCore(pipeline.NewMachine(parseOnce()), &pipeline.Replay{State: &pipeline.State{}, Digest: pipeline.NewDigest()}, "test", "test")
-	acts := []doing{{33 * time.Second, checkOf(&cfg, check.Before, check.Cold)}, {110 * time.Second, checkOf(&cfg, check.After, check.Warm)}}
-	playDay(t, 1, faults, acts, func(in watch.Input, host int64) {
+	playDay(t, 17, faults, func(in watch.Input, host int64) {
 		told = append(told, checksOf(t, core.Take(in, host))...)
 		batch, err := core.Cut()
 		if err != nil {
@@ -152,8 +176,8 @@ func TestChecks(t *testing.T) {
 			"zero.p_exit, temperature.egt_3", "zero.p_exit",
 		},
 		{"silent, noisy", []string{"barometer-loss@0s:t_fuel", "noisy@0s:p_inlet"}, "signal.p_inlet, signal.t_fuel", "signal.p_inlet, signal.t_fuel"},
-		// 150 Pa, beyond the 70 Pa that draughts explain.
-		{"a zero that moves during the run", []string{"pressure-zero-shift@60s:dp_bellmouth"}, "", "zero.dp_bellmouth, shift.dp_bellmouth"},
+		// 160 Pa, beyond the 70 Pa that draughts explain.
+		{"a zero that moves during the run", []string{"pressure-zero-shift@35s:dp_bellmouth"}, "", "zero.dp_bellmouth, shift.dp_bellmouth"},
 	} {
 		records, told := checkedDay(t, tt.faults...)
 		if len(told) != 5 {
@@ -202,13 +226,13 @@ func TestChecks(t *testing.T) {
 	}
 }
 
-// A reduction subtracts the zeros that the checks of its run have found: that before, that
-// after, or what lies between by event time. A check after the end of a run is stored with
+// A reduction subtracts the zeros that the checks of its run have found: that of one of
+// them, or what lies between by event time. A check after the end of a run is stored with
 // it too. Channels that are no pressure, and all else of the run, stay.
 func TestReduceZero(t *testing.T) {
 	t.Parallel()
 	dir := t.TempDir()
-	_, cfg, _ := config.Load(exampleRig)
+	_, cfg := dayRig(t)
 	store, err := watch.OpenStore(t.Context(), dir, runfile.Options{}, slog.New(slog.DiscardHandler))
 	if err != nil {
 		t.Fatal(err)
@@ -220,8 +244,7 @@ func TestReduceZero(t *testing.T) {
 	feed := watch.NewFeed(core, store)
 	var run string
 	ended := false
-	acts := []doing{{33 * time.Second, checkOf(&cfg, check.Before, check.Cold)}, {250 * time.Second, checkOf(&cfg, check.After, check.Warm)}}
-	playDay(t, 150, []string{"pressure-zero-shift@60s:p7_2"}, acts, func(in watch.Input, host int64) {
+	playDay(t, 17, []string{"pressure-zero-shift@35s:p7_2"}, func(in watch.Input, host int64) {
 		if err := feed.Take(t.Context(), in, host); err != nil {
 			t.Fatal(err)
 		}
@@ -250,7 +273,7 @@ func TestReduceZero(t *testing.T) {
 		}
 		return 0, 0
 	}
-	for _, which := range []string{watch.ZeroBefore, watch.ZeroAfter, watch.ZeroInterpolated} {
+	for _, which := range []string{watch.ZeroAfter, watch.ZeroInterpolated} {
 		res, err := runs.Reduce(t.Context(), watch.ReduceOptions{Run: run, Zero: which, By: "R. Aldous"})
 		if err != nil {
 			t.Fatal(err)
@@ -270,7 +293,7 @@ func TestReduceZero(t *testing.T) {
 				t.Errorf("%s: %s has %d values, %d in the run", which, id, len(reduced[id]), len(values[id]))
 			}
 			for at, v := range values[id] {
-				want := map[string]float64{watch.ZeroBefore: a, watch.ZeroAfter: b, watch.ZeroInterpolated: a + (b-a)*(float64(at)/1e9-t0)/max(t1-t0, 1)}[which]
+				want := map[string]float64{watch.ZeroAfter: b, watch.ZeroInterpolated: a + (b-a)*(float64(at)/1e9-t0)/max(t1-t0, 1)}[which]
 				// A sample is up to its hold time older than its scan: 0.25 s of the slope.
 				if got := v - reduced[id][at]; math.Abs(got-want) > 1e-6+0.3*math.Abs(b-a)/max(t1-t0, 1) {
 					t.Fatalf("%s: %s at %d loses %g, want %g", which, id, at, got, want)
@@ -282,11 +305,11 @@ func TestReduceZero(t *testing.T) {
 		t.Error("a zero of the middle is taken")
 	}
 	// The zeros are those of the readings as they are calibrated: a child has the same.
-	res, err := runs.Reduce(t.Context(), watch.ReduceOptions{Run: run + "-r1", Zero: watch.ZeroAfter})
+	res, err := runs.Reduce(t.Context(), watch.ReduceOptions{Run: run + "-r2", Zero: watch.ZeroAfter})
 	if err != nil {
 		t.Fatal(err)
 	}
-	if second, err := runs.Catalog.Get(t.Context(), run+"-r2"); err != nil || res.Run.Digest != second.Digest {
+	if second, err := runs.Catalog.Get(t.Context(), run+"-r1"); err != nil || res.Run.Digest != second.Digest {
 		t.Errorf("a child of a child is another: %v, sha256 %s, want %s", err, res.Run.Digest, second.Digest)
 	}
 }
@@ -308,8 +331,8 @@ func stretchOf(t *testing.T, runs watch.StoredRuns, id string) (checks []check.R
 		t.Fatal(err)
 	}
 	values = map[string]map[int64]float64{}
-	from := testBegin + int64(55*time.Second)
-	err = pipeline.Rows(t.Context(), f, archive.NewCodec(), pipeline.ChunkChannels, nil, from, from+int64(8*time.Second), func(c *archive.Chunk, first, last int) {
+	from := testBegin + int64(31*time.Second)
+	err = pipeline.Rows(t.Context(), f, archive.NewCodec(), pipeline.ChunkChannels, nil, from, from+int64(6*time.Second), func(c *archive.Chunk, first, last int) {
 		for i := range c.Columns {
 			id, ok := strings.CutPrefix(c.Columns[i].Name, "channel.")
 			if !ok || c.Columns[i].Kind != archive.KindFloat {
