@@ -311,6 +311,18 @@ func open(ctx context.Context, path string, mode Mode, opt Options) (*File, erro
 	return f, nil
 }
 
+// rollBack undoes the change of a file that was cut off while it went over to the log
+// or left it: that is done by a rollback journal, which a reader may not touch.
+func rollBack(ctx context.Context, path string) error {
+	db, err := connect(path, "rw", 1)
+	if err != nil {
+		return err
+	}
+	var tables int // any reading does it
+	err = db.QueryRowContext(ctx, "SELECT count(*) FROM sqlite_schema").Scan(&tables)
+	return errors.Join(err, db.Close())
+}
+
 func newFile(path string, opt Options) (*File, error) {
 	dec, err := zstd.NewReader(nil, zstd.WithDecoderConcurrency(1), zstd.WithDecoderMaxMemory(1<<30))
 	if err != nil {
@@ -330,6 +342,11 @@ func (f *File) connectAll(ctx context.Context, mode Mode) (err error) {
 		return err
 	}
 	err = identify(ctx, f.read, applicationID, formatVersion)
+	if code(err) == sqlite3.SQLITE_READONLY_ROLLBACK {
+		if err = rollBack(ctx, f.path); err == nil {
+			err = identify(ctx, f.read, applicationID, formatVersion)
+		}
+	}
 	if mode == ReadOnly {
 		if isDamage(err) {
 			// SQLite refuses a file that is shorter than its header says, unless
