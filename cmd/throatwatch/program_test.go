@@ -54,11 +54,17 @@ type program struct {
 	ended          chan struct{} // closed when the process is gone
 }
 
+// itself gives the command line and the environment by which this binary is the program.
+func itself() (command, env []string) {
+	return []string{os.Args[0]}, []string{asProgram + "=1", "GORACE=halt_on_error=1 atexit_sleep_ms=0"}
+}
+
 // start starts a command. It is killed at the end of the test if it still runs.
 func start(t *testing.T, args ...string) *program {
 	t.Helper()
-	p := &program{t: t, cmd: exec.CommandContext(context.Background(), os.Args[0], args...), ended: make(chan struct{})}
-	p.cmd.Env = append(os.Environ(), asProgram+"=1", "GORACE=halt_on_error=1 atexit_sleep_ms=0")
+	self, env := itself()
+	p := &program{t: t, cmd: exec.CommandContext(context.Background(), self[0], args...), ended: make(chan struct{})}
+	p.cmd.Env = append(os.Environ(), env...)
 	p.cmd.Stdout, p.cmd.Stderr = &p.stdout, &p.stderr
 	if err := p.cmd.Start(); err != nil {
 		t.Fatal(err)
@@ -407,15 +413,22 @@ func replayed(t *testing.T, data string) (runLine, []string) {
 	return list[0], strings.Split(strings.TrimSuffix(lines, "\n"), "\n")
 }
 
-// watchedRun is the run that a daemon says is on; nil when there is none.
-func watchedRun(t *testing.T, page string) (r *runSeen, epoch uint64) {
-	t.Helper()
-	code, body := fetch(t, http.MethodGet, page+"/api/rigs/cell_2/hello", nil)
-	var h frame
-	if err := json.Unmarshal(body, &h); code != http.StatusOK || err != nil {
-		t.Fatalf("hello: %d, %v: %s", code, err, body)
+func allConnected(f *frame) bool {
+	for _, s := range f.Sessions {
+		if !s.Connected {
+			return false
+		}
 	}
-	return h.Run, h.Epoch
+	return f.Kind == "status" && len(f.Sessions) > 0
+}
+
+// awaitRun waits until a run is on, and gives its id.
+func awaitRun(t *testing.T, page string) string {
+	t.Helper()
+	f := follow(t, page, "").await("start of a run", func(f *frame) bool {
+		return f.Run != nil && (f.Kind == "hello" || isRun("started")(f))
+	})
+	return f.Run.ID
 }
 
 // metric reads one value from the text of /metrics.

@@ -1,14 +1,19 @@
 package main
 
 import (
+	"context"
 	"encoding/json"
 	"net/http"
 	"os"
 	"strings"
+	"sync"
 	"testing"
+	"time"
 
 	"throatwatch/cmd/internal/config"
+	"throatwatch/cmd/internal/rehearsal"
 	"throatwatch/cmd/internal/watch"
+	"throatwatch/ingest/mqtt"
 	"throatwatch/ingest/mqtt/mqtttest"
 	"throatwatch/rules/pipeline"
 )
@@ -116,4 +121,40 @@ func TestReloadOfAWatch(t *testing.T) {
 	if stored.ID != run {
 		t.Errorf("run %s is stored, %s was on", stored.ID, run)
 	}
+}
+
+// dataSystem publishes a whole test as the data system of a rig does, and
+// waits until the broker has it all. It outlives the daemon.
+type dataSystem struct {
+	err   error
+	ended chan struct{}
+}
+
+// play publishes the quick test at double speed, 100 messages per second.
+func play(t *testing.T, cfg pipeline.Config, broker string, seed uint64) *dataSystem {
+	t.Helper()
+	p, err := mqtt.NewPublisher(mqtt.PublisherConfig{URL: broker})
+	if err != nil {
+		t.Fatal(err)
+	}
+	d := &dataSystem{ended: make(chan struct{})}
+	ctx, stop := context.WithCancel(context.Background())
+	var running sync.WaitGroup
+	running.Go(func() { _ = p.Run(ctx) }) // ends by stop
+	go func() {
+		defer close(d.ended)
+		rig, err := rehearsal.New(cfg, rehearsal.Options{Scenario: rehearsal.Quick, Speed: 2, Rate: 100, Seed: seed, Start: time.Now().UnixNano()})
+		if err != nil {
+			d.err = err
+			return
+		}
+		d.err = rehearsal.Run(ctx, rig, waitUntil, func(ctx context.Context, m rehearsal.Message) error {
+			return p.Publish(ctx, m.Topic, m.Payload)
+		})
+		if d.err == nil {
+			d.err = p.Flush(ctx)
+		}
+	}()
+	t.Cleanup(func() { stop(); <-d.ended; running.Wait() })
+	return d
 }
