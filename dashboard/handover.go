@@ -50,10 +50,11 @@ func waivers(cfg *pipeline.Config, t int64) []Waiver {
 	list := []Waiver{}
 	for i := range cfg.Compute.Channels {
 		c := &cfg.Compute.Channels[i]
-		if state := c.Record.State(t); state == calib.Waived || state == calib.Expired {
-			w := Waiver{Channel: c.ID, Serial: c.Record.Serial, Due: c.Record.Due, State: state.String()}
+		r := c.RecordAt(t)
+		if state := r.State(t); state == calib.Waived || state == calib.Expired {
+			w := Waiver{Channel: c.ID, Serial: r.Serial, Due: r.Due, State: state.String()}
 			if state == calib.Waived {
-				w.Who, w.Why, w.Until = c.Record.Waiver.Who, c.Record.Waiver.Why, c.Record.Waiver.Until
+				w.Who, w.Why, w.Until = r.Waiver.Who, r.Waiver.Why, r.Waiver.Until
 			}
 			list = append(list, w)
 		}

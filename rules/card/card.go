@@ -26,6 +26,8 @@ const (
 	MostTargets = 12
 	// MostText bounds the text of a card, bytes.
 	MostText = 48 << 10
+	// longest is the longest soak and average, s.
+	longest = 86400
 	// takenKept is how many points that were taken the state holds, for those who begin
 	// to look; all of them are in the run files.
 	takenKept = 40
@@ -130,7 +132,7 @@ func (d *planned) resolve(pt *Point, channels []string) error {
 	switch {
 	case len(pt.Targets) == 0 || len(pt.Targets) > MostTargets || len(pt.Needs) > MostTargets:
 		return fmt.Errorf("%d targets and %d things that must be good, 1 to %d and %d at most can be: %w", len(pt.Targets), len(pt.Needs), MostTargets, MostTargets, ErrCard)
-	case !(pt.Soak >= 0 && pt.Average > 0):
+	case !(pt.Soak >= 0 && pt.Soak <= longest && pt.Average > 0 && pt.Average <= longest):
 		return fmt.Errorf("soak of %g s and averaging of %g s: %w", pt.Soak, pt.Average, ErrCard)
 	case pt.Choke != "" && pt.Choke != Armed && pt.Choke != Disarmed:
 		return fmt.Errorf("choke %q: %w", pt.Choke, ErrCard)

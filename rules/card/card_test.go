@@ -416,6 +416,8 @@ func TestRefusedCards(t *testing.T) {
 		{"no tolerance", func(c *Card) { c.Points[0].Targets[0].Tolerance = rules.Reading{} }, ErrCard},
 		{"bounds that exclude", func(c *Card) { c.Points[0].Targets[0].Low.V = 1e6 }, ErrCard},
 		{"no averaging", func(c *Card) { c.Points[0].Average = 0 }, ErrCard},
+		{"averaging without an end", func(c *Card) { c.Points[0].Average = math.Inf(1) }, ErrCard},
+		{"a soak of no time", func(c *Card) { c.Points[0].Soak = math.NaN() }, ErrCard},
 		{"an odd expectation", func(c *Card) { c.Points[0].Choke = "yes" }, ErrCard},
 	} {
 		c := threePoints()

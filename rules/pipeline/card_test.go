@@ -260,8 +260,7 @@ func TestCardRefused(t *testing.T) {
 	b.expect(OutcomeLog, "card_load by Mara Lindqvist")
 }
 
-// A run that ends breaks off what is averaged, and a configuration that the card does not
-// fit puts it out of use.
+// A run that ends breaks off what is averaged.
 func TestCardBroken(t *testing.T) {
 	b := started(t)
 	b.play(pointOne, 8*second)
@@ -274,6 +273,36 @@ func TestCardBroken(t *testing.T) {
 	}
 	if b.s.Card.Average.On || len(b.s.Card.Taken) != 0 || len(b.s.Gathering.Pasts) != 0 {
 		t.Errorf("after the end of the run: %+v", b.s.Card)
+	}
+}
+
+// A configuration that the card does not fit puts it out of use, and says why; it is of
+// use again when it fits.
+func TestCardUnfit(t *testing.T) {
+	b := &bed{tb: t, m: NewMachine(func(bundle []byte) (Config, error) {
+		cfg := rig(t)
+		cfg.Hash = string(bundle)
+		if cfg.Hash == "another engine" {
+			cfg.Rig.EngineSerial = "ML5-0099"
+		}
+		return cfg, nil
+	}), s: &State{}, r: ingest.Record{Host: epoch - second}}
+	b.record(ingest.KindBoot, `{"epoch":1}`)
+	b.record(ingest.KindConfig, "one")
+	b.play(atRest, 3*second)
+	loadCard(b, fivePoints())
+	for _, tt := range []struct {
+		bundle string
+		unfit  bool
+	}{{"another engine", true}, {"one", false}} {
+		b.record(ingest.KindConfig, tt.bundle)
+		b.play(atRest, second)
+		if unfit := strings.Contains(b.s.Card.Unfit, "ML5-0099"); unfit != tt.unfit || unfit == (b.m.plan(b.s) != nil) {
+			t.Errorf("on %s: unfit %q", tt.bundle, b.s.Card.Unfit)
+		}
+		if err := b.act(operator(Action{Do: "skip", Reason: "test"})); (err != nil) != tt.unfit {
+			t.Errorf("a skip on %s: %v", tt.bundle, err)
+		}
 	}
 }
 
