@@ -52,7 +52,7 @@ export function ask(question: string, action: string): Promise<boolean> {
 export interface Field {
   name: string;
   label: string;
-  kind?: 'text' | 'number' | 'password' | 'select';
+  kind?: 'text' | 'number' | 'password' | 'select' | 'area';
   options?: readonly (readonly [value: string, label: string])[];
   value?: string;
   optional?: boolean;
@@ -61,10 +61,11 @@ export interface Field {
 }
 
 /** The control of a field with its label. */
-export function control(f: Field): { el: HTMLElement; input: HTMLInputElement | HTMLSelectElement } {
+export function control(f: Field): { el: HTMLElement; input: HTMLInputElement | HTMLSelectElement | HTMLTextAreaElement } {
   const shared = { name: f.name, required: !f.optional, 'data-q': `field-${f.name}` };
   const input = f.kind === 'select'
     ? h('select', shared, ...(f.options ?? []).map(([v, label]) => h('option', { value: v, selected: v === f.value }, label)))
+    : f.kind === 'area' ? h('textarea', { ...shared, rows: '4', maxlength: '8000', spellcheck: 'false', placeholder: f.hint ?? null })
     : h('input', { ...shared, type: f.kind === 'number' ? 'text' : f.kind ?? 'text', inputmode: f.kind === 'number' ? 'decimal' : null, value: f.value ?? null, maxlength: '200', autocomplete: 'off', placeholder: f.hint ?? null, pattern: f.kind === 'number' ? '[+\\-−]?\\d*[.,]?\\d+([eE][+\\-]?\\d+)?' : f.pattern ?? null });
   return { el: h('label', { class: 'field' }, h('span', { class: 'label' }, f.label), input), input };
 }

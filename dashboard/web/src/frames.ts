@@ -86,7 +86,12 @@ export interface Channel {
   high: Num;
   recorded_only: boolean;
   station: string;
+  sensor?: Sensor | null; // null: nothing is on file
+  swaps?: Sensor[] | null; // that took its place, by the rig file
 }
+
+/** What is on file of a sensor; dates are YYYY-MM-DD, "" is not stated. */
+export interface Sensor { valid_from: string | null; serial: string; certificate: string; calibrated: string; due: string; waiver: { who: string; why: string; until: string } | null }
 
 export interface RigInfo {
   id: string;
@@ -288,11 +293,9 @@ export interface Handover {
   rig: RigInfo;
   run: Run | null;
   alarms: Partial<Record<'standing' | 'shelved' | 'out_of_service' | 'suppressed', Alarm[] | null>>;
-  waivers: unknown[] | null;
-  card: { title: string; number: string; revision: string; open: string[] | null; awaiting: number[] | null } | null;
+  card: { title: string; number: string; revision: string; open: string[] | null; skipped?: string[] | null; awaiting: number[] | null } | null;
   limits_version: string;
   config: ConfigState & { reason?: string };
-  checks: Checks | CheckSet | null;
   notes: LogEntry[] | null;
 }
 
@@ -391,6 +394,7 @@ export interface ChannelValue {
   age_s: Num;
   finding?: string; // what is wrong with the sensor; "" for nothing
   proven?: boolean; // else it is suspected
+  calibration?: 'not_on_file' | 'in_date' | 'waived' | 'expired'; // of its sensor
 }
 export interface ChannelsFrame extends Numbered { kind: 'channels'; channels: Record<string, ChannelValue> }
 export interface AlarmFrame extends Numbered { kind: 'alarm'; alarm: Alarm }

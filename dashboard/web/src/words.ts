@@ -1,7 +1,7 @@
 // How values of an operating point are put into words.
 
-import type { ChannelValue, Num, PointFrame } from './frames';
-import { duration } from './time';
+import type { Channel, ChannelValue, Num, PointFrame, Sensor } from './frames';
+import { duration, seconds } from './time';
 import { fixed, signed } from './units';
 
 export interface StateLook { shape: string; word: string; marginal: boolean; cause: string }
@@ -76,6 +76,27 @@ export function standIns(p: PointFrame | null): string[] {
 
 /** A source of a value, for people. */
 export const sourceWord = (s: string): string => sources[s] ?? s.replaceAll('_', ' ');
+
+/** What is on file of the sensor that a channel has at t, s. */
+export function sensorAt(c: Channel, t: number): Sensor | null {
+  const later = (c.swaps ?? []).filter((s) => !(seconds(s.valid_from) > t));
+  return later[later.length - 1] ?? c.sensor ?? null;
+}
+
+/** The state of a sensor's calibration. */
+export function calibrationText(s: Sensor | null, state: ChannelValue['calibration']): string {
+  switch (state) {
+    case 'in_date': return s?.due ? `due ${s.due}` : 'in date';
+    case 'expired': return `▲ expired${s?.due ? ` ${s.due}` : ''}`;
+    case 'waived': return `△ waived${s?.waiver ? ` by ${s.waiver.who}` : ''}`;
+    case 'not_on_file': return 'not on file';
+    default: return '–';
+  }
+}
+
+/** All that is on file of a sensor, in words. */
+export const sensorText = (s: Sensor | null): string => (s ? [`serial ${s.serial}`, s.certificate && `certificate ${s.certificate}`, s.calibrated && `calibrated ${s.calibrated}`, s.due && `due ${s.due}`,
+  s.waiver && `waived by ${s.waiver.who}: ${s.waiver.why}${s.waiver.until ? `, until ${s.waiver.until}` : ''}`].filter(Boolean).join(', ') : 'nothing is on file');
 
 /** What is wrong with a sensor, and whether that is proven; "" for nothing. */
 export function findingText(v: ChannelValue): string {

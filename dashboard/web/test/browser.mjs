@@ -3,6 +3,7 @@
 // a rig file. SHOTS is a folder for screenshots; SHOTS_README=1 renews the pictures
 // of the README. Ports, data and the browser's profile are its own.
 import assert from 'node:assert/strict';
+import { spawn } from 'node:child_process';
 import { appendFileSync, cpSync, mkdirSync, mkdtempSync, readFileSync, rmSync, writeFileSync } from 'node:fs';
 import { tmpdir } from 'node:os';
 import { basename, dirname, join } from 'node:path';
@@ -25,6 +26,11 @@ if (shots) mkdirSync(shots, { recursive: true });
 if (renew) mkdirSync(pictures, { recursive: true });
 
 const began = Date.now();
+// A rehearsed test day passes beside the rest, with a daemon and a browser of its own.
+const day = spawn(process.execPath, [join(root, 'test/day.mjs')], { stdio: ['ignore', 'pipe', 'pipe'] });
+let dayTold = '';
+for (const out of [day.stdout, day.stderr]) out.on('data', (b) => { dayTold += b; });
+const dayEnded = new Promise((done) => { day.once('exit', done); });
 const place = mkdtempSync(join(tmpdir(), 'throatwatch-page-'));
 const context = await chromium.launchPersistentContext(join(place, 'profile'), {
   executablePath: CHROMIUM, viewport: { width: 1440, height: 900 },
@@ -955,11 +961,18 @@ try {
     assert.ok(frames > 120_000 && last < first * 1.05 + 500_000, `${heap.join(', ')} bytes`);
   });
 
+  await check('a test day: checks, card, swap, zero shift, hand-over, report', async () => {
+    const code = await dayEnded;
+    console.log(dayTold.trim().replace(/^/gm, '     '));
+    assert.equal(code, 0);
+  });
+
   await check('no fault in the console, nothing loaded from outside', () => {
     assert.deepEqual(faults, []);
     assert.deepEqual(outside, []);
   });
 } finally {
+  if (day.exitCode === null) day.kill();
   await context.close();
   await daemon?.kill();
   rmSync(place, { recursive: true, force: true });

@@ -1,7 +1,25 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
-import { coolDownText, findingText, forecastText, standIns, steadyText } from '../src/words';
+import { calibrationText, coolDownText, findingText, forecastText, sensorAt, sensorText, standIns, steadyText } from '../src/words';
+import type { Channel, Sensor } from '../src/frames';
 import { point, t0 } from './samples';
+
+test('a calibration is in date, waived or expired, by the sensor of the time', () => {
+  const sensor = (body: Partial<Sensor>): Sensor => ({ valid_from: null, serial: 'A1', certificate: 'C 7', calibrated: '2025-11-30', due: '2026-11-30', waiver: null, ...body });
+  const first = sensor({});
+  const second = sensor({ valid_from: '2026-12-01T09:00:10Z', serial: 'A2', due: '', waiver: { who: 'R. Sorrel', why: 'spare', until: '2026-12-24' } });
+  const c: Channel = { id: 'p', title: '', unit: '', dimension: '', reference: '', low: null, high: null, recorded_only: false, station: '', sensor: first, swaps: [second] };
+  assert.equal(sensorAt(c, t0), first);
+  assert.equal(sensorAt(c, t0 + 10), second);
+  assert.equal(sensorAt({ ...c, sensor: null, swaps: [] }, t0), null);
+  assert.equal(calibrationText(first, 'in_date'), 'due 2026-11-30');
+  assert.equal(calibrationText(first, 'expired'), '▲ expired 2026-11-30');
+  assert.equal(calibrationText(second, 'waived'), '△ waived by R. Sorrel');
+  assert.equal(calibrationText(null, 'not_on_file'), 'not on file');
+  assert.equal(calibrationText(null, undefined), '–', 'an older server');
+  assert.equal(sensorText(second), 'serial A2, certificate C 7, calibrated 2025-11-30, waived by R. Sorrel: spare, until 2026-12-24');
+  assert.equal(sensorText(null), 'nothing is on file');
+});
 
 test('the cool-down is counted down, and promises nothing', () => {
   assert.equal(coolDownText(80.2, null), '0:01:21 left');

@@ -1,7 +1,7 @@
 // Every channel as it comes in and as it is used, what is wrong with it, its last
 // minute, and what an engineer does to a sensor.
 
-import { api } from '../api';
+import { api, withFaults } from '../api';
 import { type Field, askForm } from '../ask';
 import { type Display, gate } from '../context';
 import { type View, attr, column, h, refill, text } from '../dom';
@@ -10,11 +10,11 @@ import { sparkSpan } from '../spark';
 import { believable, hostNow } from '../state';
 import { facility, rfc3339, typed, typedClock } from '../time';
 import { age, inUnit, plain, significant } from '../units';
-import { findingText } from '../words';
+import { calibrationText, findingText, sensorAt, sensorText } from '../words';
 
 const [sparkWidth, sparkHeight] = [96, 18];
 
-interface Row { el: HTMLElement; raw: HTMLElement; value: HTMLElement; sign: HTMLElement; quality: HTMLElement; age: HTMLElement; spark: HTMLCanvasElement; back: HTMLElement; swap: HTMLElement }
+interface Row { el: HTMLElement; raw: HTMLElement; value: HTMLElement; sign: HTMLElement; quality: HTMLElement; age: HTMLElement; spark: HTMLCanvasElement; back: HTMLElement; swap: HTMLElement; calibration: HTMLElement }
 
 /** Draws the values of the last minute up to `end`, over their own range. */
 function drawSpark(canvas: HTMLCanvasElement, colour: string, end: number, s: { t: readonly number[]; v: readonly (number | null)[] }): void {
@@ -57,12 +57,13 @@ function swap(d: Display, c: Channel): void {
   const fields: Field[] = [
     { name: 'serial', label: 'Serial number of the new sensor' },
     { name: 'from', label: `Valid from, ${facility.sign(facility.offset(now))}`, value: typedClock(now), pattern: '\\d{4}-\\d\\d-\\d\\d \\d\\d:\\d\\d:\\d\\d' },
+    { name: 'calibration', label: 'Its calibration, as text of a rig file, for a later reduction', kind: 'area', optional: true, hint: 'calibration: {scale: 1.0012, offset: -0.08}' },
     { name: 'reason', label: 'Reason' },
   ];
   askForm(`A sensor of ${c.id} (${c.title}) was swapped.`, fields, 'Enter the swap', async (v) => {
     const t = typed(v['from'] ?? '');
     if (Number.isNaN(t)) throw new Error('“valid from” is no time');
-    await api.swap(d.rig, { channel: c.id, serial: v['serial'] ?? '', valid_from: rfc3339(t), reason: v['reason'] ?? '' }, d.operator());
+    await api.swap(d.rig, { channel: c.id, serial: v['serial'] ?? '', valid_from: rfc3339(t), reason: v['reason'] ?? '', ...(v['calibration'] ? { calibration: v['calibration'] } : {}) }, d.operator()).catch((e: unknown) => { throw withFaults(e); });
   });
 }
 
@@ -81,7 +82,7 @@ function qualityText(v: ChannelValue | undefined): string {
 
 export function channelsView(d: Display): View {
   const body = h('tbody');
-  const names = ['Channel', 'Title', 'Station', '>Raw', '>Value', 'Unit', 'Quality, finding', '>Age', '>Range', 'Last minute', 'Sensor'];
+  const names = ['Channel', 'Title', 'Station', '>Raw', '>Value', 'Unit', 'Quality, finding', '>Age', '>Range', 'Last minute', 'Calibration', 'Sensor'];
   const el = h('div', { class: 'scroll', role: 'region', tabindex: '0', 'aria-label': 'Channels' }, h('table', { class: 'list channels' }, h('thead', {}, h('tr', {}, ...names.map(column))), body));
   let rows = new Map<string, Row>();
 
@@ -91,12 +92,12 @@ export function channelsView(d: Display): View {
     const exchange = h('button', { type: 'button', class: 'small', 'data-focus': `swap ${c.id}`, 'aria-label': `Sensor swap of ${c.id}`, 'data-q': `swap-${c.id}`, onclick: () => swap(d, c) }, 'Swap…');
     const r: Row = {
       el: h('tr'), raw: h('td', { class: 'num' }), value: h('td', { class: 'num' }), sign: h('td'), quality: h('td', { class: 'quality' }), age: h('td', { class: 'num' }),
-      spark: h('canvas', { class: 'spark', 'aria-hidden': 'true' }), back, swap: exchange,
+      spark: h('canvas', { class: 'spark', 'aria-hidden': 'true' }), back, swap: exchange, calibration: h('td', { class: 'calibration' }),
     };
     const range = [c.low, c.high].map((v) => (v === null ? '–' : plain(inUnit(v, set.channel(c.unit), c.dimension).value))).join(' … ') + (c.reference === 'gauge' ? ' gauge' : '');
     const station = [c.station.replaceAll('_', ' '), c.recorded_only ? 'recorded only' : ''].filter(Boolean).join(', ');
     r.el.append(h('th', { scope: 'row' }, c.id), h('td', { class: 'extra title', title: c.title }, c.title), h('td', {}, station), r.raw, r.value, r.sign, r.quality, r.age,
-      h('td', { class: 'num' }, range), h('td', { class: 'sparkcell' }, r.spark), h('td', { class: 'sensor' }, exchange, back));
+      h('td', { class: 'num' }, range), h('td', { class: 'sparkcell' }, r.spark), r.calibration, h('td', { class: 'sensor' }, exchange, back));
     rows.set(c.id, r);
     return r.el;
   }
@@ -125,6 +126,10 @@ export function channelsView(d: Display): View {
         text(r.quality, qualityText(v));
         attr(r.quality, 'data-finding', v ? findingText(v) !== '' : false);
         text(r.age, age(v?.age_s));
+        const sensor = sensorAt(c, end);
+        text(r.calibration, calibrationText(sensor, v?.calibration));
+        attr(r.calibration, 'title', sensorText(sensor));
+        attr(r.calibration, 'data-bad', v?.calibration === 'expired');
         attr(r.el, 'data-none', !v || v.value === null);
         gate(r.swap, d, 'swap', now);
         gate(r.back, d, 'readmit', now);
