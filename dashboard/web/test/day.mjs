@@ -136,12 +136,15 @@ try {
   for (let i = 0; i < points.length;) {
     await until(`at point ${i + 1}`, async () => (await words('card-name')).includes(`point ${i + 1} of 5: ${points[i]}`));
     const count = (await taken()).length;
-    if (points[i] !== 'near the top') { // that one is taken by itself
-      await until(`${points[i]} stabilised`, async () => /● stabilised/.test(await words('card-state')), 90_000);
-      if (i === 2) await shoot('card-line');
-      await q('card-take').click();
-    }
-    await until('taken', async () => (await taken()).length > count, 90_000);
+    if (i === 2) await until('stabilised', async () => /● stabilised/.test(await words('card-state')), 90_000).then(() => shoot('card-line'));
+    const byItself = points[i] === 'near the top';
+    await until(`${points[i]} taken`, async () => { // what moved in the meantime is told; a person presses again
+      if ((await taken()).length > count) return true;
+      if (await page.getByRole('dialog').count()) await page.getByRole('button', { name: 'Cancel' }).click();
+      else if (!byItself && /● stabilised(?!, averaging)/.test(await words('card-state'))) await q('card-take').click();
+      await page.waitForTimeout(500);
+      return false;
+    }, 90_000);
     await go('card');
     const last = (await taken()).at(-1).number;
     const deed = i === 1 && !rejected ? 'reject' : 'accept';
