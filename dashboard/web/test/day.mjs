@@ -190,7 +190,7 @@ try {
 
   const run = (await (await fetch(`${daemon.url}api/runs`)).json())[0];
   const report = await (await fetch(`${daemon.url}api/runs/${run.id}/report`)).text();
-  assert.deepEqual(['TC-042', 'bleed valve was open', 'TC-77', 'connector worn'].filter((part) => !report.includes(part)), [], 'missing in the report');
+  assert.deepEqual(['Not a clearance to start.', 'moved by', 'TC-042', 'bleed valve was open', 'TC-77', 'connector worn'].filter((part) => !report.includes(part)), [], 'missing in the report');
   const stored = await (await fetch(`${daemon.url}api/runs/${run.id}/checks`)).json();
   assert.deepEqual([...new Set(stored.map((c) => c.phase))], ['before', 'after'], 'checks stored with the run');
   step('sheet and report tell of all');
