@@ -80,7 +80,7 @@ func (o *watchOptions) flags(fs *pflag.FlagSet) {
 	o.broker.flags(fs, "", "site broker instead of the embedded one, mqtt://host:port or mqtts://host:port; the nodes of a cluster separated by commas")
 	fs.BoolVar(&o.remote, "allow-remote", false, "let --listen be reached from other machines without TLS and users, and --broker-listen without passwords")
 	o.guard.flags(fs)
-	fs.StringVar(&o.card, "card", "", "test card to load at the start; `throatwatch card load` does so later")
+	fs.StringVar(&o.card, "card", "", "test card to load at the start; card load does so later")
 	fs.BoolVar(&o.rehearse, "rehearse", false, "let a simulated rig publish a test to the broker; the next flags say which")
 	o.play = newRehearseFlags(fs)
 	o.influx.flags(fs)

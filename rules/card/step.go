@@ -286,6 +286,22 @@ func (n *TargetNow) words(tg *Target) string {
 	if !n.Value.Known {
 		return "not known"
 	}
-	text := fmt.Sprintf("%s %s, off by %s", strconv.FormatFloat(n.Value.V, 'g', 6, 64), tg.Unit, strconv.FormatFloat(n.Off.V, 'g', 3, 64))
-	return strings.ReplaceAll(text, " ,", ",")
+	unit := ""
+	if tg.Unit != "" {
+		unit = " " + tg.Unit
+	}
+	return fmt.Sprintf("%s%s, off by %s%s", figures(n.Value.V), unit, figures(n.Off.V), unit)
+}
+
+// figures writes a number with four figures, and all those before the point.
+func figures(v float64) string {
+	after := 0
+	if a := math.Abs(v); a > 0 && a < 1000 {
+		after = min(3-int(math.Floor(math.Log10(a))), 9)
+	}
+	text := strconv.FormatFloat(v, 'f', after, 64)
+	if strings.Contains(text, ".") {
+		text = strings.TrimRight(strings.TrimRight(text, "0"), ".")
+	}
+	return text
 }
