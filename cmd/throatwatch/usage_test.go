@@ -65,7 +65,7 @@ func TestWrongUse(t *testing.T) {
 		{"certificate without key", []string{"watch", rig, "--broker", "mqtts://127.0.0.1:1", "--broker-cert", "c.pem"}, 2, "throatwatch watch: --broker-cert and --broker-key belong together: give both"},
 		{"certificate of nothing", []string{"rehearse", rig, "--broker", "mqtts://127.0.0.1:1", "--broker-ca", "nowhere"}, 1, "throatwatch rehearse: --broker-ca: open nowhere: no such file or directory"},
 		{"certificate without TLS", []string{"watch", rig, "--broker", "mqtt://127.0.0.1:1", "--broker-ca", "../../go.mod"}, 1, "throatwatch watch: --broker-ca ../../go.mod: there is no certificate in it"},
-		{"not a broker", []string{"watch", rig, "--broker", "http://127.0.0.1:1"}, 1, `throatwatch watch: mqtt configuration: broker URL: unknown scheme "http" (give mqtt://host:port or mqtts://host:port)`},
+		{"not a broker", []string{"watch", rig, "--broker", "http://127.0.0.1:1"}, 1, `throatwatch watch: mqtt configuration: broker URL: unknown scheme "http" (give mqtt://host:port or mqtts://host:port, several separated by commas)`},
 		{"no password", []string{"watch", rig, "--broker", "mqtt://127.0.0.1:1", "--broker-password-file", "nowhere"}, 1, "throatwatch watch: password file: open nowhere: no such file or directory"},
 		{"fault of nothing", []string{"watch", rig, "--fault", "burst@1s"}, 2, "throatwatch watch: --fault says what is rehearsed: add --rehearse"},
 		{"no time of a fault", []string{"watch", rig, "--rehearse", "--fault", "burst"}, 2, `throatwatch watch: rehearsal: "burst": no time; write name@time[+duration][*size][:channel], as in probe-open@25s:egt_3: fault is not understood`},
