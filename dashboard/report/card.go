@@ -44,6 +44,8 @@ func (d *data) cardPoints() table {
 		row[2].Sub = how
 		t.Rows = append(t.Rows, row)
 	}
+	t.keep(3)
+	t.Head[4].Words = true
 	return t
 }
 
@@ -51,6 +53,9 @@ func (d *data) cardPoints() table {
 func (d *data) cardTaken() table {
 	t := table{Head: []heading{number("No.", ""), {Text: "Point"}, {Text: "From"}, number("For", "s"), {Text: "Status"}}}
 	for _, o := range overviewOf() {
+		if o.q == monitor.IndependentFlow { // it does not fit beside the words
+			continue
+		}
 		s := scaleOf(o.q)
 		t.Head = append(t.Head, number(o.name, s.sign), number("± U95", s.spanSign()))
 	}
@@ -59,10 +64,13 @@ func (d *data) cardTaken() table {
 		row := texts(strconv.FormatUint(k.Number, 10), k.Name, d.short(int64(k.From)), decimal(float64(k.To-k.From)/1e9, 1), k.Status)
 		row[1].Sub = joined(k.Card, prefixed("taken by ", k.By))
 		if k.Auto {
-			row[1].Sub = joined(k.Card, "taken automatically")
+			row[1].Sub = joined(k.Card, "taken by the card")
 		}
 		row[4].Sub = prefixed("by ", k.JudgedBy) + prefixed(": ", k.Reason)
 		for _, o := range overviewOf() {
+			if o.q == monitor.IndependentFlow {
+				continue
+			}
 			value, u := takenValue(k, o.q)
 			row = append(row, cell{Text: value}, cell{Text: u})
 		}
@@ -71,6 +79,8 @@ func (d *data) cardTaken() table {
 			t.More += fmt.Sprintf("Point %d is doubtful: %s. ", k.Number, doubt)
 		}
 	}
+	t.keep(2)
+	t.Head[4].Words = true
 	return t.aligned()
 }
 
