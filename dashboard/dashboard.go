@@ -329,7 +329,7 @@ func (s *Server) rigs(w http.ResponseWriter, r *http.Request) error {
 func (s *Server) hello(w http.ResponseWriter, r *http.Request) error {
 	var b []byte
 	if err := s.ask(r.Context(), r.PathValue("rig"), func(_ *pipeline.Config, m *pipeline.Machine, st *pipeline.State) {
-		b = appendHello(nil, m, st, newestScan(m, st), s.cfg.Build)
+		b = s.hub.hello(m, st)
 	}); err != nil {
 		return err
 	}

@@ -37,6 +37,10 @@ const (
 
 // Hub keeps the newest frames and hands new ones to every viewer.
 type Hub struct {
+	// Speaking tells how this watch stands to the other of a pair; nil = there is none. It
+	// is set before the first frame, and must not wait.
+	Speaking func() Speaking
+
 	build string
 
 	mu      sync.Mutex // protects the fields below
@@ -142,6 +146,9 @@ func (h *Hub) frame(o *pipeline.Outcome, cfg *pipeline.Config, now time.Time) {
 	var ok bool
 	if h.scratch, kind, ok = appendFrame(h.scratch[:0], o, cfg); !ok {
 		return
+	}
+	if o.Kind == pipeline.OutcomeStatus {
+		h.scratch = h.speaks(h.scratch)
 	}
 	f := frame{point: o.Kind == pipeline.OutcomePoint, epoch: o.Epoch, n: o.N, t: o.T, body: bytes.Clone(h.scratch)}
 	h.newest[kind] = f.body
@@ -271,7 +278,7 @@ func (h *Hub) join(v *viewer, m *pipeline.Machine, s *pipeline.State) error {
 // opening gives what a viewer is told first: what it missed if that is known, else
 // a hello.
 func (h *Hub) opening(v *viewer, m *pipeline.Machine, s *pipeline.State) [][]byte {
-	hello := appendHello(nil, m, s, newestScan(m, s), h.build)
+	hello := h.hello(m, s)
 	if !v.resume {
 		return [][]byte{hello}
 	}

@@ -194,6 +194,10 @@ type frame struct {
 
 	Counters map[string]float64 `json:"counters"`
 	Sessions []session          `json:"sessions"`
+	Speaking *speaking          `json:"speaking"`
+	Status   *struct {
+		Speaking *speaking `json:"speaking"`
+	} `json:"status"` // of hello
 
 	body []byte
 	at   time.Time // when it came
@@ -202,6 +206,15 @@ type frame struct {
 type runSeen struct {
 	ID    string  `json:"id"`
 	Ended *string `json:"ended"`
+}
+
+// speaking is how a watch of a pair stands.
+type speaking struct {
+	Watch string  `json:"watch"`
+	Name  *string `json:"name"`
+	Since *string `json:"since"`
+	Other *string `json:"other"`
+	Why   string  `json:"why"`
 }
 
 type session struct {

@@ -18,6 +18,7 @@ import (
 	"github.com/spf13/pflag"
 
 	"throatwatch/cmd/internal/config"
+	"throatwatch/cmd/internal/pair"
 	"throatwatch/cmd/internal/watch"
 	"throatwatch/dashboard"
 	"throatwatch/ingest"
@@ -41,6 +42,7 @@ type watchOptions struct {
 	influx                     influxOptions
 	webhook                    webhookOptions
 	guard                      guardOptions
+	pair                       pairOptions
 	retainDays                 int
 	retainGB                   float64
 	diskHours, diskGB          float64
@@ -85,6 +87,7 @@ func (o *watchOptions) flags(fs *pflag.FlagSet) {
 	o.play = newRehearseFlags(fs)
 	o.influx.flags(fs)
 	o.webhook.flags(fs)
+	o.pair.flags(fs)
 	fs.IntVar(&o.retainDays, "retain-days", 0, "remove runs that ended longer ago, except those marked keep (default: none)")
 	fs.Float64Var(&o.retainGB, "retain-gb", 0, "remove the oldest runs until the rest takes no more GB (10^9 bytes), except those marked keep (default: none)")
 	fs.Float64Var(&o.diskHours, "disk-hours", 4, "alarm when the disk of the data folder will be full in so many hours as it fills now; 0 = do not")
@@ -120,6 +123,9 @@ func (o *watchOptions) check(fs *pflag.FlagSet) error {
 	if err := o.broker.check(); err != nil {
 		return err
 	}
+	if err := o.pair.check(o.broker.url); err != nil {
+		return err
+	}
 	if !o.rehearse {
 		for _, name := range []string{"seed", "quick", "points", "rate", "speed", "rest", "fault"} {
 			if fs.Changed(name) {
@@ -152,7 +158,8 @@ type watcher struct {
 	site   *siteDatabase // nil when the site has none
 	hook   *receiver     // nil when the site has none
 	disk   diskWatch
-	guard  *guard // nil when nobody is asked who they are
+	guard  *guard     // nil when nobody is asked who they are
+	pair   *pair.Pair // nil when no other watch stands over the rig
 
 	manager *serviceManager // nil where nobody manages this
 	listens chan struct{}   // closed when the broker keeps messages for this watch
@@ -212,7 +219,7 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 	if w.site != nil {
 		core.ChunkFor = watch.SinkChunkFor
 	}
-	if w.hook, err = w.opt.webhook.open(w.store, w.opt.data, cfg.Rig.ID, w.log); err != nil {
+	if w.hook, err = w.opt.webhook.open(w.store, w.opt.data, cfg.Rig.ID, w.held, w.log); err != nil {
 		return err
 	}
 	epoch, err := watch.NextEpoch(w.opt.data, core.State.Epoch)
@@ -236,6 +243,9 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 
 	hub := dashboard.NewHub(watch.Build())
 	outbox := watch.NewOutbox(w.cfg.Rig.ID, w.client, w.log)
+	if w.pair != nil {
+		hub.Speaking, outbox.Speaking, outbox.Speaks = w.speaking, w.speaking, w.pair.Speaks
+	}
 	w.loop = watch.NewLoop(watch.Config{
 		Core: core, Store: w.store, Ack: w.client, Window: mqtt.DefaultWindow, Log: w.log,
 		Shown: func(outs []pipeline.Outcome, m *pipeline.Machine, s *pipeline.State) {
@@ -246,6 +256,9 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 			}
 		},
 	})
+	if w.pair != nil {
+		w.pair.Join(w.loop)
+	}
 	server := &http.Server{
 		Handler: dashboard.NewServer(w.page(secure != nil), hub), TLSConfig: secure,
 		ReadHeaderTimeout: 5 * time.Second, IdleTimeout: 2 * time.Minute, MaxHeaderBytes: 32 << 10,
@@ -274,6 +287,9 @@ func (w *watcher) run(ctx context.Context, rig string) (err error) {
 		}
 	})
 	sideParts.Go(func() { outbox.Run(sideCtx) })
+	if w.pair != nil {
+		sideParts.Go(func() { w.pair.Run(sideCtx) })
+	}
 	sideParts.Go(func() { w.store.Retain(sideCtx, w.opt.retention()) })
 	if w.site != nil {
 		sideParts.Go(func() { w.site.run(sideCtx) })
@@ -331,6 +347,9 @@ func (w *watcher) page(secure bool) dashboard.Config {
 		Free:     func() float64 { free, _ := watch.FreeSpace(w.opt.data); return free }, // 0 where that is not known
 		OpenRole: w.opt.guard.role(), Secure: secure, Audit: newLog(w.stderr, true),
 	}
+	if w.pair != nil {
+		c.Desk = w.pair
+	}
 	if w.site != nil {
 		c.Follows = append(c.Follows, "database")
 	}
@@ -371,12 +390,15 @@ func (w *watcher) connect(ctx context.Context) (stop func(), err error) {
 	}
 	c := mqtt.Config{
 		URL: site.URL, Dir: w.opt.data, Username: site.Username, Password: site.Password, TLS: site.TLS,
-		Will: &mqtt.Will{Topic: watch.StatusTopic(w.cfg.Rig.ID), Payload: watch.OfflineStatus()},
+		Will: &mqtt.Will{Topic: watch.StatusTopic(w.cfg.Rig.ID), Payload: watch.OfflineStatus(w.opt.pair.name)},
 	}
 	for _, in := range w.cfg.Align.Inputs {
 		c.Filters = append(c.Filters, in.Filter)
 	}
 	stop = func() {}
+	if err := w.join(c); err != nil {
+		return nil, err
+	}
 	if w.opt.broker.url == "" {
 		w.broker, err = broker.New(broker.Config{
 			Listen: w.opt.brokerListen, AllowRemote: w.opt.remote, StoreDir: filepath.Join(w.opt.data, "broker"),
@@ -402,6 +424,14 @@ func (w *watcher) connect(ctx context.Context) (stop func(), err error) {
 		return nil, err
 	}
 	return stop, nil
+}
+
+// held is that of webhook.Config: a watch that is silent does not send.
+func (w *watcher) held() (keep time.Duration, held bool) {
+	if w.pair == nil {
+		return 0, false
+	}
+	return w.pair.Held()
 }
 
 // pump feeds the loop with messages until either ends.
@@ -509,6 +539,9 @@ func (w *watcher) announce(addr string) {
 	if w.hook != nil {
 		dir += "\n  webhook " + w.hook.sender.Where()
 	}
+	if w.pair != nil {
+		dir += "\n  pair    " + w.pair.Name()
+	}
 	topics := make([]string, len(w.cfg.Align.Inputs))
 	for i, in := range w.cfg.Align.Inputs {
 		topics[i] = in.Filter
@@ -532,6 +565,9 @@ func (w *watcher) metrics() []dashboard.Metric {
 	}
 	if w.hook != nil {
 		out = append(out, w.hook.metrics()...)
+	}
+	if w.pair != nil {
+		out = append(out, w.pairMetrics()...)
 	}
 	out = append(out, dashboard.Metric{Name: "disk_free_bytes", Help: "What is left on the disk of the data folder.", Value: w.disk.standing().behind * 1e9})
 	for _, s := range w.client.Stats() {

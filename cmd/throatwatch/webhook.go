@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"log/slog"
 	"path/filepath"
+	"time"
 
 	"github.com/spf13/pflag"
 
@@ -34,8 +35,9 @@ type receiver struct {
 	log         *slog.Logger
 }
 
-// open gives the receiver, nil when there is none. Its files lie in dir.
-func (o webhookOptions) open(s *watch.Store, dir, rig string, log *slog.Logger) (*receiver, error) {
+// open gives the receiver, nil when there is none. Its files lie in dir. held is that of
+// webhook.Config.
+func (o webhookOptions) open(s *watch.Store, dir, rig string, held func() (time.Duration, bool), log *slog.Logger) (*receiver, error) {
 	switch {
 	case o == webhookOptions{}:
 		return nil, nil //nolint:nilnil // a site without a receiver is no error
@@ -54,7 +56,7 @@ func (o webhookOptions) open(s *watch.Store, dir, rig string, log *slog.Logger) 
 	}
 	r := &receiver{transitions: watch.NewTransitions(s, least, log), log: log}
 	r.sender, err = webhook.New(webhook.Config{
-		URL: o.url, Secret: []byte(secret), Rig: rig, Source: r.transitions,
+		URL: o.url, Secret: []byte(secret), Rig: rig, Source: r.transitions, Held: held,
 		Cursor:   watch.HookCursor{Path: filepath.Join(dir, "webhook-cursor.json"), URL: o.url},
 		SetAside: filepath.Join(dir, "webhook-refused.ndjson"),
 	})

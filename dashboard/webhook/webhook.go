@@ -55,6 +55,8 @@ const (
 	// idleEvery where nothing was shown: the cursor moves on with what is removed.
 	rereadEvery = time.Second
 	idleEvery   = time.Minute
+	// heldEvery is how often it is looked whether another watch sends for this one still.
+	heldEvery   = 250 * time.Millisecond
 	readAtATime = 256
 	// setAsideRoom bounds the file of what the receiver refuses, bytes. What finds no
 	// room is counted only.
@@ -100,9 +102,12 @@ type Config struct {
 	Rig      string
 	Source   Source
 	Cursor   CursorStore
-	SetAside string        // path of the file for what the receiver refuses
-	Queue    int           // transitions that wait at most; 0 = 1024
-	Timeout  time.Duration // of a request; 0 = 10 s
+	SetAside string // path of the file for what the receiver refuses
+	Queue    int    // transitions that wait at most; 0 = 1024
+	// Held tells, where another watch sends for this one, that nothing is to be sent now,
+	// and for how long transitions are kept meanwhile; nil = it never is. It must not wait.
+	Held    func() (keep time.Duration, held bool)
+	Timeout time.Duration // of a request; 0 = 10 s
 }
 
 // State is how it goes.
@@ -127,12 +132,15 @@ type Status struct {
 	Refused   uint64 // set aside
 	LetGo     uint64 // dropped from the full queue
 	Why       string // why the state is not Working
+
+	Oldest time.Time // when the oldest that waits came into the queue; zero = none waits
 }
 
 // waiting is a transition in the queue.
 type waiting struct {
 	Transition
 	recorded bool
+	since    time.Time
 }
 
 // key is what a receiver knows a transition by.
@@ -270,7 +278,9 @@ func (s *Sender) Run(ctx context.Context) {
 	for ctx.Err() == nil {
 		wait := s.fill(ctx)
 		if len(s.queue) > 0 {
-			if now := time.Now(); !now.Before(due) {
+			if now := time.Now(); s.held(now) {
+				due = now.Add(heldEvery)
+			} else if !now.Before(due) {
 				due = time.Now().Add(s.deliver(ctx, now))
 			}
 			if len(s.queue) > 0 {
@@ -289,6 +299,35 @@ func (s *Sender) Run(ctx context.Context) {
 	}
 }
 
+// held tells that another watch sends for this one. What that has delivered by now is
+// let go.
+func (s *Sender) held(now time.Time) bool {
+	if s.cfg.Held == nil {
+		return false
+	}
+	keep, held := s.cfg.Held()
+	if !held {
+		return false
+	}
+	for len(s.queue) > 0 && now.Sub(s.queue[0].since) > keep {
+		s.leave()
+	}
+	s.failures, s.sending, s.sent = 0, Working, ""
+	s.save()
+	return true
+}
+
+// leave takes the first of the queue off it.
+func (s *Sender) leave() {
+	if s.queue[0].recorded {
+		s.cursor = s.queue[0].Behind
+	}
+	s.queue = s.queue[1:]
+	if len(s.queue) == 0 {
+		s.cursor = s.read
+	}
+}
+
 // fill reads what was recorded into the queue, and takes what never will be. It gives
 // how long to wait for more.
 func (s *Sender) fill(ctx context.Context) time.Duration {
@@ -304,7 +343,7 @@ func (s *Sender) fill(ctx context.Context) time.Duration {
 		s.read, s.reading = next, ""
 		for i := range got {
 			if !s.wasLoose(&got[i]) {
-				s.enqueue(waiting{got[i], true})
+				s.enqueue(waiting{got[i], true, time.Now()})
 			}
 		}
 		s.forget(got)
@@ -350,7 +389,7 @@ func (s *Sender) takeLoose() (more bool) {
 			s.loose = s.loose[1:]
 		}
 		s.loose = append(s.loose, key{one.ID, one.Revision})
-		s.enqueue(waiting{one.Transition, false})
+		s.enqueue(waiting{one.Transition, false, time.Now()})
 	}
 	s.shown = kept
 	return len(kept) > 0
@@ -409,13 +448,7 @@ func (s *Sender) deliver(ctx context.Context, now time.Time) time.Duration {
 		}
 		s.tell(func(st *Status) { st.Refused, st.Failed = st.Refused+1, st.Failed+1 })
 	}
-	s.queue = s.queue[1:]
-	if first.recorded {
-		s.cursor = first.Behind
-	}
-	if len(s.queue) == 0 {
-		s.cursor = s.read
-	}
+	s.leave()
 	s.save()
 	return wait
 }
@@ -540,7 +573,10 @@ func (s *Sender) tell(change func(*Status)) {
 	defer s.mu.Unlock()
 	change(&s.status)
 	st := &s.status
-	st.Waiting = len(s.queue)
+	st.Waiting, st.Oldest = len(s.queue), time.Time{}
+	if st.Waiting > 0 {
+		st.Oldest = s.queue[0].since
+	}
 	st.LetGo += s.dropped
 	s.dropped = 0
 	st.State, st.Why = s.sending, s.sent

@@ -16,6 +16,7 @@ import (
 	"strconv"
 	"strings"
 	"sync"
+	"sync/atomic"
 	"testing"
 	"time"
 
@@ -101,6 +102,12 @@ func (r *records) Save(c webhook.Cursor) error {
 	}
 	r.cursor, r.saves = &c, r.saves+1
 	return nil
+}
+
+func (r *records) saved() webhook.Cursor {
+	r.mu.Lock()
+	defer r.mu.Unlock()
+	return *r.cursor
 }
 
 func (r *records) fail(err error) {
@@ -308,6 +315,30 @@ func TestWaitsForTheRecord(t *testing.T) {
 	}
 	r.record(1, 3)
 	s.until("delivered", delivered(3))
+}
+
+// Where another watch sends, nothing goes out, and what that has delivered is let go. When
+// this one is to send, it begins with what the other may have left.
+func TestHeld(t *testing.T) {
+	t.Parallel()
+	r, to := &records{}, newReceiver(t)
+	var keep atomic.Int64
+	var held atomic.Bool
+	held.Store(true)
+	s := begin(t, r, webhook.Config{URL: to.http.URL, Held: func() (time.Duration, bool) { return time.Duration(keep.Load()), held.Load() }})
+	s.show(r, 1, 4)
+	s.until("the other has delivered them", func(st webhook.Status) bool { return r.saved().Seq == 3 && st.Waiting == 0 })
+	keep.Store(int64(time.Hour))
+	s.show(r, 5, 6)
+	st := s.until("the other may not have", func(st webhook.Status) bool { return st.Waiting == 2 })
+	if age := time.Since(st.Oldest); age < 0 || age > patience || to.tries != 0 {
+		t.Errorf("the oldest waits for %v, %d tries", age, to.tries)
+	}
+	held.Store(false)
+	s.until("delivered", delivered(2))
+	if got := to.numbers(); !slices.Equal(got, upTo(5, 6)) {
+		t.Errorf("%v", got)
+	}
 }
 
 // While nothing is recorded the transitions go out at once and say so; one that is

@@ -63,7 +63,7 @@ func TestSiteBroker(t *testing.T) {
 		t.Fatal(err)
 	}
 	for _, topic := range []string{
-		"rigs/cell_2/alarms", "rigs/cell_2/status", "rigs/cell_2/operating-point", "rigs/cell_2/actions", "rigs/cell_3/senml", "rigs/cell_3/channels/p7",
+		"rigs/cell_2/alarms", "rigs/cell_2/status", "rigs/cell_2/operating-point", "rigs/cell_2/actions", "rigs/cell_2/speaking", "rigs/cell_3/senml", "rigs/cell_3/channels/p7",
 		"rigs/cell_2/channels/p7", "rigs/cell_2/lines", "rigs/cell_2/senml-cbor", "rigs/cell_2/senml", // the last is the end
 	} {
 		token := thief.Publish(topic, 1, false, "1")

@@ -20,6 +20,9 @@ const (
 	// stalledAfter is the age of the oldest record not yet stored at which the
 	// loop stops waiting for the disk, ns.
 	stalledAfter = int64(time.Second)
+	// pausedAfter is the host time without a record after which the loop was not run: there
+	// is a tick each 100 ms, ns.
+	pausedAfter = int64(500 * time.Millisecond)
 	// drainFor is the time that the disk gets when the loop ends.
 	drainFor = 5 * time.Second
 	// clockStep is the least step of the wall clock that is recorded, ns.
@@ -75,6 +78,8 @@ type Loop struct {
 	acking  []mqtt.Message // to be acknowledged, in order, before what is in no batch yet
 	lost    uint64         // records stepped and not stored since recording stopped
 	stalled bool
+	awake   int64 // host time at which it began, or went on after the process was stopped
+	waking  bool  // it goes on just now
 }
 
 type item struct {
@@ -163,23 +168,30 @@ func (l *Loop) put(ctx context.Context, it item) error {
 
 // Act does what an operator asks for and waits for what becomes of it.
 func (l *Loop) Act(ctx context.Context, a pipeline.Action) (pipeline.Reply, error) {
-	return l.act(ctx, a, nil)
+	return l.act(ctx, a, item{})
+}
+
+// ActFor is Act for an action that came in a message, which is acknowledged when the
+// action is durable.
+func (l *Loop) ActFor(ctx context.Context, a pipeline.Action, m mqtt.Message) (pipeline.Reply, error) {
+	return l.act(ctx, a, item{msg: m})
 }
 
 // Configure takes a configuration into force, if that can be, as a says who brings
 // it.
 func (l *Loop) Configure(ctx context.Context, a pipeline.Action, bundle []byte) (pipeline.Reply, error) {
 	a.Do = pipeline.DoConfig
-	return l.act(ctx, a, bundle)
+	return l.act(ctx, a, item{then: bundle})
 }
 
-func (l *Loop) act(ctx context.Context, a pipeline.Action, then []byte) (pipeline.Reply, error) {
+func (l *Loop) act(ctx context.Context, a pipeline.Action, it item) (pipeline.Reply, error) {
 	text, err := json.Marshal(a)
 	if err != nil {
 		return pipeline.Reply{}, fmt.Errorf("action: %w", err)
 	}
 	reply := make(chan pipeline.Reply, 1)
-	if err := l.put(ctx, item{in: Input{Kind: ingest.KindAction, Payload: text}, reply: reply, id: a.RequestID, then: then}); err != nil {
+	it.in, it.reply, it.id = Input{Kind: ingest.KindAction, Payload: text}, reply, a.RequestID
+	if err := l.put(ctx, it); err != nil {
 		return pipeline.Reply{}, err
 	}
 	select {
@@ -227,6 +239,7 @@ func (l *Loop) Run(ctx context.Context, boot pipeline.Boot, bundle []byte) error
 	stopAcks := l.startAcks()
 	l.take(item{in: Input{Kind: ingest.KindBoot, Payload: text}})
 	l.take(item{in: Input{Kind: ingest.KindConfig, Payload: bundle}})
+	l.awake = l.clock.host()
 
 	tick := time.NewTicker(tickEvery)
 	defer tick.Stop()
@@ -274,14 +287,18 @@ func (l *Loop) drain(stopWriter func() bool, stopAcks func()) error {
 // take makes a record of an item and steps it.
 func (l *Loop) take(it item) {
 	core := l.cfg.Core
-	outs := core.Take(it.in, l.clock.host())
+	host := l.clock.host()
+	if l.awake != 0 && !l.waking && host-core.State.Host > pausedAfter {
+		l.wake(host)
+	}
+	outs := core.Take(it.in, host)
 	l.show(outs)
 	reply := replyOf(outs, it.id)
 	follows := it.then != nil && reply.Err == nil
 	if it.reply != nil && !follows {
 		it.reply <- reply
 	}
-	if it.in.Kind == ingest.KindMessage {
+	if it.msg.Generation != 0 || it.in.Kind == ingest.KindMessage { // else no message brought it
 		l.pending = append(l.pending, it.msg)
 	}
 	switch {
@@ -295,6 +312,21 @@ func (l *Loop) take(it item) {
 	}
 	if follows {
 		l.take(item{in: Input{Kind: ingest.KindConfig, Payload: it.then}, reply: it.reply})
+	}
+}
+
+// wake goes on after the process was stopped for a while, as a virtual machine is that
+// moves: neither is the disk slow, nor is what comes now late. It comes as if the sessions
+// had been away.
+func (l *Loop) wake(host int64) {
+	l.waking, l.awake = true, host // what it takes now is no further pause
+	defer func() { l.waking = false }()
+	sessions := l.cfg.Core.State.Align.Sessions
+	l.cfg.Log.Warn("the process was stopped for a while and goes on", "s", float64(host-l.cfg.Core.State.Host)/1e9)
+	for i := range sessions {
+		if sessions[i].Connected {
+			l.take(item{in: Input{Kind: ingest.KindConnect, Topic: sessions[i].Filter}})
+		}
 	}
 }
 
@@ -412,7 +444,7 @@ func (l *Loop) behind() bool {
 	for _, j := range l.queue {
 		unacked += len(j.acks)
 	}
-	return l.cfg.Core.State.Host-l.queue[0].batch.First > stalledAfter || l.cfg.Window > 0 && unacked > l.cfg.Window/2
+	return l.cfg.Core.State.Host-max(l.queue[0].batch.First, l.awake) > stalledAfter || l.cfg.Window > 0 && unacked > l.cfg.Window/2
 }
 
 // stall goes on without the disk: watching comes before storing. Messages are

@@ -9,11 +9,13 @@ import (
 	"slices"
 	"strings"
 	"sync"
+	"sync/atomic"
 	"testing"
 	"testing/synctest"
 	"time"
 
 	"throatwatch/cmd/internal/watch"
+	"throatwatch/dashboard"
 	"throatwatch/ingest/runfile"
 	"throatwatch/rules"
 	"throatwatch/rules/alarm"
@@ -128,6 +130,68 @@ func TestOutbox(t *testing.T) {
 			if got := b.flags["rigs/bench_1/"+topic]; got != want {
 				t.Errorf("%s goes out with QoS and retain flag %s, want %s", topic, got, want)
 			}
+		}
+		stop()
+		<-ended
+		must(t, store.Close(context.WithoutCancel(ctx)))
+	})
+}
+
+// One of two watches is silent while the other speaks. When it begins to speak it tells
+// all alarms that stand, and the changes of the last seconds: the other may have fallen
+// silent before it told them.
+func TestOutboxSilent(t *testing.T) {
+	t.Parallel()
+	dir := memory(t)
+	synctest.Test(t, func(t *testing.T) {
+		store, core := openCore(t, dir, runfile.Options{})
+		feed := watch.NewFeed(core, store)
+		must(t, feed.Begin(t.Context(), pipeline.Boot{Epoch: 1}, smallBundle(t), testBegin))
+		b := &siteBroker{got: map[string][]string{}, flags: map[string]string{}}
+		o := watch.NewOutbox("bench_1", b, slog.New(slog.DiscardHandler))
+		var speaks atomic.Bool
+		other := "alpha"
+		o.Speaks = speaks.Load
+		o.Speaking = func() dashboard.Speaking { return dashboard.Speaking{Watch: "beta", Other: &other} }
+		ctx, stop := context.WithCancel(t.Context())
+		ended := make(chan struct{})
+		go func() { o.Run(ctx); close(ended) }()
+		take := func(outs ...pipeline.Outcome) {
+			o.Take(outs, core.Machine, core.State)
+			synctest.Wait()
+		}
+		change := func(n uint64) pipeline.Outcome {
+			return pipeline.Outcome{Kind: pipeline.OutcomeAlarm, N: n, Alarm: &rules.Alarm{ID: "x", State: rules.AlarmState(alarm.Unacknowledged)}}
+		}
+		status := pipeline.Outcome{Kind: pipeline.OutcomeStatus, T: 1, Status: &pipeline.Status{}}
+
+		take(change(1), status)
+		time.Sleep(watch.Overlap + time.Second)
+		take(change(2), status)
+		if len(b.got) != 0 {
+			t.Errorf("silent, it tells %v", b.got)
+		}
+		time.Sleep(4 * time.Second) // the other has fallen silent in this time
+		speaks.Store(true)
+		take(status)
+		if got := b.on("alarm-changes"); len(got) != 1 || !strings.Contains(got[0], `"n":2,`) {
+			t.Errorf("it begins with the changes %q", got)
+		}
+		if got := b.on("alarms"); !slices.Equal(got, []string{"[]"}) {
+			t.Errorf("it begins with the alarms %q", got)
+		}
+		if got := b.on("status"); len(got) != 1 || !strings.Contains(got[0], `"speaking":{"watch":"beta","name":null,"since":null,"other":"alpha","why":""}}`) {
+			t.Errorf("it begins with the status %q", got)
+		}
+		speaks.Store(false)
+		take(change(3), status)
+		if n := len(b.on("alarm-changes")) + len(b.on("status")); n != 2 {
+			t.Errorf("silent again, it tells %v", b.got)
+		}
+		speaks.Store(true)
+		take(status)
+		if n := len(b.on("alarms")); n != 2 {
+			t.Errorf("the alarms are told %d times, each time that it begins to speak", n)
 		}
 		stop()
 		<-ended

@@ -321,6 +321,16 @@ export interface StatusFrame extends Numbered {
   database?: PartFailure | null; // null while it follows, or where there is none
   webhook?: PartFailure | null;
   disk?: PartFailure | null; // null unless it will soon be full
+  speaking?: Speaking; // only of one of two watches on a rig
+}
+
+/** How a watch stands to the other one of its pair. One speaks: over MQTT, to the webhook, by sound. */
+export interface Speaking {
+  watch: string; // this one
+  name: string | null; // the one that speaks; null: none is heard
+  since: string | null;
+  other: string | null; // the other; null: it is not heard
+  why: string; // this one cannot speak; empty: it could
 }
 
 export interface HelloFrame extends Numbered {

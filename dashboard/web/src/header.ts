@@ -13,6 +13,7 @@ import { type Model, activeRun, dataAge, hostNow, runSeconds } from './state';
 import { duration, seconds, signedClock } from './time';
 import { type System, age } from './units';
 import { troubleText, veilText } from './watch/display';
+import { speakingText } from './words';
 
 export interface HeaderParts {
   rigs: RigInfo[];
@@ -35,7 +36,7 @@ export function filesText(m: Model): string {
 }
 
 /** Arms the sound; beside it what can be done with it. */
-function soundControls(p: HeaderParts): View {
+function soundControls(p: HeaderParts): Omit<View, 'update'> & { update(now: number, here: boolean): void } {
   const { sound } = p;
   const main = h('button', { type: 'button', class: 'sound', 'data-q': 'sound', onclick: () => { void sound.toggle(); } }, '');
   const more = h('button', { type: 'button', class: 'more', 'aria-label': 'Sound: test tone and mute', 'aria-expanded': 'false', 'data-q': 'sound-more', onclick: () => show(panel.hidden === true) }, '▾');
@@ -55,10 +56,10 @@ function soundControls(p: HeaderParts): View {
 
   return {
     el,
-    update(now) {
+    update(now, here) {
       const left = Math.ceil(sound.muteLeft(now));
       const muted = sound.armed && left > 0;
-      text(main, !sound.armed ? '✕ Sound off' : muted ? `◌ Muted ${Math.floor(left / 60)}:${String(left % 60).padStart(2, '0')}` : '♪ Sound armed');
+      text(main, !sound.armed ? '✕ Sound off' : muted ? `◌ Muted ${Math.floor(left / 60)}:${String(left % 60).padStart(2, '0')}` : here ? '♪ Sound armed' : '♪ Sound armed, silent here');
       attr(main, 'aria-pressed', String(sound.armed));
       attr(main, 'data-muted', muted);
       for (const b of [test, ...mutes]) attr(b, 'disabled', !sound.armed);
@@ -118,7 +119,7 @@ export function header(p: HeaderParts): View & { route(name: string): void } {
       const shapes = (['warning', 'caution', 'advisory'] as Priority[]).map((k) => `${priorityLook[k].shape} ${list.filter((a) => a.priority === k).length}`).join('  ');
       text(counts, gone ? 'live: no data link' : `live: ${shapes}${open.length > 0 ? `  ${open.length} unacknowledged` : ''}`);
       attr(counts, 'data-priority', gone ? null : open[0]?.priority);
-      sounds.update(now);
+      sounds.update(now, speakingText(m.status?.speaking).here);
       style(tick.firstElementChild as HTMLElement, 'left', `${(m.ticks % 10) * 10}%`);
       text(ageText, gone ? 'no data' : `data age ${age(dataAge(m, now))}`);
       attr(ageText.parentElement as HTMLElement, 'data-bad', f.kind !== 'live' || !((f.age ?? Infinity) < 1));
@@ -130,11 +131,13 @@ export function header(p: HeaderParts): View & { route(name: string): void } {
       if (trouble) bad.push(trouble);
       if (s && !s.recording) bad.push(`NOT RECORDING${s.not_recording_since ? ` since ${signedClock(seconds(s.not_recording_since))}` : ''}`);
       if (s && !s.input_path) bad.push('input path deaf');
+      const pair = speakingText(s?.speaking);
+      if (pair.bad) bad.push(pair.text);
       if (s && !s.clock) bad.push('clock not steady');
       const silent = (s?.sources ?? []).filter((x) => !x.alive).length;
       if (silent > 0) bad.push(`${silent} source${silent > 1 ? 's' : ''} silent`);
       if (s && s.rules_unknown > 0) bad.push(`${s.rules_unknown} rule${s.rules_unknown > 1 ? 's' : ''} unknown`);
-      text(conditions, bad.length > 0 ? `▲ ${bad.join(' · ')}` : s?.recording ? '● recording' : '');
+      text(conditions, bad.length > 0 ? `▲ ${bad.join(' · ')}` : [s?.recording ? '● recording' : '', pair.text].filter(Boolean).join(' · '));
       attr(conditions, 'title', bad.join(' · ') || null);
       attr(conditions, 'data-bad', bad.length > 0);
       text(facts, activeRun(m) ? `live run ${m.run?.designation || m.run?.number} · ${duration(runSeconds(m))} · ${m.run?.engine}` : m.rig ? `no run · ${m.rig.engine_model} ${m.rig.engine_serial}` : '');

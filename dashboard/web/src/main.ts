@@ -31,6 +31,7 @@ import { type UnitSet, unitSets } from './units';
 import { watchDisplay } from './watch/display';
 import { columnsOf } from './watch/plots';
 import { watchTools } from './watch/tools';
+import { speakingText } from './words';
 
 const drawEvery = 50; // ms: at most 20 draws a second
 const footer = 'throatwatch only watches. Facility safety procedures, hard-wired protection and licensed practice come first. This display is not protection.';
@@ -170,7 +171,8 @@ function run(rig: RigInfo, rigs: RigInfo[], session: Session): void {
     const now = performance.now();
     const list = standing(model.alarms.values());
     const lost = display.fresh(now).kind === 'no_link';
-    sound.tick(list.find(sounds)?.priority ?? null, lost, warnings(), now);
+    const here = lost || speakingText(model.status?.speaking).here; // else the other watch of the pair sounds
+    sound.tick((here && list.find(sounds)?.priority) || null, lost, warnings(), now);
     const title = pageTitle(list, lost, rig.title || rig.id, page === 'run' ? runShown : '');
     if (document.title !== title) document.title = title;
     if (lost && now - sessionAsked > sessionEvery) void checkSession(now);

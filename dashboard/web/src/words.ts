@@ -1,6 +1,6 @@
 // How values of an operating point are put into words.
 
-import type { Channel, ChannelValue, Num, PointFrame, Sensor } from './frames';
+import type { Channel, ChannelValue, Num, PointFrame, Sensor, Speaking } from './frames';
 import { duration, seconds } from './time';
 import { fixed, signed } from './units';
 
@@ -102,4 +102,13 @@ export const sensorText = (s: Sensor | null): string => (s ? [`serial ${s.serial
 export function findingText(v: ChannelValue): string {
   const what = v.finding === 'departs' ? 'departs, not told yet how' : v.finding?.replaceAll('_', ' ');
   return what ? `${what} (${v.proven ? 'proven' : 'suspected'})` : '';
+}
+
+/** Which of two watches speaks, "" for a watch that is alone; `here`: no other is heard to, so that this page sounds. */
+export function speakingText(s: Speaking | undefined): { text: string; here: boolean; bad: boolean } {
+  if (!s) return { text: '', here: true, bad: false };
+  const other = s.other === null ? 'no other watch is heard' : `${s.other} stands by`;
+  if (s.name === s.watch) return { text: `watch ${s.watch} speaks · ${other}`, here: true, bad: s.other === null };
+  if (s.name !== null) return { text: `watch ${s.watch} is silent · ${s.name} speaks and sounds`, here: false, bad: false };
+  return { text: `watch ${s.watch} is SILENT · none is heard that speaks${s.why ? `: ${s.why}` : ''}`, here: true, bad: true };
 }

@@ -1,6 +1,6 @@
 import assert from 'node:assert/strict';
 import { test } from 'node:test';
-import { calibrationText, coolDownText, findingText, forecastText, sensorAt, sensorText, standIns, steadyText } from '../src/words';
+import { calibrationText, coolDownText, findingText, forecastText, sensorAt, sensorText, speakingText, standIns, steadyText } from '../src/words';
 import type { Channel, Sensor } from '../src/frames';
 import { point, t0 } from './samples';
 
@@ -58,4 +58,14 @@ test('what stands in is named, each once', () => {
     ['back pressure from barometer', 'p7 from wall static', 'T7 from heat balance']);
   assert.deepEqual(standIns(point(t0, { total_temperature_from: 'egt_factor' })), ['T7 from EGT × factor']);
   assert.deepEqual(standIns(null), []);
+});
+
+test('of two watches the one that speaks is named, and whether this one sounds', () => {
+  const s = { watch: 'alpha', name: 'alpha', since: '2026-06-01T09:00:00Z', other: 'beta', why: '' };
+  assert.deepEqual(speakingText(undefined), { text: '', here: true, bad: false }, 'a watch that is alone');
+  assert.deepEqual(speakingText(s), { text: 'watch alpha speaks · beta stands by', here: true, bad: false });
+  assert.deepEqual(speakingText({ ...s, other: null }), { text: 'watch alpha speaks · no other watch is heard', here: true, bad: true });
+  assert.deepEqual(speakingText({ ...s, name: 'beta' }), { text: 'watch alpha is silent · beta speaks and sounds', here: false, bad: false });
+  assert.deepEqual(speakingText({ ...s, name: null, other: null, why: 'the broker does not answer' }),
+    { text: 'watch alpha is SILENT · none is heard that speaks: the broker does not answer', here: true, bad: true });
 });
