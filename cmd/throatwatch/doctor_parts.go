@@ -93,7 +93,7 @@ func (d *doctor) broker(ctx context.Context) {
 			return
 		}
 		c.Username, c.Password, c.TLS = site.Username, site.Password, site.TLS
-		for _, node := range strings.Split(c.URL, ",") {
+		for node := range strings.SplitSeq(c.URL, ",") {
 			if u, err := url.Parse(strings.TrimSpace(node)); err == nil && u.Scheme == "mqtts" {
 				d.far(ctx, "broker's certificate", u, "8883", c.TLS)
 			}

@@ -82,15 +82,15 @@ func (s *spoken) on(topic string) []told {
 	return slices.DeleteFunc(slices.Clone(s.all), func(g told) bool { return g.topic != topic })
 }
 
-// dataSystem publishes a whole test as the data system of a rig does, and notes what.
-type dataSystem struct {
+// wholeTest is a whole test published as the data system of a rig does, with what was.
+type wholeTest struct {
 	published []rehearsal.Message // all acknowledged by the broker at the end
 	err       error
 	ended     chan struct{}
 }
 
 // publishTest publishes the quick test at double speed.
-func publishTest(t *testing.T, cfg pipeline.Config, broker string) *dataSystem {
+func publishTest(t *testing.T, cfg pipeline.Config, broker string) *wholeTest {
 	t.Helper()
 	p, err := mqtt.NewPublisher(mqtt.PublisherConfig{URL: broker})
 	if err != nil {
@@ -100,7 +100,7 @@ func publishTest(t *testing.T, cfg pipeline.Config, broker string) *dataSystem {
 	if err != nil {
 		t.Fatal(err)
 	}
-	d := &dataSystem{ended: make(chan struct{})}
+	d := &wholeTest{ended: make(chan struct{})}
 	ctx, stop := context.WithCancel(context.Background())
 	var running sync.WaitGroup
 	running.Go(func() { _ = p.Run(ctx) }) // ends by stop
