@@ -293,6 +293,9 @@ export interface Handover {
   rig: RigInfo;
   run: Run | null;
   alarms: Partial<Record<'standing' | 'shelved' | 'out_of_service' | 'suppressed', Alarm[] | null>>;
+  /** Sensors whose calibration is past its due date; who answers for it, where somebody does. */
+  waivers: { channel: string; serial: string; due: string; state: string; who?: string; why?: string; until?: string }[] | null;
+  checks: Checks | null;
   card: { title: string; number: string; revision: string; open: string[] | null; skipped?: string[] | null; awaiting: number[] | null } | null;
   limits_version: string;
   config: ConfigState & { reason?: string };

@@ -23,7 +23,7 @@ export function checkView(c: CheckSet, u: UnitSet): Node[] {
     ...(items.length > 0 ? [h('details', { open: true }, h('summary', {}, `All ${items.length} items`), h('table', { class: 'list items' },
       h('thead', {}, h('tr', {}, ...['Item', 'Result', '>Value', '>Limit'].map(column))),
       ...byKind(items).map((g) => h('tbody', {}, h('tr', { class: 'kind' }, h('th', { scope: 'colgroup', colspan: '4' }, kindWord(g.kind))),
-        ...g.items.map((i) => h('tr', { 'data-failed': !i.passed }, h('th', { scope: 'row', title: i.title }, i.channel || i.title), h('td', {}, i.passed ? '● passed' : '▲ not passed', i.by ? h('div', { class: 'extra' }, `by ${i.by}`) : ''), h('td', { class: 'num' }, figure(i, i.value, u)), h('td', { class: 'num' }, figure(i, i.limit, u))))))))] : []),
+        ...g.items.map((i) => h('tr', { 'data-failed': !i.passed }, h('th', { scope: 'row', title: i.title }, i.channel || i.title), h('td', { class: 'verdict' }, i.passed ? '● passed' : '▲ not passed', i.by ? h('div', { class: 'extra' }, `by ${i.by}`) : ''), h('td', { class: 'num' }, figure(i, i.value, u)), h('td', { class: 'num' }, figure(i, i.limit, u))))))))] : []),
   ];
 }
 

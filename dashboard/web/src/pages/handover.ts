@@ -8,7 +8,6 @@ import { type View, attr, column, h, text } from '../dom';
 import type { Alarm, CheckSet, Handover } from '../frames';
 import { actor, deedWord, entryTime, subject } from '../oplog';
 import { clock, dateClock, facility, seconds } from '../time';
-import { sensorAt, sensorText } from '../words';
 import { testDayLinks } from './testday';
 import { priorityBadge } from './alarms';
 
@@ -44,13 +43,8 @@ export function handoverPage(d: Display): View {
       ['As of', dateClock(seconds(s.t))], ['Handed over by', s.by || '–'], ['Run', s.run ? `${s.run.designation || s.run.number} (${s.run.id})${s.run.ended ? ', ended' : ', goes on'}` : 'none'],
       ['Limits', s.limits_version || '–'], ['Files', `${s.config.hash.slice(0, 16)}, ${s.config.approved_by ? `approved by ${s.config.approved_by}` : 'not approved'}${s.config.refused ? `; a change was refused: ${s.config.refused.why}` : ''}`],
     ];
-    const m = d.model();
-    const sets = [m.checks?.before, m.checks?.after].filter((c): c is CheckSet => c != null);
-    const waived = m.channels.flatMap((c) => {
-      const sensor = sensorAt(c, seconds(s.t));
-      return sensor?.waiver ? [`${c.id}, ${c.title}: ${sensorText(sensor)}`] : [];
-    });
-    const expired = m.channels.filter((c) => m.values[c.id]?.calibration === 'expired').map((c) => `${c.id}, ${c.title}: ${sensorText(sensorAt(c, seconds(s.t)))}`);
+    const sets = [s.checks?.before, s.checks?.after].filter((c): c is CheckSet => c != null);
+    const overdue = (waived: boolean): string[] => (s.waivers ?? []).filter((w) => Boolean(w.who) === waived).map((w) => `${w.channel}: serial ${w.serial}, due ${w.due}${w.who ? `, waived by ${w.who}: ${w.why}${w.until ? `, until ${w.until}` : ''}` : ''}`);
     const list = (lines: string[]): Node => (lines.length > 0 ? h('ul', {}, ...lines.map((w) => h('li', {}, w))) : h('p', { class: 'extra' }, 'None'));
     const columns = ['Priority', 'State', `>Raised, ${facility.sign()}`, 'Alarm', 'Notes'];
     const aside = [...(s.alarms.shelved ?? []), ...(s.alarms.out_of_service ?? []), ...(s.alarms.suppressed ?? [])];
@@ -58,7 +52,7 @@ export function handoverPage(d: Display): View {
       h('dl', { class: 'facts' }, ...facts.flatMap(([k, v]) => [h('dt', {}, k), h('dd', {}, v)])),
       h('h2', {}, 'Alarms that stand'), table(columns, alarmRows([...(s.alarms.standing ?? [])].sort((a, b) => Object.keys(priorityLook).indexOf(a.priority) - Object.keys(priorityLook).indexOf(b.priority))), 'None'),
       h('h2', {}, 'Shelved, out of service, suppressed'), table(columns, alarmRows(aside), 'None'),
-      h('h2', {}, 'Waivers'), list(waived), h('h2', {}, 'Calibration expired, without a waiver'), list(expired),
+      h('h2', {}, 'Waivers'), list(overdue(true)), h('h2', {}, 'Calibration expired, without a waiver'), list(overdue(false)),
       h('h2', {}, 'Test card'), ...(s.card ? [h('p', {}, cardName(s.card)), h('p', {}, `Open: ${(s.card.open ?? []).join(', ') || 'none'}. Skipped: ${(s.card.skipped ?? []).join(', ') || 'none'}. Taken, without a verdict: ${(s.card.awaiting ?? []).map((n) => `no. ${n}`).join(', ') || 'none'}.`)] : [h('p', { class: 'extra' }, 'No card is loaded')]),
       h('h2', {}, 'Last checks'), ...(sets.length > 0 ? sets.flatMap((c) => [h('p', {}, `${c.phase === 'before' ? 'Before' : 'After'} the run, ${dateClock(seconds(c.ended ?? c.began))}: ${c.summary || c.state.replaceAll('_', ' ')}`), ...((c.items ?? []).some((i) => !i.passed) ? [h('ul', {}, ...(c.items ?? []).filter((i) => !i.passed).map((i) => h('li', {}, `${[i.channel, i.title].filter(Boolean).join(', ')}: ${i.text}`)))] : [])]) : [h('p', { class: 'extra' }, 'None on record')]),
       h('h2', {}, 'Notes of the run'), table([`>Time, ${facility.sign()}`, 'What', 'About', 'By', 'Reason'], (s.notes ?? []).map((e) => h('tr', {}, h('td', { class: 'num' }, entryTime(e, seconds(s.t))), h('td', {}, deedWord(e)), h('td', {}, subject(e)), h('td', {}, actor(e)), h('td', {}, e.reason ?? ''))), 'None'),
