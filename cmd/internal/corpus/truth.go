@@ -125,7 +125,7 @@ type truth struct {
 	spread   [2]float64   // K, of the harness
 	cranked  [2]cranking  // surely and possibly
 	quiet    int64        // ns for which the rotor has moved little
-	learned  int64        // ns of steady running with a sound harness, and no streak
+	learned  int64        // ns of steady running above idle with a sound harness, and no streak
 	rules    []rules.Rule
 	expect   []expectation
 }
@@ -342,7 +342,7 @@ func (tr *truth) aftermath(dt int64) {
 	if tr.quiet += dt; !tr.fast[0] || math.Abs(tr.cutoff) > ph.MoveRate/2 {
 		tr.quiet = 0
 	}
-	if tr.quiet > 2*ph.SteadyAfter && !slices.ContainsFunc(st.EGT, tr.strikes) {
+	if above := tr.speed[0] > ph.Idle+2*ph.IdleBand; above && tr.quiet > 2*ph.SteadyAfter && !slices.ContainsFunc(st.EGT, tr.strikes) {
 		tr.learned += dt
 	}
 	both := math.Sqrt2 * tr.u95(st.EGT[0], 0)
