@@ -23,6 +23,8 @@ import (
 	"time"
 
 	"github.com/gorilla/websocket"
+
+	"throatwatch/ingest/broker/brokertest"
 )
 
 // asProgram makes the test binary the program itself, so that tests run it in
@@ -33,6 +35,12 @@ const asProgram = "THROATWATCH_AS_PROGRAM"
 const patience = 60 * time.Second
 
 func TestMain(m *testing.M) {
+	if brokertest.IsNode() {
+		if err := brokertest.RunNode(context.Background()); err != nil {
+			panic(err)
+		}
+		return
+	}
 	if os.Getenv(asProgram) == "" {
 		// Tests that play a rehearsal in real time mostly wait. The flag still counts.
 		if err := flag.Set("test.parallel", strconv.Itoa(3*runtime.GOMAXPROCS(0))); err != nil {
