@@ -204,7 +204,15 @@ func (b *Broker) Start(ctx context.Context) error {
 	go s.Start() // ends by itself; Close stops what it has started
 
 	ready := make(chan bool, 1)
-	go func() { ready <- s.ReadyForConnections(readyTimeout) }()
+	waiting, enough := context.WithTimeout(ctx, readyTimeout)
+	defer enough()
+	go func() { // ends when it is ready, or soon after Start
+		up := false
+		for !up && waiting.Err() == nil {
+			up = s.ReadyForConnections(100 * time.Millisecond)
+		}
+		ready <- up
+	}()
 	select {
 	case <-ctx.Done():
 		err = ctx.Err()

@@ -9,6 +9,7 @@ import (
 	"os"
 	"os/exec"
 	"path/filepath"
+	"runtime"
 	"strconv"
 	"testing"
 	"time"
@@ -34,7 +35,25 @@ func TestMain(m *testing.M) {
 		fmt.Fprintln(os.Stderr, child(dir, os.Getenv(childListen)))
 		os.Exit(1)
 	}
-	os.Exit(m.Run())
+	code := m.Run()
+	if code == 0 {
+		code = leaked()
+	}
+	os.Exit(code)
+}
+
+// leaked tells whether goroutines of a client are left.
+func leaked() int {
+	buf := make([]byte, 1<<20)
+	for range 100 {
+		buf = buf[:runtime.Stack(buf[:cap(buf)], true)]
+		if !bytes.Contains(buf, []byte("throatwatch/ingest/mqtt.")) && !bytes.Contains(buf, []byte("paho.mqtt")) {
+			return 0
+		}
+		time.Sleep(50 * time.Millisecond)
+	}
+	fmt.Printf("goroutines are left:\n%s\n", buf)
+	return 1
 }
 
 func child(dir, listen string) error {
