@@ -14,7 +14,7 @@ import (
 )
 
 // maxChannels bounds the rig: a scan is a row of them.
-const maxChannels = 1000
+const maxChannels = 2000
 
 // channel is a channel with its place in the file.
 type channel struct {

@@ -67,41 +67,39 @@ func recorded(t *testing.T, dir string, keep func(i int) bool) (cfg pipeline.Con
 func TestCount(t *testing.T) {
 	t.Parallel()
 	left := map[int]bool{50: true, 51: true, 120: true}
+	all := func(int) bool { return true }
+	but := func(i int) bool { return !left[i] }
 	for _, tt := range []struct {
-		name    string
-		left    func(i int) bool                                  // is not stored
-		told    func(all []rehearsal.Message) []rehearsal.Message // is said to be published
-		missing func(samples int) int
-		doubled func(samples int) int
+		name             string
+		stored           func(i int) bool
+		published        func(i int) bool
+		missing, doubled int // of the samples of those left out, times; a message counts as missing, too
 	}{
-		{"all of it", func(int) bool { return false }, func(all []rehearsal.Message) []rehearsal.Message { return all },
-			func(int) int { return 0 }, func(int) int { return 0 }},
-		{"three messages are lost", func(i int) bool { return left[i] }, func(all []rehearsal.Message) []rehearsal.Message { return all },
-			func(samples int) int { return 3 + samples }, func(int) int { return 0 }},
-		{"three messages that nobody sent are in the scans", func(int) bool { return false },
-			func(all []rehearsal.Message) (some []rehearsal.Message) {
-				for i, m := range all {
-					if !left[i+1] {
-						some = append(some, m)
-					}
-				}
-				return some
-			}, func(int) int { return 0 }, func(samples int) int { return samples }},
+		{"all of it", all, all, 0, 0},
+		{"three messages are lost", but, all, 1, 0},
+		{"three messages that nobody sent are in the scans", all, but, 0, 1},
 	} {
 		t.Run(tt.name, func(t *testing.T) {
 			t.Parallel()
 			dir := t.TempDir()
-			cfg, all := recorded(t, dir, func(i int) bool { return !tt.left(i) })
+			cfg, msgs := recorded(t, dir, tt.stored)
 			samples := 0
 			for i := range left {
-				samples += bytes.Count(all[i-1].Payload, []byte(`"v":`))
+				samples += bytes.Count(msgs[i-1].Payload, []byte(`"v":`))
 			}
-			c, err := faults.Count(t.Context(), dir, &cfg, tt.told(all))
+			var published []rehearsal.Message
+			for i, m := range msgs {
+				if tt.published(i + 1) {
+					published = append(published, m)
+				}
+			}
+			c, err := faults.Count(t.Context(), dir, &cfg, published)
 			if err != nil {
 				t.Fatal(err)
 			}
-			if c.Missing != tt.missing(samples) || c.Doubled != tt.doubled(samples) || c.Scans < 190 || c.Lives != 1 || samples < 90 {
-				t.Errorf("%+v; the three messages have %d samples", c, samples)
+			missing, doubled := tt.missing*(samples+len(left)), tt.doubled*samples
+			if c.Missing != missing || c.Doubled != doubled || c.Scans < 190 || c.Lives != 1 || samples < 90 {
+				t.Errorf("%+v; %d are missing and %d doubled", c, missing, doubled)
 			}
 			if c.Lossless() != (c.Missing+c.Doubled == 0) {
 				t.Errorf("lossless is %v of %+v", c.Lossless(), c)

@@ -2,6 +2,7 @@ package faults
 
 import (
 	"context"
+	"errors"
 	"sync"
 	"sync/atomic"
 	"time"
@@ -15,12 +16,18 @@ import (
 // and notes what it publishes. It outlives the daemon.
 type system struct {
 	published []rehearsal.Message // to be read when it has ended
+	values    int                 // in all that was published
 	enough    atomic.Bool         // no further test is begun
+	forget    atomic.Bool         // what is published is counted, and not noted
+	stopSoon  atomic.Bool         // the test that is on is broken off
 	err       error
 	ended     chan struct{} // closed when the last test has ended and all of it is acknowledged
 	stop      context.CancelFunc
 	running   sync.WaitGroup
 }
+
+// errEnough breaks a test off.
+var errEnough = errors.New("broken off")
 
 // play begins; end or close ends it.
 func play(ctx context.Context, cfg pipeline.Config, url string, o *Options, seed uint64) (*system, error) {
@@ -38,7 +45,7 @@ func play(ctx context.Context, cfg pipeline.Config, url string, o *Options, seed
 				Scenario: rehearsal.Quick, Speed: o.Speed, Rate: o.Rate, Seed: seed + 1000*n, Start: time.Now().UnixNano(),
 			})
 		}
-		if s.err == nil {
+		if s.err == nil || errors.Is(s.err, errEnough) {
 			s.err = p.Flush(ctx)
 		}
 	})
@@ -52,7 +59,13 @@ func (s *system) test(ctx context.Context, cfg pipeline.Config, p *mqtt.Publishe
 	}
 	until := func(ctx context.Context, due int64) error { return wait(ctx, time.Until(time.Unix(0, due))) }
 	return rehearsal.Run(ctx, rig, until, func(ctx context.Context, m rehearsal.Message) error {
-		s.published = append(s.published, m)
+		if s.stopSoon.Load() {
+			return errEnough
+		}
+		s.values += valuesIn(m.Payload)
+		if !s.forget.Load() {
+			s.published = append(s.published, m)
+		}
 		return p.Publish(ctx, m.Topic, m.Payload)
 	})
 }
