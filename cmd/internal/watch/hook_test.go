@@ -272,7 +272,7 @@ func (stuckBroker) Publish(ctx context.Context, _ string, _ []byte, _ byte, _ bo
 // the race detector.
 const alarmWithin = 600 * time.Millisecond
 
-// TestNothingAboutAnAlarmWaits: the disk hangs, fifty viewers do not read, the broker
+// TestNothingAboutAnAlarmWaits: the disk hangs, a hundred viewers do not read, the broker
 // does not take what is published, the webhook's receiver and the database hang, all
 // at once. A viewer who reads has every alarm in time. Nothing is left of the alarm
 // that nothing is recorded but what is told: it goes to the receiver when that works.
@@ -360,7 +360,7 @@ func TestNothingAboutAnAlarmWaits(t *testing.T) {
 		return conn
 	}
 	d.send(time.Now())
-	for range 50 {
+	for range 100 {
 		defer dial(4 << 10).Close()
 	}
 	good := dial(1 << 20)

@@ -12,6 +12,7 @@ import (
 	"strings"
 	"sync"
 	"sync/atomic"
+	"syscall"
 	"testing"
 	"testing/synctest"
 	"time"
@@ -354,6 +355,7 @@ func TestDisk(t *testing.T) {
 		}
 	}
 	fail := func(context.Context, time.Duration) error { return runfile.ErrFull }
+	readOnly := func(context.Context, time.Duration) error { return fmt.Errorf("commit: %w", syscall.EROFS) } // a disk that the system has had doubts about
 	for _, tt := range []struct {
 		name   string
 		with   func(context.Context, time.Duration) error // while there is trouble, for so long yet
@@ -363,6 +365,7 @@ func TestDisk(t *testing.T) {
 	}{
 		{"stalled", stall, pipeline.DoRunStart, nil, 1},
 		{"failing", fail, pipeline.DoRunStart, nil, 1},
+		{"read only", readOnly, pipeline.DoRunStart, nil, 1},
 		{"stalled, a run begins", stall, "", []string{pipeline.DoRunStart}, 1},
 		{"failing, a run begins", fail, "", []string{pipeline.DoRunStart}, 1},
 		{"stalled, the run ends", stall, pipeline.DoRunStart, []string{pipeline.DoRunEnd}, 1},
