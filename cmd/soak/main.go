@@ -1,6 +1,6 @@
 // Command soak lets a watch run for long at a high rate and prints, as time passes, its
 // memory, its open files, what it took and how fast its alarms came. It exits with 1 if
-// a value was neither used nor counted as late or in doubt.
+// a value was neither used nor counted as late.
 package main
 
 import (
@@ -87,6 +87,6 @@ func soak(ctx context.Context, o faults.SoakOptions, asJSON bool, stdout io.Writ
 		e.SetIndent("", "  ")
 		return s, e.Encode(s)
 	}
-	_, err = fmt.Fprintf(stdout, "%d channels, %d values sent, %.0f used, %.0f counted as late or in doubt, %.0f lost\n", s.Channels, s.Sent, s.Used, s.Told, s.Lost)
+	_, err = fmt.Fprintf(stdout, "%d channels, %d values sent, %.0f used, %.0f counted as late, %.0f lost\n", s.Channels, s.Sent, s.Used, s.Late, s.Lost)
 	return s, err
 }

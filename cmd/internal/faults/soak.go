@@ -53,7 +53,7 @@ type Soaked struct {
 	Channels int       `json:"channels"`
 	Sent     int       `json:"sent"` // values, acknowledged by the broker
 	Used     float64   `json:"used"` // that fell into a scan
-	Told     float64   `json:"told"` // that were counted as late or in doubt
+	Late     float64   `json:"late"` // that were counted as late
 	Lost     float64   `json:"lost"` // neither
 	Readings []Reading `json:"readings"`
 }
@@ -148,12 +148,8 @@ func Soak(ctx context.Context, o SoakOptions, each func(*Reading)) (s *Soaked, e
 		if err != nil {
 			return nil, d.because(err)
 		}
-		s.Used = m["samples_total"]
-		s.Told = 0
-		for _, reason := range []string{"late", "future", "past"} {
-			s.Told += m[`not_used_total{reason="`+reason+`"}`]
-		}
-		if s.Lost = max(0, float64(s.Sent)-s.Used-s.Told); s.Lost == 0 || time.Now().After(deadline) {
+		s.Used, s.Late = m["samples_total"], m[`not_used_total{reason="late"}`]
+		if s.Lost = max(0, float64(s.Sent)-s.Used-s.Late); s.Lost == 0 || time.Now().After(deadline) {
 			break
 		}
 		if err := wait(ctx, 10*look); err != nil {
