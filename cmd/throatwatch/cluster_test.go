@@ -18,7 +18,6 @@ import (
 // nothing that the cluster has taken is lost. Elections take the cluster up to 11 s,
 // measured.
 func TestCluster(t *testing.T) {
-	t.Parallel()
 	var addrs [6]string
 	for i := range addrs {
 		addrs[i] = mqtttest.FreeAddr(t)

@@ -17,7 +17,6 @@ import (
 // what nobody asked for, many times as much as the rig does. Points and alarms go on in
 // time, memory stays bounded, and every message of the flood is counted by reason.
 func TestFlood(t *testing.T) {
-	t.Parallel()
 	const (
 		publishers = 8
 		memory     = 600e6 // bytes; the race detector takes several times what is used
