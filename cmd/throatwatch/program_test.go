@@ -202,6 +202,7 @@ type frame struct {
 
 	Counters map[string]float64 `json:"counters"`
 	Sessions []session          `json:"sessions"`
+	Age      float64            `json:"data_age_s"`
 	Speaking *speaking          `json:"speaking"`
 	Status   *struct {
 		Speaking *speaking `json:"speaking"`
